@@ -1,0 +1,188 @@
+// Package life is the life of an alert: a pure state machine, and the record
+// that it leaves.
+//
+// An alert is opened by a look that signals. It may be worsened, has returned
+// when enough looks in a row were quiet, is acknowledged by a person, and is
+// closed once it has returned and is acknowledged. Data that arrive late can
+// open an alert after the fact, correct its evidence, or withdraw it. The
+// terms unacknowledged, acknowledged and returned are those of IEC 62682 and
+// ISA-18.2.
+//
+// A record holds no wall time, host, partition or batch: the same stream of
+// inputs leaves the same records to the byte. A signal is a statistical
+// finding: it diagnoses nothing and names no cause.
+package life
+
+import "time"
+
+// Condition is where an alert stands.
+type Condition string
+
+// The conditions.
+const (
+	Unacknowledged Condition = "unacknowledged" // signalling, nobody has acknowledged it
+	Acknowledged   Condition = "acknowledged"   // signalling, acknowledged
+	Returned       Condition = "returned"       // signals no more, not yet acknowledged
+	Closed         Condition = "closed"         // returned and acknowledged, or closed by hand
+	Withdrawn      Condition = "withdrawn"      // the data were corrected: there was no signal
+)
+
+// Direction is the tail in which an alert signals.
+type Direction string
+
+// The directions.
+const (
+	Upper Direction = "upper" // more events than usual
+	Lower Direction = "lower" // fewer events than usual
+)
+
+// StepKind says what happened to an alert.
+type StepKind string
+
+// The kinds of step.
+const (
+	StepOpened       StepKind = "opened"
+	StepWorsened     StepKind = "worsened"
+	StepCorrected    StepKind = "evidence corrected"
+	StepReturned     StepKind = "returned"
+	StepWithdrawn    StepKind = "withdrawn"
+	StepAcknowledged StepKind = "acknowledged"
+	StepClosed       StepKind = "closed"
+	StepNote         StepKind = "note"
+)
+
+// Record is everything that is known of one alert.
+type Record struct {
+	// ID is short, stable and unique: derived from the series, the direction
+	// and the opening look.
+	ID        string    `json:"id"`
+	Indicator string    `json:"indicator"`
+	Title     string    `json:"title"`
+	Series    string    `json:"series"`
+	Direction Direction `json:"direction"`
+	Condition Condition `json:"condition"`
+	// Number counts the alerts of this series and direction, from 1.
+	Number int `json:"number"`
+	// Opened is the due time of the opening look. Late says that data which
+	// arrived after that look opened it.
+	Opened time.Time `json:"opened"`
+	Late   bool      `json:"late"`
+	// Zone is the IANA zone in which the indicator keeps its calendar.
+	Zone string `json:"zone"`
+	// Opening is the evidence that opened it (as corrected since), Worst the
+	// strongest so far.
+	Opening Evidence `json:"opening"`
+	Worst   Evidence `json:"worst"`
+	// Since holds the data after the opening look, free of the choice that
+	// the ring made; nil until a later look was made.
+	Since *Since `json:"since,omitempty"`
+	// IDs are the ids of observations with events in the opening window, up
+	// to a cap; MoreIDs counts those beyond it.
+	IDs     []string `json:"ids,omitempty"`
+	MoreIDs int      `json:"more_ids,omitempty"`
+	Steps   []Step   `json:"steps"`
+	Caution string   `json:"caution"`
+}
+
+// Evidence is one look that signals: what was seen, what would be usual, and
+// how surprising that is.
+type Evidence struct {
+	Window string `json:"window"` // the span as configured, e.g. 28d
+	// From and To bound the window (half-open) in the indicator's zone; Due
+	// is when the look was due.
+	From time.Time `json:"from"`
+	To   time.Time `json:"to"`
+	Due  time.Time `json:"due"`
+	// Events in Exposure (exact, in Unit), of which LateEvents events came
+	// after the look was due.
+	Events     int64  `json:"events"`
+	Exposure   string `json:"exposure"`
+	Unit       string `json:"unit"`
+	LateEvents int64  `json:"late_events"`
+	// Expected events under the baseline.
+	Expected float64 `json:"expected"`
+	// Rate is Events / Exposure times Per with exact central bounds at
+	// 1-Alpha. Ratio is the ratio to the baseline (odds ratio for a
+	// proportion against a reference), with exact bounds; RatioUpper is nil
+	// where there is no upper bound.
+	Measure    string   `json:"measure"`
+	Per        float64  `json:"per"`
+	Rate       float64  `json:"rate"`
+	RateLower  float64  `json:"rate_lower"`
+	RateUpper  float64  `json:"rate_upper"`
+	RatioKind  string   `json:"ratio_kind"`
+	Ratio      *float64 `json:"ratio"`
+	RatioLower float64  `json:"ratio_lower"`
+	RatioUpper *float64 `json:"ratio_upper"`
+	Alpha      float64  `json:"alpha"`
+	// Chosen says that the window was chosen because it rang: its bounds
+	// overstate. See Record.Since.
+	Chosen bool `json:"chosen_because_it_rang"`
+	// Test names the exact test; P and Log10P are its one-sided p-value.
+	Test   string  `json:"test"`
+	P      float64 `json:"p"`
+	Log10P float64 `json:"log10_p"`
+	// Critical is the count at which this look signals, AttainedSize the
+	// chance of that count under the baseline, Limit the p that was allowed.
+	Critical     int64   `json:"critical_count"`
+	AttainedSize float64 `json:"attained_size"`
+	Limit        float64 `json:"p_limit"`
+	// Baseline says by which usual rate it was judged.
+	Baseline Baseline `json:"baseline"`
+	// Setup is the version and digest of the set-up in force.
+	SetupVersion int    `json:"setup_version"`
+	SetupDigest  string `json:"setup_digest"`
+	// Recompute is a command line that gives the same numbers.
+	Recompute string `json:"recompute"`
+}
+
+// Baseline names the usual rate in a record.
+type Baseline struct {
+	Kind string `json:"kind"`
+	// Rate is the usual rate times Per, or the usual proportion.
+	Rate float64 `json:"rate"`
+	// Events in Exposure, for a reference.
+	Events   int64   `json:"events,omitempty"`
+	Exposure string  `json:"exposure,omitempty"`
+	Margin   float64 `json:"margin"`
+	Version  string  `json:"version,omitempty"`
+	Source   string  `json:"source,omitempty"`
+}
+
+// Since is the data after the opening look.
+type Since struct {
+	From      time.Time `json:"from"`
+	To        time.Time `json:"to"`
+	Events    int64     `json:"events"`
+	Exposure  string    `json:"exposure"`
+	Rate      float64   `json:"rate"`
+	RateLower float64   `json:"rate_lower"`
+	RateUpper *float64  `json:"rate_upper"` // nil where there is no bound (no exposure)
+}
+
+// Step is one thing that happened to an alert.
+type Step struct {
+	Number int       `json:"number"` // from 1
+	Kind   StepKind  `json:"kind"`
+	At     time.Time `json:"at"` // event time: a look's due time or the partition's clock
+	By     string    `json:"by,omitempty"`
+	Why    string    `json:"why,omitempty"`
+	// Evidence of the look that made the step, where there is one.
+	Evidence *Evidence `json:"evidence,omitempty"`
+	// Condition after the step.
+	Condition Condition `json:"condition"`
+}
+
+// Notice is one step of one alert as outlets deliver it: the record as it
+// stood after the step. Key is its idempotency key.
+type Notice struct {
+	Key    string `json:"key"`
+	Step   Step   `json:"step"`
+	Record Record `json:"record"`
+}
+
+// Done reports whether nothing can happen to the alert any more but what the
+// engine does to data inside the horizon.
+func (r *Record) Done() bool {
+	return r.Condition == Closed || r.Condition == Withdrawn
+}
