@@ -99,6 +99,8 @@ type Evidence struct {
 	Exposure   string `json:"exposure"`
 	Unit       string `json:"unit"`
 	LateEvents int64  `json:"late_events"`
+	// EventNoun names the events in the plural, e.g. "line infections".
+	EventNoun string `json:"event_noun"`
 	// Expected events under the baseline.
 	Expected float64 `json:"expected"`
 	// Rate is Events / Exposure times Per with exact central bounds at
