@@ -1,0 +1,203 @@
+package words
+
+import (
+	"fmt"
+	"math"
+	"strings"
+	"time"
+
+	"tailbell/monitor/life"
+)
+
+// Sentence says in plain words what one look found: the place, the count, the
+// span, the exposure, what would be usual, how often so much or so little
+// comes by chance, and the exact bounds of the rate.
+func Sentence(r *life.Record, e *life.Evidence) string {
+	zone := zoneOf(r)
+	return place(r) + ": " + counted(e) + " in the " + span(e, zone) + " (" + exposure(e) + lateShare(e) + "); about " +
+		expected(e) + " would be usual. " + chance(e, r.Direction) + " " + bounds(e)
+}
+
+// subject is the place and what is counted there.
+func subject(r *life.Record) string {
+	return place(r) + ", " + noun(&r.Opening)
+}
+
+func noun(e *life.Evidence) string {
+	if e.EventNoun == "" {
+		return "events"
+	}
+	return clean(e.EventNoun)
+}
+
+// counted is "4 line infections", "1 fall", "no falls".
+func counted(e *life.Evidence) string {
+	switch e.Events {
+	case 0:
+		return "no " + noun(e)
+	case 1:
+		return "1 " + singular(noun(e))
+	}
+	return whole(e.Events) + " " + noun(e)
+}
+
+// exposure is "616 device-days"; of a proportion, "80 procedures".
+func exposure(e *life.Evidence) string {
+	unit := clean(e.Unit)
+	if e.Exposure == "1" {
+		unit = singular(unit)
+	}
+	return grouped(clean(e.Exposure)) + " " + unit
+}
+
+func lateShare(e *life.Evidence) string {
+	switch {
+	case e.LateEvents <= 0:
+		return ""
+	case e.LateEvents >= e.Events && e.Events <= 1:
+		return "; reported late"
+	case e.LateEvents >= e.Events:
+		return "; all of them reported late"
+	}
+	return "; " + whole(e.LateEvents) + " of the " + whole(e.Events) + " reported late"
+}
+
+func expected(e *life.Evidence) string { return number(e.Expected) }
+
+// chance says how often so many, or so few, are seen while the usual rate
+// holds. It reads the logarithm, so that the smallest p is told truly.
+func chance(e *life.Evidence, d life.Direction) string {
+	such := ""
+	switch {
+	case d == life.Upper:
+		such = whole(e.Events) + " or more"
+	case e.Events == 0:
+		such = "none at all"
+	default:
+		such = whole(e.Events) + " or fewer"
+	}
+	return fmt.Sprintf("If %s held, %s would be seen in %s such windows (p = %s).",
+		hypothesis(e, d), such, odds(log10p(e)), pvalue(log10p(e)))
+}
+
+func hypothesis(e *life.Evidence, d life.Direction) string {
+	usual := "the usual " + measure(e)
+	m := e.Baseline.Margin
+	if m == 0 || m == 1 {
+		return usual
+	}
+	if d == life.Lower {
+		m = 1 / m
+	}
+	if e.RatioKind != "" && strings.Contains(e.RatioKind, "odds") {
+		return "the odds were " + significant(m) + " times the usual ones, the margin that is accepted, and"
+	}
+	return significant(m) + " times " + usual + ", the margin that is accepted,"
+}
+
+// measure is "rate" or "proportion", as the record names it.
+func measure(e *life.Evidence) string {
+	if isProportion(e) {
+		return "proportion"
+	}
+	return "rate"
+}
+
+func isProportion(e *life.Evidence) bool { return e.Measure == "proportion" }
+
+func log10p(e *life.Evidence) float64 {
+	if e.Log10P == 0 && e.P > 0 && e.P < 1 {
+		return math.Log10(e.P)
+	}
+	return e.Log10P
+}
+
+// bounds gives the exact bounds of the rate, and the usual rate beside them.
+func bounds(e *life.Evidence) string {
+	chosen := ""
+	if e.Chosen {
+		chosen = ", chosen because it rang,"
+	}
+	lo, hi := pair(e.RateLower*scale(e), e.RateUpper*scale(e))
+	return fmt.Sprintf("The %s in this window%s is %s to %s%s (%s, exact); usual is %s%s.",
+		measure(e), chosen, lo, hi, per(e), level(e.Alpha), usual(e), short(e))
+}
+
+// usual gives the usual rate as it was declared or, of a reference, computed,
+// to four significant digits at most.
+func usual(e *life.Evidence) string { return significant(e.Baseline.Rate * scale(e)) }
+
+// scale turns a record's rate into the number shown: a proportion per one
+// trial is shown in per cent.
+func scale(e *life.Evidence) float64 {
+	if isProportion(e) && (e.Per == 0 || e.Per == 1) {
+		return 100
+	}
+	return 1
+}
+
+// per is what follows a rate: " per 1,000 device-days", or " %".
+func per(e *life.Evidence) string {
+	unit := clean(e.Unit)
+	switch {
+	case isProportion(e) && (e.Per == 0 || e.Per == 1 || e.Per == 100):
+		return " %"
+	case e.Per == 0 || e.Per == 1:
+		return " per " + singular(unit)
+	}
+	return " per " + grouped(trimFloat(e.Per)) + " " + unit
+}
+
+// short is what follows a second rate in the same sentence.
+func short(e *life.Evidence) string {
+	if p := per(e); p == " %" {
+		return p
+	}
+	return ""
+}
+
+func level(alpha float64) string {
+	return trimFloat(math.Round((1-alpha)*1e8)/1e6) + " %"
+}
+
+// basis says where the usual rate comes from.
+func basis(e *life.Evidence) string {
+	b := &e.Baseline
+	text := ""
+	if b.Kind == "reference" {
+		ref := *e
+		ref.Events, ref.Exposure = b.Events, b.Exposure
+		text = "The usual " + measure(e) + " was estimated from " + counted(&ref) + " in " + exposure(&ref) +
+			"; p allows for how unsure that leaves it"
+	} else {
+		text = "The usual " + measure(e) + " is taken as known"
+	}
+	var from []string
+	if b.Version != "" {
+		from = append(from, "version "+clean(b.Version))
+	}
+	if b.Source != "" {
+		from = append(from, "source: "+clean(b.Source))
+	}
+	if len(from) > 0 {
+		text += " (" + strings.Join(from, "; ") + ")"
+	}
+	return text + "."
+}
+
+// afterwards tells of the data after the opening look, which the ring did not
+// choose.
+func afterwards(r *life.Record, zone *time.Location) string {
+	s := r.Since
+	if s == nil {
+		return ""
+	}
+	e := r.Opening
+	e.Events, e.Exposure = s.Events, s.Exposure
+	text := " Since the opening look, to " + last(s.To.In(zone)) + ": " + counted(&e) + " in " + exposure(&e)
+	if s.RateUpper == nil {
+		return text + "."
+	}
+	lo, hi := pair(s.RateLower*scale(&e), *s.RateUpper*scale(&e))
+	return text + fmt.Sprintf(", %s to %s%s (%s, exact, not chosen by the ring).", lo, hi, per(&e), level(e.Alpha))
+}

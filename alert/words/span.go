@@ -1,0 +1,92 @@
+package words
+
+import (
+	"fmt"
+	"strconv"
+	"strings"
+	"time"
+
+	"tailbell/monitor/life"
+)
+
+// zoneOf is the record's zone; one that this machine lacks is read as UTC.
+func zoneOf(r *life.Record) *time.Location {
+	zone, err := time.LoadLocation(r.Zone)
+	if err != nil {
+		return time.UTC
+	}
+	return zone
+}
+
+// day is a date without its time of day: "3 March 2026".
+func day(t time.Time) string { return t.Format("2 January 2006") }
+
+// stamp is a date and time of day for a heading.
+func stamp(t time.Time) string { return t.Format("Mon 2 Jan 2006 15:04 MST") }
+
+// moment is a date, with the time of day unless that is midnight.
+func moment(t time.Time) string {
+	if midnight(t) {
+		return day(t)
+	}
+	return clock(t) + " on " + day(t)
+}
+
+// last names the end of a half-open span: the last day that it holds, or the
+// hour at which it ends.
+func last(end time.Time) string {
+	if midnight(end) {
+		return day(end.AddDate(0, 0, -1))
+	}
+	return clock(end) + " on " + day(end)
+}
+
+func clock(t time.Time) string { return t.Format("15:04 MST") }
+
+func midnight(t time.Time) bool {
+	return t.Hour() == 0 && t.Minute() == 0 && t.Second() == 0 && t.Nanosecond() == 0
+}
+
+// span is "28 days to 3 March 2026", "6 hours to 14:00 CET on 3 March 2026".
+func span(e *life.Evidence, zone *time.Location) string {
+	from, to := e.From.In(zone), e.To.In(zone)
+	n, unit, ok := windowUnit(e.Window)
+	if !ok {
+		return "time from " + moment(from) + " to " + last(to)
+	}
+	length := fmt.Sprintf("%d %ss", n, unit)
+	if n == 1 {
+		length = unit
+	}
+	if unit == "minute" || unit == "hour" {
+		return length + " to " + clock(to) + " on " + day(to)
+	}
+	if n == 1 && unit == "day" {
+		return "day of " + last(to)
+	}
+	return length + " to " + last(to)
+}
+
+// windowUnit reads a window as configured: 28d is 28 days.
+func windowUnit(window string) (int, string, bool) {
+	digits := strings.TrimRight(window, "abcdefghijklmnopqrstuvwxyz")
+	n, err := strconv.Atoi(digits)
+	if err != nil || n < 1 {
+		return 0, "", false
+	}
+	switch window[len(digits):] {
+	case "m":
+		return n, "minute", true
+	case "h":
+		return n, "hour", true
+	case "d":
+		return n, "day", true
+	case "w":
+		return n, "week", true
+	case "mo":
+		return n, "month", true
+	case "y":
+		return n, "year", true
+	}
+	return 0, "", false
+}

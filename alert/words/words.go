@@ -1,0 +1,215 @@
+// Package words says in plain sentences what an alert record holds: for a
+// terminal, and as paragraphs for a mail or a page.
+//
+// One reading by a nurse, acceptable to a statistician. Every sentence is made
+// from the record alone, so the same record gives the same words anywhere. A
+// sentence says what was counted, over which time and exposure, what would be
+// usual, and how often so much (or so little) comes by chance while the usual
+// rate holds. Bounds of a window that was chosen because it rang are labelled
+// so.
+//
+// # Dates
+//
+// Dates stand in the record's zone. A window is half-open: one that ends at
+// the midnight after 3 March is "to 3 March", the last day that it holds;
+// windows that do not begin and end at midnight show the hour.
+//
+// # Digits
+//
+// Counts and exposures are exact, in groups of three. Expected numbers, rates
+// and bounds have one decimal from 1 to 1,000, none above, and two significant
+// digits below 1; two bounds that lie close together get as many decimals as
+// their difference needs for two significant digits. p has two significant
+// digits, as a plain decimal down to 0.0001 and as 2.3e-9 below, with its odds
+// beside it ("about 1 of 430 million"). Numbers are rounded to nearest, bounds
+// too, so that they agree with the same bounds printed elsewhere.
+//
+// # Caveats
+//
+// p is that of one window. Windows overlap and many are looked at, so rings by
+// chance are more frequent than one p says. Names of people, reasons and
+// sources are printed as they came, but for control characters, which are
+// replaced.
+package words
+
+import (
+	"fmt"
+	"strings"
+	"time"
+
+	"tailbell/monitor/life"
+)
+
+// Caution stands on every opened alert.
+const Caution = "A signal is a statistical finding, not a diagnosis and not a cause; " +
+	"silence is no proof of safety; local policy decides."
+
+// Notice returns one step of an alert for a terminal of the given width in
+// characters: a heading, the sentences under it, and an empty line. A width
+// under 40 is taken as 40.
+func Notice(n *life.Notice, width int) string {
+	var b strings.Builder
+	b.WriteString(Heading(n))
+	b.WriteByte('\n')
+	for _, p := range Paragraphs(n) {
+		b.WriteString(wrap(p, width, "    "))
+	}
+	b.WriteByte('\n')
+	return b.String()
+}
+
+// Heading returns one line: when, what happened, in which direction, and to
+// which alert.
+func Heading(n *life.Notice) string {
+	zone := zoneOf(&n.Record)
+	return fmt.Sprintf("%s  %s  %s  alert %s",
+		stamp(n.Step.At.In(zone)), what(n), arrow(n.Record.Direction), clean(n.Record.ID))
+}
+
+// Paragraphs returns the sentences of one step, not wrapped, the caution last
+// where an alert was opened.
+func Paragraphs(n *life.Notice) []string {
+	r := &n.Record
+	zone := zoneOf(r)
+	switch n.Step.Kind {
+	case life.StepOpened:
+		return opened(n, zone)
+	case life.StepWorsened:
+		return nonEmpty(
+			Sentence(r, evidenceOf(&n.Step, &r.Worst)),
+			"The evidence has grown since the alert was opened on "+day(r.Opened.In(zone))+"."+afterwards(r, zone))
+	case life.StepCorrected:
+		return nonEmpty(
+			"Data that came late or were corrected changed the evidence of the alert opened on "+day(r.Opened.In(zone))+".",
+			Sentence(r, evidenceOf(&n.Step, &r.Opening)))
+	case life.StepReturned:
+		return nonEmpty(subject(r)+": no window signals any more ("+story(r, zone)+")."+afterwards(r, zone)+" "+
+			standing(n.Step.Condition), reasonOf(&n.Step))
+	case life.StepWithdrawn:
+		return nonEmpty(subject(r)+": withdrawn: data corrected. With the data as they now stand the look due on "+
+			moment(r.Opened.In(zone))+" gives no signal. This is not a return to usual: with right data it would not have rung.")
+	case life.StepAcknowledged, life.StepClosed, life.StepNote:
+		return nonEmpty(acted(n, zone))
+	}
+	return nonEmpty(subject(r) + ": " + clean(string(n.Step.Kind)) + ".")
+}
+
+func opened(n *life.Notice, zone *time.Location) []string {
+	r := &n.Record
+	e := evidenceOf(&n.Step, &r.Opening)
+	late := ""
+	if r.Late {
+		late = "Opened late: the look was due on " + moment(e.Due.In(zone)) + "; data that came afterwards made it signal."
+	}
+	return nonEmpty(Sentence(r, e), late, basis(e), Caution)
+}
+
+func acted(n *life.Notice, zone *time.Location) string {
+	s, r := &n.Step, &n.Record
+	by := ""
+	if s.By != "" {
+		by = " by " + clean(s.By)
+	}
+	verb := ""
+	switch s.Kind {
+	case life.StepAcknowledged:
+		verb = "acknowledged" + by
+	case life.StepClosed:
+		verb = "closed" + by
+		if by == "" {
+			verb = "closed: returned and acknowledged"
+		}
+	case life.StepNote:
+		verb = "note" + by
+	case life.StepOpened, life.StepWorsened, life.StepCorrected, life.StepReturned, life.StepWithdrawn:
+		verb = string(s.Kind)
+	}
+	text := subject(r) + ": " + verb
+	if s.Why != "" {
+		text += ": \u201c" + clean(s.Why) + "\u201d"
+	}
+	text = stop(text) + " (" + capital(story(r, zone)) + ".)"
+	if s.Kind == life.StepAcknowledged && s.Condition == life.Acknowledged {
+		text += " It still signals."
+	}
+	return text
+}
+
+// story names the alert by its opening evidence.
+func story(r *life.Record, zone *time.Location) string {
+	e := &r.Opening
+	return "opened on " + day(r.Opened.In(zone)) + " by " + counted(e) + " in the " + span(e, zone) +
+		"; about " + expected(e) + " would be usual"
+}
+
+func standing(c life.Condition) string {
+	switch c {
+	case life.Returned:
+		return "Nobody has acknowledged it yet. A return is no proof that the cause is gone."
+	case life.Closed:
+		return "It was acknowledged before and is now closed. A return is no proof that the cause is gone."
+	case life.Unacknowledged, life.Acknowledged, life.Withdrawn:
+		return ""
+	}
+	return ""
+}
+
+func reasonOf(s *life.Step) string {
+	if s.Why == "" {
+		return ""
+	}
+	return "Reason given: " + stop(clean(s.Why))
+}
+
+// what is the word for what happened; the words differ without any colour.
+func what(n *life.Notice) string {
+	switch n.Step.Kind {
+	case life.StepOpened:
+		if n.Record.Late {
+			return "OPENED LATE"
+		}
+		return "OPENED"
+	case life.StepWorsened:
+		return "WORSENED"
+	case life.StepCorrected:
+		return "EVIDENCE CORRECTED"
+	case life.StepReturned:
+		return "RETURNED"
+	case life.StepWithdrawn:
+		return "WITHDRAWN"
+	case life.StepAcknowledged:
+		return "ACKNOWLEDGED"
+	case life.StepClosed:
+		return "CLOSED"
+	case life.StepNote:
+		return "NOTE"
+	}
+	return strings.ToUpper(clean(string(n.Step.Kind)))
+}
+
+func arrow(d life.Direction) string {
+	switch d {
+	case life.Upper:
+		return "\u25b2 more than usual"
+	case life.Lower:
+		return "\u25bc fewer than usual"
+	}
+	return clean(string(d))
+}
+
+func evidenceOf(s *life.Step, otherwise *life.Evidence) *life.Evidence {
+	if s.Evidence != nil {
+		return s.Evidence
+	}
+	return otherwise
+}
+
+func nonEmpty(paragraphs ...string) []string {
+	kept := paragraphs[:0]
+	for _, p := range paragraphs {
+		if p = strings.TrimSpace(p); p != "" {
+			kept = append(kept, p)
+		}
+	}
+	return kept
+}
