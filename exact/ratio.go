@@ -1,0 +1,99 @@
+package exact
+
+import "math"
+
+// directTerms is the number of terms up to which a tail over its first term is summed term by
+// term; beyond it the integral is taken.
+const directTerms = 200
+
+// reach is the distance, in units of u, at which exp(-c u - s u u/2) has fallen below 2^-55.
+func reach(c, s float64) float64 {
+	return 76 / (c + math.Sqrt(c*c+76*s))
+}
+
+// logLess1 is log(1+x) - x for |x| < 0.6, without cancellation.
+func logLess1(x float64) float64 {
+	s := x / (2 + x)
+	z := float64(s * s)
+	c := math.FMA(z, 2.0/25, 2.0/23)
+	c = math.FMA(z, c, 2.0/21)
+	c = math.FMA(z, c, 2.0/19)
+	c = math.FMA(z, c, 2.0/17)
+	c = math.FMA(z, c, 2.0/15)
+	c = math.FMA(z, c, 2.0/13)
+	c = math.FMA(z, c, 2.0/11)
+	c = math.FMA(z, c, 2.0/9)
+	c = math.FMA(z, c, 2.0/7)
+	c = math.FMA(z, c, 2.0/5)
+	c = math.FMA(z, c, 2.0/3)
+	return s * math.FMA(z, c, -x)
+}
+
+// panel integrates exp(-c u + a g(u*su) + b g(u*sv)) over u from 0 to t, g(x) = log(1+x)-x,
+// by one 32-point Gauss-Legendre panel. Both g terms are negative: nothing cancels.
+func panel(c, a, su, b, sv, t float64) float64 {
+	sum := 0.0
+	for i := range gaussTable {
+		u := t * gaussTable[i][0]
+		e := math.FMA(-c, u, float64(a*logLess1(u*su)))
+		if b != 0 {
+			e = math.FMA(b, logLess1(u*sv), e)
+		}
+		sum = math.FMA(gaussTable[i][1], expTwo(e, 0), sum)
+	}
+	return t * sum
+}
+
+// poissonUpperRatio is P(X >= k)/P(X = k) for k >= 1, k above mu or near it.
+func poissonUpperRatio(k float64, mu dd) float64 {
+	c := dd{k - 1, 0}.add(mu.neg()).float()
+	if t := reach(c, k-1); k*t > directTerms {
+		return k * panel(c, k-1, -1, 0, 0, min(t, 1))
+	}
+	t, sum := 1.0, 1.0
+	for d := k + 1; t > 0x1p-56*sum; d++ {
+		t *= mu.hi / d
+		sum += t
+	}
+	if mu.lo != 0 {
+		sum += mu.lo / mu.hi * (k - sum*(k-mu.hi))
+	}
+	return sum
+}
+
+// poissonLowerRatio is P(X <= k)/P(X = k) for k >= 0, k below mu or near it.
+func poissonLowerRatio(k float64, mu dd) float64 {
+	c := mu.addFloat(-k).float()
+	if t := reach(c, k); min(mu.hi*t, k) > directTerms {
+		return mu.hi * panel(c, k, 1, 0, 0, t)
+	}
+	inv := 1 / mu.hi
+	t, sum := 1.0, 1.0
+	for j := k; j > 0 && t > 0x1p-56*sum; j-- {
+		t *= float64(j * inv)
+		sum += t
+	}
+	if mu.lo != 0 {
+		sum -= mu.lo / mu.hi * (mu.hi + sum*(k-mu.hi))
+	}
+	return sum
+}
+
+// binomialUpperRatio is P(X >= k)/P(X = k) for 1 <= k <= n, k above np or near it.
+func binomialUpperRatio(k, n float64, p, q dd) float64 {
+	w := p.div(q)
+	c := q.mulFloat(k-1).add(p.mulFloat(n-k).neg()).float() / q.hi
+	s := (k - 1) + (n-k)*w.hi*w.hi
+	if t := reach(c, s); min(k*t, n-k) > directTerms {
+		return k * panel(c, k-1, -1, n-k, w.hi, min(t, 1))
+	}
+	t, sum := 1.0, 1.0
+	for j := k; j < n && t > 0x1p-56*sum; j++ {
+		t *= float64((n-j)*w.hi) / (j + 1)
+		sum += t
+	}
+	if w.lo != 0 {
+		sum += w.lo / w.hi * (k*q.hi - sum*(k-n*p.hi))
+	}
+	return sum
+}

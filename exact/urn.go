@@ -1,0 +1,184 @@
+package exact
+
+import "math"
+
+// urn is the noncentral hypergeometric law of Fisher (1935): draws balls from white + black,
+// the odds of white being odds times what chance gives. odds = 1 (fair) is the hypergeometric.
+type urn struct {
+	white, black, draws float64
+	odds                dd
+}
+
+func (u urn) fair() bool { return u.odds == dd{1, 0} }
+
+func (u urn) support() (lo, hi float64) {
+	return max(0, u.draws-u.black), min(u.white, u.draws)
+}
+
+// point is the central probability of x, times odds^x.
+func (u urn) point(x float64) point {
+	n := dd{u.white, 0}.addFloat(u.black)
+	rest := dd{u.white, 0}.addFloat(u.black).addFloat(-u.draws).float()
+	a, b, c, d := x, u.draws-x, u.white-x, rest-(u.white-x)
+	e := dd{}
+	for _, cell := range [4][3]float64{{a, u.white, u.draws}, {b, u.black, u.draws}, {c, u.white, rest}, {d, u.black, rest}} {
+		if cell[0] > 0 {
+			e = e.add(xlog(cell[0], twoProd(cell[1], cell[2]).div(n)))
+		}
+	}
+	e = e.neg().addFloat(stirling(u.white) + stirling(u.black) + stirling(u.draws) + stirling(rest) -
+		stirling(n.hi) - stirling(a) - stirling(b) - stirling(c) - stirling(d))
+	root := circle(u.white) / circle(n.hi) * (circle(u.draws) / circle(a) * circle(rest) / circle(b)) * (circle(u.black) / circle(c) / circle(d))
+	if !u.fair() {
+		e = e.add(u.odds.log().mulFloat(x))
+	}
+	return point{e.hi, e.lo, math.Sqrt(root)}
+}
+
+// up sums f(x), f(x+1), ... over f(x), and the same weighted with 0, 1, ...
+func (u urn) up(x float64) (sum, first float64) {
+	_, hi := u.support()
+	d := u.black - u.draws
+	t := 1.0
+	sum = 1
+	for j := x; j < hi && t > 0x1p-56*sum; j++ {
+		t *= float64(float64((u.white-j)*(u.draws-j))*u.odds.hi) / float64((j+1)*(d+j+1))
+		sum += t
+		first += float64(t * (j + 1 - x))
+	}
+	sum += u.odds.lo / u.odds.hi * first
+	return sum, first
+}
+
+// mirror swaps black for white: x becomes draws-x.
+func (u urn) mirror() urn { return urn{u.black, u.white, u.draws, dd{1, 0}.div(u.odds)} }
+
+// mode is a count of the largest probability, to within one.
+func (u urn) mode() float64 {
+	lo, hi := u.support()
+	if u.fair() {
+		return min(hi, max(lo, math.Floor((u.white+1)/(u.white+u.black+2)*(u.draws+1))))
+	}
+	// (white-j)(draws-j) odds = (j+1)(black-draws+j+1)
+	o := u.odds.hi
+	a := o - 1
+	b := -(o*(u.white+u.draws+2) + u.black - u.draws)
+	c := o * (u.white + 1) * (u.draws + 1)
+	root := 2 * c / (-b + math.Sqrt(max(0, b*b-4*a*c)))
+	return min(hi, max(lo, math.Floor(root)))
+}
+
+// total is the sum of all probabilities over that of the mode, and the mean.
+func (u urn) total() (mode, sum, mean float64) {
+	mode = u.mode()
+	s, f := u.up(mode)
+	t, g := u.mirror().up(u.draws - mode)
+	sum = s + (t - 1)
+	return mode, sum, mode + (f-g)/sum
+}
+
+func (u urn) side(x float64, upper, mid bool) side {
+	lo, hi := u.support()
+	switch {
+	case x < lo:
+		return outside(upper)
+	case x > hi:
+		return outside(!upper)
+	case lo == hi && mid:
+		return side{point{0, 0, 1}, 0.5, false}
+	case lo == hi:
+		return certain
+	}
+	if !upper {
+		return u.mirror().side(u.draws-x, true, mid)
+	}
+	mode := u.mode()
+	s := side{flip: x <= mode}
+	from := u
+	if s.flip {
+		if !mid {
+			if x == lo {
+				return certain
+			}
+			x--
+		}
+		from = u.mirror()
+		s.ratio, _ = from.up(u.draws - x)
+	} else {
+		s.ratio, _ = u.up(x)
+	}
+	s.point = u.point(x)
+	if mid {
+		s.ratio -= 0.5
+	}
+	if !u.fair() {
+		m, sum, _ := u.total()
+		s.ratio /= sum
+		s.point = s.point.over(u.point(m))
+	}
+	return s
+}
+
+func (u urn) prob(x float64) point {
+	lo, hi := u.support()
+	if x < lo || x > hi {
+		return impossible.point
+	}
+	if lo == hi {
+		return point{0, 0, 1}
+	}
+	p := u.point(x)
+	if !u.fair() {
+		m, sum, _ := u.total()
+		p = p.over(u.point(m))
+		p.root /= sum
+	}
+	return p
+}
+
+func (p point) over(q point) point {
+	d := dd{p.hi, p.lo}.add(dd{-q.hi, -q.lo})
+	return point{d.hi, d.lo, p.root / q.root}
+}
+
+// lowerOdds solves P(X >= x; odds) = a for the odds, x above the least count.
+func (u urn) lowerOdds(x, a float64, mid bool) float64 {
+	lo, _ := u.support()
+	if x <= lo {
+		return 0
+	}
+	c, b, d := u.white-x, u.draws-x, u.black-u.draws+x
+	z := normalQuantile(a)
+	v := 1/(x+0.5) + 1/(b+0.5) + 1/(c+0.5) + 1/(d+0.5)
+	l := logOf((x+0.5)*(d+0.5)/((b+0.5)*(c+0.5))) - z*math.Sqrt(v)
+	left, right := math.Inf(-1), math.Inf(1)
+	for range 200 {
+		u.odds = dd{expTwo(l, 0), 0}
+		s := u.side(x, true, mid)
+		f := s.logOver(a)
+		sum, first := u.up(x)
+		_, _, mean := u.total()
+		slope := x + first/sum - mean
+		if mid {
+			slope = x + first/(sum-0.5) - mean
+		}
+		step := -f / slope
+		if f > 0 {
+			right = min(right, l)
+		} else {
+			left = max(left, l)
+		}
+		next := l + step
+		if !(next > left && next < right) || math.IsNaN(next) {
+			next = 0.5 * (left + right)
+			if math.IsInf(next, 0) {
+				next = l + math.Copysign(1, step)
+			}
+		}
+		if math.Abs(next-l) <= 1e-9*max(1, math.Abs(l)) || next == left || next == right {
+			return u.odds.hi * expTwo(next-l, 0)
+		}
+		l = next
+	}
+	return expTwo(l, 0)
+}
