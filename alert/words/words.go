@@ -86,8 +86,8 @@ func Paragraphs(n *life.Notice) []string {
 		return nonEmpty(subject(r)+": no window signals any more ("+story(r, zone)+")."+afterwards(r, zone)+" "+
 			standing(n.Step.Condition), reasonOf(&n.Step))
 	case life.StepWithdrawn:
-		return nonEmpty(subject(r)+": withdrawn: data corrected. With the data as they now stand the look due on "+
-			moment(r.Opened.In(zone))+" gives no signal. This is not a return to usual: with right data it would not have rung.")
+		return nonEmpty(subject(r) + ": withdrawn: data corrected. With the data as they now stand the look due on " +
+			moment(r.Opened.In(zone)) + " gives no signal. This is not a return to usual: with right data it would not have rung.")
 	case life.StepAcknowledged, life.StepClosed, life.StepNote:
 		return nonEmpty(acted(n, zone))
 	}

@@ -36,6 +36,7 @@ func ptr(x float64) *float64 { return &x }
 // R 4.2.2 gives ppois(3, 1.1088, lower.tail = FALSE) = 0.02642 and
 // poisson.test(4, 0.616)$conf.int = 1.769 to 16.626.
 func ward(t *testing.T) life.Record {
+	t.Helper()
 	const zone = "Europe/Berlin"
 	return life.Record{
 		ID: "k3v9-1", Indicator: "line-infection", Title: "Line infections", Series: "quillmere-east/ward-3/line-infection",
@@ -60,6 +61,7 @@ func step(r *life.Record, n int, kind life.StepKind, when time.Time, c life.Cond
 }
 
 func wardLife(t *testing.T) []life.Notice {
+	t.Helper()
 	r := ward(t)
 	zone := r.Zone
 	r.Worst = r.Opening
@@ -95,6 +97,7 @@ func wardLife(t *testing.T) []life.Notice {
 }
 
 func lowerProportion(t *testing.T) life.Notice {
+	t.Helper()
 	const zone = "Europe/Berlin"
 	r := life.Record{
 		ID: "w2hc-3", Indicator: "wound-infection", Title: "Wound infections", Series: "quillmere-quay/theatre-b/wound-infection",
@@ -111,6 +114,7 @@ func lowerProportion(t *testing.T) life.Notice {
 }
 
 func requests(t *testing.T) life.Notice {
+	t.Helper()
 	const zone = "Europe/Berlin"
 	r := life.Record{
 		ID: "f77a-1", Indicator: "failed-request", Series: "ferrybill/harbour/card-payment/failed-request",
@@ -126,6 +130,7 @@ func requests(t *testing.T) life.Notice {
 }
 
 func withdrawn(t *testing.T) life.Notice {
+	t.Helper()
 	r := ward(t)
 	r.Opening.Events, r.Opening.Exposure = 1, "1"
 	n := step(&r, 2, life.StepWithdrawn, at(t, r.Zone, "2026-03-11 08:00"), life.Withdrawn)
