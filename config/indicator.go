@@ -1,0 +1,349 @@
+package config
+
+import (
+	"fmt"
+	"math/big"
+	"slices"
+	"strconv"
+	"time"
+)
+
+// readIndicator reads one [[indicator]].
+func (s section) readIndicator() Indicator {
+	s.strict(indicatorPlace)
+	in := Indicator{Line: s.node.line}
+	in.Name, _ = s.plainName("name", 64)
+	in.Title, _ = s.text("title", in.Name)
+	in.EventNoun, _ = s.text("noun", in.Name)
+	in.Series = s.readPatterns()
+	in.Unit = s.readUnit()
+	in.Every, _ = s.readEvery()
+	in.ZoneName, in.Zone = s.readZone()
+	s.readMeasure(&in)
+	s.readTimes(&in)
+	ids, _ := s.word("ids", 0, "kept", "none")
+	in.KeepIDs = ids == 0
+	in.Windows = s.readWindows(in.Every)
+	s.readLook(&in)
+	in.Baselines = s.readBaselines(&in)
+	return in
+}
+
+func (s section) readPatterns() []Pattern {
+	items, given := s.list("series", maxPatterns)
+	if !given {
+		s.fault("series", "is missing: which series are meant?", `write e.g. series = ["*/*/line-infection"]`)
+	}
+	var patterns []Pattern
+	for i, n := range items {
+		key := s.item("series", i)
+		p, ok := s.patternOf(n, key)
+		switch {
+		case !ok:
+		case slices.Contains(patterns, p):
+			s.add(n, key, fmt.Sprintf("%q stands twice", n.text), "keep one")
+		default:
+			patterns = append(patterns, p)
+		}
+	}
+	return patterns
+}
+
+// patternOf reads a pattern from one value.
+func (c *collector) patternOf(n *node, key string) (Pattern, bool) {
+	if n.kind != textKind {
+		c.wrongKind(n, key, textKind)
+		return Pattern{}, false
+	}
+	if problem := checkPattern(n.text); problem != "" {
+		c.add(n, key, fmt.Sprintf("%q is no pattern: %s", n.text, problem),
+			`a pattern is name parts joined by /, with * for any characters in a part and ** for any parts, e.g. "*/ward-*/fall"`)
+		return Pattern{}, false
+	}
+	return NewPattern(n.text), true
+}
+
+func (s section) readUnit() string {
+	unit, _ := s.text("unit", "")
+	if !s.has("unit") {
+		s.fault("unit", "is missing: what are the events counted against?", `write e.g. unit = "device-days", or "procedures" for a proportion`)
+	}
+	return unit
+}
+
+func (s section) readEvery() (Every, bool) {
+	n, given, ok := s.get("every", textKind)
+	if !given {
+		s.fault("every", "is missing: how long is a slot?", `write e.g. every = "1d"`)
+	}
+	if !given || !ok {
+		return Every{}, false
+	}
+	e, err := ParseSpan(n.text)
+	if err != nil {
+		s.fault("every", fmt.Sprintf("%q is %s", n.text, err), "")
+		return Every{}, false
+	}
+	if problem := checkSlot(e); problem != "" {
+		s.fault("every", fmt.Sprintf("%q can't be the length of a slot", n.text), problem)
+		return Every{}, false
+	}
+	return e, true
+}
+
+func (s section) readZone() (string, *time.Location) {
+	n, given, ok := s.get("zone", textKind)
+	if !given || !ok {
+		return "UTC", time.UTC
+	}
+	zone, err := LoadZone(n.text)
+	if err == nil {
+		return n.text, zone
+	}
+	mend := `write an IANA name such as "Europe/Berlin" or "UTC"`
+	if best, found := nearest(n.text, zoneNames()); found {
+		mend = fmt.Sprintf("did you mean %q?", best)
+	}
+	s.fault("zone", fmt.Sprintf("%q is %s", n.text, err), mend)
+	return "UTC", time.UTC
+}
+
+// readMeasure reads what is counted against what, and in which form.
+func (s section) readMeasure(in *Indicator) {
+	measure, ok := s.word("measure", 0, "rate", "proportion")
+	in.Measure = Measure(measure)
+	proportion := ok && in.Measure == Proportion
+	in.Per = 1
+	if per, given, sound := s.number("per"); given && sound {
+		if per.Cmp(big.NewRat(1, 1_000_000)) < 0 || per.Cmp(big.NewRat(1_000_000_000_000, 1)) > 0 {
+			s.fault("per", "is not between 0.000001 and 1000000000000", `for "per 1,000" write per = 1000`)
+		} else {
+			in.Per, _ = per.Float64()
+		}
+	}
+	events, _ := s.word("events", 1, "each", "counted")
+	in.Events = Events(events)
+	in.Exposure = s.readExposure(proportion)
+	in.Clock = s.readClock(in.Exposure)
+	in.GrainDigits = s.readGrain(proportion)
+}
+
+func (s section) readExposure(proportion bool) Exposure {
+	n, given, ok := s.get("exposure", textKind)
+	switch {
+	case !given || !ok:
+		return Reported
+	case n.text == "census":
+		s.fault("exposure", `"census" can't be used yet`, `write "reported" and give the exposure of each slot, or "clock"`)
+		return Reported
+	}
+	e, _ := s.wordOf(n, s.key("exposure"), []string{"reported", "clock"})
+	if proportion && Exposure(e) == Clock {
+		s.fault("exposure", "a proportion counts trials, and trials don't come from a clock", `write exposure = "reported" or measure = "rate"`)
+	}
+	return Exposure(e)
+}
+
+func (s section) readClock(exposure Exposure) ClockExposure {
+	clock := s.sub("clock")
+	given := s.has("clock")
+	switch {
+	case given && exposure != Clock:
+		s.fault("clock", `is used only with exposure = "clock"`, "leave it out, or say so")
+		return ClockExposure{}
+	case !given && exposure == Clock:
+		s.fault("clock", "is missing: how much exposure is there in how much time?", `write e.g. clock = { size = 12, per = "1d" } for 12 devices in use all day`)
+		return ClockExposure{}
+	case !given:
+		return ClockExposure{}
+	}
+	clock.strict("clock")
+	size, sizeGiven, ok := clock.decimal("size")
+	if ok && (!sizeGiven || size.Coef == 0) {
+		clock.fault("size", "must be given, and greater than 0", "write how much exposure there is in the time that per names")
+	}
+	per, _ := clock.duration("per", 24*time.Hour, time.Second, maxTime)
+	return ClockExposure{Size: size, Per: per}
+}
+
+// readGrain returns the number of decimal places of the exposure.
+func (s section) readGrain(proportion bool) int {
+	grain, given, ok := s.decimal("grain")
+	switch {
+	case proportion && given && ok && grain != (Decimal{Coef: 1}):
+		s.fault("grain", "trials are whole numbers", "leave it out")
+		return 0
+	case proportion:
+		return 0
+	case !given || !ok:
+		return 6
+	case grain.Coef != 1 || grain.Digits > 9:
+		s.fault("grain", grain.String()+" is not one of 1, 0.1, 0.01 and so on to 0.000000001", "")
+		return 6
+	}
+	return int(grain.Digits)
+}
+
+// usualTimes are the defaults of settle, horizon and ahead for a slot.
+func usualTimes(e Every) (settle, horizon, ahead time.Duration) {
+	const day = 24 * time.Hour
+	switch e.Unit {
+	case Minute, Hour:
+		return 5 * time.Minute, 2 * day, 5 * time.Minute
+	case Day:
+		return 2 * day, 120 * day, day
+	case Week:
+		return 7 * day, 182 * day, day
+	case Month:
+		return 14 * day, 400 * day, day
+	case Year:
+		return 60 * day, 1100 * day, day
+	}
+	return 0, 0, 0
+}
+
+// readTimes reads how long data may take, and when silence is too long.
+func (s section) readTimes(in *Indicator) {
+	settle, horizon, ahead := usualTimes(in.Every)
+	var settleOK, horizonOK bool
+	in.Settle, settleOK = s.duration("settle", settle, 0, maxTime)
+	in.Horizon, horizonOK = s.duration("horizon", max(horizon, in.Settle), time.Second, maxTime)
+	in.Ahead, _ = s.duration("ahead", ahead, 0, maxTime)
+	if settleOK && horizonOK && in.Horizon < in.Settle {
+		s.fault("horizon", fmt.Sprintf("%s is shorter than settle, %s: data would be refused while they are still waited for",
+			FormatDuration(in.Horizon), FormatDuration(in.Settle)), "make horizon at least as long")
+	}
+	if horizonOK && in.Every.N > 0 && in.horizonSlots() > maxSlots {
+		s.fault("horizon", fmt.Sprintf("%s is more than %s slots of %s", FormatDuration(in.Horizon), grouped(maxSlots), in.Every),
+			"make it shorter, or the slots longer")
+	}
+	if s.has("expect") {
+		in.Expect, _ = s.duration("expect", 0, time.Second, maxTime)
+	}
+	in.Since = s.readSince(in.Every, in.Zone)
+}
+
+// horizonSlots is the greatest number of slots that the horizon can touch.
+func (in *Indicator) horizonSlots() int {
+	return int(in.Horizon/in.Every.shortest()) + 2
+}
+
+func (s section) readSince(every Every, zone *time.Location) time.Time {
+	n, given, ok := s.get("since", dateKind, timeKind, textKind)
+	if !given || !ok {
+		return time.Time{}
+	}
+	t, err := time.ParseInLocation(time.DateOnly, n.text, zone)
+	if err != nil {
+		t, err = time.Parse(time.RFC3339Nano, n.text)
+	}
+	switch {
+	case err != nil:
+		s.fault("since", fmt.Sprintf("%q is neither a date nor a time with its offset", n.text),
+			`write e.g. "2026-01-01" (in the indicator's zone) or "2026-01-01T00:00:00+01:00"`)
+		return time.Time{}
+	case t.Year() < 1 || t.Year() > 9998:
+		s.fault("since", n.text+" is not a time of the years 1 to 9998", "")
+		return time.Time{}
+	}
+	if problem := notAtSlot(t.In(zone), every); problem != "" {
+		s.fault("since", fmt.Sprintf("%s does not begin a slot of %s", n.text, every), problem)
+	}
+	return t.UTC()
+}
+
+// notAtSlot says where slots of a day and more begin if t isn't there.
+func notAtSlot(t time.Time, every Every) string {
+	y, m, d := t.Date()
+	if every.Unit >= Day && every.N > 0 && !t.Equal(time.Date(y, m, d, 0, 0, 0, 0, t.Location())) {
+		return "slots begin at midnight of the indicator's zone"
+	}
+	switch every.Unit {
+	case Week:
+		if t.Weekday() != time.Monday {
+			return "weeks begin on Monday"
+		}
+	case Month:
+		if d != 1 || (int(m)-1)%every.N != 0 {
+			return "slots begin on the first day of a month, quarters of January, April, July and October"
+		}
+	case Year:
+		if d != 1 || m != time.January {
+			return "years begin on 1 January"
+		}
+	case Minute, Hour, Day:
+	}
+	return ""
+}
+
+// readLook reads when a look signals and when an alert has returned.
+func (s section) readLook(in *Indicator) {
+	in.Upper, in.Lower = s.readTails()
+	in.PLimit = 0.001
+	if p, given, ok := s.number("p_limit"); given && ok {
+		in.PLimit, _ = p.Float64()
+		if in.PLimit < 1e-300 || in.PLimit >= 0.5 {
+			s.fault("p_limit", strconv.FormatFloat(in.PLimit, 'g', -1, 64)+" is not greater than 0 and less than 0.5", "a usual limit is 0.001")
+		}
+	}
+	quiet, _ := s.whole("quiet", 7, 1, maxSlots)
+	in.Quiet = int(quiet)
+	in.Alpha = s.readAlpha()
+}
+
+func (s section) readTails() (upper, lower bool) {
+	items, given := s.list("tails", 2)
+	if !given {
+		return true, false
+	}
+	for i, n := range items {
+		key := s.item("tails", i)
+		if n.kind != textKind {
+			s.wrongKind(n, key, textKind)
+			continue
+		}
+		tail, ok := s.wordOf(n, key, []string{"upper", "lower"})
+		switch {
+		case !ok:
+		case tail == 0 && upper, tail == 1 && lower:
+			s.add(n, key, fmt.Sprintf("%q stands twice", n.text), "keep one")
+		case tail == 0:
+			upper = true
+		default:
+			lower = true
+		}
+	}
+	return upper, lower
+}
+
+// readAlpha returns one minus the confidence level, computed in decimal: a
+// level of 0.95 gives the number nearest to 0.05.
+func (s section) readAlpha() float64 {
+	const usual = 0.05
+	if s.has("level") && s.has("alpha") {
+		s.fault("alpha", "and level say the same thing twice", "keep one: level = 0.95 is alpha = 0.05")
+		return usual
+	}
+	key := "level"
+	if s.has("alpha") {
+		key = "alpha"
+	}
+	v, given, ok := s.number(key)
+	if !given || !ok {
+		return usual
+	}
+	alpha := v
+	if key == "level" {
+		alpha = new(big.Rat).Sub(big.NewRat(1, 1), v)
+	}
+	if alpha.Cmp(big.NewRat(1, 1_000_000_000)) < 0 || alpha.Cmp(big.NewRat(1, 2)) > 0 {
+		if key == "level" {
+			s.fault(key, "is not between 0.5 and 0.999999999", "a usual level is 0.95")
+		} else {
+			s.fault(key, "is not between 0.000000001 and 0.5", "a usual alpha is 0.05")
+		}
+		return usual
+	}
+	f, _ := alpha.Float64()
+	return f
+}

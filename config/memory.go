@@ -1,0 +1,71 @@
+package config
+
+import "fmt"
+
+// What the engine holds, in bytes. The figures are measured on a running
+// engine and rounded up; they include what Go's maps and the collector of
+// garbage need on top.
+const (
+	bytesPerSeries = 1024 // a series: its name, its place in the map, its alerts
+	bytesPerCell   = 64   // a slot: events, exposure, what of it was late, its revision
+	bytesPerLook   = 24   // a look of one window that late data may still re-run
+	bytesPerID     = 320  // an observation id with what it said
+)
+
+// Memory is the estimate of what a daemon holds when it is full.
+type Memory struct {
+	// Series holds, for each indicator, the bytes that one of its series
+	// takes.
+	Series []int64
+	// AllSeries is the cost of Limits.MaxSeries series of the dearest
+	// indicator, AllIDs that of Limits.MaxIDs ids; Total is their sum.
+	AllSeries int64
+	AllIDs    int64
+	Total     int64
+}
+
+// Memory estimates what a daemon with this set-up holds when it is full:
+//
+//	series = 1024 + 64 (longest window + horizon) + 24 (horizon) (sum over windows of 1/step)
+//	total  = MaxSeries x the dearest series + 320 MaxIDs
+//
+// with the window and the horizon in slots. Ids cost nothing if no indicator
+// keeps them.
+func (s *Setup) Memory() Memory {
+	var m Memory
+	var dearest int64
+	keep := false
+	for i := range s.Indicators {
+		in := &s.Indicators[i]
+		m.Series = append(m.Series, in.memory())
+		dearest = max(dearest, in.memory())
+		keep = keep || in.KeepIDs
+	}
+	m.AllSeries = int64(s.Limits.MaxSeries) * dearest
+	if keep {
+		m.AllIDs = int64(s.Limits.MaxIDs) * bytesPerID
+	}
+	m.Total = m.AllSeries + m.AllIDs
+	return m
+}
+
+func (in *Indicator) memory() int64 {
+	longest, looks := 0, 0
+	horizon := in.horizonSlots()
+	for _, w := range in.Windows {
+		longest = max(longest, w.Slots)
+		looks += horizon/w.Step + 1
+	}
+	return bytesPerSeries + int64(longest+horizon)*bytesPerCell + int64(looks)*bytesPerLook
+}
+
+// checkMemory refuses a set-up whose estimate is over its own limit.
+func (s *Setup) checkMemory(limits section) {
+	m := s.Memory()
+	if m.Total <= s.Limits.Memory {
+		return
+	}
+	limits.fault("memory", fmt.Sprintf("the set-up may need %s (%s for %s series, %s for ids) but %s is the limit",
+		FormatSize(m.Total), FormatSize(m.AllSeries), grouped(int64(s.Limits.MaxSeries)), FormatSize(m.AllIDs), FormatSize(s.Limits.Memory)),
+		"lower max_series, max_ids, a horizon or a window, or raise limits.memory")
+}

@@ -1,0 +1,331 @@
+package config
+
+import (
+	"errors"
+	"fmt"
+	"math"
+	"math/big"
+	"slices"
+	"strconv"
+	"strings"
+	"time"
+)
+
+// section is one table of the file, read key by key. Its getters report what
+// is wrong to the collector and go on; ok says that the value (or its default)
+// is sound and may be judged together with others.
+type section struct {
+	*collector
+	node *node
+	// path leads to the table, "" for the file itself.
+	path string
+}
+
+// keysOf are the keys that each kind of table may have.
+var keysOf = map[string][]string{
+	"":                       {"name", "folder", "partitions", "key_parts", "time", "bus", "limits", "indicator"},
+	"[time]":                 {"mode"},
+	"[bus]":                  {"url", "credentials", "user", "password_file", "ca", "cert", "key", "max_bytes", "max_age", "replicas"},
+	"[limits]":               {"max_series", "max_ids", "max_message", "max_observations", "memory"},
+	indicatorPlace:           {"name", "title", "noun", "series", "measure", "unit", "per", "every", "zone", "events", "exposure", "clock", "settle", "horizon", "ahead", "grain", "ids", "since", "expect", "windows", "tails", "p_limit", "quiet", "level", "alpha", "baseline"},
+	"clock":                  {"size", "per"},
+	"a window":               {"span", "step"},
+	"[[indicator.baseline]]": {"series", "kind", "rate", "margin", "events", "exposure", "version", "source"},
+}
+
+const indicatorPlace = "[[indicator]]"
+
+// key returns the full key of one of the section's keys.
+func (s section) key(name string) string {
+	if s.path == "" {
+		return name
+	}
+	return s.path + "." + name
+}
+
+// has reports whether the key is given.
+func (s section) has(name string) bool { return s.node.fields[name] != nil }
+
+// fault reports a fault of one key; at the section's head if it isn't given.
+func (s section) fault(name, problem, mend string) {
+	at := s.node.fields[name]
+	if at == nil {
+		at = s.node
+	}
+	s.add(at, s.key(name), problem, mend)
+}
+
+// strict reports the keys that a table of this kind lacks.
+func (s section) strict(place string) {
+	known := keysOf[place]
+	for _, k := range s.node.keys {
+		if slices.Contains(known, k) {
+			continue
+		}
+		s.fault(k, "is no key of "+placeName(place), suggestKey(k, place))
+	}
+}
+
+func placeName(place string) string {
+	if place == "" {
+		return "the top of a set-up"
+	}
+	return place
+}
+
+func suggestKey(k, place string) string {
+	for _, known := range keysOf[place] {
+		if strings.EqualFold(known, k) {
+			return "write " + known
+		}
+	}
+	var others []string
+	for other, keys := range keysOf {
+		if slices.Contains(keys, k) {
+			others = append(others, other)
+		}
+	}
+	if len(others) > 0 {
+		slices.Sort(others)
+		return "it belongs to " + placeName(others[0])
+	}
+	if best, found := nearest(k, keysOf[place]); found {
+		return "did you mean " + best + "?"
+	}
+	return "known are: " + strings.Join(keysOf[place], ", ")
+}
+
+// get returns the value of a key if it is given and of one of the kinds.
+func (s section) get(name string, kinds ...kind) (n *node, given, ok bool) {
+	n = s.node.fields[name]
+	if n == nil {
+		return nil, false, true
+	}
+	if slices.Contains(kinds, n.kind) {
+		return n, true, true
+	}
+	s.wrongKind(n, s.key(name), kinds[0])
+	return n, true, false
+}
+
+func (c *collector) wrongKind(n *node, key string, want kind) {
+	mend := "write " + want.String()
+	switch {
+	case want == textKind && n.kind != listKind && n.kind != tableKind:
+		mend = `put it between quotation marks: "` + n.text + `"`
+	case (want == wholeKind || want == pointKind) && n.kind == textKind:
+		mend = "write the number without quotation marks"
+	case want == listKind && n.kind == textKind:
+		mend = fmt.Sprintf("put it into brackets: [%q]", n.text)
+	}
+	c.add(n, key, fmt.Sprintf("is %s where %s is wanted", n.kind, want), mend)
+}
+
+// sub returns a table below, empty if it isn't given.
+func (s section) sub(name string) section {
+	n, given, ok := s.get(name, tableKind)
+	if !given || !ok {
+		n = &node{kind: tableKind, line: s.node.line, column: s.node.column}
+	}
+	return section{s.collector, n, s.key(name)}
+}
+
+// text returns a text of at most 200 characters on one line.
+func (s section) text(name, standard string) (string, bool) {
+	n, given, ok := s.get(name, textKind)
+	switch {
+	case !ok:
+		return standard, false
+	case !given:
+		return standard, true
+	case strings.TrimSpace(n.text) == "":
+		s.fault(name, "is empty", "leave the key out or give it a text")
+		return standard, false
+	case len([]rune(n.text)) > 200 || strings.ContainsFunc(n.text, func(c rune) bool { return c < ' ' || c == 0x7f }):
+		s.fault(name, "is longer than 200 characters or has control characters in it", "write one short line")
+		return standard, false
+	}
+	return n.text, true
+}
+
+// plainName returns a name of a-z, 0-9 and "-", which must be given.
+func (s section) plainName(name string, longest int) (string, bool) {
+	n, given, ok := s.get(name, textKind)
+	switch {
+	case !ok:
+		return "", false
+	case !given:
+		s.fault(name, "is missing", `give a name of small letters, digits and -, e.g. name = "quillmere"`)
+		return "", false
+	}
+	bad := strings.Trim(n.text, "abcdefghijklmnopqrstuvwxyz0123456789-") != "" || strings.HasPrefix(n.text, "-")
+	if bad || n.text == "" || len(n.text) > longest {
+		s.fault(name, fmt.Sprintf("%q is no name", n.text),
+			fmt.Sprintf("use 1 to %d small letters a-z, digits and -, not - in front", longest))
+		return "", false
+	}
+	return n.text, true
+}
+
+// word returns the index of one of several words.
+func (s section) word(name string, standard int, words ...string) (int, bool) {
+	n, given, ok := s.get(name, textKind)
+	if !given || !ok {
+		return standard, ok
+	}
+	return s.wordOf(n, s.key(name), words)
+}
+
+func (c *collector) wordOf(n *node, key string, words []string) (int, bool) {
+	if i := slices.Index(words, n.text); i >= 0 {
+		return i, true
+	}
+	mend := "write " + quoteOr(words)
+	if best, found := nearest(n.text, words); found {
+		mend = fmt.Sprintf("did you mean %q?", best)
+	}
+	c.add(n, key, fmt.Sprintf("%q is not known here", n.text), mend)
+	return 0, false
+}
+
+func quoteOr(words []string) string {
+	quoted := make([]string, len(words))
+	for i, w := range words {
+		quoted[i] = strconv.Quote(w)
+	}
+	if len(quoted) == 1 {
+		return quoted[0]
+	}
+	return strings.Join(quoted[:len(quoted)-1], ", ") + " or " + quoted[len(quoted)-1]
+}
+
+// whole returns a whole number between two bounds.
+func (s section) whole(name string, standard, least, most int64) (int64, bool) {
+	n, given, ok := s.get(name, wholeKind, pointKind)
+	if !given || !ok {
+		return standard, ok
+	}
+	v, err := strconv.ParseInt(n.text, 0, 64)
+	if n.kind == pointKind || err != nil || v < least || v > most {
+		s.fault(name, n.text+" is not a whole number from "+grouped(least)+" to "+grouped(most), "")
+		return standard, false
+	}
+	return v, true
+}
+
+// number returns a number as an exact fraction; given is false, and the value
+// nil, where the key is absent or its value is not even a number.
+func (s section) number(name string) (v *big.Rat, given, ok bool) {
+	n, given, ok := s.get(name, wholeKind, pointKind)
+	if !given || !ok {
+		return nil, given, ok
+	}
+	text := strings.ReplaceAll(n.text, "_", "")
+	f, err := strconv.ParseFloat(text, 64)
+	switch {
+	case n.kind == wholeKind:
+		v, ok = new(big.Rat).SetString(text)
+	case err != nil || math.IsInf(f, 0) || math.IsNaN(f):
+		ok = false
+	case f == 0:
+		v = new(big.Rat)
+	default:
+		v, ok = new(big.Rat).SetString(text)
+	}
+	if !ok {
+		s.fault(name, n.text+" is not a number that can be held", "")
+		return nil, true, false
+	}
+	return v, true, true
+}
+
+// decimal returns an exact decimal number, which may stand between quotation
+// marks.
+func (s section) decimal(name string) (v Decimal, given, ok bool) {
+	n, given, ok := s.get(name, wholeKind, pointKind, textKind)
+	if !given || !ok {
+		return Decimal{}, given, ok
+	}
+	v, err := ParseDecimal(strings.ReplaceAll(n.text, "_", ""))
+	if err != nil {
+		s.fault(name, n.text+" is "+err.Error(), "")
+		return Decimal{}, true, false
+	}
+	return v, true, true
+}
+
+// duration returns an elapsed time between two bounds.
+func (s section) duration(name string, standard, least, most time.Duration) (time.Duration, bool) {
+	n, given, ok := s.get(name, textKind)
+	if !given || !ok {
+		return standard, ok
+	}
+	d, err := ParseDuration(n.text)
+	switch {
+	case err != nil:
+		s.fault(name, fmt.Sprintf("%q is no elapsed time", n.text), durationMend(err))
+		return standard, false
+	case d < least || d > most:
+		s.fault(name, fmt.Sprintf("%q is not between %s and %s", n.text, FormatDuration(least), FormatDuration(most)), "")
+		return standard, false
+	}
+	return d, true
+}
+
+func durationMend(err error) string {
+	if errors.Is(err, ErrSpanSyntax) {
+		return `write a whole number and s, m, h, d (24 hours) or w (7 days), e.g. "36h"`
+	}
+	return err.Error()
+}
+
+// size returns a number of bytes between two bounds.
+func (s section) size(name string, standard, least, most int64) (int64, bool) {
+	n, given, ok := s.get(name, textKind)
+	if !given || !ok {
+		return standard, ok
+	}
+	v, err := ParseSize(n.text)
+	switch {
+	case err != nil:
+		s.fault(name, fmt.Sprintf("%q is %s", n.text, err), "")
+		return standard, false
+	case v < least || v > most:
+		s.fault(name, fmt.Sprintf("%q is not between %s and %s", n.text, FormatSize(least), FormatSize(most)), "")
+		return standard, false
+	}
+	return v, true
+}
+
+// list returns the items of a list of at most n, none of it if it is faulty.
+func (s section) list(name string, most int) (items []*node, given bool) {
+	n, given, ok := s.get(name, listKind)
+	if !given || !ok {
+		return nil, given
+	}
+	switch {
+	case len(n.items) == 0:
+		s.fault(name, "is an empty list", "")
+	case len(n.items) > most:
+		s.fault(name, fmt.Sprintf("has %s items, at most %s are allowed", grouped(int64(len(n.items))), grouped(int64(most))), "")
+		return nil, true
+	}
+	return n.items, true
+}
+
+// item is the key of one item of a list, counted from 1.
+func (s section) item(name string, i int) string {
+	return fmt.Sprintf("%s[%d]", s.key(name), i+1)
+}
+
+// grouped writes a whole number with commas between groups of three digits.
+func grouped(n int64) string {
+	if n < 0 {
+		return "-" + grouped(-n)
+	}
+	digits := strconv.FormatInt(n, 10)
+	for i := len(digits) - 3; i > 0; i -= 3 {
+		digits = digits[:i] + "," + digits[i:]
+	}
+	return digits
+}
