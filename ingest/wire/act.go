@@ -1,0 +1,150 @@
+package wire
+
+import (
+	"bytes"
+	"unicode"
+	"unicode/utf8"
+
+	"tailbell/monitor"
+	"tailbell/monitor/life"
+)
+
+// Bounds of an act's texts, in characters.
+const (
+	MaxByLength  = 200
+	MaxWhyLength = 2000
+)
+
+// Act decodes an act. If it is refused, reason and detail say why. Raw of an
+// act that is understood is data itself.
+func (d *Decoder) Act(data []byte) (act monitor.Act, reason monitor.Reason, detail string) {
+	act, f := d.readAct(data)
+	if f != nil {
+		return monitor.Act{Raw: bytes.Clone(data)}, f.reason, f.detail
+	}
+	return act, "", ""
+}
+
+// IsAct reports whether data look like an act rather than an observation: a
+// JSON object with a field act.
+func IsAct(data []byte) bool {
+	if !bytes.Contains(data, []byte(`"act"`)) {
+		return false
+	}
+	members, f := envelopeMembers(data)
+	if f != nil {
+		return false
+	}
+	for _, m := range members {
+		if m.name == "act" {
+			return true
+		}
+	}
+	return false
+}
+
+func (d *Decoder) readAct(data []byte) (monitor.Act, *fault) {
+	if len(data) > d.limits.ElementBytes {
+		return monitor.Act{}, refuse(monitor.TooLarge, "the act has %d bytes, the limit is %d", len(data), d.limits.ElementBytes)
+	}
+	if f := checkSyntax(data, d.limits.Depth); f != nil {
+		return monitor.Act{}, f
+	}
+	if data[skipSpace(data, 0)] != '{' {
+		return monitor.Act{}, refuse(monitor.NotObject, "the message is %s; an act is one JSON object", nameOf(data))
+	}
+	act := monitor.Act{Raw: data[:len(data):len(data)]}
+	seen := make(map[string]bool)
+	for _, field := range fields(data) {
+		if seen[field.name] {
+			return monitor.Act{}, refuse(monitor.DuplicateField, "the field %q is given twice; give it once", clip(field.name))
+		}
+		seen[field.name] = true
+		if f := readActField(field, &act); f != nil {
+			return monitor.Act{}, f
+		}
+	}
+	return act, checkAct(&act, seen)
+}
+
+func readActField(field field, act *monitor.Act) *fault {
+	switch field.name {
+	case "act":
+		return readActKind(field, act)
+	case "alert":
+		return readActText(field, MaxIDLength, &act.Alert)
+	case "series":
+		var w draft
+		f := w.readSeries(field)
+		act.Series = string(w.series)
+		return f
+	case "direction":
+		var text string
+		if f := readActText(field, MaxIDLength, &text); f != nil {
+			return f
+		}
+		act.Direction = life.Direction(text)
+		switch act.Direction {
+		case life.Upper, life.Lower:
+			return nil
+		}
+		return refuse(monitor.BadAct, "direction is %q; it must be upper or lower", clip(text))
+	case "by":
+		return readActText(field, MaxByLength, &act.By)
+	case "why":
+		return readActText(field, MaxWhyLength, &act.Why)
+	case "at":
+		act.HasAt = true
+		return readTime(field, &act.At)
+	}
+	return refuse(monitor.UnknownField, "an act has no field %q; leave it out", clip(field.name))
+}
+
+func readActKind(field field, act *monitor.Act) *fault {
+	var text string
+	if f := readActText(field, MaxIDLength, &text); f != nil {
+		return f
+	}
+	for _, kind := range []monitor.ActKind{monitor.Acknowledge, monitor.Close, monitor.Note} {
+		if text == kind.String() {
+			act.Kind = kind
+			return nil
+		}
+	}
+	return refuse(monitor.BadAct, "act is %q; it must be acknowledge, close or note", clip(text))
+}
+
+// readActText reads a text that says something: of at most so many
+// characters, none of them a control character but tab and line feed.
+func readActText(field field, most int, text *string) *fault {
+	if f := isText(field, monitor.BadAct); f != nil {
+		return f
+	}
+	*text = string(unquote(field.value))
+	control := func(c rune) bool { return unicode.IsControl(c) && c != '\n' && c != '\t' }
+	switch n := utf8.RuneCountInString(*text); {
+	case n == 0:
+		return refuse(monitor.BadAct, "%s is empty; fill it in", field.name)
+	case n > most:
+		return refuse(monitor.BadAct, "%s has %d characters, the limit is %d; shorten it", field.name, n, most)
+	case bytes.ContainsFunc([]byte(*text), control):
+		return refuse(monitor.BadAct, "%s has a control character; leave it out", field.name)
+	}
+	return nil
+}
+
+func checkAct(act *monitor.Act, seen map[string]bool) *fault {
+	switch {
+	case !seen["act"]:
+		return refuse(monitor.BadAct, "the field act is missing; it must be acknowledge, close or note")
+	case !seen["by"]:
+		return refuse(monitor.BadAct, "the field by is missing; it says who acts")
+	case seen["alert"] && (seen["series"] || seen["direction"]):
+		return refuse(monitor.BadAct, "the alert is named twice; give alert, or series and direction")
+	case !seen["alert"] && !(seen["series"] && seen["direction"]):
+		return refuse(monitor.BadAct, "no alert is named; give alert, or series and direction")
+	case !seen["why"] && act.Kind != monitor.Acknowledge:
+		return refuse(monitor.BadAct, "the field why is missing; a %s needs it", act.Kind)
+	}
+	return nil
+}
