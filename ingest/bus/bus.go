@@ -1,0 +1,298 @@
+package bus
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"os"
+	"sync"
+	"time"
+
+	"github.com/nats-io/nats.go"
+	"github.com/nats-io/nats.go/jetstream"
+	"github.com/rs/zerolog"
+
+	"tailbell/config"
+)
+
+const (
+	connectTimeout = 10 * time.Second
+	drainTimeout   = 5 * time.Second
+	pingInterval   = 20 * time.Second
+)
+
+// State is the state of the connection to the bus.
+type State int
+
+// The states of the connection.
+const (
+	Connected State = iota
+	Disconnected
+	Closed
+)
+
+// String returns the state as shown to people.
+func (s State) String() string {
+	switch s {
+	case Connected:
+		return "connected"
+	case Disconnected:
+		return "disconnected"
+	case Closed:
+		return "closed"
+	}
+	return "unknown"
+}
+
+// Option changes how a Bus is opened.
+type Option func(*options)
+
+type options struct {
+	noListener bool
+	log        zerolog.Logger
+	onState    func(State, error)
+}
+
+// WithoutListener keeps an embedded bus off the network: no socket, no
+// control.json. Nothing outside the process reaches it.
+func WithoutListener() Option { return func(o *options) { o.noListener = true } }
+
+// WithLog gives the bus a logger. By default it logs nothing.
+func WithLog(l zerolog.Logger) Option { return func(o *options) { o.log = l } }
+
+// WithState calls f whenever the connection is lost (with the reason, if there
+// is one), is back, or is closed. f must not block. A Bus that was just opened
+// is connected; f is not called for that.
+func WithState(f func(State, error)) Option { return func(o *options) { o.onState = f } }
+
+func gather(opts []Option) options {
+	o := options{log: zerolog.Nop(), onState: func(State, error) {}}
+	for _, opt := range opts {
+		opt(&o)
+	}
+	return o
+}
+
+// Bus is a connection to the bus of one deployment, and for the daemon of an
+// embedded one the server itself. Its methods may be called concurrently.
+type Bus struct {
+	setup    *config.Setup
+	names    names
+	nc       *nats.Conn
+	js       jetstream.JetStream
+	closed   chan struct{} // closed when the connection is
+	embedded *embedded     // nil for a remote bus and for clients
+	lock     *lock         // nil for clients
+	log      zerolog.Logger
+	notes    []string
+	atomic   bool // the input stream takes atomic batches
+
+	closing  sync.Once
+	closeErr error
+}
+
+// Open takes the lock of the set-up's folder, starts the embedded bus or
+// connects to the remote one, and sees to its streams. The folder is created
+// if it is missing. If another process holds it the error is an ErrLocked.
+func Open(ctx context.Context, setup *config.Setup, opts ...Option) (*Bus, error) {
+	o := gather(opts)
+	if err := checkName(setup.Name); err != nil {
+		return nil, err
+	}
+	if err := os.MkdirAll(setup.Folder, 0o700); err != nil {
+		return nil, fmt.Errorf("making the folder: %w", err)
+	}
+	l, err := takeLock(ctx, setup.Folder)
+	if err != nil {
+		return nil, err
+	}
+	b := newBus(setup, o)
+	b.lock = l
+	if err := b.open(ctx, o); err != nil {
+		return nil, errors.Join(err, b.Close())
+	}
+	return b, nil
+}
+
+func newBus(setup *config.Setup, o options) *Bus {
+	return &Bus{
+		setup:  setup,
+		names:  names{setup.Name},
+		closed: make(chan struct{}),
+		log:    o.log.With().Str("part", "bus").Logger(),
+	}
+}
+
+// open does what Open does once the lock is held.
+func (b *Bus) open(ctx context.Context, o options) error {
+	if err := removeEndpoint(b.setup.Folder); err != nil {
+		return err
+	}
+	if b.setup.Bus.URL != "" {
+		if err := b.connectRemote(o); err != nil {
+			return err
+		}
+		return b.ensureStreams(ctx, false)
+	}
+	e, err := startServer(b.setup, o, b.log)
+	if err != nil {
+		return err
+	}
+	b.embedded = e
+	if err := b.connect("", e.connectOptions(), o); err != nil {
+		return fmt.Errorf("connecting to the embedded bus: %w", err)
+	}
+	if err := b.ensureStreams(ctx, true); err != nil {
+		return err
+	}
+	if o.noListener {
+		return nil
+	}
+	return endpoint{
+		Format: endpointFormat, Deployment: b.setup.Name, PID: os.Getpid(),
+		URL: "nats://" + e.server.Addr().String(), User: e.visitor.user, Password: e.visitor.password,
+	}.write(b.setup.Folder)
+}
+
+// Dial connects as a client: to the embedded bus of the daemon that runs on
+// the set-up's folder, or to the remote bus. For the embedded bus the error is
+// an ErrNoDaemon if no process holds the folder's lock.
+func Dial(ctx context.Context, setup *config.Setup, opts ...Option) (*Bus, error) {
+	o := gather(opts)
+	if err := checkName(setup.Name); err != nil {
+		return nil, err
+	}
+	b := newBus(setup, o)
+	err := b.dial(ctx, o)
+	if err != nil {
+		return nil, errors.Join(err, b.Close())
+	}
+	return b, nil
+}
+
+func (b *Bus) dial(ctx context.Context, o options) error {
+	if b.setup.Bus.URL != "" {
+		if err := b.connectRemote(o); err != nil {
+			return err
+		}
+		return b.ensureStreams(ctx, false)
+	}
+	e, err := readEndpoint(b.setup.Folder)
+	if err == nil {
+		err = b.connect(e.URL, []nats.Option{nats.UserInfo(e.User, e.Password)}, o)
+	}
+	if err != nil {
+		return b.explain(err)
+	}
+	if e.Deployment != b.setup.Name {
+		return fmt.Errorf("the daemon on %s runs the deployment %q, not %q: "+
+			"use its own set-up", b.setup.Folder, e.Deployment, b.setup.Name)
+	}
+	return b.checkStreams(ctx)
+}
+
+// explain says why a daemon can't be reached: there is none, or there is one
+// that doesn't answer.
+func (b *Bus) explain(cause error) error {
+	held, pid, err := locked(b.setup.Folder)
+	switch {
+	case err != nil:
+		return errors.Join(cause, err)
+	case !held:
+		return fmt.Errorf("%w on %s", ErrNoDaemon, b.setup.Folder)
+	case errors.Is(cause, os.ErrNotExist):
+		return fmt.Errorf("process %d holds %s but offers no way in: "+
+			"it is starting or stopping, try again", pid, b.setup.Folder)
+	}
+	return fmt.Errorf("the daemon (process %d) can't be reached: %w", pid, cause)
+}
+
+func (b *Bus) connectRemote(o options) error {
+	opts, err := remoteOptions(b.setup.Bus)
+	if err != nil {
+		return err
+	}
+	if err := b.connect(b.setup.Bus.URL, opts, o); err != nil {
+		return fmt.Errorf("connecting to the bus at %s: %w", shown(b.setup.Bus.URL), err)
+	}
+	return nil
+}
+
+// connect makes the connection. Once made it comes back by itself, however
+// long the bus was away.
+func (b *Bus) connect(url string, opts []nats.Option, o options) error {
+	wait := newBackoff()
+	opts = append(opts,
+		nats.Name("tailbell "+b.setup.Name),
+		nats.Timeout(connectTimeout),
+		nats.DrainTimeout(drainTimeout),
+		nats.PingInterval(pingInterval),
+		nats.MaxReconnects(-1),
+		nats.IgnoreAuthErrorAbort(),
+		nats.CustomReconnectDelay(wait.delay),
+		nats.DisconnectErrHandler(func(nc *nats.Conn, err error) {
+			if !nc.IsClosed() {
+				o.onState(Disconnected, err)
+			}
+		}),
+		nats.ReconnectHandler(func(*nats.Conn) { o.onState(Connected, nil) }),
+		nats.ClosedHandler(func(nc *nats.Conn) {
+			o.onState(Closed, nc.LastError())
+			close(b.closed)
+		}),
+		nats.ErrorHandler(func(_ *nats.Conn, _ *nats.Subscription, err error) {
+			b.log.Warn().Err(err).Msg("the connection to the bus reports an error")
+		}),
+	)
+	nc, err := nats.Connect(url, opts...)
+	if err != nil {
+		return err
+	}
+	b.nc = nc
+	b.js, err = jetstream.New(nc)
+	return err
+}
+
+// Close lets what is under way end, closes the connection, shuts an embedded
+// server down and waits for it, and lets go of the folder. It may be called
+// again.
+func (b *Bus) Close() error {
+	b.closing.Do(func() { b.closeErr = b.close() })
+	return b.closeErr
+}
+
+func (b *Bus) close() error {
+	var errs []error
+	if b.lock != nil {
+		errs = append(errs, removeEndpoint(b.setup.Folder))
+	}
+	if b.nc != nil {
+		if err := b.nc.Drain(); err != nil && !errors.Is(err, nats.ErrConnectionClosed) {
+			b.nc.Close() // not connected: nothing to drain
+		}
+		<-b.closed
+	}
+	if b.embedded != nil {
+		b.embedded.stop()
+	}
+	if b.lock != nil {
+		errs = append(errs, b.lock.release())
+	}
+	return errors.Join(errs...)
+}
+
+// Conn is the connection, for request and reply.
+func (b *Bus) Conn() *nats.Conn { return b.nc }
+
+// Connected reports whether the connection is up.
+func (b *Bus) Connected() bool { return b.nc.IsConnected() }
+
+// Embedded reports whether the server runs in this process.
+func (b *Bus) Embedded() bool { return b.embedded != nil }
+
+// Notes name the settings of existing streams that differ from the set-up
+// without harm.
+func (b *Bus) Notes() []string { return b.notes }
+
+// ControlSubject is the subject on which a daemon answers the verb.
+func (b *Bus) ControlSubject(verb string) string { return b.names.control(verb) }

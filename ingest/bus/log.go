@@ -1,0 +1,56 @@
+package bus
+
+import (
+	"fmt"
+	"sync"
+
+	"github.com/rs/zerolog"
+)
+
+// serverLog passes what the embedded server has to say on to a logger. The
+// server's notices are of no interest to the user of the daemon: they are
+// logged as debug.
+type serverLog struct {
+	log zerolog.Logger
+	mu  struct {
+		sync.Mutex
+		fatal string // the last fatal message
+	}
+}
+
+// fatal returns the server's last fatal message, "" if there was none.
+func (l *serverLog) fatal() string {
+	l.mu.Lock()
+	defer l.mu.Unlock()
+	return l.mu.fatal
+}
+
+// Noticef logs a notice.
+func (l *serverLog) Noticef(format string, v ...any) {
+	l.log.Debug().Msgf(format, v...)
+}
+
+// Warnf logs a warning.
+func (l *serverLog) Warnf(format string, v ...any) {
+	l.log.Warn().Msgf(format, v...)
+}
+
+// Errorf logs an error.
+func (l *serverLog) Errorf(format string, v ...any) {
+	l.log.Error().Msgf(format, v...)
+}
+
+// Fatalf logs an error after which the server doesn't work. The process goes
+// on: whoever started the server decides.
+func (l *serverLog) Fatalf(format string, v ...any) {
+	l.mu.Lock()
+	l.mu.fatal = fmt.Sprintf(format, v...)
+	l.mu.Unlock()
+	l.log.Error().Msgf(format, v...)
+}
+
+// Debugf drops the server's debug messages: they name every client and request.
+func (l *serverLog) Debugf(string, ...any) {}
+
+// Tracef drops the server's traces: they hold message contents.
+func (l *serverLog) Tracef(string, ...any) {}

@@ -1,0 +1,367 @@
+package bus
+
+import (
+	"context"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"strings"
+	"time"
+
+	"github.com/nats-io/nats.go"
+	"github.com/nats-io/nats.go/jetstream"
+	"github.com/nats-io/nuid"
+)
+
+const (
+	// pullMessages and pullBytes bound what one request may bring; there is
+	// one request at a time, so they bound what waits in memory too.
+	pullMessages = 10000
+	pullBytes    = 16 * mib
+	// pullExpiry is when the bus ends a request that brought too little, and
+	// pullBeat how often it says meanwhile that it is there.
+	pullExpiry = 30 * time.Second
+	pullBeat   = 5 * time.Second
+	// silence is how long nothing may come at all before the source starts
+	// again.
+	silence = 2*pullBeat + time.Second
+	// statusRoom is room for what the bus says about one request.
+	statusRoom = 64
+	// forgotten is when the bus drops a consumer that nobody asks anything.
+	forgotten = 5 * time.Minute
+
+	attachTimeout = 5 * time.Second
+	ackPrefix     = "$JS.ACK."
+)
+
+// Missing counts the messages that were removed from the stream before they
+// were read: aged out, purged or deleted.
+type Missing struct {
+	// Messages is how many positions are missing. With several partitions it
+	// is an upper bound, since they may have been another's.
+	Messages uint64
+	// From and To are the first and last position of the latest such gap.
+	From, To uint64
+}
+
+// Source reads messages in order. It is not for concurrent use.
+type Source struct {
+	bus    *Bus
+	stream string
+	filter string
+	// whole says that the filter takes every message of the stream, so that
+	// positions must not jump.
+	whole   bool
+	last    uint64    // position of the last message handed out
+	created time.Time // of the stream, when first seen
+	missing Missing
+	states  chan nats.Status
+
+	feed *feed // nil when the source has to start (again)
+}
+
+// feed is one consumer on the bus with the subscription that it delivers to.
+type feed struct {
+	consumer string
+	inbox    string
+	sub      *nats.Subscription
+	msgs     chan *nats.Msg
+	held     *nats.Msg // taken from msgs, not yet handed out
+	next     uint64    // the consumer sequence expected next
+	left     int       // what the request under way may still bring; 0: none is
+	request  []byte
+}
+
+// Source reads the partition's messages after the given position, 0 for all.
+// The error is an ErrBeyondEnd if the position lies past the stream's end.
+// Close the source when done.
+func (b *Bus) Source(ctx context.Context, partition int, after uint64) (*Source, error) {
+	if partition < 0 || partition >= partitions(b.setup) {
+		return nil, fmt.Errorf("%w: %d of %d", ErrNoPartition, partition, partitions(b.setup))
+	}
+	return b.newSource(ctx, b.names.inStream(), b.names.inAll(partition), after, partitions(b.setup) == 1)
+}
+
+func (b *Bus) newSource(ctx context.Context, stream, filter string, after uint64, whole bool) (*Source, error) {
+	s := &Source{bus: b, stream: stream, filter: filter, whole: whole, last: after}
+	s.states = b.nc.StatusChanged(nats.CONNECTED)
+	if err := s.attach(ctx); err != nil {
+		s.bus.nc.RemoveStatusListener(s.states)
+		return nil, err
+	}
+	return s, nil
+}
+
+// Position is the position of the last message that Next returned, or that
+// after which the source began.
+func (s *Source) Position() uint64 { return s.last }
+
+// Missing says what was removed from the stream before it could be read.
+func (s *Source) Missing() Missing { return s.missing }
+
+// Next appends messages to dst: it waits until there is at least one, then
+// returns what is there, at most limit messages and about maxBytes of data (at
+// least one message). It survives reconnects; the error is ctx's, or says
+// that the stream can't be read on (ErrBeyondEnd, ErrStreamReplaced,
+// ErrClosed), in which case dst has not grown. The messages are the caller's.
+func (s *Source) Next(ctx context.Context, dst []Raw, limit, maxBytes int) ([]Raw, error) {
+	start := len(dst)
+	for {
+		if s.feed == nil {
+			if err := s.attach(ctx); err != nil {
+				return dst, err
+			}
+		}
+		dst = s.drain(dst, max(1, limit), maxBytes)
+		if err := s.ask(); err != nil {
+			return dst, err
+		}
+		if len(dst) > start {
+			return dst, nil
+		}
+		if s.feed == nil {
+			continue
+		}
+		if err := s.wait(ctx); err != nil {
+			return dst, err
+		}
+	}
+}
+
+// drain appends what has arrived.
+func (s *Source) drain(dst []Raw, limit, maxBytes int) []Raw {
+	size := 0
+	for taken := 0; taken < limit && s.feed != nil; {
+		msg := s.feed.take()
+		if msg == nil {
+			break
+		}
+		if taken > 0 && size+len(msg.Data) > maxBytes {
+			s.feed.held = msg
+			break
+		}
+		if raw, ok := s.accept(msg); ok {
+			dst = append(dst, raw)
+			taken++
+			size += len(msg.Data)
+		}
+	}
+	return dst
+}
+
+// take returns the next message that has arrived, nil if none has.
+func (f *feed) take() *nats.Msg {
+	if msg := f.held; msg != nil {
+		f.held = nil
+		return msg
+	}
+	select {
+	case msg := <-f.msgs:
+		return msg
+	default:
+		return nil
+	}
+}
+
+// accept checks that msg is the one expected next. What the bus says about the
+// request itself is told from messages by its lack of a reply subject: headers
+// can't be trusted, a publisher may have set the same.
+func (s *Source) accept(msg *nats.Msg) (Raw, bool) {
+	if !strings.HasPrefix(msg.Reply, ackPrefix) {
+		s.status(msg)
+		return Raw{}, false
+	}
+	meta, err := msg.Metadata()
+	if err != nil || meta.Consumer != s.feed.consumer || meta.Sequence.Consumer != s.feed.next ||
+		meta.Sequence.Stream <= s.last {
+		s.detach()
+		return Raw{}, false
+	}
+	position := meta.Sequence.Stream
+	if s.whole {
+		s.gap(position)
+	}
+	s.feed.next++
+	s.feed.left--
+	s.last = position
+	return Raw{
+		Position: position,
+		Stored:   meta.Timestamp.UTC(),
+		Subject:  msg.Subject,
+		Header:   msg.Header,
+		Data:     msg.Data,
+	}, true
+}
+
+// status takes in what the bus says about the request under way.
+func (s *Source) status(msg *nats.Msg) {
+	switch msg.Header.Get("Status") {
+	case "100": // idle, but there
+	case "404", "408":
+		s.feed.left = 0
+	case "409":
+		text := strings.ToLower(msg.Header.Get("Description"))
+		if strings.Contains(text, "batch completed") || strings.Contains(text, "exceeds maxbytes") {
+			s.feed.left = 0
+			return
+		}
+		s.detach()
+	default:
+		s.detach()
+	}
+}
+
+// gap counts the positions between the last message and this one.
+func (s *Source) gap(position uint64) {
+	if position > s.last+1 {
+		s.missing.Messages += position - s.last - 1
+		s.missing.From, s.missing.To = s.last+1, position-1
+	}
+}
+
+// ask sends the next request if none is under way.
+func (s *Source) ask() error {
+	f := s.feed
+	if f == nil || f.left > 0 {
+		return nil
+	}
+	subject := "$JS.API.CONSUMER.MSG.NEXT." + s.stream + "." + f.consumer
+	err := s.bus.nc.PublishRequest(subject, f.inbox, f.request)
+	if errors.Is(err, nats.ErrConnectionClosed) || errors.Is(err, nats.ErrConnectionDraining) {
+		return fmt.Errorf("reading the stream %s: %w", s.stream, mapped(err))
+	}
+	if err != nil {
+		s.detach()
+		return nil
+	}
+	f.left = pullMessages
+	return nil
+}
+
+// wait waits for a message, or for a reason to start again.
+func (s *Source) wait(ctx context.Context) error {
+	timer := time.NewTimer(silence)
+	defer timer.Stop()
+	select {
+	case msg := <-s.feed.msgs:
+		s.feed.held = msg
+	case <-s.states: // back again after a break
+		s.detach()
+	case <-timer.C:
+		s.detach()
+	case <-s.bus.closed:
+		return fmt.Errorf("reading the stream %s: %w", s.stream, ErrClosed)
+	case <-ctx.Done():
+		return ctx.Err()
+	}
+	return nil
+}
+
+// attach makes a consumer that goes on after the last message, trying until it
+// succeeds, the stream proves to be unusable, or ctx ends.
+func (s *Source) attach(ctx context.Context) error {
+	wait := newBackoff()
+	for {
+		err := s.tryAttach(ctx)
+		if err == nil {
+			return nil
+		}
+		if errors.Is(err, ErrBeyondEnd) || errors.Is(err, ErrStreamReplaced) {
+			return err
+		}
+		if err := s.bus.again(ctx, wait, err); err != nil {
+			return fmt.Errorf("reading the stream %s: %w", s.stream, err)
+		}
+	}
+}
+
+func (s *Source) tryAttach(ctx context.Context) error {
+	ctx, cancel := context.WithTimeout(ctx, attachTimeout)
+	defer cancel()
+	if err := s.compare(ctx); err != nil {
+		return err
+	}
+	f := &feed{
+		consumer: "source-" + nuid.Next(),
+		inbox:    s.bus.nc.NewInbox(),
+		msgs:     make(chan *nats.Msg, pullMessages+statusRoom),
+		next:     1,
+	}
+	var err error
+	f.request, err = json.Marshal(map[string]int64{
+		"batch": pullMessages, "max_bytes": max(pullBytes, 2*s.bus.nc.MaxPayload()),
+		"expires": int64(pullExpiry), "idle_heartbeat": int64(pullBeat),
+	})
+	if err != nil {
+		return fmt.Errorf("encoding a request: %w", err)
+	}
+	_, err = s.bus.js.CreateConsumer(ctx, s.stream, jetstream.ConsumerConfig{
+		Name:              f.consumer,
+		DeliverPolicy:     jetstream.DeliverByStartSequencePolicy,
+		OptStartSeq:       s.last + 1,
+		AckPolicy:         jetstream.AckNonePolicy,
+		MaxDeliver:        1,
+		FilterSubject:     s.filter,
+		InactiveThreshold: forgotten,
+		Replicas:          1,
+		MemoryStorage:     true,
+	})
+	if err != nil {
+		return err
+	}
+	f.sub, err = s.bus.nc.ChanSubscribe(f.inbox, f.msgs)
+	if err != nil {
+		return err
+	}
+	s.feed = f
+	return nil
+}
+
+// compare checks that the stream is still the one that was read so far, and
+// that it reaches at least as far.
+func (s *Source) compare(ctx context.Context) error {
+	id, err := s.bus.identity(ctx, s.stream)
+	if err != nil {
+		return err
+	}
+	if s.created.IsZero() {
+		s.created = id.Created
+	}
+	if !id.Created.Equal(s.created) {
+		return fmt.Errorf("%w: %s was made at %s, what was read so far at %s", ErrStreamReplaced,
+			s.stream, id.Created.Format(time.RFC3339), s.created.Format(time.RFC3339))
+	}
+	if s.last > id.Last {
+		return &BeyondEndError{Stream: s.stream, After: s.last, End: id.Last}
+	}
+	if !s.whole && id.First > s.last+1 {
+		s.gap(id.First)
+		s.last = id.First - 1
+	}
+	return nil
+}
+
+// detach gives the feed up; the next attach goes on after the last message.
+func (s *Source) detach() {
+	if err := s.feed.sub.Unsubscribe(); err != nil {
+		s.bus.log.Debug().Err(err).Msg("leaving a subscription")
+	}
+	s.feed = nil
+}
+
+// Close ends the source.
+func (s *Source) Close() error {
+	s.bus.nc.RemoveStatusListener(s.states)
+	if s.feed == nil || s.bus.nc.IsClosed() {
+		return nil
+	}
+	consumer := s.feed.consumer
+	s.detach()
+	ctx, cancel := context.WithTimeout(context.Background(), attachTimeout)
+	defer cancel()
+	err := s.bus.js.DeleteConsumer(ctx, s.stream, consumer)
+	if err != nil && !errors.Is(err, jetstream.ErrConsumerNotFound) {
+		return fmt.Errorf("leaving the stream %s: %w", s.stream, mapped(err))
+	}
+	return nil
+}

@@ -1,0 +1,89 @@
+package bus
+
+import (
+	"fmt"
+	"strconv"
+	"strings"
+)
+
+// Kind is what a message of the input stream carries: the last token of its
+// subject.
+type Kind int
+
+// The kinds of message.
+const (
+	Observation Kind = iota // one observation or several
+	Act                     // something that a person did
+	Setting                 // a new set-up
+	Tick                    // nothing but its time
+)
+
+// String returns the kind's token in a subject.
+func (k Kind) String() string {
+	switch k {
+	case Observation:
+		return "obs"
+	case Act:
+		return "act"
+	case Setting:
+		return "set"
+	case Tick:
+		return "tick"
+	}
+	return "unknown"
+}
+
+// names are the streams and subjects of one deployment.
+type names struct {
+	deployment string
+}
+
+func (n names) inStream() string    { return n.deployment + "-in" }
+func (n names) alertStream() string { return n.deployment + "-alerts" }
+
+// in is the subject of a kind of message in a partition.
+func (n names) in(partition int, kind Kind) string {
+	return n.deployment + ".in." + strconv.Itoa(partition) + "." + kind.String()
+}
+
+// inAll matches every message of a partition.
+func (n names) inAll(partition int) string {
+	return n.deployment + ".in." + strconv.Itoa(partition) + ".*"
+}
+
+func (n names) alert(partition int, direction, indicator string) string {
+	return n.deployment + ".alert." + strconv.Itoa(partition) + "." +
+		token(direction) + "." + token(indicator)
+}
+
+func (n names) alertAll() string { return n.deployment + ".alert.>" }
+
+func (n names) control(verb string) string { return n.deployment + ".control." + verb }
+
+// token makes s one token of a subject: what a subject can't hold becomes "_".
+func token(s string) string {
+	if s == "" {
+		return "_"
+	}
+	return strings.Map(func(r rune) rune {
+		if r <= ' ' || r == 0x7f || r == '.' || r == '*' || r == '>' {
+			return '_'
+		}
+		return r
+	}, s)
+}
+
+// checkName reports whether a deployment's name can stand in subjects, stream
+// names and file names.
+func checkName(name string) error {
+	ok := name != "" && len(name) <= 64
+	for _, r := range name {
+		letter := r >= 'a' && r <= 'z' || r >= 'A' && r <= 'Z'
+		ok = ok && (letter || r >= '0' && r <= '9' || r == '-' || r == '_')
+	}
+	if !ok {
+		return fmt.Errorf("the deployment's name %q can't name a stream: "+
+			"use 1 to 64 letters, digits, \"-\" or \"_\"", name)
+	}
+	return nil
+}
