@@ -1,0 +1,258 @@
+package store
+
+import (
+	"errors"
+	"fmt"
+
+	bolt "go.etcd.io/bbolt"
+
+	"tailbell/monitor/life"
+)
+
+// Row is one alert step that outlets must deliver. Numbers run from 1.
+type Row struct {
+	Number uint64
+	Notice life.Notice
+}
+
+// Start says where a new outlet begins.
+type Start int
+
+// The starts.
+const (
+	// FromEnd begins with the steps committed after the outlet was registered.
+	FromEnd Start = iota
+	// FromOldest begins with the oldest step that is still kept.
+	FromOldest
+)
+
+// String returns the start in words.
+func (s Start) String() string {
+	switch s {
+	case FromEnd:
+		return "from the end"
+	case FromOldest:
+		return "from the oldest step kept"
+	}
+	return fmt.Sprintf("Start(%d)", int(s))
+}
+
+// Outlet is one way out with what it has yet to deliver.
+type Outlet struct {
+	Name string
+	// Delivered is the number of the last step delivered.
+	Delivered uint64
+	// Depth is how many steps wait.
+	Depth uint64
+}
+
+// cursor is the stored form of an outlet.
+type cursor struct {
+	Delivered uint64 `json:"delivered"`
+}
+
+// Outlets registers outlets by name; one that is known keeps its place. Steps
+// are kept until every registered outlet has delivered them; with none
+// registered they are not kept.
+func (s *Store) Outlets(start Start, names ...string) error {
+	missing, err := s.unknownOutlets(names)
+	if err != nil || len(missing) == 0 {
+		return err
+	}
+	return s.update("outlets", func(tx *bolt.Tx, h *head) error {
+		r, err := outletsShelf.in(tx)
+		if err != nil {
+			return err
+		}
+		for _, name := range missing {
+			if name == "" {
+				return fmt.Errorf("an outlet needs a name: %w", ErrNoOutlet)
+			}
+			if r.Get([]byte(name)) != nil {
+				continue
+			}
+			c := cursor{Delivered: h.Outbox}
+			if start == FromOldest {
+				c.Delivered = h.OutboxFirst - 1
+			}
+			if err := r.putJSON([]byte(name), c); err != nil {
+				return err
+			}
+			h.Outlets++
+		}
+		return nil
+	})
+}
+
+func (s *Store) unknownOutlets(names []string) ([]string, error) {
+	var missing []string
+	err := s.view(func(tx *bolt.Tx) error {
+		r, err := outletsShelf.in(tx)
+		if err != nil {
+			return err
+		}
+		for _, name := range names {
+			if name == "" || r.Get([]byte(name)) == nil {
+				missing = append(missing, name)
+			}
+		}
+		return nil
+	})
+	return missing, err
+}
+
+// DropOutlet forgets an outlet. What only it had yet to deliver is let go.
+func (s *Store) DropOutlet(name string) error {
+	return s.update("drop outlet", func(tx *bolt.Tx, h *head) error {
+		r, err := outletsShelf.in(tx)
+		if err != nil {
+			return err
+		}
+		if r.Get([]byte(name)) == nil {
+			return fmt.Errorf("outlet %q: %w", name, ErrNoOutlet)
+		}
+		h.Outlets--
+		return errors.Join(r.remove([]byte(name)), trimOutbox(tx, h, trimKeys))
+	})
+}
+
+// OutletState returns the registered outlets by name.
+func (s *Store) OutletState() ([]Outlet, error) {
+	var outlets []Outlet
+	err := s.view(func(tx *bolt.Tx) error {
+		h, err := readHead(tx)
+		if err != nil {
+			return err
+		}
+		return eachOutlet(tx, func(name string, c cursor) error {
+			outlets = append(outlets, Outlet{Name: name, Delivered: c.Delivered, Depth: h.Outbox - c.Delivered})
+			return nil
+		})
+	})
+	return outlets, err
+}
+
+func eachOutlet(tx *bolt.Tx, use func(name string, c cursor) error) error {
+	r, err := outletsShelf.in(tx)
+	if err != nil {
+		return err
+	}
+	return r.ForEach(func(key, value []byte) error {
+		var c cursor
+		if err := r.openJSON(key, value, &c); err != nil {
+			return err
+		}
+		return use(string(key), c)
+	})
+}
+
+// Pending returns at most max steps that an outlet has yet to deliver, oldest
+// first.
+func (s *Store) Pending(outlet string, max int) ([]Row, error) {
+	var rows []Row
+	err := s.view(func(tx *bolt.Tx) error {
+		outlets, err := outletsShelf.in(tx)
+		if err != nil {
+			return err
+		}
+		var c cursor
+		found, err := outlets.getJSON([]byte(outlet), &c)
+		if err == nil && !found {
+			err = fmt.Errorf("outlet %q: %w", outlet, ErrNoOutlet)
+		}
+		if err != nil {
+			return err
+		}
+		r, err := outboxShelf.in(tx)
+		if err != nil {
+			return err
+		}
+		page, err := r.page(c.Delivered, false, min(max, pageRows))
+		if err != nil {
+			return err
+		}
+		for _, n := range page {
+			row := Row{Number: n}
+			if _, err := r.getJSON(number(n), &row.Notice); err != nil {
+				return err
+			}
+			rows = append(rows, row)
+		}
+		return nil
+	})
+	return rows, err
+}
+
+// Delivered notes that an outlet has delivered all steps up to number n.
+// Saying it again, or of an earlier one, does nothing.
+func (s *Store) Delivered(outlet string, n uint64) error {
+	return s.update("delivered", func(tx *bolt.Tx, h *head) error {
+		r, err := outletsShelf.in(tx)
+		if err != nil {
+			return err
+		}
+		var c cursor
+		found, err := r.getJSON([]byte(outlet), &c)
+		switch {
+		case err != nil:
+			return err
+		case !found:
+			return fmt.Errorf("outlet %q: %w", outlet, ErrNoOutlet)
+		case n > h.Outbox:
+			return fmt.Errorf("outlet %q says it delivered step %d, the last one is %d: %w", outlet, n, h.Outbox, ErrOrder)
+		case n > c.Delivered:
+			c.Delivered = n
+			if err := r.putJSON([]byte(outlet), c); err != nil {
+				return err
+			}
+		}
+		return trimOutbox(tx, h, trimKeys)
+	})
+}
+
+// writeSteps appends steps to the outbox.
+func writeSteps(tx *bolt.Tx, h *head, steps []life.Notice) error {
+	if len(steps) == 0 {
+		return nil
+	}
+	r, err := outboxShelf.in(tx)
+	if err != nil {
+		return err
+	}
+	for i := range steps {
+		h.Outbox++
+		if h.Outlets == 0 {
+			continue
+		}
+		if err := r.putJSON(number(h.Outbox), &steps[i]); err != nil {
+			return err
+		}
+	}
+	if h.Outlets == 0 && h.OutboxFirst > h.Outbox-uint64(len(steps)) {
+		h.OutboxFirst = h.Outbox + 1
+	}
+	return nil
+}
+
+// trimOutbox removes steps, at most limit, that every outlet has delivered.
+func trimOutbox(tx *bolt.Tx, h *head, limit int) error {
+	r, err := outboxShelf.in(tx)
+	if err != nil {
+		return err
+	}
+	done := h.Outbox
+	err = eachOutlet(tx, func(_ string, c cursor) error {
+		done = min(done, c.Delivered)
+		return nil
+	})
+	if err != nil {
+		return err
+	}
+	for ; h.OutboxFirst <= done && limit > 0; limit-- {
+		if err := r.remove(number(h.OutboxFirst)); err != nil {
+			return err
+		}
+		h.OutboxFirst++
+	}
+	return nil
+}
