@@ -30,17 +30,43 @@ func (x Binomial) chances() (p, q dd) {
 }
 
 func (x Binomial) point(k int64) point {
-	switch {
-	case !x.valid():
+	if !x.valid() {
 		return undefined.point
-	case k < 0 || k > x.N || x.P == 0 && k > 0 || x.Q == 0 && k < x.N:
-		return impossible.point
-	case x.P == 0 || x.Q == 0:
-		return point{0, 0, 1}
 	}
 	p, q := x.chances()
-	return binomialPoint(float64(k), float64(x.N), p, q)
+	return trials{x.N, p, q}.point(k)
 }
+
+// trials is a binomial with its chances in double-double.
+type trials struct {
+	n    int64
+	p, q dd
+}
+
+func (x trials) valid() bool { return x.n >= 0 }
+
+func (x trials) point(k int64) point {
+	switch {
+	case k < 0 || k > x.n || x.p.hi == 0 && k > 0 || x.q.hi == 0 && k < x.n:
+		return impossible.point
+	case x.p.hi == 0 || x.q.hi == 0:
+		return point{0, 0, 1}
+	}
+	return binomialPoint(float64(k), float64(x.n), x.p, x.q)
+}
+
+func (x trials) side(k int64, upper, mid bool) side {
+	return binomialSide(k, x.n, x.p, x.q, upper, mid)
+}
+
+func (x trials) spread() (mean, sd float64) {
+	m := float64(x.n) * x.p.hi
+	return m, math.Sqrt(m * x.q.hi)
+}
+
+func (x trials) support() (lo, hi int64) { return 0, x.n }
+
+func (x trials) thin(int64, bool) float64 { return 1 }
 
 func (x Binomial) side(k int64, upper, mid bool) side {
 	if !x.valid() {
@@ -57,10 +83,7 @@ func binomialSide(k, n int64, p, q dd, upper, mid bool) side {
 	case k > n || q.hi == 0 && k < n:
 		return outside(k > n != upper)
 	case p.hi == 0 || q.hi == 0: // all probability on k
-		if mid {
-			return side{point{0, 0, 1}, 0.5, false}
-		}
-		return certain
+		return atOnly(mid)
 	}
 	if !upper { // P(X <= k) = P(n-X >= n-k)
 		k, p, q = n-k, q, p
@@ -134,3 +157,11 @@ func (x Binomial) spread() (mean, sd float64) {
 func (x Binomial) support() (lo, hi int64) { return 0, x.N }
 
 func (x Binomial) thin(int64, bool) float64 { return 1 }
+
+// TwoSided is the two-sided p-value of k, at most 1.
+func (x Binomial) TwoSided(k int64, how Sides) float64 { return twoSided(x, k, how, false).prob() }
+
+// LogTwoSided is the logarithm of TwoSided, where TwoSided underflows as well.
+func (x Binomial) LogTwoSided(k int64, how Sides) float64 {
+	return twoSided(x, k, how, false).logProb()
+}

@@ -2,8 +2,8 @@ package exact
 
 import "math"
 
-// law is what a search over counts needs of a discrete law.
-type law interface {
+// tail is what a search over counts needs.
+type tail interface {
 	side(k int64, upper, mid bool) side
 	spread() (mean, sd float64) // roughly: they only start the search
 	support() (lo, hi int64)
@@ -13,22 +13,28 @@ type law interface {
 	thin(k int64, upper bool) float64
 }
 
+// law is a tail with the probability of each count.
+type law interface {
+	tail
+	point(k int64) point
+}
+
 // atLimit is the relative room within which a size counts as at the limit: rounding must not
 // lose a size that hits its limit exactly (five of five at 1/2 against 1/32).
 const atLimit = 1 + 0x1p-48
 
-func criticalUpper[L law](x L, limit float64) (int64, float64, bool) {
+func criticalUpper[L tail](x L, limit float64) (int64, float64, bool) {
 	return critical(x, limit, true)
 }
 
-func criticalLower[L law](x L, limit float64) (int64, float64, bool) {
+func criticalLower[L tail](x L, limit float64) (int64, float64, bool) {
 	return critical(x, limit, false)
 }
 
 // critical finds the least extreme count whose tail is at or under limit, by Newton steps on
 // log P (concave in the count for these laws: a step never falls short) kept inside a bracket.
 // For the lower tail the search runs over j = -k.
-func critical[L law](x L, limit float64, upper bool) (int64, float64, bool) {
+func critical[L tail](x L, limit float64, upper bool) (int64, float64, bool) {
 	if !x.valid() || !(limit > 0) {
 		return 0, math.NaN(), false
 	}

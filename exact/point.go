@@ -131,3 +131,22 @@ func binomialPoint(k, n float64, p, q dd) point {
 	e := d.neg().addFloat(stirling(n) - stirling(k) - stirling(m))
 	return point{e.hi, e.lo, math.Sqrt(n / (2 * math.Pi * k * m))}
 }
+
+// stirlingReal is stirling for real z > 0; small z are raised by the factorial's recurrence.
+func stirlingReal(z dd) float64 {
+	if z.hi >= 40 {
+		return stirlingSeries(z.hi)
+	}
+	if z.lo == 0 && z.hi == math.Floor(z.hi) {
+		return stirling(z.hi)
+	}
+	top, prod := z, dd{1, 0}
+	for top.hi < 40 {
+		top = top.addFloat(1)
+		prod = prod.mul(top)
+	}
+	// log z! = log top! - log prod, each in Stirling's form
+	d := top.addFloat(0.5).mul(top.log()).add(top.neg()).add(prod.log().neg())
+	d = d.add(z.addFloat(0.5).mul(z.log()).neg()).add(z)
+	return d.addFloat(stirlingSeries(top.hi)).float()
+}

@@ -132,3 +132,11 @@ func (x Poisson) spread() (mean, sd float64) {
 func (x Poisson) support() (lo, hi int64) { return 0, maxCount }
 
 func (x Poisson) thin(int64, bool) float64 { return 1 }
+
+// TwoSided is the two-sided p-value of k, at most 1.
+func (x Poisson) TwoSided(k int64, how Sides) float64 { return twoSided(x, k, how, false).prob() }
+
+// LogTwoSided is the logarithm of TwoSided, where TwoSided underflows as well.
+func (x Poisson) LogTwoSided(k int64, how Sides) float64 {
+	return twoSided(x, k, how, false).logProb()
+}

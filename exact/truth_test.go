@@ -184,6 +184,9 @@ func TestTruthTails(t *testing.T) {
 		{"hypergeom_tail", "x", 1e-13, func(tr truth, r []string) discrete {
 			return exact.Hypergeometric{White: tr.int(t, r, "m_white"), Black: tr.int(t, r, "n_black"), Draws: tr.int(t, r, "k_draws")}
 		}},
+		{"negbin_tail", "x", 1e-14, func(tr truth, r []string) discrete {
+			return exact.NegativeBinomial{Rate: tr.float(t, r, "mu"), Exposure: 1, Size: tr.float(t, r, "size")}
+		}},
 	} {
 		t.Run(c.table, func(t *testing.T) {
 			tr, g := readTruth(t, c.table), newGauge()
@@ -227,4 +230,32 @@ func TestTruthBounds(t *testing.T) {
 		}
 		g.hold(t, map[string]float64{"exact": 4e-15, "midp": 4e-15})
 	})
+}
+
+func TestTruthTwoSided(t *testing.T) {
+	tr, g := readTruth(t, "twosided"), newGauge()
+	for _, r := range tr.rows {
+		var x interface {
+			TwoSided(k int64, how exact.Sides) float64
+			LogTwoSided(k int64, how exact.Sides) float64
+		}
+		par := tr.float(t, r, "mu_or_theta")
+		switch d := tr.text(r, "dist"); d {
+		case "poisson":
+			x = exact.Poisson{Rate: par, Exposure: 1}
+		case "binomial":
+			x = exact.NewBinomial(tr.int(t, r, "n"), par)
+		default:
+			t.Fatal(d)
+		}
+		k := tr.int(t, r, "k")
+		g.note("minlike", relative(t, x.TwoSided(k, exact.MinLike), tr.text(r, "p_minlike_exact")), r)
+		g.note("central", relative(t, x.TwoSided(k, exact.Central), tr.text(r, "p_central")), r)
+		for _, how := range []exact.Sides{exact.Central, exact.MinLike, exact.Blaker} {
+			if p := x.TwoSided(k, how); p > 1e-300 {
+				g.note("log", math.Abs(math.Exp(x.LogTwoSided(k, how))/p-1), r)
+			}
+		}
+	}
+	g.hold(t, map[string]float64{"minlike": 1e-13, "central": 1e-13, "log": 1e-12})
 }

@@ -119,3 +119,25 @@ func (x TwoProportion) CriticalUpper(limit float64) (k int64, size float64, ok b
 func (x TwoProportion) CriticalLower(limit float64) (k int64, size float64, ok bool) {
 	return criticalLower(x, limit)
 }
+
+// TwoSided is the two-sided p-value of k, at most 1.
+func (x TwoProportion) TwoSided(k int64, how Sides) float64 {
+	return twoSided(x.given(k), k, how, false).prob()
+}
+
+// LogTwoSided is the logarithm of TwoSided, where TwoSided underflows as well.
+func (x TwoProportion) LogTwoSided(k int64, how Sides) float64 {
+	return twoSided(x.given(k), k, how, false).logProb()
+}
+
+// given is the law of the count once the total with n is known; margin 0 counts as 1.
+func (x TwoProportion) given(n int64) FisherNoncentral {
+	if !x.valid() || n < 0 || n > x.Trials {
+		return FisherNoncentral{Odds: -1}
+	}
+	m := x.Margin
+	if m == 0 {
+		m = 1
+	}
+	return FisherNoncentral{x.Trials, x.RefTrials, n + x.RefEvents, m}
+}

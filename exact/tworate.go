@@ -120,3 +120,22 @@ func (x TwoRate) thin(n int64, upper bool) float64 {
 	}
 	return float64(x.RefEvents) / float64(n+x.RefEvents)
 }
+
+// TwoSided is the two-sided p-value of k, at most 1.
+func (x TwoRate) TwoSided(k int64, how Sides) float64 {
+	return twoSided(x.given(k), k, how, false).prob()
+}
+
+// LogTwoSided is the logarithm of TwoSided, where TwoSided underflows as well.
+func (x TwoRate) LogTwoSided(k int64, how Sides) float64 {
+	return twoSided(x.given(k), k, how, false).logProb()
+}
+
+// given is the law of the count once the total with n is known.
+func (x TwoRate) given(n int64) trials {
+	if !x.valid() || n < 0 || n > maxCount-x.RefEvents {
+		return trials{n: -1}
+	}
+	p, q := x.chances()
+	return trials{n + x.RefEvents, p, q}
+}

@@ -38,14 +38,21 @@ func (u urn) point(x float64) point {
 // up sums f(x), f(x+1), ... over f(x), and the same weighted with 0, 1, ...
 func (u urn) up(x float64) (sum, first float64) {
 	_, hi := u.support()
+	const chunk = 256 // terms between fresh starts: a longer product or sum gathers rounding
 	d := u.black - u.draws
-	t := 1.0
-	sum = 1
-	for j := x; j < hi && t > 0x1p-56*sum; j++ {
+	t, part, partFirst := 1.0, 1.0, 0.0
+	for j := x; j < hi && t > 0x1p-56*(sum+part); j++ {
+		if n := j - x; n > 0 && math.Mod(n, chunk) == 0 {
+			t = u.point(j).over(u.point(x)).value()
+			sum, part = sum+part, 0
+			first, partFirst = first+partFirst, 0
+		}
 		t *= float64(float64((u.white-j)*(u.draws-j))*u.odds.hi) / float64((j+1)*(d+j+1))
-		sum += t
-		first += float64(t * (j + 1 - x))
+		part += t
+		partFirst += float64(t * (j + 1 - x))
 	}
+	sum += part
+	first += partFirst
 	sum += u.odds.lo / u.odds.hi * first
 	return sum, first
 }
@@ -84,10 +91,8 @@ func (u urn) side(x float64, upper, mid bool) side {
 		return outside(upper)
 	case x > hi:
 		return outside(!upper)
-	case lo == hi && mid:
-		return side{point{0, 0, 1}, 0.5, false}
 	case lo == hi:
-		return certain
+		return atOnly(mid)
 	}
 	if !upper {
 		return u.mirror().side(u.draws-x, true, mid)
@@ -114,12 +119,13 @@ func (u urn) side(x float64, upper, mid bool) side {
 	if !u.fair() {
 		m, sum, _ := u.total()
 		s.ratio /= sum
-		s.point = s.point.over(u.point(m))
+		s.point = s.over(u.point(m))
 	}
 	return s
 }
 
-func (u urn) prob(x float64) point {
+// mass is the probability of x.
+func (u urn) mass(x float64) point {
 	lo, hi := u.support()
 	if x < lo || x > hi {
 		return impossible.point
@@ -181,4 +187,11 @@ func (u urn) lowerOdds(x, a float64, mid bool) float64 {
 		l = next
 	}
 	return expTwo(l, 0)
+}
+
+// spread is the mode and the standard deviation of the four-cell approximation there.
+func (u urn) spread() (mean, sd float64) {
+	m := u.mode()
+	v := 1/(m+0.5) + 1/(u.draws-m+0.5) + 1/(u.white-m+0.5) + 1/(u.black-u.draws+m+0.5)
+	return m, 1 / math.Sqrt(v)
 }
