@@ -15,10 +15,10 @@ func EncodeObservation(dst []byte, o *monitor.Observation) []byte {
 	dst = append(dst, '{')
 	if o.ID != "" {
 		dst = append(dst, `"id":`...)
-		dst = append(appendText(dst, o.ID), ',')
+		dst = append(AppendText(dst, o.ID), ',')
 	}
 	dst = append(dst, `"series":`...)
-	dst = appendText(dst, o.Series)
+	dst = AppendText(dst, o.Series)
 	switch {
 	case o.Retracted:
 	case o.Instant:
@@ -52,21 +52,21 @@ func EncodeObservation(dst []byte, o *monitor.Observation) []byte {
 // if it was a valid one.
 func EncodeAct(dst []byte, a *monitor.Act) []byte {
 	dst = append(dst, `{"act":`...)
-	dst = appendText(dst, a.Kind.String())
+	dst = AppendText(dst, a.Kind.String())
 	if a.Alert != "" {
 		dst = append(dst, `,"alert":`...)
-		dst = appendText(dst, a.Alert)
+		dst = AppendText(dst, a.Alert)
 	} else {
 		dst = append(dst, `,"series":`...)
-		dst = appendText(dst, a.Series)
+		dst = AppendText(dst, a.Series)
 		dst = append(dst, `,"direction":`...)
-		dst = appendText(dst, string(a.Direction))
+		dst = AppendText(dst, string(a.Direction))
 	}
 	dst = append(dst, `,"by":`...)
-	dst = appendText(dst, a.By)
+	dst = AppendText(dst, a.By)
 	if a.Why != "" {
 		dst = append(dst, `,"why":`...)
-		dst = appendText(dst, a.Why)
+		dst = AppendText(dst, a.Why)
 	}
 	if a.HasAt {
 		dst = appendTimeField(dst, `,"at":"`, a.At)
@@ -76,15 +76,15 @@ func EncodeAct(dst []byte, a *monitor.Act) []byte {
 
 // FormatTime returns the moment as the header Tailbell-Time has it.
 func FormatTime(at monitor.Instant) string {
-	return string(appendTime(nil, at))
+	return string(AppendTime(nil, at))
 }
 
 func appendTimeField(dst []byte, name string, at monitor.Instant) []byte {
-	return append(appendTime(append(dst, name...), at), '"')
+	return append(AppendTime(append(dst, name...), at), '"')
 }
 
-// appendText appends a JSON string. What is not UTF-8 becomes U+FFFD.
-func appendText(dst []byte, text string) []byte {
+// AppendText appends a JSON string. What is not UTF-8 becomes U+FFFD.
+func AppendText(dst []byte, text string) []byte {
 	const hex = "0123456789abcdef"
 	dst = append(dst, '"')
 	for i := 0; i < len(text); {

@@ -152,8 +152,8 @@ func whyNoTime(text string) string {
 	return quoted + " is no RFC 3339 time with an offset; " + like
 }
 
-// appendTime appends the moment in UTC as RFC 3339, with a fraction only if
+// AppendTime appends the moment in UTC as RFC 3339, with a fraction only if
 // there is one.
-func appendTime(dst []byte, at monitor.Instant) []byte {
+func AppendTime(dst []byte, at monitor.Instant) []byte {
 	return at.Time().AppendFormat(dst, "2006-01-02T15:04:05.999999Z07:00")
 }

@@ -1,0 +1,298 @@
+package history
+
+import (
+	"bytes"
+	"errors"
+	"fmt"
+	"io"
+	"slices"
+	"strings"
+
+	"tailbell/ingest/wire"
+	"tailbell/monitor"
+)
+
+// BadRow is the reason of a row that can't be told apart into cells.
+const BadRow monitor.Reason = "bad_row"
+
+// columnKind is what a column of a CSV file holds.
+type columnKind int
+
+const (
+	ignored columnKind = iota
+	textColumn
+	numberColumn
+	timeColumn
+	spanColumn
+	flagColumn
+)
+
+// columnKinds are the columns by their name.
+var columnKinds = map[string]columnKind{
+	"id": textColumn, "series": textColumn,
+	"start": timeColumn, "end": timeColumn, "at": timeColumn, "reported": timeColumn,
+	"date":   spanColumn,
+	"events": numberColumn, "exposure": numberColumn, "revision": numberColumn,
+	"retracted": flagColumn,
+}
+
+const columnNames = "id, series, start, end, at, date, events, exposure (or exposure[unit]), revision, reported, retracted"
+
+type column struct {
+	name string
+	kind columnKind
+}
+
+// table reads the rows of a CSV file.
+type table struct {
+	*reader
+	separator byte
+	columns   []column
+	// unit of the exposure as the header states it, "" if it does not.
+	unit string
+	// units holds what CheckUnit said of each series.
+	units map[string]error
+	// fixed says that the series comes from the options.
+	fixed bool
+	cells [][]byte
+	json  []byte
+}
+
+// readHeader reads the line of column names.
+func (r *reader) readHeader() (*table, error) {
+	var header line
+	for len(bytes.TrimSpace(header.text)) == 0 {
+		var err error
+		if header, err = r.lines.next(); errors.Is(err, io.EOF) {
+			return nil, errors.New("the file is empty; its first line must name the columns: " + columnNames)
+		} else if err != nil {
+			return nil, err
+		}
+	}
+	t := &table{reader: r, separator: separatorOf(header.text), units: make(map[string]error)}
+	cells, open, ok := splitRow(nil, header.text, t.separator)
+	if !ok || open || header.tooLong {
+		return nil, fmt.Errorf("line %d: the line of column names has unmatched quotes or is too long", header.number)
+	}
+	for _, cell := range cells {
+		if err := t.addColumn(string(cell)); err != nil {
+			return nil, fmt.Errorf("line %d: %w", header.number, err)
+		}
+	}
+	return t, t.checkColumns(header.number)
+}
+
+// separatorOf returns which of comma, semicolon and tab is the most frequent
+// in the header; the comma if none is there.
+func separatorOf(header []byte) byte {
+	best, most := byte(','), bytes.Count(header, []byte{','})
+	for _, c := range []byte{';', '\t'} {
+		if n := bytes.Count(header, []byte{c}); n > most {
+			best, most = c, n
+		}
+	}
+	return best
+}
+
+func (t *table) addColumn(written string) error {
+	name := strings.ToLower(strings.TrimSpace(written))
+	if slices.ContainsFunc(t.opts.Ignore, func(s string) bool { return strings.EqualFold(strings.TrimSpace(s), name) }) {
+		t.columns = append(t.columns, column{name: name})
+		return nil
+	}
+	if rest, found := strings.CutPrefix(name, "exposure["); found {
+		unit, closed := strings.CutSuffix(rest, "]")
+		if !closed || strings.TrimSpace(unit) == "" {
+			return fmt.Errorf("the column %q states no unit; write it like exposure[device-days]", written)
+		}
+		trimmed := strings.TrimSpace(written)
+		name, t.unit = "exposure", strings.TrimSpace(trimmed[len("exposure["):len(trimmed)-1])
+	}
+	kind, known := columnKinds[name]
+	if !known {
+		return fmt.Errorf("the column %q is not known; the columns are %s; rename it, or ask for it to be ignored", written, columnNames)
+	}
+	if slices.ContainsFunc(t.columns, func(c column) bool { return c.name == name }) {
+		return fmt.Errorf("the column %s is there twice", name)
+	}
+	t.columns = append(t.columns, column{name: name, kind: kind})
+	return nil
+}
+
+func (t *table) has(name string) bool {
+	return slices.ContainsFunc(t.columns, func(c column) bool { return c.name == name && c.kind != ignored })
+}
+
+func (t *table) checkColumns(number int) error {
+	t.fixed = !t.has("series")
+	switch {
+	case t.fixed && t.opts.Series == "":
+		return fmt.Errorf("line %d: there is no column series; add it, or say which series the file is of", number)
+	case !t.has("date") && !t.has("at") && !t.has("start") && !t.has("retracted"):
+		return fmt.Errorf("line %d: no column says when; add date, at, or start and end", number)
+	case t.has("date") && t.opts.Zone == nil:
+		return fmt.Errorf("line %d: the column date needs to know in which zone days begin; say which", number)
+	}
+	return nil
+}
+
+// row reads a row into the history.
+func (t *table) row() error {
+	first, err := t.lines.next()
+	if err != nil {
+		return err
+	}
+	if len(bytes.TrimSpace(first.text)) == 0 {
+		return nil
+	}
+	raw, ok, err := t.split(first)
+	if err != nil {
+		return err
+	}
+	switch {
+	case first.tooLong:
+		t.fault(first.number, monitor.TooLarge, tooLong, raw)
+	case !ok:
+		t.fault(first.number, BadRow, `the quotes don't match; a cell is quoted as a whole, and a quote in it is written ""`, raw)
+	case len(t.cells) != len(t.columns):
+		t.fault(first.number, BadRow, fmt.Sprintf("the row has %d cells, but the first line names %d columns", len(t.cells), len(t.columns)), raw)
+	default:
+		t.build(first.number, raw)
+	}
+	return nil
+}
+
+// build makes the row an element in the contract's form and decodes it.
+func (t *table) build(number int, raw []byte) {
+	t.json = append(t.json[:0], '{')
+	if t.fixed {
+		t.field("series")
+		t.json = wire.AppendText(t.json, t.opts.Series)
+	}
+	for i, c := range t.columns {
+		cell := bytes.TrimSpace(t.cells[i])
+		if len(cell) == 0 || c.kind == ignored {
+			continue
+		}
+		if reason, detail := t.cell(c, string(cell)); reason != "" {
+			t.fault(number, reason, detail, raw)
+			return
+		}
+	}
+	t.json = append(t.json, '}')
+	item := t.decoder.Observation(t.json)
+	if o := &item.Observation; item.Reason == "" && o.HasExposure {
+		if err := t.checkUnit(o.Series); err != nil {
+			t.fault(number, monitor.BadExposure, err.Error(), raw)
+			return
+		}
+	}
+	t.observation(&item, number, raw)
+}
+
+// field appends the name of a field.
+func (t *table) field(name string) {
+	if len(t.json) > 1 {
+		t.json = append(t.json, ',')
+	}
+	t.json = append(append(append(t.json, '"'), name...), `":`...)
+}
+
+// cell appends a cell in the contract's form.
+func (t *table) cell(c column, text string) (monitor.Reason, string) {
+	switch c.kind {
+	case ignored:
+	case textColumn:
+		t.field(c.name)
+		t.json = wire.AppendText(t.json, text)
+	case numberColumn:
+		if !isNumber(text) {
+			return numberReason(c.name), fmt.Sprintf("%s is %q; it must be a plain number such as 12 or 0.5", c.name, text)
+		}
+		t.field(c.name)
+		t.json = append(t.json, text...)
+	case flagColumn:
+		t.field(c.name)
+		switch lower := strings.ToLower(text); lower {
+		case "true", "false":
+			t.json = append(t.json, lower...)
+		default:
+			return monitor.BadRevision, fmt.Sprintf("%s is %q; it must be true or false, or be left empty", c.name, text)
+		}
+	case timeColumn:
+		at, err := moment(text, t.opts.Zone)
+		if err != nil {
+			return monitor.BadTime, fmt.Sprintf("%s: %v", c.name, err)
+		}
+		t.time(c.name, at)
+	case spanColumn:
+		start, end, err := span(text, t.opts.Zone)
+		if err != nil {
+			return monitor.BadTime, fmt.Sprintf("%s: %v", c.name, err)
+		}
+		t.time("start", start)
+		t.time("end", end)
+	}
+	return "", ""
+}
+
+func (t *table) time(name string, at monitor.Instant) {
+	t.field(name)
+	t.json = append(wire.AppendTime(append(t.json, '"'), at), '"')
+}
+
+func numberReason(column string) monitor.Reason {
+	switch column {
+	case "events":
+		return monitor.BadEvents
+	case "exposure":
+		return monitor.BadExposure
+	}
+	return monitor.BadRevision
+}
+
+// checkUnit compares the unit in the header with that of the indicator.
+func (t *table) checkUnit(series string) error {
+	if t.unit == "" || t.opts.CheckUnit == nil {
+		return nil
+	}
+	err, known := t.units[series]
+	if !known {
+		err = t.opts.CheckUnit(series, t.unit)
+		t.units[series] = err
+	}
+	return err
+}
+
+// isNumber reports whether the text is a number in JSON's syntax.
+func isNumber(text string) bool {
+	rest := strings.TrimPrefix(text, "-")
+	whole := digits(rest)
+	if whole == 0 || (whole > 1 && rest[0] == '0') {
+		return false
+	}
+	rest = rest[whole:]
+	if strings.HasPrefix(rest, ".") {
+		n := digits(rest[1:])
+		if n == 0 {
+			return false
+		}
+		rest = rest[1+n:]
+	}
+	if rest == "" {
+		return true
+	}
+	if rest[0] != 'e' && rest[0] != 'E' {
+		return false
+	}
+	rest = strings.TrimPrefix(strings.TrimPrefix(rest[1:], "+"), "-")
+	return rest != "" && digits(rest) == len(rest)
+}
+
+func digits(text string) int {
+	n := 0
+	for n < len(text) && text[n]-'0' <= 9 {
+		n++
+	}
+	return n
+}
