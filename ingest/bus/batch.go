@@ -2,7 +2,6 @@ package bus
 
 import (
 	"context"
-	"errors"
 	"fmt"
 
 	"github.com/nats-io/nats.go"
@@ -16,6 +15,10 @@ const (
 	// batchBytes keeps a batch well under what a connection may have pending.
 	batchBytes = 8 * mib
 )
+
+// atOnce sends a batch without waiting for the first message's acknowledgement:
+// the last one's answers for all.
+var atOnce = jetstreamext.BatchFlowControl{AckFirst: false}
 
 // PublishBatch stores many messages in order, several thousand a second even
 // where every write goes to the disk. It returns how many from the start of
@@ -73,13 +76,12 @@ func (b *Bus) publishChunk(ctx context.Context, chunk []*nats.Msg) (int, error) 
 	wait := newBackoff()
 	for {
 		try, cancel := context.WithTimeout(ctx, tryTimeout)
-		_, err := jetstreamext.PublishMsgBatch(try, b.js, chunk)
+		_, err := jetstreamext.PublishMsgBatch(try, b.js, chunk, atOnce)
 		cancel()
 		if err == nil {
 			return len(chunk), nil
 		}
-		var api *jetstream.APIError
-		if errors.As(err, &api) && api.ErrorCode == codeBatchOff {
+		if codeOf(err) == codeBatchOff {
 			return b.publishWindow(ctx, plain(chunk))
 		}
 		if err := b.again(ctx, wait, err); err != nil {

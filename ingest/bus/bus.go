@@ -6,18 +6,17 @@ import (
 	"fmt"
 	"os"
 	"sync"
+	"tailbell/config"
 	"time"
 
 	"github.com/nats-io/nats.go"
 	"github.com/nats-io/nats.go/jetstream"
 	"github.com/rs/zerolog"
-
-	"tailbell/config"
 )
 
 const (
 	connectTimeout = 10 * time.Second
-	drainTimeout   = 5 * time.Second
+	flushTimeout   = 5 * time.Second
 	pingInterval   = 20 * time.Second
 )
 
@@ -225,7 +224,6 @@ func (b *Bus) connect(url string, opts []nats.Option, o options) error {
 	opts = append(opts,
 		nats.Name("tailbell "+b.setup.Name),
 		nats.Timeout(connectTimeout),
-		nats.DrainTimeout(drainTimeout),
 		nats.PingInterval(pingInterval),
 		nats.MaxReconnects(-1),
 		nats.IgnoreAuthErrorAbort(),
@@ -267,9 +265,8 @@ func (b *Bus) close() error {
 		errs = append(errs, removeEndpoint(b.setup.Folder))
 	}
 	if b.nc != nil {
-		if err := b.nc.Drain(); err != nil && !errors.Is(err, nats.ErrConnectionClosed) {
-			b.nc.Close() // not connected: nothing to drain
-		}
+		b.flush()
+		b.nc.Close()
 		<-b.closed
 	}
 	if b.embedded != nil {
@@ -279,6 +276,20 @@ func (b *Bus) close() error {
 		errs = append(errs, b.lock.release())
 	}
 	return errors.Join(errs...)
+}
+
+// flush sends what is still in the connection's buffer. Everything that must
+// arrive has been acknowledged before: what is left are last requests and
+// replies, and nothing is lost with them.
+func (b *Bus) flush() {
+	if !b.nc.IsConnected() {
+		return
+	}
+	ctx, cancel := context.WithTimeout(context.Background(), flushTimeout)
+	defer cancel()
+	if err := b.nc.FlushWithContext(ctx); err != nil {
+		b.log.Debug().Err(err).Msg("flushing the connection before it is closed")
+	}
 }
 
 // Conn is the connection, for request and reply.

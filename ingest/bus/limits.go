@@ -1,9 +1,8 @@
 package bus
 
 import (
-	"time"
-
 	"tailbell/config"
+	"time"
 )
 
 const (

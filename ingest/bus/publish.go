@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"maps"
+	"slices"
 	"strings"
 	"time"
 
@@ -99,12 +100,12 @@ func (b *Bus) again(ctx context.Context, wait *backoff, err error) error {
 // Codes of the bus's own errors that its client library has no name for.
 const (
 	codeNoResources     jetstream.ErrorCode = 10002 // of the account
-	codeUnavailable     jetstream.ErrorCode = 10008 // temporarily
 	codeNoPeers         jetstream.ErrorCode = 10005
+	codeUnavailable     jetstream.ErrorCode = 10008 // temporarily
+	codeNoLeader        jetstream.ErrorCode = 10009
 	codeInsufficient    jetstream.ErrorCode = 10023
 	codeNoStorage       jetstream.ErrorCode = 10047
 	codeStoreFailed     jetstream.ErrorCode = 10077
-	codeNoLeader        jetstream.ErrorCode = 10009
 	codeBatchOff        jetstream.ErrorCode = 10174
 	codeBatchIncomplete jetstream.ErrorCode = 10176
 	codeBatchTooMany    jetstream.ErrorCode = 10210
@@ -112,49 +113,46 @@ const (
 
 // passing reports whether trying again can help.
 func passing(err error) bool {
-	var api *jetstream.APIError
-	if errors.As(err, &api) {
-		switch api.ErrorCode {
-		case codeUnavailable, codeNoPeers, codeNoLeader, codeBatchIncomplete, codeBatchTooMany:
-			return true
-		}
-		return false
+	if code := codeOf(err); code != 0 {
+		return slices.Contains([]jetstream.ErrorCode{
+			codeUnavailable, codeNoPeers, codeNoLeader, codeBatchIncomplete, codeBatchTooMany,
+		}, code)
 	}
-	for _, one := range []error{
+	return slices.ContainsFunc([]error{
 		nats.ErrTimeout, nats.ErrNoResponders, nats.ErrDisconnected, nats.ErrConnectionReconnecting,
 		nats.ErrReconnectBufExceeded, nats.ErrStaleConnection, nats.ErrNoServers,
 		jetstream.ErrNoStreamResponse, context.DeadlineExceeded,
-	} {
-		if errors.Is(err, one) {
-			return true
-		}
+	}, func(one error) bool { return errors.Is(err, one) })
+}
+
+// codeOf returns the code of an error of the bus itself, 0 if err is none.
+func codeOf(err error) jetstream.ErrorCode {
+	var api *jetstream.APIError
+	if errors.As(err, &api) {
+		return api.ErrorCode
 	}
-	return false
+	return 0
 }
 
 // mapped adds to an error of the bus the error of this package that it means.
 func mapped(err error) error {
-	var api *jetstream.APIError
-	if errors.As(err, &api) {
-		switch api.ErrorCode {
-		case jetstream.JSErrCodeStreamMessageExceedsMaximum:
-			return fmt.Errorf("%w: %w", ErrTooLarge, err)
-		case codeNoResources, codeInsufficient, codeNoStorage:
-			return fmt.Errorf("%w: %w", ErrFull, err)
-		case codeStoreFailed:
-			if strings.HasPrefix(api.Description, "maximum ") {
-				return fmt.Errorf("%w: %w: raise max_bytes, or let old messages go by max_age", ErrFull, err)
-			}
-		case jetstream.JSErrCodeStreamNotFound:
-			return fmt.Errorf("%w: %w", ErrStreamReplaced, err)
-		}
+	meaning := map[jetstream.ErrorCode]error{
+		jetstream.JSErrCodeStreamMessageExceedsMaximum: ErrTooLarge,
+		codeNoResources:                   ErrFull,
+		codeInsufficient:                  ErrFull,
+		codeNoStorage:                     ErrFull,
+		jetstream.JSErrCodeStreamNotFound: ErrStreamReplaced,
+	}[codeOf(err)]
+	switch {
+	case meaning != nil:
+	case codeOf(err) == codeStoreFailed && strings.Contains(err.Error(), "maximum "):
+		return fmt.Errorf("%w: raise max_bytes, or let old messages go by max_age: %w", ErrFull, err)
+	case errors.Is(err, nats.ErrMaxPayload):
+		meaning = ErrTooLarge
+	case errors.Is(err, nats.ErrConnectionClosed), errors.Is(err, nats.ErrConnectionDraining):
+		meaning = ErrClosed
+	default:
 		return err
 	}
-	switch {
-	case errors.Is(err, nats.ErrMaxPayload):
-		return fmt.Errorf("%w: %w", ErrTooLarge, err)
-	case errors.Is(err, nats.ErrConnectionClosed), errors.Is(err, nats.ErrConnectionDraining):
-		return fmt.Errorf("%w: %w", ErrClosed, err)
-	}
-	return err
+	return fmt.Errorf("%w: %w", meaning, err)
 }

@@ -6,10 +6,9 @@ import (
 	"net/url"
 	"os"
 	"strings"
+	"tailbell/config"
 
 	"github.com/nats-io/nats.go"
-
-	"tailbell/config"
 )
 
 // remoteOptions turn the set-up's account and TLS files into options of a

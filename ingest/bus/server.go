@@ -4,13 +4,12 @@ import (
 	"crypto/rand"
 	"fmt"
 	"path/filepath"
+	"tailbell/config"
 	"time"
 
 	"github.com/nats-io/nats-server/v2/server"
 	"github.com/nats-io/nats.go"
 	"github.com/rs/zerolog"
-
-	"tailbell/config"
 )
 
 const (

@@ -230,11 +230,11 @@ func (s *Source) ask() error {
 	if errors.Is(err, nats.ErrConnectionClosed) || errors.Is(err, nats.ErrConnectionDraining) {
 		return fmt.Errorf("reading the stream %s: %w", s.stream, mapped(err))
 	}
-	if err != nil {
-		s.detach()
-		return nil
+	if err == nil {
+		f.left = pullMessages
+	} else {
+		s.detach() // and try again from the start
 	}
-	f.left = pullMessages
 	return nil
 }
 

@@ -4,12 +4,11 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"tailbell/ingest/bus"
+	"tailbell/ingest/bus/bustest"
 	"testing"
 	"testing/synctest"
 	"time"
-
-	"tailbell/ingest/bus"
-	"tailbell/ingest/bus/bustest"
 )
 
 // publish stores n observations in the partition, "<from>", "<from+1>", ...

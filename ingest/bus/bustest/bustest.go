@@ -2,18 +2,17 @@
 package bustest
 
 import (
-	"testing"
-
 	"tailbell/config"
 	"tailbell/ingest/bus"
+	"testing"
 )
 
 // Setup is a small set-up with one partition in a folder of the test's own.
-func Setup(t testing.TB) *config.Setup {
-	t.Helper()
+func Setup(tb testing.TB) *config.Setup {
+	tb.Helper()
 	return &config.Setup{
 		Name:       "quillmere",
-		Folder:     t.TempDir(),
+		Folder:     tb.TempDir(),
 		Partitions: 1,
 		KeyParts:   1,
 		Bus:        config.Bus{MaxBytes: 64 << 20},
@@ -22,15 +21,15 @@ func Setup(t testing.TB) *config.Setup {
 
 // Open opens the embedded bus without a listener, and closes it with the test.
 // It works in a synctest bubble.
-func Open(t testing.TB, setup *config.Setup, opts ...bus.Option) *bus.Bus {
-	t.Helper()
-	b, err := bus.Open(t.Context(), setup, append(opts, bus.WithoutListener())...)
+func Open(tb testing.TB, setup *config.Setup, opts ...bus.Option) *bus.Bus {
+	tb.Helper()
+	b, err := bus.Open(tb.Context(), setup, append(opts, bus.WithoutListener())...)
 	if err != nil {
-		t.Fatalf("opening the bus: %v", err)
+		tb.Fatalf("opening the bus: %v", err)
 	}
-	t.Cleanup(func() {
+	tb.Cleanup(func() {
 		if err := b.Close(); err != nil {
-			t.Errorf("closing the bus: %v", err)
+			tb.Errorf("closing the bus: %v", err)
 		}
 	})
 	return b
