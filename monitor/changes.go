@@ -24,6 +24,10 @@ type Changes struct {
 	IDs []IDChange
 	// DroppedGenerations are generations of ids that are forgotten whole.
 	DroppedGenerations []int64
+	// Archived are slots that no look will need again, on their way out of
+	// the engine's memory. The same slot may come again after a restart, with
+	// the same content.
+	Archived []ArchivedSlot
 	// Refused are the refusals, in stream order.
 	Refused []Refusal
 	// Alerts are the touched alert records as they now stand, oldest first.
@@ -41,6 +45,13 @@ type SeriesChange struct {
 	// Number is the series' number, from 0 in order of appearance.
 	Number uint32
 	Data   []byte
+}
+
+// ArchivedSlot is the final content of one slot of one series.
+type ArchivedSlot struct {
+	Number uint32  // the series
+	Start  Instant // of the slot
+	Data   []byte  // JSON of a SlotSum
 }
 
 // IDChange is the after-image of one observation id.

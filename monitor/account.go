@@ -1,0 +1,131 @@
+package monitor
+
+import (
+	"maps"
+	"slices"
+)
+
+// Account says what became of every element that reached a partition, and of
+// every look. Each element stands in exactly one of the classes Counted,
+// Withheld, Repeat, Replaced, Outdated, Refused and Unmonitored.
+type Account struct {
+	Elements int64 `json:"elements"`
+	// Counted elements stand in the sums, or retracted one that did; Withheld
+	// ones do too, but in a slot that lacks its other side, so that no look
+	// could use them yet.
+	Counted  int64 `json:"counted"`
+	Withheld int64 `json:"withheld"`
+	// Repeat: same id, revision and content again. Replaced: counted once,
+	// until a higher revision came. Outdated: a lower revision came late.
+	Repeat      int64 `json:"repeat"`
+	Replaced    int64 `json:"replaced"`
+	Outdated    int64 `json:"outdated"`
+	Refused     int64 `json:"refused"`
+	Unmonitored int64 `json:"unmonitored"`
+	// RefusedBy counts the refused elements, acts and settings by reason.
+	RefusedBy map[Reason]int64 `json:"refused_by"`
+	// Late elements were counted into a slot that had settled.
+	Late int64 `json:"late"`
+	// Acts and Settings that were taken, and those that were refused.
+	Acts            int64 `json:"acts"`
+	ActsRefused     int64 `json:"acts_refused"`
+	Settings        int64 `json:"settings"`
+	SettingsRefused int64 `json:"settings_refused"`
+	// Rejected messages could not be told apart into elements.
+	Rejected int64 `json:"rejected"`
+	// Looks made when due, looks withheld then, windows not yet full, and
+	// looks made again because data changed.
+	Looks         int64 `json:"looks"`
+	WithheldLooks int64 `json:"withheld_looks"`
+	Filling       int64 `json:"filling"`
+	Reruns        int64 `json:"reruns"`
+}
+
+// Account returns the account as it stands.
+func (e *Engine) Account() Account {
+	a := e.account
+	a.RefusedBy = maps.Clone(e.account.RefusedBy)
+	for _, s := range e.series {
+		a.Withheld += s.unpaired
+		for i := range s.cells {
+			if c := &s.cells[i]; !s.indicator.needs.paired(c) {
+				a.Withheld += int64(c.items)
+			}
+		}
+	}
+	a.Counted -= a.Withheld
+	return a
+}
+
+// Add returns the sum of two accounts, of two partitions.
+func (a Account) Add(b Account) Account {
+	sum := a
+	sum.Elements += b.Elements
+	sum.Counted += b.Counted
+	sum.Withheld += b.Withheld
+	sum.Repeat += b.Repeat
+	sum.Replaced += b.Replaced
+	sum.Outdated += b.Outdated
+	sum.Refused += b.Refused
+	sum.Unmonitored += b.Unmonitored
+	sum.Late += b.Late
+	sum.Acts += b.Acts
+	sum.ActsRefused += b.ActsRefused
+	sum.Settings += b.Settings
+	sum.SettingsRefused += b.SettingsRefused
+	sum.Rejected += b.Rejected
+	sum.Looks += b.Looks
+	sum.WithheldLooks += b.WithheldLooks
+	sum.Filling += b.Filling
+	sum.Reruns += b.Reruns
+	sum.RefusedBy = maps.Clone(a.RefusedBy)
+	if sum.RefusedBy == nil {
+		sum.RefusedBy = map[Reason]int64{}
+	}
+	for r, n := range b.RefusedBy {
+		sum.RefusedBy[r] += n
+	}
+	return sum
+}
+
+// Balanced reports whether every element stands in exactly one class.
+func (a Account) Balanced() bool {
+	return a.Elements == a.Counted+a.Withheld+a.Repeat+a.Replaced+a.Outdated+a.Refused+a.Unmonitored
+}
+
+// SlotSum is what is counted in one slot of one series.
+type SlotSum struct {
+	Series   string  `json:"series"`
+	Start    Instant `json:"start"`
+	Events   int64   `json:"events"`
+	Exposure string  `json:"exposure"`
+	// HasEvents and HasExposure say which sides were reported.
+	HasEvents   bool `json:"has_events"`
+	HasExposure bool `json:"has_exposure"`
+}
+
+// Slots returns what is held of every slot, by series name and slot. Slots
+// beyond the horizon and the longest window are forgotten.
+func (e *Engine) Slots() []SlotSum {
+	sorted := slices.SortedFunc(slices.Values(e.series), func(a, b *series) int {
+		if a.name < b.name {
+			return -1
+		}
+		return 1
+	})
+	var sums []SlotSum
+	for _, s := range sorted {
+		for i := range s.cells {
+			sums = append(sums, s.slotSum(&s.cells[i]))
+		}
+	}
+	return sums
+}
+
+func (s *series) slotSum(c *cell) SlotSum {
+	return SlotSum{
+		Series: s.name, Start: s.indicator.cal.Start(c.slot), Events: c.events,
+		Exposure:  c.exposure.decimal(s.indicator.cfg.GrainDigits),
+		HasEvents: c.saysEvents > 0, HasExposure: c.saysExposure > 0,
+	}
+}

@@ -1,0 +1,81 @@
+package monitor
+
+import (
+	"fmt"
+	"slices"
+
+	"tailbell/monitor/life"
+)
+
+// act takes something that a person did, or refuses it with the reason.
+func (e *Engine) act(m *Message) {
+	if e.history && !m.HasTime && m.Act.HasAt {
+		e.advance(m.Act.At)
+	}
+	if reason, detail := e.perform(&m.Act); reason != "" {
+		e.account.ActsRefused++
+		e.refuse(m, 0, m.Act.Series, reason, detail, m.Act.Raw)
+		return
+	}
+	e.account.Acts++
+}
+
+func (e *Engine) perform(act *Act) (Reason, string) {
+	a := e.alertOf(act)
+	if a == nil {
+		if act.Alert != "" {
+			return NoSuchAlert, fmt.Sprintf("alert %q is unknown here, or done and beyond the horizon", act.Alert)
+		}
+		return NoSuchAlert, fmt.Sprintf("series %q has no %s alert that is not done", act.Series, act.Direction)
+	}
+	s := life.Step{At: e.clock.Time(), By: act.By, Why: act.Why}
+	switch act.Kind {
+	case Acknowledge:
+		s.Kind = life.StepAcknowledged
+	case Close:
+		s.Kind = life.StepClosed
+	case Note:
+		s.Kind = life.StepNote
+	}
+	if act.Kind == Acknowledge && slices.ContainsFunc(a.record.Steps, func(s life.Step) bool { return s.Kind == life.StepAcknowledged }) {
+		return NotAllowed, fmt.Sprintf("alert %s is acknowledged already", a.record.ID)
+	}
+	if err := e.take(a, s); err != nil {
+		return NotAllowed, err.Error()
+	}
+	if t := &a.series.tails[a.tail]; act.Kind == Close && t.current == a {
+		t.leave(a.series.indicator.looked)
+		t.disarmed = true
+	}
+	return "", ""
+}
+
+// alertOf finds the alert that an act names: by its id, or the newest one of
+// the series and direction that is not done.
+func (e *Engine) alertOf(act *Act) *alert {
+	if act.Alert != "" {
+		a := e.alerts[act.Alert]
+		if a == nil || a.gone(a.series.indicator.frozenAt) {
+			return nil
+		}
+		return a
+	}
+	s := e.byName[act.Series]
+	if s == nil {
+		return nil
+	}
+	t := &s.tails[upper]
+	if act.Direction == life.Lower {
+		t = &s.tails[lower]
+	}
+	if t.current != nil {
+		return t.current
+	}
+	var newest *alert
+	for _, a := range t.past {
+		if !a.record.Done() && (newest == nil || a.record.Number > newest.record.Number) {
+			newest = a
+		}
+	}
+	return newest
+}

@@ -1,0 +1,73 @@
+package monitor
+
+import "slices"
+
+// cell is what is known of one slot of one series.
+type cell struct {
+	slot     int64
+	events   int64
+	exposure Quantity
+	// saysEvents and saysExposure count the contributions that stand on each
+	// side: at zero the side is absent, which is not zero.
+	saysEvents   uint32
+	saysExposure uint32
+	// items counts the elements whose interval begins in this slot.
+	items uint32
+	// late is how many of the events came after the slot had settled.
+	late int64
+	// ids names the observations with events that had an id, sorted.
+	ids []string
+}
+
+// list lists (sign 1) or strikes out (sign -1) one id.
+func (c *cell) list(id string, sign int) {
+	i, ok := slices.BinarySearch(c.ids, id)
+	switch {
+	case sign > 0 && !ok:
+		c.ids = slices.Insert(c.ids, i, id)
+	case sign < 0 && ok:
+		c.ids = slices.Delete(c.ids, i, i+1)
+	}
+}
+
+// cells is sorted by slot; slots without a cell are absent on both sides.
+type cells []cell
+
+func (cs cells) find(slot int64) (int, bool) {
+	if n := len(cs); n > 0 && cs[n-1].slot == slot {
+		return n - 1, true
+	}
+	return slices.BinarySearchFunc(cs, slot, func(c cell, s int64) int {
+		switch {
+		case c.slot < s:
+			return -1
+		case c.slot > s:
+			return 1
+		}
+		return 0
+	})
+}
+
+// at returns the slot's cell, made if need be; it is valid until the next
+// call.
+func (cs *cells) at(slot int64) *cell {
+	i, ok := cs.find(slot)
+	if !ok {
+		*cs = slices.Insert(*cs, i, cell{slot: slot})
+	}
+	return &(*cs)[i]
+}
+
+// between returns the cells of the slots in [from, to).
+func (cs cells) between(from, to int64) cells {
+	i, _ := cs.find(from)
+	j, _ := cs.find(to)
+	return cs[i:j]
+}
+
+// sides says which sides of a slot need an observation to be known.
+type sides struct{ events, exposure bool }
+
+func (s sides) paired(c *cell) bool {
+	return (!s.events || c.saysEvents > 0) && (!s.exposure || c.saysExposure > 0)
+}

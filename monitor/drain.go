@@ -1,0 +1,135 @@
+package monitor
+
+import (
+	"cmp"
+	"encoding/json"
+	"slices"
+
+	"tailbell/monitor/life"
+)
+
+// checkpoint is how far the rolling checkpoint has come.
+type checkpoint struct {
+	cycle uint64
+	next  int // number of the series to write next
+}
+
+// minSlice is the least number of bytes of whole states in one Drain.
+const minSlice = 4 << 10
+
+// Drain hands over what changed since the last one. The caller must make it
+// durable before anything that follows from it leaves the process.
+func (e *Engine) Drain() Changes {
+	c := Changes{
+		Position: e.position, Archived: e.archived, Refused: e.refused,
+		Steps: e.steps, Setting: e.setting, DroppedGenerations: e.ids.dropped,
+	}
+	if e.position == e.drained {
+		c.Position = 0
+	}
+	e.drained = e.position
+	slices.SortFunc(e.touched, func(a, b *series) int { return cmp.Compare(a.number, b.number) })
+	size := 0
+	for _, s := range e.touched {
+		patch := s.encode(false)
+		size += len(patch)
+		c.Series = append(c.Series, SeriesChange{s.number, patch})
+		s.touched, s.fresh, s.dirty = false, false, s.dirty[:0]
+	}
+	for _, entry := range e.ids.touched {
+		if e.ids.byKey[entry.key] == entry {
+			c.IDs = append(c.IDs, IDChange{entry.generation, entry.encode()})
+		}
+	}
+	for _, a := range e.changed {
+		a.dirty = false
+		c.Alerts = append(c.Alerts, a.record)
+	}
+	c.Cycle = e.checkpoint.cycle
+	c.States = e.slice(max(size, minSlice))
+	c.Header = e.encodeHeader()
+	e.touched, e.archived, e.refused, e.changed, e.steps, e.setting = nil, nil, nil, nil, nil, nil
+	e.ids.touched, e.ids.dropped = nil, nil
+	return c
+}
+
+// slice returns whole states of the next series, of about so many bytes.
+func (e *Engine) slice(size int) []SeriesChange {
+	var states []SeriesChange
+	for ; e.checkpoint.next < len(e.series) && size > 0; e.checkpoint.next++ {
+		s := e.series[e.checkpoint.next]
+		state := s.encode(true)
+		size -= len(state)
+		states = append(states, SeriesChange{s.number, state})
+	}
+	if len(e.series) > 0 && e.checkpoint.next == len(e.series) {
+		e.checkpoint = checkpoint{cycle: e.checkpoint.cycle + 1}
+	}
+	return states
+}
+
+// archive hands over a slot that leaves memory.
+func (e *Engine) archive(s *series, c *cell) {
+	sum := s.slotSum(c)
+	data, err := json.Marshal(sum)
+	if err != nil {
+		panic(err) // a struct of plain fields
+	}
+	e.archived = append(e.archived, ArchivedSlot{Number: s.number, Start: sum.Start, Data: data})
+}
+
+// header is the engine's own state apart from series and ids.
+type header struct {
+	History    bool              `json:"history"`
+	Clock      Instant           `json:"clock"`
+	Version    int               `json:"version"`
+	Indicators []indicatorHeader `json:"indicators"`
+	Account    Account           `json:"account"`
+	Cycle      uint64            `json:"cycle"`
+	Next       int               `json:"next"`
+	Generation int64             `json:"generation_seconds"`
+}
+
+type indicatorHeader struct {
+	Name    string        `json:"name"`
+	Started bool          `json:"started"`
+	Looked  int64         `json:"looked"`
+	Epochs  []epochHeader `json:"epochs"`
+}
+
+type epochHeader struct {
+	From    int64 `json:"from"`
+	Version int   `json:"version"`
+}
+
+func (e *Engine) encodeHeader() []byte {
+	h := header{
+		History: e.history, Clock: e.clock, Version: e.version, Account: e.account,
+		Cycle: e.checkpoint.cycle, Next: e.checkpoint.next, Generation: int64(e.ids.length.Seconds()),
+	}
+	for _, ix := range e.indicators {
+		ih := indicatorHeader{Name: ix.cfg.Name, Started: ix.started, Looked: ix.looked}
+		for _, ep := range ix.epochs {
+			ih.Epochs = append(ih.Epochs, epochHeader{ep.from, ep.version})
+		}
+		h.Indicators = append(h.Indicators, ih)
+	}
+	data, err := json.Marshal(h)
+	if err != nil {
+		panic(err) // a struct of plain fields
+	}
+	return data
+}
+
+// Alerts returns the records that the engine still works on, in order of
+// their opening.
+func (e *Engine) Alerts() []life.Record {
+	var records []life.Record
+	for _, a := range e.alerts {
+		records = append(records, a.record)
+	}
+	slices.SortFunc(records, func(a, b life.Record) int {
+		return cmp.Or(a.Opened.Compare(b.Opened), cmp.Compare(a.ID, b.ID))
+	})
+	return records
+}

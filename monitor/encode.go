@@ -1,0 +1,226 @@
+package monitor
+
+import (
+	"encoding/binary"
+	"errors"
+	"fmt"
+	"math"
+)
+
+// The encoding of a series, whole or as a patch: a version byte, a byte of
+// flags, with flagNamed its name and its indicator's, then its head (all that
+// is not a cell), then the cells: all of them in a state, the changed ones in
+// a patch. Integers are varints, strings and lists are prefixed by length.
+const encodingVersion = 1
+
+const flagNamed = 1
+
+// errEncoding says that stored bytes are not what this program wrote.
+var errEncoding = errors.New("monitor: stored state can't be read")
+
+func (s *series) encode(whole bool) []byte {
+	b := []byte{encodingVersion, 0}
+	if whole || s.fresh {
+		b[1] |= flagNamed
+		b = appendString(b, s.name)
+		b = appendString(b, s.indicator.cfg.Name)
+	}
+	b = binary.AppendVarint(b, s.birth)
+	b = binary.AppendVarint(b, s.unpaired)
+	b = binary.AppendVarint(b, int64(s.seen))
+	b = binary.AppendUvarint(b, uint64(len(s.windows)))
+	for _, w := range s.windows {
+		b = append(b, byte(w.withheld), flag(w.hasMade))
+		b = binary.AppendVarint(b, w.made)
+		b = binary.AppendVarint(b, w.withheldSince)
+	}
+	for d := range s.tails {
+		b = s.tails[d].encode(b)
+	}
+	if whole {
+		b = binary.AppendUvarint(b, uint64(len(s.cells)))
+		for i := range s.cells {
+			b = s.cells[i].encode(b)
+		}
+		return b
+	}
+	b = binary.AppendUvarint(b, uint64(len(s.dirty)))
+	for _, slot := range s.dirty {
+		if i, ok := s.cells.find(slot); ok {
+			b = s.cells[i].encode(b)
+			continue
+		}
+		b = (&cell{slot: slot}).encode(b) // trimmed since
+	}
+	return b
+}
+
+func (c *cell) encode(b []byte) []byte {
+	b = binary.AppendVarint(b, c.slot)
+	b = binary.AppendVarint(b, c.events)
+	b = binary.AppendUvarint(b, c.exposure.Hi)
+	b = binary.AppendUvarint(b, c.exposure.Lo)
+	b = binary.AppendUvarint(b, uint64(c.saysEvents))
+	b = binary.AppendUvarint(b, uint64(c.saysExposure))
+	b = binary.AppendUvarint(b, uint64(c.items))
+	b = binary.AppendVarint(b, c.late)
+	b = binary.AppendUvarint(b, uint64(len(c.ids)))
+	for _, id := range c.ids {
+		b = appendString(b, id)
+	}
+	return b
+}
+
+// encode writes the tail: its alerts first, the current one in front, then
+// the lit looks with the number of their alert, from 1, or 0.
+func (t *tail) encode(b []byte) []byte {
+	b = append(b, flag(t.disarmed), flag(t.current != nil))
+	b = binary.AppendUvarint(b, uint64(t.quiet))
+	b = binary.AppendUvarint(b, uint64(t.opened))
+	alerts := t.past
+	if t.current != nil {
+		alerts = append([]*alert{t.current}, t.past...)
+	}
+	numbers := map[*alert]uint64{}
+	b = binary.AppendUvarint(b, uint64(len(alerts)))
+	for i, a := range alerts {
+		numbers[a] = uint64(i + 1)
+		b = a.encode(b)
+	}
+	b = binary.AppendUvarint(b, uint64(len(t.lit)))
+	for i := range t.lit {
+		l := &t.lit[i]
+		b = binary.AppendVarint(b, l.boundary)
+		b = binary.AppendUvarint(b, uint64(l.window))
+		b = binary.AppendVarint(b, l.events)
+		b = binary.AppendUvarint(b, l.exposure.Hi)
+		b = binary.AppendUvarint(b, l.exposure.Lo)
+		b = appendFloat(b, l.log10p)
+		b = binary.AppendUvarint(b, numbers[l.alert])
+	}
+	return b
+}
+
+func (a *alert) encode(b []byte) []byte {
+	b = appendString(b, a.record.ID)
+	b = binary.AppendVarint(b, a.first)
+	b = binary.AppendVarint(b, a.last)
+	b = binary.AppendUvarint(b, a.windows)
+	b = append(b, flag(a.frozen))
+	b = binary.AppendVarint(b, a.opening.boundary)
+	b = binary.AppendUvarint(b, uint64(a.opening.window))
+	b = binary.AppendVarint(b, a.worst.boundary)
+	b = binary.AppendUvarint(b, uint64(a.worst.window))
+	return appendFloat(b, a.worstLog10P)
+}
+
+func (x *identified) encode() []byte {
+	b := []byte{encodingVersion, flag(x.retracted)}
+	b = appendString(b, x.key.site)
+	b = appendString(b, x.key.id)
+	b = binary.AppendVarint(b, x.revision)
+	c := &x.said
+	b = append(b, flag(c.series != nil))
+	if c.series == nil {
+		return b
+	}
+	b = binary.AppendUvarint(b, uint64(c.series.number))
+	b = binary.AppendVarint(b, int64(c.start))
+	b = binary.AppendVarint(b, int64(c.end))
+	b = binary.AppendVarint(b, c.events)
+	b = binary.AppendUvarint(b, c.exposure.Hi)
+	b = binary.AppendUvarint(b, c.exposure.Lo)
+	return append(b, flag(c.hasEvents), flag(c.hasExposure), flag(c.late))
+}
+
+func flag(on bool) byte {
+	if on {
+		return 1
+	}
+	return 0
+}
+
+func appendString(b []byte, s string) []byte {
+	return append(binary.AppendUvarint(b, uint64(len(s))), s...)
+}
+
+func appendFloat(b []byte, f float64) []byte {
+	return binary.LittleEndian.AppendUint64(b, math.Float64bits(f))
+}
+
+// reader reads an encoding; after the first fault it returns zeros.
+type reader struct {
+	b   []byte
+	err error
+}
+
+func (r *reader) fail(what string) {
+	if r.err == nil {
+		r.err = fmt.Errorf("%w: %s", errEncoding, what)
+	}
+	r.b = nil
+}
+
+func (r *reader) byte() byte {
+	if len(r.b) == 0 {
+		r.fail("it ends too early")
+		return 0
+	}
+	c := r.b[0]
+	r.b = r.b[1:]
+	return c
+}
+
+func (r *reader) flag() bool { return r.byte() != 0 }
+
+func (r *reader) int() int64 {
+	v, n := binary.Varint(r.b)
+	if n <= 0 {
+		r.fail("a number is cut off")
+		return 0
+	}
+	r.b = r.b[n:]
+	return v
+}
+
+func (r *reader) uint() uint64 {
+	v, n := binary.Uvarint(r.b)
+	if n <= 0 {
+		r.fail("a number is cut off")
+		return 0
+	}
+	r.b = r.b[n:]
+	return v
+}
+
+// length reads the length of a list whose elements take a byte at least.
+func (r *reader) length() int {
+	n := r.uint()
+	if n > uint64(len(r.b)) {
+		r.fail("a list is longer than what is left")
+		return 0
+	}
+	return int(n)
+}
+
+func (r *reader) string() string {
+	n := r.length()
+	s := string(r.b[:n])
+	r.b = r.b[n:]
+	return s
+}
+
+func (r *reader) float() float64 {
+	if len(r.b) < 8 {
+		r.fail("a number is cut off")
+		return 0
+	}
+	f := math.Float64frombits(binary.LittleEndian.Uint64(r.b))
+	r.b = r.b[8:]
+	return f
+}
+
+func (r *reader) quantity() Quantity {
+	hi := r.uint()
+	return Quantity{hi, r.uint()}
+}

@@ -1,0 +1,220 @@
+// Package monitor watches streams of counts for rates that are no longer what
+// they were.
+//
+// # Model
+//
+// An Engine is a pure function of one partition's stream: observations, acts,
+// settings and ticks go in by Apply; alert records, their steps and the
+// after-images of its state come out by Drain. It reads no clock, no bus and
+// no disk. Its own clock is the running maximum of the times in the stream.
+//
+// Observations are summed into slots. When a slot has ended and settled, each
+// window that ends with it is tested exactly against the baseline (package
+// exact): that is a look. Data that change a slot inside the horizon re-run
+// the looks they touch. So at any time the standing of every look inside the
+// horizon is what the present data say under the set-up that was in force
+// when the look fell due.
+//
+// # Caveats
+//
+// An Engine serves one goroutine. A look needs every slot of its window to be
+// known on both sides; else it is withheld. Nothing here knows what a count
+// means: a signal is a statistical finding.
+package monitor
+
+import (
+	"cmp"
+	"slices"
+
+	"tailbell/config"
+	"tailbell/monitor/life"
+)
+
+// Engine is the state of one partition. Create it with New or Restore.
+type Engine struct {
+	partition Partition
+	setup     *config.Setup
+	version   int
+	history   bool // the clock moves with the data
+	clock     Instant
+	nextDue   Instant
+	position  uint64
+
+	indicators []*indicator
+	series     []*series
+	byName     map[string]*series
+	ids        ids
+	alerts     map[string]*alert
+	account    Account
+
+	// What the next Drain hands over.
+	drained    uint64
+	touched    []*series
+	archived   []ArchivedSlot
+	refused    []Refusal
+	changed    []*alert
+	steps      []life.Notice
+	setting    *SettingChange
+	checkpoint checkpoint
+
+	looks []look // scratch
+}
+
+// Partition says which part of all series an engine holds.
+type Partition struct {
+	Number   int
+	Of       int
+	KeyParts int
+}
+
+// New returns the engine of a partition at the beginning of its stream: in
+// history time, without a set-up.
+func New(p Partition) *Engine {
+	return &Engine{
+		partition: p, history: true, clock: Beginning, nextDue: Never,
+		byName: map[string]*series{}, alerts: map[string]*alert{},
+		ids:     newIDs(),
+		account: Account{RefusedBy: map[Reason]int64{}},
+	}
+}
+
+// Apply takes the next message of the stream. Messages at or before the
+// position already applied are ignored.
+func (e *Engine) Apply(m *Message) {
+	if m.Position <= e.position {
+		return
+	}
+	e.position = m.Position
+	switch {
+	case !e.history || m.Kind == Live:
+		e.history = false
+		e.advance(m.Stored)
+	case m.HasTime:
+		e.advance(m.Time)
+	}
+	switch m.Kind {
+	case Observations:
+		for i := range m.Items {
+			e.element(m, i)
+		}
+	case ActMessage:
+		e.act(m)
+	case SettingMessage:
+		e.set(m)
+	case Rejected:
+		e.account.Rejected++
+		e.refuse(m, 0, "", m.Items[0].Reason, m.Items[0].Detail, m.Items[0].Raw)
+	case Tick, Live:
+	}
+}
+
+// element counts one observation of a message, or its refusal.
+func (e *Engine) element(m *Message, index int) {
+	it := &m.Items[index]
+	e.account.Elements++
+	if it.Reason != "" {
+		e.account.Refused++
+		e.refuse(m, index, it.Observation.Series, it.Reason, it.Detail, it.Raw)
+		return
+	}
+	if e.history && !m.HasTime && !it.Observation.Retracted {
+		e.advance(it.Observation.HistoryTime())
+	} else if e.history && !m.HasTime && it.Observation.HasReported {
+		e.advance(it.Observation.Reported)
+	}
+	if reason, detail := e.observe(&it.Observation); reason != "" {
+		e.account.Refused++
+		e.refuse(m, index, it.Observation.Series, reason, detail, it.Raw)
+	}
+}
+
+// advance moves the clock and makes the looks that fall due on the way.
+func (e *Engine) advance(to Instant) {
+	if to <= e.clock {
+		return
+	}
+	for e.nextDue <= to {
+		ix := e.dueFirst()
+		if len(ix.series) == 0 {
+			ix.start(to)
+		} else {
+			e.lookAll(ix, ix.looked+1)
+		}
+		e.reschedule()
+	}
+	if e.clock == Beginning {
+		for _, ix := range e.indicators {
+			ix.start(to)
+		}
+		e.reschedule()
+	}
+	e.clock = to
+	e.ids.drop(to)
+}
+
+func (e *Engine) dueFirst() *indicator {
+	return slices.MinFunc(e.indicators, func(a, b *indicator) int { return cmp.Compare(a.nextDue, b.nextDue) })
+}
+
+func (e *Engine) reschedule() {
+	e.nextDue = Never
+	for _, ix := range e.indicators {
+		e.nextDue = min(e.nextDue, ix.nextDue)
+	}
+}
+
+// NextDue returns when the next look falls due, and false if none will.
+func (e *Engine) NextDue() (Instant, bool) {
+	due := Never
+	for _, ix := range e.indicators {
+		if len(ix.series) > 0 {
+			due = min(due, ix.nextDue)
+		}
+	}
+	return due, due != Never
+}
+
+// Clock returns the partition's clock; Beginning before the first message
+// that tells a time.
+func (e *Engine) Clock() Instant { return e.clock }
+
+// Position returns the position of the last message applied.
+func (e *Engine) Position() uint64 { return e.position }
+
+// InHistory reports whether the clock still moves with the data.
+func (e *Engine) InHistory() bool { return e.history }
+
+// Setup returns the set-up in force and its version, nil and 0 before the
+// first.
+func (e *Engine) Setup() (*config.Setup, int) { return e.setup, e.version }
+
+// refuse keeps a refusal for the store.
+func (e *Engine) refuse(m *Message, index int, series string, reason Reason, detail string, raw []byte) {
+	e.account.RefusedBy[reason]++
+	e.refused = append(e.refused, Refusal{
+		Position: m.Position, Index: index, At: e.clock, Reason: reason,
+		Detail: detail, Series: series, Raw: raw,
+	})
+}
+
+// touch notes that the series' own state changed.
+func (e *Engine) touch(s *series) {
+	if !s.touched {
+		s.touched = true
+		e.touched = append(e.touched, s)
+	}
+}
+
+func (e *Engine) touchSlot(s *series, slot int64) {
+	e.touch(s)
+	if n := len(s.dirty); n == 0 || s.dirty[n-1] != slot {
+		s.dirty = append(s.dirty, slot)
+	}
+}
+
+func (e *Engine) touchAlert(a *alert) {
+	if !a.dirty {
+		a.dirty = true
+		e.changed = append(e.changed, a)
+	}
+}

@@ -1,0 +1,105 @@
+package monitor
+
+import (
+	"tailbell/config"
+)
+
+// indicator is one stanza of the set-up at work.
+type indicator struct {
+	index  int
+	cfg    *config.Indicator // in force now
+	cal    *Calendar
+	clock  clockRule // for exposure by the clock
+	needs  sides
+	series []*series
+	// longest is the length of the longest window in slots.
+	longest int64
+	// looked is the latest boundary at which looks were made or skipped;
+	// nextDue is when the next one falls due.
+	looked  int64
+	started bool
+	nextDue Instant
+	// frozenAt is the boundary at or before which no look can change any
+	// more, and floor the slot before which no look reads, as of looked.
+	frozenAt, floor int64
+	// epochs are the versions of the stanza under which looks that can still
+	// be re-run fell due, oldest first.
+	epochs []epoch
+}
+
+// epoch is one version of an indicator's stanza.
+type epoch struct {
+	// from is the first boundary whose looks fall due under it.
+	from    int64
+	cfg     *config.Indicator
+	version int
+	digest  string
+}
+
+func newIndicator(index int, cfg *config.Indicator) *indicator {
+	ix := &indicator{index: index, cfg: cfg, cal: NewCalendar(cfg.Every, cfg.Zone), nextDue: Never}
+	if cfg.Exposure == config.Clock {
+		ix.clock = newClockRule(cfg.Clock, cfg.GrainDigits)
+	}
+	ix.needs = sides{events: cfg.Events == config.Counted, exposure: cfg.Exposure == config.Reported}
+	for _, w := range cfg.Windows {
+		ix.longest = max(ix.longest, int64(w.Slots))
+	}
+	return ix
+}
+
+// start sets the schedule when the partition's clock is known: looks that
+// would have fallen due earlier count as made.
+func (ix *indicator) start(clock Instant) {
+	ix.started = true
+	looked := ix.cal.Slot(clock.Add(-ix.cfg.Settle))
+	for ix.due(looked+1) <= clock {
+		looked++
+	}
+	ix.pass(looked)
+}
+
+// pass notes that looks at the boundary are made, or skipped.
+func (ix *indicator) pass(boundary int64) {
+	ix.looked = boundary
+	ix.nextDue = ix.due(boundary + 1)
+	ix.frozenAt = ix.frozen(ix.due(boundary))
+	ix.floor = ix.frozenAt - ix.longest
+	ix.forget()
+}
+
+// due is when looks at the boundary before the slot fall due.
+func (ix *indicator) due(boundary int64) Instant {
+	return ix.cal.Start(boundary).Add(ix.cfg.Settle)
+}
+
+// frozen is the slot before which data can't change any more.
+func (ix *indicator) frozen(clock Instant) int64 {
+	return ix.cal.Slot(clock.Add(-ix.cfg.Horizon))
+}
+
+// epochAt is the version in force when looks at the boundary fell due.
+func (ix *indicator) epochAt(boundary int64) *epoch {
+	i := len(ix.epochs) - 1
+	for i > 0 && ix.epochs[i].from > boundary {
+		i--
+	}
+	return &ix.epochs[i]
+}
+
+// forget drops the versions that no look inside the horizon needs.
+func (ix *indicator) forget() {
+	for len(ix.epochs) > 1 && ix.epochs[1].from <= ix.frozenAt {
+		ix.epochs = ix.epochs[1:]
+	}
+}
+
+// looksAt reports whether the window looks at the boundary.
+func (ix *indicator) looksAt(w *config.Window, boundary int64) bool {
+	return w.Step == 1 || floorMod(boundary-ix.cal.phase(), int64(w.Step)) == 0
+}
+
+// latest is the latest boundary, up to looked, at which the window looks.
+func (ix *indicator) latest(w *config.Window) int64 {
+	return ix.looked - floorMod(ix.looked-ix.cal.phase(), int64(w.Step))
+}

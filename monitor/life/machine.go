@@ -1,0 +1,112 @@
+package life
+
+import (
+	"errors"
+	"fmt"
+	"time"
+)
+
+// ErrNotAllowed is returned for a step that the alert's condition does not
+// allow, such as acknowledging it twice.
+var ErrNotAllowed = errors.New("not allowed")
+
+// after is the transition table: the condition after a step of a kind, by the
+// condition before it. What is not in it is not allowed.
+var after = map[StepKind]map[Condition]Condition{
+	StepOpened: {"": Unacknowledged},
+	StepWorsened: {
+		Unacknowledged: Unacknowledged,
+		Acknowledged:   Acknowledged,
+	},
+	StepCorrected: {
+		Unacknowledged: Unacknowledged,
+		Acknowledged:   Acknowledged,
+		Returned:       Returned,
+		Closed:         Closed,
+	},
+	StepReturned: {
+		Unacknowledged: Returned,
+		Acknowledged:   Returned,
+	},
+	StepWithdrawn: {
+		Unacknowledged: Withdrawn,
+		Acknowledged:   Withdrawn,
+		Returned:       Withdrawn,
+		Closed:         Withdrawn,
+	},
+	StepAcknowledged: {
+		Unacknowledged: Acknowledged,
+		Returned:       Returned,
+	},
+	StepClosed: {
+		Unacknowledged: Closed,
+		Acknowledged:   Closed,
+		Returned:       Closed,
+	},
+	StepNote: {
+		Unacknowledged: Unacknowledged,
+		Acknowledged:   Acknowledged,
+		Returned:       Returned,
+		Closed:         Closed,
+		Withdrawn:      Withdrawn,
+	},
+}
+
+// ReturnedAndAcknowledged is the reason given when an alert closes by itself.
+const ReturnedAndAcknowledged = "returned and acknowledged"
+
+// Take adds one step to the record and returns what outlets must deliver: the
+// step, and a second one when it closes the alert because it has returned and
+// is acknowledged. The step's Number and Condition are filled in. A step that
+// the condition does not allow is ErrNotAllowed and changes nothing.
+func (r *Record) Take(s Step) ([]Notice, error) {
+	next, ok := after[s.Kind][r.Condition]
+	if !ok {
+		return nil, fmt.Errorf("life: alert %s is %s and can't be %s: %w", r.ID, r.Condition, s.Kind, ErrNotAllowed)
+	}
+	notices := []Notice{r.take(s, next)}
+	if done := r.closesAfter(s.Kind); done {
+		notices = append(notices, r.take(Step{Kind: StepClosed, At: s.At, Why: ReturnedAndAcknowledged}, Closed))
+	}
+	return notices, nil
+}
+
+// closesAfter reports whether the alert is now both returned and
+// acknowledged.
+func (r *Record) closesAfter(k StepKind) bool {
+	if r.Condition != Returned || (k != StepReturned && k != StepAcknowledged) {
+		return false
+	}
+	for _, s := range r.Steps {
+		if s.Kind == StepAcknowledged {
+			return true
+		}
+	}
+	return false
+}
+
+func (r *Record) take(s Step, next Condition) Notice {
+	r.Condition = next
+	s.Number = len(r.Steps) + 1
+	s.At = s.At.UTC()
+	s.Condition = next
+	// Earlier notices share the backing array's beginning, never its growth.
+	r.Steps = append(r.Steps[:len(r.Steps):len(r.Steps)], s)
+	return Notice{Key: Key(r.ID, s.Number), Step: s, Record: *r}
+}
+
+// Key is the idempotency key of a step.
+func Key(alert string, number int) string { return fmt.Sprintf("%s.%d", alert, number) }
+
+// Signalling reports whether the alert still rings.
+func (r *Record) Signalling() bool {
+	return r.Condition == Unacknowledged || r.Condition == Acknowledged
+}
+
+// LastAt is when the latest step was taken.
+func (r *Record) LastAt() time.Time {
+	if len(r.Steps) == 0 {
+		return r.Opened
+	}
+	return r.Steps[len(r.Steps)-1].At
+}

@@ -1,0 +1,321 @@
+package monitor
+
+import (
+	"fmt"
+
+	"tailbell/config"
+)
+
+// maxSpread is the largest number of slots over which one exposure may be
+// spread.
+const maxSpread = 10_000
+
+// observe counts one observation, or says why it is refused. A refused one
+// leaves no trace but its refusal.
+func (e *Engine) observe(o *Observation) (Reason, string) {
+	if e.partition.Of > 1 && config.PartitionOf(o.Series, e.partition.KeyParts, e.partition.Of) != e.partition.Number {
+		return Stray, fmt.Sprintf("series %q belongs to partition %d: publish it there",
+			o.Series, config.PartitionOf(o.Series, e.partition.KeyParts, e.partition.Of))
+	}
+	ix, other := e.indicatorOf(o.Series)
+	if other != nil {
+		return Ambiguous, fmt.Sprintf("series %q is claimed by indicators %q and %q: narrow their patterns",
+			o.Series, ix.cfg.Name, other.cfg.Name)
+	}
+	key, old, done, reason, detail := e.identify(ix, o)
+	if done || reason != "" {
+		return reason, detail
+	}
+	var said contribution
+	if ix != nil && !o.Retracted {
+		said, reason, detail = e.admit(ix, o)
+		if reason != "" {
+			return reason, detail
+		}
+	}
+	if old != nil && old.said.series != nil && e.isFrozen(&old.said) {
+		return BeyondHorizon, fmt.Sprintf("revision %d of id %q stands in a slot that can't change any more", old.revision, o.ID)
+	}
+	if key.id != "" && (ix != nil || old != nil) {
+		if old == nil && len(e.ids.byKey) >= e.ids.max {
+			return IDsFull, fmt.Sprintf("%d ids are kept already: raise limits.max_ids", e.ids.max)
+		}
+	}
+	if said.series == nil && ix != nil && !o.Retracted {
+		if reason, detail = e.birth(ix, o, &said); reason != "" {
+			return reason, detail
+		}
+	}
+	e.count(o, ix, key, old, said)
+	return "", ""
+}
+
+// indicatorOf returns the indicator that monitors the series, nil for none,
+// and a second one if it is claimed twice.
+func (e *Engine) indicatorOf(name string) (ix, other *indicator) {
+	if s := e.byName[name]; s != nil {
+		return s.indicator, nil
+	}
+	for _, candidate := range e.indicators {
+		if !candidate.cfg.Matches(name) {
+			continue
+		}
+		if ix != nil {
+			return ix, candidate
+		}
+		ix = candidate
+	}
+	return ix, nil
+}
+
+// identify finds what the observation's id said before. done says that the
+// observation is dealt with: a repeat, or outdated, or unmonitored.
+func (e *Engine) identify(ix *indicator, o *Observation) (key idKey, old *identified, done bool, reason Reason, detail string) {
+	if o.ID == "" || (ix != nil && !ix.cfg.KeepIDs) {
+		if o.Retracted {
+			return key, nil, false, NoSuchID, "its indicator keeps no ids, so nothing can be retracted by id"
+		}
+		if ix == nil {
+			e.account.Unmonitored++
+		}
+		return key, nil, ix == nil, "", ""
+	}
+	key = idKey{siteOf(o.Series), o.ID}
+	old = e.ids.byKey[key]
+	switch {
+	case old == nil && ix == nil:
+		e.account.Unmonitored++
+		return key, nil, true, "", ""
+	case old == nil && o.Retracted:
+		return key, nil, false, NoSuchID, fmt.Sprintf("id %q was never counted here under %q, or lies beyond the horizon", o.ID, key.site)
+	case old == nil || o.Revision > old.revision:
+		return key, old, false, "", ""
+	case o.Revision < old.revision:
+		e.account.Outdated++
+		return key, old, true, "", ""
+	case e.same(ix, o, old):
+		e.account.Repeat++
+		return key, old, true, "", ""
+	}
+	return key, old, false, Conflict, fmt.Sprintf("revision %d of id %q said something else before: give the correction a higher revision", o.Revision, o.ID)
+}
+
+// same reports whether the observation says what its id said before.
+func (e *Engine) same(ix *indicator, o *Observation, old *identified) bool {
+	if o.Retracted || old.retracted {
+		return o.Retracted == old.retracted
+	}
+	was := &old.said
+	if was.series == nil || ix == nil {
+		return was.series == nil && ix == nil
+	}
+	exposure, reason := quantityOf(o.Exposure, ix.cfg.GrainDigits)
+	return reason == "" && was.series.name == o.Series && was.start == o.Start && was.end == o.End &&
+		was.hasEvents == o.HasEvents && was.events == o.Events &&
+		was.hasExposure == o.HasExposure && was.exposure == exposure
+}
+
+// admit checks the observation against its indicator and returns what it
+// would add; its series is nil if it is new.
+func (e *Engine) admit(ix *indicator, o *Observation) (contribution, Reason, string) {
+	c := contribution{
+		series: e.byName[o.Series], start: o.Start, end: o.End,
+		events: o.Events, hasEvents: o.HasEvents, hasExposure: o.HasExposure,
+	}
+	if e.clock != Beginning && o.End > e.clock.Add(ix.cfg.Ahead) {
+		return c, TooFarAhead, fmt.Sprintf("it ends %s, more than %s after the stream's clock %s", at(o.End), ix.cfg.Ahead, at(e.clock))
+	}
+	from, to := ix.slotsOf(&c)
+	if e.clock != Beginning && ix.cal.Start(from+1) < e.clock.Add(-ix.cfg.Horizon) {
+		return c, BeyondHorizon, fmt.Sprintf("its slot ended %s, more than the horizon of %s before the stream's clock %s",
+			at(ix.cal.Start(from+1)), ix.cfg.Horizon, at(e.clock))
+	}
+	if reason, detail := ix.fits(o, from, to); reason != "" {
+		return c, reason, detail
+	}
+	var reason Reason
+	c.exposure, reason = quantityOf(o.Exposure, ix.cfg.GrainDigits)
+	switch reason {
+	case FinerThanGrain:
+		return c, reason, fmt.Sprintf("exposure %s has more than the %d decimals that the indicator's grain holds", o.Exposure, ix.cfg.GrainDigits)
+	case TooBig:
+		return c, reason, fmt.Sprintf("exposure %s is too large for the indicator's grain", o.Exposure)
+	}
+	if s := c.series; s != nil && o.HasEvents && !s.roomFor(from, o.Events) {
+		return c, TooBig, "the slot's count of events would not fit any more"
+	}
+	return c, "", ""
+}
+
+// fits checks that what the observation reports can be counted in its slots.
+func (ix *indicator) fits(o *Observation, from, to int64) (Reason, string) {
+	proportion := ix.cfg.Measure == config.Proportion
+	switch {
+	case o.HasExposure && ix.cfg.Exposure == config.Clock:
+		return ExposureNotUsed, fmt.Sprintf("indicator %q takes its exposure from the clock: leave exposure out", ix.cfg.Name)
+	case o.HasExposure && o.Instant && !proportion:
+		return InstantExposure, "exposure needs an interval: give start and end instead of at"
+	case from != to && o.HasEvents:
+		return SpansSlots, fmt.Sprintf("events can't be spread over %d slots of %s: send them slot by slot", to-from+1, ix.cfg.Every)
+	case from != to && proportion:
+		return SpansSlots, fmt.Sprintf("trials can't be spread over %d slots of %s: send them slot by slot", to-from+1, ix.cfg.Every)
+	case to-from >= maxSpread:
+		return TooBig, fmt.Sprintf("its interval covers %d slots, more than %d: send it in shorter pieces", to-from+1, maxSpread)
+	}
+	return "", ""
+}
+
+func (s *series) roomFor(slot, events int64) bool {
+	i, ok := s.cells.find(slot)
+	return !ok || s.cells[i].events < 1<<62-events
+}
+
+// slotsOf returns the first and last slot that the contribution touches.
+func (ix *indicator) slotsOf(c *contribution) (from, to int64) {
+	from = ix.cal.Slot(c.start)
+	if c.end <= c.start+1 {
+		return from, from
+	}
+	return from, ix.cal.Slot(c.end - 1)
+}
+
+// isFrozen reports whether what was counted can't be taken back any more.
+func (e *Engine) isFrozen(c *contribution) bool {
+	ix := c.series.indicator
+	from, _ := ix.slotsOf(c)
+	return ix.cal.Start(from+1) < e.clock.Add(-ix.cfg.Horizon)
+}
+
+// birth makes the series of a first observation.
+func (e *Engine) birth(ix *indicator, o *Observation, c *contribution) (Reason, string) {
+	if limit := e.setup.Limits.MaxSeries; len(e.series) >= limit {
+		return SeriesFull, fmt.Sprintf("%d series are monitored already: raise limits.max_series", limit)
+	}
+	s := &series{
+		number: uint32(len(e.series)), name: o.Series, indicator: ix, birth: unborn,
+		trimmed: -1 << 62, windows: make([]windowState, len(ix.cfg.Windows)),
+	}
+	e.series = append(e.series, s)
+	e.byName[s.name] = s
+	ix.series = append(ix.series, s)
+	c.series, s.fresh = s, true
+	e.touch(s)
+	return "", ""
+}
+
+// count takes back what the id said before, adds what it says now, and
+// re-runs the looks that either touched.
+func (e *Engine) count(o *Observation, ix *indicator, key idKey, old *identified, said contribution) {
+	var changes []change
+	if old != nil && old.said.series != nil {
+		e.account.Replaced++
+		e.account.Counted--
+		changes = append(changes, e.add(&old.said, key.id, -1))
+	}
+	switch {
+	case ix == nil:
+		e.account.Unmonitored++
+	default:
+		e.account.Counted++
+	}
+	if said.series != nil {
+		changes = append(changes, e.add(&said, key.id, 1))
+	}
+	if key.id != "" {
+		e.remember(o, key, old, &said)
+	}
+	if len(changes) == 2 && changes[0].series == changes[1].series {
+		changes = merge(changes[0], changes[1])
+	}
+	for _, c := range changes {
+		e.rerun(c)
+	}
+}
+
+func merge(a, b change) []change {
+	b.from, b.to = min(a.from, b.from), max(a.to, b.to)
+	return []change{b}
+}
+
+// remember keeps what the id says now.
+func (e *Engine) remember(o *Observation, key idKey, old *identified, said *contribution) {
+	entry := &identified{key: key, revision: o.Revision, retracted: o.Retracted, said: *said}
+	switch {
+	case !o.Retracted:
+		entry.generation = e.ids.generationOf(o.End)
+		if old != nil {
+			entry.generation = max(entry.generation, old.generation)
+		}
+	default:
+		entry.generation = old.generation
+	}
+	e.ids.put(entry)
+}
+
+// add adds a contribution to its slots (sign 1), or takes it back (-1).
+func (e *Engine) add(c *contribution, id string, sign int) change {
+	s, ix := c.series, c.series.indicator
+	from, to := ix.slotsOf(c)
+	shares := []Quantity{c.exposure}
+	if from != to && c.hasExposure {
+		shares = c.exposure.spread(ix.overlaps(c, from, to))
+	}
+	if sign > 0 {
+		if c.late = from < ix.looked; c.late {
+			e.account.Late++
+		}
+		s.seen = e.clock
+	}
+	for slot := from; slot <= to; slot++ {
+		cell := s.cells.at(slot)
+		if slot == from {
+			cell.items += uint32(sign)
+		}
+		if c.hasEvents {
+			cell.saysEvents += uint32(sign)
+			cell.events += int64(sign) * c.events
+			if c.late {
+				cell.late += int64(sign) * c.events
+			}
+			if id != "" && c.events > 0 {
+				cell.list(id, sign)
+			}
+		}
+		if c.hasExposure {
+			cell.saysExposure += uint32(sign)
+			cell.exposure = cell.exposure.signed(shares[slot-from], sign)
+		}
+		e.touchSlot(s, slot)
+	}
+	return e.reborn(s, from, to, sign)
+}
+
+// overlaps returns how long the contribution's interval lies in each slot.
+func (ix *indicator) overlaps(c *contribution, from, to int64) []uint64 {
+	weights := make([]uint64, to-from+1)
+	for slot := from; slot <= to; slot++ {
+		begin, end := max(c.start, ix.cal.Start(slot)), min(c.end, ix.cal.Start(slot+1))
+		weights[slot-from] = uint64(end - begin)
+	}
+	return weights
+}
+
+// reborn moves the series' birth back if the slots lie before it.
+func (e *Engine) reborn(s *series, from, to int64, sign int) change {
+	ix := s.indicator
+	c := change{series: s, from: from, to: to, birth: s.birth}
+	if sign < 0 {
+		return c
+	}
+	birth := from
+	if !ix.cfg.Since.IsZero() {
+		birth = ix.cal.Slot(InstantOf(ix.cfg.Since))
+	}
+	if birth < s.birth {
+		s.birth, c.reborn = birth, true
+		c.from = min(from, max(birth, ix.frozenAt))
+	}
+	return c
+}
+
+func at(i Instant) string { return i.Time().Format("2006-01-02T15:04:05Z07:00") }

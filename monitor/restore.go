@@ -1,0 +1,261 @@
+package monitor
+
+import (
+	"encoding/json"
+	"fmt"
+	"slices"
+	"time"
+
+	"tailbell/config"
+	"tailbell/monitor/life"
+)
+
+// Restore returns the engine that a snapshot describes: one that goes on as
+// the engine that wrote it would have. record returns the stored record of an
+// alert by its id.
+func Restore(p Partition, snap *Snapshot, record func(id string) (life.Record, error)) (*Engine, error) {
+	e := New(p)
+	e.position, e.drained = snap.Position, snap.Position
+	if snap.Header == nil {
+		return e, nil
+	}
+	var h header
+	if err := json.Unmarshal(snap.Header, &h); err != nil {
+		return nil, fmt.Errorf("monitor: reading the stored header: %w", err)
+	}
+	if err := e.restoreHeader(&h, snap.Settings); err != nil {
+		return nil, err
+	}
+	for number := range snap.Series {
+		if err := e.restoreSeries(uint32(number), &snap.Series[number], record); err != nil {
+			return nil, fmt.Errorf("monitor: restoring series %d: %w", number, err)
+		}
+	}
+	for i := range snap.IDs {
+		if err := e.restoreID(&snap.IDs[i]); err != nil {
+			return nil, fmt.Errorf("monitor: restoring id %d: %w", i, err)
+		}
+	}
+	e.reschedule()
+	return e, nil
+}
+
+func (e *Engine) restoreHeader(h *header, settings []SettingChange) error {
+	e.history, e.clock, e.version, e.account = h.History, h.Clock, h.Version, h.Account
+	e.checkpoint = checkpoint{h.Cycle, h.Next}
+	if e.account.RefusedBy == nil {
+		e.account.RefusedBy = map[Reason]int64{}
+	}
+	setups := map[int]*config.Setup{}
+	for _, s := range settings {
+		setup, err := config.Parse(s.Text, fmt.Sprintf("stored set-up %d", s.Version))
+		if err != nil {
+			return fmt.Errorf("monitor: restoring set-up %d: %w", s.Version, err)
+		}
+		setups[s.Version] = setup
+	}
+	if h.Version == 0 {
+		return nil
+	}
+	e.setup = setups[h.Version]
+	if e.setup == nil {
+		return fmt.Errorf("monitor: set-up %d is in force, but not stored: %w", h.Version, errEncoding)
+	}
+	var horizon time.Duration
+	for i, ih := range h.Indicators {
+		ix, err := restoreIndicator(i, ih, setups)
+		if err != nil {
+			return err
+		}
+		if ih.Started {
+			ix.started = true
+			ix.pass(ih.Looked)
+		}
+		e.indicators = append(e.indicators, ix)
+		horizon = max(horizon, ix.cfg.Horizon)
+	}
+	e.ids.length = time.Duration(h.Generation) * time.Second
+	e.ids.configure(horizon, e.setup.Limits.MaxIDs)
+	return nil
+}
+
+func restoreIndicator(index int, ih indicatorHeader, setups map[int]*config.Setup) (*indicator, error) {
+	var ix *indicator
+	for _, ep := range ih.Epochs {
+		setup := setups[ep.Version]
+		if setup == nil {
+			return nil, fmt.Errorf("monitor: set-up %d is needed, but not stored: %w", ep.Version, errEncoding)
+		}
+		i := slices.IndexFunc(setup.Indicators, func(in config.Indicator) bool { return in.Name == ih.Name })
+		if i < 0 {
+			return nil, fmt.Errorf("monitor: set-up %d has no indicator %q: %w", ep.Version, ih.Name, errEncoding)
+		}
+		cfg := &setup.Indicators[i]
+		if ix == nil {
+			ix = newIndicator(index, cfg)
+		}
+		ix.cfg = cfg
+		ix.epochs = append(ix.epochs, epoch{from: ep.From, cfg: cfg, version: ep.Version, digest: setup.Digest})
+	}
+	if ix == nil {
+		return nil, fmt.Errorf("monitor: indicator %q was in force under no set-up: %w", ih.Name, errEncoding)
+	}
+	return ix, nil
+}
+
+func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(string) (life.Record, error)) error {
+	s := &series{number: number, trimmed: -1 << 62}
+	layers := image.Patches
+	if image.State != nil {
+		layers = append([][]byte{image.State}, image.Patches...)
+	}
+	for _, layer := range layers {
+		if err := e.overlay(s, layer); err != nil {
+			return err
+		}
+	}
+	if s.indicator == nil {
+		return fmt.Errorf("it was never named: %w", errEncoding)
+	}
+	for d := range s.tails {
+		for _, a := range s.tails[d].all() {
+			var err error
+			if a.record, err = record(a.record.ID); err != nil {
+				return fmt.Errorf("alert %s: %w", a.record.ID, err)
+			}
+			e.alerts[a.record.ID] = a
+		}
+	}
+	s.derive()
+	s.cells = slices.DeleteFunc(s.cells, func(c cell) bool { return c.slot < s.indicator.floor })
+	s.trimmed = s.indicator.floor
+	e.series = append(e.series, s)
+	e.byName[s.name] = s
+	s.indicator.series = append(s.indicator.series, s)
+	return nil
+}
+
+// derive fills in what is not stored of windows whose looks were all made.
+func (s *series) derive() {
+	ix := s.indicator
+	for w := range s.windows {
+		ws := &s.windows[w]
+		window := &ix.cfg.Windows[w]
+		if ws.withheld != made {
+			continue
+		}
+		latest := ix.latest(window)
+		ws.made, ws.hasMade = latest, ix.started && latest-int64(window.Slots) >= s.birth
+	}
+}
+
+func (t *tail) all() []*alert {
+	if t.current == nil {
+		return t.past
+	}
+	return append([]*alert{t.current}, t.past...)
+}
+
+// overlay lays one encoding over the series.
+func (e *Engine) overlay(s *series, data []byte) error {
+	r := &reader{b: data}
+	if v := r.byte(); v != encodingVersion {
+		return fmt.Errorf("%w: encoding %d is not known to this program", errEncoding, v)
+	}
+	if r.byte()&flagNamed != 0 {
+		s.name = r.string()
+		owner := r.string()
+		i := slices.IndexFunc(e.indicators, func(ix *indicator) bool { return ix.cfg.Name == owner })
+		if i < 0 {
+			return fmt.Errorf("%w: indicator %q is not in force", errEncoding, owner)
+		}
+		s.indicator = e.indicators[i]
+	}
+	s.birth, s.unpaired, s.seen = r.int(), r.int(), Instant(r.int())
+	s.windows = make([]windowState, r.length())
+	for w := range s.windows {
+		ws := &s.windows[w]
+		ws.withheld, ws.hasMade = status(r.byte()), r.flag()
+		ws.made, ws.withheldSince = r.int(), r.int()
+	}
+	for d := range s.tails {
+		s.tails[d] = r.tail(s, direction(d))
+	}
+	for range r.length() {
+		c := r.cell()
+		*s.cells.at(c.slot) = c
+	}
+	if len(r.b) > 0 {
+		r.fail("bytes are left over")
+	}
+	return r.err
+}
+
+func (r *reader) cell() cell {
+	c := cell{
+		slot: r.int(), events: r.int(), exposure: r.quantity(),
+		saysEvents: uint32(r.uint()), saysExposure: uint32(r.uint()), items: uint32(r.uint()), late: r.int(),
+	}
+	for range r.length() {
+		c.ids = append(c.ids, r.string())
+	}
+	return c
+}
+
+func (r *reader) tail(s *series, d direction) tail {
+	t := tail{disarmed: r.flag()}
+	ringing := r.flag()
+	t.quiet, t.opened = int(r.uint()), int(r.uint())
+	alerts := make([]*alert, r.length())
+	for i := range alerts {
+		a := &alert{series: s, tail: d}
+		a.record.ID = r.string()
+		a.first, a.last, a.windows, a.frozen = r.int(), r.int(), r.uint(), r.flag()
+		a.opening = lookKey{r.int(), int(r.uint())}
+		a.worst = lookKey{r.int(), int(r.uint())}
+		a.worstLog10P = r.float()
+		alerts[i] = a
+	}
+	t.past = alerts
+	if ringing && len(alerts) > 0 {
+		t.current, t.past = alerts[0], alerts[1:]
+	}
+	for range r.length() {
+		l := litLook{boundary: r.int(), window: int(r.uint()), events: r.int(), exposure: r.quantity(), log10p: r.float()}
+		if n := r.uint(); n > uint64(len(alerts)) {
+			r.fail("a look names an alert that isn't there")
+		} else if n > 0 {
+			l.alert = alerts[n-1]
+		}
+		t.lit = append(t.lit, l)
+	}
+	return t
+}
+
+func (e *Engine) restoreID(change *IDChange) error {
+	r := &reader{b: change.Value}
+	if v := r.byte(); v != encodingVersion {
+		return fmt.Errorf("%w: encoding %d is not known to this program", errEncoding, v)
+	}
+	x := &identified{generation: change.Generation, retracted: r.flag()}
+	x.key = idKey{r.string(), r.string()}
+	x.revision = r.int()
+	if r.flag() {
+		number := r.uint()
+		if number >= uint64(len(e.series)) {
+			return fmt.Errorf("%w: an id names series %d of %d", errEncoding, number, len(e.series))
+		}
+		x.said = contribution{
+			series: e.series[number], start: Instant(r.int()), end: Instant(r.int()), events: r.int(),
+			exposure: r.quantity(), hasEvents: r.flag(), hasExposure: r.flag(), late: r.flag(),
+		}
+	}
+	if r.err != nil {
+		return r.err
+	}
+	if old := e.ids.byKey[x.key]; old == nil || x.revision > old.revision {
+		e.ids.put(x)
+	}
+	e.ids.touched = nil
+	return nil
+}

@@ -1,0 +1,165 @@
+package monitor
+
+import "tailbell/monitor/life"
+
+// lookAll makes the looks of the indicator that fall due at the boundary.
+func (e *Engine) lookAll(ix *indicator, boundary int64) {
+	due := ix.nextDue
+	ix.pass(boundary)
+	ep := ix.epochAt(boundary)
+	for _, s := range ix.series {
+		if s.birth < boundary {
+			e.lookAt(s, ep, boundary, due)
+			e.trim(s)
+		}
+	}
+}
+
+// lookAt makes the looks of one series that fall due at the boundary.
+func (e *Engine) lookAt(s *series, ep *epoch, boundary int64, due Instant) {
+	ix := s.indicator
+	looks := e.looks[:0]
+	for w := range ep.cfg.Windows {
+		if !ix.looksAt(&ep.cfg.Windows[w], boundary) {
+			continue
+		}
+		l := ix.look(s, ep, w, boundary)
+		e.note(s, &l, boundary)
+		if l.status == made {
+			looks = append(looks, l)
+		}
+	}
+	e.looks = looks
+	if len(looks) == 0 {
+		return
+	}
+	for _, d := range bothTails {
+		if (d == upper && ep.cfg.Upper) || (d == lower && ep.cfg.Lower) {
+			e.decide(s, d, looks, boundary, due)
+		}
+	}
+}
+
+// note keeps what a look has come to: made, or withheld and why.
+func (e *Engine) note(s *series, l *look, boundary int64) {
+	ws := &s.windows[l.window]
+	switch l.status {
+	case filling:
+		e.account.Filling++
+		return
+	case made:
+		e.account.Looks++
+		if ws.withheld != made {
+			ws.withheld = made
+			e.touch(s)
+		}
+		ws.made, ws.hasMade = boundary, true
+	case missing, overfull, unexposed:
+		e.account.WithheldLooks++
+		if ws.withheld != l.status {
+			if ws.withheld == made {
+				ws.withheldSince = boundary
+			}
+			ws.withheld = l.status
+			e.touch(s)
+		}
+	}
+}
+
+// decide opens, worsens or returns the alert of one direction after the looks
+// of one boundary.
+func (e *Engine) decide(s *series, d direction, looks []look, boundary int64, due Instant) {
+	t := &s.tails[d]
+	lit := e.litOf(s, d, looks)
+	if t.current != nil {
+		e.worsen(s, d, lit, due)
+	} else if entered := e.withEntry(s, d, lit); len(entered) > 0 && !t.disarmed {
+		e.open(s, d, lit, strongest(entered, d), due, false)
+	}
+	if t.current == nil && !t.disarmed {
+		return
+	}
+	if s.active(d) {
+		t.quiet = 0
+		e.touch(s)
+		return
+	}
+	t.quiet++
+	e.touch(s)
+	if t.quiet < s.indicator.epochAt(boundary).cfg.Quiet {
+		return
+	}
+	t.disarmed = false
+	if a := t.current; a != nil {
+		t.leave(boundary)
+		e.step(a, life.Step{Kind: life.StepReturned, At: due.Time()})
+	}
+	t.quiet = 0
+}
+
+// litOf notes and returns those of the looks that signal.
+func (e *Engine) litOf(s *series, d direction, looks []look) []look {
+	var lit []look
+	for i := range looks {
+		if l := &looks[i]; l.lit[d] {
+			lit = append(lit, *l)
+			s.tails[d].set(litLook{
+				boundary: l.boundary, window: l.window, events: l.events,
+				exposure: l.exposure, log10p: l.log10p[d],
+			})
+			e.touch(s)
+		}
+	}
+	return lit
+}
+
+// withEntry returns those of the looks that may open an alert: for the upper
+// tail those that an event entered since the look before.
+func (e *Engine) withEntry(s *series, d direction, lit []look) []look {
+	if d == lower {
+		return lit
+	}
+	var entered []look
+	for i := range lit {
+		if s.indicator.entered(s, &lit[i]) > 0 {
+			entered = append(entered, lit[i])
+		}
+	}
+	return entered
+}
+
+// worsen gives the lit looks to the current alert, with a step if a further
+// window signals or log10 p is down by one.
+func (e *Engine) worsen(s *series, d direction, lit []look, due Instant) {
+	if len(lit) == 0 {
+		return
+	}
+	t := &s.tails[d]
+	a := t.current
+	further := false
+	for i := range lit {
+		further = further || a.windows&(1<<lit[i].window) == 0
+		t.join(&lit[i], a, d)
+	}
+	l := strongest(lit, d)
+	down := l.log10p[d] <= a.worstLog10P-1
+	if !down && !further {
+		return
+	}
+	evidence := e.evidence(s, d, l.boundary, l.window)
+	if l.log10p[d] < a.worstLog10P {
+		a.worst, a.worstLog10P, a.record.Worst = lookKey{l.boundary, l.window}, l.log10p[d], evidence
+	}
+	e.step(a, life.Step{Kind: life.StepWorsened, At: due.Time(), Evidence: &evidence})
+}
+
+// strongest returns the look with the smallest p, the earliest of equals.
+func strongest(looks []look, d direction) look {
+	best := looks[0]
+	for _, l := range looks[1:] {
+		if l.log10p[d] < best.log10p[d] {
+			best = l
+		}
+	}
+	return best
+}

@@ -1,0 +1,161 @@
+package monitor
+
+import (
+	"math"
+	"slices"
+
+	"tailbell/config"
+)
+
+// unborn is the birth of a series that has no slot yet.
+const unborn = math.MaxInt64
+
+// series is the state of one series.
+type series struct {
+	number    uint32
+	name      string
+	indicator *indicator
+	// birth is the first slot that counts: no window reaches before it.
+	birth int64
+	// trimmed is the slot before which cells are forgotten.
+	trimmed int64
+	// unpaired counts the elements in forgotten slots that lacked a side.
+	unpaired int64
+	// seen is the partition's clock when an observation was last counted.
+	seen  Instant
+	cells cells
+	// windows and tails hold what the looks have found, by window and by
+	// direction.
+	windows []windowState
+	tails   [2]tail
+	// base is the baseline that serves the series under the stanza baseOf.
+	base   *config.Baseline
+	baseOf *config.Indicator
+	// dirty lists the slots changed since the last drain, if touched.
+	dirty   []int64
+	touched bool
+	// fresh says that no patch has named the series yet.
+	fresh bool
+}
+
+// windowState is what the looks of one window have come to.
+type windowState struct {
+	// made is the boundary of the latest look that could be made.
+	made    int64
+	hasMade bool
+	// withheld says why the latest look was not made, since which boundary.
+	withheld      status
+	withheldSince int64
+}
+
+// tail is one direction of a series.
+type tail struct {
+	// lit are the looks that signal, inside the horizon, by boundary, window.
+	lit []litLook
+	// current is the alert that is signalling, nil for none.
+	current *alert
+	// disarmed says that no alert may open until enough looks were quiet: one
+	// was closed by hand while it signalled.
+	disarmed bool
+	// quiet counts the looks in a row at which nothing signalled.
+	quiet int
+	// opened counts the alerts that were ever opened.
+	opened int
+	// past are alerts that have left, but are not done or lie inside the
+	// horizon.
+	past []*alert
+}
+
+// litLook is one look that signals.
+type litLook struct {
+	boundary int64
+	window   int
+	events   int64
+	exposure Quantity
+	log10p   float64
+	alert    *alert // nil if it opened or joined none
+}
+
+func compareLit(a, b litLook) int {
+	if a.boundary != b.boundary {
+		if a.boundary < b.boundary {
+			return -1
+		}
+		return 1
+	}
+	return a.window - b.window
+}
+
+// litAt returns the index of the look among the lit ones.
+func (t *tail) litAt(boundary int64, window int) (int, bool) {
+	return slices.BinarySearchFunc(t.lit, litLook{boundary: boundary, window: window}, compareLit)
+}
+
+func (t *tail) set(l litLook) {
+	i, ok := t.litAt(l.boundary, l.window)
+	if ok {
+		t.lit[i] = l
+		return
+	}
+	t.lit = slices.Insert(t.lit, i, l)
+}
+
+// of counts the lit looks that belong to the alert.
+func (t *tail) of(a *alert) int {
+	n := 0
+	for i := range t.lit {
+		if t.lit[i].alert == a {
+			n++
+		}
+	}
+	return n
+}
+
+// trim forgets the cells before the indicator's floor, and what the looks
+// found at or before its frozen boundary. When it is called makes no
+// difference to any look.
+func (e *Engine) trim(s *series) {
+	ix := s.indicator
+	if ix.floor <= s.trimmed {
+		return
+	}
+	s.trimmed = ix.floor
+	n, _ := s.cells.find(ix.floor)
+	for i := range s.cells[:n] {
+		c := &s.cells[i]
+		if !ix.needs.paired(c) {
+			s.unpaired += int64(c.items)
+		}
+		e.archive(s, c)
+	}
+	if n > 0 {
+		s.cells = slices.Delete(s.cells, 0, n)
+		e.touch(s)
+	}
+	for d := range s.tails {
+		s.tails[d].trim(ix.frozenAt, e.alerts)
+	}
+}
+
+// trim freezes what can't change any more: looks at or before the boundary,
+// and finished alerts that ended there.
+func (t *tail) trim(frozen int64, alerts map[string]*alert) {
+	n := 0
+	for n < len(t.lit) && t.lit[n].boundary <= frozen {
+		if a := t.lit[n].alert; a != nil {
+			a.frozen = true
+		}
+		n++
+	}
+	t.lit = slices.Delete(t.lit, 0, n)
+	t.past = slices.DeleteFunc(t.past, func(a *alert) bool {
+		gone := a.gone(frozen)
+		if gone {
+			delete(alerts, a.record.ID)
+		}
+		return gone
+	})
+}
+
+// gone reports whether nothing can happen to the alert any more.
+func (a *alert) gone(frozen int64) bool { return a.record.Done() && a.last <= frozen }
