@@ -19,6 +19,7 @@ const (
 	// recovery of its streams comes before and is not counted.
 	readyTimeout = 10 * time.Second
 	maxClients   = 64
+	flushersEnd  = 20 * time.Millisecond
 )
 
 // account is a user of the embedded server, made up anew at every start.
@@ -114,8 +115,11 @@ func (e *embedded) connectOptions() []nats.Option {
 	}
 }
 
-// stop shuts the server down and waits until it has gone.
+// stop shuts the server down and waits until it has gone. The server itself
+// doesn't wait for the flushers of staged batches, which notice within
+// milliseconds that they are to end.
 func (e *embedded) stop() {
 	e.server.Shutdown()
 	e.server.WaitForShutdown()
+	time.Sleep(flushersEnd)
 }
