@@ -71,7 +71,8 @@ func (e *Engine) open(s *series, d direction, looks []look, opening look, at Ins
 	e.revalue(a)
 	t.current = a
 	e.alerts[a.record.ID] = a
-	e.step(a, life.Step{Kind: life.StepOpened, At: at.Time(), Evidence: &a.record.Opening})
+	evidence := a.record.Opening // as it was when it opened
+	e.step(a, life.Step{Kind: life.StepOpened, At: at.Time(), Evidence: &evidence})
 	return a
 }
 
@@ -144,7 +145,6 @@ func (e *Engine) take(a *alert, s life.Step) error {
 	}
 	e.steps = append(e.steps, notices...)
 	e.touchAlert(a)
-	a.series.touched = true
 	e.touch(a.series)
 	return nil
 }

@@ -1,0 +1,175 @@
+package monitor_test
+
+import (
+	"bytes"
+	"encoding/json"
+	"flag"
+	"fmt"
+	"os"
+	"path/filepath"
+	"strings"
+	"testing"
+
+	"github.com/google/go-cmp/cmp"
+
+	"tailbell/config"
+	"tailbell/ingest/wire"
+	"tailbell/monitor"
+	"tailbell/monitor/life"
+)
+
+var update = flag.Bool("update", false, "rewrite the expected output of the scenarios")
+
+// A scenario is a text file: a set-up between "setup" and "end", then one
+// input a line: the JSON of an observation (or several) or of an act, or
+// "tick TIME", "live TIME", "at TIME" (the bus's stored time of what
+// follows). Lines beginning with # are comments. After the line "----" stands
+// what is expected.
+func TestScenarios(t *testing.T) {
+	files, err := filepath.Glob("../testdata/monitor/*.txt")
+	if err != nil || len(files) == 0 {
+		t.Fatalf("no scenarios: %v", err)
+	}
+	for _, file := range files {
+		t.Run(strings.TrimSuffix(filepath.Base(file), ".txt"), func(t *testing.T) {
+			text, err := os.ReadFile(file)
+			if err != nil {
+				t.Fatal(err)
+			}
+			input, want, _ := strings.Cut(string(text), "----\n")
+			messages := readScenario(t, input)
+			got := render(t, play(t, messages, 0))
+			for _, batch := range []int{1, 2, 3, 7} {
+				if diff := cmp.Diff(got, render(t, play(t, messages, batch))); diff != "" {
+					t.Errorf("restarted every %d messages (-undisturbed +restarted):\n%s", batch, diff)
+				}
+			}
+			if *update {
+				if err := os.WriteFile(file, []byte(input+"----\n"+got), 0o644); err != nil {
+					t.Fatal(err)
+				}
+				return
+			}
+			if diff := cmp.Diff(want, got); diff != "" {
+				t.Errorf("-want +got:\n%s", diff)
+			}
+		})
+	}
+}
+
+// outcome is what a run of a scenario leaves.
+type outcome struct {
+	store   *monitor.Memory
+	engine  *monitor.Engine
+	account monitor.Account
+}
+
+// play applies the messages, drained and restored after every so many; 0 for
+// never.
+func play(t *testing.T, messages []monitor.Message, restart int) outcome {
+	t.Helper()
+	store := monitor.NewMemory()
+	e := monitor.New(monitor.Partition{Of: 1, KeyParts: 1})
+	for i := range messages {
+		e.Apply(&messages[i])
+		if restart > 0 && (i+1)%restart == 0 {
+			store.Commit(e.Drain())
+			var err error
+			if e, err = store.Reopen(monitor.Partition{Of: 1, KeyParts: 1}); err != nil {
+				t.Fatalf("restoring after message %d: %v", i+1, err)
+			}
+		}
+	}
+	store.Commit(e.Drain())
+	return outcome{store, e, e.Account()}
+}
+
+func readScenario(t *testing.T, text string) []monitor.Message {
+	t.Helper()
+	decoder := wire.NewDecoder(wire.Limits{})
+	var messages []monitor.Message
+	var setup *strings.Builder
+	stored := monitor.Instant(0)
+	add := func(m monitor.Message) {
+		m.Position, m.Stored = uint64(len(messages)+1), stored
+		messages = append(messages, m)
+	}
+	for n, line := range strings.Split(text, "\n") {
+		word, rest, _ := strings.Cut(line, " ")
+		switch {
+		case setup != nil && line == "end":
+			s, err := config.Parse([]byte(setup.String()), "set-up")
+			if err != nil {
+				t.Fatal(err)
+			}
+			add(monitor.Message{Kind: monitor.SettingMessage, Setting: monitor.Setting{Setup: s}})
+			setup = nil
+		case setup != nil:
+			setup.WriteString(line + "\n")
+		case line == "setup":
+			setup = new(strings.Builder)
+		case line == "" || line[0] == '#':
+		case word == "at" || word == "tick" || word == "live":
+			at, err := wire.ParseTime(rest)
+			if err != nil {
+				t.Fatalf("line %d: %v", n+1, err)
+			}
+			stored = at
+			if word == "tick" {
+				add(monitor.Message{Kind: monitor.Tick})
+			} else if word == "live" {
+				add(monitor.Message{Kind: monitor.Live})
+			}
+		case wire.IsAct([]byte(line)):
+			add(decoder.Decode(wire.Raw{Subject: "x.in.0.act", Data: []byte(line)}))
+		default:
+			add(decoder.Decode(wire.Raw{Subject: "x.in.0.obs", Data: []byte(line)}))
+		}
+	}
+	return messages
+}
+
+// render writes what a reader must see of an outcome.
+func render(t *testing.T, o outcome) string {
+	t.Helper()
+	var b bytes.Buffer
+	for _, n := range o.store.Steps {
+		renderStep(&b, &n)
+	}
+	for _, r := range o.store.Refused {
+		fmt.Fprintf(&b, "refused %d.%d %s: %s\n", r.Position, r.Index, r.Reason, r.Detail)
+	}
+	if !o.account.Balanced() {
+		t.Errorf("the account does not balance: %+v", o.account)
+	}
+	account, err := json.Marshal(o.account)
+	if err != nil {
+		t.Fatal(err)
+	}
+	fmt.Fprintf(&b, "account %s\n", account)
+	return b.String()
+}
+
+func renderStep(b *bytes.Buffer, n *life.Notice) {
+	r := &n.Record
+	late := ""
+	if r.Late {
+		late = " late"
+	}
+	fmt.Fprintf(b, "%s %s %s %s#%d: %s%s -> %s", n.Step.At.Format("2006-01-02T15:04Z"), r.ID, r.Series, r.Direction, r.Number, n.Step.Kind, late, n.Step.Condition)
+	if n.Step.By != "" || n.Step.Why != "" {
+		fmt.Fprintf(b, " (%s: %s)", n.Step.By, n.Step.Why)
+	}
+	b.WriteByte('\n')
+	if e := n.Step.Evidence; e != nil {
+		fmt.Fprintf(b, "    %s to %s: %d in %s %s, expected %.4g, p %.5g, critical %d, late %d, rate %.4g (%.4g to %.4g)\n",
+			e.Window, e.To.Format("2006-01-02"), e.Events, e.Exposure, e.Unit, e.Expected, e.P, e.Critical, e.LateEvents,
+			e.Rate, e.RateLower, e.RateUpper)
+	}
+	if len(r.IDs) > 0 && n.Step.Kind == life.StepOpened {
+		fmt.Fprintf(b, "    ids %s\n", strings.Join(r.IDs, " "))
+	}
+	if s := r.Since; s != nil {
+		fmt.Fprintf(b, "    since %s to %s: %d in %s\n", s.From.Format("2006-01-02"), s.To.Format("2006-01-02"), s.Events, s.Exposure)
+	}
+}
