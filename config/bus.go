@@ -14,12 +14,12 @@ func (s section) readBus() Bus {
 	s.strict("[bus]")
 	b := Bus{}
 	b.URL = s.readURL()
-	b.Credentials, _ = s.text("credentials", "")
+	b.Credentials = s.filePath("credentials", "")
 	b.User, _ = s.text("user", "")
-	b.PasswordFile, _ = s.text("password_file", "")
-	b.CA, _ = s.text("ca", "")
-	b.Cert, _ = s.text("cert", "")
-	b.Key, _ = s.text("key", "")
+	b.PasswordFile = s.filePath("password_file", "")
+	b.CA = s.filePath("ca", "")
+	b.Cert = s.filePath("cert", "")
+	b.Key = s.filePath("key", "")
 	b.MaxBytes, _ = s.size("max_bytes", 4<<30, 1<<20, 1<<50)
 	b.MaxAge, _ = s.duration("max_age", 0, 0, maxTime)
 	replicas, _ := s.whole("replicas", 1, 1, 5)
@@ -35,7 +35,7 @@ func (s section) readBus() Bus {
 	s.pair("user", "password_file")
 	s.pair("cert", "key")
 	if s.has("credentials") && s.has("user") {
-		s.fault("credentials", "and user exclude each other", "keep one")
+		s.fault("credentials", "and an account of user and password_file exclude each other", "keep one")
 	}
 	return b
 }

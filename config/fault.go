@@ -18,7 +18,7 @@ type Fault struct {
 	// Empty where the file can't be read as TOML.
 	Key string
 	// Problem says what is wrong, Mend what to write instead. Both are plain
-	// sentences without a full stop; Mend may be empty.
+	// sentences without a full stop (a question has its mark); Mend may be empty.
 	Problem string
 	Mend    string
 }
@@ -37,7 +37,11 @@ func (f Fault) String() string {
 	b.WriteString(": ")
 	b.WriteString(f.Problem)
 	if f.Mend != "" {
-		b.WriteString("; ")
+		if strings.HasSuffix(f.Problem, "?") {
+			b.WriteString(" ")
+		} else {
+			b.WriteString("; ")
+		}
 		b.WriteString(f.Mend)
 	}
 	return b.String()

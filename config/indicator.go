@@ -265,7 +265,10 @@ func notAtSlot(t time.Time, every Every) string {
 		}
 	case Month:
 		if d != 1 || (int(m)-1)%every.N != 0 {
-			return "slots begin on the first day of a month, quarters of January, April, July and October"
+			if every.N == 3 {
+				return "quarters begin on 1 January, 1 April, 1 July and 1 October"
+			}
+			return "months begin on their first day"
 		}
 	case Year:
 		if d != 1 || m != time.January {
@@ -321,7 +324,7 @@ func (s section) readTails() (upper, lower bool) {
 func (s section) readAlpha() float64 {
 	const usual = 0.05
 	if s.has("level") && s.has("alpha") {
-		s.fault("alpha", "and level say the same thing twice", "keep one: level = 0.95 is alpha = 0.05")
+		s.fault("alpha", "says the same as level", "keep one: level = 0.95 is alpha = 0.05")
 		return usual
 	}
 	key := "level"

@@ -2,9 +2,9 @@ package config
 
 import "fmt"
 
-// What the engine holds, in bytes. The figures are measured on a running
-// engine and rounded up; they include what Go's maps and the collector of
-// garbage need on top.
+// What the engine holds, in bytes: figures for planning, about twice what the
+// plain data need, which leaves room for maps and for garbage that is not yet
+// collected.
 const (
 	bytesPerSeries = 1024 // a series: its name, its place in the map, its alerts
 	bytesPerCell   = 64   // a slot: events, exposure, what of it was late, its revision

@@ -8,7 +8,7 @@ func nearest(word string, candidates []string) (string, bool) {
 		return "", false
 	}
 	word = strings.ToLower(word)
-	best, bestDistance := "", len(word)/3+2
+	best, bestDistance := "", (len(word)-1)/4+2
 	for _, c := range candidates {
 		if d := distance(word, strings.ToLower(c)); d < bestDistance {
 			best, bestDistance = c, d

@@ -1,92 +1,109 @@
 package config
 
-import "strings"
+import (
+	"slices"
+	"strings"
+)
 
 // overlap reports whether some series name matches both patterns, and gives
 // an example.
 func overlap(a, b Pattern) (example string, both bool) {
-	parts, both := overlapParts(strings.Split(a.text, "/"), strings.Split(b.text, "/"))
+	o := overlapper[string]{
+		any:  func(p string) bool { return p == "**" },
+		both: overlapPart,
+		one: func(p string) string {
+			if p = strings.ReplaceAll(p, "*", ""); p == "" {
+				p = "x"
+			}
+			return p
+		},
+	}
+	parts, both := o.overlap(strings.Split(a.text, "/"), strings.Split(b.text, "/"))
 	if both && len(parts) == 0 {
 		parts = []string{"x"} // "**" and "**"
 	}
 	return strings.Join(parts, "/"), both && len(parts) <= MaxSeriesParts
 }
 
-func overlapParts(a, b []string) ([]string, bool) {
+// overlapPart does the same for two parts.
+func overlapPart(a, b string) (example string, both bool) {
+	o := overlapper[rune]{
+		any:  func(c rune) bool { return c == '*' },
+		both: func(a, b rune) (rune, bool) { return a, a == b },
+		one:  func(c rune) rune { return c },
+	}
+	text, both := o.overlap([]rune(a), []rune(b))
+	if both && len(text) == 0 {
+		text = []rune{'x'} // "*" and "*"
+	}
+	return string(text), both && len(text) <= MaxPartLength
+}
+
+// overlapper finds a shortest-first sequence that matches two patterns, in
+// which some elements stand for any number of others.
+type overlapper[E any] struct {
+	// any reports whether an element stands for any number of others; both
+	// gives what matches two elements that don't, one what matches a single.
+	any  func(E) bool
+	both func(a, b E) (E, bool)
+	one  func(E) E
+	// failed are the pairs of rests, by length, known to have nothing in
+	// common: without it the time would grow exponentially.
+	failed map[[2]int]bool
+}
+
+func (o *overlapper[E]) overlap(a, b []E) ([]E, bool) {
+	pair := [2]int{len(a), len(b)}
+	if o.failed[pair] {
+		return nil, false
+	}
+	found, both := o.step(a, b)
+	if !both {
+		if o.failed == nil {
+			o.failed = make(map[[2]int]bool)
+		}
+		o.failed[pair] = true
+	}
+	return found, both
+}
+
+func (o *overlapper[E]) step(a, b []E) ([]E, bool) {
 	switch {
 	case len(a) == 0 && len(b) == 0:
 		return nil, true
-	case len(a) > 0 && a[0] == "**":
-		return overlapAny(a, b)
-	case len(b) > 0 && b[0] == "**":
-		return overlapAny(b, a)
+	case len(a) > 0 && o.any(a[0]):
+		if rest, both := o.overlap(a[1:], b); both {
+			return rest, true
+		}
+		if len(b) == 0 {
+			return nil, false
+		}
+		rest, both := o.overlap(a, b[1:])
+		return o.before(b[0], rest, both)
+	case len(b) > 0 && o.any(b[0]):
+		if rest, both := o.overlap(a, b[1:]); both {
+			return rest, true
+		}
+		if len(a) == 0 {
+			return nil, false
+		}
+		rest, both := o.overlap(a[1:], b)
+		return o.before(a[0], rest, both)
 	case len(a) == 0 || len(b) == 0:
 		return nil, false
 	}
-	head, both := overlapPart(a[0], b[0])
+	head, both := o.both(a[0], b[0])
 	if !both {
 		return nil, false
 	}
-	tail, both := overlapParts(a[1:], b[1:])
-	if !both {
-		return nil, false
-	}
-	return append([]string{head}, tail...), true
+	rest, both := o.overlap(a[1:], b[1:])
+	return slices.Insert(rest, 0, head), both
 }
 
-// overlapAny is overlapParts where any begins with "**".
-func overlapAny(any, other []string) ([]string, bool) {
-	if rest, both := overlapParts(any[1:], other); both {
-		return rest, true
-	}
-	if len(other) == 0 {
-		return nil, false
-	}
-	rest, both := overlapParts(any, other[1:])
-	if !both || other[0] == "**" {
+// before puts what matches e in front of rest.
+func (o *overlapper[E]) before(e E, rest []E, both bool) ([]E, bool) {
+	if !both || o.any(e) {
 		return rest, both
 	}
-	head := strings.ReplaceAll(other[0], "*", "")
-	if head == "" {
-		head = "x"
-	}
-	return append([]string{head}, rest...), true
-}
-
-func overlapPart(a, b string) (string, bool) {
-	text, both := overlapText(a, b)
-	if both && text == "" {
-		text = "x" // both are "*" alone
-	}
-	return text, both
-}
-
-func overlapText(a, b string) (string, bool) {
-	switch {
-	case a == "" && b == "":
-		return "", true
-	case strings.HasPrefix(a, "*"):
-		return overlapStar(a, b)
-	case strings.HasPrefix(b, "*"):
-		return overlapStar(b, a)
-	case a == "" || b == "" || a[0] != b[0]:
-		return "", false
-	}
-	rest, both := overlapText(a[1:], b[1:])
-	return a[:1] + rest, both
-}
-
-// overlapStar is overlapText where star begins with "*".
-func overlapStar(star, other string) (string, bool) {
-	if rest, both := overlapText(star[1:], other); both {
-		return rest, true
-	}
-	if other == "" {
-		return "", false
-	}
-	rest, both := overlapText(star, other[1:])
-	if other[0] == '*' {
-		return rest, both
-	}
-	return other[:1] + rest, both
+	return slices.Insert(rest, 0, o.one(e)), true
 }

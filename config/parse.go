@@ -9,7 +9,6 @@ import (
 	"io/fs"
 	"os"
 	"path/filepath"
-	"slices"
 	"time"
 
 	"github.com/pelletier/go-toml/v2"
@@ -103,7 +102,7 @@ func readSetup(top section) *Setup {
 	top.strict("")
 	s := &Setup{}
 	s.Name, _ = top.plainName("name", 32)
-	s.Folder, _ = top.text("folder", "tailbell-data")
+	s.Folder = top.filePath("folder", "tailbell-data")
 	partitions, _ := top.whole("partitions", 1, 1, maxPartitions)
 	keyParts, _ := top.whole("key_parts", 1, 1, MaxSeriesParts)
 	s.Partitions, s.KeyParts = int(partitions), int(keyParts)
@@ -127,28 +126,32 @@ func readIndicators(top section) []Indicator {
 	if !top.has("indicator") {
 		top.fault("indicator", "is missing: nothing would be monitored", `add a table [[indicator]]; "tailbell config sample" shows one`)
 	}
-	var all []Indicator
-	var sections []section
+	names, patterns := map[string]string{}, map[Pattern]string{}
+	all := make([]Indicator, 0, len(tables))
 	for _, t := range tables {
 		in := t.readIndicator()
-		for i := range all {
-			t.compareNames(sections[i], &all[i], &in)
-		}
-		all, sections = append(all, in), append(sections, t)
+		t.compareNames(&in, names, patterns)
+		all = append(all, in)
 	}
 	return all
 }
 
-// compareNames reports names and patterns that two indicators share.
-func (s section) compareNames(earlier section, first, second *Indicator) {
-	if first.Name != "" && first.Name == second.Name {
-		s.fault("name", fmt.Sprintf("%q is already the name of %s", second.Name, earlier.path), "choose another")
+// compareNames reports names and patterns that an indicator shares with those
+// before it. The maps say where each was seen first.
+func (s section) compareNames(in *Indicator, names map[string]string, patterns map[Pattern]string) {
+	switch first, seen := names[in.Name]; {
+	case seen:
+		s.fault("name", fmt.Sprintf("%q is already the name of %s", in.Name, first), "choose another")
+	case in.Name != "":
+		names[in.Name] = s.path
 	}
-	for _, p := range second.Series {
-		if slices.Contains(first.Series, p) {
-			s.fault("series", fmt.Sprintf("%q stands in %s too, and a series belongs to exactly one indicator", p, earlier.path),
+	for _, p := range in.Series {
+		if first, seen := patterns[p]; seen {
+			s.fault("series", fmt.Sprintf("%q stands in %s too, and a series belongs to exactly one indicator", p, first),
 				"make the patterns differ")
+			continue
 		}
+		patterns[p] = s.path
 	}
 }
 

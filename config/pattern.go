@@ -50,19 +50,25 @@ func matchParts(pattern, name string) bool {
 	return more && moreName && matchParts(rest, tail)
 }
 
+// matchPart lets each "*" take as little as it can and only ever goes back to
+// the last one, so its time is bounded by the product of the two lengths.
 func matchPart(pattern, part string) bool {
-	before, after, star := strings.Cut(pattern, "*")
-	if !star {
-		return pattern == part
-	}
-	if !strings.HasPrefix(part, before) {
-		return false
-	}
-	part = part[len(before):]
-	for i := 0; i <= len(part); i++ {
-		if matchPart(after, part[i:]) {
-			return true
+	star, taken := -1, 0
+	p, i := 0, 0
+	for i < len(part) {
+		switch {
+		case p < len(pattern) && pattern[p] == '*':
+			star, taken = p, i
+			p++
+		case p < len(pattern) && pattern[p] == part[i]:
+			p++
+			i++
+		case star >= 0:
+			taken++
+			p, i = star+1, taken
+		default:
+			return false
 		}
 	}
-	return false
+	return strings.Trim(pattern[p:], "*") == ""
 }

@@ -9,6 +9,7 @@ import (
 	"strconv"
 	"strings"
 	"time"
+	"unicode/utf8"
 )
 
 // section is one table of the file, read key by key. Its getters report what
@@ -38,9 +39,22 @@ const indicatorPlace = "[[indicator]]"
 // key returns the full key of one of the section's keys.
 func (s section) key(name string) string {
 	if s.path == "" {
-		return name
+		return bareKey(name)
 	}
-	return s.path + "." + name
+	return s.path + "." + bareKey(name)
+}
+
+// bareKey quotes a key that TOML would have quoted.
+func bareKey(name string) string {
+	for _, c := range name {
+		if !partCharacter(c) || c == '.' || c >= utf8.RuneSelf {
+			return strconv.Quote(name)
+		}
+	}
+	if name == "" {
+		return `""`
+	}
+	return name
 }
 
 // has reports whether the key is given.
@@ -62,15 +76,15 @@ func (s section) strict(place string) {
 		if slices.Contains(known, k) {
 			continue
 		}
-		s.fault(k, "is no key of "+placeName(place), suggestKey(k, place))
+		s.fault(k, "is no key "+placeName(place), suggestKey(k, place))
 	}
 }
 
 func placeName(place string) string {
 	if place == "" {
-		return "the top of a set-up"
+		return "at the top of a set-up"
 	}
-	return place
+	return "of " + place
 }
 
 func suggestKey(k, place string) string {
@@ -87,7 +101,7 @@ func suggestKey(k, place string) string {
 	}
 	if len(others) > 0 {
 		slices.Sort(others)
-		return "it belongs to " + placeName(others[0])
+		return "it is a key " + placeName(others[0])
 	}
 	if best, found := nearest(k, keysOf[place]); found {
 		return "did you mean " + best + "?"
@@ -131,7 +145,15 @@ func (s section) sub(name string) section {
 }
 
 // text returns a text of at most 200 characters on one line.
-func (s section) text(name, standard string) (string, bool) {
+func (s section) text(name, standard string) (string, bool) { return s.line(name, standard, 200) }
+
+// filePath returns the path of a file or folder.
+func (s section) filePath(name, standard string) string {
+	path, _ := s.line(name, standard, 4000)
+	return path
+}
+
+func (s section) line(name, standard string, most int) (string, bool) {
 	n, given, ok := s.get(name, textKind)
 	switch {
 	case !ok:
@@ -141,8 +163,8 @@ func (s section) text(name, standard string) (string, bool) {
 	case strings.TrimSpace(n.text) == "":
 		s.fault(name, "is empty", "leave the key out or give it a text")
 		return standard, false
-	case len([]rune(n.text)) > 200 || strings.ContainsFunc(n.text, func(c rune) bool { return c < ' ' || c == 0x7f }):
-		s.fault(name, "is longer than 200 characters or has control characters in it", "write one short line")
+	case len([]rune(n.text)) > most || strings.ContainsFunc(n.text, func(c rune) bool { return c < ' ' || c == 0x7f }):
+		s.fault(name, fmt.Sprintf("is longer than %d characters or has control characters in it", most), "write one short line")
 		return standard, false
 	}
 	return n.text, true

@@ -43,6 +43,15 @@ func ParseSize(s string) (int64, error) {
 	return 0, ErrSizeSyntax
 }
 
+// exactSize writes a size in bytes as ParseSize reads it.
+func exactSize(n int64) string {
+	text := FormatSize(n)
+	if back, err := ParseSize(text); err != nil || back != n {
+		return fmt.Sprintf("%dB", n)
+	}
+	return text
+}
+
 // FormatSize writes a size in bytes for people: exact if it is a whole number
 // of a binary unit, else with three figures.
 func FormatSize(n int64) string {

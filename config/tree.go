@@ -146,7 +146,7 @@ func (r *treeReader) key(it unstable.Iterator) []keyPart {
 func joinKey(parts []keyPart) string {
 	names := make([]string, len(parts))
 	for i, p := range parts {
-		names[i] = p.name
+		names[i] = bareKey(p.name)
 	}
 	return strings.Join(names, ".")
 }

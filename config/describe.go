@@ -1,0 +1,306 @@
+package config
+
+import (
+	"fmt"
+	"io"
+	"math"
+	"strconv"
+	"strings"
+	"time"
+)
+
+// Describe writes in plain sentences what would be monitored and what it may
+// cost in memory.
+func (s *Setup) Describe(w io.Writer) error {
+	var p prose
+	p.setup(s)
+	for i := range s.Indicators {
+		p.indicator(&s.Indicators[i])
+	}
+	p.memory(s)
+	if _, err := io.WriteString(w, strings.Join(p.lines, "")); err != nil {
+		return fmt.Errorf("describe the set-up: %w", err)
+	}
+	return nil
+}
+
+// prose is a text under construction.
+type prose struct{ lines []string }
+
+func (p *prose) line(format string, args ...any) {
+	p.lines = append(p.lines, fmt.Sprintf(format+"\n", args...))
+}
+
+func (p *prose) setup(s *Setup) {
+	p.line("Set-up %s: %s.", s.Name, counted(len(s.Indicators), "indicator"))
+	if s.Bus.URL == "" {
+		p.line("The bus is embedded; it and the store are kept in %s.", s.Folder)
+	} else {
+		p.line("The bus is at %s; the store is kept in %s.", s.Bus.URL, s.Folder)
+	}
+	age := ""
+	if s.Bus.MaxAge > 0 {
+		age = ", and what is older than " + elapsed(s.Bus.MaxAge) + " is dropped"
+	}
+	p.line("The stream of observations holds up to %s%s; a full stream refuses what is published.", FormatSize(s.Bus.MaxBytes), age)
+	if s.Partitions > 1 {
+		p.line("Series are spread over %d partitions by the first %s of their names.", s.Partitions, counted(s.KeyParts, "part"))
+	}
+	if s.History {
+		p.line("Time is history time: it moves with the data alone.")
+	}
+}
+
+func (p *prose) indicator(in *Indicator) {
+	p.line("")
+	p.line("%s (%s, from line %d)", in.Title, in.Name, in.Line)
+	patterns := make([]string, len(in.Series))
+	for i, q := range in.Series {
+		patterns[i] = q.String()
+	}
+	p.line("  Series: %s.", strings.Join(patterns, ", "))
+	p.counting(in)
+	p.slots(in)
+	for i := range in.Windows {
+		p.window(in, &in.Windows[i])
+	}
+	p.limit(in)
+	for i := range in.Baselines {
+		p.baseline(in, i)
+	}
+	p.late(in)
+}
+
+func (p *prose) counting(in *Indicator) {
+	model := "Poisson"
+	if in.Measure == Proportion {
+		model = "binomial"
+	}
+	p.line("  Counts %s per %s, a %s (%s).", in.EventNoun, perUnit(in), measureWord(in), model)
+	switch in.Exposure {
+	case Reported:
+		if in.GrainDigits == 0 {
+			p.line("  Exposure is reported, in whole %s.", in.Unit)
+		} else {
+			p.line("  Exposure is reported, and held exactly to %s %s.", grainText(in), in.Unit)
+		}
+	case Clock:
+		p.line("  Exposure comes from the clock: %s %s in every %s, and need not be reported.", in.Clock.Size, in.Unit, elapsed(in.Clock.Per))
+	}
+	switch in.Events {
+	case Each:
+		p.line("  Each event is a message: a slot without one had none.")
+	case Counted:
+		p.line("  Events are reported as counts: a slot without a report is missing, not zero.")
+	}
+	if in.Events == Counted || in.Exposure == Reported {
+		p.line("  A look at a window in which anything is missing is withheld, not guessed.")
+	}
+}
+
+func (p *prose) slots(in *Indicator) {
+	calendar := "the calendar of " + in.ZoneName
+	if in.Every.Unit < Day {
+		calendar = "the time of " + in.ZoneName
+	}
+	p.line("  Slots: one every %s, in %s (zone data %s).", spanWords(in.Every), calendar, ZoneDataVersion)
+	if in.Since.IsZero() {
+		p.line("  A series begins with its first observation.")
+	} else {
+		p.line("  Series begin at %s.", in.Since.In(in.Zone).Format(time.RFC3339))
+	}
+}
+
+func (p *prose) window(in *Indicator, w *Window) {
+	step := Every{N: w.Step * in.Every.N, Unit: in.Every.Unit}
+	p.line("  Window %s: looked at every %s, about %s looks a year.", w.Name, spanWords(step), about(in.looksPerYear(w)))
+}
+
+func (p *prose) limit(in *Indicator) {
+	tails, each := "as many events or more", ""
+	switch {
+	case in.Upper && in.Lower:
+		tails, each = "as many events or more, or that of as few or fewer,", " for each of the two"
+	case in.Lower:
+		tails = "as few events or fewer"
+	}
+	p.line("  A look signals when the chance of %s is at most %s if the usual rate holds: at most one look in %s does so by chance%s.",
+		tails, number(in.PLimit), about(1/in.PLimit), each)
+	p.line("  That is at most %s signalling looks by chance a year and series; neighbouring looks share their data, so alerts are fewer.",
+		about(in.chanceSignals()))
+	p.line("  Alerts return after %s in a row without a signal. Bounds are shown at %s%% confidence.",
+		counted(in.Quiet, "look"), number(100-100*in.Alpha))
+}
+
+// looksPerYear is the number of looks of a window in 365.2425 days.
+func (in *Indicator) looksPerYear(w *Window) float64 {
+	const day = 365.2425
+	perSlot := float64(in.Every.N * w.Step)
+	switch in.Every.Unit {
+	case Minute:
+		return day * 1440 / perSlot
+	case Hour:
+		return day * 24 / perSlot
+	case Day:
+		return day / perSlot
+	case Week:
+		return day / 7 / perSlot
+	case Month:
+		return 12 / perSlot
+	case Year:
+		return 1 / perSlot
+	}
+	return 0
+}
+
+// chanceSignals bounds the expected number of looks of one series that signal
+// in a year though the usual rate holds: looks times limit, over all windows
+// and tails.
+func (in *Indicator) chanceSignals() float64 {
+	looks := 0.0
+	for i := range in.Windows {
+		looks += in.looksPerYear(&in.Windows[i])
+	}
+	return looks * in.PLimit * float64(len(tailWords(in)))
+}
+
+func (p *prose) baseline(in *Indicator, i int) {
+	b := &in.Baselines[i]
+	who := "All series"
+	switch {
+	case i < len(in.Baselines)-1:
+		who = "Series " + b.Series.String()
+	case i > 0:
+		who = "All other series"
+	}
+	usual := ""
+	switch b.Kind {
+	case Known:
+		usual = fmt.Sprintf("the known rate of %s %s per %s", number(b.Rate*in.Per), in.EventNoun, perUnit(in))
+		if in.Measure == Proportion {
+			usual = fmt.Sprintf("the known proportion of %s", number(b.Rate))
+		}
+	case Reference:
+		usual = fmt.Sprintf("a reference of %s %s in %s %s", grouped(b.Events), in.EventNoun, b.Exposure, in.Unit)
+	}
+	p.line("  %s: judged by %s%s%s.", who, usual, marginText(in, b), origin(b))
+}
+
+func marginText(in *Indicator, b *Baseline) string {
+	ratio := "ratio"
+	if in.Measure == Proportion && b.Kind == Reference {
+		ratio = "odds ratio"
+	}
+	switch {
+	case b.Margin == 1:
+		return ""
+	case in.Upper && in.Lower:
+		return fmt.Sprintf(", a %s from 1/%s to %s is accepted", ratio, number(b.Margin), number(b.Margin))
+	case in.Lower:
+		return fmt.Sprintf(", a %s down to 1/%s is accepted", ratio, number(b.Margin))
+	}
+	return fmt.Sprintf(", a %s up to %s is accepted", ratio, number(b.Margin))
+}
+
+func origin(b *Baseline) string {
+	var parts []string
+	if b.Version != "" {
+		parts = append(parts, "version "+b.Version)
+	}
+	if b.Source != "" {
+		parts = append(parts, "source: "+b.Source)
+	}
+	if len(parts) == 0 {
+		return " (neither version nor source given)"
+	}
+	return " (" + strings.Join(parts, "; ") + ")"
+}
+
+func (p *prose) late(in *Indicator) {
+	p.line("  A slot is looked at %s. Data may change it up to %s back: looks are then made again, and what is older is refused.",
+		afterEnd(in.Settle), elapsed(in.Horizon))
+	p.line("  Data further than %s in the future are refused.", elapsed(in.Ahead))
+	if in.KeepIDs {
+		p.line("  Observation ids are kept as long as data may change, so nothing is counted twice.")
+	} else {
+		p.line("  Observation ids are not kept: corrections can't be taken, and what is published twice is counted twice.")
+	}
+	if in.Expect > 0 {
+		p.line("  A series that is silent for more than %s is shown as silent.", elapsed(in.Expect))
+	}
+}
+
+func afterEnd(settle time.Duration) string {
+	if settle == 0 {
+		return "as soon as it has ended"
+	}
+	return elapsed(settle) + " after its end"
+}
+
+func (p *prose) memory(s *Setup) {
+	m := s.Memory()
+	p.line("")
+	for i, bytes := range m.Series {
+		p.line("Memory: a series of %s takes about %s.", s.Indicators[i].Name, FormatSize(bytes))
+	}
+	p.line("Memory in all: at most about %s, for %s series (%s) and %s ids (%s); the limit is %s.",
+		FormatSize(m.Total), grouped(int64(s.Limits.MaxSeries)), FormatSize(m.AllSeries),
+		grouped(int64(s.Limits.MaxIDs)), FormatSize(m.AllIDs), FormatSize(s.Limits.Memory))
+}
+
+// counted writes "1 look" or "7 looks".
+func counted(n int, noun string) string {
+	if n == 1 {
+		return "1 " + noun
+	}
+	return grouped(int64(n)) + " " + noun + "s"
+}
+
+// about writes a number with three figures.
+func about(f float64) string {
+	if f >= 1000 && f < 1e15 {
+		digits := math.Pow(10, math.Floor(math.Log10(f))-2)
+		return grouped(int64(math.Round(f/digits) * digits))
+	}
+	return strconv.FormatFloat(f, 'g', 3, 64)
+}
+
+// number writes a number as a person would who had typed it.
+func number(f float64) string {
+	if f < 1e-9 || f >= 1e15 {
+		return strconv.FormatFloat(f, 'g', 12, 64)
+	}
+	f, err := strconv.ParseFloat(strconv.FormatFloat(f, 'g', 12, 64), 64)
+	if err != nil {
+		return "" // can't be: the text was made from a number
+	}
+	return strconv.FormatFloat(f, 'f', -1, 64)
+}
+
+// elapsed writes an elapsed time in words.
+func elapsed(d time.Duration) string {
+	const day = 24 * time.Hour
+	switch {
+	case d > 0 && d%day == 0:
+		return counted(int(d/day), "day")
+	case d > 0 && d%time.Hour == 0:
+		return counted(int(d/time.Hour), "hour")
+	case d > 0 && d%time.Minute == 0:
+		return counted(int(d/time.Minute), "minute")
+	}
+	return counted(int(d/time.Second), "second")
+}
+
+// spanWords writes a length as it follows "every": "day", "3 months".
+func spanWords(e Every) string {
+	noun := map[Unit]string{Minute: "minute", Hour: "hour", Day: "day", Week: "week", Month: "month", Year: "year"}[e.Unit]
+	switch {
+	case e.N == 1:
+		return noun
+	case e.Unit == Minute && e.N%60 == 0:
+		return spanWords(Every{e.N / 60, Hour})
+	case e.Unit == Month && e.N%12 == 0:
+		return spanWords(Every{e.N / 12, Year})
+	}
+	return counted(e.N, noun)
+}

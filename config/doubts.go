@@ -1,0 +1,149 @@
+package config
+
+import (
+	"fmt"
+	"math"
+	"net"
+	"net/url"
+	"strconv"
+	"strings"
+)
+
+// maxComparisons bounds the pairs of patterns that Doubts compares.
+const maxComparisons = 1_000_000
+
+// Doubts returns what is allowed but probably not meant, each with its line
+// and how to mend it; file is the name that they give.
+func (s *Setup) Doubts(file string) []Fault {
+	d := doubts{collector{file: file}}
+	d.bus(&s.Bus)
+	for i := range s.Indicators {
+		d.indicator(&s.Indicators[i], i)
+	}
+	d.shared(s)
+	return d.faults
+}
+
+type doubts struct{ collector }
+
+func (d *doubts) at(in *Indicator, i int, key, problem, mend string) {
+	d.add(&node{line: in.Line, column: 1}, "indicator["+strconv.Itoa(i+1)+"]."+key, problem, mend)
+}
+
+func (d *doubts) bus(b *Bus) {
+	for one := range strings.SplitSeq(b.URL, ",") {
+		u, err := url.Parse(strings.TrimSpace(one))
+		if err != nil || u.Host == "" || u.Scheme == "tls" || u.Scheme == "wss" || b.CA != "" || b.Cert != "" {
+			continue
+		}
+		if ip := net.ParseIP(u.Hostname()); u.Hostname() != "localhost" && (ip == nil || !ip.IsLoopback()) {
+			d.add(nil, "bus.url", "is not on this machine and TLS is not asked for: counts may be read on their way", "write tls://, or name ca")
+			return
+		}
+	}
+}
+
+func (d *doubts) indicator(in *Indicator, i int) {
+	if in.Horizon < in.Every.shortest() {
+		d.at(in, i, "horizon", fmt.Sprintf("%s is shorter than a slot of %s: counts that come after their slot has ended may be refused",
+			FormatDuration(in.Horizon), in.Every), "make it longer than slot and settle together")
+	}
+	if in.Expect > 0 && in.Expect < in.Every.shortest() {
+		d.at(in, i, "expect", fmt.Sprintf("%s is shorter than a slot of %s: a series reported once a slot would be shown as silent",
+			FormatDuration(in.Expect), in.Every), "make it longer than a slot")
+	}
+	if chance := in.chanceSignals(); chance > 12 {
+		d.at(in, i, "p_limit", fmt.Sprintf("up to %s looks a year of every series would signal by chance", about(chance)),
+			"make p_limit smaller, or the steps of the windows longer")
+	}
+	d.silentLower(in, i)
+}
+
+// silentLower finds windows that are too short for the lower tail: not even no
+// event at all would be a signal. It can be told beforehand only if the
+// exposure comes from the clock.
+func (d *doubts) silentLower(in *Indicator, i int) {
+	if !in.Lower || in.Exposure != Clock {
+		return
+	}
+	size, err := strconv.ParseFloat(in.Clock.Size.String(), 64)
+	if err != nil {
+		return
+	}
+	for _, w := range in.Windows {
+		exposure := size * in.longest(&w) / in.Clock.Per.Hours()
+		for j := range in.Baselines {
+			p := in.Baselines[j].chanceOfNone(exposure)
+			if p > in.PLimit {
+				d.at(in, i, "windows", fmt.Sprintf("%s is too short for the lower tail: even no event in it has a chance of %.3g", w.Name, p),
+					"make the window longer, or watch the upper tail only")
+				break
+			}
+		}
+	}
+}
+
+// longest is the greatest number of hours that a window can take.
+func (in *Indicator) longest(w *Window) float64 {
+	n := float64(w.Slots * in.Every.N)
+	switch in.Every.Unit {
+	case Minute:
+		return n / 60
+	case Hour:
+		return n
+	case Day:
+		return n*24 + 1
+	case Week:
+		return n*24*7 + 1
+	case Month:
+		return n * 24 * 31
+	case Year:
+		return n * 24 * 366
+	}
+	return 0
+}
+
+// chanceOfNone is the p-value of no event in an exposure under a baseline of
+// a rate: exp(-mu), or for a reference the conditional test's (1-q)^M.
+func (b *Baseline) chanceOfNone(exposure float64) float64 {
+	switch b.Kind {
+	case Known:
+		return math.Exp(-b.Rate * exposure / b.Margin)
+	case Reference:
+		reference, err := strconv.ParseFloat(b.Exposure.String(), 64)
+		if err != nil {
+			return 0
+		}
+		return math.Exp(-float64(b.Events) * math.Log1p(exposure/b.Margin/reference))
+	}
+	return 0
+}
+
+// shared finds series that would belong to two indicators.
+func (d *doubts) shared(s *Setup) {
+	left := maxComparisons
+	for j := range s.Indicators {
+		for i := range s.Indicators[:j] {
+			left -= len(s.Indicators[i].Series) * len(s.Indicators[j].Series)
+			if left < 0 {
+				d.add(nil, "indicator", "there are too many patterns to compare each with each other", "see that no series belongs to two indicators")
+				return
+			}
+			d.sharedBy(&s.Indicators[i], &s.Indicators[j], j)
+		}
+	}
+}
+
+func (d *doubts) sharedBy(a, b *Indicator, j int) {
+	for _, p := range a.Series {
+		for _, q := range b.Series {
+			example, both := overlap(p, q)
+			if !both {
+				continue
+			}
+			d.at(b, j, "series", fmt.Sprintf("%q and %q of %s both match a series such as %s, whose observations would be refused as ambiguous",
+				q, p, a.Name, example), "make the patterns differ")
+			return
+		}
+	}
+}
