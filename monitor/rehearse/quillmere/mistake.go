@@ -10,8 +10,6 @@ import (
 // mistakes writes the errors that look like an excess until they are mended.
 func (a *author) mistakes() {
 	east, north, quay := sites[0], sites[1], sites[2]
-	a.misfiled(east, east.wards[3], "2024-07-15", "2024-08-09")
-	a.misfiled(quay, quay.wards[0], "2024-10-07", "2024-11-01")
 	a.practice(north, north.wards[3], "2025-02-10", "2025-03-07")
 	a.practice(east, east.wards[2], "2025-10-06", "2025-10-31")
 	a.mistyped(east, "ward-1", "line-infection", "2024-02-20", "2024-03-08", 12)
@@ -19,6 +17,9 @@ func (a *author) mistakes() {
 	a.mistyped(quay, "stroke-unit", "line-infection", "2025-09-16", "2025-10-02", 11)
 	a.mistyped(east, "theatre-b", "wound-infection", "2024-11-18", "2024-12-20", 24)
 	a.mistyped(quay, "theatre-e", "wound-infection", "2025-08-04", "2025-09-05", 26)
+	for i := range a.plan.misfilings {
+		a.plan.mistakes = append(a.plan.mistakes, a.plan.misfilings[i].mistake())
+	}
 	for i := range a.plan.units {
 		a.plan.mistakes = append(a.plan.mistakes, a.plan.units[i].mistake())
 	}
@@ -28,21 +29,40 @@ func (a *author) mistake(series string, d rehearse.Direction, from, to, mended t
 	a.plan.mistakes = append(a.plan.mistakes, rehearse.Mistake{Series: series, Direction: d, From: from, To: to, Mended: mended, What: what})
 }
 
-// misfiled enters other wards' falls under one ward for ten days; they are
-// moved by one message each.
-func (a *author) misfiled(s site, w ward, from, mended string) {
-	series := seriesOf(s.name, w.name, "fall")
-	start, end := a.when(from), a.when(mended)
-	for n := range 15 {
-		at := start.AddDate(0, 0, n*2/3).Add(time.Duration(9*60+37*n) * time.Minute)
-		e := rehearse.Element{
-			Series: series, ID: fmt.Sprintf("fall-%s-m%s-%02d", w.name, compact(start), n), Revision: 1,
-			Start: at, End: at, Events: 1, HasEvents: true,
-		}
-		y, m, d := at.Date()
-		a.sendThenRevise(s, e, time.Date(y, m, d+1, 0, 0, 0, 0, a.zone), end, moveTo(s, w, n%(len(s.wards)-1)))
+// misfiling is a time in which all falls of a site were entered under one
+// ward; they are moved by one message each.
+type misfiling struct {
+	site, ward       string
+	from, to, mended time.Time
+}
+
+// misfilings are known before the wards are written, since they concern what
+// the wards send in any case.
+func (a *author) misfilings() []misfiling {
+	return []misfiling{
+		{"quillmere-east", "intensive-care", a.when("2024-07-15"), a.when("2024-08-19"), a.when("2024-08-30")},
+		{"quillmere-quay", "ward-8", a.when("2025-09-08"), a.when("2025-10-13"), a.when("2025-10-24")},
 	}
-	a.mistake(series, rehearse.Upper, start, start.AddDate(0, 0, 10), end, "falls of other wards entered under this one, moved later")
+}
+
+// misfiling returns the one that holds a ward's fall, or nil.
+func (p *plan) misfiling(site, ward string, t time.Time) *misfiling {
+	for i := range p.misfilings {
+		m := &p.misfilings[i]
+		if m.site == site && m.ward != ward && !t.Before(m.from) && t.Before(m.to) {
+			return m
+		}
+	}
+	return nil
+}
+
+func (m *misfiling) series() string { return seriesOf(m.site, m.ward, "fall") }
+
+func (m *misfiling) mistake() rehearse.Mistake {
+	return rehearse.Mistake{
+		Series: m.series(), Direction: rehearse.Upper, From: m.from, To: m.to, Mended: m.mended,
+		What: "falls of other wards entered under this one, moved later",
+	}
 }
 
 // practice enters falls that never were, in the live form; they are retracted.

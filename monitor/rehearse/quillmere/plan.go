@@ -11,7 +11,9 @@ type plan struct {
 	excesses []rehearse.Excess
 	mistakes []rehearse.Mistake
 	outages  []outage
-	units    []unitError
+	// What is mistaken in what the wards send in any case.
+	units      []unitError
+	misfilings []misfiling
 }
 
 // outage is a time in which one side of a series was not reported.
@@ -50,7 +52,7 @@ func (a *author) when(text string) time.Time {
 }
 
 func (a *author) newPlan() plan {
-	p := plan{units: a.unitErrors()}
+	p := plan{units: a.unitErrors(), misfilings: a.misfilings()}
 	for _, x := range []struct {
 		series   string
 		from, to string

@@ -26,11 +26,13 @@ func (a *author) garbled(s site, w ward, n int) {
 	start, end := a.date(n-1), a.date(n)
 	line := seriesOf(s.name, w.name, "line-infection")
 	interval := fmt.Sprintf(`"start":%q,"end":%q`, start.Format(time.RFC3339), end.Format(time.RFC3339))
+	const alone = 5 // of them can't stand beside others in a message
 	for i, x := range []struct{ raw, fault string }{
 		{"ward sheet, page 2 of 3", "not_json"},
 		{`{"id":"li-cut-off","series":"` + line + `","events":1,`, "not_json"},
-		{"\xff\xfe\x00s\x00h\x00e\x00e\x00t", "not_utf8"},
+		{"\xff\xfes\x00h\x00e\x00e\x00t\x00", "not_json"},
 		{`17`, "not_object"},
+		{"{\"series\":%S,%I,\"events\":1,\"id\":\"li-n\xe4chtlich\",\"reported\":%R}", "not_utf8"},
 		{`{"series":%S,%I,"events":1,"round":"night","reported":%R}`, "unknown_field"},
 		{`{"series":%S,%I,"events":1,"events":2,"reported":%R}`, "duplicate_field"},
 		{`{"series":%S,"start":"2024-13-02T00:00:00+01:00","end":"2024-13-03T00:00:00+01:00","events":1,"reported":%R}`, "bad_time"},
@@ -47,7 +49,7 @@ func (a *author) garbled(s site, w ward, n int) {
 		raw := strings.NewReplacer("%S", `"`+line+`"`, "%I", interval, "%R", quoted(sent)).Replace(x.raw)
 		a.pub.Send(rehearse.Element{
 			Series: line, Raw: []byte(raw), Fault: x.fault, Reported: sent, Sent: sent,
-			Alone: i < 4, Meant: rehearse.Refused,
+			Alone: i < alone, Meant: rehearse.Refused,
 		})
 	}
 }

@@ -80,6 +80,12 @@ func (a *author) fall(r *rand.Rand, s site, w ward, at time.Time, id string) {
 	}
 	y, m, d := at.Date()
 	morning := time.Date(y, m, d+1, 0, 0, 0, 0, a.zone)
+	if m := a.plan.misfiling(s.name, w.name, at); m != nil {
+		right := e.Series
+		e.Series = m.series()
+		a.sendThenRevise(s, e, morning, m.mended, func(e *rehearse.Element) { e.Series = right })
+		return
+	}
 	switch u := r.IntN(100); {
 	case u < 2:
 		a.sendThenRevise(s, e, morning, a.later(r, morning), moveTo(s, w, r.IntN(len(s.wards)-1)))
