@@ -1,0 +1,215 @@
+// Package partition runs one partition: messages in, transactions out.
+//
+// A Loop has three stages that overlap: one pulls and decodes batches, one
+// applies them to the engine, one commits what came of them to the store. At
+// most one batch waits between any two. The size of a commit follows the load:
+// a single message when the stream is idle, thousands when it is behind.
+// Batches are only units of commit; they change no result.
+//
+// The engine belongs to the applying stage alone; Do lets others look at it
+// between batches. Nothing leaves the process before it is committed: the
+// outlets read the store.
+package partition
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"sync"
+
+	"tailbell/monitor"
+	"tailbell/monitor/life"
+	"tailbell/monitor/store"
+)
+
+// Batch is a run of messages of the stream, in order, with the mark of the
+// last one.
+type Batch struct {
+	Messages []monitor.Message
+	Mark     store.Mark
+}
+
+// Source gives the messages of one partition after the stored position.
+type Source interface {
+	// Next waits until there is at least one message, then returns what is
+	// there, at most limit.
+	Next(ctx context.Context, limit int) (Batch, error)
+}
+
+// Options adjust a Loop.
+type Options struct {
+	// MaxBatch is the largest number of messages in a commit; 0 means 5000.
+	MaxBatch int
+	// Committed, if not nil, is called after every commit.
+	Committed func(position uint64)
+	// Full, if not nil, is called when the store has no room; it returns when
+	// the commit is to be tried again, or with an error to give up.
+	Full func(ctx context.Context, err error) error
+}
+
+// Loop runs one partition.
+type Loop struct {
+	engine *monitor.Engine
+	store  *store.Store
+	source Source
+	opts   Options
+
+	batches chan Batch
+	commits chan commit
+	free    chan struct{} // the committing stage takes another one
+	asks    chan func(*monitor.Engine)
+}
+
+type commit struct {
+	changes monitor.Changes
+	mark    store.Mark
+}
+
+// New returns the loop of an engine that stands where the store does.
+func New(engine *monitor.Engine, st *store.Store, source Source, opts Options) *Loop {
+	if opts.MaxBatch == 0 {
+		opts.MaxBatch = 5000
+	}
+	return &Loop{
+		engine: engine, store: st, source: source, opts: opts,
+		batches: make(chan Batch, 1), commits: make(chan commit), free: make(chan struct{}, 1),
+		asks: make(chan func(*monitor.Engine)),
+	}
+}
+
+// Recover returns the engine that goes on from what the store holds.
+func Recover(st *store.Store) (*monitor.Engine, error) {
+	snap, err := st.Snapshot()
+	if err != nil {
+		return nil, err
+	}
+	id := st.Identity()
+	p := monitor.Partition{Number: id.Partition, Of: id.Partitions, KeyParts: id.KeyParts}
+	return monitor.Restore(p, &snap, func(id string) (life.Record, error) {
+		row, err := st.Alert(id)
+		return row.Record, err
+	})
+}
+
+// Run runs the stages until ctx ends or one of them fails. When ctx ends, what
+// was applied is still committed, and Run returns nil.
+func (l *Loop) Run(ctx context.Context) error {
+	run, stop := context.WithCancelCause(ctx)
+	defer stop(nil)
+	var stages sync.WaitGroup
+	stages.Go(func() {
+		if err := l.pull(run); err != nil {
+			stop(fmt.Errorf("partition: reading: %w", err))
+		}
+	})
+	stages.Go(func() {
+		if err := l.commit(context.WithoutCancel(ctx)); err != nil {
+			stop(fmt.Errorf("partition: committing: %w", err))
+		}
+	})
+	l.apply(run)
+	close(l.commits)
+	stages.Wait()
+	if ctx.Err() != nil && errors.Is(context.Cause(run), context.Cause(ctx)) {
+		return nil
+	}
+	return context.Cause(run)
+}
+
+// Do runs look on the engine between batches, or returns ctx's error.
+func (l *Loop) Do(ctx context.Context, look func(*monitor.Engine)) error {
+	done := make(chan struct{})
+	ask := func(e *monitor.Engine) { defer close(done); look(e) }
+	select {
+	case l.asks <- ask:
+		<-done
+		return nil
+	case <-ctx.Done():
+		return ctx.Err()
+	}
+}
+
+func (l *Loop) pull(ctx context.Context) error {
+	for {
+		b, err := l.source.Next(ctx, l.opts.MaxBatch)
+		if err != nil {
+			if ctx.Err() != nil {
+				return nil
+			}
+			return err
+		}
+		select {
+		case l.batches <- b:
+		case <-ctx.Done():
+			return nil
+		}
+	}
+}
+
+// apply feeds the engine, and the committing stage whenever it is free.
+func (l *Loop) apply(ctx context.Context) {
+	waiting := 0 // messages applied, but not yet handed on
+	committer := l.free
+	var mark store.Mark
+	handOn := func() {
+		l.commits <- commit{l.engine.Drain(), mark}
+		waiting = 0
+	}
+	for {
+		batches, free := l.batches, committer
+		if waiting >= l.opts.MaxBatch {
+			batches = nil
+		}
+		if waiting == 0 {
+			free = nil
+		}
+		select {
+		case _, open := <-free:
+			if !open {
+				committer = nil // it failed; ctx is about to end
+				continue
+			}
+			handOn()
+		case b := <-batches:
+			for i := range b.Messages {
+				l.engine.Apply(&b.Messages[i])
+			}
+			waiting += len(b.Messages)
+			mark = b.Mark
+		case look := <-l.asks:
+			look(l.engine)
+		case <-ctx.Done():
+			if _, open := <-l.free; open && waiting > 0 {
+				handOn()
+			}
+			return
+		}
+	}
+}
+
+func (l *Loop) commit(ctx context.Context) error {
+	defer close(l.free)
+	l.free <- struct{}{}
+	for c := range l.commits {
+		if err := l.write(ctx, c); err != nil {
+			return err
+		}
+		if l.opts.Committed != nil {
+			l.opts.Committed(c.changes.Position)
+		}
+		l.free <- struct{}{}
+	}
+	return nil
+}
+
+func (l *Loop) write(ctx context.Context, c commit) error {
+	for {
+		err := l.store.Commit(c.changes, c.mark)
+		if err == nil || !errors.Is(err, store.ErrFull) || l.opts.Full == nil {
+			return err
+		}
+		if err := l.opts.Full(ctx, err); err != nil {
+			return err
+		}
+	}
+}
