@@ -43,7 +43,7 @@ func (s section) readServed(in *Indicator, earlier []Baseline, last bool) Patter
 	case !last && p == all:
 		s.fault("series", "this baseline serves every series, so those after it are never used",
 			"say which series it serves, or put it last")
-	case slices.ContainsFunc(earlier, func(b Baseline) bool { return b.Series == p }):
+	case p != all && slices.ContainsFunc(earlier, func(b Baseline) bool { return b.Series == p }):
 		s.fault("series", fmt.Sprintf("%q has a baseline already, and the first is used", n.text), "keep one")
 	case p != all && !slices.ContainsFunc(in.Series, func(q Pattern) bool { _, both := overlap(p, q); return both }):
 		s.fault("series", fmt.Sprintf("%q matches no series of this indicator", n.text), "compare it with the indicator's own patterns")

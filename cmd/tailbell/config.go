@@ -1,0 +1,114 @@
+package main
+
+import (
+	"errors"
+	"fmt"
+	"tailbell/config"
+	"tailbell/ingest/wire"
+
+	"github.com/spf13/cobra"
+)
+
+// newConfigCommand returns "tailbell config": what can be said of a set-up
+// without running it.
+func newConfigCommand() *cobra.Command {
+	c := &cobra.Command{
+		Use:   "config",
+		Short: "Print a sample set-up, check one, or print the schema of the data",
+		Args:  cobra.NoArgs,
+		RunE:  func(c *cobra.Command, _ []string) error { return c.Help() },
+	}
+	c.AddCommand(newConfigSampleCommand(), newConfigCheckCommand(), newConfigSchemaCommand())
+	return c
+}
+
+func newConfigSampleCommand() *cobra.Command {
+	return &cobra.Command{
+		Use:   "sample",
+		Short: "Print a commented set-up to begin with",
+		Args:  cobra.NoArgs,
+		RunE: func(c *cobra.Command, _ []string) error {
+			_, err := c.OutOrStdout().Write(config.Sample())
+			return err
+		},
+	}
+}
+
+func newConfigSchemaCommand() *cobra.Command {
+	return &cobra.Command{
+		Use:   "schema",
+		Short: "Print the JSON Schema of an observation",
+		Args:  cobra.NoArgs,
+		RunE: func(c *cobra.Command, _ []string) error {
+			_, err := c.OutOrStdout().Write(wire.Schema())
+			return err
+		},
+	}
+}
+
+func newConfigCheckCommand() *cobra.Command {
+	var against string
+	c := &cobra.Command{
+		Use:   "check FILE",
+		Short: "Say in plain sentences what a set-up would monitor, or everything that is wrong with it",
+		Long: `Says in plain sentences what the set-up in FILE would monitor, how often it
+would look, what it may cost in memory, and what in it is probably not meant.
+If anything is wrong, every fault is printed with its line, and the command
+fails. With --against OLD it also says what would change from the set-up OLD.`,
+		Args: cobra.ExactArgs(1),
+		RunE: func(c *cobra.Command, args []string) error { return checkConfig(c, args[0], against) },
+	}
+	c.Flags().StringVar(&against, "against", "", "also say what changes from the set-up in this file")
+	return c
+}
+
+func checkConfig(c *cobra.Command, file, against string) error {
+	setup, err := loadSetup(file)
+	if err != nil {
+		return err
+	}
+	if err := setup.Describe(c.OutOrStdout()); err != nil {
+		return err
+	}
+	if against != "" {
+		old, err := loadSetup(against)
+		if err != nil {
+			return err
+		}
+		if err := printChanges(c, config.Compare(old, setup)); err != nil {
+			return err
+		}
+	}
+	for _, d := range setup.Doubts(file) {
+		if _, err := fmt.Fprintf(c.ErrOrStderr(), "doubtful: %s\n", d); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+// loadSetup loads a set-up and heads its faults with their number.
+func loadSetup(file string) (*config.Setup, error) {
+	setup, err := config.Load(file)
+	var faults config.Faults
+	if errors.As(err, &faults) {
+		noun := "faults"
+		if len(faults) == 1 {
+			noun = "fault"
+		}
+		return nil, fmt.Errorf("%d %s in the set-up:\n%w", len(faults), noun, err)
+	}
+	return setup, err
+}
+
+func printChanges(c *cobra.Command, changes []config.Change) error {
+	text := "\nNothing changes.\n"
+	if len(changes) > 0 {
+		text = "\nWhat changes, and when it is in force:\n"
+	}
+	for _, ch := range changes {
+		text += "  " + ch.String() + "\n"
+	}
+	_, err := c.OutOrStdout().Write([]byte(text))
+	return err
+}
