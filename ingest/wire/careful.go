@@ -29,32 +29,48 @@ func (d *Decoder) Observation(data []byte) monitor.Item {
 			return item
 		}
 	}
-	return d.careful(data)
+	d.careful(data, &item)
+	return item
 }
 
 // careful decodes one element, however it is written, and says what is wrong.
-func (d *Decoder) careful(data []byte) monitor.Item {
-	if len(data) > d.limits.ElementBytes {
-		return refuse(monitor.TooLarge, "the element has %d bytes, the limit is %d; an observation needs a few hundred",
-			len(data), d.limits.ElementBytes).item(data)
-	}
-	if f := checkSyntax(data, d.limits.Depth); f != nil {
-		return f.item(data)
-	}
-	if data[skipSpace(data, 0)] != '{' {
-		return refuse(monitor.NotObject, "the element is %s; an observation is a JSON object", nameOf(data)).item(data)
-	}
-	var w draft
-	members := fields(data)
-	for _, field := range members {
-		if f := w.read(field); f != nil {
-			return f.itemOf(seriesOf(members), data)
+// It overwrites the whole item.
+func (d *Decoder) careful(data []byte, item *monitor.Item) {
+	*item = monitor.Item{}
+	members, f := d.members(data)
+	if f == nil {
+		w := draft{o: &item.Observation}
+		if f = w.readAll(members); f == nil {
+			item.Raw = data[:len(data):len(data)]
+			return
 		}
 	}
-	if f := w.finish(); f != nil {
-		return f.itemOf(seriesOf(members), data)
+	*item = f.item(data)
+	item.Observation.Series = seriesOf(members)
+}
+
+// members checks an element's size and syntax, and returns its fields.
+func (d *Decoder) members(data []byte) ([]field, *fault) {
+	if len(data) > d.limits.ElementBytes {
+		return nil, refuse(monitor.TooLarge, "the element has %d bytes, the limit is %d; an observation needs a few hundred",
+			len(data), d.limits.ElementBytes)
 	}
-	return monitor.Item{Observation: w.o, Raw: data[:len(data):len(data)]}
+	if f := checkSyntax(data, d.limits.Depth); f != nil {
+		return nil, f
+	}
+	if data[skipSpace(data, 0)] != '{' {
+		return nil, refuse(monitor.NotObject, "the element is %s; an observation is a JSON object", nameOf(data))
+	}
+	return fields(data), nil
+}
+
+func (w *draft) readAll(members []field) *fault {
+	for _, field := range members {
+		if f := w.read(field); f != nil {
+			return f
+		}
+	}
+	return w.finish()
 }
 
 // seriesOf returns the series of a refused observation, if it has a valid one.

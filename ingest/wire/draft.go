@@ -51,7 +51,7 @@ func memberOf(name []byte) member {
 
 // draft is an observation while its fields are read.
 type draft struct {
-	o    monitor.Observation
+	o    *monitor.Observation
 	seen member
 	// at is the field of this name; start and end go to o.
 	at monitor.Instant

@@ -28,13 +28,6 @@ func (f *fault) item(raw []byte) monitor.Item {
 	return monitor.Item{Reason: f.reason, Detail: f.detail, Raw: kept}
 }
 
-// itemOf returns the refusal of these bytes, which were meant for a series.
-func (f *fault) itemOf(series string, raw []byte) monitor.Item {
-	item := f.item(raw)
-	item.Observation.Series = series
-	return item
-}
-
 // clip shortens what is quoted in a detail.
 func clip[T string | []byte](text T) string {
 	const most = 48

@@ -9,9 +9,10 @@ import (
 
 // quick reads the observation at i if it is valid and plainly written: no
 // escapes, series and id in ASCII, numbers without exponent. It returns the
-// position after it, or -1 for anything else, which careful must judge.
+// position after it; or -1 for anything else, which careful must judge, and
+// then o is left half filled.
 func quick(data []byte, i int, o *monitor.Observation) int {
-	var w draft
+	w := draft{o: o}
 	if i >= len(data) || data[i] != '{' {
 		return -1
 	}
@@ -41,7 +42,6 @@ func quick(data []byte, i int, o *monitor.Observation) int {
 	if w.finish() != nil {
 		return -1
 	}
-	*o = w.o
 	return i + 1
 }
 
@@ -53,12 +53,12 @@ func quickName(data []byte, i int) (m member, value int) {
 		return 0, -1
 	}
 	i++
-	n := bytes.IndexByte(data[i:], '"')
-	if n < 0 {
-		return 0, -1
+	first := i
+	for i < len(data) && data[i] != '"' {
+		i++
 	}
-	m = memberOf(data[i : i+n])
-	i = skipSpace(data, i+n+1)
+	m = memberOf(data[first:i])
+	i = skipSpace(data, i+1)
 	if m == 0 || i >= len(data) || data[i] != ':' {
 		return 0, -1
 	}

@@ -33,7 +33,7 @@ func (d *Decoder) split(p payload) ([]monitor.Item, *fault) {
 	case p.lines:
 		return d.lines(p.data, i)
 	}
-	return append(d.room(1, 1), d.Observation(trim(p.data[i:]))), nil
+	return append(d.room(nil), d.Observation(trim(p.data[i:]))), nil
 }
 
 // array decodes the elements of the array that begins before i.
@@ -44,17 +44,17 @@ func (d *Decoder) array(data []byte, i int) ([]monitor.Item, *fault) {
 		if first && i < len(data) && data[i] == ']' {
 			break
 		}
-		item, end, f := d.element(data, i)
-		if f != nil {
-			return nil, f
-		}
 		if items == nil {
-			items = d.room(len(data)-i, end-i+1)
+			items = d.room(data[i:])
 		}
 		if len(items) == d.limits.Observations {
 			return nil, d.tooMany()
 		}
-		items = append(items, item)
+		items = append(items, monitor.Item{})
+		end, f := d.element(data, i, &items[len(items)-1])
+		if f != nil {
+			return nil, f
+		}
 		i = end
 		if data[i] == ']' {
 			break
@@ -69,22 +69,24 @@ func (d *Decoder) array(data []byte, i int) ([]monitor.Item, *fault) {
 
 // element decodes the element of an array at i, and returns the position of
 // the comma or bracket after it.
-func (d *Decoder) element(data []byte, i int) (item monitor.Item, end int, f *fault) {
+func (d *Decoder) element(data []byte, i int, item *monitor.Item) (end int, f *fault) {
 	if end = quick(data, i, &item.Observation); end >= 0 && end-i <= d.limits.ElementBytes {
 		if next := skipSpace(data, end); next < len(data) && (data[next] == ',' || data[next] == ']') {
 			item.Raw = data[i:end:end]
-			return item, next, nil
+			return next, nil
 		}
 	}
 	end, f = elementEnd(data, i, ']')
 	if f != nil {
-		return item, 0, f
+		return 0, f
 	}
 	raw := trim(data[i:end])
 	if len(raw) == 0 {
-		return refuse(monitor.NotJSON, "there is nothing between two commas or before the closing bracket; leave the comma out").item(raw), end, nil
+		*item = refuse(monitor.NotJSON, "there is nothing between two commas or before the closing bracket; leave the comma out").item(raw)
+		return end, nil
 	}
-	return d.careful(raw), end, nil
+	d.careful(raw, item)
+	return end, nil
 }
 
 // elementEnd returns the position of the comma or the closing bracket that
@@ -124,28 +126,28 @@ func elementEnd(data []byte, i int, closing byte) (int, *fault) {
 func (d *Decoder) lines(data []byte, i int) ([]monitor.Item, *fault) {
 	items := []monitor.Item(nil)
 	for i < len(data) {
-		item, end := d.line(data, i)
 		if items == nil {
-			items = d.room(len(data)-i, end-i)
+			items = d.room(data[i:])
 		}
 		if len(items) == d.limits.Observations {
 			return nil, d.tooMany()
 		}
-		items = append(items, item)
-		i = skipSpace(data, end)
+		items = append(items, monitor.Item{})
+		i = skipSpace(data, d.line(data, i, &items[len(items)-1]))
 	}
 	return items, nil
 }
 
 // line decodes the element that begins at i, and returns the position after
 // it.
-func (d *Decoder) line(data []byte, i int) (item monitor.Item, end int) {
+func (d *Decoder) line(data []byte, i int, item *monitor.Item) (end int) {
 	if end = quick(data, i, &item.Observation); end >= 0 && end-i <= d.limits.ElementBytes && endsLine(data, end) {
 		item.Raw = data[i:end:end]
-		return item, end
+		return end
 	}
 	end = d.lineElementEnd(data, i)
-	return d.careful(trim(data[i:end])), end
+	d.careful(trim(data[i:end]), item)
+	return end
 }
 
 // endsLine reports whether nothing follows on the line of i.
@@ -205,12 +207,11 @@ func (d *Decoder) tooMany() *fault {
 	return refuse(monitor.TooMany, "the message holds more than %d observations; send it in parts", d.limits.Observations)
 }
 
-// room returns an empty list with room for the items of a message, judged by
-// the size of the first.
-func (d *Decoder) room(bytesInAll, bytesOfFirst int) []monitor.Item {
+// room returns an empty list for the items of a message, with room for about
+// as many as it has closing brackets, or for one from the stock.
+func (d *Decoder) room(data []byte) []monitor.Item {
 	const stock = 32
-	n := min(bytesInAll/max(bytesOfFirst, 1)+1, d.limits.Observations)
-	if bytesInAll-bytesOfFirst > bytesOfFirst/2 {
+	if n := min(bytes.Count(data, []byte{'}'}), d.limits.Observations); n > 1 {
 		return make([]monitor.Item, 0, n)
 	}
 	if len(d.spare) == 0 {
