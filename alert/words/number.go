@@ -106,7 +106,7 @@ func scientific(log10x float64) string {
 // digits; past a trillion it only says so.
 func odds(log10p float64) string {
 	if log10p < -12 {
-		return "fewer than 1 of a trillion"
+		return "less than 1 of a trillion"
 	}
 	n := roundTo(math.Pow(10, -log10p), 2)
 	switch {

@@ -31,7 +31,7 @@ func Record(r *life.Record, width int) string {
 	if r.Opening.Recompute != "" {
 		b.WriteString("  the same numbers again\n    " + clean(r.Opening.Recompute) + "\n")
 	}
-	b.WriteString(wrap(Caution, width, "  "))
+	b.WriteString(wrap(caution(r), width, "  "))
 	b.WriteByte('\n')
 	return b.String()
 }
@@ -82,7 +82,11 @@ func history(s *life.Step, r *life.Record, zone *time.Location) string {
 	if s.By != "" {
 		text += " by " + clean(s.By)
 	}
-	if s.Why != "" {
+	switch {
+	case s.Why == "":
+	case s.By == "":
+		text += ": " + clean(s.Why)
+	default:
 		text += ": \u201c" + clean(s.Why) + "\u201d"
 	}
 	if e := s.Evidence; e != nil {

@@ -64,6 +64,12 @@ func lateShare(e *life.Evidence) string {
 
 func expected(e *life.Evidence) string { return number(e.Expected) }
 
+// brief gives the numbers of a look in one short phrase.
+func brief(e *life.Evidence, zone *time.Location) string {
+	return counted(e) + " in the " + span(e, zone) + " (" + exposure(e) + "), about " + expected(e) +
+		" usual, p = " + pvalue(log10p(e))
+}
+
 // chance says how often so many, or so few, are seen while the usual rate
 // holds. It reads the logarithm, so that the smallest p is told truly.
 func chance(e *life.Evidence, d life.Direction) string {
@@ -76,23 +82,23 @@ func chance(e *life.Evidence, d life.Direction) string {
 	default:
 		such = whole(e.Events) + " or fewer"
 	}
-	return fmt.Sprintf("If %s held, %s would be seen in %s such windows (p = %s).",
+	return fmt.Sprintf("If %s, %s would be seen in %s such windows (p = %s).",
 		hypothesis(e, d), such, odds(log10p(e)), pvalue(log10p(e)))
 }
 
 func hypothesis(e *life.Evidence, d life.Direction) string {
-	usual := "the usual " + measure(e)
 	m := e.Baseline.Margin
 	if m == 0 || m == 1 {
-		return usual
+		return "the usual " + measure(e) + " held"
 	}
 	if d == life.Lower {
 		m = 1 / m
 	}
-	if e.RatioKind != "" && strings.Contains(e.RatioKind, "odds") {
-		return "the odds were " + significant(m) + " times the usual ones, the margin that is accepted, and"
+	what := measure(e) + " was"
+	if strings.Contains(e.RatioKind, "odds") {
+		what = "odds were"
 	}
-	return significant(m) + " times " + usual + ", the margin that is accepted,"
+	return "the " + what + " " + significant(m) + " times the usual (the margin that is accepted)"
 }
 
 // measure is "rate" or "proportion", as the record names it.
@@ -145,7 +151,18 @@ func per(e *life.Evidence) string {
 	case e.Per == 0 || e.Per == 1:
 		return " per " + singular(unit)
 	}
-	return " per " + grouped(trimFloat(e.Per)) + " " + unit
+	return " per " + multiple(e.Per) + " " + unit
+}
+
+// multiple writes the number of units for which a rate is given.
+func multiple(per float64) string {
+	switch per {
+	case 1e6:
+		return "million"
+	case 1e9:
+		return "billion"
+	}
+	return grouped(trimFloat(per))
 }
 
 // short is what follows a second rate in the same sentence.

@@ -40,7 +40,7 @@ import (
 	"tailbell/monitor/life"
 )
 
-// Caution stands on every opened alert.
+// Caution stands on every opened alert whose record brings none of its own.
 const Caution = "A signal is a statistical finding, not a diagnosis and not a cause; " +
 	"silence is no proof of safety; local policy decides."
 
@@ -56,6 +56,27 @@ func Notice(n *life.Notice, width int) string {
 	}
 	b.WriteByte('\n')
 	return b.String()
+}
+
+// Line returns one step of an alert on one line, for lists and for steps of
+// little weight: heading, place, and the numbers in short.
+func Line(n *life.Notice) string {
+	r := &n.Record
+	zone := zoneOf(r)
+	text := Heading(n) + "  " + place(r)
+	switch n.Step.Kind {
+	case life.StepOpened, life.StepWorsened, life.StepCorrected:
+		return text + ": " + brief(evidenceOf(&n.Step, &r.Opening), zone)
+	case life.StepAcknowledged, life.StepNote, life.StepClosed, life.StepReturned, life.StepWithdrawn:
+	}
+	text += ", " + noun(&r.Opening)
+	if n.Step.By != "" {
+		text += ", by " + clean(n.Step.By)
+	}
+	if n.Step.Why != "" {
+		text += ": " + clean(n.Step.Why)
+	}
+	return text
 }
 
 // Heading returns one line: when, what happened, in which direction, and to
@@ -79,12 +100,10 @@ func Paragraphs(n *life.Notice) []string {
 			Sentence(r, evidenceOf(&n.Step, &r.Worst)),
 			"The evidence has grown since the alert was opened on "+day(r.Opened.In(zone))+"."+afterwards(r, zone))
 	case life.StepCorrected:
-		return nonEmpty(
-			"Data that came late or were corrected changed the evidence of the alert opened on "+day(r.Opened.In(zone))+".",
-			Sentence(r, evidenceOf(&n.Step, &r.Opening)))
+		return nonEmpty(corrected(n, zone))
 	case life.StepReturned:
 		return nonEmpty(subject(r)+": no window signals any more ("+story(r, zone)+")."+afterwards(r, zone)+" "+
-			standing(n.Step.Condition), reasonOf(&n.Step))
+			standing(r)+" A return is no proof that the cause is gone.", reasonOf(&n.Step))
 	case life.StepWithdrawn:
 		return nonEmpty(subject(r) + ": withdrawn: data corrected. With the data as they now stand the look due on " +
 			moment(r.Opened.In(zone)) + " gives no signal. This is not a return to usual: with right data it would not have rung.")
@@ -101,7 +120,7 @@ func opened(n *life.Notice, zone *time.Location) []string {
 	if r.Late {
 		late = "Opened late: the look was due on " + moment(e.Due.In(zone)) + "; data that came afterwards made it signal."
 	}
-	return nonEmpty(Sentence(r, e), late, basis(e), Caution)
+	return nonEmpty(Sentence(r, e), late, basis(e), caution(r))
 }
 
 func acted(n *life.Notice, zone *time.Location) string {
@@ -117,7 +136,7 @@ func acted(n *life.Notice, zone *time.Location) string {
 	case life.StepClosed:
 		verb = "closed" + by
 		if by == "" {
-			verb = "closed: returned and acknowledged"
+			verb = "closed: " + clean(s.Why)
 		}
 	case life.StepNote:
 		verb = "note" + by
@@ -125,7 +144,7 @@ func acted(n *life.Notice, zone *time.Location) string {
 		verb = string(s.Kind)
 	}
 	text := subject(r) + ": " + verb
-	if s.Why != "" {
+	if s.Why != "" && s.By != "" {
 		text += ": \u201c" + clean(s.Why) + "\u201d"
 	}
 	text = stop(text) + " (" + capital(story(r, zone)) + ".)"
@@ -142,16 +161,27 @@ func story(r *life.Record, zone *time.Location) string {
 		"; about " + expected(e) + " would be usual"
 }
 
-func standing(c life.Condition) string {
-	switch c {
-	case life.Returned:
-		return "Nobody has acknowledged it yet. A return is no proof that the cause is gone."
-	case life.Closed:
-		return "It was acknowledged before and is now closed. A return is no proof that the cause is gone."
-	case life.Unacknowledged, life.Acknowledged, life.Withdrawn:
-		return ""
+func corrected(n *life.Notice, zone *time.Location) string {
+	r := &n.Record
+	text := subject(r) + ": data that came late or were corrected changed the evidence. At the opening it is now " +
+		brief(&r.Opening, zone) + "."
+	if r.Worst.Due.Equal(r.Opening.Due) && r.Worst.Window == r.Opening.Window {
+		return text
 	}
-	return ""
+	return text + " At its strongest it is " + brief(&r.Worst, zone) + "."
+}
+
+// standing says whether somebody has acknowledged an alert that has returned.
+func standing(r *life.Record) string {
+	for i := range r.Steps {
+		if s := &r.Steps[i]; s.Kind == life.StepAcknowledged {
+			if s.By != "" {
+				return "It was acknowledged by " + clean(s.By) + " before."
+			}
+			return "It was acknowledged before."
+		}
+	}
+	return "Nobody has acknowledged it yet."
 }
 
 func reasonOf(s *life.Step) string {
@@ -195,6 +225,14 @@ func arrow(d life.Direction) string {
 		return "\u25bc fewer than usual"
 	}
 	return clean(string(d))
+}
+
+// caution is the record's own, which is the one that was in force.
+func caution(r *life.Record) string {
+	if r.Caution != "" {
+		return clean(r.Caution)
+	}
+	return Caution
 }
 
 func evidenceOf(s *life.Step, otherwise *life.Evidence) *life.Evidence {

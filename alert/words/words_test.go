@@ -47,7 +47,7 @@ func ward(t *testing.T) life.Record {
 			Rate: 6.4935, RateLower: 1.7693, RateUpper: 16.6260, RatioKind: "rate ratio", Ratio: ptr(3.6075), RatioLower: 0.98293, RatioUpper: ptr(9.2367),
 			Alpha: 0.05, Chosen: true, Test: "exact Poisson", P: 0.026420, Log10P: math.Log10(0.026420), Critical: 4, AttainedSize: 0.02642, Limit: 0.03,
 			Baseline:  life.Baseline{Kind: "known", Rate: 1.8, Margin: 1, Version: "2025", Source: "surveillance report 2025"},
-			Recompute: "tailbell exact rate 4 616 --usual 0.0018",
+			Recompute: "tailbell exact --events 4 --exposure 616 --baseline 1.8 --per 1000 --alpha 0.05 --limit 0.03",
 		},
 		IDs: []string{"lab-0117", "lab-0131"}, MoreIDs: 2, Caution: Caution,
 	}
@@ -91,8 +91,11 @@ func wardLife(t *testing.T) []life.Notice {
 	n = step(&r, 5, life.StepNote, at(t, zone, "2026-03-24 08:05"), life.Acknowledged)
 	n.Step.By, n.Step.Why = "B. Ostrander", "Two of the five share a line set\x1b[2J; sent to the lab."
 	notices = append(notices, n)
-	notices = append(notices, step(&r, 6, life.StepReturned, at(t, zone, "2026-05-02 00:00"), life.Closed))
+	r.Steps[3].By, r.Steps[4].By, r.Steps[4].Why = "B. Ostrander", "B. Ostrander", n.Step.Why
+	notices = append(notices, step(&r, 6, life.StepReturned, at(t, zone, "2026-05-02 00:00"), life.Returned))
 	n = step(&r, 7, life.StepClosed, at(t, zone, "2026-05-02 00:00"), life.Closed)
+	n.Step.Why, r.Steps[6].Why = "returned and acknowledged", "returned and acknowledged"
+	n.Record = r
 	return append(notices, n)
 }
 
@@ -163,6 +166,20 @@ func TestNotices(t *testing.T) {
 		b.WriteString(Notice(&notices[i], 100))
 	}
 	golden(t, "notices.txt", b.String())
+}
+
+func TestLines(t *testing.T) {
+	notices := wardLife(t)
+	notices = append(notices, lowerProportion(t), requests(t), withdrawn(t))
+	var b strings.Builder
+	for i := range notices {
+		line := Line(&notices[i])
+		if strings.ContainsAny(line, "\n\r") {
+			t.Errorf("more than a line: %q", line)
+		}
+		b.WriteString(line + "\n")
+	}
+	golden(t, "lines.txt", b.String())
 }
 
 func TestWholeRecord(t *testing.T) {
@@ -238,7 +255,7 @@ func TestChances(t *testing.T) {
 		{math.Log10(0.000234), "0.00023", "about 1 of 4,300"},
 		{math.Log10(2.3e-9), "2.3e-9", "about 1 of 430 million"},
 		{math.Log10(9.96e-6), "1.0e-5", "about 1 of 100,000"},
-		{-345.2, "6.3e-346", "fewer than 1 of a trillion"},
+		{-345.2, "6.3e-346", "less than 1 of a trillion"},
 		{0, "1", "nearly all"},
 	} {
 		if got := pvalue(c.log10p); got != c.p {
