@@ -29,15 +29,22 @@ func (b *Bus) DeleteStream(t *testing.T) {
 	}
 }
 
-// Lose throws away the next message that has arrived at the source, as a client
-// does whose buffer is full.
-func (s *Source) Lose() {
-	if s.feed.held != nil {
-		s.feed.held = nil
-		return
+// Lose throws away the next message that arrives at the source, as a client does
+// whose buffer is full. It reports whether one was to come.
+func (s *Source) Lose() bool {
+	if s.feed == nil || s.feed.left == 0 {
+		return false
 	}
-	<-s.feed.msgs
+	if s.feed.take() == nil {
+		<-s.feed.msgs
+	}
+	return true
 }
 
-// Request asks for messages without taking any.
-func (s *Source) Request() error { return s.ask() }
+// Waiting is how many messages wait in memory.
+func (s *Source) Waiting() int {
+	if s.feed == nil {
+		return 0
+	}
+	return len(s.feed.msgs)
+}

@@ -76,12 +76,12 @@ func TestPublishStoresWhatItWasGiven(t *testing.T) {
 func TestFullStreamRefuses(t *testing.T) {
 	for _, atomic := range []bool{true, false} {
 		setup := bustest.Setup(t)
-		setup.Bus.MaxBytes = 1 << 20
+		setup.Bus.MaxBytes = 1 << 19
 		b := bustest.Open(t, setup)
 		b.SetAtomic(atomic)
 		var batch []bus.Outgoing
-		for range 5000 {
-			batch = append(batch, bus.Outgoing{Data: make([]byte, 500)})
+		for range 3000 {
+			batch = append(batch, bus.Outgoing{Data: make([]byte, 250)})
 		}
 		done, err := b.PublishBatch(t.Context(), batch)
 		if !errors.Is(err, bus.ErrFull) || done < 1000 || done > 2000 || atomic && done != 1000 {
@@ -91,7 +91,7 @@ func TestFullStreamRefuses(t *testing.T) {
 		if err != nil || end < uint64(done) || atomic && end != uint64(done) {
 			t.Errorf("atomic %v: %d said to be stored, the stream ends at %d, %v", atomic, done, end, err)
 		}
-		_, err = b.Publish(t.Context(), bus.Outgoing{Data: make([]byte, 900_000)})
+		_, err = b.Publish(t.Context(), bus.Outgoing{Data: make([]byte, 450_000)})
 		if !errors.Is(err, bus.ErrFull) {
 			t.Errorf("atomic %v: %v", atomic, err)
 		}
@@ -144,7 +144,7 @@ func TestBatchesAreStoredInOrder(t *testing.T) {
 		b.SetAtomic(atomic)
 		header := map[string][]string{"Tailbell-Time": {"2026-03-02T00:00:00Z"}}
 		var batch []bus.Outgoing
-		for i := range 3210 {
+		for i := range 2100 {
 			batch = append(batch, bus.Outgoing{Partition: i % 3, Header: header, Data: fmt.Appendf(nil, "%d", i/3)})
 		}
 		done, err := b.PublishBatch(t.Context(), batch)
@@ -156,7 +156,7 @@ func TestBatchesAreStoredInOrder(t *testing.T) {
 		}
 		for p := range 3 {
 			s := source(t, b, p, 0)
-			msgs := read(t, s, 1070, 333)
+			msgs := read(t, s, 700, 333)
 			expect(t, msgs, 0)
 			if s.Missing().Messages != 0 {
 				t.Errorf("missing: %+v", s.Missing())
@@ -172,8 +172,8 @@ func TestBatchesAreStoredInOrder(t *testing.T) {
 func TestBatchFallsBackWhereTheBusTakesNone(t *testing.T) {
 	b := bustest.Open(t, bustest.Setup(t))
 	b.SwitchBatchesOff(t)
-	publish(t, b, 0, 1, 2100)
-	msgs := read(t, source(t, b, 0, 0), 2100, 1000)
+	publish(t, b, 0, 1, 1100)
+	msgs := read(t, source(t, b, 0, 0), 1100, 1000)
 	expect(t, msgs, 1)
 	for key := range msgs[0].Header {
 		t.Errorf("a mark of a batch was left: %s", key)

@@ -71,7 +71,7 @@ func source(t *testing.T, b *bus.Bus, partition int, after uint64) *bus.Source {
 
 func TestSourceReadsInOrderFromAPosition(t *testing.T) {
 	b := bustest.Open(t, bustest.Setup(t))
-	const n = 25_000
+	const n = 11_000
 	publish(t, b, 0, 1, n)
 	s := source(t, b, 0, 0)
 	all := read(t, s, n, 700)
