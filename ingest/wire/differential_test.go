@@ -133,7 +133,7 @@ func TestDecoderAgreesWithReference(t *testing.T) {
 		data := []byte(elementGen().Draw(rt, "element"))
 		if rapid.IntRange(0, 5).Draw(rt, "damage") == 0 && len(data) > 0 {
 			at := rapid.IntRange(0, len(data)-1).Draw(rt, "at")
-			data[at] = rapid.SampledFrom([]byte(`"\{}[],:0123eE+-. nt` + "\x00\xff\xc3")).Draw(rt, "byte")
+			data[at] = rapid.SampledFrom([]byte(`"\{}[],:0123eE+-. nt`+"\x00\xff\xc3")).Draw(rt, "byte")
 		}
 		diff, item := disagreement(d, data)
 		if diff != "" {

@@ -246,3 +246,17 @@ func refTime(f refField) (monitor.Instant, bool) {
 	}
 	return monitor.InstantOf(whole) + monitor.Instant(micros), true
 }
+
+// wellFormedArray returns the elements of a valid JSON array, else nil.
+func wellFormedArray(data []byte) (list []jsontext.Value) {
+	value := jsontext.Value(bytes.Trim(data, " \t\r\n"))
+	if !value.IsValid(jsontext.AllowDuplicateNames(true)) || value.Kind() != '[' {
+		return nil
+	}
+	dec := jsontext.NewDecoder(bytes.NewReader(value), jsontext.AllowDuplicateNames(true))
+	must(dec.ReadToken())
+	for dec.PeekKind() != ']' {
+		list = append(list, must(dec.ReadValue()).Clone())
+	}
+	return list
+}
