@@ -5,6 +5,7 @@ import (
 	"math"
 	"math/big"
 	"slices"
+	"strings"
 )
 
 // readBaselines reads the baselines of an indicator: the last one serves every
@@ -161,10 +162,13 @@ func (s section) readReference(in *Indicator) (int64, Decimal) {
 	return events, exposure
 }
 
-// perUnit writes "1,000 device-days".
+// perUnit writes "1,000 device-days", or "device-day" for one.
 func perUnit(in *Indicator) string {
 	if in.Per == 1 {
-		return "1 " + in.Unit
+		if one, plural := strings.CutSuffix(in.Unit, "s"); plural && !strings.HasSuffix(one, "s") {
+			return one
+		}
+		return in.Unit
 	}
 	if in.Per == math.Trunc(in.Per) && in.Per < 1e15 {
 		return grouped(int64(in.Per)) + " " + in.Unit

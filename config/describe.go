@@ -85,7 +85,7 @@ func (p *prose) counting(in *Indicator) {
 			p.line("  Exposure is reported, and held exactly to %s %s.", grainText(in), in.Unit)
 		}
 	case Clock:
-		p.line("  Exposure comes from the clock: %s %s in every %s, and need not be reported.", in.Clock.Size, in.Unit, elapsed(in.Clock.Per))
+		p.line("  Exposure comes from the clock: %s %s in %s, and need not be reported.", in.Clock.Size, in.Unit, elapsed(in.Clock.Per))
 	}
 	switch in.Events {
 	case Each:
@@ -187,19 +187,19 @@ func (p *prose) baseline(in *Indicator, i int) {
 }
 
 func marginText(in *Indicator, b *Baseline) string {
-	ratio := "ratio"
+	ratio := "a ratio"
 	if in.Measure == Proportion && b.Kind == Reference {
-		ratio = "odds ratio"
+		ratio = "an odds ratio"
 	}
 	switch {
 	case b.Margin == 1:
 		return ""
 	case in.Upper && in.Lower:
-		return fmt.Sprintf(", a %s from 1/%s to %s is accepted", ratio, number(b.Margin), number(b.Margin))
+		return fmt.Sprintf(", %s from 1/%s to %s is accepted", ratio, number(b.Margin), number(b.Margin))
 	case in.Lower:
-		return fmt.Sprintf(", a %s down to 1/%s is accepted", ratio, number(b.Margin))
+		return fmt.Sprintf(", %s down to 1/%s is accepted", ratio, number(b.Margin))
 	}
-	return fmt.Sprintf(", a %s up to %s is accepted", ratio, number(b.Margin))
+	return fmt.Sprintf(", %s up to %s is accepted", ratio, number(b.Margin))
 }
 
 func origin(b *Baseline) string {

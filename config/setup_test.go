@@ -79,6 +79,36 @@ func TestSample(t *testing.T) {
 	}
 }
 
+// TestWide describes a set-up that uses what the sample doesn't.
+func TestWide(t *testing.T) {
+	text, err := os.ReadFile("testdata/wide.toml")
+	if err != nil {
+		t.Fatal(err)
+	}
+	s := mustParse(t, string(text))
+	var b bytes.Buffer
+	if err := s.Describe(&b); err != nil {
+		t.Fatal(err)
+	}
+	for _, d := range s.Doubts("wide.toml") {
+		b.WriteString("doubtful: " + d.String() + "\n")
+	}
+	compareGolden(t, "testdata/wide.txt", b.String())
+	if !s.Indicators[5].Matches("months") || s.Indicators[5].Matches("years") {
+		t.Error("patterns don't match as they should")
+	}
+}
+
+type brokenWriter struct{}
+
+func (brokenWriter) Write([]byte) (int, error) { return 0, fs.ErrClosed }
+
+func TestDescribeFails(t *testing.T) {
+	if err := mustParse(t, string(Sample())).Describe(brokenWriter{}); !errors.Is(err, fs.ErrClosed) {
+		t.Errorf("got %v", err)
+	}
+}
+
 // TestExactNumbers checks that decimals are rounded once, to the number
 // nearest to the exact result.
 func TestExactNumbers(t *testing.T) {
