@@ -18,6 +18,7 @@ const (
 	connectTimeout = 10 * time.Second
 	flushTimeout   = 5 * time.Second
 	pingInterval   = 20 * time.Second
+	fewReconnects  = 8 // some ten seconds
 )
 
 // State is the state of the connection to the bus.
@@ -178,7 +179,12 @@ func (b *Bus) dial(ctx context.Context, o options) error {
 	}
 	e, err := readEndpoint(b.setup.Folder)
 	if err == nil {
-		err = b.connect(e.URL, []nats.Option{nats.UserInfo(e.User, e.Password)}, o)
+		err = b.connect(e.URL, []nats.Option{
+			nats.UserInfo(e.User, e.Password),
+			// A daemon that starts again has another port and other
+			// credentials: there is no use in waiting long.
+			nats.MaxReconnects(fewReconnects),
+		}, o)
 	}
 	if err != nil {
 		return b.explain(err)
@@ -218,11 +224,11 @@ func (b *Bus) connectRemote(o options) error {
 }
 
 // connect makes the connection. Once made it comes back by itself, however
-// long the bus was away.
+// long the bus was away, unless opts say otherwise.
 func (b *Bus) connect(url string, opts []nats.Option, o options) error {
 	wait := newBackoff()
-	opts = append(opts,
-		nats.Name("tailbell "+b.setup.Name),
+	base := []nats.Option{
+		nats.Name("tailbell " + b.setup.Name),
 		nats.Timeout(connectTimeout),
 		nats.PingInterval(pingInterval),
 		nats.MaxReconnects(-1),
@@ -241,8 +247,8 @@ func (b *Bus) connect(url string, opts []nats.Option, o options) error {
 		nats.ErrorHandler(func(_ *nats.Conn, _ *nats.Subscription, err error) {
 			b.log.Warn().Err(err).Msg("the connection to the bus reports an error")
 		}),
-	)
-	nc, err := nats.Connect(url, opts...)
+	}
+	nc, err := nats.Connect(url, append(base, opts...)...)
 	if err != nil {
 		return err
 	}

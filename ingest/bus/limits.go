@@ -30,7 +30,10 @@ const (
 	// to commands among them.
 	leastPayload = 8 * mib
 	memoryLimit  = 64 * mib
-	storeRoom    = 256 * mib // for staged batches and consumers
+	// storeLimit is no limit: each stream has its own, only the daemon makes
+	// streams, and a sum of today's limits would keep the server from changing
+	// a stream that was made under larger ones.
+	storeLimit = 1 << 50
 )
 
 // maxData is the largest data of a message with observations, in bytes.

@@ -6,15 +6,14 @@ import (
 	"os"
 	"path/filepath"
 	"strings"
+	"tailbell/config"
+	"tailbell/ingest/bus"
+	"tailbell/ingest/bus/bustest"
 	"testing"
 	"time"
 
 	"github.com/google/go-cmp/cmp"
 	"github.com/nats-io/nats.go/jetstream"
-
-	"tailbell/config"
-	"tailbell/ingest/bus"
-	"tailbell/ingest/bus/bustest"
 )
 
 // open opens the bus with its listener.
@@ -255,6 +254,22 @@ func TestLimitsFollowTheSetup(t *testing.T) {
 	}
 	if len(b.Notes()) != 0 {
 		t.Errorf("%v", b.Notes())
+	}
+}
+
+// A limit far under what the stream had before must not keep the server from
+// finding it again.
+func TestLoweredLimitKeepsTheStream(t *testing.T) {
+	setup := bustest.Setup(t)
+	setup.Bus.MaxBytes = 200 << 30
+	first := bustest.Open(t, setup)
+	publish(t, first, 0, 1, 100)
+	shut(t, first)
+	setup.Bus.MaxBytes = 1 << 20
+	for range 2 {
+		b := bustest.Open(t, setup)
+		expect(t, read(t, source(t, b, 0, 0), 100, 100), 1)
+		shut(t, b)
 	}
 }
 

@@ -4,15 +4,14 @@ import (
 	"context"
 	"errors"
 	"math/rand/v2"
+	"tailbell/ingest/bus"
+	"tailbell/ingest/bus/bustest"
 	"testing"
 	"testing/synctest"
 	"time"
 
 	"github.com/nats-io/nats.go"
 	"github.com/nats-io/nats.go/jetstream"
-
-	"tailbell/ingest/bus"
-	"tailbell/ingest/bus/bustest"
 )
 
 func TestSourceRecoversWhatTheClientLost(t *testing.T) {

@@ -5,14 +5,13 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"tailbell/ingest/bus"
+	"tailbell/ingest/bus/bustest"
 	"testing"
 	"testing/synctest"
 	"time"
 
 	"github.com/google/go-cmp/cmp"
-
-	"tailbell/ingest/bus"
-	"tailbell/ingest/bus/bustest"
 )
 
 func TestPublishStoresWhatItWasGiven(t *testing.T) {

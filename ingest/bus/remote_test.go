@@ -15,14 +15,13 @@ import (
 	"os"
 	"path/filepath"
 	"strings"
+	"tailbell/config"
+	"tailbell/ingest/bus"
+	"tailbell/ingest/bus/bustest"
 	"testing"
 	"time"
 
 	"github.com/nats-io/nats-server/v2/server"
-
-	"tailbell/config"
-	"tailbell/ingest/bus"
-	"tailbell/ingest/bus/bustest"
 )
 
 const password = "correct-horse"

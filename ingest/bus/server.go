@@ -85,7 +85,7 @@ func (e *embedded) options(setup *config.Setup, o options) *server.Options {
 		StoreDir:               filepath.Join(setup.Folder, busFolder),
 		SyncAlways:             true,
 		JetStreamMaxMemory:     memoryLimit,
-		JetStreamMaxStore:      maxBytes(setup) + alertsMaxBytes + storeRoom,
+		JetStreamMaxStore:      storeLimit,
 	}
 }
 
