@@ -119,10 +119,9 @@ func compareClasses(t *testing.T, s *rehearse.Scenario, a monitor.Account) {
 		t.Errorf("seed %d, classes (-ledger +engine):\n%s", s.Seed, d)
 	}
 	reasons := map[string]int{}
+	ofActs := []monitor.Reason{monitor.BadAct, monitor.NoSuchAlert, monitor.NotAllowed}
 	for r, n := range a.RefusedBy {
-		switch r {
-		case monitor.BadAct, monitor.NoSuchAlert, monitor.NotAllowed: // of acts
-		default:
+		if !slices.Contains(ofActs, r) {
 			reasons[string(r)] = int(n)
 		}
 	}
