@@ -26,10 +26,9 @@ import (
 	"io"
 	"iter"
 	"slices"
-	"time"
-
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
+	"time"
 )
 
 // Options say how files are read. The zero value reads files that explain

@@ -6,7 +6,6 @@ import (
 	"fmt"
 	"io"
 	"os"
-
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
 )

@@ -7,7 +7,6 @@ import (
 	"io"
 	"slices"
 	"strings"
-
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
 )

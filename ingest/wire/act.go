@@ -2,11 +2,10 @@ package wire
 
 import (
 	"bytes"
-	"unicode"
-	"unicode/utf8"
-
 	"tailbell/monitor"
 	"tailbell/monitor/life"
+	"unicode"
+	"unicode/utf8"
 )
 
 // Bounds of an act's texts, in characters.
@@ -141,7 +140,7 @@ func checkAct(act *monitor.Act, seen map[string]bool) *fault {
 		return refuse(monitor.BadAct, "the field by is missing; it says who acts")
 	case seen["alert"] && (seen["series"] || seen["direction"]):
 		return refuse(monitor.BadAct, "the alert is named twice; give alert, or series and direction")
-	case !seen["alert"] && !(seen["series"] && seen["direction"]):
+	case !seen["alert"] && (!seen["series"] || !seen["direction"]):
 		return refuse(monitor.BadAct, "no alert is named; give alert, or series and direction")
 	case !seen["why"] && act.Kind != monitor.Acknowledge:
 		return refuse(monitor.BadAct, "the field why is missing; a %s needs it", act.Kind)

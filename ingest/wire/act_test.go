@@ -2,14 +2,13 @@ package wire
 
 import (
 	"strings"
+	"tailbell/monitor"
+	"tailbell/monitor/life"
 	"testing"
 	"unicode/utf8"
 
 	"github.com/google/go-cmp/cmp"
 	"pgregory.net/rapid"
-
-	"tailbell/monitor"
-	"tailbell/monitor/life"
 )
 
 func TestActs(t *testing.T) {

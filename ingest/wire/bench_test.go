@@ -5,10 +5,9 @@ import (
 	"encoding/json"
 	"fmt"
 	"strings"
+	"tailbell/monitor"
 	"testing"
 	"time"
-
-	"tailbell/monitor"
 )
 
 var sink monitor.Message

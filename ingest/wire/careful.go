@@ -4,11 +4,10 @@ import (
 	"bytes"
 	"errors"
 	"strings"
-	"unicode"
-	"unicode/utf8"
-
 	"tailbell/config"
 	"tailbell/monitor"
+	"unicode"
+	"unicode/utf8"
 )
 
 // MaxIDLength is the longest id of an observation, in characters.

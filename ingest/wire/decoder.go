@@ -28,10 +28,9 @@ package wire
 
 import (
 	"strings"
-	"time"
-
 	"tailbell/config"
 	"tailbell/monitor"
+	"time"
 )
 
 // Raw is one message as the bus stored it.

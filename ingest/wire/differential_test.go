@@ -4,12 +4,11 @@ import (
 	"bytes"
 	"fmt"
 	"strings"
+	"tailbell/monitor"
 	"testing"
 
 	"github.com/google/go-cmp/cmp"
 	"pgregory.net/rapid"
-
-	"tailbell/monitor"
 )
 
 // disagreement returns how decoder and reference differ on an element, "" if

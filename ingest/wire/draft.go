@@ -2,7 +2,6 @@ package wire
 
 import (
 	"strings"
-
 	"tailbell/monitor"
 )
 
@@ -114,20 +113,20 @@ func (w *draft) finishReport() *fault {
 
 func (w *draft) finishInterval() *fault {
 	const forms = "give start and end, or at for an instant"
-	switch w.seen & (hasStart | hasEnd | hasAt) {
-	case hasStart | hasEnd:
+	switch uint(w.seen & (hasStart | hasEnd | hasAt)) {
+	case uint(hasStart | hasEnd):
 		if w.o.End <= w.o.Start {
 			return refuse(monitor.BadInterval, "end must be after start, by a microsecond or more; for an instant use at")
 		}
 		return nil
-	case hasAt:
+	case uint(hasAt):
 		w.o.Start, w.o.End, w.o.Instant = w.at, w.at, true
 		return nil
 	case 0:
 		return refuse(monitor.BadInterval, "no interval is given; %s", forms)
-	case hasStart:
+	case uint(hasStart):
 		return refuse(monitor.BadInterval, "start is given without end; %s", forms)
-	case hasEnd:
+	case uint(hasEnd):
 		return refuse(monitor.BadInterval, "end is given without start; %s", forms)
 	}
 	return refuse(monitor.BadInterval, "an instant and an interval are given at once; %s", forms)

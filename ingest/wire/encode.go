@@ -2,9 +2,8 @@ package wire
 
 import (
 	"strconv"
-	"unicode/utf8"
-
 	"tailbell/monitor"
+	"unicode/utf8"
 )
 
 // EncodeObservation appends the observation as canonical JSON: fields in the

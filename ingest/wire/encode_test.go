@@ -2,13 +2,12 @@ package wire
 
 import (
 	"strings"
+	"tailbell/config"
+	"tailbell/monitor"
 	"testing"
 
 	"github.com/google/go-cmp/cmp"
 	"pgregory.net/rapid"
-
-	"tailbell/config"
-	"tailbell/monitor"
 )
 
 // instantGen gives moments of the whole range, many of them round.

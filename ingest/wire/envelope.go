@@ -5,7 +5,6 @@ import (
 	"mime"
 	"net/url"
 	"strings"
-
 	"tailbell/monitor"
 )
 

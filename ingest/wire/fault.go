@@ -4,9 +4,8 @@ import (
 	"bytes"
 	"fmt"
 	"strings"
-	"unicode/utf8"
-
 	"tailbell/monitor"
+	"unicode/utf8"
 )
 
 // fault is why something was refused. A nil fault is none.

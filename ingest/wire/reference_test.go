@@ -8,14 +8,13 @@ import (
 	"regexp"
 	"strconv"
 	"strings"
+	"tailbell/config"
+	"tailbell/monitor"
 	"time"
 	"unicode"
 	"unicode/utf8"
 
 	"github.com/go-json-experiment/json/jsontext"
-
-	"tailbell/config"
-	"tailbell/monitor"
 )
 
 // The reference decoder is slow and strict, and shares no code with the

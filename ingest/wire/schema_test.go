@@ -2,13 +2,13 @@ package wire
 
 import (
 	"bytes"
+	"slices"
 	"strings"
+	"tailbell/monitor"
 	"testing"
 
 	"github.com/santhosh-tekuri/jsonschema/v6"
 	"pgregory.net/rapid"
-
-	"tailbell/monitor"
 )
 
 func compileSchema(t *testing.T) *jsonschema.Schema {
@@ -30,23 +30,13 @@ func compileSchema(t *testing.T) *jsonschema.Schema {
 // are no leap seconds, and lengths in bytes.
 func beyondSchema(data []byte, item monitor.Item) bool {
 	list, _ := refParse(data, DefaultDepth)
-	switch item.Reason {
-	case monitor.DuplicateField:
-		return true
-	case monitor.BadInterval:
-		return strings.HasPrefix(item.Detail, "end must be after start")
-	case monitor.BadExposure:
-		return strings.Contains(item.Detail, "more digits than can be held")
-	case monitor.BadTime:
-		return strings.Contains(item.Detail, "no leap second")
-	case monitor.BadSeries:
-		for _, f := range list {
-			if f.name == "series" && len(f.value) > 256 {
-				return true
-			}
-		}
-	}
-	return isSyntax(item.Reason)
+	longSeries := slices.ContainsFunc(list, func(f refField) bool { return f.name == "series" && len(f.value) > 256 })
+	return item.Reason == monitor.DuplicateField ||
+		item.Reason == monitor.BadInterval && strings.HasPrefix(item.Detail, "end must be after start") ||
+		item.Reason == monitor.BadExposure && strings.Contains(item.Detail, "more digits than can be held") ||
+		item.Reason == monitor.BadTime && strings.Contains(item.Detail, "no leap second") ||
+		item.Reason == monitor.BadSeries && longSeries ||
+		isSyntax(item.Reason)
 }
 
 func TestSchemaAgreesWithDecoder(t *testing.T) {

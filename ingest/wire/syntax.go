@@ -2,9 +2,8 @@ package wire
 
 import (
 	"bytes"
-	"unicode/utf8"
-
 	"tailbell/monitor"
+	"unicode/utf8"
 )
 
 // syntax checks JSON text (RFC 8259, and UTF-8 without lone surrogates).

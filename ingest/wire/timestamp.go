@@ -3,9 +3,8 @@ package wire
 import (
 	"fmt"
 	"strings"
-	"time"
-
 	"tailbell/monitor"
+	"time"
 )
 
 // ParseTime reads an RFC 3339 date-time with its offset. Fractions are cut to

@@ -1,11 +1,10 @@
 package wire
 
 import (
+	"tailbell/monitor"
 	"testing"
 	testquick "testing/quick"
 	"time"
-
-	"tailbell/monitor"
 )
 
 // Valid and invalid vectors of the JSON Schema Test Suite,
