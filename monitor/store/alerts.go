@@ -4,10 +4,9 @@ import (
 	"encoding/binary"
 	"fmt"
 	"slices"
+	"tailbell/monitor/life"
 
 	bolt "go.etcd.io/bbolt"
-
-	"tailbell/monitor/life"
 )
 
 // AlertRow is an alert's record with its number: alerts count from 1 in the
@@ -146,49 +145,55 @@ func (s *Store) Alert(id string) (AlertRow, error) {
 func (s *Store) Alerts(filter AlertFilter, after uint64, max int) ([]AlertRow, error) {
 	var rows []AlertRow
 	for len(rows) < max {
-		last, more := after, false
-		err := s.view(func(tx *bolt.Tx) error {
-			index := alertsShelf
-			if filter.NotDone {
-				index = openAlertsShelf
-			}
-			numbers, err := index.in(tx)
-			if err != nil {
-				return err
-			}
-			alerts, err := alertsShelf.in(tx)
-			if err != nil {
-				return err
-			}
-			page, err := numbers.page(after, filter.NewestFirst, pageRows)
-			if err != nil {
-				return err
-			}
-			more = len(page) == pageRows
-			for _, n := range page {
-				row, err := alertRow(alerts, n)
-				if err != nil {
-					return err
-				}
-				last = n
-				if filter.match(&row.Record) {
-					rows = append(rows, row)
-				}
-				if len(rows) == max {
-					break
-				}
-			}
-			return nil
-		})
+		some, last, err := s.alertsPage(&filter, after, max-len(rows))
 		if err != nil {
 			return nil, err
 		}
-		if !more {
+		rows = append(rows, some...)
+		if last == 0 {
 			break
 		}
 		after = last
 	}
 	return rows, nil
+}
+
+// alertsPage looks at the next pageRows alerts. It returns at most max of those
+// that pass, and the number of the last one looked at, 0 if there are no more.
+func (s *Store) alertsPage(filter *AlertFilter, after uint64, max int) (rows []AlertRow, last uint64, err error) {
+	err = s.view(func(tx *bolt.Tx) error {
+		alerts, err := alertsShelf.in(tx)
+		if err != nil {
+			return err
+		}
+		numbers := alerts
+		if filter.NotDone {
+			if numbers, err = openAlertsShelf.in(tx); err != nil {
+				return err
+			}
+		}
+		page, err := numbers.page(after, filter.NewestFirst, pageRows)
+		if err != nil {
+			return err
+		}
+		if len(page) == pageRows {
+			last = page[len(page)-1]
+		}
+		for _, n := range page {
+			row, err := alertRow(alerts, n)
+			if err != nil {
+				return err
+			}
+			if filter.match(&row.Record) {
+				rows = append(rows, row)
+			}
+			if len(rows) == max {
+				return nil
+			}
+		}
+		return nil
+	})
+	return rows, last, err
 }
 
 // pageRows bounds how many rows are read in one transaction.

@@ -2,10 +2,9 @@ package store
 
 import (
 	"fmt"
+	"tailbell/monitor"
 
 	bolt "go.etcd.io/bbolt"
-
-	"tailbell/monitor"
 )
 
 // Commit makes the results of a batch durable together with the position of
@@ -33,6 +32,9 @@ func (s *Store) Commit(changes monitor.Changes, mark Mark) error {
 		}
 		h.Commit++
 		if mark.Position != 0 {
+			if h.Stored == monitor.Beginning {
+				h.FirstStored = mark.Stored
+			}
 			h.Stored = max(h.Stored, mark.Stored)
 			if err := putMark(tx, h, mark); err != nil {
 				return err
@@ -48,6 +50,7 @@ func (s *Store) write(tx *bolt.Tx, h *head, changes *monitor.Changes) error {
 		func() error { return writeJournal(tx, h, changes) },
 		func() error { return writeStates(tx, h, changes.States) },
 		func() error { return writeIDs(tx, h, changes) },
+		func() error { return writeArchive(tx, h, changes.Archived) },
 		func() error { return writeRefused(tx, h, changes.Refused, s.opts.Retention) },
 		func() error { return writeAlerts(tx, h, changes.Alerts) },
 		func() error { return writeSteps(tx, h, changes.Steps) },
@@ -78,6 +81,6 @@ func takePosition(h *head, changes *monitor.Changes, mark Mark) error {
 
 func empty(c *monitor.Changes) bool {
 	return c.Header == nil && len(c.Series) == 0 && len(c.States) == 0 && len(c.IDs) == 0 &&
-		len(c.DroppedGenerations) == 0 && len(c.Refused) == 0 && len(c.Alerts) == 0 &&
+		len(c.DroppedGenerations) == 0 && len(c.Archived) == 0 && len(c.Refused) == 0 && len(c.Alerts) == 0 &&
 		len(c.Steps) == 0 && c.Setting == nil
 }

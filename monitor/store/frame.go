@@ -49,13 +49,14 @@ var (
 	outletsShelf     = newShelf("outlets")
 	settingsShelf    = newShelf("settings")
 	marksShelf       = newShelf("marks")
+	archiveShelf     = newShelf("archive")
 )
 
 func allShelves() []shelf {
 	return []shelf{
 		metaShelf, headShelf, headerShelf, journalShelf, statesShelf, idsShelf, generationsShelf,
 		alertsShelf, alertIDsShelf, openAlertsShelf, refusedShelf, refusedRawShelf,
-		outboxShelf, outletsShelf, settingsShelf, marksShelf,
+		outboxShelf, outletsShelf, settingsShelf, marksShelf, archiveShelf,
 	}
 }
 

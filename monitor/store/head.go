@@ -2,20 +2,21 @@ package store
 
 import (
 	"fmt"
+	"tailbell/monitor"
 	"time"
 
 	bolt "go.etcd.io/bbolt"
-
-	"tailbell/monitor"
 )
 
 // head says where everything begins and ends. It changes with every write.
 type head struct {
 	// Position of the last message committed, Commit the number of the last
-	// commit, Stored the greatest bus time seen.
-	Position uint64          `json:"position"`
-	Commit   uint64          `json:"commit"`
-	Stored   monitor.Instant `json:"stored"`
+	// commit, Stored the greatest bus time seen and FirstStored the first one:
+	// what is older than that is reckoned from there.
+	Position    uint64          `json:"position"`
+	Commit      uint64          `json:"commit"`
+	Stored      monitor.Instant `json:"stored"`
+	FirstStored monitor.Instant `json:"first_stored"`
 	// Epoch of the owner; Accepted counts the streams accepted in place of another.
 	Epoch    uint64 `json:"epoch"`
 	Accepted uint64 `json:"accepted"`
@@ -41,6 +42,9 @@ type head struct {
 	RawFirst     uint64 `json:"raw_first"`
 	Raw          uint64 `json:"raw"`
 	RawBytes     uint64 `json:"raw_bytes"`
+	// Archived counts the archived slots, ArchiveParts the values they lie in.
+	Archived     uint64 `json:"archived"`
+	ArchiveParts uint64 `json:"archive_parts"`
 	// Outbox is the number of the last step, OutboxFirst the first one kept.
 	Outbox      uint64 `json:"outbox"`
 	OutboxFirst uint64 `json:"outbox_first"`
@@ -52,7 +56,7 @@ type head struct {
 func newHead() head {
 	return head{
 		JournalFirst: 1, RefusedFirst: 1, RawFirst: 1, OutboxFirst: 1,
-		Stored: monitor.Beginning,
+		Stored: monitor.Beginning, FirstStored: monitor.Beginning,
 	}
 }
 
@@ -146,12 +150,9 @@ func (s *Store) Stream() (id StreamIdentity, known bool, err error) {
 // SetStream names the stream that the store is filled from. Setting the same
 // again does nothing; another one fails with ErrStream.
 func (s *Store) SetStream(id StreamIdentity) error {
-	known, was, err := false, StreamIdentity{}, error(nil)
-	if was, known, err = s.Stream(); err != nil {
+	was, known, err := s.Stream()
+	if err != nil || (known && was.Equal(id)) {
 		return err
-	}
-	if known && was.Equal(id) {
-		return nil
 	}
 	return s.update("stream", func(tx *bolt.Tx, h *head) error {
 		if known || h.Position != 0 {

@@ -3,10 +3,9 @@ package store
 import (
 	"encoding/binary"
 	"fmt"
+	"tailbell/monitor"
 
 	bolt "go.etcd.io/bbolt"
-
-	"tailbell/monitor"
 )
 
 // The ids of a generation lie in a bucket of their own within the bucket ids,

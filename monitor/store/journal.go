@@ -3,10 +3,9 @@ package store
 import (
 	"encoding/binary"
 	"fmt"
+	"tailbell/monitor"
 
 	bolt "go.etcd.io/bbolt"
-
-	"tailbell/monitor"
 )
 
 // partSize is about how large a value of the journal, the ids or the header
@@ -159,31 +158,4 @@ func eachPart(tx *bolt.Tx, h *head, use func(key []byte, p part) error) error {
 		return r.damaged(journalKey(next, nextPart), "it is missing")
 	}
 	return nil
-}
-
-// fields takes a payload apart. Once something is missing, bad is set and
-// everything further is zero.
-type fields struct {
-	rest []byte
-	bad  bool
-}
-
-func (f *fields) uvarint() uint64 {
-	n, size := binary.Uvarint(f.rest)
-	if size <= 0 {
-		f.bad, f.rest = true, nil
-		return 0
-	}
-	f.rest = f.rest[size:]
-	return n
-}
-
-func (f *fields) bytes(n uint64) []byte {
-	if n > uint64(len(f.rest)) {
-		f.bad, f.rest = true, nil
-		return nil
-	}
-	b := f.rest[:n:n]
-	f.rest = f.rest[n:]
-	return b
 }

@@ -4,10 +4,9 @@ import (
 	"encoding/binary"
 	"encoding/hex"
 	"fmt"
+	"tailbell/monitor"
 
 	bolt "go.etcd.io/bbolt"
-
-	"tailbell/monitor"
 )
 
 // Mark is how a message of the stream is recognised again: the digest of its

@@ -3,10 +3,9 @@ package store
 import (
 	"errors"
 	"fmt"
+	"tailbell/monitor/life"
 
 	bolt "go.etcd.io/bbolt"
-
-	"tailbell/monitor/life"
 )
 
 // Row is one alert step that outlets must deliver. Numbers run from 1.
@@ -221,15 +220,12 @@ func writeSteps(tx *bolt.Tx, h *head, steps []life.Notice) error {
 	}
 	for i := range steps {
 		h.Outbox++
-		if h.Outlets == 0 {
-			continue
-		}
 		if err := r.putJSON(number(h.Outbox), &steps[i]); err != nil {
 			return err
 		}
 	}
-	if h.Outlets == 0 && h.OutboxFirst > h.Outbox-uint64(len(steps)) {
-		h.OutboxFirst = h.Outbox + 1
+	if h.Outlets == 0 {
+		return trimOutbox(tx, h, len(steps)+trimKeys)
 	}
 	return nil
 }

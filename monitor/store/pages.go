@@ -37,6 +37,8 @@ type sheet struct {
 	pageSize             uint64
 	root, freelist, high uint64
 	transaction          uint64
+	// used counts the pages that are neither free nor beyond the end.
+	used uint64
 	// valid counts the meta pages whose checksum holds; ours says that at
 	// least one claims to be bbolt's, newer that one is of a later version.
 	valid       int
@@ -123,7 +125,8 @@ func readPages(f *os.File) (sheet, error) {
 	if err := p.tree(s.root, nil, nil); err != nil {
 		return s, err
 	}
-	return s, p.rest()
+	err = p.rest()
+	return p.sheet, err
 }
 
 func (p *pages) bad(id uint64, format string, args ...any) error {
@@ -282,6 +285,7 @@ func (p *pages) rest() error {
 	if count > p.high || at+8*count > uint64(len(page)) {
 		return p.bad(p.freelist, "its count %d is wrong", count)
 	}
+	p.used = p.high - count
 	for i := range count {
 		id := order.Uint64(page[at+8*i:])
 		if id < 2 || id >= p.high || p.seen[id] {

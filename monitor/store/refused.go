@@ -3,11 +3,10 @@ package store
 import (
 	"fmt"
 	"math"
+	"tailbell/monitor"
 	"time"
 
 	bolt "go.etcd.io/bbolt"
-
-	"tailbell/monitor"
 )
 
 // Retention bounds what is kept of refusals. Their original bytes go first;
@@ -108,7 +107,7 @@ func expireRaw(rows, raws rack, h *head, retention Retention, limit int) error {
 			return err
 		}
 		crowded := h.Refused-h.RawFirst+1 > retention.Rows
-		if record.Kept >= oldest && h.RawBytes <= retention.RawBytes && !crowded {
+		if max(record.Kept, h.FirstStored) >= oldest && h.RawBytes <= retention.RawBytes && !crowded {
 			return nil
 		}
 		if err := raws.remove(number(h.RawFirst)); err != nil {

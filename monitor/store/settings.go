@@ -2,10 +2,9 @@ package store
 
 import (
 	"fmt"
+	"tailbell/monitor"
 
 	bolt "go.etcd.io/bbolt"
-
-	"tailbell/monitor"
 )
 
 // writeSetting keeps a set-up that came into force, under its version.

@@ -4,10 +4,9 @@ import (
 	"cmp"
 	"fmt"
 	"slices"
+	"tailbell/monitor"
 
 	bolt "go.etcd.io/bbolt"
-
-	"tailbell/monitor"
 )
 
 // Snapshot returns all that an engine needs to go on after the stored

@@ -3,10 +3,9 @@ package store
 import (
 	"encoding/binary"
 	"fmt"
+	"tailbell/monitor"
 
 	bolt "go.etcd.io/bbolt"
-
-	"tailbell/monitor"
 )
 
 // writeStates writes the next slice of series whole: the commit's number as a
