@@ -13,9 +13,13 @@ import (
 // span, the exposure, what would be usual, how often so much or so little
 // comes by chance, and the exact bounds of the rate.
 func Sentence(r *life.Record, e *life.Evidence) string {
-	zone := zoneOf(r)
-	return place(r) + ": " + counted(e) + " in the " + span(e, zone) + " (" + exposure(e) + lateShare(e) + "); about " +
-		expected(e) + " would be usual. " + chance(e, r.Direction) + " " + bounds(e)
+	return finding(r, e) + " " + bounds(e)
+}
+
+// finding is the sentence without the bounds.
+func finding(r *life.Record, e *life.Evidence) string {
+	return place(r) + ": " + counted(e) + " in the " + span(e, zoneOf(r)) + " (" + exposure(e) + lateShare(e) + "); about " +
+		expected(e) + " would be usual. " + chance(e, r.Direction)
 }
 
 // subject is the place and what is counted there.

@@ -4,17 +4,28 @@ import (
 	"fmt"
 	"strconv"
 	"strings"
+	"sync"
 	"time"
 
+	"tailbell/config"
 	"tailbell/monitor/life"
 )
 
-// zoneOf is the record's zone; one that this machine lacks is read as UTC.
+// zones remembers the zones that were loaded, by name.
+var zones sync.Map
+
+// zoneOf is the record's zone; one that the embedded data lack is read as UTC.
 func zoneOf(r *life.Record) *time.Location {
-	zone, err := time.LoadLocation(r.Zone)
+	if known, ok := zones.Load(r.Zone); ok {
+		if zone, ok := known.(*time.Location); ok {
+			return zone
+		}
+	}
+	zone, err := config.LoadZone(r.Zone)
 	if err != nil {
 		return time.UTC
 	}
+	zones.Store(r.Zone, zone)
 	return zone
 }
 

@@ -97,7 +97,7 @@ func Paragraphs(n *life.Notice) []string {
 		return opened(n, zone)
 	case life.StepWorsened:
 		return nonEmpty(
-			Sentence(r, evidenceOf(&n.Step, &r.Worst)),
+			finding(r, evidenceOf(&n.Step, &r.Worst)),
 			"The evidence has grown since the alert was opened on "+day(r.Opened.In(zone))+"."+afterwards(r, zone))
 	case life.StepCorrected:
 		return nonEmpty(corrected(n, zone))

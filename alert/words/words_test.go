@@ -12,6 +12,7 @@ import (
 
 	"github.com/google/go-cmp/cmp"
 
+	"tailbell/config"
 	"tailbell/monitor/life"
 )
 
@@ -19,7 +20,7 @@ var update = flag.Bool("update", false, "rewrite the golden files")
 
 func at(t *testing.T, zone, text string) time.Time {
 	t.Helper()
-	loc, err := time.LoadLocation(zone)
+	loc, err := config.LoadZone(zone)
 	if err != nil {
 		t.Fatal(err)
 	}

@@ -6,11 +6,13 @@ import (
 	"strings"
 	"testing"
 	"time"
+
+	"tailbell/config"
 )
 
 func berlin(t *testing.T) *time.Location {
 	t.Helper()
-	zone, err := time.LoadLocation("Europe/Berlin")
+	zone, err := config.LoadZone("Europe/Berlin")
 	if err != nil {
 		t.Fatal(err)
 	}

@@ -18,6 +18,7 @@ import (
 	"math/rand/v2"
 	"time"
 
+	"tailbell/config"
 	"tailbell/monitor/rehearse"
 )
 
@@ -51,7 +52,7 @@ type deskDay struct {
 // contradicts itself, which is a fault of this package, or if the time zone is
 // missing.
 func Generate(seed uint64) (*rehearse.Scenario, error) {
-	zone, err := time.LoadLocation(zoneName)
+	zone, err := config.LoadZone(zoneName)
 	if err != nil {
 		return nil, fmt.Errorf("the scenario lies in %s: %w", zoneName, err)
 	}
