@@ -121,6 +121,7 @@ func passing(err error) bool {
 	return slices.ContainsFunc([]error{
 		nats.ErrTimeout, nats.ErrNoResponders, nats.ErrDisconnected, nats.ErrConnectionReconnecting,
 		nats.ErrReconnectBufExceeded, nats.ErrStaleConnection, nats.ErrNoServers,
+		jetstream.ErrTooManyStalledMsgs,
 		jetstream.ErrNoStreamResponse, context.DeadlineExceeded,
 	}, func(one error) bool { return errors.Is(err, one) })
 }
