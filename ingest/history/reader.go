@@ -71,8 +71,8 @@ func (r *reader) file(ctx context.Context, path string) (err error) {
 	r.latestHere = monitor.Beginning
 	r.ids = newDerivedIDs()
 	err = r.rows(ctx, format)
-	r.done += r.lines.read
 	r.report()
+	r.done += r.lines.read
 	if err != nil {
 		return fmt.Errorf("%s: %w", r.path, err)
 	}
@@ -124,11 +124,8 @@ func (r *reader) report() {
 		return
 	}
 	c := r.history.Counts
-	p := Progress{File: r.path, Read: r.done, Size: r.size, Rows: c.Observations + c.Acts + len(r.history.Faults)}
-	if r.done == 0 || r.lines.read > 0 {
-		p.Read = r.done + r.lines.read
-	}
-	r.opts.Progress(p)
+	rows := c.Observations + c.Acts + len(r.history.Faults)
+	r.opts.Progress(Progress{File: r.path, Read: r.done + r.lines.read, Size: r.size, Rows: rows})
 }
 
 // fault notes a row that can't be used.

@@ -9,6 +9,7 @@ import (
 	"strings"
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
+	"unicode/utf8"
 )
 
 // BadRow is the reason of a row that can't be told apart into cells.
@@ -55,6 +56,8 @@ type table struct {
 	fixed bool
 	cells [][]byte
 	json  []byte
+	// hasSpan and hasTime say that the row has a date, or a start, end or at.
+	hasSpan, hasTime bool
 }
 
 // readHeader reads the line of column names.
@@ -164,6 +167,7 @@ func (t *table) row() error {
 // build makes the row an element in the contract's form and decodes it.
 func (t *table) build(number int, raw []byte) {
 	t.json = append(t.json[:0], '{')
+	t.hasSpan, t.hasTime = false, false
 	if t.fixed {
 		t.field("series")
 		t.json = wire.AppendText(t.json, t.opts.Series)
@@ -177,6 +181,10 @@ func (t *table) build(number int, raw []byte) {
 			t.fault(number, reason, detail, raw)
 			return
 		}
+	}
+	if t.hasSpan && t.hasTime {
+		t.fault(number, monitor.BadInterval, "the row has a date and a start, end or at; give one of them", raw)
+		return
 	}
 	t.json = append(t.json, '}')
 	item := t.decoder.Observation(t.json)
@@ -202,6 +210,9 @@ func (t *table) cell(c column, text string) (monitor.Reason, string) {
 	switch c.kind {
 	case ignored:
 	case textColumn:
+		if !utf8.ValidString(text) {
+			return monitor.NotUTF8, fmt.Sprintf("%s is not UTF-8; save the file in this encoding", c.name)
+		}
 		t.field(c.name)
 		t.json = wire.AppendText(t.json, text)
 	case numberColumn:
@@ -223,12 +234,14 @@ func (t *table) cell(c column, text string) (monitor.Reason, string) {
 		if err != nil {
 			return monitor.BadTime, fmt.Sprintf("%s: %v", c.name, err)
 		}
+		t.hasTime = t.hasTime || c.name != "reported"
 		t.time(c.name, at)
 	case spanColumn:
 		start, end, err := span(text, t.opts.Zone)
 		if err != nil {
 			return monitor.BadTime, fmt.Sprintf("%s: %v", c.name, err)
 		}
+		t.hasSpan = true
 		t.time("start", start)
 		t.time("end", end)
 	}
