@@ -117,6 +117,24 @@ func lowerProportion(t *testing.T) life.Notice {
 	return step(&r, 1, life.StepOpened, at(t, zone, "2025-07-11 14:20"), life.Unacknowledged)
 }
 
+// fewFalls is a lower tail with one event: R 4.2.2 gives ppois(1, 10.2) = 0.00041628.
+func fewFalls(t *testing.T) life.Notice {
+	t.Helper()
+	const zone = "Europe/Berlin"
+	r := life.Record{
+		ID: "few1", Indicator: "fall", Title: "Falls", Series: "quillmere-quay/stroke-unit/fall",
+		Direction: life.Lower, Number: 1, Zone: zone, Opened: at(t, zone, "2024-12-06 00:00"),
+		Opening: life.Evidence{
+			Window: "28d", From: at(t, zone, "2024-11-04 00:00"), To: at(t, zone, "2024-12-02 00:00"), Due: at(t, zone, "2024-12-06 00:00"),
+			Events: 1, Exposure: "1700", Unit: "bed-days", EventNoun: "falls", Expected: 10.2, Measure: "rate", Per: 1000,
+			RateLower: 0.014893, RateUpper: 3.2774, Alpha: 0.05, Chosen: true, Log10P: math.Log10(0.00041628),
+			Baseline: life.Baseline{Kind: "known", Rate: 6, Margin: 1.25},
+		},
+		Caution: "Local words of caution.",
+	}
+	return step(&r, 1, life.StepOpened, r.Opened, life.Unacknowledged)
+}
+
 func requests(t *testing.T) life.Notice {
 	t.Helper()
 	const zone = "Europe/Berlin"
@@ -161,7 +179,7 @@ func golden(t *testing.T, name, got string) {
 
 func TestNotices(t *testing.T) {
 	notices := wardLife(t)
-	notices = append(notices, lowerProportion(t), requests(t), withdrawn(t))
+	notices = append(notices, lowerProportion(t), fewFalls(t), requests(t), withdrawn(t))
 	var b strings.Builder
 	for i := range notices {
 		b.WriteString(Notice(&notices[i], 100))
@@ -171,7 +189,7 @@ func TestNotices(t *testing.T) {
 
 func TestLines(t *testing.T) {
 	notices := wardLife(t)
-	notices = append(notices, lowerProportion(t), requests(t), withdrawn(t))
+	notices = append(notices, lowerProportion(t), fewFalls(t), requests(t), withdrawn(t))
 	var b strings.Builder
 	for i := range notices {
 		line := Line(&notices[i])
