@@ -33,9 +33,10 @@ func at(t *testing.T, zone, text string) time.Time {
 
 func ptr(x float64) *float64 { return &x }
 
-// ward is a rate against a known baseline. 4 events, mu = 0.0018 * 616:
-// R 4.2.2 gives ppois(3, 1.1088, lower.tail = FALSE) = 0.02642 and
-// poisson.test(4, 0.616)$conf.int = 1.769 to 16.626.
+// ward is a rate against a known baseline: 4 events, mu = 0.0018 * 616, p =
+// 1 - exp(-mu) (1 + mu + mu^2/2 + mu^3/6) = 0.02642. The exact bounds of 4
+// events, 1.089865 and 10.241589, are those of the R package survival 3.5-3
+// (cipoisson), over 616 device-days.
 func ward(t *testing.T) life.Record {
 	t.Helper()
 	const zone = "Europe/Berlin"
@@ -117,7 +118,8 @@ func lowerProportion(t *testing.T) life.Notice {
 	return step(&r, 1, life.StepOpened, at(t, zone, "2025-07-11 14:20"), life.Unacknowledged)
 }
 
-// fewFalls is a lower tail with one event: R 4.2.2 gives ppois(1, 10.2) = 0.00041628.
+// fewFalls is a lower tail with one event and a margin: mu = 10.2 / 1.25, and
+// p = exp(-8.16) (1 + 8.16) = 0.002618.
 func fewFalls(t *testing.T) life.Notice {
 	t.Helper()
 	const zone = "Europe/Berlin"
@@ -127,7 +129,7 @@ func fewFalls(t *testing.T) life.Notice {
 		Opening: life.Evidence{
 			Window: "28d", From: at(t, zone, "2024-11-04 00:00"), To: at(t, zone, "2024-12-02 00:00"), Due: at(t, zone, "2024-12-06 00:00"),
 			Events: 1, Exposure: "1700", Unit: "bed-days", EventNoun: "falls", Expected: 10.2, Measure: "rate", Per: 1000,
-			RateLower: 0.014893, RateUpper: 3.2774, Alpha: 0.05, Chosen: true, Log10P: math.Log10(0.00041628),
+			RateLower: 0.014893, RateUpper: 3.2774, Alpha: 0.05, Chosen: true, Log10P: math.Log10(0.002618),
 			Baseline: life.Baseline{Kind: "known", Rate: 6, Margin: 1.25},
 		},
 		Caution: "Local words of caution.",
