@@ -98,7 +98,7 @@ func hypothesis(e *life.Evidence, d life.Direction) string {
 	if d == life.Lower {
 		m = 1 / m
 	}
-	what := measure(e) + " was"
+	what := measure(e) + " were"
 	if strings.Contains(e.RatioKind, "odds") {
 		what = "odds were"
 	}
