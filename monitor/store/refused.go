@@ -3,6 +3,7 @@ package store
 import (
 	"fmt"
 	"math"
+	"slices"
 	"tailbell/monitor"
 	"time"
 
@@ -211,6 +212,41 @@ func (s *Store) RefusedOne(n uint64) (RefusedRow, error) {
 		return err
 	})
 	return row, err
+}
+
+// RefusedAt returns the refusals of the message at a position, in order. It
+// looks from the newest one back, so that it is quick for what just happened.
+func (s *Store) RefusedAt(position uint64) ([]RefusedRow, error) {
+	var rows []RefusedRow
+	for before, done := uint64(0), false; !done; {
+		err := s.view(func(tx *bolt.Tx) error {
+			r, raws, err := refusedRacks(tx)
+			if err != nil {
+				return err
+			}
+			page, err := r.page(before, true, pageRows)
+			if err != nil {
+				return err
+			}
+			done = len(page) < pageRows
+			for _, n := range page {
+				row, err := refusedRow(r, raws, n)
+				if err != nil {
+					return err
+				}
+				if row.Refusal.Position == position {
+					rows = append(rows, row)
+				}
+				before, done = n, done || row.Refusal.Position < position
+			}
+			return nil
+		})
+		if err != nil {
+			return nil, err
+		}
+	}
+	slices.Reverse(rows)
+	return rows, nil
 }
 
 func refusedRacks(tx *bolt.Tx) (rows, raws rack, err error) {
