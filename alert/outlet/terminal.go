@@ -3,7 +3,6 @@ package outlet
 import (
 	"context"
 	"encoding/json"
-	"fmt"
 	"io"
 
 	"tailbell/alert/words"
@@ -29,7 +28,7 @@ func (*Terminal) Name() string { return "terminal" }
 // Deliver writes the step.
 func (t *Terminal) Deliver(_ context.Context, n *life.Notice) error {
 	if !t.json {
-		_, err := fmt.Fprintln(t.w, words.Notice(n, t.width))
+		_, err := io.WriteString(t.w, words.Notice(n, t.width))
 		return err
 	}
 	line, err := json.Marshal(n)

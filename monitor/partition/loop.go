@@ -16,6 +16,7 @@ import (
 	"errors"
 	"fmt"
 	"sync"
+	"sync/atomic"
 
 	"tailbell/monitor"
 	"tailbell/monitor/life"
@@ -58,6 +59,7 @@ type Loop struct {
 	commits chan commit
 	free    chan struct{} // the committing stage takes another one
 	asks    chan func(*monitor.Engine)
+	due     atomic.Int64
 }
 
 type commit struct {
@@ -70,11 +72,25 @@ func New(engine *monitor.Engine, st *store.Store, source Source, opts Options) *
 	if opts.MaxBatch == 0 {
 		opts.MaxBatch = 5000
 	}
-	return &Loop{
+	l := &Loop{
 		engine: engine, store: st, source: source, opts: opts,
 		batches: make(chan Batch, 1), commits: make(chan commit), free: make(chan struct{}, 1),
 		asks: make(chan func(*monitor.Engine)),
 	}
+	l.noteDue()
+	return l
+}
+
+// Due returns when the next look falls due by the bus's clock; monitor.Never
+// if none will, or in history time. It may be called at any time.
+func (l *Loop) Due() monitor.Instant { return monitor.Instant(l.due.Load()) }
+
+func (l *Loop) noteDue() {
+	due, ok := l.engine.NextDue()
+	if !ok || l.engine.InHistory() {
+		due = monitor.Never
+	}
+	l.due.Store(int64(due))
 }
 
 // Recover returns the engine that goes on from what the store holds.
@@ -152,6 +168,7 @@ func (l *Loop) apply(ctx context.Context) {
 	committer := l.free
 	var mark store.Mark
 	handOn := func() {
+		l.noteDue()
 		l.commits <- commit{l.engine.Drain(), mark}
 		waiting = 0
 	}

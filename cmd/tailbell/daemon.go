@@ -1,0 +1,348 @@
+package main
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"io/fs"
+	"os"
+	"path/filepath"
+	"sync"
+	"time"
+
+	"github.com/rs/zerolog"
+
+	"tailbell/alert/outlet"
+	"tailbell/config"
+	"tailbell/ingest/bus"
+	"tailbell/ingest/control"
+	"tailbell/ingest/intake"
+	"tailbell/ingest/wire"
+	"tailbell/monitor"
+	"tailbell/monitor/life"
+	"tailbell/monitor/partition"
+	"tailbell/monitor/store"
+)
+
+// daemon is everything that run and demo keep running: the bus, and for each
+// partition its store, engine and loop with the outlets behind.
+type daemon struct {
+	setup *config.Setup
+	bus   *bus.Bus
+	log   zerolog.Logger
+	parts []*part
+	serve *control.Server
+}
+
+// part is one partition at work.
+type part struct {
+	number int
+	store  *store.Store
+	intake *intake.Intake
+	loop   *partition.Loop
+	ticker *intake.Ticker
+	queues []*outlet.Queue
+
+	mu struct {
+		sync.Mutex
+		position uint64        // committed
+		moved    chan struct{} // closed at the next commit
+	}
+}
+
+// daemonOptions are what the two commands do differently.
+type daemonOptions struct {
+	log      zerolog.Logger
+	terminal outlet.Outlet // nil for none
+	maxBatch int
+	busOpts  []bus.Option
+}
+
+// openDaemon opens the bus and recovers every partition. What fails is closed
+// again.
+func openDaemon(ctx context.Context, setup *config.Setup, o daemonOptions) (d *daemon, err error) {
+	b, err := bus.Open(ctx, setup, append(o.busOpts, bus.WithLog(o.log))...)
+	if err != nil {
+		return nil, err
+	}
+	d = &daemon{setup: setup, bus: b, log: o.log}
+	defer func() {
+		if err != nil {
+			err = errors.Join(err, d.close())
+		}
+	}()
+	for _, note := range b.Notes() {
+		d.log.Warn().Str("bus", note).Msg("the streams differ from the set-up, without harm")
+	}
+	for n := range setup.Partitions {
+		if err := announceSetup(ctx, b, setup, n); err != nil {
+			return d, err
+		}
+		p, err := d.openPart(ctx, n, o)
+		if err != nil {
+			return d, fmt.Errorf("partition %d: %w", n, err)
+		}
+		d.parts = append(d.parts, p)
+	}
+	d.serve, err = control.Serve(ctx, b, d.verbs())
+	return d, err
+}
+
+// announceSetup publishes the set-up into the partition's stream, unless it is
+// the one last published there. One that a store could not take is an error.
+func announceSetup(ctx context.Context, b *bus.Bus, setup *config.Setup, partition int) error {
+	raw, found, err := b.LastSetting(ctx, partition)
+	if err != nil {
+		return err
+	}
+	if found {
+		old, err := config.Parse(raw.Data, "the set-up in force")
+		if err == nil && old.Digest == setup.Digest {
+			return nil
+		}
+		if err == nil {
+			if why := monitor.Unfit(old, setup); why != "" {
+				return fmt.Errorf("this set-up can't follow the one in force: %s\n"+
+					"Keep the old values, or begin anew with another folder and name", why)
+			}
+		}
+	}
+	_, err = b.Publish(ctx, bus.Outgoing{Partition: partition, Kind: bus.Setting, Data: setup.Text})
+	return err
+}
+
+func storePath(setup *config.Setup, partition int) string {
+	return filepath.Join(setup.Folder, fmt.Sprintf("partition-%d.store", partition))
+}
+
+func identityOf(setup *config.Setup, partition int) store.Identity {
+	return store.Identity{Deployment: setup.Name, Partition: partition, Partitions: setup.Partitions, KeyParts: setup.KeyParts}
+}
+
+func openStore(setup *config.Setup, partition int) (*store.Store, error) {
+	path := storePath(setup, partition)
+	if _, err := os.Stat(path); errors.Is(err, fs.ErrNotExist) {
+		return store.Create(path, identityOf(setup, partition), store.Options{})
+	}
+	return store.Open(path, identityOf(setup, partition), store.Options{})
+}
+
+func (d *daemon) openPart(ctx context.Context, number int, o daemonOptions) (p *part, err error) {
+	st, err := openStore(d.setup, number)
+	if err != nil {
+		return nil, err
+	}
+	p = &part{number: number, store: st}
+	p.mu.moved = make(chan struct{})
+	defer func() {
+		if err != nil {
+			err = errors.Join(err, p.close())
+		}
+	}()
+	if err := intake.Verify(ctx, d.bus, st); err != nil {
+		return p, err
+	}
+	epoch, err := st.Epoch()
+	if err != nil {
+		return p, err
+	}
+	if err := st.SetEpoch(epoch + 1); err != nil {
+		return p, err
+	}
+	if err := d.openOutlets(p, o, epoch+1); err != nil {
+		return p, err
+	}
+	engine, err := partition.Recover(st)
+	if err != nil {
+		return p, err
+	}
+	p.mu.position = engine.Position()
+	p.intake, err = intake.Open(ctx, d.bus, d.setup, number, engine.Position(), func(m bus.Missing) {
+		d.log.Error().Int("partition", number).Uint64("from", m.From).Uint64("to", m.To).
+			Msg("messages were removed from the stream before they could be read")
+	})
+	if err != nil {
+		return p, err
+	}
+	p.loop = partition.New(engine, st, p.intake, partition.Options{
+		MaxBatch: o.maxBatch, Committed: p.committed, Full: d.full,
+	})
+	p.ticker = intake.NewTicker(p.loop.Due, func(ctx context.Context) error {
+		_, err := d.bus.Publish(ctx, bus.Outgoing{Partition: number, Kind: bus.Tick})
+		return err
+	}, func(err error) { d.log.Error().Err(err).Msg("publishing a tick") })
+	return p, nil
+}
+
+func (d *daemon) openOutlets(p *part, o daemonOptions, epoch uint64) error {
+	header := map[string][]string{"Tailbell-Owner-Epoch": {fmt.Sprint(epoch)}}
+	outlets := []outlet.Outlet{outlet.NewBus(d.setup.Name, func(ctx context.Context, direction, indicator, key string, event []byte) error {
+		_, err := d.bus.PublishAlert(ctx, p.number, direction, indicator, key, event, header)
+		return err
+	})}
+	if o.terminal != nil {
+		outlets = append(outlets, o.terminal)
+	}
+	for _, out := range outlets {
+		if err := p.store.Outlets(store.FromOldest, out.Name()); err != nil {
+			return err
+		}
+		p.queues = append(p.queues, outlet.NewQueue(p.store, out, func(err error, pause time.Duration) {
+			d.log.Error().Err(err).Str("outlet", out.Name()).Dur("again_in", pause).Msg("delivering")
+		}))
+	}
+	return nil
+}
+
+// full waits before a commit that found no room is tried again.
+func (d *daemon) full(ctx context.Context, err error) error {
+	d.log.Error().Err(err).Msg("intake stands still")
+	select {
+	case <-time.After(2 * time.Second):
+		return nil
+	case <-ctx.Done():
+		return ctx.Err()
+	}
+}
+
+// committed notes a commit and wakes what waits for one.
+func (p *part) committed(position uint64) {
+	p.mu.Lock()
+	if position > 0 {
+		p.mu.position = position
+	}
+	close(p.mu.moved)
+	p.mu.moved = make(chan struct{})
+	p.mu.Unlock()
+	for _, q := range p.queues {
+		q.Wake()
+	}
+	p.ticker.Wake()
+}
+
+// reach waits until the position is committed.
+func (p *part) reach(ctx context.Context, position uint64) error {
+	for {
+		p.mu.Lock()
+		have, moved := p.mu.position, p.mu.moved
+		p.mu.Unlock()
+		if have >= position {
+			return nil
+		}
+		select {
+		case <-moved:
+		case <-ctx.Done():
+			return ctx.Err()
+		}
+	}
+}
+
+// run runs all partitions until ctx ends or something fails, then delivers
+// what waits in the outlets.
+func (d *daemon) run(ctx context.Context) error {
+	ctx, stop := context.WithCancelCause(ctx)
+	defer stop(nil)
+	var running sync.WaitGroup
+	start := func(f func(context.Context) error) {
+		running.Go(func() {
+			if err := f(ctx); err != nil {
+				stop(err)
+			}
+		})
+	}
+	for _, p := range d.parts {
+		start(p.loop.Run)
+		for _, q := range p.queues {
+			start(q.Run)
+		}
+		running.Go(func() { p.ticker.Run(ctx) })
+	}
+	if !d.setup.History {
+		start(d.goLive)
+	}
+	running.Wait()
+	if err := context.Cause(ctx); err != nil && !errors.Is(err, context.Canceled) {
+		return err
+	}
+	return d.flush()
+}
+
+// goLive ends history time once the partitions have read what the stream held
+// at the start.
+func (d *daemon) goLive(ctx context.Context) error {
+	for _, p := range d.parts {
+		end, err := d.bus.EndOf(ctx, p.number)
+		if err == nil {
+			err = p.reach(ctx, end)
+		}
+		var history bool
+		if err == nil {
+			err = p.loop.Do(ctx, func(e *monitor.Engine) { history = e.InHistory() })
+		}
+		if err == nil && history {
+			_, err = d.bus.Publish(ctx, bus.Outgoing{
+				Partition: p.number, Kind: bus.Tick, Header: map[string][]string{wire.LiveHeader: {"1"}},
+			})
+		}
+		if err != nil {
+			if ctx.Err() != nil {
+				return nil
+			}
+			return fmt.Errorf("going live: %w", err)
+		}
+		d.log.Info().Int("partition", p.number).Msg("live")
+	}
+	return nil
+}
+
+// flush delivers what still waits; an outlet that is down keeps its steps.
+func (d *daemon) flush() error {
+	ctx, cancel := context.WithTimeout(context.Background(), 5*time.Second)
+	defer cancel()
+	var errs []error
+	for _, p := range d.parts {
+		for _, q := range p.queues {
+			errs = append(errs, q.Flush(ctx))
+		}
+	}
+	return errors.Join(errs...)
+}
+
+// close lets go of everything.
+func (d *daemon) close() error {
+	var errs []error
+	if d.serve != nil {
+		errs = append(errs, d.serve.Close())
+	}
+	for _, p := range d.parts {
+		errs = append(errs, p.close())
+	}
+	return errors.Join(append(errs, d.bus.Close())...)
+}
+
+func (p *part) close() error {
+	var errs []error
+	if p.intake != nil {
+		errs = append(errs, p.intake.Close())
+	}
+	return errors.Join(append(errs, p.store.Close())...)
+}
+
+// partOf returns the partition that a series belongs to.
+func (d *daemon) partOf(series string) *part {
+	return d.parts[config.PartitionOf(series, d.setup.KeyParts, len(d.parts))]
+}
+
+// find returns an alert and the partition that holds it.
+func (d *daemon) find(id string) (life.Record, *part, error) {
+	for _, p := range d.parts {
+		row, err := p.store.Alert(id)
+		if err == nil {
+			return row.Record, p, nil
+		}
+		if !errors.Is(err, store.ErrNotFound) {
+			return life.Record{}, nil, err
+		}
+	}
+	return life.Record{}, nil, control.Errorf(codeNotFound, "no alert %q: tailbell alert list shows them", id)
+}

@@ -1,0 +1,109 @@
+package main
+
+import (
+	"errors"
+	"fmt"
+	"io"
+	"time"
+
+	"tailbell/monitor/life"
+)
+
+// print writes the account of a demo.
+func (r *demoResult) print(w io.Writer, took time.Duration) error {
+	return errors.Join(r.printElements(w, took), r.printAlerts(w), r.printFindings(w), r.printVerdict(w))
+}
+
+func (r *demoResult) printElements(w io.Writer, took time.Duration) error {
+	errs := []error{
+		say(w, "THE ACCOUNT"),
+		say(w, "%d messages with %d elements, in %s", len(r.scenario.Messages), r.account.Elements, took.Round(100*time.Millisecond)),
+	}
+	if r.resumed > 0 {
+		errs = append(errs, say(w, "(%d of the messages were in the stream already: the demo went on)", r.resumed))
+	}
+	errs = append(errs, say(w, "\n%-14s %10s %10s", "", "ledger", "account"))
+	for _, c := range r.audit.Classes {
+		errs = append(errs, say(w, "%-14s %10d %10d", c.Class, c.Ledger, c.Account))
+	}
+	errs = append(errs,
+		say(w, "\n%d slots hold %d events; events and exposure are compared slot by slot.", r.audit.Slots, r.audit.Events),
+		say(w, "%d looks made when due, %d withheld, %d made again because data changed; %d elements came late.",
+			r.account.Looks, r.account.WithheldLooks, r.account.Reruns, r.account.Late),
+		say(w, "%d acts taken, %d refused.", r.account.Acts, r.account.ActsRefused))
+	return errors.Join(append(errs, r.printConditions(w))...)
+}
+
+// printConditions names the series that have lacked data for long, and counts
+// the others: the last days' denominators are always still out.
+func (r *demoResult) printConditions(w io.Writer) error {
+	const long = 30 * 24 * time.Hour
+	var errs []error
+	recent, last := 0, ""
+	for _, c := range r.conditions {
+		switch {
+		case c.Since > r.clock.Add(-long):
+			recent++
+		case c.Series != last:
+			last = c.Series
+			errs = append(errs, say(w, "Condition: looks at %s are withheld since %s: %s.", c.Series,
+				c.Since.Time().Format(time.DateOnly), c.Text))
+		}
+	}
+	return errors.Join(append(errs, say(w, "%d windows wait for data of the last 30 days.", recent))...)
+}
+
+func (r *demoResult) printAlerts(w io.Writer) error {
+	var upper, lower, late int
+	steps := map[life.StepKind]int{}
+	for i := range r.alerts {
+		a := &r.alerts[i]
+		if a.Direction == life.Upper {
+			upper++
+		} else {
+			lower++
+		}
+		if a.Late {
+			late++
+		}
+		for _, s := range a.Steps {
+			steps[s.Kind]++
+		}
+	}
+	return say(w, "\n%d alerts: %d upper, %d lower, %d opened late; %d times worsened, %d corrected, %d returned, %d withdrawn, %d acknowledged, %d closed.",
+		len(r.alerts), upper, lower, late, steps[life.StepWorsened], steps[life.StepCorrected], steps[life.StepReturned],
+		steps[life.StepWithdrawn], steps[life.StepAcknowledged], steps[life.StepClosed])
+}
+
+func (r *demoResult) printFindings(w io.Writer) error {
+	errs := []error{say(w, "\nPLANTED EXCESSES")}
+	found := 0
+	for _, f := range r.audit.Findings {
+		what := "not found"
+		if f.Found {
+			found++
+			what = fmt.Sprintf("found after %s (alert %s)", inDays(f.Delay), f.Alert)
+		}
+		errs = append(errs, say(w, "%-42s %-5s x%-5.3g %s to %s: %s", f.Planted.Series, f.Planted.Direction, f.Planted.Ratio,
+			f.Planted.From.Format(time.DateOnly), f.Planted.To.Format(time.DateOnly), what))
+	}
+	return errors.Join(append(errs, say(w, "%d of %d found.", found, len(r.audit.Findings)))...)
+}
+
+func inDays(d time.Duration) string {
+	if d < 48*time.Hour {
+		return fmt.Sprintf("%.0f hours", d.Hours())
+	}
+	return fmt.Sprintf("%.0f days", d.Hours()/24)
+}
+
+func (r *demoResult) printVerdict(w io.Writer) error {
+	if r.audit.Differing == 0 {
+		return say(w, "\nThe account balances: it equals the publishers' ledger in every class, series and slot.")
+	}
+	errs := []error{say(w, "\nTHE ACCOUNT DOES NOT BALANCE: %d differences, the first of them:", r.audit.Differing)}
+	for _, d := range r.audit.Differences {
+		errs = append(errs, say(w, "  %s", d))
+	}
+	return errors.Join(errs...)
+}

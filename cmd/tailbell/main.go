@@ -1,0 +1,95 @@
+// Command tailbell watches streams of rare events and rings when a rate is no
+// longer what it was.
+//
+// Every subcommand is a file of this folder: options, wiring, printing. The
+// rules live in the packages below.
+package main
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"io"
+	"os"
+	"os/signal"
+	"syscall"
+
+	"github.com/spf13/cobra"
+)
+
+func main() {
+	ctx, stop := signalled(context.Background())
+	defer stop()
+	os.Exit(execute(ctx, os.Args[1:], os.Stdin, os.Stdout, os.Stderr))
+}
+
+// signalled returns a context that ends at the first SIGINT or SIGTERM. A
+// second signal stops the process at once.
+func signalled(parent context.Context) (context.Context, context.CancelFunc) {
+	ctx, stop := signal.NotifyContext(parent, os.Interrupt, syscall.SIGTERM)
+	context.AfterFunc(ctx, stop)
+	return ctx, stop
+}
+
+// execute runs one command and returns its exit code: 0 for success, 1 for a
+// failure that was reported, 2 for a command line that makes no sense.
+func execute(ctx context.Context, args []string, stdin io.Reader, stdout, stderr io.Writer) int {
+	root := newRootCommand()
+	root.SetArgs(args)
+	root.SetIn(stdin)
+	root.SetOut(stdout)
+	root.SetErr(stderr)
+	err := root.ExecuteContext(ctx)
+	var usage *usageError
+	switch {
+	case err == nil:
+		return 0
+	case errors.As(err, &usage):
+		complain(stderr, err)
+		return 2
+	case !errors.Is(err, errReported):
+		complain(stderr, err)
+	}
+	return 1
+}
+
+// errReported is returned by commands that have told what is wrong already.
+var errReported = errors.New("it has been said what is wrong")
+
+// usageError is a command line that makes no sense.
+type usageError struct{ err error }
+
+func (e *usageError) Error() string { return e.err.Error() }
+func (e *usageError) Unwrap() error { return e.err }
+
+func complain(w io.Writer, err error) {
+	if _, err := fmt.Fprintf(w, "tailbell: %v\n", err); err != nil {
+		return // nobody is listening
+	}
+}
+
+func newRootCommand() *cobra.Command {
+	root := &cobra.Command{
+		Use:   "tailbell",
+		Short: "Watch streams of rare events, and ring when a rate is no longer what it was",
+		Long: `Tailbell watches streams of rare events and rings when a rate is no longer what
+it was: by exact Poisson and binomial tails against a baseline, over rolling
+windows.
+
+A signal is a statistical finding: it diagnoses nothing and names no cause.
+Silence is no proof of safety. Local policy decides.`,
+		SilenceUsage:  true,
+		SilenceErrors: true,
+		Args:          cobra.NoArgs,
+		RunE:          func(c *cobra.Command, _ []string) error { return c.Help() },
+	}
+	root.CompletionOptions.HiddenDefaultCmd = true
+	root.SetFlagErrorFunc(func(c *cobra.Command, err error) error {
+		return &usageError{fmt.Errorf("%w (%s --help says more)", err, c.CommandPath())}
+	})
+	root.AddCommand(
+		newAlertCommand(), newConfigCommand(), newDemoCommand(), newExactCommand(), newFeedCommand(),
+		newRefusedCommand(), newReplayCommand(), newRunCommand(), newStatusCommand(), newStoreCommand(),
+	)
+	return root
+}

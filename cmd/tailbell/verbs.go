@@ -1,0 +1,226 @@
+package main
+
+import (
+	"context"
+	"encoding/json"
+	"errors"
+	"fmt"
+
+	"tailbell/ingest/bus"
+	"tailbell/ingest/control"
+	"tailbell/ingest/wire"
+	"tailbell/monitor"
+	"tailbell/monitor/life"
+	"tailbell/monitor/store"
+)
+
+// codeNotFound is the control error for what is not there, codeRefused for an
+// act that was refused.
+const (
+	codeNotFound control.Code = "not_found"
+	codeRefused  control.Code = "refused"
+)
+
+// The verbs that a running daemon answers, with what they take and give.
+const (
+	verbStatus  = "status"  // -> statusReply
+	verbAlerts  = "alerts"  // alertsRequest -> []life.Record
+	verbAlert   = "alert"   // id -> life.Record
+	verbAct     = "act"     // actRequest -> life.Record
+	verbRefused = "refused" // refusedRequest -> []refusedRow
+)
+
+type alertsRequest struct {
+	All    bool   `json:"all"`
+	Series string `json:"series,omitempty"`
+	Max    int    `json:"max"`
+}
+
+// actRequest is an act in the contract's form; Partition 0 unless named.
+type actRequest struct {
+	Act json.RawMessage `json:"act"`
+}
+
+type refusedRequest struct {
+	Partition int    `json:"partition"`
+	After     uint64 `json:"after"`
+	Max       int    `json:"max"`
+}
+
+// statusReply is how a daemon is doing.
+type statusReply struct {
+	Name       string       `json:"name"`
+	Setup      string       `json:"setup_digest"`
+	Connected  bool         `json:"bus_connected"`
+	Partitions []partStatus `json:"partitions"`
+}
+
+type partStatus struct {
+	Number     int                 `json:"partition"`
+	Position   uint64              `json:"position"`
+	End        uint64              `json:"stream_end"`
+	Clock      monitor.Instant     `json:"clock"`
+	History    bool                `json:"history_time"`
+	Version    int                 `json:"setup_version"`
+	Account    monitor.Account     `json:"account"`
+	Conditions []monitor.Condition `json:"conditions"`
+	Outlets    []store.Outlet      `json:"outlets"`
+	OpenAlerts int                 `json:"open_alerts"`
+}
+
+func (d *daemon) verbs() map[string]control.Handler {
+	return map[string]control.Handler{
+		verbStatus:  func(ctx context.Context, _ []byte) (any, error) { return d.status(ctx) },
+		verbAlerts:  answer(d.alerts),
+		verbAlert:   answer(func(_ context.Context, id string) (any, error) { r, _, err := d.find(id); return r, err }),
+		verbAct:     answer(d.act),
+		verbRefused: answer(d.refused),
+	}
+}
+
+// answer decodes a verb's argument.
+func answer[T any](f func(context.Context, T) (any, error)) control.Handler {
+	return func(ctx context.Context, body []byte) (any, error) {
+		var arg T
+		if err := json.Unmarshal(body, &arg); err != nil {
+			return nil, control.Errorf(control.BadRequest, "the request can't be read: %v", err)
+		}
+		return f(ctx, arg)
+	}
+}
+
+func (d *daemon) status(ctx context.Context) (*statusReply, error) {
+	r := &statusReply{Name: d.setup.Name, Setup: d.setup.Digest, Connected: d.bus.Connected()}
+	for _, p := range d.parts {
+		s := partStatus{Number: p.number}
+		var err error
+		if s.End, err = d.bus.EndOf(ctx, p.number); err != nil {
+			return nil, err
+		}
+		err = p.loop.Do(ctx, func(e *monitor.Engine) {
+			s.Position, s.Clock, s.History = e.Position(), e.Clock(), e.InHistory()
+			_, s.Version = e.Setup()
+			s.Account, s.Conditions = e.Account(), e.Conditions()
+			for _, r := range e.Alerts() {
+				if !r.Done() {
+					s.OpenAlerts++
+				}
+			}
+		})
+		if err != nil {
+			return nil, err
+		}
+		if s.Outlets, err = p.store.OutletState(); err != nil {
+			return nil, err
+		}
+		r.Partitions = append(r.Partitions, s)
+	}
+	return r, nil
+}
+
+func (d *daemon) alerts(_ context.Context, req alertsRequest) (any, error) {
+	var records []life.Record
+	for _, p := range d.parts {
+		rows, err := listAlerts(p.store, req)
+		if err != nil {
+			return nil, err
+		}
+		records = append(records, rows...)
+	}
+	return records, nil
+}
+
+// listAlerts returns the newest alerts that the request wants, without their
+// steps.
+func listAlerts(st *store.Store, req alertsRequest) ([]life.Record, error) {
+	rows, err := st.Alerts(store.AlertFilter{NotDone: !req.All, Series: req.Series, NewestFirst: true}, 0, req.Max)
+	if err != nil {
+		return nil, err
+	}
+	records := make([]life.Record, len(rows))
+	for i := range rows {
+		records[i] = rows[i].Record
+		records[i].Steps = nil
+	}
+	return records, nil
+}
+
+// act publishes an act, waits until it is committed, and tells what came of
+// it: the record, or why it was refused.
+func (d *daemon) act(ctx context.Context, req actRequest) (any, error) {
+	act, reason, detail := wire.NewDecoder(wire.Limits{}).Act(req.Act)
+	if reason != "" {
+		return nil, control.Errorf(codeRefused, "%s", detail)
+	}
+	var p *part
+	if act.Alert != "" {
+		var err error
+		if _, p, err = d.find(act.Alert); err != nil {
+			return nil, err
+		}
+	} else {
+		p = d.partOf(act.Series)
+	}
+	position, err := d.bus.Publish(ctx, bus.Outgoing{Partition: p.number, Kind: bus.Act, Data: req.Act})
+	if err != nil {
+		return nil, err
+	}
+	if err := p.reach(ctx, position); err != nil {
+		return nil, fmt.Errorf("the act is in the stream at position %d, but was not taken in time: %w", position, err)
+	}
+	if why, err := refusedAt(p.store, position); err != nil || why != "" {
+		return nil, errors.Join(err, control.Errorf(codeRefused, "%s", why))
+	}
+	if act.Alert == "" {
+		return nil, nil
+	}
+	r, _, err := d.find(act.Alert)
+	return r, err
+}
+
+// refusedAt returns why the message at a position was refused, "" if it was
+// not.
+func refusedAt(st *store.Store, position uint64) (string, error) {
+	counts, err := st.RefusedCount()
+	if err != nil {
+		return "", err
+	}
+	var total uint64
+	for _, n := range counts {
+		total += n
+	}
+	const back = 1000 // refusals that may have come since
+	rows, err := st.Refused(total-min(total, back), back)
+	for i := range rows {
+		if r := &rows[i].Refusal; r.Position == position {
+			return string(r.Reason) + ": " + r.Detail, err
+		}
+	}
+	return "", err
+}
+
+// refusedRow is a refusal as listed.
+type refusedRow struct {
+	Number  uint64          `json:"number"`
+	Refusal monitor.Refusal `json:"refusal"`
+	Expired bool            `json:"expired"`
+}
+
+func (d *daemon) refused(_ context.Context, req refusedRequest) (any, error) {
+	if req.Partition < 0 || req.Partition >= len(d.parts) {
+		return nil, control.Errorf(codeNotFound, "no partition %d: there are %d", req.Partition, len(d.parts))
+	}
+	return listRefused(d.parts[req.Partition].store, req)
+}
+
+func listRefused(st *store.Store, req refusedRequest) ([]refusedRow, error) {
+	rows, err := st.Refused(req.After, req.Max)
+	if err != nil {
+		return nil, err
+	}
+	list := make([]refusedRow, len(rows))
+	for i, r := range rows {
+		list[i] = refusedRow{Number: r.Number, Refusal: r.Refusal, Expired: r.Expired}
+	}
+	return list, nil
+}

@@ -1,0 +1,80 @@
+package monitor
+
+import (
+	"cmp"
+	"slices"
+)
+
+// Condition is something about a series that a person should know of: looks
+// that could not be made, or a feed that has gone silent. It is no signal.
+type Condition struct {
+	Series    string        `json:"series"`
+	Indicator string        `json:"indicator"`
+	Kind      ConditionKind `json:"kind"`
+	// Window is the window concerned; "" for silence.
+	Window string `json:"window,omitempty"`
+	// Since is the end of the first window that could not be looked at, or
+	// when the series was last heard of.
+	Since Instant `json:"since"`
+	// Text says it in words.
+	Text string `json:"text"`
+}
+
+// ConditionKind is the kind of a condition.
+type ConditionKind string
+
+// The kinds of condition.
+const (
+	WithheldLooks  ConditionKind = "withheld"        // a needed count or exposure is missing
+	MoreThanTrials ConditionKind = "more than n"     // more events than trials
+	NoExposure     ConditionKind = "no exposure"     // events, but no exposure
+	Silent         ConditionKind = "silent"          // nothing heard for longer than expected
+	unknownKind    ConditionKind = "program's fault" // a status without a kind
+)
+
+// Conditions returns what stands now, by series, kind and window.
+func (e *Engine) Conditions() []Condition {
+	var list []Condition
+	for _, s := range e.series {
+		list = append(list, e.conditionsOf(s)...)
+	}
+	slices.SortFunc(list, func(a, b Condition) int {
+		return cmp.Or(cmp.Compare(a.Series, b.Series), cmp.Compare(a.Kind, b.Kind), cmp.Compare(a.Window, b.Window))
+	})
+	return list
+}
+
+func (e *Engine) conditionsOf(s *series) []Condition {
+	var list []Condition
+	ix := s.indicator
+	for w := range s.windows {
+		ws := &s.windows[w]
+		if ws.withheld == made {
+			continue
+		}
+		list = append(list, Condition{
+			Series: s.name, Indicator: ix.cfg.Name, Kind: kindOf(ws.withheld), Window: ix.cfg.Windows[w].Name,
+			Since: ix.cal.Start(ws.withheldSince), Text: ws.withheld.String(),
+		})
+	}
+	if expect := ix.cfg.Expect; expect > 0 && s.seen.Add(expect) < e.clock {
+		list = append(list, Condition{
+			Series: s.name, Indicator: ix.cfg.Name, Kind: Silent, Since: s.seen,
+			Text: "nothing was heard for longer than " + expect.String(),
+		})
+	}
+	return list
+}
+
+func kindOf(s status) ConditionKind {
+	switch s {
+	case missing:
+		return WithheldLooks
+	case overfull:
+		return MoreThanTrials
+	case unexposed:
+		return NoExposure
+	case made, filling:
+	}
+	return unknownKind
+}
