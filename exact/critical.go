@@ -19,6 +19,16 @@ type law interface {
 	point(k int64) point
 }
 
+// logMass is log P(X = k); of a count that holds most of the probability, through the others.
+func logMass[L law](x L, k int64) float64 {
+	p := x.point(k)
+	l := p.log()
+	if l > -0.5 && p.root != 1 {
+		return log1pOf(-(x.side(k-1, false, false).prob() + x.side(k+1, true, false).prob()))
+	}
+	return l
+}
+
 // atLimit is the relative room within which a size counts as at the limit: rounding must not
 // lose a size that hits its limit exactly (five of five at 1/2 against 1/32).
 const atLimit = 1 + 0x1p-48

@@ -47,7 +47,7 @@ func (x Hypergeometric) thin(int64, bool) float64 { return 1 }
 func (x Hypergeometric) PMF(k int64) float64 { return x.point(k).value() }
 
 // LogPMF is the natural logarithm of P(X = k), -Inf outside the support.
-func (x Hypergeometric) LogPMF(k int64) float64 { return x.point(k).log() }
+func (x Hypergeometric) LogPMF(k int64) float64 { return logMass(x, k) }
 
 // Upper is P(X >= k).
 func (x Hypergeometric) Upper(k int64) float64 { return x.side(k, true, false).prob() }
@@ -135,7 +135,7 @@ func (x FisherNoncentral) Mean() float64 {
 func (x FisherNoncentral) PMF(k int64) float64 { return x.point(k).value() }
 
 // LogPMF is the natural logarithm of P(X = k), -Inf outside the support.
-func (x FisherNoncentral) LogPMF(k int64) float64 { return x.point(k).log() }
+func (x FisherNoncentral) LogPMF(k int64) float64 { return logMass(x, k) }
 
 // Upper is P(X >= k).
 func (x FisherNoncentral) Upper(k int64) float64 { return x.side(k, true, false).prob() }

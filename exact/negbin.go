@@ -95,38 +95,36 @@ func log1pDD(a dd) dd {
 	return t.log()
 }
 
-// side takes the direct tail wherever it is under 1/2, else one minus the other: for a skew law
-// the mean does not tell which.
 func (p pascal) side(k float64, upper, mid bool) side {
-	if upper && k > p.mu.hi {
-		return p.direct(k, true, mid)
-	}
-	if upper == (k <= p.mu.hi) || !upper && k >= p.mu.hi { // the other side first
-		j := k
-		if !mid {
-			if upper {
-				j--
-			} else {
-				j++
-			}
-		}
-		if j < 0 {
-			return certain
-		}
-		if s := p.direct(j, !upper, mid); !(s.prob() > 0.5) {
-			s.flip = true
+	return splitTail(k, math.Inf(1), p.mu.hi, upper, mid, p.direct)
+}
+
+// splitTail takes the direct tail wherever it is under 1/2, else one minus the other: for a skew
+// law the mean does not tell which. Counts run from 0 to top.
+func splitTail(k, top, mean float64, upper, mid bool, direct func(k float64, upper, mid bool) side) side {
+	out := upper && k > mean || !upper && k < mean // on the side of its own tail
+	if out {
+		s := direct(k, upper, mid)
+		if s.prob() <= 0.5 {
 			return s
 		}
-		return p.direct(k, upper, mid)
 	}
-	s := p.direct(k, upper, mid)
-	if s.prob() > 0.5 {
-		if !mid {
-			k++
+	j := k
+	if !mid {
+		if upper {
+			j--
+		} else {
+			j++
 		}
-		s = p.direct(k, true, mid)
-		s.flip = true
 	}
+	if j < 0 || j > top {
+		return certain
+	}
+	s := direct(j, !upper, mid)
+	if !out && s.prob() > 0.5 {
+		return direct(k, upper, mid)
+	}
+	s.flip = true
 	return s
 }
 
@@ -135,8 +133,12 @@ func (p pascal) direct(k float64, upper, mid bool) side {
 	switch {
 	case !upper:
 		s.ratio = p.lowerRatio(k)
-	case k == 0:
-		return certain // only asked for mid = false
+	case k == 0: // only asked for with mid, where P(X > 0) is not near 1
+		s = p.direct(1, true, false)
+		half := p.point(0)
+		half.root *= 0.5
+		s.ratio += math.Exp(half.minus(s.point))
+		return s
 	default:
 		s.ratio = p.upperRatio(k)
 	}
@@ -281,7 +283,7 @@ func expReach(c, s float64) float64 {
 func (x NegativeBinomial) PMF(k int64) float64 { return x.point(k).value() }
 
 // LogPMF is the natural logarithm of P(X = k), -Inf outside the support.
-func (x NegativeBinomial) LogPMF(k int64) float64 { return x.point(k).log() }
+func (x NegativeBinomial) LogPMF(k int64) float64 { return logMass(x, k) }
 
 // Upper is P(X >= k).
 func (x NegativeBinomial) Upper(k int64) float64 { return x.side(k, true, false).prob() }

@@ -259,3 +259,32 @@ func TestTruthTwoSided(t *testing.T) {
 	}
 	g.hold(t, map[string]float64{"minlike": 1e-13, "central": 1e-13, "log": 1e-12})
 }
+
+// more_tails.csv.gz: random cases of the laws without a table of their own, summed term by term
+// with mpmath at 60 digits.
+func TestTruthMore(t *testing.T) {
+	tr, g := readTruth(t, "more_tails"), newGauge()
+	for _, r := range tr.rows {
+		var x discrete
+		law := tr.text(r, "law")
+		switch law {
+		case "betabinomial":
+			x = exact.BetaBinomial{N: tr.int(t, r, "a"), A: tr.float(t, r, "b"), B: tr.float(t, r, "c")}
+		case "noncentral":
+			x = exact.FisherNoncentral{White: tr.int(t, r, "a"), Black: tr.int(t, r, "b"), Draws: tr.int(t, r, "c"), Odds: tr.float(t, r, "d")}
+		case "negbin":
+			x = exact.NegativeBinomial{Rate: tr.float(t, r, "a"), Exposure: 1, Size: tr.float(t, r, "b")}
+		}
+		k := tr.int(t, r, "k")
+		at := strings.Join(r[:6], ",")
+		g.note(law+" upper", relative(t, x.Upper(k), tr.text(r, "upper")), at)
+		g.note(law+" lower", relative(t, x.Lower(k), tr.text(r, "lower")), at)
+		g.note(law+" pmf", relative(t, x.PMF(k), tr.text(r, "pmf")), at)
+		g.note(law+" log upper", relative(t, x.LogUpper(k), tr.text(r, "log_upper")), at)
+		g.note(law+" log lower", relative(t, x.LogLower(k), tr.text(r, "log_lower")), at)
+		if tr.float(t, r, "pmf") < 0.999 { // past that the table's own digits run out
+			g.note(law+" log pmf", relative(t, x.LogPMF(k), tr.text(r, "log_pmf")), at)
+		}
+	}
+	g.hold(t, map[string]float64{"betabinomial": 1e-13, "noncentral": 1e-13, "negbin": 1e-14})
+}

@@ -38,7 +38,7 @@ func (u urn) point(x float64) point {
 // up sums f(x), f(x+1), ... over f(x), and the same weighted with 0, 1, ...
 func (u urn) up(x float64) (sum, first float64) {
 	_, hi := u.support()
-	const chunk = 256 // terms between fresh starts: a longer product or sum gathers rounding
+	const chunk = 128 // terms between fresh starts: a longer product or sum gathers rounding
 	d := u.black - u.draws
 	t, part, partFirst := 1.0, 1.0, 0.0
 	for j := x; j < hi && t > 0x1p-56*(sum+part); j++ {

@@ -1,0 +1,230 @@
+package exact
+
+import "math"
+
+// acceptance finds the ends of the set of parameters whose two-sided p-value exceeds alpha, for
+// the forms that are not central. As the parameter moves outward from the estimate, the far tail
+// jumps whenever another count joins it; between two jumps the p-value falls and then rises, so
+// its largest value is at an end of the stretch. The search walks inward over the stretches from
+// where no p-value can exceed alpha, and stops at the first that does: the bound is a jump, or
+// a crossing solved for within a stretch. The set may have gaps; the bounds are its hull.
+type acceptance[L law] struct {
+	at    func(eta float64) L // eta: log mean, or log odds; the tail at k grows with eta
+	k     int64
+	alpha float64
+	how   Sides
+	lower bool // the lower bound: own tail P(X >= k)
+}
+
+// joined is how far (in logs) count j is from counting as extreme at eta: <= 0 counts.
+func (a acceptance[L]) joined(eta float64, j int64) float64 {
+	x := a.at(eta)
+	if a.how == MinLike {
+		return x.point(j).minus(x.point(a.k))
+	}
+	return x.side(j, !a.lower, false).logProb() - x.side(a.k, a.lower, false).logProb()
+}
+
+func (a acceptance[L]) excess(eta float64, j int64) float64 {
+	x := a.at(eta)
+	own := x.side(a.k, a.lower, false).prob()
+	return own + x.side(j, !a.lower, false).prob() - a.alpha
+}
+
+// bound walks from eta in steps of about scale.
+func (a acceptance[L]) bound(eta, scale float64) float64 {
+	in := 1.0 // direction of the walk, and of the counts that join
+	if !a.lower {
+		in, scale = -1, -scale
+	}
+	j := a.outermost(eta)
+	for range 100000 {
+		next := j + int64(in)
+		if next == a.k { // every count is in: p is 1 from here on
+			break
+		}
+		end := a.solve(eta, scale, func(e float64) float64 { return -a.joined(e, next) })
+		if math.IsNaN(end) {
+			return end
+		}
+		if a.excess(end, j) > 0 {
+			return bracketed(eta, end, func(e float64) float64 { return a.excess(e, j) })
+		}
+		if a.excess(end, next) > 0 {
+			return end
+		}
+		eta, j = end, next
+	}
+	return a.solve(eta, scale, func(e float64) float64 { return a.excess(e, j) })
+}
+
+// outermost is the most inward count that is joined at eta, one past the support if none is.
+func (a acceptance[L]) outermost(eta float64) int64 {
+	x := a.at(eta)
+	lo, hi := x.support()
+	out := lo - 1 // holds by definition
+	if !a.lower {
+		out = hi + 1
+	}
+	mean, _ := x.spread()
+	return outward(a.k, out, 2*mean-float64(a.k), func(j int64) bool { return a.joined(eta, j) <= 0 })
+}
+
+// solve finds the zero of f, negative (or 0) at eta, by walking in growing steps.
+func (a acceptance[L]) solve(eta, step float64, f func(float64) float64) float64 {
+	for range 200 {
+		end := eta + step
+		if f(end) > 0 {
+			return bracketed(eta, end, f)
+		}
+		eta, step = end, 2*step
+		if math.Abs(eta) > 690 {
+			break
+		}
+	}
+	return math.NaN()
+}
+
+// bracketed solves f = 0 with f(a) <= 0 < f(b) by Chandrupatla's method (1997, Advances in
+// Engineering Software 28), and returns the end where f > 0.
+func bracketed(a, b float64, f func(float64) float64) float64 {
+	fa, fb := f(a), f(b)
+	if fa > 0 {
+		return a
+	}
+	a, b, fa, fb = b, a, fb, fa
+	c, fc, t := a, fa, 0.5
+	for range 200 {
+		x := a + t*(b-a)
+		fx := f(x)
+		if (fx > 0) == (fa > 0) {
+			c, fc = a, fa
+		} else {
+			c, b, fc, fb = b, a, fb, fa
+		}
+		a, fa = x, fx
+		small := 1e-16 * math.Abs(a)
+		if fx == 0 {
+			return a
+		}
+		if math.Abs(b-a) <= 4*small+1e-300 {
+			break
+		}
+		xi, phi := (a-b)/(c-b), (fa-fb)/(fc-fb)
+		t = 0.5
+		if phi*phi < xi && (1-phi)*(1-phi) < 1-xi {
+			t = fa/(fb-fa)*(fc/(fb-fc)) + (c-a)/(b-a)*(fa/(fc-fa))*(fb/(fc-fb))
+		}
+		edge := 2 * small / math.Abs(b-a)
+		t = min(1-edge, max(edge, t))
+	}
+	if fa > 0 || fb <= 0 {
+		return a
+	}
+	return b
+}
+
+// poissonAt and binomialAt are the families by log mean and by log odds.
+func poissonAt(eta float64) Poisson { return Poisson{expTwo(eta, 0), 1} }
+
+func binomialAt(n int64) func(float64) Binomial {
+	return func(eta float64) Binomial {
+		p, q := chancesOf(eta)
+		return Binomial{n, p, q}
+	}
+}
+
+// chancesOf are p and 1-p at log odds eta.
+func chancesOf(eta float64) (p, q float64) {
+	if eta > 0 {
+		q, p = chancesOf(-eta)
+		return p, q
+	}
+	e := expTwo(eta, 0)
+	return e / (1 + e), 1 / (1 + e)
+}
+
+// MeanBounds are two-sided bounds at level 1-alpha of a Poisson mean for n events: the ends of
+// the set of means whose two-sided p-value of the given form exceeds alpha. Central gives Garwood's.
+// Blaker's lie within Garwood's at the same alpha (Blaker 2000, Canadian Journal of Statistics 28);
+// a set with gaps is given by its ends. NaN outside the domain of Garwood.
+func MeanBounds(n int64, alpha float64, how Sides) (lower, upper float64) {
+	lower, upper = Garwood(n, alpha)
+	if how == Central || math.IsNaN(upper) {
+		return lower, upper
+	}
+	if alpha == 1 {
+		return float64(n), float64(n)
+	}
+	scale := 1 / (1 + math.Sqrt(float64(n)))
+	l, u := Garwood(n, alpha/8)
+	a := acceptance[Poisson]{at: poissonAt, k: n, alpha: alpha, how: how, lower: true}
+	if n > 0 {
+		lower = expTwo(a.bound(logOf(l), scale), 0)
+	}
+	a.lower = false
+	return lower, expTwo(a.bound(logOf(u), scale), 0)
+}
+
+// ChanceBounds are two-sided bounds at level 1-alpha of the probability behind x events in n
+// trials, of the given form; Central gives Clopper and Pearson's. NaN outside their domain.
+func ChanceBounds(x, n int64, alpha float64, how Sides) (lower, upper float64) {
+	lower, upper = ClopperPearson(x, n, alpha)
+	if how == Central || math.IsNaN(upper) {
+		return lower, upper
+	}
+	l, u := oddsAccepted(x, n, alpha, how)
+	lower, _ = chancesOf(l)
+	upper, _ = chancesOf(u)
+	return lower, upper
+}
+
+// oddsAccepted are the bounds of the log odds.
+func oddsAccepted(x, n int64, alpha float64, how Sides) (lower, upper float64) {
+	lower, upper = math.Inf(-1), math.Inf(1)
+	a := acceptance[Binomial]{at: binomialAt(n), k: x, alpha: min(alpha, 1-0x1p-50), how: how, lower: true}
+	scale := 1 / (1 + math.Sqrt(float64(min(x, n-x))))
+	if x > 0 {
+		p, q := binomialLower(x, n, alpha/16, false)
+		lower = a.bound(logOf(p/q), scale)
+	}
+	if x < n {
+		a.lower = false
+		q, p := binomialLower(n-x, n, alpha/16, false)
+		upper = a.bound(logOf(p/q), scale)
+	}
+	return lower, upper
+}
+
+// RatioBoundsBy is RatioBounds of the given two-sided form.
+func (x TwoRate) RatioBoundsBy(n int64, alpha float64, how Sides) (lower, upper float64) {
+	lower, upper = x.RatioBounds(n, alpha)
+	if how == Central || math.IsNaN(upper) {
+		return lower, upper
+	}
+	l, u := oddsAccepted(n, n+x.RefEvents, alpha, how)
+	r := x.RefExposure / x.Exposure
+	return math.Exp(l) * r, math.Exp(u) * r
+}
+
+// OddsRatioBoundsBy is OddsRatioBounds of the given two-sided form.
+func (x TwoProportion) OddsRatioBoundsBy(n int64, alpha float64, how Sides) (lower, upper float64) {
+	lower, upper = x.OddsRatioBounds(n, alpha)
+	if how == Central || math.IsNaN(upper) {
+		return lower, upper
+	}
+	at := func(eta float64) FisherNoncentral {
+		return FisherNoncentral{x.Trials, x.RefTrials, n + x.RefEvents, expTwo(eta, 0)}
+	}
+	lo, hi := at(0).support()
+	l, u := x.OddsRatioBounds(n, alpha/8)
+	a := acceptance[FisherNoncentral]{at: at, k: n, alpha: min(alpha, 1-0x1p-50), how: how, lower: true}
+	if n > lo {
+		lower = expTwo(a.bound(logOf(l), 0.1), 0)
+	}
+	a.lower = false
+	if n < hi {
+		upper = expTwo(a.bound(logOf(u), 0.1), 0)
+	}
+	return lower, upper
+}
