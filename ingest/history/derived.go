@@ -3,6 +3,7 @@ package history
 import (
 	"crypto/sha256"
 	"encoding/hex"
+	"slices"
 	"strconv"
 )
 
@@ -17,14 +18,20 @@ func newDerivedIDs() derivedIDs {
 	return derivedIDs{seen: make(map[[16]byte]int)}
 }
 
-func (d derivedIDs) next(canonical []byte) string {
+// identify puts an id into the canonical JSON of an observation without one.
+func (d derivedIDs) identify(canonical []byte) []byte {
+	id := d.next(canonical)
+	return slices.Insert(canonical, 1, id...)
+}
+
+// next returns the field id with its comma.
+func (d derivedIDs) next(canonical []byte) []byte {
 	sum := sha256.Sum256(canonical)
 	key := [16]byte(sum[:16])
 	d.seen[key]++
-	id := make([]byte, 0, 48)
-	id = hex.AppendEncode(append(id, "row-"...), key[:])
+	field := hex.AppendEncode([]byte(`"id":"row-`), key[:])
 	if n := d.seen[key]; n > 1 {
-		id = strconv.AppendInt(append(id, '-'), int64(n), 10)
+		field = strconv.AppendInt(append(field, '-'), int64(n), 10)
 	}
-	return string(id)
+	return append(field, `",`...)
 }

@@ -7,10 +7,11 @@ import (
 	"fmt"
 	"slices"
 	"strings"
-	"tailbell/ingest/wire"
-	"tailbell/monitor"
 	"testing"
 	"time"
+
+	"tailbell/ingest/wire"
+	"tailbell/monitor"
 )
 
 // checkRead reads the text and checks what must hold of every history.

@@ -26,9 +26,10 @@ import (
 	"io"
 	"iter"
 	"slices"
+	"time"
+
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
-	"time"
 )
 
 // Options say how files are read. The zero value reads files that explain

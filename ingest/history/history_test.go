@@ -8,11 +8,12 @@ import (
 	"path/filepath"
 	"slices"
 	"strings"
-	"tailbell/ingest/wire"
-	"tailbell/monitor"
 	"testing"
 	"time"
 	_ "time/tzdata"
+
+	"tailbell/ingest/wire"
+	"tailbell/monitor"
 
 	"github.com/google/go-cmp/cmp"
 )

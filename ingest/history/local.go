@@ -3,9 +3,10 @@ package history
 import (
 	"fmt"
 	"strings"
+	"time"
+
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
-	"time"
 )
 
 // moment reads a time: RFC 3339 with an offset; or, with a zone, a local

@@ -1,10 +1,11 @@
 package history
 
 import (
-	"tailbell/config"
-	"tailbell/monitor"
 	"testing"
 	"time"
+
+	"tailbell/config"
+	"tailbell/monitor"
 )
 
 var hardZones = []string{"UTC", "Europe/Berlin", "America/New_York", "Australia/Lord_Howe", "Pacific/Apia", "America/Sao_Paulo", "Asia/Kathmandu", "Africa/Casablanca", "America/Havana"}

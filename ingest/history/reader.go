@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"io"
 	"os"
+
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
 )
@@ -151,8 +152,7 @@ func (r *reader) observation(item *monitor.Item, line int, raw []byte) {
 	}
 	r.scratch = wire.EncodeObservation(r.scratch[:0], o)
 	if o.ID == "" && !r.opts.NoDerivedIDs {
-		o.ID = r.ids.next(r.scratch)
-		r.scratch = wire.EncodeObservation(r.scratch[:0], o)
+		r.scratch = r.ids.identify(r.scratch)
 		r.history.Counts.DerivedIDs++
 	}
 	r.history.Counts.Observations++

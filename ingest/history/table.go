@@ -7,9 +7,10 @@ import (
 	"io"
 	"slices"
 	"strings"
+	"unicode/utf8"
+
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
-	"unicode/utf8"
 )
 
 // BadRow is the reason of a row that can't be told apart into cells.

@@ -2,10 +2,11 @@ package wire
 
 import (
 	"bytes"
-	"tailbell/monitor"
-	"tailbell/monitor/life"
 	"unicode"
 	"unicode/utf8"
+
+	"tailbell/monitor"
+	"tailbell/monitor/life"
 )
 
 // Bounds of an act's texts, in characters.

@@ -2,10 +2,11 @@ package wire
 
 import (
 	"strings"
-	"tailbell/monitor"
-	"tailbell/monitor/life"
 	"testing"
 	"unicode/utf8"
+
+	"tailbell/monitor"
+	"tailbell/monitor/life"
 
 	"github.com/google/go-cmp/cmp"
 	"pgregory.net/rapid"

@@ -5,9 +5,10 @@ import (
 	"encoding/json"
 	"fmt"
 	"strings"
-	"tailbell/monitor"
 	"testing"
 	"time"
+
+	"tailbell/monitor"
 )
 
 var sink monitor.Message

@@ -4,10 +4,11 @@ import (
 	"bytes"
 	"errors"
 	"strings"
-	"tailbell/config"
-	"tailbell/monitor"
 	"unicode"
 	"unicode/utf8"
+
+	"tailbell/config"
+	"tailbell/monitor"
 )
 
 // MaxIDLength is the longest id of an observation, in characters.

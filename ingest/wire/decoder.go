@@ -28,9 +28,10 @@ package wire
 
 import (
 	"strings"
+	"time"
+
 	"tailbell/config"
 	"tailbell/monitor"
-	"time"
 )
 
 // Raw is one message as the bus stored it.

@@ -4,9 +4,10 @@ import (
 	"bytes"
 	"fmt"
 	"strings"
-	"tailbell/monitor"
 	"testing"
 	"time"
+
+	"tailbell/monitor"
 )
 
 var storedAt = time.Date(2026, 3, 6, 0, 0, 0, 0, time.UTC)

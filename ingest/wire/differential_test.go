@@ -4,8 +4,9 @@ import (
 	"bytes"
 	"fmt"
 	"strings"
-	"tailbell/monitor"
 	"testing"
+
+	"tailbell/monitor"
 
 	"github.com/google/go-cmp/cmp"
 	"pgregory.net/rapid"

@@ -2,8 +2,9 @@ package wire
 
 import (
 	"strconv"
-	"tailbell/monitor"
 	"unicode/utf8"
+
+	"tailbell/monitor"
 )
 
 // EncodeObservation appends the observation as canonical JSON: fields in the

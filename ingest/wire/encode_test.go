@@ -2,9 +2,10 @@ package wire
 
 import (
 	"strings"
+	"testing"
+
 	"tailbell/config"
 	"tailbell/monitor"
-	"testing"
 
 	"github.com/google/go-cmp/cmp"
 	"pgregory.net/rapid"

@@ -5,6 +5,7 @@ import (
 	"mime"
 	"net/url"
 	"strings"
+
 	"tailbell/monitor"
 )
 

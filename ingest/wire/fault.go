@@ -4,8 +4,9 @@ import (
 	"bytes"
 	"fmt"
 	"strings"
-	"tailbell/monitor"
 	"unicode/utf8"
+
+	"tailbell/monitor"
 )
 
 // fault is why something was refused. A nil fault is none.

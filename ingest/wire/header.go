@@ -2,6 +2,7 @@ package wire
 
 import (
 	"strings"
+
 	"tailbell/monitor"
 )
 

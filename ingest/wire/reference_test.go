@@ -8,11 +8,12 @@ import (
 	"regexp"
 	"strconv"
 	"strings"
-	"tailbell/config"
-	"tailbell/monitor"
 	"time"
 	"unicode"
 	"unicode/utf8"
+
+	"tailbell/config"
+	"tailbell/monitor"
 
 	"github.com/go-json-experiment/json/jsontext"
 )

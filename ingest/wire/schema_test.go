@@ -4,8 +4,9 @@ import (
 	"bytes"
 	"slices"
 	"strings"
-	"tailbell/monitor"
 	"testing"
+
+	"tailbell/monitor"
 
 	"github.com/santhosh-tekuri/jsonschema/v6"
 	"pgregory.net/rapid"

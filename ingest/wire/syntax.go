@@ -2,8 +2,9 @@ package wire
 
 import (
 	"bytes"
-	"tailbell/monitor"
 	"unicode/utf8"
+
+	"tailbell/monitor"
 )
 
 // syntax checks JSON text (RFC 8259, and UTF-8 without lone surrogates).

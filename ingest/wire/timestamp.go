@@ -3,8 +3,9 @@ package wire
 import (
 	"fmt"
 	"strings"
-	"tailbell/monitor"
 	"time"
+
+	"tailbell/monitor"
 )
 
 // ParseTime reads an RFC 3339 date-time with its offset. Fractions are cut to
@@ -152,7 +153,52 @@ func whyNoTime(text string) string {
 }
 
 // AppendTime appends the moment in UTC as RFC 3339, with a fraction only if
-// there is one.
+// there is one. It must lie in the years 0000 to 9999.
 func AppendTime(dst []byte, at monitor.Instant) []byte {
-	return at.Time().AppendFormat(dst, "2006-01-02T15:04:05.999999Z07:00")
+	const day = 86400 * 1_000_000
+	days := int(at / day)
+	micros := int(at % day)
+	if micros < 0 {
+		days, micros = days-1, micros+day
+	}
+	year, month, date := civilFromDays(days)
+	seconds := micros / 1_000_000
+	dst = appendPair(appendPair(dst, year/100), year%100)
+	dst = appendPair(append(dst, '-'), month)
+	dst = appendPair(append(dst, '-'), date)
+	dst = appendPair(append(dst, 'T'), seconds/3600)
+	dst = appendPair(append(dst, ':'), seconds/60%60)
+	dst = appendPair(append(dst, ':'), seconds%60)
+	if rest := micros % 1_000_000; rest != 0 {
+		dst = append(dst, '.')
+		for scale := 100_000; rest > 0; scale /= 10 {
+			dst = append(dst, '0'+byte(rest/scale))
+			rest %= scale
+		}
+	}
+	return append(dst, 'Z')
+}
+
+func appendPair(dst []byte, n int) []byte {
+	return append(dst, '0'+byte(n/10), '0'+byte(n%10))
+}
+
+// civilFromDays is the inverse of daysFromCivil. It counts in eras of 400
+// years of 146,097 days, from 1 March of the year 0.
+func civilFromDays(days int) (year, month, day int) {
+	days += 719468
+	era := days / 146097
+	if days < 0 {
+		era = (days - 146096) / 146097
+	}
+	days -= era * 146097
+	yearOfEra := (days - days/1460 + days/36524 - days/146096) / 365
+	dayOfYear := days - (365*yearOfEra + yearOfEra/4 - yearOfEra/100)
+	month = (5*dayOfYear + 2) / 153
+	day = dayOfYear - (153*month+2)/5 + 1
+	year = yearOfEra + era*400
+	if month < 10 {
+		return year, month + 3, day
+	}
+	return year + 1, month - 9, day
 }
