@@ -19,23 +19,23 @@ import (
 )
 
 // write makes a file and returns its path.
-func write(t testing.TB, name, text string) string {
-	t.Helper()
-	path := filepath.Join(t.TempDir(), name)
+func write(tb testing.TB, name, text string) string {
+	tb.Helper()
+	path := filepath.Join(tb.TempDir(), name)
 	if err := os.WriteFile(path, []byte(text), 0o600); err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 	return path
 }
 
-func read(t testing.TB, opts Options, paths ...string) *History {
-	t.Helper()
+func read(tb testing.TB, opts Options, paths ...string) *History {
+	tb.Helper()
 	h, err := Read(context.Background(), paths, opts)
 	if err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 	if n := h.Counts.Observations + h.Counts.Acts; n != len(h.Entries) || n+len(h.Faults) != h.Counts.Rows {
-		t.Errorf("counts %+v, %d entries, %d faults", h.Counts, len(h.Entries), len(h.Faults))
+		tb.Errorf("counts %+v, %d entries, %d faults", h.Counts, len(h.Entries), len(h.Faults))
 	}
 	return h
 }
@@ -57,11 +57,11 @@ func entries(h *History) []string {
 	return list
 }
 
-func zone(t testing.TB, name string) *time.Location {
-	t.Helper()
+func zone(tb testing.TB, name string) *time.Location {
+	tb.Helper()
 	z, err := time.LoadLocation(name)
 	if err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 	return z
 }
@@ -187,6 +187,7 @@ func TestFilesThatCannotBeRead(t *testing.T) {
 		{"x.csv", "series,events\n", "no column says when"},
 		{"x.csv", "series,date,events\n", "in which zone"},
 		{"x.csv", "series,\"date,events\n", "unmatched quotes"},
+		{"x.json", "\n [{}]", "one JSON array"},
 		{"x.txt", "", "tells no format"},
 	} {
 		_, err := Read(context.Background(), []string{write(t, c.name, c.text)}, Options{})

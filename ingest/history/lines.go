@@ -34,6 +34,18 @@ func newLineReader(source io.Reader) *lineReader {
 	return &lineReader{source: bufio.NewReaderSize(source, 64<<10)}
 }
 
+// beginsWith reports whether the first thing in the file is this character.
+func (r *lineReader) beginsWith(c byte) bool {
+	// At the end of a short file Peek gives what there is; an error in reading
+	// comes again with next.
+	head, _ := r.source.Peek(512) //nolint:errcheck // see above
+	head = bytes.TrimLeft(bytes.TrimPrefix(head, []byte(bom)), " \t\r\n")
+	return len(head) > 0 && head[0] == c
+}
+
+// bom is the byte order mark that some editors put before UTF-8.
+const bom = "\xEF\xBB\xBF"
+
 // next returns the next line, valid until the next call; io.EOF after the
 // last. A byte order mark before the first is skipped.
 func (r *lineReader) next() (line, error) {
@@ -54,7 +66,7 @@ func (r *lineReader) next() (line, error) {
 	r.number++
 	l.number = r.number
 	if r.number == 1 {
-		l.text = bytes.TrimPrefix(l.text, []byte("\xEF\xBB\xBF"))
+		l.text = bytes.TrimPrefix(l.text, []byte(bom))
 	}
 	l.text = bytes.TrimSuffix(bytes.TrimSuffix(l.text, []byte("\n")), []byte("\r"))
 	return l, nil

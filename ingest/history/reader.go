@@ -100,6 +100,9 @@ func (r *reader) rows(ctx context.Context, format Format) error {
 		}
 		row = table.row
 	case NDJSON, ByEnding:
+		if r.lines.beginsWith('[') {
+			return errors.New("the file is one JSON array; write its elements without brackets and commas, one a line")
+		}
 		row = r.jsonLine
 	}
 	for n := 1; ; n++ {
