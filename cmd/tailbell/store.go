@@ -1,0 +1,202 @@
+package main
+
+import (
+	"errors"
+	"fmt"
+	"io"
+	"os"
+	"path/filepath"
+	"slices"
+
+	"github.com/spf13/cobra"
+
+	"tailbell/monitor/store"
+)
+
+// newStoreCommand returns "tailbell store": what can be done with the files
+// that hold the partitions' states, while no daemon has them.
+func newStoreCommand() *cobra.Command {
+	c := &cobra.Command{
+		Use:   "store",
+		Short: "Check the stores of a folder whole, or copy them",
+		Args:  cobra.NoArgs,
+		RunE:  func(c *cobra.Command, _ []string) error { return c.Help() },
+	}
+	c.AddCommand(newStoreCheckCommand(), newStoreCopyCommand())
+	return c
+}
+
+func newStoreCheckCommand() *cobra.Command {
+	var asJSON bool
+	c := &cobra.Command{
+		Use:   "check FOLDER|FILE",
+		Short: "Read every page and value of a store, and say what is wrong",
+		Long: `Reads every page and value of a store with its checksum, and compares counts,
+indexes and cursors. FOLDER stands for all stores in it. Nothing is written.
+
+It fails if anything is wrong, and names it. A store that a daemon has open is
+not looked at: stop the daemon, or check a copy.`,
+		Args: cobra.ExactArgs(1),
+		RunE: func(c *cobra.Command, args []string) error { return checkStores(c, args[0], asJSON) },
+	}
+	c.Flags().BoolVar(&asJSON, "json", false, "print the findings as JSON, one object a store")
+	return c
+}
+
+// storeFinding is what "store check --json" prints of one store.
+type storeFinding struct {
+	File   string       `json:"file"`
+	Sound  bool         `json:"sound"`
+	Error  string       `json:"error,omitempty"`
+	Report store.Report `json:"report"`
+}
+
+func checkStores(c *cobra.Command, path string, asJSON bool) error {
+	files, err := storeFiles(path)
+	if err != nil {
+		return err
+	}
+	sound := true
+	for _, file := range files {
+		report, err := store.CheckFile(c.Context(), file, store.Options{})
+		if c.Context().Err() != nil {
+			return err
+		}
+		sound = sound && err == nil
+		if err := tellCheck(c.OutOrStdout(), file, report, err, asJSON); err != nil {
+			return err
+		}
+	}
+	if !sound {
+		return errReported
+	}
+	return nil
+}
+
+func tellCheck(w io.Writer, file string, r store.Report, found error, asJSON bool) error {
+	if asJSON {
+		finding := storeFinding{File: file, Sound: found == nil, Report: r}
+		if found != nil {
+			finding.Error = found.Error()
+		}
+		return writeJSON(w, finding)
+	}
+	if found != nil {
+		return tellFaults(w, file, r.Faults, found)
+	}
+	_, err := fmt.Fprintf(w, `%s is sound.
+  %s, format %d
+  stands at position %d of its stream after %d commits
+  %d series, %d of them written whole, %d patches since; %d ids in %d generations; %d archived slots
+  %d alerts, %d of them not done; %d steps wait for %d outlets
+  %d refused, %d of them listed, %d with their bytes; %d set-ups
+  %.1f MiB, %.1f MiB of them free
+`, file, r.Identity, r.Format, r.Position, r.Commits,
+		r.Series, r.States, r.Patches, r.IDs, r.Generations, r.Archived,
+		r.Alerts, r.OpenAlerts, r.OutboxRows, r.Outlets,
+		r.Refused, r.RefusedRows, r.RefusedRaw, r.Settings,
+		float64(r.FileBytes)/(1<<20), float64(r.FreeBytes)/(1<<20))
+	if err == nil && r.TornMeta {
+		_, err = fmt.Fprintln(w, "  The last commit broke off; the store stands at the one before it. The stream brings it again.")
+	}
+	return err
+}
+
+func tellFaults(w io.Writer, file string, faults []string, found error) error {
+	if len(faults) == 0 {
+		_, err := fmt.Fprintf(w, "%s can't be checked: %v\n", file, found)
+		return err
+	}
+	if _, err := fmt.Fprintf(w, "%s is damaged:\n", file); err != nil {
+		return err
+	}
+	for _, fault := range faults {
+		if _, err := fmt.Fprintf(w, "  %s\n", fault); err != nil {
+			return err
+		}
+	}
+	_, err := fmt.Fprintln(w, "It was left untouched. Put back a copy, or move it away so that it is built again from the stream.")
+	return err
+}
+
+// storeFiles returns the stores that a path names.
+func storeFiles(path string) ([]string, error) {
+	info, err := os.Stat(path)
+	if err != nil || !info.IsDir() {
+		return []string{path}, err
+	}
+	files, err := filepath.Glob(filepath.Join(globEscape(path), "*.store"))
+	if err == nil && len(files) == 0 {
+		err = fmt.Errorf("no stores in %s: name the folder of the set-up, or a file", path)
+	}
+	slices.Sort(files)
+	return files, err
+}
+
+// globEscape keeps a folder's name from being read as a pattern.
+func globEscape(path string) string {
+	var b []byte
+	for _, c := range []byte(path) {
+		if slices.Contains([]byte(`*?[\`), c) && filepath.Separator == '/' {
+			b = append(b, '\\')
+		}
+		b = append(b, c)
+	}
+	return string(b)
+}
+
+func newStoreCopyCommand() *cobra.Command {
+	return &cobra.Command{
+		Use:   "copy FOLDER|FILE TO",
+		Short: "Copy stores that no daemon has open",
+		Long: `Copies a store into the new file TO, or all stores of a folder into the folder
+TO. A copy appears under its name once it is complete, checked and on the disk;
+what is there already is never written over.`,
+		Args: cobra.ExactArgs(2),
+		RunE: func(c *cobra.Command, args []string) error { return copyStores(c.OutOrStdout(), args[0], args[1]) },
+	}
+}
+
+func copyStores(w io.Writer, from, to string) error {
+	files, err := storeFiles(from)
+	if err != nil {
+		return err
+	}
+	info, err := os.Stat(from)
+	if err != nil {
+		return err
+	}
+	if info.IsDir() {
+		if err := os.MkdirAll(to, 0o700); err != nil {
+			return err
+		}
+	}
+	for _, file := range files {
+		target := to
+		if info.IsDir() {
+			target = filepath.Join(to, filepath.Base(file))
+		}
+		if err := copyStore(w, file, target); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+func copyStore(w io.Writer, from, to string) (err error) {
+	s, err := store.OpenReadOnly(from, store.Options{})
+	if err != nil {
+		return err
+	}
+	defer func() { err = errors.Join(err, s.Close()) }()
+	n, err := s.CopyTo(to)
+	if err != nil {
+		return err
+	}
+	position, err := s.Position()
+	if err != nil {
+		return err
+	}
+	_, err = fmt.Fprintf(w, "%s: %d bytes, at position %d of its stream\n", to, n, position)
+	return err
+}
