@@ -162,10 +162,19 @@ func (d *Decoder) act(m monitor.Message, r Raw) monitor.Message {
 func setting(m monitor.Message, r Raw) monitor.Message {
 	setup, err := config.Parse(r.Data, "setting")
 	if err != nil {
-		return rejected(m, refuse(monitor.BadSetting, "%v", err), r.Data)
+		return rejected(m, refuse(monitor.BadSetting, "%s", shorten(err.Error())), r.Data)
 	}
 	m.Kind, m.Setting = monitor.SettingMessage, monitor.Setting{Setup: setup}
 	return m
+}
+
+// shorten cuts a list of faults at a line's end.
+func shorten(faults string) string {
+	const most = 4096
+	if len(faults) <= most {
+		return faults
+	}
+	return faults[:strings.LastIndexByte(faults[:most], '\n')+1] + "and more"
 }
 
 func tick(m monitor.Message, r Raw, live bool) monitor.Message {

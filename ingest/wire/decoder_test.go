@@ -7,6 +7,7 @@ import (
 	"testing"
 	"time"
 
+	"tailbell/config"
 	"tailbell/monitor"
 )
 
@@ -176,7 +177,15 @@ func TestSubjectsAndHeaders(t *testing.T) {
 			t.Errorf("%s %v: %s, want %s", c.subject, c.header, got, c.want)
 		}
 	}
-	m := decode(t, NewDecoder(Limits{}), "x.in.0.tick", "", "Tailbell-Time", "2026-03-02T01:00:00+01:00")
+	m := decode(t, NewDecoder(Limits{}), "x.in.0.set", strings.Repeat("nonsense = 1\n", 5000))
+	if n := len(m.Items[0].Detail); n > 5000 {
+		t.Errorf("the faults of a set-up fill %d bytes", n)
+	}
+	m = decode(t, NewDecoder(Limits{}), "x.in.0.set", string(config.Sample()))
+	if got := outcome(m); got != "set" || m.Setting.Setup.Name == "" {
+		t.Errorf("the sample set-up: %s %+v", got, m.Items)
+	}
+	m = decode(t, NewDecoder(Limits{}), "x.in.0.tick", "", "Tailbell-Time", "2026-03-02T01:00:00+01:00")
 	if want := monitor.InstantOf(time.Date(2026, 3, 2, 0, 0, 0, 0, time.UTC)); !m.HasTime || m.Time != want {
 		t.Errorf("time %d %v, want %d", m.Time, m.HasTime, want)
 	}

@@ -4,6 +4,7 @@ import (
 	"encoding/base64"
 	"mime"
 	"net/url"
+	"slices"
 	"strings"
 
 	"tailbell/monitor"
@@ -60,12 +61,17 @@ func mediaType(contentType string) string {
 
 // headerAttributes returns the attributes of a CloudEvent in binary mode.
 func headerAttributes(header map[string][]string) (map[string]attribute, *fault) {
-	var attributes map[string]attribute
+	var keys []string
 	for key, values := range header {
-		if len(key) < 3 || !strings.EqualFold(key[:3], "ce-") || len(values) == 0 {
-			continue
+		if len(key) > 2 && strings.EqualFold(key[:3], "ce-") && len(values) > 0 {
+			keys = append(keys, key)
 		}
-		name := strings.ToLower(key[3:])
+	}
+	// In order, so that the same message gives the same refusal.
+	slices.Sort(keys)
+	var attributes map[string]attribute
+	for _, key := range keys {
+		name, values := strings.ToLower(key[3:]), header[key]
 		if _, twice := attributes[name]; twice || len(values) > 1 {
 			return nil, refuse(monitor.BadEnvelope, "the header ce-%s is given more than once; give it once", clip(name))
 		}
