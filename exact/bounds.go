@@ -73,9 +73,11 @@ func poissonBound(k, a float64, upper, mid bool) float64 {
 		}
 		d := f / slope
 		step := -d / (1 - min(0.5, max(-0.5, 0.5*d*bend)))
-		next := mu * expTwo(step, 0)
+		next := mu
 		if math.Abs(step) < 1e-3 {
-			next = mu + mu*(step+step*step/2+step*step*step/6)
+			next += float64(mu*step) * math.FMA(step, math.FMA(step, 1.0/6, 0.5), 1)
+		} else {
+			next *= expTwo(step, 0)
 		}
 		if math.Abs(step) < 2e-6/(1+math.Abs(bend)) || next == mu {
 			return next
@@ -130,12 +132,15 @@ func poissonStart(k, a float64, upper bool) float64 {
 	z := normalQuantile(a)
 	if upper {
 		c := 1 - 1/(9*k) - z/(3*math.Sqrt(k))
+		if c > 0.5 {
+			return k * c * c * c
+		}
 		g := 0.0
 		if c > 0 {
 			g = k * c * c * c
 		}
 		// P(X >= k) < mu^k/k!: the mean is at least this
-		l := (logOf(a) + 0.5*logOf(2*math.Pi*k) + k*logOf(k) - k + 1/(12*k)) / k
+		l := (roughLog(max(a, 0x1p-1022)) + 0.5*roughLog(2*math.Pi*k) + k*roughLog(k) - k + 1/(12*k)) / k
 		return max(g, expTwo(l, 0))
 	}
 	k++
@@ -149,7 +154,7 @@ func normalQuantile(a float64) float64 {
 	if a >= 0.5 {
 		return 0
 	}
-	t := math.Sqrt(-2 * logOf(a))
+	t := math.Sqrt(-2 * roughLog(max(a, 0x1p-1022)))
 	return t - (2.515517+t*(0.802853+t*0.010328))/(1+t*(1.432788+t*(0.189269+t*0.001308)))
 }
 
@@ -195,14 +200,16 @@ func binomialLower(x, n int64, a float64, mid bool) (p, q float64) {
 		}
 		d := f / slope
 		step := -d / (1 - min(0.5, max(-0.5, 0.5*d*bend)))
+		if math.Abs(step) < 2e-6/(1+math.Abs(bend)) {
+			return shiftOdds(p, q, step)
+		}
 		odds := logOf(p / q)
 		if f > 0 {
 			hi = min(hi, odds)
 		} else {
 			lo = max(lo, odds)
 		}
-		small := math.Abs(step) < 2e-6/(1+math.Abs(bend))
-		if !small && !(odds+step > lo && odds+step < hi) {
+		if !(odds+step > lo && odds+step < hi) {
 			next := 0.5 * (lo + hi)
 			if math.IsInf(next, 0) {
 				next = odds + math.Copysign(1, step)
@@ -213,24 +220,23 @@ func binomialLower(x, n int64, a float64, mid bool) (p, q float64) {
 			step = next - odds
 		}
 		p, q = shiftOdds(p, q, step)
-		if small {
-			return p, q
-		}
 	}
 	return p, q
 }
 
 // shiftOdds multiplies the odds p/q by exp(step).
 func shiftOdds(p, q, step float64) (float64, float64) {
-	e := math.Expm1(step)
-	if p <= q {
-		// p' = p e^s/(q + p e^s) = p + p q e/(1 + p e)
-		p += p * q * e / (1 + p*e)
-		return p, 1 - p
+	if p > q {
+		q, p = shiftOdds(q, p, -step)
+		return p, q
 	}
-	e = math.Expm1(-step)
-	q += p * q * e / (1 + q*e)
-	return 1 - q, q
+	e := float64(step * math.FMA(step, math.FMA(step, 1.0/6, 0.5), 1)) // e^step - 1
+	if math.Abs(step) > 1e-3 {
+		e = math.Expm1(step)
+	}
+	// p' = p e^s/(q + p e^s) = p + p q e/(1 + p e)
+	p = math.FMA(p, float64(q*e)/math.FMA(p, e, 1), p)
+	return p, 1 - p
 }
 
 // betaStart is a first guess at the lower bound, from the F-like form of Wilson and Hilferty
@@ -250,8 +256,8 @@ func betaStart(k, n, a float64) float64 {
 		}
 	}
 	if k == 1 {
-		return max(-math.Expm1(math.Log1p(-a)/n), 1e-300)
+		return max(-math.Expm1(log1pOf(-a)/n), 1e-300)
 	}
-	l := logOf(a)/k - 0.1
+	l := roughLog(max(a, 0x1p-1022))/k - 0.1
 	return min(0.5, max(expTwo(l, 0)*k/(n+1), 1e-300))
 }

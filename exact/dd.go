@@ -153,3 +153,17 @@ func log1pOf(x float64) float64 {
 	}
 	return twoSum(1, x).log().float()
 }
+
+// roughLog is the logarithm of a normal x > 0 to about 1e-10: for starting values.
+func roughLog(x float64) float64 {
+	bits := math.Float64bits(x)
+	m := math.Float64frombits(bits&(1<<52-1) | 1023<<52)
+	e := int(bits>>52) - 1023
+	if m > math.Sqrt2 {
+		m *= 0.5
+		e++
+	}
+	row := &logTable[int(m*256+0.5)-181]
+	r := math.FMA(m, row[0], -1)
+	return math.FMA(float64(e), ln2Head, row[1]) + math.FMA(float64(r*r), math.FMA(r, 1.0/3, -0.5), r)
+}

@@ -111,6 +111,13 @@ func poissonPoint(k float64, mu dd) point {
 	if k == 0 {
 		return point{-mu.hi, -mu.lo, 1}
 	}
+	if k <= 8 && mu.hi < 500 && mu.hi > 0x1p-100 {
+		w := mu.hi
+		for range int(k) - 1 {
+			w *= mu.hi
+		}
+		return point{-mu.hi, -mu.lo + k*mu.lo/mu.hi, float64(w * inverseFactorial[int(k)])}
+	}
 	d := mu.addFloat(-k).add(xlog(k, mu))
 	e := d.neg().addFloat(-stirling(k))
 	return point{e.hi, e.lo, 1 / math.Sqrt(circle(k))}
@@ -127,6 +134,14 @@ func binomialPoint(k, n float64, p, q dd) point {
 		return point{d.hi, d.lo, 1}
 	}
 	m := n - k
+	if k <= 8 && p.hi > 0x1p-60 && n*p.hi < 500 && p.lo == 0 {
+		d := q.log().mulFloat(m)
+		w := n * p.hi
+		for i := 1.0; i < k; i++ {
+			w *= float64((n - i) * p.hi)
+		}
+		return point{d.hi, d.lo, float64(w * inverseFactorial[int(k)])}
+	}
 	d := xlog(k, p.mulFloat(n)).add(xlog(m, q.mulFloat(n)))
 	e := d.neg().addFloat(stirling(n) - stirling(k) - stirling(m))
 	return point{e.hi, e.lo, math.Sqrt(n / (2 * math.Pi * k * m))}

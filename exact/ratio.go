@@ -30,30 +30,76 @@ func logLess1(x float64) float64 {
 }
 
 // panel integrates exp(-c u + a g(u*su) + b g(u*sv)) over u from 0 to t, g(x) = log(1+x)-x,
-// by one 32-point Gauss-Legendre panel. Both g terms are negative: nothing cancels.
+// by one Gauss-Legendre panel. Both g terms are negative: nothing cancels.
 func panel(c, a, su, b, sv, t float64) float64 {
+	if t*max(1, math.Abs(sv)) < 0.02 {
+		return shortPanel(c, a, su, b, sv, t)
+	}
 	sum := 0.0
-	for i := range gaussTable {
-		u := t * gaussTable[i][0]
+	for i := range shortGauss {
+		u := t * shortGauss[i][0]
 		e := math.FMA(-c, u, float64(a*logLess1(u*su)))
 		if b != 0 {
 			e = math.FMA(b, logLess1(u*sv), e)
 		}
-		sum = math.FMA(gaussTable[i][1], expTwo(e, 0), sum)
+		sum = math.FMA(shortGauss[i][1], expTwo(e, 0), sum)
+	}
+	return t * sum
+}
+
+// shortPanel is panel with g as one polynomial in x = u/t: its 13 terms suffice for |u|, |u sv|
+// under 0.02.
+func shortPanel(c, a, su, b, sv, t float64) float64 {
+	var g [14]float64
+	x, y := t*su, t*sv
+	px, py := -a*x, -b*y
+	for n := 2; n < len(g); n++ {
+		px, py = -px*x, -py*y
+		g[n] = (px + py) * -inverse[n]
+	}
+	g[1] = -c * t
+	sum := 0.0
+	if t*max(1, math.Abs(sv)) < 2e-3 { // 76 x^7/9 is under 2^-58
+		for i := range shortGauss {
+			u := shortGauss[i][0]
+			z := float64(u * u)
+			even := math.FMA(math.FMA(math.FMA(g[8], z, g[6]), z, g[4]), z, g[2])
+			odd := math.FMA(math.FMA(math.FMA(g[7], z, g[5]), z, g[3]), z, g[1])
+			sum = math.FMA(shortGauss[i][1], expTwo(math.FMA(even, z, float64(odd*u)), 0), sum)
+		}
+		return t * sum
+	}
+	for i := range shortGauss {
+		u := shortGauss[i][0]
+		z := float64(u * u)
+		even := math.FMA(math.FMA(g[12], z, g[10]), z, g[8])
+		even = math.FMA(math.FMA(math.FMA(even, z, g[6]), z, g[4]), z, g[2])
+		odd := math.FMA(math.FMA(g[13], z, g[11]), z, g[9])
+		odd = math.FMA(math.FMA(math.FMA(math.FMA(odd, z, g[7]), z, g[5]), z, g[3]), z, g[1])
+		sum = math.FMA(shortGauss[i][1], expTwo(math.FMA(even, z, float64(odd*u)), 0), sum)
 	}
 	return t * sum
 }
 
 // poissonUpperRatio is P(X >= k)/P(X = k) for k >= 1, k above mu or near it.
 func poissonUpperRatio(k float64, mu dd) float64 {
-	c := dd{k - 1, 0}.add(mu.neg()).float()
-	if t := reach(c, k-1); k*t > directTerms {
-		return k * panel(c, k-1, -1, 0, 0, min(t, 1))
+	if k > directTerms {
+		c := dd{k - 1, 0}.add(mu.neg()).float()
+		if t := reach(c, k-1); k*t > directTerms {
+			return k * panel(c, k-1, -1, 0, 0, min(t, 1))
+		}
 	}
 	t, sum := 1.0, 1.0
-	for d := k + 1; t > 0x1p-56*sum; d++ {
-		t *= mu.hi / d
-		sum += t
+	if k < float64(len(inverse)-2*directTerms) { // t is under 2^-56 by 2*directTerms terms
+		for i := int(k) + 1; t > 0x1p-56*sum; i++ {
+			t *= float64(mu.hi * inverse[i])
+			sum += t
+		}
+	} else {
+		for d := k + 1; t > 0x1p-56*sum; d++ {
+			t *= mu.hi / d
+			sum += t
+		}
 	}
 	if mu.lo != 0 {
 		sum += mu.lo / mu.hi * (k - sum*(k-mu.hi))
@@ -63,9 +109,11 @@ func poissonUpperRatio(k float64, mu dd) float64 {
 
 // poissonLowerRatio is P(X <= k)/P(X = k) for k >= 0, k below mu or near it.
 func poissonLowerRatio(k float64, mu dd) float64 {
-	c := mu.addFloat(-k).float()
-	if t := reach(c, k); min(mu.hi*t, k) > directTerms {
-		return mu.hi * panel(c, k, 1, 0, 0, t)
+	if k > directTerms {
+		c := mu.addFloat(-k).float()
+		if t := reach(c, k); mu.hi*t > directTerms {
+			return mu.hi * panel(c, k, 1, 0, 0, t)
+		}
 	}
 	inv := 1 / mu.hi
 	t, sum := 1.0, 1.0
