@@ -4,6 +4,7 @@ import (
 	"encoding/binary"
 	"fmt"
 	"slices"
+
 	"tailbell/monitor/life"
 
 	bolt "go.etcd.io/bbolt"

@@ -3,8 +3,11 @@ package store
 import (
 	"fmt"
 	"path/filepath"
-	"tailbell/monitor"
 	"testing"
+
+	bolt "go.etcd.io/bbolt"
+
+	"tailbell/monitor"
 )
 
 // benchStore makes a store, fsynced, that knows so many series.
@@ -96,6 +99,20 @@ func BenchmarkOpen(b *testing.B) {
 			b.Fatal(len(snap.Series), len(snap.IDs), err)
 		}
 		if err := s.Close(); err != nil {
+			b.Fatal(err)
+		}
+	}
+}
+
+// BenchmarkBareCommit is the yardstick: one small key in one fsynced commit.
+// Disks differ and so do their days; only ratios to it mean something.
+func BenchmarkBareCommit(b *testing.B) {
+	s, _ := benchStore(b, 1)
+	for b.Loop() {
+		err := s.db.Update(func(tx *bolt.Tx) error {
+			return tx.Bucket([]byte(headerShelf.name)).Put([]byte("key"), []byte("value"))
+		})
+		if err != nil {
 			b.Fatal(err)
 		}
 	}

@@ -2,6 +2,7 @@ package store
 
 import (
 	"fmt"
+
 	"tailbell/monitor"
 	"tailbell/monitor/life"
 )

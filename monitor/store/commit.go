@@ -2,6 +2,7 @@ package store
 
 import (
 	"fmt"
+
 	"tailbell/monitor"
 
 	bolt "go.etcd.io/bbolt"

@@ -6,8 +6,9 @@ import (
 	"fmt"
 	"slices"
 	"syscall"
-	"tailbell/monitor"
 	"testing"
+
+	"tailbell/monitor"
 )
 
 func TestCommitMovesForward(t *testing.T) {
@@ -210,5 +211,63 @@ func TestSettings(t *testing.T) {
 	settings, err := s.Settings()
 	if got := fmt.Sprint(settings); err != nil || got != fmt.Sprint([]monitor.SettingChange{*one, *two}) {
 		t.Errorf("Settings gave %s, %v", got, err)
+	}
+}
+
+// TestJournalIsTrimmed: what the checkpoint has passed twice is cut off, a
+// bounded number of keys at a time, and the file stops growing.
+func TestJournalIsTrimmed(t *testing.T) {
+	s := create(t, Options{})
+	state := []monitor.SeriesChange{{Number: 0, Data: []byte("s")}}
+	for position := uint64(1); position <= 1000; position++ {
+		mustCommit(t, s, monitor.Changes{Position: position, Series: state}, Mark{})
+	}
+	expect := func(when string, first uint64) {
+		t.Helper()
+		if report, err := s.Check(t.Context()); err != nil || report.JournalFirst != first {
+			t.Errorf("%s the journal begins at %d, %v; want %d", when, report.JournalFirst, err, first)
+		}
+	}
+	expect("before a checkpoint", 1)
+	mustCommit(t, s, monitor.Changes{Position: 1001, States: state, Cycle: 1}, Mark{})
+	expect("in the first round", 1)
+	mustCommit(t, s, monitor.Changes{Position: 1002, States: state, Cycle: 2}, Mark{})
+	expect("in the second round", 1+trimKeys)
+	mustCommit(t, s, monitor.Changes{Position: 1003}, Mark{})
+	expect("after another commit", 1001)
+	var size int64
+	for position := uint64(1004); position <= 3000; position++ {
+		mustCommit(t, s, monitor.Changes{
+			Position: position, Series: []monitor.SeriesChange{{Number: 0, Data: make([]byte, 10_000)}},
+			States: state, Cycle: position,
+		}, Mark{})
+		if position == 1100 {
+			_, info := contents(t, s.path)
+			size = info.Size()
+		}
+	}
+	expect("in the end", 2999)
+	if _, info := contents(t, s.path); info.Size() > size {
+		t.Errorf("the file grew from %d to %d bytes", size, info.Size())
+	}
+}
+
+// TestHalfAnEntryTrimmed: an entry of many parts may be cut off in the middle.
+func TestHalfAnEntryTrimmed(t *testing.T) {
+	s := create(t, Options{})
+	var big []monitor.SeriesChange
+	for n := range uint32(3) {
+		big = append(big, monitor.SeriesChange{Number: n, Data: make([]byte, partSize)})
+	}
+	for position := uint64(1); position < trimKeys; position++ {
+		mustCommit(t, s, monitor.Changes{Position: position, Series: []monitor.SeriesChange{{Number: 0}}}, Mark{})
+	}
+	mustCommit(t, s, monitor.Changes{Position: 1000, Series: big}, Mark{})
+	states := []monitor.SeriesChange{{Number: 0}, {Number: 1}, {Number: 2}}
+	mustCommit(t, s, monitor.Changes{Position: 1001, States: states, Cycle: 2}, Mark{})
+	s = reopen(t, s)
+	snap, err := s.Snapshot()
+	if err != nil || len(snap.Series[0].Patches) != 0 || len(snap.Series[2].Patches) != 1 {
+		t.Errorf("Snapshot: %d patches of the first, %d of the last, %v", len(snap.Series[0].Patches), len(snap.Series[2].Patches), err)
 	}
 }

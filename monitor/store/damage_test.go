@@ -9,8 +9,9 @@ import (
 	"math/rand/v2"
 	"os"
 	"path/filepath"
-	"tailbell/monitor"
 	"testing"
+
+	"tailbell/monitor"
 
 	"pgregory.net/rapid"
 )
@@ -259,4 +260,48 @@ func TestCheckFindsContradictions(t *testing.T) {
 			}
 		})
 	}
+}
+
+// TestPagesInACircle turns a branch page's child into the page itself, which
+// would send bbolt round for ever.
+func TestPagesInACircle(t *testing.T) {
+	sound, _ := filled(t)
+	path := filepath.Join(t.TempDir(), "p0.db")
+	circles := 0
+	for id := uint64(2); id < uint64(len(sound)/pageSize); id++ {
+		page := sound[id*pageSize : (id+1)*pageSize]
+		if order.Uint64(page) != id || order.Uint16(page[8:]) != flagBranch {
+			continue
+		}
+		circles++
+		b := bytes.Clone(sound)
+		order.PutUint64(b[id*pageSize+pageHeader+8:], id)
+		if err := os.WriteFile(path, b, 0o600); err != nil {
+			t.Fatal(err)
+		}
+		refusedUnlessWhole(t, path, ErrDamaged) // a free page may hold an old branch
+	}
+	if circles == 0 {
+		t.Error("the file has no branch page")
+	}
+}
+
+// TestBrokenAssertions: what bbolt panics about is an error here.
+func TestBrokenAssertions(t *testing.T) {
+	if err := guard(func() error { panic("assertion failed: page 7") }); !errors.Is(err, ErrDamaged) {
+		t.Errorf("a panic gave %v, want ErrDamaged", err)
+	}
+	s := create(t, Options{})
+	mustCommit(t, s, monitor.Changes{Position: 1}, Mark{})
+	s.fault = func(step string) error {
+		if step == "commit written" {
+			panic("page 7 already freed")
+		}
+		return nil
+	}
+	if err := s.Commit(monitor.Changes{Position: 2}, Mark{}); !errors.Is(err, ErrDamaged) {
+		t.Errorf("a panic in a commit gave %v, want ErrDamaged", err)
+	}
+	s.fault = nil
+	mustCommit(t, s, monitor.Changes{Position: 2}, Mark{}) // its locks were let go
 }

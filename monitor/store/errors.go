@@ -72,7 +72,8 @@ func translate(err error, during bool) error {
 		return ErrReadOnly
 	case errors.Is(err, bolterrors.ErrMaxSizeReached),
 		errors.Is(err, syscall.ENOSPC),
-		errors.Is(err, syscall.EDQUOT):
+		errors.Is(err, syscall.EDQUOT),
+		errors.Is(err, syscall.EFBIG):
 		return errors.Join(ErrFull, err)
 	case during:
 		return errors.Join(ErrFailed, err)

@@ -2,8 +2,9 @@ package store
 
 import (
 	"fmt"
-	"tailbell/monitor"
 	"time"
+
+	"tailbell/monitor"
 
 	bolt "go.etcd.io/bbolt"
 )

@@ -3,6 +3,7 @@ package store
 import (
 	"encoding/binary"
 	"fmt"
+
 	"tailbell/monitor"
 
 	bolt "go.etcd.io/bbolt"
@@ -49,24 +50,17 @@ func (r rack) generation(key []byte) *rack {
 	return &rack{Bucket: b, shelf: idShelf(key)}
 }
 
-// writeIDs appends ids to their generations, but for those that are dropped,
-// and forgets the dropped ones.
+// writeIDs appends ids to their generations, and then forgets those that are
+// dropped, even if they were touched.
 func writeIDs(tx *bolt.Tx, h *head, changes *monitor.Changes) error {
 	if len(changes.IDs) == 0 && len(changes.DroppedGenerations) == 0 {
 		return nil
-	}
-	dropped := make(map[int64]bool, len(changes.DroppedGenerations))
-	for _, g := range changes.DroppedGenerations {
-		dropped[g] = true
 	}
 	// One packer for each generation touched, in the order of touching.
 	var packers []*packer
 	at := map[int64]*packer{}
 	for _, id := range changes.IDs {
 		h.IDs++
-		if dropped[id.Generation] {
-			continue
-		}
 		p := at[id.Generation]
 		if p == nil {
 			p = &packer{generation: id.Generation}

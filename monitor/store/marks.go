@@ -4,6 +4,7 @@ import (
 	"encoding/binary"
 	"encoding/hex"
 	"fmt"
+
 	"tailbell/monitor"
 
 	bolt "go.etcd.io/bbolt"

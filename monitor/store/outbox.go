@@ -3,6 +3,7 @@ package store
 import (
 	"errors"
 	"fmt"
+
 	"tailbell/monitor/life"
 
 	bolt "go.etcd.io/bbolt"

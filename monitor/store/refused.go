@@ -4,8 +4,9 @@ import (
 	"fmt"
 	"math"
 	"slices"
-	"tailbell/monitor"
 	"time"
+
+	"tailbell/monitor"
 
 	bolt "go.etcd.io/bbolt"
 )

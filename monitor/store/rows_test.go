@@ -4,10 +4,11 @@ import (
 	"errors"
 	"fmt"
 	"slices"
-	"tailbell/monitor"
-	"tailbell/monitor/life"
 	"testing"
 	"time"
+
+	"tailbell/monitor"
+	"tailbell/monitor/life"
 )
 
 func notices(position uint64, n int) []life.Notice {

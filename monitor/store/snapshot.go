@@ -4,6 +4,7 @@ import (
 	"cmp"
 	"fmt"
 	"slices"
+
 	"tailbell/monitor"
 
 	bolt "go.etcd.io/bbolt"

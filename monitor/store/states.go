@@ -3,6 +3,7 @@ package store
 import (
 	"encoding/binary"
 	"fmt"
+
 	"tailbell/monitor"
 
 	bolt "go.etcd.io/bbolt"

@@ -8,9 +8,10 @@ import (
 	"os"
 	"path/filepath"
 	"strings"
-	"tailbell/monitor"
 	"testing"
 	"time"
+
+	"tailbell/monitor"
 
 	bolt "go.etcd.io/bbolt"
 )

@@ -10,9 +10,10 @@ import (
 	"path/filepath"
 	"slices"
 	"strings"
+	"testing"
+
 	"tailbell/monitor"
 	"tailbell/monitor/life"
-	"testing"
 
 	"github.com/google/go-cmp/cmp"
 	"github.com/google/go-cmp/cmp/cmpopts"
