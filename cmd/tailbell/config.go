@@ -3,6 +3,7 @@ package main
 import (
 	"errors"
 	"fmt"
+
 	"tailbell/config"
 	"tailbell/ingest/wire"
 

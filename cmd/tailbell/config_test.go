@@ -6,9 +6,10 @@ import (
 	"os"
 	"path/filepath"
 	"strings"
+	"testing"
+
 	"tailbell/config"
 	"tailbell/ingest/wire"
-	"testing"
 )
 
 // runConfig runs "tailbell config ARGS" and returns what it printed.
