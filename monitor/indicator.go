@@ -73,9 +73,10 @@ func (ix *indicator) due(boundary int64) Instant {
 	return ix.cal.Start(boundary).Add(ix.cfg.Settle)
 }
 
-// frozen is the slot before which data can't change any more.
+// frozen is the latest boundary before which no slot can change any more: a
+// slot that ended exactly at the horizon still can.
 func (ix *indicator) frozen(clock Instant) int64 {
-	return ix.cal.Slot(clock.Add(-ix.cfg.Horizon))
+	return ix.cal.Slot(clock.Add(-ix.cfg.Horizon) - 1)
 }
 
 // epochAt is the version in force when looks at the boundary fell due.
