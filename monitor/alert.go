@@ -138,9 +138,11 @@ func (e *Engine) step(a *alert, s life.Step) {
 
 // take takes a step of the alert, if its condition allows.
 func (e *Engine) take(a *alert, s life.Step) error {
+	before := a.record.Since
 	a.record.Since = e.since(a)
 	notices, err := a.record.Take(s)
 	if err != nil {
+		a.record.Since = before
 		return err
 	}
 	e.steps = append(e.steps, notices...)
