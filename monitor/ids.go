@@ -8,7 +8,7 @@ import (
 )
 
 // ids remembers what every observation with an id last said, in generations
-// by the end of its interval that are forgotten whole once they lie beyond
+// by the end of its last slot that are forgotten whole once they lie beyond
 // the horizon.
 type ids struct {
 	byKey map[idKey]*identified

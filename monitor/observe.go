@@ -237,12 +237,18 @@ func merge(a, b change) []change {
 	return []change{b}
 }
 
-// remember keeps what the id says now.
+// remember keeps what the id says now, for as long as its slots can change.
 func (e *Engine) remember(o *Observation, key idKey, old *identified, said *contribution) {
 	entry := &identified{key: key, revision: o.Revision, retracted: o.Retracted, said: *said}
 	switch {
 	case !o.Retracted:
-		entry.generation = e.ids.generationOf(o.End)
+		until := o.End
+		if said.series != nil {
+			ix := said.series.indicator
+			_, to := ix.slotsOf(said)
+			until = max(until, ix.cal.Start(to+1))
+		}
+		entry.generation = e.ids.generationOf(until)
 		if old != nil {
 			entry.generation = max(entry.generation, old.generation)
 		}
