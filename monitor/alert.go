@@ -94,15 +94,16 @@ func (t *tail) join(l *look, a *alert, d direction) {
 
 // revalue makes the record's worst evidence that of the strongest look of the
 // alert, and its opening evidence that of the opening look or, where that one
-// signals no more, of the earliest that does. It reports whether either
-// changed. Looks beyond the horizon keep what they were.
+// signals no more, of the earliest that does. Evidence from beyond the horizon
+// stays as it was.
 func (e *Engine) revalue(a *alert) {
 	t := &a.series.tails[a.tail]
+	frozen := a.series.indicator.frozenAt
 	worst, first := -1, -1
-	openingLit := a.frozen
+	openingLit := a.opening.boundary <= frozen
 	for i := range t.lit {
 		l := &t.lit[i]
-		if l.alert != a {
+		if l.alert != a || l.boundary <= frozen {
 			continue
 		}
 		if first < 0 {
@@ -117,13 +118,16 @@ func (e *Engine) revalue(a *alert) {
 		}
 	}
 	if worst < 0 {
+		if a.worst.boundary > frozen && openingLit {
+			a.worst, a.worstLog10P, a.record.Worst = a.opening, a.record.Opening.Log10P, a.record.Opening
+		}
 		return
 	}
 	if !openingLit {
 		a.opening = lookKey{t.lit[first].boundary, t.lit[first].window}
 		a.record.Opening = e.evidence(a.series, a.tail, a.opening.boundary, a.opening.window)
 	}
-	if l := &t.lit[worst]; !a.frozen || l.log10p < a.worstLog10P {
+	if l := &t.lit[worst]; a.worst.boundary > frozen || l.log10p < a.worstLog10P {
 		a.worst, a.worstLog10P = lookKey{l.boundary, l.window}, l.log10p
 		a.record.Worst = e.evidence(a.series, a.tail, l.boundary, l.window)
 	}

@@ -171,7 +171,7 @@ func (ix *indicator) entered(s *series, l *look) int64 {
 func (s *series) active(d direction) bool {
 	t := &s.tails[d]
 	for w := range s.windows {
-		if ws := &s.windows[w]; ws.hasMade && ws.made > s.indicator.frozenAt {
+		if ws := &s.windows[w]; ws.hasMade {
 			if _, lit := t.litAt(ws.made, w); lit {
 				return true
 			}

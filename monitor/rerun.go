@@ -96,7 +96,7 @@ func (t *tail) differs(l *look, d direction) bool {
 // left, or open one late.
 func (e *Engine) correct(s *series, d direction, looks []look) {
 	t := &s.tails[d]
-	t.trim(s.indicator.frozenAt, e.alerts)
+	t.trim(s.indicator.frozenAt, s.windows, e.alerts)
 	var touched []*alert
 	var stray []look
 	touch := func(a *alert) {

@@ -50,7 +50,8 @@ type windowState struct {
 
 // tail is one direction of a series.
 type tail struct {
-	// lit are the looks that signal, inside the horizon, by boundary, window.
+	// lit are the looks that signal, inside the horizon, by boundary, window;
+	// beyond it the latest of each window, until that makes another.
 	lit []litLook
 	// current is the alert that is signalling, nil for none.
 	current *alert
@@ -133,21 +134,26 @@ func (e *Engine) trim(s *series) {
 		e.touch(s)
 	}
 	for d := range s.tails {
-		s.tails[d].trim(ix.frozenAt, e.alerts)
+		s.tails[d].trim(ix.frozenAt, s.windows, e.alerts)
 	}
 }
 
 // trim freezes what can't change any more: looks at or before the boundary,
-// and finished alerts that ended there.
-func (t *tail) trim(frozen int64, alerts map[string]*alert) {
-	n := 0
-	for n < len(t.lit) && t.lit[n].boundary <= frozen {
-		if a := t.lit[n].alert; a != nil {
-			a.frozen = true
+// and finished alerts that ended there. Of those looks it keeps the latest
+// that their windows could make: they still say whether the window signals.
+func (t *tail) trim(frozen int64, windows []windowState, alerts map[string]*alert) {
+	n, kept := 0, 0
+	for ; n < len(t.lit) && t.lit[n].boundary <= frozen; n++ {
+		l := t.lit[n]
+		if l.alert != nil {
+			l.alert.frozen = true
 		}
-		n++
+		if ws := &windows[l.window]; ws.hasMade && ws.made == l.boundary {
+			t.lit[kept] = l
+			kept++
+		}
 	}
-	t.lit = slices.Delete(t.lit, 0, n)
+	t.lit = slices.Delete(t.lit, kept, n)
 	t.past = slices.DeleteFunc(t.past, func(a *alert) bool {
 		gone := a.gone(frozen)
 		if gone {
