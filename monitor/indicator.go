@@ -12,8 +12,9 @@ type indicator struct {
 	clock  clockRule // for exposure by the clock
 	needs  sides
 	series []*series
-	// longest is the length of the longest window in slots.
-	longest int64
+	// longest is the length of the longest window in slots, and reach how far
+	// before a boundary a look reads: a window, and the one looked at before.
+	longest, reach int64
 	// looked is the latest boundary at which looks were made or skipped;
 	// nextDue is when the next one falls due.
 	looked  int64
@@ -44,6 +45,7 @@ func newIndicator(index int, cfg *config.Indicator) *indicator {
 	ix.needs = sides{events: cfg.Events == config.Counted, exposure: cfg.Exposure == config.Reported}
 	for _, w := range cfg.Windows {
 		ix.longest = max(ix.longest, int64(w.Slots))
+		ix.reach = max(ix.reach, int64(w.Slots+w.Step))
 	}
 	return ix
 }
@@ -64,7 +66,7 @@ func (ix *indicator) pass(boundary int64) {
 	ix.looked = boundary
 	ix.nextDue = ix.due(boundary + 1)
 	ix.frozenAt = ix.frozen(ix.due(boundary))
-	ix.floor = ix.frozenAt - ix.longest
+	ix.floor = ix.frozenAt + 1 - ix.reach
 	ix.forget()
 }
 
