@@ -126,7 +126,9 @@ func (e *Engine) encodeHeader() []byte {
 func (e *Engine) Alerts() []life.Record {
 	var records []life.Record
 	for _, a := range e.alerts {
-		records = append(records, a.record)
+		if !a.gone(a.series.indicator.frozenAt) {
+			records = append(records, a.record)
+		}
 	}
 	slices.SortFunc(records, func(a, b life.Record) int {
 		return cmp.Or(a.Opened.Compare(b.Opened), cmp.Compare(a.ID, b.ID))
