@@ -75,23 +75,27 @@ func (ix *indicator) tally(s *series, from, to int64) tally {
 	return t
 }
 
-// empty counts the slots in [from, to) without length, which lack nothing.
-func (ix *indicator) empty(from, to int64) int64 {
-	var n int64
-	if ix.cal.length > 0 {
+// empty counts the days in [from, to) that a zone skipped, as far as they are
+// not known: such a slot has no length and lacks nothing.
+func (ix *indicator) empty(s *series, from, to int64) int64 {
+	// A skipped day is the only thing that makes a span shorter by half a day.
+	if ix.cal.every.Unit != config.Day || int64(ix.cal.Start(to)-ix.cal.Start(from)) > (to-from)*day-day/2 {
 		return 0
 	}
+	var n int64
 	for slot := from; slot < to; slot++ {
 		if ix.cal.Start(slot) == ix.cal.Start(slot+1) {
-			n++
+			if i, ok := s.cells.find(slot); !ok || !ix.needs.paired(&s.cells[i]) {
+				n++
+			}
 		}
 	}
 	return n
 }
 
 // judge says whether the span's sums can be tested.
-func (ix *indicator) judge(t *tally, from, to int64) status {
-	if t.known < to-from && t.known < to-from-ix.empty(from, to) {
+func (ix *indicator) judge(s *series, t *tally, from, to int64) status {
+	if t.known < to-from && t.known < to-from-ix.empty(s, from, to) {
 		return missing
 	}
 	if ix.cfg.Measure == config.Proportion {
@@ -114,7 +118,7 @@ func (ix *indicator) look(s *series, ep *epoch, window int, boundary int64) look
 		return l
 	}
 	l.tally = ix.tally(s, from, boundary)
-	l.status = ix.judge(&l.tally, from, boundary)
+	l.status = ix.judge(s, &l.tally, from, boundary)
 	if l.status == made && !l.exposure.IsZero() {
 		ix.test(s, ep, &l)
 	}
@@ -150,7 +154,7 @@ func (ix *indicator) previous(s *series, window int, boundary int64) (int64, boo
 	length, step := int64(w.Slots), int64(w.Step)
 	for b := boundary - step; b-length >= max(s.birth, ix.floor); b -= step {
 		t := ix.tally(s, b-length, b)
-		if ix.judge(&t, b-length, b) == made {
+		if ix.judge(s, &t, b-length, b) == made {
 			return b, true
 		}
 	}
