@@ -2,9 +2,10 @@ package bus_test
 
 import (
 	"fmt"
+	"testing"
+
 	"tailbell/ingest/bus"
 	"tailbell/ingest/bus/bustest"
-	"testing"
 )
 
 // observation is as long as a usual one.

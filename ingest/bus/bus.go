@@ -6,8 +6,9 @@ import (
 	"fmt"
 	"os"
 	"sync"
-	"tailbell/config"
 	"time"
+
+	"tailbell/config"
 
 	"github.com/nats-io/nats.go"
 	"github.com/nats-io/nats.go/jetstream"

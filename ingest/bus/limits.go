@@ -1,8 +1,9 @@
 package bus
 
 import (
-	"tailbell/config"
 	"time"
+
+	"tailbell/config"
 )
 
 const (

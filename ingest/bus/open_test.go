@@ -6,11 +6,12 @@ import (
 	"os"
 	"path/filepath"
 	"strings"
+	"testing"
+	"time"
+
 	"tailbell/config"
 	"tailbell/ingest/bus"
 	"tailbell/ingest/bus/bustest"
-	"testing"
-	"time"
 
 	"github.com/google/go-cmp/cmp"
 	"github.com/nats-io/nats.go/jetstream"
@@ -37,10 +38,11 @@ func dial(t *testing.T, setup *config.Setup, opts ...bus.Option) *bus.Bus {
 	return b
 }
 
-// deadline is the test's context with a deadline.
+// deadline is the test's context with a deadline, so that a test of something
+// that never comes fails instead of hanging.
 func deadline(t *testing.T) context.Context {
 	t.Helper()
-	ctx, cancel := context.WithTimeout(t.Context(), 10*time.Second)
+	ctx, cancel := context.WithTimeout(t.Context(), time.Minute)
 	t.Cleanup(cancel)
 	return ctx
 }

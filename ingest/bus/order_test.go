@@ -1,14 +1,14 @@
 package bus_test
 
 import (
-	"context"
 	"errors"
 	"math/rand/v2"
-	"tailbell/ingest/bus"
-	"tailbell/ingest/bus/bustest"
 	"testing"
 	"testing/synctest"
 	"time"
+
+	"tailbell/ingest/bus"
+	"tailbell/ingest/bus/bustest"
 
 	"github.com/nats-io/nats.go"
 	"github.com/nats-io/nats.go/jetstream"
@@ -31,7 +31,7 @@ func TestSourceRecoversWhatTheClientLost(t *testing.T) {
 			}
 		}
 		var err error
-		all, err = s.Next(t.Context(), all, 1+rng.IntN(100), 1<<20)
+		all, err = s.Next(deadline(t), all, 1+rng.IntN(100), 1<<20)
 		if err != nil {
 			t.Fatal(err)
 		}
@@ -44,49 +44,52 @@ func TestSourceRecoversWhatTheClientLost(t *testing.T) {
 	if s.Missing().Messages != 0 {
 		t.Errorf("counted as missing from the stream: %+v", s.Missing())
 	}
+	js, err := jetstream.New(b.Conn())
+	if err != nil {
+		t.Fatal(err)
+	}
+	if n := len(consumers(t, js)); n != 1 {
+		t.Errorf("%d consumers for one source", n)
+	}
 }
 
 func TestSourceBoundsBytes(t *testing.T) {
-	setup := bustest.Setup(t)
-	setup.Bus.MaxBytes = 256 << 20
-	b := bustest.Open(t, setup)
-	// 100 MB, more than a client holds by itself.
-	const n, size = 200, 500_000
-	var batch []bus.Outgoing
-	for range n {
-		batch = append(batch, bus.Outgoing{Data: make([]byte, size)})
-	}
-	if _, err := b.PublishBatch(t.Context(), batch); err != nil {
-		t.Fatal(err)
-	}
-	s := source(t, b, 0, 0)
-	var all []bus.Raw
-	for len(all) < n {
-		before := len(all)
-		var err error
-		if all, err = s.Next(t.Context(), all, n, 3*size); err != nil {
+	synctest.Test(t, func(t *testing.T) {
+		setup := bustest.Setup(t)
+		setup.Bus.MaxBytes = 256 << 20
+		b := bustest.Open(t, setup)
+		// 100 MB, more than a client holds by itself.
+		const n, size = 200, 500_000
+		var batch []bus.Outgoing
+		for range n {
+			batch = append(batch, bus.Outgoing{Data: make([]byte, size)})
+		}
+		if _, err := b.PublishBatch(t.Context(), batch); err != nil {
 			t.Fatal(err)
 		}
-		if got := len(all) - before; got > 3 {
-			t.Fatalf("%d messages at once", got)
+		s := source(t, b, 0, 0)
+		var all []bus.Raw
+		for len(all) < n {
+			before := len(all)
+			var err error
+			if all, err = s.Next(deadline(t), all, n, 3*size); err != nil {
+				t.Fatal(err)
+			}
+			if got := len(all) - before; got > 3 {
+				t.Fatalf("%d messages at once", got)
+			}
+			synctest.Wait() // all that comes unasked has come
+			if waiting := s.Waiting() * size; waiting > 17<<20 {
+				t.Fatalf("%d bytes wait in memory", waiting)
+			}
 		}
-		if waiting := s.Waiting(); waiting*size > 17<<20 {
-			t.Fatalf("%d messages wait in memory", waiting)
+		expectPositions(t, all)
+		publish(t, b, 0, 1, 1)
+		one, err := s.Next(deadline(t), nil, 10, 0)
+		if err != nil || len(one) != 1 {
+			t.Errorf("a message over the limit of bytes: %d, %v", len(one), err)
 		}
-	}
-	expectPositions(t, all)
-	one, err := s.Next(publishOne(t, b, size), nil, 10, 1)
-	if err != nil || len(one) != 1 {
-		t.Errorf("a message over the limit of bytes: %d, %v", len(one), err)
-	}
-}
-
-func publishOne(t *testing.T, b *bus.Bus, size int) context.Context {
-	t.Helper()
-	if _, err := b.Publish(t.Context(), bus.Outgoing{Data: make([]byte, size)}); err != nil {
-		t.Fatal(err)
-	}
-	return t.Context()
+	})
 }
 
 // A publisher may set any header, also those by which the bus itself says that
@@ -111,7 +114,7 @@ func TestSourceIsNotFooledByHeaders(t *testing.T) {
 func TestStartBeyondTheEnd(t *testing.T) {
 	b := bustest.Open(t, bustest.Setup(t))
 	publish(t, b, 0, 1, 10)
-	_, err := b.Source(t.Context(), 0, 11)
+	_, err := b.Source(deadline(t), 0, 11)
 	var beyond *bus.BeyondEndError
 	if !errors.Is(err, bus.ErrBeyondEnd) || !errors.As(err, &beyond) || beyond.End != 10 || beyond.After != 11 {
 		t.Errorf("%v", err)
@@ -176,6 +179,9 @@ func TestSourceSurvivesItsConsumer(t *testing.T) {
 			}
 			publish(t, b, 0, 11+i, 1)
 			expect(t, read(t, s, 1, 100), 11+i)
+			if n := len(consumers(t, js)); n != 1 {
+				t.Errorf("%d consumers", n)
+			}
 		}
 	})
 }

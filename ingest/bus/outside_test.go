@@ -4,8 +4,9 @@ import (
 	"encoding/json"
 	"os"
 	"path/filepath"
-	"tailbell/ingest/bus/bustest"
 	"testing"
+
+	"tailbell/ingest/bus/bustest"
 
 	"github.com/nats-io/nats.go"
 	"github.com/nats-io/nats.go/jetstream"

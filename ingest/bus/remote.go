@@ -6,6 +6,7 @@ import (
 	"net/url"
 	"os"
 	"strings"
+
 	"tailbell/config"
 
 	"github.com/nats-io/nats.go"

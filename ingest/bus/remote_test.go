@@ -15,11 +15,12 @@ import (
 	"os"
 	"path/filepath"
 	"strings"
+	"testing"
+	"time"
+
 	"tailbell/config"
 	"tailbell/ingest/bus"
 	"tailbell/ingest/bus/bustest"
-	"testing"
-	"time"
 
 	"github.com/nats-io/nats-server/v2/server"
 )
@@ -271,7 +272,7 @@ func TestRolledBackRemoteBusIsNoticed(t *testing.T) {
 	await(t, seen, bus.Disconnected)
 	r.options.StoreDir = saved
 	r.start(t)
-	_, err := s.Next(t.Context(), nil, 1, 1)
+	_, err := s.Next(deadline(t), nil, 1, 1)
 	var beyond *bus.BeyondEndError
 	if !errors.As(err, &beyond) || beyond.End != 100 || beyond.After != 200 {
 		t.Errorf("%v", err)

@@ -4,8 +4,9 @@ import (
 	"crypto/rand"
 	"fmt"
 	"path/filepath"
-	"tailbell/config"
 	"time"
+
+	"tailbell/config"
 
 	"github.com/nats-io/nats-server/v2/server"
 	"github.com/nats-io/nats.go"

@@ -57,7 +57,9 @@ type Source struct {
 	missing Missing
 	states  chan nats.Status
 
-	feed *feed // nil when the source has to start (again)
+	feed  *feed    // nil when the source has to start (again)
+	left  string   // the consumer of the feed before, "" if there is none to delete
+	pause *backoff // between starts that brought nothing
 }
 
 // feed is one consumer on the bus with the subscription that it delivers to.
@@ -83,7 +85,7 @@ func (b *Bus) Source(ctx context.Context, partition int, after uint64) (*Source,
 }
 
 func (b *Bus) newSource(ctx context.Context, stream, filter string, after uint64, whole bool) (*Source, error) {
-	s := &Source{bus: b, stream: stream, filter: filter, whole: whole, last: after}
+	s := &Source{bus: b, stream: stream, filter: filter, whole: whole, last: after, pause: newBackoff()}
 	s.states = b.nc.StatusChanged(nats.CONNECTED)
 	if err := s.attach(ctx); err != nil {
 		s.bus.nc.RemoveStatusListener(s.states)
@@ -108,7 +110,7 @@ func (s *Source) Next(ctx context.Context, dst []Raw, limit, maxBytes int) ([]Ra
 	start := len(dst)
 	for {
 		if s.feed == nil {
-			if err := s.attach(ctx); err != nil {
+			if err := s.restart(ctx); err != nil {
 				return dst, err
 			}
 		}
@@ -184,6 +186,7 @@ func (s *Source) accept(msg *nats.Msg) (Raw, bool) {
 	s.feed.next++
 	s.feed.left--
 	s.last = position
+	s.pause.tries = 0
 	return Raw{
 		Position: position,
 		Stored:   meta.Timestamp.UTC(),
@@ -257,6 +260,18 @@ func (s *Source) wait(ctx context.Context) error {
 	return nil
 }
 
+// restart attaches again, after a pause if that has not helped before.
+func (s *Source) restart(ctx context.Context) error {
+	if s.pause.tries > 0 {
+		if err := s.pause.wait(ctx); err != nil {
+			return err
+		}
+	} else {
+		s.pause.tries = 1
+	}
+	return s.attach(ctx)
+}
+
 // attach makes a consumer that goes on after the last message, trying until it
 // succeeds, the stream proves to be unusable, or ctx ends.
 func (s *Source) attach(ctx context.Context) error {
@@ -309,6 +324,10 @@ func (s *Source) tryAttach(ctx context.Context) error {
 	if err != nil {
 		return err
 	}
+	if err := s.forget(ctx); err != nil {
+		s.bus.log.Debug().Err(err).Msg("starting to read again")
+	}
+	s.left = f.consumer
 	f.sub, err = s.bus.nc.ChanSubscribe(f.inbox, f.msgs)
 	if err != nil {
 		return err
@@ -341,7 +360,21 @@ func (s *Source) compare(ctx context.Context) error {
 	return nil
 }
 
-// detach gives the feed up; the next attach goes on after the last message.
+// forget deletes the consumer that was left. If that fails, because the bus is
+// away or has forgotten it already, the bus drops it after a while by itself.
+func (s *Source) forget(ctx context.Context) error {
+	if s.left == "" {
+		return nil
+	}
+	err := s.bus.js.DeleteConsumer(ctx, s.stream, s.left)
+	s.left = ""
+	if err != nil && !errors.Is(err, jetstream.ErrConsumerNotFound) {
+		return fmt.Errorf("leaving the stream %s: %w", s.stream, mapped(err))
+	}
+	return nil
+}
+
+// detach gives the feed up; the next start goes on after the last message.
 func (s *Source) detach() {
 	if err := s.feed.sub.Unsubscribe(); err != nil {
 		s.bus.log.Debug().Err(err).Msg("leaving a subscription")
@@ -352,16 +385,13 @@ func (s *Source) detach() {
 // Close ends the source.
 func (s *Source) Close() error {
 	s.bus.nc.RemoveStatusListener(s.states)
-	if s.feed == nil || s.bus.nc.IsClosed() {
+	if s.bus.nc.IsClosed() {
 		return nil
 	}
-	consumer := s.feed.consumer
-	s.detach()
+	if s.feed != nil {
+		s.detach()
+	}
 	ctx, cancel := context.WithTimeout(context.Background(), attachTimeout)
 	defer cancel()
-	err := s.bus.js.DeleteConsumer(ctx, s.stream, consumer)
-	if err != nil && !errors.Is(err, jetstream.ErrConsumerNotFound) {
-		return fmt.Errorf("leaving the stream %s: %w", s.stream, mapped(err))
-	}
-	return nil
+	return s.forget(ctx)
 }

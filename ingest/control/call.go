@@ -5,8 +5,9 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
-	"tailbell/ingest/bus"
 	"time"
+
+	"tailbell/ingest/bus"
 
 	"github.com/nats-io/nats.go"
 )

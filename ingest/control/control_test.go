@@ -6,11 +6,12 @@ import (
 	"fmt"
 	"strings"
 	"sync"
-	"tailbell/ingest/bus/bustest"
-	"tailbell/ingest/control"
 	"testing"
 	"testing/synctest"
 	"time"
+
+	"tailbell/ingest/bus/bustest"
+	"tailbell/ingest/control"
 )
 
 type sum struct{ A, B int }

@@ -8,8 +8,9 @@ import (
 	"maps"
 	"slices"
 	"sync"
-	"tailbell/ingest/bus"
 	"time"
+
+	"tailbell/ingest/bus"
 
 	"github.com/nats-io/nats.go"
 )

@@ -2,9 +2,10 @@
 package bustest
 
 import (
+	"testing"
+
 	"tailbell/config"
 	"tailbell/ingest/bus"
-	"testing"
 )
 
 // Setup is a small set-up with one partition in a folder of the test's own.
