@@ -142,6 +142,18 @@ func TestBadRows(t *testing.T) {
 	}
 }
 
+// A quote that closes lines later counts only if the cells then fit.
+func TestStrayQuotes(t *testing.T) {
+	text := "series,at,events,exposure\n" +
+		"\"a,2026-03-02T00:00:00Z,1,\n" +
+		"b\",2026-03-02T00:00:00Z,1\n" +
+		"c,2026-03-02T00:00:00Z,1,\n"
+	h := read(t, Options{}, write(t, "x.csv", text))
+	if !slices.Equal(faults(h), []string{"2 bad_row", "3 bad_row"}) || h.Counts.Observations != 1 {
+		t.Errorf("%v, %+v", faults(h), h.Counts)
+	}
+}
+
 func TestLocalTimes(t *testing.T) {
 	text := "series,date,start,end,at,reported,events\n" +
 		"a,2026-03-29,,,,,1\n" + // a day of 23 hours

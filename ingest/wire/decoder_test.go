@@ -123,6 +123,16 @@ func TestRefusedKeepsItsOwnBytesAndSeries(t *testing.T) {
 	}
 }
 
+// An interval must last a microsecond, the grain of time.
+func TestShortestInterval(t *testing.T) {
+	const format = `{"series":"a/b","start":"2026-03-02T00:00:00.000001Z","end":"2026-03-02T00:00:00.%sZ","events":1}`
+	for end, want := range map[string]string{"000001": "obs bad_interval", "0000019": "obs bad_interval", "000002": "obs ok1", "0": "obs bad_interval"} {
+		if got := outcome(decode(t, NewDecoder(Limits{}), "obs", fmt.Sprintf(format, end))); got != want {
+			t.Errorf("%s: %s, want %s", end, got, want)
+		}
+	}
+}
+
 func TestLimits(t *testing.T) {
 	array := "[" + el(1) + "," + el(2) + "," + el(3) + "]"
 	lines := el(1) + "\n" + el(2) + "\n" + el(3)
