@@ -53,7 +53,7 @@ func (s section) readServed(in *Indicator, earlier []Baseline, last bool) Patter
 }
 
 func (s section) readBaseline(in *Indicator) Baseline {
-	b := Baseline{Margin: 1}
+	b := Baseline{Margin: 1, Spread: 1}
 	b.Version, _ = s.text("version", "")
 	b.Source, _ = s.text("source", "")
 	if m, given, ok := s.number("margin"); given && ok {

@@ -24,6 +24,7 @@ func (s section) readIndicator() Indicator {
 	ids, _ := s.word("ids", 0, "kept", "none")
 	in.KeepIDs = ids == 0
 	in.Windows = s.readWindows(in.Every)
+	in.SlotLooks = true
 	s.readLook(&in)
 	in.Baselines = s.readBaselines(&in)
 	return in

@@ -89,6 +89,7 @@ type Exposure int
 const (
 	Reported Exposure = iota // observations carry it
 	Clock                    // elapsed time times a declared size
+	Census                   // the last level that was reported, carried forward
 )
 
 // BaselineKind says how the usual rate is known.
@@ -98,14 +99,20 @@ type BaselineKind int
 const (
 	Known     BaselineKind = iota // a stated rate
 	Reference                     // M events in exposure F
+	Trailing                      // what the series itself counted before, a gap away
+	Peers                         // what all other series of the indicator counted
 )
 
 // Baseline is the usual rate that windows are tested against.
 type Baseline struct {
 	// Series says which series of the indicator it serves; the first baseline
-	// whose pattern matches is used.
+	// whose pattern matches and that is valid is used.
 	Series Pattern
-	Kind   BaselineKind
+	// From and To bound its validity, zero for open: it judges the windows
+	// whose last moment lies in [From, To), so those that end after From and
+	// not after To.
+	From, To time.Time
+	Kind     BaselineKind
 	// Rate per unit of exposure (already divided by the indicator's Per), or
 	// the usual proportion; for Known.
 	Rate float64
@@ -113,13 +120,75 @@ type Baseline struct {
 	// Reference.
 	Events   int64
 	Exposure Decimal
-	// Margin is the ratio to the baseline (rate ratio; for a proportion under
-	// Reference the odds ratio) that is still accepted: 1 means none.
+	// SpanSlots is the length of the history that is counted, in slots; for
+	// Trailing and Peers.
+	SpanSlots int
+	// GapSlots is the guard gap between that history and the window, in slots,
+	// so that what is tested is no part of what is usual; for Trailing. It is
+	// the longest window unless set.
+	GapSlots int
+	// Refresh says how often the history is counted anew: 1d, 1w, 1mo, 3mo or
+	// 1y, never shorter than a slot; for Trailing and Peers.
+	Refresh Every
+	// MinEvents is how many events the history must hold: with fewer a look is
+	// withheld; for Trailing and Peers.
+	MinEvents int64
+	// Spread is phi, the variance of the count in a slot over that of the
+	// model: over the mean for a rate (negative binomial, constant phi), over
+	// the binomial's variance for a proportion (beta-binomial). 1 means none.
+	Spread float64
+	// Strata, if not nil, are factors of the usual rate by the time of week or
+	// year.
+	Strata *Strata
+	// Delay, if not nil, is how late events are reported.
+	Delay *Delay
+	// Margin is the ratio to the baseline (rate ratio; for a proportion that
+	// is not Known the odds ratio) that is still accepted: 1 means none.
 	// Upper tails test ratio <= Margin, lower tails ratio >= 1/Margin.
 	Margin float64
 	// Version and Source are printed in every alert judged by it.
 	Version string
 	Source  string
+}
+
+// StrataBy says by what strata are told apart.
+type StrataBy int
+
+// The ways to tell strata apart, all by the local time at which a slot begins.
+const (
+	ByHourOfWeek StrataBy = iota // 168, from Monday 00:00
+	ByWeekday                    // 7, from Monday
+	ByMonth                      // 12, from January
+)
+
+// Strata multiply the usual rate, or the odds of the usual proportion, slot by
+// slot.
+type Strata struct {
+	By StrataBy
+	// Factors are greater than 0: one for each stratum.
+	Factors []float64
+}
+
+// Delay is the distribution of how late events become known: the share
+// Reported[i] of a slot's events is known at the age Ages[i] after its end.
+// Ages increase and begin at 0 or more; shares never fall, and the last is 1.
+type Delay struct {
+	Ages     []time.Duration
+	Reported []float64
+}
+
+// Allowance is how many false alerts are accepted: Alerts in every Every, on
+// each series or over the whole indicator.
+type Allowance struct {
+	Alerts       float64
+	Every        Every
+	PerIndicator bool
+	// Assurance is the confidence at which an estimated baseline is taken from
+	// its upper bound; 0 takes the average over its uncertainty.
+	Assurance float64
+	// Reserve is the share that is kept for series yet to come; with
+	// PerIndicator only.
+	Reserve float64
 }
 
 // Window is a rolling span of whole slots.
@@ -156,6 +225,9 @@ type Indicator struct {
 	Events    Events
 	Exposure  Exposure
 	Clock     ClockExposure
+	// CensusExpiry is how long a level is carried forward, with Census: after
+	// it the exposure is missing.
+	CensusExpiry time.Duration
 	// GrainDigits is the number of decimal places in which exposure is held
 	// exactly: 6 means one millionth. Trials have 0.
 	GrainDigits int
@@ -173,10 +245,16 @@ type Indicator struct {
 	// made a condition.
 	Expect  time.Duration
 	Windows []Window
-	Upper   bool
-	Lower   bool
-	// PLimit is the p-value at or under which a look signals, for each tail.
-	PLimit float64
+	// SlotLooks are made when slots have settled, ArrivalLooks at each event.
+	// At least one is true.
+	SlotLooks    bool
+	ArrivalLooks bool
+	Upper        bool
+	Lower        bool
+	// PLimit is the p-value at or under which a look signals, for each tail; 0
+	// with an Allowance, from which critical counts follow instead.
+	PLimit    float64
+	Allowance *Allowance
 	// Quiet is the number of looks without a signal after which an alert has
 	// returned.
 	Quiet int
@@ -187,7 +265,27 @@ type Indicator struct {
 	Line int
 }
 
-// BaselineFor returns the baseline that serves the series, or nil.
+// BaselineAt returns the baseline that judges a window of the series that ends
+// at boundary: the first that serves the series and is valid then. It returns
+// nil where there is none, and the look is withheld.
+func (in *Indicator) BaselineAt(series string, boundary time.Time) *Baseline {
+	for i := range in.Baselines {
+		b := &in.Baselines[i]
+		if b.holds(boundary) && b.Series.Match(series) {
+			return b
+		}
+	}
+	return nil
+}
+
+// holds reports whether the baseline is valid for a window that ends at
+// boundary.
+func (b *Baseline) holds(boundary time.Time) bool {
+	return (b.From.IsZero() || boundary.After(b.From)) && (b.To.IsZero() || !boundary.After(b.To))
+}
+
+// BaselineFor returns the first baseline that serves the series at any time,
+// or nil.
 func (in *Indicator) BaselineFor(series string) *Baseline {
 	for i := range in.Baselines {
 		if in.Baselines[i].Series.Match(series) {
