@@ -52,7 +52,7 @@ var (
 	ErrEpoch = errors.New("the owner epoch must lie beyond the stored one: another owner has taken over since")
 	// ErrStream is returned when another stream than the known one is set.
 	ErrStream = errors.New("the stream is not the one that this store was filled from: " +
-		"find out why before it is accepted (tailbell store accept)")
+		"find out why; a copy that fits the stream, or accepting the new stream, is the way on")
 	// ErrNoOutlet is returned when an outlet is not registered.
 	ErrNoOutlet = errors.New("no such outlet: it must be registered first")
 	// ErrNotFound is returned when there is no alert, refusal or such under a
