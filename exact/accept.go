@@ -28,7 +28,23 @@ func (a acceptance[L]) joined(eta float64, j int64) float64 {
 func (a acceptance[L]) excess(eta float64, j int64) float64 {
 	x := a.at(eta)
 	own := x.side(a.k, a.lower, false).prob()
-	return own + x.side(j, !a.lower, false).prob() - a.alpha
+	return own + within(x, j, !a.lower).prob() - a.alpha
+}
+
+// from is the eta to start at, given where the own tail is a wanted size. Blaker's p-value is at
+// most twice the own tail; the other form's is under alpha further out wherever it is so by more
+// than a few jumps.
+func (a acceptance[L]) from(tailAt func(size float64) float64) float64 {
+	if a.how == Blaker {
+		return tailAt(a.alpha / 2)
+	}
+	for f := 0.49; f > 0.05; f *= 0.7 {
+		eta := tailAt(a.alpha * f)
+		if a.excess(eta, a.outermost(eta))+3*a.at(eta).point(a.k).value() < 0 {
+			return eta
+		}
+	}
+	return tailAt(a.alpha / 20)
 }
 
 // bound walks from eta in steps of about scale.
@@ -157,13 +173,13 @@ func MeanBounds(n int64, alpha float64, how Sides) (lower, upper float64) {
 		return float64(n), float64(n)
 	}
 	scale := 1 / (1 + math.Sqrt(float64(n)))
-	l, u := Garwood(n, alpha/8)
 	a := acceptance[Poisson]{at: poissonAt, k: n, alpha: alpha, how: how, lower: true}
+	tailAt := func(size float64) float64 { return logOf(poissonBound(float64(n), size, a.lower, false)) }
 	if n > 0 {
-		lower = expTwo(a.bound(logOf(l), scale), 0)
+		lower = expTwo(a.bound(a.from(tailAt), scale), 0)
 	}
 	a.lower = false
-	return lower, expTwo(a.bound(logOf(u), scale), 0)
+	return lower, expTwo(a.bound(a.from(tailAt), scale), 0)
 }
 
 // ChanceBounds are two-sided bounds at level 1-alpha of the probability behind x events in n
@@ -184,14 +200,19 @@ func oddsAccepted(x, n int64, alpha float64, how Sides) (lower, upper float64) {
 	lower, upper = math.Inf(-1), math.Inf(1)
 	a := acceptance[Binomial]{at: binomialAt(n), k: x, alpha: min(alpha, 1-0x1p-50), how: how, lower: true}
 	scale := 1 / (1 + math.Sqrt(float64(min(x, n-x))))
-	if x > 0 {
-		p, q := binomialLower(x, n, alpha/16, false)
-		lower = a.bound(logOf(p/q), scale)
+	tailAt := func(size float64) float64 {
+		if a.lower {
+			p, q := binomialLower(x, n, size, false)
+			return logOf(p / q)
+		}
+		q, p := binomialLower(n-x, n, size, false)
+		return logOf(p / q)
 	}
-	if x < n {
-		a.lower = false
-		q, p := binomialLower(n-x, n, alpha/16, false)
-		upper = a.bound(logOf(p/q), scale)
+	if x > 0 {
+		lower = a.bound(a.from(tailAt), scale)
+	}
+	if a.lower = false; x < n {
+		upper = a.bound(a.from(tailAt), scale)
 	}
 	return lower, upper
 }
@@ -217,14 +238,48 @@ func (x TwoProportion) OddsRatioBoundsBy(n int64, alpha float64, how Sides) (low
 		return FisherNoncentral{x.Trials, x.RefTrials, n + x.RefEvents, expTwo(eta, 0)}
 	}
 	lo, hi := at(0).support()
-	l, u := x.OddsRatioBounds(n, alpha/8)
 	a := acceptance[FisherNoncentral]{at: at, k: n, alpha: min(alpha, 1-0x1p-50), how: how, lower: true}
-	if n > lo {
-		lower = expTwo(a.bound(logOf(l), 0.1), 0)
+	tailAt := func(size float64) float64 {
+		l, u := x.OddsRatioBounds(n, 2*size)
+		if a.lower {
+			return logOf(l)
+		}
+		return logOf(u)
 	}
-	a.lower = false
-	if n < hi {
-		upper = expTwo(a.bound(logOf(u), 0.1), 0)
+	if n > lo {
+		lower = expTwo(a.bound(a.from(tailAt), 0.1), 0)
+	}
+	if a.lower = false; n < hi {
+		upper = expTwo(a.bound(a.from(tailAt), 0.1), 0)
 	}
 	return lower, upper
+}
+
+// RateBounds are Garwood's bounds at level 1-alpha of the rate for n events in Exposure.
+func (x Poisson) RateBounds(n int64, alpha float64) (lower, upper float64) {
+	if !x.valid() {
+		return math.NaN(), math.NaN()
+	}
+	l, u := Garwood(n, alpha)
+	return l / x.Exposure, u / x.Exposure
+}
+
+// RatioBounds are Garwood's bounds at level 1-alpha of the ratio of the rate behind n events in
+// Exposure to Rate.
+func (x Poisson) RatioBounds(n int64, alpha float64) (lower, upper float64) {
+	if !x.valid() {
+		return math.NaN(), math.NaN()
+	}
+	l, u := Garwood(n, alpha)
+	return l / x.Mean(), u / x.Mean()
+}
+
+// RatioBounds are Clopper and Pearson's bounds at level 1-alpha of the ratio of the probability
+// behind k events in N trials to P.
+func (x Binomial) RatioBounds(k int64, alpha float64) (lower, upper float64) {
+	if !x.valid() {
+		return math.NaN(), math.NaN()
+	}
+	l, u := ClopperPearson(k, x.N, alpha)
+	return l / x.P, u / x.P
 }

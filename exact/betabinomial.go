@@ -4,14 +4,14 @@ import "math"
 
 // BetaBinomial is the law of events in N trials whose probability is itself drawn from
 // Beta(A, B): mean N A/(A+B), more spread than the binomial. Tails are summed over up to N
-// terms, so N is at most 2^24; A and B are in (0, 1e15]. Else NaN.
+// terms, so N is at most 2^22; A and B are in (0, 1e15]. Else NaN.
 type BetaBinomial struct {
 	N    int64
 	A, B float64
 }
 
 func (x BetaBinomial) valid() bool {
-	return x.N >= 0 && x.N <= 1<<24 && x.A > 0 && x.A <= 1e15 && x.B > 0 && x.B <= 1e15
+	return x.N >= 0 && x.N <= 1<<22 && x.A > 0 && x.A <= 1e15 && x.B > 0 && x.B <= 1e15
 }
 
 func (x BetaBinomial) support() (lo, hi int64) { return 0, x.N }

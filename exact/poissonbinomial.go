@@ -141,7 +141,7 @@ func (x *PoissonBinomial) direct(k int64, upper, mid bool) side {
 		t = x.upper[k]
 	}
 	s := side{point: t.point(), ratio: 1}
-	if mid {
+	if mid && t.m > 0 {
 		m := x.mass[k]
 		switch t.e - m.e {
 		case 0:

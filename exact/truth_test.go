@@ -12,8 +12,9 @@ import (
 	"slices"
 	"strconv"
 	"strings"
-	"tailbell/exact"
 	"testing"
+
+	"tailbell/exact"
 )
 
 // The truth tables hold values computed with mpmath to 50 digits for the exact float64 inputs

@@ -7,7 +7,7 @@ import "math"
 // under a true odds ratio of Margin, n follows Fisher's noncentral hypergeometric law. Margin 0
 // means 1.
 //
-// The total moves with n. RefEvents <= RefTrials <= 2^52, Trials <= 2^52, all not negative,
+// The total moves with n. RefEvents <= RefTrials <= 2^42, Trials <= 2^42, all not negative,
 // Margin positive and finite; else NaN.
 type TwoProportion struct {
 	RefEvents, RefTrials, Trials int64
@@ -15,9 +15,8 @@ type TwoProportion struct {
 }
 
 func (x TwoProportion) valid() bool {
-	const most = maxCount / 2
-	return x.RefEvents >= 0 && x.RefEvents <= x.RefTrials && x.RefTrials <= most && x.Trials >= 0 &&
-		x.Trials <= most && (x.Margin == 0 || positive(x.Margin))
+	return x.RefEvents >= 0 && x.RefEvents <= x.RefTrials && x.RefTrials <= maxUrn && x.Trials >= 0 &&
+		x.Trials <= maxUrn && (x.Margin == 0 || positive(x.Margin))
 }
 
 func (x TwoProportion) urn(n int64) urn {

@@ -110,14 +110,14 @@ func blaker[L law](x L, k int64, own side, upper bool) pair {
 	t := own.logProb() + tie
 	lo, hi := x.support()
 	mean, _ := x.spread()
-	within := func(j int64) bool { return x.side(j, !upper, false).logProb() <= t }
+	joins := func(j int64) bool { return x.side(j, !upper, false).logProb() <= t }
 	var j int64
 	if upper {
-		j = outward(k, lo-1, 2*mean-float64(k), within)
+		j = outward(k, lo-1, 2*mean-float64(k), joins)
 	} else {
-		j = outward(k, hi+1, 2*mean-float64(k), within)
+		j = outward(k, hi+1, 2*mean-float64(k), joins)
 	}
-	return pair{own: own, other: x.side(j, !upper, false)}
+	return pair{own: own, other: within(x, j, !upper)}
 }
 
 func minLike[L law](x L, k int64) pair {
@@ -127,14 +127,14 @@ func minLike[L law](x L, k int64) pair {
 	}
 	p := x.point(k)
 	mean, _ := x.spread()
-	within := func(j int64) bool { return x.point(j).minus(p) <= tie }
+	joins := func(j int64) bool { return x.point(j).minus(p) <= tie }
 	switch {
 	case k < hi && x.point(k+1).minus(p) > tie: // below the mode
-		j := outward(k, hi+1, 2*mean-float64(k), within)
-		return pair{own: x.side(k, false, false), other: x.side(j, true, false)}
+		j := outward(k, hi+1, 2*mean-float64(k), joins)
+		return pair{own: x.side(k, false, false), other: within(x, j, true)}
 	case k > lo && x.point(k-1).minus(p) > tie:
-		j := outward(k, lo-1, 2*mean-float64(k), within)
-		return pair{own: x.side(k, true, false), other: x.side(j, false, false)}
+		j := outward(k, lo-1, 2*mean-float64(k), joins)
+		return pair{own: x.side(k, true, false), other: within(x, j, false)}
 	}
 	return pair{all: true}
 }
@@ -164,4 +164,12 @@ func outward(near, far int64, guess float64, within func(int64) bool) int64 {
 		}
 	}
 	return near + sign*yes
+}
+
+// within is the tail at j, empty where j is one past the support.
+func within[L law](x L, j int64, upper bool) side {
+	if lo, hi := x.support(); j < lo || j > hi {
+		return impossible
+	}
+	return x.side(j, upper, false)
 }

@@ -47,7 +47,7 @@ func (u urn) up(x float64) (sum, first float64) {
 			sum, part = sum+part, 0
 			first, partFirst = first+partFirst, 0
 		}
-		t *= float64(float64((u.white-j)*(u.draws-j))*u.odds.hi) / float64((j+1)*(d+j+1))
+		t *= float64(float64((u.white-j)*(u.draws-j))/float64((j+1)*(d+j+1))) * u.odds.hi
 		part += t
 		partFirst += float64(t * (j + 1 - x))
 	}
@@ -67,11 +67,16 @@ func (u urn) mode() float64 {
 		return min(hi, max(lo, math.Floor((u.white+1)/(u.white+u.black+2)*(u.draws+1))))
 	}
 	// (white-j)(draws-j) odds = (j+1)(black-draws+j+1)
-	o := u.odds.hi
-	a := o - 1
-	b := -(o*(u.white+u.draws+2) + u.black - u.draws)
+	s := max(1, u.odds.hi)
+	o, one := u.odds.hi/s, 1/s
+	a := o - one
+	b := -(o*(u.white+u.draws+2) + one*(u.black-u.draws))
 	c := o * (u.white + 1) * (u.draws + 1)
-	root := 2 * c / (-b + math.Sqrt(max(0, b*b-4*a*c)))
+	d := math.Sqrt(max(0, b*b-4*a*c))
+	root := 2 * c / (d - b)
+	if b > 0 {
+		root = (b + d) / (-2 * a)
+	}
 	return min(hi, max(lo, math.Floor(root)))
 }
 
@@ -174,6 +179,9 @@ func (u urn) lowerOdds(x, a float64, mid bool) float64 {
 		} else {
 			left = max(left, l)
 		}
+		if math.Abs(step) < 1e-9 {
+			return u.odds.hi * expTwo(step, 0)
+		}
 		next := l + step
 		if !(next > left && next < right) || math.IsNaN(next) {
 			next = 0.5 * (left + right)
@@ -181,8 +189,8 @@ func (u urn) lowerOdds(x, a float64, mid bool) float64 {
 				next = l + math.Copysign(1, step)
 			}
 		}
-		if math.Abs(next-l) <= 1e-9*max(1, math.Abs(l)) || next == left || next == right {
-			return u.odds.hi * expTwo(next-l, 0)
+		if next == left || next == right {
+			break
 		}
 		l = next
 	}
