@@ -3,7 +3,6 @@ package main
 import (
 	"context"
 	"encoding/json"
-	"errors"
 	"fmt"
 
 	"tailbell/ingest/bus"
@@ -168,8 +167,11 @@ func (d *daemon) act(ctx context.Context, req actRequest) (any, error) {
 	if err := p.reach(ctx, position); err != nil {
 		return nil, fmt.Errorf("the act is in the stream at position %d, but was not taken in time: %w", position, err)
 	}
-	if why, err := refusedAt(p.store, position); err != nil || why != "" {
-		return nil, errors.Join(err, control.Errorf(codeRefused, "%s", why))
+	switch why, err := refusedAt(p.store, position); {
+	case err != nil:
+		return nil, err
+	case why != "":
+		return nil, control.Errorf(codeRefused, "%s", why)
 	}
 	if act.Alert == "" {
 		return nil, nil
@@ -181,22 +183,12 @@ func (d *daemon) act(ctx context.Context, req actRequest) (any, error) {
 // refusedAt returns why the message at a position was refused, "" if it was
 // not.
 func refusedAt(st *store.Store, position uint64) (string, error) {
-	counts, err := st.RefusedCount()
-	if err != nil {
+	rows, err := st.RefusedAt(position)
+	if err != nil || len(rows) == 0 {
 		return "", err
 	}
-	var total uint64
-	for _, n := range counts {
-		total += n
-	}
-	const back = 1000 // refusals that may have come since
-	rows, err := st.Refused(total-min(total, back), back)
-	for i := range rows {
-		if r := &rows[i].Refusal; r.Position == position {
-			return string(r.Reason) + ": " + r.Detail, err
-		}
-	}
-	return "", err
+	r := &rows[0].Refusal
+	return string(r.Reason) + ": " + r.Detail, nil
 }
 
 // refusedRow is a refusal as listed.
