@@ -134,14 +134,17 @@ func (e *Engine) trim(s *series) {
 		e.touch(s)
 	}
 	for d := range s.tails {
-		s.tails[d].trim(ix.frozenAt, s.windows, e.alerts)
+		if s.tails[d].trim(ix.frozenAt, s.windows, e.alerts) {
+			e.touch(s)
+		}
 	}
 }
 
 // trim freezes what can't change any more: looks at or before the boundary,
 // and finished alerts that ended there. Of those looks it keeps the latest
-// that their windows could make: they still say whether the window signals.
-func (t *tail) trim(frozen int64, windows []windowState, alerts map[string]*alert) {
+// that their windows could make: they still say whether the window signals. It
+// reports whether a look was forgotten.
+func (t *tail) trim(frozen int64, windows []windowState, alerts map[string]*alert) bool {
 	n, kept := 0, 0
 	for ; n < len(t.lit) && t.lit[n].boundary <= frozen; n++ {
 		l := t.lit[n]
@@ -161,6 +164,7 @@ func (t *tail) trim(frozen int64, windows []windowState, alerts map[string]*aler
 		}
 		return gone
 	})
+	return kept < n
 }
 
 // gone reports whether nothing can happen to the alert any more.
