@@ -94,6 +94,7 @@ type indicatorHeader struct {
 	Name    string        `json:"name"`
 	Started bool          `json:"started"`
 	Looked  int64         `json:"looked"`
+	Frozen  int64         `json:"frozen"`
 	Epochs  []epochHeader `json:"epochs"`
 }
 
@@ -108,7 +109,7 @@ func (e *Engine) encodeHeader() []byte {
 		Cycle: e.checkpoint.cycle, Next: e.checkpoint.next, Generation: int64(e.ids.length.Seconds()),
 	}
 	for _, ix := range e.indicators {
-		ih := indicatorHeader{Name: ix.cfg.Name, Started: ix.started, Looked: ix.looked}
+		ih := indicatorHeader{Name: ix.cfg.Name, Started: ix.started, Looked: ix.looked, Frozen: ix.frozenAt}
 		for _, ep := range ix.epochs {
 			ih.Epochs = append(ih.Epochs, epochHeader{ep.from, ep.version})
 		}

@@ -26,6 +26,7 @@ func (s *series) encode(whole bool) []byte {
 		b = appendString(b, s.indicator.cfg.Name)
 	}
 	b = binary.AppendVarint(b, s.birth)
+	b = binary.AppendVarint(b, s.trimmed)
 	b = binary.AppendVarint(b, s.unpaired)
 	b = binary.AppendVarint(b, int64(s.seen))
 	b = binary.AppendUvarint(b, uint64(len(s.windows)))

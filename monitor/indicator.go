@@ -1,6 +1,8 @@
 package monitor
 
 import (
+	"math"
+
 	"tailbell/config"
 )
 
@@ -21,7 +23,8 @@ type indicator struct {
 	started bool
 	nextDue Instant
 	// frozenAt is the boundary at or before which no look can change any
-	// more, and floor the slot before which no look reads, as of looked.
+	// more, and floor the slot before which no look reads, as of looked. They
+	// never move back, whatever becomes of settle and horizon.
 	frozenAt, floor int64
 	// epochs are the versions of the stanza under which looks that can still
 	// be re-run fell due, oldest first.
@@ -38,7 +41,7 @@ type epoch struct {
 }
 
 func newIndicator(index int, cfg *config.Indicator) *indicator {
-	ix := &indicator{index: index, cfg: cfg, cal: NewCalendar(cfg.Every, cfg.Zone), nextDue: Never}
+	ix := &indicator{index: index, cfg: cfg, cal: NewCalendar(cfg.Every, cfg.Zone), nextDue: Never, frozenAt: math.MinInt64}
 	if cfg.Exposure == config.Clock {
 		ix.clock = newClockRule(cfg.Clock, cfg.GrainDigits)
 	}
@@ -65,14 +68,19 @@ func (ix *indicator) start(clock Instant) {
 func (ix *indicator) pass(boundary int64) {
 	ix.looked = boundary
 	ix.nextDue = ix.due(boundary + 1)
-	ix.frozenAt = ix.frozen(ix.due(boundary))
+	ix.frozenAt = max(ix.frozenAt, ix.frozen(ix.due(boundary)))
 	ix.floor = ix.frozenAt + 1 - ix.reach
 	ix.forget()
 }
 
-// due is when looks at the boundary before the slot fall due.
+// due is when looks at the boundary before the slot fall due, by the stanza
+// that is in force for them.
 func (ix *indicator) due(boundary int64) Instant {
-	return ix.cal.Start(boundary).Add(ix.cfg.Settle)
+	settle := ix.cfg.Settle
+	if len(ix.epochs) > 0 {
+		settle = ix.epochAt(boundary).cfg.Settle
+	}
+	return ix.cal.Start(boundary).Add(settle)
 }
 
 // frozen is the latest boundary before which no slot can change any more: a

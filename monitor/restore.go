@@ -68,7 +68,7 @@ func (e *Engine) restoreHeader(h *header, settings []SettingChange) error {
 			return err
 		}
 		if ih.Started {
-			ix.started = true
+			ix.started, ix.frozenAt = true, ih.Frozen
 			ix.pass(ih.Looked)
 		}
 		e.indicators = append(e.indicators, ix)
@@ -104,7 +104,7 @@ func restoreIndicator(index int, ih indicatorHeader, setups map[int]*config.Setu
 }
 
 func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(string) (life.Record, error)) error {
-	s := &series{number: number, trimmed: -1 << 62}
+	s := &series{number: number}
 	layers := image.Patches
 	if image.State != nil {
 		layers = append([][]byte{image.State}, image.Patches...)
@@ -127,8 +127,7 @@ func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(st
 		}
 	}
 	s.derive()
-	s.cells = slices.DeleteFunc(s.cells, func(c cell) bool { return c.slot < s.indicator.floor })
-	s.trimmed = s.indicator.floor
+	s.cells = slices.DeleteFunc(s.cells, func(c cell) bool { return c.slot < s.trimmed })
 	e.series = append(e.series, s)
 	e.byName[s.name] = s
 	s.indicator.series = append(s.indicator.series, s)
@@ -171,7 +170,7 @@ func (e *Engine) overlay(s *series, data []byte) error {
 		}
 		s.indicator = e.indicators[i]
 	}
-	s.birth, s.unpaired, s.seen = r.int(), r.int(), Instant(r.int())
+	s.birth, s.trimmed, s.unpaired, s.seen = r.int(), r.int(), r.int(), Instant(r.int())
 	s.windows = make([]windowState, r.length())
 	for w := range s.windows {
 		ws := &s.windows[w]

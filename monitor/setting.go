@@ -84,6 +84,9 @@ func (e *Engine) install(next *config.Setup, version int, from map[string]int64)
 			ix.epochs = ix.epochs[:n-1]
 		}
 		ix.epochs = append(ix.epochs, epoch{from: boundary, cfg: cfg, version: version, digest: next.Digest})
+		if ix.started { // settle and horizon may be others
+			ix.pass(ix.looked)
+		}
 		e.indicators = append(e.indicators, ix)
 		horizon = max(horizon, cfg.Horizon)
 	}
