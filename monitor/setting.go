@@ -2,6 +2,7 @@ package monitor
 
 import (
 	"math"
+	"slices"
 	"strings"
 	"time"
 
@@ -38,11 +39,31 @@ func unfit(old, next *config.Setup) string {
 			keys = append(keys, c.String())
 		}
 	}
+	keys = append(keys, unkept(old, next)...)
 	if len(keys) == 0 {
 		return ""
 	}
 	return "the running store can't take this change: " + strings.Join(keys, "; ")
 }
+
+// unkept lists the changes of smaller class that the state can't follow yet:
+// it knows windows by their place in the list, and series by their indicator.
+func unkept(old, next *config.Setup) []string {
+	var keys []string
+	for i := range old.Indicators {
+		before := &old.Indicators[i]
+		at := slices.IndexFunc(next.Indicators, func(in config.Indicator) bool { return in.Name == before.Name })
+		switch {
+		case at < 0:
+			keys = append(keys, "indicator["+before.Name+"] is gone")
+		case !slices.EqualFunc(before.Windows, next.Indicators[at].Windows, sameWindow):
+			keys = append(keys, "indicator["+before.Name+"].windows are others, or in another order")
+		}
+	}
+	return keys
+}
+
+func sameWindow(a, b config.Window) bool { return a.Slots == b.Slots && a.Step == b.Step }
 
 // boundaries returns, by indicator name, the first boundary that falls due
 // from now on.
