@@ -33,10 +33,8 @@ func (e *Engine) lookAt(s *series, ep *epoch, boundary int64, due Instant) {
 	if len(looks) == 0 {
 		return
 	}
-	for _, d := range bothTails {
-		if (d == upper && ep.cfg.Upper) || (d == lower && ep.cfg.Lower) {
-			e.decide(s, d, looks, boundary, due)
-		}
+	for _, d := range bothTails { // a tail that is watched no longer may still have to return
+		e.decide(s, d, looks, boundary, due)
 	}
 }
 
