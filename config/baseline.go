@@ -4,7 +4,6 @@ import (
 	"fmt"
 	"math"
 	"math/big"
-	"slices"
 	"strings"
 )
 
@@ -17,90 +16,131 @@ func (s section) readBaselines(in *Indicator) []Baseline {
 	}
 	var all []Baseline
 	for i, t := range tables {
-		t.strict("[[indicator.baseline]]")
+		t.strict(baselinePlace)
 		b := t.readBaseline(in)
-		b.Series = t.readServed(in, all, i == len(tables)-1)
+		b.From, b.To = t.readValidity(in)
+		b.Series = t.readServed(in, &b, all, i == len(tables)-1)
 		all = append(all, b)
 	}
 	return all
-}
-
-// readServed reads which series of the indicator a baseline serves.
-func (s section) readServed(in *Indicator, earlier []Baseline, last bool) Pattern {
-	all := NewPattern("**")
-	n, given, ok := s.get("series", textKind)
-	if !ok {
-		return all
-	}
-	p := all
-	if given {
-		if p, ok = s.patternOf(n, s.key("series")); !ok {
-			return all
-		}
-	}
-	switch {
-	case last && p != all:
-		s.fault("series", "the last baseline must serve every series that is left", "leave series out here, or add a baseline without it")
-	case !last && p == all:
-		s.fault("series", "this baseline serves every series, so those after it are never used",
-			"say which series it serves, or put it last")
-	case p != all && slices.ContainsFunc(earlier, func(b Baseline) bool { return b.Series == p }):
-		s.fault("series", fmt.Sprintf("%q has a baseline already, and the first is used", n.text), "keep one")
-	case p != all && !slices.ContainsFunc(in.Series, func(q Pattern) bool { _, both := overlap(p, q); return both }):
-		s.fault("series", fmt.Sprintf("%q matches no series of this indicator", n.text), "compare it with the indicator's own patterns")
-	}
-	return p
 }
 
 func (s section) readBaseline(in *Indicator) Baseline {
 	b := Baseline{Margin: 1, Spread: 1}
 	b.Version, _ = s.text("version", "")
 	b.Source, _ = s.text("source", "")
-	if m, given, ok := s.number("margin"); given && ok {
-		if m.Cmp(big.NewRat(1, 1)) < 0 || m.Cmp(big.NewRat(1000, 1)) > 0 {
-			s.fault("margin", "is not between 1 and 1000: it is the ratio to the usual rate that is still accepted", "write 1 for none, 1.05 for five per cent")
-		} else {
-			b.Margin, _ = m.Float64()
-		}
-	}
+	s.readMargin(&b)
+	s.readSpread(&b)
+	b.Strata = s.readStrata(in)
+	b.Delay = s.readDelay()
 	n, given, ok := s.get("kind", textKind)
 	switch {
 	case !given:
-		s.fault("kind", "is missing: how is the usual rate known?", `write kind = "known" with a rate, or kind = "reference" with events and exposure`)
+		s.fault("kind", "is missing: how is the usual rate known?",
+			`write kind = "known" with a rate, "reference" with events and exposure, or "trailing" or "peers" with a span`)
 		return b
 	case !ok:
 		return b
-	case n.text == "trailing" || n.text == "peers":
-		s.fault("kind", fmt.Sprintf("%q can't be used yet", n.text), `write "known" or "reference"`)
-		return b
 	}
-	k, ok := s.wordOf(n, s.key("kind"), []string{"known", "reference"})
+	k, ok := s.wordOf(n, s.key("kind"), baselineWords)
 	b.Kind = BaselineKind(k)
 	if !ok {
 		return b
 	}
-	switch b.Kind {
-	case Known:
-		s.notWith("known", "events", "exposure")
-		b.Rate = s.readRate(in, b.Margin)
-	case Reference:
-		s.notWith("reference", "rate")
-		b.Events, b.Exposure = s.readReference(in)
-	}
+	s.readKind(in, &b)
+	s.checkModel(in, &b)
 	return b
 }
 
+// readKind reads the keys of the baseline's kind, and refuses those of others.
+func (s section) readKind(in *Indicator, b *Baseline) {
+	counted, history := []string{"events", "exposure"}, []string{"span", "refresh", "min_events"}
+	switch b.Kind {
+	case Known:
+		s.notWith(b.Kind, append(counted, history...)...)
+		b.Rate = s.readRate(in, b)
+	case Reference:
+		s.notWith(b.Kind, append(history, "rate")...)
+		b.Events, b.Exposure = s.readReference(in)
+	case Trailing, Peers:
+		s.notWith(b.Kind, append(counted, "rate")...)
+		s.readHistory(in, b)
+	}
+	if b.Kind != Trailing {
+		s.notWith(b.Kind, "gap")
+	}
+}
+
+func (s section) readMargin(b *Baseline) {
+	m, given, ok := s.number("margin")
+	switch {
+	case !given || !ok:
+	case m.Cmp(big.NewRat(1, 1)) < 0 || m.Cmp(big.NewRat(1000, 1)) > 0:
+		s.fault("margin", "is not between 1 and 1000: it is the ratio to the usual rate that is still accepted", "write 1 for none, 1.05 for five per cent")
+	default:
+		b.Margin, _ = m.Float64()
+	}
+}
+
+func (s section) readSpread(b *Baseline) {
+	phi, given, ok := s.number("spread")
+	switch {
+	case !given || !ok:
+	case phi.Cmp(big.NewRat(1, 1)) < 0 || phi.Cmp(big.NewRat(1000, 1)) > 0:
+		s.fault("spread", "is not between 1 and 1000: it is the variance of the counts over that of the model", "write 1 for none, 1.6 for 1.6 times as much")
+	default:
+		b.Spread, _ = phi.Float64()
+	}
+}
+
+// checkModel refuses what together has no meaning, or no exact test.
+func (s section) checkModel(in *Indicator, b *Baseline) {
+	if b.Strata != nil && b.Kind == Reference && in.Measure == Proportion {
+		s.fault("strata", "a stated reference does not say in which strata its trials were made, and odds can't be averaged over them",
+			`use kind = "known", "trailing" or "peers"`)
+	}
+	if b.Delay == nil {
+		return
+	}
+	const mend = "leave it out, and make settle so long that slots are complete when they are looked at"
+	switch {
+	case in.Measure == Proportion:
+		s.fault("delay", "is exact only for a rate (Poisson): an event that is not yet known is taken for a trial without one", mend)
+	case b.Spread > 1:
+		s.fault("delay", "and spread exclude each other: slots of which different shares are known have no common spread, so their sum has no exact law", mend)
+	}
+	if in.ArrivalLooks {
+		s.fault("delay", "counts from the end of whole slots, and arrival looks cut through them", `leave it out, or write looks = "slot"`)
+	}
+	if last := b.Delay.last(); last > in.Horizon {
+		s.fault("delay", fmt.Sprintf("some events are known only after %s, but what is older than the horizon, %s, is refused",
+			FormatDuration(last), FormatDuration(in.Horizon)), "make the horizon longer, or let the share reach 1 within it")
+	}
+}
+
+// baselineWords are the words for each kind of baseline.
+var baselineWords = []string{"known", "reference", "trailing", "peers"}
+
+// String returns the kind as it is written in a set-up.
+func (k BaselineKind) String() string {
+	switch k {
+	case Known, Reference, Trailing, Peers:
+		return baselineWords[k]
+	}
+	return fmt.Sprintf("BaselineKind(%d)", int(k))
+}
+
 // notWith reports keys that mean nothing for a kind of baseline.
-func (s section) notWith(kind string, keys ...string) {
+func (s section) notWith(kind BaselineKind, keys ...string) {
 	for _, k := range keys {
 		if s.has(k) {
-			s.fault(k, fmt.Sprintf("means nothing for kind = %q", kind), "leave it out")
+			s.fault(k, fmt.Sprintf("means nothing for kind = %q", kind.String()), "leave it out")
 		}
 	}
 }
 
 // readRate returns the usual rate per unit of exposure, or the proportion.
-func (s section) readRate(in *Indicator, margin float64) float64 {
+func (s section) readRate(in *Indicator, b *Baseline) float64 {
 	v, given, ok := s.number("rate")
 	switch {
 	case !given:
@@ -116,7 +156,7 @@ func (s section) readRate(in *Indicator, margin float64) float64 {
 		f, _ := v.Float64()
 		if v.Cmp(big.NewRat(1, 1)) >= 0 {
 			s.fault("rate", "the usual proportion must be less than 1", "write e.g. 0.02 for two in a hundred")
-		} else if f*margin >= 1 {
+		} else if b.Strata.greatest(f)*b.Margin >= 1 {
 			s.fault("margin", "the usual proportion times the margin must be less than 1", "make the margin smaller")
 		}
 		return f

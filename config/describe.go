@@ -132,25 +132,9 @@ func (p *prose) limit(in *Indicator) {
 		counted(in.Quiet, "look"), number(100-100*in.Alpha))
 }
 
-// looksPerYear is the number of looks of a window in 365.2425 days.
+// looksPerYear is the number of slot looks of a window in 365.2425 days.
 func (in *Indicator) looksPerYear(w *Window) float64 {
-	const day = 365.2425
-	perSlot := float64(in.Every.N * w.Step)
-	switch in.Every.Unit {
-	case Minute:
-		return day * 1440 / perSlot
-	case Hour:
-		return day * 24 / perSlot
-	case Day:
-		return day / perSlot
-	case Week:
-		return day / 7 / perSlot
-	case Month:
-		return 12 / perSlot
-	case Year:
-		return 1 / perSlot
-	}
-	return 0
+	return Every{in.Every.N * w.Step, in.Every.Unit}.perYear()
 }
 
 // chanceSignals bounds the expected number of looks of one series that signal

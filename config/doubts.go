@@ -71,7 +71,7 @@ func (d *doubts) silentLower(in *Indicator, i int) {
 		return
 	}
 	for _, w := range in.Windows {
-		exposure := size * in.longest(&w) / in.Clock.Per.Hours()
+		exposure := size * Every{w.Slots * in.Every.N, in.Every.Unit}.longestHours() / in.Clock.Per.Hours()
 		for j := range in.Baselines {
 			p := in.Baselines[j].chanceOfNone(exposure)
 			if p > in.PLimit {
@@ -81,26 +81,6 @@ func (d *doubts) silentLower(in *Indicator, i int) {
 			}
 		}
 	}
-}
-
-// longest is the greatest number of hours that a window can take.
-func (in *Indicator) longest(w *Window) float64 {
-	n := float64(w.Slots * in.Every.N)
-	switch in.Every.Unit {
-	case Minute:
-		return n / 60
-	case Hour:
-		return n
-	case Day:
-		return n*24 + 1
-	case Week:
-		return n*24*7 + 1
-	case Month:
-		return n * 24 * 31
-	case Year:
-		return n * 24 * 366
-	}
-	return 0
 }
 
 // chanceOfNone is the p-value of no event in an exposure under a baseline of

@@ -4,7 +4,6 @@ import (
 	"fmt"
 	"math/big"
 	"slices"
-	"strconv"
 	"time"
 )
 
@@ -24,9 +23,9 @@ func (s section) readIndicator() Indicator {
 	ids, _ := s.word("ids", 0, "kept", "none")
 	in.KeepIDs = ids == 0
 	in.Windows = s.readWindows(in.Every)
-	in.SlotLooks = true
 	s.readLook(&in)
 	in.Baselines = s.readBaselines(&in)
+	in.Allowance = s.readAllowance(&in)
 	return in
 }
 
@@ -126,45 +125,8 @@ func (s section) readMeasure(in *Indicator) {
 	in.Events = Events(events)
 	in.Exposure = s.readExposure(proportion)
 	in.Clock = s.readClock(in.Exposure)
+	in.CensusExpiry = s.readExpiry(in.Exposure)
 	in.GrainDigits = s.readGrain(proportion)
-}
-
-func (s section) readExposure(proportion bool) Exposure {
-	n, given, ok := s.get("exposure", textKind)
-	switch {
-	case !given || !ok:
-		return Reported
-	case n.text == "census":
-		s.fault("exposure", `"census" can't be used yet`, `write "reported" and give the exposure of each slot, or "clock"`)
-		return Reported
-	}
-	e, _ := s.wordOf(n, s.key("exposure"), []string{"reported", "clock"})
-	if proportion && Exposure(e) == Clock {
-		s.fault("exposure", "a proportion counts trials, and trials don't come from a clock", `write exposure = "reported" or measure = "rate"`)
-	}
-	return Exposure(e)
-}
-
-func (s section) readClock(exposure Exposure) ClockExposure {
-	clock := s.sub("clock")
-	given := s.has("clock")
-	switch {
-	case given && exposure != Clock:
-		s.fault("clock", `is used only with exposure = "clock"`, "leave it out, or say so")
-		return ClockExposure{}
-	case !given && exposure == Clock:
-		s.fault("clock", "is missing: how much exposure is there in how much time?", `write e.g. clock = { size = 12, per = "1d" } for 12 devices in use all day`)
-		return ClockExposure{}
-	case !given:
-		return ClockExposure{}
-	}
-	clock.strict("clock")
-	size, sizeGiven, ok := clock.decimal("size")
-	if ok && (!sizeGiven || size.Coef == 0) {
-		clock.fault("size", "must be given, and greater than 0", "write how much exposure there is in the time that per names")
-	}
-	per, _ := clock.duration("per", 24*time.Hour, time.Second, maxTime)
-	return ClockExposure{Size: size, Per: per}
 }
 
 // readGrain returns the number of decimal places of the exposure.
@@ -230,9 +192,22 @@ func (in *Indicator) horizonSlots() int {
 }
 
 func (s section) readSince(every Every, zone *time.Location) time.Time {
-	n, given, ok := s.get("since", dateKind, timeKind, textKind)
+	t, ok := s.instant("since", zone)
+	if !ok || t.IsZero() {
+		return t
+	}
+	if problem := notAtSlot(t.In(zone), every); problem != "" {
+		s.fault("since", fmt.Sprintf("%s does not begin a slot of %s", s.node.fields["since"].text, every), problem)
+	}
+	return t
+}
+
+// instant returns a moment, given as a date in the zone or as a time with its
+// offset; zero if it isn't given.
+func (s section) instant(name string, zone *time.Location) (time.Time, bool) {
+	n, given, ok := s.get(name, dateKind, timeKind, textKind)
 	if !given || !ok {
-		return time.Time{}
+		return time.Time{}, ok
 	}
 	t, err := time.ParseInLocation(time.DateOnly, n.text, zone)
 	if err != nil {
@@ -240,17 +215,14 @@ func (s section) readSince(every Every, zone *time.Location) time.Time {
 	}
 	switch {
 	case err != nil:
-		s.fault("since", fmt.Sprintf("%q is neither a date nor a time with its offset", n.text),
+		s.fault(name, fmt.Sprintf("%q is neither a date nor a time with its offset", n.text),
 			`write e.g. "2026-01-01" (in the indicator's zone) or "2026-01-01T00:00:00+01:00"`)
-		return time.Time{}
+		return time.Time{}, false
 	case t.Year() < 1 || t.Year() > 9998:
-		s.fault("since", n.text+" is not a time of the years 1 to 9998", "")
-		return time.Time{}
+		s.fault(name, n.text+" is not a time of the years 1 to 9998", "")
+		return time.Time{}, false
 	}
-	if problem := notAtSlot(t.In(zone), every); problem != "" {
-		s.fault("since", fmt.Sprintf("%s does not begin a slot of %s", n.text, every), problem)
-	}
-	return t.UTC()
+	return t.UTC(), true
 }
 
 // notAtSlot says where slots of a day and more begin if t isn't there.
@@ -278,76 +250,4 @@ func notAtSlot(t time.Time, every Every) string {
 	case Minute, Hour, Day:
 	}
 	return ""
-}
-
-// readLook reads when a look signals and when an alert has returned.
-func (s section) readLook(in *Indicator) {
-	in.Upper, in.Lower = s.readTails()
-	in.PLimit = 0.001
-	if p, given, ok := s.number("p_limit"); given && ok {
-		in.PLimit, _ = p.Float64()
-		if in.PLimit < 1e-300 || in.PLimit >= 0.5 {
-			s.fault("p_limit", strconv.FormatFloat(in.PLimit, 'g', -1, 64)+" is not greater than 0 and less than 0.5", "a usual limit is 0.001")
-		}
-	}
-	quiet, _ := s.whole("quiet", 7, 1, maxSlots)
-	in.Quiet = int(quiet)
-	in.Alpha = s.readAlpha()
-}
-
-func (s section) readTails() (upper, lower bool) {
-	items, given := s.list("tails", 2)
-	if !given {
-		return true, false
-	}
-	for i, n := range items {
-		key := s.item("tails", i)
-		if n.kind != textKind {
-			s.wrongKind(n, key, textKind)
-			continue
-		}
-		tail, ok := s.wordOf(n, key, []string{"upper", "lower"})
-		switch {
-		case !ok:
-		case tail == 0 && upper, tail == 1 && lower:
-			s.add(n, key, fmt.Sprintf("%q stands twice", n.text), "keep one")
-		case tail == 0:
-			upper = true
-		default:
-			lower = true
-		}
-	}
-	return upper, lower
-}
-
-// readAlpha returns one minus the confidence level, computed in decimal: a
-// level of 0.95 gives the number nearest to 0.05.
-func (s section) readAlpha() float64 {
-	const usual = 0.05
-	if s.has("level") && s.has("alpha") {
-		s.fault("alpha", "says the same as level", "keep one: level = 0.95 is alpha = 0.05")
-		return usual
-	}
-	key := "level"
-	if s.has("alpha") {
-		key = "alpha"
-	}
-	v, given, ok := s.number(key)
-	if !given || !ok {
-		return usual
-	}
-	alpha := v
-	if key == "level" {
-		alpha = new(big.Rat).Sub(big.NewRat(1, 1), v)
-	}
-	if alpha.Cmp(big.NewRat(1, 1_000_000_000)) < 0 || alpha.Cmp(big.NewRat(1, 2)) > 0 {
-		if key == "level" {
-			s.fault(key, "is not between 0.5 and 0.999999999", "a usual level is 0.95")
-		} else {
-			s.fault(key, "is not between 0.000000001 and 0.5", "a usual alpha is 0.05")
-		}
-		return usual
-	}
-	f, _ := alpha.Float64()
-	return f
 }

@@ -26,11 +26,12 @@ type Memory struct {
 
 // Memory estimates what a daemon with this set-up holds when it is full:
 //
-//	series = 1024 + 64 (longest window + horizon) + 24 (horizon) (sum over windows of 1/step)
+//	series = 1024 + 64 (kept + horizon) + 24 (horizon) (sum over windows of 1/step)
 //	total  = MaxSeries x the dearest series + 320 MaxIDs
 //
-// with the window and the horizon in slots. Ids cost nothing if no indicator
-// keeps them.
+// in slots, where kept is the longest window or, if that is more, the longest
+// refresh, gap and span together of a trailing or peers baseline. Ids cost
+// nothing if no indicator keeps them.
 func (s *Setup) Memory() Memory {
 	var m Memory
 	var dearest int64
@@ -50,13 +51,12 @@ func (s *Setup) Memory() Memory {
 }
 
 func (in *Indicator) memory() int64 {
-	longest, looks := 0, 0
+	looks := 0
 	horizon := in.horizonSlots()
 	for _, w := range in.Windows {
-		longest = max(longest, w.Slots)
 		looks += horizon/w.Step + 1
 	}
-	return bytesPerSeries + int64(longest+horizon)*bytesPerCell + int64(looks)*bytesPerLook
+	return bytesPerSeries + int64(in.keptSlots()+horizon)*bytesPerCell + int64(looks)*bytesPerLook
 }
 
 // checkMemory refuses a set-up whose estimate is over its own limit.

@@ -30,7 +30,10 @@ const (
 // Relative paths are left as they are written. The error is of type Faults and
 // lists everything that is wrong; file is only the name that it gives.
 func Parse(text []byte, file string) (*Setup, error) {
-	c := &collector{file: file}
+	return parse(text, &collector{file: file, unready: !allowancesReady})
+}
+
+func parse(text []byte, c *collector) (*Setup, error) {
 	if len(text) > maxFileBytes {
 		c.add(nil, "", "is larger than "+FormatSize(maxFileBytes), "")
 		return nil, c.err()
@@ -114,14 +117,14 @@ func readSetup(top section) *Setup {
 	s.Bus = bus.readBus()
 	limits := top.sub("limits")
 	s.Limits = limits.readLimits()
-	s.Indicators = readIndicators(top)
+	s.Indicators = readIndicators(top, s)
 	if len(top.faults) == 0 {
 		s.checkMemory(limits)
 	}
 	return s
 }
 
-func readIndicators(top section) []Indicator {
+func readIndicators(top section, s *Setup) []Indicator {
 	tables := top.tables("indicator", maxIndicators)
 	if !top.has("indicator") {
 		top.fault("indicator", "is missing: nothing would be monitored", `add a table [[indicator]]; "tailbell config sample" shows one`)
@@ -131,6 +134,7 @@ func readIndicators(top section) []Indicator {
 	for _, t := range tables {
 		in := t.readIndicator()
 		t.compareNames(&in, names, patterns)
+		t.checkPeers(&in, s)
 		all = append(all, in)
 	}
 	return all

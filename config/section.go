@@ -24,17 +24,22 @@ type section struct {
 
 // keysOf are the keys that each kind of table may have.
 var keysOf = map[string][]string{
-	"":                       {"name", "folder", "partitions", "key_parts", "time", "bus", "limits", "indicator"},
-	"[time]":                 {"mode"},
-	"[bus]":                  {"url", "credentials", "user", "password_file", "ca", "cert", "key", "max_bytes", "max_age", "replicas"},
-	"[limits]":               {"max_series", "max_ids", "max_message", "max_observations", "memory"},
-	indicatorPlace:           {"name", "title", "noun", "series", "measure", "unit", "per", "every", "zone", "events", "exposure", "clock", "settle", "horizon", "ahead", "grain", "ids", "since", "expect", "windows", "tails", "p_limit", "quiet", "level", "alpha", "baseline"},
-	"clock":                  {"size", "per"},
-	"a window":               {"span", "step"},
-	"[[indicator.baseline]]": {"series", "kind", "rate", "margin", "events", "exposure", "version", "source"},
+	"":             {"name", "folder", "partitions", "key_parts", "time", "bus", "limits", "indicator"},
+	"[time]":       {"mode"},
+	"[bus]":        {"url", "credentials", "user", "password_file", "ca", "cert", "key", "max_bytes", "max_age", "replicas"},
+	"[limits]":     {"max_series", "max_ids", "max_message", "max_observations", "memory"},
+	indicatorPlace: {"name", "title", "noun", "series", "measure", "unit", "per", "every", "zone", "events", "exposure", "clock", "settle", "horizon", "ahead", "grain", "ids", "expires", "since", "expect", "windows", "looks", "tails", "p_limit", "allowance", "allowance_for", "assurance", "reserve", "quiet", "level", "alpha", "baseline"},
+	"clock":        {"size", "per"},
+	"a window":     {"span", "step"},
+	baselinePlace:  {"series", "from", "to", "kind", "rate", "events", "exposure", "span", "gap", "refresh", "min_events", "margin", "spread", "strata", "delay", "version", "source"},
+	"strata":       {"by", "factors"},
+	"delay":        {"ages", "reported"},
 }
 
-const indicatorPlace = "[[indicator]]"
+const (
+	indicatorPlace = "[[indicator]]"
+	baselinePlace  = "[[indicator.baseline]]"
+)
 
 // key returns the full key of one of the section's keys.
 func (s section) key(name string) string {
@@ -242,6 +247,16 @@ func (s section) number(name string) (v *big.Rat, given, ok bool) {
 	if !given || !ok {
 		return nil, given, ok
 	}
+	v, ok = s.numberOf(n, s.key(name))
+	return v, true, ok
+}
+
+// numberOf reads a number from one value.
+func (c *collector) numberOf(n *node, key string) (v *big.Rat, ok bool) {
+	if n.kind != wholeKind && n.kind != pointKind {
+		c.wrongKind(n, key, wholeKind)
+		return nil, false
+	}
 	text := strings.ReplaceAll(n.text, "_", "")
 	f, err := strconv.ParseFloat(text, 64)
 	switch {
@@ -255,10 +270,34 @@ func (s section) number(name string) (v *big.Rat, given, ok bool) {
 		v, ok = new(big.Rat).SetString(text)
 	}
 	if !ok {
-		s.fault(name, n.text+" is not a number that can be held", "")
-		return nil, true, false
+		c.add(n, key, n.text+" is not a number that can be held", "")
+		return nil, false
 	}
-	return v, true, true
+	return v, true
+}
+
+// numbers returns a list of at most n numbers, each greater than 0 and not
+// less than least nor more than greatest.
+func (s section) numbers(name string, n int, least, greatest float64) (all []float64, ok bool) {
+	items, given := s.list(name, n)
+	ok = len(items) > 0
+	if !given {
+		s.fault(name, "is missing", "write a list of numbers, e.g. [0.8, 1, 1.2]")
+	}
+	for i, item := range items {
+		v, sound := s.numberOf(item, s.item(name, i))
+		if !sound {
+			ok = false
+			continue
+		}
+		f, _ := v.Float64()
+		if f < least || f > greatest {
+			s.add(item, s.item(name, i), fmt.Sprintf("%s is not between %v and %v", item.text, least, greatest), "")
+			ok = false
+		}
+		all = append(all, f)
+	}
+	return all, ok
 }
 
 // decimal returns an exact decimal number, which may stand between quotation
@@ -282,14 +321,27 @@ func (s section) duration(name string, standard, least, most time.Duration) (tim
 	if !given || !ok {
 		return standard, ok
 	}
+	d, ok := s.durationOf(n, s.key(name), least, most)
+	if !ok {
+		return standard, false
+	}
+	return d, true
+}
+
+// durationOf reads an elapsed time between two bounds from one value.
+func (c *collector) durationOf(n *node, key string, least, most time.Duration) (time.Duration, bool) {
+	if n.kind != textKind {
+		c.wrongKind(n, key, textKind)
+		return 0, false
+	}
 	d, err := ParseDuration(n.text)
 	switch {
 	case err != nil:
-		s.fault(name, fmt.Sprintf("%q is no elapsed time", n.text), durationMend(err))
-		return standard, false
+		c.add(n, key, fmt.Sprintf("%q is no elapsed time", n.text), durationMend(err))
+		return 0, false
 	case d < least || d > most:
-		s.fault(name, fmt.Sprintf("%q is not between %s and %s", n.text, FormatDuration(least), FormatDuration(most)), "")
-		return standard, false
+		c.add(n, key, fmt.Sprintf("%q is not between %s and %s", n.text, FormatDuration(least), FormatDuration(most)), "")
+		return 0, false
 	}
 	return d, true
 }
