@@ -177,7 +177,7 @@ func fromR(t *testing.T, name string) *rOutput {
 			return
 		}
 		got := parseR(t, text)
-		near := cmp.Comparer(func(a, b string) bool { return a == b || closeTo(number(t, a), number(t, b)) })
+		near := cmp.Comparer(func(a, b string) bool { return a == b || closeTo(floatOf(t, a), floatOf(t, b)) })
 		if diff := cmp.Diff(want, got, cmp.AllowUnexported(rOutput{}), near); diff != "" {
 			t.Errorf("R says something else than %s (-kept +now):\n%s", golden, diff)
 		}
@@ -209,8 +209,8 @@ func parseR(t *testing.T, text []byte) *rOutput {
 	return out
 }
 
-// number is NaN for what is none, which is close to nothing.
-func number(t *testing.T, text string) float64 {
+// floatOf is NaN for what is none, which is close to nothing.
+func floatOf(t *testing.T, text string) float64 {
 	t.Helper()
 	f, err := strconv.ParseFloat(text, 64)
 	if err != nil {
@@ -230,7 +230,7 @@ func sameAsR(t *testing.T, e *life.Evidence, row map[string]string) {
 	if e.Ratio == nil || e.RatioUpper == nil {
 		t.Fatalf("%s to %s: no ratio", e.Window, e.To)
 	}
-	exposure := number(t, e.Exposure)
+	exposure := floatOf(t, e.Exposure)
 	for _, c := range []struct {
 		name string
 		got  float64
@@ -249,7 +249,7 @@ func sameAsR(t *testing.T, e *life.Evidence, row map[string]string) {
 		{"ratio_lower", e.RatioLower},
 		{"ratio_upper", *e.RatioUpper},
 	} {
-		if want := number(t, row[c.name]); !closeTo(c.got, want) {
+		if want := floatOf(t, row[c.name]); !closeTo(c.got, want) {
 			t.Errorf("%s to %s: %s is %.17g; R says %.17g", e.Window, row["to"], c.name, c.got, want)
 		}
 	}
@@ -310,7 +310,7 @@ func TestCoal(t *testing.T) {
 			if e != nil && !looked[look(e)] {
 				looked[look(e)] = true
 				sameAsR(t, e, byLook[look(e)])
-				if e.Limit != number(t, r.facts["limit"]) {
+				if e.Limit != floatOf(t, r.facts["limit"]) {
 					t.Errorf("p_limit is %g; R takes %s", e.Limit, r.facts["limit"])
 				}
 			}
@@ -406,13 +406,13 @@ func TestHorsekicks(t *testing.T) {
 	for i := range d.notices {
 		e := &d.notices[i].Record.Opening
 		row := rows[d.notices[i].Record.Series+" "+e.To.Format(time.DateOnly)]
-		if number(t, row["events"]) != float64(e.Events) || !closeTo(e.P, number(t, row["p"])) {
+		if floatOf(t, row["events"]) != float64(e.Events) || !closeTo(e.P, floatOf(t, row["p"])) {
 			t.Errorf("%s: %d deaths, p = %.17g; R says %s, %s", d.notices[i].Record.Series, e.Events, e.P, row["events"], row["p"])
 		}
-		if float64(e.Critical) != number(t, r.facts["critical"]) || !closeTo(e.AttainedSize, number(t, r.facts["size"])) {
+		if float64(e.Critical) != floatOf(t, r.facts["critical"]) || !closeTo(e.AttainedSize, floatOf(t, r.facts["size"])) {
 			t.Errorf("critical count %d of size %.17g; R says %s, %s", e.Critical, e.AttainedSize, r.facts["critical"], r.facts["size"])
 		}
-		if chance := e.AttainedSize * float64(d.account.Looks); !closeTo(chance, number(t, r.facts["by chance"])) {
+		if chance := e.AttainedSize * float64(d.account.Looks); !closeTo(chance, floatOf(t, r.facts["by chance"])) {
 			t.Errorf("%.17g signals by chance; R says %s", chance, r.facts["by chance"])
 		}
 	}
