@@ -176,11 +176,14 @@ func (c *comparison) indicator(a, b *Indicator) {
 	c.value("ahead", NextLook, FormatDuration(a.Ahead), FormatDuration(b.Ahead), "")
 	c.value("grain", Rebuild, grainText(a), grainText(b), "")
 	c.value("ids", Rebuild, idsWord(a), idsWord(b), "")
+	c.value("expires", NextLook, expiryText(a), expiryText(b), "")
 	c.value("since", Rebuild, sinceText(a), sinceText(b), "")
 	c.value("expect", NextLook, FormatDuration(a.Expect), FormatDuration(b.Expect), "")
 	c.windows(a, b)
+	c.looks(a, b)
 	c.value("tails", NextLook, strings.Join(tailWords(a), ", "), strings.Join(tailWords(b), ", "), "")
-	c.value("p_limit", NextLook, a.PLimit, b.PLimit, "")
+	c.value("p_limit", NextLook, unlessZero(a.PLimit), unlessZero(b.PLimit), "")
+	c.allowance(a.Allowance, b.Allowance)
 	c.value("quiet", NextLook, a.Quiet, b.Quiet, "")
 	c.value("alpha", NextLook, a.Alpha, b.Alpha, "")
 	c.baselines(a, b)
@@ -241,37 +244,6 @@ func windowOf(in *Indicator, slots int) *Window {
 
 func windowText(w *Window) string { return fmt.Sprintf("%s, a look every %d slots", w.Name, w.Step) }
 
-func (c *comparison) baselines(a, b *Indicator) {
-	for i := range max(len(a.Baselines), len(b.Baselines)) {
-		var before, after *Baseline
-		effect := ""
-		if i < len(a.Baselines) {
-			before = &a.Baselines[i]
-		}
-		if i < len(b.Baselines) {
-			after = &b.Baselines[i]
-		}
-		if before != nil && after != nil && before.Version == after.Version {
-			effect = "give it a new version, so that alerts tell the two apart"
-		}
-		c.value(fmt.Sprintf("baseline[%d]", i+1), NextLook, baselineText(before), baselineText(after), effect)
-	}
-}
-
-func baselineText(b *Baseline) string {
-	if b == nil {
-		return ""
-	}
-	text := fmt.Sprintf("%s: ", b.Series)
-	switch b.Kind {
-	case Known:
-		text += fmt.Sprintf("known, %v for one unit of exposure", b.Rate)
-	case Reference:
-		text += fmt.Sprintf("reference, %d in %s", b.Events, b.Exposure)
-	}
-	return text + fmt.Sprintf(", margin %v, version %q, source %q", b.Margin, b.Version, b.Source)
-}
-
 func measureWord(in *Indicator) string {
 	if in.Measure == Proportion {
 		return "proportion"
@@ -287,10 +259,22 @@ func eventsWord(in *Indicator) string {
 }
 
 func exposureWord(in *Indicator) string {
-	if in.Exposure == Clock {
+	switch in.Exposure {
+	case Reported:
+		return "reported"
+	case Clock:
 		return "clock"
+	case Census:
+		return "census"
 	}
-	return "reported"
+	return ""
+}
+
+func expiryText(in *Indicator) string {
+	if in.Exposure != Census {
+		return ""
+	}
+	return FormatDuration(in.CensusExpiry)
 }
 
 func idsWord(in *Indicator) string {

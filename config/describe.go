@@ -78,7 +78,7 @@ func (p *prose) counting(in *Indicator) {
 	}
 	p.line("  Counts %s per %s, a %s (%s).", in.EventNoun, perUnit(in), measureWord(in), model)
 	switch in.Exposure {
-	case Reported:
+	case Reported, Census:
 		if in.GrainDigits == 0 {
 			p.line("  Exposure is reported, in whole %s.", in.Unit)
 		} else {
@@ -87,13 +87,17 @@ func (p *prose) counting(in *Indicator) {
 	case Clock:
 		p.line("  Exposure comes from the clock: %s %s in %s, and need not be reported.", in.Clock.Size, in.Unit, elapsed(in.Clock.Per))
 	}
+	if in.Exposure == Census {
+		p.line("  It is a census: the last level reported is carried forward, and shown as provisional, until the next is reported or %s have passed.",
+			elapsed(in.CensusExpiry))
+	}
 	switch in.Events {
 	case Each:
 		p.line("  Each event is a message: a slot without one had none.")
 	case Counted:
 		p.line("  Events are reported as counts: a slot without a report is missing, not zero.")
 	}
-	if in.Events == Counted || in.Exposure == Reported {
+	if in.Events == Counted || in.Exposure != Clock {
 		p.line("  A look at a window in which anything is missing is withheld, not guessed.")
 	}
 }
@@ -111,30 +115,9 @@ func (p *prose) slots(in *Indicator) {
 	}
 }
 
-func (p *prose) window(in *Indicator, w *Window) {
-	step := Every{N: w.Step * in.Every.N, Unit: in.Every.Unit}
-	p.line("  Window %s: looked at every %s, about %s looks a year.", w.Name, spanWords(step), about(in.looksPerYear(w)))
-}
-
-func (p *prose) limit(in *Indicator) {
-	tails, each := "as many events or more", ""
-	switch {
-	case in.Upper && in.Lower:
-		tails, each = "as many events or more, or that of as few or fewer,", " for each of the two"
-	case in.Lower:
-		tails = "as few events or fewer"
-	}
-	p.line("  A look signals when the chance of %s is at most %s if the usual rate holds: at most one look in %s does so by chance%s.",
-		tails, number(in.PLimit), about(1/in.PLimit), each)
-	p.line("  That is at most %s signalling looks by chance a year and series; neighbouring looks share their data, so alerts are fewer.",
-		about(in.chanceSignals()))
-	p.line("  Alerts return after %s in a row without a signal. Bounds are shown at %s%% confidence.",
-		counted(in.Quiet, "look"), number(100-100*in.Alpha))
-}
-
 // looksPerYear is the number of slot looks of a window in 365.2425 days.
 func (in *Indicator) looksPerYear(w *Window) float64 {
-	return Every{in.Every.N * w.Step, in.Every.Unit}.perYear()
+	return in.slotLength(w.Step).perYear()
 }
 
 // chanceSignals bounds the expected number of looks of one series that signal
@@ -148,61 +131,13 @@ func (in *Indicator) chanceSignals() float64 {
 	return looks * in.PLimit * float64(len(tailWords(in)))
 }
 
-func (p *prose) baseline(in *Indicator, i int) {
-	b := &in.Baselines[i]
-	who := "All series"
-	switch {
-	case i < len(in.Baselines)-1:
-		who = "Series " + b.Series.String()
-	case i > 0:
-		who = "All other series"
-	}
-	usual := ""
-	switch b.Kind {
-	case Known:
-		usual = fmt.Sprintf("the known rate of %s %s per %s", number(b.Rate*in.Per), in.EventNoun, perUnit(in))
-		if in.Measure == Proportion {
-			usual = fmt.Sprintf("the known proportion of %s", number(b.Rate))
-		}
-	case Reference:
-		usual = fmt.Sprintf("a reference of %s %s in %s %s", grouped(b.Events), in.EventNoun, b.Exposure, in.Unit)
-	}
-	p.line("  %s: judged by %s%s%s.", who, usual, marginText(in, b), origin(b))
-}
-
-func marginText(in *Indicator, b *Baseline) string {
-	ratio := "a ratio"
-	if in.Measure == Proportion && b.Kind == Reference {
-		ratio = "an odds ratio"
-	}
-	switch {
-	case b.Margin == 1:
-		return ""
-	case in.Upper && in.Lower:
-		return fmt.Sprintf(", %s from 1/%s to %s is accepted", ratio, number(b.Margin), number(b.Margin))
-	case in.Lower:
-		return fmt.Sprintf(", %s down to 1/%s is accepted", ratio, number(b.Margin))
-	}
-	return fmt.Sprintf(", %s up to %s is accepted", ratio, number(b.Margin))
-}
-
-func origin(b *Baseline) string {
-	var parts []string
-	if b.Version != "" {
-		parts = append(parts, "version "+b.Version)
-	}
-	if b.Source != "" {
-		parts = append(parts, "source: "+b.Source)
-	}
-	if len(parts) == 0 {
-		return " (neither version nor source given)"
-	}
-	return " (" + strings.Join(parts, "; ") + ")"
-}
-
 func (p *prose) late(in *Indicator) {
-	p.line("  A slot is looked at %s. Data may change it up to %s back: looks are then made again, and what is older is refused.",
-		afterEnd(in.Settle), elapsed(in.Horizon))
+	if in.SlotLooks {
+		p.line("  A slot is looked at %s. Data may change it up to %s back: looks are then made again, and what is older is refused.",
+			afterEnd(in.Settle), elapsed(in.Horizon))
+	} else {
+		p.line("  Data may change what was counted up to %s back: looks are then made again, and what is older is refused.", elapsed(in.Horizon))
+	}
 	p.line("  Data further than %s in the future are refused.", elapsed(in.Ahead))
 	if in.KeepIDs {
 		p.line("  Observation ids are kept as long as data may change, so nothing is counted twice.")

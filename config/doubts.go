@@ -5,6 +5,7 @@ import (
 	"math"
 	"net"
 	"net/url"
+	"slices"
 	"strconv"
 	"strings"
 )
@@ -52,18 +53,29 @@ func (d *doubts) indicator(in *Indicator, i int) {
 		d.at(in, i, "expect", fmt.Sprintf("%s is shorter than a slot of %s: a series reported once a slot would be shown as silent",
 			FormatDuration(in.Expect), in.Every), "make it longer than a slot")
 	}
-	if chance := in.chanceSignals(); chance > 12 {
+	if chance := in.chanceSignals(); chance > 12 && in.SlotLooks {
 		d.at(in, i, "p_limit", fmt.Sprintf("up to %s looks a year of every series would signal by chance", about(chance)),
 			"make p_limit smaller, or the steps of the windows longer")
 	}
+	if a := in.Allowance; a != nil && !a.PerIndicator && a.PerYear() > 12 {
+		d.at(in, i, "allowance", fmt.Sprintf("%q is %s false alerts a year of every series", a, about(a.PerYear())), "allow fewer, or a longer time")
+	}
+	if in.Exposure == Census && in.CensusExpiry < in.Every.shortest() {
+		d.at(in, i, "expires", fmt.Sprintf("%s is shorter than a slot of %s: a level would not last to the end of the next slot",
+			FormatDuration(in.CensusExpiry), in.Every), "make it longer than a slot")
+	}
 	d.silentLower(in, i)
+	d.validity(in, i)
+	for j := range in.Baselines {
+		d.baseline(in, i, j)
+	}
 }
 
 // silentLower finds windows that are too short for the lower tail: not even no
 // event at all would be a signal. It can be told beforehand only if the
 // exposure comes from the clock.
 func (d *doubts) silentLower(in *Indicator, i int) {
-	if !in.Lower || in.Exposure != Clock {
+	if !in.Lower || in.Exposure != Clock || in.Allowance != nil {
 		return
 	}
 	size, err := strconv.ParseFloat(in.Clock.Size.String(), 64)
@@ -71,7 +83,7 @@ func (d *doubts) silentLower(in *Indicator, i int) {
 		return
 	}
 	for _, w := range in.Windows {
-		exposure := size * Every{w.Slots * in.Every.N, in.Every.Unit}.longestHours() / in.Clock.Per.Hours()
+		exposure := size * in.slotLength(w.Slots).longestHours() / in.Clock.Per.Hours()
 		for j := range in.Baselines {
 			p := in.Baselines[j].chanceOfNone(exposure)
 			if p > in.PLimit {
@@ -84,17 +96,27 @@ func (d *doubts) silentLower(in *Indicator, i int) {
 }
 
 // chanceOfNone is the p-value of no event in an exposure under a baseline of
-// a rate: exp(-mu), or for a reference the conditional test's (1-q)^M.
+// a rate, or less: exp(-mu), with a spread phi^(-mu/(phi-1)), or for a
+// reference the conditional test's (1-q)^M. Strata count with their greatest
+// factor, and what can't be told beforehand as 0.
 func (b *Baseline) chanceOfNone(exposure float64) float64 {
+	if b.Strata != nil {
+		exposure *= slices.Max(b.Strata.Factors)
+	}
 	switch b.Kind {
 	case Known:
-		return math.Exp(-b.Rate * exposure / b.Margin)
+		mu := b.Rate * exposure / b.Margin
+		if b.Spread > 1 {
+			return math.Exp(-mu * math.Log(b.Spread) / (b.Spread - 1))
+		}
+		return math.Exp(-mu)
 	case Reference:
 		reference, err := strconv.ParseFloat(b.Exposure.String(), 64)
 		if err != nil {
 			return 0
 		}
 		return math.Exp(-float64(b.Events) * math.Log1p(exposure/b.Margin/reference))
+	case Trailing, Peers:
 	}
 	return 0
 }
