@@ -109,13 +109,12 @@ func bracketed(a, b float64, f func(float64) float64) float64 {
 		return a
 	}
 	a, b, fa, fb = b, a, fb, fa
-	c, fc, t := a, fa, 0.5
+	t := 0.5
 	for range 200 {
 		x := a + t*(b-a)
 		fx := f(x)
-		if (fx > 0) == (fa > 0) {
-			c, fc = a, fa
-		} else {
+		c, fc := a, fa
+		if (fx > 0) != (fa > 0) {
 			c, b, fc, fb = b, a, fb, fa
 		}
 		a, fa = x, fx

@@ -114,7 +114,7 @@ func FuzzNegativeBinomial(f *testing.F) {
 		}
 		valid := rate >= 0 && exposure >= 0 && finite(rate, exposure) && size > 0 && size <= 1e15
 		try(t, x, valid, k, limit, exact.Sides(uint64(k)%3))
-		exact.NewNegativeBinomial(rate, exposure, size)
+		try(t, exact.NewNegativeBinomial(1+math.Abs(math.Mod(rate, 1e6)), 1, 1.01+math.Abs(math.Mod(size, 1e6))), finite(rate, size) && k <= 1<<53, k, limit, exact.Central)
 	})
 }
 

@@ -212,3 +212,45 @@ func (u *Urn) Split(rng *rand.Rand, n int64, counts []int64) {
 		}
 	}
 }
+
+// Gamma draws from the gamma law of the given shape, positive, and scale 1
+// (Marsaglia and Tsang 2000, ACM Transactions on Mathematical Software 26).
+func Gamma(rng *rand.Rand, shape float64) float64 {
+	if shape < 1 {
+		return Gamma(rng, shape+1) * math.Pow(1-rng.Float64(), 1/shape)
+	}
+	d := shape - 1./3
+	c := 1 / math.Sqrt(9*d)
+	for {
+		x := rng.NormFloat64()
+		v := 1 + c*x
+		if v <= 0 {
+			continue
+		}
+		v *= v * v
+		u := 1 - rng.Float64()
+		if math.Log(u) < x*x/2+d-d*v+d*math.Log(v) {
+			return d * v
+		}
+	}
+}
+
+// Poisson draws a count of the given mean, from 0 to 1e9: by counting up gaps
+// where it is small, else by splitting off a gamma waiting time (Ahrens and
+// Dieter 1974).
+func Poisson(rng *rand.Rand, mean float64) int64 {
+	n := int64(0)
+	for mean > 20 {
+		k := math.Floor(mean * 7 / 8)
+		wait := Gamma(rng, k)
+		if wait > mean {
+			return n + Binomial(rng, int64(k)-1, mean/wait)
+		}
+		n += int64(k)
+		mean -= wait
+	}
+	for mean -= rng.ExpFloat64(); mean > 0; mean -= rng.ExpFloat64() {
+		n++
+	}
+	return n
+}
