@@ -14,12 +14,15 @@ func (s section) readBaselines(in *Indicator) []Baseline {
 	if !s.has("baseline") {
 		s.fault("baseline", "is missing: what is the usual rate?", "add a table [indicator.baseline]")
 	}
-	var all []Baseline
+	var all, sound []Baseline // sound is their validity
 	for i, t := range tables {
 		t.strict(baselinePlace)
 		b := t.readBaseline(in)
-		b.From, b.To = t.readValidity(in)
-		b.Series = t.readServed(in, &b, all, i == len(tables)-1)
+		var ok bool
+		if b.From, b.To, ok = t.readValidity(in); ok {
+			b.Series = t.readServed(in, &b, sound, i == len(tables)-1)
+			sound = append(sound, b)
+		}
 		all = append(all, b)
 	}
 	return all

@@ -61,10 +61,17 @@ func TestCompare(t *testing.T) {
 // that is added to the set-up and forgotten in Compare fails here.
 func TestCompareSeesEveryField(t *testing.T) {
 	exempt := []string{"Text", "Digest", "Indicators.Line", "Indicators.Zone", "Indicators.Name", "Indicators.Windows.Slots"}
+	var exposure Exposure
+	var kind BaselineKind
 	fresh := func() *Setup {
 		s := mustParse(t, string(Sample()))
-		s.Indicators[0].Exposure = Clock
-		s.Indicators[0].Baselines = s.Indicators[0].Baselines[:1]
+		in := &s.Indicators[0]
+		in.Exposure = exposure
+		in.Allowance = &Allowance{Alerts: 1, Every: Every{5, Year}}
+		in.Baselines = in.Baselines[:1]
+		in.Baselines[0].Kind = kind
+		in.Baselines[0].Strata = &Strata{By: ByWeekday, Factors: []float64{1, 1, 1, 1, 1, 1, 1}}
+		in.Baselines[0].Delay = &Delay{Ages: []time.Duration{0, time.Hour}, Reported: []float64{0.5, 1}}
 		return s
 	}
 	var walk func(path string, at func(*Setup) reflect.Value)
@@ -80,15 +87,18 @@ func TestCompareSeesEveryField(t *testing.T) {
 				walk(strings.TrimPrefix(path+"."+v.Type().Field(i).Name, "."), func(s *Setup) reflect.Value { return at(s).Field(i) })
 			}
 			return
+		case v.Kind() == reflect.Pointer:
+			walk(path, func(s *Setup) reflect.Value { return at(s).Elem() })
+			return
 		case v.Kind() == reflect.Slice:
 			walk(path, func(s *Setup) reflect.Value { return at(s).Index(0) })
 			return
 		}
-		// A baseline of one kind does not show the fields of the other.
-		for _, kind := range []BaselineKind{Known, Reference} {
+		// A baseline of one kind does not show the fields of another, nor an
+		// exposure that of another.
+		for i := range 4 {
+			kind, exposure = BaselineKind(i), Exposure(i%3)
 			before, after := fresh(), fresh()
-			before.Indicators[0].Baselines[0].Kind = kind
-			after.Indicators[0].Baselines[0].Kind = kind
 			alter(t, path, at(after))
 			if len(Compare(before, after)) > 0 {
 				return

@@ -54,9 +54,6 @@ func usualText(in *Indicator, b *Baseline) string {
 	case Reference:
 		return fmt.Sprintf("a reference of %s %s in %s %s", grouped(b.Events), in.EventNoun, b.Exposure, in.Unit)
 	case Trailing:
-		if b.GapSlots == 0 {
-			return "what each counted itself in " + length
-		}
 		return fmt.Sprintf("what each counted itself in %s that end %s before", length, lengthWords(in.slotLength(b.GapSlots)))
 	case Peers:
 		return fmt.Sprintf("what all other series of %s counted in %s", in.Name, length)
@@ -100,7 +97,10 @@ func (p *prose) history(in *Indicator, b *Baseline) {
 		return
 	}
 	enough := ""
-	if b.MinEvents > 0 {
+	switch {
+	case b.MinEvents == 1:
+		enough = "; with no event in it a look is withheld"
+	case b.MinEvents > 1:
 		enough = fmt.Sprintf("; with fewer than %s in it a look is withheld", counted(int(b.MinEvents), "event"))
 	}
 	p.line("    That history is counted anew every %s%s.", spanWords(b.Refresh), enough)

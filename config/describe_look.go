@@ -10,7 +10,7 @@ func (p *prose) window(in *Indicator, w *Window) {
 		p.line("  Window %s: looked at every %s, about %s looks a year.", w.Name, spanWords(in.slotLength(w.Step)), about(in.looksPerYear(w)))
 	}
 	if in.ArrivalLooks {
-		p.line("  Window %s: looked at when an event comes, over exactly the %s that end with it (more events than usual only).",
+		p.line("  Window %s: looked at when an event comes, over exactly the span of %s that ends with it (more events than usual only).",
 			w.Name, lengthWords(in.slotLength(w.Slots)))
 	}
 }
@@ -53,7 +53,7 @@ func (p *prose) allowance(in *Indicator, a *Allowance) {
 	}
 	switch {
 	case a.Assurance > 0:
-		p.line("  It is kept with %s%% confidence where the usual rate is estimated: critical counts are taken from its upper bound.", number(100*a.Assurance))
+		p.line("  It is kept with %s%% confidence where the usual rate is estimated: critical counts are taken from that end of its bounds at which false alerts are most.", number(100*a.Assurance))
 	case in.estimated():
 		p.line("  Where the usual rate is estimated it is kept on average over what the estimate leaves open: a single series may have several times as many.")
 	}

@@ -35,9 +35,10 @@ func (d *doubts) baseline(in *Indicator, i, j int) {
 		d.at(in, i, key("span"), fmt.Sprintf("%s is shorter than the longest window, %s: what is usual would be less sure than what is tested",
 			in.slotLength(b.SpanSlots), in.slotLength(longest)), "make it several times as long as the longest window")
 	}
-	if b.Strata != nil && (b.Kind == Known || b.Kind == Reference) && math.Abs(b.Strata.mean()-1) > 0.01 {
-		d.at(in, i, key("strata"), fmt.Sprintf("the factors are %s on average, and with them over a whole cycle the usual rate",
-			about(b.Strata.mean())+" times what is stated"), "divide them by their mean, unless the rate is that of a stratum with the factor 1")
+	stated := b.Kind == Known || b.Kind == Reference // a history makes up for any scale
+	if b.Strata != nil && stated && math.Abs(b.Strata.mean()-1) > 0.01 {
+		d.at(in, i, key("strata"), fmt.Sprintf("the factors are %s on average, so over a whole cycle that many times what is stated would be usual",
+			about(b.Strata.mean())), "divide them by their mean, unless what is stated belongs to a stratum with the factor 1")
 	}
 	if b.Delay != nil && in.Settle >= b.Delay.last() {
 		d.at(in, i, key("delay"), fmt.Sprintf("has no effect: by then all is known, since settle is %s", FormatDuration(in.Settle)),

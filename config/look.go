@@ -134,7 +134,10 @@ func (s section) checkArrival(in *Indicator) {
 		s.fault("looks", "arrival looks need exposure at every moment, and it is reported for whole slots",
 			`write exposure = "clock" or "census", or looks = "slot"`)
 	}
-	if in.Lower && !in.SlotLooks {
+	switch {
+	case !in.Upper:
+		s.fault("looks", "arrival looks watch for more events than usual, and tails asks for fewer only", `write looks = "slot"`)
+	case in.Lower && !in.SlotLooks:
 		s.fault("looks", "the lower tail is never looked at: no event arrives that could make a count too low", `add "slot" to looks, or leave the lower tail out`)
 	}
 }

@@ -7,6 +7,7 @@ import (
 	"io"
 	"os"
 	"path/filepath"
+	"slices"
 	"strings"
 	"testing"
 
@@ -70,10 +71,11 @@ func TestFaults(t *testing.T) {
 // rest of the program relies on.
 func FuzzParse(f *testing.F) {
 	f.Add(Sample())
-	files, err := filepath.Glob("testdata/faults/*.toml")
+	files, err := filepath.Glob("testdata/*/*.toml")
 	if err != nil {
 		f.Fatal(err)
 	}
+	files = append(files, "testdata/wide.toml")
 	for _, file := range files {
 		text, err := os.ReadFile(file)
 		if err != nil {
@@ -117,7 +119,8 @@ func checkSetup(t *testing.T, s *Setup) {
 	for i := range s.Indicators {
 		in := &s.Indicators[i]
 		sound := len(in.Series) > 0 && len(in.Windows) > 0 && len(in.Baselines) > 0 && in.Zone != nil && in.Every.N > 0 &&
-			in.Horizon >= in.Settle && (in.Upper || in.Lower) && in.PLimit > 0 && in.PLimit < 0.5 && in.Alpha > 0 && in.Alpha <= 0.5 && in.Per > 0
+			in.Horizon >= in.Settle && (in.Upper || in.Lower) && (in.SlotLooks || in.ArrivalLooks) && in.PLimit < 0.5 &&
+			(in.PLimit > 0) == (in.Allowance == nil) && (in.Exposure == Census) == (in.CensusExpiry > 0) && in.Alpha > 0 && in.Alpha <= 0.5 && in.Per > 0
 		if !sound || in.BaselineFor("any/series") == nil {
 			t.Errorf("accepted %+v", in)
 		}
@@ -127,11 +130,7 @@ func checkSetup(t *testing.T, s *Setup) {
 			}
 		}
 		for _, b := range in.Baselines {
-			known := b.Kind == Known && b.Rate > 0
-			reference := b.Kind == Reference && b.Exposure.Coef > 0 && b.Events >= 0
-			if b.Margin < 1 || (!known && !reference) {
-				t.Errorf("accepted %+v", b)
-			}
+			checkBaseline(t, in, &b)
 		}
 	}
 	if err := s.Describe(io.Discard); err != nil {
@@ -141,4 +140,27 @@ func checkSetup(t *testing.T, s *Setup) {
 		t.Errorf("differs from itself: %v", changes)
 	}
 	s.Doubts("fuzz.toml")
+}
+
+func checkBaseline(t *testing.T, in *Indicator, b *Baseline) {
+	t.Helper()
+	sound := b.Margin >= 1 && b.Spread >= 1 && (b.From.IsZero() || b.To.IsZero() || b.From.Before(b.To))
+	switch b.Kind {
+	case Known:
+		sound = sound && b.Rate > 0
+	case Reference:
+		sound = sound && b.Exposure.Coef > 0 && b.Events >= 0
+	case Trailing, Peers:
+		sound = sound && b.SpanSlots > 0 && b.Refresh.N > 0 && (b.Kind == Trailing) == (b.GapSlots > 0) && in.keptSlots() >= b.SpanSlots+b.GapSlots
+	}
+	if st := b.Strata; st != nil {
+		sound = sound && len(st.Factors) == strataCounts[st.By] && slices.Min(st.Factors) > 0 && st.within(in.Every)
+	}
+	if d := b.Delay; d != nil {
+		sound = sound && len(d.Ages) == len(d.Reported) && d.Ages[0] >= 0 && d.Reported[0] > 0 && slices.IsSorted(d.Ages) &&
+			slices.IsSorted(d.Reported) && d.At(in.Horizon) == 1 && in.Measure == Rate && b.Spread == 1
+	}
+	if !sound {
+		t.Errorf("accepted %+v", b)
+	}
 }

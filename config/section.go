@@ -292,7 +292,7 @@ func (s section) numbers(name string, n int, least, greatest float64) (all []flo
 		}
 		f, _ := v.Float64()
 		if f < least || f > greatest {
-			s.add(item, s.item(name, i), fmt.Sprintf("%s is not between %v and %v", item.text, least, greatest), "")
+			s.add(item, s.item(name, i), fmt.Sprintf("%s is not between %s and %s", item.text, number(least), number(greatest)), "")
 			ok = false
 		}
 		all = append(all, f)

@@ -44,8 +44,8 @@ func TestDefaults(t *testing.T) {
 			Measure: Rate, Unit: "bed-days", Per: 1, Every: Every{1, Day}, Zone: time.UTC, ZoneName: "UTC",
 			Events: Counted, Exposure: Reported, GrainDigits: 6,
 			Settle: 2 * day, Horizon: 120 * day, Ahead: day, KeepIDs: true,
-			Windows: []Window{{Name: "28d", Slots: 28, Step: 1}}, Upper: true, PLimit: 0.001, Quiet: 7, Alpha: 0.05,
-			Baselines: []Baseline{{Series: NewPattern("**"), Kind: Known, Rate: 2, Margin: 1}}, Line: 2,
+			Windows: []Window{{Name: "28d", Slots: 28, Step: 1}}, SlotLooks: true, Upper: true, PLimit: 0.001, Quiet: 7, Alpha: 0.05,
+			Baselines: []Baseline{{Series: NewPattern("**"), Kind: Known, Rate: 2, Margin: 1, Spread: 1}}, Line: 2,
 		}},
 		Text: []byte(text), Digest: hex.EncodeToString(digest[:]),
 	}
@@ -135,7 +135,7 @@ func TestExactNumbers(t *testing.T) {
 
 func TestReference(t *testing.T) {
 	b := mustParse(t, plain("", "kind = \"reference\"\nevents = 36\nexposure = \"20000.250\"\nmargin = 1.25\n")).Indicators[0].Baselines[0]
-	want := Baseline{Series: NewPattern("**"), Kind: Reference, Events: 36, Exposure: Decimal{2000025, 2}, Margin: 1.25}
+	want := Baseline{Series: NewPattern("**"), Kind: Reference, Events: 36, Exposure: Decimal{2000025, 2}, Margin: 1.25, Spread: 1}
 	if b != want {
 		t.Errorf("got %+v, want %+v", b, want)
 	}
@@ -253,7 +253,10 @@ clock = { size = 0.1, per = "1d" }
 expect = "1h"
 settle = "1h"
 horizon = "2h"
-baseline = { kind = "known", rate = 1 }
+baseline = [
+  { series = "a/falls-*", kind = "known", rate = 1, spread = 4, strata = { by = "weekday", factors = [1, 1, 1, 1, 1, 2, 2] } },
+  { kind = "known", rate = 1 },
+]
 
 [[indicator]]
 name = "reference"

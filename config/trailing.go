@@ -50,8 +50,9 @@ func (s section) readRefresh(slot Every) Every {
 	for i, e := range refreshes {
 		words[i] = e.String()
 	}
-	i, ok := s.wordOf(n, s.key("refresh"), words)
-	if !ok {
+	i := slices.Index(words, n.text)
+	if i < 0 {
+		s.fault("refresh", fmt.Sprintf("%q is not known here", n.text), "write "+quoteOr(words))
 		return usual
 	}
 	e := refreshes[i]

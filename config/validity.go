@@ -7,16 +7,19 @@ import (
 )
 
 // readValidity reads from when to when a baseline is valid.
-func (s section) readValidity(in *Indicator) (from, to time.Time) {
+func (s section) readValidity(in *Indicator) (from, to time.Time, ok bool) {
 	from, fromOK := s.instant("from", in.Zone)
 	to, toOK := s.instant("to", in.Zone)
-	if fromOK && toOK && !from.IsZero() && !to.IsZero() && !from.Before(to) {
+	ok = fromOK && toOK
+	if ok && !from.IsZero() && !to.IsZero() && !from.Before(to) {
 		s.fault("to", "is not after from: the baseline would never be valid", "exchange from and to?")
+		ok = false
 	}
-	return from, to
+	return from, to, ok
 }
 
-// readServed reads which series of the indicator a baseline serves.
+// readServed reads which series of the indicator a baseline serves. earlier are
+// those before it with which it may collide.
 func (s section) readServed(in *Indicator, b *Baseline, earlier []Baseline, last bool) Pattern {
 	all := NewPattern("**")
 	n, given, ok := s.get("series", textKind)
@@ -29,10 +32,9 @@ func (s section) readServed(in *Indicator, b *Baseline, earlier []Baseline, last
 			return all
 		}
 	}
-	// Faulty validity is reported already, and read as open.
 	covered := func(e Baseline) bool {
 		open := e.From.IsZero() && e.To.IsZero() // for every series that is a fault of e
-		return (e.Series == p || e.Series == all) && !(e.Series == all && open) && e.covers(b)
+		return (e.Series == p || e.Series == all) && (e.Series != all || !open) && e.covers(b)
 	}
 	switch {
 	case last && p != all:

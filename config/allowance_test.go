@@ -1,0 +1,143 @@
+package config
+
+import (
+	"errors"
+	"math"
+	"os"
+	"strings"
+	"testing"
+)
+
+// parseReady reads a set-up as if the engine kept allowances.
+func parseReady(t *testing.T, file string) (*Setup, error) {
+	t.Helper()
+	text, err := os.ReadFile(file)
+	if err != nil {
+		t.Fatal(err)
+	}
+	return parse(text, &collector{file: file[strings.LastIndex(file, "/")+1:]})
+}
+
+func TestAllowanceFaults(t *testing.T) {
+	s, err := parseReady(t, "testdata/allowance/faults.toml")
+	if err == nil || s != nil {
+		t.Fatalf("no fault found: %v", s)
+	}
+	compareGolden(t, "testdata/allowance/faults.txt", err.Error()+"\n")
+}
+
+// TestUnready checks that what the engine can't do is refused by one switch.
+func TestUnready(t *testing.T) {
+	const file = "testdata/allowance/unready.toml"
+	if s, err := parseReady(t, file); err != nil || s.Indicators[0].Allowance == nil || !s.Indicators[0].ArrivalLooks {
+		t.Errorf("ready, but %v, %v", s, err)
+	}
+	text, err := os.ReadFile(file)
+	if err != nil {
+		t.Fatal(err)
+	}
+	s, err := parse(text, &collector{file: "unready.toml", unready: true})
+	var faults Faults
+	if !errors.As(err, &faults) || len(faults) != 2 || s != nil {
+		t.Errorf("not ready, but %v, %v", s, err)
+	}
+	for _, f := range faults {
+		if !strings.Contains(f.Problem, "not available yet") {
+			t.Error(f)
+		}
+	}
+	if _, err := Parse(text, "unready.toml"); (err == nil) != allowancesReady {
+		t.Errorf("Parse: %v", err)
+	}
+}
+
+// TestAllowance describes set-ups with allowances, and doubts them.
+func TestAllowance(t *testing.T) {
+	s, err := parseReady(t, "testdata/allowance/sound.toml")
+	if err != nil {
+		t.Fatal(err)
+	}
+	var b strings.Builder
+	if err := s.Describe(&b); err != nil {
+		t.Fatal(err)
+	}
+	for _, d := range s.Doubts("sound.toml") {
+		b.WriteString("doubtful: " + d.String() + "\n")
+	}
+	compareGolden(t, "testdata/allowance/sound.txt", b.String())
+	want := []Allowance{
+		{Alerts: 1, Every: Every{5, Year}},
+		{Alerts: 2.5, Every: Every{12, Month}, PerIndicator: true, Assurance: 0.9, Reserve: 0.25},
+		{Alerts: 1, Every: Every{1, Week}},
+		{Alerts: 1, Every: Every{1, Hour}, PerIndicator: true, Reserve: 0.1},
+	}
+	for i, in := range s.Indicators {
+		if *in.Allowance != want[i] || in.PLimit != 0 {
+			t.Errorf("%s: %+v and p_limit %v, want %+v", in.Name, in.Allowance, in.PLimit, want[i])
+		}
+		checkSetup(t, s)
+	}
+	if in := s.Indicators[1]; !in.SlotLooks || !in.ArrivalLooks {
+		t.Errorf("looks: %+v", in)
+	}
+	if in := s.Indicators[2]; in.SlotLooks || !in.ArrivalLooks {
+		t.Errorf("looks: %+v", in)
+	}
+}
+
+func TestCompareAllowance(t *testing.T) {
+	before, err := parseReady(t, "testdata/allowance/sound.toml")
+	if err != nil {
+		t.Fatal(err)
+	}
+	for _, test := range []struct{ from, to, want string }{
+		{`allowance = "1 in 5y"`, `allowance = "2 in 5y"`, "indicator[falls].allowance: 1 in 5y -> 2 in 5y (next look): critical counts are computed anew"},
+		{`allowance = "1 in 5y"`, `p_limit = 0.01`, "indicator[falls].p_limit: nothing -> 0.01 (next look)\n" +
+			"indicator[falls].allowance: 1 in 5y -> nothing (next look): critical counts are computed anew"},
+		{`assurance = 0.9`, ``, "indicator[needles].assurance: 0.9 -> nothing (next look)"},
+		{`looks = ["arrival", "slot"]`, ``, "indicator[needles].looks: slot, arrival -> slot (next look)"},
+		{`looks = "arrival"`, `looks = ["slot", "arrival"]`, "indicator[restarts].looks: arrival -> slot, arrival (next look)"},
+	} {
+		text := strings.Replace(string(before.Text), test.from, test.to, 1)
+		after, err := parse([]byte(text), &collector{})
+		if err != nil {
+			t.Fatal(err)
+		}
+		var lines []string
+		for _, c := range Compare(before, after) {
+			lines = append(lines, c.String())
+		}
+		if got := strings.Join(lines, "\n"); got != test.want {
+			t.Errorf("%s -> %s:\n got %s\nwant %s", test.from, test.to, got, test.want)
+		}
+		// The other way round arrival looks have to fill.
+		if strings.Contains(test.from, "arrival\", \"slot") && Compare(after, before)[0].Class != Filling {
+			t.Error("arrival looks don't fill")
+		}
+	}
+}
+
+func TestParseAllowance(t *testing.T) {
+	for text, perYear := range map[string]float64{
+		"1 in 5y": 0.2, "2 in 1y": 2, "0.5 in 12mo": 0.5, "1e2 in 1y": 100, "1 in 1w": 365.2425 / 7, "1 in 30m": 365.2425 * 48, "1 in 1h": 365.2425 * 24,
+	} {
+		a, err := ParseAllowance(text)
+		if err != nil || math.Abs(a.PerYear()-perYear) > 1e-12*perYear {
+			t.Errorf("%s: %v a year, want %v; %v", text, a.PerYear(), perYear, err)
+		}
+		back, err := ParseAllowance(a.String())
+		if err != nil || back != a {
+			t.Errorf("%s: %s read back: %v, %v", text, a.String(), back, err)
+		}
+	}
+	for _, text := range []string{"", "1", "1 per 5y", "1 in 5", "-1 in 5y", "1 in 0y", "1  in 5y", "1 in 5y ", "1 in a year", "NaN in 1y", "01 in 1y"} {
+		if _, err := ParseAllowance(text); !errors.Is(err, ErrAllowanceSyntax) {
+			t.Errorf("%q: %v", text, err)
+		}
+	}
+	for _, text := range []string{"0 in 5y", "1000001 in 1y", "0.0 in 1d"} {
+		if _, err := ParseAllowance(text); !errors.Is(err, ErrAllowanceRange) {
+			t.Errorf("%q: %v", text, err)
+		}
+	}
+}
