@@ -169,11 +169,11 @@ func binomialLower(x, n int64, a float64, mid bool) (p, q float64) {
 		if mid {
 			a *= 2
 		}
-		l := logOf(a) / m
-		if l >= 0 {
+		if a >= 1 {
 			return 1, 0
 		}
-		return expTwo(l, 0), -math.Expm1(l)
+		l := dd{a, 0}.log().div(dd{m, 0})
+		return expTwo(l.hi, l.lo), -math.Expm1(l.hi)
 	}
 	p = betaStart(k, m, a)
 	q = 1 - p

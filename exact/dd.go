@@ -25,11 +25,10 @@ func twoProd(a, b float64) dd {
 
 func (a dd) neg() dd { return dd{-a.hi, -a.lo} }
 
+// add errs by about 2^-105 (|a|+|b|): absolute, not relative, where a and b cancel.
 func (a dd) add(b dd) dd {
 	s := twoSum(a.hi, b.hi)
-	t := twoSum(a.lo, b.lo)
-	s = fastTwoSum(s.hi, s.lo+t.hi)
-	return fastTwoSum(s.hi, s.lo+t.lo)
+	return fastTwoSum(s.hi, s.lo+(a.lo+b.lo))
 }
 
 func (a dd) addFloat(b float64) dd {
@@ -93,16 +92,17 @@ func (a dd) log() dd {
 	c = math.FMA(r.hi, c, 1.0/3)
 	cube := float64(float64(r.hi*s.hi) * c)
 	v := fastTwoSum(r.hi, -0.5*s.hi)
-	v = fastTwoSum(v.hi, v.lo+(math.FMA(-0.5, s.lo, r.lo)+cube))
-	if e == 0 {
-		if row[1] == 0 {
-			return v
-		}
-		return v.add(dd{row[1], row[2]})
+	v.lo += math.FMA(-0.5, s.lo, r.lo) + cube
+	h := dd{row[1], row[2]}
+	if e != 0 {
+		h = twoSum(e*ln2Head, row[1])
+		h.lo += math.FMA(e, ln2Mid, row[2])
+	} else if row[1] == 0 {
+		return fastTwoSum(v.hi, v.lo)
 	}
-	h := twoSum(e*ln2Head, row[1])
-	h.lo += math.FMA(e, ln2Mid, row[2])
-	return fastTwoSum(h.hi, h.lo).add(v)
+	h.lo += v.lo
+	w := fastTwoSum(h.hi, v.hi) // |log c + e log 2| is past any |log(1+r)|
+	return fastTwoSum(w.hi, w.lo+h.lo)
 }
 
 // expTwo returns exp(hi+lo) for |lo| << 1; error about 0.51 ulp, 0 below the subnormals.
