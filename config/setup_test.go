@@ -79,6 +79,24 @@ func TestSample(t *testing.T) {
 	}
 }
 
+// TestSampleMarks takes the marks off the sample's commented baseline.
+func TestSampleMarks(t *testing.T) {
+	before, rest, found := strings.Cut(string(Sample()), "# [[indicator.baseline]]\n")
+	marked, after, end := strings.Cut(rest, "\n\n")
+	last := strings.LastIndex(before, "[[indicator.baseline]]")
+	if !found || !end || last < 0 {
+		t.Fatal("the sample has no commented baseline")
+	}
+	marked = "[[indicator.baseline]]\n" + strings.ReplaceAll("\n"+marked, "\n# ", "\n") + "\n"
+	s := mustParse(t, before[:last]+marked+before[last:]+"\n"+after)
+	if b := s.Indicators[0].BaselineFor("quillmere-north/ward-1/line-infection"); b == nil || b.Kind != Trailing || b.SpanSlots != 364 || b.Strata == nil {
+		t.Errorf("%+v", b)
+	}
+	if d := s.Doubts("sample.toml"); len(d) > 0 {
+		t.Errorf("doubtful: %v", d)
+	}
+}
+
 // TestWide describes a set-up that uses what the sample doesn't.
 func TestWide(t *testing.T) {
 	text, err := os.ReadFile("testdata/wide.toml")
