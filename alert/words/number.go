@@ -4,10 +4,27 @@ import (
 	"math"
 	"strconv"
 	"strings"
+
+	"tailbell/monitor/life"
 )
 
 // whole writes a count in groups of three.
 func whole(n int64) string { return grouped(strconv.FormatInt(n, 10)) }
+
+// Amount writes a number of things by their plural noun: "1 row", "1,204 rows",
+// "0 rows".
+func Amount(n int64, nouns string) string {
+	if n == 1 {
+		nouns = singular(nouns)
+	}
+	return whole(n) + " " + nouns
+}
+
+// P writes the p of a look as the sentences do.
+func P(e *life.Evidence) string { return pvalue(log10p(e)) }
+
+// Expected writes the expected number of events of a look as the sentences do.
+func Expected(e *life.Evidence) string { return expected(e) }
 
 // grouped puts commas between groups of three digits of the whole part of a
 // plain decimal number.

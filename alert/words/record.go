@@ -10,29 +10,28 @@ import (
 
 // Record returns the whole record of an alert for a terminal of the given
 // width: where it stands, the evidence, the numbers behind it, what was seen
-// since, its history, and how to recompute it.
+// since, its history, and how to recompute it. The last line ends the text.
 func Record(r *life.Record, width int) string {
 	zone := zoneOf(r)
 	var b strings.Builder
 	fmt.Fprintf(&b, "alert %s  %s  %s  %s\n", clean(r.ID), strings.ToUpper(clean(string(r.Condition))),
 		arrow(r.Direction), clean(r.Series))
 	paragraphs := []string{Sentence(r, &r.Opening), numbers(&r.Opening), basis(&r.Opening)}
-	if r.Worst.Due != r.Opening.Due || r.Worst.Window != r.Opening.Window {
+	if !sameLook(&r.Worst, &r.Opening) {
 		paragraphs = append(paragraphs, "At its strongest: "+Sentence(r, &r.Worst))
 	}
 	paragraphs = append(paragraphs, afterwards(r, zone), sources(r))
 	for _, p := range nonEmpty(paragraphs...) {
-		b.WriteString(wrap(p, width, "    "))
+		b.WriteString(wrap(p, width, "    ", "    "))
 	}
 	b.WriteString("  history\n")
 	for i := range r.Steps {
-		b.WriteString(wrap(history(&r.Steps[i], r, zone), width, "    "))
+		b.WriteString(wrap(history(&r.Steps[i], r, zone), width, "    ", "      "))
 	}
 	if r.Opening.Recompute != "" {
 		b.WriteString("  the same numbers again\n    " + clean(r.Opening.Recompute) + "\n")
 	}
-	b.WriteString(wrap(caution(r), width, "  "))
-	b.WriteByte('\n')
+	b.WriteString(wrap(caution(r), width, "  ", "  "))
 	return b.String()
 }
 

@@ -215,7 +215,11 @@ func afterwards(r *life.Record, zone *time.Location) string {
 	}
 	e := r.Opening
 	e.Events, e.Exposure = s.Events, s.Exposure
-	text := " Since the opening look, to " + last(s.To.In(zone)) + ": " + counted(&e) + " in " + exposure(&e)
+	since := "the opening look"
+	if s.From.After(r.Opening.To) { // what lies before is not kept any more
+		since = moment(s.From.In(zone))
+	}
+	text := " Since " + since + ", to " + last(s.To.In(zone)) + ": " + counted(&e) + " in " + exposure(&e)
 	if s.RateUpper == nil {
 		return text + "."
 	}

@@ -33,7 +33,7 @@ func zoneOf(r *life.Record) *time.Location {
 func day(t time.Time) string { return t.Format("2 January 2006") }
 
 // stamp is a date and time of day for a heading.
-func stamp(t time.Time) string { return t.Format("Mon 2 Jan 2006 15:04 MST") }
+func stamp(t time.Time) string { return t.Format("Mon 2 Jan 2006 ") + clock(t) }
 
 // moment is a date, with the time of day unless that is midnight.
 func moment(t time.Time) string {
@@ -52,7 +52,13 @@ func last(end time.Time) string {
 	return clock(end) + " on " + day(end)
 }
 
-func clock(t time.Time) string { return t.Format("15:04 MST") }
+// clock is a time of day, with seconds unless it is on the minute.
+func clock(t time.Time) string {
+	if t.Second() != 0 {
+		return t.Format("15:04:05 MST")
+	}
+	return t.Format("15:04 MST")
+}
 
 func midnight(t time.Time) bool {
 	return t.Hour() == 0 && t.Minute() == 0 && t.Second() == 0 && t.Nanosecond() == 0
@@ -65,17 +71,26 @@ func span(e *life.Evidence, zone *time.Location) string {
 	if !ok {
 		return "time from " + moment(from) + " to " + last(to)
 	}
-	length := fmt.Sprintf("%d %ss", n, unit)
+	long := fmt.Sprintf("%d %ss", n, unit)
 	if n == 1 {
-		length = unit
+		long = unit
 	}
 	if unit == "minute" || unit == "hour" {
-		return length + " to " + clock(to) + " on " + day(to)
+		return long + " to " + clock(to) + " on " + day(to)
 	}
 	if n == 1 && unit == "day" {
 		return "day of " + last(to)
 	}
-	return length + " to " + last(to)
+	return long + " to " + last(to)
+}
+
+// length is the length of a window in words: "1 year", "28 days".
+func length(window string) string {
+	n, unit, ok := windowUnit(window)
+	if !ok {
+		return clean(window)
+	}
+	return Amount(int64(n), unit+"s")
 }
 
 // windowUnit reads a window as configured: 28d is 28 days.

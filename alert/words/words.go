@@ -52,7 +52,7 @@ func Notice(n *life.Notice, width int) string {
 	b.WriteString(Heading(n))
 	b.WriteByte('\n')
 	for _, p := range Paragraphs(n) {
-		b.WriteString(wrap(p, width, "    "))
+		b.WriteString(wrap(p, width, "    ", "    "))
 	}
 	b.WriteByte('\n')
 	return b.String()
@@ -96,9 +96,7 @@ func Paragraphs(n *life.Notice) []string {
 	case life.StepOpened:
 		return opened(n, zone)
 	case life.StepWorsened:
-		return nonEmpty(
-			finding(r, evidenceOf(&n.Step, &r.Worst)),
-			"The evidence has grown since the alert was opened on "+day(r.Opened.In(zone))+"."+afterwards(r, zone))
+		return nonEmpty(finding(r, evidenceOf(&n.Step, &r.Worst)), worsened(n, zone)+afterwards(r, zone))
 	case life.StepCorrected:
 		return nonEmpty(corrected(n, zone))
 	case life.StepReturned:
@@ -121,6 +119,36 @@ func opened(n *life.Notice, zone *time.Location) []string {
 		late = "Opened late: the look was due on " + moment(e.Due.In(zone)) + "; data that came afterwards made it signal."
 	}
 	return nonEmpty(Sentence(r, e), late, basis(e), caution(r))
+}
+
+// worsened says whether the evidence has grown, or a further window signals.
+// The engine takes the step for one of the two; evidence that is weaker than
+// the strongest so far can only be the latter.
+func worsened(n *life.Notice, zone *time.Location) string {
+	r := &n.Record
+	e := evidenceOf(&n.Step, &r.Worst)
+	if sameLook(e, &r.Worst) {
+		return "The evidence has grown since the alert was opened on " + day(r.Opened.In(zone)) + "."
+	}
+	which := ""
+	if !seenBefore(n, e.Window) {
+		which = ", that of " + length(e.Window) + ","
+	}
+	return "A further window" + which + " signals too. The strongest evidence is still " + brief(&r.Worst, zone) + "."
+}
+
+func sameLook(a, b *life.Evidence) bool { return a.Window == b.Window && a.Due.Equal(b.Due) }
+
+// seenBefore reports whether evidence of the window was in the record before
+// the step.
+func seenBefore(n *life.Notice, window string) bool {
+	r := &n.Record
+	seen := r.Opening.Window == window || r.Worst.Window == window
+	for i := range r.Steps {
+		s := &r.Steps[i]
+		seen = seen || s.Number < n.Step.Number && s.Evidence != nil && s.Evidence.Window == window
+	}
+	return seen
 }
 
 func acted(n *life.Notice, zone *time.Location) string {
@@ -165,7 +193,7 @@ func corrected(n *life.Notice, zone *time.Location) string {
 	r := &n.Record
 	text := subject(r) + ": data that came late or were corrected changed the evidence. At the opening it is now " +
 		brief(&r.Opening, zone) + "."
-	if r.Worst.Due.Equal(r.Opening.Due) && r.Worst.Window == r.Opening.Window {
+	if sameLook(&r.Worst, &r.Opening) {
 		return text
 	}
 	return text + " At its strongest it is " + brief(&r.Worst, zone) + "."

@@ -162,6 +162,40 @@ func withdrawn(t *testing.T) life.Notice {
 	return n
 }
 
+// further is an alert whose evidence does not grow: first a window joins that
+// has no evidence in the record yet, then one that the record does not name,
+// as the strongest of the looks of that time is of the window that opened it.
+// What came since has left memory in part.
+func further(t *testing.T) []life.Notice {
+	t.Helper()
+	const zone = "UTC"
+	r := life.Record{
+		ID: "coal1", Indicator: "explosion", Series: "coal-mines/explosion", Direction: life.Lower, Number: 1, Zone: zone,
+		Opened: at(t, zone, "1900-01-02 00:00"),
+		Opening: life.Evidence{
+			Window: "10y", From: at(t, zone, "1890-01-01 00:00"), To: at(t, zone, "1900-01-01 00:00"), Due: at(t, zone, "1900-01-02 00:00"),
+			Events: 12, Exposure: "3652", Unit: "days", EventNoun: "explosions", Expected: 32.4, Measure: "rate", Per: 365.25,
+			RateLower: 0.62, RateUpper: 2.1, Alpha: 0.05, Chosen: true, Log10P: -3.55, Baseline: life.Baseline{Kind: "known", Rate: 3.24, Margin: 1},
+		},
+	}
+	r.Worst = r.Opening
+	opened := step(&r, 1, life.StepOpened, r.Opened, life.Unacknowledged)
+	join := r.Opening
+	join.Window, join.From, join.To, join.Due = "5y", at(t, zone, "1896-01-01 00:00"), at(t, zone, "1901-01-01 00:00"), at(t, zone, "1901-01-02 00:00")
+	join.Events, join.Exposure, join.Expected, join.Log10P = 4, "1826", 16.2, -3.1
+	first := step(&r, 2, life.StepWorsened, join.Due, life.Unacknowledged)
+	first.Step.Evidence, r.Steps[1].Evidence = &join, &join
+	again := r.Opening
+	again.From, again.To, again.Due = at(t, zone, "1892-01-01 00:00"), at(t, zone, "1902-01-01 00:00"), at(t, zone, "1902-01-02 00:00")
+	again.Log10P = -3.5
+	r.Since = &life.Since{
+		From: at(t, zone, "1901-01-01 00:00"), To: again.To, Events: 2, Exposure: "365", RateLower: 0.24, RateUpper: ptr(7.2),
+	}
+	second := step(&r, 3, life.StepWorsened, again.Due, life.Unacknowledged)
+	second.Step.Evidence = &again
+	return []life.Notice{opened, first, second}
+}
+
 func golden(t *testing.T, name, got string) {
 	t.Helper()
 	file := filepath.Join("testdata", name)
@@ -187,6 +221,22 @@ func TestNotices(t *testing.T) {
 		b.WriteString(Notice(&notices[i], 100))
 	}
 	golden(t, "notices.txt", b.String())
+}
+
+func TestFurtherWindows(t *testing.T) {
+	var b strings.Builder
+	for _, n := range further(t) {
+		b.WriteString(Notice(&n, 100))
+	}
+	golden(t, "further.txt", b.String())
+}
+
+func TestHeadingsOffTheMinute(t *testing.T) {
+	r := ward(t)
+	n := step(&r, 1, life.StepOpened, r.Opened.Add(90*time.Second), life.Unacknowledged)
+	if got := Heading(&n); !strings.HasPrefix(got, "Wed 4 Mar 2026 00:01:30 CET  OPENED") {
+		t.Error(got)
+	}
 }
 
 func TestLines(t *testing.T) {
@@ -284,6 +334,14 @@ func TestChances(t *testing.T) {
 		}
 		if got := odds(c.log10p); got != c.odds {
 			t.Errorf("odds of 10^%v = %q, want %q", c.log10p, got, c.odds)
+		}
+	}
+}
+
+func TestAmounts(t *testing.T) {
+	for n, want := range map[int64]string{0: "0 rows", 1: "1 row", 2: "2 rows", 1204: "1,204 rows"} {
+		if got := Amount(n, "rows"); got != want {
+			t.Errorf("%d: %q, want %q", n, got, want)
 		}
 	}
 }

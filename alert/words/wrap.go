@@ -10,8 +10,8 @@ import (
 const narrowest = 40
 
 // wrap breaks text at spaces so that no line is wider than width characters
-// where its words allow, each line after indent.
-func wrap(text string, width int, indent string) string {
+// where its words allow, the first line after indent, the others after hang.
+func wrap(text string, width int, indent, hang string) string {
 	width = max(width, narrowest)
 	var b strings.Builder
 	used := 0
@@ -22,8 +22,8 @@ func wrap(text string, width int, indent string) string {
 			b.WriteString(indent)
 			used = len(indent)
 		case used+1+n > width:
-			b.WriteString("\n" + indent)
-			used = len(indent)
+			b.WriteString("\n" + hang)
+			used = len(hang)
 		default:
 			b.WriteByte(' ')
 			used++
