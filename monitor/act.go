@@ -24,11 +24,15 @@ func (e *Engine) perform(act *Act) (Reason, string) {
 	a := e.alertOf(act)
 	if a == nil {
 		if act.Alert != "" {
-			return NoSuchAlert, fmt.Sprintf("alert %q is unknown here, or done and beyond the horizon", act.Alert)
+			return NoSuchAlert, fmt.Sprintf("no act can reach alert %q: it is unknown here, or done and beyond the horizon", act.Alert)
 		}
 		return NoSuchAlert, fmt.Sprintf("series %q has no %s alert that is not done", act.Series, act.Direction)
 	}
-	s := life.Step{At: e.clock.Time(), By: act.By, Why: act.Why}
+	if taken := InstantOf(a.record.Steps[0].At); act.HasAt && act.At < taken {
+		return NotAllowed, fmt.Sprintf("the act of %s is older than alert %s, which opened %s: it was meant for another one, or was sent again",
+			at(act.At), a.record.ID, at(taken))
+	}
+	s := life.Step{At: e.clock.Time(), By: act.By, Why: act.Why, Mark: act.Mark}
 	switch act.Kind {
 	case Acknowledge:
 		s.Kind = life.StepAcknowledged
@@ -36,18 +40,34 @@ func (e *Engine) perform(act *Act) (Reason, string) {
 		s.Kind = life.StepClosed
 	case Note:
 		s.Kind = life.StepNote
+	case Mark:
+		s.Kind = life.StepMarked
 	}
-	if act.Kind == Acknowledge && slices.ContainsFunc(a.record.Steps, func(s life.Step) bool { return s.Kind == life.StepAcknowledged }) {
-		return NotAllowed, fmt.Sprintf("alert %s is acknowledged already", a.record.ID)
+	if repeated(&a.record, act, &s) {
+		return NotAllowed, fmt.Sprintf("alert %s has this act already", a.record.ID)
 	}
 	if err := e.take(a, s); err != nil {
 		return NotAllowed, err.Error()
+	}
+	if act.Kind == Mark {
+		a.series.mark(a, act.Mark)
 	}
 	if t := &a.series.tails[a.tail]; act.Kind == Close && t.current == a {
 		t.leave(a.series.indicator.looked)
 		t.disarmed = true
 	}
 	return "", ""
+}
+
+// repeated reports whether the record holds the act already: an acknowledgement
+// of any kind, or one with its own time that says the same.
+func repeated(r *life.Record, act *Act, s *life.Step) bool {
+	return slices.ContainsFunc(r.Steps, func(old life.Step) bool {
+		if old.Kind != s.Kind || s.Kind == life.StepAcknowledged {
+			return old.Kind == s.Kind
+		}
+		return act.HasAt && old.At.Equal(act.At.Time()) && old.By == s.By && old.Why == s.Why && old.Mark == s.Mark
+	})
 }
 
 // alertOf finds the alert that an act names: by its id, or the newest one of

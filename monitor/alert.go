@@ -28,6 +28,9 @@ type alert struct {
 	// opening and worst are the looks whose evidence the record holds.
 	opening, worst lookKey
 	worstLog10P    float64
+	// pending says that its evidence was corrected at the present moment: the
+	// step is taken when the clock moves, one for all that came at once.
+	pending bool
 	// dirty says that the record changed since the last drain.
 	dirty bool
 }
@@ -86,10 +89,15 @@ func alertID(series string, d direction, opened time.Time, number int) string {
 func (t *tail) join(l *look, a *alert, d direction) {
 	a.windows |= 1 << l.window
 	a.first = min(a.first, l.boundary)
-	t.set(litLook{
+	t.set(l.asLit(d, a))
+}
+
+// asLit is what is kept of a look that signals.
+func (l *look) asLit(d direction, a *alert) litLook {
+	return litLook{
 		boundary: l.boundary, window: l.window, events: l.events, exposure: l.exposure,
-		log10p: l.log10p[d], alert: a,
-	})
+		log10p: l.log10p[d], at: l.at, alert: a,
+	}
 }
 
 // revalue makes the record's worst evidence that of the strongest look of the
@@ -142,6 +150,10 @@ func (e *Engine) step(a *alert, s life.Step) {
 
 // take takes a step of the alert, if its condition allows.
 func (e *Engine) take(a *alert, s life.Step) error {
+	if a.pending && s.Kind != life.StepWithdrawn {
+		e.settle(a)
+	}
+	a.pending = false
 	before := a.record.Since
 	a.record.Since = e.since(a)
 	notices, err := a.record.Take(s)

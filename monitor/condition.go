@@ -3,6 +3,8 @@ package monitor
 import (
 	"cmp"
 	"slices"
+
+	"tailbell/config"
 )
 
 // Condition is something about a series that a person should know of: looks
@@ -28,6 +30,7 @@ const (
 	WithheldLooks  ConditionKind = "withheld"        // a needed count or exposure is missing
 	MoreThanTrials ConditionKind = "more than n"     // more events than trials
 	NoExposure     ConditionKind = "no exposure"     // events, but no exposure
+	NoBaseline     ConditionKind = "no baseline"     // none is valid, or it rests on too little
 	Silent         ConditionKind = "silent"          // nothing heard for longer than expected
 	unknownKind    ConditionKind = "program's fault" // a status without a kind
 )
@@ -60,7 +63,7 @@ func (e *Engine) conditionsOf(s *series) []Condition {
 	if expect := ix.cfg.Expect; expect > 0 && s.seen.Add(expect) < e.clock {
 		list = append(list, Condition{
 			Series: s.name, Indicator: ix.cfg.Name, Kind: Silent, Since: s.seen,
-			Text: "nothing was heard for longer than " + expect.String(),
+			Text: "nothing was heard for longer than " + config.FormatDuration(expect),
 		})
 	}
 	return list
@@ -74,6 +77,8 @@ func kindOf(s status) ConditionKind {
 		return MoreThanTrials
 	case unexposed:
 		return NoExposure
+	case unbased:
+		return NoBaseline
 	case made, filling:
 	}
 	return unknownKind

@@ -38,6 +38,7 @@ func (s *series) encode(whole bool) []byte {
 	for d := range s.tails {
 		b = s.tails[d].encode(b)
 	}
+	b = s.encodeReferences(b)
 	if whole {
 		b = binary.AppendUvarint(b, uint64(len(s.cells)))
 		for i := range s.cells {
@@ -97,9 +98,40 @@ func (t *tail) encode(b []byte) []byte {
 		b = binary.AppendUvarint(b, l.exposure.Hi)
 		b = binary.AppendUvarint(b, l.exposure.Lo)
 		b = appendFloat(b, l.log10p)
+		b = binary.AppendVarint(b, int64(l.at))
 		b = binary.AppendUvarint(b, numbers[l.alert])
 	}
 	return b
+}
+
+// encodeReferences writes the estimates, the comparator in front if there is
+// one, then the marked spans.
+func (s *series) encodeReferences(b []byte) []byte {
+	list := s.references
+	b = append(b, flag(s.comparator != nil))
+	if s.comparator != nil {
+		list = append([]reference{*s.comparator}, list...)
+	}
+	b = binary.AppendUvarint(b, uint64(len(list)))
+	for i := range list {
+		b = list[i].encode(b)
+	}
+	b = binary.AppendUvarint(b, uint64(len(s.marked)))
+	for _, m := range s.marked {
+		b = appendString(b, m.alert)
+		b = binary.AppendVarint(b, m.from)
+		b = binary.AppendVarint(b, m.to)
+	}
+	return b
+}
+
+func (r *reference) encode(b []byte) []byte {
+	for _, v := range [...]int64{r.from, r.period, int64(r.of), r.events, r.begin, r.end, r.leftOut, r.peers} {
+		b = binary.AppendVarint(b, v)
+	}
+	b = binary.AppendUvarint(b, r.exposure.Hi)
+	b = binary.AppendUvarint(b, r.exposure.Lo)
+	return appendFloat(appendFloat(b, r.weighted), r.between)
 }
 
 func (a *alert) encode(b []byte) []byte {
@@ -107,7 +139,7 @@ func (a *alert) encode(b []byte) []byte {
 	b = binary.AppendVarint(b, a.first)
 	b = binary.AppendVarint(b, a.last)
 	b = binary.AppendUvarint(b, a.windows)
-	b = append(b, flag(a.frozen))
+	b = append(b, flag(a.frozen), flag(a.pending))
 	b = binary.AppendVarint(b, a.opening.boundary)
 	b = binary.AppendUvarint(b, uint64(a.opening.window))
 	b = binary.AppendVarint(b, a.worst.boundary)

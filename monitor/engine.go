@@ -45,7 +45,9 @@ type Engine struct {
 	byName     map[string]*series
 	ids        ids
 	alerts     map[string]*alert
-	account    Account
+	// pending are alerts whose evidence was corrected at the present moment.
+	pending []*alert
+	account Account
 
 	// What the next Drain hands over.
 	drained    uint64
@@ -133,6 +135,7 @@ func (e *Engine) advance(to Instant) {
 	if to <= e.clock {
 		return
 	}
+	e.settleAll()
 	for e.nextDue <= to {
 		ix := e.dueFirst()
 		if len(ix.series) == 0 {
@@ -170,6 +173,10 @@ func (e *Engine) NextDue() (Instant, bool) {
 		if len(ix.series) > 0 {
 			due = min(due, ix.nextDue)
 		}
+	}
+	if len(e.pending) > 0 {
+		const soon = 1_000_000 // a second, in which more of the same may come
+		due = min(due, e.clock+soon)
 	}
 	return due, due != Never
 }

@@ -1,7 +1,6 @@
 package monitor
 
 import (
-	"fmt"
 	"math"
 	"strconv"
 	"strings"
@@ -17,146 +16,234 @@ import (
 func (e *Engine) evidence(s *series, d direction, boundary int64, window int) life.Evidence {
 	ix := s.indicator
 	ep := ix.epochAt(boundary)
-	cfg, b := ep.cfg, s.baseline(ep.cfg)
+	cfg := ep.cfg
 	from := boundary - int64(cfg.Windows[window].Slots)
+	at := ix.due(boundary)
+	if i, ok := s.tails[d].litAt(boundary, window); ok {
+		at = s.tails[d].lit[i].at
+	}
 	t := ix.tally(s, from, boundary)
-	exposure := t.exposure.Float(cfg.GrainDigits)
+	u, ok := ix.usualAt(s, ep, boundary)
+	if !ok {
+		panic("monitor: evidence of a look without a baseline")
+	}
+	o := ix.opportunity(s, &u, &t, from, boundary, at)
 	ev := life.Evidence{
 		Window: cfg.Windows[window].Name,
 		From:   ix.cal.Start(from).in(cfg.Zone), To: ix.cal.Start(boundary).in(cfg.Zone), Due: ix.due(boundary).in(cfg.Zone),
 		Events: t.events, Exposure: t.exposure.decimal(cfg.GrainDigits), Unit: cfg.Unit,
-		EventNoun: cfg.EventNoun, LateEvents: t.late,
+		EventNoun: cfg.EventNoun, LateEvents: t.late, Provisional: t.provisional,
 		Per: cfg.Per, Alpha: cfg.Alpha, Chosen: true,
-		Test: testName(cfg, b), Limit: cfg.PLimit,
-		Baseline:     baselineOf(cfg, b),
+		Test: testName(&u, &o), Limit: cfg.PLimit,
 		SetupVersion: ep.version, SetupDigest: ep.digest,
 	}
-	e.fillTest(&ev, cfg, b, d, exposure)
-	fillRate(&ev, cfg, b, exposure)
-	fillRatio(&ev, cfg, b, exposure)
-	ev.Recompute = recompute(&ev, cfg, b, d)
+	if o.weighted != o.exposure {
+		ev.Weighted = &o.weighted
+	}
+	fillTest(&ev, &u, d, &o)
+	fillRate(&ev, &u, &o)
+	ev.RatioKind, ev.Ratio, ev.RatioLower, ev.RatioUpper = ratioTo(&ev, &u, u.ref, &o)
+	ev.Baseline = ix.baselineOf(s, &u, &ev, &o)
+	ev.Recompute = recompute(&ev, &u, d)
 	return ev
 }
 
 func (i Instant) in(zone *time.Location) time.Time { return i.Time().In(zone) }
 
-func (e *Engine) fillTest(ev *life.Evidence, cfg *config.Indicator, b *config.Baseline, d direction, exposure float64) {
-	p := newLaw(cfg, b, d, exposure)
-	ev.Expected = expected(cfg, b, exposure)
+func fillTest(ev *life.Evidence, u *usual, d direction, o *opportunity) {
+	p := newLaw(u, d, o)
+	ev.Expected = expected(u, o)
 	if d == upper {
 		ev.P, ev.Log10P = p.Upper(ev.Events), p.LogUpper(ev.Events)/math.Ln10
-		ev.Critical, ev.AttainedSize, _ = p.CriticalUpper(cfg.PLimit)
+		ev.Critical, ev.AttainedSize, _ = p.CriticalUpper(u.cfg.PLimit)
 		return
 	}
 	ev.P, ev.Log10P = p.Lower(ev.Events), p.LogLower(ev.Events)/math.Ln10
-	ev.Critical, ev.AttainedSize, _ = p.CriticalLower(cfg.PLimit)
+	ev.Critical, ev.AttainedSize, _ = p.CriticalLower(u.cfg.PLimit)
 }
 
 // expected is the number of events that the baseline itself would bring.
-func expected(cfg *config.Indicator, b *config.Baseline, exposure float64) float64 {
-	if b.Kind == config.Reference {
-		return float64(b.Events) / referenceExposure(cfg, b) * exposure
+func expected(u *usual, o *opportunity) float64 {
+	rate := u.base.Rate
+	if u.ref != nil {
+		rate = float64(u.ref.events) / u.ref.weighted
 	}
-	return b.Rate * exposure
+	if o.trials == nil {
+		return rate * o.weighted
+	}
+	sum := 0.0
+	for _, t := range o.trials {
+		sum += float64(float64(t.n) * timesOdds(rate, t.factor))
+	}
+	return sum
 }
 
-func referenceExposure(cfg *config.Indicator, b *config.Baseline) float64 {
-	return floatOf(b.Exposure)
-}
-
-func fillRate(ev *life.Evidence, cfg *config.Indicator, b *config.Baseline, exposure float64) {
-	ev.Rate = float64(ev.Events) / exposure * cfg.Per
-	if cfg.Measure == config.Proportion {
+func fillRate(ev *life.Evidence, u *usual, o *opportunity) {
+	per := u.cfg.Per
+	ev.Rate = float64(ev.Events) / o.exposure * per
+	if u.cfg.Measure == config.Proportion {
 		ev.Measure = "proportion"
-		ev.RateLower, ev.RateUpper = exact.ClopperPearson(ev.Events, int64(exposure), cfg.Alpha)
-		ev.RateLower, ev.RateUpper = ev.RateLower*cfg.Per, ev.RateUpper*cfg.Per
+		lo, hi := exact.ClopperPearson(ev.Events, int64(o.exposure), u.cfg.Alpha)
+		ev.RateLower, ev.RateUpper = lo*per, hi*per
 		return
 	}
 	ev.Measure = "rate"
-	lo, hi := exact.Garwood(ev.Events, cfg.Alpha)
-	ev.RateLower, ev.RateUpper = lo/exposure*cfg.Per, hi/exposure*cfg.Per
+	lo, hi := exact.Garwood(ev.Events, u.cfg.Alpha)
+	ev.RateLower, ev.RateUpper = lo/o.exposure*per, hi/o.exposure*per
 }
 
-// fillRatio gives the ratio to the baseline: of rates, of proportions, or the
-// odds ratio where two proportions are compared.
-func fillRatio(ev *life.Evidence, cfg *config.Indicator, b *config.Baseline, exposure float64) {
-	if b.Kind == config.Known {
-		ev.RatioKind = "ratio to a known " + ev.Measure
-		usual := b.Rate * cfg.Per
-		setRatio(ev, ev.Rate/usual, ev.RateLower/usual, ev.RateUpper/usual)
-		return
-	}
-	if cfg.Measure == config.Proportion {
-		ev.RatioKind = "odds ratio"
-		p := exact.TwoProportion{RefEvents: b.Events, RefTrials: int64(floatOf(b.Exposure)), Trials: int64(exposure), Margin: 1}
-		lo, hi := p.OddsRatioBounds(ev.Events, cfg.Alpha)
+// ratioTo gives the ratio to the usual rate: of rates, of proportions, or the
+// odds ratio where two proportions are compared. Strata and delay count: the
+// ratio is to what would be usual in these slots.
+func ratioTo(ev *life.Evidence, u *usual, ref *reference, o *opportunity) (kind string, ratio *float64, lower float64, upper *float64) {
+	events := float64(ev.Events)
+	switch {
+	case ref == nil:
+		usual := expected(u, o)
+		lo, hi := exact.Garwood(ev.Events, u.cfg.Alpha)
+		if u.cfg.Measure == config.Proportion {
+			lo, hi = exact.ClopperPearson(ev.Events, int64(o.exposure), u.cfg.Alpha)
+			lo, hi = lo*o.exposure, hi*o.exposure
+		}
+		return "ratio to a known " + ev.Measure, finite(events / usual), lo / usual, finite(hi / usual)
+	case u.cfg.Measure == config.Proportion:
+		p := exact.TwoProportion{RefEvents: ref.events, RefTrials: int64(ref.exposureFloat(u)), Trials: int64(o.exposure), Margin: 1}
+		lo, hi := p.OddsRatioBounds(ev.Events, u.cfg.Alpha)
 		misses, refMisses := float64(p.Trials-ev.Events), float64(p.RefTrials-p.RefEvents)
-		setRatio(ev, float64(ev.Events)*refMisses/(misses*float64(b.Events)), lo, hi)
-		return
+		return "odds ratio", finite(events * refMisses / (misses * float64(ref.events))), lo, finite(hi)
 	}
-	ev.RatioKind = "rate ratio"
-	p := exact.TwoRate{RefEvents: b.Events, Exposure: exposure, RefExposure: referenceExposure(cfg, b), Margin: 1}
-	lo, hi := p.RatioBounds(ev.Events, cfg.Alpha)
-	setRatio(ev, float64(ev.Events)/exposure/(float64(b.Events)/p.RefExposure), lo, hi)
+	p := exact.TwoRate{RefEvents: ref.events, Exposure: o.weighted, RefExposure: ref.weighted, Margin: 1}
+	lo, hi := p.RatioBounds(ev.Events, u.cfg.Alpha)
+	return "rate ratio", finite(events / o.weighted / (float64(ref.events) / ref.weighted)), lo, finite(hi)
 }
 
-// setRatio leaves out what has no finite value.
-func setRatio(ev *life.Evidence, ratio, lo, hi float64) {
-	ev.RatioLower = lo
-	if !math.IsInf(ratio, 0) && !math.IsNaN(ratio) {
-		ev.Ratio = &ratio
+// exposureFloat is the reference's exposure as counted.
+func (r *reference) exposureFloat(u *usual) float64 {
+	if r.exposure.IsZero() {
+		return r.weighted // stated in the set-up
 	}
-	if !math.IsInf(hi, 0) && !math.IsNaN(hi) {
-		ev.RatioUpper = &hi
-	}
+	return r.exposure.Float(u.cfg.GrainDigits)
 }
 
-func baselineOf(cfg *config.Indicator, b *config.Baseline) life.Baseline {
-	r := life.Baseline{Margin: b.Margin, Version: b.Version, Source: b.Source}
-	if b.Kind == config.Reference {
-		r.Kind, r.Events, r.Exposure = "reference", b.Events, b.Exposure.String()
-		r.Rate = float64(b.Events) / referenceExposure(cfg, b) * cfg.Per
+// finite leaves out what has no finite value.
+func finite(f float64) *float64 {
+	if math.IsInf(f, 0) || math.IsNaN(f) {
+		return nil
+	}
+	return &f
+}
+
+// baselineOf describes what the look was judged by.
+func (ix *indicator) baselineOf(s *series, u *usual, ev *life.Evidence, o *opportunity) life.Baseline {
+	b, cfg := u.base, u.cfg
+	r := life.Baseline{Kind: kindName(b.Kind), Margin: b.Margin, Version: b.Version, Source: b.Source, Delay: b.Delay != nil}
+	if b.Spread > 1 {
+		r.Spread = b.Spread
+	}
+	if b.Strata != nil {
+		r.Strata = strataName(b.Strata.By)
+	}
+	if u.ref == nil {
+		r.Rate = b.Rate * cfg.Per
 		return r
 	}
-	r.Kind, r.Rate = "known", b.Rate*cfg.Per
+	ref := u.ref
+	r.Rate = float64(ref.events) / ref.weighted * cfg.Per
+	r.Events = ref.events
+	if b.Kind == config.Reference {
+		r.Exposure = b.Exposure.String()
+		return r
+	}
+	from, to := ix.cal.Start(ref.begin).in(cfg.Zone), ix.cal.Start(ref.end).in(cfg.Zone)
+	r.Exposure, r.From, r.To, r.LeftOut = ref.exposure.decimal(cfg.GrainDigits), &from, &to, ref.leftOut
+	if b.Strata != nil {
+		r.Weighted = &ref.weighted
+	}
+	if r.Peers = ref.peers; ref.peers >= 2 {
+		r.Between = &ref.between
+	}
+	if first := s.comparator; first != nil && b.Kind == config.Trailing && first.from < ref.from {
+		c := life.Comparator{
+			Events: first.events, Exposure: first.exposure.decimal(cfg.GrainDigits),
+			From: ix.cal.Start(first.begin).in(cfg.Zone), To: ix.cal.Start(first.end).in(cfg.Zone),
+		}
+		_, c.Ratio, c.RatioLower, c.RatioUpper = ratioTo(ev, u, first, o)
+		r.First = &c
+	}
 	return r
 }
 
-// recompute is the command line that gives the evidence's numbers again.
-func recompute(ev *life.Evidence, cfg *config.Indicator, b *config.Baseline, d direction) string {
+func kindName(k config.BaselineKind) string {
+	switch k {
+	case config.Known:
+		return "known"
+	case config.Reference:
+		return "reference"
+	case config.Trailing:
+		return "trailing"
+	case config.Peers:
+		return "peers"
+	}
+	return "unknown kind"
+}
+
+func strataName(by config.StrataBy) string {
+	switch by {
+	case config.ByHourOfWeek:
+		return "hour of week"
+	case config.ByWeekday:
+		return "weekday"
+	case config.ByMonth:
+		return "month"
+	}
+	return "unknown strata"
+}
+
+// recompute is the command line that gives the evidence's numbers again; where
+// strata or delay weigh the exposure, those of the test alone.
+func recompute(ev *life.Evidence, u *usual, d direction) string {
 	var args []string
 	add := func(name, value string) { args = append(args, "--"+name+" "+value) }
 	add("events", strconv.FormatInt(ev.Events, 10))
-	if cfg.Measure == config.Proportion {
-		add("trials", ev.Exposure)
+	exposure := ev.Exposure
+	if ev.Weighted != nil {
+		exposure = number(*ev.Weighted)
+	}
+	proportion := u.cfg.Measure == config.Proportion
+	if proportion {
+		add("trials", exposure)
 	} else {
-		add("exposure", ev.Exposure)
+		add("exposure", exposure)
 	}
 	switch {
-	case b.Kind == config.Known:
+	case u.ref == nil:
 		add("baseline", number(ev.Baseline.Rate))
-	case cfg.Measure == config.Proportion:
-		add("reference-events", strconv.FormatInt(b.Events, 10))
-		add("reference-trials", b.Exposure.String())
+	case proportion:
+		add("reference-events", strconv.FormatInt(u.ref.events, 10))
+		add("reference-trials", ev.Baseline.Exposure)
 	default:
-		add("reference-events", strconv.FormatInt(b.Events, 10))
-		add("reference-exposure", b.Exposure.String())
+		add("reference-events", strconv.FormatInt(u.ref.events, 10))
+		if ev.Baseline.Weighted != nil {
+			add("reference-exposure", number(*ev.Baseline.Weighted))
+		} else {
+			add("reference-exposure", ev.Baseline.Exposure)
+		}
 	}
-	if cfg.Per != 1 {
-		add("per", number(cfg.Per))
+	if u.cfg.Per != 1 {
+		add("per", number(u.cfg.Per))
 	}
-	if b.Margin != 1 {
-		add("margin", number(b.Margin))
+	if u.base.Margin != 1 {
+		add("margin", number(u.base.Margin))
 	}
 	if d == lower {
 		add("tail", "lower")
 	}
-	add("alpha", number(cfg.Alpha))
-	add("limit", number(cfg.PLimit))
+	add("alpha", number(u.cfg.Alpha))
+	add("limit", number(u.cfg.PLimit))
 	return "tailbell exact " + strings.Join(args, " ")
 }
 
-func number(f float64) string { return fmt.Sprint(f) }
+func number(f float64) string { return strconv.FormatFloat(f, 'g', -1, 64) }
 
 // since is what the data after the opening look say, free of the choice that
 // the ring made: slots known on both sides, from the opening look on (or from
@@ -166,26 +253,20 @@ func (e *Engine) since(a *alert) *life.Since {
 	ix := s.indicator
 	from := max(a.opening.boundary, ix.floor)
 	to := min(a.last, ix.looked)
-	if to <= from {
-		return nil
+	if to <= from || (a.last != ongoing && from > a.opening.boundary && a.record.Since != nil) {
+		return a.record.Since // what it covers has left memory since
 	}
 	cfg := ix.epochAt(to).cfg
 	var events int64
 	var exposure Quantity
-	if !ix.needs.exposure && !ix.needs.events {
-		t := ix.tally(s, from, to)
-		events, exposure = t.events, t.exposure
-	} else {
-		inside := s.cells.between(from, to)
-		for i := range inside {
-			if c := &inside[i]; ix.needs.paired(c) {
-				events += c.events
-				exposure = exposure.add(ix.exposureOf(c))
-			}
+	ix.eachExposure(s, from, to, func(slot int64, q Quantity, _ bool) {
+		if n, known := ix.eventsOf(s, slot); known {
+			events += n
+			exposure = exposure.add(q)
 		}
-	}
+	})
 	if exposure.IsZero() {
-		return nil
+		return a.record.Since
 	}
 	units := exposure.Float(cfg.GrainDigits)
 	r := &life.Since{
@@ -201,11 +282,4 @@ func (e *Engine) since(a *alert) *life.Since {
 	hi *= cfg.Per
 	r.RateLower, r.RateUpper = lo*cfg.Per, &hi
 	return r
-}
-
-func (ix *indicator) exposureOf(c *cell) Quantity {
-	if ix.needs.exposure {
-		return c.exposure
-	}
-	return ix.clock.between(ix.cal.Start(c.slot), ix.cal.Start(c.slot+1))
 }

@@ -26,6 +26,9 @@ type indicator struct {
 	// more, and floor the slot before which no look reads, as of looked. They
 	// never move back, whatever becomes of settle and horizon.
 	frozenAt, floor int64
+	// kept is the slot before which cells are forgotten: floor, or further
+	// back where a baseline is estimated from the past.
+	kept int64
 	// epochs are the versions of the stanza under which looks that can still
 	// be re-run fell due, oldest first.
 	epochs []epoch
@@ -70,7 +73,19 @@ func (ix *indicator) pass(boundary int64) {
 	ix.nextDue = ix.due(boundary + 1)
 	ix.frozenAt = max(ix.frozenAt, ix.frozen(ix.due(boundary)))
 	ix.floor = ix.frozenAt + 1 - ix.reach
+	ix.kept = ix.frozenAt + 1 - max(ix.reach, historyOf(ix.cfg))
 	ix.forget()
+}
+
+// historyOf is how far before a boundary the estimated baselines read.
+func historyOf(cfg *config.Indicator) int64 {
+	var slots int64
+	for i := range cfg.Baselines {
+		if b := &cfg.Baselines[i]; b.Kind == config.Trailing || b.Kind == config.Peers {
+			slots = max(slots, int64(b.SpanSlots+b.GapSlots))
+		}
+	}
+	return slots
 }
 
 // due is when looks at the boundary before the slot fall due, by the stanza

@@ -139,8 +139,9 @@ type Act struct {
 	Alert     string
 	Series    string
 	Direction life.Direction
-	By        string // who
-	Why       string // the reason, or the note's text
+	Mark      life.Mark // what a mark says; "" takes it back
+	By        string    // who
+	Why       string    // the reason, or the note's text
 	// At is the act's own time, used in history time; if HasAt.
 	At    Instant
 	HasAt bool
@@ -156,6 +157,7 @@ const (
 	Acknowledge ActKind = iota
 	Close
 	Note
+	Mark
 )
 
 // String returns the kind as written in messages.
@@ -167,6 +169,8 @@ func (k ActKind) String() string {
 		return "close"
 	case Note:
 		return "note"
+	case Mark:
+		return "mark"
 	}
 	return "unknown act"
 }

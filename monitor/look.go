@@ -15,6 +15,7 @@ const (
 	missing                 // a count or an exposure in it is missing
 	overfull                // more events than trials
 	unexposed               // events, but no exposure
+	unbased                 // no baseline is valid, or its reference is too small
 )
 
 // String returns the status as shown to people.
@@ -30,6 +31,8 @@ func (s status) String() string {
 		return "more events than trials"
 	case unexposed:
 		return "events without exposure"
+	case unbased:
+		return "no baseline is valid, or its reference holds too few events"
 	}
 	return "unknown status"
 }
@@ -40,6 +43,7 @@ type look struct {
 	window   int
 	boundary int64
 	status   status
+	at       Instant // when it was made: its due time, or the clock when re-run
 	tally
 	lit    [2]bool
 	log10p [2]float64
@@ -51,10 +55,15 @@ type tally struct {
 	late     int64
 	exposure Quantity
 	known    int64 // slots with both sides known
+	// provisional counts the slots whose exposure was carried forward.
+	provisional int64
 }
 
 // tally sums the slots in [from, to).
 func (ix *indicator) tally(s *series, from, to int64) tally {
+	if ix.cfg.Exposure == config.Census {
+		return ix.tallyCensus(s, from, to)
+	}
 	var t tally
 	inside := s.cells.between(from, to)
 	for i := range inside {
@@ -72,6 +81,26 @@ func (ix *indicator) tally(s *series, from, to int64) tally {
 	if !ix.needs.exposure {
 		t.exposure = ix.clock.between(ix.cal.Start(from), ix.cal.Start(to))
 	}
+	return t
+}
+
+// tallyCensus sums the slots in [from, to) where levels are carried forward.
+func (ix *indicator) tallyCensus(s *series, from, to int64) tally {
+	var t tally
+	inside := s.cells.between(from, to)
+	for i := range inside {
+		t.events += inside[i].events
+		t.late += inside[i].late
+	}
+	ix.carry(s, from, to, func(slot int64, q Quantity, provisional bool) {
+		t.exposure = t.exposure.add(q)
+		if provisional {
+			t.provisional++
+		}
+		if _, known := ix.eventsOf(s, slot); known {
+			t.known++
+		}
+	})
 	return t
 }
 
@@ -109,9 +138,10 @@ func (ix *indicator) judge(s *series, t *tally, from, to int64) status {
 	return made
 }
 
-// look tests one window of the series that ends at the boundary.
-func (ix *indicator) look(s *series, ep *epoch, window int, boundary int64) look {
-	l := look{window: window, boundary: boundary}
+// look tests one window of the series that ends at the boundary, at the moment
+// at.
+func (ix *indicator) look(s *series, ep *epoch, window int, boundary int64, at Instant) look {
+	l := look{window: window, boundary: boundary, at: at}
 	from := boundary - int64(ep.cfg.Windows[window].Slots)
 	if from < s.birth {
 		l.status = filling
@@ -119,32 +149,49 @@ func (ix *indicator) look(s *series, ep *epoch, window int, boundary int64) look
 	}
 	l.tally = ix.tally(s, from, boundary)
 	l.status = ix.judge(s, &l.tally, from, boundary)
-	if l.status == made && !l.exposure.IsZero() {
-		ix.test(s, ep, &l)
+	if l.status != made || l.exposure.IsZero() {
+		return l
 	}
+	u, ok := ix.usualAt(s, ep, boundary)
+	if !ok {
+		l.status = unbased
+		return l
+	}
+	o := ix.opportunity(s, &u, &l.tally, from, boundary, at)
+	l.test(&u, &o)
 	return l
 }
 
 // test fills in which tails signal.
-func (ix *indicator) test(s *series, ep *epoch, l *look) {
-	b := s.baseline(ep.cfg)
-	u := ep.cfg.Upper && l.events > 0
-	w := ep.cfg.Lower
-	exposure := l.exposure.Float(ep.cfg.GrainDigits)
-	if u && !farBelow(ep.cfg, b, l.events, exposure) {
-		p := newLaw(ep.cfg, b, upper, exposure)
-		if p.Upper(l.events) <= ep.cfg.PLimit {
+func (l *look) test(u *usual, o *opportunity) {
+	if u.cfg.Upper && l.events > 0 && !farBelow(u, o, l.events) {
+		p := newLaw(u, upper, o)
+		if p.Upper(l.events) <= u.cfg.PLimit {
 			l.lit[upper] = true
 			l.log10p[upper] = p.LogUpper(l.events) / math.Ln10
 		}
 	}
-	if w && !farAbove(ep.cfg, b, l.events, exposure) {
-		p := newLaw(ep.cfg, b, lower, exposure)
-		if p.Lower(l.events) <= ep.cfg.PLimit {
+	if u.cfg.Lower && !farAbove(u, o, l.events) {
+		p := newLaw(u, lower, o)
+		if p.Lower(l.events) <= u.cfg.PLimit {
 			l.lit[lower] = true
 			l.log10p[lower] = p.LogLower(l.events) / math.Ln10
 		}
 	}
+}
+
+// statusAt says whether a look of the window at the boundary can be made.
+func (ix *indicator) statusAt(s *series, window int, boundary int64) status {
+	ep := ix.epochAt(boundary)
+	from := boundary - int64(ep.cfg.Windows[window].Slots)
+	t := ix.tally(s, from, boundary)
+	st := ix.judge(s, &t, from, boundary)
+	if st == made && !t.exposure.IsZero() {
+		if _, ok := ix.usualAt(s, ep, boundary); !ok {
+			return unbased
+		}
+	}
+	return st
 }
 
 // previous returns the latest look of the window before the boundary that can
@@ -153,8 +200,7 @@ func (ix *indicator) previous(s *series, window int, boundary int64) (int64, boo
 	w := &ix.cfg.Windows[window]
 	length, step := int64(w.Slots), int64(w.Step)
 	for b := boundary - step; b-length >= max(s.birth, ix.floor); b -= step {
-		t := ix.tally(s, b-length, b)
-		if ix.judge(s, &t, b-length, b) == made {
+		if ix.statusAt(s, window, b) == made {
 			return b, true
 		}
 	}
@@ -182,12 +228,4 @@ func (s *series) active(d direction) bool {
 		}
 	}
 	return false
-}
-
-// baseline returns the baseline that serves the series.
-func (s *series) baseline(cfg *config.Indicator) *config.Baseline {
-	if s.baseOf != cfg {
-		s.base, s.baseOf = cfg.BaselineFor(s.name), cfg
-	}
-	return s.base
 }

@@ -123,12 +123,12 @@ func (e *Engine) admit(ix *indicator, o *Observation) (contribution, Reason, str
 		events: o.Events, hasEvents: o.HasEvents, hasExposure: o.HasExposure,
 	}
 	if e.clock != Beginning && o.End > e.clock.Add(ix.cfg.Ahead) {
-		return c, TooFarAhead, fmt.Sprintf("it ends %s, more than %s after the stream's clock %s", at(o.End), ix.cfg.Ahead, at(e.clock))
+		return c, TooFarAhead, fmt.Sprintf("it ends %s, more than %s after the stream's clock %s", at(o.End), config.FormatDuration(ix.cfg.Ahead), at(e.clock))
 	}
 	from, to := ix.slotsOf(&c)
 	if e.clock != Beginning && ix.cal.Start(from+1) < e.clock.Add(-ix.cfg.Horizon) {
 		return c, BeyondHorizon, fmt.Sprintf("its slot ended %s, more than the horizon of %s before the stream's clock %s",
-			at(ix.cal.Start(from+1)), ix.cfg.Horizon, at(e.clock))
+			at(ix.cal.Start(from+1)), config.FormatDuration(ix.cfg.Horizon), at(e.clock))
 	}
 	if reason, detail := ix.fits(o, from, to); reason != "" {
 		return c, reason, detail
@@ -294,6 +294,26 @@ func (e *Engine) add(c *contribution, id string, sign int) change {
 		e.touchSlot(s, slot)
 	}
 	return e.reborn(s, from, to, sign)
+}
+
+// carriedTo is the last slot that a change reaches: its own, or where levels
+// of exposure are carried forward the last one that its level would serve.
+func (ix *indicator) carriedTo(c *change) int64 {
+	if ix.cfg.Exposure != config.Census {
+		return c.to
+	}
+	next, _ := c.series.cells.find(c.to + 1)
+	to := c.to
+	for to < ix.looked && ix.carries(c.to, to+1) {
+		if next < len(c.series.cells) && c.series.cells[next].slot == to+1 {
+			if c.series.cells[next].saysExposure > 0 {
+				break
+			}
+			next++
+		}
+		to++
+	}
+	return to
 }
 
 // overlaps returns how long the contribution's interval lies in each slot.

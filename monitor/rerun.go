@@ -1,6 +1,7 @@
 package monitor
 
 import (
+	"cmp"
 	"slices"
 
 	"tailbell/monitor/life"
@@ -26,6 +27,7 @@ func (e *Engine) rerun(c change) {
 	if c.from >= ix.looked {
 		return // nothing was looked at yet
 	}
+	c.to = ix.carriedTo(&c)
 	var changed [2][]look
 	last := min(ix.looked, c.to+ix.longest)
 	if c.reborn {
@@ -43,7 +45,7 @@ func (e *Engine) rerun(c change) {
 			if !touched || from < s.birth || !ix.looksAt(window, boundary) {
 				continue
 			}
-			l := ix.look(s, ep, w, boundary)
+			l := ix.look(s, ep, w, boundary, e.clock)
 			e.account.Reruns++
 			e.renote(s, &l)
 			for _, d := range bothTails {
@@ -92,39 +94,50 @@ func (t *tail) differs(l *look, d direction) bool {
 }
 
 // correct draws the consequences of looks that came out differently: they
-// correct the alert whose span they lie in, withdraw one of which nothing is
-// left, or open one late.
+// join or correct the alert whose span they lie in, withdraw one of which
+// nothing is left, or open one late.
 func (e *Engine) correct(s *series, d direction, looks []look) {
 	t := &s.tails[d]
 	t.trim(s.indicator.frozenAt, s.windows, e.alerts)
-	var touched []*alert
-	var stray []look
-	touch := func(a *alert) {
-		if a != nil && !slices.Contains(touched, a) {
-			touched = append(touched, a)
+	var corrected []*alert
+	var joined, stray []look
+	correct := func(a *alert) {
+		if a != nil && !slices.Contains(corrected, a) {
+			corrected = append(corrected, a)
 		}
 	}
 	for i := range looks {
 		l := &looks[i]
 		at, was := t.litAt(l.boundary, l.window)
 		if was && !l.lit[d] {
-			touch(t.lit[at].alert)
+			correct(t.lit[at].alert)
 			t.lit = slices.Delete(t.lit, at, at+1)
 			continue
 		}
-		owner := t.ownerOf(l.boundary)
-		if was && t.lit[at].alert != nil {
+		var owner *alert
+		if was {
 			owner = t.lit[at].alert
 		}
-		if owner == nil {
-			t.set(litLook{boundary: l.boundary, window: l.window, events: l.events, exposure: l.exposure, log10p: l.log10p[d]})
+		switch first := owner == nil; {
+		case !first:
+			correct(owner)
+		case t.ownerOf(l.boundary) == nil:
+			t.set(l.asLit(d, nil))
 			stray = append(stray, *l)
 			continue
+		default:
+			if owner = t.ownerOf(l.boundary); owner == t.current {
+				joined = append(joined, *l)
+				continue
+			}
+			correct(owner)
 		}
 		t.join(l, owner, d)
-		touch(owner)
 	}
-	for _, a := range touched {
+	if len(joined) > 0 {
+		e.worsen(s, d, joined, e.clock)
+	}
+	for _, a := range corrected {
 		e.amend(a)
 	}
 	if t.current == nil && !t.disarmed {
@@ -151,8 +164,8 @@ func (t *tail) ownerOf(boundary int64) *alert {
 	return nil
 }
 
-// amend corrects the evidence of an alert, or withdraws it if no look is left
-// that signals.
+// amend withdraws an alert of which no look is left that signals, and else
+// leaves the correction of its evidence to when the clock moves.
 func (e *Engine) amend(a *alert) {
 	t := &a.series.tails[a.tail]
 	if !a.frozen && t.of(a) == 0 {
@@ -162,9 +175,47 @@ func (e *Engine) amend(a *alert) {
 		e.step(a, life.Step{Kind: life.StepWithdrawn, At: e.clock.Time(), Why: "data corrected"})
 		return
 	}
+	if !a.pending {
+		a.pending = true
+		e.pending = append(e.pending, a)
+		e.touch(a.series)
+	}
+}
+
+// settleAll takes the steps of all evidence that was corrected at the moment
+// that now ends, in order of series and direction.
+func (e *Engine) settleAll() {
+	if len(e.pending) == 0 {
+		return
+	}
+	slices.SortFunc(e.pending, func(a, b *alert) int {
+		return cmp.Or(cmp.Compare(a.series.number, b.series.number), cmp.Compare(a.tail, b.tail), cmp.Compare(a.record.Number, b.record.Number))
+	})
+	for _, a := range e.pending {
+		if a.pending {
+			e.settle(a)
+		}
+	}
+	e.pending = e.pending[:0]
+}
+
+// settle takes the step that corrects an alert's evidence, if any of what the
+// record shows has changed.
+func (e *Engine) settle(a *alert) {
+	a.pending = false
+	e.touch(a.series)
+	opening, worst := a.record.Opening, a.record.Worst
 	e.revalue(a)
-	worst := a.record.Worst
-	e.step(a, life.Step{Kind: life.StepCorrected, At: e.clock.Time(), Evidence: &worst})
+	if sameEvidence(&opening, &a.record.Opening) && sameEvidence(&worst, &a.record.Worst) {
+		return
+	}
+	evidence := a.record.Worst
+	e.step(a, life.Step{Kind: life.StepCorrected, At: e.clock.Time(), Evidence: &evidence})
+}
+
+// sameEvidence reports whether two looks saw the same.
+func sameEvidence(a, b *life.Evidence) bool {
+	return a.Window == b.Window && a.Due.Equal(b.Due) && a.Events == b.Events && a.Exposure == b.Exposure
 }
 
 // openLate opens an alert on the earliest of the looks that an event entered;

@@ -124,6 +124,9 @@ func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(st
 				return fmt.Errorf("alert %s: %w", a.record.ID, err)
 			}
 			e.alerts[a.record.ID] = a
+			if a.pending {
+				e.pending = append(e.pending, a)
+			}
 		}
 	}
 	s.derive()
@@ -180,6 +183,7 @@ func (e *Engine) overlay(s *series, data []byte) error {
 	for d := range s.tails {
 		s.tails[d] = r.tail(s, direction(d))
 	}
+	r.references(s)
 	for range r.length() {
 		c := r.cell()
 		*s.cells.at(c.slot) = c
@@ -188,6 +192,26 @@ func (e *Engine) overlay(s *series, data []byte) error {
 		r.fail("bytes are left over")
 	}
 	return r.err
+}
+
+func (r *reader) references(s *series) {
+	s.references, s.comparator, s.marked = nil, nil, nil
+	compared := r.flag()
+	for range r.length() {
+		x := reference{
+			from: r.int(), period: r.int(), of: config.BaselineKind(r.int()), events: r.int(),
+			begin: r.int(), end: r.int(), leftOut: r.int(), peers: r.int(),
+			exposure: r.quantity(), weighted: r.float(), between: r.float(),
+		}
+		if compared && s.comparator == nil {
+			s.comparator = &x
+			continue
+		}
+		s.references = append(s.references, x)
+	}
+	for range r.length() {
+		s.marked = append(s.marked, markedSpan{alert: r.string(), from: r.int(), to: r.int()})
+	}
 }
 
 func (r *reader) cell() cell {
@@ -209,7 +233,7 @@ func (r *reader) tail(s *series, d direction) tail {
 	for i := range alerts {
 		a := &alert{series: s, tail: d}
 		a.record.ID = r.string()
-		a.first, a.last, a.windows, a.frozen = r.int(), r.int(), r.uint(), r.flag()
+		a.first, a.last, a.windows, a.frozen, a.pending = r.int(), r.int(), r.uint(), r.flag(), r.flag()
 		a.opening = lookKey{r.int(), int(r.uint())}
 		a.worst = lookKey{r.int(), int(r.uint())}
 		a.worstLog10P = r.float()
@@ -220,7 +244,7 @@ func (r *reader) tail(s *series, d direction) tail {
 		t.current, t.past = alerts[0], alerts[1:]
 	}
 	for range r.length() {
-		l := litLook{boundary: r.int(), window: int(r.uint()), events: r.int(), exposure: r.quantity(), log10p: r.float()}
+		l := litLook{boundary: r.int(), window: int(r.uint()), events: r.int(), exposure: r.quantity(), log10p: r.float(), at: Instant(r.int())}
 		if n := r.uint(); n > uint64(len(alerts)) {
 			r.fail("a look names an alert that isn't there")
 		} else if n > 0 {

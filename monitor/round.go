@@ -7,6 +7,7 @@ func (e *Engine) lookAll(ix *indicator, boundary int64) {
 	due := ix.nextDue
 	ix.pass(boundary)
 	ep := ix.epochAt(boundary)
+	e.refresh(ix, ep, boundary)
 	for _, s := range ix.series {
 		if s.birth < boundary {
 			e.lookAt(s, ep, boundary, due)
@@ -23,7 +24,7 @@ func (e *Engine) lookAt(s *series, ep *epoch, boundary int64, due Instant) {
 		if !ix.looksAt(&ep.cfg.Windows[w], boundary) {
 			continue
 		}
-		l := ix.look(s, ep, w, boundary)
+		l := ix.look(s, ep, w, boundary, due)
 		e.note(s, &l, boundary)
 		if l.status == made {
 			looks = append(looks, l)
@@ -52,7 +53,7 @@ func (e *Engine) note(s *series, l *look, boundary int64) {
 			e.touch(s)
 		}
 		ws.made, ws.hasMade = boundary, true
-	case missing, overfull, unexposed:
+	case missing, overfull, unexposed, unbased:
 		e.account.WithheldLooks++
 		if ws.withheld != l.status {
 			if ws.withheld == made {
@@ -101,10 +102,7 @@ func (e *Engine) litOf(s *series, d direction, looks []look) []look {
 	for i := range looks {
 		if l := &looks[i]; l.lit[d] {
 			lit = append(lit, *l)
-			s.tails[d].set(litLook{
-				boundary: l.boundary, window: l.window, events: l.events,
-				exposure: l.exposure, log10p: l.log10p[d],
-			})
+			s.tails[d].set(l.asLit(d, nil))
 			e.touch(s)
 		}
 	}
@@ -128,7 +126,7 @@ func (e *Engine) withEntry(s *series, d direction, lit []look) []look {
 
 // worsen gives the lit looks to the current alert, with a step if a further
 // window signals or log10 p is down by one.
-func (e *Engine) worsen(s *series, d direction, lit []look, due Instant) {
+func (e *Engine) worsen(s *series, d direction, lit []look, at Instant) {
 	if len(lit) == 0 {
 		return
 	}
@@ -139,6 +137,7 @@ func (e *Engine) worsen(s *series, d direction, lit []look, due Instant) {
 		further = further || a.windows&(1<<lit[i].window) == 0
 		t.join(&lit[i], a, d)
 	}
+	s.extend(a, lit[0].boundary)
 	l := strongest(lit, d)
 	down := l.log10p[d] <= a.worstLog10P-1
 	if !down && !further {
@@ -148,7 +147,7 @@ func (e *Engine) worsen(s *series, d direction, lit []look, due Instant) {
 	if l.log10p[d] < a.worstLog10P {
 		a.worst, a.worstLog10P, a.record.Worst = lookKey{l.boundary, l.window}, l.log10p[d], evidence
 	}
-	e.step(a, life.Step{Kind: life.StepWorsened, At: due.Time(), Evidence: &evidence})
+	e.step(a, life.Step{Kind: life.StepWorsened, At: at.Time(), Evidence: &evidence})
 }
 
 // strongest returns the look with the smallest p, the earliest of equals.

@@ -31,6 +31,13 @@ type series struct {
 	// base is the baseline that serves the series under the stanza baseOf.
 	base   *config.Baseline
 	baseOf *config.Indicator
+	// references are the estimates of the usual rate that looks inside the
+	// horizon were judged by, oldest first; comparator is the first trailing
+	// one, kept to show slow creep beside those that follow.
+	references []reference
+	comparator *reference
+	// marked are the spans that people marked real.
+	marked []markedSpan
 	// dirty lists the slots changed since the last drain, if touched.
 	dirty   []int64
 	touched bool
@@ -74,7 +81,8 @@ type litLook struct {
 	events   int64
 	exposure Quantity
 	log10p   float64
-	alert    *alert // nil if it opened or joined none
+	at       Instant // when it was made
+	alert    *alert  // nil if it opened or joined none
 }
 
 func compareLit(a, b litLook) int {
@@ -117,11 +125,11 @@ func (t *tail) of(a *alert) int {
 // difference to any look.
 func (e *Engine) trim(s *series) {
 	ix := s.indicator
-	if ix.floor <= s.trimmed {
+	if ix.kept <= s.trimmed {
 		return
 	}
-	s.trimmed = ix.floor
-	n, _ := s.cells.find(ix.floor)
+	s.trimmed = ix.kept
+	n, _ := s.cells.find(ix.kept)
 	for i := range s.cells[:n] {
 		c := &s.cells[i]
 		if !ix.needs.paired(c) {
@@ -133,11 +141,18 @@ func (e *Engine) trim(s *series) {
 		s.cells = slices.Delete(s.cells, 0, n)
 		e.touch(s)
 	}
+	s.forget(ix)
 	for d := range s.tails {
 		if s.tails[d].trim(ix.frozenAt, s.windows, e.alerts) {
 			e.touch(s)
 		}
 	}
+}
+
+// forget drops the estimates and marks that no look will need again.
+func (s *series) forget(ix *indicator) {
+	s.forgetReferences(ix.frozenAt)
+	s.marked = slices.DeleteFunc(s.marked, func(m markedSpan) bool { return m.to <= ix.kept })
 }
 
 // trim freezes what can't change any more: looks at or before the boundary,

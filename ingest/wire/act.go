@@ -2,6 +2,7 @@ package wire
 
 import (
 	"bytes"
+	"slices"
 	"unicode"
 	"unicode/utf8"
 
@@ -93,6 +94,8 @@ func readActField(field field, act *monitor.Act) *fault {
 		return readActText(field, MaxByLength, &act.By)
 	case "why":
 		return readActText(field, MaxWhyLength, &act.Why)
+	case "mark":
+		return readMark(field, act)
 	case "at":
 		act.HasAt = true
 		return readTime(field, &act.At)
@@ -105,13 +108,31 @@ func readActKind(field field, act *monitor.Act) *fault {
 	if f := readActText(field, MaxIDLength, &text); f != nil {
 		return f
 	}
-	for _, kind := range []monitor.ActKind{monitor.Acknowledge, monitor.Close, monitor.Note} {
+	for _, kind := range []monitor.ActKind{monitor.Acknowledge, monitor.Close, monitor.Note, monitor.Mark} {
 		if text == kind.String() {
 			act.Kind = kind
 			return nil
 		}
 	}
-	return refuse(monitor.BadAct, "act is %q; it must be acknowledge, close or note", clip(text))
+	return refuse(monitor.BadAct, "act is %q; it must be acknowledge, close, note or mark", clip(text))
+}
+
+// unmarked takes a mark back.
+const unmarked = "none"
+
+func readMark(field field, act *monitor.Act) *fault {
+	var text string
+	if f := readActText(field, MaxIDLength, &text); f != nil {
+		return f
+	}
+	if act.Mark = life.Mark(text); text == unmarked {
+		act.Mark = life.NotMarked
+		return nil
+	}
+	if !slices.Contains(life.Marks, act.Mark) {
+		return refuse(monitor.BadAct, "mark is %q; it must be one of %q, or %s", clip(text), life.Marks, unmarked)
+	}
+	return nil
 }
 
 // readActText reads a text that says something: of at most so many
@@ -136,13 +157,15 @@ func readActText(field field, most int, text *string) *fault {
 func checkAct(act *monitor.Act, seen map[string]bool) *fault {
 	switch {
 	case !seen["act"]:
-		return refuse(monitor.BadAct, "the field act is missing; it must be acknowledge, close or note")
+		return refuse(monitor.BadAct, "the field act is missing; it must be acknowledge, close, note or mark")
 	case !seen["by"]:
 		return refuse(monitor.BadAct, "the field by is missing; it says who acts")
 	case seen["alert"] && (seen["series"] || seen["direction"]):
 		return refuse(monitor.BadAct, "the alert is named twice; give alert, or series and direction")
 	case !seen["alert"] && (!seen["series"] || !seen["direction"]):
 		return refuse(monitor.BadAct, "no alert is named; give alert, or series and direction")
+	case seen["mark"] != (act.Kind == monitor.Mark):
+		return refuse(monitor.BadAct, "the field mark belongs to an act mark, and to it alone")
 	case !seen["why"] && act.Kind != monitor.Acknowledge:
 		return refuse(monitor.BadAct, "the field why is missing; a %s needs it", act.Kind)
 	}

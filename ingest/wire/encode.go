@@ -62,6 +62,14 @@ func EncodeAct(dst []byte, a *monitor.Act) []byte {
 		dst = append(dst, `,"direction":`...)
 		dst = AppendText(dst, string(a.Direction))
 	}
+	if a.Kind == monitor.Mark {
+		mark := string(a.Mark)
+		if mark == "" {
+			mark = unmarked
+		}
+		dst = append(dst, `,"mark":`...)
+		dst = AppendText(dst, mark)
+	}
 	dst = append(dst, `,"by":`...)
 	dst = AppendText(dst, a.By)
 	if a.Why != "" {

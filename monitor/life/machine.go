@@ -43,6 +43,13 @@ var after = map[StepKind]map[Condition]Condition{
 		Acknowledged:   Closed,
 		Returned:       Closed,
 	},
+	StepMarked: {
+		Unacknowledged: Unacknowledged,
+		Acknowledged:   Acknowledged,
+		Returned:       Returned,
+		Closed:         Closed,
+		Withdrawn:      Withdrawn,
+	},
 	StepNote: {
 		Unacknowledged: Unacknowledged,
 		Acknowledged:   Acknowledged,
@@ -87,6 +94,9 @@ func (r *Record) closesAfter(k StepKind) bool {
 
 func (r *Record) take(s Step, next Condition) Notice {
 	r.Condition = next
+	if s.Kind == StepMarked {
+		r.Mark = s.Mark
+	}
 	s.Number = len(r.Steps) + 1
 	s.At = s.At.UTC()
 	s.Condition = next

@@ -49,7 +49,23 @@ const (
 	StepAcknowledged StepKind = "acknowledged"
 	StepClosed       StepKind = "closed"
 	StepNote         StepKind = "note"
+	StepMarked       StepKind = "marked"
 )
+
+// Mark is what a person says an alert turned out to be.
+type Mark string
+
+// The marks. A mark may be changed, and taken back.
+const (
+	NotMarked    Mark = ""
+	MarkReal     Mark = "real"
+	MarkChance   Mark = "chance"
+	MarkData     Mark = "data error"
+	MarkRedefine Mark = "change of definition"
+)
+
+// Marks are all marks, in order.
+var Marks = []Mark{MarkReal, MarkChance, MarkData, MarkRedefine}
 
 // Record is everything that is known of one alert.
 type Record struct {
@@ -61,6 +77,8 @@ type Record struct {
 	Series    string    `json:"series"`
 	Direction Direction `json:"direction"`
 	Condition Condition `json:"condition"`
+	// Mark is what people say it turned out to be.
+	Mark Mark `json:"mark,omitempty"`
 	// Number counts the alerts of this series and direction, from 1.
 	Number int `json:"number"`
 	// Opened is the due time of the opening look. Late says that data which
@@ -95,10 +113,16 @@ type Evidence struct {
 	Due  time.Time `json:"due"`
 	// Events in Exposure (exact, in Unit), of which LateEvents events came
 	// after the look was due.
-	Events     int64  `json:"events"`
-	Exposure   string `json:"exposure"`
-	Unit       string `json:"unit"`
-	LateEvents int64  `json:"late_events"`
+	Events   int64  `json:"events"`
+	Exposure string `json:"exposure"`
+	Unit     string `json:"unit"`
+	// Weighted is the exposure with each slot multiplied by the factor of its
+	// stratum and by the share of its events that can have been reported; nil
+	// where that changes nothing.
+	Weighted *float64 `json:"weighted_exposure,omitempty"`
+	// Provisional is how many slots have an exposure that was carried forward.
+	Provisional int64 `json:"provisional_slots,omitempty"`
+	LateEvents  int64 `json:"late_events"`
 	// EventNoun names the events in the plural, e.g. "line infections".
 	EventNoun string `json:"event_noun"`
 	// Expected events under the baseline.
@@ -147,8 +171,42 @@ type Baseline struct {
 	Events   int64   `json:"events,omitempty"`
 	Exposure string  `json:"exposure,omitempty"`
 	Margin   float64 `json:"margin"`
-	Version  string  `json:"version,omitempty"`
-	Source   string  `json:"source,omitempty"`
+	// Weighted is the exposure with the factors of the strata, where there
+	// are any.
+	Weighted *float64 `json:"weighted_exposure,omitempty"`
+	// From and To bound the history that was counted, for trailing and peers;
+	// LeftOut slots of it were marked real.
+	From    *time.Time `json:"from,omitempty"`
+	To      *time.Time `json:"to,omitempty"`
+	LeftOut int64      `json:"slots_left_out,omitempty"`
+	// Peers other series were counted, which differ Between times as much as
+	// chance alone would make them (variance over mean).
+	Peers   int64    `json:"peers,omitempty"`
+	Between *float64 `json:"between,omitempty"`
+	// Spread is the variance of a slot's count over that of the model.
+	Spread float64 `json:"spread,omitempty"`
+	// Strata says by what the usual rate is multiplied, Delay that recent
+	// slots are thinned by what can have been reported.
+	Strata string `json:"strata,omitempty"`
+	Delay  bool   `json:"delay,omitempty"`
+	// First is the first trailing reference, where this one is a later one: a
+	// slow creep shows against it.
+	First   *Comparator `json:"first_reference,omitempty"`
+	Version string      `json:"version,omitempty"`
+	Source  string      `json:"source,omitempty"`
+}
+
+// Comparator is an older reference beside the one in force.
+type Comparator struct {
+	Events   int64     `json:"events"`
+	Exposure string    `json:"exposure"`
+	From     time.Time `json:"from"`
+	To       time.Time `json:"to"`
+	// Ratio of the window's rate to this reference's, with exact bounds (for
+	// a proportion the odds ratio).
+	Ratio      *float64 `json:"ratio"`
+	RatioLower float64  `json:"ratio_lower"`
+	RatioUpper *float64 `json:"ratio_upper"`
 }
 
 // Since is the data after the opening look.
@@ -169,6 +227,8 @@ type Step struct {
 	At     time.Time `json:"at"` // event time: a look's due time or the partition's clock
 	By     string    `json:"by,omitempty"`
 	Why    string    `json:"why,omitempty"`
+	// Mark is the mark that was set; "" for one taken back.
+	Mark Mark `json:"mark,omitempty"`
 	// Evidence of the look that made the step, where there is one.
 	Evidence *Evidence `json:"evidence,omitempty"`
 	// Condition after the step.

@@ -1,0 +1,187 @@
+package monitor
+
+import (
+	"slices"
+
+	"tailbell/config"
+)
+
+// span is a run of slots, the end excluded.
+type span struct{ from, to int64 }
+
+// refresh counts the references of the indicator's series anew where a new
+// period of their baseline begins with the boundary. What is counted is what
+// the data say then; later corrections of the past reach the next period.
+func (e *Engine) refresh(ix *indicator, ep *epoch, boundary int64) {
+	if !estimated(ep.cfg) {
+		return
+	}
+	var pools map[*config.Baseline]*pool
+	for _, s := range ix.series {
+		b := ix.baseline(s, ep.cfg, boundary)
+		if b == nil || (b.Kind != config.Trailing && b.Kind != config.Peers) || s.birth >= boundary {
+			continue
+		}
+		period := NewCalendar(b.Refresh, ix.cal.zone).Slot(ix.cal.Start(boundary))
+		if n := len(s.references); n > 0 && s.references[n-1].period == period && s.references[n-1].of == b.Kind {
+			continue
+		}
+		var r reference
+		if b.Kind == config.Trailing {
+			r.end = boundary - int64(b.GapSlots)
+			r.begin = r.end - int64(b.SpanSlots)
+			ix.countReference(s, b, &r)
+		} else {
+			if pools == nil {
+				pools = map[*config.Baseline]*pool{}
+			}
+			p := pools[b]
+			if p == nil {
+				p = ix.poolOf(ep, b, boundary)
+				pools[b] = p
+			}
+			r = p.without(s, b, ix.cfg.GrainDigits)
+		}
+		r.from, r.period, r.of, r.strata = boundary, period, b.Kind, nil
+		s.references = append(s.references, r)
+		if s.comparator == nil && b.Kind == config.Trailing && r.events >= b.MinEvents && r.weighted > 0 {
+			s.comparator = &r
+		}
+		e.touch(s)
+	}
+}
+
+func estimated(cfg *config.Indicator) bool {
+	return slices.ContainsFunc(cfg.Baselines, func(b config.Baseline) bool {
+		return b.Kind == config.Trailing || b.Kind == config.Peers
+	})
+}
+
+// countReference sums the slots [begin, end) of the series that are known on
+// both sides and were not marked real.
+func (ix *indicator) countReference(s *series, b *config.Baseline, r *reference) {
+	r.begin = max(r.begin, s.birth, ix.kept)
+	r.strata = make([]Quantity, strataOf(b))
+	ix.eachExposure(s, r.begin, r.end, func(slot int64, q Quantity, provisional bool) {
+		events, known := ix.eventsOf(s, slot)
+		switch {
+		case !known || provisional:
+		case s.isMarked(slot):
+			r.leftOut++
+		default:
+			r.events += events
+			i := 0
+			if b.Strata != nil {
+				i = ix.stratum(b.Strata, slot)
+			}
+			r.strata[i] = r.strata[i].add(q)
+		}
+	})
+	r.weigh(b, ix.cfg.GrainDigits)
+}
+
+func strataOf(b *config.Baseline) int {
+	if b.Strata == nil {
+		return 1
+	}
+	return len(b.Strata.Factors)
+}
+
+// weigh sums the exposure of the strata, plain and by their factors.
+func (r *reference) weigh(b *config.Baseline, digits int) {
+	r.exposure, r.weighted = Quantity{}, 0
+	for i, q := range r.strata {
+		r.exposure = r.exposure.add(q)
+		factor := 1.0
+		if b.Strata != nil {
+			factor = b.Strata.Factors[i]
+		}
+		if !q.IsZero() {
+			r.weighted += float64(factor * q.Float(digits))
+		}
+	}
+}
+
+// eventsOf returns the slot's events, and whether they are known.
+func (ix *indicator) eventsOf(s *series, slot int64) (int64, bool) {
+	i, ok := s.cells.find(slot)
+	if !ok {
+		return 0, !ix.needs.events
+	}
+	return s.cells[i].events, !ix.needs.events || s.cells[i].saysEvents > 0
+}
+
+// isMarked reports whether the slot lies in a span that was marked real.
+func (s *series) isMarked(slot int64) bool {
+	return slices.ContainsFunc(s.marked, func(m markedSpan) bool { return m.from <= slot && slot < m.to })
+}
+
+// pool is what all series under one baseline counted over its span.
+type pool struct {
+	each map[*series]*reference
+	sum  reference
+	// index is the sum of events squared over exposure.
+	index float64
+}
+
+func (ix *indicator) poolOf(ep *epoch, b *config.Baseline, boundary int64) *pool {
+	p := &pool{each: map[*series]*reference{}}
+	p.sum.strata = make([]Quantity, strataOf(b))
+	p.sum.begin, p.sum.end = boundary-int64(b.SpanSlots), boundary
+	for _, s := range ix.series { // in order of their numbers
+		if ix.baseline(s, ep.cfg, boundary) != b {
+			continue
+		}
+		r := &reference{begin: p.sum.begin, end: p.sum.end}
+		if ix.countReference(s, b, r); r.weighted == 0 {
+			continue
+		}
+		p.each[s] = r
+		p.sum.events += r.events
+		p.sum.leftOut += r.leftOut
+		for i := range r.strata {
+			p.sum.strata[i] = p.sum.strata[i].add(r.strata[i])
+		}
+		p.index += r.index()
+	}
+	return p
+}
+
+func (r *reference) index() float64 {
+	return float64(float64(r.events) * float64(r.events) / r.weighted)
+}
+
+// without returns the reference of one series: all the others, and how much
+// they differ among themselves.
+func (p *pool) without(s *series, b *config.Baseline, digits int) reference {
+	r := p.sum
+	r.strata = slices.Clone(p.sum.strata)
+	r.peers = int64(len(p.each))
+	index := p.index
+	if own := p.each[s]; own != nil {
+		r.peers--
+		r.events -= own.events
+		r.leftOut -= own.leftOut
+		for i := range own.strata {
+			r.strata[i] = r.strata[i].sub(own.strata[i])
+		}
+		index -= own.index()
+	}
+	r.weigh(b, digits)
+	if r.peers >= 2 && r.events > 0 {
+		// The dispersion index: sum of (x - mean)^2 / mean over the others,
+		// by their number less one.
+		rate := float64(r.events) / r.weighted
+		r.between = max(0, float64(index/rate)-float64(r.events)) / float64(r.peers-1)
+	}
+	return r
+}
+
+// forgetReferences drops the estimates that no look inside the horizon needs.
+func (s *series) forgetReferences(frozen int64) {
+	n := 0
+	for n+1 < len(s.references) && s.references[n+1].from <= frozen {
+		n++
+	}
+	s.references = slices.Delete(s.references, 0, n)
+}

@@ -1,0 +1,84 @@
+package monitor
+
+import (
+	"tailbell/config"
+)
+
+// usual is what a look is judged by: the baseline that is valid for its
+// boundary, resolved for its series.
+type usual struct {
+	cfg  *config.Indicator
+	base *config.Baseline
+	// ref is the reference of all kinds but Known.
+	ref *reference
+}
+
+// reference is so many events in so much exposure, from which a usual rate is
+// estimated.
+type reference struct {
+	// from is the first boundary that it serves, and period the number of the
+	// refresh period in which it was counted.
+	from, period int64
+	events       int64
+	exposure     Quantity
+	// weighted is the exposure with the factors of the strata.
+	weighted float64
+	// begin and end bound the slots counted; leftOut of them were left out,
+	// because they were marked real.
+	begin, end int64
+	leftOut    int64
+	// strata is the exposure by stratum, while it is being counted.
+	strata []Quantity
+	// of is the kind of baseline that it was counted for.
+	of config.BaselineKind
+	// peers is how many other series were counted, and between how much more
+	// they differ than chance alone would make them: variance over mean.
+	peers   int64
+	between float64
+}
+
+// usualAt returns what looks at the boundary are judged by, and false if there
+// is no baseline for it, or one that is estimated from too few events.
+func (ix *indicator) usualAt(s *series, ep *epoch, boundary int64) (usual, bool) {
+	u := usual{cfg: ep.cfg, base: ix.baseline(s, ep.cfg, boundary)}
+	if u.base == nil {
+		return u, false
+	}
+	switch u.base.Kind {
+	case config.Known:
+		return u, true
+	case config.Reference:
+		u.ref = &reference{events: u.base.Events, weighted: floatOf(u.base.Exposure)}
+		return u, true
+	case config.Trailing, config.Peers:
+		u.ref = s.referenceAt(boundary)
+	}
+	return u, u.ref != nil && u.ref.weighted > 0 && u.ref.events >= u.base.MinEvents
+}
+
+// baseline returns the baseline that serves the series at the boundary, nil
+// for none.
+func (ix *indicator) baseline(s *series, cfg *config.Indicator, boundary int64) *config.Baseline {
+	if s.baseOf == cfg && s.base != nil {
+		return s.base
+	}
+	b := cfg.BaselineAt(s.name, ix.cal.Start(boundary).Time())
+	for i := range cfg.Baselines {
+		if x := &cfg.Baselines[i]; !x.From.IsZero() || !x.To.IsZero() {
+			return b // another one may hold at another time
+		}
+	}
+	s.base, s.baseOf = b, cfg
+	return b
+}
+
+// referenceAt returns the estimate that was in force for the boundary, nil for
+// none.
+func (s *series) referenceAt(boundary int64) *reference {
+	for i := len(s.references) - 1; i >= 0; i-- {
+		if s.references[i].from <= boundary {
+			return &s.references[i]
+		}
+	}
+	return nil
+}
