@@ -126,6 +126,34 @@ func (c *comparison) value(key string, class Class, old, next any, effect string
 	c.add(Change{Key: key, Class: class, Old: before, New: after, Effect: effect})
 }
 
+// outlets are no part of what a store holds: a change is in force when the
+// daemon reads the set-up.
+func (c *comparison) outlets(a, b []Outlet) {
+	named := func(list []Outlet, name string) (o Outlet, found bool) {
+		i := slices.IndexFunc(list, func(o Outlet) bool { return o.Name == name })
+		if i < 0 {
+			return o, false
+		}
+		return list[i], true
+	}
+	for _, before := range a {
+		c.path = "outlet[" + before.Name + "]"
+		after, found := named(b, before.Name)
+		if !found {
+			c.add(Change{Key: c.path, Class: NextLook, Old: before.Kind.String(), Effect: "what waits for it stays undelivered until it is dropped"})
+			continue
+		}
+		c.value("kind", NextLook, before.Kind, after.Kind, "")
+		c.value("url", NextLook, before.URL, after.URL, "")
+		c.value("secret_file", NextLook, before.SecretFile, after.SecretFile, "")
+	}
+	for _, after := range b {
+		if _, found := named(a, after.Name); !found {
+			c.add(Change{Key: "outlet[" + after.Name + "]", Class: NextLook, New: after.Kind.String(), Effect: "it begins with the oldest step still kept"})
+		}
+	}
+}
+
 func (c *comparison) setup(a, b *Setup) {
 	c.value("name", Rebuild, a.Name, b.Name, "another name is another deployment, with its own streams and store")
 	c.value("folder", Restart, a.Folder, b.Folder, "the store must be moved there first")
@@ -143,6 +171,7 @@ func (c *comparison) setup(a, b *Setup) {
 	c.value("max_bytes", Restart, exactSize(a.Bus.MaxBytes), exactSize(b.Bus.MaxBytes), "")
 	c.value("max_age", Restart, FormatDuration(a.Bus.MaxAge), FormatDuration(b.Bus.MaxAge), "")
 	c.value("replicas", Restart, a.Bus.Replicas, b.Bus.Replicas, "")
+	c.outlets(a.Outlets, b.Outlets)
 	c.path = "limits"
 	c.value("max_series", NextLook, a.Limits.MaxSeries, b.Limits.MaxSeries, "")
 	c.value("max_ids", NextLook, a.Limits.MaxIDs, b.Limits.MaxIDs, "")

@@ -65,6 +65,7 @@ func TestCompareSeesEveryField(t *testing.T) {
 	var kind BaselineKind
 	fresh := func() *Setup {
 		s := mustParse(t, string(Sample()))
+		s.Outlets = []Outlet{{Name: "ward", URL: "https://hooks.example.org", SecretFile: "secret"}}
 		in := &s.Indicators[0]
 		in.Exposure = exposure
 		in.Allowance = &Allowance{Alerts: 1, Every: Every{5, Year}}

@@ -99,6 +99,11 @@ func (s *Setup) resolve(folder string) {
 			*p = filepath.Join(folder, *p)
 		}
 	}
+	for i := range s.Outlets {
+		if p := &s.Outlets[i].SecretFile; *p != "" && !filepath.IsAbs(*p) {
+			*p = filepath.Join(folder, *p)
+		}
+	}
 }
 
 func readSetup(top section) *Setup {
@@ -118,6 +123,7 @@ func readSetup(top section) *Setup {
 	limits := top.sub("limits")
 	s.Limits = limits.readLimits()
 	s.Indicators = readIndicators(top, s)
+	s.Outlets = readOutlets(top)
 	if len(top.faults) == 0 {
 		s.checkMemory(limits)
 	}

@@ -22,9 +22,9 @@ func readme(t *testing.T) string {
 func TestReadmeKeys(t *testing.T) {
 	tables := map[string]string{
 		"At the top": "", "`[time]`": "[time]", "`[bus]`": "[bus]", "`[limits]`": "[limits]",
-		"`[[indicator]]`": indicatorPlace, "`[[indicator.baseline]]`": "[[indicator.baseline]]",
+		"`[[indicator]]`": indicatorPlace, "`[[indicator.baseline]]`": "[[indicator.baseline]]", "`[[outlet]]`": outletPlace,
 	}
-	elsewhere := []string{"time", "bus", "limits", "indicator", "baseline"} // tables of their own
+	elsewhere := []string{"time", "bus", "limits", "indicator", "baseline", "outlet"} // tables of their own
 	row := regexp.MustCompile("(?m)^\\| (`[^|]*`) \\|")
 	for part := range strings.SplitSeq(readme(t), "\n## ") {
 		heading, body, _ := strings.Cut(part, "\n")

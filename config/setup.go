@@ -30,6 +30,8 @@ type Setup struct {
 	Partitions int
 	KeyParts   int
 	Indicators []Indicator
+	// Outlets are the ways out beside the bus and the terminal.
+	Outlets []Outlet
 	// Text is the file as read and Digest the lower-case hex SHA-256 of it.
 	Text   []byte
 	Digest string
