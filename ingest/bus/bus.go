@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"os"
 	"sync"
+	"sync/atomic"
 	"time"
 
 	"tailbell/config"
@@ -86,7 +87,8 @@ type Bus struct {
 	lock     *lock         // nil for clients
 	log      zerolog.Logger
 	notes    []string
-	atomic   bool // the input stream takes atomic batches
+	atomic   bool         // the input stream takes atomic batches
+	tries    atomic.Int64 // rounds of attempts to come back since the connection was lost
 
 	closing  sync.Once
 	closeErr error
@@ -234,13 +236,19 @@ func (b *Bus) connect(url string, opts []nats.Option, o options) error {
 		nats.PingInterval(pingInterval),
 		nats.MaxReconnects(-1),
 		nats.IgnoreAuthErrorAbort(),
-		nats.CustomReconnectDelay(wait.delay),
+		nats.CustomReconnectDelay(func(n int) time.Duration {
+			b.tries.Store(int64(n))
+			return wait.delay(n)
+		}),
 		nats.DisconnectErrHandler(func(nc *nats.Conn, err error) {
 			if !nc.IsClosed() {
 				o.onState(Disconnected, err)
 			}
 		}),
-		nats.ReconnectHandler(func(*nats.Conn) { o.onState(Connected, nil) }),
+		nats.ReconnectHandler(func(*nats.Conn) {
+			b.tries.Store(0)
+			o.onState(Connected, nil)
+		}),
 		nats.ClosedHandler(func(nc *nats.Conn) {
 			o.onState(Closed, nc.LastError())
 			close(b.closed)
@@ -304,6 +312,10 @@ func (b *Bus) Conn() *nats.Conn { return b.nc }
 
 // Connected reports whether the connection is up.
 func (b *Bus) Connected() bool { return b.nc.IsConnected() }
+
+// Tries is how often it was tried in vain to come back since the connection was
+// lost, 0 while it is up.
+func (b *Bus) Tries() int { return int(b.tries.Load()) }
 
 // Embedded reports whether the server runs in this process.
 func (b *Bus) Embedded() bool { return b.embedded != nil }

@@ -278,3 +278,33 @@ func TestRolledBackRemoteBusIsNoticed(t *testing.T) {
 		t.Errorf("%v", err)
 	}
 }
+
+// TestRefilledRemoteBusIsNoticed rolls the bus back while the reader is away,
+// and fills it beyond the reader's position again: the end alone says nothing.
+func TestRefilledRemoteBusIsNoticed(t *testing.T) {
+	r := startRemote(t, nil)
+	option, seen := states()
+	b := open(t, r.setup(t), option)
+	publish(t, b, 0, 1, 100)
+	saved := filepath.Join(t.TempDir(), "saved")
+	r.stop()
+	await(t, seen, bus.Disconnected)
+	if err := os.CopyFS(saved, os.DirFS(r.options.StoreDir)); err != nil {
+		t.Fatal(err)
+	}
+	r.start(t)
+	await(t, seen, bus.Connected)
+	publish(t, b, 0, 101, 100)
+	s := source(t, b, 0, 0)
+	expect(t, read(t, s, 200, 1000), 1)
+	r.stop()
+	await(t, seen, bus.Disconnected)
+	r.options.StoreDir = saved
+	r.start(t)
+	await(t, seen, bus.Connected)
+	publish(t, b, 0, 101, 150) // the same bytes at 200, but stored at another time
+	_, err := s.Next(deadline(t), nil, 1, 1)
+	if !errors.Is(err, bus.ErrStreamReplaced) || !strings.Contains(err.Error(), "position 200") {
+		t.Errorf("%v", err)
+	}
+}

@@ -2,6 +2,7 @@ package bus
 
 import (
 	"context"
+	"crypto/sha256"
 	"encoding/json"
 	"errors"
 	"fmt"
@@ -54,6 +55,7 @@ type Source struct {
 	whole   bool
 	last    uint64    // position of the last message handed out
 	created time.Time // of the stream, when first seen
+	mark    mark      // of the last message that Next returned
 	missing Missing
 	states  chan nats.Status
 
@@ -61,6 +63,16 @@ type Source struct {
 	left  string   // the consumer of the feed before, "" if there is none to delete
 	pause *backoff // between starts that brought nothing
 }
+
+// mark is how a message is known again: a stream that was rolled back and then
+// filled anew has another one at its position.
+type mark struct {
+	position uint64 // 0 for none
+	stored   time.Time
+	digest   [sha256.Size]byte
+}
+
+func markOf(r *Raw) mark { return mark{r.Position, r.Stored, sha256.Sum256(r.Data)} }
 
 // feed is one consumer on the bus with the subscription that it delivers to.
 type feed struct {
@@ -119,6 +131,7 @@ func (s *Source) Next(ctx context.Context, dst []Raw, limit, maxBytes int) ([]Ra
 			return dst, err
 		}
 		if len(dst) > start {
+			s.mark = markOf(&dst[len(dst)-1])
 			return dst, nil
 		}
 		if s.feed == nil {
@@ -353,9 +366,32 @@ func (s *Source) compare(ctx context.Context) error {
 	if s.last > id.Last {
 		return &BeyondEndError{Stream: s.stream, After: s.last, End: id.Last}
 	}
+	if err := s.recognise(ctx, id.First); err != nil {
+		return err
+	}
 	if !s.whole && id.First > s.last+1 {
 		s.gap(id.First)
 		s.last = id.First - 1
+	}
+	return nil
+}
+
+// recognise checks that the last message that Next returned still stands where
+// it did, unless it was removed.
+func (s *Source) recognise(ctx context.Context, first uint64) error {
+	if s.mark.position < max(first, 1) {
+		return nil
+	}
+	have, err := s.bus.at(ctx, s.stream, s.mark.position)
+	if errors.Is(err, ErrNoMessage) {
+		return nil
+	}
+	if err != nil {
+		return err
+	}
+	if !have.Stored.Equal(s.mark.stored) || sha256.Sum256(have.Data) != s.mark.digest {
+		return fmt.Errorf("%w: at position %d of %s stands another message than was read, stored at %s instead of %s",
+			ErrStreamReplaced, s.mark.position, s.stream, have.Stored.Format(time.RFC3339Nano), s.mark.stored.Format(time.RFC3339Nano))
 	}
 	return nil
 }

@@ -265,13 +265,17 @@ func (b *Bus) EndOf(ctx context.Context, partition int) (uint64, error) {
 // At returns the message at a position of the input stream. The error is an
 // ErrNoMessage if there is none.
 func (b *Bus) At(ctx context.Context, position uint64) (Raw, error) {
-	s, err := b.js.Stream(ctx, b.names.inStream())
+	return b.at(ctx, b.names.inStream(), position)
+}
+
+func (b *Bus) at(ctx context.Context, stream string, position uint64) (Raw, error) {
+	s, err := b.js.Stream(ctx, stream)
 	if err != nil {
-		return Raw{}, fmt.Errorf("asking for the stream %s: %w", b.names.inStream(), mapped(err))
+		return Raw{}, fmt.Errorf("asking for the stream %s: %w", stream, mapped(err))
 	}
 	msg, err := s.GetMsg(ctx, position)
 	if errors.Is(err, jetstream.ErrMsgNotFound) {
-		return Raw{}, fmt.Errorf("%w: %d of %s", ErrNoMessage, position, b.names.inStream())
+		return Raw{}, fmt.Errorf("%w: %d of %s", ErrNoMessage, position, stream)
 	}
 	if err != nil {
 		return Raw{}, fmt.Errorf("reading message %d: %w", position, mapped(err))
