@@ -86,6 +86,9 @@ func poissonUpperRatio(k float64, mu dd) float64 {
 	if k > directTerms {
 		c := dd{k - 1, 0}.add(mu.neg()).float()
 		if t := reach(c, k-1); k*t > directTerms {
+			if k >= uniformFrom*uniformFrom {
+				return poissonUniform(false, k, mu)
+			}
 			return k * panel(c, k-1, -1, 0, 0, min(t, 1))
 		}
 	}
@@ -112,6 +115,9 @@ func poissonLowerRatio(k float64, mu dd) float64 {
 	if k > directTerms {
 		c := mu.addFloat(-k).float()
 		if t := reach(c, k); mu.hi*t > directTerms {
+			if k >= uniformFrom*uniformFrom {
+				return 1 + poissonUniform(true, k, mu)
+			}
 			return mu.hi * panel(c, k, 1, 0, 0, t)
 		}
 	}
@@ -130,15 +136,30 @@ func poissonLowerRatio(k float64, mu dd) float64 {
 // binomialUpperRatio is P(X >= k)/P(X = k) for 1 <= k <= n, k above np or near it.
 func binomialUpperRatio(k, n float64, p, q dd) float64 {
 	w := p.div(q)
-	c := q.mulFloat(k-1).add(p.mulFloat(n-k).neg()).float() / q.hi
-	s := (k - 1) + (n-k)*w.hi*w.hi
-	if t := reach(c, s); min(k*t, n-k) > directTerms {
-		return k * panel(c, k-1, -1, n-k, w.hi, min(t, 1))
+	if min(k, n-k) > directTerms {
+		c := q.mulFloat(k-1).add(p.mulFloat(n-k).neg()).float() / q.hi
+		s := (k - 1) + (n-k)*w.hi*w.hi
+		if t := reach(c, s); k*t > directTerms {
+			if k*((n-k)/n) >= uniformFrom*uniformFrom {
+				return binomialUniform(k, n, p)
+			}
+			return k * panel(c, k-1, -1, n-k, w.hi, min(t, 1))
+		}
 	}
-	t, sum := 1.0, 1.0
-	for j := k; j < n && t > 0x1p-56*sum; j++ {
-		t *= float64((n-j)*w.hi) / (j + 1)
-		sum += t
+	t, sum, left := 1.0, 1.0, n-k
+	if k < float64(len(inverse)-2*directTerms) {
+		last := int(min(n, float64(len(inverse)-1)))
+		for i := int(k) + 1; i <= last && t > 0x1p-56*sum; i++ {
+			t *= float64(left*w.hi) * inverse[i]
+			sum += t
+			left--
+		}
+	} else {
+		for d := k + 1; left > 0 && t > 0x1p-56*sum; d++ {
+			t *= float64(left*w.hi) / d
+			sum += t
+			left--
+		}
 	}
 	if w.lo != 0 {
 		sum += w.lo / w.hi * (k*q.hi - sum*(k-n*p.hi))

@@ -1,0 +1,115 @@
+package exact
+
+import "math"
+
+// The ratio tail/probability where the standard deviation is large, by Temme's uniform
+// expansion (1979, SIAM J. Math. Anal. 10; 1982, 13) with both parameters kept exact.
+//
+// Let D(t) be the deviance at t, z^2/2 = D with the sign of t-k/n, and v = (t-k/n) in standard
+// deviations. Then v v' = z (1 + alpha v - beta v^2), and the integral of exp(-z^2/2) f(z), f =
+// z/v - kappa z, from the tail's end to z is taken by parts again and again:
+//
+//	ratio = sd [E sqrt(pi/2) erfcx(|z|/sqrt 2) -+ (gamma0(z) + gamma1(z) + ...)]
+//
+// with E from Stirling's errors, exactly, gamma0 = 1/v - 1/z - kappa, and gamma(m+1) =
+// (gamma(m)' - gamma(m)'(0))/z from f's Taylor series. With sd >= uniformFrom what is left out is
+// under 1e-17.
+
+// uniformFrom is the standard deviation from which the expansion is taken.
+const uniformFrom = 400
+
+// erfcx is exp(y^2) erfc(y) for y >= 0, and for y < 0 not far below.
+func erfcx(y float64) float64 {
+	if y < 0 {
+		return 2*expTwo(y*y, 0) - erfcx(-y)
+	}
+	if y > 100 {
+		r := 1 / (y * y)
+		return math.FMA(r, math.FMA(r, 0.75, -0.5), 1) / (y * math.Sqrt(math.Pi))
+	}
+	t := 256 / (4 + y)
+	i := min(int(t), 63)
+	u := 2*(t-float64(i)) - 1
+	c := &erfcxTable[i]
+	w := float64(u * u)
+	even := math.FMA(math.FMA(math.FMA(c[6], w, c[4]), w, c[2]), w, c[0])
+	odd := math.FMA(math.FMA(math.FMA(c[7], w, c[5]), w, c[3]), w, c[1])
+	return math.FMA(odd, u, even)
+}
+
+// wave is the Taylor series of z/v, up to z^11.
+func wave(alpha, beta float64) (w [12]float64) {
+	var a, b [6]float64 // powers of alpha^2 and beta
+	a[0], b[0] = 1, 1
+	for i := 1; i < len(a); i++ {
+		a[i] = float64(a[i-1] * float64(alpha*alpha))
+		b[i] = float64(b[i-1] * beta)
+	}
+	for h := 0; h < len(a); h++ {
+		even, odd := &waveTable[2*h], &waveTable[2*h+1]
+		e, o := float64(even[0]*a[h]), float64(odd[0]*a[h])
+		if beta != 0 {
+			for i := 1; i <= h; i++ {
+				p := float64(a[h-i] * b[i])
+				e = math.FMA(even[i], p, e)
+				o = math.FMA(odd[i], p, o)
+			}
+		}
+		w[2*h], w[2*h+1] = e, float64(o*alpha)
+	}
+	return w
+}
+
+// waveFactor[j] is j-1, (j-1)(j-3), (j-1)(j-3)(j-5).
+var waveFactor = [12][3]float64{
+	3: {2}, 4: {3}, 5: {4, 8}, 6: {5, 15}, 7: {6, 24, 48}, 8: {7, 35, 105}, 9: {8, 48, 192}, 10: {9, 63, 315}, 11: {10, 80, 480},
+}
+
+// uniform gives the ratio: y is |z|/sqrt 2, z has the sign of v, the upper tail has them negative
+// (or next to 0).
+func uniform(lower bool, sd, e, y, v, alpha, beta, kappa float64) float64 {
+	w := wave(alpha, beta)
+	z := math.Copysign(math.Sqrt2*y, v)
+	w[1] -= kappa
+	var g0 float64
+	if y > 0.3 {
+		g0 = 1/v - 1/z - kappa
+	} else {
+		for j := 6; j >= 1; j-- {
+			g0 = math.FMA(g0, z, w[j])
+		}
+	}
+	var g1, g2, g3 float64
+	for j := 11; j >= 3; j-- { // gamma1 = sum over j of (j-1) w[j] z^(j-3), and so on
+		g1 = math.FMA(g1, z, float64(waveFactor[j][0]*w[j]))
+	}
+	for j := 11; j >= 5; j-- {
+		g2 = math.FMA(g2, z, float64(waveFactor[j][1]*w[j]))
+	}
+	for j := 11; j >= 7; j-- {
+		g3 = math.FMA(g3, z, float64(waveFactor[j][2]*w[j]))
+	}
+	g := g0 + (g1 + (g2 + g3))
+	if y = math.Copysign(y, v); !lower {
+		g, y = -g, -y
+	}
+	return sd * math.FMA(e*math.Sqrt(math.Pi/2), erfcx(y), g)
+}
+
+// poissonUniform is P(X >= k)/P(X = k), or P(X < k)/P(X = k) for the lower tail.
+func poissonUniform(lower bool, k float64, mu dd) float64 {
+	d := mu.addFloat(-k).float()
+	sd := math.Sqrt(k)
+	y := math.Sqrt(-k * logLess1(d/k))
+	return uniform(lower, sd, expTwo(stirling(k), 0), y, d/sd, 1/sd, 0, 0)
+}
+
+// binomialUniform is P(X >= k)/P(X = k).
+func binomialUniform(k, n float64, p dd) float64 {
+	m := n - k
+	d := p.mulFloat(n).addFloat(-k).float()
+	sd := math.Sqrt(k * (m / n))
+	y := math.Sqrt(-k*logLess1(d/k) - m*logLess1(-d/m))
+	e := expTwo(stirling(k)+stirling(m)-stirling(n), 0)
+	return uniform(false, sd, e, y, d/sd, (m-k)/(n*sd), 1/n, k/(n*sd))
+}
