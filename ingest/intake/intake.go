@@ -4,20 +4,24 @@
 // An Intake is the source of a partition's loop. It reads in order from the
 // stored position on, without acknowledgements: the position lives in the
 // store.
+//
+// It also guards the partition's clock, which is the bus's and never goes back:
+// a message that was stored more than an hour after the one before it, and more
+// than an hour ahead of the local clock, is held with all that follows. Looks
+// can't be unmade, so a person decides, or the local clock gets there. What is
+// held is decided before a message reaches the engine, so that the engine stays
+// a function of the stream alone.
 package intake
 
 import (
 	"context"
-	"crypto/sha256"
-	"errors"
-	"fmt"
+	"time"
 
 	"tailbell/config"
 	"tailbell/ingest/bus"
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
 	"tailbell/monitor/partition"
-	"tailbell/monitor/store"
 )
 
 // maxBytes is about how much data one batch holds.
@@ -25,107 +29,111 @@ const maxBytes = 16 << 20
 
 // Intake reads one partition.
 type Intake struct {
-	source  *bus.Source
+	source  source
 	decoder *wire.Decoder
-	raw     []bus.Raw
+	buffer  []bus.Raw
+	ready   []bus.Raw // read, not yet handed out
 	missing uint64
-	gap     func(bus.Missing)
+	opts    Options
+	guard   *guard // nil in history time
 }
 
-// Open begins to read a partition after the position. gap is called when
-// messages were removed from the stream before they could be read.
-func Open(ctx context.Context, b *bus.Bus, setup *config.Setup, number int, after uint64, gap func(bus.Missing)) (*Intake, error) {
-	source, err := b.Source(ctx, number, after)
+// source is the bus's.
+type source interface {
+	Next(ctx context.Context, dst []bus.Raw, limit, maxBytes int) ([]bus.Raw, error)
+	Missing() bus.Missing
+	Close() error
+}
+
+// Options say where an Intake begins and whom it tells.
+type Options struct {
+	// After is the position after which to read, Stored when the message there
+	// was stored (monitor.Beginning if that is not known).
+	After  uint64
+	Stored monitor.Instant
+	// Gap is called when messages were removed from the stream before they
+	// could be read. Held is called when the intake is held, and with nil when
+	// it goes on. Both may be nil and must not block.
+	Gap  func(bus.Missing)
+	Held func(*Hold)
+	// Now tells the local time by which the bus's clock is judged.
+	Now func() time.Time
+}
+
+// Open begins to read a partition.
+func Open(ctx context.Context, b *bus.Bus, setup *config.Setup, number int, o Options) (*Intake, error) {
+	s, err := b.Source(ctx, number, o.After)
 	if err != nil {
 		return nil, err
 	}
-	decoder := wire.NewDecoder(wire.Limits{
+	return newIntake(s, setup, o), nil
+}
+
+func newIntake(s source, setup *config.Setup, o Options) *Intake {
+	if o.Gap == nil {
+		o.Gap = func(bus.Missing) {}
+	}
+	if o.Held == nil {
+		o.Held = func(*Hold) {}
+	}
+	in := &Intake{source: s, opts: o, decoder: wire.NewDecoder(wire.Limits{
 		MessageBytes: setup.Limits.MaxMessageBytes, Observations: setup.Limits.MaxObservations,
-	})
-	return &Intake{source: source, decoder: decoder, gap: gap}, nil
+	})}
+	if !setup.History {
+		in.guard = newGuard(o.Stored, o.Now, o.Held)
+	}
+	return in
 }
 
 // Next waits for at least one message and returns what is there.
 func (in *Intake) Next(ctx context.Context, limit int) (partition.Batch, error) {
-	var err error
-	clear(in.raw)
-	if in.raw, err = in.source.Next(ctx, in.raw[:0], limit, maxBytes); err != nil {
-		return partition.Batch{}, err
+	if len(in.ready) == 0 {
+		if err := in.read(ctx, limit); err != nil {
+			return partition.Batch{}, err
+		}
 	}
-	if m := in.source.Missing(); m.Messages > in.missing {
-		in.missing = m.Messages
-		in.gap(m)
+	n := min(limit, len(in.ready))
+	if in.guard != nil {
+		var err error
+		if n, err = in.guard.pass(ctx, in.ready[:n]); err != nil {
+			return partition.Batch{}, err
+		}
 	}
-	b := partition.Batch{Messages: make([]monitor.Message, len(in.raw))}
-	for i := range in.raw {
-		b.Messages[i] = in.decoder.Decode(wire.Raw(in.raw[i]))
+	raw := in.ready[:n]
+	in.ready = in.ready[n:]
+	b := partition.Batch{Messages: make([]monitor.Message, n), Mark: markOf(&raw[n-1])}
+	for i := range raw {
+		b.Messages[i] = in.decoder.Decode(wire.Raw(raw[i]))
 	}
-	last := &in.raw[len(in.raw)-1]
-	b.Mark = markOf(last)
 	return b, nil
 }
 
-// Close ends the reading.
-func (in *Intake) Close() error { return in.source.Close() }
-
-func markOf(r *bus.Raw) store.Mark {
-	return store.Mark{Position: r.Position, Digest: sha256.Sum256(r.Data), Stored: monitor.InstantOf(r.Stored)}
-}
-
-// ErrOtherStream is returned when the bus's stream is not the one that the
-// store was filled from.
-var ErrOtherStream = errors.New("the stream on the bus is not the one that the store was filled from")
-
-// Verify compares the stream on the bus with what the store knows of it: its
-// name and creation, that it reaches the stored position, and the digests of
-// messages at several positions. A store that knows no stream yet learns it.
-func Verify(ctx context.Context, b *bus.Bus, st *store.Store) error {
-	id, err := b.Identity(ctx)
+func (in *Intake) read(ctx context.Context, limit int) error {
+	clear(in.buffer)
+	var err error
+	in.buffer, err = in.source.Next(ctx, in.buffer[:0], limit, maxBytes)
 	if err != nil {
 		return err
 	}
-	have := store.StreamIdentity{Name: id.Stream, Created: id.Created}
-	known, ok, err := st.Stream()
-	if err != nil {
-		return err
-	}
-	if !ok {
-		return st.SetStream(have)
-	}
-	if !known.Equal(have) {
-		return fmt.Errorf("%w: it was stream %s made %s, now it is %s made %s", ErrOtherStream,
-			known.Name, known.Created, have.Name, have.Created)
-	}
-	position, err := st.Position()
-	if err != nil {
-		return err
-	}
-	if position > id.Last {
-		return fmt.Errorf("%w: the store stands at position %d, but the stream ends at %d: its tail is lost",
-			ErrOtherStream, position, id.Last)
-	}
-	return verifyMarks(ctx, b, st, id.First)
-}
-
-func verifyMarks(ctx context.Context, b *bus.Bus, st *store.Store, first uint64) error {
-	marks, err := st.Marks()
-	if err != nil {
-		return err
-	}
-	for _, m := range marks {
-		if m.Position < first {
-			continue // trimmed
-		}
-		raw, err := b.At(ctx, m.Position)
-		if errors.Is(err, bus.ErrNoMessage) {
-			continue // deleted one by one
-		}
-		if err != nil {
-			return err
-		}
-		if have := markOf(&raw); have.Digest != m.Digest {
-			return fmt.Errorf("%w: the message at position %d has changed", ErrOtherStream, m.Position)
-		}
+	in.ready = in.buffer
+	if m := in.source.Missing(); m.Messages > in.missing {
+		in.missing = m.Messages
+		in.opts.Gap(m)
 	}
 	return nil
 }
+
+// Held returns what the intake is held at, nil if it is not.
+func (in *Intake) Held() *Hold {
+	if in.guard == nil {
+		return nil
+	}
+	return in.guard.held()
+}
+
+// Accept lets the intake go on past the message at a position at which it is
+// held, because a person said so. It reports whether it was held there.
+func (in *Intake) Accept(position uint64) bool { return in.guard != nil && in.guard.accept(position) }
+
+// Close ends the reading.
+func (in *Intake) Close() error { return in.source.Close() }
