@@ -5,9 +5,12 @@ import (
 	"errors"
 	"fmt"
 	"io/fs"
+	"math/rand/v2"
+	"net/http"
 	"os"
 	"path/filepath"
 	"sync"
+	"sync/atomic"
 	"time"
 
 	"github.com/rs/zerolog"
@@ -32,6 +35,8 @@ type daemon struct {
 	log   zerolog.Logger
 	parts []*part
 	serve *control.Server
+
+	troubles troubles
 }
 
 // part is one partition at work.
@@ -42,6 +47,7 @@ type part struct {
 	loop   *partition.Loop
 	ticker *intake.Ticker
 	queues []*outlet.Queue
+	noRoom atomic.Bool // the last commit found no room
 
 	mu struct {
 		sync.Mutex
@@ -61,11 +67,12 @@ type daemonOptions struct {
 // openDaemon opens the bus and recovers every partition. What fails is closed
 // again.
 func openDaemon(ctx context.Context, setup *config.Setup, o daemonOptions) (d *daemon, err error) {
-	b, err := bus.Open(ctx, setup, append(o.busOpts, bus.WithLog(o.log))...)
+	d = &daemon{setup: setup, log: o.log}
+	b, err := bus.Open(ctx, setup, append(o.busOpts, bus.WithLog(o.log), bus.WithState(d.busState))...)
 	if err != nil {
 		return nil, err
 	}
-	d = &daemon{setup: setup, bus: b, log: o.log}
+	d.bus = b
 	defer func() {
 		if err != nil {
 			err = errors.Join(err, d.close())
@@ -75,9 +82,6 @@ func openDaemon(ctx context.Context, setup *config.Setup, o daemonOptions) (d *d
 		d.log.Warn().Str("bus", note).Msg("the streams differ from the set-up, without harm")
 	}
 	for n := range setup.Partitions {
-		if err := announceSetup(ctx, b, setup, n); err != nil {
-			return d, err
-		}
 		p, err := d.openPart(ctx, n, o)
 		if err != nil {
 			return d, fmt.Errorf("partition %d: %w", n, err)
@@ -142,6 +146,10 @@ func (d *daemon) openPart(ctx context.Context, number int, o daemonOptions) (p *
 	if err := intake.Verify(ctx, d.bus, st); err != nil {
 		return p, err
 	}
+	// Only now may anything be published: the stream is known to be the one.
+	if err := announceSetup(ctx, d.bus, d.setup, number); err != nil {
+		return p, err
+	}
 	epoch, err := st.Epoch()
 	if err != nil {
 		return p, err
@@ -157,46 +165,85 @@ func (d *daemon) openPart(ctx context.Context, number int, o daemonOptions) (p *
 		return p, err
 	}
 	p.mu.position = engine.Position()
-	p.intake, err = intake.Open(ctx, d.bus, d.setup, number, engine.Position(), func(m bus.Missing) {
-		d.log.Error().Int("partition", number).Uint64("from", m.From).Uint64("to", m.To).
-			Msg("messages were removed from the stream before they could be read")
-	})
-	if err != nil {
+	if err := d.openIntake(ctx, p); err != nil {
 		return p, err
 	}
 	p.loop = partition.New(engine, st, p.intake, partition.Options{
-		MaxBatch: o.maxBatch, Committed: p.committed, Full: d.full,
+		MaxBatch: o.maxBatch, Committed: func(position uint64) { d.committed(p, position) },
+		Full: func(ctx context.Context, err error) error { return d.full(ctx, p, err) },
 	})
 	p.ticker = intake.NewTicker(p.loop.Due, func(ctx context.Context) error {
+		if p.intake.Held() != nil {
+			return nil // it would only queue up behind what is held
+		}
 		_, err := d.bus.Publish(ctx, bus.Outgoing{Partition: number, Kind: bus.Tick})
 		return err
 	}, func(err error) { d.log.Error().Err(err).Msg("publishing a tick") })
 	return p, nil
 }
 
+// openIntake begins to read the partition's stream where the store stands.
+func (d *daemon) openIntake(ctx context.Context, p *part) error {
+	marks, err := p.store.Marks()
+	if err != nil {
+		return err
+	}
+	o := intake.Options{
+		After: p.mu.position, Stored: monitor.Beginning, Now: time.Now,
+		Gap:  func(m bus.Missing) { d.gap(p.number, m) },
+		Held: func(h *intake.Hold) { d.held(p.number, h) },
+	}
+	if len(marks) > 0 {
+		o.Stored = marks[0].Stored
+	}
+	p.intake, err = intake.Open(ctx, d.bus, d.setup, p.number, o)
+	return err
+}
+
+// busPatience is how long the bus may take to store a step before the try is
+// said to have failed.
+const busPatience = 15 * time.Second
+
 func (d *daemon) openOutlets(p *part, o daemonOptions, epoch uint64) error {
 	header := map[string][]string{"Tailbell-Owner-Epoch": {fmt.Sprint(epoch)}}
 	outlets := []outlet.Outlet{outlet.NewBus(d.setup.Name, func(ctx context.Context, direction, indicator, key string, event []byte) error {
+		ctx, cancel := context.WithTimeout(ctx, busPatience)
+		defer cancel()
 		_, err := d.bus.PublishAlert(ctx, p.number, direction, indicator, key, event, header)
 		return err
 	})}
 	if o.terminal != nil {
 		outlets = append(outlets, o.terminal)
 	}
+	for _, w := range d.setup.Outlets {
+		out, err := outlet.NewWebhook(outlet.WebhookOptions{
+			Name: w.Name, Deployment: d.setup.Name, URL: w.URL, SecretFile: w.SecretFile,
+			Header: http.Header(header), Now: time.Now,
+		})
+		if err != nil {
+			return err
+		}
+		outlets = append(outlets, out)
+	}
 	for _, out := range outlets {
 		if err := p.store.Outlets(store.FromOldest, out.Name()); err != nil {
 			return err
 		}
-		p.queues = append(p.queues, outlet.NewQueue(p.store, out, func(err error, pause time.Duration) {
-			d.log.Error().Err(err).Str("outlet", out.Name()).Dur("again_in", pause).Msg("delivering")
+		p.queues = append(p.queues, outlet.NewQueue(p.store, out, outlet.QueueOptions{
+			Random: rand.New(rand.NewPCG(rand.Uint64(), rand.Uint64())),
+			Failed: func(err error, pause time.Duration) {
+				d.log.Error().Err(err).Str("outlet", out.Name()).Dur("again_in", pause).Msg("delivering")
+			},
 		}))
 	}
 	return nil
 }
 
 // full waits before a commit that found no room is tried again.
-func (d *daemon) full(ctx context.Context, err error) error {
+func (d *daemon) full(ctx context.Context, p *part, err error) error {
 	d.log.Error().Err(err).Msg("intake stands still")
+	p.noRoom.Store(true)
+	d.troubles.set(troubleNoRoom, p.number, "the intake stands still: "+err.Error())
 	select {
 	case <-time.After(2 * time.Second):
 		return nil
@@ -206,7 +253,11 @@ func (d *daemon) full(ctx context.Context, err error) error {
 }
 
 // committed notes a commit and wakes what waits for one.
-func (p *part) committed(position uint64) {
+func (d *daemon) committed(p *part, position uint64) {
+	if p.noRoom.CompareAndSwap(true, false) {
+		d.log.Info().Int("partition", p.number).Msg("there is room again")
+		d.troubles.clear(troubleNoRoom, p.number)
+	}
 	p.mu.Lock()
 	if position > 0 {
 		p.mu.position = position
@@ -251,7 +302,7 @@ func (d *daemon) run(ctx context.Context) error {
 		})
 	}
 	for _, p := range d.parts {
-		start(p.loop.Run)
+		start(func(ctx context.Context) error { return d.explain(p, p.loop.Run(ctx)) })
 		for _, q := range p.queues {
 			start(q.Run)
 		}
@@ -264,48 +315,84 @@ func (d *daemon) run(ctx context.Context) error {
 	if err := context.Cause(ctx); err != nil && !errors.Is(err, context.Canceled) {
 		return err
 	}
-	return d.flush()
+	d.flush()
+	return nil
 }
 
+// explain says how far the stream differs from the store if that is what ended
+// the loop.
+func (d *daemon) explain(p *part, err error) error {
+	if !errors.Is(err, bus.ErrBeyondEnd) && !errors.Is(err, bus.ErrStreamReplaced) {
+		return err
+	}
+	ctx, cancel := context.WithTimeout(context.Background(), busPatience)
+	defer cancel()
+	diff, compareErr := intake.Compare(ctx, d.bus, p.store)
+	if compareErr != nil || diff == nil {
+		return err
+	}
+	return fmt.Errorf("partition %d: %w", p.number, diff)
+}
+
+// liveAgain is how long to wait before it is tried again to go live.
+const liveAgain = time.Second
+
 // goLive ends history time once the partitions have read what the stream held
-// at the start.
+// at the start. A bus that is away is waited for.
 func (d *daemon) goLive(ctx context.Context) error {
 	for _, p := range d.parts {
-		end, err := d.bus.EndOf(ctx, p.number)
-		if err == nil {
-			err = p.reach(ctx, end)
-		}
-		var history bool
-		if err == nil {
-			err = p.loop.Do(ctx, func(e *monitor.Engine) { history = e.InHistory() })
-		}
-		if err == nil && history {
-			_, err = d.bus.Publish(ctx, bus.Outgoing{
-				Partition: p.number, Kind: bus.Tick, Header: map[string][]string{wire.LiveHeader: {"1"}},
-			})
-		}
-		if err != nil {
-			if ctx.Err() != nil {
-				return nil
+		for ctx.Err() == nil {
+			err := d.goLivePart(ctx, p)
+			if err == nil {
+				d.log.Info().Int("partition", p.number).Msg("live")
+				break
 			}
-			return fmt.Errorf("going live: %w", err)
+			if ctx.Err() == nil {
+				d.log.Error().Err(err).Int("partition", p.number).Msg("going live")
+			}
+			select {
+			case <-time.After(liveAgain):
+			case <-ctx.Done():
+			}
 		}
-		d.log.Info().Int("partition", p.number).Msg("live")
 	}
 	return nil
 }
 
-// flush delivers what still waits; an outlet that is down keeps its steps.
-func (d *daemon) flush() error {
+func (d *daemon) goLivePart(ctx context.Context, p *part) error {
+	end, err := d.bus.EndOf(ctx, p.number)
+	if err != nil {
+		return err
+	}
+	if err := p.reach(ctx, end); err != nil {
+		return err
+	}
+	var history bool
+	if err := p.loop.Do(ctx, func(e *monitor.Engine) { history = e.InHistory() }); err != nil || !history {
+		return err
+	}
+	_, err = d.bus.Publish(ctx, bus.Outgoing{
+		Partition: p.number, Kind: bus.Tick, Header: map[string][]string{wire.LiveHeader: {"1"}},
+	})
+	return err
+}
+
+// flush delivers what still waits, each outlet beside the others. An outlet
+// that is down keeps its steps: they are delivered at the next start.
+func (d *daemon) flush() {
 	ctx, cancel := context.WithTimeout(context.Background(), 5*time.Second)
 	defer cancel()
-	var errs []error
+	var flushing sync.WaitGroup
 	for _, p := range d.parts {
 		for _, q := range p.queues {
-			errs = append(errs, q.Flush(ctx))
+			flushing.Go(func() {
+				if err := q.Flush(ctx); err != nil {
+					d.log.Error().Err(err).Str("outlet", q.Name()).Int("partition", p.number).Msg("steps stay undelivered for now")
+				}
+			})
 		}
 	}
-	return errors.Join(errs...)
+	flushing.Wait()
 }
 
 // close lets go of everything.
