@@ -1,0 +1,184 @@
+package estimate
+
+import (
+	"math"
+	"slices"
+
+	"tailbell/config"
+	"tailbell/exact"
+)
+
+// Share is how often windows held from Least to Most events.
+type Share struct {
+	Least int64 `json:"least"`
+	// Most is the greatest count, or -1 for no end.
+	Most int64 `json:"most"`
+	// Seen is the number of windows, Chance what the plain model expects at
+	// each series' own rate, Spread what it expects with the estimated spread.
+	Seen   float64 `json:"seen"`
+	Chance float64 `json:"chance"`
+	Spread float64 `json:"spread,omitempty"`
+}
+
+// Windows is the distribution of the counts in rolling windows, beside what
+// the models say.
+type Windows struct {
+	Window string `json:"window"`
+	// Count is how many windows there were; of a great many every so-many-th
+	// is taken.
+	Count int `json:"count"`
+	// Phi is the spread used for Share.Spread: that of counts of this length;
+	// 1 where there is no more than chance gives.
+	Phi    float64 `json:"phi"`
+	Shares []Share `json:"shares"`
+	// Past is how many windows lay at or under the p limit of the indicator,
+	// in the tails it watches, if the rates were known; PastChance what the
+	// plain model expects.
+	Past       int     `json:"past"`
+	PastChance float64 `json:"past_chance"`
+}
+
+// rolling is the content of one window.
+type rolling struct {
+	events   int64
+	exposure float64
+	rate     float64
+}
+
+const maxWindows = 4000
+
+// rollingWindows returns the windows of all series whose slots are all known.
+func (h *History) rollingWindows(w config.Window) []rolling {
+	var all []rolling
+	for i := range h.Series {
+		s := &h.Series[i]
+		exposure := s.exposure()
+		if exposure == 0 {
+			continue
+		}
+		rate := float64(s.events()) / exposure
+		for from := 0; from+w.Slots <= len(s.Slots); from++ {
+			to := from + w.Slots - 1
+			if s.Slots[to].Number-s.Slots[from].Number != int64(w.Slots-1) {
+				continue
+			}
+			r := rolling{rate: rate}
+			for _, slot := range s.Slots[from : to+1] {
+				r.events += slot.Events
+				r.exposure += slot.Exposure
+			}
+			all = append(all, r)
+		}
+	}
+	if every := (len(all) + maxWindows - 1) / maxWindows; every > 1 {
+		kept := all[:0]
+		for i := 0; i < len(all); i += every {
+			kept = append(kept, all[i])
+		}
+		all = kept
+	}
+	return all
+}
+
+type tailLaw interface {
+	Upper(k int64) float64
+	Lower(k int64) float64
+	CriticalUpper(limit float64) (k int64, size float64, ok bool)
+	CriticalLower(limit float64) (k int64, size float64, ok bool)
+}
+
+func (h *History) lawAt(rate, exposure float64) tailLaw {
+	if h.proportion() {
+		return exact.NewBinomial(int64(math.Round(exposure)), rate)
+	}
+	return exact.Poisson{Rate: rate, Exposure: exposure}
+}
+
+// spreadLaw is the law with variance phi times the plain one.
+func (h *History) spreadLaw(rate, exposure, phi float64) tailLaw {
+	n := math.Round(exposure)
+	switch {
+	case phi <= 1 || rate <= 0 || rate >= 1 && h.proportion() || n <= phi && h.proportion():
+		return h.lawAt(rate, exposure)
+	case h.proportion():
+		size := (n - phi) / (phi - 1)
+		return exact.BetaBinomial{N: int64(n), A: size * rate, B: size * (1 - rate)}
+	}
+	return exact.NewNegativeBinomial(rate, exposure, phi)
+}
+
+// windows compares the counts of one window with the models; nil if there are
+// none.
+func (h *History) windows(w config.Window, phi float64) *Windows {
+	all := h.rollingWindows(w)
+	if len(all) == 0 {
+		return nil
+	}
+	x := &Windows{Window: w.Name, Count: len(all), Phi: max(phi, 1)}
+	if math.IsNaN(phi) {
+		x.Phi = 1
+	}
+	x.Shares = bins(all)
+	for _, r := range all {
+		h.addWindow(x, r)
+	}
+	return x
+}
+
+func (h *History) addWindow(x *Windows, r rolling) {
+	plain, spread := h.lawAt(r.rate, r.exposure), h.spreadLaw(r.rate, r.exposure, x.Phi)
+	for i := range x.Shares {
+		b := &x.Shares[i]
+		if r.events >= b.Least && (b.Most < 0 || r.events <= b.Most) {
+			b.Seen++
+		}
+		b.Chance += between(plain, b.Least, b.Most)
+		b.Spread += between(spread, b.Least, b.Most)
+	}
+	in := h.Indicator
+	if k, size, ok := plain.CriticalUpper(in.PLimit); in.Upper && ok {
+		x.PastChance += size
+		if r.events >= k {
+			x.Past++
+		}
+	}
+	if k, size, ok := plain.CriticalLower(in.PLimit); in.Lower && ok {
+		x.PastChance += size
+		if r.events <= k {
+			x.Past++
+		}
+	}
+}
+
+func between(law tailLaw, least, most int64) float64 {
+	switch {
+	case most < 0:
+		return law.Upper(least)
+	case least == 0:
+		return law.Lower(most)
+	}
+	return max(0, law.Lower(most)-law.Lower(least-1))
+}
+
+// bins divides the counts into at most some two dozen equal steps.
+func bins(all []rolling) []Share {
+	counts := make([]int64, len(all))
+	for i, r := range all {
+		counts[i] = r.events
+	}
+	slices.Sort(counts)
+	low, high := counts[0], counts[len(counts)-1]+1
+	if low < 24 {
+		low = 0
+	}
+	width := (high-low)/24 + 1
+	var shares []Share
+	for k := low; k < high; k += width {
+		shares = append(shares, Share{Least: k, Most: k + width - 1})
+	}
+	if low > 0 {
+		shares[0].Least = 0
+	}
+	shares = append(shares, Share{Least: shares[len(shares)-1].Most + 1, Most: -1})
+	return shares
+}
