@@ -77,6 +77,9 @@ func stirling(k float64) float64 {
 // stirlingSeries is the same for real k >= 30 or so.
 func stirlingSeries(k float64) float64 {
 	r := 1 / k
+	if k > 1e5 { // the next term is under 3e-18
+		return r * (1.0 / 12)
+	}
 	z := float64(r * r)
 	c := math.FMA(z, -691.0/360360, 1.0/1188)
 	c = math.FMA(-z, c, 1.0/1680)

@@ -85,10 +85,10 @@ func shortPanel(c, a, su, b, sv, t float64) float64 {
 func poissonUpperRatio(k float64, mu dd) float64 {
 	if k > directTerms {
 		c := dd{k - 1, 0}.add(mu.neg()).float()
+		if k >= uniformFrom*uniformFrom && c < uniformTo*k {
+			return poissonUniform(false, k, mu)
+		}
 		if t := reach(c, k-1); k*t > directTerms {
-			if k >= uniformFrom*uniformFrom {
-				return poissonUniform(false, k, mu)
-			}
 			return k * panel(c, k-1, -1, 0, 0, min(t, 1))
 		}
 	}
@@ -114,10 +114,10 @@ func poissonUpperRatio(k float64, mu dd) float64 {
 func poissonLowerRatio(k float64, mu dd) float64 {
 	if k > directTerms {
 		c := mu.addFloat(-k).float()
+		if k >= uniformFrom*uniformFrom && c < uniformTo*k {
+			return 1 + poissonUniform(true, k, mu)
+		}
 		if t := reach(c, k); mu.hi*t > directTerms {
-			if k >= uniformFrom*uniformFrom {
-				return 1 + poissonUniform(true, k, mu)
-			}
 			return mu.hi * panel(c, k, 1, 0, 0, t)
 		}
 	}
@@ -135,14 +135,14 @@ func poissonLowerRatio(k float64, mu dd) float64 {
 
 // binomialUpperRatio is P(X >= k)/P(X = k) for 1 <= k <= n, k above np or near it.
 func binomialUpperRatio(k, n float64, p, q dd) float64 {
+	if k*((n-k)/n) >= uniformFrom*uniformFrom && k-n*p.hi < uniformTo*k*q.hi {
+		return binomialUniform(k, n, p)
+	}
 	w := p.div(q)
 	if min(k, n-k) > directTerms {
 		c := q.mulFloat(k-1).add(p.mulFloat(n-k).neg()).float() / q.hi
 		s := (k - 1) + (n-k)*w.hi*w.hi
 		if t := reach(c, s); k*t > directTerms {
-			if k*((n-k)/n) >= uniformFrom*uniformFrom {
-				return binomialUniform(k, n, p)
-			}
 			return k * panel(c, k-1, -1, n-k, w.hi, min(t, 1))
 		}
 	}

@@ -11,12 +11,18 @@ import "math"
 //
 //	ratio = sd [E sqrt(pi/2) erfcx(|z|/sqrt 2) -+ (gamma0(z) + gamma1(z) + ...)]
 //
-// with E from Stirling's errors, exactly, gamma0 = 1/v - 1/z - kappa, and gamma(m+1) =
+// with E = exp(e) from Stirling's errors, exactly, gamma0 = 1/v - 1/z - kappa, and gamma(m+1) =
 // (gamma(m)' - gamma(m)'(0))/z from f's Taylor series. With sd >= uniformFrom what is left out is
 // under 1e-17.
 
 // uniformFrom is the standard deviation from which the expansion is taken.
 const uniformFrom = 400
+
+// uniformTo is how far from the mean, relative to it, the expansion is taken.
+const uniformTo = 0.1
+
+// briefFrom is the standard deviation from which seven terms of the series do.
+const briefFrom = 1000
 
 // erfcx is exp(y^2) erfc(y) for y >= 0, and for y < 0 not far below.
 func erfcx(y float64) float64 {
@@ -37,15 +43,15 @@ func erfcx(y float64) float64 {
 	return math.FMA(odd, u, even)
 }
 
-// wave is the Taylor series of z/v, up to z^11.
-func wave(alpha, beta float64) (w [12]float64) {
+// wave is the Taylor series of z/v: 2 halves terms, halves up to 6.
+func wave(alpha, beta float64, halves int) (w [12]float64) {
 	var a, b [6]float64 // powers of alpha^2 and beta
 	a[0], b[0] = 1, 1
-	for i := 1; i < len(a); i++ {
+	for i := 1; i < halves; i++ {
 		a[i] = float64(a[i-1] * float64(alpha*alpha))
 		b[i] = float64(b[i-1] * beta)
 	}
-	for h := 0; h < len(a); h++ {
+	for h := range halves {
 		even, odd := &waveTable[2*h], &waveTable[2*h+1]
 		e, o := float64(even[0]*a[h]), float64(odd[0]*a[h])
 		if beta != 0 {
@@ -68,7 +74,11 @@ var waveFactor = [12][3]float64{
 // uniform gives the ratio: y is |z|/sqrt 2, z has the sign of v, the upper tail has them negative
 // (or next to 0).
 func uniform(lower bool, sd, e, y, v, alpha, beta, kappa float64) float64 {
-	w := wave(alpha, beta)
+	halves := 6
+	if sd >= briefFrom {
+		halves = 4
+	}
+	w := wave(alpha, beta, halves)
 	z := math.Copysign(math.Sqrt2*y, v)
 	w[1] -= kappa
 	var g0 float64
@@ -79,20 +89,27 @@ func uniform(lower bool, sd, e, y, v, alpha, beta, kappa float64) float64 {
 			g0 = math.FMA(g0, z, w[j])
 		}
 	}
-	var g1, g2, g3 float64
-	for j := 11; j >= 3; j-- { // gamma1 = sum over j of (j-1) w[j] z^(j-3), and so on
+	// gamma1 = sum over j of (j-1) w[j] z^(j-3), and so on
+	top := 2*halves - 1
+	var g1, g2 float64
+	for j := top; j >= 3; j-- {
 		g1 = math.FMA(g1, z, float64(waveFactor[j][0]*w[j]))
 	}
-	for j := 11; j >= 5; j-- {
+	for j := top; j >= 5; j-- {
 		g2 = math.FMA(g2, z, float64(waveFactor[j][1]*w[j]))
 	}
-	for j := 11; j >= 7; j-- {
-		g3 = math.FMA(g3, z, float64(waveFactor[j][2]*w[j]))
+	g3 := waveFactor[7][2] * w[7]
+	if halves > 4 {
+		g3 = 0
+		for j := top; j >= 7; j-- {
+			g3 = math.FMA(g3, z, float64(waveFactor[j][2]*w[j]))
+		}
 	}
 	g := g0 + (g1 + (g2 + g3))
 	if y = math.Copysign(y, v); !lower {
 		g, y = -g, -y
 	}
+	e = math.FMA(e, math.FMA(e, 0.5, 1), 1) // exp of under 1e-6
 	return sd * math.FMA(e*math.Sqrt(math.Pi/2), erfcx(y), g)
 }
 
@@ -101,7 +118,7 @@ func poissonUniform(lower bool, k float64, mu dd) float64 {
 	d := mu.addFloat(-k).float()
 	sd := math.Sqrt(k)
 	y := math.Sqrt(-k * logLess1(d/k))
-	return uniform(lower, sd, expTwo(stirling(k), 0), y, d/sd, 1/sd, 0, 0)
+	return uniform(lower, sd, stirling(k), y, d/sd, 1/sd, 0, 0)
 }
 
 // binomialUniform is P(X >= k)/P(X = k).
@@ -110,6 +127,6 @@ func binomialUniform(k, n float64, p dd) float64 {
 	d := p.mulFloat(n).addFloat(-k).float()
 	sd := math.Sqrt(k * (m / n))
 	y := math.Sqrt(-k*logLess1(d/k) - m*logLess1(-d/m))
-	e := expTwo(stirling(k)+stirling(m)-stirling(n), 0)
+	e := stirling(k) + stirling(m) - stirling(n)
 	return uniform(false, sd, e, y, d/sd, (m-k)/(n*sd), 1/n, k/(n*sd))
 }
