@@ -23,6 +23,12 @@ func Amount(n int64, nouns string) string {
 // P writes the p of a look as the sentences do.
 func P(e *life.Evidence) string { return pvalue(log10p(e)) }
 
+// Opened writes when an alert was opened, in its zone, for a list.
+func Opened(r *life.Record) string {
+	at := r.Opened.In(zoneOf(r))
+	return at.Format("2006-01-02 ") + clock(at)
+}
+
 // Expected writes the expected number of events of a look as the sentences do.
 func Expected(e *life.Evidence) string { return expected(e) }
 

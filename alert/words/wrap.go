@@ -37,11 +37,12 @@ func wrap(text string, width int, indent, hang string) string {
 	return b.String()
 }
 
-// unbroken splits text into words, a per cent sign kept with its number.
+// unbroken splits text into words, a per cent sign kept with its number, and
+// what is equal with what it equals.
 func unbroken(text string) []string {
 	var words []string
 	for _, w := range strings.Fields(text) {
-		if n := len(words); n > 0 && strings.HasPrefix(w, "%") {
+		if n := len(words); n > 0 && (strings.HasPrefix(w, "%") || w == "=" || strings.HasSuffix(words[n-1], " =")) {
 			words[n-1] += " " + w
 			continue
 		}

@@ -1,6 +1,7 @@
 package history
 
 import (
+	"errors"
 	"fmt"
 	"path/filepath"
 	"strings"
@@ -36,7 +37,7 @@ func ParseFormat(name string) (Format, error) {
 			return f, nil
 		}
 	}
-	return 0, fmt.Errorf("no format %q; it is auto, csv or ndjson", name)
+	return 0, fmt.Errorf("%q is no format; it is auto, csv or ndjson", name)
 }
 
 // of returns the format of a file.
@@ -51,7 +52,7 @@ func (f Format) of(path string) (Format, error) {
 		return NDJSON, nil
 	}
 	if path == stdin {
-		return 0, fmt.Errorf("standard input has no ending that tells its format; say csv or ndjson")
+		return 0, errors.New("standard input has no ending that tells its format; say --format csv or --format ndjson")
 	}
-	return 0, fmt.Errorf("%s: the ending %q tells no format; say csv or ndjson", path, filepath.Ext(path))
+	return 0, fmt.Errorf("%s: the ending %q tells no format; say --format csv or --format ndjson", path, filepath.Ext(path))
 }

@@ -17,6 +17,8 @@
 // decodes the very bytes that a publisher sends, with the header time that it
 // gives them.
 //
+// Errors and faults name the options of the commands feed and replay.
+//
 // Caveat: all entries are held in memory, about 250 bytes each.
 package history
 

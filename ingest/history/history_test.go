@@ -134,7 +134,7 @@ func TestBadRows(t *testing.T) {
 	}
 	f := h.Faults[0]
 	if got, want := fmt.Sprintf("%s %q", f.String()[strings.LastIndex(f.String(), "x.csv"):], f.Raw),
-		`x.csv:3: bad_events: events is "1,5"; it must be a plain number such as 12 or 0.5 "a/b,2026-03-02T00:00:00Z,\"1,5\","`; got != want {
+		`x.csv:3: bad_events: "1,5" is no number; events is a whole number such as 0 or 12 "a/b,2026-03-02T00:00:00Z,\"1,5\","`; got != want {
 		t.Errorf("%s\nwant %s", got, want)
 	}
 	if last := h.Faults[len(h.Faults)-1]; len(last.Raw) != maxFaultBytes {

@@ -9,6 +9,11 @@ import (
 	"tailbell/monitor"
 )
 
+// ParseTime reads a time as the columns start, end, at and reported have it:
+// RFC 3339 with an offset; or, if zone is not nil, a local date-time or date,
+// which is its first moment.
+func ParseTime(text string, zone *time.Location) (monitor.Instant, error) { return moment(text, zone) }
+
 // moment reads a time: RFC 3339 with an offset; or, with a zone, a local
 // date-time (2026-03-02T14:30, 2026-03-02 14:30:00) or a local date, which is
 // its first moment.
@@ -22,7 +27,7 @@ func moment(text string, zone *time.Location) (monitor.Instant, error) {
 		return 0, err
 	}
 	if zone == nil {
-		return 0, fmt.Errorf("%q has no offset; add it (2026-03-02T14:30:00+01:00), or say in which zone times are local", text)
+		return 0, fmt.Errorf("%q has no offset; add it (2026-03-02T14:30:00+01:00), or name the zone in which times are local with --zone", text)
 	}
 	if isDate {
 		return firstMoment(wall, zone), nil

@@ -113,7 +113,7 @@ func (t *table) addColumn(written string) error {
 	}
 	kind, known := columnKinds[name]
 	if !known {
-		return fmt.Errorf("the column %q is not known; the columns are %s; rename it, or ask for it to be ignored", written, columnNames)
+		return fmt.Errorf("the column %q is not known; the columns are %s; rename it, or pass over it with --ignore %s", written, columnNames, name)
 	}
 	if slices.ContainsFunc(t.columns, func(c column) bool { return c.name == name }) {
 		return fmt.Errorf("the column %s is there twice", name)
@@ -130,11 +130,11 @@ func (t *table) checkColumns(number int) error {
 	t.fixed = !t.has("series")
 	switch {
 	case t.fixed && t.opts.Series == "":
-		return fmt.Errorf("line %d: there is no column series; add it, or say which series the file is of", number)
+		return fmt.Errorf("line %d: there is no column series; add it, or name the file's series with --series", number)
 	case !t.has("date") && !t.has("at") && !t.has("start") && !t.has("retracted"):
 		return fmt.Errorf("line %d: no column says when; add date, at, or start and end", number)
 	case t.has("date") && t.opts.Zone == nil:
-		return fmt.Errorf("line %d: the column date needs to know in which zone days begin; say which", number)
+		return fmt.Errorf("line %d: the column date needs to know in which zone days begin; name it with --zone, e.g. --zone UTC", number)
 	}
 	return nil
 }
@@ -218,7 +218,7 @@ func (t *table) cell(c column, text string) (monitor.Reason, string) {
 		t.json = wire.AppendText(t.json, text)
 	case numberColumn:
 		if !isNumber(text) {
-			return numberReason(c.name), fmt.Sprintf("%s is %q; it must be a plain number such as 12 or 0.5", c.name, text)
+			return numberReason(c.name), fmt.Sprintf("%q is no number; %s is %s", text, c.name, numberLike(c.name))
 		}
 		t.field(c.name)
 		t.json = append(t.json, text...)
@@ -252,6 +252,13 @@ func (t *table) cell(c column, text string) (monitor.Reason, string) {
 func (t *table) time(name string, at monitor.Instant) {
 	t.field(name)
 	t.json = append(wire.AppendTime(append(t.json, '"'), at), '"')
+}
+
+func numberLike(column string) string {
+	if column == "exposure" {
+		return "a plain number such as 12 or 0.5, with a point and without thousands marks"
+	}
+	return "a whole number such as 0 or 12"
 }
 
 func numberReason(column string) monitor.Reason {
