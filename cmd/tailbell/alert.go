@@ -1,11 +1,16 @@
 package main
 
 import (
+	"context"
 	"encoding/json"
 	"errors"
 	"fmt"
 	"io"
+	"os"
 	"os/user"
+	"slices"
+	"strconv"
+	"strings"
 	"text/tabwriter"
 
 	"github.com/spf13/cobra"
@@ -22,13 +27,15 @@ func newAlertCommand() *cobra.Command {
 	c := &cobra.Command{
 		Use:   "alert",
 		Short: "List and show alerts, and say what was done about them",
-		Args:  cobra.NoArgs,
 		RunE:  func(c *cobra.Command, _ []string) error { return c.Help() },
 	}
 	c.AddCommand(newAlertListCommand(), newAlertShowCommand(),
-		newActCommand(monitor.Acknowledge, "Say that somebody has seen an alert and deals with it"),
-		newActCommand(monitor.Close, "Close an alert by hand, with the reason"),
-		newActCommand(monitor.Note, "Write a note on an alert"))
+		newActCommand(monitor.Acknowledge, "Say that somebody has seen an alert and deals with it",
+			"Says that somebody has seen the alert and deals with it. An alert that has returned\nis closed by it; one that still signals closes once it has returned."),
+		newActCommand(monitor.Close, "Close an alert by hand, with the reason",
+			"Closes the alert by hand, with the reason."),
+		newActCommand(monitor.Note, "Write a note on an alert",
+			"Writes a note on an alert that is not done. Its condition does not change."))
 	return c
 }
 
@@ -39,9 +46,14 @@ func newAlertListCommand() *cobra.Command {
 	c := &cobra.Command{
 		Use:   "list",
 		Short: "List the alerts that are not done (--all: every one), newest first",
-		Args:  cobra.NoArgs,
+		Long: `Lists the alerts that are not done (--all: closed and withdrawn ones too), newest
+first. Window, events, expected events and p are those of an alert's strongest look;
+times are in its indicator's zone. Works without a running daemon too.`,
 		RunE: func(c *cobra.Command, _ []string) error {
-			var records []life.Record
+			if req.Max < 1 {
+				return &usageError{fmt.Errorf("--max %d: it must be at least 1", req.Max)}
+			}
+			records := []life.Record{}
 			err := askOrLook(c.Context(), path, verbAlerts, req, &records, func(st *store.Store) error {
 				rows, err := listAlerts(st, req)
 				records = append(records, rows...)
@@ -50,45 +62,60 @@ func newAlertListCommand() *cobra.Command {
 			if err != nil {
 				return err
 			}
+			// Each partition gave its newest.
+			slices.SortStableFunc(records, func(a, b life.Record) int { return b.Opened.Compare(a.Opened) })
+			records = records[:min(len(records), req.Max)]
 			if asJSON {
 				return writeJSON(c.OutOrStdout(), records)
 			}
-			return tabulate(c.OutOrStdout(), records)
+			return writeAlerts(c.OutOrStdout(), records, req)
 		},
 	}
 	addConfigFlag(c, &path)
 	c.Flags().BoolVar(&req.All, "all", false, "closed and withdrawn alerts too")
 	c.Flags().StringVar(&req.Series, "series", "", "only this `SERIES`")
-	c.Flags().IntVar(&req.Max, "max", 200, "at most so many")
+	c.Flags().IntVar(&req.Max, "max", 200, "at most so `MANY`")
 	c.Flags().BoolVar(&asJSON, "json", false, "as JSON")
 	return c
 }
 
+// tabulate lists alerts with the numbers of their strongest look, times in the
+// zone of their indicator.
 func tabulate(w io.Writer, records []life.Record) error {
-	if len(records) == 0 {
-		return say(w, "No alerts.")
-	}
 	t := tabwriter.NewWriter(w, 0, 0, 2, ' ', 0)
-	rows := [][]any{{"ALERT", "OPENED", "CONDITION", "TAIL", "EVENTS", "EXPECTED", "P", "SERIES"}}
+	rows := [][]string{{"ALERT", "OPENED", "CONDITION", "TAIL", "WINDOW", "EVENTS", "EXPECTED", "P", "SERIES"}}
 	for i := range records {
 		r := &records[i]
-		rows = append(rows, []any{
-			r.ID, r.Opened.Format("2006-01-02 15:04Z"), r.Condition, r.Direction, r.Worst.Events,
-			fmt.Sprintf("%.2f", r.Worst.Expected), fmt.Sprintf("%.2g", r.Worst.P), r.Series,
+		rows = append(rows, []string{
+			r.ID, words.Opened(r), string(r.Condition), string(r.Direction), r.Worst.Window,
+			strconv.FormatInt(r.Worst.Events, 10), words.Expected(&r.Worst), words.P(&r.Worst), r.Series,
 		})
 	}
 	for _, row := range rows {
-		for i, cell := range row {
-			end := "\t"
-			if i == len(row)-1 {
-				end = "\n"
-			}
-			if _, err := fmt.Fprint(t, cell, end); err != nil {
-				return err
-			}
+		if _, err := fmt.Fprintln(t, strings.Join(row, "\t")); err != nil {
+			return err
 		}
 	}
 	return t.Flush()
+}
+
+// writeAlerts lists alerts for people.
+func writeAlerts(w io.Writer, records []life.Record, req alertsRequest) error {
+	switch {
+	case len(records) == 0 && req.Series != "":
+		return say(w, "No alerts of the series %s.", req.Series)
+	case len(records) == 0 && !req.All:
+		return say(w, "No alerts that are not done.")
+	case len(records) == 0:
+		return say(w, "No alerts.")
+	}
+	if err := tabulate(w, records); err != nil {
+		return err
+	}
+	if len(records) >= req.Max {
+		return say(w, "Only the newest %d are shown: --max shows more.", req.Max)
+	}
+	return nil
 }
 
 func newAlertShowCommand() *cobra.Command {
@@ -97,7 +124,6 @@ func newAlertShowCommand() *cobra.Command {
 	c := &cobra.Command{
 		Use:   "show ALERT",
 		Short: "Show one alert: the sentence, the numbers behind it, and its history",
-		Args:  cobra.ExactArgs(1),
 		RunE: func(c *cobra.Command, args []string) error {
 			var record life.Record
 			found := false
@@ -118,7 +144,8 @@ func newAlertShowCommand() *cobra.Command {
 			if asJSON {
 				return writeJSON(c.OutOrStdout(), record)
 			}
-			return say(c.OutOrStdout(), "%s", words.Record(&record, widthOf(c.OutOrStdout())))
+			_, err = io.WriteString(c.OutOrStdout(), words.Record(&record, widthOf(c.OutOrStdout())))
+			return err
 		},
 	}
 	addConfigFlag(c, &path)
@@ -126,40 +153,91 @@ func newAlertShowCommand() *cobra.Command {
 	return c
 }
 
-func newActCommand(kind monitor.ActKind, short string) *cobra.Command {
-	var path string
-	act := monitor.Act{Kind: kind}
+// acting holds the options of a command that acts on an alert.
+type acting struct {
+	path string
+	act  monitor.Act
+}
+
+func newActCommand(kind monitor.ActKind, short, long string) *cobra.Command {
+	a := acting{act: monitor.Act{Kind: kind}}
 	c := &cobra.Command{
 		Use:   kind.String() + " ALERT",
 		Short: short,
-		Args:  cobra.ExactArgs(1),
+		Long:  long + "\n\nActs go through the stream, so the daemon must run. Who and why are kept with the alert.",
 		RunE: func(c *cobra.Command, args []string) error {
-			act.Alert = args[0]
-			setup, err := loadSetup(path)
-			if err != nil {
-				return err
+			a.act.Alert = args[0]
+			if err := a.check(); err != nil {
+				return &usageError{err}
 			}
-			var record life.Record
-			err = ask(c.Context(), setup, verbAct, actRequest{wire.EncodeAct(nil, &act)}, &record)
-			if errors.Is(err, bus.ErrNoDaemon) {
-				return fmt.Errorf("%w: acts go through the stream: start tailbell run first", err)
-			}
-			if err != nil {
-				return err
-			}
-			return say(c.OutOrStdout(), "Alert %s is now %s.", record.ID, record.Condition)
+			return a.run(c.Context(), c.OutOrStdout())
 		},
 	}
-	addConfigFlag(c, &path)
-	c.Flags().StringVar(&act.By, "by", loginName(), "the `NAME` of who does it")
-	c.Flags().StringVar(&act.Why, "why", "", "the reason, or the note's text")
+	addConfigFlag(c, &a.path)
+	c.Flags().StringVar(&a.act.By, "by", "", "the `NAME` of who does it; else what "+byVariable+" says, else the login name, unless that is root")
+	why := map[monitor.ActKind]string{
+		monitor.Acknowledge: "a `TEXT` to go with it",
+		monitor.Close:       "the reason, a `TEXT`; needed",
+		monitor.Note:        "the note's `TEXT`; needed",
+	}
+	c.Flags().StringVar(&a.act.Why, "why", "", why[kind])
 	return c
 }
 
-// loginName is who runs the command, "" if that is not known.
+// byVariable names who acts where --by does not.
+const byVariable = "TAILBELL_BY"
+
+// check completes the act, and tells what is missing.
+func (a *acting) check() error {
+	if a.act.By = strings.TrimSpace(a.act.By); a.act.By == "" {
+		a.act.By = strings.TrimSpace(os.Getenv(byVariable))
+	}
+	if a.act.By == "" {
+		a.act.By = loginName()
+	}
+	a.act.Why = strings.TrimSpace(a.act.Why)
+	switch {
+	case a.act.By == "":
+		return errors.New("--by is missing: say who does it, by --by NAME or in " + byVariable)
+	case a.act.Why == "" && a.act.Kind == monitor.Close:
+		return errors.New("--why is missing: closing an alert needs a reason")
+	case a.act.Why == "" && a.act.Kind == monitor.Note:
+		return errors.New("--why is missing: it is the note's text")
+	}
+	return nil
+}
+
+func (a *acting) run(ctx context.Context, w io.Writer) error {
+	setup, err := loadSetup(a.path)
+	if err != nil {
+		return err
+	}
+	var record life.Record
+	err = ask(ctx, setup, verbAlert, a.act.Alert, &record)
+	if errors.Is(err, bus.ErrNoDaemon) {
+		return fmt.Errorf("acts go through the stream: %w", sayNeverRan(setup, err))
+	}
+	if err != nil {
+		return err
+	}
+	if record.Done() {
+		return fmt.Errorf("alert %s is %s already: nothing was done", record.ID, record.Condition)
+	}
+	err = ask(ctx, setup, verbAct, actRequest{wire.EncodeAct(nil, &a.act)}, &record)
+	if err != nil {
+		return err
+	}
+	if a.act.Kind == monitor.Note {
+		return say(w, "Noted on alert %s (%s).", record.ID, record.Condition)
+	}
+	return say(w, "Alert %s is now %s.", record.ID, record.Condition)
+}
+
+// loginName is who runs the command; "" if that is not known, or everybody's
+// root.
 func loginName() string {
 	u, err := user.Current()
-	if err != nil {
+	if err != nil || u.Uid == "0" {
 		return ""
 	}
 	return u.Username

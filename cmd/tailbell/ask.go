@@ -4,6 +4,8 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"io/fs"
+	"os"
 	"time"
 
 	"tailbell/config"
@@ -15,7 +17,8 @@ import (
 // askTime is how long a command waits for the daemon.
 const askTime = 15 * time.Second
 
-// ask asks the daemon that runs under the set-up.
+// ask asks the daemon that runs under the set-up. The error is a
+// bus.ErrNoDaemon if none does.
 func ask(ctx context.Context, setup *config.Setup, verb string, arg, result any) (err error) {
 	ctx, cancel := context.WithTimeout(ctx, askTime)
 	defer cancel()
@@ -24,7 +27,29 @@ func ask(ctx context.Context, setup *config.Setup, verb string, arg, result any)
 		return err
 	}
 	defer func() { err = errors.Join(err, b.Close()) }()
-	return control.Call(ctx, b, verb, arg, result)
+	err = control.Call(ctx, b, verb, arg, result)
+	if setup.Bus.URL != "" && unanswered(err) {
+		// A remote bus is there without a daemon too.
+		return fmt.Errorf("%w for %s on its remote bus", bus.ErrNoDaemon, setup.Name)
+	}
+	return err
+}
+
+// unanswered reports whether nobody on the bus answers the verb.
+func unanswered(err error) bool {
+	var answer *control.Error
+	return errors.As(err, &answer) && answer.Code == control.NoAnswer
+}
+
+// sayNeverRan says of a daemon that does not run if it never did.
+func sayNeverRan(setup *config.Setup, err error) error {
+	if !errors.Is(err, bus.ErrNoDaemon) {
+		return err
+	}
+	if _, statErr := os.Stat(storePath(setup, 0)); errors.Is(statErr, fs.ErrNotExist) {
+		return fmt.Errorf("nothing has run yet in %s: tailbell run starts the daemon", setup.Folder)
+	}
+	return fmt.Errorf("%w: tailbell run starts it", err)
 }
 
 // lookAside reads what a verb would tell from the stores of a daemon that does
@@ -32,8 +57,15 @@ func ask(ctx context.Context, setup *config.Setup, verb string, arg, result any)
 func lookAside(setup *config.Setup, use func(*store.Store) error) (err error) {
 	for n := range setup.Partitions {
 		st, err := store.OpenReadOnly(storePath(setup, n), store.Options{})
+		if errors.Is(err, fs.ErrNotExist) {
+			return sayNeverRan(setup, bus.ErrNoDaemon)
+		}
 		if err != nil {
 			return fmt.Errorf("no daemon runs, and its store can't be read: %w", err)
+		}
+		if found, want := st.Identity(), identityOf(setup, n); found != want {
+			err = fmt.Errorf("the store in %s holds %s, wanted is %s: %w", setup.Folder, found, want, store.ErrIdentity)
+			return errors.Join(err, st.Close())
 		}
 		err = errors.Join(use(st), st.Close())
 		if err != nil {

@@ -16,7 +16,6 @@ func newConfigCommand() *cobra.Command {
 	c := &cobra.Command{
 		Use:   "config",
 		Short: "Print a sample set-up, check one, or print the schema of the data",
-		Args:  cobra.NoArgs,
 		RunE:  func(c *cobra.Command, _ []string) error { return c.Help() },
 	}
 	c.AddCommand(newConfigSampleCommand(), newConfigCheckCommand(), newConfigSchemaCommand())
@@ -27,7 +26,6 @@ func newConfigSampleCommand() *cobra.Command {
 	return &cobra.Command{
 		Use:   "sample",
 		Short: "Print a commented set-up to begin with",
-		Args:  cobra.NoArgs,
 		RunE: func(c *cobra.Command, _ []string) error {
 			_, err := c.OutOrStdout().Write(config.Sample())
 			return err
@@ -39,7 +37,6 @@ func newConfigSchemaCommand() *cobra.Command {
 	return &cobra.Command{
 		Use:   "schema",
 		Short: "Print the JSON Schema of an observation",
-		Args:  cobra.NoArgs,
 		RunE: func(c *cobra.Command, _ []string) error {
 			_, err := c.OutOrStdout().Write(wire.Schema())
 			return err
@@ -56,7 +53,6 @@ func newConfigCheckCommand() *cobra.Command {
 would look, what it may cost in memory, and what in it is probably not meant.
 If anything is wrong, every fault is printed with its line, and the command
 fails. With --against OLD it also says what would change from the set-up OLD.`,
-		Args: cobra.ExactArgs(1),
 		RunE: func(c *cobra.Command, args []string) error { return checkConfig(c, args[0], against) },
 	}
 	c.Flags().StringVar(&against, "against", "", "also say what changes from the set-up in this file")

@@ -67,6 +67,9 @@ type daemonOptions struct {
 // openDaemon opens the bus and recovers every partition. What fails is closed
 // again.
 func openDaemon(ctx context.Context, setup *config.Setup, o daemonOptions) (d *daemon, err error) {
+	if err := checkFolder(setup); err != nil {
+		return nil, err
+	}
 	d = &daemon{setup: setup, log: o.log}
 	b, err := bus.Open(ctx, setup, append(o.busOpts, bus.WithLog(o.log), bus.WithState(d.busState))...)
 	if err != nil {

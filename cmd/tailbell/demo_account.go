@@ -4,6 +4,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"math"
 	"time"
 
 	"tailbell/monitor/life"
@@ -17,20 +18,20 @@ func (r *demoResult) print(w io.Writer, took time.Duration) error {
 func (r *demoResult) printElements(w io.Writer, took time.Duration) error {
 	errs := []error{
 		say(w, "THE ACCOUNT"),
-		say(w, "%d messages with %d elements, in %s", len(r.scenario.Messages), r.account.Elements, took.Round(100*time.Millisecond)),
+		say(w, "%s with %s, in %s", amount(len(r.scenario.Messages), "messages"), amount(r.account.Elements, "elements"), took.Round(100*time.Millisecond)),
 	}
 	if r.resumed > 0 {
-		errs = append(errs, say(w, "(%d of the messages were in the stream already: the demo went on)", r.resumed))
+		errs = append(errs, say(w, "(of the messages, %d stood in the stream already: the demo went on)", r.resumed))
 	}
 	errs = append(errs, say(w, "\n%-14s %10s %10s", "", "ledger", "account"))
 	for _, c := range r.audit.Classes {
 		errs = append(errs, say(w, "%-14s %10d %10d", c.Class, c.Ledger, c.Account))
 	}
 	errs = append(errs,
-		say(w, "\n%d slots hold %d events; events and exposure are compared slot by slot.", r.audit.Slots, r.audit.Events),
-		say(w, "%d looks made when due, %d withheld, %d made again because data changed; %d elements came late.",
-			r.account.Looks, r.account.WithheldLooks, r.account.Reruns, r.account.Late),
-		say(w, "%d acts taken, %d refused.", r.account.Acts, r.account.ActsRefused))
+		say(w, "\nIn %s: %s; events and exposure are compared slot by slot.", amount(r.audit.Slots, "slots"), amount(r.audit.Events, "events")),
+		say(w, "%s made when due, %d withheld, %d made again because data changed; %s came late.",
+			amount(r.account.Looks, "looks"), r.account.WithheldLooks, r.account.Reruns, amount(r.account.Late, "elements")),
+		say(w, "%s taken, %d refused.", amount(r.account.Acts, "acts"), r.account.ActsRefused))
 	return errors.Join(append(errs, r.printConditions(w))...)
 }
 
@@ -50,7 +51,7 @@ func (r *demoResult) printConditions(w io.Writer) error {
 				c.Since.Time().Format(time.DateOnly), c.Text))
 		}
 	}
-	return errors.Join(append(errs, say(w, "%d windows wait for data of the last 30 days.", recent))...)
+	return errors.Join(append(errs, say(w, "Beside these, looks at %s are withheld for less than 30 days.", amount(recent, "windows")))...)
 }
 
 func (r *demoResult) printAlerts(w io.Writer) error {
@@ -70,21 +71,24 @@ func (r *demoResult) printAlerts(w io.Writer) error {
 			steps[s.Kind]++
 		}
 	}
-	return say(w, "\n%d alerts: %d upper, %d lower, %d opened late; %d times worsened, %d corrected, %d returned, %d withdrawn, %d acknowledged, %d closed.",
-		len(r.alerts), upper, lower, late, steps[life.StepWorsened], steps[life.StepCorrected], steps[life.StepReturned],
+	return say(w, "\n%s: %d upper, %d lower, %d opened late; steps: %d worsened, %d corrected, %d returned, %d withdrawn, %d acknowledged, %d closed.",
+		amount(len(r.alerts), "alerts"), upper, lower, late, steps[life.StepWorsened], steps[life.StepCorrected], steps[life.StepReturned],
 		steps[life.StepWithdrawn], steps[life.StepAcknowledged], steps[life.StepClosed])
 }
 
 func (r *demoResult) printFindings(w io.Writer) error {
 	errs := []error{say(w, "\nPLANTED EXCESSES")}
-	found := 0
+	found, width := 0, 0
+	for _, f := range r.audit.Findings {
+		width = max(width, len(f.Planted.Series))
+	}
 	for _, f := range r.audit.Findings {
 		what := "not found"
 		if f.Found {
 			found++
 			what = fmt.Sprintf("found after %s (alert %s)", inDays(f.Delay), f.Alert)
 		}
-		errs = append(errs, say(w, "%-42s %-5s x%-5.3g %s to %s: %s", f.Planted.Series, f.Planted.Direction, f.Planted.Ratio,
+		errs = append(errs, say(w, "%-*s %-5s x%-5.3g %s to %s: %s", width, f.Planted.Series, f.Planted.Direction, f.Planted.Ratio,
 			f.Planted.From.Format(time.DateOnly), f.Planted.To.Format(time.DateOnly), what))
 	}
 	return errors.Join(append(errs, say(w, "%d of %d found.", found, len(r.audit.Findings)))...)
@@ -92,9 +96,9 @@ func (r *demoResult) printFindings(w io.Writer) error {
 
 func inDays(d time.Duration) string {
 	if d < 48*time.Hour {
-		return fmt.Sprintf("%.0f hours", d.Hours())
+		return amount(int(math.Round(d.Hours())), "hours")
 	}
-	return fmt.Sprintf("%.0f days", d.Hours()/24)
+	return amount(int(math.Round(d.Hours()/24)), "days")
 }
 
 func (r *demoResult) printVerdict(w io.Writer) error {

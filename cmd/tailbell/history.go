@@ -12,43 +12,84 @@ import (
 	"tailbell/config"
 	"tailbell/ingest/history"
 	"tailbell/ingest/wire"
+	"tailbell/monitor"
 )
 
 // historyFlags are the options with which files of history are read.
 type historyFlags struct {
-	format, series, zone string
-	ignore               []string
+	format, series, zone, untilText string
+	ignore                          []string
+	// until is the time to which the history is complete, set by read;
+	// monitor.Beginning for none.
+	until monitor.Instant
+	// latest is the latest time that until may be; 0 for any.
+	latest monitor.Instant
 }
 
 func (f *historyFlags) add(c *cobra.Command) {
-	c.Flags().StringVar(&f.format, "format", "auto", "auto (by the file's ending), csv or ndjson")
+	c.Flags().StringVar(&f.format, "format", "auto", "the `FORMAT` of the files: auto (by their endings), csv or ndjson")
 	c.Flags().StringVar(&f.series, "series", "", "the `SERIES` of CSV files without a series column")
-	c.Flags().StringVar(&f.zone, "zone", "", "the IANA `ZONE` in which dates without an offset are meant")
+	c.Flags().StringVar(&f.zone, "zone", "", "the IANA `ZONE` in which dates and times without an offset are meant")
 	c.Flags().StringSliceVar(&f.ignore, "ignore", nil, "CSV `COLUMNS` to pass over")
+	c.Flags().StringVar(&f.untilText, "until", "", "move the clock on to this `TIME` after the last row, so that the looks due by then are made: RFC 3339, or a date (its first moment in --zone)")
+}
+
+// readOptions reads the options, and says which one is wrong.
+func (f *historyFlags) readOptions() (o history.Options, err error) {
+	o.Series, o.Ignore = f.series, f.ignore
+	if o.Format, err = history.ParseFormat(f.format); err != nil {
+		return o, fmt.Errorf("--format: %w", err)
+	}
+	if f.series != "" {
+		if err := config.CheckSeries(f.series); err != nil {
+			return o, fmt.Errorf("--series %q: %w", f.series, err)
+		}
+	}
+	if f.zone != "" {
+		if o.Zone, err = config.LoadZone(f.zone); err != nil {
+			return o, fmt.Errorf("--zone %q: %w", f.zone, err)
+		}
+	}
+	f.until = monitor.Beginning
+	if f.untilText != "" {
+		if f.until, err = history.ParseTime(f.untilText, o.Zone); err != nil {
+			return o, fmt.Errorf("--until: %w", err)
+		}
+		if f.latest != 0 && f.until > f.latest {
+			return o, fmt.Errorf("--until %s lies in the future: the looks up to then would be made before their data are there", f.untilText)
+		}
+	}
+	return o, nil
+}
+
+// checkUntil says what is wrong with an end that lies inside the history.
+func (f *historyFlags) checkUntil(h *history.History) error {
+	if f.until == monitor.Beginning || len(h.Entries) == 0 {
+		return nil
+	}
+	if last := h.Entries[len(h.Entries)-1]; f.until < last.Time {
+		return fmt.Errorf("--until %s lies before %s, when the row at %s:%d became known: it names a time after the last row, and leaves none out",
+			f.untilText, wire.FormatTime(last.Time), last.File, last.Line)
+	}
+	return nil
 }
 
 // read reads the files and tells of every row that can't be used.
 func (f *historyFlags) read(ctx context.Context, setup *config.Setup, paths []string, stdin io.Reader, stderr io.Writer) (*history.History, error) {
-	format, err := history.ParseFormat(f.format)
+	o, err := f.readOptions()
 	if err != nil {
 		return nil, &usageError{err}
 	}
-	o := history.Options{
-		Format: format, Series: f.series, Ignore: f.ignore, Stdin: stdin,
-		CheckUnit: unitChecker(setup),
-		Limits:    wire.Limits{Observations: setup.Limits.MaxObservations},
-	}
-	if f.zone != "" {
-		if o.Zone, err = config.LoadZone(f.zone); err != nil {
-			return nil, &usageError{err}
-		}
-	}
+	o.Stdin, o.CheckUnit, o.Limits = stdin, unitChecker(setup), wire.Limits{Observations: setup.Limits.MaxObservations}
 	bar := newBar(stderr, -1, "reading")
 	o.Progress = func(p history.Progress) { bar.set(p.Read, p.Size) }
 	h, err := history.Read(ctx, paths, o)
 	bar.end()
 	if err != nil {
 		return nil, err
+	}
+	if err := f.checkUntil(h); err != nil {
+		return nil, &usageError{err}
 	}
 	for _, fault := range h.Faults {
 		if err := say(stderr, "%s", fault); err != nil {
@@ -63,7 +104,7 @@ func unitChecker(setup *config.Setup) func(series, unit string) error {
 	return func(series, unit string) error {
 		for i := range setup.Indicators {
 			if in := &setup.Indicators[i]; in.Matches(series) && in.Unit != unit {
-				return fmt.Errorf("the file states exposure in %s, but indicator %s counts %s: convert it", unit, in.Name, in.Unit)
+				return fmt.Errorf("the file states exposure in %s, but the indicator %s counts %s: convert it, or correct the column's name", unit, in.Name, in.Unit)
 			}
 		}
 		return nil

@@ -80,16 +80,15 @@ A signal is a statistical finding: it diagnoses nothing and names no cause.
 Silence is no proof of safety. Local policy decides.`,
 		SilenceUsage:  true,
 		SilenceErrors: true,
-		Args:          cobra.NoArgs,
 		RunE:          func(c *cobra.Command, _ []string) error { return c.Help() },
 	}
 	root.CompletionOptions.HiddenDefaultCmd = true
-	root.SetFlagErrorFunc(func(c *cobra.Command, err error) error {
-		return &usageError{fmt.Errorf("%w (%s --help says more)", err, c.CommandPath())}
-	})
+	root.SetFlagErrorFunc(badFlag)
+	root.SetHelpCommand(newHelpCommand())
 	root.AddCommand(
 		newAlertCommand(), newConfigCommand(), newDemoCommand(), newExactCommand(), newFeedCommand(),
 		newRefusedCommand(), newReplayCommand(), newRunCommand(), newStatusCommand(), newStoreCommand(),
 	)
+	checkArguments(root)
 	return root
 }

@@ -5,7 +5,10 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"io/fs"
 	"os"
+	"slices"
+	"time"
 
 	"github.com/rs/zerolog"
 	"github.com/spf13/cobra"
@@ -13,6 +16,7 @@ import (
 
 	"tailbell/alert/outlet"
 	"tailbell/config"
+	"tailbell/monitor/store"
 )
 
 // defaultSetup is the set-up's file unless --config names another.
@@ -23,8 +27,8 @@ func addConfigFlag(c *cobra.Command, path *string) {
 }
 
 func newRunCommand() *cobra.Command {
-	var path, health string
-	var asJSON bool
+	var path string
+	o := runOptions{}
 	c := &cobra.Command{
 		Use:   "run",
 		Short: "Run the daemon: watch the stream, and ring",
@@ -32,44 +36,98 @@ func newRunCommand() *cobra.Command {
 the stream on from there, and delivers alerts to the bus and, in plain sentences
 (--json: as records, one a line), to standard output. Logs go to standard error.
 The first signal lets it finish what it began; a second one stops it at once,
-which loses nothing either.`,
-		Args: cobra.NoArgs,
+which loses nothing either.
+
+A set-up that differs from the one in force is put into force, or refused if the
+stored state can't follow it (tailbell config check --against says what changes).
+
+/healthz answers "alive" as long as the process lives; /readyz answers 200 and
+the status as JSON while the bus is connected and no partition far behind, else
+503 and why.`,
 		RunE: func(c *cobra.Command, _ []string) error {
+			if err := o.check(); err != nil {
+				return &usageError{err}
+			}
 			setup, err := loadSetup(path)
 			if err != nil {
 				return err
 			}
-			return runDaemon(c.Context(), setup, health, c.OutOrStdout(), c.ErrOrStderr(), asJSON)
+			return runDaemon(c.Context(), setup, o, c.OutOrStdout(), c.ErrOrStderr())
 		},
 	}
 	addConfigFlag(c, &path)
-	c.Flags().BoolVar(&asJSON, "json", false, "write alerts as JSON records, one a line")
-	c.Flags().StringVar(&health, "health", "127.0.0.1:4870", "loopback `ADDRESS` of /healthz and /readyz; off for none")
+	c.Flags().BoolVar(&o.asJSON, "json", false, "write alerts as JSON records, one a line")
+	c.Flags().StringVar(&o.health, "health", "127.0.0.1:4870", "loopback `ADDRESS` of /healthz and /readyz; off for none")
+	c.Flags().StringVar(&o.logLevel, "log-level", "info", "the least `LEVEL` that is logged: debug, info, warn or error")
 	return c
 }
 
-func runDaemon(ctx context.Context, setup *config.Setup, health string, stdout, stderr io.Writer, asJSON bool) (err error) {
-	log := newLog(stderr)
+type runOptions struct {
+	asJSON           bool
+	health, logLevel string
+	level            zerolog.Level // of logLevel, set by check
+}
+
+// check reads the options, so that a wrong one is told before anything is
+// done.
+func (o *runOptions) check() error {
+	levels := []zerolog.Level{zerolog.DebugLevel, zerolog.InfoLevel, zerolog.WarnLevel, zerolog.ErrorLevel}
+	i := slices.IndexFunc(levels, func(l zerolog.Level) bool { return l.String() == o.logLevel })
+	if i < 0 {
+		return fmt.Errorf("--log-level %q: it is debug, info, warn or error", o.logLevel)
+	}
+	o.level = levels[i]
+	return checkHealth(o.health)
+}
+
+func runDaemon(ctx context.Context, setup *config.Setup, o runOptions, stdout, stderr io.Writer) (err error) {
+	log := newLog(stderr).Level(o.level)
+	h, err := startHealth(ctx, o.health, log)
+	if err != nil {
+		return err
+	}
+	defer func() { err = errors.Join(err, h.close()) }()
 	d, err := openDaemon(ctx, setup, daemonOptions{
-		log: log, terminal: outlet.NewTerminal(stdout, widthOf(stdout), asJSON),
+		log: log, terminal: outlet.NewTerminal(stdout, widthOf(stdout), o.asJSON),
 	})
 	if err != nil {
 		return err
 	}
 	defer func() { err = errors.Join(err, d.close()) }()
-	if health != "off" {
-		closeHealth, err := serveHealth(ctx, d, health)
-		if err != nil {
-			return err
-		}
-		defer closeHealth()
-	}
+	h.daemon.Store(d)
+	defer h.daemon.Store(nil)
 	log.Info().Str("name", setup.Name).Str("folder", setup.Folder).Str("setup", setup.Digest[:12]).
 		Bool("embedded_bus", d.bus.Embedded()).Msg("running")
 	if err := d.run(ctx); err != nil {
 		return err
 	}
 	log.Info().Msg("stopped")
+	return nil
+}
+
+// checkFolder refuses a folder whose stores are another deployment's. It looks
+// before anything is written there.
+func checkFolder(setup *config.Setup) error {
+	for n := range setup.Partitions {
+		path := storePath(setup, n)
+		if _, err := os.Stat(path); errors.Is(err, fs.ErrNotExist) {
+			continue
+		}
+		st, err := store.OpenReadOnly(path, store.Options{})
+		if errors.Is(err, store.ErrInUse) {
+			continue // the folder's lock tells by whom
+		}
+		if err != nil {
+			return err
+		}
+		found, want := st.Identity(), identityOf(setup, n)
+		if err := st.Close(); err != nil {
+			return err
+		}
+		if found != want {
+			return fmt.Errorf("store %s: it holds %s, wanted is %s: %w", path, found, want, store.ErrIdentity)
+		}
+	}
 	return nil
 }
 
@@ -96,6 +154,9 @@ func widthOf(w io.Writer) int {
 	}
 	return usual
 }
+
+// duration writes an elapsed time as the set-up does.
+func duration(d time.Duration) string { return config.FormatDuration(d) }
 
 // say prints a line for people.
 func say(w io.Writer, format string, args ...any) error {

@@ -2,9 +2,11 @@ package main
 
 import (
 	"io"
+	"strings"
 
 	"github.com/spf13/cobra"
 
+	"tailbell/alert/words"
 	"tailbell/monitor"
 )
 
@@ -14,7 +16,10 @@ func newStatusCommand() *cobra.Command {
 	c := &cobra.Command{
 		Use:   "status",
 		Short: "Say how the running daemon is doing: stream, account, conditions, outlets",
-		Args:  cobra.NoArgs,
+		Long: `Says how the running daemon is doing, partition by partition: how far it has read
+its stream, its clock, what became of every element of the stream and of every
+look, how many alert steps wait for each outlet, and the conditions: windows whose
+looks are withheld and why, and series that have fallen silent.`,
 		RunE: func(c *cobra.Command, _ []string) error {
 			setup, err := loadSetup(path)
 			if err != nil {
@@ -22,7 +27,7 @@ func newStatusCommand() *cobra.Command {
 			}
 			var s statusReply
 			if err := ask(c.Context(), setup, verbStatus, nil, &s); err != nil {
-				return err
+				return sayNeverRan(setup, err)
 			}
 			if asJSON {
 				return writeJSON(c.OutOrStdout(), s)
@@ -36,42 +41,77 @@ func newStatusCommand() *cobra.Command {
 }
 
 func writeStatus(w io.Writer, s *statusReply) error {
-	for _, p := range s.Partitions {
-		mode, clock := "live", "not set yet"
-		if p.History {
-			mode = "history time"
-		}
-		if p.Clock != monitor.Beginning {
-			clock = p.Clock.Time().Format("2006-01-02 15:04:05Z")
-		}
-		if err := say(w, "%s, partition %d: position %d of %d, %s, clock %s, set-up version %d, %d alerts not done",
-			s.Name, p.Number, p.Position, p.End, mode, clock, p.Version, p.OpenAlerts); err != nil {
+	for i := range s.Partitions {
+		if err := writePartition(w, s.Name, &s.Partitions[i]); err != nil {
 			return err
 		}
-		if err := writeAccount(w, p.Account); err != nil {
+	}
+	if !s.Connected {
+		return say(w, "The bus is away; the daemon waits for it.")
+	}
+	return nil
+}
+
+func writePartition(w io.Writer, name string, p *partStatus) error {
+	mode, clock := "live", "not set yet"
+	if p.History {
+		mode = "history time"
+	}
+	if p.Clock != nil {
+		clock = p.Clock.Format("2006-01-02 15:04:05Z")
+	}
+	if err := say(w, "%s, partition %d: position %d of %d, %s, clock %s, set-up version %d, %s not done",
+		name, p.Number, p.Position, p.End, mode, clock, p.Version, amount(p.OpenAlerts, "alerts")); err != nil {
+		return err
+	}
+	if err := writeAccount(w, p.Account); err != nil {
+		return err
+	}
+	if refused := p.Account.Refused + p.Account.ActsRefused + p.Account.SettingsRefused + p.Account.Rejected; refused > 0 {
+		if err := say(w, "  tailbell refused list says what was refused, and why"); err != nil {
 			return err
 		}
-		for _, o := range p.Outlets {
-			if err := say(w, "  outlet %s: %d steps delivered, %d waiting", o.Name, o.Delivered, o.Depth); err != nil {
-				return err
-			}
+	}
+	for _, o := range p.Outlets {
+		if err := say(w, "  outlet %s: %s delivered, %d waiting", o.Name, amount(o.Delivered, "steps"), o.Waiting); err != nil {
+			return err
 		}
-		for _, c := range p.Conditions {
-			if err := say(w, "  condition: %s %s %s: %s, since %s", c.Series, c.Window, c.Kind, c.Text,
-				c.Since.Time().Format("2006-01-02 15:04Z")); err != nil {
-				return err
-			}
+	}
+	for _, c := range p.Conditions {
+		if err := writeCondition(w, c); err != nil {
+			return err
 		}
 	}
 	return nil
 }
 
+func writeCondition(w io.Writer, c conditionRow) error {
+	about := []string{c.Series, c.Window, string(c.Kind)}
+	if c.Window == "" {
+		about = []string{c.Series, string(c.Kind)}
+	}
+	return say(w, "  condition: %s: %s, since %s", strings.Join(about, " "), c.Text, c.Since.Format("2006-01-02 15:04Z"))
+}
+
+// amount writes a number of things: "1 alert", "2 alerts".
+func amount[N ~int | ~int64 | ~uint64](n N, nouns string) string {
+	return words.Amount(int64(n), nouns)
+}
+
+// areMany writes "is 1 row", "are 2 rows".
+func areMany(n int, nouns string) string {
+	if n == 1 {
+		return "is " + amount(n, nouns)
+	}
+	return "are " + amount(n, nouns)
+}
+
 // writeAccount prints what became of every element.
 func writeAccount(w io.Writer, a monitor.Account) error {
-	if err := say(w, "  %d elements: %d counted, %d withheld, %d repeats, %d replaced, %d outdated, %d refused, %d unmonitored",
-		a.Elements, a.Counted, a.Withheld, a.Repeat, a.Replaced, a.Outdated, a.Refused, a.Unmonitored); err != nil {
+	if err := say(w, "  %s: %d counted, %d withheld, %s, %d replaced, %d outdated, %d refused, %d unmonitored",
+		amount(a.Elements, "elements"), a.Counted, a.Withheld, amount(a.Repeat, "repeats"), a.Replaced, a.Outdated, a.Refused, a.Unmonitored); err != nil {
 		return err
 	}
-	return say(w, "  %d looks made when due, %d withheld, %d made again because data changed; %d elements came late; %d acts, %d refused",
-		a.Looks, a.WithheldLooks, a.Reruns, a.Late, a.Acts, a.ActsRefused)
+	return say(w, "  %s made when due, %d withheld, %d made again because data changed; %s came late; %s, %d refused",
+		amount(a.Looks, "looks"), a.WithheldLooks, a.Reruns, amount(a.Late, "elements"), amount(a.Acts, "acts"), a.ActsRefused)
 }

@@ -4,6 +4,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"io/fs"
 	"os"
 	"path/filepath"
 	"slices"
@@ -19,7 +20,6 @@ func newStoreCommand() *cobra.Command {
 	c := &cobra.Command{
 		Use:   "store",
 		Short: "Check the stores of a folder whole, or copy them",
-		Args:  cobra.NoArgs,
 		RunE:  func(c *cobra.Command, _ []string) error { return c.Help() },
 	}
 	c.AddCommand(newStoreCheckCommand(), newStoreCopyCommand())
@@ -36,7 +36,6 @@ indexes and cursors. FOLDER stands for all stores in it. Nothing is written.
 
 It fails if anything is wrong, and names it. A store that a daemon has open is
 not looked at: stop the daemon, or check a copy.`,
-		Args: cobra.ExactArgs(1),
 		RunE: func(c *cobra.Command, args []string) error { return checkStores(c, args[0], asJSON) },
 	}
 	c.Flags().BoolVar(&asJSON, "json", false, "print the findings as JSON, one object a store")
@@ -86,15 +85,15 @@ func tellCheck(w io.Writer, file string, r store.Report, found error, asJSON boo
 	}
 	_, err := fmt.Fprintf(w, `%s is sound.
   %s, format %d
-  stands at position %d of its stream after %d commits
-  %d series, %d of them written whole, %d patches since; %d ids in %d generations; %d archived slots
-  %d alerts, %d of them not done; %d steps wait for %d outlets
-  %d refused, %d of them listed, %d with their bytes; %d set-ups
+  stands at position %d of its stream after %s
+  %d series, %d of them written whole, %s since; %s in %s; %s
+  %s, %d of them not done; %s waiting for %s
+  %d refused, %d of them listed, %d with their bytes; %s
   %.1f MiB, %.1f MiB of them free
-`, file, r.Identity, r.Format, r.Position, r.Commits,
-		r.Series, r.States, r.Patches, r.IDs, r.Generations, r.Archived,
-		r.Alerts, r.OpenAlerts, r.OutboxRows, r.Outlets,
-		r.Refused, r.RefusedRows, r.RefusedRaw, r.Settings,
+`, file, r.Identity, r.Format, r.Position, amount(r.Commits, "commits"),
+		r.Series, r.States, amount(r.Patches, "patches"), amount(r.IDs, "ids"), amount(r.Generations, "generations"), amount(r.Archived, "archived slots"),
+		amount(r.Alerts, "alerts"), r.OpenAlerts, amount(r.OutboxRows, "steps"), amount(r.Outlets, "outlets"),
+		r.Refused, r.RefusedRows, r.RefusedRaw, amount(r.Settings, "set-ups"),
 		float64(r.FileBytes)/(1<<20), float64(r.FreeBytes)/(1<<20))
 	if err == nil && r.TornMeta {
 		_, err = fmt.Fprintln(w, "  The last commit broke off; the store stands at the one before it. The stream brings it again.")
@@ -122,12 +121,15 @@ func tellFaults(w io.Writer, file string, faults []string, found error) error {
 // storeFiles returns the stores that a path names.
 func storeFiles(path string) ([]string, error) {
 	info, err := os.Stat(path)
+	if errors.Is(err, fs.ErrNotExist) {
+		return nil, fmt.Errorf("there is no %s: name the folder of a set-up that has run, or a store's file", path)
+	}
 	if err != nil || !info.IsDir() {
 		return []string{path}, err
 	}
 	files, err := filepath.Glob(filepath.Join(globEscape(path), "*.store"))
 	if err == nil && len(files) == 0 {
-		err = fmt.Errorf("no stores in %s: name the folder of the set-up, or a file", path)
+		err = fmt.Errorf("no stores in %s: name the folder of a set-up that has run, or a store's file", path)
 	}
 	slices.Sort(files)
 	return files, err
@@ -152,7 +154,6 @@ func newStoreCopyCommand() *cobra.Command {
 		Long: `Copies a store into the new file TO, or all stores of a folder into the folder
 TO. A copy appears under its name once it is complete, checked and on the disk;
 what is there already is never written over.`,
-		Args: cobra.ExactArgs(2),
 		RunE: func(c *cobra.Command, args []string) error { return copyStores(c.OutOrStdout(), args[0], args[1]) },
 	}
 }
@@ -197,6 +198,6 @@ func copyStore(w io.Writer, from, to string) (err error) {
 	if err != nil {
 		return err
 	}
-	_, err = fmt.Fprintf(w, "%s: %d bytes, at position %d of its stream\n", to, n, position)
+	_, err = fmt.Fprintf(w, "%s: %s, at position %d of its stream\n", to, amount(n, "bytes"), position)
 	return err
 }

@@ -42,7 +42,7 @@ func TestStoreCheckAndCopy(t *testing.T) {
 
 	code, out := runStore(t, "check", folder)
 	if code != 0 || strings.Count(out, "is sound") != 2 || !strings.Contains(out, `deployment "quillmere", partition 1 of 2`) ||
-		!strings.Contains(out, "position 42 of its stream after 1 commits") {
+		!strings.Contains(out, "position 42 of its stream after 1 commit\n") {
 		t.Errorf("check gave %d:\n%s", code, out)
 	}
 	code, out = runStore(t, "check", "--json", first)

@@ -4,6 +4,7 @@ import (
 	"context"
 	"encoding/json"
 	"fmt"
+	"time"
 
 	"tailbell/ingest/bus"
 	"tailbell/ingest/control"
@@ -55,16 +56,38 @@ type statusReply struct {
 }
 
 type partStatus struct {
-	Number     int                 `json:"partition"`
-	Position   uint64              `json:"position"`
-	End        uint64              `json:"stream_end"`
-	Clock      monitor.Instant     `json:"clock"`
-	History    bool                `json:"history_time"`
-	Version    int                 `json:"setup_version"`
-	Account    monitor.Account     `json:"account"`
-	Conditions []monitor.Condition `json:"conditions"`
-	Outlets    []store.Outlet      `json:"outlets"`
-	OpenAlerts int                 `json:"open_alerts"`
+	Number     int             `json:"partition"`
+	Position   uint64          `json:"position"`
+	End        uint64          `json:"stream_end"`
+	Clock      *time.Time      `json:"clock"` // null before the first message that tells a time
+	History    bool            `json:"history_time"`
+	Version    int             `json:"setup_version"`
+	Account    monitor.Account `json:"account"`
+	Conditions []conditionRow  `json:"conditions"`
+	Outlets    []outletRow     `json:"outlets"`
+	OpenAlerts int             `json:"open_alerts"`
+}
+
+// conditionRow is a condition with its time as people and programs read it.
+type conditionRow struct {
+	Series    string                `json:"series"`
+	Indicator string                `json:"indicator"`
+	Kind      monitor.ConditionKind `json:"kind"`
+	Window    string                `json:"window,omitempty"`
+	Since     time.Time             `json:"since"`
+	Text      string                `json:"text"`
+}
+
+func conditionRowOf(c monitor.Condition) conditionRow {
+	return conditionRow{c.Series, c.Indicator, c.Kind, c.Window, c.Since.Time(), c.Text}
+}
+
+// outletRow is how far an outlet has come: Delivered is the number of the last
+// step delivered.
+type outletRow struct {
+	Name      string `json:"name"`
+	Delivered uint64 `json:"delivered"`
+	Waiting   uint64 `json:"waiting"`
 }
 
 func (d *daemon) verbs() map[string]control.Handler {
@@ -91,15 +114,22 @@ func answer[T any](f func(context.Context, T) (any, error)) control.Handler {
 func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 	r := &statusReply{Name: d.setup.Name, Setup: d.setup.Digest, Connected: d.bus.Connected()}
 	for _, p := range d.parts {
-		s := partStatus{Number: p.number}
+		s := partStatus{Number: p.number, Conditions: []conditionRow{}, Outlets: []outletRow{}}
 		var err error
 		if s.End, err = d.bus.EndOf(ctx, p.number); err != nil {
 			return nil, err
 		}
 		err = p.loop.Do(ctx, func(e *monitor.Engine) {
-			s.Position, s.Clock, s.History = e.Position(), e.Clock(), e.InHistory()
+			s.Position, s.History = e.Position(), e.InHistory()
+			if clock := e.Clock(); clock != monitor.Beginning {
+				at := clock.Time()
+				s.Clock = &at
+			}
 			_, s.Version = e.Setup()
-			s.Account, s.Conditions = e.Account(), e.Conditions()
+			s.Account = e.Account()
+			for _, c := range e.Conditions() {
+				s.Conditions = append(s.Conditions, conditionRowOf(c))
+			}
 			for _, r := range e.Alerts() {
 				if !r.Done() {
 					s.OpenAlerts++
@@ -109,8 +139,12 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 		if err != nil {
 			return nil, err
 		}
-		if s.Outlets, err = p.store.OutletState(); err != nil {
+		outlets, err := p.store.OutletState()
+		if err != nil {
 			return nil, err
+		}
+		for _, o := range outlets {
+			s.Outlets = append(s.Outlets, outletRow{o.Name, o.Delivered, o.Depth})
 		}
 		r.Partitions = append(r.Partitions, s)
 	}
@@ -118,7 +152,7 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 }
 
 func (d *daemon) alerts(_ context.Context, req alertsRequest) (any, error) {
-	var records []life.Record
+	records := []life.Record{}
 	for _, p := range d.parts {
 		rows, err := listAlerts(p.store, req)
 		if err != nil {
