@@ -62,8 +62,9 @@ func poissonSide(k float64, mu dd, upper, mid bool) side {
 		}
 		upper = !upper
 	}
-	s.point = poissonPoint(k, mu)
-	if upper {
+	if k >= uniformFrom*uniformFrom && math.Abs(mu.hi-k) < nearMean*k {
+		s.point, s.ratio = nearPoisson(!upper, k, mu)
+	} else if s.point = poissonPoint(k, mu); upper {
 		s.ratio = poissonUpperRatio(k, mu)
 	} else {
 		s.ratio = poissonLowerRatio(k, mu)

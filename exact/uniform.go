@@ -130,3 +130,27 @@ func binomialUniform(k, n float64, p dd) float64 {
 	e := stirling(k) + stirling(m) - stirling(n)
 	return uniform(false, sd, e, y, d/sd, (m-k)/(n*sd), 1/n, k/(n*sd))
 }
+
+// nearMean is how far from k, relative to it, nearPoisson's series is taken.
+const nearMean = 0.02
+
+// nearPoisson is the probability of k and the ratio in one, for k >= uniformFrom^2 and a mean
+// within nearMean of it: the deviance mu (d^2/2 - d^3/3 + ...), d = mu/k - 1, needs no logarithm.
+func nearPoisson(lower bool, k float64, mu dd) (point, float64) {
+	delta := mu.addFloat(-k)
+	d := delta.div(dd{k, 0})
+	x := d.hi
+	z := float64(x * x)
+	even := math.FMA(math.FMA(math.FMA(math.FMA(math.FMA(z, 1.0/14, 1.0/12), z, 1.0/10), z, 1.0/8), z, 1.0/6), z, 1.0/4)
+	odd := math.FMA(math.FMA(math.FMA(math.FMA(z, 1.0/13, 1.0/11), z, 1.0/9), z, 1.0/7), z, 1.0/5)
+	rest := float64(float64(k*z)*z) * math.FMA(-odd, x, even)
+	third := d.mul(dd{1.0 / 3, 0x1.5555555555555p-56})
+	dev := delta.mul(d).mul(third.neg().addFloat(0.5)).addFloat(rest)
+	st, sd := stirlingSeries(k), math.Sqrt(k)
+	e := dev.neg().addFloat(-st)
+	ratio := uniform(lower, sd, st, math.Sqrt(dev.hi), delta.hi/sd, 1/sd, 0, 0)
+	if lower {
+		ratio++
+	}
+	return point{e.hi, e.lo, 1 / math.Sqrt(2*math.Pi*k)}, ratio
+}
