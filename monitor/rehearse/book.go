@@ -102,15 +102,33 @@ func (b *book) rule(series string) *Rule {
 // enter judges an element as it arrives. It fails if the judgement is not what
 // was meant: then the scenario is wrong.
 func (b *book) enter(e *Element, message, index int) error {
+	entry := b.note(e, message, index)
+	if entry.Class != e.Meant {
+		return fmt.Errorf("message %d, element %d, meant to be %s, is %s %s: %s", message, index, e.Meant, entry.Class, entry.Reason, e.JSON())
+	}
+	return nil
+}
+
+// note judges an element as it arrives, whatever was meant.
+func (b *book) note(e *Element, message, index int) Entry {
 	entry := Entry{Message: message, Index: index, Series: e.Series}
 	var home slotKey
 	entry.Class, entry.Reason, home = b.judge(e)
 	b.entries = append(b.entries, entry)
 	b.homes = append(b.homes, home)
-	if entry.Class != e.Meant {
-		return fmt.Errorf("message %d, element %d, meant to be %s, is %s %s: %s", message, index, e.Meant, entry.Class, entry.Reason, e.JSON())
+	return entry
+}
+
+// Reckon keeps the ledger of messages as they arrived, in that order, whatever
+// was meant of their elements: messages that came twice stand there twice.
+func Reckon(rules []Rule, messages [][]Element) Ledger {
+	b := newBook(rules)
+	for m, elements := range messages {
+		for i := range elements {
+			b.note(&elements[i], m, i)
+		}
 	}
-	return nil
+	return b.close()
 }
 
 func (b *book) judge(e *Element) (Class, string, slotKey) {
@@ -142,7 +160,9 @@ func (b *book) judge(e *Element) (Class, string, slotKey) {
 	case known && e.Revision == old.element.Revision:
 		return Refused, "conflict", slotKey{}
 	case known:
-		b.entries[old.entry].Class = Replaced
+		if !old.element.Retracted { // a retraction did its work, whatever comes after
+			b.entries[old.entry].Class = Replaced
+		}
 		b.add(&old.element, b.rule(old.element.Series), -1)
 	}
 	b.ids[key] = named{len(b.entries), *e}
