@@ -224,7 +224,7 @@ func (x TwoRate) RatioBoundsBy(n int64, alpha float64, how Sides) (lower, upper 
 	}
 	l, u := oddsAccepted(n, n+x.RefEvents, alpha, how)
 	r := x.RefExposure / x.Exposure
-	return math.Exp(l) * r, math.Exp(u) * r
+	return expTwo(l, 0) * r, expTwo(u, 0) * r
 }
 
 // OddsRatioBoundsBy is OddsRatioBounds of the given two-sided form.

@@ -137,10 +137,16 @@ func (x BetaBinomial) CriticalLower(limit float64) (k int64, size float64, ok bo
 	return criticalLower(x, limit)
 }
 
-// TwoSided is the two-sided p-value of k, at most 1.
-func (x BetaBinomial) TwoSided(k int64, how Sides) float64 { return twoSided(x, k, how, false).prob() }
+// TwoSided is the two-sided p-value of k, at most 1. With A and B both under 1 the law has two
+// peaks and no minimum-likelihood form: NaN.
+func (x BetaBinomial) TwoSided(k int64, how Sides) float64 { return x.twoSided(k, how).prob() }
 
 // LogTwoSided is the logarithm of TwoSided, where TwoSided underflows as well.
-func (x BetaBinomial) LogTwoSided(k int64, how Sides) float64 {
-	return twoSided(x, k, how, false).logProb()
+func (x BetaBinomial) LogTwoSided(k int64, how Sides) float64 { return x.twoSided(k, how).logProb() }
+
+func (x BetaBinomial) twoSided(k int64, how Sides) pair {
+	if how == MinLike && x.A < 1 && x.B < 1 {
+		return pair{own: undefined, double: true}
+	}
+	return twoSided(x, k, how, false)
 }

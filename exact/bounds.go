@@ -173,7 +173,7 @@ func binomialLower(x, n int64, a float64, mid bool) (p, q float64) {
 			return 1, 0
 		}
 		l := dd{a, 0}.log().div(dd{m, 0})
-		return expTwo(l.hi, l.lo), -math.Expm1(l.hi)
+		return expTwo(l.hi, l.lo), -expm1Of(l.hi)
 	}
 	p = betaStart(k, m, a)
 	q = 1 - p
@@ -232,7 +232,7 @@ func shiftOdds(p, q, step float64) (float64, float64) {
 	}
 	e := float64(step * math.FMA(step, math.FMA(step, 1.0/6, 0.5), 1)) // e^step - 1
 	if math.Abs(step) > 1e-3 {
-		e = math.Expm1(step)
+		e = expm1Of(step)
 	}
 	// p' = p e^s/(q + p e^s) = p + p q e/(1 + p e)
 	p = math.FMA(p, float64(q*e)/math.FMA(p, e, 1), p)
@@ -256,7 +256,7 @@ func betaStart(k, n, a float64) float64 {
 		}
 	}
 	if k == 1 {
-		return max(-math.Expm1(log1pOf(-a)/n), 1e-300)
+		return max(-expm1Of(log1pOf(-a)/n), 1e-300)
 	}
 	l := roughLog(max(a, 0x1p-1022))/k - 0.1
 	return min(0.5, max(expTwo(l, 0)*k/(n+1), 1e-300))

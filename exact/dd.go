@@ -167,3 +167,23 @@ func roughLog(x float64) float64 {
 	r := math.FMA(m, row[0], -1)
 	return math.FMA(float64(e), ln2Head, row[1]) + math.FMA(float64(r*r), math.FMA(r, 1.0/3, -0.5), r)
 }
+
+// expLess is exp(y)-1-y without cancellation.
+func expLess(y float64) float64 {
+	if math.Abs(y) > 0.7 {
+		return expTwo(y, 0) - 1 - y
+	}
+	c := 0.0
+	for n := 18; n >= 2; n-- { // c becomes 1/2 + y/6 + ...
+		c = math.FMA(c, y, 1) * inverse[n]
+	}
+	return c * y * y
+}
+
+// expm1Of is exp(y)-1.
+func expm1Of(y float64) float64 {
+	if math.Abs(y) > 0.7 {
+		return expTwo(y, 0) - 1
+	}
+	return y + expLess(y)
+}

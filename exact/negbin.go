@@ -137,7 +137,7 @@ func (p pascal) direct(k float64, upper, mid bool) side {
 		s = p.direct(1, true, false)
 		half := p.point(0)
 		half.root *= 0.5
-		s.ratio += math.Exp(half.minus(s.point))
+		s.ratio += expTwo(half.minus(s.point), 0)
 		return s
 	default:
 		s.ratio = p.upperRatio(k)
@@ -208,7 +208,7 @@ func (p pascal) lowerRatio(k float64) float64 {
 	if !(top < 0.3) { // e^-s-1+s is no longer s*s/2: solve c s + kr (e^-s-1+s) = 38
 		top = (38 + kr) / (c + kr)
 		for range 4 {
-			top -= (c*top + kr*expLess(-top) - 38) / (c - kr*math.Expm1(-top))
+			top -= (c*top + kr*expLess(-top) - 38) / (c - kr*expm1Of(-top))
 		}
 		top = min(far, 1.02*top)
 	}
@@ -231,25 +231,12 @@ func panels(h func(float64) float64, lo, hi float64, n int) float64 {
 	return sum
 }
 
-// expLess is exp(y)-1-y without cancellation.
-func expLess(y float64) float64 {
-	if math.Abs(y) > 0.7 {
-		return math.Expm1(y) - y
-	}
-	c := 0.0
-	for n := 18.0; n >= 2; n-- {
-		c = (c*y + 1) / n
-	}
-	// c = 1/2 + y/6 + ... by nested division
-	return c * y * y
-}
-
 // logLess1Far is logLess1 for all x > -1; -Inf at -1.
 func logLess1Far(x float64) float64 {
 	if math.Abs(x) < 0.5 {
 		return logLess1(x)
 	}
-	return math.Log1p(x) - x
+	return log1pOf(x) - x
 }
 
 // expReach is the y at which exp(-c y - s (e^y-1-y)) has fallen below 2^-55.
@@ -262,11 +249,11 @@ func expReach(c, s float64) float64 {
 		if y < 0.5 {
 			return y
 		}
-		f := c*y + s*(math.Exp(min(y, 700))-1-y) - 38
+		f := c*y + s*(expTwo(min(y, 700), 0)-1-y) - 38
 		if f < 0 {
 			return y * 1.02
 		}
-		d := c + s*(math.Exp(min(y, 700))-1)
+		d := c + s*(expTwo(min(y, 700), 0)-1)
 		step := f / d
 		if !(d > 0) || step > y/2 {
 			step = y / 2

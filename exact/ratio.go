@@ -8,7 +8,7 @@ const directTerms = 200
 
 // reach is the distance, in units of u, at which exp(-c u - s u u/2) has fallen below 2^-55.
 func reach(c, s float64) float64 {
-	return 76 / (c + math.Sqrt(c*c+76*s))
+	return 76 / (c + math.Sqrt(math.FMA(c, c, 76*s)))
 }
 
 // logLess1 is log(1+x) - x for |x| < 0.6, without cancellation.
@@ -105,7 +105,7 @@ func poissonUpperRatio(k float64, mu dd) float64 {
 		}
 	}
 	if mu.lo != 0 {
-		sum += mu.lo / mu.hi * (k - sum*(k-mu.hi))
+		sum += float64(mu.lo / mu.hi * (k - float64(sum*(k-mu.hi))))
 	}
 	return sum
 }
@@ -128,7 +128,7 @@ func poissonLowerRatio(k float64, mu dd) float64 {
 		sum += t
 	}
 	if mu.lo != 0 {
-		sum -= mu.lo / mu.hi * (mu.hi + sum*(k-mu.hi))
+		sum -= float64(mu.lo / mu.hi * (mu.hi + float64(sum*(k-mu.hi))))
 	}
 	return sum
 }
@@ -141,7 +141,7 @@ func binomialUpperRatio(k, n float64, p, q dd) float64 {
 	w := p.div(q)
 	if min(k, n-k) > directTerms {
 		c := q.mulFloat(k-1).add(p.mulFloat(n-k).neg()).float() / q.hi
-		s := (k - 1) + (n-k)*w.hi*w.hi
+		s := math.FMA(n-k, float64(w.hi*w.hi), k-1)
 		if t := reach(c, s); k*t > directTerms {
 			return k * panel(c, k-1, -1, n-k, w.hi, min(t, 1))
 		}
@@ -162,7 +162,7 @@ func binomialUpperRatio(k, n float64, p, q dd) float64 {
 		}
 	}
 	if w.lo != 0 {
-		sum += w.lo / w.hi * (k*q.hi - sum*(k-n*p.hi))
+		sum += float64(w.lo / w.hi * (float64(k*q.hi) - float64(sum*(k-float64(n*p.hi)))))
 	}
 	return sum
 }

@@ -289,3 +289,24 @@ func TestTruthMore(t *testing.T) {
 	}
 	g.hold(t, map[string]float64{"betabinomial": 1e-13, "noncentral": 1e-13, "negbin": 1e-14})
 }
+
+// fresh_tails.csv.gz: random cases to mu = 1e9 and n = 1e12, the probability by mpmath's log
+// gamma, the ratio by quadrature, at 45 digits: a method unlike the other tables'.
+func TestTruthFresh(t *testing.T) {
+	tr, g := readTruth(t, "fresh_tails"), newGauge()
+	for _, r := range tr.rows {
+		var x discrete = exact.Poisson{Rate: tr.float(t, r, "par"), Exposure: 1}
+		if tr.text(r, "law") == "binomial" {
+			x = exact.NewBinomial(tr.int(t, r, "n"), tr.float(t, r, "par"))
+		}
+		k := tr.int(t, r, "k")
+		p, lp := x.Lower(k), x.LogLower(k)
+		if tr.text(r, "tail") == "upper" {
+			p, lp = x.Upper(k), x.LogUpper(k)
+		}
+		g.note("p "+tr.text(r, "law"), relative(t, p, tr.text(r, "p")), r[:5])
+		g.note("log "+tr.text(r, "law"), relative(t, lp, tr.text(r, "log_p")), r[:5])
+		g.note("pmf "+tr.text(r, "law"), relative(t, x.PMF(k), tr.text(r, "pmf")), r[:5])
+	}
+	g.hold(t, map[string]float64{"p": 1e-14, "log": 1e-14, "pmf": 1e-14})
+}

@@ -126,7 +126,7 @@ func binomialUniform(k, n float64, p dd) float64 {
 	m := n - k
 	d := p.mulFloat(n).addFloat(-k).float()
 	sd := math.Sqrt(k * (m / n))
-	y := math.Sqrt(-k*logLess1(d/k) - m*logLess1(-d/m))
+	y := math.Sqrt(-float64(k*logLess1(d/k)) - float64(m*logLess1(-d/m)))
 	e := stirling(k) + stirling(m) - stirling(n)
 	return uniform(false, sd, e, y, d/sd, (m-k)/(n*sd), 1/n, k/(n*sd))
 }

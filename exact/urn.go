@@ -53,7 +53,7 @@ func (u urn) up(x float64) (sum, first float64) {
 	}
 	sum += part
 	first += partFirst
-	sum += u.odds.lo / u.odds.hi * first
+	sum += float64(u.odds.lo / u.odds.hi * first)
 	return sum, first
 }
 
