@@ -156,11 +156,12 @@ func (ix *indicator) baselineOf(s *series, u *usual, ev *life.Evidence, o *oppor
 	}
 	from, to := ix.cal.Start(ref.begin).in(cfg.Zone), ix.cal.Start(ref.end).in(cfg.Zone)
 	r.Exposure, r.From, r.To, r.LeftOut = ref.exposure.decimal(cfg.GrainDigits), &from, &to, ref.leftOut
+	weighted, between := ref.weighted, ref.between // a record must not point into what is kept
 	if b.Strata != nil {
-		r.Weighted = &ref.weighted
+		r.Weighted = &weighted
 	}
 	if r.Peers = ref.peers; ref.peers >= 2 {
-		r.Between = &ref.between
+		r.Between = &between
 	}
 	if first := s.comparator; first != nil && b.Kind == config.Trailing && first.from < ref.from {
 		c := life.Comparator{
