@@ -92,9 +92,15 @@ func (h *health) ready(w http.ResponseWriter, r *http.Request) {
 	case err != nil:
 		h.reply(w, http.StatusServiceUnavailable, "not ready: "+err.Error())
 		return
-	case !s.Connected:
+	case !s.Connected && len(s.Troubles) == 0:
 		h.reply(w, http.StatusServiceUnavailable, "not ready: the bus is away")
 		return
+	}
+	for _, t := range s.Troubles {
+		if t.Kind.stops() {
+			h.reply(w, http.StatusServiceUnavailable, "not ready: "+t.Text)
+			return
+		}
 	}
 	for _, p := range s.Partitions {
 		if p.Position+behind < p.End {

@@ -86,8 +86,8 @@ Silence is no proof of safety. Local policy decides.`,
 	root.SetFlagErrorFunc(badFlag)
 	root.SetHelpCommand(newHelpCommand())
 	root.AddCommand(
-		newAlertCommand(), newConfigCommand(), newDemoCommand(), newExactCommand(), newFeedCommand(),
-		newRefusedCommand(), newReplayCommand(), newRunCommand(), newStatusCommand(), newStoreCommand(),
+		newAlertCommand(), newClockCommand(), newConfigCommand(), newDemoCommand(), newExactCommand(), newFeedCommand(),
+		newOutletCommand(), newRefusedCommand(), newReplayCommand(), newRunCommand(), newStatusCommand(), newStoreCommand(),
 	)
 	checkArguments(root)
 	return root

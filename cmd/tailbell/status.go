@@ -1,6 +1,7 @@
 package main
 
 import (
+	"fmt"
 	"io"
 	"strings"
 
@@ -46,10 +47,27 @@ func writeStatus(w io.Writer, s *statusReply) error {
 			return err
 		}
 	}
+	for _, t := range s.Troubles {
+		if err := writeTrouble(w, &t); err != nil {
+			return err
+		}
+	}
 	if !s.Connected {
 		return say(w, "The bus is away; the daemon waits for it.")
 	}
 	return nil
+}
+
+func writeTrouble(w io.Writer, t *trouble) error {
+	where := "all partitions"
+	if t.Partition != everyPartition {
+		where = fmt.Sprintf("partition %d", t.Partition)
+	}
+	since := ""
+	if !t.Since.IsZero() {
+		since = ", since " + t.Since.Format("2006-01-02 15:04:05Z")
+	}
+	return say(w, "trouble in %s: %s: %s%s", where, t.Kind, t.Text, since)
 }
 
 func writePartition(w io.Writer, name string, p *partStatus) error {

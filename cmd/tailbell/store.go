@@ -19,10 +19,10 @@ import (
 func newStoreCommand() *cobra.Command {
 	c := &cobra.Command{
 		Use:   "store",
-		Short: "Check the stores of a folder whole, or copy them",
+		Short: "Check the stores of a folder whole, copy them, or accept another stream",
 		RunE:  func(c *cobra.Command, _ []string) error { return c.Help() },
 	}
-	c.AddCommand(newStoreCheckCommand(), newStoreCopyCommand())
+	c.AddCommand(newStoreCheckCommand(), newStoreCopyCommand(), newStoreAcceptCommand())
 	return c
 }
 

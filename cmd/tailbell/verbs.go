@@ -23,11 +23,13 @@ const (
 
 // The verbs that a running daemon answers, with what they take and give.
 const (
-	verbStatus  = "status"  // -> statusReply
-	verbAlerts  = "alerts"  // alertsRequest -> []life.Record
-	verbAlert   = "alert"   // id -> life.Record
-	verbAct     = "act"     // actRequest -> life.Record
-	verbRefused = "refused" // refusedRequest -> []refusedRow
+	verbStatus     = "status"       // -> statusReply
+	verbAlerts     = "alerts"       // alertsRequest -> []life.Record
+	verbAlert      = "alert"        // id -> life.Record
+	verbAct        = "act"          // actRequest -> life.Record
+	verbRefused    = "refused"      // refusedRequest -> []refusedRow
+	verbClock      = "accept-clock" // -> []heldRow
+	verbDropOutlet = "drop-outlet"  // name -> steps that waited
 )
 
 type alertsRequest struct {
@@ -52,6 +54,7 @@ type statusReply struct {
 	Name       string       `json:"name"`
 	Setup      string       `json:"setup_digest"`
 	Connected  bool         `json:"bus_connected"`
+	Troubles   []trouble    `json:"troubles"` // of the daemon itself
 	Partitions []partStatus `json:"partitions"`
 }
 
@@ -97,6 +100,9 @@ func (d *daemon) verbs() map[string]control.Handler {
 		verbAlert:   answer(func(_ context.Context, id string) (any, error) { r, _, err := d.find(id); return r, err }),
 		verbAct:     answer(d.act),
 		verbRefused: answer(d.refused),
+
+		verbClock:      d.acceptClock,
+		verbDropOutlet: answer(d.dropOutlet),
 	}
 }
 
@@ -113,11 +119,16 @@ func answer[T any](f func(context.Context, T) (any, error)) control.Handler {
 
 func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 	r := &statusReply{Name: d.setup.Name, Setup: d.setup.Digest, Connected: d.bus.Connected()}
+	var err error
+	if r.Troubles, err = d.standing(); err != nil {
+		return nil, err
+	}
 	for _, p := range d.parts {
 		s := partStatus{Number: p.number, Conditions: []conditionRow{}, Outlets: []outletRow{}}
-		var err error
-		if s.End, err = d.bus.EndOf(ctx, p.number); err != nil {
-			return nil, err
+		if r.Connected {
+			if s.End, err = d.bus.EndOf(ctx, p.number); err != nil {
+				return nil, err
+			}
 		}
 		err = p.loop.Do(ctx, func(e *monitor.Engine) {
 			s.Position, s.History = e.Position(), e.InHistory()
