@@ -34,9 +34,9 @@ type Changes struct {
 	Alerts []life.Record
 	// Steps are the new alert steps, in order: what outlets must deliver.
 	Steps []life.Notice
-	// Setting is the set-up text that came into force, nil for none. Every
-	// one is kept, by its version.
-	Setting *SettingChange
+	// Settings are the set-up texts that came into force, in order. Every one
+	// is kept, by its version.
+	Settings []SettingChange
 }
 
 // SeriesChange is a patch or a whole state of one series, in the engine's own

@@ -22,7 +22,7 @@ const minSlice = 4 << 10
 func (e *Engine) Drain() Changes {
 	c := Changes{
 		Position: e.position, Archived: e.archived, Refused: e.refused,
-		Steps: e.steps, Setting: e.setting, DroppedGenerations: e.ids.dropped,
+		Steps: e.steps, Settings: e.settings, DroppedGenerations: e.ids.dropped,
 	}
 	if e.position == e.drained {
 		c.Position = 0
@@ -48,7 +48,7 @@ func (e *Engine) Drain() Changes {
 	c.Cycle = e.checkpoint.cycle
 	c.States = e.slice(max(size, minSlice))
 	c.Header = e.encodeHeader()
-	e.touched, e.archived, e.refused, e.changed, e.steps, e.setting = nil, nil, nil, nil, nil, nil
+	e.touched, e.archived, e.refused, e.changed, e.steps, e.settings = nil, nil, nil, nil, nil, nil
 	e.ids.touched, e.ids.dropped = nil, nil
 	return c
 }

@@ -56,7 +56,7 @@ type Engine struct {
 	refused    []Refusal
 	changed    []*alert
 	steps      []life.Notice
-	setting    *SettingChange
+	settings   []SettingChange
 	checkpoint checkpoint
 
 	looks []look // scratch

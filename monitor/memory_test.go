@@ -66,9 +66,7 @@ func (m *Memory) Commit(c Changes) {
 	}
 	m.Steps = append(m.Steps, c.Steps...)
 	m.Refused = append(m.Refused, c.Refused...)
-	if c.Setting != nil {
-		m.settings = append(m.settings, *c.Setting)
-	}
+	m.settings = append(m.settings, c.Settings...)
 }
 
 // Reopen returns the engine that goes on from what was kept.

@@ -25,7 +25,7 @@ func (e *Engine) set(m *Message) {
 	}
 	e.account.Settings++
 	e.install(next, e.version+1, e.boundaries())
-	e.setting = &SettingChange{Version: e.version, Digest: next.Digest, Text: next.Text}
+	e.settings = append(e.settings, SettingChange{Version: e.version, Digest: next.Digest, Text: next.Text})
 }
 
 // Unfit says why a store under the old set-up can't take the new one; "" if

@@ -202,10 +202,10 @@ func TestSettings(t *testing.T) {
 	one := &monitor.SettingChange{Version: 1, Digest: "aa", Text: []byte("one")}
 	two := &monitor.SettingChange{Version: 2, Digest: "bb", Text: []byte("two")}
 	for i, setting := range []*monitor.SettingChange{one, two, one} {
-		mustCommit(t, s, monitor.Changes{Position: uint64(i + 1), Setting: setting}, Mark{})
+		mustCommit(t, s, monitor.Changes{Position: uint64(i + 1), Settings: []monitor.SettingChange{*setting}}, Mark{})
 	}
 	other := &monitor.SettingChange{Version: 2, Digest: "cc", Text: []byte("other")}
-	if err := s.Commit(monitor.Changes{Position: 9, Setting: other}, Mark{}); !errors.Is(err, ErrOrder) {
+	if err := s.Commit(monitor.Changes{Position: 9, Settings: []monitor.SettingChange{*other}}, Mark{}); !errors.Is(err, ErrOrder) {
 		t.Errorf("another text of version 2 gave %v, want ErrOrder", err)
 	}
 	settings, err := s.Settings()

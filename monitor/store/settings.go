@@ -8,15 +8,24 @@ import (
 	bolt "go.etcd.io/bbolt"
 )
 
-// writeSetting keeps a set-up that came into force, under its version.
-func writeSetting(tx *bolt.Tx, h *head, setting *monitor.SettingChange) error {
-	if setting == nil {
+// writeSettings keeps the set-ups that came into force, under their versions.
+func writeSettings(tx *bolt.Tx, h *head, settings []monitor.SettingChange) error {
+	if len(settings) == 0 {
 		return nil
 	}
 	r, err := settingsShelf.in(tx)
 	if err != nil {
 		return err
 	}
+	for i := range settings {
+		if err := writeSetting(r, h, &settings[i]); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+func writeSetting(r rack, h *head, setting *monitor.SettingChange) error {
 	if setting.Version < 0 {
 		return fmt.Errorf("set-up version %d: %w", setting.Version, ErrOrder)
 	}

@@ -65,9 +65,9 @@ func (w *twin) batch(t *rapid.T) monitor.Changes {
 	w.register(t, &c)
 	w.refuse(t, &c)
 	w.ring(t, &c)
-	if rapid.IntRange(0, 9).Draw(t, "setting") == 0 {
+	for rapid.IntRange(0, 9).Draw(t, "setting") == 0 { // perhaps several in one commit
 		setting := monitor.SettingChange{Version: len(w.settings) + 1, Digest: fmt.Sprint(w.position), Text: []byte("x = 1")}
-		w.settings, c.Setting = append(w.settings, setting), &setting
+		w.settings, c.Settings = append(w.settings, setting), append(c.Settings, setting)
 	}
 	return c
 }
