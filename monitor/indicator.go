@@ -27,7 +27,7 @@ type indicator struct {
 	// never move back, whatever becomes of settle and horizon.
 	frozenAt, floor int64
 	// kept is the slot before which cells are forgotten: floor, or further
-	// back where a baseline is estimated from the past.
+	// back where a baseline is estimated from the past, or a census may last.
 	kept int64
 	// epochs are the versions of the stanza under which looks that can still
 	// be re-run fell due, oldest first.
@@ -74,6 +74,9 @@ func (ix *indicator) pass(boundary int64) {
 	ix.frozenAt = max(ix.frozenAt, ix.frozen(ix.due(boundary)))
 	ix.floor = ix.frozenAt + 1 - ix.reach
 	ix.kept = ix.frozenAt + 1 - max(ix.reach, historyOf(ix.cfg))
+	if ix.cfg.Exposure == config.Census { // a level of then may still hold there
+		ix.kept = ix.cal.Slot(ix.cal.Start(ix.kept+1).Add(-ix.cfg.CensusExpiry) - 1)
+	}
 	ix.forget()
 }
 
