@@ -126,7 +126,7 @@ func (s *series) encodeReferences(b []byte) []byte {
 }
 
 func (r *reference) encode(b []byte) []byte {
-	for _, v := range [...]int64{r.from, r.period, int64(r.of), r.events, r.begin, r.end, r.leftOut, r.peers} {
+	for _, v := range [...]int64{r.from, r.period, r.of, r.events, r.begin, r.end, r.leftOut, r.peers} {
 		b = binary.AppendVarint(b, v)
 	}
 	b = binary.AppendUvarint(b, r.exposure.Hi)

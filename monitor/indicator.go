@@ -32,6 +32,8 @@ type indicator struct {
 	// epochs are the versions of the stanza under which looks that can still
 	// be re-run fell due, oldest first.
 	epochs []epoch
+	// digests are those of the baselines that are estimated.
+	digests map[*config.Baseline]int64
 }
 
 // epoch is one version of an indicator's stanza.
@@ -44,7 +46,7 @@ type epoch struct {
 }
 
 func newIndicator(index int, cfg *config.Indicator) *indicator {
-	ix := &indicator{index: index, cfg: cfg, cal: NewCalendar(cfg.Every, cfg.Zone), nextDue: Never, frozenAt: math.MinInt64}
+	ix := &indicator{index: index, cfg: cfg, cal: NewCalendar(cfg.Every, cfg.Zone), nextDue: Never, frozenAt: math.MinInt64, digests: map[*config.Baseline]int64{}}
 	if cfg.Exposure == config.Clock {
 		ix.clock = newClockRule(cfg.Clock, cfg.GrainDigits)
 	}

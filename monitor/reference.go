@@ -1,6 +1,9 @@
 package monitor
 
 import (
+	"crypto/sha256"
+	"encoding/binary"
+	"fmt"
 	"slices"
 
 	"tailbell/config"
@@ -22,8 +25,8 @@ func (e *Engine) refresh(ix *indicator, ep *epoch, boundary int64) {
 		if b == nil || (b.Kind != config.Trailing && b.Kind != config.Peers) || s.birth >= boundary {
 			continue
 		}
-		period := NewCalendar(b.Refresh, ix.cal.zone).Slot(ix.cal.Start(boundary))
-		if n := len(s.references); n > 0 && s.references[n-1].period == period && s.references[n-1].of == b.Kind {
+		period, of := NewCalendar(b.Refresh, ix.cal.zone).Slot(ix.cal.Start(boundary)), ix.digest(b)
+		if n := len(s.references); n > 0 && s.references[n-1].period == period && s.references[n-1].of == of {
 			continue
 		}
 		var r reference
@@ -42,13 +45,29 @@ func (e *Engine) refresh(ix *indicator, ep *epoch, boundary int64) {
 			}
 			r = p.without(s, b, ix.cfg.GrainDigits)
 		}
-		r.from, r.period, r.of, r.strata = boundary, period, b.Kind, nil
+		r.from, r.period, r.of, r.strata = boundary, period, of, nil
 		s.references = append(s.references, r)
 		if s.comparator == nil && b.Kind == config.Trailing && r.events >= b.MinEvents && r.weighted > 0 {
 			s.comparator = &r
 		}
 		e.touch(s)
 	}
+}
+
+// digest tells apart how references are counted: where the baseline changes in
+// that, another one is counted at once.
+func (ix *indicator) digest(b *config.Baseline) int64 {
+	if d, ok := ix.digests[b]; ok {
+		return d
+	}
+	text := fmt.Append(nil, b.Kind, b.SpanSlots, b.GapSlots, b.Refresh)
+	if b.Strata != nil {
+		text = fmt.Append(text, b.Strata.By, b.Strata.Factors)
+	}
+	sum := sha256.Sum256(text)
+	d := int64(binary.LittleEndian.Uint64(sum[:]))
+	ix.digests[b] = d
+	return d
 }
 
 func estimated(cfg *config.Indicator) bool {

@@ -199,7 +199,7 @@ func (r *reader) references(s *series) {
 	compared := r.flag()
 	for range r.length() {
 		x := reference{
-			from: r.int(), period: r.int(), of: config.BaselineKind(r.int()), events: r.int(),
+			from: r.int(), period: r.int(), of: r.int(), events: r.int(),
 			begin: r.int(), end: r.int(), leftOut: r.int(), peers: r.int(),
 			exposure: r.quantity(), weighted: r.float(), between: r.float(),
 		}

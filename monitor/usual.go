@@ -29,8 +29,8 @@ type reference struct {
 	leftOut    int64
 	// strata is the exposure by stratum, while it is being counted.
 	strata []Quantity
-	// of is the kind of baseline that it was counted for.
-	of config.BaselineKind
+	// of is the digest of how it was counted, see digest.
+	of int64
 	// peers is how many other series were counted, and between how much more
 	// they differ than chance alone would make them: variance over mean.
 	peers   int64
