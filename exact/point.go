@@ -137,6 +137,9 @@ func binomialPoint(k, n float64, p, q dd) point {
 		return point{d.hi, d.lo, 1}
 	}
 	m := n - k
+	if m <= 8 && m < k {
+		k, m, p, q = m, k, q, p
+	}
 	if k <= 8 && p.hi > 0x1p-60 && n*p.hi < 500 && p.lo == 0 {
 		d := q.log().mulFloat(m)
 		w := n * p.hi
