@@ -150,15 +150,17 @@ func (e *Engine) step(a *alert, s life.Step) {
 
 // take takes a step of the alert, if its condition allows.
 func (e *Engine) take(a *alert, s life.Step) error {
+	if !a.record.Allows(s.Kind) {
+		_, err := a.record.Take(s) // says why not, and changes nothing
+		return err
+	}
 	if a.pending && s.Kind != life.StepWithdrawn {
 		e.settle(a)
 	}
 	a.pending = false
-	before := a.record.Since
 	a.record.Since = e.since(a)
 	notices, err := a.record.Take(s)
 	if err != nil {
-		a.record.Since = before
 		return err
 	}
 	e.steps = append(e.steps, notices...)

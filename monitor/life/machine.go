@@ -78,6 +78,12 @@ func (r *Record) Take(s Step) ([]Notice, error) {
 	return notices, nil
 }
 
+// Allows reports whether the condition allows a step of the kind.
+func (r *Record) Allows(k StepKind) bool {
+	_, ok := after[k][r.Condition]
+	return ok
+}
+
 // closesAfter reports whether the alert is now both returned and
 // acknowledged.
 func (r *Record) closesAfter(k StepKind) bool {
