@@ -71,7 +71,7 @@ func (w *twin) look(ix *twinIndicator) {
 				here = append(here, key)
 			case filling:
 				w.account.Filling++
-			case missing, overfull, unexposed:
+			case missing, overfull, unexposed, unbased:
 				w.account.WithheldLooks++
 			}
 		}
