@@ -62,7 +62,7 @@ const (
 )
 
 // log returns the natural logarithm of a > 0: absolute error about 2^-53 |r|^3/3 with
-// |r| <= 1/362, that is under 1e-24, and relative error under 2^-52 of log a near a = 1.
+// |r| <= 1/362, that is under 4e-24, and relative error under 2^-52 of log a near a = 1.
 func (a dd) log() dd {
 	e := 0.0
 	if a.hi < 0x1p-960 {

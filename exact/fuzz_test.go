@@ -194,6 +194,9 @@ func FuzzTwoSamples(f *testing.F) {
 		}
 		if alpha > 1e-12 && alpha < 1 && n >= 0 && n <= 100 && m <= 1e6 {
 			for _, how := range []exact.Sides{exact.MinLike, exact.Blaker} {
+				if l, u := b.OddsRatioBoundsBy(n%20, max(alpha, 1e-3), how); l > u*(1+1e-14) {
+					t.Errorf("%+v at %d, %v: bounds %v %v", b, n%20, how, l, u)
+				}
 				if l, u := a.RatioBoundsBy(n, alpha, how); l > u*(1+1e-14) {
 					t.Errorf("%+v at %d, %v: bounds %v %v", a, n, how, l, u)
 				}

@@ -29,9 +29,9 @@ func erfcx(y float64) float64 {
 	if y < 0 {
 		return 2*expTwo(y*y, 0) - erfcx(-y)
 	}
-	if y > 100 {
+	if y > 200 {
 		r := 1 / (y * y)
-		return math.FMA(r, math.FMA(r, 0.75, -0.5), 1) / (y * math.Sqrt(math.Pi))
+		return math.FMA(r, math.FMA(r, math.FMA(r, -1.875, 0.75), -0.5), 1) / (y * math.Sqrt(math.Pi))
 	}
 	t := 256 / (4 + y)
 	i := min(int(t), 63)
