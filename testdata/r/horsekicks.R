@@ -7,7 +7,6 @@
 # that 280 looks bring by chance.
 
 rows <- read.csv(commandArgs(trailingOnly = TRUE)[1], check.names = FALSE)
-rows <- rows[rows$series != "record/ends", ]
 deaths <- rows$events
 exposure <- rows[["exposure[corps-years]"]]
 stopifnot(nrow(rows) == 280, sum(deaths) == 196, sum(exposure) == 280, length(unique(rows$series)) == 14)
