@@ -11,6 +11,9 @@ import (
 // whole writes a count in groups of three.
 func whole(n int64) string { return grouped(strconv.FormatInt(n, 10)) }
 
+// Whole writes a count in groups of three digits.
+func Whole(n int64) string { return whole(n) }
+
 // Amount writes a number of things by their plural noun: "1 row", "1,204 rows",
 // "0 rows".
 func Amount(n int64, nouns string) string {

@@ -64,8 +64,7 @@ func lookAside(setup *config.Setup, use func(*store.Store) error) (err error) {
 			return fmt.Errorf("no daemon runs, and its store can't be read: %w", err)
 		}
 		if found, want := st.Identity(), identityOf(setup, n); found != want {
-			err = fmt.Errorf("the store in %s holds %s, wanted is %s: %w", setup.Folder, found, want, store.ErrIdentity)
-			return errors.Join(err, st.Close())
+			return errors.Join(wrongStore(st.Path(), found, want), st.Close())
 		}
 		err = errors.Join(use(st), st.Close())
 		if err != nil {

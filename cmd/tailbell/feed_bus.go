@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"time"
 
+	"tailbell/alert/words"
 	"tailbell/ingest/bus"
 	"tailbell/ingest/control"
 )
@@ -67,8 +68,8 @@ func (f *feeding) broken(ctx context.Context, err error) error {
 	if f.again {
 		twice = "nothing is counted twice, except rows of indicators that keep no ids"
 	}
-	return fmt.Errorf("%w\nOf %s, %d are stored for certain. Feed the same files again: %s",
-		err, amount(len(f.h.Entries), "rows"), f.done, twice)
+	return fmt.Errorf("%w\nOf %s, %s stored for certain. Feed the same files again, with or without a daemon: %s",
+		err, amount(len(f.h.Entries), "rows"), words.Whole(int64(f.done))+" "+areIs(f.done), twice)
 }
 
 // ask asks the daemon how it is.

@@ -8,6 +8,7 @@ import (
 	"slices"
 	"strings"
 
+	"tailbell/alert/words"
 	"tailbell/config"
 	"tailbell/ingest/history"
 	"tailbell/ingest/wire"
@@ -87,10 +88,7 @@ func (c census) areRows(series []string) string {
 	for _, s := range series {
 		n += c.rows[s]
 	}
-	if n == 1 {
-		return amount(n, "rows") + " is"
-	}
-	return amount(n, "rows") + " are"
+	return amount(n, "rows") + " " + areIs(n)
 }
 
 // name names the first of the series with their rows.
@@ -139,18 +137,19 @@ func (f *feeding) became(now *statusReply) error {
 	b, a := totalOf(&f.before), totalOf(now)
 	elements := a.Elements - b.Elements
 	repeats, outdated, refused, unmonitored := a.Repeat-b.Repeat, a.Outdated-b.Outdated, a.Refused-b.Refused, a.Unmonitored-b.Unmonitored
-	parts := []string{fmt.Sprintf("%d counted", elements-repeats-outdated-refused-unmonitored)}
+	parts := []string{words.Whole(elements-repeats-outdated-refused-unmonitored) + " counted"}
 	add := func(n int64, text string) {
 		if n > 0 {
 			parts = append(parts, text)
 		}
 	}
-	replaced := a.Replaced - b.Replaced
-	add(replaced, fmt.Sprintf("%d of an earlier revision replaced", replaced))
+	withheld, replaced := a.Withheld-b.Withheld, a.Replaced-b.Replaced
+	add(withheld, words.Whole(withheld)+" more in slots that lack their other side, events or exposure")
+	add(replaced, words.Whole(replaced)+" of an earlier revision replaced")
 	add(repeats, amount(repeats, "repeats"))
-	add(outdated, fmt.Sprintf("%d outdated", outdated))
-	add(refused, fmt.Sprintf("%d refused", refused))
-	add(unmonitored, fmt.Sprintf("%d unmonitored", unmonitored))
+	add(outdated, words.Whole(outdated)+" outdated")
+	add(refused, words.Whole(refused)+" refused")
+	add(unmonitored, words.Whole(unmonitored)+" unmonitored")
 	acts, actsRefused := a.Acts-b.Acts, a.ActsRefused-b.ActsRefused
 	add(acts, amount(acts, "acts")+" taken")
 	add(actsRefused, amount(actsRefused, "acts")+" refused")

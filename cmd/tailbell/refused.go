@@ -31,7 +31,8 @@ func askRefused(c *cobra.Command, path string, req refusedRequest) ([]refusedRow
 		return nil, err
 	}
 	if req.Partition < 0 || req.Partition >= setup.Partitions {
-		return nil, &usageError{fmt.Errorf("--partition %d: there %s, numbered from 0", req.Partition, areMany(setup.Partitions, "partitions"))}
+		return nil, &usageError{fmt.Errorf("--partition %d: there %s %s, numbered from 0",
+			req.Partition, areIs(setup.Partitions), amount(setup.Partitions, "partitions"))}
 	}
 	rows := []refusedRow{}
 	err = askOrLook(c.Context(), path, verbRefused, req, &rows, func(st *store.Store) error {

@@ -125,10 +125,18 @@ func checkFolder(setup *config.Setup) error {
 			return err
 		}
 		if found != want {
-			return fmt.Errorf("store %s: it holds %s, wanted is %s: %w", path, found, want, store.ErrIdentity)
+			return wrongStore(path, found, want)
 		}
 	}
 	return nil
+}
+
+// wrongStore is the error of a store that is another one's.
+func wrongStore(path string, found, want store.Identity) error {
+	if found.Deployment != want.Deployment {
+		return fmt.Errorf("%s holds the deployment %q, the set-up is of %q: %w", path, found.Deployment, want.Deployment, store.ErrIdentity)
+	}
+	return fmt.Errorf("%s holds %s, the set-up wants %s: %w", path, found, want, store.ErrIdentity)
 }
 
 // newLog writes to standard error: for people on a terminal, else JSON lines.

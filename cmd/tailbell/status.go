@@ -91,7 +91,7 @@ func writePartition(w io.Writer, name string, p *partStatus) error {
 		}
 	}
 	for _, o := range p.Outlets {
-		if err := say(w, "  outlet %s: %s delivered, %d waiting", o.Name, amount(o.Delivered, "steps"), o.Waiting); err != nil {
+		if err := say(w, "  outlet %s: %s delivered, %s waiting", o.Name, amount(o.Delivered, "steps"), words.Whole(int64(o.Waiting))); err != nil {
 			return err
 		}
 	}
@@ -116,20 +116,21 @@ func amount[N ~int | ~int64 | ~uint64](n N, nouns string) string {
 	return words.Amount(int64(n), nouns)
 }
 
-// areMany writes "is 1 row", "are 2 rows".
-func areMany(n int, nouns string) string {
+// areIs is the verb after so many things.
+func areIs(n int) string {
 	if n == 1 {
-		return "is " + amount(n, nouns)
+		return "is"
 	}
-	return "are " + amount(n, nouns)
+	return "are"
 }
 
 // writeAccount prints what became of every element.
 func writeAccount(w io.Writer, a monitor.Account) error {
-	if err := say(w, "  %s: %d counted, %d withheld, %s, %d replaced, %d outdated, %d refused, %d unmonitored",
-		amount(a.Elements, "elements"), a.Counted, a.Withheld, amount(a.Repeat, "repeats"), a.Replaced, a.Outdated, a.Refused, a.Unmonitored); err != nil {
+	n := words.Whole
+	if err := say(w, "  %s: %s counted, %s withheld, %s, %s replaced, %s outdated, %s refused, %s unmonitored",
+		amount(a.Elements, "elements"), n(a.Counted), n(a.Withheld), amount(a.Repeat, "repeats"), n(a.Replaced), n(a.Outdated), n(a.Refused), n(a.Unmonitored)); err != nil {
 		return err
 	}
-	return say(w, "  %s made when due, %d withheld, %d made again because data changed; %s came late; %s, %d refused",
-		amount(a.Looks, "looks"), a.WithheldLooks, a.Reruns, amount(a.Late, "elements"), amount(a.Acts, "acts"), a.ActsRefused)
+	return say(w, "  %s made when due, %s withheld, %s made again because data changed; %s came late; %s, %s refused",
+		amount(a.Looks, "looks"), n(a.WithheldLooks), n(a.Reruns), amount(a.Late, "elements"), amount(a.Acts, "acts"), n(a.ActsRefused))
 }

@@ -60,7 +60,7 @@ type statusReply struct {
 
 type partStatus struct {
 	Number     int             `json:"partition"`
-	Position   uint64          `json:"position"`
+	Position   uint64          `json:"position"` // up to which all is committed
 	End        uint64          `json:"stream_end"`
 	Clock      *time.Time      `json:"clock"` // null before the first message that tells a time
 	History    bool            `json:"history_time"`
@@ -131,7 +131,7 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 			}
 		}
 		err = p.loop.Do(ctx, func(e *monitor.Engine) {
-			s.Position, s.History = e.Position(), e.InHistory()
+			s.History = e.InHistory()
 			if clock := e.Clock(); clock != monitor.Beginning {
 				at := clock.Time()
 				s.Clock = &at
@@ -150,6 +150,9 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 		if err != nil {
 			return nil, err
 		}
+		p.mu.Lock()
+		s.Position = p.mu.position
+		p.mu.Unlock()
 		outlets, err := p.store.OutletState()
 		if err != nil {
 			return nil, err
