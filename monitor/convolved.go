@@ -1,6 +1,10 @@
 package monitor
 
-import "math"
+import (
+	"math"
+
+	"tailbell/exact"
+)
 
 // independent is one of the independent counts in a sum.
 type independent interface {
@@ -22,15 +26,16 @@ func (c convolved) Upper(k int64) float64 {
 	if k <= 0 {
 		return 1
 	}
-	below, top := make([]float64, k), 0.0
+	below, pmf, top := make([]float64, k), make([]float64, k), 0.0
 	below[0] = 1
 	for _, p := range c.parts {
+		masses(pmf, p)
+		tail := p.Upper(k) // of what is missing to k when the sum is s
 		for s := range below {
-			if below[s] > 0 {
-				top += below[s] * p.Upper(k-int64(s))
-			}
+			top += float64(below[s] * tail)
+			tail += pmf[int(k)-1-s]
 		}
-		convolve(below, p)
+		convolve(below, pmf)
 	}
 	return min(top, 1)
 }
@@ -40,10 +45,11 @@ func (c convolved) Lower(k int64) float64 {
 	if k < 0 {
 		return 0
 	}
-	upTo := make([]float64, k+1)
+	upTo, pmf := make([]float64, k+1), make([]float64, k+1)
 	upTo[0] = 1
 	for _, p := range c.parts {
-		convolve(upTo, p)
+		masses(pmf, p)
+		convolve(upTo, pmf)
 	}
 	sum := 0.0
 	for _, v := range upTo {
@@ -53,18 +59,48 @@ func (c convolved) Lower(k int64) float64 {
 }
 
 // convolve replaces the probabilities of a sum by those of the sum and one
-// more part, as far as the slice reaches.
-func convolve(sum []float64, p independent) {
-	pmf := make([]float64, len(sum))
-	for j := range pmf {
-		pmf[j] = p.PMF(int64(j))
+// more part, as far as the slice reaches. Products are rounded by themselves,
+// so that the result is the same on every machine.
+func convolve(sum, pmf []float64) {
+	some := len(pmf)
+	for some > 1 && pmf[some-1] == 0 {
+		some--
 	}
 	for s := len(sum) - 1; s >= 0; s-- {
 		v := 0.0
-		for j := 0; j <= s; j++ {
-			v += sum[s-j] * pmf[j]
+		for j, m := range pmf[:min(s+1, some)] {
+			v += float64(sum[s-j] * m)
 		}
 		sum[s] = v
+	}
+}
+
+// masses fills in P(X = j) for each j from 0, by the ratios of neighbours,
+// which are exact in form; every so often, and where they are tiny, afresh.
+// Beyond the mean those under 1e-290 count as nothing.
+func masses(pmf []float64, p independent) {
+	var n, a, b float64
+	switch x := p.(type) {
+	case exact.BetaBinomial:
+		n, a, b = float64(x.N), x.A, x.B
+	case exact.Binomial:
+		n = float64(x.N)
+		a, b = x.P, x.Q
+	}
+	_, spread := p.(exact.BetaBinomial)
+	mean := n * (a / (a + b))
+	for j := range pmf {
+		before := float64(j) - 1
+		switch {
+		case float64(j) > n, float64(j) > mean && j > 0 && pmf[j-1] < 1e-290:
+			pmf[j] = 0
+		case j%32 == 0 || pmf[j-1] < 1e-290 || a == 0 || b == 0:
+			pmf[j] = p.PMF(int64(j))
+		case spread:
+			pmf[j] = pmf[j-1] * ((n - before) / float64(j)) * ((a + before) / (b + (n - float64(j))))
+		default:
+			pmf[j] = pmf[j-1] * ((n - before) / float64(j)) * (a / b)
+		}
 	}
 }
 
