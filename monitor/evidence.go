@@ -71,11 +71,7 @@ func expected(u *usual, o *opportunity) float64 {
 	if o.trials == nil {
 		return rate * o.weighted
 	}
-	sum := 0.0
-	for _, t := range o.trials {
-		sum += float64(float64(t.n) * timesOdds(rate, t.factor))
-	}
-	return sum
+	return mean(o.trials, min(rate, 1))
 }
 
 func fillRate(ev *life.Evidence, u *usual, o *opportunity) {

@@ -60,12 +60,20 @@ func (u *usual) margin(d direction) float64 {
 }
 
 // rate is the usual rate, or the usual proportion: stated, or estimated from
-// the reference (half an event where it holds none).
+// the reference (half an event where it holds none, and half a trial without
+// one where all hold one).
 func (u *usual) rate() float64 {
-	if u.ref == nil {
+	switch {
+	case u.ref == nil:
 		return u.base.Rate
+	case u.cfg.Measure == config.Proportion:
+		return within(u.ref.events, u.ref.exposureFloat(u)) / u.ref.weighted
 	}
 	return max(float64(u.ref.events), 0.5) / u.ref.weighted
+}
+
+func within(events int64, trials float64) float64 {
+	return min(max(float64(events), 0.5), trials-0.5)
 }
 
 // predictive is the spread of a count around a mean that was itself estimated
@@ -104,7 +112,8 @@ func newProportionLaw(u *usual, margin float64, o *opportunity) law {
 
 // timesOdds multiplies the odds of a proportion.
 func timesOdds(theta, factor float64) float64 {
-	return theta * factor / (1 - theta + theta*factor)
+	odds := float64(theta * factor)
+	return odds / (1 - theta + odds)
 }
 
 // partOf is the law of the events in so many trials alike, spread so much more
@@ -114,7 +123,7 @@ func partOf(n int64, theta, spread float64) independent {
 	if spread <= 1 || n < 2 {
 		return exact.NewBinomial(n, theta)
 	}
-	spread = min(spread, 0.9*float64(n)+0.1)
+	spread = min(spread, float64(0.9*float64(n))+0.1)
 	size := float64(n-1)/(spread-1) - 1
 	return exact.BetaBinomial{N: n, A: theta * size, B: (1 - theta) * size}
 }

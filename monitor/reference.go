@@ -43,7 +43,7 @@ func (e *Engine) refresh(ix *indicator, ep *epoch, boundary int64) {
 				p = ix.poolOf(ep, b, boundary)
 				pools[b] = p
 			}
-			r = p.without(s, b, ix.cfg.GrainDigits)
+			r = p.without(s, b, ix.cfg)
 		}
 		r.from, r.period, r.of, r.strata = boundary, period, of, nil
 		s.references = append(s.references, r)
@@ -96,7 +96,7 @@ func (ix *indicator) countReference(s *series, b *config.Baseline, r *reference)
 			r.strata[i] = r.strata[i].add(q)
 		}
 	})
-	r.weigh(b, ix.cfg.GrainDigits)
+	r.weigh(b, ix.cfg)
 }
 
 func strataOf(b *config.Baseline) int {
@@ -106,9 +106,12 @@ func strataOf(b *config.Baseline) int {
 	return len(b.Strata.Factors)
 }
 
-// weigh sums the exposure of the strata, plain and by their factors.
-func (r *reference) weigh(b *config.Baseline, digits int) {
+// weigh sums the exposure of the strata, plain and by their factors. For a
+// proportion, whose factors multiply the odds, it comes to so many trials as
+// would bring these events at the usual proportion itself.
+func (r *reference) weigh(b *config.Baseline, cfg *config.Indicator) {
 	r.exposure, r.weighted = Quantity{}, 0
+	var list []trials
 	for i, q := range r.strata {
 		r.exposure = r.exposure.add(q)
 		factor := 1.0
@@ -116,9 +119,42 @@ func (r *reference) weigh(b *config.Baseline, digits int) {
 			factor = b.Strata.Factors[i]
 		}
 		if !q.IsZero() {
-			r.weighted += float64(factor * q.Float(digits))
+			r.weighted += float64(factor * q.Float(cfg.GrainDigits))
+		}
+		if n, ok := q.Int64(); ok && n > 0 {
+			list = append(list, trials{n, factor})
 		}
 	}
+	if cfg.Measure == config.Proportion && b.Strata != nil && len(list) > 0 {
+		events := within(r.events, r.exposure.Float(cfg.GrainDigits))
+		r.weighted = events / usualOf(events, list)
+	}
+}
+
+// usualOf returns the usual proportion at which the trials, each with its
+// factor of the odds, bring so many events on average.
+func usualOf(events float64, list []trials) float64 {
+	lo, hi := 0.0, 1.0
+	for {
+		theta := lo + (hi-lo)/2
+		if theta == lo || theta == hi {
+			return theta
+		}
+		if mean(list, theta) < events {
+			lo = theta
+		} else {
+			hi = theta
+		}
+	}
+}
+
+// mean is how many events the trials bring on average at the usual proportion.
+func mean(list []trials, usual float64) float64 {
+	sum := 0.0
+	for _, t := range list {
+		sum += float64(float64(t.n) * timesOdds(usual, t.factor))
+	}
+	return sum
 }
 
 // eventsOf returns the slot's events, and whether they are known.
@@ -172,7 +208,7 @@ func (r *reference) index() float64 {
 
 // without returns the reference of one series: all the others, and how much
 // they differ among themselves.
-func (p *pool) without(s *series, b *config.Baseline, digits int) reference {
+func (p *pool) without(s *series, b *config.Baseline, cfg *config.Indicator) reference {
 	r := p.sum
 	r.strata = slices.Clone(p.sum.strata)
 	r.peers = int64(len(p.each))
@@ -186,7 +222,7 @@ func (p *pool) without(s *series, b *config.Baseline, digits int) reference {
 		}
 		index -= own.index()
 	}
-	r.weigh(b, digits)
+	r.weigh(b, cfg)
 	if r.peers >= 2 && r.events > 0 {
 		// The dispersion index: sum of (x - mean)^2 / mean over the others,
 		// by their number less one.
