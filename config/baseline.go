@@ -208,13 +208,18 @@ func (s section) readReference(in *Indicator) (int64, Decimal) {
 // perUnit writes "1,000 device-days", or "device-day" for one.
 func perUnit(in *Indicator) string {
 	if in.Per == 1 {
-		if one, plural := strings.CutSuffix(in.Unit, "s"); plural && !strings.HasSuffix(one, "s") {
-			return one
-		}
-		return in.Unit
+		return oneOf(in.Unit)
 	}
 	if in.Per == math.Trunc(in.Per) && in.Per < 1e15 {
 		return grouped(int64(in.Per)) + " " + in.Unit
 	}
 	return fmt.Sprintf("%g %s", in.Per, in.Unit)
+}
+
+// oneOf is the singular of a unit that only takes an s.
+func oneOf(unit string) string {
+	if one, plural := strings.CutSuffix(unit, "s"); plural && !strings.HasSuffix(one, "s") {
+		return one
+	}
+	return unit
 }

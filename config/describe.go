@@ -44,7 +44,11 @@ func (p *prose) setup(s *Setup) {
 	}
 	p.line("The stream of observations holds up to %s%s; a full stream refuses what is published.", FormatSize(s.Bus.MaxBytes), age)
 	if s.Partitions > 1 {
-		p.line("Series are spread over %d partitions by the first %s of their names.", s.Partitions, counted(s.KeyParts, "part"))
+		first := "first part"
+		if s.KeyParts > 1 {
+			first = "first " + counted(s.KeyParts, "part")
+		}
+		p.line("Series are spread over %d partitions by the %s of their names.", s.Partitions, first)
 	}
 	if s.History {
 		p.line("Time is history time: it moves with the data alone.")
@@ -85,7 +89,7 @@ func (p *prose) counting(in *Indicator) {
 			p.line("  Exposure is reported, and held exactly to %s %s.", grainText(in), in.Unit)
 		}
 	case Clock:
-		p.line("  Exposure comes from the clock: %s %s in %s, and need not be reported.", in.Clock.Size, in.Unit, elapsed(in.Clock.Per))
+		p.line("  Exposure comes from the clock: %s in %s, and need not be reported.", ofUnit(in.Clock.Size, in.Unit), elapsed(in.Clock.Per))
 	}
 	if in.Exposure == Census {
 		p.line("  It is a census: the last level reported is carried forward, and shown as provisional, until the next is reported or %s have passed.",
@@ -173,6 +177,30 @@ func counted(n int, noun string) string {
 		return "1 " + noun
 	}
 	return grouped(int64(n)) + " " + noun + "s"
+}
+
+// ofUnit writes an exposure with its unit: "1 day", "9,131 days".
+func ofUnit(d Decimal, unit string) string {
+	text := d.String()
+	whole, fraction, point := strings.Cut(text, ".")
+	if n, err := strconv.ParseInt(whole, 10, 64); err == nil {
+		whole = grouped(n)
+	}
+	if point {
+		whole += "." + fraction
+	}
+	if text == "1" {
+		unit = oneOf(unit)
+	}
+	return whole + " " + unit
+}
+
+// aboutMany writes "about 1 look" or "about 12 looks".
+func aboutMany(f float64, noun string) string {
+	if text := about(f); text != "1" {
+		return "about " + text + " " + noun + "s"
+	}
+	return "about 1 " + noun
 }
 
 // about writes a number with three figures.

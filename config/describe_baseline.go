@@ -52,7 +52,7 @@ func usualText(in *Indicator, b *Baseline) string {
 		}
 		return fmt.Sprintf("the known rate of %s %s per %s", number(b.Rate*in.Per), in.EventNoun, perUnit(in))
 	case Reference:
-		return fmt.Sprintf("a reference of %s %s in %s %s", grouped(b.Events), in.EventNoun, b.Exposure, in.Unit)
+		return fmt.Sprintf("a reference of %s %s in %s", grouped(b.Events), in.EventNoun, ofUnit(b.Exposure, in.Unit))
 	case Trailing:
 		return fmt.Sprintf("what each counted itself in %s that end %s before", length, lengthWords(in.slotLength(b.GapSlots)))
 	case Peers:

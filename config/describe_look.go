@@ -7,7 +7,7 @@ import (
 
 func (p *prose) window(in *Indicator, w *Window) {
 	if in.SlotLooks {
-		p.line("  Window %s: looked at every %s, about %s looks a year.", w.Name, spanWords(in.slotLength(w.Step)), about(in.looksPerYear(w)))
+		p.line("  Window %s: looked at every %s, %s a year.", w.Name, spanWords(in.slotLength(w.Step)), aboutMany(in.looksPerYear(w), "look"))
 	}
 	if in.ArrivalLooks {
 		p.line("  Window %s: looked at when an event comes, over exactly the span of %s that ends with it (more events than usual only).",
