@@ -20,7 +20,7 @@ func Record(r *life.Record, width int) string {
 	if !sameLook(&r.Worst, &r.Opening) {
 		paragraphs = append(paragraphs, "At its strongest: "+Sentence(r, &r.Worst))
 	}
-	paragraphs = append(paragraphs, afterwards(r, zone), sources(r))
+	paragraphs = append(paragraphs, afterwards(r, zone), turnedOut(r), sources(r))
 	for _, p := range nonEmpty(paragraphs...) {
 		b.WriteString(wrap(p, width, "    ", "    "))
 	}
@@ -59,6 +59,14 @@ func numbers(e *life.Evidence) string {
 	return b.String()
 }
 
+// turnedOut is the mark that stands.
+func turnedOut(r *life.Record) string {
+	if r.Mark == life.NotMarked {
+		return ""
+	}
+	return "What it turned out to be, as people have marked it: " + clean(string(r.Mark)) + "."
+}
+
 func sources(r *life.Record) string {
 	if len(r.IDs) == 0 {
 		return ""
@@ -78,6 +86,9 @@ func sources(r *life.Record) string {
 func history(s *life.Step, r *life.Record, zone *time.Location) string {
 	n := life.Notice{Step: *s, Record: *r}
 	text := stamp(s.At.In(zone)) + "  " + strings.ToLower(what(&n))
+	if s.Kind == life.StepMarked {
+		text = stamp(s.At.In(zone)) + "  " + marked(s)
+	}
 	if s.By != "" {
 		text += " by " + clean(s.By)
 	}

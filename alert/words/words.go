@@ -67,9 +67,12 @@ func Line(n *life.Notice) string {
 	switch n.Step.Kind {
 	case life.StepOpened, life.StepWorsened, life.StepCorrected:
 		return text + ": " + brief(evidenceOf(&n.Step, &r.Opening), zone)
-	case life.StepAcknowledged, life.StepNote, life.StepClosed, life.StepReturned, life.StepWithdrawn:
+	case life.StepAcknowledged, life.StepNote, life.StepClosed, life.StepReturned, life.StepWithdrawn, life.StepMarked:
 	}
 	text += ", " + noun(&r.Opening)
+	if n.Step.Kind == life.StepMarked {
+		text += ", " + marked(&n.Step)
+	}
 	if n.Step.By != "" {
 		text += ", by " + clean(n.Step.By)
 	}
@@ -103,9 +106,9 @@ func Paragraphs(n *life.Notice) []string {
 		return nonEmpty(subject(r)+": no window signals any more ("+story(r, zone)+")."+afterwards(r, zone)+" "+
 			standing(r)+" A return is no proof that the cause is gone.", reasonOf(&n.Step))
 	case life.StepWithdrawn:
-		return nonEmpty(subject(r) + ": withdrawn: data corrected. With the data as they now stand the look due on " +
+		return nonEmpty(subject(r) + ": withdrawn, as the data were corrected. With the data as they now stand the look due on " +
 			moment(r.Opened.In(zone)) + " gives no signal. This is not a return to usual: with right data it would not have rung.")
-	case life.StepAcknowledged, life.StepClosed, life.StepNote:
+	case life.StepAcknowledged, life.StepClosed, life.StepNote, life.StepMarked:
 		return nonEmpty(acted(n, zone))
 	}
 	return nonEmpty(subject(r) + ": " + clean(string(n.Step.Kind)) + ".")
@@ -163,11 +166,13 @@ func acted(n *life.Notice, zone *time.Location) string {
 		verb = "acknowledged" + by
 	case life.StepClosed:
 		verb = "closed" + by
-		if by == "" {
-			verb = "closed: " + clean(s.Why)
+		if by == "" && s.Why != "" {
+			verb = clean(s.Why) + ", so closed"
 		}
 	case life.StepNote:
 		verb = "note" + by
+	case life.StepMarked:
+		verb = marked(s) + by
 	case life.StepOpened, life.StepWorsened, life.StepCorrected, life.StepReturned, life.StepWithdrawn:
 		verb = string(s.Kind)
 	}
@@ -180,6 +185,14 @@ func acted(n *life.Notice, zone *time.Location) string {
 		text += " It still signals."
 	}
 	return text
+}
+
+// marked says what a person says an alert turned out to be.
+func marked(s *life.Step) string {
+	if s.Mark == life.NotMarked {
+		return "mark taken back"
+	}
+	return "marked as " + clean(string(s.Mark))
 }
 
 // story names the alert by its opening evidence.
@@ -241,6 +254,8 @@ func what(n *life.Notice) string {
 		return "CLOSED"
 	case life.StepNote:
 		return "NOTE"
+	case life.StepMarked:
+		return "MARKED"
 	}
 	return strings.ToUpper(clean(string(n.Step.Kind)))
 }

@@ -98,7 +98,16 @@ func wardLife(t *testing.T) []life.Notice {
 	n = step(&r, 7, life.StepClosed, at(t, zone, "2026-05-02 00:00"), life.Closed)
 	n.Step.Why, r.Steps[6].Why = "returned and acknowledged", "returned and acknowledged"
 	n.Record = r
-	return append(notices, n)
+	notices = append(notices, n)
+	for _, mark := range []life.Mark{life.MarkChance, life.NotMarked, life.MarkReal} {
+		r.Mark = mark
+		n = step(&r, len(r.Steps)+1, life.StepMarked, at(t, zone, "2026-05-04 09:00"), life.Closed)
+		n.Step.By, n.Step.Why, n.Step.Mark = "M. Quell", "reviewed", mark
+		r.Steps[len(r.Steps)-1] = n.Step
+		n.Record = r
+		notices = append(notices, n)
+	}
+	return notices
 }
 
 func lowerProportion(t *testing.T) life.Notice {
