@@ -162,8 +162,12 @@ func (ix *indicator) look(s *series, ep *epoch, window int, boundary int64, at I
 	return l
 }
 
-// test fills in which tails signal.
+// test fills in which tails signal. Where nothing can have been reported yet
+// nothing can be tested.
 func (l *look) test(u *usual, o *opportunity) {
+	if o.weighted == 0 {
+		return
+	}
 	if u.cfg.Upper && l.events > 0 && !farBelow(u, o, l.events) {
 		p := newLaw(u, upper, o)
 		if p.Upper(l.events) <= u.cfg.PLimit {
