@@ -165,11 +165,59 @@ func renderStep(b *bytes.Buffer, n *life.Notice) {
 		fmt.Fprintf(b, "    %s to %s: %d in %s %s, expected %.4g, p %.5g, critical %d, late %d, rate %.4g (%.4g to %.4g)\n",
 			e.Window, e.To.Format("2006-01-02"), e.Events, e.Exposure, e.Unit, e.Expected, e.P, e.Critical, e.LateEvents,
 			e.Rate, e.RateLower, e.RateUpper)
+		renderBaseline(b, e)
 	}
 	if len(r.IDs) > 0 && n.Step.Kind == life.StepOpened {
 		fmt.Fprintf(b, "    ids %s\n", strings.Join(r.IDs, " "))
 	}
 	if s := r.Since; s != nil {
 		fmt.Fprintf(b, "    since %s to %s: %d in %s\n", s.From.Format("2006-01-02"), s.To.Format("2006-01-02"), s.Events, s.Exposure)
+	}
+}
+
+// renderBaseline writes by what a look was judged, unless it is no more than a
+// known rate.
+func renderBaseline(b *bytes.Buffer, e *life.Evidence) {
+	r := &e.Baseline
+	var words []string
+	add := func(format string, args ...any) { words = append(words, fmt.Sprintf(format, args...)) }
+	if r.Version != "" {
+		add("%q of set-up %d", r.Version, e.SetupVersion)
+	}
+	if r.Exposure != "" {
+		add("%d in %s", r.Events, r.Exposure)
+	}
+	if r.From != nil {
+		add("%s to %s", r.From.Format("2006-01-02"), r.To.Format("2006-01-02"))
+	}
+	if r.LeftOut > 0 {
+		add("%d slots left out", r.LeftOut)
+	}
+	if r.Weighted != nil {
+		add("weighted %.6g", *r.Weighted)
+	}
+	if r.Peers > 0 {
+		add("%d peers", r.Peers)
+	}
+	if r.Between != nil {
+		add("between %.4g", *r.Between)
+	}
+	if r.Spread > 0 {
+		add("spread %g", r.Spread)
+	}
+	if r.Strata != "" {
+		add("strata by %s", r.Strata)
+	}
+	if e.Weighted != nil {
+		add("exposure weighted %.6g", *e.Weighted)
+	}
+	if e.Provisional > 0 {
+		add("%d slots provisional", e.Provisional)
+	}
+	if f := r.First; f != nil && f.Ratio != nil {
+		add("first reference %d in %s, ratio %.4g", f.Events, f.Exposure, *f.Ratio)
+	}
+	if len(words) > 0 || r.Kind != "known" {
+		fmt.Fprintf(b, "    %s: %s\n    %s\n", r.Kind, strings.Join(words, ", "), e.Test)
 	}
 }
