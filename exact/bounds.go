@@ -42,6 +42,58 @@ func ClopperPearsonMid(x, n int64, alpha float64) (lower, upper float64) {
 	return binomialBounds(x, n, alpha, true)
 }
 
+// MeanLower is the one-sided lower bound at level 1-a of a Poisson mean for n events, 0 < a < 1:
+// P(X >= n) = a there. MeanUpper is the upper one: P(X <= n) = a. NaN outside the domain.
+func MeanLower(n int64, a float64) float64 {
+	switch {
+	case n < 0 || n > maxCount || !(a > 0 && a < 1):
+		return math.NaN()
+	case n == 0:
+		return 0
+	case a > 0.5: // P(X <= n-1) = 1-a, which is exact
+		return poissonBound(float64(n-1), 1-a, false, false)
+	}
+	return poissonBound(float64(n), a, true, false)
+}
+
+// MeanUpper is the counterpart of MeanLower.
+func MeanUpper(n int64, a float64) float64 {
+	switch {
+	case n < 0 || n > maxCount || !(a > 0 && a < 1):
+		return math.NaN()
+	case a > 0.5:
+		return poissonBound(float64(n+1), 1-a, true, false)
+	}
+	return poissonBound(float64(n), a, false, false)
+}
+
+// ChanceLower is the one-sided lower bound at level 1-a of the probability behind x events in n
+// trials, 0 < a < 1: P(X >= x) = a there. ChanceUpper is the upper one; NaN outside the domain.
+func ChanceLower(x, n int64, a float64) float64 {
+	switch {
+	case x < 0 || x > n || n < 1 || n > maxCount || !(a > 0 && a < 1):
+		return math.NaN()
+	case x > 0 && a > 0.5: // P(X <= x-1) = 1-a
+		_, p := binomialLower(n-x+1, n, 1-a, false)
+		return p
+	}
+	p, _ := binomialLower(x, n, a, false)
+	return p
+}
+
+// ChanceUpper is the counterpart of ChanceLower: P(X <= x) = a.
+func ChanceUpper(x, n int64, a float64) float64 {
+	switch {
+	case x < 0 || x > n || n < 1 || n > maxCount || !(a > 0 && a < 1):
+		return math.NaN()
+	case x < n && a > 0.5:
+		p, _ := binomialLower(x+1, n, 1-a, false)
+		return p
+	}
+	_, p := binomialLower(n-x, n, a, false)
+	return p
+}
+
 func binomialBounds(x, n int64, alpha float64, mid bool) (lower, upper float64) {
 	if x < 0 || x > n || n < 1 || n > maxCount || !(alpha > 0 && alpha <= 1) {
 		return math.NaN(), math.NaN()

@@ -17,7 +17,7 @@
 // Parameters are taken as they are had: alpha rather than confidence, rate and exposure rather
 // than their product, a probability with its complement. Alpha is two-sided: each side of a
 // pair of bounds has alpha/2, also where the other side is trivial (no events, or nothing but
-// events). One-sided bounds at a are those at alpha = 2a.
+// events). One-sided bounds take their whole level: MeanLower, MeanUpper, ChanceLower, ChanceUpper.
 //
 // Caveats. "Exact" is said of the arithmetic and of the law named: whether counts follow that law
 // is another question. Counts and totals go to 2^53 (2^42 balls of a colour in an urn, 2^22

@@ -227,6 +227,14 @@ func FuzzBounds(f *testing.F) {
 			t.Errorf("trials %d of %d, alpha %v: %v %v", k, n, alpha, l, u)
 		}
 		exact.WaitBounds(k, float64(n), alpha)
+		one := k >= 0 && k <= 1<<53 && alpha > 0 && alpha < 1
+		if l, u := exact.MeanLower(k, alpha), exact.MeanUpper(k, alpha); one != (l >= 0 && u >= 0) {
+			t.Errorf("one-sided mean of %d, alpha %v: %v %v", k, alpha, l, u)
+		}
+		one = one && n >= 1 && n <= 1<<53 && k <= n
+		if l, u := exact.ChanceLower(k, n, alpha), exact.ChanceUpper(k, n, alpha); one != (l >= 0 && u >= 0 && l <= 1 && u <= 1) {
+			t.Errorf("one-sided chance, %d of %d, alpha %v: %v %v", k, n, alpha, l, u)
+		}
 		for _, how := range []exact.Sides{exact.MinLike, exact.Blaker} {
 			if l, u := exact.MeanBounds(k, alpha, how); ok && alpha > 1e-200 && !(l >= 0 && u*(1+1e-14) >= l) {
 				t.Errorf("mean %v of %d, alpha %v: %v %v", how, k, alpha, l, u)

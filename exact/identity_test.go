@@ -188,6 +188,19 @@ func TestIdentitiesOfBounds(t *testing.T) {
 		if k > 0 && !near(bin(pl, qu).Upper(k), alpha/2, tol) || k < n && !near(bin(pu, ql).Lower(k), alpha/2, tol) {
 			t.Fatalf("%d of %d, alpha = %g: bounds %v %v", k, n, alpha, pl, pu)
 		}
+		a := rapid.Float64Range(1e-9, 1-1e-9).Draw(t, "a")
+		if v := exact.MeanLower(k, a); k > 0 && !near(at(v).Upper(k), a, tol) {
+			t.Fatalf("k = %d: lower bound %v at %v leaves %v", k, v, a, at(v).Upper(k))
+		}
+		if v := exact.MeanUpper(k, a); !near(at(v).Lower(k), a, tol) {
+			t.Fatalf("k = %d: upper bound %v at %v leaves %v", k, v, a, at(v).Lower(k))
+		}
+		if v := bin(exact.ChanceLower(k, n, a), exact.ChanceUpper(n-k, n, a)); k > 0 && !near(v.Upper(k), a, tol) {
+			t.Fatalf("%d of %d: lower bound %v at %v leaves %v", k, n, v, a, v.Upper(k))
+		}
+		if v := bin(exact.ChanceUpper(k, n, a), exact.ChanceLower(n-k, n, a)); k < n && !near(v.Lower(k), a, tol) {
+			t.Fatalf("%d of %d: upper bound %v at %v leaves %v", k, n, v, a, v.Lower(k))
+		}
 		if ml, mu := exact.GarwoodMid(k, alpha); ml < l*(1-1e-14) || mu > u*(1+1e-14) {
 			t.Fatalf("k = %d, alpha = %g: mid %v %v outside %v %v", k, alpha, ml, mu, l, u)
 		}

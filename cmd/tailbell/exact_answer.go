@@ -132,7 +132,7 @@ func (o exactOptions) answer(q question) (exactAnswer, error) {
 		a.expected = (float64(q.events) + float64(q.refEvents)) * q.size / (q.size + q.reference)
 	case q.hasReference:
 		y := exact.TwoRate{RefEvents: q.refEvents, Exposure: q.size, RefExposure: q.reference, Margin: q.margin}
-		x, a.test, a.ratioKind = y, "conditional test of two rates", "ratio of rates"
+		x, a.test, a.ratioKind = y, "conditional test of two rates", "rate ratio"
 		a.ratio = a.rate / (float64(q.refEvents) / q.reference)
 		a.ratioLower, a.ratioUpper = o.pick(y.RatioBounds, y.RatioBoundsMid, y.RatioBoundsBy, q.events)
 		w := q.size * q.margin

@@ -42,7 +42,7 @@ func TestExactOneQuestion(t *testing.T) {
 			"p, this few or fewer       4.540e-05", "bounds 0 to 0.3689", "a look signals at 3 events or fewer (attained size 0.01034)",
 		}[:2]},
 		{"--events 11 --exposure 800 --reference-events 21 --reference-exposure 3011", []string{
-			"ratio of rates             1.971, 95 % bounds 0.8584 to 4.277", "0.05601", "as in the reference, 21 events in 3011 of exposure",
+			"rate ratio                 1.971, 95 % bounds 0.8584 to 4.277", "0.05601", "as in the reference, 21 events in 3011 of exposure",
 		}},
 		{"--events 3 --trials 4 --reference-events 1 --reference-trials 4", []string{"odds ratio                 9,", "0.2429", "Fisher's test"}},
 		{"--events 682 --trials 925 --baseline 0.75 --two-sided minlike", []string{"two-sided (minlike)     0.3825", "minimum likelihood"}},
