@@ -16,7 +16,7 @@ func Record(r *life.Record, width int) string {
 	var b strings.Builder
 	fmt.Fprintf(&b, "alert %s  %s  %s  %s\n", clean(r.ID), strings.ToUpper(clean(string(r.Condition))),
 		arrow(r.Direction), clean(r.Series))
-	paragraphs := []string{Sentence(r, &r.Opening), numbers(&r.Opening), basis(&r.Opening)}
+	paragraphs := []string{Sentence(r, &r.Opening), numbers(&r.Opening), basis(r, &r.Opening)}
 	if !sameLook(&r.Worst, &r.Opening) {
 		paragraphs = append(paragraphs, "At its strongest: "+Sentence(r, &r.Worst))
 	}

@@ -181,31 +181,6 @@ func level(alpha float64) string {
 	return trimFloat(math.Round((1-alpha)*1e8)/1e6) + " %"
 }
 
-// basis says where the usual rate comes from.
-func basis(e *life.Evidence) string {
-	b := &e.Baseline
-	text := ""
-	if b.Kind == "reference" {
-		ref := *e
-		ref.Events, ref.Exposure = b.Events, b.Exposure
-		text = "The usual " + measure(e) + " was estimated from " + counted(&ref) + " in " + exposure(&ref) +
-			"; p allows for how unsure that leaves it"
-	} else {
-		text = "The usual " + measure(e) + " is taken as known"
-	}
-	var from []string
-	if b.Version != "" {
-		from = append(from, "version "+clean(b.Version))
-	}
-	if b.Source != "" {
-		from = append(from, "source: "+clean(b.Source))
-	}
-	if len(from) > 0 {
-		text += " (" + strings.Join(from, "; ") + ")"
-	}
-	return text + "."
-}
-
 // afterwards tells of the data after the opening look, which the ring did not
 // choose.
 func afterwards(r *life.Record, zone *time.Location) string {

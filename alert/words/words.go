@@ -121,7 +121,7 @@ func opened(n *life.Notice, zone *time.Location) []string {
 	if r.Late {
 		late = "Opened late: the look was due on " + moment(e.Due.In(zone)) + "; data that came afterwards made it signal."
 	}
-	return nonEmpty(Sentence(r, e), late, basis(e), caution(r))
+	return nonEmpty(Sentence(r, e), late, basis(r, e), caution(r))
 }
 
 // worsened says whether the evidence has grown, or a further window signals.

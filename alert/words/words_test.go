@@ -240,6 +240,29 @@ func TestFurtherWindows(t *testing.T) {
 	golden(t, "further.txt", b.String())
 }
 
+// TestBases says where estimated rates come from.
+func TestBases(t *testing.T) {
+	from, to := at(t, "Europe/Berlin", "2025-01-01 00:00"), at(t, "Europe/Berlin", "2026-01-01 00:00")
+	var b strings.Builder
+	for _, base := range []life.Baseline{
+		{Kind: "known", Spread: 1.5, Strata: "weekday", Delay: true},
+		{Kind: "reference", Events: 36, Exposure: "20000", Source: "committee"},
+		{Kind: "trailing", Events: 30, Exposure: "18250.5", From: &from, To: &to, LeftOut: 1},
+		{Kind: "trailing", Events: 30, Exposure: "18250.5", From: &from, To: &to, First: &life.Comparator{
+			Events: 20, Exposure: "18000", From: from.AddDate(-2, 0, 0), To: from.AddDate(-1, 0, 0), Ratio: ptr(5.84), RatioLower: 1.44, RatioUpper: ptr(17.6),
+		}},
+		{Kind: "peers", Events: 301, Exposure: "181000", From: &from, To: &to, Peers: 9, Between: ptr(1.32)},
+	} {
+		r := ward(t)
+		r.Opening.Baseline = base
+		if base.Delay {
+			r.Opening.Provisional = 7
+		}
+		b.WriteString(wrap(basis(&r, &r.Opening), 100, "", "") + "\n")
+	}
+	golden(t, "bases.txt", b.String())
+}
+
 func TestHeadingsOffTheMinute(t *testing.T) {
 	r := ward(t)
 	n := step(&r, 1, life.StepOpened, r.Opened.Add(90*time.Second), life.Unacknowledged)
