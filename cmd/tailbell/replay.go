@@ -9,6 +9,7 @@ import (
 	"github.com/spf13/cobra"
 
 	"tailbell/alert/outlet"
+	"tailbell/alert/words"
 	"tailbell/config"
 	"tailbell/ingest/history"
 	"tailbell/ingest/wire"
@@ -133,12 +134,30 @@ func summarise(w io.Writer, r *replayed, h *history.History) error {
 	if err := errors.Join(writeAccount(w, a), r.writeConditions(w), r.writeClock(w)); err != nil {
 		return err
 	}
+	return r.writeRefused(w)
+}
+
+// writeRefused names the first refusals, those that say the same once.
+func (r *replayed) writeRefused(w io.Writer) error {
 	const most = 20
-	for i, refusal := range r.refused {
-		if i == most {
-			return say(w, "  ... and %d more refused", len(r.refused)-most)
+	times := map[string]int{}
+	var texts []string
+	for i := range r.refused {
+		text := string(r.refused[i].Reason) + ": " + aboutSeries(&r.refused[i])
+		if times[text]++; times[text] == 1 {
+			texts = append(texts, text)
 		}
-		if err := say(w, "  refused: %s: %s", refusal.Reason, aboutSeries(&refusal)); err != nil {
+	}
+	named := 0
+	for i, text := range texts {
+		if i == most {
+			return say(w, "  ... and %s more refused", words.Whole(int64(len(r.refused)-named)))
+		}
+		named += times[text]
+		if times[text] > 1 {
+			text += " (" + amount(times[text], "times") + ")"
+		}
+		if err := say(w, "  refused: %s", text); err != nil {
 			return err
 		}
 	}
