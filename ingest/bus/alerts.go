@@ -40,3 +40,10 @@ func (b *Bus) PublishAlert(
 func (b *Bus) SubscribeAlerts(ctx context.Context, after uint64) (*Source, error) {
 	return b.newSource(ctx, b.names.alertStream(), b.names.alertAll(), after, true)
 }
+
+// AlertsEnd returns the position of the last message of the stream of alerts
+// now, 0 if it has had none.
+func (b *Bus) AlertsEnd(ctx context.Context) (uint64, error) {
+	id, err := b.identity(ctx, b.names.alertStream())
+	return id.Last, err
+}
