@@ -37,6 +37,7 @@ type daemon struct {
 	serve *control.Server
 
 	troubles troubles
+	copies   copies
 }
 
 // part is one partition at work.
@@ -404,6 +405,7 @@ func (d *daemon) close() error {
 	if d.serve != nil {
 		errs = append(errs, d.serve.Close())
 	}
+	d.copies.all.Wait()
 	for _, p := range d.parts {
 		errs = append(errs, p.close())
 	}

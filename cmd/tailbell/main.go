@@ -87,7 +87,7 @@ Silence is no proof of safety. Local policy decides.`,
 	root.SetHelpCommand(newHelpCommand())
 	root.AddCommand(
 		newAlertCommand(), newClockCommand(), newConfigCommand(), newDemoCommand(), newExactCommand(), newFeedCommand(),
-		newOutletCommand(), newRefusedCommand(), newReplayCommand(), newRunCommand(), newStatusCommand(), newStoreCommand(),
+		newOutletCommand(), newRefusedCommand(), newReplayCommand(), newRunCommand(), newStatusCommand(), newStoreCommand(), newStreamCommand(),
 	)
 	checkArguments(root)
 	return root

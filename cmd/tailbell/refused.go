@@ -17,10 +17,10 @@ import (
 func newRefusedCommand() *cobra.Command {
 	c := &cobra.Command{
 		Use:   "refused",
-		Short: "List what was refused, and why",
+		Short: "List what was refused and why, export it, or send it again",
 		RunE:  func(c *cobra.Command, _ []string) error { return c.Help() },
 	}
-	c.AddCommand(newRefusedListCommand(), newRefusedShowCommand())
+	c.AddCommand(newRefusedListCommand(), newRefusedShowCommand(), newRefusedExportCommand(), newRefusedResendCommand())
 	return c
 }
 

@@ -15,14 +15,14 @@ import (
 )
 
 // newStoreCommand returns "tailbell store": what can be done with the files
-// that hold the partitions' states, while no daemon has them.
+// that hold the partitions' states. All but copy want no daemon to have them.
 func newStoreCommand() *cobra.Command {
 	c := &cobra.Command{
 		Use:   "store",
-		Short: "Check the stores of a folder whole, copy them, or accept another stream",
+		Short: "Check the stores of a folder whole, copy them, put a copy in place, or accept another stream",
 		RunE:  func(c *cobra.Command, _ []string) error { return c.Help() },
 	}
-	c.AddCommand(newStoreCheckCommand(), newStoreCopyCommand(), newStoreAcceptCommand())
+	c.AddCommand(newStoreCheckCommand(), newStoreCopyCommand(), newStoreRebuildCommand(), newStoreAcceptCommand())
 	return c
 }
 
@@ -145,59 +145,4 @@ func globEscape(path string) string {
 		b = append(b, c)
 	}
 	return string(b)
-}
-
-func newStoreCopyCommand() *cobra.Command {
-	return &cobra.Command{
-		Use:   "copy FOLDER|FILE TO",
-		Short: "Copy stores that no daemon has open",
-		Long: `Copies a store into the new file TO, or all stores of a folder into the folder
-TO. A copy appears under its name once it is complete, checked and on the disk;
-what is there already is never written over.`,
-		RunE: func(c *cobra.Command, args []string) error { return copyStores(c.OutOrStdout(), args[0], args[1]) },
-	}
-}
-
-func copyStores(w io.Writer, from, to string) error {
-	files, err := storeFiles(from)
-	if err != nil {
-		return err
-	}
-	info, err := os.Stat(from)
-	if err != nil {
-		return err
-	}
-	if info.IsDir() {
-		if err := os.MkdirAll(to, 0o700); err != nil {
-			return err
-		}
-	}
-	for _, file := range files {
-		target := to
-		if info.IsDir() {
-			target = filepath.Join(to, filepath.Base(file))
-		}
-		if err := copyStore(w, file, target); err != nil {
-			return err
-		}
-	}
-	return nil
-}
-
-func copyStore(w io.Writer, from, to string) (err error) {
-	s, err := store.OpenReadOnly(from, store.Options{})
-	if err != nil {
-		return err
-	}
-	defer func() { err = errors.Join(err, s.Close()) }()
-	n, err := s.CopyTo(to)
-	if err != nil {
-		return err
-	}
-	position, err := s.Position()
-	if err != nil {
-		return err
-	}
-	_, err = fmt.Fprintf(w, "%s: %s, at position %d of its stream\n", to, amount(n, "bytes"), position)
-	return err
 }

@@ -30,6 +30,9 @@ const (
 	verbRefused    = "refused"      // refusedRequest -> []refusedRow
 	verbClock      = "accept-clock" // -> []heldRow
 	verbDropOutlet = "drop-outlet"  // name -> steps that waited
+	verbCopy       = "copy"         // name of a request -> whether it is done
+	verbResend     = "resend"       // resendRequest -> resendReply
+	verbTrim       = "trim"         // position -> trimReply
 )
 
 type alertsRequest struct {
@@ -103,6 +106,10 @@ func (d *daemon) verbs() map[string]control.Handler {
 
 		verbClock:      d.acceptClock,
 		verbDropOutlet: answer(d.dropOutlet),
+
+		verbCopy:   answer(d.copyStore),
+		verbResend: answer(d.resend),
+		verbTrim:   answer(d.trim),
 	}
 }
 
