@@ -54,6 +54,9 @@ type Options struct {
 	LockWait time.Duration
 	// Retention bounds what is kept of refusals.
 	Retention Retention
+	// Fault, if not nil, is asked before every step of a write; what it returns
+	// happens instead. It lets tests break off anywhere.
+	Fault func(step string) error
 }
 
 func (o Options) withDefaults() Options {
@@ -77,9 +80,7 @@ type Store struct {
 	identity Identity
 	opts     Options
 	db       *bolt.DB
-	// fault, if not nil, is asked before every step of a write; what it
-	// returns happens instead. For tests.
-	fault func(step string) error
+	fault    func(step string) error // Options.Fault
 	// writing is held during a write and during Check.
 	writing struct {
 		sync.Mutex
@@ -202,7 +203,7 @@ func open(path string, opts Options, how *bolt.Options) (*Store, error) {
 	if err != nil {
 		return nil, fmt.Errorf("store %s: %w", path, translate(err, false))
 	}
-	s := &Store{path: path, opts: opts, db: db}
+	s := &Store{path: path, opts: opts, db: db, fault: opts.Fault}
 	err = s.view(func(tx *bolt.Tx) error {
 		var err error
 		s.identity, err = readMeta(tx)
