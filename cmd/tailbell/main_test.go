@@ -18,6 +18,9 @@ func TestMain(m *testing.M) {
 		defer stop()
 		os.Exit(execute(ctx, os.Args[1:], os.Stdin, os.Stdout, os.Stderr))
 	}
+	if order := os.Getenv(runBus); order != "" {
+		os.Exit(busMain(order))
+	}
 	os.Exit(m.Run())
 }
 
