@@ -204,6 +204,7 @@ func (e *Engine) settleAll() {
 func (e *Engine) settle(a *alert) {
 	a.pending = false
 	e.touch(a.series)
+	e.touchAlert(a) // what was late may differ, without a step
 	opening, worst := a.record.Opening, a.record.Worst
 	e.revalue(a)
 	if sameEvidence(&opening, &a.record.Opening) && sameEvidence(&worst, &a.record.Worst) {
