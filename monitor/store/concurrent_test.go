@@ -6,6 +6,7 @@ import (
 	"path/filepath"
 	"sync"
 	"testing"
+	"time"
 
 	"tailbell/monitor"
 	"tailbell/monitor/life"
@@ -65,5 +66,42 @@ func TestReadersBesideCommits(t *testing.T) {
 	report, err := s.Check(t.Context())
 	if err != nil || report.Position != 40 || report.Alerts != 20 {
 		t.Errorf("Check gave %+v, %v", report, err)
+	}
+}
+
+// TestGrowthBesideAnOpenRead commits more than the file's map held at first
+// while a read is open: a map that must grow waits for every read, and for ever
+// if the reader itself commits. The address space reserved keeps it from that.
+func TestGrowthBesideAnOpenRead(t *testing.T) {
+	s := create(t, Options{MapBytes: 64 << 20})
+	tx, err := s.db.Begin(false)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer func() {
+		if err := tx.Rollback(); err != nil {
+			t.Error(err)
+		}
+	}()
+	done := make(chan error, 1)
+	go func() {
+		for position := uint64(1); position <= 20; position++ {
+			err := s.Commit(monitor.Changes{
+				Position: position, Series: []monitor.SeriesChange{{Number: 0, Data: make([]byte, 1<<20)}},
+			}, Mark{Position: position})
+			if err != nil {
+				done <- err
+				return
+			}
+		}
+		done <- nil
+	}()
+	select {
+	case err := <-done:
+		if err != nil {
+			t.Error(err)
+		}
+	case <-time.After(30 * time.Second):
+		t.Error("commits wait for an open read")
 	}
 }
