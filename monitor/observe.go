@@ -135,10 +135,10 @@ func (e *Engine) admit(ix *indicator, o *Observation) (contribution, Reason, str
 	}
 	var reason Reason
 	c.exposure, reason = quantityOf(o.Exposure, ix.cfg.GrainDigits)
-	switch reason {
-	case FinerThanGrain:
+	if reason == FinerThanGrain {
 		return c, reason, fmt.Sprintf("exposure %s has more than the %d decimals that the indicator's grain holds", o.Exposure, ix.cfg.GrainDigits)
-	case TooBig:
+	}
+	if reason == TooBig {
 		return c, reason, fmt.Sprintf("exposure %s is too large for the indicator's grain", o.Exposure)
 	}
 	if s := c.series; s != nil && o.HasEvents && !s.roomFor(from, o.Events) {
@@ -212,10 +212,9 @@ func (e *Engine) count(o *Observation, ix *indicator, key idKey, old *identified
 		e.account.Counted--
 		changes = append(changes, e.add(&old.said, key.id, -1))
 	}
-	switch {
-	case ix == nil:
+	if ix == nil {
 		e.account.Unmonitored++
-	default:
+	} else {
 		e.account.Counted++
 	}
 	if said.series != nil {

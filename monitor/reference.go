@@ -9,9 +9,6 @@ import (
 	"tailbell/config"
 )
 
-// span is a run of slots, the end excluded.
-type span struct{ from, to int64 }
-
 // refresh counts the references of the indicator's series anew where a new
 // period of their baseline begins with the boundary. What is counted is what
 // the data say then; later corrections of the past reach the next period.

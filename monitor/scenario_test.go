@@ -115,9 +115,10 @@ func readScenario(t *testing.T, text string) []monitor.Message {
 				t.Fatalf("line %d: %v", n+1, err)
 			}
 			stored = at
-			if word == "tick" {
+			switch word {
+			case "tick":
 				add(monitor.Message{Kind: monitor.Tick})
-			} else if word == "live" {
+			case "live":
 				add(monitor.Message{Kind: monitor.Live})
 			}
 		case wire.IsAct([]byte(line)):

@@ -114,7 +114,7 @@ func (l *Loop) Run(ctx context.Context) error {
 	defer stop(nil)
 	var stages sync.WaitGroup
 	stages.Go(func() {
-		if err := l.pull(run); err != nil {
+		if err := l.pull(run); run.Err() == nil {
 			stop(fmt.Errorf("partition: reading: %w", err))
 		}
 	})
@@ -145,19 +145,17 @@ func (l *Loop) Do(ctx context.Context, look func(*monitor.Engine)) error {
 	}
 }
 
+// pull reads until the source fails or ctx ends.
 func (l *Loop) pull(ctx context.Context) error {
 	for {
 		b, err := l.source.Next(ctx, l.opts.MaxBatch)
 		if err != nil {
-			if ctx.Err() != nil {
-				return nil
-			}
 			return err
 		}
 		select {
 		case l.batches <- b:
 		case <-ctx.Done():
-			return nil
+			return ctx.Err()
 		}
 	}
 }
