@@ -7,6 +7,7 @@ import (
 	"math"
 	"time"
 
+	"tailbell/alert/words"
 	"tailbell/monitor/life"
 )
 
@@ -25,12 +26,12 @@ func (r *demoResult) printElements(w io.Writer, took time.Duration) error {
 	}
 	errs = append(errs, say(w, "\n%-14s %10s %10s", "", "ledger", "account"))
 	for _, c := range r.audit.Classes {
-		errs = append(errs, say(w, "%-14s %10d %10d", c.Class, c.Ledger, c.Account))
+		errs = append(errs, say(w, "%-14s %10s %10s", c.Class, words.Whole(c.Ledger), words.Whole(c.Account)))
 	}
 	errs = append(errs,
 		say(w, "\nIn %s: %s; events and exposure are compared slot by slot.", amount(r.audit.Slots, "slots"), amount(r.audit.Events, "events")),
-		say(w, "%s made when due, %d withheld, %d made again because data changed; %s came late.",
-			amount(r.account.Looks, "looks"), r.account.WithheldLooks, r.account.Reruns, amount(r.account.Late, "elements")),
+		say(w, "%s made when due, %s withheld, %s made again because data changed; %s came late.",
+			amount(r.account.Looks, "looks"), words.Whole(r.account.WithheldLooks), words.Whole(r.account.Reruns), amount(r.account.Late, "elements")),
 		say(w, "%s taken, %d refused.", amount(r.account.Acts, "acts"), r.account.ActsRefused))
 	return errors.Join(append(errs, r.printConditions(w))...)
 }
