@@ -230,34 +230,32 @@ func (o exactOptions) weigh(a *exactAnswer, x exactTest) {
 	}
 }
 
-// exactRecord is an answer as JSON. Null stands for what has no finite value or was not asked.
+// exactRecord is an answer as JSON; a table adds holm_p and bh_p. Null stands for what has no finite value or was not asked.
 type exactRecord struct {
-	Unit              string   `json:"unit,omitempty"`
-	Line              int      `json:"line,omitempty"`
-	Events            int64    `json:"events"`
-	Exposure          *float64 `json:"exposure,omitempty"`
-	Trials            *float64 `json:"trials,omitempty"`
-	Per               float64  `json:"per"`
-	Rate              *float64 `json:"rate"`
-	RateLower         *float64 `json:"rate_lower"`
-	RateUpper         *float64 `json:"rate_upper"`
-	Alpha             float64  `json:"alpha"`
-	Expected          *float64 `json:"expected"`
-	RatioKind         string   `json:"ratio_kind,omitempty"`
-	Ratio             *float64 `json:"ratio"`
-	RatioLower        *float64 `json:"ratio_lower"`
-	RatioUpper        *float64 `json:"ratio_upper"`
-	Test              string   `json:"test,omitempty"`
-	Tail              string   `json:"tail"`
-	MidP              bool     `json:"mid_p"`
-	P                 *float64 `json:"p"`
-	Log10P            *float64 `json:"log10_p"`
-	Limit             float64  `json:"limit"`
-	CriticalCount     *int64   `json:"critical_count"`
-	AttainedSize      *float64 `json:"attained_size"`
-	HolmP             *float64 `json:"holm_p,omitempty"`
-	BenjaminiHochberg *float64 `json:"bh_p,omitempty"`
-	Problem           string   `json:"problem,omitempty"`
+	Unit          string   `json:"unit,omitempty"`
+	Line          int      `json:"line,omitempty"`
+	Events        int64    `json:"events"`
+	Exposure      *float64 `json:"exposure,omitempty"`
+	Trials        *float64 `json:"trials,omitempty"`
+	Per           float64  `json:"per"`
+	Rate          *float64 `json:"rate"`
+	RateLower     *float64 `json:"rate_lower"`
+	RateUpper     *float64 `json:"rate_upper"`
+	Alpha         float64  `json:"alpha"`
+	Expected      *float64 `json:"expected"`
+	RatioKind     string   `json:"ratio_kind,omitempty"`
+	Ratio         *float64 `json:"ratio"`
+	RatioLower    *float64 `json:"ratio_lower"`
+	RatioUpper    *float64 `json:"ratio_upper"`
+	Test          string   `json:"test,omitempty"`
+	Tail          string   `json:"tail"`
+	MidP          bool     `json:"mid_p"`
+	P             *float64 `json:"p"`
+	Log10P        *float64 `json:"log10_p"`
+	Limit         float64  `json:"limit"`
+	CriticalCount *int64   `json:"critical_count"`
+	AttainedSize  *float64 `json:"attained_size"`
+	Problem       string   `json:"problem,omitempty"`
 }
 
 func (a exactAnswer) record(o exactOptions) exactRecord {

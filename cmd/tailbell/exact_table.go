@@ -2,7 +2,9 @@ package main
 
 import (
 	"bufio"
+	"bytes"
 	"encoding/csv"
+	"encoding/json"
 	"errors"
 	"fmt"
 	"io"
@@ -35,12 +37,24 @@ var addedColumns = []string{
 	"critical_count", "attained_size", "holm_p", "bh_p", "problem",
 }
 
-// exactRow is one row of a table with its answer, or with what is wrong with it.
+// exactTable gathers the answered rows as the text they will be printed as, short of the p-values
+// adjusted over all rows: a million rows then take some 300 MB.
+type exactTable struct {
+	options exactOptions
+	json    bool
+	rows    []exactRow
+	chunk   []byte
+	line    bytes.Buffer
+	csv     *csv.Writer
+	record  []string
+}
+
+// exactRow is one row: its line in the file, its text, its p, and what is wrong with it.
 type exactRow struct {
-	line   int
-	fields []string
-	answer exactAnswer
-	err    error
+	line int
+	text []byte
+	p    float64
+	err  error
 }
 
 func (f *exactFlags) answerTable(c *cobra.Command, path string) (err error) {
@@ -56,70 +70,83 @@ func (f *exactFlags) answerTable(c *cobra.Command, path string) (err error) {
 		defer func() { err = errors.Join(err, file.Close()) }()
 		in = file
 	}
-	header, rows, err := readTable(bufio.NewReaderSize(in, 1<<16), f.question, f.options)
+	table := newExactTable(f.options, f.json)
+	header, err := readTable(bufio.NewReaderSize(in, 1<<16), f.question, f.options, table.add)
 	if err != nil {
 		return fmt.Errorf("%s: %w", path, err)
 	}
 	bad := 0
-	for i := range rows {
-		if rows[i].err == nil {
+	for _, r := range table.rows {
+		if r.err == nil {
 			continue
 		}
 		bad++
-		if _, err := fmt.Fprintf(c.ErrOrStderr(), "%s: line %d: %v\n", path, rows[i].line, rows[i].err); err != nil {
+		if _, err := fmt.Fprintf(c.ErrOrStderr(), "%s: line %d: %v\n", path, r.line, r.err); err != nil {
 			return fmt.Errorf("report a row: %w", err)
 		}
 	}
 	out := bufio.NewWriterSize(c.OutOrStdout(), 1<<16)
-	if err := f.writeTable(out, header, rows); err != nil {
-		return err
+	if err := table.print(out, header); err != nil {
+		return fmt.Errorf("print the table: %w", err)
 	}
 	if err := out.Flush(); err != nil {
 		return fmt.Errorf("print the table: %w", err)
 	}
 	if bad > 0 {
-		return fmt.Errorf("%s: %d of %d rows could not be answered", path, bad, len(rows))
+		return fmt.Errorf("%s: %d of %d rows could not be answered", path, bad, len(table.rows))
 	}
 	return nil
 }
 
-// readTable reads and answers every row; what the columns don't say is taken from q. An error is
-// of the table as a whole, a row's own stays with the row.
-func readTable(in io.Reader, q question, o exactOptions) (header []string, rows []exactRow, err error) {
+// readRow is a row as it was read, with its answer or with what is wrong with it. fields are only
+// good until the next row.
+type readRow struct {
+	line   int
+	fields []string
+	answer exactAnswer
+	err    error
+}
+
+// readTable reads and answers every row and gives it to each; what the columns don't say is
+// taken from q. An error is of the table as a whole, a row's own stays with the row.
+func readTable(in io.Reader, q question, o exactOptions, each func(header []string, row readRow) error) ([]string, error) {
 	r := csv.NewReader(in)
 	r.Comment, r.FieldsPerRecord, r.TrimLeadingSpace = '#', -1, true
-	header, err = r.Read()
+	header, err := r.Read()
 	switch {
 	case errors.Is(err, io.EOF):
-		return nil, nil, errors.New("the table is empty: it needs a header with events and exposure (or trials)")
+		return nil, errors.New("the table is empty: it needs a header with events and exposure (or trials)")
 	case err != nil:
-		return nil, nil, fmt.Errorf("read the header: %w", err)
+		return nil, fmt.Errorf("read the header: %w", err)
 	}
 	header[0] = strings.TrimPrefix(header[0], "\ufeff")
 	columns, err := columnsOf(header, q)
 	if err != nil {
-		return nil, nil, err
+		return nil, err
 	}
+	r.ReuseRecord = true
 	for {
 		fields, err := r.Read()
 		var broken *csv.ParseError
+		row := readRow{fields: fields}
 		switch {
 		case errors.Is(err, io.EOF):
-			return header, rows, nil
+			return header, nil
 		case errors.As(err, &broken):
-			rows = append(rows, exactRow{line: broken.Line, err: fmt.Errorf("not readable as CSV: %w", broken.Err)})
-			continue
+			row = readRow{line: broken.Line, err: fmt.Errorf("not readable as CSV: %w", broken.Err)}
 		case err != nil:
-			return nil, nil, fmt.Errorf("read the table: %w", err)
-		}
-		line, _ := r.FieldPos(0)
-		row := exactRow{line: line, fields: fields}
-		if len(fields) != len(header) {
+			return nil, fmt.Errorf("read the table: %w", err)
+		case len(fields) != len(header):
 			row.err = fmt.Errorf("%d fields under %d columns", len(fields), len(header))
-		} else {
+		default:
 			row.answer, row.err = columns.answer(fields, q, o)
 		}
-		rows = append(rows, row)
+		if broken == nil {
+			row.line, _ = r.FieldPos(0)
+		}
+		if err := each(header, row); err != nil {
+			return nil, err
+		}
 	}
 }
 
@@ -217,56 +244,138 @@ func (t tableColumns) answer(fields []string, q question, o exactOptions) (exact
 	return o.answer(q)
 }
 
-func (f *exactFlags) writeTable(w io.Writer, header []string, rows []exactRow) error {
-	p := make([]float64, len(rows))
-	for i := range rows {
-		if p[i] = math.NaN(); rows[i].err == nil {
-			p[i] = rows[i].answer.p
+func newExactTable(o exactOptions, asJSON bool) *exactTable {
+	t := &exactTable{options: o, json: asJSON}
+	t.csv = csv.NewWriter(&t.line)
+	return t
+}
+
+// add encodes a row.
+func (t *exactTable) add(header []string, r readRow) error {
+	row := exactRow{line: r.line, p: math.NaN(), err: r.err}
+	if r.err == nil {
+		row.p = r.answer.p
+	}
+	t.line.Reset()
+	encode := t.encodeCSV
+	if t.json {
+		encode = t.encodeJSON
+	}
+	if err := encode(header, r); err != nil {
+		return err
+	}
+	if cap(t.chunk)-len(t.chunk) < t.line.Len() {
+		t.chunk = make([]byte, 0, max(1<<20, t.line.Len()))
+	}
+	from := len(t.chunk)
+	t.chunk = append(t.chunk, t.line.Bytes()...)
+	row.text = t.chunk[from:len(t.chunk):len(t.chunk)]
+	t.rows = append(t.rows, row)
+	return nil
+}
+
+// encodeCSV writes the row's own fields and the added ones short of the last three.
+func (t *exactTable) encodeCSV(header []string, r readRow) error {
+	record := append(t.record[:0], r.fields...)
+	if len(record) > len(header) {
+		record = record[:len(header)]
+	}
+	for len(record) < len(header) {
+		record = append(record, "")
+	}
+	if a, o := &r.answer, t.options; r.err == nil {
+		critical := ""
+		if a.hasCritical {
+			critical = strconv.FormatInt(a.critical, 10)
 		}
-	}
-	holm, bh := exact.Holm(nil, p), exact.BenjaminiHochberg(nil, p)
-	if f.json {
-		return f.writeTableJSON(w, header, rows, holm, bh)
-	}
-	out := csv.NewWriter(w)
-	if err := out.Write(append(slices.Clone(header), addedColumns...)); err != nil {
-		return fmt.Errorf("print the table: %w", err)
-	}
-	record := make([]string, 0, len(header)+len(addedColumns))
-	for i := range rows {
-		record = append(record[:0], rows[i].fields...)
-		if len(record) > len(header) {
-			record = record[:len(header)]
-		}
-		for len(record) < len(header) {
+		record = append(record, cell(a.p), cell(a.log10P), cell(a.rate*o.per), cell(a.rateLower*o.per), cell(a.rateUpper*o.per),
+			cell(a.ratio), cell(a.ratioLower), cell(a.ratioUpper), critical, cell(a.attained))
+	} else {
+		for range len(addedColumns) - 3 {
 			record = append(record, "")
 		}
-		record = rows[i].addTo(record, f.options, holm[i], bh[i])
-		if err := out.Write(record); err != nil {
-			return fmt.Errorf("print the table: %w", err)
+	}
+	t.record = record
+	return t.writeRecord(record)
+}
+
+// writeRecord puts a record on the line, without its end.
+func (t *exactTable) writeRecord(record []string) error {
+	if err := t.csv.Write(record); err != nil {
+		return err
+	}
+	t.csv.Flush()
+	t.line.Truncate(t.line.Len() - 1)
+	return t.csv.Error()
+}
+
+// encodeJSON writes the row's object, open at its end.
+func (t *exactTable) encodeJSON(header []string, r readRow) error {
+	o := t.options
+	record := exactRecord{Per: o.per, Alpha: o.alpha, Limit: o.limit, Tail: o.tailName(), MidP: o.mid}
+	if r.err == nil {
+		record = r.answer.record(o)
+	} else {
+		record.Problem = r.err.Error()
+	}
+	unit := slices.IndexFunc(header, func(h string) bool { return strings.EqualFold(strings.TrimSpace(h), colUnit) })
+	if record.Line = r.line; unit >= 0 && unit < len(r.fields) {
+		record.Unit = r.fields[unit]
+	}
+	b, err := json.Marshal(record)
+	if err != nil {
+		return err
+	}
+	t.line.Write(b[:len(b)-1])
+	return nil
+}
+
+// print writes the rows with their adjusted p-values.
+func (t *exactTable) print(w io.Writer, header []string) error {
+	p := make([]float64, len(t.rows))
+	for i, r := range t.rows {
+		p[i] = r.p
+	}
+	holm := exact.Holm(nil, p)
+	bh := exact.BenjaminiHochberg(p, p)
+	if !t.json {
+		t.line.Reset()
+		if err := t.writeRecord(append(slices.Clone(header), addedColumns...)); err != nil {
+			return err
+		}
+		if _, err := w.Write(append(t.line.Bytes(), '\n')); err != nil {
+			return err
 		}
 	}
-	out.Flush()
-	if err := out.Error(); err != nil {
-		return fmt.Errorf("print the table: %w", err)
+	for i, r := range t.rows {
+		t.line.Reset()
+		t.line.Write(r.text)
+		if err := t.finish(r, holm[i], bh[i]); err != nil {
+			return err
+		}
+		t.line.WriteByte('\n')
+		if _, err := w.Write(t.line.Bytes()); err != nil {
+			return err
+		}
 	}
 	return nil
 }
 
-func (r *exactRow) addTo(record []string, o exactOptions, holm, bh float64) []string {
-	if r.err != nil {
-		for range len(addedColumns) - 1 {
-			record = append(record, "")
+// finish adds what is known only over all rows, and what is wrong with the row.
+func (t *exactTable) finish(r exactRow, holm, bh float64) error {
+	if t.json {
+		if !math.IsNaN(holm) {
+			t.line.WriteString(`,"holm_p":` + cell(holm) + `,"bh_p":` + cell(bh))
 		}
-		return append(record, r.err.Error())
+		t.line.WriteByte('}')
+		return nil
 	}
-	a := &r.answer
-	critical := ""
-	if a.hasCritical {
-		critical = strconv.FormatInt(a.critical, 10)
+	problem := ""
+	if r.err != nil {
+		problem = r.err.Error()
 	}
-	return append(record, cell(a.p), cell(a.log10P), cell(a.rate*o.per), cell(a.rateLower*o.per), cell(a.rateUpper*o.per),
-		cell(a.ratio), cell(a.ratioLower), cell(a.ratioUpper), critical, cell(a.attained), cell(holm), cell(bh), "")
+	t.line.WriteByte(',')
+	return t.writeRecord([]string{cell(holm), cell(bh), problem})
 }
 
 // cell is a number in full, or nothing.
@@ -275,24 +384,4 @@ func cell(v float64) string {
 		return ""
 	}
 	return strconv.FormatFloat(v, 'g', -1, 64)
-}
-
-func (f *exactFlags) writeTableJSON(w io.Writer, header []string, rows []exactRow, holm, bh []float64) error {
-	unit := slices.IndexFunc(header, func(h string) bool { return strings.EqualFold(strings.TrimSpace(h), colUnit) })
-	for i := range rows {
-		r := exactRecord{Per: f.options.per, Alpha: f.options.alpha, Limit: f.options.limit, Tail: f.options.tailName(), MidP: f.options.mid}
-		if rows[i].err == nil {
-			r = rows[i].answer.record(f.options)
-			r.HolmP, r.BenjaminiHochberg = orNull(holm[i]), orNull(bh[i])
-		} else {
-			r.Problem = rows[i].err.Error()
-		}
-		if r.Line = rows[i].line; unit >= 0 && unit < len(rows[i].fields) {
-			r.Unit = rows[i].fields[unit]
-		}
-		if err := writeJSONLine(w, r); err != nil {
-			return err
-		}
-	}
-	return nil
 }

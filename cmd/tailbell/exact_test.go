@@ -206,22 +206,31 @@ func FuzzExactTable(f *testing.F) {
 	f.Add("\ufeffevents,exposure\n1e3,0x1p4\n9223372036854775807,1e308\n")
 	f.Fuzz(func(t *testing.T, table string) {
 		o := exactOptions{per: 1, alpha: 0.05, limit: 0.001}
-		header, rows, err := readTable(strings.NewReader(table), question{margin: 1}, o)
-		if err != nil {
-			return
-		}
-		for _, r := range rows {
+		out := newExactTable(o, len(table)%2 == 0)
+		header, err := readTable(strings.NewReader(table), question{margin: 1}, o, func(header []string, r readRow) error {
 			if a := r.answer; r.err == nil && (a.hasTest && !(a.p >= 0 && a.p <= 1) || a.rateLower > a.rate || a.rateUpper < a.rate) {
 				t.Errorf("row %v: %+v", r.fields, a)
 			}
 			if r.line < 1 {
 				t.Errorf("row %v has line %d", r.fields, r.line)
 			}
+			return out.add(header, r)
+		})
+		if err != nil {
+			return
 		}
-		var flags exactFlags
-		flags.options = o
-		if err := flags.writeTable(&bytes.Buffer{}, header, rows); err != nil {
+		var text bytes.Buffer
+		if err := out.print(&text, header); err != nil {
 			t.Error(err)
+		}
+		if out.json {
+			for line := range strings.Lines(text.String()) {
+				if !json.Valid([]byte(line)) {
+					t.Errorf("not JSON: %s", line)
+				}
+			}
+		} else if _, err := csv.NewReader(&text).ReadAll(); err != nil {
+			t.Errorf("not CSV: %v", err)
 		}
 	})
 }
