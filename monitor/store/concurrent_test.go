@@ -73,7 +73,7 @@ func TestReadersBesideCommits(t *testing.T) {
 // while a read is open: a map that must grow waits for every read, and for ever
 // if the reader itself commits. The address space reserved keeps it from that.
 func TestGrowthBesideAnOpenRead(t *testing.T) {
-	s := create(t, Options{MapBytes: 64 << 20})
+	s := create(t, Options{})
 	tx, err := s.db.Begin(false)
 	if err != nil {
 		t.Fatal(err)
