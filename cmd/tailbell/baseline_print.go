@@ -3,6 +3,7 @@ package main
 import (
 	"bytes"
 	"cmp"
+	"errors"
 	"fmt"
 	"io"
 	"math"
@@ -68,11 +69,13 @@ func (p *baselinePage) wrap(text string) {
 
 // table prints rows of cells, the first column to the left.
 func (p *baselinePage) table(rows [][]string) {
-	t := tabwriter.NewWriter(&p.Buffer, 0, 0, 2, ' ', 0)
+	var cells strings.Builder
 	for _, row := range rows {
-		fmt.Fprintf(t, "  %s\n", strings.Join(row, "\t"))
+		cells.WriteString("  " + strings.Join(row, "\t") + "\n")
 	}
-	if err := t.Flush(); err != nil {
+	t := tabwriter.NewWriter(&p.Buffer, 0, 0, 2, ' ', 0)
+	_, err := io.WriteString(t, cells.String())
+	if err = errors.Join(err, t.Flush()); err != nil {
 		panic(err) // a buffer takes everything
 	}
 }

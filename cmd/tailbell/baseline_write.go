@@ -38,9 +38,8 @@ func addBaseline(setup *config.Setup, in *config.Indicator, r *estimate.Report, 
 	refused := map[string]string{}
 	for {
 		e := &baselineEdit{stanza: r.Stanza.Text(baselineHeader, func(key string) string { return refused[key] })}
-		text, err := insertBaseline(setup.Text, in, e.stanza, pattern)
-		if err != nil {
-			e.why = err
+		var text []byte
+		if text, e.why = insertBaseline(setup.Text, in, e.stanza, pattern); e.why != nil {
 			return e, nil
 		}
 		next, err := config.Parse(text, "the set-up with the new baseline")
@@ -129,10 +128,10 @@ func insertBaseline(text []byte, in *config.Indicator, stanza, pattern string) (
 func baselineTables(lines [][]byte, in *config.Indicator) (tables []int, end int) {
 	end = len(lines)
 	for i := in.Line; i < len(lines); i++ { // the line after the indicator's header
-		switch h := headerOf(lines[i]); {
-		case h == "":
+		switch h := headerOf(lines[i]); h {
+		case "":
 			continue
-		case h == baselineHeader || h == oneBaselineHeader:
+		case baselineHeader, oneBaselineHeader:
 			tables = append(tables, i)
 			end = len(lines)
 		default:

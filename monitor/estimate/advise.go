@@ -280,7 +280,8 @@ func (a *analysis) wholeWeeks() bool {
 }
 
 // drift returns the spread over a slot and the greatest one that is believed,
-// and reports whether spread grows so much that no constant one describes it.
+// and reports whether spread grows so much that no constant one describes it,
+// nor a season that was found.
 func (a *analysis) drift() (first, last Spread, found bool) {
 	first, last = a.r.Within[0], a.r.Within[0]
 	for _, s := range a.r.Within[1:] {
@@ -288,7 +289,16 @@ func (a *analysis) drift() (first, last Spread, found bool) {
 			last = s
 		}
 	}
-	return first, last, last.Slots > 1 && last.Phi > 1.5*max(first.Phi, 1)
+	grows := func(from, to float64) bool { return to > 1.5*max(from, 1) }
+	if last.Slots == 1 || !grows(first.Phi, last.Phi) {
+		return first, last, false
+	}
+	if by := a.strataFound(); len(by) > 0 {
+		short, ok := a.leftAfter(by[0], first.Slots)
+		long, ok2 := a.leftAfter(by[0], last.Slots)
+		return first, last, !ok || !ok2 || grows(short, long)
+	}
+	return first, last, true
 }
 
 func (a *analysis) adviseDrift() {

@@ -158,20 +158,14 @@ func (t *table) programme(s *stratum) (float64, bool) {
 	now.at[0] = 1
 	p := 0.0
 	after := s.size
-	step := tails{pmf: make([]float64, most+1), upper: make([]float64, most+2)}
+	past := reaching(pairs)
 	for j := range s.group {
 		next.clear()
 		for used := range s.total + 1 {
-			row := now.row(used)
-			if allZero(row) {
-				continue
-			}
-			left := s.total - used
-			step.of(t.law(s, after, j, left), min(most, left))
-			for have, mass := range row {
-				if mass != 0 {
-					p += mass * next.advance(&step, used, int64(have), mass)
-				}
+			if row := now.row(used); !allZero(row) {
+				law := t.law(s, after, j, s.total-used)
+				next.advance(row, used, min(most, s.total-used), law)
+				p += leaving(row, past, law)
 			}
 		}
 		now, next = next, now
@@ -180,42 +174,52 @@ func (t *table) programme(s *stratum) (float64, bool) {
 	return p, true
 }
 
-// tails are the probabilities of a cell's events.
-type tails struct {
-	pmf, upper []float64 // upper is worked out when needed; NaN until then
-	law        cellLaw
-	reach      int64
-}
-
-func (x *tails) of(law cellLaw, reach int64) {
-	x.law, x.reach = law, reach
-	for k := range reach + 1 {
-		x.pmf[k] = law.PMF(k)
-	}
-	for k := range x.upper {
-		x.upper[k] = math.NaN()
-	}
-}
-
-func (x *tails) from(k int64) float64 {
-	if math.IsNaN(x.upper[k]) {
-		x.upper[k] = x.law.Upper(k)
-	}
-	return x.upper[k]
-}
-
-// advance moves the mass of a state on by one cell and returns the share of it
-// that is past the observed pairs for good.
-func (g grid) advance(x *tails, used, have int64, mass float64) float64 {
-	k := int64(0)
-	for ; k <= x.reach; k++ {
-		pairs := have + k*(k-1)/2
-		if pairs >= g.pairs {
-			break
+// reaching returns, for every number of pairs under the observed one, the least
+// number of events in a cell that reaches it.
+func reaching(pairs int64) []int64 {
+	least := make([]int64, pairs)
+	for have := range least {
+		for k := int64(2); ; k++ {
+			if int64(have)+k*(k-1)/2 >= pairs {
+				least[have] = k
+				break
+			}
 		}
-		g.row(used + k)[pairs] += mass * x.pmf[k]
 	}
-	return x.from(k)
+	return least
+}
+
+// advance adds to the grid where a row of states with so many events used goes
+// when the next cell holds 0 to reach of those left.
+func (g grid) advance(row []float64, used, reach int64, law cellLaw) {
+	for k := range reach + 1 {
+		step := k * (k - 1) / 2
+		if step >= g.pairs {
+			return
+		}
+		mass := law.PMF(k)
+		to := g.row(used + k)[step:]
+		for have, m := range row[:len(to)] {
+			to[have] += m * mass
+		}
+	}
+}
+
+// leaving is the mass of a row that is past the observed pairs for good after
+// the next cell; past is what reaching returns.
+func leaving(row []float64, past []int64, law cellLaw) float64 {
+	p, upper, k := 0.0, 0.0, int64(-1)
+	for have, m := range row {
+		if m == 0 {
+			continue
+		}
+		if past[have] != k {
+			k = past[have]
+			upper = law.Upper(k)
+		}
+		p += m * upper
+	}
+	return p
 }
 
 // grid holds the probability of each (events, pairs).

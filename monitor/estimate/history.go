@@ -53,7 +53,7 @@ type Span struct {
 	// is known to be silence.
 	From, To time.Time
 	// Clock is how far the data reach: without To, slots that had not settled
-	// by then are left out.
+	// by then are left out; monitor.Never leaves none out.
 	Clock monitor.Instant
 }
 
@@ -166,7 +166,7 @@ func (g *gatherer) bounds(sums map[int64]monitor.SlotSum) (first, last int64) {
 		if silent || end < last {
 			last = end
 		}
-	case g.span.Clock != monitor.Beginning:
+	case g.span.Clock != monitor.Beginning && g.span.Clock != monitor.Never:
 		settled := g.cal.Slot(g.span.Clock.Add(-g.in.Settle))
 		if silent || settled < last {
 			last = settled

@@ -99,8 +99,8 @@ const (
 // probability is taken, so that the error of the simulation makes phi larger.
 // It is infinite where even maxPhi is possible, 0 where it would take too long.
 func (t *table) boundSpread(ctx context.Context, plan resample.Plan) (phi float64, draws int, err error) {
-	const tries = 20
-	plan.Draws = boundDraws
+	const tries = 12 // to within half a per cent of phi - 1
+	plan.Draws = min(plan.Draws, boundDraws)
 	cost := t.steps()
 	if !t.proportion { // the urn draws event by event
 		cost = t.events()
