@@ -35,7 +35,29 @@ func newAlertCommand() *cobra.Command {
 		newActCommand(monitor.Close, "Close an alert by hand, with the reason",
 			"Closes the alert by hand, with the reason."),
 		newActCommand(monitor.Note, "Write a note on an alert",
-			"Writes a note on an alert that is not done. Its condition does not change."))
+			"Writes a note on an alert. Its condition does not change."),
+		newMarkCommand())
+	return c
+}
+
+func newMarkCommand() *cobra.Command {
+	a := acting{act: monitor.Act{Kind: monitor.Mark}}
+	var as string
+	c := newActing(&a, "Say what an alert turned out to be",
+		`Says what the alert turned out to be: real, chance, data error, or change of
+definition; none takes a mark back. Trailing baselines leave out whole what was
+marked real.`)
+	c.Flags().StringVar(&as, "as", "", "the `MARK`: real, chance, \"data error\", \"change of definition\" or none; needed")
+	c.PreRunE = func(*cobra.Command, []string) error {
+		if a.act.Mark = life.Mark(as); as == "none" {
+			a.act.Mark = life.NotMarked
+			return nil
+		}
+		if !slices.Contains(life.Marks, a.act.Mark) {
+			return &usageError{fmt.Errorf("--as %q: it must be one of %q, or none", as, life.Marks)}
+		}
+		return nil
+	}
 	return c
 }
 
@@ -160,7 +182,12 @@ type acting struct {
 }
 
 func newActCommand(kind monitor.ActKind, short, long string) *cobra.Command {
-	a := acting{act: monitor.Act{Kind: kind}}
+	return newActing(&acting{act: monitor.Act{Kind: kind}}, short, long)
+}
+
+// newActing returns the command that publishes the act.
+func newActing(a *acting, short, long string) *cobra.Command {
+	kind := a.act.Kind
 	c := &cobra.Command{
 		Use:   kind.String() + " ALERT",
 		Short: short,
@@ -179,6 +206,7 @@ func newActCommand(kind monitor.ActKind, short, long string) *cobra.Command {
 		monitor.Acknowledge: "a `TEXT` to go with it",
 		monitor.Close:       "the reason, a `TEXT`; needed",
 		monitor.Note:        "the note's `TEXT`; needed",
+		monitor.Mark:        "the reason, a `TEXT`; needed",
 	}
 	c.Flags().StringVar(&a.act.Why, "why", "", why[kind])
 	return c
@@ -201,6 +229,8 @@ func (a *acting) check() error {
 		return errors.New("--by is missing: say who does it, by --by NAME or in " + byVariable)
 	case a.act.Why == "" && a.act.Kind == monitor.Close:
 		return errors.New("--why is missing: closing an alert needs a reason")
+	case a.act.Why == "" && a.act.Kind == monitor.Mark:
+		return errors.New("--why is missing: a mark needs a reason")
 	case a.act.Why == "" && a.act.Kind == monitor.Note:
 		return errors.New("--why is missing: it is the note's text")
 	}
@@ -220,12 +250,18 @@ func (a *acting) run(ctx context.Context, w io.Writer) error {
 	if err != nil {
 		return err
 	}
-	if record.Done() {
+	if record.Done() && (a.act.Kind == monitor.Acknowledge || a.act.Kind == monitor.Close) {
 		return fmt.Errorf("alert %s is %s already: nothing was done", record.ID, record.Condition)
 	}
 	err = ask(ctx, setup, verbAct, actRequest{wire.EncodeAct(nil, &a.act)}, &record)
 	if err != nil {
 		return err
+	}
+	if a.act.Kind == monitor.Mark {
+		if record.Mark == life.NotMarked {
+			return say(w, "Alert %s has no mark any more (%s).", record.ID, record.Condition)
+		}
+		return say(w, "Alert %s is marked %s (%s).", record.ID, record.Mark, record.Condition)
 	}
 	if a.act.Kind == monitor.Note {
 		return say(w, "Noted on alert %s (%s).", record.ID, record.Condition)

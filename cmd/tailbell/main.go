@@ -86,7 +86,7 @@ Silence is no proof of safety. Local policy decides.`,
 	root.SetFlagErrorFunc(badFlag)
 	root.SetHelpCommand(newHelpCommand())
 	root.AddCommand(
-		newAlertCommand(), newClockCommand(), newConfigCommand(), newDemoCommand(), newExactCommand(), newFeedCommand(),
+		newAlertCommand(), newBaselineCommand(), newClockCommand(), newConfigCommand(), newDemoCommand(), newExactCommand(), newFeedCommand(),
 		newOutletCommand(), newRefusedCommand(), newReplayCommand(), newRunCommand(), newStatusCommand(), newStoreCommand(), newStreamCommand(),
 	)
 	checkArguments(root)

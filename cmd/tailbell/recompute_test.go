@@ -1,0 +1,80 @@
+package main
+
+import (
+	"encoding/json"
+	"math"
+	"path/filepath"
+	"strings"
+	"testing"
+
+	"tailbell/monitor/life"
+)
+
+// recomputation is what "tailbell exact --json" says, as far as a record says it too.
+type recomputation struct {
+	P        float64 `json:"p"`
+	Lower    float64 `json:"rate_lower"`
+	Upper    float64 `json:"rate_upper"`
+	RatioLow float64 `json:"ratio_lower"`
+	Critical int64   `json:"critical_count"`
+	Size     float64 `json:"attained_size"`
+}
+
+// TestRecompute runs the command line that stands in each alert of the demo
+// and of the two published data sets: its numbers must be the record's, p, the
+// bounds and the attained size to the last digit but one (a rate that is
+// written per 1,000 is rounded once more).
+func TestRecompute(t *testing.T) {
+	demo := filepath.Join(t.TempDir(), "demo.ndjson")
+	if code, _, stderr := run(t, "demo", "--json", "--export", demo); code != 0 {
+		t.Fatal(stderr)
+	}
+	histories := map[string][]string{
+		"demo":        {"--config", demo + ".toml", demo},
+		"coal":        {"--config", "../../testdata/coal/coal.toml", "--zone", "UTC", "../../testdata/coal/coal.csv"},
+		"horse kicks": {"--config", "../../testdata/horsekicks/horsekicks.toml", "--zone", "UTC", "--until", "1895-02-01", "../../testdata/horsekicks/horsekicks.csv"},
+	}
+	for name, args := range histories {
+		t.Run(name, func(t *testing.T) {
+			_, text, stderr := run(t, append([]string{"replay", "--json"}, args...)...)
+			seen := map[string]bool{}
+			for _, line := range notices(t, text) {
+				var n life.Notice
+				if err := json.Unmarshal([]byte(line), &n); err != nil {
+					t.Fatal(err)
+				}
+				if e := n.Step.Evidence; e != nil && !seen[e.Recompute] {
+					seen[e.Recompute] = true
+					recomputed(t, e)
+				}
+			}
+			if len(seen) == 0 {
+				t.Errorf("no look to recompute\n%s", stderr)
+			}
+		})
+	}
+}
+
+func recomputed(t *testing.T, e *life.Evidence) {
+	t.Helper()
+	args := strings.Fields(e.Recompute)[1:]
+	code, out, stderr := run(t, append(args, "--json")...)
+	var a recomputation
+	if err := json.Unmarshal([]byte(out), &a); err != nil || code != 0 {
+		t.Fatalf("%s: exit code %d, %v\n%s%s", e.Recompute, code, err, out, stderr)
+	}
+	for _, pair := range []struct {
+		name      string
+		got, want float64
+	}{
+		{"p", a.P, e.P}, {"rate_lower", a.Lower, e.RateLower}, {"rate_upper", a.Upper, e.RateUpper},
+		{"ratio_lower", a.RatioLow, e.RatioLower}, {"attained_size", a.Size, e.AttainedSize},
+		{"critical_count", float64(a.Critical), float64(e.Critical)},
+	} {
+		// Half an ulp in the mean moves p by about N/2 ulps.
+		tolerance := 1e-15 * float64(2+e.Events)
+		if math.Abs(pair.got-pair.want) > tolerance*math.Abs(pair.want) {
+			t.Errorf("%s\n%s is %v, the record says %v", e.Recompute, pair.name, pair.got, pair.want)
+		}
+	}
+}
