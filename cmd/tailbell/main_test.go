@@ -16,12 +16,12 @@ func TestMain(m *testing.M) {
 	if os.Getenv(runMain) != "" {
 		ctx, stop := signalled(context.Background())
 		defer stop()
-		os.Exit(execute(ctx, os.Args[1:], os.Stdin, os.Stdout, os.Stderr))
+		os.Exit(execute(ctx, os.Args[1:], os.Stdin, os.Stdout, os.Stderr)) //nolint:forbidigo // here it is main
 	}
 	if order := os.Getenv(runBus); order != "" {
-		os.Exit(busMain(order))
+		os.Exit(busMain(order)) //nolint:forbidigo // here it is main
 	}
-	os.Exit(m.Run())
+	os.Exit(m.Run()) //nolint:forbidigo // here it is main
 }
 
 // program returns the command line as a process of its own, not yet started.

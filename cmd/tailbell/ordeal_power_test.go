@@ -9,7 +9,6 @@ import (
 	"path/filepath"
 	"strconv"
 	"strings"
-	"sync"
 	"syscall"
 	"testing"
 	"time"
@@ -60,10 +59,7 @@ func (p *process) endTraced() {
 }
 
 // acks are the moments at which messages were acknowledged.
-type acks struct {
-	mu   sync.Mutex
-	list []ack
-}
+type acks struct{ list []ack }
 
 type ack struct {
 	at       float64

@@ -232,17 +232,16 @@ func (a *author) series(name, indicator string) {
 		beds := rehearse.Amount(rehearse.Between(a.r, 180, 320)) * rehearse.Tenth
 		events := rehearse.Poisson(a.r, 0.01*factor*float64(beds)/float64(rehearse.One))
 		a.report(a.element(name, n, "e"), n, beds)
-		e := a.element(name, n, "n")
-		switch {
-		case indicator == "fall":
-			for i := range events {
-				one := a.element(name, n, fmt.Sprint("f", i))
-				one.Start = a.date(n).Add(time.Duration(rehearse.Between(a.r, 0, 22*60)) * time.Minute)
-				one.End, one.Events, one.HasEvents = one.Start, 1, true
-				a.report(one, n, 0)
-			}
-		default:
+		if indicator != "fall" {
+			e := a.element(name, n, "n")
 			e.Events, e.HasEvents = events, true
+			a.report(e, n, 0)
+			continue
+		}
+		for i := range events {
+			e := a.element(name, n, fmt.Sprint("f", i))
+			e.Start = a.date(n).Add(time.Duration(rehearse.Between(a.r, 0, 22*60)) * time.Minute)
+			e.End, e.Events, e.HasEvents = e.Start, 1, true
 			a.report(e, n, 0)
 		}
 	}

@@ -103,4 +103,3 @@ func TestPlansRepeat(t *testing.T) {
 		}
 	}
 }
-
