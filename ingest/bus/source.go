@@ -427,7 +427,15 @@ func (s *Source) Close() error {
 	if s.feed != nil {
 		s.detach()
 	}
+	if !s.bus.nc.IsConnected() {
+		return nil // the bus forgets the consumer by itself
+	}
 	ctx, cancel := context.WithTimeout(context.Background(), attachTimeout)
 	defer cancel()
-	return s.forget(ctx)
+	err := s.forget(ctx)
+	if passing(err) {
+		s.bus.log.Debug().Err(err).Msg("closing a source while the bus is away")
+		return nil
+	}
+	return err
 }

@@ -74,6 +74,31 @@ func (b *Bus) alertConfig() jetstream.StreamConfig {
 // ensureStreams makes missing streams and compares those that exist. Limits of
 // our own server follow the set-up; those of a remote one are its keeper's.
 func (b *Bus) ensureStreams(ctx context.Context, own bool) error {
+	return b.patiently(ctx, func(ctx context.Context) error { return b.seeToStreams(ctx, own) })
+}
+
+// fewTries is how often a question is asked of a bus that does not answer, as
+// one that has just come up or was cut off for a moment.
+const fewTries = 5
+
+// patiently asks again, a few times, while that can help.
+func (b *Bus) patiently(ctx context.Context, ask func(context.Context) error) error {
+	wait := newBackoff()
+	for n := 1; ; n++ {
+		try, cancel := context.WithTimeout(ctx, tryTimeout)
+		err := ask(try)
+		cancel()
+		if err == nil || !passing(err) || n == fewTries || ctx.Err() != nil {
+			return err
+		}
+		if wait.wait(ctx) != nil {
+			return err
+		}
+	}
+}
+
+func (b *Bus) seeToStreams(ctx context.Context, own bool) error {
+	b.notes = nil
 	for _, want := range []jetstream.StreamConfig{b.inConfig(), b.alertConfig()} {
 		have, err := b.ensureStream(ctx, want)
 		if err != nil {
@@ -227,7 +252,12 @@ type Identity struct {
 
 // Identity asks the bus for the identity of the input stream.
 func (b *Bus) Identity(ctx context.Context) (Identity, error) {
-	return b.identity(ctx, b.names.inStream())
+	var id Identity
+	err := b.patiently(ctx, func(ctx context.Context) (err error) {
+		id, err = b.identity(ctx, b.names.inStream())
+		return err
+	})
+	return id, err
 }
 
 func (b *Bus) identity(ctx context.Context, stream string) (Identity, error) {
@@ -265,7 +295,12 @@ func (b *Bus) EndOf(ctx context.Context, partition int) (uint64, error) {
 // At returns the message at a position of the input stream. The error is an
 // ErrNoMessage if there is none.
 func (b *Bus) At(ctx context.Context, position uint64) (Raw, error) {
-	return b.at(ctx, b.names.inStream(), position)
+	var raw Raw
+	err := b.patiently(ctx, func(ctx context.Context) (err error) {
+		raw, err = b.at(ctx, b.names.inStream(), position)
+		return err
+	})
+	return raw, err
 }
 
 func (b *Bus) at(ctx context.Context, stream string, position uint64) (Raw, error) {
@@ -290,7 +325,15 @@ func (b *Bus) LastSetting(ctx context.Context, partition int) (raw Raw, found bo
 }
 
 // last returns the last message on a subject of the input stream.
-func (b *Bus) last(ctx context.Context, subject string) (Raw, bool, error) {
+func (b *Bus) last(ctx context.Context, subject string) (raw Raw, found bool, err error) {
+	err = b.patiently(ctx, func(ctx context.Context) error {
+		raw, found, err = b.lastOf(ctx, subject)
+		return err
+	})
+	return raw, found, err
+}
+
+func (b *Bus) lastOf(ctx context.Context, subject string) (Raw, bool, error) {
 	s, err := b.js.Stream(ctx, b.names.inStream())
 	if err != nil {
 		return Raw{}, false, fmt.Errorf("asking for the stream %s: %w", b.names.inStream(), mapped(err))
