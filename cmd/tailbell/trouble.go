@@ -2,6 +2,7 @@ package main
 
 import (
 	"cmp"
+	"context"
 	"fmt"
 	"slices"
 	"sync"
@@ -130,6 +131,16 @@ func (d *daemon) busState(s bus.State, err error) {
 		d.troubles.set(troubleBus, everyPartition, text)
 	case bus.Closed:
 	}
+}
+
+// answerTime is how long a status waits for the bus.
+const answerTime = 2 * time.Second
+
+// endOf asks the bus for the end of a partition's messages.
+func (d *daemon) endOf(ctx context.Context, p *part) (uint64, error) {
+	ctx, cancel := context.WithTimeout(ctx, answerTime)
+	defer cancel()
+	return d.bus.EndOf(ctx, p.number)
 }
 
 // gap notes messages that were removed before they could be read.
