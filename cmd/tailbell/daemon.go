@@ -63,6 +63,7 @@ type daemonOptions struct {
 	terminal outlet.Outlet // nil for none
 	maxBatch int
 	busOpts  []bus.Option
+	now      func() time.Time // by which the bus's clock is judged; nil for time.Now
 }
 
 // openDaemon opens the bus and recovers every partition. What fails is closed
@@ -169,7 +170,7 @@ func (d *daemon) openPart(ctx context.Context, number int, o daemonOptions) (p *
 		return p, err
 	}
 	p.mu.position = engine.Position()
-	if err := d.openIntake(ctx, p); err != nil {
+	if err := d.openIntake(ctx, p, o.now); err != nil {
 		return p, err
 	}
 	p.loop = partition.New(engine, st, p.intake, partition.Options{
@@ -187,13 +188,16 @@ func (d *daemon) openPart(ctx context.Context, number int, o daemonOptions) (p *
 }
 
 // openIntake begins to read the partition's stream where the store stands.
-func (d *daemon) openIntake(ctx context.Context, p *part) error {
+func (d *daemon) openIntake(ctx context.Context, p *part, now func() time.Time) error {
+	if now == nil {
+		now = time.Now
+	}
 	marks, err := p.store.Marks()
 	if err != nil {
 		return err
 	}
 	o := intake.Options{
-		After: p.mu.position, Stored: monitor.Beginning, Now: time.Now,
+		After: p.mu.position, Stored: monitor.Beginning, Now: now,
 		Gap:  func(m bus.Missing) { d.gap(p.number, m) },
 		Held: func(h *intake.Hold) { d.held(p.number, h) },
 	}

@@ -133,8 +133,9 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 	for _, p := range d.parts {
 		s := partStatus{Number: p.number, Conditions: []conditionRow{}, Outlets: []outletRow{}}
 		if r.Connected {
-			if s.End, err = d.bus.EndOf(ctx, p.number); err != nil {
-				return nil, err
+			if s.End, err = d.endOf(ctx, p); err != nil {
+				r.Connected = false
+				r.Troubles = append(r.Troubles, trouble{Kind: troubleBus, Partition: p.number, Text: "the bus does not answer: " + err.Error()})
 			}
 		}
 		err = p.loop.Do(ctx, func(e *monitor.Engine) {
