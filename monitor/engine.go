@@ -24,6 +24,7 @@ package monitor
 
 import (
 	"cmp"
+	"fmt"
 	"slices"
 
 	"tailbell/config"
@@ -91,7 +92,7 @@ func (e *Engine) Apply(m *Message) {
 	case !e.history || m.Kind == Live:
 		e.history = false
 		e.advance(m.Stored)
-	case m.HasTime:
+	case m.HasTime && m.Kind != Observations:
 		e.advance(m.Time)
 	}
 	switch m.Kind {
@@ -119,15 +120,44 @@ func (e *Engine) element(m *Message, index int) {
 		e.refuse(m, index, it.Observation.Series, it.Reason, it.Detail, it.Raw)
 		return
 	}
-	if e.history && !m.HasTime && !it.Observation.Retracted {
-		e.advance(it.Observation.HistoryTime())
-	} else if e.history && !m.HasTime && it.Observation.HasReported {
-		e.advance(it.Observation.Reported)
+	if reason, detail := e.keepTime(m, &it.Observation); reason != "" {
+		e.account.Refused++
+		e.refuse(m, index, it.Observation.Series, reason, detail, it.Raw)
+		return
 	}
 	if reason, detail := e.observe(&it.Observation); reason != "" {
 		e.account.Refused++
 		e.refuse(m, index, it.Observation.Series, reason, detail, it.Raw)
 	}
+}
+
+// keepTime moves the clock of history time to when the observation became
+// known. One that no indicator monitors has no say in that, nor one that is
+// news of a slot that could not change any more by then: its times must be
+// wrong, and would take the clock past everything that is still to come.
+func (e *Engine) keepTime(m *Message, o *Observation) (Reason, string) {
+	known := m.Time
+	switch {
+	case !e.history:
+		return "", ""
+	case m.HasTime:
+	case o.HasReported || !o.Retracted:
+		known = o.HistoryTime()
+	default:
+		return "", ""
+	}
+	ix, _ := e.indicatorOf(o.Series)
+	if ix == nil || known <= e.clock {
+		return "", ""
+	}
+	if old := e.ids.byKey[idKey{siteOf(o.Series), o.ID}]; !o.Retracted && (old == nil || o.ID == "") {
+		if end := ix.cal.Start(ix.cal.Slot(o.Start) + 1); end < known.Add(-ix.cfg.Horizon) {
+			return BeyondHorizon, fmt.Sprintf("its slot ended %s, but it became known only at %s, more than the horizon of %s later: correct its times",
+				at(end), at(known), config.FormatDuration(ix.cfg.Horizon))
+		}
+	}
+	e.advance(known)
+	return "", ""
 }
 
 // advance moves the clock and makes the looks that fall due on the way.

@@ -141,8 +141,8 @@ func (e *Engine) admit(ix *indicator, o *Observation) (contribution, Reason, str
 	if reason == TooBig {
 		return c, reason, fmt.Sprintf("exposure %s is too large for the indicator's grain", o.Exposure)
 	}
-	if s := c.series; s != nil && o.HasEvents && !s.roomFor(from, o.Events) {
-		return c, TooBig, "the slot's count of events would not fit any more"
+	if o.HasEvents && !c.series.roomFor(from, o.Events) {
+		return c, TooBig, fmt.Sprintf("a slot holds at most %d events", int64(maxEvents))
 	}
 	return c, "", ""
 }
@@ -165,9 +165,16 @@ func (ix *indicator) fits(o *Observation, from, to int64) (Reason, string) {
 	return "", ""
 }
 
+// maxEvents is the most events that a slot holds: a window of a hundred
+// thousand slots can't overflow.
+const maxEvents = 1 << 45
+
 func (s *series) roomFor(slot, events int64) bool {
+	if s == nil {
+		return events <= maxEvents
+	}
 	i, ok := s.cells.find(slot)
-	return !ok || s.cells[i].events < 1<<62-events
+	return events <= maxEvents && (!ok || s.cells[i].events <= maxEvents-events)
 }
 
 // slotsOf returns the first and last slot that the contribution touches.

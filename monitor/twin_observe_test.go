@@ -13,19 +13,42 @@ func (w *twin) element(m *Message, index int) {
 	w.account.Elements++
 	reason := it.Reason
 	if reason == "" {
-		if w.history && !m.HasTime {
-			if o.HasReported {
-				w.advance(o.Reported)
-			} else if !o.Retracted {
-				w.advance(o.End)
-			}
+		if w.history {
+			reason = w.learn(m, o)
 		}
-		reason = w.observe(o)
+		if reason == "" {
+			reason = w.observe(o)
+		}
 	}
 	if reason != "" {
 		w.account.Refused++
 		w.refuse(index, reason)
 	}
+}
+
+// learn moves the clock to when the observation became known.
+func (w *twin) learn(m *Message, o Observation) Reason {
+	known := o.End
+	switch {
+	case m.HasTime:
+		known = m.Time
+	case o.HasReported:
+		known = o.Reported
+	case o.Retracted:
+		return ""
+	}
+	ix := w.indicatorOf(o.Series)
+	if ix == nil {
+		return ""
+	}
+	_, named := w.ids[[2]string{twinSite(o.Series), o.ID}]
+	if w.clock < known && !o.Retracted && !(named && o.ID != "") {
+		if end := ix.slots.start(ix.slots.at(o.Start) + 1); end < known.Add(-ix.cfg().Horizon) {
+			return BeyondHorizon
+		}
+	}
+	w.advance(known)
+	return ""
 }
 
 func (w *twin) indicatorOf(series string) *twinIndicator {

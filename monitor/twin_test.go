@@ -143,7 +143,7 @@ func (w *twin) apply(m *Message) {
 	switch {
 	case !w.history:
 		w.advance(m.Stored)
-	case m.HasTime:
+	case m.HasTime && m.Kind != Observations:
 		w.advance(m.Time)
 	}
 	switch m.Kind {
