@@ -120,13 +120,22 @@ func baseline(ctx context.Context, o *baselineOptions, paths []string, stdin io.
 	if o.write != "" && err == nil {
 		err = edit.write(o.write, o.config)
 		if err == nil {
-			err = say(stderr, "%s now has this baseline.", o.write)
+			err = sayWritten(stderr, o, in)
 		}
 	}
 	if d.faults > 0 && err == nil {
 		err = errReported
 	}
 	return err
+}
+
+// sayWritten says which series the new baseline serves.
+func sayWritten(stderr io.Writer, o *baselineOptions, in *config.Indicator) error {
+	text := ""
+	if n := len(in.Baselines) - 1; n > 0 && o.files.series == "" {
+		text = " Baselines before it still serve the series that they name."
+	}
+	return say(stderr, "%s now has this baseline.%s", o.write, text)
 }
 
 // baselineJSON is the report with the stanza as it can be pasted.
@@ -181,6 +190,8 @@ type baselineData struct {
 	sums    []monitor.SlotSum
 	clock   monitor.Instant
 	reports *estimate.Reports
+	// timed is set if some observation says when it was reported.
+	timed bool
 	// faults is how many rows of the files can't be used; they were named.
 	faults int
 }
@@ -216,6 +227,7 @@ func (d *baselineData) run(ctx context.Context, e *monitor.Engine, h *history.Hi
 			if x := &m.Items[i]; x.Reason == "" && d.in.Matches(x.Observation.Series) {
 				site, _, _ := strings.Cut(x.Observation.Series, "/")
 				d.reports.Add(site, &x.Observation)
+				d.timed = d.timed || x.Observation.HasReported
 			}
 		}
 		if n++; n%512 != 0 && n != len(h.Entries) {
@@ -236,6 +248,11 @@ func (d *baselineData) run(ctx context.Context, e *monitor.Engine, h *history.Hi
 	}
 	d.sums = append(d.sums, e.Slots()...)
 	d.clock = e.Clock()
+	if !d.timed {
+		// Files that don't tell when rows became known have nothing late in
+		// them: slots that have ended are complete.
+		d.clock = d.clock.Add(d.in.Settle)
+	}
 	if refused > 0 {
 		return say(stderr, "%d rows were refused and are not counted; the first: %s %s: %s", refused, first.Series, first.Reason, first.Detail)
 	}

@@ -40,13 +40,13 @@ func addBaseline(setup *config.Setup, in *config.Indicator, r *estimate.Report, 
 		e := &baselineEdit{stanza: r.Stanza.Text(baselineHeader, func(key string) string { return refused[key] })}
 		var text []byte
 		if text, e.why = insertBaseline(setup.Text, in, e.stanza, pattern); e.why != nil {
-			return e, nil
+			return e, nil //nolint:nilerr // the stanza can be printed all the same; write tells why
 		}
 		next, err := config.Parse(text, "the set-up with the new baseline")
 		var faults config.Faults
 		switch {
 		case err == nil:
-			e.text, e.why = text, checkEdit(setup, next, in)
+			e.text, e.why = text, checkEdit(setup.Text, next, in)
 			return e, nil
 		case !errors.As(err, &faults):
 			return nil, err
@@ -75,7 +75,11 @@ func noteRefused(faults config.Faults, s *estimate.Stanza, refused map[string]st
 }
 
 // checkEdit makes sure that only the indicator's baselines have changed.
-func checkEdit(old, next *config.Setup, in *config.Indicator) error {
+func checkEdit(text []byte, next *config.Setup, in *config.Indicator) error {
+	old, err := config.Parse(text, "the set-up") // with its paths as written, as in next
+	if err != nil {
+		return err
+	}
 	for _, c := range config.Compare(old, next) {
 		if !strings.HasPrefix(c.Key, "indicator["+in.Name+"].baseline") {
 			return fmt.Errorf("%w: %s would change", errByHand, c.Key)

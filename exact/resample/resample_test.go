@@ -322,3 +322,22 @@ func TestSamplers(t *testing.T) {
 	}
 	fit(t, "Dirichlet-multinomial", seen, draws, exact.BetaBinomial{N: 12, A: 2.5 * 3 / 8.5, B: 2.5 * 5.5 / 8.5}.PMF)
 }
+
+// TestTies: values equal to the estimate are no bias, so that BCa without
+// acceleration is the percentile interval where half of the rest lie below.
+func TestTies(t *testing.T) {
+	r := &Redrawn{Estimate: 3}
+	for v := range 7 {
+		for range 100 {
+			r.Values = append(r.Values, float64(v))
+		}
+	}
+	lower, upper := r.Percentile(0.1)
+	low, high, err := r.BCa(0.1, 0)
+	if err != nil || math.Abs(low-lower) > 1e-9 || math.Abs(high-upper) > 1e-9 {
+		t.Errorf("BCa is %g to %g (%v), percentiles %g to %g", low, high, err, lower, upper)
+	}
+	if q := r.Quantile(1e-9); q != 0 {
+		t.Errorf("the least value is %g", q)
+	}
+}

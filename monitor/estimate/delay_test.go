@@ -14,14 +14,15 @@ const oneDay = monitor.Instant(24 * time.Hour / time.Microsecond)
 
 // TestProductLimit works a small example by hand: by day 10,
 //
-//	occurred on day 0: 10 with delay 1, 6 with delay 3
-//	occurred on day 8: 9 with delay 1 (delay 3 would not be known yet)
+//	occurred on day 0: 10 with delay 1, 4 with delay 2, 6 with delay 3
+//	occurred on day 8: 9 with delay 1, 3 with delay 2 (3 would not be known yet)
 //
-// At 3 days 16 could have been seen, 6 have that delay: F(2) = 1 - 6/16. All 19
-// quick ones of 25 would naively be 0.76.
+// Of delay 3 could have been seen 20, of which 6 were: F(2) = 1 - 6/20. Of delay
+// 2 or less could have been seen 26, of which 7 had 2: F(1) = F(2) (1 - 7/26).
+// Naively the 19 of delay 1 among all 32 would be the share.
 func TestProductLimit(t *testing.T) {
 	d, err := DelayOf([]Reported{
-		{0, oneDay, 10}, {0, 3 * oneDay, 6}, {8 * oneDay, 9 * oneDay, 9},
+		{0, oneDay, 10}, {0, 2 * oneDay, 4}, {0, 3 * oneDay, 6}, {8 * oneDay, 9 * oneDay, 9}, {8 * oneDay, 10 * oneDay, 3},
 	}, 10*oneDay)
 	if err != nil {
 		t.Fatal(err)
@@ -33,15 +34,16 @@ func TestProductLimit(t *testing.T) {
 	}{
 		{0, 0, 0},
 		{day - 1, 0, 0},
-		{day, 10. / 16, 19. / 25},
-		{2 * day, 10. / 16, 19. / 25},
+		{day, 14. / 20 * 19 / 26, 19. / 32},
+		{2*day - 1, 14. / 20 * 19 / 26, 19. / 32},
+		{2 * day, 14. / 20, 26. / 32},
 		{3 * day, 1, 1},
 		{30 * day, 1, 1},
 	} {
 		near(t, "F", d.F(c.age), c.f, 1e-12)
 		near(t, "naive F", d.Naive(c.age), c.naive, 1e-12)
 	}
-	if got := d.Ages(day, 10); len(got) != 2 || got[0] != day || got[1] != 3*day {
+	if got := d.Ages(day, 10); len(got) != 3 || got[0] != day || got[2] != 3*day {
 		t.Errorf("ages are %v", got)
 	}
 }
