@@ -172,6 +172,7 @@ func (e *Engine) take(a *alert, s life.Step) error {
 // leave ends the alert's run: it signals no more, or nobody wants it to.
 func (t *tail) leave(boundary int64) {
 	t.current.last = boundary
+	t.current.series.extend(t.current, boundary)
 	t.past = append(t.past, t.current)
 	t.current = nil
 	t.quiet = 0
