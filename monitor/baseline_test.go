@@ -1,10 +1,10 @@
 package monitor_test
 
 import (
-	"bytes"
 	"math"
 	"os"
 	"slices"
+	"strings"
 	"testing"
 
 	"tailbell/monitor/life"
@@ -70,6 +70,12 @@ var judgements = map[string][]judged{
 		{"2026-03-11", life.StepOpened, "", 5, 0.6, 0.000394486018340256, "ppois(4, 0.6, lower = F)"},
 		{"2026-03-13", life.StepCorrected, "", 7, 0.52, 1.29634737644277e-06, "ppois(6, 0.52, lower = F)"},
 	},
+	// Of each of the two peers' 59 days the last is thinned to 0.2 and the two
+	// before it to 0.5, as the first look sees them on 2 March; of the window's
+	// days one to 0.2 and two to 0.5.
+	"delay-peers": {
+		{"2026-03-06", life.StepOpened, "", 8, 58. / 1144 * 52, 0.00774371395027148, `binom.test(8, 8 + 58, 52 / 1196, "greater")`},
+	},
 	"delay-whole": {
 		{"2026-03-11", life.StepOpened, "", 4, 0.2, 5.68402407581566e-05, "ppois(3, 0.2, lower = F)"},
 	},
@@ -96,14 +102,20 @@ var judgements = map[string][]judged{
 }
 
 // scenario plays the scenario of that name without a restart.
-func scenario(t *testing.T, name string) outcome {
+func scenario(t *testing.T, name string) outcome { return changed(t, name, nil) }
+
+// changed plays the scenario with its input changed.
+func changed(t *testing.T, name string, change func(input string) string) outcome {
 	t.Helper()
 	text, err := os.ReadFile("../testdata/monitor/" + name + ".txt")
 	if err != nil {
 		t.Fatal(err)
 	}
-	input, _, _ := bytes.Cut(text, []byte("----\n"))
-	return play(t, readScenario(t, string(input)), 0)
+	input, _, _ := strings.Cut(string(text), "----\n")
+	if change != nil {
+		input = change(input)
+	}
+	return play(t, readScenario(t, input), 0)
 }
 
 // closeTo reports whether two numbers agree to nine digits.
@@ -168,6 +180,32 @@ func TestTrailingLeavesOutWhatWasMarked(t *testing.T) {
 	// the looks to 15 January (the first that is full) up to 28 February.
 	if got := o.account.WithheldLooks; got != 17+28 {
 		t.Errorf("%d looks withheld, want 45", got)
+	}
+}
+
+// What an alert is marked leaves out the same slots, whether that was said
+// while it signalled or after it had returned.
+func TestMarkedWhileItSignals(t *testing.T) {
+	const mark = `"mark":"real","why":"two beds shared","at":"2026-04-`
+	o := changed(t, "trailing", func(input string) string {
+		var lines []string
+		var act string
+		for line := range strings.Lines(input) {
+			if strings.Contains(line, mark) {
+				act = strings.Replace(line, mark+"20", mark+"05", 1)
+				continue
+			}
+			lines = append(lines, line)
+		}
+		at := slices.IndexFunc(lines, func(line string) bool { return strings.Contains(line, `"at":"2026-04-20T`) })
+		return strings.Join(slices.Insert(lines, at, act), "")
+	})
+	marked := slices.IndexFunc(o.store.Steps, func(n life.Notice) bool { return n.Step.Kind == life.StepMarked })
+	if got := o.store.Steps[marked].Step.Condition; got != life.Unacknowledged {
+		t.Fatalf("the alert was %s when it was marked", got)
+	}
+	if got := evidenceOf(o)[2].Baseline.LeftOut; got != 29 {
+		t.Errorf("%d slots left out, want 29", got)
 	}
 }
 

@@ -153,7 +153,7 @@ func (ix *indicator) baselineOf(s *series, u *usual, ev *life.Evidence, o *oppor
 	from, to := ix.cal.Start(ref.begin).in(cfg.Zone), ix.cal.Start(ref.end).in(cfg.Zone)
 	r.Exposure, r.From, r.To, r.LeftOut = ref.exposure.decimal(cfg.GrainDigits), &from, &to, ref.leftOut
 	weighted, between := ref.weighted, ref.between // a record must not point into what is kept
-	if b.Strata != nil {
+	if weighted != ref.exposureFloat(u) {
 		r.Weighted = &weighted
 	}
 	if r.Peers = ref.peers; ref.peers >= 2 {

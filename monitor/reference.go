@@ -5,6 +5,7 @@ import (
 	"encoding/binary"
 	"fmt"
 	"slices"
+	"time"
 
 	"tailbell/config"
 )
@@ -30,7 +31,7 @@ func (e *Engine) refresh(ix *indicator, ep *epoch, boundary int64) {
 		if b.Kind == config.Trailing {
 			r.end = boundary - int64(b.GapSlots)
 			r.begin = r.end - int64(b.SpanSlots)
-			ix.countReference(s, b, &r)
+			ix.countReference(s, b, &r, boundary)
 		} else {
 			if pools == nil {
 				pools = map[*config.Baseline]*pool{}
@@ -61,6 +62,9 @@ func (ix *indicator) digest(b *config.Baseline) int64 {
 	if b.Strata != nil {
 		text = fmt.Append(text, b.Strata.By, b.Strata.Factors)
 	}
+	if b.Delay != nil {
+		text = fmt.Append(text, b.Delay.Ages, b.Delay.Reported)
+	}
 	sum := sha256.Sum256(text)
 	d := int64(binary.LittleEndian.Uint64(sum[:]))
 	ix.digests[b] = d
@@ -73,11 +77,12 @@ func estimated(cfg *config.Indicator) bool {
 	})
 }
 
-// countReference sums the slots [begin, end) of the series that are known on
+// countReference sums, for looks at the boundary, the slots [begin, end) of the series that are known on
 // both sides and were not marked real.
-func (ix *indicator) countReference(s *series, b *config.Baseline, r *reference) {
+func (ix *indicator) countReference(s *series, b *config.Baseline, r *reference, boundary int64) {
 	r.begin = max(r.begin, s.birth, ix.kept)
 	r.strata = make([]Quantity, strataOf(b))
+	at := ix.due(boundary)
 	ix.eachExposure(s, r.begin, r.end, func(slot int64, q Quantity, provisional bool) {
 		events, known := ix.eventsOf(s, slot)
 		switch {
@@ -86,24 +91,60 @@ func (ix *indicator) countReference(s *series, b *config.Baseline, r *reference)
 			r.leftOut++
 		default:
 			r.events += events
-			i := 0
-			if b.Strata != nil {
-				i = ix.stratum(b.Strata, slot)
-			}
+			i := ix.cellOf(b, slot, at)
 			r.strata[i] = r.strata[i].add(q)
 		}
 	})
 	r.weigh(b, ix.cfg)
 }
 
+// strataOf is how many kinds of slots a reference tells apart: by stratum and
+// by the step of the delay that they have reached.
 func strataOf(b *config.Baseline) int {
-	if b.Strata == nil {
-		return 1
+	n := 1
+	if b.Strata != nil {
+		n = len(b.Strata.Factors)
 	}
-	return len(b.Strata.Factors)
+	if b.Delay != nil {
+		n *= len(b.Delay.Ages) + 1
+	}
+	return n
 }
 
-// weigh sums the exposure of the strata, plain and by their factors. For a
+// cellOf returns the number of the slot's kind at the moment.
+func (ix *indicator) cellOf(b *config.Baseline, slot int64, at Instant) int {
+	i := 0
+	if b.Strata != nil {
+		i = ix.stratum(b.Strata, slot)
+	}
+	if b.Delay == nil {
+		return i
+	}
+	age := at.Time().Sub(ix.cal.Start(slot + 1).Time())
+	steps := slices.IndexFunc(b.Delay.Ages, func(a time.Duration) bool { return a > age })
+	if steps < 0 {
+		steps = len(b.Delay.Ages)
+	}
+	return i*(len(b.Delay.Ages)+1) + steps
+}
+
+// factorOf is by how much the usual rate is multiplied in slots of that kind.
+func factorOf(b *config.Baseline, i int) float64 {
+	share, factor := 1.0, 1.0
+	if b.Delay != nil {
+		steps := len(b.Delay.Ages) + 1
+		if share = 0; i%steps > 0 {
+			share = b.Delay.Reported[i%steps-1]
+		}
+		i /= steps
+	}
+	if b.Strata != nil {
+		factor = b.Strata.Factors[i]
+	}
+	return factor * share
+}
+
+// weigh sums the exposure of all kinds, plain and by their factors. For a
 // proportion, whose factors multiply the odds, it comes to so many trials as
 // would bring these events at the usual proportion itself.
 func (r *reference) weigh(b *config.Baseline, cfg *config.Indicator) {
@@ -111,10 +152,7 @@ func (r *reference) weigh(b *config.Baseline, cfg *config.Indicator) {
 	var list []trials
 	for i, q := range r.strata {
 		r.exposure = r.exposure.add(q)
-		factor := 1.0
-		if b.Strata != nil {
-			factor = b.Strata.Factors[i]
-		}
+		factor := factorOf(b, i)
 		if !q.IsZero() {
 			r.weighted += float64(factor * q.Float(cfg.GrainDigits))
 		}
@@ -185,7 +223,7 @@ func (ix *indicator) poolOf(ep *epoch, b *config.Baseline, boundary int64) *pool
 			continue
 		}
 		r := &reference{begin: p.sum.begin, end: p.sum.end}
-		if ix.countReference(s, b, r); r.weighted == 0 {
+		if ix.countReference(s, b, r, boundary); r.weighted == 0 {
 			continue
 		}
 		p.each[s] = r
