@@ -326,9 +326,9 @@ func TestSamplers(t *testing.T) {
 // TestTies: values equal to the estimate are no bias, so that BCa without
 // acceleration is the percentile interval where half of the rest lie below.
 func TestTies(t *testing.T) {
-	r := &Redrawn{Estimate: 3}
-	for v := range 7 {
-		for range 100 {
+	r := &Redrawn{Estimate: 100}
+	for v := range 201 {
+		for range 1 + 200*min(1, max(0, 1-(v-100)*(v-100))) { // 201 times 100
 			r.Values = append(r.Values, float64(v))
 		}
 	}
