@@ -38,6 +38,7 @@ type daemon struct {
 
 	troubles troubles
 	copies   copies
+	ending   chan struct{} // closed when run is to end
 }
 
 // part is one partition at work.
@@ -72,7 +73,7 @@ func openDaemon(ctx context.Context, setup *config.Setup, o daemonOptions) (d *d
 	if err := checkFolder(setup); err != nil {
 		return nil, err
 	}
-	d = &daemon{setup: setup, log: o.log}
+	d = &daemon{setup: setup, log: o.log, ending: make(chan struct{})}
 	b, err := bus.Open(ctx, setup, append(o.busOpts, bus.WithLog(o.log), bus.WithState(d.busState))...)
 	if err != nil {
 		return nil, err
@@ -255,6 +256,8 @@ func (d *daemon) full(ctx context.Context, p *part, err error) error {
 	select {
 	case <-time.After(2 * time.Second):
 		return nil
+	case <-d.ending: // the stream brings it again
+		return err
 	case <-ctx.Done():
 		return ctx.Err()
 	}
@@ -301,6 +304,7 @@ func (p *part) reach(ctx context.Context, position uint64) error {
 func (d *daemon) run(ctx context.Context) error {
 	ctx, stop := context.WithCancelCause(ctx)
 	defer stop(nil)
+	context.AfterFunc(ctx, func() { close(d.ending) })
 	var running sync.WaitGroup
 	start := func(f func(context.Context) error) {
 		running.Go(func() {
@@ -319,6 +323,7 @@ func (d *daemon) run(ctx context.Context) error {
 	if !d.setup.History {
 		start(d.goLive)
 	}
+	start(d.watchRoom)
 	running.Wait()
 	if err := context.Cause(ctx); err != nil && !errors.Is(err, context.Canceled) {
 		return err

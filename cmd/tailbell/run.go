@@ -87,22 +87,39 @@ func runDaemon(ctx context.Context, setup *config.Setup, o runOptions, stdout, s
 		return err
 	}
 	defer func() { err = errors.Join(err, h.close()) }()
-	d, err := openDaemon(ctx, setup, daemonOptions{
-		log: log, terminal: outlet.NewTerminal(stdout, widthOf(stdout), o.asJSON),
-	})
+	opts := daemonOptions{log: log, terminal: outlet.NewTerminal(stdout, widthOf(stdout), o.asJSON)}
+	err = runOnce(ctx, setup, opts, h)
+	for errors.Is(err, errAgain) && ctx.Err() == nil {
+		log.Warn().Err(err).Msg("there is room again: starting the embedded bus again")
+		err = runOnce(ctx, setup, opts, h)
+		// The room may be gone again before the bus has come up.
+		if err != nil && !errors.Is(err, errAgain) && tryRoom(setup.Folder) != nil {
+			log.Error().Err(err).Msg("starting again")
+			err = errors.Join(errAgain, awaitRoom(ctx, setup.Folder))
+		}
+	}
+	if ctx.Err() != nil && errors.Is(err, errAgain) {
+		err = nil
+	}
+	if err == nil {
+		log.Info().Msg("stopped")
+	}
+	return err
+}
+
+// runOnce opens the daemon and runs it. The error is an errAgain if that is to
+// be done once more.
+func runOnce(ctx context.Context, setup *config.Setup, o daemonOptions, h *health) (err error) {
+	d, err := openDaemon(ctx, setup, o)
 	if err != nil {
 		return err
 	}
 	defer func() { err = errors.Join(err, d.close()) }()
 	h.daemon.Store(d)
 	defer h.daemon.Store(nil)
-	log.Info().Str("name", setup.Name).Str("folder", setup.Folder).Str("setup", setup.Digest[:12]).
+	o.log.Info().Str("name", setup.Name).Str("folder", setup.Folder).Str("setup", setup.Digest[:12]).
 		Bool("embedded_bus", d.bus.Embedded()).Msg("running")
-	if err := d.run(ctx); err != nil {
-		return err
-	}
-	log.Info().Msg("stopped")
-	return nil
+	return d.run(ctx)
 }
 
 // checkFolder refuses a folder whose stores are another deployment's. It looks

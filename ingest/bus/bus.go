@@ -320,6 +320,16 @@ func (b *Bus) Tries() int { return int(b.tries.Load()) }
 // Embedded reports whether the server runs in this process.
 func (b *Bus) Embedded() bool { return b.embedded != nil }
 
+// Broken says why the embedded server stores nothing any more, "" if it does:
+// after a disk was full or a write failed it refuses every message until it is
+// started again.
+func (b *Bus) Broken() string {
+	if b.embedded == nil {
+		return ""
+	}
+	return b.embedded.log.broken()
+}
+
 // Notes name the settings of existing streams that differ from the set-up
 // without harm.
 func (b *Bus) Notes() []string { return b.notes }

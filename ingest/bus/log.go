@@ -2,6 +2,7 @@ package bus
 
 import (
 	"fmt"
+	"slices"
 	"strings"
 	"sync"
 
@@ -15,9 +16,21 @@ type serverLog struct {
 	log zerolog.Logger
 	mu  struct {
 		sync.Mutex
-		fatal string // the last fatal message
+		fatal  string // the last fatal message
+		broken string // why nothing more is stored
 	}
 }
+
+// broken returns why the server stores nothing any more, "" if it does.
+func (l *serverLog) broken() string {
+	l.mu.Lock()
+	defer l.mu.Unlock()
+	return l.mu.broken
+}
+
+// What the server says when it gives up storing. It says so nowhere else, and
+// does not try again when there is room: only a new start does.
+var breakdowns = []string{"Critical write error", "will be DISABLED"}
 
 // fatal returns the server's last fatal message, "" if there was none.
 func (l *serverLog) fatal() string {
@@ -46,6 +59,12 @@ func (l *serverLog) Warnf(format string, v ...any) {
 
 // Errorf logs an error.
 func (l *serverLog) Errorf(format string, v ...any) {
+	text := fmt.Sprintf(format, v...)
+	if slices.ContainsFunc(breakdowns, func(one string) bool { return strings.Contains(text, one) }) {
+		l.mu.Lock()
+		l.mu.broken = text
+		l.mu.Unlock()
+	}
 	l.log.Error().Msgf(format, v...)
 }
 

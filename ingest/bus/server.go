@@ -35,6 +35,7 @@ func newAccount(user string) account {
 // embedded is the server in this process.
 type embedded struct {
 	server  *server.Server
+	log     *serverLog
 	daemon  account // this process
 	visitor account // other commands, through the loopback listener
 }
@@ -47,6 +48,7 @@ func startServer(setup *config.Setup, o options, logger zerolog.Logger) (*embedd
 		return nil, fmt.Errorf("setting up the embedded bus: %w", err)
 	}
 	log := &serverLog{log: logger}
+	e.log = log
 	s.SetLoggerV2(log, false, false, false)
 	s.Start()
 	e.server = s
