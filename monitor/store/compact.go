@@ -1,6 +1,7 @@
 package store
 
 import (
+	"context"
 	"errors"
 	"fmt"
 	"io/fs"
@@ -16,8 +17,9 @@ const compactStep = 16 << 20
 
 // CompactTo writes a consistent copy into a new file like CopyTo, but value by
 // value instead of page by page: what was removed or has expired is in no page
-// of it, and it is no larger than what it holds. It is slower than CopyTo.
-// Commits go on meanwhile. An existing file is left alone: fs.ErrExist.
+// of it, and it is no larger than what it holds. The copy is checked whole, so
+// that a damaged store makes none. It is slower than CopyTo. Commits go on
+// meanwhile. An existing file is left alone: fs.ErrExist.
 func (s *Store) CompactTo(path string) (n int64, err error) {
 	if _, err := os.Lstat(path); err == nil {
 		return 0, fmt.Errorf("copy %s: %w", path, fs.ErrExist)
@@ -29,6 +31,9 @@ func (s *Store) CompactTo(path string) (n int64, err error) {
 	err = errors.Join(draft.Close(), guard(func() error { return compact(draft.Name(), s.db) }))
 	if err == nil {
 		n, err = seal(draft.Name())
+	}
+	if err == nil { // what is damaged must not be taken for a copy
+		_, err = CheckFile(context.Background(), draft.Name(), s.opts)
 	}
 	if err == nil {
 		err = publish(draft.Name(), path)
