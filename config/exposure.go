@@ -1,6 +1,9 @@
 package config
 
-import "time"
+import (
+	"fmt"
+	"time"
+)
 
 // usualExpiry is how long a census is carried forward unless said otherwise.
 const usualExpiry = 90 * 24 * time.Hour
@@ -18,6 +21,23 @@ func (s section) readExposure(proportion bool) Exposure {
 	return e
 }
 
+// Bounds of exposure by the clock, within which it is reckoned exactly at any
+// grain from year 0 to 9999.
+const (
+	maxClockDigits = 4
+	maxClockSize   = 1_000_000_000
+	maxClockPer    = 3660 * 24 * time.Hour
+)
+
+func pow10(n uint8) uint64 {
+	p := uint64(1)
+	for range n {
+		p *= 10
+	}
+	return p
+}
+
+// readClock returns how much exposure the clock brings.
 func (s section) readClock(exposure Exposure) ClockExposure {
 	clock := s.sub("clock")
 	given := s.has("clock")
@@ -36,7 +56,11 @@ func (s section) readClock(exposure Exposure) ClockExposure {
 	if ok && (!sizeGiven || size.Coef == 0) {
 		clock.fault("size", "must be given, and greater than 0", "write how much exposure there is in the time that per names")
 	}
-	per, _ := clock.duration("per", 24*time.Hour, time.Second, maxTime)
+	if ok && (size.Digits > maxClockDigits || size.Coef > maxClockSize*pow10(size.Digits)) {
+		clock.fault("size", fmt.Sprintf("has more than %d decimals, or is more than %d", maxClockDigits, maxClockSize),
+			"round it, or count in a larger unit")
+	}
+	per, _ := clock.duration("per", 24*time.Hour, time.Second, maxClockPer)
 	return ClockExposure{Size: size, Per: per}
 }
 

@@ -172,6 +172,9 @@ func (e *Engine) amend(a *alert) {
 		if t.current == a {
 			t.leave(a.series.indicator.looked)
 		}
+		if a.record.Number == t.opened {
+			t.disarmed = false // the one that was closed by hand never was
+		}
 		e.step(a, life.Step{Kind: life.StepWithdrawn, At: e.clock.Time(), Why: "data corrected"})
 		return
 	}

@@ -35,7 +35,7 @@ func Unfit(old, next *config.Setup) string { return unfit(old, next) }
 func unfit(old, next *config.Setup) string {
 	var keys []string
 	for _, c := range config.Compare(old, next) {
-		if c.Class != config.NextLook {
+		if c.Class == config.Rebuild {
 			keys = append(keys, c.String())
 		}
 	}

@@ -266,6 +266,9 @@ func (w *twin) amend(a *twinAlert) {
 	if a.series.tails[a.d].current == a {
 		a.leave()
 	}
+	if t := &a.series.tails[a.d]; a.number == len(t.alerts) {
+		t.disarmed = false
+	}
 	a.pending = false
 	w.step(a, twinStep{kind: life.StepWithdrawn, at: w.clock.Time(), why: "data corrected"})
 }

@@ -3,6 +3,7 @@ package life
 import (
 	"errors"
 	"fmt"
+	"slices"
 	"time"
 )
 
@@ -106,9 +107,20 @@ func (r *Record) take(s Step, next Condition) Notice {
 	s.Number = len(r.Steps) + 1
 	s.At = s.At.UTC()
 	s.Condition = next
-	// Earlier notices share the backing array's beginning, never its growth.
-	r.Steps = append(r.Steps[:len(r.Steps):len(r.Steps)], s)
-	return Notice{Key: Key(r.ID, s.Number), Step: s, Record: *r}
+	r.Steps = append(r.Steps, s)
+	n := Notice{Key: Key(r.ID, s.Number), Step: s, Record: *r}
+	n.Record.Steps = brief(r.Steps)
+	return n
+}
+
+// brief copies the steps without the evidence of all but the last: each of
+// them was a notice of its own.
+func brief(steps []Step) []Step {
+	short := slices.Clone(steps)
+	for i := range short[:len(short)-1] {
+		short[i].Evidence = nil
+	}
+	return short
 }
 
 // Key is the idempotency key of a step.

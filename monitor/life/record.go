@@ -236,7 +236,8 @@ type Step struct {
 }
 
 // Notice is one step of one alert as outlets deliver it: the record as it
-// stood after the step. Key is its idempotency key.
+// stood after the step, its earlier steps without their evidence. Key is its
+// idempotency key.
 type Notice struct {
 	Key    string `json:"key"`
 	Step   Step   `json:"step"`
