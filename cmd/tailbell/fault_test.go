@@ -205,7 +205,7 @@ func TestFaultAtEveryOperation(t *testing.T) {
 		raws[i].Stored = time.Date(2026, 3, 2, 12, 0, i, 0, time.UTC)
 	}
 	// Every operation in a long run, else each of so many, from a random one on.
-	batch, stride := len(raws)/20, int64(41)
+	batch, stride := len(raws)/20, int64(97)
 	switch {
 	case *ordealKills > 0:
 		stride = 1

@@ -71,7 +71,7 @@ type ack struct {
 // part. Everything acknowledged before must be in the stream, and the store
 // sound, not ahead of the stream, and what the stream up to its position says.
 func TestPowerLossEmbedded(t *testing.T) {
-	x := newTrial(t, ordeal.Options{}, "", "")
+	x := newTrial(t, 30, ordeal.Options{}, "", "")
 	trace := filepath.Join(t.TempDir(), "trace")
 	plain := x.daemon.command
 	x.daemon.command = func() *exec.Cmd { return underTrace(t, plain(), trace) }

@@ -21,12 +21,12 @@ type busTrial struct {
 	files  string // of the bus
 }
 
-func newBusTrial(t *testing.T, o ordeal.Options) *busTrial {
+func newBusTrial(t *testing.T, gate int, o ordeal.Options) *busTrial {
 	t.Helper()
 	files := filepath.Join(t.TempDir(), "bus")
 	server, address := newBusProcess(t, files)
 	proxy := newProxy(t, address)
-	x := &busTrial{trial: newTrial(t, o, proxy.address(), proxy.address()), server: server, proxy: proxy, files: files}
+	x := &busTrial{trial: newTrial(t, gate, o, proxy.address(), proxy.address()), server: server, proxy: proxy, files: files}
 	server.start()
 	t.Cleanup(server.kill)
 	x.awaitBus()
@@ -97,7 +97,7 @@ func (x *busTrial) revive() {
 // TestOrdealRemote kills the daemon and a bus of its own apart from each other,
 // and cuts and slows the line between them.
 func TestOrdealRemote(t *testing.T) {
-	x := newBusTrial(t, ordeal.Options{Settings: 2})
+	x := newBusTrial(t, 200, ordeal.Options{Settings: 2})
 	x.begin()
 	for broken := 0; broken < x.kills; broken++ {
 		x.revive()
@@ -129,7 +129,7 @@ type snapshot struct {
 // the store is a condition; it is accepted, and the publisher sends again what
 // the stream lost and the store had not counted.
 func TestOrdealPowerLoss(t *testing.T) {
-	x := newBusTrial(t, ordeal.Options{IDsOnly: true})
+	x := newBusTrial(t, 30, ordeal.Options{IDsOnly: true})
 	x.pub.careful = true
 	x.begin()
 	var kept []snapshot

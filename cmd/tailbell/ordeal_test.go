@@ -55,26 +55,26 @@ type trial struct {
 	setup   int            // number of the set-up in the file
 }
 
-// howMany is how many kills a run has.
-func howMany() int {
+// howMany is how many kills a run has; at the gate it is so many.
+func howMany(gate int) int {
 	switch {
 	case *ordealKills > 0:
 		return *ordealKills
 	case os.Getenv("TAILBELL_CI") != "":
-		return 40
+		return gate
 	}
 	return 8
 }
 
 // newTrial makes everything but a bus; remote is where the daemon finds it, and
 // way where the publisher does.
-func newTrial(t *testing.T, o ordeal.Options, remote, way string) *trial {
+func newTrial(t *testing.T, gate int, o ordeal.Options, remote, way string) *trial {
 	t.Helper()
 	seed := *ordealSeed
 	if seed == 0 {
 		seed = rand.Uint64()
 	}
-	kills := howMany()
+	kills := howMany(gate)
 	t.Logf("seed %d, %d kills", seed, kills)
 	o.Days = 60 + kills
 	plan, err := ordeal.Generate(seed, o)
@@ -324,7 +324,7 @@ func (x *trial) check(whole bool) {
 
 // TestOrdeal kills the daemon, and the embedded bus with it.
 func TestOrdeal(t *testing.T) {
-	x := newTrial(t, ordeal.Options{Settings: 3}, "", "")
+	x := newTrial(t, 200, ordeal.Options{Settings: 3}, "", "")
 	x.begin()
 	for x.endings["killed"] < x.kills {
 		if !x.daemon.alive() {
