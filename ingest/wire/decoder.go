@@ -98,8 +98,16 @@ func NewDecoder(l Limits) *Decoder {
 }
 
 // Decode turns one message into an input of the engine. It never fails: what
-// it can't understand is a refusal in the result.
+// it can't understand is a refusal in the result. The details of refusals quote
+// nothing of the message, since they are kept longer than its bytes; those that
+// Observation and Act return do.
 func (d *Decoder) Decode(r Raw) monitor.Message {
+	m := d.decode(r)
+	makeDiscreet(&m)
+	return m
+}
+
+func (d *Decoder) decode(r Raw) monitor.Message {
 	m := monitor.Message{Position: r.Position, Stored: monitor.InstantOf(r.Stored)}
 	live, f := readHeader(r.Header, &m)
 	if f != nil {

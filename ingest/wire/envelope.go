@@ -33,7 +33,7 @@ func (d *Decoder) unwrap(r Raw) (payload, *fault) {
 	if strings.HasPrefix(media, "application/cloudevents") {
 		if media != "application/cloudevents+json" {
 			return payload{}, refuse(monitor.BadEnvelope,
-				"the content type is %s; of the forms of CloudEvents send application/cloudevents+json, one event a message", clip(media))
+				"the content type is %q; of the forms of CloudEvents send application/cloudevents+json, one event a message", clip(media))
 		}
 		return d.unwrapJSON(r.Data)
 	}
@@ -73,14 +73,14 @@ func headerAttributes(header map[string][]string) (map[string]attribute, *fault)
 	for _, key := range keys {
 		name, values := strings.ToLower(key[3:]), header[key]
 		if _, twice := attributes[name]; twice || len(values) > 1 {
-			return nil, refuse(monitor.BadEnvelope, "the header ce-%s is given more than once; give it once", clip(name))
+			return nil, refuse(monitor.BadEnvelope, "the header %q is given more than once; give it once", "ce-"+clip(name))
 		}
 		if attributes == nil {
 			attributes = make(map[string]attribute)
 		}
 		value, err := url.PathUnescape(values[0])
 		if err != nil {
-			return nil, refuse(monitor.BadEnvelope, "the header ce-%s has a bad percent-encoding; write %% as %%25", clip(name))
+			return nil, refuse(monitor.BadEnvelope, "the header %q has a bad percent-encoding; write %% as %%25", "ce-"+clip(name))
 		}
 		attributes[name] = attribute{name: name, value: value, isText: true}
 	}
@@ -297,6 +297,6 @@ func checkContentType(contentType string) *fault {
 		media == "application/x-ndjson", media == "application/jsonl":
 		return nil
 	default:
-		return refuse(monitor.BadEnvelope, "the data are %s; send application/json", clip(media))
+		return refuse(monitor.BadEnvelope, "the data are %q; send application/json", clip(media))
 	}
 }
