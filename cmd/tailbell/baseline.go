@@ -6,6 +6,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"os"
 	"slices"
 	"strings"
 	"time"
@@ -37,8 +38,8 @@ func newBaselineCommand() *cobra.Command {
 		Use:   "baseline [HISTORY...]",
 		Short: "Estimate the usual rate of an indicator from its history, and how sure it is",
 		Long: `Estimates the usual rate of an indicator, with exact bounds, from files of
-history or, without any, from the store of the set-up while no daemon has it
-open. Corrections, moves and retractions count as they do in the daemon.
+history or, without any, from the store of the set-up (a running daemon makes a
+copy of it first). Corrections, moves and retractions count as they do in the daemon.
 
 It says whether chance alone explains how the counts spread, whether series,
 weekdays or months differ, which periods the rate hangs on, and how late events
@@ -97,6 +98,9 @@ func baseline(ctx context.Context, o *baselineOptions, paths []string, stdin io.
 		err = d.fromFiles(ctx, o, setup, paths, stdin, stderr)
 	} else {
 		err = d.fromStores(setup)
+		if errors.Is(err, store.ErrInUse) {
+			err = d.fromDaemon(ctx, o.config, setup)
+		}
 	}
 	if err != nil {
 		return err
@@ -277,7 +281,7 @@ func (d *baselineData) archive(slots []monitor.ArchivedSlot) error {
 // store, so there is no delay to estimate.
 func (d *baselineData) fromStores(setup *config.Setup) error {
 	d.clock = monitor.Beginning
-	err := lookAside(setup, func(st *store.Store) error {
+	return lookAside(setup, func(st *store.Store) error {
 		err := st.Archived(func(a monitor.ArchivedSlot) error { return d.archive([]monitor.ArchivedSlot{a}) })
 		if err != nil {
 			return err
@@ -290,10 +294,22 @@ func (d *baselineData) fromStores(setup *config.Setup) error {
 		d.clock = max(d.clock, e.Clock())
 		return nil
 	})
-	if errors.Is(err, store.ErrInUse) {
-		return fmt.Errorf("%w; or name files of history", err)
+}
+
+// fromDaemon reads copies of the stores that the running daemon makes.
+func (d *baselineData) fromDaemon(ctx context.Context, path string, setup *config.Setup) (err error) {
+	folder, err := os.MkdirTemp("", "tailbell-baseline-")
+	if err != nil {
+		return err
 	}
-	return err
+	defer func() { err = errors.Join(err, os.RemoveAll(folder)) }()
+	if err := (copier{ctx, io.Discard, path}).all(setup.Folder, folder); err != nil {
+		return fmt.Errorf("the running daemon can't copy its store: %w", err)
+	}
+	copied := *setup
+	copied.Folder = folder
+	d.sums = nil
+	return d.fromStores(&copied)
 }
 
 func (d *baselineData) analyse(ctx context.Context, o *baselineOptions, span estimate.Span, stderr io.Writer) (*estimate.Report, *estimate.History, error) {

@@ -247,6 +247,9 @@ func (d *daemon) unfitTarget(to string) string {
 	if err != nil {
 		return err.Error()
 	}
+	if own, err = filepath.Abs(own); err != nil {
+		return err.Error()
+	}
 	inside, err := filepath.Rel(own, folder)
 	if err != nil || inside != ".." && !strings.HasPrefix(inside, ".."+string(filepath.Separator)) {
 		return "a copy may not lie in the daemon's own folder, where it would be lost with the store: name another one"
