@@ -102,7 +102,10 @@ var judgements = map[string][]judged{
 }
 
 // scenario plays the scenario of that name without a restart.
-func scenario(t *testing.T, name string) outcome { return changed(t, name, nil) }
+func scenario(t *testing.T, name string) outcome {
+	t.Helper()
+	return changed(t, name, nil)
+}
 
 // changed plays the scenario with its input changed.
 func changed(t *testing.T, name string, change func(input string) string) outcome {
