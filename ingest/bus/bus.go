@@ -254,6 +254,12 @@ func (b *Bus) connect(url string, opts []nats.Option, o options) error {
 			close(b.closed)
 		}),
 		nats.ErrorHandler(func(_ *nats.Conn, _ *nats.Subscription, err error) {
+			if errors.Is(err, nats.ErrSlowConsumer) {
+				// A backlog came faster than it is taken. Sources see the gap and
+				// read on after what they handed out.
+				b.log.Debug().Err(err).Msg("reading again what did not fit")
+				return
+			}
 			b.log.Warn().Err(err).Msg("the connection to the bus reports an error")
 		}),
 	}
