@@ -129,8 +129,12 @@ func TestRowsToSlots(t *testing.T) {
 			"9997-06-01T00:00:00Z,,,,1,", "9998-12-31T23:59:59Z,,,,1,", "9999-01-01T00:00:00Z,,,,1,", ",9999,,,1,",
 		}, []string{"9997-01-01T00:00:00+00:00 1 0", "9998-01-01T00:00:00+00:00 1 0"}, []string{"bad_time", "bad_time"}},
 		{"the last year that a row can hold as a whole", "1y", "UTC", []string{",9997,,,1,", ",9998,,,1,"}, []string{"9997-01-01T00:00:00+00:00 1 0"}, []string{"bad_time"}},
-		{"the first day far in the west", "1d", "Pacific/Pago_Pago", []string{"0001-01-01T00:00:00-11:00,,,,1,", "0001-01-01T00:00:00+14:00,,,,1,"},
-			[]string{"0001-01-01T00:00:00+12:37 1 0"}, []string{"bad_time"}}, // the latter lies in the year 0 of UTC, in which it would be published
+		{
+			"the first day far in the west", "1d", "Pacific/Pago_Pago",
+			[]string{"0001-01-01T00:00:00-11:00,,,,1,", "0001-01-01T00:00:00+14:00,,,,1,"},
+			[]string{"0001-01-01T00:00:00+12:37 1 0"},
+			[]string{"bad_time"},
+		}, // the latter lies in the year 0 of UTC, in which it would be published
 		{"the last day far in the east", "1d", "Pacific/Kiritimati", []string{"9998-12-30T23:59:59+14:00,,,,1,", "9998-12-31T23:59:59+14:00,,,,1,"}, nil, nil},
 	} {
 		t.Run(c.name, func(t *testing.T) {
@@ -159,8 +163,12 @@ func TestExposureSpreadsOverTheHoursThereAre(t *testing.T) {
 		zone, day string
 		hours     int
 	}{
-		{"Europe/Berlin", "2026-03-29", 23}, {"Europe/Berlin", "2026-10-25", 25}, {"Australia/Sydney", "2026-04-05", 25},
-		{"America/Santiago", "2026-09-06", 23}, {"Asia/Tokyo", "2026-03-29", 24}, {"America/Havana", "2026-11-01", 25},
+		{"Europe/Berlin", "2026-03-29", 23},
+		{"Europe/Berlin", "2026-10-25", 25},
+		{"Australia/Sydney", "2026-04-05", 25},
+		{"America/Santiago", "2026-09-06", 23},
+		{"Asia/Tokyo", "2026-03-29", 24},
+		{"America/Havana", "2026-11-01", 25},
 	} {
 		slots, refused := slotsOf(t, "1h", c.zone, fmt.Sprintf(",%s,,,,%d", c.day, c.hours))
 		if len(slots) != c.hours || len(refused) > 0 {
