@@ -69,14 +69,23 @@ func monitorRealData(t *testing.T, name string, options ...string) *realData {
 	steps, records := d.throughBus(t, setup)
 	compareNotices(t, "through the bus", strings.Split(replayed, "\n"), strings.Split(steps, "\n"))
 
-	last := map[string]life.Record{}
-	for i := range d.notices {
-		last[d.notices[i].Record.ID] = d.notices[i].Record
-	}
-	if diff := cmp.Diff(last, records); diff != "" {
+	if diff := cmp.Diff(recordsOf(d.notices), records); diff != "" {
 		t.Errorf("records (-replay +store):\n%s", diff)
 	}
 	return d
+}
+
+// recordsOf puts the records together from their notices, each of which has the
+// evidence of its own step alone.
+func recordsOf(notices []life.Notice) map[string]life.Record {
+	last := map[string]life.Record{}
+	for i := range notices {
+		r := notices[i].Record
+		r.Steps = slices.Clone(r.Steps)
+		copy(r.Steps, last[r.ID].Steps)
+		last[r.ID] = r
+	}
+	return last
 }
 
 func parseNotices(t *testing.T, text string) []life.Notice {
