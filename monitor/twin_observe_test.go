@@ -42,7 +42,7 @@ func (w *twin) learn(m *Message, o Observation) Reason {
 		return ""
 	}
 	_, named := w.ids[[2]string{twinSite(o.Series), o.ID}]
-	if w.clock < known && !o.Retracted && !(named && o.ID != "") {
+	if w.clock < known && !o.Retracted && (!named || o.ID == "") {
 		if end := ix.slots.start(ix.slots.at(o.Start) + 1); end < known.Add(-ix.cfg().Horizon) {
 			return BeyondHorizon
 		}

@@ -67,8 +67,11 @@ func recomputed(t *testing.T, e *life.Evidence) {
 		name      string
 		got, want float64
 	}{
-		{"p", a.P, e.P}, {"rate_lower", a.Lower, e.RateLower}, {"rate_upper", a.Upper, e.RateUpper},
-		{"ratio_lower", a.RatioLow, e.RatioLower}, {"attained_size", a.Size, e.AttainedSize},
+		{"p", a.P, e.P},
+		{"rate_lower", a.Lower, e.RateLower},
+		{"rate_upper", a.Upper, e.RateUpper},
+		{"ratio_lower", a.RatioLow, e.RatioLower},
+		{"attained_size", a.Size, e.AttainedSize},
 		{"critical_count", float64(a.Critical), float64(e.Critical)},
 	} {
 		// Half an ulp in the mean moves p by about N/2 ulps.
