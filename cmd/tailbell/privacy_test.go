@@ -54,9 +54,16 @@ func leaks() []bus.Outgoing {
 	}
 	envelope := map[string][]string{"ce-specversion": {"1.0"}, "ce-id": {"1"}, "ce-source": {"/q"}, "ce-type": {"t"}}
 	for _, header := range []map[string][]string{
-		{"Ward-Doctor": {"Tannquist"}}, {"ce-patient": {"Tannquist"}}, {"Tailbell-Time": {"Tannquist"}}, {"Tailbell-Live": {"Tannquist"}},
-		{"Content-Type": {"application/cloudevents-Tannquist"}}, {"Content-Type": {"Tannquist/x"}}, {"ce-id": {"Tannquist"}},
-		{"ce-Tannquist": {"%zz"}}, {"ce-Tannquist": {"a", "b"}}, {"ce-tannquist": {"Tannquist"}},
+		{"Ward-Doctor": {"Tannquist"}},
+		{"ce-patient": {"Tannquist"}},
+		{"Tailbell-Time": {"Tannquist"}},
+		{"Tailbell-Live": {"Tannquist"}},
+		{"Content-Type": {"application/cloudevents-Tannquist"}},
+		{"Content-Type": {"Tannquist/x"}},
+		{"ce-id": {"Tannquist"}},
+		{"ce-Tannquist": {"%zz"}},
+		{"ce-Tannquist": {"a", "b"}},
+		{"ce-tannquist": {"Tannquist"}},
 	} {
 		list = append(list, bus.Outgoing{Data: []byte(`{` + sound + `}`), Header: header})
 		whole := maps.Clone(envelope)

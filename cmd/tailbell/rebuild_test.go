@@ -3,6 +3,7 @@ package main
 import (
 	"bytes"
 	"encoding/json"
+	"errors"
 	"os"
 	"path/filepath"
 	"strings"
@@ -169,5 +170,28 @@ func TestCopiesThatAreNotMade(t *testing.T) {
 	if code, _, complaint := run(t, "store", "copy", storeOf(t, setup), filepath.Join(t.TempDir(), "x"), "--config", other); code != 1 || !strings.Contains(complaint, "another folder") {
 		t.Errorf("with another set-up: exit code %d, %s", code, complaint)
 	}
+	s.stop(syscall.SIGTERM)
+}
+
+// TestSetupOutlivesItsMessage removes the set-up's message from the stream, as its
+// age would: another set-up that the store can't take is refused all the same.
+func TestSetupOutlivesItsMessage(t *testing.T) {
+	setup := wardSetup(t)
+	s := newService(t, setup)
+	s.start()
+	end := s.reaches(s.publish(day(1, 9, 0))).Partitions[0].Position
+	s.stop(syscall.SIGTERM)
+	b, err := bus.Open(t.Context(), s.setup(), bus.WithoutListener())
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := errors.Join(b.Trim(t.Context(), end), b.Close()); err != nil {
+		t.Fatal(err)
+	}
+	other := edited(t, setup, "other.toml", `every = "1d"`, `every = "1h"`)
+	if code, complaint := refusesToRun(t, other); code != 1 || !strings.Contains(complaint, "can't follow the one in force") {
+		t.Errorf("exit code %d, %s", code, complaint)
+	}
+	s.start()
 	s.stop(syscall.SIGTERM)
 }

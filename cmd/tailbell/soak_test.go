@@ -168,8 +168,11 @@ func (s *soak) publish(ctx context.Context, n int) {
 				fmt.Fprintf(&b, `{"series":"ferrybill/eu-%d/failure","at":"%s","events":%d}`+"\n", series, at.Format(time.RFC3339Nano), s.random.IntN(3)/2)
 				continue
 			}
-			fmt.Fprintf(&b, `{"id":"r%d","series":"quillmere-%d/ward/fall","start":"%s","end":"%s","events":0,"exposure":1.5}`+"\n", s.sent, series,
-				at.Add(-time.Second).Truncate(time.Minute).Format(time.RFC3339), at.Add(-time.Second).Truncate(time.Minute).Add(time.Minute).Format(time.RFC3339))
+			// Ids are kept for a day at least: a series corrects its minute over
+			// and over.
+			minute := at.Truncate(time.Minute)
+			fmt.Fprintf(&b, `{"id":"m%d","revision":%d,"series":"quillmere-%d/ward/fall","start":"%s","end":"%s","events":0,"exposure":1.5}`+"\n",
+				minute.Unix()/60, s.sent, series, minute.Format(time.RFC3339), minute.Add(time.Minute).Format(time.RFC3339))
 		}
 		n -= soakElements
 		messages = append(messages, bus.Outgoing{Data: []byte(b.String())})
