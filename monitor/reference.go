@@ -77,16 +77,17 @@ func estimated(cfg *config.Indicator) bool {
 	})
 }
 
-// countReference sums, for looks at the boundary, the slots [begin, end) of the series that are known on
-// both sides and were not marked real.
+// countReference sums, for looks at the boundary, the slots [begin, end) of the
+// series that are known (or
+// provisional) and were not marked real.
 func (ix *indicator) countReference(s *series, b *config.Baseline, r *reference, boundary int64) {
 	r.begin = max(r.begin, s.birth, ix.kept)
 	r.strata = make([]Quantity, strataOf(b))
 	at := ix.due(boundary)
-	ix.eachExposure(s, r.begin, r.end, func(slot int64, q Quantity, provisional bool) {
+	ix.eachExposure(s, r.begin, r.end, func(slot int64, q Quantity, _ bool) {
 		events, known := ix.eventsOf(s, slot)
 		switch {
-		case !known || provisional:
+		case !known:
 		case s.isMarked(slot):
 			r.leftOut++
 		default:
