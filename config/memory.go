@@ -2,12 +2,12 @@ package config
 
 import "fmt"
 
-// What the engine holds, in bytes: figures for planning, about twice what the
-// plain data need, which leaves room for maps and for garbage that is not yet
-// collected.
+// What the engine holds, in bytes: figures for planning, as the benchmark
+// Footprint of package monitor measures them on amd64, rounded up. Garbage that
+// is not yet collected may come to as much again.
 const (
 	bytesPerSeries = 1024 // a series: its name, its place in the map, its alerts
-	bytesPerCell   = 64   // a slot: events, exposure, what of it was late, its revision
+	bytesPerCell   = 104  // a slot: its sums, who speaks for them, and room for the next ones
 	bytesPerLook   = 24   // a look of one window that late data may still re-run
 	bytesPerID     = 320  // an observation id with what it said
 )
@@ -26,7 +26,7 @@ type Memory struct {
 
 // Memory estimates what a daemon with this set-up holds when it is full:
 //
-//	series = 1024 + 64 (kept + horizon) + 24 (horizon) (sum over windows of 1/step)
+//	series = 1024 + 104 (kept + horizon) + 24 (horizon) (sum over windows of 1/step)
 //	total  = MaxSeries x the dearest series + 320 MaxIDs
 //
 // in slots, where kept is the longest window or, if that is more, the longest

@@ -38,7 +38,7 @@ func TestDefaults(t *testing.T) {
 	want := &Setup{
 		Name: "quillmere", Folder: "tailbell-data", Partitions: 1, KeyParts: 1,
 		Bus:    Bus{MaxBytes: 4 << 30, Replicas: 1},
-		Limits: Limits{MaxSeries: 20_000, MaxIDs: 1_000_000, MaxMessageBytes: 1 << 20, MaxObservations: 10_000, Memory: 2 << 30},
+		Limits: Limits{MaxSeries: 20_000, MaxIDs: 1_000_000, MaxMessageBytes: 1 << 20, MaxObservations: 10_000, Memory: 4 << 30},
 		Indicators: []Indicator{{
 			Name: "falls", Title: "falls", EventNoun: "falls", Series: []Pattern{NewPattern("quillmere/*/fall")},
 			Measure: Rate, Unit: "bed-days", Per: 1, Every: Every{1, Day}, Zone: time.UTC, ZoneName: "UTC",
@@ -242,7 +242,7 @@ func TestMemory(t *testing.T) {
 	// 28 slots of window and 120 x 24 / 23 + 2 = 127 of horizon.
 	s := mustParse(t, plain("", "kind = \"known\"\nrate = 2\n"))
 	m := s.Memory()
-	perSeries := int64(1024 + (28+127)*64 + 128*24)
+	perSeries := int64(1024 + (28+127)*104 + 128*24)
 	want := Memory{Series: []int64{perSeries}, AllSeries: 20_000 * perSeries, AllIDs: 320_000_000}
 	want.Total = want.AllSeries + want.AllIDs
 	if diff := cmp.Diff(want, m); diff != "" {

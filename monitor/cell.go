@@ -53,9 +53,18 @@ func (cs cells) find(slot int64) (int, bool) {
 func (cs *cells) at(slot int64) *cell {
 	i, ok := cs.find(slot)
 	if !ok {
+		cs.makeRoom()
 		*cs = slices.Insert(*cs, i, cell{slot: slot})
 	}
 	return &(*cs)[i]
+}
+
+// makeRoom grows a full list by a quarter: there are very many of them, and
+// doubling would leave half their memory unused.
+func (cs *cells) makeRoom() {
+	if n := len(*cs); n == cap(*cs) {
+		*cs = append(make(cells, 0, n+n/4+2), *cs...)
+	}
 }
 
 // between returns the cells of the slots in [from, to).
