@@ -176,3 +176,63 @@ func TestReadOnlyFolder(t *testing.T) {
 	}
 	s.stop(syscall.SIGTERM)
 }
+
+// TestFullDiskUnderTheStore fills the store's disk alone: what the bus goes on to
+// acknowledge is counted once there is room, and a daemon that waits for it can
+// be stopped.
+func TestFullDiskUnderTheStore(t *testing.T) {
+	setup := wardSetup(t)
+	folder := smallDisk(t, setup, "4m")
+	streams := filepath.Join(folder, "bus")
+	if err := os.Mkdir(streams, 0o700); err != nil {
+		t.Fatal(err)
+	}
+	if err := syscall.Mount("none", streams, "tmpfs", 0, "mode=700,size=24m"); err != nil {
+		t.Skip(err)
+	}
+	t.Cleanup(func() {
+		if err := syscall.Unmount(streams, syscall.MNT_DETACH); err != nil {
+			t.Error(err)
+		}
+	})
+	s := newService(t, setup)
+	s.start()
+	s.reaches(s.publish(day(1, 20, 0)))
+	ballast := fill(t, folder)
+	sent, end := 1, uint64(0)
+	s.await("trouble", func() bool {
+		var batch []string
+		for range 200 { // refused bytes fill pages quickly
+			batch = append(batch, fmt.Sprintf(`{"id":"%d-%s","series":"quillmere-east/ward-1/fall"}`, sent, strings.Repeat("x", 150)))
+			sent++
+		}
+		end = s.publish(batch...)
+		code, text := s.ready()
+		return code == http.StatusServiceUnavailable && strings.Contains(text, "the intake stands still: ")
+	})
+	r, ok := s.status()
+	if !ok || len(r.Troubles) != 1 || r.Troubles[0].Kind != troubleNoRoom || r.Partitions[0].End < end {
+		t.Errorf("status: %+v", r)
+	}
+	s.stop(syscall.SIGTERM) // it does not wait for room
+	if err := os.Remove(ballast); err != nil {
+		t.Fatal(err)
+	}
+	s.start()
+	ballast = fill(t, folder)
+	for range 20 {
+		end = s.publish(strings.Repeat(`{"note":"`+strings.Repeat("y", 300)+`"}`+"\n", 100))
+		sent += 100
+	}
+	s.await("trouble again", func() bool { code, _ := s.ready(); return code == http.StatusServiceUnavailable })
+	if err := os.Remove(ballast); err != nil {
+		t.Fatal(err)
+	}
+	r = s.reaches(end)
+	s.await("readiness", func() bool { code, _ := s.ready(); return code == http.StatusOK })
+	if a := r.Partitions[0].Account; a.Elements != int64(sent) || a.Counted != 1 || a.Refused != int64(sent-1) {
+		t.Errorf("%d sent, the account is %+v", sent, a)
+	}
+	s.stop(syscall.SIGTERM)
+	soundStore(t, folder)
+}
