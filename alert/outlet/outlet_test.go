@@ -79,6 +79,7 @@ func TestBackOff(t *testing.T) {
 		done := make(chan error)
 		go func() { done <- q.Run(ctx) }()
 		time.Sleep(time.Hour)
+		synctest.Wait()
 		if len(f.took) != 250 || f.took[0] != "a.1" || f.took[249] != "a.250" {
 			t.Errorf("took %d steps", len(f.took))
 		}

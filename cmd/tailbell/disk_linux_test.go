@@ -15,6 +15,16 @@ import (
 	"tailbell/ingest/bus"
 )
 
+// noDisk ends a test that needs a disk of its own where none can be mounted:
+// skipped on a developer's machine, failed where everything must be there.
+func noDisk(t *testing.T, err error) {
+	t.Helper()
+	if os.Getenv("TAILBELL_CI") != "" {
+		t.Fatalf("no disk can be mounted: %v", err)
+	}
+	t.Skipf("a disk of its own can't be mounted here: %v", err)
+}
+
 // smallDisk puts the folder of a set-up on a disk of its own.
 func smallDisk(t *testing.T, setup, size string) (folder string) {
 	t.Helper()
@@ -23,7 +33,7 @@ func smallDisk(t *testing.T, setup, size string) (folder string) {
 		t.Fatal(err)
 	}
 	if err := syscall.Mount("none", folder, "tmpfs", 0, "mode=700,size="+size); err != nil {
-		t.Skipf("a disk of its own can't be mounted here: %v", err)
+		noDisk(t, err)
 	}
 	t.Cleanup(func() {
 		if err := syscall.Unmount(folder, syscall.MNT_DETACH); err != nil {
@@ -159,7 +169,7 @@ func TestReadOnlyFolder(t *testing.T) {
 	s.reaches(end)
 	s.stop(syscall.SIGTERM)
 	if err := syscall.Mount("none", folder, "tmpfs", syscall.MS_REMOUNT|syscall.MS_RDONLY, ""); err != nil {
-		t.Skip(err)
+		noDisk(t, err)
 	}
 	code, complaint := refusesToRun(t, setup)
 	if code != 1 || !strings.Contains(complaint, "read-only file system") || !strings.Contains(complaint, folder) {
@@ -188,7 +198,7 @@ func TestFullDiskUnderTheStore(t *testing.T) {
 		t.Fatal(err)
 	}
 	if err := syscall.Mount("none", streams, "tmpfs", 0, "mode=700,size=24m"); err != nil {
-		t.Skip(err)
+		noDisk(t, err)
 	}
 	t.Cleanup(func() {
 		if err := syscall.Unmount(streams, syscall.MNT_DETACH); err != nil {

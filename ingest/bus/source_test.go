@@ -96,15 +96,18 @@ func TestSourceReturnsAtOnceWhatIsThere(t *testing.T) {
 		b := bustest.Open(t, bustest.Setup(t))
 		s := source(t, b, 0, 0)
 		began := time.Now()
+		published := make(chan error)
 		go func() {
 			time.Sleep(3 * time.Hour)
-			if _, err := b.Publish(t.Context(), bus.Outgoing{Data: []byte("1")}); err != nil {
-				t.Error(err)
-			}
+			_, err := b.Publish(t.Context(), bus.Outgoing{Data: []byte("1")})
+			published <- err
 		}()
 		msgs, err := s.Next(t.Context(), nil, 100, 1<<20)
 		if err != nil || len(msgs) != 1 {
 			t.Fatalf("%d messages, %v", len(msgs), err)
+		}
+		if err := <-published; err != nil {
+			t.Error(err)
 		}
 		if waited := time.Since(began); waited != 3*time.Hour {
 			t.Errorf("the message came after %s", waited)
