@@ -33,6 +33,11 @@ func logMass[L law](x L, k int64) float64 {
 // lose a size that hits its limit exactly (five of five at 1/2 against 1/32).
 const atLimit = 1 + 0x1p-48
 
+// AtMost reports whether a tail probability is at most the limit, with the same
+// room for rounding as critical counts have: a count signals under it if and
+// only if it has reached its critical count.
+func AtMost(p, limit float64) bool { return p <= limit*atLimit }
+
 func criticalUpper[L tail](x L, limit float64) (int64, float64, bool) {
 	return critical(x, limit, true)
 }
@@ -66,7 +71,7 @@ func critical[L tail](x L, limit float64, upper bool) (int64, float64, bool) {
 	var size float64
 	for round := 0; above-below > 1; round++ {
 		s := x.side(sign*j, upper, false)
-		if p := s.prob(); p <= limit*atLimit {
+		if p := s.prob(); AtMost(p, limit) {
 			above, size = j, p
 		} else {
 			below = j

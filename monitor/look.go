@@ -4,6 +4,7 @@ import (
 	"math"
 
 	"tailbell/config"
+	"tailbell/exact"
 )
 
 // status says whether a look was made, and if not, why.
@@ -170,14 +171,14 @@ func (l *look) test(u *usual, o *opportunity) {
 	}
 	if u.cfg.Upper && l.events > 0 && !farBelow(u, o, l.events) {
 		p := newLaw(u, upper, o)
-		if p.Upper(l.events) <= u.cfg.PLimit {
+		if exact.AtMost(p.Upper(l.events), u.cfg.PLimit) {
 			l.lit[upper] = true
 			l.log10p[upper] = p.LogUpper(l.events) / math.Ln10
 		}
 	}
 	if u.cfg.Lower && !farAbove(u, o, l.events) {
 		p := newLaw(u, lower, o)
-		if p.Lower(l.events) <= u.cfg.PLimit {
+		if exact.AtMost(p.Lower(l.events), u.cfg.PLimit) {
 			l.lit[lower] = true
 			l.log10p[lower] = p.LogLower(l.events) / math.Ln10
 		}

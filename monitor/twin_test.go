@@ -332,7 +332,7 @@ func (w *twin) test(s *twinSeries, boundary int64, window int) twinLook {
 		for _, d := range bothTails {
 			if d == upper && cfg.Upper || d == lower && cfg.Lower {
 				l.p[d] = w.p(twinLaw{cfg, cfg.BaselineFor(s.name), d, l.events, l.exposure})
-				l.lit[d] = l.p[d].p <= cfg.PLimit
+				l.lit[d] = l.p[d].p <= cfg.PLimit*(1+0x1p-48)
 			}
 		}
 	}

@@ -128,26 +128,11 @@ type crossing struct {
 // rate is the probability that a look is a crossing at a true rate.
 func (c *crossing) rate(r float64) float64 {
 	moved := min(c.step, c.slots)
-	part := c.h.lawAt(r, c.slot*float64(moved))
-	if moved == c.slots { // nothing is shared
-		if c.upper {
-			return part.Lower(c.critical-1) * part.Upper(c.critical)
-		}
-		return part.Upper(c.critical+1) * part.Lower(c.critical)
+	part, shared := c.h.lawAt(r, c.slot*float64(moved)), c.h.lawAt(r, c.slot*float64(c.slots-moved))
+	if c.upper {
+		return exact.CrossingUpper(part, shared, part, c.critical, c.critical)
 	}
-	shared := c.h.lawAt(r, c.slot*float64(c.slots-moved))
-	sum := 0.0
-	for n := int64(0); n <= c.critical; n++ {
-		mass := between(shared, n, n)
-		if c.upper {
-			if n < c.critical {
-				sum += mass * part.Lower(c.critical-1-n) * part.Upper(c.critical-n)
-			}
-		} else {
-			sum += mass * part.Upper(c.critical+1-n) * part.Lower(c.critical-n)
-		}
-	}
-	return sum
+	return exact.CrossingLower(part, shared, part, c.critical, c.critical)
 }
 
 // worstSpread returns the greatest spread within series that is believed, among

@@ -87,7 +87,12 @@ type tailLaw interface {
 	CriticalLower(limit float64) (k int64, size float64, ok bool)
 }
 
-func (h *History) lawAt(rate, exposure float64) tailLaw {
+type countLaw interface {
+	tailLaw
+	PMF(k int64) float64
+}
+
+func (h *History) lawAt(rate, exposure float64) countLaw {
 	if h.proportion() {
 		return exact.NewBinomial(int64(math.Round(exposure)), rate)
 	}
