@@ -77,7 +77,7 @@ func (f *exactFlags) add(c *cobra.Command) {
 	fl.Int64Var(&f.refEvents, "reference-events", 0, "events of the reference")
 	fl.Float64Var(&f.refSize, "reference-exposure", 0, "exposure of the reference")
 	fl.Int64Var(&f.refTrial, "reference-trials", 0, "trials of the reference")
-	fl.Float64Var(&f.margin, "margin", 1, "the ratio to the baseline that is still no news (for two proportions: odds ratio)")
+	fl.Float64Var(&f.margin, "margin", 1, "the ratio to the baseline that is still no news (for two proportions: odds ratio); with --tail lower, one over it")
 	fl.StringVar(&f.tail, "tail", "upper", "upper: too many; lower: too few")
 	fl.Float64Var(&f.options.alpha, "alpha", 0.05, "what the bounds may miss, both sides together")
 	fl.StringVar(&f.level, "level", "", "the level of the bounds, e.g. 0.95: one minus --alpha")

@@ -66,8 +66,8 @@ func (q question) check() error {
 		return fmt.Errorf("trials are %v: give a whole number up to %d", q.size, int64(most))
 	case q.proportion && float64(q.events) > q.size:
 		return fmt.Errorf("events are %d in %v trials: there can't be more events than trials", q.events, q.size)
-	case !(q.margin > 0) || math.IsInf(q.margin, 0):
-		return fmt.Errorf("margin is %v: give a ratio above 0, 1 for none", q.margin)
+	case !(q.margin >= 1) || math.IsInf(q.margin, 0):
+		return fmt.Errorf("margin is %v: give a ratio of 1 (none) or more; downwards it is one over it", q.margin)
 	case q.hasBaseline && q.hasReference:
 		return errors.New("there is a known baseline and a reference: give one of the two")
 	case q.hasReference != q.hasRefSize:
@@ -124,24 +124,33 @@ func (o exactOptions) answer(q question) (exactAnswer, error) {
 		}
 		x = known
 	case q.hasReference && q.proportion:
-		y := exact.TwoProportion{RefEvents: q.refEvents, RefTrials: int64(q.reference), Trials: int64(q.size), Margin: q.margin}
+		y := exact.TwoProportion{RefEvents: q.refEvents, RefTrials: int64(q.reference), Trials: int64(q.size), Margin: o.edge(q)}
 		x, a.test, a.ratioKind = y, "Fisher's test of two proportions", "odds ratio"
 		misses, refMisses := q.size-float64(q.events), q.reference-float64(q.refEvents)
 		a.ratio = float64(q.events) * refMisses / (misses * float64(q.refEvents))
 		a.ratioLower, a.ratioUpper = o.pick(y.OddsRatioBounds, y.OddsRatioBoundsMid, y.OddsRatioBoundsBy, q.events)
 		a.expected = (float64(q.events) + float64(q.refEvents)) * q.size / (q.size + q.reference)
 	case q.hasReference:
-		y := exact.TwoRate{RefEvents: q.refEvents, Exposure: q.size, RefExposure: q.reference, Margin: q.margin}
+		y := exact.TwoRate{RefEvents: q.refEvents, Exposure: q.size, RefExposure: q.reference, Margin: o.edge(q)}
 		x, a.test, a.ratioKind = y, "conditional test of two rates", "rate ratio"
 		a.ratio = a.rate / (float64(q.refEvents) / q.reference)
 		a.ratioLower, a.ratioUpper = o.pick(y.RatioBounds, y.RatioBoundsMid, y.RatioBoundsBy, q.events)
-		w := q.size * q.margin
+		w := q.size * o.edge(q)
 		a.expected = (float64(q.events) + float64(q.refEvents)) * w / (w + q.reference)
 	default:
 		return a, nil
 	}
 	o.weigh(&a, x)
 	return a, nil
+}
+
+// edge is the ratio at which a tail is tested: the margin upwards, one over it
+// downwards.
+func (o exactOptions) edge(q question) float64 {
+	if o.lower && !o.twoSided {
+		return 1 / q.margin
+	}
+	return q.margin
 }
 
 // known is the law of a known baseline.
@@ -153,11 +162,11 @@ func (o exactOptions) known(a *exactAnswer) (exactTest, error) {
 		if !(base <= 1) {
 			return nil, fmt.Errorf("baseline is %v per %v trials: a proportion is at most 1", a.baseline, o.per)
 		}
-		x := exact.NewBinomial(int64(a.size), min(1, base*a.margin))
+		x := exact.NewBinomial(int64(a.size), min(1, base*o.edge(a.question)))
 		a.test, a.expected = "binomial", a.size*x.P
 		return x, nil
 	}
-	x := exact.Poisson{Rate: base * a.margin, Exposure: a.size}
+	x := exact.Poisson{Rate: base * o.edge(a.question), Exposure: a.size}
 	a.test, a.expected = "Poisson", x.Mean()
 	return x, nil
 }
@@ -234,7 +243,7 @@ func (o exactOptions) weigh(a *exactAnswer, x exactTest) {
 type exactRecord struct {
 	Unit          string   `json:"unit,omitempty"`
 	Line          int      `json:"line,omitempty"`
-	Events        int64    `json:"events"`
+	Events        *int64   `json:"events"`
 	Exposure      *float64 `json:"exposure,omitempty"`
 	Trials        *float64 `json:"trials,omitempty"`
 	Per           float64  `json:"per"`
@@ -260,7 +269,7 @@ type exactRecord struct {
 
 func (a exactAnswer) record(o exactOptions) exactRecord {
 	r := exactRecord{
-		Events: a.events, Per: o.per, Alpha: o.alpha, Limit: o.limit, Tail: o.tailName(), MidP: o.mid, Test: a.test, RatioKind: a.ratioKind,
+		Events: &a.events, Per: o.per, Alpha: o.alpha, Limit: o.limit, Tail: o.tailName(), MidP: o.mid, Test: a.test, RatioKind: a.ratioKind,
 		Rate: orNull(a.rate * o.per), RateLower: orNull(a.rateLower * o.per), RateUpper: orNull(a.rateUpper * o.per),
 		Expected: orNull(a.expected), Ratio: orNull(a.ratio), RatioLower: orNull(a.ratioLower), RatioUpper: orNull(a.ratioUpper),
 		P: orNull(a.p), Log10P: orNull(a.log10P), AttainedSize: orNull(a.attained),

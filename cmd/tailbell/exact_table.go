@@ -63,9 +63,9 @@ func (f *exactFlags) answerTable(c *cobra.Command, path string) (err error) {
 	}
 	in := c.InOrStdin()
 	if path != "-" {
-		file, err := os.Open(path)
-		if err != nil {
-			return fmt.Errorf("open the table: %w", err)
+		file, openErr := os.Open(path)
+		if openErr != nil {
+			return fmt.Errorf("open the table: %w", openErr)
 		}
 		defer func() { err = errors.Join(err, file.Close()) }()
 		in = file

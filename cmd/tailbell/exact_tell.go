@@ -48,6 +48,9 @@ func (a exactAnswer) because(o exactOptions) string {
 	margin := ""
 	if a.margin != 1 {
 		kind := "times "
+		if o.lower && !o.twoSided {
+			kind = "divided by "
+		}
 		if a.hasReference && a.proportion {
 			kind = "odds ratio "
 		}

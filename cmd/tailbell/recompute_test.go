@@ -2,10 +2,13 @@ package main
 
 import (
 	"encoding/json"
+	"fmt"
 	"math"
+	"os"
 	"path/filepath"
 	"strings"
 	"testing"
+	"time"
 
 	"tailbell/monitor/life"
 )
@@ -34,6 +37,7 @@ func TestRecompute(t *testing.T) {
 		"coal":        {"--config", "../../testdata/coal/coal.toml", "--zone", "UTC", "../../testdata/coal/coal.csv"},
 		"horse kicks": {"--config", "../../testdata/horsekicks/horsekicks.toml", "--zone", "UTC", "--until", "1895-02-01", "../../testdata/horsekicks/horsekicks.csv"},
 	}
+	histories["margins"] = margins(t)
 	for name, args := range histories {
 		t.Run(name, func(t *testing.T) {
 			_, text, stderr := run(t, append([]string{"replay", "--json"}, args...)...)
@@ -53,6 +57,37 @@ func TestRecompute(t *testing.T) {
 			}
 		})
 	}
+}
+
+// margins is an invented history with margins: too many falls, then too few, by a
+// known rate and by a reference, and so for wound infections in trials.
+func margins(t *testing.T) []string {
+	t.Helper()
+	folder := t.TempDir()
+	setup := "name = \"margins\"\nfolder = \"x\"\n[time]\nmode = \"history\"\n"
+	for _, kind := range []struct{ name, measure, unit, baseline string }{
+		{"fall", "rate", "bed-days", "kind = \"known\"\nrate = 6"},
+		{"slip", "rate", "bed-days", "kind = \"reference\"\nevents = 60\nexposure = 10000"},
+		{"wound", "proportion", "procedures", "kind = \"known\"\nrate = 0.06"},
+		{"burn", "proportion", "procedures", "kind = \"reference\"\nevents = 60\nexposure = 1000"},
+	} {
+		setup += fmt.Sprintf("[[indicator]]\nname = %q\nseries = [\"*/%s\"]\nmeasure = %q\nunit = %q\nper = 1000\nevery = \"1d\"\nzone = \"UTC\"\n"+
+			"windows = [\"7d\"]\ntails = [\"upper\", \"lower\"]\np_limit = 0.01\nquiet = 3\n[indicator.baseline]\n%s\nmargin = 1.2\n",
+			kind.name, kind.name, kind.measure, kind.unit, kind.baseline)
+	}
+	rows := "series,date,events,exposure\n"
+	for d := range 56 {
+		date := time.Date(2026, 1, 1+d, 0, 0, 0, 0, time.UTC).Format(time.DateOnly)
+		many := 3 - 3*(d/14%2) // a fortnight of too many, one of none
+		rows += fmt.Sprintf("ward/fall,%s,%d,%d\nward/slip,%s,%d,%d\n", date, many*2, 210, date, many*2, 210)
+		rows += fmt.Sprintf("ward/wound,%s,%d,%d\nward/burn,%s,%d,%d\n", date, many*2, 30, date, many*2, 30)
+	}
+	for name, text := range map[string]string{"s.toml": setup, "h.csv": rows} {
+		if err := os.WriteFile(filepath.Join(folder, name), []byte(text), 0o600); err != nil {
+			t.Fatal(err)
+		}
+	}
+	return []string{"--config", filepath.Join(folder, "s.toml"), "--zone", "UTC", "--until", "2026-04-01", filepath.Join(folder, "h.csv")}
 }
 
 func recomputed(t *testing.T, e *life.Evidence) {
