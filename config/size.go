@@ -59,6 +59,8 @@ func FormatSize(n int64) string {
 		switch {
 		case n >= u.bytes && n%u.bytes == 0:
 			return fmt.Sprintf("%d%s", n/u.bytes, u.name)
+		case n >= u.bytes && n/u.bytes >= 1000:
+			return fmt.Sprintf("%d%s", n/u.bytes, u.name)
 		case n >= u.bytes:
 			return fmt.Sprintf("%.3g%s", float64(n)/float64(u.bytes), u.name)
 		}

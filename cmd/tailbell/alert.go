@@ -46,7 +46,8 @@ func newMarkCommand() *cobra.Command {
 	c := newActing(&a, "Say what an alert turned out to be",
 		`Says what the alert turned out to be: real, chance, data error, or change of
 definition; none takes a mark back. Trailing baselines leave out whole what was
-marked real.`)
+marked real. An alert that is done can be marked as long as its looks lie inside
+the indicator's horizon.`)
 	c.Flags().StringVar(&as, "as", "", "the `MARK`: real, chance, \"data error\", \"change of definition\" or none; needed")
 	c.PreRunE = func(*cobra.Command, []string) error {
 		if a.act.Mark = life.Mark(as); as == "none" {

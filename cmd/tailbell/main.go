@@ -12,6 +12,8 @@ import (
 	"io"
 	"os"
 	"os/signal"
+	"runtime/debug"
+	"strings"
 	"syscall"
 
 	"github.com/spf13/cobra"
@@ -39,7 +41,7 @@ func execute(ctx context.Context, args []string, stdin io.Reader, stdout, stderr
 	root.SetIn(stdin)
 	root.SetOut(stdout)
 	root.SetErr(stderr)
-	err := root.ExecuteContext(ctx)
+	err := exclusive(root.ExecuteContext(ctx))
 	var usage *usageError
 	switch {
 	case err == nil:
@@ -51,6 +53,34 @@ func execute(ctx context.Context, args []string, stdin io.Reader, stdout, stderr
 		complain(stderr, err)
 	}
 	return 1
+}
+
+// exclusive says in our own words that options exclude each other.
+func exclusive(err error) error {
+	if err == nil {
+		return nil
+	}
+	names, found := strings.CutPrefix(err.Error(), "if any flags in the group [")
+	if !found {
+		return err
+	}
+	names, _, _ = strings.Cut(names, "]")
+	return &usageError{fmt.Errorf("give only one of --%s", strings.Join(strings.Fields(names), ", --"))}
+}
+
+// version is the program's, as the build knows it.
+func version() string {
+	built := "unknown"
+	if info, ok := debug.ReadBuildInfo(); ok {
+		built = info.Main.Version
+		for _, s := range info.Settings {
+			if s.Key == "vcs.revision" {
+				built += " " + s.Value
+			}
+		}
+		built += ", " + info.GoVersion
+	}
+	return built
 }
 
 // errReported is returned by commands that have told what is wrong already.
@@ -78,6 +108,7 @@ windows.
 
 A signal is a statistical finding: it diagnoses nothing and names no cause.
 Silence is no proof of safety. Local policy decides.`,
+		Version:       version(),
 		SilenceUsage:  true,
 		SilenceErrors: true,
 		RunE:          func(c *cobra.Command, _ []string) error { return c.Help() },

@@ -130,6 +130,9 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 	if r.Troubles, err = d.standing(); err != nil {
 		return nil, err
 	}
+	if r.Troubles == nil {
+		r.Troubles = []trouble{}
+	}
 	for _, p := range d.parts {
 		s := partStatus{Number: p.number, Conditions: []conditionRow{}, Outlets: []outletRow{}}
 		if r.Connected {
