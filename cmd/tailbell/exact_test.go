@@ -114,7 +114,7 @@ func TestExactRefuses(t *testing.T) {
 }
 
 func TestExactRefusesTwoMeasures(t *testing.T) {
-	if _, errs, code := runExact(t, "", strings.Fields("--events 3 --exposure 2 --trials 2")...); code == 0 || !strings.Contains(errs, "[exposure trials]") {
+	if _, errs, code := runExact(t, "", strings.Fields("--events 3 --exposure 2 --trials 2")...); code != 2 || !strings.Contains(errs, "give only one of --exposure, --trials") {
 		t.Errorf("exit %d, %s", code, errs)
 	}
 }
