@@ -75,7 +75,7 @@ func repeated(r *life.Record, act *Act, s *life.Step) bool {
 func (e *Engine) alertOf(act *Act) *alert {
 	if act.Alert != "" {
 		a := e.alerts[act.Alert]
-		if a == nil || a.gone(a.series.indicator.frozenAt) {
+		if a == nil || a.gone() {
 			return nil
 		}
 		return a

@@ -127,7 +127,7 @@ func (e *Engine) encodeHeader() []byte {
 func (e *Engine) Alerts() []life.Record {
 	var records []life.Record
 	for _, a := range e.alerts {
-		if !a.gone(a.series.indicator.frozenAt) {
+		if !a.gone() {
 			records = append(records, a.record)
 		}
 	}

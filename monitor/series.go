@@ -173,7 +173,7 @@ func (t *tail) trim(frozen int64, windows []windowState, alerts map[string]*aler
 	}
 	t.lit = slices.Delete(t.lit, kept, n)
 	t.past = slices.DeleteFunc(t.past, func(a *alert) bool {
-		gone := a.gone(frozen)
+		gone := a.gone()
 		if gone {
 			delete(alerts, a.record.ID)
 		}
@@ -182,5 +182,10 @@ func (t *tail) trim(frozen int64, windows []windowState, alerts map[string]*aler
 	return kept < n
 }
 
-// gone reports whether nothing can happen to the alert any more.
-func (a *alert) gone(frozen int64) bool { return a.record.Done() && a.last <= frozen }
+// gone reports whether nothing can happen to the alert any more: it is done, and
+// ended beyond the horizon and beyond the history that a baseline is counted
+// from, where a mark could still matter.
+func (a *alert) gone() bool {
+	ix := a.series.indicator
+	return a.record.Done() && (a.last <= ix.frozenAt && a.last <= ix.frozenAt-historyOf(ix.cfg))
+}

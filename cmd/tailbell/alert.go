@@ -47,7 +47,7 @@ func newMarkCommand() *cobra.Command {
 		`Says what the alert turned out to be: real, chance, data error, or change of
 definition; none takes a mark back. Trailing baselines leave out whole what was
 marked real. An alert that is done can be marked as long as its looks lie inside
-the indicator's horizon.`)
+the indicator's horizon, or inside the history of its trailing or peers baseline.`)
 	c.Flags().StringVar(&as, "as", "", "the `MARK`: real, chance, \"data error\", \"change of definition\" or none; needed")
 	c.PreRunE = func(*cobra.Command, []string) error {
 		if a.act.Mark = life.Mark(as); as == "none" {
