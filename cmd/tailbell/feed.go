@@ -31,8 +31,9 @@ them; if none runs, feed starts the bus itself, and the daemon reads on when it 
 started next. A daemon that goes away meanwhile is waited for, up to a minute.
 
 Every row has an id, given or derived from its content, so that feeding a file
-again counts nothing twice. But a row without an id that was edited is another row:
-it is counted beside the first. Data that are corrected need the columns id and
+again counts nothing twice: its rows are repeats, or by then beyond the horizon and
+refused. But a row without an id that was edited is another row: it is counted
+beside the first. Data that are corrected need the columns id and
 revision.
 
 A row that can't be used is named with its file and line; the rest goes on, and
