@@ -22,6 +22,9 @@ type Changes struct {
 	Cycle  uint64
 	// IDs are the touched observation ids, in the order of their touching.
 	IDs []IDChange
+	// RewrittenGenerations are generations of which IDs holds every id that
+	// still counts: what was written of them before is forgotten first.
+	RewrittenGenerations []int64
 	// DroppedGenerations are generations of ids that are forgotten whole.
 	DroppedGenerations []int64
 	// Archived are slots that no look will need again, on their way out of

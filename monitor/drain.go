@@ -36,11 +36,7 @@ func (e *Engine) Drain() Changes {
 		c.Series = append(c.Series, SeriesChange{s.number, patch})
 		s.touched, s.fresh, s.dirty = false, false, s.dirty[:0]
 	}
-	for _, entry := range e.ids.touched {
-		if e.ids.byKey[entry.key] == entry {
-			c.IDs = append(c.IDs, IDChange{entry.generation, entry.encode()})
-		}
-	}
+	c.IDs, c.RewrittenGenerations = e.ids.drain()
 	for _, a := range e.changed {
 		a.dirty = false
 		c.Alerts = append(c.Alerts, a.record)
@@ -49,7 +45,7 @@ func (e *Engine) Drain() Changes {
 	c.States = e.slice(max(size, minSlice))
 	c.Header = e.encodeHeader()
 	e.touched, e.archived, e.refused, e.changed, e.steps, e.settings = nil, nil, nil, nil, nil, nil
-	e.ids.touched, e.ids.dropped = nil, nil
+	e.ids.dropped = nil
 	return c
 }
 

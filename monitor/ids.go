@@ -23,7 +23,15 @@ type ids struct {
 
 	touched []*identified
 	dropped []int64
+	// written counts the entries that were handed over of each generation,
+	// those that a later one replaced among them.
+	written map[int64]int
 }
+
+// maxStale is how many replaced entries of a generation a store holds beside
+// as many as still count, before the generation is written anew. Tests lower
+// it.
+var maxStale = 4096
 
 // idKey is an id under its series' leading name part.
 type idKey struct{ site, id string }
@@ -50,7 +58,7 @@ type contribution struct {
 }
 
 func newIDs() ids {
-	return ids{byKey: map[idKey]*identified{}, generations: map[int64][]idKey{}}
+	return ids{byKey: map[idKey]*identified{}, generations: map[int64][]idKey{}, written: map[int64]int{}}
 }
 
 // configure sets how long ids are kept: the longest horizon of any indicator,
@@ -103,6 +111,7 @@ func (x *ids) drop(clock Instant) {
 			}
 		}
 		delete(x.generations, g)
+		delete(x.written, g)
 		x.dropped = append(x.dropped, g)
 	}
 	x.oldest, x.hasOldest = 0, false
@@ -111,4 +120,35 @@ func (x *ids) drop(clock Instant) {
 			x.oldest, x.hasOldest = g, true
 		}
 	}
+}
+
+// drain hands over the entries touched since the last one, and names the
+// generations that are handed over whole, because most of what a store holds of
+// them was replaced since.
+func (x *ids) drain() (changes []IDChange, rewritten []int64) {
+	for _, entry := range x.touched {
+		if x.byKey[entry.key] != entry {
+			continue
+		}
+		changes = append(changes, IDChange{entry.generation, entry.encode()})
+		g := entry.generation
+		if x.written[g]++; x.written[g] > 2*len(x.generations[g])+maxStale && !slices.Contains(rewritten, g) {
+			rewritten = append(rewritten, g)
+		}
+	}
+	x.touched = nil
+	if len(rewritten) == 0 {
+		return changes, nil
+	}
+	changes = slices.DeleteFunc(changes, func(c IDChange) bool { return slices.Contains(rewritten, c.Generation) })
+	for _, g := range rewritten {
+		x.written[g] = 0
+		for _, key := range x.generations[g] {
+			if entry := x.byKey[key]; entry != nil && entry.generation == g {
+				changes = append(changes, IDChange{g, entry.encode()})
+				x.written[g]++
+			}
+		}
+	}
+	return changes, rewritten
 }

@@ -52,6 +52,9 @@ func (m *Memory) Commit(c Changes) {
 		m.states[s.Number] = s.Data
 	}
 	m.patches = slices.DeleteFunc(m.patches, func(p patchAt) bool { return p.cycle+2 <= c.Cycle })
+	for _, g := range c.RewrittenGenerations {
+		delete(m.ids, g)
+	}
 	for _, id := range c.IDs {
 		m.ids[id.Generation] = append(m.ids[id.Generation], id)
 	}

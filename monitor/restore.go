@@ -276,6 +276,7 @@ func (e *Engine) restoreID(change *IDChange) error {
 	if r.err != nil {
 		return r.err
 	}
+	e.ids.written[x.generation]++
 	if old := e.ids.byKey[x.key]; old == nil || x.revision > old.revision {
 		e.ids.put(x)
 	}

@@ -32,6 +32,8 @@ func TestTwin(t *testing.T) {
 	if *twinSeed != 0 {
 		*twinFrom, *twinStreams = *twinSeed, 1
 	}
+	defer func(n int) { maxStale = n }(maxStale)
+	maxStale = 1 // so that generations of ids are written anew all the time
 	shards := runtime.GOMAXPROCS(0)
 	totals := make([]twinTotals, shards)
 	t.Run("streams", func(t *testing.T) {

@@ -50,11 +50,16 @@ func (r rack) generation(key []byte) *rack {
 	return &rack{Bucket: b, shelf: idShelf(key)}
 }
 
-// writeIDs appends ids to their generations, and then forgets those that are
-// dropped, even if they were touched.
+// writeIDs forgets the generations that are written anew, appends ids to theirs,
+// and then forgets those that are dropped, even if they were touched.
 func writeIDs(tx *bolt.Tx, h *head, changes *monitor.Changes) error {
 	if len(changes.IDs) == 0 && len(changes.DroppedGenerations) == 0 {
 		return nil
+	}
+	for _, g := range changes.RewrittenGenerations {
+		if err := dropGeneration(tx, h, g); err != nil {
+			return err
+		}
 	}
 	// One packer for each generation touched, in the order of touching.
 	var packers []*packer

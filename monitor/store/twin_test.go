@@ -114,8 +114,14 @@ func (w *twin) register(t *rapid.T, c *monitor.Changes) {
 			Generation: int64(rapid.IntRange(-2, 3).Draw(t, "generation")),
 			Value:      fmt.Appendf(nil, "id %d.%d", w.position, i),
 		}
-		w.ids, c.IDs = append(w.ids, id), append(c.IDs, id)
+		c.IDs = append(c.IDs, id)
 	}
+	if len(c.IDs) > 0 && rapid.IntRange(0, 4).Draw(t, "rewrite") == 0 {
+		g := c.IDs[0].Generation // all that still counts of it is in c.IDs
+		c.RewrittenGenerations = append(c.RewrittenGenerations, g)
+		w.ids = slices.DeleteFunc(w.ids, func(id monitor.IDChange) bool { return id.Generation == g })
+	}
+	w.ids = append(w.ids, c.IDs...)
 	if rapid.IntRange(0, 4).Draw(t, "drop") == 0 {
 		g := int64(rapid.IntRange(-2, 3).Draw(t, "dropped"))
 		c.DroppedGenerations = append(c.DroppedGenerations, g)
