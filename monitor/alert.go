@@ -51,7 +51,7 @@ const Caution = "A signal is a statistical finding: it diagnoses nothing and nam
 const maxIDs = 20
 
 // open opens an alert on the strongest of the looks and gives it all of them.
-func (e *Engine) open(s *series, d direction, looks []look, opening look, at Instant, late bool) *alert {
+func (e *Engine) open(s *series, d direction, looks []look, opening look, at Instant, late bool) {
 	ix := s.indicator
 	t := &s.tails[d]
 	t.opened++
@@ -76,7 +76,6 @@ func (e *Engine) open(s *series, d direction, looks []look, opening look, at Ins
 	e.alerts[a.record.ID] = a
 	evidence := a.record.Opening // as it was when it opened
 	e.step(a, life.Step{Kind: life.StepOpened, At: at.Time(), Evidence: &evidence})
-	return a
 }
 
 // alertID is short, stable, and the same wherever the stream is read.

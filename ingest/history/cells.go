@@ -58,9 +58,9 @@ func splitRow(cells [][]byte, row []byte, separator byte) (list [][]byte, open, 
 			lead++
 		}
 		if lead < len(row) && row[lead] == '"' {
-			cell, row, open, ok = quotedCell(row[lead+1:])
-			if open || !ok {
-				return cells, open, ok
+			cell, row, open = quotedCell(row[lead+1:])
+			if open {
+				return cells, true, true
 			}
 			row = bytes.TrimLeft(row, " ")
 			if len(row) > 0 && row[0] != separator {
@@ -83,19 +83,19 @@ func splitRow(cells [][]byte, row []byte, separator byte) (list [][]byte, open, 
 
 // quotedCell reads a cell after its opening quote, and returns what follows
 // its closing one.
-func quotedCell(row []byte) (cell, rest []byte, open, ok bool) {
+func quotedCell(row []byte) (cell, rest []byte, open bool) {
 	var joined []byte
 	for i := 0; ; {
 		n := bytes.IndexByte(row[i:], '"')
 		if n < 0 {
-			return nil, nil, true, true
+			return nil, nil, true
 		}
 		i += n
 		if i+1 == len(row) || row[i+1] != '"' {
 			if joined == nil {
-				return row[:i], row[i+1:], false, true
+				return row[:i], row[i+1:], false
 			}
-			return append(joined, row[:i]...), row[i+1:], false, true
+			return append(joined, row[:i]...), row[i+1:], false
 		}
 		joined = append(joined, row[:i+1]...)
 		row = row[i+2:]

@@ -4,7 +4,6 @@ import (
 	"errors"
 	"fmt"
 	"slices"
-	"time"
 )
 
 // ErrNotAllowed is returned for a step that the alert's condition does not
@@ -125,16 +124,3 @@ func brief(steps []Step) []Step {
 
 // Key is the idempotency key of a step.
 func Key(alert string, number int) string { return fmt.Sprintf("%s.%d", alert, number) }
-
-// Signalling reports whether the alert still rings.
-func (r *Record) Signalling() bool {
-	return r.Condition == Unacknowledged || r.Condition == Acknowledged
-}
-
-// LastAt is when the latest step was taken.
-func (r *Record) LastAt() time.Time {
-	if len(r.Steps) == 0 {
-		return r.Opened
-	}
-	return r.Steps[len(r.Steps)-1].At
-}
