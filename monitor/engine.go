@@ -60,7 +60,8 @@ type Engine struct {
 	settings   []SettingChange
 	checkpoint checkpoint
 
-	looks []look // scratch
+	onLook func(View)
+	looks  []look // scratch
 }
 
 // Partition says which part of all series an engine holds.

@@ -26,6 +26,9 @@ func (e *Engine) lookAt(s *series, ep *epoch, boundary int64, due Instant) {
 		}
 		l := ix.look(s, ep, w, boundary, due)
 		e.note(s, &l, boundary)
+		if e.onLook != nil && l.status != filling {
+			e.onLook(ix.view(s, ep, &l))
+		}
 		if l.status == made {
 			looks = append(looks, l)
 		}
