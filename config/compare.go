@@ -171,6 +171,7 @@ func (c *comparison) setup(a, b *Setup) {
 	c.value("max_bytes", Restart, exactSize(a.Bus.MaxBytes), exactSize(b.Bus.MaxBytes), "")
 	c.value("max_age", Restart, FormatDuration(a.Bus.MaxAge), FormatDuration(b.Bus.MaxAge), "")
 	c.value("replicas", Restart, a.Bus.Replicas, b.Bus.Replicas, "")
+	c.page(a.Page, b.Page)
 	c.outlets(a.Outlets, b.Outlets)
 	c.path = "limits"
 	c.value("max_series", NextLook, a.Limits.MaxSeries, b.Limits.MaxSeries, "")
@@ -179,6 +180,17 @@ func (c *comparison) setup(a, b *Setup) {
 	c.value("max_observations", NextLook, a.Limits.MaxObservations, b.Limits.MaxObservations, "")
 	c.value("memory", NextLook, exactSize(a.Limits.Memory), exactSize(b.Limits.Memory), "")
 	c.path = ""
+}
+
+// page is no part of what a store holds. Who the users are is no part of the
+// set-up: that is in force at once.
+func (c *comparison) page(a, b Page) {
+	c.path = "page"
+	c.value("listen", Restart, a.Listen, b.Listen, "")
+	c.value("url", Restart, a.URL, b.URL, "")
+	c.value("users", Restart, a.Users, b.Users, "")
+	c.value("cert", Restart, a.Cert, b.Cert, "")
+	c.value("key", Restart, a.Key, b.Key, "")
 }
 
 func modeWord(s *Setup) string {

@@ -50,8 +50,19 @@ func (p *prose) setup(s *Setup) {
 		}
 		p.line("Series are spread over %d partitions by the %s of their names.", s.Partitions, first)
 	}
+	p.page(s.Page)
 	if s.History {
 		p.line("Time is history time: it moves with the data alone.")
+	}
+}
+
+func (p *prose) page(page Page) {
+	switch {
+	case !page.Served():
+	case page.Users == "":
+		p.line("The page is served at %s, to whoever is on this machine.", page.Address())
+	default:
+		p.line("The page is served at %s, to the users of %s.", page.Address(), page.Users)
 	}
 }
 

@@ -94,7 +94,7 @@ func Load(path string) (*Setup, error) {
 }
 
 func (s *Setup) resolve(folder string) {
-	for _, p := range []*string{&s.Folder, &s.Bus.Credentials, &s.Bus.PasswordFile, &s.Bus.CA, &s.Bus.Cert, &s.Bus.Key} {
+	for _, p := range []*string{&s.Folder, &s.Bus.Credentials, &s.Bus.PasswordFile, &s.Bus.CA, &s.Bus.Cert, &s.Bus.Key, &s.Page.Users, &s.Page.Cert, &s.Page.Key} {
 		if *p != "" && !filepath.IsAbs(*p) {
 			*p = filepath.Join(folder, *p)
 		}
@@ -124,6 +124,7 @@ func readSetup(top section) *Setup {
 	s.Limits = limits.readLimits()
 	s.Indicators = readIndicators(top, s)
 	s.Outlets = readOutlets(top)
+	s.Page = top.sub("page").readPage(top.has("page"))
 	if len(top.faults) == 0 {
 		s.checkMemory(limits)
 	}

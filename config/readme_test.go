@@ -21,10 +21,10 @@ func readme(t *testing.T) string {
 // that are read.
 func TestReadmeKeys(t *testing.T) {
 	tables := map[string]string{
-		"At the top": "", "`[time]`": "[time]", "`[bus]`": "[bus]", "`[limits]`": "[limits]",
+		"At the top": "", "`[time]`": "[time]", "`[bus]`": "[bus]", "`[limits]`": "[limits]", "`[page]`": pagePlace,
 		"`[[indicator]]`": indicatorPlace, "`[[indicator.baseline]]`": "[[indicator.baseline]]", "`[[outlet]]`": outletPlace,
 	}
-	elsewhere := []string{"time", "bus", "limits", "indicator", "baseline", "outlet"} // tables of their own
+	elsewhere := []string{"time", "bus", "limits", "page", "indicator", "baseline", "outlet"} // tables of their own
 	row := regexp.MustCompile("(?m)^\\| (`[^|]*`) \\|")
 	for part := range strings.SplitSeq(readme(t), "\n## ") {
 		heading, body, _ := strings.Cut(part, "\n")

@@ -24,7 +24,7 @@ type section struct {
 
 // keysOf are the keys that each kind of table may have.
 var keysOf = map[string][]string{
-	"":             {"name", "folder", "partitions", "key_parts", "time", "bus", "limits", "indicator", "outlet"},
+	"":             {"name", "folder", "partitions", "key_parts", "time", "bus", "limits", "page", "indicator", "outlet"},
 	"[time]":       {"mode"},
 	"[bus]":        {"url", "credentials", "user", "password_file", "ca", "cert", "key", "max_bytes", "max_age", "replicas"},
 	"[limits]":     {"max_series", "max_ids", "max_message", "max_observations", "memory"},
@@ -32,6 +32,7 @@ var keysOf = map[string][]string{
 	"clock":        {"size", "per"},
 	"a window":     {"span", "step"},
 	baselinePlace:  {"series", "from", "to", "kind", "rate", "events", "exposure", "span", "gap", "refresh", "min_events", "margin", "spread", "strata", "delay", "version", "source"},
+	pagePlace:      {"listen", "url", "users", "cert", "key"},
 	outletPlace:    {"name", "kind", "url", "secret_file"},
 	"strata":       {"by", "factors"},
 	"delay":        {"ages", "reported"},

@@ -32,6 +32,8 @@ type Setup struct {
 	Indicators []Indicator
 	// Outlets are the ways out beside the bus and the terminal.
 	Outlets []Outlet
+	// Page is where people look and act; see Page.Served.
+	Page Page
 	// Text is the file as read and Digest the lower-case hex SHA-256 of it.
 	Text   []byte
 	Digest string
