@@ -24,10 +24,10 @@ import (
 
 // The soak is run by hand:
 //
-//	go test ./cmd/tailbell -run TestSoak -soak 30m -soak-rate 5000 -timeout 0 -v
+//	go test ./cmd/tailbell -run TestSoak -soak 30m -soak-rate 4000 -timeout 0 -v
 var (
 	soakTime = flag.Duration("soak", 0, "how long TestSoak runs")
-	soakRate = flag.Int("soak-rate", 5000, "how many observations a second TestSoak publishes")
+	soakRate = flag.Int("soak-rate", 4000, "how many observations a second TestSoak publishes")
 )
 
 const soakSetup = `name = "soak"
@@ -42,10 +42,12 @@ series = ["ferrybill/*/failure"]
 unit = "requests"
 every = "1m"
 grain = 1
+exposure = "clock"
+clock = { size = 1000, per = "1s" }
 settle = "1m"
 horizon = "2m"
 ids = "none"
-windows = ["5m"]
+windows = ["1m", "5m"]
 p_limit = 1e-6
 quiet = 3
 [indicator.baseline]
@@ -58,7 +60,7 @@ unit = "bed-days"
 every = "1m"
 settle = "1m"
 horizon = "2m"
-windows = ["5m"]
+windows = ["3m"]
 p_limit = 1e-4
 quiet = 3
 [indicator.baseline]
@@ -69,7 +71,9 @@ rate = 0.05
 const (
 	soakNames    = 4000 // series there are in all
 	soakActive   = 1000 // series that report at a time
-	soakElements = 50   // in a message
+	soakStay     = 8 * time.Minute
+	soakBad      = 100 // every so many fails three times as often
+	soakElements = 50  // in a message
 	soakEvery    = 30 * time.Second
 	soakCopies   = 2
 )
@@ -131,6 +135,7 @@ func (s *soak) load(ctx context.Context) {
 	defer t.Stop()
 	var calm struct{ routines, files int }
 	for time.Since(begin) < *soakTime {
+		s.first = int(time.Since(begin) * soakActive / soakStay) // series come and go
 		s.publish(ctx, *soakRate/10)
 		if time.Now().After(tell) {
 			tell = tell.Add(soakEvery)
@@ -156,7 +161,6 @@ func (s *soak) load(ctx context.Context) {
 // publish sends n observations and measures how long the last takes to be
 // committed.
 func (s *soak) publish(ctx context.Context, n int) {
-	s.first += 2 // series come and go
 	var messages []bus.Outgoing
 	at := time.Now().UTC()
 	for n > 0 {
@@ -165,7 +169,7 @@ func (s *soak) publish(ctx context.Context, n int) {
 			series := (s.first + s.random.IntN(soakActive)) % soakNames
 			s.sent++
 			if series%2 == 0 {
-				fmt.Fprintf(&b, `{"series":"ferrybill/eu-%d/failure","at":"%s","events":%d}`+"\n", series, at.Format(time.RFC3339Nano), s.random.IntN(3)/2)
+				fmt.Fprintf(&b, `{"series":"ferrybill/eu-%d/failure","at":"%s","events":%d}`+"\n", series, at.Format(time.RFC3339Nano), s.failures(series))
 				continue
 			}
 			// Ids are kept for a day at least: a series corrects its minute over
@@ -189,6 +193,19 @@ func (s *soak) publish(ctx context.Context, n int) {
 		s.t.Fatal(err)
 	}
 	s.waits = append(s.waits, time.Since(acked))
+}
+
+// failures draws how many failures one observation reports: one a second and
+// series on average, as is usual, but for a few.
+func (s *soak) failures(series int) int {
+	n := 0
+	if s.random.IntN(max(1, *soakRate/soakActive)) == 0 {
+		n = 1
+	}
+	if series%soakBad == 0 {
+		return 3 * n
+	}
+	return n
 }
 
 // trim makes a copy, lets the oldest go and trims the stream to those kept.
@@ -235,6 +252,10 @@ func (s *soak) report(after time.Duration) (routines, files int) {
 		after.Seconds(), s.sent, m.HeapAlloc>>20, resident()>>20, runtime.NumGoroutine(), len(open), info.Size()>>20, folderBytes(s.t, s.setup.Folder, storePath(s.setup, 0))>>20,
 		id.First, id.Last, s.waits[n/2].Round(time.Millisecond), s.waits[n*99/100].Round(time.Millisecond), s.waits[n-1].Round(time.Millisecond))
 	s.waits = s.waits[:0]
+	if status, err := s.daemon.status(s.t.Context()); err == nil {
+		a := status.Partitions[0].Account
+		s.t.Logf("       looks: %d made, %d withheld, %d filling", a.Looks, a.WithheldLooks, a.Filling)
+	}
 	return runtime.NumGoroutine(), len(open)
 }
 
@@ -284,5 +305,8 @@ func (s *soak) balance(ctx context.Context) {
 	s.t.Logf("account: %+v", a)
 	if uint64(a.Elements) != s.sent || a.Refused+a.Rejected+a.Unmonitored != 0 {
 		s.t.Errorf("%d sent, the account has %+v", s.sent, a)
+	}
+	if a.Looks == 0 {
+		s.t.Error("no look was made")
 	}
 }
