@@ -51,7 +51,7 @@ func numbers(e *life.Evidence) string {
 		}
 	}
 	fmt.Fprintf(&b, "This look signals at %s (chance %s while the usual %s holds; p allowed: %s).",
-		whole(e.Critical), number(e.AttainedSize), measure(e), trimFloat(e.Limit))
+		whole(e.Critical), number(e.AttainedSize), measure(e), allowedP(e))
 	if e.Test != "" {
 		b.WriteString(" Test: " + stop(clean(e.Test)))
 	}

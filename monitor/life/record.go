@@ -149,10 +149,12 @@ type Evidence struct {
 	P      float64 `json:"p"`
 	Log10P float64 `json:"log10_p"`
 	// Critical is the count at which this look signals, AttainedSize the
-	// chance of that count under the baseline, Limit the p that was allowed.
-	Critical     int64   `json:"critical_count"`
-	AttainedSize float64 `json:"attained_size"`
-	Limit        float64 `json:"p_limit"`
+	// chance of that count under the baseline, Limit the p that was allowed:
+	// as stated in the set-up, or as it follows from the Allowance.
+	Critical     int64      `json:"critical_count"`
+	AttainedSize float64    `json:"attained_size"`
+	Limit        float64    `json:"p_limit"`
+	Allowance    *Allowance `json:"allowance,omitempty"`
 	// Baseline says by which usual rate it was judged.
 	Baseline Baseline `json:"baseline"`
 	// Setup is the version and digest of the set-up in force.
