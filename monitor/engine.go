@@ -62,6 +62,8 @@ type Engine struct {
 
 	onLook func(View)
 	looks  []look // scratch
+	// passing says that nothing stores the engine, see Pass.
+	passing bool
 }
 
 // Partition says which part of all series an engine holds.

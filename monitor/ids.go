@@ -20,6 +20,8 @@ type ids struct {
 	max         int
 	oldest      int64
 	hasOldest   bool
+	// most is the largest number of ids that were kept at once.
+	most int
 
 	touched []*identified
 	dropped []int64
@@ -89,6 +91,7 @@ func (x *ids) put(entry *identified) {
 		x.oldest, x.hasOldest = entry.generation, true
 	}
 	x.byKey[entry.key] = entry
+	x.most = max(x.most, len(x.byKey))
 	x.touched = append(x.touched, entry)
 }
 

@@ -45,6 +45,7 @@ func (e *Engine) lookAt(s *series, ep *epoch, boundary int64, due Instant) {
 // note keeps what a look has come to: made, or withheld and why.
 func (e *Engine) note(s *series, l *look, boundary int64) {
 	ws := &s.windows[l.window]
+	e.watch(s, l)
 	switch l.status {
 	case filling:
 		e.account.Filling++

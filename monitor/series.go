@@ -41,6 +41,8 @@ type series struct {
 	// dirty lists the slots changed since the last drain, if touched.
 	dirty   []int64
 	touched bool
+	// watched counts the looks by window while the engine is passing.
+	watched []watch
 	// fresh says that no patch has named the series yet.
 	fresh bool
 }
