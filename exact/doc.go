@@ -6,7 +6,8 @@
 // TwoProportion. Bounds: Garwood, ClopperPearson, their mid-p forms, and MeanBounds and
 // ChanceBounds for the minimum-likelihood and Blaker's form; RatioBounds and OddsRatioBounds
 // beside the tests. Plans: CriticalUpper and CriticalLower with the attained size, PowerUpper and
-// PowerLower, NeededExposure and NeededTrials. Holm and BenjaminiHochberg adjust many p-values.
+// PowerLower, NeededExposure and NeededTrials. Holm, Hochberg, BenjaminiHochberg and
+// BenjaminiYekutieli adjust many p-values, FalseCoverage the bounds of those selected.
 //
 // The model. Every tail is the probability of one count, from its deviance in double-double
 // (Loader 2000, Fast and accurate computation of binomial probabilities), times the ratio

@@ -297,9 +297,20 @@ func FuzzMultiplicity(f *testing.F) {
 			}
 		}
 		holm, bh := exact.Holm(nil, p), exact.BenjaminiHochberg(nil, p)
+		hochberg, by := exact.Hochberg(nil, p), exact.BenjaminiYekutieli(nil, p)
 		for i, v := range p {
 			if math.IsNaN(v) != math.IsNaN(holm[i]) || holm[i] < v || bh[i] < v || holm[i] > 1 || bh[i] > holm[i]*(1+1e-15) {
 				t.Errorf("%v: %v, %v", v, holm[i], bh[i])
+			}
+			if hochberg[i] > holm[i] || hochberg[i] < v || bh[i] > hochberg[i]*(1+1e-15) || by[i] < bh[i] || by[i] > 1 {
+				t.Errorf("%v: Holm %v, Hochberg %v, BH %v, BY %v", v, holm[i], hochberg[i], bh[i], by[i])
+			}
+		}
+		// of those selected, and of no others, p lies at or under the alpha of their bounds
+		n, alpha := exact.FalseCoverage(bh, 0.2)
+		for i, v := range p {
+			if selected := exact.AtMost(bh[i], 0.2); selected && n == 0 || n > 0 && selected != exact.AtMost(v, alpha) {
+				t.Errorf("%v: %d selected, alpha %v, %v adjusted to %v", p, n, alpha, v, bh[i])
 			}
 		}
 	})

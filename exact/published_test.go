@@ -426,6 +426,10 @@ func TestPublishedMultiplicity(t *testing.T) {
 	for i, w := range strings.Fields("0.1140 0.2211 0.2780") {
 		printed(t, src+", Holm", holm[i+3], w)
 	}
+	hochberg, by := exact.Hochberg(nil, p), exact.BenjaminiYekutieli(nil, p)
+	for i, w := range strings.Fields("0.004977 0.009955 0.031523 0.118212") {
+		printed(t, src+", R p.adjust BY", by[i], w)
+	}
 	reject := func(p []float64) (n int) {
 		for _, v := range p {
 			if v <= 0.05 {
@@ -437,11 +441,20 @@ func TestPublishedMultiplicity(t *testing.T) {
 	if reject(bh) != 4 || reject(holm) != 3 {
 		t.Errorf("%s: rejected %d and %d, printed 4 and 3", src, reject(bh), reject(holm))
 	}
+	if reject(hochberg) != 3 || reject(by) != 3 { // H01b: computed from the published p-values
+		t.Errorf("%s: Hochberg rejected %d, BY %d, 3 and 3 by R", src, reject(hochberg), reject(by))
+	}
+	if n, alpha := exact.FalseCoverage(bh, 0.05); n != 4 || math.Abs(alpha-4*0.05/15) > 1e-17 {
+		t.Errorf("%s: %d selected, bounds at %g; by definition 4 at 4 q/15", src, n, alpha)
+	}
 	for i, w := range strings.Fields("0.03 0.06 0.06 0.02") {
 		printed(t, "H04 Holm 1979, example from memory", exact.Holm(nil, []float64{.01, .04, .03, .005})[i], w)
 	}
 	for i, w := range strings.Fields("0.02 0.04 0.04 0.02") {
 		printed(t, "H04 R p.adjust, BH", exact.BenjaminiHochberg(nil, []float64{.01, .04, .03, .005})[i], w)
+	}
+	for i, w := range strings.Fields("0.03 0.04 0.04 0.02") {
+		printed(t, "H04 R p.adjust, Hochberg", exact.Hochberg(nil, []float64{.01, .04, .03, .005})[i], w)
 	}
 	f, err := os.Open(filepath.Join("..", "testdata", "exact", "r_padjust.csv"))
 	if err != nil {

@@ -46,9 +46,18 @@ Columns: events; exposure or trials; and, where they differ from row to row,
 baseline, reference_events, reference_exposure or reference_trials, margin (else
 the options of the same names hold for all rows). Other columns are passed on.
 Every row comes back with p, log10 p, rate, bounds, ratio, bounds, critical
-count and attained size, and with p adjusted over the rows by Holm's and by
-Benjamini and Hochberg's procedure. A row that can't be read is named with its
-line, the others are answered, and the exit code is 1.
+count and attained size, and with p adjusted over the rows: by Holm's procedure
+(holm_p; hochberg_p is Hochberg's, for independent rows) so that hardly ever any
+row signals by chance, by Benjamini and Hochberg's (bh_p; by_p is Benjamini and
+Yekutieli's, whatever the rows have to do with each other) so that few of those
+that do signal do so by chance. A row that can't be read is named with its line,
+the others are answered, and the exit code is 1.
+
+Whoever looks only at the rows with a small p looks at bounds that miss more often
+than they say. Rows whose bh_p is at most --alpha are therefore given bounds for
+what was selected too (fcr_rate_lower and so on, at fcr_alpha: alpha times the
+share of the rows selected): of those, no more than alpha miss on average if the
+rows are independent (false coverage rate; Benjamini and Yekutieli 2005).
 
 A signal is a statistical finding: it diagnoses nothing, and silence proves no
 safety. Local policy decides.`,

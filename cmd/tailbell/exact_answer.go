@@ -239,7 +239,7 @@ func (o exactOptions) weigh(a *exactAnswer, x exactTest) {
 	}
 }
 
-// exactRecord is an answer as JSON; a table adds holm_p and bh_p. Null stands for what has no finite value or was not asked.
+// exactRecord is an answer as JSON; a table adds what follows from all its rows. Null stands for what has no finite value or was not asked.
 type exactRecord struct {
 	Unit          string   `json:"unit,omitempty"`
 	Line          int      `json:"line,omitempty"`

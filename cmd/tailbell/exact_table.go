@@ -34,8 +34,13 @@ const (
 
 var addedColumns = []string{
 	"p", "log10_p", "rate", "rate_lower", "rate_upper", "ratio", "ratio_lower", "ratio_upper",
-	"critical_count", "attained_size", "holm_p", "bh_p", "problem",
+	"critical_count", "attained_size", "holm_p", "bh_p", "hochberg_p", "by_p",
+	"fcr_alpha", "fcr_rate_lower", "fcr_rate_upper", "fcr_ratio_lower", "fcr_ratio_upper", "problem",
 }
+
+// rowColumns is how many of them a row knows by itself, short of what follows
+// from all rows.
+const rowColumns = 10
 
 // exactTable gathers the answered rows as the text they will be printed as, short of the p-values
 // adjusted over all rows: a million rows then take some 300 MB.
@@ -49,12 +54,14 @@ type exactTable struct {
 	record  []string
 }
 
-// exactRow is one row: its line in the file, its text, its p, and what is wrong with it.
+// exactRow is one row: its line in the file, its text, its p, and what is wrong with it. It keeps
+// its question if its p is so small that it may yet be selected.
 type exactRow struct {
 	line int
 	text []byte
 	p    float64
 	err  error
+	ask  *question
 }
 
 func (f *exactFlags) answerTable(c *cobra.Command, path string) (err error) {
@@ -255,6 +262,10 @@ func (t *exactTable) add(header []string, r readRow) error {
 	row := exactRow{line: r.line, p: math.NaN(), err: r.err}
 	if r.err == nil {
 		row.p = r.answer.p
+		if exact.AtMost(row.p, t.options.alpha) {
+			q := r.answer.question
+			row.ask = &q
+		}
 	}
 	t.line.Reset()
 	encode := t.encodeCSV
@@ -274,7 +285,7 @@ func (t *exactTable) add(header []string, r readRow) error {
 	return nil
 }
 
-// encodeCSV writes the row's own fields and the added ones short of the last three.
+// encodeCSV writes the row's own fields and the added ones that it knows by itself.
 func (t *exactTable) encodeCSV(header []string, r readRow) error {
 	record := append(t.record[:0], r.fields...)
 	if len(record) > len(header) {
@@ -291,7 +302,7 @@ func (t *exactTable) encodeCSV(header []string, r readRow) error {
 		record = append(record, cell(a.p), cell(a.log10P), cell(a.rate*o.per), cell(a.rateLower*o.per), cell(a.rateUpper*o.per),
 			cell(a.ratio), cell(a.ratioLower), cell(a.ratioUpper), critical, cell(a.attained))
 	} else {
-		for range len(addedColumns) - 3 {
+		for range rowColumns {
 			record = append(record, "")
 		}
 	}
@@ -330,14 +341,17 @@ func (t *exactTable) encodeJSON(header []string, r readRow) error {
 	return nil
 }
 
-// print writes the rows with their adjusted p-values.
+// print writes the rows with what follows from all of them.
 func (t *exactTable) print(w io.Writer, header []string) error {
 	p := make([]float64, len(t.rows))
 	for i, r := range t.rows {
 		p[i] = r.p
 	}
-	holm := exact.Holm(nil, p)
-	bh := exact.BenjaminiHochberg(p, p)
+	over := overAll{
+		holm: exact.Holm(nil, p), hochberg: exact.Hochberg(nil, p),
+		bh: exact.BenjaminiHochberg(nil, p), by: exact.BenjaminiYekutieli(nil, p),
+	}
+	_, over.alpha = exact.FalseCoverage(over.bh, t.options.alpha)
 	if !t.json {
 		t.line.Reset()
 		if err := t.writeRecord(append(slices.Clone(header), addedColumns...)); err != nil {
@@ -350,7 +364,7 @@ func (t *exactTable) print(w io.Writer, header []string) error {
 	for i, r := range t.rows {
 		t.line.Reset()
 		t.line.Write(r.text)
-		if err := t.finish(r, holm[i], bh[i]); err != nil {
+		if err := t.finish(r, over, i); err != nil {
 			return err
 		}
 		t.line.WriteByte('\n')
@@ -361,11 +375,35 @@ func (t *exactTable) print(w io.Writer, header []string) error {
 	return nil
 }
 
+// overAll is what follows from all rows: the p-values adjusted for their number,
+// and the alpha of the bounds of the rows selected.
+type overAll struct {
+	holm, hochberg, bh, by []float64
+	alpha                  float64
+}
+
 // finish adds what is known only over all rows, and what is wrong with the row.
-func (t *exactTable) finish(r exactRow, holm, bh float64) error {
+func (t *exactTable) finish(r exactRow, over overAll, i int) error {
+	bounds, err := t.selected(r, over, i)
+	if err != nil {
+		return err
+	}
 	if t.json {
-		if !math.IsNaN(holm) {
-			t.line.WriteString(`,"holm_p":` + cell(holm) + `,"bh_p":` + cell(bh))
+		if !math.IsNaN(r.p) {
+			for _, c := range []struct {
+				name string
+				v    float64
+			}{{"holm_p", over.holm[i]}, {"bh_p", over.bh[i]}, {"hochberg_p", over.hochberg[i]}, {"by_p", over.by[i]}} {
+				t.line.WriteString(`,"` + c.name + `":` + cell(c.v))
+			}
+		}
+		if bounds != nil {
+			b, err := json.Marshal(bounds)
+			if err != nil {
+				return err
+			}
+			t.line.WriteByte(',')
+			t.line.Write(b[1 : len(b)-1])
 		}
 		t.line.WriteByte('}')
 		return nil
@@ -374,8 +412,10 @@ func (t *exactTable) finish(r exactRow, holm, bh float64) error {
 	if r.err != nil {
 		problem = r.err.Error()
 	}
+	record := append(t.record[:0], cell(over.holm[i]), cell(over.bh[i]), cell(over.hochberg[i]), cell(over.by[i]))
+	t.record = append(append(record, bounds.cells()...), problem)
 	t.line.WriteByte(',')
-	return t.writeRecord([]string{cell(holm), cell(bh), problem})
+	return t.writeRecord(t.record)
 }
 
 // cell is a number in full, or nothing.
