@@ -220,6 +220,8 @@ func (c *comparison) indicator(a, b *Indicator) {
 	c.value("expires", NextLook, expiryText(a), expiryText(b), "")
 	c.value("since", Rebuild, sinceText(a), sinceText(b), "")
 	c.value("expect", NextLook, FormatDuration(a.Expect), FormatDuration(b.Expect), "")
+	c.value("remind", NextLook, FormatDuration(a.Remind), FormatDuration(b.Remind), "")
+	c.value("remind_to", NextLook, a.RemindTo, b.RemindTo, "")
 	c.windows(a, b)
 	c.looks(a, b)
 	c.value("tails", NextLook, strings.Join(tailWords(a), ", "), strings.Join(tailWords(b), ", "), "")

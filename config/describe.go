@@ -162,6 +162,13 @@ func (p *prose) late(in *Indicator) {
 	if in.Expect > 0 {
 		p.line("  A series that is silent for more than %s is shown as silent.", elapsed(in.Expect))
 	}
+	if in.Remind > 0 {
+		to := "every outlet"
+		if in.RemindTo != "" {
+			to = "outlet " + in.RemindTo
+		}
+		p.line("  While an alert signals and nobody has acknowledged it, %s is told again every %s.", to, elapsed(in.Remind))
+	}
 }
 
 func afterEnd(settle time.Duration) string {

@@ -183,7 +183,23 @@ func (s section) readTimes(in *Indicator) {
 	if s.has("expect") {
 		in.Expect, _ = s.duration("expect", 0, time.Second, maxTime)
 	}
+	s.readRemind(in)
 	in.Since = s.readSince(in.Every, in.Zone)
+}
+
+// readRemind reads after how long people are told again of an alert that nobody
+// has acknowledged, and by which outlet.
+func (s section) readRemind(in *Indicator) {
+	if s.has("remind") {
+		in.Remind, _ = s.duration("remind", 0, time.Minute, maxTime)
+	}
+	if !s.has("remind_to") {
+		return
+	}
+	in.RemindTo, _ = s.plainName("remind_to", 64)
+	if !s.has("remind") {
+		s.fault("remind_to", "says where, but not when", `write e.g. remind = "4h" too`)
+	}
 }
 
 // horizonSlots is the greatest number of slots that the horizon can touch.

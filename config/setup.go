@@ -247,8 +247,13 @@ type Indicator struct {
 	Since time.Time
 	// Expect, if not zero, is the longest silence of a series that is not
 	// made a condition.
-	Expect  time.Duration
-	Windows []Window
+	Expect time.Duration
+	// Remind, if not zero, is how long an alert that nobody acknowledges may
+	// signal before the outlet RemindTo (all, if empty) is told again, and
+	// again after as much time.
+	Remind   time.Duration
+	RemindTo string
+	Windows  []Window
 	// SlotLooks are made when slots have settled, ArrivalLooks at each event.
 	// At least one is true.
 	SlotLooks    bool

@@ -3,6 +3,7 @@ package monitor
 import (
 	"fmt"
 	"slices"
+	"time"
 
 	"tailbell/monitor/life"
 )
@@ -42,6 +43,15 @@ func (e *Engine) perform(act *Act) (Reason, string) {
 		s.Kind = life.StepNote
 	case Mark:
 		s.Kind = life.StepMarked
+	case Shelve:
+		s.Kind = life.StepShelved
+		if why := e.unshelvable(act.Until); why != "" {
+			return NotAllowed, why
+		}
+		until := act.Until.Time()
+		s.Until = &until
+	case Unshelve:
+		s.Kind = life.StepUnshelved
 	}
 	if repeated(&a.record, act, &s) {
 		return NotAllowed, fmt.Sprintf("alert %s has this act already", a.record.ID)
@@ -62,12 +72,17 @@ func (e *Engine) perform(act *Act) (Reason, string) {
 // repeated reports whether the record holds the act already: an acknowledgement
 // of any kind, or one with its own time that says the same.
 func repeated(r *life.Record, act *Act, s *life.Step) bool {
+	if s.Kind == life.StepAcknowledged {
+		return r.Acknowledged()
+	}
 	return slices.ContainsFunc(r.Steps, func(old life.Step) bool {
-		if old.Kind != s.Kind || s.Kind == life.StepAcknowledged {
-			return old.Kind == s.Kind
-		}
-		return act.HasAt && old.At.Equal(act.At.Time()) && old.By == s.By && old.Why == s.Why && old.Mark == s.Mark
+		return old.Kind == s.Kind && act.HasAt && old.At.Equal(act.At.Time()) &&
+			old.By == s.By && old.Why == s.Why && old.Mark == s.Mark && sameTime(old.Until, s.Until)
 	})
+}
+
+func sameTime(a, b *time.Time) bool {
+	return a == b || (a != nil && b != nil && a.Equal(*b))
 }
 
 // alertOf finds the alert that an act names: by its id, or the newest one of

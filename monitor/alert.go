@@ -31,6 +31,8 @@ type alert struct {
 	// pending says that its evidence was corrected at the present moment: the
 	// step is taken when the clock moves, one for all that came at once.
 	pending bool
+	// wake is when something happens to it by itself.
+	wake Instant
 	// dirty says that the record changed since the last drain.
 	dirty bool
 }
@@ -158,11 +160,18 @@ func (e *Engine) take(a *alert, s life.Step) error {
 	}
 	a.pending = false
 	a.record.Since = e.since(a)
+	waited := waitsOf(&a.record)
 	notices, err := a.record.Take(s)
 	if err != nil {
 		return err
 	}
+	for i := range notices {
+		notices[i].History = e.history
+	}
 	e.steps = append(e.steps, notices...)
+	if waitsOf(&a.record) != waited {
+		e.rewake(a, e.clock)
+	}
 	e.touchAlert(a)
 	e.touch(a.series)
 	return nil

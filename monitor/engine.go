@@ -48,6 +48,7 @@ type Engine struct {
 	alerts     map[string]*alert
 	// pending are alerts whose evidence was corrected at the present moment.
 	pending []*alert
+	wakes   wakes
 	account Account
 
 	// What the next Drain hands over.
@@ -93,7 +94,10 @@ func (e *Engine) Apply(m *Message) {
 	e.position = m.Position
 	switch {
 	case !e.history || m.Kind == Live:
-		e.history = false
+		if e.history {
+			e.history = false
+			e.rewakeAll() // people can be reminded from now on
+		}
 		e.advance(m.Stored)
 	case m.HasTime && m.Kind != Observations:
 		e.advance(m.Time)
@@ -169,7 +173,11 @@ func (e *Engine) advance(to Instant) {
 		return
 	}
 	e.settleAll()
-	for e.nextDue <= to {
+	for {
+		e.awake(min(to, e.nextDue-1), to)
+		if e.nextDue > to {
+			break
+		}
 		ix := e.dueFirst()
 		if len(ix.series) == 0 {
 			ix.start(to)
@@ -207,6 +215,7 @@ func (e *Engine) NextDue() (Instant, bool) {
 			due = min(due, ix.nextDue)
 		}
 	}
+	due = min(due, e.nextWake())
 	if len(e.pending) > 0 {
 		const soon = 1_000_000 // a second, in which more of the same may come
 		due = min(due, e.clock+soon)

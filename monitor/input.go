@@ -142,6 +142,7 @@ type Act struct {
 	Mark      life.Mark // what a mark says; "" takes it back
 	By        string    // who
 	Why       string    // the reason, or the note's text
+	Until     Instant   // when what was shelved comes back
 	// At is the act's own time, used in history time; if HasAt.
 	At    Instant
 	HasAt bool
@@ -158,7 +159,12 @@ const (
 	Close
 	Note
 	Mark
+	Shelve
+	Unshelve
 )
+
+// ActKinds are all kinds of act.
+var ActKinds = []ActKind{Acknowledge, Close, Note, Mark, Shelve, Unshelve}
 
 // String returns the kind as written in messages.
 func (k ActKind) String() string {
@@ -171,6 +177,10 @@ func (k ActKind) String() string {
 		return "note"
 	case Mark:
 		return "mark"
+	case Shelve:
+		return "shelve"
+	case Unshelve:
+		return "unshelve"
 	}
 	return "unknown act"
 }

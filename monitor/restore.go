@@ -37,6 +37,7 @@ func Restore(p Partition, snap *Snapshot, record func(id string) (life.Record, e
 		}
 	}
 	e.reschedule()
+	e.rewakeAll()
 	return e, nil
 }
 

@@ -113,4 +113,5 @@ func (e *Engine) install(next *config.Setup, version int, from map[string]int64)
 	}
 	e.ids.configure(horizon, next.Limits.MaxIDs)
 	e.reschedule()
+	e.rewakeAll()
 }

@@ -332,7 +332,8 @@ func (w *twin) step(a *twinAlert, x twinStep) {
 		if a.condition == life.Unacknowledged {
 			a.condition = life.Acknowledged
 		}
-	case life.StepWorsened, life.StepCorrected, life.StepNote, life.StepMarked:
+	case life.StepWorsened, life.StepCorrected, life.StepNote, life.StepMarked, life.StepShelved, life.StepUnshelved,
+		life.StepReminder, life.StepTest: // the streams shelve nothing
 	}
 	x.alert, x.condition, x.opening, x.worst = a, a.condition, a.opening, a.worst
 	if x.evidence != nil {
@@ -411,7 +412,7 @@ func (w *twin) perform(a *twinAlert, act Act) Reason {
 		x.kind = life.StepClosed
 	case Note:
 		x.kind = life.StepNote
-	case Mark:
+	case Mark, Shelve, Unshelve:
 		return NotAllowed // the streams hold none
 	}
 	for _, old := range w.steps {

@@ -14,8 +14,11 @@ import (
 func Record(r *life.Record, width int) string {
 	zone := zoneOf(r)
 	var b strings.Builder
-	fmt.Fprintf(&b, "alert %s  %s  %s  %s\n", clean(r.ID), strings.ToUpper(clean(string(r.Condition))),
-		arrow(r.Direction), clean(r.Series))
+	condition := strings.ToUpper(clean(string(r.Condition)))
+	if r.Shelf != nil {
+		condition += " until " + moment(r.Shelf.Until.In(zone))
+	}
+	fmt.Fprintf(&b, "alert %s  %s  %s  %s\n", clean(r.ID), condition, arrow(r.Direction), clean(r.Series))
 	paragraphs := []string{Sentence(r, &r.Opening), numbers(&r.Opening), basis(r, &r.Opening)}
 	if !sameLook(&r.Worst, &r.Opening) {
 		paragraphs = append(paragraphs, "At its strongest: "+Sentence(r, &r.Worst))
@@ -91,6 +94,9 @@ func history(s *life.Step, r *life.Record, zone *time.Location) string {
 	}
 	if s.By != "" {
 		text += " by " + clean(s.By)
+	}
+	if s.Until != nil {
+		text += " until " + moment(s.Until.In(zone))
 	}
 	switch {
 	case s.Why == "":

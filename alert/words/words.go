@@ -67,9 +67,15 @@ func Line(n *life.Notice) string {
 	switch n.Step.Kind {
 	case life.StepOpened, life.StepWorsened, life.StepCorrected:
 		return text + ": " + brief(evidenceOf(&n.Step, &r.Opening), zone)
-	case life.StepAcknowledged, life.StepNote, life.StepClosed, life.StepReturned, life.StepWithdrawn, life.StepMarked:
+	case life.StepReminder:
+		return text + ": " + brief(&r.Worst, zone)
+	case life.StepAcknowledged, life.StepNote, life.StepClosed, life.StepReturned, life.StepWithdrawn, life.StepMarked,
+		life.StepShelved, life.StepUnshelved, life.StepTest:
 	}
 	text += ", " + noun(&r.Opening)
+	if n.Step.Until != nil {
+		text += ", until " + moment(n.Step.Until.In(zone))
+	}
 	if n.Step.Kind == life.StepMarked {
 		text += ", " + marked(&n.Step)
 	}
@@ -91,7 +97,7 @@ func Heading(n *life.Notice) string {
 }
 
 // Paragraphs returns the sentences of one step, not wrapped, the caution last
-// where an alert was opened.
+// where somebody is called to act.
 func Paragraphs(n *life.Notice) []string {
 	r := &n.Record
 	zone := zoneOf(r)
@@ -99,7 +105,7 @@ func Paragraphs(n *life.Notice) []string {
 	case life.StepOpened:
 		return opened(n, zone)
 	case life.StepWorsened:
-		return nonEmpty(finding(r, evidenceOf(&n.Step, &r.Worst)), worsened(n, zone)+afterwards(r, zone))
+		return nonEmpty(finding(r, evidenceOf(&n.Step, &r.Worst)), worsened(n, zone)+afterwards(r, zone), caution(r))
 	case life.StepCorrected:
 		return nonEmpty(corrected(n, zone))
 	case life.StepReturned:
@@ -110,6 +116,12 @@ func Paragraphs(n *life.Notice) []string {
 			moment(r.Opened.In(zone)) + " gives no signal. This is not a return to usual: with right data it would not have rung.")
 	case life.StepAcknowledged, life.StepClosed, life.StepNote, life.StepMarked:
 		return nonEmpty(acted(n, zone))
+	case life.StepShelved, life.StepUnshelved:
+		return shelf(n, zone)
+	case life.StepReminder:
+		return reminder(n, zone)
+	case life.StepTest:
+		return nonEmpty(clean(n.Step.Why), caution(r))
 	}
 	return nonEmpty(subject(r) + ": " + clean(string(n.Step.Kind)) + ".")
 }
@@ -173,7 +185,8 @@ func acted(n *life.Notice, zone *time.Location) string {
 		verb = "note" + by
 	case life.StepMarked:
 		verb = marked(s) + by
-	case life.StepOpened, life.StepWorsened, life.StepCorrected, life.StepReturned, life.StepWithdrawn:
+	case life.StepOpened, life.StepWorsened, life.StepCorrected, life.StepReturned, life.StepWithdrawn,
+		life.StepShelved, life.StepUnshelved, life.StepReminder, life.StepTest:
 		verb = string(s.Kind)
 	}
 	text := subject(r) + ": " + verb
@@ -256,6 +269,14 @@ func what(n *life.Notice) string {
 		return "NOTE"
 	case life.StepMarked:
 		return "MARKED"
+	case life.StepShelved:
+		return "SHELVED"
+	case life.StepUnshelved:
+		return "OFF THE SHELF"
+	case life.StepReminder:
+		return "NOT YET ACKNOWLEDGED"
+	case life.StepTest:
+		return "TEST, NO ALERT"
 	}
 	return strings.ToUpper(clean(string(n.Step.Kind)))
 }

@@ -12,6 +12,7 @@ import (
 	"strconv"
 	"strings"
 	"text/tabwriter"
+	"time"
 
 	"github.com/spf13/cobra"
 
@@ -36,7 +37,9 @@ func newAlertCommand() *cobra.Command {
 			"Closes the alert by hand, with the reason."),
 		newActCommand(monitor.Note, "Write a note on an alert",
 			"Writes a note on an alert. Its condition does not change."),
-		newMarkCommand())
+		newMarkCommand(), newShelveCommand(),
+		newActCommand(monitor.Unshelve, "Take an alert off the shelf before its time is over",
+			"Takes the alert off the shelf before its time is over. If it still signals, it waits for\nsomebody to acknowledge it, whatever was acknowledged before."))
 	return c
 }
 
@@ -180,6 +183,7 @@ func newAlertShowCommand() *cobra.Command {
 type acting struct {
 	path string
 	act  monitor.Act
+	span time.Duration // for which it is shelved; 0 if act.Until says it
 }
 
 func newActCommand(kind monitor.ActKind, short, long string) *cobra.Command {
@@ -208,6 +212,8 @@ func newActing(a *acting, short, long string) *cobra.Command {
 		monitor.Close:       "the reason, a `TEXT`; needed",
 		monitor.Note:        "the note's `TEXT`; needed",
 		monitor.Mark:        "the reason, a `TEXT`; needed",
+		monitor.Shelve:      "the reason, a `TEXT`; needed",
+		monitor.Unshelve:    "a `TEXT` to go with it",
 	}
 	c.Flags().StringVar(&a.act.Why, "why", "", why[kind])
 	return c
@@ -232,6 +238,8 @@ func (a *acting) check() error {
 		return errors.New("--why is missing: closing an alert needs a reason")
 	case a.act.Why == "" && a.act.Kind == monitor.Mark:
 		return errors.New("--why is missing: a mark needs a reason")
+	case a.act.Why == "" && a.act.Kind == monitor.Shelve:
+		return errors.New("--why is missing: shelving an alert needs a reason")
 	case a.act.Why == "" && a.act.Kind == monitor.Note:
 		return errors.New("--why is missing: it is the note's text")
 	}
@@ -251,8 +259,13 @@ func (a *acting) run(ctx context.Context, w io.Writer) error {
 	if err != nil {
 		return err
 	}
-	if record.Done() && (a.act.Kind == monitor.Acknowledge || a.act.Kind == monitor.Close) {
+	if record.Done() && a.act.Kind != monitor.Note && a.act.Kind != monitor.Mark {
 		return fmt.Errorf("alert %s is %s already: nothing was done", record.ID, record.Condition)
+	}
+	if a.act.Kind == monitor.Shelve {
+		if err := a.shelveUntil(ctx, setup, &record); err != nil {
+			return err
+		}
 	}
 	err = ask(ctx, setup, verbAct, actRequest{wire.EncodeAct(nil, &a.act)}, &record)
 	if err != nil {
@@ -266,6 +279,9 @@ func (a *acting) run(ctx context.Context, w io.Writer) error {
 	}
 	if a.act.Kind == monitor.Note {
 		return say(w, "Noted on alert %s (%s).", record.ID, record.Condition)
+	}
+	if record.Shelf != nil {
+		return say(w, "Alert %s is shelved until %s.", record.ID, record.Shelf.Until.Format("2006-01-02 15:04:05Z"))
 	}
 	return say(w, "Alert %s is now %s.", record.ID, record.Condition)
 }

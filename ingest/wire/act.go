@@ -96,6 +96,8 @@ func readActField(field field, act *monitor.Act) *fault {
 		return readActText(field, MaxWhyLength, &act.Why)
 	case "mark":
 		return readMark(field, act)
+	case "until":
+		return readTime(field, &act.Until)
 	case "at":
 		act.HasAt = true
 		return readTime(field, &act.At)
@@ -108,13 +110,13 @@ func readActKind(field field, act *monitor.Act) *fault {
 	if f := readActText(field, MaxIDLength, &text); f != nil {
 		return f
 	}
-	for _, kind := range []monitor.ActKind{monitor.Acknowledge, monitor.Close, monitor.Note, monitor.Mark} {
+	for _, kind := range monitor.ActKinds {
 		if text == kind.String() {
 			act.Kind = kind
 			return nil
 		}
 	}
-	return refuse(monitor.BadAct, "act is %q; it must be acknowledge, close, note or mark", clip(text))
+	return refuse(monitor.BadAct, "act is %q; it must be acknowledge, close, note, mark, shelve or unshelve", clip(text))
 }
 
 // unmarked takes a mark back.
@@ -157,7 +159,7 @@ func readActText(field field, most int, text *string) *fault {
 func checkAct(act *monitor.Act, seen map[string]bool) *fault {
 	switch {
 	case !seen["act"]:
-		return refuse(monitor.BadAct, "the field act is missing; it must be acknowledge, close, note or mark")
+		return refuse(monitor.BadAct, "the field act is missing; it must be acknowledge, close, note, mark, shelve or unshelve")
 	case !seen["by"]:
 		return refuse(monitor.BadAct, "the field by is missing; it says who acts")
 	case seen["alert"] && (seen["series"] || seen["direction"]):
@@ -166,7 +168,9 @@ func checkAct(act *monitor.Act, seen map[string]bool) *fault {
 		return refuse(monitor.BadAct, "no alert is named; give alert, or series and direction")
 	case seen["mark"] != (act.Kind == monitor.Mark):
 		return refuse(monitor.BadAct, "the field mark belongs to an act mark, and to it alone")
-	case !seen["why"] && act.Kind != monitor.Acknowledge:
+	case seen["until"] != (act.Kind == monitor.Shelve):
+		return refuse(monitor.BadAct, "the field until belongs to an act shelve, and to it alone")
+	case !seen["why"] && act.Kind != monitor.Acknowledge && act.Kind != monitor.Unshelve:
 		return refuse(monitor.BadAct, "the field why is missing; a %s needs it", act.Kind)
 	}
 	return nil

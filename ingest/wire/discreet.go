@@ -18,7 +18,7 @@ const elided = `"..."`
 // ownWords are those of the contract, which a detail may quote.
 var ownWords = append([]string{
 	"id", "series", "start", "end", "at", "events", "exposure", "revision", "reported", "retracted",
-	"act", "alert", "direction", "mark", "by", "why", "obs", "set", "tick",
+	"act", "alert", "direction", "mark", "until", "by", "why", "obs", "set", "tick",
 }, markWords()...)
 
 func markWords() []string {

@@ -70,6 +70,9 @@ func EncodeAct(dst []byte, a *monitor.Act) []byte {
 		dst = append(dst, `,"mark":`...)
 		dst = AppendText(dst, mark)
 	}
+	if a.Kind == monitor.Shelve {
+		dst = appendTimeField(dst, `,"until":"`, a.Until)
+	}
 	dst = append(dst, `,"by":`...)
 	dst = AppendText(dst, a.By)
 	if a.Why != "" {

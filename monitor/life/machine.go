@@ -4,6 +4,7 @@ import (
 	"errors"
 	"fmt"
 	"slices"
+	"time"
 )
 
 // ErrNotAllowed is returned for a step that the alert's condition does not
@@ -17,21 +18,25 @@ var after = map[StepKind]map[Condition]Condition{
 	StepWorsened: {
 		Unacknowledged: Unacknowledged,
 		Acknowledged:   Acknowledged,
+		Shelved:        Shelved,
 	},
 	StepCorrected: {
 		Unacknowledged: Unacknowledged,
 		Acknowledged:   Acknowledged,
 		Returned:       Returned,
+		Shelved:        Shelved,
 		Closed:         Closed,
 	},
 	StepReturned: {
 		Unacknowledged: Returned,
 		Acknowledged:   Returned,
+		Shelved:        Shelved,
 	},
 	StepWithdrawn: {
 		Unacknowledged: Withdrawn,
 		Acknowledged:   Withdrawn,
 		Returned:       Withdrawn,
+		Shelved:        Withdrawn,
 		Closed:         Withdrawn,
 	},
 	StepAcknowledged: {
@@ -42,11 +47,13 @@ var after = map[StepKind]map[Condition]Condition{
 		Unacknowledged: Closed,
 		Acknowledged:   Closed,
 		Returned:       Closed,
+		Shelved:        Closed,
 	},
 	StepMarked: {
 		Unacknowledged: Unacknowledged,
 		Acknowledged:   Acknowledged,
 		Returned:       Returned,
+		Shelved:        Shelved,
 		Closed:         Closed,
 		Withdrawn:      Withdrawn,
 	},
@@ -54,8 +61,17 @@ var after = map[StepKind]map[Condition]Condition{
 		Unacknowledged: Unacknowledged,
 		Acknowledged:   Acknowledged,
 		Returned:       Returned,
+		Shelved:        Shelved,
 		Closed:         Closed,
 		Withdrawn:      Withdrawn,
+	},
+	StepShelved: {
+		Unacknowledged: Shelved,
+		Acknowledged:   Shelved,
+		Shelved:        Shelved, // for longer, or less long
+	},
+	StepUnshelved: {
+		Shelved: Unacknowledged, // or returned: see offShelf
 	},
 }
 
@@ -71,6 +87,9 @@ func (r *Record) Take(s Step) ([]Notice, error) {
 	if !ok {
 		return nil, fmt.Errorf("life: alert %s is %s and can't be %s: %w", r.ID, r.Condition, s.Kind, ErrNotAllowed)
 	}
+	if s.Kind == StepUnshelved {
+		next = r.offShelf()
+	}
 	notices := []Notice{r.take(s, next)}
 	if done := r.closesAfter(s.Kind); done {
 		notices = append(notices, r.take(Step{Kind: StepClosed, At: s.At, Why: ReturnedAndAcknowledged}, Closed))
@@ -84,24 +103,35 @@ func (r *Record) Allows(k StepKind) bool {
 	return ok
 }
 
+// offShelf is the condition of an alert that comes off the shelf.
+func (r *Record) offShelf() Condition {
+	if r.Left() {
+		return Returned
+	}
+	return Unacknowledged
+}
+
 // closesAfter reports whether the alert is now both returned and
 // acknowledged.
 func (r *Record) closesAfter(k StepKind) bool {
-	if r.Condition != Returned || (k != StepReturned && k != StepAcknowledged) {
+	if r.Condition != Returned || (k != StepReturned && k != StepAcknowledged && k != StepUnshelved) {
 		return false
 	}
-	for _, s := range r.Steps {
-		if s.Kind == StepAcknowledged {
-			return true
-		}
-	}
-	return false
+	return r.Acknowledged()
 }
 
 func (r *Record) take(s Step, next Condition) Notice {
 	r.Condition = next
-	if s.Kind == StepMarked {
+	switch {
+	case s.Kind == StepMarked:
 		r.Mark = s.Mark
+	case s.Kind == StepShelved && s.Until != nil:
+		until := s.Until.UTC()
+		s.Until = &until
+		r.Shelf = &Shelf{Until: until, By: s.By, Why: s.Why}
+	}
+	if next != Shelved {
+		r.Shelf = nil
 	}
 	s.Number = len(r.Steps) + 1
 	s.At = s.At.UTC()
@@ -112,11 +142,41 @@ func (r *Record) take(s Step, next Condition) Notice {
 	return n
 }
 
+// Reminder returns what outlets are told when nobody has acknowledged the
+// alert for the n-th interval. It is no step of the record, whose state stays
+// as it is; its key is its own.
+func (r *Record) Reminder(n int64, at time.Time, to string) Notice {
+	s := Step{Number: len(r.Steps), Kind: StepReminder, At: at.UTC(), Condition: r.Condition}
+	notice := Notice{Key: fmt.Sprintf("%s.%d.r%d", r.ID, r.unheeded(), n), Step: s, Record: *r, To: to}
+	notice.Record.Steps = brief(r.Steps)
+	return notice
+}
+
+// Unheeded returns since when the alert has signalled without anybody
+// acknowledging it: it opened then, or came back from the shelf. ok is false if
+// it does not.
+func (r *Record) Unheeded() (since time.Time, ok bool) {
+	if r.Condition != Unacknowledged || len(r.Steps) == 0 {
+		return since, false
+	}
+	return r.Steps[r.unheeded()-1].At, true
+}
+
+// unheeded is the number of the step since which the alert waits.
+func (r *Record) unheeded() int {
+	for i := len(r.Steps) - 1; i > 0; i-- {
+		if r.Steps[i].Kind == StepUnshelved {
+			return i + 1
+		}
+	}
+	return 1
+}
+
 // brief copies the steps without the evidence of all but the last: each of
 // them was a notice of its own.
 func brief(steps []Step) []Step {
 	short := slices.Clone(steps)
-	for i := range short[:len(short)-1] {
+	for i := range short[:max(len(short)-1, 0)] {
 		short[i].Evidence = nil
 	}
 	return short

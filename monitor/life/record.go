@@ -5,8 +5,13 @@
 // when enough looks in a row were quiet, is acknowledged by a person, and is
 // closed once it has returned and is acknowledged. Data that arrive late can
 // open an alert after the fact, correct its evidence, or withdraw it. The
-// terms unacknowledged, acknowledged and returned are those of IEC 62682 and
-// ISA-18.2.
+// terms unacknowledged, acknowledged, returned and shelved are those of
+// IEC 62682 and ISA-18.2.
+//
+// A person may shelve an alert until a stated time: it goes on being evaluated
+// and recorded, but people are not told. It comes off the shelf by itself when
+// the time is over, as a step at that time: unacknowledged if it still signals,
+// whatever was acknowledged before, and returned if it does not.
 //
 // A record holds no wall time, host, partition or batch: the same stream of
 // inputs leaves the same records to the byte. A signal is a statistical
@@ -23,6 +28,7 @@ const (
 	Unacknowledged Condition = "unacknowledged" // signalling, nobody has acknowledged it
 	Acknowledged   Condition = "acknowledged"   // signalling, acknowledged
 	Returned       Condition = "returned"       // signals no more, not yet acknowledged
+	Shelved        Condition = "shelved"        // put aside by a person until a stated time
 	Closed         Condition = "closed"         // returned and acknowledged, or closed by hand
 	Withdrawn      Condition = "withdrawn"      // the data were corrected: there was no signal
 )
@@ -50,7 +56,22 @@ const (
 	StepClosed       StepKind = "closed"
 	StepNote         StepKind = "note"
 	StepMarked       StepKind = "marked"
+	StepShelved      StepKind = "shelved"
+	StepUnshelved    StepKind = "unshelved"
 )
+
+// Kinds that are no steps of a record: what outlets are told besides.
+const (
+	StepReminder StepKind = "reminder" // nobody has acknowledged it yet
+	StepTest     StepKind = "test"     // a trial of the way out
+)
+
+// StepKinds are all kinds of which an outlet may be told, in the order of an
+// alert's life.
+var StepKinds = []StepKind{
+	StepOpened, StepWorsened, StepCorrected, StepReminder, StepAcknowledged, StepShelved, StepUnshelved,
+	StepReturned, StepWithdrawn, StepClosed, StepNote, StepMarked,
+}
 
 // Mark is what a person says an alert turned out to be.
 type Mark string
@@ -79,6 +100,8 @@ type Record struct {
 	Condition Condition `json:"condition"`
 	// Mark is what people say it turned out to be.
 	Mark Mark `json:"mark,omitempty"`
+	// Shelf says until when it is shelved, nil unless it is.
+	Shelf *Shelf `json:"shelf,omitempty"`
 	// Number counts the alerts of this series and direction, from 1.
 	Number int `json:"number"`
 	// Opened is the due time of the opening look. Late says that data which
@@ -100,6 +123,13 @@ type Record struct {
 	MoreIDs int      `json:"more_ids,omitempty"`
 	Steps   []Step   `json:"steps"`
 	Caution string   `json:"caution"`
+}
+
+// Shelf says who put an alert aside, until when, and why.
+type Shelf struct {
+	Until time.Time `json:"until"`
+	By    string    `json:"by"`
+	Why   string    `json:"why"`
 }
 
 // Evidence is one look that signals: what was seen, what would be usual, and
@@ -231,6 +261,8 @@ type Step struct {
 	Why    string    `json:"why,omitempty"`
 	// Mark is the mark that was set; "" for one taken back.
 	Mark Mark `json:"mark,omitempty"`
+	// Until is the time up to which it was shelved.
+	Until *time.Time `json:"until,omitempty"`
 	// Evidence of the look that made the step, where there is one.
 	Evidence *Evidence `json:"evidence,omitempty"`
 	// Condition after the step.
@@ -244,6 +276,41 @@ type Notice struct {
 	Key    string `json:"key"`
 	Step   Step   `json:"step"`
 	Record Record `json:"record"`
+	// To names the one outlet that a reminder is meant for; "" for all.
+	To string `json:"to,omitempty"`
+	// History says that the step was taken in history time: nobody could have
+	// acted on it.
+	History bool `json:"history,omitempty"`
+}
+
+// Quiet reports whether people need not be told: it happened to an alert on
+// the shelf.
+func (n *Notice) Quiet() bool {
+	return n.Step.Condition == Shelved && n.Step.Kind != StepShelved
+}
+
+// Acknowledged reports whether somebody has acknowledged the alert since it
+// last began, or came back from the shelf, signalling.
+func (r *Record) Acknowledged() bool {
+	for i := len(r.Steps) - 1; i >= 0; i-- {
+		switch s := &r.Steps[i]; {
+		case s.Kind == StepAcknowledged:
+			return true
+		case s.Kind == StepUnshelved && s.Condition == Unacknowledged:
+			return false
+		}
+	}
+	return false
+}
+
+// Left reports whether the alert has stopped signalling, on the shelf too.
+func (r *Record) Left() bool {
+	for i := len(r.Steps) - 1; i >= 0; i-- {
+		if r.Steps[i].Kind == StepReturned {
+			return true
+		}
+	}
+	return r.Done() || r.Condition == Returned
 }
 
 // Done reports whether nothing can happen to the alert any more but what the

@@ -1,0 +1,64 @@
+package main
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"time"
+
+	"github.com/spf13/cobra"
+
+	"tailbell/config"
+	"tailbell/ingest/wire"
+	"tailbell/monitor"
+	"tailbell/monitor/life"
+)
+
+func newShelveCommand() *cobra.Command {
+	a := acting{act: monitor.Act{Kind: monitor.Shelve}}
+	var until, span string
+	c := newActing(&a, "Put an alert aside until a stated time",
+		`Puts the alert aside until a stated time: it goes on being watched and recorded, but
+outlets for people are not told. It comes back by itself when the time is over: if it
+still signals, everybody is told again, and somebody has to acknowledge it. Shelved
+again, it has the new time. An alert that rings anew after this one has returned is
+another one, and is told.`)
+	c.Flags().StringVar(&until, "until", "", "the `TIME` at which it comes back, RFC 3339: 2026-03-09T08:00:00+01:00")
+	c.Flags().StringVar(&span, "for", "", "or how `LONG` from now: 12h, 7d")
+	c.MarkFlagsMutuallyExclusive("until", "for")
+	c.PreRunE = func(*cobra.Command, []string) (err error) {
+		switch {
+		case until != "":
+			if a.act.Until, err = wire.ParseTime(until); err != nil {
+				return &usageError{fmt.Errorf("--until: %w", err)}
+			}
+		case span != "":
+			if a.span, err = config.ParseDuration(span); err != nil || a.span <= 0 {
+				return &usageError{fmt.Errorf("--for %q: write a whole number and s, m, h, d (24 hours) or w (7 days)", span)}
+			}
+		default:
+			return &usageError{errors.New("--until is missing: say when it comes back, by --until TIME or --for 7d")}
+		}
+		return nil
+	}
+	return c
+}
+
+// shelveUntil completes an act that says for how long, from the clock of the
+// alert's partition: in history time that is not the machine's.
+func (a *acting) shelveUntil(ctx context.Context, setup *config.Setup, r *life.Record) error {
+	if a.span == 0 {
+		return nil
+	}
+	var s statusReply
+	if err := ask(ctx, setup, verbStatus, nil, &s); err != nil {
+		return err
+	}
+	now := time.Now()
+	p := config.PartitionOf(r.Series, setup.KeyParts, setup.Partitions)
+	if p < len(s.Partitions) && s.Partitions[p].History && s.Partitions[p].Clock != nil {
+		now = *s.Partitions[p].Clock
+	}
+	a.act.Until = monitor.InstantOf(now.Add(a.span))
+	return nil
+}
