@@ -119,6 +119,7 @@ Silence is no proof of safety. Local policy decides.`,
 	root.AddCommand(
 		newAlertCommand(), newBaselineCommand(), newClockCommand(), newConfigCommand(), newDemoCommand(), newExactCommand(), newFeedCommand(),
 		newOutletCommand(), newRefusedCommand(), newReplayCommand(), newRunCommand(), newStatusCommand(), newStoreCommand(), newStreamCommand(),
+		newUserCommand(),
 	)
 	checkArguments(root)
 	return root
