@@ -62,7 +62,7 @@ func (p *Plan) Observe(messages []monitor.Message, known []Episode) (*Rehearsal,
 		}
 	}
 	x.gather(messages, byName)
-	x.settle(byName)
+	x.settle()
 	return &Rehearsal{plan: p, grounds: x, real: x}, nil
 }
 
@@ -174,56 +174,65 @@ func (x *real) slotOf(cal *monitor.Calendar, n int64, sum monitor.SlotSum) slot 
 func (x *real) gather(messages []monitor.Message, byName map[string]*past) {
 	together := slices.ContainsFunc(x.in.Baselines, func(b config.Baseline) bool { return b.Kind == config.Peers }) ||
 		x.in.Allowance != nil && x.in.Allowance.PerIndicator
-	touched := map[string][]string{} // by site and id
-	key := func(o *monitor.Observation) string {
-		site, _, _ := strings.Cut(o.Series, "/")
-		return site + "\n" + o.ID
-	}
-	each := func(use func(at monitor.Instant, o *monitor.Observation)) {
-		for i := range messages {
-			m := &messages[i]
-			for j := range m.Items {
-				it := &m.Items[j]
-				if it.Reason != "" || !x.in.Matches(it.Observation.Series) {
-					continue
-				}
-				at := m.Time
-				if !m.HasTime {
-					at = it.Observation.HistoryTime()
-				}
-				use(at, &it.Observation)
-			}
-		}
-	}
-	each(func(_ monitor.Instant, o *monitor.Observation) {
-		if o.ID != "" && !slices.Contains(touched[key(o)], o.Series) {
-			touched[key(o)] = append(touched[key(o)], o.Series)
+	touched := map[idOf][]string{}
+	x.each(messages, func(_ monitor.Instant, o *monitor.Observation) {
+		if key := keyOf(o); o.ID != "" && !slices.Contains(touched[key], o.Series) {
+			touched[key] = append(touched[key], o.Series)
 		}
 	})
-	each(func(at monitor.Instant, o *monitor.Observation) {
+	var all []arrival
+	x.each(messages, func(at monitor.Instant, o *monitor.Observation) {
+		if together {
+			all = append(all, arrival{at: at, o: *o})
+			return
+		}
 		names := []string{o.Series}
 		if o.ID != "" {
-			names = touched[key(o)]
+			names = touched[keyOf(o)]
 		}
 		for _, name := range names {
-			if p := byName[name]; p != nil && !together {
+			if p := byName[name]; p != nil {
 				p.arrivals = append(p.arrivals, arrival{at: at, o: *o})
 			}
-		}
-		if together && len(x.all) > 0 {
-			x.all[0].arrivals = append(x.all[0].arrivals, arrival{at: at, o: *o})
 		}
 	})
 	if together {
 		for _, p := range x.all {
-			p.arrivals = x.all[0].arrivals
+			p.arrivals = all
+		}
+	}
+}
+
+// idOf is an id under its site.
+type idOf struct{ site, id string }
+
+func keyOf(o *monitor.Observation) idOf {
+	site, _, _ := strings.Cut(o.Series, "/")
+	return idOf{site, o.ID}
+}
+
+// each calls use for the observations of the indicator, with the moment at
+// which each became known.
+func (x *real) each(messages []monitor.Message, use func(at monitor.Instant, o *monitor.Observation)) {
+	for i := range messages {
+		m := &messages[i]
+		for j := range m.Items {
+			it := &m.Items[j]
+			if it.Reason != "" || !x.in.Matches(it.Observation.Series) {
+				continue
+			}
+			at := m.Time
+			if !m.HasTime {
+				at = it.Observation.HistoryTime()
+			}
+			use(at, &it.Observation)
 		}
 	}
 }
 
 // settle finds the usual rate of each series, when its slots were known, and
 // where an excess has room.
-func (x *real) settle(byName map[string]*past) {
+func (x *real) settle() {
 	slices.SortFunc(x.all, func(a, b *past) int { return cmp.Compare(a.name, b.name) })
 	for _, p := range x.all {
 		base := x.in.BaselineFor(p.name)
