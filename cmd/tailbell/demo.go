@@ -47,7 +47,7 @@ kill -9, the same command goes on where it was.`,
 	c.Flags().StringVar(&o.folder, "folder", "", "keep stream and store in this `FOLDER`; else they are removed at the end")
 	c.Flags().BoolVar(&o.full, "full", false, "print every step of every alert, not only openings")
 	c.Flags().BoolVar(&o.asJSON, "json", false, "write alert steps as JSON records, one a line, and the account to standard error")
-	c.Flags().StringVar(&o.export, "export", "", "also write the history as newline-delimited JSON to this `FILE`, and the set-up beside it")
+	c.Flags().StringVar(&o.export, "export", "", "also write the history as newline-delimited JSON to this `FILE`, and beside it the set-up (.toml) and the planted excesses (.known.csv)")
 	c.Flags().IntVar(&o.maxBatch, "max-batch", 0, "at most so many messages in a commit")
 	return c
 }
@@ -99,6 +99,9 @@ func demo(ctx context.Context, o demoOptions, stdout, stderr io.Writer) (err err
 // exportScenario writes the history and its set-up for a replay.
 func exportScenario(s *rehearse.Scenario, path string) (err error) {
 	if err := os.WriteFile(path+".toml", s.Setup, 0o600); err != nil {
+		return err
+	}
+	if err := os.WriteFile(path+".known.csv", []byte(s.Known()), 0o600); err != nil {
 		return err
 	}
 	f, err := os.OpenFile(path, os.O_CREATE|os.O_TRUNC|os.O_WRONLY, 0o600)

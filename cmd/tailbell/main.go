@@ -118,7 +118,7 @@ Silence is no proof of safety. Local policy decides.`,
 	root.SetHelpCommand(newHelpCommand())
 	root.AddCommand(
 		newAlertCommand(), newBaselineCommand(), newClockCommand(), newConfigCommand(), newDemoCommand(), newExactCommand(), newFeedCommand(),
-		newOutletCommand(), newRefusedCommand(), newReplayCommand(), newRunCommand(), newStatusCommand(), newStoreCommand(), newStreamCommand(),
+		newOutletCommand(), newRefusedCommand(), newRehearseCommand(), newReplayCommand(), newRunCommand(), newStatusCommand(), newStoreCommand(), newStreamCommand(),
 		newUserCommand(),
 	)
 	checkArguments(root)

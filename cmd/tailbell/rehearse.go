@@ -10,33 +10,33 @@ import (
 	"math"
 	"os"
 	"slices"
+	"strconv"
 
 	"github.com/spf13/cobra"
 
 	"tailbell/config"
 	"tailbell/ingest/history"
 	"tailbell/monitor"
-	"tailbell/monitor/rehearse/trial"
+	"tailbell/monitor/rehearse/plant"
 )
 
 type rehearseOptions struct {
-	config, against, indicator      string
-	ratios, frequencies             []float64
-	length, shape                   string
-	histories, redraws              int
-	seed                            uint64
-	years, rate                     float64
-	exposure, begin, known, figure  string
-	drawn, asJSON                   bool
-	peers                           int
-	files                           historyFlags
-	setups                          []*config.Setup
-	in                              *config.Indicator
-	plan                            *trial.Plan
-	episodes                        []trial.Episode
-	faults                          int
-	digest                          string
-	givenForInvented                bool
+	config, against, indicator     string
+	ratios, frequencies            []float64
+	length, shape                  string
+	histories, redraws             int
+	seed                           uint64
+	years, rate                    float64
+	exposure, begin, known, figure string
+	drawn, asJSON                  bool
+	peers                          int
+	files                          historyFlags
+	setups                         []*config.Setup
+	in                             *config.Indicator
+	plan                           *plant.Plan
+	faults                         int
+	digest                         string
+	givenForInvented               bool
 }
 
 // newRehearseCommand returns "tailbell rehearse": what would be found, how
@@ -172,7 +172,7 @@ func (o *rehearseOptions) check(paths []string) error {
 }
 
 func (o *rehearseOptions) makePlan() error {
-	shape, err := trial.ParseShape(o.shape)
+	shape, err := plant.ParseShape(o.shape)
 	if err != nil {
 		return &usageError{fmt.Errorf("--shape: %w", err)}
 	}
@@ -181,11 +181,11 @@ func (o *rehearseOptions) makePlan() error {
 		length = max(length, o.in.Windows[i].Slots)
 	}
 	if o.length != "" {
-		if length, err = trial.Slots(o.length, o.in.Every); err != nil {
+		if length, err = plant.Slots(o.length, o.in.Every); err != nil {
 			return &usageError{fmt.Errorf("--length: %w", err)}
 		}
 	}
-	o.plan = &trial.Plan{
+	o.plan = &plant.Plan{
 		Setups: o.setups, Indicator: o.in.Name, Ratios: o.ratios, Length: length, Shape: shape, Histories: o.histories,
 		Seed: o.seed, Level: 1 - o.in.Alpha, Draws: o.redraws, Frequencies: o.frequencies,
 	}
@@ -193,11 +193,11 @@ func (o *rehearseOptions) makePlan() error {
 }
 
 // prepare makes the histories ready.
-func (o *rehearseOptions) prepare(ctx context.Context, paths []string, stdin io.Reader, stderr io.Writer) (*trial.Rehearsal, error) {
+func (o *rehearseOptions) prepare(ctx context.Context, paths []string, stdin io.Reader, stderr io.Writer) (*plant.Rehearsal, error) {
 	if len(paths) > 0 {
 		return o.observe(ctx, paths, stdin, stderr)
 	}
-	how := trial.Invention{Series: o.files.series, Years: o.years, Rate: o.rate / o.in.Per, Drawn: o.drawn, Peers: o.peers}
+	how := plant.Invention{Series: o.files.series, Years: o.years, Rate: o.rate / o.in.Per, Drawn: o.drawn, Peers: o.peers}
 	if o.in.Measure == config.Proportion {
 		how.Rate = o.rate
 	}
@@ -213,7 +213,7 @@ func (o *rehearseOptions) prepare(ctx context.Context, paths []string, stdin io.
 	return o.plan.Invent(how)
 }
 
-func (o *rehearseOptions) observe(ctx context.Context, paths []string, stdin io.Reader, stderr io.Writer) (*trial.Rehearsal, error) {
+func (o *rehearseOptions) observe(ctx context.Context, paths []string, stdin io.Reader, stderr io.Writer) (*plant.Rehearsal, error) {
 	episodes, err := readEpisodes(o.known, o.in)
 	if err != nil {
 		return nil, err
@@ -227,7 +227,7 @@ func (o *rehearseOptions) observe(ctx context.Context, paths []string, stdin io.
 }
 
 // readEpisodes reads a file of known episodes; nil without one.
-func readEpisodes(path string, in *config.Indicator) (_ []trial.Episode, err error) {
+func readEpisodes(path string, in *config.Indicator) (_ []plant.Episode, err error) {
 	if path == "" {
 		return nil, nil
 	}
@@ -236,12 +236,12 @@ func readEpisodes(path string, in *config.Indicator) (_ []trial.Episode, err err
 		return nil, err
 	}
 	defer func() { err = errors.Join(err, f.Close()) }()
-	episodes, err := trial.ReadKnown(f, in.Zone)
+	episodes, err := plant.ReadKnown(f, in.Zone)
 	if err != nil {
 		return nil, fmt.Errorf("--known %s: %w", path, err)
 	}
 	// Those of series that the indicator doesn't monitor are no matter of its.
-	kept := []trial.Episode{}
+	kept := []plant.Episode{}
 	for _, e := range episodes {
 		if in.Matches(e.Series.String()) || !isName(e.Series.String()) {
 			kept = append(kept, e)
@@ -270,9 +270,12 @@ func messagesOf(h *history.History, until monitor.Instant) []monitor.Message {
 // each row and the time at which it became known, in order, one a line.
 func digestOf(h *history.History) string {
 	sum := sha256.New()
+	var line []byte
 	for i := range h.Entries {
 		e := &h.Entries[i]
-		fmt.Fprintf(sum, "%d %s\n", e.Time, e.JSON)
+		line = append(strconv.AppendInt(line[:0], int64(e.Time), 10), ' ')
+		line = append(append(line, e.JSON...), '\n')
+		sum.Write(line)
 	}
 	return hex.EncodeToString(sum.Sum(nil))
 }

@@ -15,12 +15,12 @@ import (
 	"gonum.org/v1/plot/vg/vgimg"
 	"gonum.org/v1/plot/vg/vgsvg"
 
-	"tailbell/monitor/rehearse/trial"
+	"tailbell/monitor/rehearse/plant"
 )
 
 // drawRehearsal draws the shares found by ratio, with their bounds, above the
 // delays with their quartiles.
-func drawRehearsal(path string, r *trial.Report) error {
+func drawRehearsal(path string, r *plant.Report) error {
 	upper := newPlot(fmt.Sprintf("%s: excesses of shape %s over %s found in time, with %s %% bounds", r.Title, r.Shape, r.Length, trim(100*r.Level)))
 	upper.Y.Label.Text, upper.Y.Min, upper.Y.Max = "share found", 0, 1.3
 	upper.Y.Tick.Marker = plot.ConstantTicks{{Value: 0, Label: "0"}, {Value: 0.25, Label: "0.25"}, {Value: 0.5, Label: "0.5"}, {Value: 0.75, Label: "0.75"}, {Value: 1, Label: "1"}}
@@ -62,10 +62,10 @@ var seriesStyles = []draw.GlyphStyle{
 // rehearsalLine is what is found by alerts, or by one window, of one set-up.
 type rehearsalLine struct {
 	name  string
-	found []trial.Found
+	found []plant.Found
 }
 
-func ratiosOf(r *trial.Report) []float64 {
+func ratiosOf(r *plant.Report) []float64 {
 	var list []float64
 	for _, f := range r.Found {
 		if f.Setup == 0 && f.Window == "" {
@@ -75,7 +75,7 @@ func ratiosOf(r *trial.Report) []float64 {
 	return list
 }
 
-func rehearsalLines(r *trial.Report) []*rehearsalLine {
+func rehearsalLines(r *plant.Report) []*rehearsalLine {
 	var list []*rehearsalLine
 	byName := map[string]*rehearsalLine{}
 	for _, f := range r.Found {

@@ -6,11 +6,11 @@ import (
 
 	"tailbell/alert/words"
 	"tailbell/config"
-	"tailbell/monitor/rehearse/trial"
+	"tailbell/monitor/rehearse/plant"
 )
 
 // printRehearsal prints a rehearsal for people.
-func printRehearsal(w io.Writer, in *config.Indicator, r *trial.Report) error {
+func printRehearsal(w io.Writer, in *config.Indicator, r *plant.Report) error {
 	p := &rehearsalPage{baselinePage{width: widthOf(w)}, r}
 	p.line("REHEARSAL of %s (%s): %s histories, an excess of shape %s over %s in each, seed %d",
 		in.Title, in.Name, words.Whole(int64(r.Histories)), r.Shape, r.Length, r.Seed)
@@ -34,7 +34,7 @@ func printRehearsal(w io.Writer, in *config.Indicator, r *trial.Report) error {
 
 type rehearsalPage struct {
 	baselinePage
-	report *trial.Report
+	report *plant.Report
 }
 
 // letter tells two set-ups apart.
@@ -47,7 +47,7 @@ func (p *rehearsalPage) letter(i int) string {
 
 func (p *rehearsalPage) level() string { return trim(100*p.report.Level) + " %" }
 
-func shareText(s trial.Share) string {
+func shareText(s plant.Share) string {
 	return fmt.Sprintf("%.3f (%.3f to %.3f)", s.Share, s.Lower, s.Upper)
 }
 

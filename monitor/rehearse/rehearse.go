@@ -26,6 +26,7 @@ import (
 	"bytes"
 	"fmt"
 	"io"
+	"strings"
 	"time"
 )
 
@@ -93,6 +94,17 @@ type Scenario struct {
 	Ledger   Ledger
 	Planted  []Excess
 	Mistakes []Mistake
+}
+
+// Known returns the planted excesses as a file of known episodes: CSV with the
+// columns series, start, end, direction and note.
+func (s *Scenario) Known() string {
+	var b strings.Builder
+	b.WriteString("series,start,end,direction,note\n")
+	for _, x := range s.Planted {
+		fmt.Fprintf(&b, "%s,%s,%s,%s,planted at %g times the usual rate\n", x.Series, x.From.Format(time.RFC3339), x.To.Format(time.RFC3339), x.Direction, x.Ratio)
+	}
+	return b.String()
 }
 
 // WriteNDJSON writes the messages as newline-delimited JSON: a line for every

@@ -1,4 +1,4 @@
-package trial
+package plant
 
 import (
 	"context"
@@ -78,7 +78,7 @@ func (r *Rehearsal) redraws() resample.Plan {
 }
 
 // report counts.
-func (r *Rehearsal) report(ctx context.Context, runs []trialRun) (*Report, error) {
+func (r *Rehearsal) report(ctx context.Context, runs []outcomes) (*Report, error) {
 	p := r.plan
 	in, err := p.indicator(0)
 	if err != nil {
@@ -126,7 +126,7 @@ func nameOf(setup *config.Setup, in *config.Indicator) SetupName {
 }
 
 // describe says how histories were made.
-func (r *Rehearsal) describe(out *Report, runs []trialRun) {
+func (r *Rehearsal) describe(out *Report, runs []outcomes) {
 	var names []string
 	for i := range runs {
 		names = append(names, runs[i].series)
@@ -158,7 +158,7 @@ func (r *Rehearsal) describe(out *Report, runs []trialRun) {
 }
 
 // found counts what became of the excesses of one ratio under one set-up.
-func (r *Rehearsal) found(ctx context.Context, out *Report, in *config.Indicator, setup, ratio int, runs []trialRun) error {
+func (r *Rehearsal) found(ctx context.Context, out *Report, in *config.Indicator, setup, ratio int, runs []outcomes) error {
 	tail := 0
 	if directionOf(r.plan.Ratios[ratio]) == life.Lower {
 		tail = 1
@@ -220,7 +220,7 @@ func (f *Found) take(o, without *outcome, window int) {
 	}
 }
 
-func (r *Rehearsal) falseAlerts(ctx context.Context, out *Report, setup int, runs []trialRun) error {
+func (r *Rehearsal) falseAlerts(ctx context.Context, out *Report, setup int, runs []outcomes) error {
 	f := False{Setup: setup, Told: true}
 	if r.real != nil {
 		f.Told = r.real.known != nil
@@ -296,7 +296,7 @@ func (r *Rehearsal) predict(out *Report) {
 }
 
 // compare pairs two set-ups.
-func (r *Rehearsal) compare(ctx context.Context, out *Report, runs []trialRun) error {
+func (r *Rehearsal) compare(ctx context.Context, out *Report, runs []outcomes) error {
 	for i, ratio := range r.plan.Ratios {
 		p := Pair{Ratio: ratio, P: 1}
 		var later []float64

@@ -1,4 +1,4 @@
-package trial
+package plant
 
 import (
 	"fmt"

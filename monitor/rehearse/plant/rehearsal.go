@@ -1,4 +1,4 @@
-package trial
+package plant
 
 import (
 	"cmp"
@@ -26,8 +26,8 @@ func (r *Rehearsal) prepare() error {
 	return err
 }
 
-// trialRun is what came of one history, by set-up.
-type trialRun struct {
+// outcomes is what came of one history, by set-up.
+type outcomes struct {
 	series  string
 	alerts  []int64 // false alerts of invented histories
 	years   float64
@@ -47,7 +47,7 @@ func (r *Rehearsal) Run(ctx context.Context) (*Report, error) {
 		}
 		setups[i] = s
 	}
-	runs := make([]trialRun, p.Histories)
+	runs := make([]outcomes, p.Histories)
 	err := each(ctx, p, func(i int) error {
 		t, err := r.one(setups, i)
 		runs[i] = t
@@ -60,12 +60,12 @@ func (r *Rehearsal) Run(ctx context.Context) (*Report, error) {
 }
 
 // one runs one history through every set-up, without an excess and with each.
-func (r *Rehearsal) one(setups []*config.Setup, number int) (trialRun, error) {
+func (r *Rehearsal) one(setups []*config.Setup, number int) (outcomes, error) {
 	g, err := r.grounds.ground(number)
 	if err != nil {
-		return trialRun{}, err
+		return outcomes{}, err
 	}
-	t := trialRun{series: g.series, years: float64(g.until-g.judged) / 1e6 / Year.Seconds()}
+	t := outcomes{series: g.series, years: float64(g.until-g.judged) / 1e6 / Year.Seconds()}
 	in := &setups[0].Indicators[0]
 	for s := range setups {
 		control, err := r.control(setups[s], s, g)

@@ -1,4 +1,4 @@
-// Package trial plants excesses in many histories, runs the engine over each,
+// Package plant plants excesses in many histories, runs the engine over each,
 // and counts what it finds, how late, and what it rings for in vain.
 //
 // # Model
@@ -36,7 +36,7 @@
 // baseline states: what is found in them is the best that can be hoped for.
 // Planted runs are without people: acts of a history are left out of them, so
 // that spans marked real are not left out of baselines taken from the past.
-package trial
+package plant
 
 import (
 	"errors"

@@ -1,4 +1,4 @@
-package trial
+package plant
 
 import (
 	"fmt"
@@ -115,7 +115,8 @@ func (r *run) step(n *life.Notice, series string) {
 				s.to = at
 			}
 		}
-	case life.StepWorsened, life.StepCorrected, life.StepAcknowledged, life.StepNote, life.StepMarked:
+	case life.StepWorsened, life.StepCorrected, life.StepAcknowledged, life.StepNote, life.StepMarked,
+		life.StepShelved, life.StepUnshelved, life.StepReminder, life.StepTest:
 	}
 }
 
