@@ -23,7 +23,7 @@ func (e *Engine) evidence(s *series, d direction, boundary int64, window int) li
 		at = s.tails[d].lit[i].at
 	}
 	t := ix.tally(s, from, boundary)
-	u, ok := ix.usualAt(s, ep, boundary)
+	u, ok := ix.judgedBy(s, ep, window, boundary)
 	if !ok {
 		panic("monitor: evidence of a look without a baseline")
 	}
@@ -34,7 +34,7 @@ func (e *Engine) evidence(s *series, d direction, boundary int64, window int) li
 		Events: t.events, Exposure: t.exposure.decimal(cfg.GrainDigits), Unit: cfg.Unit,
 		EventNoun: cfg.EventNoun, LateEvents: t.late, Provisional: t.provisional,
 		Per: cfg.Per, Alpha: cfg.Alpha, Chosen: true,
-		Test: testName(&u, &o), Limit: cfg.PLimit,
+		Test: testName(&u, &o), Limit: u.limit[d],
 		SetupVersion: ep.version, SetupDigest: ep.digest,
 	}
 	if o.weighted != o.exposure {
@@ -44,6 +44,7 @@ func (e *Engine) evidence(s *series, d direction, boundary int64, window int) li
 	fillRate(&ev, &u, &o)
 	ev.RatioKind, ev.Ratio, ev.RatioLower, ev.RatioUpper = ratioTo(&ev, &u, u.ref, &o)
 	ev.Baseline = ix.baselineOf(s, &u, &ev, &o)
+	ev.Allowance = e.allowanceOf(s, cfg, boundary)
 	ev.Recompute = recompute(&ev, &u, d)
 	return ev
 }
@@ -55,11 +56,11 @@ func fillTest(ev *life.Evidence, u *usual, d direction, o *opportunity) {
 	ev.Expected = expected(u, o)
 	if d == upper {
 		ev.P, ev.Log10P = p.Upper(ev.Events), p.LogUpper(ev.Events)/math.Ln10
-		ev.Critical, ev.AttainedSize, _ = p.CriticalUpper(u.cfg.PLimit)
+		ev.Critical, ev.AttainedSize, _ = p.CriticalUpper(u.limit[upper])
 		return
 	}
 	ev.P, ev.Log10P = p.Lower(ev.Events), p.LogLower(ev.Events)/math.Ln10
-	ev.Critical, ev.AttainedSize, _ = p.CriticalLower(u.cfg.PLimit)
+	ev.Critical, ev.AttainedSize, _ = p.CriticalLower(u.limit[lower])
 }
 
 // expected is the number of events that the baseline itself would bring.
@@ -236,7 +237,7 @@ func recompute(ev *life.Evidence, u *usual, d direction) string {
 		add("tail", "lower")
 	}
 	add("alpha", number(u.cfg.Alpha))
-	add("limit", number(u.cfg.PLimit))
+	add("limit", number(u.limit[d]))
 	return "tailbell exact " + strings.Join(args, " ")
 }
 

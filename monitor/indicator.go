@@ -34,6 +34,8 @@ type indicator struct {
 	epochs []epoch
 	// digests are those of the baselines that are estimated.
 	digests map[*config.Baseline]int64
+	// edges are those of known baselines and stated references.
+	edges map[edgeKey]*edges
 }
 
 // epoch is one version of an indicator's stanza.

@@ -153,34 +153,39 @@ func (ix *indicator) look(s *series, ep *epoch, window int, boundary int64, at I
 	if l.status != made || l.exposure.IsZero() {
 		return l
 	}
-	u, ok := ix.usualAt(s, ep, boundary)
+	u, ok := ix.judgedBy(s, ep, window, boundary)
 	if !ok {
 		l.status = unbased
 		return l
 	}
 	o := ix.opportunity(s, &u, &l.tally, from, boundary, at)
-	l.test(&u, &o)
+	ix.test(s, &l, &u, &o)
 	return l
 }
 
 // test fills in which tails signal. Where nothing can have been reported yet
 // nothing can be tested.
-func (l *look) test(u *usual, o *opportunity) {
+func (ix *indicator) test(s *series, l *look, u *usual, o *opportunity) {
 	if o.weighted == 0 {
 		return
 	}
-	if u.cfg.Upper && l.events > 0 && !farBelow(u, o, l.events) {
-		p := newLaw(u, upper, o)
-		if exact.AtMost(p.Upper(l.events), u.cfg.PLimit) {
-			l.lit[upper] = true
-			l.log10p[upper] = p.LogUpper(l.events) / math.Ln10
+	held := &s.windows[l.window].edges
+	if u.cfg.Upper && u.limit[upper] > 0 && l.events > 0 && !farBelow(u, o, l.events) {
+		lit, sure := ix.edgesOf(&held[upper], u, upper, o).signals(o, l.events)
+		if lit || !sure {
+			p := newLaw(u, upper, o)
+			if l.lit[upper] = sure || exact.AtMost(p.Upper(l.events), u.limit[upper]); l.lit[upper] {
+				l.log10p[upper] = p.LogUpper(l.events) / math.Ln10
+			}
 		}
 	}
-	if u.cfg.Lower && !farAbove(u, o, l.events) {
-		p := newLaw(u, lower, o)
-		if exact.AtMost(p.Lower(l.events), u.cfg.PLimit) {
-			l.lit[lower] = true
-			l.log10p[lower] = p.LogLower(l.events) / math.Ln10
+	if u.cfg.Lower && u.limit[lower] > 0 && !farAbove(u, o, l.events) {
+		lit, sure := ix.edgesOf(&held[lower], u, lower, o).signals(o, l.events)
+		if lit || !sure {
+			p := newLaw(u, lower, o)
+			if l.lit[lower] = sure || exact.AtMost(p.Lower(l.events), u.limit[lower]); l.lit[lower] {
+				l.log10p[lower] = p.LogLower(l.events) / math.Ln10
+			}
 		}
 	}
 }

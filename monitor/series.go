@@ -55,6 +55,8 @@ type windowState struct {
 	// withheld says why the latest look was not made, since which boundary.
 	withheld      status
 	withheldSince int64
+	// edges are those that the latest look was compared with.
+	edges [2]*edges
 }
 
 // tail is one direction of a series.

@@ -100,7 +100,7 @@ func (e *Engine) install(next *config.Setup, version int, from map[string]int64)
 				ix.start(e.clock)
 			}
 		}
-		ix.index, ix.cfg = i, cfg
+		ix.index, ix.cfg, ix.edges = i, cfg, nil
 		if n := len(ix.epochs); n > 0 && ix.epochs[n-1].from >= boundary {
 			ix.epochs = ix.epochs[:n-1]
 		}

@@ -11,6 +11,9 @@ type usual struct {
 	base *config.Baseline
 	// ref is the reference of all kinds but Known.
 	ref *reference
+	// limit is the p at or under which the look signals, by direction; 0 where
+	// no count does.
+	limit [2]float64
 }
 
 // reference is so many events in so much exposure, from which a usual rate is
@@ -37,8 +40,16 @@ type reference struct {
 	between float64
 }
 
-// usualAt returns what looks at the boundary are judged by, and false if there
-// is no baseline for it, or one that is estimated from too few events.
+// judgedBy returns what a look of the window at the boundary is judged by, and
+// false if there is no baseline for it.
+func (ix *indicator) judgedBy(s *series, ep *epoch, window int, boundary int64) (usual, bool) {
+	u, ok := ix.usualAt(s, ep, boundary)
+	u.limit = s.limitsAt(ep.cfg, window, boundary)
+	return u, ok
+}
+
+// usualAt returns the baseline of looks at the boundary, without limits, and
+// false if there is none for it, or one that is estimated from too few events.
 func (ix *indicator) usualAt(s *series, ep *epoch, boundary int64) (usual, bool) {
 	u := usual{cfg: ep.cfg, base: ix.baseline(s, ep.cfg, boundary)}
 	if u.base == nil {

@@ -119,15 +119,16 @@ func (ix *indicator) view(s *series, ep *epoch, l *look) View {
 		Expected: math.NaN(),
 	}
 	v.Upper.Watched, v.Lower.Watched = cfg.Upper, cfg.Lower
-	for _, tail := range []*ViewTail{&v.Upper, &v.Lower} {
+	limit := s.limitsAt(cfg, l.window, l.boundary)
+	for d, tail := range []*ViewTail{&v.Upper, &v.Lower} {
 		if tail.Watched {
-			tail.P, tail.Log10P, tail.Limit = math.NaN(), math.NaN(), cfg.PLimit
+			tail.P, tail.Log10P, tail.Limit = math.NaN(), math.NaN(), limit[d]
 		}
 	}
 	if l.status != made {
 		return v
 	}
-	u, based := ix.usualAt(s, ep, l.boundary)
+	u, based := ix.judgedBy(s, ep, l.window, l.boundary)
 	o := opportunity{}
 	if based && !l.exposure.IsZero() {
 		o = ix.opportunity(s, &u, &l.tally, from, l.boundary, l.at)
