@@ -155,7 +155,6 @@ func (b Book) Revoke(name string, now time.Time) error {
 			return nil, fmt.Errorf("%w: nobody called %q may sign in", ErrNoUser, name)
 		}
 		users[i].Revoked = now.UTC().Truncate(time.Second)
-		users[i].digest = digest{}
 		return users, nil
 	})
 }

@@ -72,7 +72,7 @@ func TestPlainRequestsGetNothingOverTLS(t *testing.T) {
 		t.Errorf("%+v", a)
 	}
 	// Old versions of TLS are refused.
-	conn, err := (&tls.Dialer{Config: &tls.Config{InsecureSkipVerify: true, MaxVersion: tls.VersionTLS11}}).DialContext(t.Context(), "tcp", s.server.Address())
+	conn, err := (&tls.Dialer{Config: &tls.Config{InsecureSkipVerify: true, MinVersion: tls.VersionTLS10, MaxVersion: tls.VersionTLS11}}).DialContext(t.Context(), "tcp", s.server.Address())
 	if err == nil {
 		t.Error("TLS 1.1 was accepted", conn.Close())
 	}

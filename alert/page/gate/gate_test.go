@@ -1,7 +1,6 @@
 package gate
 
 import (
-	"context"
 	"fmt"
 	"net/http"
 	"os"
@@ -122,6 +121,9 @@ func TestBrowsersSignInAndOut(t *testing.T) {
 	}
 	if a := s.signIn(b, "wrong"); a.status != 401 || !strings.Contains(a.body, "lets nobody in") || a.header.Get("Set-Cookie") != "" {
 		t.Errorf("%+v", a)
+	}
+	if a := s.ask(b, "POST", SignInPath+"?token="+actor, "to=%2F", "Content-Type", formType); a.status != 401 {
+		t.Errorf("a token in the address lets in: %+v", a)
 	}
 	a := s.signIn(b, actor)
 	cookie := a.header.Get("Set-Cookie")
@@ -403,46 +405,6 @@ func TestUsersAreReadAgain(t *testing.T) {
 	}
 	if status(actor) != 401 {
 		t.Error("no file lets in")
-	}
-}
-
-func TestStreamsEndWithTheServer(t *testing.T) {
-	p := config.Page{Listen: "127.0.0.1:0"}
-	g, err := New(Options{Name: "quillmere", Page: p, Now: time.Now})
-	if err != nil {
-		t.Fatal(err)
-	}
-	began, ended := make(chan context.Context, 1), make(chan error, 1)
-	server, err := g.Listen(t.Context(), http.HandlerFunc(func(w http.ResponseWriter, r *http.Request) {
-		if err := http.NewResponseController(w).Flush(); err != nil {
-			t.Error(err)
-		}
-		began <- r.Context()
-		<-r.Context().Done()
-		ended <- r.Context().Err()
-	}))
-	if err != nil {
-		t.Fatal(err)
-	}
-	req, err := http.NewRequestWithContext(t.Context(), "GET", "http://"+server.Address()+"/live", nil)
-	if err != nil {
-		t.Fatal(err)
-	}
-	req.Header.Set("Accept", "text/event-stream")
-	resp, err := http.DefaultClient.Do(req)
-	if err != nil {
-		t.Fatal(err)
-	}
-	defer resp.Body.Close() //nolint:errcheck // it ends with the server
-	ctx := <-began
-	if deadline, ok := ctx.Deadline(); !ok || time.Until(deadline) > StreamTime || time.Until(deadline) < StreamTime-time.Minute {
-		t.Errorf("a stream may last until %v", deadline)
-	}
-	if err := server.Close(); err != nil {
-		t.Error(err)
-	}
-	if err := <-ended; err == nil {
-		t.Error("not ended")
 	}
 }
 

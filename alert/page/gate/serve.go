@@ -62,6 +62,13 @@ func (g *Gate) Listen(ctx context.Context, handler http.Handler) (*Server, error
 	if err != nil {
 		return nil, fmt.Errorf("the page at %s: %w: another daemon may hold it; give another address as listen in [page]", p.Listen, err)
 	}
+	s := g.start(ctx, inner, handler, cert)
+	g.o.Log.Info().Str("address", s.address).Bool("tls", cert != nil).Bool("users", p.Users != "").Msg("page")
+	return s, nil
+}
+
+// start serves what comes to a listener.
+func (g *Gate) start(ctx context.Context, inner net.Listener, handler http.Handler, cert *certificate) *Server {
 	ctx = context.WithoutCancel(ctx)
 	streams, end := context.WithCancel(ctx)
 	s := &Server{address: inner.Addr().String(), log: g.o.Log, done: make(chan struct{}), endStreams: end}
@@ -80,8 +87,7 @@ func (g *Gate) Listen(ctx context.Context, handler http.Handler) (*Server, error
 			s.log.Error().Err(err).Msg("serving the page")
 		}
 	}()
-	g.o.Log.Info().Str("address", s.address).Bool("tls", cert != nil).Bool("users", p.Users != "").Msg("page")
-	return s, nil
+	return s
 }
 
 func (s *Server) serve(listener net.Listener, cert *certificate) error {
