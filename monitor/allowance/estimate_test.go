@@ -75,8 +75,10 @@ func TestAveragedRate(t *testing.T) {
 // baseline.
 func TestAveragedTails(t *testing.T) {
 	for _, law := range []Law{
-		{Estimated: true, Events: 3, Exposure: 50}, {Estimated: true, Events: 40, Exposure: 50, Margin: 1.2},
-		{Estimated: true, Events: 3, Exposure: 50, Proportion: true}, {Estimated: true, Events: 40, Exposure: 500, Proportion: true},
+		{Estimated: true, Events: 3, Exposure: 50},
+		{Estimated: true, Events: 40, Exposure: 50, Margin: 1.2},
+		{Estimated: true, Events: 3, Exposure: 50, Proportion: true},
+		{Estimated: true, Events: 40, Exposure: 500, Proportion: true},
 	} {
 		p := Plan{Law: law, Exposure: 2, Upper: true, Lower: true, Windows: []Window{{Slots: 10, Step: 1, Slot: true}}, SlotsPerYear: 1}
 		window := p.load(0, 0, 10, p.known)

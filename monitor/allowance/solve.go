@@ -122,11 +122,15 @@ func (x *part) priced(k int64) (alpha, perYear float64, ok bool) {
 		return 0, 0, false
 	}
 	if x.arrival {
-		return alpha, x.perYear(x.arrivals(x.model, x.plan.Exposure, critical{k, true})), true
+		return alpha * ample, x.perYear(x.arrivals(x.model, x.plan.Exposure, critical{k, true})), true
 	}
 	c := x.crossing(x.model, x.first(), critical{k, true}, critical{k, true})
-	return alpha, x.perYear(c), true
+	return alpha * ample, x.perYear(c), true
 }
+
+// ample is room for rounding above the size of a count: its neighbour's is far
+// away.
+const ample = 1 + 0x1p-30
 
 // branch reports whether a count lies beyond the mean of a window. On the near
 // side of it the window nearly always signals and seldom crosses: the crossings
@@ -254,7 +258,7 @@ func (x *part) attained(alpha float64) float64 {
 	case x.banded():
 		low, high := m.critical(window.times(x.plan.least()), alpha), m.critical(window, alpha)
 		if m.tail == Upper && high.ok && low == high {
-			return m.size(window, high.k)
+			return m.size(window, high.k) * ample
 		}
 		return alpha
 	}
@@ -262,11 +266,11 @@ func (x *part) attained(alpha float64) float64 {
 	for _, turns := range x.phases {
 		for i := range turns {
 			if c := m.critical(turns[i].now, alpha); c.ok {
-				most = max(most, m.size(turns[i].now, c.k))
+				most = max(most, m.size(turns[i].now, c.k)*ample)
 			}
 		}
 	}
-	return most
+	return min(most, alpha)
 }
 
 // limits tells what limits on p come to.
