@@ -1,0 +1,235 @@
+package monitor
+
+import (
+	"math"
+	"slices"
+	"time"
+
+	"tailbell/config"
+	"tailbell/monitor/life"
+)
+
+// Glance is a series at its latest looks, in short: what lists are sorted by.
+type Glance struct {
+	Series, Indicator string
+	// Look is the latest look of the window with the strongest evidence; its
+	// Window is "" where no look fell due yet.
+	Look View
+	// Direction is the tail of that evidence and Log10P its p; 0 where no look
+	// was made.
+	Direction life.Direction
+	Log10P    float64
+	// Signals says that the latest made look of some window signals.
+	Signals bool
+	// Seen is when an observation was last counted.
+	Seen Instant
+	// Conditions stand of the series.
+	Conditions []Condition
+}
+
+// Glances calls f for at most n series from the number first on, in the order
+// in which they appeared, and returns the number to go on with, 0 at the end.
+// What it does is bounded by n, so that it can be called between messages.
+func (e *Engine) Glances(first, n int, f func(Glance)) int {
+	end := min(first+n, len(e.series))
+	for i := max(first, 0); i < end; i++ {
+		f(e.glance(e.series[i]))
+	}
+	if end >= len(e.series) {
+		return 0
+	}
+	return end
+}
+
+// SeriesCount is how many series there are.
+func (e *Engine) SeriesCount() int { return len(e.series) }
+
+func (e *Engine) glance(s *series) Glance {
+	ix := s.indicator
+	g := Glance{
+		Series: s.name, Indicator: ix.cfg.Name, Seen: s.seen, Conditions: e.conditionsOf(s),
+		Signals: s.active(upper) || s.active(lower),
+	}
+	if !ix.started || s.birth == unborn {
+		return g
+	}
+	for w := range ix.cfg.Windows {
+		b := ix.latest(&ix.cfg.Windows[w])
+		ep := ix.epochAt(b)
+		l := ix.look(s, ep, w, b, e.momentOf(s, b, w))
+		if l.status == filling {
+			continue
+		}
+		v := ix.view(s, ep, &l)
+		direction, log10p := sharper(&v)
+		if g.Look.Window == "" || log10p < g.Log10P {
+			g.Look, g.Direction, g.Log10P = v, direction, log10p
+		}
+	}
+	return g
+}
+
+// sharper is the tail with the smaller p.
+func sharper(v *View) (life.Direction, float64) {
+	direction, log10p := life.Upper, 0.0
+	if v.Upper.Watched && v.Upper.Log10P < log10p {
+		log10p = v.Upper.Log10P
+	}
+	if v.Lower.Watched && v.Lower.Log10P < log10p {
+		direction, log10p = life.Lower, v.Lower.Log10P
+	}
+	return direction, log10p
+}
+
+// Latest returns the latest n looks of a window of a series at boundaries up
+// to a moment, oldest first, as Views does.
+func (e *Engine) Latest(series, window string, until time.Time, n int) []View {
+	s := e.byName[series]
+	if s == nil || n <= 0 {
+		return nil
+	}
+	ix := s.indicator
+	to := min(InstantOf(until), ix.cal.Start(ix.looked))
+	for w := range ix.cfg.Windows {
+		if cfg := &ix.cfg.Windows[w]; cfg.Name == window {
+			first := ix.cal.Slot(to) - int64(n)*int64(cfg.Step) + 1
+			views := e.Views(series, window, ix.cal.Start(first).Time(), (to + 1).Time())
+			return views[max(len(views)-n, 0):]
+		}
+	}
+	return nil
+}
+
+// Standing returns the evidence of the latest look of a window that can be
+// made, as an alert would hold it, whether it signals or not; false where there
+// is none.
+func (e *Engine) Standing(series, window string) (life.Evidence, bool) {
+	s := e.byName[series]
+	if s == nil || s.birth == unborn || !s.indicator.started {
+		return life.Evidence{}, false
+	}
+	ix := s.indicator
+	w := slices.IndexFunc(ix.cfg.Windows, func(w config.Window) bool { return w.Name == window })
+	if w < 0 {
+		return life.Evidence{}, false
+	}
+	b := ix.latest(&ix.cfg.Windows[w])
+	if b-int64(ix.cfg.Windows[w].Slots) < s.birth || ix.statusAt(s, w, b) != made {
+		var ok bool
+		if b, ok = ix.previous(s, w, b); !ok {
+			return life.Evidence{}, false
+		}
+	}
+	ep := ix.epochAt(b)
+	l := ix.look(s, ep, w, b, e.momentOf(s, b, w))
+	u, based := ix.usualAt(s, ep, b)
+	if l.status != made || l.exposure.IsZero() || !based {
+		return life.Evidence{}, false
+	}
+	if o := ix.opportunity(s, &u, &l.tally, b-int64(ep.cfg.Windows[w].Slots), b, l.at); o.weighted == 0 {
+		return life.Evidence{}, false
+	}
+	v := ix.view(s, ep, &l)
+	d := upper
+	if tail, _ := sharper(&v); tail == life.Lower || !ep.cfg.Upper {
+		d = lower
+	}
+	ev := e.evidence(s, d, b, w)
+	ev.Chosen = v.Upper.Signals || v.Lower.Signals
+	return ev, true
+}
+
+// SlotView is one slot of a series as shown to people.
+type SlotView struct {
+	Start, End time.Time // in the indicator's zone
+	// Events, of which Late came after the slot had settled, if HasEvents; else
+	// they are absent, which is not zero. The same for Exposure.
+	Events, Late int64
+	HasEvents    bool
+	Exposure     string
+	HasExposure  bool
+	// Provisional says that the exposure was carried forward, Settled that the
+	// slot no longer waits for late data.
+	Provisional, Settled bool
+}
+
+// SlotsOf returns the latest n slots of a series that have begun, the latest
+// first.
+func (e *Engine) SlotsOf(series string, n int) []SlotView {
+	s := e.byName[series]
+	if s == nil || s.birth == unborn || e.clock == Beginning {
+		return nil
+	}
+	ix := s.indicator
+	last := ix.cal.Slot(e.clock)
+	if k := len(s.cells); k > 0 {
+		last = max(last, s.cells[k-1].slot)
+	}
+	first := max(last-int64(n)+1, s.birth, s.trimmed)
+	if last < first {
+		return nil
+	}
+	views := make([]SlotView, last-first+1)
+	for i := range views {
+		slot := last - int64(i)
+		v := &views[i]
+		v.Start, v.End = ix.cal.Start(slot).in(ix.cfg.Zone), ix.cal.Start(slot+1).in(ix.cfg.Zone)
+		v.Settled = slot < ix.looked
+		v.Events, v.HasEvents = ix.eventsOf(s, slot)
+		if j, ok := s.cells.find(slot); ok {
+			v.Late = s.cells[j].late
+		}
+	}
+	ix.eachExposure(s, first, last+1, func(slot int64, q Quantity, provisional bool) {
+		v := &views[last-slot]
+		v.Exposure, v.HasExposure, v.Provisional = q.decimal(ix.cfg.GrainDigits), true, provisional
+	})
+	return views
+}
+
+// Dated is a moment at which something changed by which a series is judged.
+type Dated struct {
+	At   time.Time // in the indicator's zone
+	What string
+}
+
+// ChangesOf returns the changes that looks in memory have passed: new versions
+// of the set-up, and where one baseline followed another.
+func (e *Engine) ChangesOf(series string) []Dated {
+	s := e.byName[series]
+	if s == nil {
+		return nil
+	}
+	ix := s.indicator
+	var all []Dated
+	for i := 1; i < len(ix.epochs); i++ {
+		ep := &ix.epochs[i]
+		if ep.from > math.MinInt64 && ep.from <= ix.looked {
+			all = append(all, Dated{ix.cal.Start(ep.from).in(ix.cfg.Zone), "set-up " + ep.digest[:min(12, len(ep.digest))] + " in force"})
+		}
+	}
+	for i := range ix.cfg.Baselines {
+		b := &ix.cfg.Baselines[i]
+		if b.From.IsZero() || !b.Series.Match(series) || InstantOf(b.From) > ix.cal.Start(ix.looked) {
+			continue
+		}
+		what := "another baseline"
+		if b.Version != "" {
+			what = "baseline " + b.Version
+		}
+		all = append(all, Dated{b.From.In(ix.cfg.Zone), what})
+	}
+	return all
+}
+
+// Decimal writes the exposure of the look exactly.
+func (v *View) Decimal() string { return v.Exposure.decimal(v.Digits) }
+
+// GlanceOf returns one series at a glance; false where there is none.
+func (e *Engine) GlanceOf(series string) (Glance, bool) {
+	s := e.byName[series]
+	if s == nil {
+		return Glance{}, false
+	}
+	return e.glance(s), true
+}
