@@ -3,6 +3,7 @@ package figure
 import (
 	"math"
 	"strconv"
+	"strings"
 	"time"
 )
 
@@ -18,14 +19,18 @@ func (c *canvas) rulers(step float64) {
 		c.text(c.left-7, y+4, "end", "fig-scale", ink, plain(v))
 	}
 	marks, layout := dates(c.from, c.to, max(int((c.edge()-c.left)/95), 2))
-	for _, at := range marks {
+	for i, at := range marks {
 		x := c.x(at)
 		c.rule(x, c.floor(), x, c.floor()+5, "0.7")
 		anchor := "middle"
 		if x > c.edge()-26 {
 			anchor = "end"
 		}
-		c.text(x, c.floor()+18, anchor, "fig-scale", ink, at.Format(layout))
+		text := at.Format(layout)
+		if i == 0 && !strings.Contains(layout, "2006") { // the year once
+			text = at.Format("2 Jan 2006")
+		}
+		c.text(x, c.floor()+18, anchor, "fig-scale", ink, text)
 	}
 }
 

@@ -170,7 +170,7 @@ func (s *Series) drawPoints(c *canvas) {
 func (s *Series) drawSpans(c *canvas) {
 	for i := range s.Spans {
 		span := &s.Spans[i]
-		if span.From.After(c.to) || (span.Kind != Change && span.To.Before(c.from)) || (span.Kind == Change && span.From.Before(c.from)) {
+		if !span.within(c) {
 			continue
 		}
 		x1 := max(c.x(span.From), c.left)

@@ -16,13 +16,22 @@ func (s *Series) some(is func(*Point) bool) bool {
 	return false
 }
 
-func (s *Series) someSpan(k SpanKind) bool {
+func (s *Series) someSpan(c *canvas, k SpanKind) bool {
 	for i := range s.Spans {
-		if s.Spans[i].Kind == k {
+		if s.Spans[i].Kind == k && s.Spans[i].within(c) {
 			return true
 		}
 	}
 	return false
+}
+
+// within reports whether something of the span lies in the picture.
+func (s *Span) within(c *canvas) bool {
+	to := s.To
+	if s.Kind == Change {
+		to = s.From
+	}
+	return !s.From.After(c.to) && !to.Before(c.from)
 }
 
 // drawKey names the shapes that occur, in one line below the dates.
@@ -46,13 +55,13 @@ func (s *Series) drawKey(c *canvas) {
 		{s.some(func(p *Point) bool { return !p.Made }), func(c *canvas, x, y float64) {
 			c.path("fig-gap", ink, "M"+px(x-4)+" "+px(y+3)+"l3 -7m2 7l3 -7", `stroke-opacity="0.8"`)
 		}, "no look"},
-		{s.someSpan(Alert), func(c *canvas, x, y float64) {
+		{s.someSpan(c, Alert), func(c *canvas, x, y float64) {
 			c.path("fig-critical", vermillion, bracket(c, x, y, ""), `stroke-width="2"`)
 		}, "alert"},
-		{s.someSpan(Real), func(c *canvas, x, y float64) {
+		{s.someSpan(c, Real), func(c *canvas, x, y float64) {
 			c.path("fig-real", purple, bracket(c, x, y, "m-12 -2h12"), `stroke-width="2"`)
 		}, "alert marked real"},
-		{s.someSpan(Change), func(c *canvas, x, y float64) {
+		{s.someSpan(c, Change), func(c *canvas, x, y float64) {
 			c.path("fig-change", ink, "M"+px(x)+" "+px(y-6)+"v12", `stroke-dasharray="1 3"`)
 		}, "change"},
 	})

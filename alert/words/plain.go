@@ -1,5 +1,11 @@
 package words
 
+import (
+	"time"
+
+	"tailbell/monitor/life"
+)
+
 // Number writes an expected number or a rate as the sentences do.
 func Number(x float64) string { return number(x) }
 
@@ -18,3 +24,49 @@ func Grouped(decimal string) string { return grouped(decimal) }
 
 // Length writes a window in words: "28 days".
 func Length(window string) string { return length(window) }
+
+// Place turns the record's series into words, the narrowest part first.
+func Place(r *life.Record) string { return place(r) }
+
+// Noun names the events of a look in the plural.
+func Noun(e *life.Evidence) string { return noun(e) }
+
+// Brief gives the numbers of a look in one short phrase, in the record's zone.
+func Brief(r *life.Record, e *life.Evidence) string { return brief(e, zoneOf(r)) }
+
+// Numbers gives the ratio and how a look was judged, Basis by which usual rate.
+func Numbers(e *life.Evidence) string { return numbers(e) }
+
+// Basis says by which usual rate a look was judged.
+func Basis(r *life.Record, e *life.Evidence) string { return basis(r, e) }
+
+// Bounds gives the exact bounds of a look's rate, and the usual rate.
+func Bounds(e *life.Evidence) string { return bounds(e) }
+
+// Afterwards tells of the data after the opening look; "" where there are none.
+func Afterwards(r *life.Record) string { return afterwards(r, zoneOf(r)) }
+
+// Sources names the observations behind an alert; "" where none has an id.
+func Sources(r *life.Record) string { return sources(r) }
+
+// Per is what follows a rate of the look: " per 1,000 device-days".
+func Per(e *life.Evidence) string { return per(e) }
+
+// CautionOf is the caution that stands on the record.
+func CautionOf(r *life.Record) string { return caution(r) }
+
+// Zone is the record's zone.
+func Zone(r *life.Record) *time.Location { return zoneOf(r) }
+
+// Day writes a date without its time of day, Moment with it unless it is
+// midnight.
+func Day(t time.Time) string { return day(t) }
+
+// Moment writes a date with its time of day, unless that is midnight.
+func Moment(t time.Time) string { return moment(t) }
+
+// Last names the end of a half-open span: its last day, or its hour.
+func Last(t time.Time) string { return last(t) }
+
+// SameLook reports whether two pieces of evidence are of one look.
+func SameLook(a, b *life.Evidence) bool { return sameLook(a, b) }
