@@ -16,6 +16,7 @@ import (
 	"github.com/rs/zerolog"
 
 	"tailbell/alert/outlet"
+	"tailbell/alert/page"
 	"tailbell/config"
 	"tailbell/ingest/bus"
 	"tailbell/ingest/control"
@@ -35,6 +36,7 @@ type daemon struct {
 	log   zerolog.Logger
 	parts []*part
 	serve *control.Server
+	page  *page.Page // nil for none
 
 	troubles troubles
 	copies   copies
@@ -309,6 +311,9 @@ func (d *daemon) committed(p *part, position uint64) {
 		q.Wake()
 	}
 	p.ticker.Wake()
+	if d.page != nil {
+		d.page.Committed()
+	}
 }
 
 // reach waits until the position is committed.
@@ -440,6 +445,9 @@ func (d *daemon) flush() {
 // close lets go of everything.
 func (d *daemon) close() error {
 	var errs []error
+	if d.page != nil {
+		d.page.Close()
+	}
 	if d.serve != nil {
 		errs = append(errs, d.serve.Close())
 	}

@@ -87,11 +87,16 @@ func runDaemon(ctx context.Context, setup *config.Setup, o runOptions, stdout, s
 		return err
 	}
 	defer func() { err = errors.Join(err, h.close()) }()
+	pages, err := startPage(ctx, setup, log)
+	if err != nil {
+		return err
+	}
+	defer func() { err = errors.Join(err, pages.close()) }()
 	opts := daemonOptions{log: log, terminal: outlet.NewTerminal(stdout, widthOf(stdout), o.asJSON)}
-	err = runOnce(ctx, setup, opts, h)
+	err = runOnce(ctx, setup, opts, h, pages)
 	for errors.Is(err, errAgain) && ctx.Err() == nil {
 		log.Warn().Err(err).Msg("there is room again: starting the embedded bus again")
-		err = runOnce(ctx, setup, opts, h)
+		err = runOnce(ctx, setup, opts, h, pages)
 		// The room may be gone again before the bus has come up.
 		if err != nil && !errors.Is(err, errAgain) && tryRoom(setup.Folder) != nil {
 			log.Error().Err(err).Msg("starting again")
@@ -109,7 +114,7 @@ func runDaemon(ctx context.Context, setup *config.Setup, o runOptions, stdout, s
 
 // runOnce opens the daemon and runs it. The error is an errAgain if that is to
 // be done once more.
-func runOnce(ctx context.Context, setup *config.Setup, o daemonOptions, h *health) (err error) {
+func runOnce(ctx context.Context, setup *config.Setup, o daemonOptions, h *health, pages *pageServer) (err error) {
 	d, err := openDaemon(ctx, setup, o)
 	if err != nil {
 		return err
@@ -117,6 +122,11 @@ func runOnce(ctx context.Context, setup *config.Setup, o daemonOptions, h *healt
 	defer func() { err = errors.Join(err, d.close()) }()
 	h.daemon.Store(d)
 	defer h.daemon.Store(nil)
+	if err := d.openPage(); err != nil {
+		return err
+	}
+	pages.page.Store(d.page)
+	defer pages.page.Store(nil)
 	o.log.Info().Str("name", setup.Name).Str("folder", setup.Folder).Str("setup", setup.Digest[:12]).
 		Bool("embedded_bus", d.bus.Embedded()).Msg("running")
 	return d.run(ctx)

@@ -1,0 +1,120 @@
+package main
+
+import (
+	"context"
+	"errors"
+	"net/http"
+	"sync/atomic"
+	"time"
+
+	"github.com/rs/zerolog"
+
+	"tailbell/alert/page"
+	"tailbell/alert/page/gate"
+	"tailbell/config"
+	"tailbell/ingest/control"
+	"tailbell/ingest/wire"
+	"tailbell/monitor"
+	"tailbell/monitor/store"
+)
+
+// pageServer serves the page of whichever daemon runs, behind the gate.
+type pageServer struct {
+	page   atomic.Pointer[page.Page]
+	server *gate.Server
+}
+
+// startPage begins to listen where the set-up says; nothing is served if it
+// says nothing.
+func startPage(ctx context.Context, setup *config.Setup, log zerolog.Logger) (*pageServer, error) {
+	s := &pageServer{}
+	if !setup.Page.Served() {
+		return s, nil
+	}
+	g, err := gate.New(gate.Options{Name: setup.Name, Page: setup.Page, Now: time.Now, Log: log})
+	if err != nil {
+		return nil, err
+	}
+	s.server, err = g.Listen(ctx, s)
+	return s, err
+}
+
+func (s *pageServer) close() error {
+	if s.server == nil {
+		return nil
+	}
+	return s.server.Close()
+}
+
+// ServeHTTP answers with the page of the daemon, if there is one.
+func (s *pageServer) ServeHTTP(w http.ResponseWriter, r *http.Request) {
+	if p := s.page.Load(); p != nil {
+		p.ServeHTTP(w, r)
+		return
+	}
+	w.Header().Set("Retry-After", "2")
+	http.Error(w, "The daemon is starting or stopping: load the page again in a moment.", http.StatusServiceUnavailable)
+}
+
+// openPage gives the daemon its page, if the set-up names one.
+func (d *daemon) openPage() error {
+	if !d.setup.Page.Served() {
+		return nil
+	}
+	o := page.Options{
+		Name: d.setup.Name, Act: d.actFromPage, State: d.stateForPage, Now: time.Now,
+		PartOf: func(series string) int { return d.partOf(series).number },
+		Who: func(ctx context.Context) page.Person {
+			p := gate.Of(ctx)
+			return page.Person{Name: p.Name, MayAct: p.MayAct(), SignedIn: p.Named()}
+		},
+		Failed: func(err error) { d.log.Error().Err(err).Msg("serving the page") },
+	}
+	for _, p := range d.parts {
+		o.Parts = append(o.Parts, page.Part{Store: p.store, Do: func(ctx context.Context, look func(*monitor.Engine)) error {
+			ctx, cancel := context.WithTimeout(ctx, pagePatience)
+			defer cancel()
+			return p.loop.Do(ctx, look)
+		}})
+	}
+	var err error
+	d.page, err = page.New(o)
+	return err
+}
+
+// pagePatience is how long the page waits for an engine.
+const pagePatience = 10 * time.Second
+
+// actFromPage takes an act as if a command had sent it.
+func (d *daemon) actFromPage(ctx context.Context, act *monitor.Act) error {
+	_, err := d.act(ctx, actRequest{wire.EncodeAct(nil, act)})
+	var refused *control.Error
+	if errors.As(err, &refused) {
+		return &page.RefusedError{Why: refused.Text}
+	}
+	return err
+}
+
+// stateForPage says how the daemon is doing.
+func (d *daemon) stateForPage(ctx context.Context) (*page.State, error) {
+	r, err := d.status(ctx)
+	if err != nil {
+		return nil, err
+	}
+	s := &page.State{Connected: r.Connected, Embedded: d.bus.Embedded(), Setup: r.Setup}
+	for _, t := range r.Troubles {
+		s.Troubles = append(s.Troubles, page.Trouble{Kind: string(t.Kind), Text: t.Text, Since: t.Since, Stops: t.Kind.stops()})
+	}
+	for _, p := range r.Partitions {
+		part := page.PartState{
+			Number: p.Number, Position: p.Position, End: p.End, Clock: p.Clock, History: p.History, Version: p.Version, Account: p.Account,
+		}
+		for _, o := range p.Outlets {
+			part.Outlets = append(part.Outlets, page.OutletState{
+				Name: o.Name, Delivered: o.Delivered, Waiting: o.Waiting, Trouble: d.parts[p.Number].undelivered(store.Outlet{Name: o.Name, Delivered: o.Delivered, Depth: o.Waiting}),
+			})
+		}
+		s.Parts = append(s.Parts, part)
+	}
+	return s, nil
+}
