@@ -12,9 +12,10 @@ type Format int
 
 // The formats.
 const (
-	ByEnding Format = iota // .csv, or .ndjson, .jsonl and .json
+	ByEnding Format = iota // .csv and .tsv; .ndjson, .jsonl and .json; .parquet
 	CSV                    // a header line, then a row a line
 	NDJSON                 // one JSON object a line
+	Parquet                // columns of Apache Parquet
 )
 
 // String returns the format as it is written in options.
@@ -26,18 +27,20 @@ func (f Format) String() string {
 		return "csv"
 	case NDJSON:
 		return "ndjson"
+	case Parquet:
+		return "parquet"
 	}
 	return fmt.Sprintf("Format(%d)", int(f))
 }
 
-// ParseFormat returns the format of this name: auto, csv or ndjson.
+// ParseFormat returns the format of this name: auto, csv, ndjson or parquet.
 func ParseFormat(name string) (Format, error) {
-	for _, f := range []Format{ByEnding, CSV, NDJSON} {
+	for _, f := range []Format{ByEnding, CSV, NDJSON, Parquet} {
 		if name == f.String() {
 			return f, nil
 		}
 	}
-	return 0, fmt.Errorf("%q is no format; it is auto, csv or ndjson", name)
+	return 0, fmt.Errorf("%q is no format; it is auto, csv, ndjson or parquet", name)
 }
 
 // of returns the format of a file.
@@ -50,9 +53,11 @@ func (f Format) of(path string) (Format, error) {
 		return CSV, nil
 	case ".ndjson", ".jsonl", ".json":
 		return NDJSON, nil
+	case ".parquet":
+		return Parquet, nil
 	}
 	if path == stdin {
-		return 0, errors.New("standard input has no ending that tells its format; say --format csv or --format ndjson")
+		return 0, errors.New("standard input has no ending that tells its format; say --format csv, ndjson or parquet")
 	}
-	return 0, fmt.Errorf("%s: the ending %q tells no format; say --format csv or --format ndjson", path, filepath.Ext(path))
+	return 0, fmt.Errorf("%s: the ending %q tells no format; say --format csv, ndjson or parquet", path, filepath.Ext(path))
 }

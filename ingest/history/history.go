@@ -19,7 +19,8 @@
 //
 // Errors and faults name the options of the commands feed and replay.
 //
-// Caveat: all entries are held in memory, about 250 bytes each.
+// Caveat: all entries are held in memory, about 250 bytes each; on a tape
+// (Options.Tape) about 60.
 package history
 
 import (
@@ -32,6 +33,7 @@ import (
 
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
+	"tailbell/monitor/replay"
 )
 
 // Options say how files are read. The zero value reads files that explain
@@ -52,6 +54,17 @@ type Options struct {
 	CheckUnit func(series, unit string) error
 	// NoDerivedIDs leaves rows without an id as they are.
 	NoDerivedIDs bool
+	// Tape, if not nil, takes the rows in the place of History.Entries: in a
+	// fifth of the memory and of the time, but without their JSON.
+	Tape *replay.Tape
+	// KeepsIDs, with a Tape, reports whether the ids of the series are kept:
+	// where they are not, rows without an id are left as they are. Nil derives
+	// ids for all.
+	KeepsIDs func(series string) bool
+	// ZoneOf, with a Tape, returns the zone in which a series is counted, nil
+	// if that is not known: other offsets of time than the zone's are remarked
+	// upon where a file has several.
+	ZoneOf func(series string) *time.Location
 	// Limits of the decoder.
 	Limits wire.Limits
 	// Stdin is read for the path "-".
@@ -142,6 +155,11 @@ func Read(ctx context.Context, paths []string, opts Options) (*History, error) {
 	h.Counts.Files = len(paths)
 	h.Counts.Faults = len(h.Faults)
 	h.Counts.Rows = h.Counts.Observations + h.Counts.Acts + h.Counts.Faults
+	if opts.Tape != nil {
+		h.Counts.OutOfOrder = opts.Tape.OutOfOrder()
+		opts.Tape.Sort()
+		return h, nil
+	}
 	if h.Counts.OutOfOrder > 0 {
 		slices.SortStableFunc(h.Entries, func(a, b Entry) int {
 			switch {

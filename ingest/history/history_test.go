@@ -34,7 +34,11 @@ func read(tb testing.TB, opts Options, paths ...string) *History {
 	if err != nil {
 		tb.Fatal(err)
 	}
-	if n := h.Counts.Observations + h.Counts.Acts; n != len(h.Entries) || n+len(h.Faults) != h.Counts.Rows {
+	kept := len(h.Entries)
+	if opts.Tape != nil {
+		kept = opts.Tape.Len()
+	}
+	if n := h.Counts.Observations + h.Counts.Acts; n != kept || n+len(h.Faults) != h.Counts.Rows {
 		tb.Errorf("counts %+v, %d entries, %d faults", h.Counts, len(h.Entries), len(h.Faults))
 	}
 	return h
@@ -191,7 +195,7 @@ func TestLocalTimes(t *testing.T) {
 func TestFilesThatCannotBeRead(t *testing.T) {
 	for _, c := range []struct{ name, text, want string }{
 		{"x.csv", "", "the file is empty"},
-		{"x.csv", "series,at,event\n", `line 1: the column "event" is not known`},
+		{"x.csv", "series,at,event\n", "line 1: the name of column 3 is not known (is it events, misspelt?)"},
 		{"x.csv", "series,at,events,at\n", "line 1: the column at is there twice"},
 		{"x.csv", "\n\nseries,at,exposure,exposure[days]\n", "line 3: the column exposure is there twice"},
 		{"x.csv", "series,at,exposure[]\n", "states no unit"},

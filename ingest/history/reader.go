@@ -9,6 +9,7 @@ import (
 
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
+	"tailbell/monitor/replay"
 )
 
 // stdin is the path that stands for standard input.
@@ -31,6 +32,7 @@ type reader struct {
 	lines              *lineReader
 	path               string
 	scratch            []byte
+	offsets            offsetsSeen
 }
 
 func newReader(opts Options) *reader {
@@ -60,17 +62,15 @@ func (r *reader) file(ctx context.Context, path string) (err error) {
 	if err != nil {
 		return err
 	}
+	if format == Parquet {
+		return r.parquetFile(ctx, path)
+	}
 	source, err := r.open(path)
 	if err != nil {
 		return err
 	}
 	defer func() { err = errors.Join(err, source.Close()) }()
-	r.path, r.lines = path, newLineReader(source)
-	if path == stdin {
-		r.path = "standard input"
-	}
-	r.latestHere = monitor.Beginning
-	r.ids = newDerivedIDs()
+	r.begin(path, source)
 	err = r.rows(ctx, format)
 	r.report()
 	r.done += r.lines.read
@@ -78,6 +78,17 @@ func (r *reader) file(ctx context.Context, path string) (err error) {
 		return fmt.Errorf("%s: %w", r.path, err)
 	}
 	return nil
+}
+
+// begin makes the reader ready for another file.
+func (r *reader) begin(path string, source io.Reader) {
+	r.path, r.lines = path, newLineReader(source)
+	if path == stdin {
+		r.path = "standard input"
+	}
+	r.latestHere = monitor.Beginning
+	r.ids = newDerivedIDs()
+	r.offsets = offsetsSeen{}
 }
 
 func (r *reader) open(path string) (io.ReadCloser, error) {
@@ -93,6 +104,8 @@ func (r *reader) open(path string) (io.ReadCloser, error) {
 func (r *reader) rows(ctx context.Context, format Format) error {
 	var row func() error
 	switch format {
+	case Parquet:
+		return errors.New("a Parquet file is read by its columns") // see file
 	case CSV:
 		table, err := r.readHeader()
 		if err != nil {
@@ -153,6 +166,10 @@ func (r *reader) observation(item *monitor.Item, line int, raw []byte) {
 			return
 		}
 	}
+	if r.opts.Tape != nil {
+		r.tape(o, at, line, raw)
+		return
+	}
 	r.scratch = wire.EncodeObservation(r.scratch[:0], o)
 	if o.ID == "" && !r.opts.NoDerivedIDs {
 		r.scratch = r.ids.identify(r.scratch)
@@ -172,8 +189,13 @@ func (r *reader) act(act *monitor.Act, line int, raw []byte) {
 			return
 		}
 	}
-	r.scratch = wire.EncodeAct(r.scratch[:0], act)
 	r.history.Counts.Acts++
+	if r.opts.Tape != nil {
+		r.latestHere = max(r.latestHere, at)
+		r.opts.Tape.AddAct(*act, at, false, replay.Place{File: r.path, Line: line})
+		return
+	}
+	r.scratch = wire.EncodeAct(r.scratch[:0], act)
 	r.add(Entry{JSON: r.store.keep(r.scratch), Time: at, File: r.path, Line: line, IsAct: true})
 }
 

@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"maps"
 	"slices"
 	"strings"
 	"unicode/utf8"
@@ -59,6 +60,7 @@ type table struct {
 	json  []byte
 	// hasSpan and hasTime say that the row has a date, or a start, end or at.
 	hasSpan, hasTime bool
+	plain            *plainRows // nil where rows need the decoder
 }
 
 // readHeader reads the line of column names.
@@ -82,7 +84,11 @@ func (r *reader) readHeader() (*table, error) {
 			return nil, fmt.Errorf("line %d: %w", header.number, err)
 		}
 	}
-	return t, t.checkColumns(header.number)
+	t.plain = newPlainRows(t)
+	if err := t.checkColumns(); err != nil {
+		return nil, fmt.Errorf("line %d: %w", header.number, err)
+	}
+	return t, nil
 }
 
 // separatorOf returns which of comma, semicolon and tab is the most frequent
@@ -106,14 +112,14 @@ func (t *table) addColumn(written string) error {
 	if rest, found := strings.CutPrefix(name, "exposure["); found {
 		unit, closed := strings.CutSuffix(rest, "]")
 		if !closed || strings.TrimSpace(unit) == "" {
-			return fmt.Errorf("the column %q states no unit; write it like exposure[device-days]", written)
+			return fmt.Errorf("column %d, of the exposure, states no unit; write it like exposure[device-days]", len(t.columns)+1)
 		}
 		trimmed := strings.TrimSpace(written)
 		name, t.unit = "exposure", strings.TrimSpace(trimmed[len("exposure["):len(trimmed)-1])
 	}
 	kind, known := columnKinds[name]
 	if !known {
-		return fmt.Errorf("the column %q is not known; the columns are %s; rename it, or pass over it with --ignore %s", written, columnNames, name)
+		return t.unknownColumn(name)
 	}
 	if slices.ContainsFunc(t.columns, func(c column) bool { return c.name == name }) {
 		return fmt.Errorf("the column %s is there twice", name)
@@ -122,19 +128,65 @@ func (t *table) addColumn(written string) error {
 	return nil
 }
 
+// unknownColumn says which column is not known, by its number: a file without
+// names begins with a row of data, which must not be repeated.
+func (t *table) unknownColumn(name string) error {
+	text := fmt.Sprintf("the name of column %d is not known", len(t.columns)+1)
+	if near := nearest(name); near != "" {
+		text += fmt.Sprintf(" (is it %s, misspelt?)", near)
+	}
+	return fmt.Errorf("%s; the columns are %s; name the columns in the first line, or pass over this one with --ignore and its name", text, columnNames)
+}
+
+// nearest returns the known column whose name is at most two letters away, ""
+// for none.
+func nearest(name string) string {
+	best, least := "", 3
+	for _, known := range slices.Sorted(maps.Keys(columnKinds)) {
+		if d := distance(name, known); d < least && d < len(known)-1 {
+			best, least = known, d
+		}
+	}
+	return best
+}
+
+// distance is how many letters must be put in, left out or changed to make one
+// name the other (Levenshtein 1966).
+func distance(a, b string) int {
+	if len(a) > 2*len(b)+2 {
+		return len(a)
+	}
+	row := make([]int, len(b)+1)
+	for j := range row {
+		row[j] = j
+	}
+	for i := range len(a) {
+		diagonal := row[0]
+		row[0] = i + 1
+		for j := range len(b) {
+			cost := diagonal
+			if a[i] != b[j] {
+				cost = 1 + min(diagonal, row[j], row[j+1])
+			}
+			diagonal, row[j+1] = row[j+1], cost
+		}
+	}
+	return row[len(b)]
+}
+
 func (t *table) has(name string) bool {
 	return slices.ContainsFunc(t.columns, func(c column) bool { return c.name == name && c.kind != ignored })
 }
 
-func (t *table) checkColumns(number int) error {
+func (t *table) checkColumns() error {
 	t.fixed = !t.has("series")
 	switch {
 	case t.fixed && t.opts.Series == "":
-		return fmt.Errorf("line %d: there is no column series; add it, or name the file's series with --series", number)
+		return errors.New("there is no column series; add it, or name the file's series with --series")
 	case !t.has("date") && !t.has("at") && !t.has("start") && !t.has("retracted"):
-		return fmt.Errorf("line %d: no column says when; add date, at, or start and end", number)
+		return errors.New("no column says when; add date, at, or start and end")
 	case t.has("date") && t.opts.Zone == nil:
-		return fmt.Errorf("line %d: the column date needs to know in which zone days begin; name it with --zone, e.g. --zone UTC", number)
+		return errors.New("the column date needs to know in which zone days begin; name it with --zone, e.g. --zone UTC")
 	}
 	return nil
 }
@@ -151,6 +203,9 @@ func (t *table) row() error {
 	raw, ok, err := t.split(first)
 	if err != nil {
 		return err
+	}
+	if ok && !first.tooLong && len(t.cells) == len(t.columns) && t.plain.row(first.number) {
+		return nil
 	}
 	switch {
 	case first.tooLong:
@@ -195,6 +250,7 @@ func (t *table) build(number int, raw []byte) {
 			return
 		}
 	}
+	t.plain.learn(&item)
 	t.observation(&item, number, raw)
 }
 
@@ -235,7 +291,9 @@ func (t *table) cell(c column, text string) (monitor.Reason, string) {
 		if err != nil {
 			return monitor.BadTime, fmt.Sprintf("%s: %v", c.name, err)
 		}
-		t.hasTime = t.hasTime || c.name != "reported"
+		if t.hasTime = t.hasTime || c.name != "reported"; t.opts.Tape != nil {
+			t.offsets.note(text, at)
+		}
 		t.time(c.name, at)
 	case spanColumn:
 		start, end, err := span(text, t.opts.Zone)

@@ -75,3 +75,11 @@ func quickDecimal(text []byte) (config.Decimal, bool) {
 	}
 	return config.Decimal{Coef: coef, Digits: uint8(digits)}, true
 }
+
+// PlainWhole reads a whole number written as up to fifteen plain digits; false
+// for any other text, which may be a number still.
+func PlainWhole(text []byte) (int64, bool) { return quickWhole(text) }
+
+// PlainDecimal reads a decimal written as up to eighteen plain digits with an
+// optional fraction; false for any other text, which may be a number still.
+func PlainDecimal(text []byte) (config.Decimal, bool) { return quickDecimal(text) }

@@ -122,4 +122,3 @@ func (p *plan) mergeSteps(parts []*part) []life.Notice {
 	}
 	return steps
 }
-

@@ -24,6 +24,8 @@ type Tape struct {
 	ids    []identity
 	acts   []monitor.Act
 	files  []string
+	// remarks are those noted while the rows were read.
+	remarks Remarks
 }
 
 const (
