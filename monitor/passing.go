@@ -85,3 +85,6 @@ func (e *Engine) Watched() []Watched {
 	}
 	return list
 }
+
+// Found reports whether there are steps that Findings would hand over.
+func (e *Engine) Found() bool { return len(e.steps) > 0 }

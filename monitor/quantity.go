@@ -84,7 +84,10 @@ func (q Quantity) Int64() (int64, bool) {
 
 // decimal returns the amount in units of exposure as an exact decimal, for
 // grains of 10^-digits.
-func (q Quantity) decimal(digits int) string {
+func (q Quantity) decimal(digits int) string { return q.Decimal(digits) }
+
+// Decimal writes the quantity exactly, with its decimal places.
+func (q Quantity) Decimal(digits int) string {
 	s := q.big().String()
 	if digits == 0 {
 		return s

@@ -27,7 +27,7 @@ type historyFlags struct {
 }
 
 func (f *historyFlags) add(c *cobra.Command) {
-	c.Flags().StringVar(&f.format, "format", "auto", "the `FORMAT` of the files: auto (by their endings), csv or ndjson")
+	c.Flags().StringVar(&f.format, "format", "auto", "the `FORMAT` of the files: auto (by their endings), csv, ndjson or parquet")
 	c.Flags().StringVar(&f.series, "series", "", "the `SERIES` of CSV files without a series column")
 	c.Flags().StringVar(&f.zone, "zone", "", "the IANA `ZONE` in which dates and times without an offset are meant")
 	c.Flags().StringSliceVar(&f.ignore, "ignore", nil, "CSV `COLUMNS` to pass over")
@@ -62,16 +62,14 @@ func (f *historyFlags) readOptions() (o history.Options, err error) {
 	return o, nil
 }
 
-// checkUntil says what is wrong with an end that lies inside the history.
-func (f *historyFlags) checkUntil(h *history.History) error {
-	if f.until == monitor.Beginning || len(h.Entries) == 0 {
+// checkUntil says what is wrong with an end that lies before the row that
+// became known last.
+func (f *historyFlags) checkUntil(last monitor.Instant, file string, line int) error {
+	if f.until == monitor.Beginning || f.until >= last {
 		return nil
 	}
-	if last := h.Entries[len(h.Entries)-1]; f.until < last.Time {
-		return fmt.Errorf("--until %s lies before %s, when the row at %s:%d became known: it names a time after the last row, and leaves none out",
-			f.untilText, wire.FormatTime(last.Time), last.File, last.Line)
-	}
-	return nil
+	return fmt.Errorf("--until %s lies before %s, when the row at %s:%d became known: it names a time after the last row, and leaves none out",
+		f.untilText, wire.FormatTime(last), file, line)
 }
 
 // read reads the files and tells of every row that can't be used.
@@ -88,15 +86,23 @@ func (f *historyFlags) read(ctx context.Context, setup *config.Setup, paths []st
 	if err != nil {
 		return nil, err
 	}
-	if err := f.checkUntil(h); err != nil {
-		return nil, &usageError{err}
-	}
-	for _, fault := range h.Faults {
-		if err := say(stderr, "%s", fault); err != nil {
-			return nil, err
+	if len(h.Entries) > 0 {
+		last := &h.Entries[len(h.Entries)-1]
+		if err := f.checkUntil(last.Time, last.File, last.Line); err != nil {
+			return nil, &usageError{err}
 		}
 	}
-	return h, nil
+	return h, tellRowFaults(stderr, h)
+}
+
+// tellRowFaults names every row that can't be used.
+func tellRowFaults(stderr io.Writer, h *history.History) error {
+	for _, fault := range h.Faults {
+		if err := say(stderr, "%s", fault); err != nil {
+			return err
+		}
+	}
+	return nil
 }
 
 // unitChecker holds the unit that a file states against the indicator's.

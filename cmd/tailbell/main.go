@@ -34,7 +34,8 @@ func signalled(parent context.Context) (context.Context, context.CancelFunc) {
 }
 
 // execute runs one command and returns its exit code: 0 for success, 1 for a
-// failure that was reported, 2 for a command line that makes no sense.
+// failure that was reported, 2 for a command line that makes no sense, 3 for
+// data that were used whole but are odd.
 func execute(ctx context.Context, args []string, stdin io.Reader, stdout, stderr io.Writer) int {
 	root := newRootCommand()
 	root.SetArgs(args)
@@ -49,6 +50,8 @@ func execute(ctx context.Context, args []string, stdin io.Reader, stdout, stderr
 	case errors.As(err, &usage):
 		complain(stderr, err)
 		return 2
+	case errors.Is(err, errOdd):
+		return 3
 	case !errors.Is(err, errReported):
 		complain(stderr, err)
 	}
@@ -85,6 +88,10 @@ func version() string {
 
 // errReported is returned by commands that have told what is wrong already.
 var errReported = errors.New("it has been said what is wrong")
+
+// errOdd is returned by commands that used all that they were given, and have
+// told what is odd about it.
+var errOdd = errors.New("it has been said what is odd")
 
 // usageError is a command line that makes no sense.
 type usageError struct{ err error }

@@ -3,190 +3,166 @@ package main
 import (
 	"context"
 	"errors"
+	"fmt"
 	"io"
 	"time"
 
 	"github.com/spf13/cobra"
 
 	"tailbell/alert/outlet"
-	"tailbell/alert/words"
 	"tailbell/config"
 	"tailbell/ingest/history"
-	"tailbell/ingest/wire"
 	"tailbell/monitor"
-	"tailbell/monitor/life"
+	"tailbell/monitor/replay"
 )
 
+// replayOptions are the options of one run of replay.
+type replayOptions struct {
+	configs  []string
+	files    historyFlags
+	json     bool
+	looks    string
+	known    string
+	stream   bool
+	from     string
+	cores    int
+	rangeOf  history.Range
+	setups   []*config.Setup
+	tape     *replay.Tape
+	read     *history.History
+	remarks  replay.Remarks
+	stdin    io.Reader
+	out, err io.Writer
+}
+
 func newReplayCommand() *cobra.Command {
-	var path string
-	var asJSON bool
-	var files historyFlags
+	o := &replayOptions{}
 	c := &cobra.Command{
-		Use:   "replay FILE...",
-		Short: "Say what the monitor would have done over files of history",
-		Long: `Runs the same engine as the daemon over CSV or newline-delimited JSON files,
-without a bus and without a store, at their own report times, and prints every
-step of every alert: in plain sentences, or with --json as records, one a line.
-Nothing is stored and nobody is told.
+		Use:   "replay [FILE...]",
+		Short: "Say what the monitor would have done over files of history, or over its stream",
+		Long: `Runs the same engine as the daemon over CSV, newline-delimited JSON or Parquet
+files, without a bus and without a store, at their own report times, and prints
+every step of every alert: in plain sentences, or with --json as records, one a
+line. A summary follows: looks and alerts by indicator, and alerts a year with
+exact bounds (Garwood). Nothing is stored and nobody is told. With --stream it
+reads, in the place of files, what the bus of the set-up holds: of the daemon that
+runs, or at rest; from a position or a time with --from.
 
 The clock moves with the rows, so looks that fall due after the last one are not
 made; where the history is complete up to a later time, --until TIME makes those
-that are due by then.
+that are due by then. --looks FILE writes every look: CSV, or Parquet.
 
-A row that can't be used is named with its file and line; the rest goes on, and
-the exit code is 1. Of rows without an id, equal ones count once a file each: see
-"tailbell feed --help" on ids.`,
+With --config given several times the set-ups are compared on the same history:
+which excesses each found, how much earlier or later, at how many alerts a year.
+--known FILE names the episodes that are known (CSV: series, start, end, and
+perhaps direction, note), so that those that none found show too.
+
+A row that can't be used is named with its file and line, as are gaps, rows that
+are there twice or out of order, and mixed offsets of time; the rest goes on. The
+exit code is 1 if rows were not usable or were refused, 3 if all were used but
+something was odd, else 0. Of rows without an id, equal ones count once a file
+each: see "tailbell feed --help" on ids.`,
 		RunE: func(c *cobra.Command, args []string) error {
-			setup, err := loadSetup(path)
-			if err != nil {
-				return err
-			}
-			h, err := files.read(c.Context(), setup, args, c.InOrStdin(), c.ErrOrStderr())
-			if err != nil {
-				return err
-			}
-			out := c.OutOrStdout()
-			e, err := replay(c.Context(), setup, h, files.until, outlet.NewTerminal(out, widthOf(out), asJSON), c.ErrOrStderr())
-			if err != nil {
-				return err
-			}
-			summary := out
-			if asJSON {
-				summary = c.ErrOrStderr()
-			}
-			err = summarise(summary, e, h)
-			if h.Counts.Faults > 0 {
-				err = errors.Join(err, errReported)
-			}
-			return err
+			o.stdin, o.out, o.err = c.InOrStdin(), c.OutOrStdout(), c.ErrOrStderr()
+			return o.run(c.Context(), args)
 		},
 	}
-	addConfigFlag(c, &path)
-	files.add(c)
-	c.Flags().BoolVar(&asJSON, "json", false, "write alert steps as JSON records, one a line")
+	o.files.add(c)
+	f := c.Flags()
+	f.StringArrayVar(&o.configs, "config", []string{defaultSetup}, "the set-up's `FILE`; given several times, they are compared")
+	f.BoolVar(&o.json, "json", false, "write alert steps as JSON records, one a line; or a comparison as one record")
+	f.StringVar(&o.looks, "looks", "", "write every look to this `FILE`: .csv or .parquet")
+	f.StringVar(&o.known, "known", "", "a `FILE` of all episodes known in the history, to hold a comparison against")
+	f.BoolVar(&o.stream, "stream", false, "read the stream on the set-up's bus in the place of files")
+	f.StringVar(&o.from, "from", "", "with --stream: begin at this `POSITION`, or at this time (RFC 3339)")
+	f.IntVar(&o.cores, "cores", 0, "use so many cores; 0 for all. The results are the same")
 	return c
 }
 
-// replay runs the engine over a history, and on to the time until which it is
-// complete (monitor.Beginning for none), and delivers what it finds.
-func replay(ctx context.Context, setup *config.Setup, h *history.History, until monitor.Instant, out outlet.Outlet, stderr io.Writer) (*replayed, error) {
-	r := &replayed{engine: monitor.New(monitor.Partition{Of: 1, KeyParts: setup.KeyParts}), kinds: map[life.StepKind]int{}}
-	start := time.Now()
-	r.engine.Apply(&monitor.Message{Position: 1, Kind: monitor.SettingMessage, Setting: monitor.Setting{Setup: setup}})
-	bar := newBar(stderr, int64(len(h.Entries)), "replaying")
+func (o *replayOptions) run(ctx context.Context, args []string) error {
+	if err := o.check(args); err != nil {
+		return &usageError{err}
+	}
+	for _, path := range o.configs {
+		setup, err := loadSetup(path)
+		if err != nil {
+			return err
+		}
+		o.setups = append(o.setups, setup)
+	}
+	if err := o.readHistory(ctx, args); err != nil {
+		return err
+	}
+	if len(o.setups) > 1 {
+		return errors.New("later")
+	}
+	r, took, err := o.play(ctx, o.setups[0], "replaying")
+	if err != nil {
+		return err
+	}
+	terminal := outlet.NewTerminal(o.out, widthOf(o.out), o.json)
+	for i := range r.Steps {
+		if err := terminal.Deliver(ctx, &r.Steps[i]); err != nil {
+			return err
+		}
+	}
+	summary := o.out
+	if o.json {
+		summary = o.err
+	}
+	if err := o.summarise(summary, r, took); err != nil {
+		return err
+	}
+	return o.verdict(r)
+}
+
+// check says what is wrong with the options together.
+func (o *replayOptions) check(args []string) error {
+	switch {
+	case !o.stream && len(args) == 0:
+		return errors.New("FILE is missing: tailbell replay FILE..., or --stream for the stream (--help says more)")
+	case o.stream && len(args) > 0:
+		return errors.New("--stream reads the stream in the place of files: name files, or give --stream")
+	case o.from != "" && !o.stream:
+		return errors.New("--from goes with --stream")
+	case o.known != "" && len(o.configs) < 2:
+		return errors.New("--known goes with a comparison: give --config twice; what one set-up finds of known episodes, tailbell rehearse says")
+	case o.looks != "" && len(o.configs) > 1:
+		return errors.New("--looks goes with one set-up: give --config once")
+	case o.cores < 0:
+		return fmt.Errorf("--cores %d: give 0 for all, or how many", o.cores)
+	}
+	return checkLooks(o.looks)
+}
+
+// play runs the engine over the history.
+func (o *replayOptions) play(ctx context.Context, setup *config.Setup, what string) (r *replay.Result, took time.Duration, err error) {
+	bar := newBar(o.err, int64(o.tape.Len()), what)
 	defer bar.end()
-	const batch = 512
-	n := 0
-	for m := range h.Messages(1) {
-		r.engine.Apply(&m)
-		if n++; n%batch != 0 {
-			continue
+	opts := replay.Options{Workers: o.cores, Progress: func(done, _ int) { bar.set(int64(done), 0) }}
+	if o.files.until != monitor.Beginning {
+		opts.Until, opts.HasUntil = o.files.until, true
+	}
+	if o.looks != "" {
+		looks, err := newLooks(o.looks, o.tape)
+		if err != nil {
+			return nil, 0, err
 		}
-		bar.set(int64(n), 0)
-		if err := r.deliver(ctx, out); err != nil {
-			return nil, err
-		}
+		defer func() { err = errors.Join(err, looks.close(err)) }()
+		opts.Look, opts.Done = looks.add, looks.done
 	}
-	if until != monitor.Beginning {
-		r.engine.Apply(&monitor.Message{
-			Position: r.engine.Position() + 1, Kind: monitor.Tick, Stored: until, Time: until, HasTime: true,
-		})
-	}
-	if err := r.deliver(ctx, out); err != nil {
-		return nil, err
-	}
-	r.took = time.Since(start)
-	return r, nil
+	start := now()
+	r, err = replay.Run(ctx, setup, o.tape, opts)
+	return r, now().Sub(start), err
 }
 
-// deliver delivers what the engine has found since the last time.
-func (r *replayed) deliver(ctx context.Context, out outlet.Outlet) error {
-	if err := ctx.Err(); err != nil {
-		return err
-	}
-	changes := r.engine.Drain()
-	r.refused = append(r.refused, changes.Refused...)
-	for i := range changes.Steps {
-		r.kinds[changes.Steps[i].Step.Kind]++
-		if err := out.Deliver(ctx, &changes.Steps[i]); err != nil {
-			return err
-		}
+// verdict tells by the exit code whether all rows were used, and were plain.
+func (o *replayOptions) verdict(r *replay.Result) error {
+	switch {
+	case o.read.Counts.Faults > 0 || len(r.Refused) > 0:
+		return errReported
+	case len(o.remarks.List) > 0:
+		return errOdd
 	}
 	return nil
-}
-
-// replayed is what a replay came to.
-type replayed struct {
-	engine  *monitor.Engine
-	kinds   map[life.StepKind]int
-	refused []monitor.Refusal
-	took    time.Duration
-}
-
-func summarise(w io.Writer, r *replayed, h *history.History) error {
-	a := r.engine.Account()
-	if err := say(w, "%s in %s replayed in %s, %d not usable: %s opened; steps: %d worsened, %d corrected, %d returned, %d withdrawn.",
-		amount(h.Counts.Rows, "rows"), amount(h.Counts.Files, "files"), r.took.Round(time.Millisecond), h.Counts.Faults,
-		amount(r.kinds[life.StepOpened], "alerts"), r.kinds[life.StepWorsened],
-		r.kinds[life.StepCorrected], r.kinds[life.StepReturned], r.kinds[life.StepWithdrawn]); err != nil {
-		return err
-	}
-	if err := errors.Join(writeAccount(w, a), r.writeConditions(w), r.writeClock(w)); err != nil {
-		return err
-	}
-	return r.writeRefused(w)
-}
-
-// writeRefused names the first refusals, those that say the same once.
-func (r *replayed) writeRefused(w io.Writer) error {
-	const most = 20
-	times := map[string]int{}
-	var texts []string
-	for i := range r.refused {
-		text := string(r.refused[i].Reason) + ": " + aboutSeries(&r.refused[i])
-		if times[text]++; times[text] == 1 {
-			texts = append(texts, text)
-		}
-	}
-	named := 0
-	for i, text := range texts {
-		if i == most {
-			return say(w, "  ... and %s more refused", words.Whole(int64(len(r.refused)-named)))
-		}
-		named += times[text]
-		if times[text] > 1 {
-			text += " (" + amount(times[text], "times") + ")"
-		}
-		if err := say(w, "  refused: %s", text); err != nil {
-			return err
-		}
-	}
-	return nil
-}
-
-// writeConditions names the first conditions that stand at the end.
-func (r *replayed) writeConditions(w io.Writer) error {
-	const most = 10
-	conditions := r.engine.Conditions()
-	for i, c := range conditions {
-		if i == most {
-			return say(w, "  ... and %s more", amount(len(conditions)-most, "conditions"))
-		}
-		if err := writeCondition(w, conditionRowOf(c)); err != nil {
-			return err
-		}
-	}
-	return nil
-}
-
-// writeClock says where the replay ended, and what comes next.
-func (r *replayed) writeClock(w io.Writer) error {
-	if r.engine.Clock() == monitor.Beginning {
-		return nil
-	}
-	text := "  the clock stands at " + wire.FormatTime(r.engine.Clock())
-	if due, ok := r.engine.NextDue(); ok {
-		text += "; the next looks are due at " + wire.FormatTime(due)
-	}
-	return say(w, "%s", text)
 }

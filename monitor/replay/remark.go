@@ -153,8 +153,8 @@ func (in *inspector) duplicate(s *inspected, i int) {
 	}
 	for _, k := range s.said[span{r.start, r.end}] {
 		x := t.raw(k)
-		if x.flags&(hasEvents|hasExposure)&r.flags == 0 || t.revises(r, x) || r.start == r.end {
-			continue // the other side, a correction, or another event at that instant
+		if x.flags&r.flags&sidesOnce(s.indicator) == 0 || t.revises(r, x) {
+			continue // the other side, another event, or a correction
 		}
 		detail := "says the same of the same time"
 		if x.events != r.events || x.exposure != r.exposure || x.digits != r.digits {
@@ -163,6 +163,19 @@ func (in *inspector) duplicate(s *inspected, i int) {
 		in.remarks.add(Remark{t.place(r), Duplicate, fmt.Sprintf("%s:%d %s; %s", t.files[x.file], x.line, detail, t.counting(r, x))})
 		return
 	}
+}
+
+// sidesOnce are the sides that an interval is told once: of events that are
+// reported each by itself many may lie in one.
+func sidesOnce(in *config.Indicator) uint8 {
+	var sides uint8
+	if in.Events == config.Counted {
+		sides |= hasEvents
+	}
+	if in.Exposure != config.Clock {
+		sides |= hasExposure
+	}
+	return sides
 }
 
 // rowsOf returns the observations of a series but retractions, in order.

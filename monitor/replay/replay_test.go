@@ -1,14 +1,12 @@
 package replay
 
 import (
-	"cmp"
 	"fmt"
 	"math/rand/v2"
-	"slices"
 	"testing"
 	"time"
 
-	gocmp "github.com/google/go-cmp/cmp"
+	"github.com/google/go-cmp/cmp"
 
 	"tailbell/config"
 	"tailbell/monitor"
@@ -163,7 +161,7 @@ func compare(t *testing.T, want, got *Result) {
 		{"watched", want.Watched, got.Watched},
 		{"clock", []monitor.Instant{want.Clock, want.NextDue}, []monitor.Instant{got.Clock, got.NextDue}},
 	} {
-		if diff := gocmp.Diff(c.want, c.got); diff != "" {
+		if diff := cmp.Diff(c.want, c.got); diff != "" {
 			t.Fatalf("%s (-whole +parts):\n%s", c.name, diff)
 		}
 	}
@@ -222,16 +220,10 @@ func TestStored(t *testing.T) {
 		}
 	}
 	steps = append(steps, e.Drain().Steps...)
-	slices.SortStableFunc(steps, func(a, b life.Notice) int { return cmp.Compare(a.Step.At.UnixNano(), b.Step.At.UnixNano()) })
-	sortEqual := func(list []life.Notice) []life.Notice {
-		list = slices.Clone(list)
-		slices.SortFunc(list, func(a, b life.Notice) int { return cmp.Compare(a.Key, b.Key) })
-		return list
-	}
-	if diff := gocmp.Diff(sortEqual(steps), sortEqual(got.Steps)); diff != "" {
+	if diff := cmp.Diff(steps, got.Steps); diff != "" {
 		t.Fatalf("steps (-stored +replayed):\n%s", diff)
 	}
-	if diff := gocmp.Diff(e.Account(), got.Account); diff != "" {
+	if diff := cmp.Diff(e.Account(), got.Account); diff != "" {
 		t.Fatalf("account (-stored +replayed):\n%s", diff)
 	}
 }

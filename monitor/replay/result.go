@@ -33,7 +33,7 @@ type Result struct {
 
 // part is what one engine found.
 type part struct {
-	steps      []life.Notice
+	steps      []step
 	refused    []monitor.Refusal
 	account    monitor.Account
 	conditions []monitor.Condition
@@ -44,10 +44,14 @@ type part struct {
 	mostIDs    int
 }
 
-func (x *part) take(e *monitor.Engine) {
+// take takes what the engine found since the last time, at latest by the
+// message that came at the moment.
+func (x *part) take(e *monitor.Engine, moment monitor.Instant) {
 	f := e.Findings()
-	x.steps = append(x.steps, f.Steps...)
 	x.refused = append(x.refused, f.Refused...)
+	for i := range f.Steps {
+		x.steps = append(x.steps, stepOf(&f.Steps[i], e.Position(), moment))
+	}
 }
 
 func (x *part) finish(e *monitor.Engine) {
@@ -82,43 +86,6 @@ func (p *plan) merge(parts []*part) *Result {
 	slices.SortStableFunc(r.Watched, func(a, b monitor.Watched) int {
 		return cmp.Compare(p.tape.number[a.Series], p.tape.number[b.Series])
 	})
-	r.Steps = p.mergeSteps(parts)
+	r.Steps = p.steps(parts)
 	return r
-}
-
-// mergeSteps orders the steps by their time, and those of the same time by
-// indicator and series; those of one series keep their order.
-func (p *plan) mergeSteps(parts []*part) []life.Notice {
-	type keyed struct {
-		at        int64
-		indicator int
-		series    int32
-		notice    *life.Notice
-	}
-	indicators := map[string]int{}
-	for i := range p.setup.Indicators {
-		indicators[p.setup.Indicators[i].Name] = i
-	}
-	var list []keyed
-	latest := map[int32]int64{}
-	for _, x := range parts {
-		for i := range x.steps {
-			n := &x.steps[i]
-			series := p.tape.number[n.Record.Series]
-			at := n.Step.At.UnixMicro()
-			if last, ok := latest[series]; ok {
-				at = max(at, last)
-			}
-			latest[series] = at
-			list = append(list, keyed{at, indicators[n.Record.Indicator], series, n})
-		}
-	}
-	slices.SortStableFunc(list, func(a, b keyed) int {
-		return cmp.Or(cmp.Compare(a.at, b.at), cmp.Compare(a.indicator, b.indicator), cmp.Compare(a.series, b.series))
-	})
-	steps := make([]life.Notice, len(list))
-	for i, k := range list {
-		steps[i] = *k.notice
-	}
-	return steps
 }

@@ -121,7 +121,7 @@ func (pl *player) play(ctx context.Context, g int) error {
 	if pl.opts.HasUntil {
 		e.Apply(tickAt(after+1, pl.opts.Until))
 	}
-	found.take(e)
+	found.take(e, e.Clock())
 	found.finish(e)
 	pl.results[g] = found
 	if pl.opts.Done == nil {
@@ -146,13 +146,16 @@ func (pl *player) feed(ctx context.Context, e *monitor.Engine, found *part, g in
 		}
 		pl.tape.fill(&m, i)
 		e.Apply(&m)
+		if e.Found() {
+			found.take(e, m.Time)
+		}
 		if k%checkEvery == checkEvery-1 || k == n-1 {
 			pl.opts.Progress(int(pl.done.Add(int64(k+1-told))), pl.tape.n)
 			told = k + 1
 			if err := ctx.Err(); err != nil {
 				return err
 			}
-			found.take(e)
+			found.take(e, m.Time)
 		}
 	}
 	return nil

@@ -60,7 +60,7 @@ type row struct {
 	series           int32
 	// extra is the number of an identity, or of an act; -1 for none.
 	extra  int32
-	line   int32
+	line   uint32
 	file   int16
 	digits uint8
 	flags  uint8
@@ -175,7 +175,7 @@ func (t *Tape) add(r row, p Place) {
 	if n := len(t.files); n == 0 || t.files[n-1] != p.File {
 		t.files = append(t.files, p.File)
 	}
-	r.file, r.line = int16(len(t.files)-1), int32(p.Line)
+	r.file, r.line = int16(len(t.files)-1), uint32(p.Line)
 	if t.n == 0 {
 		t.latest = r.time
 	}
