@@ -246,9 +246,9 @@ func (c *comparison) series(a, b *Indicator) {
 	}
 	switch {
 	case len(come) > 0:
-		c.value("series", Filling, strings.Join(gone, ", "), strings.Join(come, ", "), "series that are newly matched begin with what arrives from now on")
+		c.value("series", Filling, strings.Join(gone, ", "), strings.Join(come, ", "), "series that are newly matched begin with what arrives from now on; one that is known already stays with its indicator")
 	case len(gone) > 0:
-		c.value("series", NextLook, strings.Join(gone, ", "), "", "series that are no longer matched are no longer monitored, and their alerts close as such")
+		c.value("series", NextLook, strings.Join(gone, ", "), "", "a series that is known already stays with its indicator; one that comes is no longer monitored")
 	}
 }
 

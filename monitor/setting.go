@@ -34,33 +34,49 @@ func Unfit(old, next *config.Setup) string { return unfit(old, next) }
 
 func unfit(old, next *config.Setup) string {
 	var keys []string
-	for _, c := range config.Compare(old, next) {
-		if c.Class == config.Rebuild {
-			keys = append(keys, c.String())
-		}
+	for _, o := range Obstacles(old, next) {
+		keys = append(keys, o.Why)
 	}
-	keys = append(keys, unkept(old, next)...)
 	if len(keys) == 0 {
 		return ""
 	}
 	return "the running store can't take this change: " + strings.Join(keys, "; ")
 }
 
+// Obstacle is one change that a running store can't take.
+type Obstacle struct {
+	Key string // as config.Change has it
+	Why string
+}
+
+// Obstacles lists the changes that a store under the old set-up can't take.
+func Obstacles(old, next *config.Setup) []Obstacle {
+	var all []Obstacle
+	for _, c := range config.Compare(old, next) {
+		if c.Class == config.Rebuild {
+			all = append(all, Obstacle{c.Key, c.String()})
+		}
+	}
+	return append(all, unkept(old, next)...)
+}
+
 // unkept lists the changes of smaller class that the state can't follow yet:
 // it knows windows by their place in the list, and series by their indicator.
-func unkept(old, next *config.Setup) []string {
-	var keys []string
+func unkept(old, next *config.Setup) []Obstacle {
+	var all []Obstacle
 	for i := range old.Indicators {
 		before := &old.Indicators[i]
 		at := slices.IndexFunc(next.Indicators, func(in config.Indicator) bool { return in.Name == before.Name })
 		switch {
 		case at < 0:
-			keys = append(keys, "indicator["+before.Name+"] is gone")
+			key := "indicator[" + before.Name + "]"
+			all = append(all, Obstacle{key, key + " is gone"})
 		case !slices.EqualFunc(before.Windows, next.Indicators[at].Windows, sameWindow):
-			keys = append(keys, "indicator["+before.Name+"].windows are others, or in another order")
+			key := "indicator[" + before.Name + "].windows"
+			all = append(all, Obstacle{key, key + " are others, or in another order"})
 		}
 	}
-	return keys
+	return all
 }
 
 func sameWindow(a, b config.Window) bool { return a.Slots == b.Slots && a.Step == b.Step }

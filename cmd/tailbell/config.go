@@ -6,6 +6,7 @@ import (
 
 	"tailbell/config"
 	"tailbell/ingest/wire"
+	"tailbell/monitor"
 
 	"github.com/spf13/cobra"
 )
@@ -15,10 +16,10 @@ import (
 func newConfigCommand() *cobra.Command {
 	c := &cobra.Command{
 		Use:   "config",
-		Short: "Print a sample set-up, check one, or print the schema of the data",
+		Short: "Print a sample set-up, check one, say what a change would mean, or print the schema of the data",
 		RunE:  func(c *cobra.Command, _ []string) error { return c.Help() },
 	}
-	c.AddCommand(newConfigSampleCommand(), newConfigCheckCommand(), newConfigSchemaCommand())
+	c.AddCommand(newConfigSampleCommand(), newConfigCheckCommand(), newConfigDiffCommand(), newConfigSchemaCommand())
 	return c
 }
 
@@ -72,7 +73,7 @@ func checkConfig(c *cobra.Command, file, against string) error {
 		if err != nil {
 			return err
 		}
-		if err := printChanges(c, config.Compare(old, setup)); err != nil {
+		if err := printChanges(c, config.Compare(old, setup), monitor.Unfit(old, setup)); err != nil {
 			return err
 		}
 	}
@@ -98,13 +99,16 @@ func loadSetup(file string) (*config.Setup, error) {
 	return setup, err
 }
 
-func printChanges(c *cobra.Command, changes []config.Change) error {
+func printChanges(c *cobra.Command, changes []config.Change, unfit string) error {
 	text := "\nNothing changes.\n"
 	if len(changes) > 0 {
 		text = "\nWhat changes, and when it is in force:\n"
 	}
 	for _, ch := range changes {
 		text += "  " + ch.String() + "\n"
+	}
+	if unfit != "" {
+		text += "But " + unfit + "\n"
 	}
 	_, err := c.OutOrStdout().Write([]byte(text))
 	return err

@@ -33,6 +33,7 @@ const (
 	verbCopy       = "copy"         // name of a request -> whether it is done
 	verbResend     = "resend"       // resendRequest -> resendReply
 	verbTrim       = "trim"         // position -> trimReply
+	verbSetting    = "setting"      // -> settingsReply
 )
 
 type alertsRequest struct {
@@ -110,6 +111,8 @@ func (d *daemon) verbs() map[string]control.Handler {
 		verbCopy:   answer(d.copyStore),
 		verbResend: answer(d.resend),
 		verbTrim:   answer(d.trim),
+
+		verbSetting: d.setting,
 	}
 }
 
