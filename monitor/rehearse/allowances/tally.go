@@ -1,0 +1,119 @@
+package allowances
+
+import (
+	"strconv"
+	"strings"
+
+	"tailbell/monitor"
+	"tailbell/monitor/life"
+)
+
+// tally counts what an engine makes of the series of a cell.
+type tally struct {
+	cell  *Cell
+	parts int // windows times tails
+	// from is when counting begins.
+	from   monitor.Instant
+	series []seen
+	// lit says which look of a series, window and tail signalled last, and
+	// looked whether there was one.
+	lit, looked []bool
+	windows     map[string]int
+	limits      []span
+	looks, dark int64
+	told        float64 // false alerts a year that the alerts speak of, summed
+	tellers     int64
+}
+
+// seen is what one series came to.
+type seen struct {
+	// crossings are looks that signal where the look before did not, firsts
+	// signalling looks without one before; alerts opened, late of them by looks
+	// that were made again.
+	crossings, firsts, alerts, late int64
+}
+
+// span is the least and the largest of a limit.
+type span struct{ low, high float64 }
+
+func newTally(c *Cell, series int) *tally {
+	t := &tally{cell: c, parts: 2 * len(c.Windows), series: make([]seen, series), windows: map[string]int{}}
+	t.from = beginning
+	if !c.Whole {
+		t.from += monitor.Instant(c.longest()) * monitor.Instant(c.slot().Microseconds())
+	}
+	t.lit, t.looked = make([]bool, series*t.parts), make([]bool, series*t.parts)
+	t.limits = make([]span, t.parts)
+	return t
+}
+
+// years is how long each series is counted for.
+func (t *tally) years() float64 {
+	slots := t.cell.Slots
+	if !t.cell.Whole {
+		slots -= t.cell.longest()
+	}
+	return float64(slots) / t.cell.slotsPerYear()
+}
+
+// number is that of a series, by its name.
+func number(series string) int {
+	n, err := strconv.Atoi(series[strings.LastIndexByte(series, '-')+1:])
+	if err != nil {
+		panic("allowances: " + series + " is no series of a cell")
+	}
+	return n
+}
+
+// look counts one look when it falls due.
+func (t *tally) look(v monitor.View) {
+	if !v.Made {
+		return
+	}
+	w, ok := t.windows[v.Window]
+	if !ok {
+		w = len(t.windows)
+		t.windows[v.Window] = w
+	}
+	i := number(v.Series)
+	counts := monitor.InstantOf(v.Due) >= t.from
+	for d, tail := range []*monitor.ViewTail{&v.Upper, &v.Lower} {
+		if !tail.Watched {
+			continue
+		}
+		part := 2*w + d
+		at := i*t.parts + part
+		if t.looks++; !tail.Signals {
+			t.dark++
+		}
+		l := &t.limits[part]
+		if l.high == 0 || tail.Limit < l.low {
+			l.low = tail.Limit
+		}
+		l.high = max(l.high, tail.Limit)
+		if tail.Signals && !t.lit[at] && counts {
+			if t.looked[at] {
+				t.series[i].crossings++
+			} else {
+				t.series[i].firsts++
+			}
+		}
+		t.lit[at], t.looked[at] = tail.Signals, true
+	}
+}
+
+// opened counts an alert.
+func (t *tally) opened(r *life.Record) {
+	if a := r.Opening.Allowance; a != nil {
+		t.told += a.Here
+		t.tellers++
+	}
+	if monitor.InstantOf(r.Opened) < t.from {
+		return
+	}
+	s := &t.series[number(r.Series)]
+	s.alerts++
+	if r.Late {
+		s.late++
+	}
+}
