@@ -94,7 +94,7 @@ func (o *replayOptions) run(ctx context.Context, args []string) error {
 		return err
 	}
 	if len(o.setups) > 1 {
-		return errors.New("later")
+		return o.compare(ctx)
 	}
 	r, took, err := o.play(ctx, o.setups[0], "replaying")
 	if err != nil {

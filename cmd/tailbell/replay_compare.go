@@ -1,0 +1,244 @@
+package main
+
+import (
+	"context"
+	"fmt"
+	"io"
+	"os"
+	"path/filepath"
+	"strings"
+	"text/tabwriter"
+	"time"
+
+	"tailbell/alert/words"
+	"tailbell/monitor/rehearse/plant"
+	"tailbell/monitor/replay"
+	"tailbell/monitor/replay/compare"
+)
+
+// compare plays the history under each set-up and holds them side by side.
+func (o *replayOptions) compare(ctx context.Context) error {
+	episodes, err := o.readKnown()
+	if err != nil {
+		return err
+	}
+	var played []compare.Played
+	refused := 0
+	for i, setup := range o.setups {
+		r, _, err := o.play(ctx, setup, fmt.Sprintf("replaying %d of %d", i+1, len(o.setups)))
+		if err != nil {
+			return err
+		}
+		refused += len(r.Refused)
+		if len(r.Refused) > 0 {
+			if err := say(o.err, "Under %s:", o.configs[i]); err != nil {
+				return err
+			}
+			if err := o.writeRefused(o.err, r); err != nil {
+				return err
+			}
+		}
+		played = append(played, compare.Played{Name: o.nameOf(i), Setup: setup, Result: r})
+	}
+	c := compare.Of(played, episodes, 1-boundsAlpha)
+	if o.json {
+		err = writeJSON(o.out, c)
+	} else {
+		err = o.tellComparison(c)
+	}
+	if err != nil {
+		return err
+	}
+	if refused > 0 {
+		return errReported
+	}
+	return o.verdict(&replay.Result{})
+}
+
+// nameOf is a set-up's file without its folder, where that tells it apart.
+func (o *replayOptions) nameOf(i int) string {
+	base := filepath.Base(o.configs[i])
+	for k, other := range o.configs {
+		if k != i && filepath.Base(other) == base {
+			return o.configs[i]
+		}
+	}
+	return base
+}
+
+// readKnown reads the known episodes; nil without a file of them.
+func (o *replayOptions) readKnown() (_ []plant.Episode, err error) {
+	if o.known == "" {
+		return nil, nil
+	}
+	f, err := os.Open(o.known)
+	if err != nil {
+		return nil, fmt.Errorf("--known: %w", err)
+	}
+	defer f.Close() //nolint:errcheck // it was only read
+	read, err := o.files.readOptions()
+	if err != nil {
+		return nil, err
+	}
+	zone := read.Zone
+	if zone == nil {
+		zone = o.setups[0].Indicators[0].Zone
+	}
+	episodes, err := plant.ReadKnown(f, zone)
+	if err != nil {
+		return nil, fmt.Errorf("--known %s: %w", o.known, err)
+	}
+	return append([]plant.Episode{}, episodes...), nil
+}
+
+// tellComparison prints a comparison.
+func (o *replayOptions) tellComparison(c *compare.Comparison) error {
+	t := tabwriter.NewWriter(o.out, 0, 8, 2, ' ', 0)
+	p := &printer{w: t}
+	p.f("%s in %s, under %s:\n\n", amount(o.read.Counts.Rows, "rows"), amount(o.read.Counts.Files, "files"), amount(len(c.Sides), "set-ups"))
+	p.sides(c)
+	p.f("\n")
+	for i := range c.Pairs {
+		p.pair(&c.Pairs[i])
+	}
+	p.spans(c)
+	p.episodes(c)
+	p.f("\nMore alerts are not better, nor fewer: which of them were real, the history does not say.\n%s\n", words.Caution)
+	if p.err != nil {
+		return p.err
+	}
+	return t.Flush()
+}
+
+// printer writes until something fails.
+type printer struct {
+	w   io.Writer
+	err error
+}
+
+func (p *printer) f(format string, args ...any) {
+	if p.err == nil {
+		_, p.err = fmt.Fprintf(p.w, format, args...)
+	}
+}
+
+// row writes one line of a table.
+func (p *printer) row(head string, c *compare.Comparison, cell func(*compare.Side) string) {
+	p.f("  %s", head)
+	for i := range c.Sides {
+		p.f("\t%s", cell(&c.Sides[i]))
+	}
+	p.f("\n")
+}
+
+// sides writes what each set-up came to.
+func (p *printer) sides(c *compare.Comparison) {
+	p.row("", c, func(s *compare.Side) string { return s.Name })
+	p.row("looks made", c, func(s *compare.Side) string { return words.Whole(s.Total.Looks) })
+	p.row("looks a year", c, func(s *compare.Side) string { return perhaps(s.LooksAYear) })
+	p.row("looks withheld", c, func(s *compare.Side) string { return words.Whole(s.Total.Withheld) })
+	p.row("alerts", c, func(s *compare.Side) string { return words.Whole(int64(s.Total.Alerts)) })
+	p.row("alerts a year (95% bounds)", c, func(s *compare.Side) string { return bounded(&s.Total.AYear) })
+	p.row("a year of one series", c, func(s *compare.Side) string { return bounded(&s.Total.ASeriesYear) })
+	p.row("withdrawn, as data were corrected", c, func(s *compare.Side) string { return words.Whole(int64(s.Total.Withdrawn)) })
+	p.row("spans found", c, func(s *compare.Side) string { return words.Whole(int64(s.Found)) })
+	p.row("of them found by no other", c, func(s *compare.Side) string { return words.Whole(int64(s.Alone)) })
+	if c.Episodes == nil {
+		return
+	}
+	p.row("known episodes found", c, func(s *compare.Side) string { return fmt.Sprintf("%d of %d", *s.Episodes, len(c.Episodes)) })
+	p.row("alerts in no known episode", c, func(s *compare.Side) string { return words.Whole(int64(*s.Unexplained)) })
+}
+
+func perhaps(x *float64) string {
+	if x == nil {
+		return "-"
+	}
+	return short(*x)
+}
+
+func bounded(r *replay.PerYear) string {
+	if r.Rate == nil {
+		return "-"
+	}
+	return fmt.Sprintf("%s (%s to %s)", short(*r.Rate), short(*r.Lower), short(*r.Upper))
+}
+
+// pair writes how a set-up differs from the first.
+func (p *printer) pair(x *compare.Pair) {
+	p.f("%s beside %s: both found %s, only %s found %d, only %s %d (a split as uneven has the exact chance %s if both are as good).\n", x.Other, x.First,
+		amount(x.Both, "spans"), x.First, x.OnlyFirst, x.Other, x.OnlyOther, short(x.AloneP))
+	if x.NeitherEpisodes != nil {
+		p.f("Neither found %s.\n", amount(*x.NeitherEpisodes, "known episodes"))
+	}
+	if x.Both > 0 {
+		p.f("Of those that both found %s was earlier in %d, at the same time in %d, later in %d (exact p %s of the sign test): by a median of %s days, %s to %s.\n",
+			x.Other, x.Earlier, x.Same, x.Later, short(x.DelayP), short(*x.DelayMedian), short(*x.DelayLeast), short(*x.DelayMost))
+	}
+	if x.Ratio == nil && x.RatioLower == nil {
+		return
+	}
+	upper := "no bound"
+	if x.RatioUpper != nil {
+		upper = short(*x.RatioUpper)
+	}
+	p.f("Alerts a year: %s times as many (exact 95%% bounds %s to %s, as if over histories of their own).\n", perhaps(x.Ratio), short(*x.RatioLower), upper)
+}
+
+// spans lists the excesses that one or more found.
+func (p *printer) spans(c *compare.Comparison) {
+	if len(c.Spans) == 0 {
+		p.f("\nNo set-up found anything.\n")
+		return
+	}
+	p.f("\nSpans, each from the first window that rang to the last alert's end:\n\n  from\tto\tseries\t")
+	p.heads(c)
+	for i := range c.Spans {
+		s := &c.Spans[i]
+		p.f("  %s\t%s\t%s, %s", s.From.Format(time.DateOnly), s.To.Format(time.DateOnly), s.Series, moreOrFewer(string(s.Direction)))
+		p.found(s.Found)
+	}
+}
+
+// episodes lists the known ones.
+func (p *printer) episodes(c *compare.Comparison) {
+	if c.Episodes == nil {
+		return
+	}
+	p.f("\nKnown episodes, and how many days after their beginning each rang:\n\n  from\tto\tseries\t")
+	p.heads(c)
+	for i := range c.Episodes {
+		e := &c.Episodes[i]
+		p.f("  %s\t%s\t%s, %s", e.From.Format(time.DateOnly), e.To.Format(time.DateOnly), e.Series, moreOrFewer(string(e.Direction)))
+		p.found(e.Found)
+	}
+}
+
+func (p *printer) heads(c *compare.Comparison) {
+	var names []string
+	for i := range c.Sides {
+		names = append(names, c.Sides[i].Name)
+	}
+	p.f("%s\n", strings.Join(names, "\t"))
+}
+
+func (p *printer) found(list []*compare.Found) {
+	for _, f := range list {
+		switch {
+		case f == nil:
+			p.f("\tnot found")
+		case f.Days != nil:
+			p.f("\t%s (%s days) by %s", f.Opened.Format(time.DateOnly), short(*f.Days), f.Window)
+		default:
+			p.f("\t%s by %s", f.Opened.Format(time.DateOnly), f.Window)
+		}
+	}
+	p.f("\n")
+}
+
+func moreOrFewer(direction string) string {
+	if direction == "lower" {
+		return "fewer"
+	}
+	return "more"
+}
