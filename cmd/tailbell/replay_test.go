@@ -65,10 +65,10 @@ func yearsOfFalls(t *testing.T) (setup, history string) {
 			fmt.Fprintf(&text, "quillmere-%d/ward-%d/falls,%s,%d,%d\n", ward%3, ward, first.AddDate(0, 0, day).Format(time.DateOnly), events, beds)
 		}
 	}
-	return writeSetup(t, yearsSetup), writeText(t, "falls.csv", text.String())
+	return writeSetup(t, yearsSetup), writeHistory(t, "falls.csv", text.String())
 }
 
-func writeText(t *testing.T, name, text string) string {
+func writeHistory(t *testing.T, name, text string) string {
 	t.Helper()
 	path := filepath.Join(t.TempDir(), name)
 	if err := os.WriteFile(path, []byte(text), 0o600); err != nil {
@@ -236,7 +236,7 @@ func TestReplayOfStream(t *testing.T) {
 func TestReplayCompares(t *testing.T) {
 	setup, history := yearsOfFalls(t)
 	slow := edited(t, setup, "slow.toml", `["7d", "28d"]`, `["91d"]`)
-	known := writeText(t, "known.csv", "series,start,end\nquillmere-1/ward-7/falls,2022-10-28,2022-11-27\nquillmere-0/ward-0/falls,2022-02-01,2022-02-03\n")
+	known := writeHistory(t, "known.csv", "series,start,end\nquillmere-1/ward-7/falls,2022-10-28,2022-11-27\nquillmere-0/ward-0/falls,2022-02-01,2022-02-03\n")
 	said := says(t, 0, []string{"known episodes found", "Neither found 1 known episode.", "not found"},
 		"replay", "--config", setup, "--config", slow, "--known", known, "--zone", "UTC", history)
 	if !strings.Contains(said, "setup.toml") || !strings.Contains(said, "slow.toml beside setup.toml") {
