@@ -277,24 +277,31 @@ func (x *part) attained(alpha float64) float64 {
 func (p *Plan) limits(parts []*part, alphas []float64) Limits {
 	var l Limits
 	for i, x := range parts {
-		a := Part{Window: x.index, Tail: x.tail, Arrival: x.arrival, Alpha: alphas[i], Basis: x.basis()}
-		window := x.first().now
-		if c := x.model.critical(window, a.Alpha); c.ok {
-			a.Critical, a.HasCritical, a.Size = c.k, true, x.model.size(window, c.k)
-		}
-		if a.Alpha > 0 {
-			a.PerYear = x.perYear(x.cost(a.Alpha))
-		}
-		a.Low, a.High = a.PerYear, a.PerYear
-		if p.Law.Estimated && a.Alpha > 0 {
-			low, high := p.Law.bounds(p.Level)
-			a.Low = x.perYear(x.costOf(x.model.at(low), a.Alpha))
-			a.High = x.perYear(x.costOf(x.model.at(high), a.Alpha))
-		}
+		a := x.predict(alphas[i])
 		l.PerYear += a.PerYear
 		l.Low += a.Low
 		l.High += a.High
 		l.Parts = append(l.Parts, a)
 	}
 	return l
+}
+
+// predict says what a limit on p comes to.
+func (x *part) predict(alpha float64) Part {
+	a := Part{Window: x.index, Tail: x.tail, Arrival: x.arrival, Alpha: alpha, Basis: x.basis()}
+	if !(alpha > 0) {
+		return a
+	}
+	window, law := x.first().now, &x.plan.Law
+	if c := x.model.critical(window, a.Alpha); c.ok {
+		a.Critical, a.HasCritical, a.Size = c.k, true, x.model.size(window, c.k)
+	}
+	a.PerYear = x.perYear(x.cost(a.Alpha))
+	a.Low, a.High = a.PerYear, a.PerYear
+	if law.Estimated {
+		low, high := law.bounds(x.plan.Level)
+		a.Low = x.perYear(x.costOf(x.model.at(low), a.Alpha))
+		a.High = x.perYear(x.costOf(x.model.at(high), a.Alpha))
+	}
+	return a
 }
