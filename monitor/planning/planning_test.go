@@ -91,7 +91,7 @@ func TestDelayUnchanged(t *testing.T) {
 		q.Plan.Windows, q.Names = q.Plan.Windows[:1], q.Names[:1]
 		change(q)
 		q.Plan.PerYear, q.Plan.Starts = 0.02, 0
-		limits, err := q.limits()
+		limits, err := q.Limits()
 		if err != nil {
 			t.Fatal(err)
 		}

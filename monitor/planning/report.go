@@ -94,7 +94,7 @@ type Step struct {
 
 // Answer plans for one series.
 func Answer(ctx context.Context, q *Question, o Options) (*Report, error) {
-	limits, err := q.limits()
+	limits, err := q.Limits()
 	if err != nil {
 		return nil, err
 	}
@@ -108,7 +108,8 @@ func Answer(ctx context.Context, q *Question, o Options) (*Report, error) {
 	return r, q.addDelays(ctx, r, &limits, outlooks, o)
 }
 
-func (q *Question) limits() (allowance.Limits, error) {
+// Limits are those that the question is about.
+func (q *Question) Limits() (allowance.Limits, error) {
 	if q.PLimit > 0 {
 		return allowance.Predict(&q.Plan, q.PLimit)
 	}
