@@ -144,8 +144,7 @@ func (c *comparison) outlets(a, b []Outlet) {
 			continue
 		}
 		c.value("kind", NextLook, before.Kind, after.Kind, "")
-		c.value("url", NextLook, before.URL, after.URL, "")
-		c.value("secret_file", NextLook, before.SecretFile, after.SecretFile, "")
+		c.outlet(&before, &after)
 	}
 	for _, after := range b {
 		if _, found := named(a, after.Name); !found {

@@ -65,7 +65,10 @@ func TestCompareSeesEveryField(t *testing.T) {
 	var kind BaselineKind
 	fresh := func() *Setup {
 		s := mustParse(t, string(Sample()))
-		s.Outlets = []Outlet{{Name: "ward", URL: "https://hooks.example.org", SecretFile: "secret"}}
+		s.Outlets = []Outlet{{
+			Name: "ward", URL: "https://hooks.example.org", SecretFile: "secret", Mail: MailOutlet{To: []string{"ward@example.org"}},
+			Command: []string{"/bin/ring"}, Told: Told{Indicators: []string{"fall"}, Series: []Pattern{NewPattern("**")}, Steps: []string{"opened"}},
+		}}
 		in := &s.Indicators[0]
 		in.Exposure = exposure
 		in.Allowance = &Allowance{Alerts: 1, Every: Every{5, Year}}

@@ -100,8 +100,15 @@ func (s *Setup) resolve(folder string) {
 		}
 	}
 	for i := range s.Outlets {
-		if p := &s.Outlets[i].SecretFile; *p != "" && !filepath.IsAbs(*p) {
-			*p = filepath.Join(folder, *p)
+		o := &s.Outlets[i]
+		paths := []*string{&o.SecretFile, &o.Mail.CA, &o.Mail.PasswordFile}
+		if len(o.Command) > 0 {
+			paths = append(paths, &o.Command[0])
+		}
+		for _, p := range paths {
+			if *p != "" && !filepath.IsAbs(*p) {
+				*p = filepath.Join(folder, *p)
+			}
 		}
 	}
 }
@@ -123,7 +130,8 @@ func readSetup(top section) *Setup {
 	limits := top.sub("limits")
 	s.Limits = limits.readLimits()
 	s.Indicators = readIndicators(top, s)
-	s.Outlets = readOutlets(top)
+	s.Outlets = readOutlets(top, s.Indicators)
+	checkRemind(top, s)
 	s.Page = top.sub("page").readPage(top.has("page"))
 	if len(top.faults) == 0 {
 		s.checkMemory(limits)
