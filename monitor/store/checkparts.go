@@ -237,6 +237,11 @@ func (c *checker) outbox() error {
 		if at.Delivered > c.h.Outbox || at.Delivered+1 < c.h.OutboxFirst {
 			c.faultf("outlet %q stands at step %d, kept are %d to %d", name, at.Delivered, c.h.OutboxFirst, c.h.Outbox)
 		}
+		for i, n := range at.Skip {
+			if n <= at.Delivered+1 || n > c.h.Outbox || (i > 0 && n <= at.Skip[i-1]) {
+				c.faultf("outlet %q at step %d passes over step %d, kept are %d to %d", name, at.Delivered, n, c.h.OutboxFirst, c.h.Outbox)
+			}
+		}
 		return nil
 	})
 	if err == nil {

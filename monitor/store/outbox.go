@@ -3,6 +3,7 @@ package store
 import (
 	"errors"
 	"fmt"
+	"slices"
 
 	"tailbell/monitor/life"
 
@@ -44,11 +45,25 @@ type Outlet struct {
 	Delivered uint64
 	// Depth is how many steps wait.
 	Depth uint64
+	// Skipped is how many steps people let go singly, ever.
+	Skipped uint64
 }
 
-// cursor is the stored form of an outlet.
+// cursor is the stored form of an outlet. Skip are the numbers beyond Delivered
+// that people let go, in order; Skipped counts all of them, ever.
 type cursor struct {
-	Delivered uint64 `json:"delivered"`
+	Delivered uint64   `json:"delivered"`
+	Skip      []uint64 `json:"skip,omitempty"`
+	Skipped   uint64   `json:"skipped,omitempty"`
+}
+
+// pass moves the cursor on, over what was let go too.
+func (c *cursor) pass(n uint64) {
+	c.Delivered = max(c.Delivered, n)
+	for len(c.Skip) > 0 && c.Skip[0] <= c.Delivered+1 {
+		c.Delivered = max(c.Delivered, c.Skip[0])
+		c.Skip = c.Skip[1:]
+	}
 }
 
 // Outlets registers outlets by name; one that is known keeps its place. Steps
@@ -125,7 +140,9 @@ func (s *Store) OutletState() ([]Outlet, error) {
 			return err
 		}
 		return eachOutlet(tx, func(name string, c cursor) error {
-			outlets = append(outlets, Outlet{Name: name, Delivered: c.Delivered, Depth: h.Outbox - c.Delivered})
+			outlets = append(outlets, Outlet{
+				Name: name, Delivered: c.Delivered, Depth: h.Outbox - c.Delivered - uint64(len(c.Skip)), Skipped: c.Skipped,
+			})
 			return nil
 		})
 	})
@@ -149,6 +166,11 @@ func eachOutlet(tx *bolt.Tx, use func(name string, c cursor) error) error {
 // Pending returns at most max steps that an outlet has yet to deliver, oldest
 // first.
 func (s *Store) Pending(outlet string, max int) ([]Row, error) {
+	return s.PendingAfter(outlet, 0, max)
+}
+
+// PendingAfter returns at most so many of those with numbers beyond after.
+func (s *Store) PendingAfter(outlet string, after uint64, most int) ([]Row, error) {
 	var rows []Row
 	err := s.view(func(tx *bolt.Tx) error {
 		outlets, err := outletsShelf.in(tx)
@@ -167,11 +189,12 @@ func (s *Store) Pending(outlet string, max int) ([]Row, error) {
 		if err != nil {
 			return err
 		}
-		page, err := r.page(c.Delivered, false, min(max, pageRows))
+		page, err := r.page(max(c.Delivered, after), false, min(most+len(c.Skip), pageRows))
 		if err != nil {
 			return err
 		}
-		for _, n := range page {
+		page = slices.DeleteFunc(page, func(n uint64) bool { return slices.Contains(c.Skip, n) })
+		for _, n := range page[:min(len(page), most)] {
 			row := Row{Number: n}
 			if _, err := r.getJSON(number(n), &row.Notice); err != nil {
 				return err
@@ -201,13 +224,73 @@ func (s *Store) Delivered(outlet string, n uint64) error {
 		case n > h.Outbox:
 			return fmt.Errorf("outlet %q says it delivered step %d, the last one is %d: %w", outlet, n, h.Outbox, ErrOrder)
 		case n > c.Delivered:
-			c.Delivered = n
+			c.pass(n)
 			if err := r.putJSON([]byte(outlet), c); err != nil {
 				return err
 			}
 		}
 		return trimOutbox(tx, h, trimKeys)
 	})
+}
+
+// maxSkip bounds how many steps of an outlet may be let go singly at once.
+const maxSkip = 100
+
+// Skip lets the step with a key go that waits for an outlet, because a person
+// said so: it will not be delivered there. The others keep their order. It
+// fails with ErrNotFound if no such step waits among the oldest thousands.
+func (s *Store) Skip(outlet, key string) error {
+	n, err := s.waiting(outlet, key)
+	if err != nil {
+		return err
+	}
+	return s.update("skip", func(tx *bolt.Tx, h *head) error {
+		r, err := outletsShelf.in(tx)
+		if err != nil {
+			return err
+		}
+		var c cursor
+		found, err := r.getJSON([]byte(outlet), &c)
+		switch {
+		case err != nil:
+			return err
+		case !found:
+			return fmt.Errorf("outlet %q: %w", outlet, ErrNoOutlet)
+		case n <= c.Delivered || slices.Contains(c.Skip, n):
+			return fmt.Errorf("step %s waits for outlet %s no more: %w", key, outlet, ErrNotFound)
+		case len(c.Skip) >= maxSkip:
+			return fmt.Errorf("%d steps that wait for outlet %s were let go already: mend or drop it: %w", maxSkip, outlet, ErrOrder)
+		}
+		c.Skip = append(c.Skip, n)
+		slices.Sort(c.Skip)
+		c.Skipped++
+		c.pass(c.Delivered)
+		return errors.Join(r.putJSON([]byte(outlet), c), trimOutbox(tx, h, trimKeys))
+	})
+}
+
+// skipPages is how many pages of the outbox are searched for a step.
+const skipPages = 64
+
+// waiting returns the number of the step with a key that waits for an outlet.
+func (s *Store) waiting(outlet, key string) (number uint64, err error) {
+	after := uint64(0)
+	for range skipPages {
+		rows, err := s.PendingAfter(outlet, after, pageRows)
+		if err != nil {
+			return 0, err
+		}
+		for i := range rows {
+			if rows[i].Notice.Key == key {
+				return rows[i].Number, nil
+			}
+			after = rows[i].Number
+		}
+		if len(rows) == 0 {
+			break
+		}
+	}
+	return 0, fmt.Errorf("no step %q waits for outlet %q: %w", key, outlet, ErrNotFound)
 }
 
 // writeSteps appends steps to the outbox.

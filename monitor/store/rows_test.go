@@ -66,7 +66,7 @@ func TestOutbox(t *testing.T) {
 		t.Fatal(err)
 	}
 	state, err := s.OutletState()
-	want := []Outlet{{"bus", 7, 0}, {"end", 7, 0}, {"oldest", 4, 3}}
+	want := []Outlet{{"bus", 7, 0, 0}, {"end", 7, 0, 0}, {"oldest", 4, 3, 0}}
 	if err != nil || !slices.Equal(state, want) {
 		t.Errorf("OutletState gave %v, %v; want %v", state, err, want)
 	}
@@ -78,12 +78,49 @@ func TestOutbox(t *testing.T) {
 	}
 }
 
+// TestSkip lets steps go in the middle and at the front, which moves the cursor
+// over all that lies next to it.
+func TestSkip(t *testing.T) {
+	s := create(t, Options{})
+	if err := s.Outlets(FromOldest, "ward", "other"); err != nil {
+		t.Fatal(err)
+	}
+	mustCommit(t, s, monitor.Changes{Position: 1, Steps: notices(1, 6)}, Mark{})
+	if err := errors.Join(s.Skip("ward", "1.2"), s.Skip("ward", "1.1")); err != nil {
+		t.Fatal(err)
+	}
+	s = reopen(t, s)
+	if got, want := keys(t, s, "ward", 2), []string{"1.0", "1.3"}; !slices.Equal(got, want) {
+		t.Errorf("the outlet waits for %v, want %v", got, want)
+	}
+	for _, key := range []string{"1.2", "9.9"} {
+		if err := s.Skip("ward", key); !errors.Is(err, ErrNotFound) {
+			t.Errorf("skipping %s gave %v, want ErrNotFound", key, err)
+		}
+	}
+	if err := errors.Join(s.Skip("ward", "1.0"), s.Delivered("ward", 4), s.Skip("ward", "1.4")); err != nil {
+		t.Fatal(err)
+	}
+	state, err := s.OutletState()
+	want := []Outlet{{"other", 0, 6, 0}, {"ward", 5, 1, 4}}
+	if err != nil || !slices.Equal(state, want) {
+		t.Errorf("OutletState gave %v, %v; want %v", state, err, want)
+	}
+	if got := keys(t, s, "other", 10); len(got) != 6 {
+		t.Errorf("the other outlet waits for %v", got)
+	}
+	if _, err := s.Check(t.Context()); err != nil {
+		t.Error(err)
+	}
+}
+
 func TestOutletsMustBeKnown(t *testing.T) {
 	s := create(t, Options{})
 	for name, err := range map[string]error{
 		"Outlets":    s.Outlets(FromEnd, ""),
 		"Delivered":  s.Delivered("bus", 0),
 		"DropOutlet": s.DropOutlet("bus"),
+		"Skip":       s.Skip("bus", "1.0"),
 		"Pending":    func() error { _, err := s.Pending("bus", 1); return err }(),
 	} {
 		if !errors.Is(err, ErrNoOutlet) {
