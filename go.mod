@@ -51,6 +51,7 @@ require (
 	github.com/spf13/pflag v1.0.10 // indirect
 	github.com/synadia-io/orbit.go/natsext v0.1.3 // indirect
 	github.com/twpayne/go-geom v1.6.1 // indirect
+	github.com/wneessen/go-mail v0.8.1 // indirect
 	golang.org/x/crypto v0.58.0 // indirect
 	golang.org/x/image v0.25.0 // indirect
 	golang.org/x/text v0.43.0 // indirect

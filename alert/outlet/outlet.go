@@ -1,8 +1,14 @@
 // Package outlet delivers the steps of alerts.
 //
 // Every outlet has its own queue, kept in the store. A step is delivered at
-// least once, in order, with an idempotency key by which a repeat is known. An
-// outlet that is down delays nothing else: its queue grows until it is back.
+// least once, in order per alert, with an idempotency key by which a repeat is
+// known. An outlet that is down delays nothing else: its queue grows until it
+// is back, or until a person lets go of what waits.
+//
+// Outlets for programs (bus, webhook) get one event a step. Outlets for people
+// (mail, command) are Gatherers: what happened to many series of one indicator
+// at the same time arrives as one notice. That is decided when it is delivered;
+// records know nothing of it.
 package outlet
 
 import (
@@ -17,7 +23,7 @@ import (
 	"tailbell/monitor/store"
 )
 
-// Outlet is one way out.
+// Outlet is one way out. Its methods may be called concurrently.
 type Outlet interface {
 	// Name names the outlet and its queue.
 	Name() string
@@ -25,8 +31,17 @@ type Outlet interface {
 	Deliver(ctx context.Context, n *life.Notice) error
 }
 
-// chunk is how many steps are delivered before the store hears of it.
-const chunk = 100
+// Gatherer is an outlet for people.
+type Gatherer interface {
+	Outlet
+	// DeliverTogether delivers several steps of one kind, taken by themselves at
+	// the same time on different alerts of one indicator, as one notice.
+	DeliverTogether(ctx context.Context, notices []*life.Notice) error
+}
+
+// chunk is how many steps are looked at before the store hears of what was
+// delivered.
+const chunk = 256
 
 // The pauses between tries grow from the first to the longest. Each is drawn
 // from its upper half, so that many senders do not come back at once.
@@ -41,6 +56,9 @@ type Queue struct {
 	outlet Outlet
 	wake   chan struct{}
 	opts   QueueOptions
+	// done are the numbers of steps that were delivered, while one before them
+	// was not.
+	done map[uint64]bool
 
 	mu struct {
 		sync.Mutex
@@ -52,6 +70,11 @@ type Queue struct {
 type QueueOptions struct {
 	// Random spreads the pauses between tries. It must be the queue's own.
 	Random *rand.Rand
+	// Wants says which steps the outlet is told; nil for all. The others are
+	// passed over.
+	Wants func(*life.Notice) bool
+	// Now tells the time of the next try for those who ask; nil for none.
+	Now func() time.Time
 	// Failed, if not nil, is told of every try that failed; it must not block.
 	Failed func(err error, pause time.Duration)
 }
@@ -60,10 +83,11 @@ type QueueOptions struct {
 // that nothing is wrong.
 type Trouble struct {
 	// Tries have failed one after the other, the last with Error; Pause is
-	// then waited before the next.
+	// then waited before the next, which is made at Next.
 	Tries int
 	Error string
 	Pause time.Duration
+	Next  time.Time
 }
 
 // NewQueue returns the queue of an outlet that is registered with the store.
@@ -71,11 +95,39 @@ func NewQueue(st *store.Store, o Outlet, opts QueueOptions) *Queue {
 	if opts.Failed == nil {
 		opts.Failed = func(error, time.Duration) {}
 	}
-	return &Queue{store: st, outlet: o, wake: make(chan struct{}, 1), opts: opts}
+	if opts.Wants == nil {
+		opts.Wants = func(*life.Notice) bool { return true }
+	}
+	return &Queue{store: st, outlet: o, wake: make(chan struct{}, 1), opts: opts, done: map[uint64]bool{}}
 }
 
 // Name is the outlet's name.
 func (q *Queue) Name() string { return q.outlet.Name() }
+
+// Try delivers a notice at once, past what waits: a test of the way out.
+func (q *Queue) Try(ctx context.Context, n *life.Notice) error { return q.outlet.Deliver(ctx, n) }
+
+// Waiting counts the steps that wait to be told, up to a number of steps looked
+// at, and returns the key of the first; more says that there are further ones.
+func (q *Queue) Waiting(most int) (count int, first string, more bool, err error) {
+	after := uint64(0)
+	for looked := 0; ; {
+		rows, err := q.store.PendingAfter(q.Name(), after, chunk)
+		if err != nil || len(rows) == 0 {
+			return count, first, false, err
+		}
+		for i := range rows {
+			if after = rows[i].Number; q.opts.Wants(&rows[i].Notice) {
+				if count++; first == "" {
+					first = rows[i].Notice.Key
+				}
+			}
+		}
+		if looked += len(rows); looked >= most {
+			return count, first, true, nil
+		}
+	}
+}
 
 // Trouble returns why nothing is delivered, if so. It may be called at any
 // time.
@@ -136,6 +188,9 @@ func (q *Queue) fail(err error) time.Duration {
 	t.Tries++
 	t.Error = err.Error()
 	t.Pause = full/2 + time.Duration(q.opts.Random.Int64N(int64(full/2)+1))
+	if q.opts.Now != nil {
+		t.Next = q.opts.Now().Add(t.Pause).UTC()
+	}
 	return t.Pause
 }
 
@@ -162,21 +217,53 @@ func (q *Queue) deliver(ctx context.Context) (more bool, err error) {
 	if err != nil {
 		return false, err
 	}
+	parcels, through := q.pack(rows)
 	var failure error
-	var done uint64
-	for i := range rows {
-		if failure = q.outlet.Deliver(ctx, &rows[i].Notice); failure != nil {
+	for _, p := range parcels {
+		if failure = q.send(ctx, &p); failure != nil {
+			through = p.before
 			break
 		}
-		done = rows[i].Number
 	}
-	if done > 0 {
-		if err := q.store.Delivered(q.outlet.Name(), done); err != nil {
+	if through > 0 {
+		if err := q.store.Delivered(q.outlet.Name(), through); err != nil {
 			return false, err
+		}
+		for n := range q.done {
+			if n <= through {
+				delete(q.done, n)
+			}
 		}
 		q.well()
 	}
 	return len(rows) > 0, failure
+}
+
+// send delivers of a parcel what was not delivered before, when something ahead
+// of it failed.
+func (q *Queue) send(ctx context.Context, p *parcel) (err error) {
+	var notices []*life.Notice
+	for i, n := range p.numbers {
+		if !q.done[n] {
+			notices = append(notices, p.notices[i])
+		}
+	}
+	together, gathers := q.outlet.(Gatherer)
+	switch {
+	case len(notices) == 0:
+		return nil
+	case gathers && len(notices) > 1:
+		err = together.DeliverTogether(ctx, notices)
+	default: // one: nothing else is made of more
+		err = q.outlet.Deliver(ctx, notices[0])
+	}
+	if err != nil {
+		return err
+	}
+	for _, n := range p.numbers {
+		q.done[n] = true
+	}
+	return nil
 }
 
 func sleep(ctx context.Context, d time.Duration) bool {

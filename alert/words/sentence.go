@@ -18,7 +18,7 @@ func Sentence(r *life.Record, e *life.Evidence) string {
 
 // finding is the sentence without the bounds.
 func finding(r *life.Record, e *life.Evidence) string {
-	return place(r) + ": " + counted(e) + " in the " + span(e, zoneOf(r)) + " (" + exposure(e) + lateShare(e) + "); about " +
+	return place(r) + ": " + counted(e) + " in the " + span(e, zoneOf(r)) + " (" + exposure(e) + provisional(e) + lateShare(e) + "); about " +
 		expected(e) + " would be usual. " + chance(e, r.Direction)
 }
 
@@ -52,6 +52,14 @@ func exposure(e *life.Evidence) string {
 		unit = singular(unit)
 	}
 	return grouped(clean(e.Exposure)) + " " + unit
+}
+
+// provisional says that not all of the exposure has been reported yet.
+func provisional(e *life.Evidence) string {
+	if e.Provisional > 0 {
+		return ", provisional"
+	}
+	return ""
 }
 
 func lateShare(e *life.Evidence) string {

@@ -92,6 +92,9 @@ func Line(n *life.Notice) string {
 // which alert.
 func Heading(n *life.Notice) string {
 	zone := zoneOf(&n.Record)
+	if n.Step.Kind == life.StepTest {
+		return stamp(n.Step.At.In(zone)) + "  " + what(n)
+	}
 	return fmt.Sprintf("%s  %s  %s  alert %s",
 		stamp(n.Step.At.In(zone)), what(n), arrow(n.Record.Direction), clean(n.Record.ID))
 }

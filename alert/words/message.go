@@ -1,0 +1,103 @@
+package words
+
+import (
+	"strings"
+
+	"tailbell/monitor/life"
+)
+
+// What is the word for what happened to an alert: "OPENED LATE".
+func What(n *life.Notice) string { return what(n) }
+
+// Direction says with a shape and words where an alert points: "▲ more than
+// usual".
+func Direction(d life.Direction) string { return arrow(d) }
+
+// Place is where a series belongs, in words.
+func Place(r *life.Record) string { return place(r) }
+
+// Span writes the time that a look covers: "28 days to 3 March 2026".
+func Span(r *life.Record, e *life.Evidence) string { return span(e, zoneOf(r)) }
+
+// Moment writes when a step was taken, in the alert's zone.
+func Moment(n *life.Notice) string { return stamp(n.Step.At.In(zoneOf(&n.Record))) }
+
+// CautionOf is the caution that stands on an alert.
+func CautionOf(r *life.Record) string { return caution(r) }
+
+// Subject is one short line that says what happened, and where.
+func Subject(n *life.Notice) string {
+	r := &n.Record
+	text := sentenceCase(what(n)) + ": "
+	switch n.Step.Kind {
+	case life.StepTest:
+		return text + "a trial of this outlet"
+	case life.StepOpened, life.StepWorsened, life.StepReminder, life.StepUnshelved, life.StepCorrected:
+		e := evidenceOf(&n.Step, &r.Worst)
+		return text + counted(e) + ", about " + expected(e) + " usual: " + place(r)
+	case life.StepAcknowledged, life.StepShelved, life.StepReturned, life.StepWithdrawn, life.StepClosed, life.StepNote, life.StepMarked:
+	}
+	return text + subject(r)
+}
+
+// SubjectTogether is that line for several steps of one kind and indicator.
+func SubjectTogether(notices []*life.Notice) string {
+	n := notices[0]
+	return sentenceCase(what(n)) + ": " + Amount(int64(len(notices)), "series") + " of " + titleOf(&n.Record)
+}
+
+// titleOf is the indicator's name for people.
+func titleOf(r *life.Record) string {
+	if r.Title != "" {
+		return clean(r.Title)
+	}
+	return clean(r.Indicator)
+}
+
+// sentenceCase writes a word in capitals as a sentence begins.
+func sentenceCase(s string) string { return capital(strings.ToLower(s)) }
+
+// Fact is a number behind a sentence, with its name.
+type Fact struct{ Name, Value string }
+
+// Facts are the numbers behind the sentences of a step, for a table beside
+// them; none where the record has no evidence.
+func Facts(n *life.Notice) []Fact {
+	r := &n.Record
+	e := evidenceOf(&n.Step, &r.Worst)
+	if e.Window == "" {
+		return nil
+	}
+	rate := measure(e) + " in this window"
+	if e.Chosen {
+		rate += ", chosen because it rang"
+	}
+	lo, hi := pair(e.RateLower*scale(e), e.RateUpper*scale(e))
+	facts := []Fact{
+		{"window", span(e, zoneOf(r))},
+		{"counted", counted(e) + " in " + exposure(e) + provisional(e) + lateShare(e)},
+		{"usual", "about " + expected(e) + "; " + measure(e) + " " + usual(e) + per(e)},
+		{"p of this window", pvalue(log10p(e)) + ", " + odds(log10p(e))},
+		{rate, lo + " to " + hi + per(e) + " (" + level(e.Alpha) + ", exact)"},
+	}
+	if e.Ratio != nil {
+		facts = append(facts, Fact{"ratio to the usual", ratio(e)})
+	}
+	if e.Critical > 0 || r.Direction == life.Lower {
+		facts = append(facts, Fact{"a look signals at", whole(e.Critical) + " (chance " + number(e.AttainedSize) + ")"})
+	}
+	return append(facts, Fact{"alert", clean(r.ID) + ", " + clean(string(r.Condition))})
+}
+
+// ratio is the ratio to what is usual with its exact bounds.
+func ratio(e *life.Evidence) string {
+	text := number(*e.Ratio)
+	if strings.Contains(e.RatioKind, "odds") {
+		text = "odds ratio " + text
+	}
+	if e.RatioUpper == nil {
+		return text + " (at least " + number(e.RatioLower) + ", " + level(e.Alpha) + ", exact)"
+	}
+	lo, hi := pair(e.RatioLower, *e.RatioUpper)
+	return text + " (" + lo + " to " + hi + ", " + level(e.Alpha) + ", exact)"
+}
