@@ -115,7 +115,7 @@ func (l *letter) html() (string, error) {
 	n := l.notices[0]
 	r := &n.Record
 	s := sheet{
-		What: words.What(n), Direction: words.Direction(r.Direction), Moment: words.Moment(n),
+		What: words.What(n), Direction: words.Direction(r.Direction), Moment: words.When(n),
 		Upper: r.Direction == life.Upper, Test: n.Step.Kind == life.StepTest,
 		Caution: words.CautionOf(r), Foot: l.foot(),
 	}

@@ -13,17 +13,11 @@ func What(n *life.Notice) string { return what(n) }
 // usual".
 func Direction(d life.Direction) string { return arrow(d) }
 
-// Place is where a series belongs, in words.
-func Place(r *life.Record) string { return place(r) }
-
 // Span writes the time that a look covers: "28 days to 3 March 2026".
 func Span(r *life.Record, e *life.Evidence) string { return span(e, zoneOf(r)) }
 
-// Moment writes when a step was taken, in the alert's zone.
-func Moment(n *life.Notice) string { return stamp(n.Step.At.In(zoneOf(&n.Record))) }
-
-// CautionOf is the caution that stands on an alert.
-func CautionOf(r *life.Record) string { return caution(r) }
+// When writes when a step was taken, in the alert's zone.
+func When(n *life.Notice) string { return stamp(n.Step.At.In(zoneOf(&n.Record))) }
 
 // Subject is one short line that says what happened, and where.
 func Subject(n *life.Notice) string {
