@@ -33,12 +33,12 @@ var keysOf = map[string][]string{
 	"a window":     {"span", "step"},
 	baselinePlace:  {"series", "from", "to", "kind", "rate", "events", "exposure", "span", "gap", "refresh", "min_events", "margin", "spread", "strata", "delay", "version", "source"},
 	pagePlace:      {"listen", "url", "users", "cert", "key"},
-	outletPlace:    {
+	outletPlace: {
 		"name", "kind", "url", "secret_file", "server", "tls", "ca", "user", "password_file", "from", "to", "picture", "command", "time_limit",
 		"indicators", "series", "tails", "p_at_most", "steps", "history",
 	},
-	"strata":       {"by", "factors"},
-	"delay":        {"ages", "reported"},
+	"strata": {"by", "factors"},
+	"delay":  {"ages", "reported"},
 }
 
 const (

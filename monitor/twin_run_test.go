@@ -225,7 +225,8 @@ func (x *twinTotals) count(w *twin) {
 			x.Returned++
 		case life.StepWithdrawn:
 			x.Withdrawn++
-		case life.StepAcknowledged, life.StepClosed, life.StepNote, life.StepMarked:
+		case life.StepAcknowledged, life.StepClosed, life.StepNote, life.StepMarked,
+			life.StepShelved, life.StepUnshelved, life.StepReminder, life.StepTest:
 		}
 	}
 }

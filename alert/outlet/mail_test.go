@@ -116,7 +116,10 @@ func partOf(t *testing.T, data []byte, want string) string {
 	return strings.ReplaceAll(string(got), "\r\n", "\n")
 }
 
-func plainOf(t *testing.T, data []byte) string { return partOf(t, data, "text/plain") }
+func plainOf(t *testing.T, data []byte) string {
+	t.Helper()
+	return partOf(t, data, "text/plain")
+}
 
 // TestMailSays looks at one message: its headers, its sentences, its link, its
 // picture, and what is not in it.

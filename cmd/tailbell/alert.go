@@ -30,7 +30,7 @@ func newAlertCommand() *cobra.Command {
 		Short: "List and show alerts, and say what was done about them",
 		RunE:  func(c *cobra.Command, _ []string) error { return c.Help() },
 	}
-	c.AddCommand(newAlertListCommand(), newAlertShowCommand(),
+	c.AddCommand(newAlertListCommand(), newAlertShowCommand(), newAlertExportCommand(),
 		newActCommand(monitor.Acknowledge, "Say that somebody has seen an alert and deals with it",
 			"Says that somebody has seen the alert and deals with it. An alert that has returned\nis closed by it; one that still signals closes once it has returned."),
 		newActCommand(monitor.Close, "Close an alert by hand, with the reason",

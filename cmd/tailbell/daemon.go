@@ -5,8 +5,6 @@ import (
 	"errors"
 	"fmt"
 	"io/fs"
-	"math/rand/v2"
-	"net/http"
 	"os"
 	"path/filepath"
 	"sync"
@@ -64,9 +62,11 @@ type part struct {
 type daemonOptions struct {
 	log      zerolog.Logger
 	terminal outlet.Outlet // nil for none
-	maxBatch int
-	busOpts  []bus.Option
-	now      func() time.Time // by which the bus's clock is judged; nil for time.Now
+	// onTerminal says which steps it shows; nil for all.
+	onTerminal func(*life.Notice) bool
+	maxBatch   int
+	busOpts    []bus.Option
+	now        func() time.Time // by which the bus's clock is judged; nil for time.Now
 }
 
 // openDaemon opens the bus and recovers every partition. What fails is closed
@@ -238,45 +238,6 @@ func (d *daemon) openIntake(ctx context.Context, p *part, now func() time.Time) 
 	}
 	p.intake, err = intake.Open(ctx, d.bus, d.setup, p.number, o)
 	return err
-}
-
-// busPatience is how long the bus may take to store a step before the try is
-// said to have failed.
-const busPatience = 15 * time.Second
-
-func (d *daemon) openOutlets(p *part, o daemonOptions, epoch uint64) error {
-	header := map[string][]string{"Tailbell-Owner-Epoch": {fmt.Sprint(epoch)}}
-	outlets := []outlet.Outlet{outlet.NewBus(d.setup.Name, func(ctx context.Context, direction, indicator, key string, event []byte) error {
-		ctx, cancel := context.WithTimeout(ctx, busPatience)
-		defer cancel()
-		_, err := d.bus.PublishAlert(ctx, p.number, direction, indicator, key, event, header)
-		return err
-	})}
-	if o.terminal != nil {
-		outlets = append(outlets, o.terminal)
-	}
-	for _, w := range d.setup.Outlets {
-		out, err := outlet.NewWebhook(outlet.WebhookOptions{
-			Name: w.Name, Deployment: d.setup.Name, URL: w.URL, SecretFile: w.SecretFile,
-			Header: http.Header(header), Now: time.Now,
-		})
-		if err != nil {
-			return err
-		}
-		outlets = append(outlets, out)
-	}
-	for _, out := range outlets {
-		if err := p.store.Outlets(store.FromOldest, out.Name()); err != nil {
-			return err
-		}
-		p.queues = append(p.queues, outlet.NewQueue(p.store, out, outlet.QueueOptions{
-			Random: rand.New(rand.NewPCG(rand.Uint64(), rand.Uint64())),
-			Failed: func(err error, pause time.Duration) {
-				d.log.Error().Err(err).Str("outlet", out.Name()).Dur("again_in", pause).Msg("delivering")
-			},
-		}))
-	}
-	return nil
 }
 
 // full waits before a commit that found no room is tried again.

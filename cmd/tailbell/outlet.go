@@ -15,11 +15,11 @@ import (
 func newOutletCommand() *cobra.Command {
 	c := &cobra.Command{
 		Use:   "outlet",
-		Short: "Let the steps go that wait for an outlet no longer in use",
+		Short: "List and try the ways out, and let go of what waits for one",
 		Args:  cobra.NoArgs,
 		RunE:  func(c *cobra.Command, _ []string) error { return c.Help() },
 	}
-	c.AddCommand(newOutletDropCommand())
+	c.AddCommand(newOutletListCommand(), newOutletTryCommand(), newOutletSkipCommand(), newOutletDropCommand())
 	return c
 }
 

@@ -93,6 +93,9 @@ func runDaemon(ctx context.Context, setup *config.Setup, o runOptions, stdout, s
 	}
 	defer func() { err = errors.Join(err, pages.close()) }()
 	opts := daemonOptions{log: log, terminal: outlet.NewTerminal(stdout, widthOf(stdout), o.asJSON)}
+	if !o.asJSON {
+		opts.onTerminal = forPeople
+	}
 	err = runOnce(ctx, setup, opts, h, pages)
 	for errors.Is(err, errAgain) && ctx.Err() == nil {
 		log.Warn().Err(err).Msg("there is room again: starting the embedded bus again")

@@ -29,7 +29,11 @@ const (
 	verbAct        = "act"          // actRequest -> life.Record
 	verbRefused    = "refused"      // refusedRequest -> []refusedRow
 	verbClock      = "accept-clock" // -> []heldRow
+	verbOutlets    = "outlets"      // -> []outletState
+	verbTryOutlet  = "try-outlet"   // name -> key of the test
+	verbSkipStep   = "skip-step"    // skipRequest ->
 	verbDropOutlet = "drop-outlet"  // name -> steps that waited
+	verbExport     = "export"       // exportRequest -> []exportRow
 	verbCopy       = "copy"         // name of a request -> whether it is done
 	verbResend     = "resend"       // resendRequest -> resendReply
 	verbTrim       = "trim"         // position -> trimReply
@@ -107,6 +111,10 @@ func (d *daemon) verbs() map[string]control.Handler {
 
 		verbClock:      d.acceptClock,
 		verbDropOutlet: answer(d.dropOutlet),
+		verbOutlets:    func(context.Context, []byte) (any, error) { return d.outlets() },
+		verbTryOutlet:  answer(d.tryOutlet),
+		verbSkipStep:   answer(d.skipStep),
+		verbExport:     answer(d.export),
 
 		verbCopy:   answer(d.copyStore),
 		verbResend: answer(d.resend),
