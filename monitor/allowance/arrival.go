@@ -35,7 +35,7 @@ func (x *part) messages(events float64, k int64) []float64 {
 	}
 	rates := make([]float64, min(int64(len(x.plan.Messages)), k))
 	for i, s := range x.plan.Messages {
-		rates[min(i, len(rates)-1)] += float64(events/mean) * s
+		rates[min(i, len(rates)-1)] += float64(float64(events/mean) * s)
 	}
 	return rates
 }
@@ -52,7 +52,7 @@ func clusters(events, phi float64, k int64) []float64 {
 		rates[j-1] = events / (phi - 1) * share
 		all -= share
 	}
-	rates[k-1] += events / (phi - 1) * max(0, all)
+	rates[k-1] += float64(events / (phi - 1) * max(0, all))
 	return rates
 }
 
@@ -79,7 +79,7 @@ func (x *part) boundArrivals(m *model, t *turn, alpha float64) cost {
 	if t.before.size > t.now.size {
 		full = t.before
 	}
-	least, most := x.plan.least()*(1-x.plan.Vary), 1+x.plan.Vary
+	least, most := x.extremes()
 	fresh := t.slots.times(most)
 	var worst cost
 	whole := x.stretches(m, full, least*low, most, alpha, func(k int64, f float64) {

@@ -21,20 +21,29 @@ func (x *part) anywhere(m *model, t *turn, alpha float64) cost {
 	return x.limited(m, worst, alpha, whole)
 }
 
+// extremes are the least and the most that a slot's exposure may be, relative to
+// what is planned for.
+func (x *part) extremes() (least, most float64) {
+	return x.plan.least() * max(0, 1-x.plan.Vary), 1 + x.plan.Vary
+}
+
 // bound is the most that a look can cost whatever the exposures of its slots and
 // the look before it were. Given how much is expected in all, an alert in the
 // upper tail is likeliest where the new slots bring as much of it as they can.
 func (x *part) bound(m *model, t *turn, alpha float64) cost {
-	least, most := x.plan.least()*(1-x.plan.Vary), 1+x.plan.Vary
+	least, most := x.extremes()
+	if t.low > 0 {
+		least *= t.low
+	}
 	varies := x.plan.Vary > 0 || x.plan.least() < 1
 	switch {
 	case varies && t.now.mixed != nil:
 		// Which trials of which slots are more or fewer is not followed up.
 		now := m.critical(t.now, alpha)
 		return x.limited(m, x.crossing(m, t, critical{}, now), alpha, false)
-	case m.known && !m.approx && m.tail == Upper && t.now.mixed == nil:
+	case m.fair && m.tail == Upper && t.now.mixed == nil:
 		// Where new slots nearly always bring an event, its having entered says little.
-		if m.counts(m.nodes[0].rate, x.scaled(t.slots, most)).PMF(0) < 0.02 {
+		if m.counts(m.middle(), x.scaled(t.slots, most)).PMF(0) < 0.02 {
 			return x.limited(m, cost{}, alpha, false)
 		}
 	}
@@ -48,12 +57,11 @@ func (x *part) bound(m *model, t *turn, alpha float64) cost {
 }
 
 // limited takes the limit on p itself as the cost where that is less, or where
-// not every critical count was tried: under a known rate no look signals more
-// often.
+// not every critical count was tried.
 func (x *part) limited(m *model, c cost, alpha float64, whole bool) cost {
 	most := alpha * roundUp
 	switch {
-	case !m.known || m.approx:
+	case !m.fair:
 		return c
 	case !whole:
 		return cost{most, most}
@@ -83,6 +91,9 @@ func (x *part) scaled(l load, f float64) load {
 	}
 	return l.times(f)
 }
+
+// beyond leaves room for rounding on the side of more false alerts.
+const beyond = 1 + 0x1p-40
 
 // manyStretches is how many critical counts a range of exposures may have before
 // they are no longer all tried.
@@ -118,6 +129,13 @@ func (x *part) stretches(m *model, l load, low, high, alpha float64, use func(k 
 // end is the factor between low and high up to which a count signals in the
 // upper tail, or from which on it does in the lower; or a little beyond it.
 func (x *part) end(m *model, l load, low, high float64, k int64, alpha float64) float64 {
+	if law := &m.law; !law.Proportion && !law.Estimated && law.spread() == 1 {
+		mean := float64(m.nodes[0].rate * l.size)
+		if m.tail == Upper {
+			return min(high, max(low, exact.MeanLower(k, alpha)/mean*beyond))
+		}
+		return max(low, min(high, exact.MeanUpper(k, alpha)/mean/beyond))
+	}
 	signals := func(f float64) bool { return exact.AtMost(m.size(x.scaled(l, f), k), alpha) }
 	inside, outside := low, high
 	if m.tail == Lower {

@@ -56,9 +56,6 @@ func (c *Cache) solve(q Plan) (*Limits, error) {
 func (p *Plan) coarser() Plan {
 	q := *p
 	q.Vary = math.Ceil(p.Vary*32) / 32
-	if q.Vary >= 1 {
-		q.Vary = p.Vary
-	}
 	switch l := &q.Law; {
 	case l.Proportion && p.Vary == 0 && p.least() == 1, len(p.Cycle) > 0 && p.Vary == 0:
 		return q // it is solved for just these slots

@@ -40,7 +40,9 @@ type model struct {
 	tail   Tail
 	nodes  []node
 	approx bool // sums of slots have no closed law, and are replaced by one like it
-	known  bool // one true rate, under which the test's p-values are tails
+	// fair is set where p-values are the tails, averaged over the true rates: no
+	// look signals more often than its limit on p.
+	fair bool
 	// sums are the laws of mixed trials at the one rate that is known, by their
 	// first entry.
 	sums map[*trials]*sum
@@ -70,12 +72,15 @@ func timesOdds(theta, factor float64) float64 {
 // newModel is the model of a plan for a window: averaging, or at its assured
 // bound.
 func newModel(p *Plan, tail Tail, window load) *model {
-	m := &model{law: p.Law, tail: tail, known: !p.Law.Estimated}
+	m := &model{law: p.Law, tail: tail}
 	l := &m.law
 	m.approx = l.Proportion && l.spread() > 1 || l.Estimated && (l.spread() > 1 || l.Proportion && len(p.Cycle) > 0)
+	m.fair = !m.approx && (!l.Estimated || p.Assurance == 0)
 	switch {
 	case !l.Estimated:
 		m.nodes = []node{{l.edge(tail, l.Rate), 1}}
+	case l.oneSided(tail):
+		m.nodes = []node{{float64(min(1, l.Events)), 1}}
 	case p.Assurance > 0:
 		m.nodes = []node{{l.edge(tail, l.assured(tail, 1-p.Assurance)), 1}}
 	default:
@@ -87,10 +92,16 @@ func newModel(p *Plan, tail Tail, window load) *model {
 	return m
 }
 
+// oneSided reports a reference beyond which nothing can lie in a tail: without
+// events, or with nothing but events.
+func (l *Law) oneSided(tail Tail) bool {
+	return tail == Lower && l.Events == 0 || tail == Upper && l.Proportion && float64(l.Events) == l.Exposure
+}
+
 // at is the model with one true rate, not yet at the margin's edge.
 func (m *model) at(rate float64) *model {
 	c := *m
-	c.sums = nil
+	c.sums, c.fair = nil, false
 	c.nodes = []node{{m.law.edge(m.tail, rate), 1}}
 	return &c
 }
@@ -252,7 +263,7 @@ func (m *model) far(window load) int64 {
 	if k, _, ok := m.test(window).CriticalUpper(1e-6); ok && m.tail == Upper {
 		return max(k, int64(mean))
 	}
-	return int64(mean + 6*math.Sqrt(mean) + 6)
+	return int64(mean + float64(6*math.Sqrt(mean)) + 6)
 }
 
 // uncertain are the values that an estimated rate may have, by the trapezoid

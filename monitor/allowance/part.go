@@ -10,6 +10,7 @@ type part struct {
 	arrival bool
 	model   *model
 	phases  [][]turn
+	now     load // the window at the beginning of the cycle
 	// looks a year; for arrival looks slots, since their cost is by slot.
 	looks float64
 }
@@ -47,7 +48,10 @@ func (p *Plan) parts() []*part {
 
 // in is the part in one tail.
 func (x part) in(tail Tail, window load) *part {
-	x.tail, x.model = tail, newModel(x.plan, tail, window)
+	x.tail, x.now, x.model = tail, window, newModel(x.plan, tail, window)
+	if x.bounded() && !x.arrival && len(x.plan.Cycle) > 0 && !x.plan.Law.Proportion {
+		x.phases = grouped(x.phases)
+	}
 	return &x
 }
 
@@ -83,17 +87,21 @@ func (x *part) bounded() bool {
 	switch {
 	case x.steady(), x.banded():
 		return x.large() && !x.arrival
-	case x.arrival:
+	case x.arrival, len(x.plan.Cycle)*len(x.model.nodes) > longSums && !x.plan.Law.Proportion:
 		return true
 	}
 	return x.plan.Vary > 0 || x.plan.least() < 1 || x.large()
 }
 
+// longSums is how many crossings a cycle may ask for, over slots and true rates,
+// before they are bounded by groups of slots instead.
+const longSums = 1000
+
 // manyEvents is the expected count of a window from which crossings are bounded
 // rather than summed.
 const manyEvents = 50_000
 
-func (x *part) large() bool { return x.model.mean(x.first().now) > manyEvents }
+func (x *part) large() bool { return x.model.mean(x.now) > manyEvents }
 
 // first is the look at the beginning of the cycle.
 func (x *part) first() *turn { return &x.phases[0][0] }
@@ -106,20 +114,21 @@ func (x *part) costOf(m *model, alpha float64) cost {
 	worst := cost{}
 	for _, turns := range x.phases {
 		var all cost
+		weight := 0.0
 		for i := range turns {
-			c := x.costAt(m, turns, i, alpha)
-			all.look += c.look
+			c, n := x.costAt(m, &turns[i], alpha), turns[i].weight()
+			all.look += float64(n * c.look)
 			all.first = max(all.first, c.first)
+			weight += n
 		}
-		all.look /= float64(len(turns))
+		all.look /= weight
 		worst = worst.atLeast(all)
 	}
 	return worst
 }
 
 // costAt is what one look of the cycle costs.
-func (x *part) costAt(m *model, turns []turn, i int, alpha float64) cost {
-	t := &turns[i]
+func (x *part) costAt(m *model, t *turn, alpha float64) cost {
 	switch {
 	case x.arrival && x.steady():
 		return x.arrivals(m, x.plan.Exposure, m.critical(t.now, alpha))

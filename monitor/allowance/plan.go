@@ -51,7 +51,7 @@ type Plan struct {
 	// [Least Exposure, Exposure]. 0 means 1: it is Exposure.
 	Least float64
 	// Vary says how much each slot's exposure may differ from the others', in any
-	// order: by a factor between 1-Vary and 1+Vary. In [0, 1).
+	// order: by a factor between 1-Vary (0 if that is less) and 1+Vary.
 	Vary float64
 	// Cycle, if any, are factors of the rate (for a proportion, of the odds) of
 	// one slot after the other, again and again.
@@ -91,6 +91,9 @@ func fault(format string, args ...any) error {
 // positive reports a finite number above 0.
 func positive(x float64) bool { return x > 0 && !math.IsInf(x, 0) }
 
+// mostVary is the greatest Vary.
+const mostVary = 1 << 20
+
 // Check says what is wrong with a plan.
 func (p *Plan) Check() error {
 	switch {
@@ -100,8 +103,8 @@ func (p *Plan) Check() error {
 		return fault("%v trials a slot are not a whole number", p.Exposure)
 	case !(p.Least >= 0 && p.Least <= 1):
 		return fault("Least is %v, not from 0 to 1", p.Least)
-	case !(p.Vary >= 0 && p.Vary < 1):
-		return fault("Vary is %v, not at least 0 and under 1", p.Vary)
+	case !(p.Vary >= 0 && p.Vary <= mostVary):
+		return fault("Vary is %v, not from 0 to %v", p.Vary, float64(mostVary))
 	case !positive(p.SlotsPerYear):
 		return fault("a year has %v slots", p.SlotsPerYear)
 	case !positive(p.PerYear):
@@ -115,7 +118,7 @@ func (p *Plan) Check() error {
 	case !p.Upper && !p.Lower:
 		return fault("no tail is watched")
 	}
-	if err := p.Law.check(p.Lower); err != nil {
+	if err := p.Law.check(); err != nil {
 		return err
 	}
 	if err := p.checkProfile(); err != nil {
@@ -124,7 +127,7 @@ func (p *Plan) Check() error {
 	return p.checkWindows()
 }
 
-func (l *Law) check(lower bool) error {
+func (l *Law) check() error {
 	switch {
 	case l.Margin != 0 && !(l.Margin >= 1 && positive(l.Margin)):
 		return fault("a margin of %v is under 1", l.Margin)
@@ -138,9 +141,7 @@ func (l *Law) check(lower bool) error {
 		return nil
 	case l.Events < 0 || l.Events > 1<<40 || !positive(l.Exposure):
 		return fault("a reference of %d events in %v", l.Events, l.Exposure)
-	case l.Events == 0 && lower:
-		return fault("a reference without events has no lower tail")
-	case l.Proportion && (l.Exposure != math.Trunc(l.Exposure) || l.Exposure > 1<<40 || float64(l.Events) >= l.Exposure):
+	case l.Proportion && (l.Exposure != math.Trunc(l.Exposure) || l.Exposure > 1<<40 || float64(l.Events) > l.Exposure):
 		return fault("a reference of %d events in %v trials", l.Events, l.Exposure)
 	}
 	return nil

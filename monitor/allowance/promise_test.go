@@ -3,6 +3,7 @@ package allowance
 import (
 	"math"
 	"math/rand/v2"
+	"slices"
 	"testing"
 	"time"
 
@@ -317,5 +318,51 @@ func BenchmarkSolve(b *testing.B) {
 				}
 			}
 		})
+	}
+}
+
+// TestGroupedSlots: a long cycle is bounded group by group; that is never less
+// than its crossings are, and not much more.
+func TestGroupedSlots(t *testing.T) {
+	cycle := make([]float64, 168)
+	for i := range cycle {
+		cycle[i] = 1 + 0.5*math.Sin(float64(i)*2*math.Pi/24)
+	}
+	p := Plan{
+		Law: Law{Rate: 0.1}, Exposure: 1, Cycle: cycle, Windows: []Window{{Slots: 30, Step: 1, Slot: true}}, Upper: true,
+		SlotsPerYear: 8766, PerYear: 1, Starts: 1,
+	}
+	long := p
+	for range 9 { // the same cycle over and over
+		long.Cycle = append(slices.Clone(cycle), long.Cycle...)
+	}
+	for _, alpha := range []float64{0.01, 1e-3, 1e-5} {
+		exactly, err := Predict(&p, alpha)
+		if err != nil {
+			t.Fatal(err)
+		}
+		grouped, err := Predict(&long, alpha)
+		if err != nil {
+			t.Fatal(err)
+		}
+		a, b := exactly.Parts[0], grouped.Parts[0]
+		if a.Basis != Exact || b.Basis != Bound || b.PerYear < a.PerYear || b.PerYear > 3*a.PerYear || a.Critical != b.Critical {
+			t.Errorf("limit %v: %+v, in groups %+v", alpha, a, b)
+		}
+	}
+}
+
+// TestOneSided: beyond a reference without events nothing lies in the lower tail.
+func TestOneSided(t *testing.T) {
+	p := Plan{
+		Law: Law{Estimated: true, Exposure: 1000}, Exposure: 20, Windows: []Window{{Slots: 28, Step: 1, Slot: true}}, Upper: true, Lower: true,
+		SlotsPerYear: 365.2425, PerYear: 0.2,
+	}
+	for _, vary := range []float64{0, 0.3, 1.5} {
+		p.Vary = vary
+		l, err := Solve(&p)
+		if err != nil || l.Parts[0].Alpha == 0 || l.Parts[1].Alpha != 0 || l.PerYear > 0.2 {
+			t.Errorf("%+v, %v", l, err)
+		}
 	}
 }

@@ -55,7 +55,7 @@ func (p *Plan) coarsen() {
 		return
 	}
 	middle := (low + high) / 2
-	p.Vary = max(high/middle*(1+p.Vary)-1, 1-low/middle*(1-p.Vary))
+	p.Vary = max(float64(high/middle*(1+p.Vary))-1, 1-float64(low/middle*(1-p.Vary)))
 	p.Exposure *= middle
 }
 

@@ -83,6 +83,9 @@ func (x *part) counted() bool { return x.steady() && !x.bounded() }
 // solve returns the largest limit on p whose cost fits into a share of false
 // alerts a year, and the cost; 0 where none does.
 func (x *part) solve(share float64) (alpha, perYear float64) {
+	if x.model.law.Estimated && x.model.law.oneSided(x.tail) {
+		return 0, 0
+	}
 	if x.counted() {
 		return x.solveCount(share)
 	}
@@ -95,7 +98,7 @@ func (x *part) step(alpha, share float64) (next, perYear float64) {
 	if !x.counted() {
 		return x.solve(share)
 	}
-	window := x.first().now
+	window := x.now
 	now := x.model.critical(window, alpha)
 	if !now.ok {
 		return x.solve(share)
@@ -116,7 +119,7 @@ func (x *part) priced(k int64) (alpha, perYear float64, ok bool) {
 	if !x.branch(k) {
 		return 0, 0, false
 	}
-	window := x.first().now
+	window := x.now
 	alpha = x.model.size(window, k)
 	if !(alpha > 0 && alpha < 0.5) {
 		return 0, 0, false
@@ -136,7 +139,7 @@ const ample = 1 + 0x1p-30
 // side of it the window nearly always signals and seldom crosses: the crossings
 // would fit, and say nothing.
 func (x *part) branch(k int64) bool {
-	mean := x.model.mean(x.first().now)
+	mean := x.model.mean(x.now)
 	if x.tail == Upper {
 		return float64(k) > mean && k >= 1
 	}
@@ -153,14 +156,14 @@ func (x *part) solveCount(share float64) (alpha, perYear float64) {
 		}
 		return ok && c <= share
 	}
-	mean := x.model.mean(x.first().now)
+	mean := x.model.mean(x.now)
 	if x.tail == Lower {
 		return x.fewest(fits, mean, &alpha, &perYear)
 	}
 	near := int64(mean) // is not beyond the mean
 	far, stride := near+1, int64(1)
 	for !fits(far) {
-		if a := x.model.size(x.first().now, far); !(a > 0) || far > 1<<40 {
+		if a := x.model.size(x.now, far); !(a > 0) || far > 1<<40 {
 			return 0, 0
 		}
 		near = far
@@ -251,7 +254,7 @@ func (x *part) solveLimit(share float64) (alpha, perYear float64) {
 // more than a few counts, so that a little more exposure than was planned for
 // does not lower a critical count. A bound holds for a range of exposures anyway.
 func (x *part) attained(alpha float64) float64 {
-	m, window := x.model, x.first().now
+	m, window := x.model, x.now
 	switch {
 	case x.bounded():
 		return alpha
@@ -292,7 +295,7 @@ func (x *part) predict(alpha float64) Part {
 	if !(alpha > 0) {
 		return a
 	}
-	window, law := x.first().now, &x.plan.Law
+	window, law := x.now, &x.plan.Law
 	if c := x.model.critical(window, a.Alpha); c.ok {
 		a.Critical, a.HasCritical, a.Size = c.k, true, x.model.size(window, c.k)
 	}

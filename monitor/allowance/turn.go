@@ -10,6 +10,42 @@ type turn struct {
 	// before and now are the windows of the two looks, slots what the new slots
 	// alone bring, and older what the window holds beside them.
 	before, now, slots, older load
+	// alike is how many looks of a cycle it stands for where they are grouped: now
+	// and slots are then the largest of theirs, and low is the smallest window over
+	// the largest.
+	alike int
+	low   float64
+}
+
+// weight is how many looks it stands for.
+func (t *turn) weight() float64 { return float64(max(1, t.alike)) }
+
+// grouped puts together looks whose windows and new slots expect about as much.
+func grouped(phases [][]turn) [][]turn {
+	list := make([][]turn, len(phases))
+	for i, turns := range phases {
+		type key struct{ now, slots float64 }
+		at := map[key]int{}
+		for j := range turns {
+			t := &turns[j]
+			now, _ := nearby(t.now.size * t.now.size) // 32 to the octave
+			slots, _ := nearby(t.slots.size)
+			k := key{now, slots}
+			n, known := at[k]
+			if !known {
+				n = len(list[i])
+				at[k] = n
+				list[i] = append(list[i], turn{now: t.now, slots: t.slots, before: t.now, low: t.now.size})
+			}
+			g := &list[i][n]
+			g.alike++
+			g.now.size, g.slots.size, g.low = max(g.now.size, t.now.size), max(g.slots.size, t.slots.size), min(g.low, t.now.size)
+		}
+		for j := range list[i] {
+			list[i][j].low /= list[i][j].now.size
+		}
+	}
+	return list
 }
 
 // turns are the looks of a window over the plan's cycle, for each phase in which
@@ -18,10 +54,51 @@ func (p *Plan) turns(w Window) [][]turn {
 	length := max(1, len(p.Cycle))
 	apart := divisor(length, w.Step)
 	phases := make([][]turn, apart)
+	look := func(at int) turn { return p.turn(w, at) }
+	if len(p.Cycle) > 1 && len(p.Known) == 0 && !p.Law.Proportion {
+		look = p.sums().turn(w)
+	}
 	for at := range length {
-		phases[at%apart] = append(phases[at%apart], p.turn(w, at))
+		phases[at%apart] = append(phases[at%apart], look(at))
 	}
 	return phases
+}
+
+// sums are the exposures of a cycle's slots, summed from its beginning.
+type sums []float64
+
+func (p *Plan) sums() sums {
+	s := make(sums, len(p.Cycle)+1)
+	for i, f := range p.Cycle {
+		s[i+1] = s[i] + float64(p.Exposure*f)
+	}
+	return s
+}
+
+// upTo is the exposure of the slots before one, which may lie outside the cycle.
+func (s sums) upTo(slot int) float64 {
+	n := len(s) - 1
+	whole := slot / n
+	if slot%n < 0 {
+		whole--
+	}
+	return float64(float64(whole)*s[n]) + s[slot-whole*n]
+}
+
+// turn is Plan.turn where everything is known at once.
+func (s sums) turn(w Window) func(at int) turn {
+	shared := max(0, w.Slots-w.Step)
+	fresh := w.Slots - shared
+	return func(at int) turn {
+		between := func(from, to int) load { return load{size: s.upTo(to) - s.upTo(from)} }
+		end, before := at+1, at+1-w.Step
+		t := turn{
+			leaving: between(before-w.Slots, before-shared), shared: between(before-shared, before), before: between(before-w.Slots, before),
+			slots: between(end-fresh, end), now: between(end-w.Slots, end), older: between(end-w.Slots, end-fresh),
+		}
+		t.entering = t.slots
+		return t
+	}
 }
 
 func divisor(a, b int) int {
