@@ -75,6 +75,7 @@ func (b *Bus) publishChunk(ctx context.Context, chunk []*nats.Msg) (int, error) 
 	}
 	wait := newBackoff()
 	for {
+		before := b.denied.Load()
 		try, cancel := context.WithTimeout(ctx, tryTimeout)
 		_, err := jetstreamext.PublishMsgBatch(try, b.js, chunk, atOnce)
 		cancel()
@@ -84,7 +85,7 @@ func (b *Bus) publishChunk(ctx context.Context, chunk []*nats.Msg) (int, error) 
 		if codeOf(err) == codeBatchOff {
 			return b.publishWindow(ctx, plain(chunk))
 		}
-		if err := b.again(ctx, wait, err); err != nil {
+		if err := b.again(ctx, wait, b.deniedSince(before, err)); err != nil {
 			return 0, err
 		}
 	}
@@ -108,6 +109,7 @@ func (b *Bus) publishWindow(ctx context.Context, chunk []*nats.Msg) (int, error)
 	wait := newBackoff()
 	done := 0
 	for {
+		before := b.denied.Load()
 		stored, err := b.tryWindow(ctx, chunk[done:])
 		done += stored
 		if err == nil {
@@ -116,7 +118,7 @@ func (b *Bus) publishWindow(ctx context.Context, chunk []*nats.Msg) (int, error)
 		if stored > 0 {
 			wait.tries = 0
 		}
-		if err := b.again(ctx, wait, err); err != nil {
+		if err := b.again(ctx, wait, b.deniedSince(before, err)); err != nil {
 			return done, err
 		}
 	}

@@ -89,6 +89,7 @@ type Bus struct {
 	notes    []string
 	atomic   bool         // the input stream takes atomic batches
 	tries    atomic.Int64 // rounds of attempts to come back since the connection was lost
+	denied   atomic.Pointer[denial]
 
 	closing  sync.Once
 	closeErr error
@@ -232,6 +233,7 @@ func (b *Bus) connect(url string, opts []nats.Option, o options) error {
 	wait := newBackoff()
 	base := []nats.Option{
 		nats.Name("tailbell " + b.setup.Name),
+		nats.CustomInboxPrefix(b.names.inbox()),
 		nats.Timeout(connectTimeout),
 		nats.PingInterval(pingInterval),
 		nats.MaxReconnects(-1),
@@ -260,6 +262,7 @@ func (b *Bus) connect(url string, opts []nats.Option, o options) error {
 				b.log.Debug().Err(err).Msg("reading again what did not fit")
 				return
 			}
+			b.noteDenial(err)
 			b.log.Warn().Err(err).Msg("the connection to the bus reports an error")
 		}),
 	}

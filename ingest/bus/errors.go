@@ -17,6 +17,9 @@ var (
 	// ErrStreamDiffers is returned when a stream exists whose settings would
 	// lose or change messages, or that is not Tailbell's.
 	ErrStreamDiffers = errors.New("the stream differs from what is needed")
+	// ErrNotAllowed is returned when the bus refuses the account what is
+	// needed.
+	ErrNotAllowed = errors.New("the bus does not allow this to the account of the set-up")
 )
 
 // Errors of publishing.

@@ -70,12 +70,14 @@ func (b *Bus) message(out Outgoing) (*nats.Msg, error) {
 func (b *Bus) publish(ctx context.Context, msg *nats.Msg) (*jetstream.PubAck, error) {
 	wait := newBackoff()
 	for {
+		before := b.denied.Load()
 		try, cancel := context.WithTimeout(ctx, tryTimeout)
 		ack, err := b.js.PublishMsg(try, msg, jetstream.WithRetryAttempts(0))
 		cancel()
 		if err == nil {
 			return ack, nil
 		}
+		err = b.deniedSince(before, err)
 		if err := b.again(ctx, wait, err); err != nil {
 			return nil, err
 		}
@@ -113,6 +115,9 @@ const (
 
 // passing reports whether trying again can help.
 func passing(err error) bool {
+	if errors.Is(err, ErrNotAllowed) {
+		return false
+	}
 	if code := codeOf(err); code != 0 {
 		return slices.Contains([]jetstream.ErrorCode{
 			codeUnavailable, codeNoPeers, codeNoLeader, codeBatchIncomplete, codeBatchTooMany,

@@ -297,6 +297,9 @@ func (s *Source) attach(ctx context.Context) error {
 		if errors.Is(err, ErrBeyondEnd) || errors.Is(err, ErrStreamReplaced) {
 			return err
 		}
+		if errors.Is(err, ErrNotAllowed) && s.left != "" {
+			err = nats.ErrTimeout // it was allowed before, and may be so again
+		}
 		if err := s.bus.again(ctx, wait, err); err != nil {
 			return fmt.Errorf("reading the stream %s: %w", s.stream, err)
 		}
@@ -315,6 +318,7 @@ func (s *Source) tryAttach(ctx context.Context) error {
 		msgs:     make(chan *nats.Msg, pullMessages+statusRoom),
 		next:     1,
 	}
+	before := s.bus.denied.Load()
 	var err error
 	f.request, err = json.Marshal(map[string]int64{
 		"batch": pullMessages, "max_bytes": max(pullBytes, 2*s.bus.nc.MaxPayload()),
@@ -335,7 +339,7 @@ func (s *Source) tryAttach(ctx context.Context) error {
 		MemoryStorage:     true,
 	})
 	if err != nil {
-		return err
+		return s.bus.deniedSince(before, err)
 	}
 	if err := s.forget(ctx); err != nil {
 		s.bus.log.Debug().Err(err).Msg("starting to read again")

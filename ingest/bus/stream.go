@@ -85,8 +85,9 @@ const fewTries = 5
 func (b *Bus) patiently(ctx context.Context, ask func(context.Context) error) error {
 	wait := newBackoff()
 	for n := 1; ; n++ {
+		before := b.denied.Load()
 		try, cancel := context.WithTimeout(ctx, tryTimeout)
-		err := ask(try)
+		err := b.deniedSince(before, ask(try))
 		cancel()
 		if err == nil || !passing(err) || n == fewTries || ctx.Err() != nil {
 			return err

@@ -60,6 +60,11 @@ func (n names) alertAll() string { return n.deployment + ".alert.>" }
 
 func (n names) control(verb string) string { return n.deployment + ".control." + verb }
 
+// inbox begins the subjects on which this program is answered. It is not that
+// of every client, so that a publisher's account may have its own answers
+// without having ours, which carry the stream.
+func (n names) inbox() string { return "_INBOX." + n.deployment }
+
 // token makes s one token of a subject: what a subject can't hold becomes "_".
 func token(s string) string {
 	if s == "" {
