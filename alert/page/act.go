@@ -7,6 +7,7 @@ import (
 	"net/url"
 	"slices"
 	"strings"
+	"sync"
 	"time"
 
 	"tailbell/monitor"
@@ -91,6 +92,11 @@ func (p *Page) act(w http.ResponseWriter, r *http.Request) {
 		again(http.StatusUnprocessableEntity, wrong, r.PostForm)
 		return
 	}
+	once := r.PostForm.Get("once")
+	if !p.sent.first(once) { // sent twice, as by a second click
+		http.Redirect(w, r, "/alerts/"+url.PathEscape(id)+"#history", http.StatusSeeOther)
+		return
+	}
 	err := p.shelfUntil(r.Context(), act, r.PostForm.Get("for"))
 	if err == nil {
 		err = p.o.Act(r.Context(), act)
@@ -98,6 +104,7 @@ func (p *Page) act(w http.ResponseWriter, r *http.Request) {
 	var refused *RefusedError
 	switch {
 	case errors.As(err, &refused):
+		p.sent.forget(once)
 		again(http.StatusConflict, refused.Why, r.PostForm)
 		return
 	case err != nil:
@@ -113,6 +120,40 @@ func (p *Page) act(w http.ResponseWriter, r *http.Request) {
 		})
 	}
 	http.Redirect(w, r, "/alerts/"+url.PathEscape(id)+"#history", http.StatusSeeOther)
+}
+
+// sent knows the forms that were sent of late, so that none is taken twice. The
+// zero value knows none.
+type sent struct {
+	mu    sync.Mutex
+	forms []string
+}
+
+// maxSent is how many forms are known.
+const maxSent = 1000
+
+// first notes a form and reports whether it is sent for the first time.
+func (s *sent) first(form string) bool {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	if form == "" {
+		return true
+	}
+	if slices.Contains(s.forms, form) {
+		return false
+	}
+	if len(s.forms) == maxSent {
+		s.forms = slices.Delete(s.forms, 0, maxSent/2)
+	}
+	s.forms = append(s.forms, form)
+	return true
+}
+
+// forget lets a form be sent again, as it was not taken.
+func (s *sent) forget(form string) {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	s.forms = slices.DeleteFunc(s.forms, func(old string) bool { return old == form })
 }
 
 // shelfUntil completes an act that shelves: by the clock of the alert's
@@ -175,9 +216,6 @@ func actOf(form url.Values, id string, who Person) (act *monitor.Act, wrong stri
 			return nil, "Choose what it turned out to be."
 		}
 		act.Mark = mark
-	}
-	if at, err := time.Parse(time.RFC3339Nano, form.Get("at")); err == nil {
-		act.At, act.HasAt = monitor.InstantOf(at), true
 	}
 	return act, ""
 }

@@ -2,6 +2,7 @@ package page
 
 import (
 	"context"
+	"crypto/rand"
 	"html/template"
 	"net/http"
 	"net/url"
@@ -38,7 +39,7 @@ type alertData struct {
 	Place               string
 	Caution             string
 	Acts                []actForm
-	By, At              string
+	By, Once            string
 	Problem             string
 	Given               url.Values // what was filled in
 	Marks               []life.Mark
@@ -84,7 +85,7 @@ func (p *Page) alertScreen(r *http.Request, id, wrong string, given url.Values) 
 	if who.MayAct {
 		d.Acts = actsOn(record)
 		d.By = nameOf(r, who, given)
-		d.At = p.o.Now().UTC().Format(time.RFC3339Nano)
+		d.Once = rand.Text()
 	}
 	if err := d.draw(r.Context(), p, record); err != nil {
 		return nil, err

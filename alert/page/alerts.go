@@ -36,7 +36,10 @@ func (p *Page) standing() ([]life.Record, bool, error) {
 	o.mu.Lock()
 	defer o.mu.Unlock()
 	commits, now := p.commits.Load(), p.o.Now()
-	if o.records != nil && (o.commits == commits || now.Sub(o.at) < openAge) {
+	if rest := openAge - now.Sub(o.at); o.records != nil && (o.commits == commits || rest > 0) {
+		if o.commits != commits {
+			p.owe(rest)
+		}
 		return o.records, o.more, nil
 	}
 	records, more := []life.Record{}, false

@@ -75,9 +75,15 @@ func (p *Page) glances(ctx context.Context) (*glances, error) {
 	x := &p.index
 	x.mu.Lock()
 	now, commits := x.now, p.commits.Load()
-	if now != nil && (now.commits == commits || p.o.Now().Sub(now.at) < max(restAtLeast, restAfter*now.took)) {
-		x.mu.Unlock()
-		return now, nil
+	if now != nil {
+		rest := max(restAtLeast, restAfter*now.took) - p.o.Now().Sub(now.at)
+		if now.commits == commits || rest > 0 {
+			x.mu.Unlock()
+			if now.commits != commits {
+				p.owe(rest)
+			}
+			return now, nil
+		}
 	}
 	if !x.building {
 		x.building = true
@@ -94,6 +100,7 @@ func (p *Page) glances(ctx context.Context) (*glances, error) {
 	select {
 	case <-wake:
 	case <-late:
+		p.owe(now.took)
 	case <-ctx.Done():
 		return nil, ctx.Err()
 	}

@@ -11,7 +11,8 @@ import (
 const (
 	// newsApart is the least time between two events of a stream.
 	newsApart = 2 * time.Second
-	// newsAlive is how often a silent stream says that it is alive.
+	// newsAlive is how often a silent stream says what stands: that the machine
+	// is hindered comes without a commit.
 	newsAlive = 20 * time.Second
 	// maxStreams is how many streams are open at a time.
 	maxStreams = 256
@@ -71,7 +72,7 @@ func (p *Page) live(w http.ResponseWriter, r *http.Request) {
 	h.Set("Content-Type", "text/event-stream")
 	h.Set("X-Accel-Buffering", "no")
 	out := http.NewResponseController(w)
-	seen := p.commits.Load()
+	seen := p.changes.Load()
 	send := func(text string) bool {
 		// A server without deadlines needs none to be moved.
 		if err := out.SetWriteDeadline(time.Now().Add(newsAlive * 2)); err != nil && !errors.Is(err, http.ErrNotSupported) {
@@ -91,20 +92,17 @@ func (p *Page) live(w http.ResponseWriter, r *http.Request) {
 		select {
 		case <-stream:
 		case <-alive.C:
-			if !send(": alive\n\n") {
-				return
-			}
-			continue
+			seen--
 		case <-r.Context().Done():
 			return
 		case <-p.ctx.Done():
 			return
 		}
-		commits := p.commits.Load()
-		if commits == seen {
+		changes := p.changes.Load()
+		if changes == seen {
 			continue
 		}
-		seen = commits
+		seen = changes
 		text, err := p.inBrief()
 		if err != nil {
 			p.o.Failed(err)

@@ -64,20 +64,25 @@ func (p *Page) state(ctx context.Context) (*State, error) {
 	m := &p.lastState
 	m.mu.Lock()
 	defer m.mu.Unlock()
-	if now := p.o.Now(); m.state == nil || now.Sub(m.at) >= stateAge {
+	now, commits := p.o.Now(), p.commits.Load()
+	switch rest := stateAge - now.Sub(m.at); {
+	case m.state == nil || rest <= 0:
 		s, err := p.o.State(ctx)
 		if err != nil {
 			return nil, err
 		}
-		m.state, m.at = s, now
+		m.state, m.at, m.commits = s, now, commits
+	case m.commits != commits:
+		p.owe(rest)
 	}
 	return m.state, nil
 }
 
 type lastState struct {
-	mu    sync.Mutex
-	state *State
-	at    time.Time
+	mu      sync.Mutex
+	state   *State
+	at      time.Time
+	commits uint64
 }
 
 const (

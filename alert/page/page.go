@@ -85,6 +85,9 @@ type Page struct {
 	news      news
 	lastState lastState
 	commits   atomic.Uint64
+	changes   atomic.Uint64 // commits, and what was shown too old meanwhile
+	debt      debt
+	sent      sent
 	work      sync.WaitGroup
 	ctx       context.Context //nolint:containedctx // of the work in the background, which Close ends
 	stop      context.CancelFunc
@@ -133,7 +136,37 @@ func (p *Page) ServeHTTP(w http.ResponseWriter, r *http.Request) { p.mux.ServeHT
 // Committed tells the page that something was committed. It returns at once.
 func (p *Page) Committed() {
 	p.commits.Add(1)
+	p.changes.Add(1)
 	p.news.tell()
+}
+
+// debt is news that is owed to those who were shown something old.
+type debt struct {
+	mu   sync.Mutex
+	owed bool
+}
+
+// owe tells the news again when what was now shown too old can be read anew.
+func (p *Page) owe(after time.Duration) {
+	p.debt.mu.Lock()
+	defer p.debt.mu.Unlock()
+	if p.debt.owed {
+		return
+	}
+	p.debt.owed = true
+	p.work.Go(func() {
+		timer := time.NewTimer(after)
+		defer timer.Stop()
+		select {
+		case <-timer.C:
+		case <-p.ctx.Done():
+		}
+		p.debt.mu.Lock()
+		p.debt.owed = false
+		p.debt.mu.Unlock()
+		p.changes.Add(1)
+		p.news.tell()
+	})
 }
 
 // Close ends the work in the background and waits for it.

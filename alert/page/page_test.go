@@ -89,7 +89,8 @@ func TestActsCarryANameAndAreKept(t *testing.T) {
 		t.Errorf("the cookie is %v", cookie)
 	}
 	for _, form := range []url.Values{
-		{"act": {"note"}, "why": {"asked the ward"}},
+		{"act": {"note"}, "why": {"asked the ward"}, "once": {"x1"}},
+		{"act": {"note"}, "why": {"asked the ward"}, "once": {"x1"}}, // a second click
 		{"act": {"mark"}, "why": {"one cause"}, "mark": {"real"}},
 		{"act": {"shelve"}, "why": {"being worked on"}, "for": {"3d"}},
 	} {
@@ -101,6 +102,9 @@ func TestActsCarryANameAndAreKept(t *testing.T) {
 	r, err := s.page.find(id)
 	if err != nil || r.Condition != life.Shelved || r.Mark != life.MarkReal || r.Shelf.Until.Sub(s.engine.Clock().Time()) != 72*time.Hour {
 		t.Fatalf("%v %+v", err, r)
+	}
+	if n := len(r.Steps); n != 6 { // opened, worsened, and four acts
+		t.Errorf("%d steps", n)
 	}
 	request := httptest.NewRequestWithContext(t.Context(), http.MethodGet, target, nil)
 	request.AddCookie(cookie)

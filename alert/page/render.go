@@ -78,7 +78,7 @@ var templates = sync.OnceValue(func() map[string]*template.Template {
 
 var functions = template.FuncMap{
 	"whole":     func(n any) string { return words.Whole(toInt(n)) },
-	"amount":    func(n any, nouns string) string { return words.Amount(toInt(n), nouns) },
+	"amount":    func(n any, nouns string) string { return amount(toInt(n), nouns) },
 	"number":    number,
 	"odds":      words.Odds,
 	"pvalue":    words.PValue,
@@ -94,6 +94,14 @@ var functions = template.FuncMap{
 	"link":      seriesLink,
 	"opened":    func(r *life.Record) time.Time { return r.Opened.In(words.Zone(r)) },
 	"dict":      dict,
+}
+
+// amount writes a number of things; one series is a series.
+func amount(n int64, nouns string) string {
+	if nouns == "series" {
+		return words.Whole(n) + " series"
+	}
+	return words.Amount(n, nouns)
 }
 
 func toInt(n any) int64 {

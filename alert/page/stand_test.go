@@ -61,7 +61,7 @@ type stand struct {
 	now    time.Time
 	person *Person // nil for whoever
 	failed []error
-	mu     sync.Mutex // of the engine
+	mu     sync.Mutex // of the engine and now
 	asked  int        // how often the engine was looked at
 }
 
@@ -81,7 +81,7 @@ func newStand(t *testing.T) *stand {
 		zone: setup.Indicators[0].Zone, now: time.Date(2026, 4, 1, 9, 0, 0, 0, time.UTC),
 	}
 	s.page, err = New(Options{
-		Name: "stand", Act: s.act, State: s.state, Now: func() time.Time { return s.now },
+		Name: "stand", Act: s.act, State: s.state, Now: s.clock,
 		PartOf: func(string) int { return 0 },
 		Who: func(context.Context) Person {
 			if s.person != nil {
@@ -114,6 +114,12 @@ func newStand(t *testing.T) *stand {
 	return s
 }
 
+func (s *stand) clock() time.Time {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	return s.now
+}
+
 // apply feeds one message, and commits it.
 func (s *stand) apply(m *monitor.Message) {
 	s.t.Helper()
@@ -132,8 +138,10 @@ func (s *stand) commit() {
 	if err := s.store.Commit(changes, store.Mark{}); err != nil {
 		s.t.Fatal(err)
 	}
-	s.page.Committed()
+	s.mu.Lock()
 	s.now = s.now.Add(time.Minute) // past what the page keeps for a moment
+	s.mu.Unlock()
+	s.page.Committed()
 }
 
 // day is one day of one ward.

@@ -1,0 +1,201 @@
+package main
+
+import (
+	"fmt"
+	"os"
+	"path/filepath"
+	"strings"
+	"syscall"
+	"testing"
+	"time"
+
+	"github.com/chromedp/chromedp"
+
+	"tailbell/ingest/bus"
+	"tailbell/ingest/wire"
+	"tailbell/monitor"
+)
+
+const pageSetup = `name = "quillmere"
+folder = "data"
+[time]
+mode = "history"
+[page]
+listen = %q
+[[indicator]]
+name = "fall"
+title = "Falls"
+noun = "falls"
+series = ["quillmere-*/*/fall"]
+unit = "bed-days"
+per = 1000
+every = "1d"
+zone = "Europe/Berlin"
+events = "counted"
+settle = "1d"
+horizon = "120d"
+expect = "30d"
+windows = ["7d", "28d"]
+tails = ["upper"]
+p_limit = 0.001
+quiet = 5
+[indicator.baseline]
+kind = "reference"
+events = 60
+exposure = 12000
+source = "invented count of two years"
+`
+
+// wards publishes a day of falls on some wards.
+type wards struct {
+	s   *service
+	day int // since the beginning of 2026
+}
+
+// report publishes so many days: falls on ward 3 as told, else a fall now and
+// then.
+func (w *wards) report(days int, falls func(day int) int) {
+	w.s.t.Helper()
+	zone := w.s.setup().Indicators[0].Zone
+	var lines []string
+	for range days {
+		start := time.Date(2026, 1, 1+w.day, 0, 0, 0, 0, zone)
+		for i, ward := range []string{"quillmere-east/ward-3", "quillmere-east/ward-4", "quillmere-north/stroke-unit", "quillmere-quay/ward-9"} {
+			n := 0
+			if (w.day+3*i)%11 == 4 {
+				n = 1
+			}
+			if i == 0 {
+				n = falls(w.day)
+			}
+			if i == 3 && w.day > 70 {
+				continue // says no more
+			}
+			lines = append(lines, fmt.Sprintf(`{"id":"%s-%d","series":"%s/fall","start":"%s","end":"%s","events":%d,"exposure":20}`,
+				strings.ReplaceAll(ward, "/", "."), w.day, ward, start.Format(time.RFC3339), start.AddDate(0, 0, 1).Format(time.RFC3339), n))
+		}
+		w.day++
+	}
+	w.s.publish(lines...)
+}
+
+func rarely(day int) int {
+	if day%12 == 5 {
+		return 1
+	}
+	return 0
+}
+
+func newPagedService(t *testing.T) (s *service, address string) {
+	t.Helper()
+	address = freeAddress(t)
+	path := filepath.Join(t.TempDir(), "tailbell.toml")
+	text := fmt.Sprintf(pageSetup, address)
+	if err := os.WriteFile(path, []byte(text), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	return newService(t, path), address
+}
+
+// TestPageInABrowser follows an alert as people see it: it appears while they
+// look on, is acknowledged, survives a kill, is marked, shelved, comes back,
+// and returns.
+func TestPageInABrowser(t *testing.T) {
+	s, address := newPagedService(t)
+	b := newBrowser(t, "http://"+address)
+	s.start()
+	s.servesPage(address)
+	w := &wards{s: s}
+	b.open("/")
+	b.shows("No alert stands.", "Silence is no proof of safety", "Caution.")
+	inTab[bool](b, "window.neverReloaded = true")
+	w.report(70, rarely)
+	b.shows("4 series are watched")
+	w.report(6, func(int) int { return 1 })
+	b.shows("Nobody has acknowledged these", "Ward 3, Quillmere East: more falls than usual", "Now 1")
+	if !inTab[bool](b, "window.neverReloaded === true") {
+		t.Error("the alert appeared by loading the page again")
+	}
+
+	b.run("going to the alert", chromedp.Click(`main h3 a`), chromedp.WaitVisible("#act-acknowledge"))
+	id := inTab[string](b, "location.pathname.split('/').pop()")
+	b.run("acknowledging", chromedp.SendKeys("#by-acknowledge", "T. Averin"), chromedp.SendKeys("#why-acknowledge", "on my way"),
+		chromedp.Click(`//button[contains(., "Acknowledge")]`))
+	b.shows("acknowledged by T. Averin: “on my way”")
+
+	s.stop(syscall.SIGKILL)
+	s.start()
+	s.servesPage(address)
+	b.open("/alerts/" + id)
+	b.shows("acknowledged by T. Averin: “on my way”")
+
+	b.run("marking", chromedp.SetValue("#mark-mark", "real"), chromedp.SendKeys("#why-mark", "wet floor"), chromedp.Click(`//form[.//input[@value="mark"]]//button`))
+	b.shows("marked real by T. Averin: “wet floor”")
+	b.run("shelving", chromedp.SetValue("#for-shelve", "3d"), chromedp.SendKeys("#why-shelve", "floor is being changed"), chromedp.Click(`//form[.//input[@value="shelve"]]//button`))
+	b.shows("shelved until", "by T. Averin: “floor is being changed”")
+	w.report(5, func(int) int { return 1 }) // past the shelf's time
+	b.shows("unshelved", "unacknowledged")
+	act := wire.EncodeAct(nil, &monitor.Act{Kind: monitor.Acknowledge, Alert: id, By: "B. Olin"})
+	if _, err := s.dial().Publish(t.Context(), bus.Outgoing{Kind: bus.Act, Data: act}); err != nil {
+		t.Fatal(err)
+	}
+	b.shows("acknowledged by B. Olin")
+	w.report(45, func(int) int { return 0 })
+	b.shows("returned", "returned and acknowledged", "closed")
+	s.stop(syscall.SIGTERM)
+}
+
+// TestEveryScreenInABrowser looks at every screen in three widths and both
+// themes: what it holds, and that axe finds nothing wrong.
+func TestEveryScreenInABrowser(t *testing.T) {
+	s, address := newPagedService(t)
+	b := newBrowser(t, "http://"+address)
+	s.start()
+	s.servesPage(address)
+	w := &wards{s: s}
+	w.report(70, rarely)
+	w.report(45, func(day int) int {
+		if day < 76 || day > 104 {
+			return 1
+		}
+		return 0
+	})
+	s.publish(`{"series":"quillmere-east/ward-3/fall","events":-1}`)
+	s.await("two alerts", func() bool {
+		code, out, _ := run(t, "alert", "list", "--all", "--config", s.path)
+		return code == 0 && strings.Count(out, "quillmere-east/ward-3/fall") == 2
+	})
+	_, out, _ := run(t, "alert", "list", "--config", s.path)
+	id := strings.Fields(strings.Split(out, "\n")[1])[0]
+	s.says(0, nil, "alert", "note", id, "--by", "T. Averin", "--why", "asked the ward")
+	for _, screen := range []struct {
+		name, target string
+		holds        []string
+	}{
+		{"now", "/", []string{"Nobody has acknowledged these", "Returned, but never acknowledged", "What is not being seen"}},
+		{"series", "/series", []string{"Rolled up by the next name part", "Ward 3, Quillmere East: falls", "▲ signals"}},
+		{"one", "/series/one?name=quillmere-east/ward-3/fall&window=7d", []string{
+			"Counts in each window of 7 days", "The rate, with exact bounds", "known only within", "The latest slots", "Alerts",
+		}},
+		{"alert", "/alerts/" + id, []string{"If the usual rate held", "Since the opening look", "note by T. Averin: “asked the ward”", "What you can do"}},
+		{"record", "/alerts", []string{"The record of alerts", "returned", "unacknowledged"}},
+		{"machine", "/machine", []string{"The stream", "Outlets", "Overdue reports", "quillmere-quay/ward-9/fall", "bad_events"}},
+		{"problem", "/nothing", []string{"There is no such page."}},
+	} {
+		b.open(screen.target)
+		b.shows(screen.holds...)
+		for _, width := range []int64{360, 820, 1280} {
+			for _, theme := range []string{"light", "dark"} {
+				b.look(screen.name, screen.target, width, theme)
+			}
+		}
+	}
+
+	b.open("/series")
+	b.run("typing", chromedp.SendKeys("#find", "stroke"))
+	b.shows("Found", "Stroke Unit, Quillmere North: falls", "1 to 1 of 1 series")
+	if !inTab[bool](b, `document.activeElement.id === "find" && location.search === "?find=stroke"`) {
+		t.Error("typing lost the field, or the address does not follow")
+	}
+	s.stop(syscall.SIGTERM)
+}
