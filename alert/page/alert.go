@@ -79,7 +79,11 @@ func (p *Page) alertScreen(r *http.Request, id, wrong string, given url.Values) 
 	}
 	zone := words.Zone(record)
 	for i := range record.Steps {
-		d.Steps = append(d.Steps, stepOf(record, &record.Steps[i], zone))
+		line := stepOf(record, &record.Steps[i], zone)
+		if i > 0 && record.Steps[i].Condition == record.Steps[i-1].Condition {
+			line.Now = ""
+		}
+		d.Steps = append(d.Steps, line)
 	}
 	who := p.o.Who(r.Context())
 	if who.MayAct {

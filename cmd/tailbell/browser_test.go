@@ -25,7 +25,7 @@ var shots = flag.String("page.shots", "", "keep pictures of the page's screens i
 // browser is a tab of a browser that looks at the page of a service.
 type browser struct {
 	t    *testing.T
-	ctx  context.Context
+	ctx  context.Context //nolint:containedctx // of the tab, as the library has it
 	base string
 }
 

@@ -129,9 +129,9 @@ func TestPageInABrowser(t *testing.T) {
 	b.open("/alerts/" + id)
 	b.shows("acknowledged by T. Averin: “on my way”")
 
-	b.run("marking", chromedp.SetValue("#mark-mark", "real"), chromedp.SendKeys("#why-mark", "wet floor"), chromedp.Click(`//form[.//input[@value="mark"]]//button`))
+	b.run("marking", chromedp.Click("#fold-mark > summary"), chromedp.SetValue("#mark-mark", "real"), chromedp.SendKeys("#why-mark", "wet floor"), chromedp.Click(`//form[.//input[@value="mark"]]//button`))
 	b.shows("marked real by T. Averin: “wet floor”")
-	b.run("shelving", chromedp.SetValue("#for-shelve", "3d"), chromedp.SendKeys("#why-shelve", "floor is being changed"), chromedp.Click(`//form[.//input[@value="shelve"]]//button`))
+	b.run("shelving", chromedp.Click("#fold-shelve > summary"), chromedp.SetValue("#for-shelve", "3d"), chromedp.SendKeys("#why-shelve", "floor is being changed"), chromedp.Click(`//form[.//input[@value="shelve"]]//button`))
 	b.shows("shelved until", "by T. Averin: “floor is being changed”")
 	w.report(5, func(int) int { return 1 }) // past the shelf's time
 	b.shows("unshelved", "unacknowledged")
