@@ -125,7 +125,7 @@ Silence is no proof of safety. Local policy decides.`,
 	root.SetHelpCommand(newHelpCommand())
 	root.AddCommand(
 		newAlertCommand(), newBaselineCommand(), newClockCommand(), newConfigCommand(), newDemoCommand(), newExactCommand(), newFeedCommand(), newLimitsCommand(),
-		newOutletCommand(), newRefusedCommand(), newRehearseCommand(), newReplayCommand(), newRunCommand(), newStatusCommand(), newStoreCommand(), newStreamCommand(),
+		newOutletCommand(), newRefusedCommand(), newRehearseCommand(), newReplayCommand(), newReportCommand(), newRunCommand(), newStatusCommand(), newStoreCommand(), newStreamCommand(),
 		newUserCommand(),
 	)
 	checkArguments(root)

@@ -1,6 +1,9 @@
 package plant
 
-import "time"
+import (
+	"errors"
+	"time"
+)
 
 // Report is what a rehearsal came to. Shares lie between 0 and 1, delays are in
 // days, bounds at Level.
@@ -177,3 +180,32 @@ type EpisodeFound struct {
 	Alert     string    `json:"alert,omitempty"`
 	Days      float64   `json:"days,omitempty"`
 }
+
+// Check says what makes no sense in a report that was read from somewhere.
+func (r *Report) Check() error {
+	n := len(r.Setups)
+	inside := func(setup int) bool { return setup >= 0 && setup < n }
+	for _, f := range r.Found {
+		if !inside(f.Setup) {
+			return errNoSetup
+		}
+	}
+	for _, f := range r.False {
+		if !inside(f.Setup) {
+			return errNoSetup
+		}
+	}
+	for _, v := range r.Predict {
+		if !inside(v.Setup) {
+			return errNoSetup
+		}
+	}
+	for _, a := range r.Against {
+		if !inside(a.Setup) {
+			return errNoSetup
+		}
+	}
+	return nil
+}
+
+var errNoSetup = errors.New("a result is of a set-up that is not listed")
