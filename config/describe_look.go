@@ -51,12 +51,37 @@ func (p *prose) allowance(in *Indicator, a *Allowance) {
 	if a.PerIndicator && a.Reserve > 0 {
 		p.line("  Of it %s%% are kept for series yet to come.", number(100*a.Reserve))
 	}
+	const say = "tailbell limits says which counts signal then, and what they find."
+	if a.PerIndicator {
+		p.line("  An alert comes by chance at most about %s over all of them, and %s on each one of ten; %s",
+			onceIn(a.PerYear()), onceIn(a.PerYear()*(1-a.Reserve)/10), say)
+	} else {
+		p.line("  An alert comes by chance at most about %s on a series, and %s on one or another of ten; %s",
+			onceIn(a.PerYear()), onceIn(10*a.PerYear()), say)
+	}
 	switch {
 	case a.Assurance > 0:
 		p.line("  It is kept with %s%% confidence where the usual rate is estimated: critical counts are taken from that end of its bounds at which false alerts are most.", number(100*a.Assurance))
 	case in.estimated():
 		p.line("  Where the usual rate is estimated it is kept on average over what the estimate leaves open: a single series may have several times as many.")
 	}
+}
+
+// onceIn says how often something happens that is expected so many times a year.
+func onceIn(perYear float64) string {
+	switch years := 1 / perYear; {
+	case years > 0.99 && years < 1.01:
+		return "once a year"
+	case years >= 1:
+		return "once in " + about(years) + " years"
+	case years*365.2425 >= 1.5:
+		return "once in " + about(years*365.2425) + " days"
+	case years*365.2425*24 > 0.99 && years*365.2425*24 < 1.01:
+		return "once an hour"
+	case years*365.2425*24 >= 1.5:
+		return "once in " + about(years*365.2425*24) + " hours"
+	}
+	return about(perYear/(365.2425*24)) + " times an hour"
 }
 
 // slotLength is the length of n slots.

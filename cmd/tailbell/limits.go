@@ -102,8 +102,8 @@ func (o *limitsOptions) check() error {
 		return errors.New("--draws is from 100 to 1,000,000")
 	case len(o.ratios) > 20:
 		return errors.New("--ratios takes 20 at most")
-	case !(o.vary >= 0 && o.vary < 1):
-		return fmt.Errorf("--vary is %v: give a number from 0 to under 1, e.g. 0.2", o.vary)
+	case !(o.vary >= 0 && o.vary <= 100):
+		return fmt.Errorf("--vary is %v: give a number from 0 to 100, e.g. 0.2", o.vary)
 	case o.of < 1:
 		return errors.New("--of counts series: 1 or more")
 	case o.set("p-limit") && !(o.pLimit > 0 && o.pLimit < 0.5):

@@ -217,25 +217,36 @@ func compareFloats(a, b float64) int {
 }
 
 // usualExposure is the mean exposure of the slots of the latest year (or longest
-// window), and by how much they differ from it at most.
+// window), and by how much they differ from it at most: upwards any slot, and
+// downwards the mean of any window, for less in single slots of it changes
+// nothing.
 func usualExposure(in *config.Indicator, s *estimate.Series) (exposure, vary float64) {
 	n := int(math.Ceil(in.Every.PerYear()))
 	for _, w := range in.Windows {
 		n = max(n, w.Slots)
 	}
 	slots := s.Slots[max(0, len(s.Slots)-n):]
-	sum := 0.0
+	upTo := make([]float64, len(slots)+1)
+	most := 0.0
 	for i := range slots {
-		sum += slots[i].Exposure
+		upTo[i+1] = upTo[i] + slots[i].Exposure
+		most = max(most, slots[i].Exposure)
 	}
-	exposure = sum / float64(len(slots))
+	exposure = upTo[len(slots)] / float64(len(slots))
 	if in.Measure == config.Proportion {
 		exposure = math.Ceil(exposure)
 	}
-	for i := range slots {
-		vary = max(vary, math.Abs(slots[i].Exposure/exposure-1))
+	vary = most/exposure - 1
+	for _, w := range in.Windows {
+		length := min(w.Slots, len(slots))
+		for i := length; i <= len(slots); i++ {
+			vary = max(vary, 1-(upTo[i]-upTo[i-length])/float64(length)/exposure)
+		}
 	}
-	return exposure, min(vary, 0.95)
+	if vary < 1e-9 {
+		vary = 0 // sums round
+	}
+	return exposure, vary
 }
 
 // countedBy is what a trailing or peers baseline counts at the end of a history.
