@@ -53,6 +53,14 @@ func (c *Calendar) Start(slot int64) Instant {
 	if c.length > 0 {
 		return Instant(slot*c.length - c.shift)
 	}
+	if c.lastStart < c.lastEnd {
+		switch slot {
+		case c.last:
+			return c.lastStart
+		case c.last + 1:
+			return c.lastEnd
+		}
+	}
 	switch c.every.Unit {
 	case config.Day:
 		return c.dayStart(time.Date(1970, 1, 1+int(slot), 0, 0, 0, 0, time.UTC))
@@ -73,8 +81,8 @@ func (c *Calendar) Slot(at Instant) int64 {
 		return floorDiv(int64(at)+c.shift, c.length)
 	}
 	if at < c.lastStart || at >= c.lastEnd {
-		c.last = c.search(at)
-		c.lastStart, c.lastEnd = c.Start(c.last), c.Start(c.last+1)
+		slot := c.search(at)
+		c.lastStart, c.lastEnd, c.last = c.Start(slot), c.Start(slot+1), slot
 	}
 	return c.last
 }

@@ -34,8 +34,13 @@ func (c *cell) list(id string, sign int) {
 type cells []cell
 
 func (cs cells) find(slot int64) (int, bool) {
-	if n := len(cs); n > 0 && cs[n-1].slot == slot {
-		return n - 1, true
+	n := len(cs)
+	if n == 0 || slot > cs[n-1].slot {
+		return n, false
+	}
+	// Most lists have no gaps: the slot's cell is as far from the last.
+	if i := int64(n) - 1 - (cs[n-1].slot - slot); i >= 0 && cs[i].slot == slot {
+		return int(i), true
 	}
 	return slices.BinarySearchFunc(cs, slot, func(c cell, s int64) int {
 		switch {

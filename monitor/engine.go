@@ -255,7 +255,11 @@ func (e *Engine) touch(s *series) {
 }
 
 func (e *Engine) touchSlot(s *series, slot int64) {
+	s.changed(slot)
 	e.touch(s)
+	if e.passing {
+		return
+	}
 	if n := len(s.dirty); n == 0 || s.dirty[n-1] != slot {
 		s.dirty = append(s.dirty, slot)
 	}

@@ -65,24 +65,7 @@ func (ix *indicator) tally(s *series, from, to int64) tally {
 	if ix.cfg.Exposure == config.Census {
 		return ix.tallyCensus(s, from, to)
 	}
-	var t tally
-	inside := s.cells.between(from, to)
-	for i := range inside {
-		c := &inside[i]
-		if ix.needs.paired(c) {
-			t.known++
-		}
-		t.events += c.events
-		t.late += c.late
-		t.exposure = t.exposure.add(c.exposure)
-	}
-	if !ix.needs.events && !ix.needs.exposure {
-		t.known = to - from
-	}
-	if !ix.needs.exposure {
-		t.exposure = ix.clock.between(ix.cal.Start(from), ix.cal.Start(to))
-	}
-	return t
+	return ix.filled(ix.sum(s, from, to), from, to)
 }
 
 // tallyCensus sums the slots in [from, to) where levels are carried forward.
@@ -148,7 +131,7 @@ func (ix *indicator) look(s *series, ep *epoch, window int, boundary int64, at I
 		l.status = filling
 		return l
 	}
-	l.tally = ix.tally(s, from, boundary)
+	l.tally = ix.windowTally(s, window, from, boundary)
 	l.status = ix.judge(s, &l.tally, from, boundary)
 	if l.status != made || l.exposure.IsZero() {
 		return l

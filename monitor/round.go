@@ -37,9 +37,28 @@ func (e *Engine) lookAt(s *series, ep *epoch, boundary int64, due Instant) {
 	if len(looks) == 0 {
 		return
 	}
+	if s.quietAfter(looks) {
+		return
+	}
 	for _, d := range bothTails { // a tail that is watched no longer may still have to return
 		e.decide(s, d, looks, boundary, due)
 	}
+}
+
+// quietAfter reports whether there is nothing to decide: none of the looks
+// signals, and no alert waits for that.
+func (s *series) quietAfter(looks []look) bool {
+	for d := range s.tails {
+		if t := &s.tails[d]; t.current != nil || t.disarmed {
+			return false
+		}
+	}
+	for i := range looks {
+		if looks[i].lit != [2]bool{} {
+			return false
+		}
+	}
+	return true
 }
 
 // note keeps what a look has come to: made, or withheld and why.

@@ -57,6 +57,8 @@ type windowState struct {
 	withheldSince int64
 	// edges are those that the latest look was compared with.
 	edges [2]*edges
+	// running is what the latest look summed.
+	running running
 }
 
 // tail is one direction of a series.
@@ -142,7 +144,8 @@ func (e *Engine) trim(s *series) {
 		e.archive(s, c)
 	}
 	if n > 0 {
-		s.cells = slices.Delete(s.cells, 0, n)
+		clear(s.cells[:n])
+		s.cells = s.cells[n:] // they move when the list has to grow
 		e.touch(s)
 	}
 	s.forget(ix)

@@ -1,0 +1,70 @@
+package monitor
+
+import "tailbell/config"
+
+// running is what the latest look of a window summed, so that the next one only
+// adds the slots that enter and takes off those that leave. It is derived from
+// the cells, and forgotten when one of them changes.
+type running struct {
+	from, to int64
+	tally    tally
+	ok       bool
+}
+
+// windowTally sums the slots [from, to) of a look of the window, from what the
+// look before it summed where that is nearer.
+func (ix *indicator) windowTally(s *series, window int, from, to int64) tally {
+	r := &s.windows[window].running
+	if ix.cfg.Exposure == config.Census || to < r.to && r.ok {
+		return ix.tally(s, from, to)
+	}
+	moved := to - r.to
+	if r.ok && from-r.from == moved && r.from >= s.trimmed && 2*moved < to-from {
+		in, out := ix.sum(s, r.to, to), ix.sum(s, r.from, from)
+		t := &r.tally
+		t.known += in.known - out.known
+		t.events += in.events - out.events
+		t.late += in.late - out.late
+		t.exposure = t.exposure.add(in.exposure).sub(out.exposure)
+	} else {
+		r.tally = ix.sum(s, from, to)
+	}
+	r.from, r.to, r.ok = from, to, true
+	return ix.filled(r.tally, from, to)
+}
+
+// sum sums what the cells in [from, to) hold.
+func (ix *indicator) sum(s *series, from, to int64) tally {
+	var t tally
+	inside := s.cells.between(from, to)
+	for i := range inside {
+		c := &inside[i]
+		if ix.needs.paired(c) {
+			t.known++
+		}
+		t.events += c.events
+		t.late += c.late
+		t.exposure = t.exposure.add(c.exposure)
+	}
+	return t
+}
+
+// filled adds to the sum of [from, to) what needs no cells.
+func (ix *indicator) filled(t tally, from, to int64) tally {
+	if !ix.needs.events && !ix.needs.exposure {
+		t.known = to - from
+	}
+	if !ix.needs.exposure {
+		t.exposure = ix.clock.between(ix.cal.Start(from), ix.cal.Start(to))
+	}
+	return t
+}
+
+// changed forgets the running sums that hold the slot.
+func (s *series) changed(slot int64) {
+	for w := range s.windows {
+		if r := &s.windows[w].running; slot < r.to {
+			r.ok = false
+		}
+	}
+}
