@@ -55,21 +55,32 @@ func (cs cells) find(slot int64) (int, bool) {
 
 // at returns the slot's cell, made if need be; it is valid until the next
 // call.
-func (cs *cells) at(slot int64) *cell {
-	i, ok := cs.find(slot)
+func (s *series) at(slot int64) *cell {
+	i, ok := s.cells.find(slot)
 	if !ok {
-		cs.makeRoom()
-		*cs = slices.Insert(*cs, i, cell{slot: slot})
+		s.makeRoom()
+		s.cells = slices.Insert(s.cells, i, cell{slot: slot})
 	}
-	return &(*cs)[i]
+	return &s.cells[i]
 }
 
-// makeRoom grows a full list by a quarter: there are very many of them, and
-// doubling would leave half their memory unused.
-func (cs *cells) makeRoom() {
-	if n := len(*cs); n == cap(*cs) {
-		*cs = append(make(cells, 0, n+n/4+2), *cs...)
+// makeRoom moves a full list down over the cells that left its array, if they
+// are a fifth of it or more; else it grows by a quarter: there are very many
+// lists, and doubling would leave half their memory unused.
+func (s *series) makeRoom() {
+	n := len(s.cells)
+	if n < cap(s.cells) {
+		return
 	}
+	if gone := cap(s.array) - n; n > 0 && gone >= n/4+1 {
+		all := s.array[:cap(s.array)]
+		copy(all, s.cells)
+		clear(all[n:])
+		s.cells = all[:n]
+		return
+	}
+	s.array = append(make(cells, 0, n+n/4+2), s.cells...)
+	s.cells = s.array
 }
 
 // between returns the cells of the slots in [from, to).

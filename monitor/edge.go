@@ -16,6 +16,8 @@ type edges struct {
 	u   usual
 	// at holds the edges by count, NaN where one is not known yet.
 	at []float64
+	// chances are p-values that were asked for, each in a place by its key.
+	chances []keptChance
 }
 
 // edgeKey is all that the edges depend on.

@@ -44,6 +44,7 @@ type Engine struct {
 	indicators []*indicator
 	series     []*series
 	byName     map[string]*series
+	recent     *series // that was asked for last by its name
 	ids        ids
 	alerts     map[string]*alert
 	// pending are alerts whose evidence was corrected at the present moment.
@@ -65,6 +66,8 @@ type Engine struct {
 	looks  []look // scratch
 	// passing says that nothing stores the engine, see Pass.
 	passing bool
+	// chances sums the p-values of all looks, nil if nobody asked.
+	chances map[*indicator]*[2]Chances
 }
 
 // Partition says which part of all series an engine holds.

@@ -50,10 +50,23 @@ func (e *Engine) observe(o *Observation) (Reason, string) {
 	return "", ""
 }
 
+// named returns the series of this name, nil for none. The one asked for last
+// is asked for again at once, often by the very same text.
+func (e *Engine) named(name string) *series {
+	if e.recent != nil && e.recent.name == name {
+		return e.recent
+	}
+	s := e.byName[name]
+	if s != nil {
+		e.recent = s
+	}
+	return s
+}
+
 // indicatorOf returns the indicator that monitors the series, nil for none,
 // and a second one if it is claimed twice.
 func (e *Engine) indicatorOf(name string) (ix, other *indicator) {
-	if s := e.byName[name]; s != nil {
+	if s := e.named(name); s != nil {
 		return s.indicator, nil
 	}
 	for _, candidate := range e.indicators {
@@ -119,7 +132,7 @@ func (e *Engine) same(ix *indicator, o *Observation, old *identified) bool {
 // would add; its series is nil if it is new.
 func (e *Engine) admit(ix *indicator, o *Observation) (contribution, Reason, string) {
 	c := contribution{
-		series: e.byName[o.Series], start: o.Start, end: o.End,
+		series: e.named(o.Series), start: o.Start, end: o.End,
 		events: o.Events, hasEvents: o.HasEvents, hasExposure: o.HasExposure,
 	}
 	if e.clock != Beginning && o.End > e.clock.Add(ix.cfg.Ahead) {
@@ -279,7 +292,7 @@ func (e *Engine) add(c *contribution, id string, sign int) change {
 		s.seen = e.clock
 	}
 	for slot := from; slot <= to; slot++ {
-		cell := s.cells.at(slot)
+		cell := s.at(slot)
 		if slot == from {
 			cell.items += uint32(sign)
 		}

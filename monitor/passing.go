@@ -65,10 +65,22 @@ func (e *Engine) watch(s *series, l *look) {
 		w.withheld++
 		return
 	}
+	w.made(l.at)
+}
+
+func (w *watch) made(due Instant) {
 	if w.looks++; w.looks == 1 {
-		w.first = l.at
+		w.first = due
 	}
-	w.last = l.at
+	w.last = due
+}
+
+// watched counts a look of the window that was made when due.
+func (e *Engine) watched(s *series, window int, due Instant) {
+	if s.watched == nil {
+		s.watched = make([]watch, len(s.windows))
+	}
+	s.watched[window].made(due)
 }
 
 // Watched returns what was looked at since Pass, by series in order of

@@ -187,7 +187,7 @@ func (e *Engine) overlay(s *series, data []byte) error {
 	r.references(s)
 	for range r.length() {
 		c := r.cell()
-		*s.cells.at(c.slot) = c
+		*s.at(c.slot) = c
 	}
 	if len(r.b) > 0 {
 		r.fail("bytes are left over")

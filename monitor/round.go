@@ -10,7 +10,9 @@ func (e *Engine) lookAll(ix *indicator, boundary int64) {
 	e.refresh(ix, ep, boundary)
 	for _, s := range ix.series {
 		if s.birth < boundary {
-			e.lookAt(s, ep, boundary, due)
+			if !e.quick(s, ep, boundary, due) {
+				e.lookAt(s, ep, boundary, due)
+			}
 			e.trim(s)
 		}
 	}
@@ -30,6 +32,9 @@ func (e *Engine) lookAt(s *series, ep *epoch, boundary int64, due Instant) {
 			e.onLook(ix.view(s, ep, &l))
 		}
 		if l.status == made {
+			if e.chances != nil {
+				e.chance(s, ep, &l)
+			}
 			looks = append(looks, l)
 		}
 	}

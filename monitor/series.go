@@ -24,6 +24,8 @@ type series struct {
 	// seen is the partition's clock when an observation was last counted.
 	seen  Instant
 	cells cells
+	// array is what the cells lie in, at its end.
+	array cells
 	// windows and tails hold what the looks have found, by window and by
 	// direction.
 	windows []windowState

@@ -26,6 +26,7 @@ type replayOptions struct {
 	stream   bool
 	from     string
 	cores    int
+	chances  bool
 	rangeOf  history.Range
 	setups   []*config.Setup
 	tape     *replay.Tape
@@ -75,6 +76,7 @@ each: see "tailbell feed --help" on ids.`,
 	f.StringVar(&o.known, "known", "", "a `FILE` of all episodes known in the history, to hold a comparison against")
 	f.BoolVar(&o.stream, "stream", false, "read the stream on the set-up's bus in the place of files")
 	f.StringVar(&o.from, "from", "", "with --stream: begin at this `POSITION`, or at this time (RFC 3339)")
+	f.BoolVar(&o.chances, "p-values", false, "compute the p-value of every look, and say how they are spread")
 	f.IntVar(&o.cores, "cores", 0, "use so many cores; 0 for all. The results are the same")
 	return c
 }
@@ -139,7 +141,7 @@ func (o *replayOptions) check(args []string) error {
 func (o *replayOptions) play(ctx context.Context, setup *config.Setup, what string) (r *replay.Result, took time.Duration, err error) {
 	bar := newBar(o.err, int64(o.tape.Len()), what)
 	defer bar.end()
-	opts := replay.Options{Workers: o.cores, Progress: func(done, _ int) { bar.set(int64(done), 0) }}
+	opts := replay.Options{Workers: o.cores, Chances: o.chances, Progress: func(done, _ int) { bar.set(int64(done), 0) }}
 	if o.files.until != monitor.Beginning {
 		opts.Until, opts.HasUntil = o.files.until, true
 	}

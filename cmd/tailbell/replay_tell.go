@@ -33,7 +33,7 @@ func (o *replayOptions) summarise(w io.Writer, r *replay.Result, took time.Durat
 		amount(c.Rows, "rows"), from, took.Round(time.Millisecond), c.Faults,
 		amount(kinds[life.StepOpened], "alerts"), kinds[life.StepWorsened],
 		kinds[life.StepCorrected], kinds[life.StepReturned], kinds[life.StepWithdrawn])
-	err = errors.Join(err, o.sayRemarks(w), writeAccount(w, r.Account), writeWatches(w, o.setups[0], r))
+	err = errors.Join(err, o.sayRemarks(w), writeAccount(w, r.Account), writeWatches(w, o.setups[0], r), writeChances(w, r))
 	return errors.Join(err, writeConditions(w, r.Conditions), writeClock(w, r), o.writeRefused(w, r))
 }
 
@@ -71,6 +71,28 @@ func writeWatches(w io.Writer, setup *config.Setup, r *replay.Result) error {
 				short(*x.ASeriesYear.Rate), short(*x.ASeriesYear.Lower), short(*x.ASeriesYear.Upper))
 		}
 		if err := say(w, "%s", text); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+// writeChances says how the p-values of all looks are spread.
+func writeChances(w io.Writer, r *replay.Result) error {
+	for _, c := range r.Chances {
+		tail := "lower"
+		if c.Upper {
+			tail = "upper"
+		}
+		if c.Looks == 0 {
+			continue
+		}
+		var parts []string
+		for i, level := range monitor.ChanceLevels {
+			parts = append(parts, fmt.Sprintf("%s %% at most %g", short(100*float64(c.AtMost[i])/float64(c.Looks)), level))
+		}
+		if err := say(w, "  %s: of %s, %s tail: %s; their mean is %.10g", c.Indicator, amount(c.Looks, "p-values"), tail,
+			strings.Join(parts, ", "), c.Sum/float64(c.Looks)); err != nil {
 			return err
 		}
 	}

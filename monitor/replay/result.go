@@ -24,6 +24,8 @@ type Result struct {
 	// Watched says what each window of each series was looked at, in order of
 	// the series.
 	Watched []monitor.Watched
+	// Chances sum up the p-values of all looks, if they were asked for.
+	Chances []monitor.Chances
 	// Groups is how many engines played, and Whole why it was one; "" if the
 	// tape was divided.
 	Groups  int
@@ -41,6 +43,7 @@ type part struct {
 	due        monitor.Instant
 	hasDue     bool
 	watched    []monitor.Watched
+	chances    []monitor.Chances
 	mostIDs    int
 }
 
@@ -57,6 +60,7 @@ func (x *part) take(e *monitor.Engine, moment monitor.Instant) {
 func (x *part) finish(e *monitor.Engine) {
 	x.account, x.conditions, x.clock, x.watched, x.mostIDs = e.Account(), e.Conditions(), e.Clock(), e.Watched(), e.MostIDs()
 	x.due, x.hasDue = e.NextDue()
+	x.chances = e.Chances()
 }
 
 // merge puts together what the parts found.
@@ -74,6 +78,7 @@ func (p *plan) merge(parts []*part) *Result {
 		r.Conditions = append(r.Conditions, x.conditions...)
 		r.Watched = append(r.Watched, x.watched...)
 		r.Clock = max(r.Clock, x.clock)
+		r.addChances(x.chances)
 		if x.hasDue {
 			r.NextDue, r.HasNext = min(r.NextDue, x.due), true
 		}
@@ -88,4 +93,22 @@ func (p *plan) merge(parts []*part) *Result {
 	})
 	r.Steps = p.steps(parts)
 	return r
+}
+
+// addChances adds the sums of a part, in the order of the parts: sums of
+// floating-point numbers depend on it.
+func (r *Result) addChances(list []monitor.Chances) {
+	for _, c := range list {
+		i := slices.IndexFunc(r.Chances, func(x monitor.Chances) bool { return x.Indicator == c.Indicator && x.Upper == c.Upper })
+		if i < 0 {
+			r.Chances = append(r.Chances, c)
+			continue
+		}
+		x := &r.Chances[i]
+		x.Looks += c.Looks
+		x.Sum += c.Sum
+		for k := range c.AtMost {
+			x.AtMost[k] += c.AtMost[k]
+		}
+	}
 }

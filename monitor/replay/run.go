@@ -22,6 +22,8 @@ type Options struct {
 	Workers int
 	// Whole plays all series by one engine.
 	Whole bool
+	// Chances computes the p-value of every look, for Result.Chances.
+	Chances bool
 	// Progress, if not nil, is called now and then with how many of all rows
 	// have been played; perhaps from several goroutines at once.
 	Progress func(done, of int)
@@ -106,6 +108,9 @@ func (p *plan) run(ctx context.Context, o Options) (r *Result, full bool, err er
 func (pl *player) play(ctx context.Context, g int) error {
 	e := monitor.New(monitor.Partition{Of: 1, KeyParts: pl.setup.KeyParts})
 	e.Pass()
+	if pl.opts.Chances {
+		e.KeepChances()
+	}
 	if pl.opts.Look != nil {
 		e.OnLook(func(v monitor.View) { pl.opts.Look(g, &v) })
 	}

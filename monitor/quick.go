@@ -1,0 +1,113 @@
+package monitor
+
+import (
+	"math"
+
+	"tailbell/config"
+)
+
+// quick makes the looks of one series that fall due at the boundary if they are
+// the usual ones: each window full and known, one slot on from the look before
+// it, and surely not past its edge in any tail that is watched. It reports
+// whether it did; if not, nothing happened but that sums were moved on.
+func (e *Engine) quick(s *series, ep *epoch, boundary int64, due Instant) bool {
+	ix, cfg := s.indicator, ep.cfg
+	if e.onLook != nil || cfg != ix.cfg || !ix.plain(cfg) || s.baseOf != cfg || s.base == nil || s.tails[upper].waits() || s.tails[lower].waits() {
+		return false
+	}
+	b := s.base
+	if b.Strata != nil || b.Delay != nil || b.Spread > 1 && b.Kind == config.Reference || b.Kind == config.Trailing || b.Kind == config.Peers {
+		return false
+	}
+	// The cell that enters all windows; those that leave lie as far before it
+	// as the windows are long, where no slot lacks a cell.
+	in, ok := s.cells.find(boundary - 1)
+	if !ok {
+		return false
+	}
+	for w := range cfg.Windows {
+		if cfg.Windows[w].Step != 1 || !ix.quickLook(s, b, w, in, boundary) {
+			return false
+		}
+	}
+	for w := range s.windows {
+		ws := &s.windows[w]
+		ws.made = boundary
+		e.account.Looks++
+		if e.passing {
+			e.watched(s, w, due)
+		}
+		if e.chances != nil {
+			e.quickChance(s, w)
+		}
+	}
+	return true
+}
+
+// plain reports whether windows of the indicator are sums of reported cells of
+// one rate.
+func (ix *indicator) plain(cfg *config.Indicator) bool {
+	return cfg.Exposure == config.Reported && cfg.Events == config.Counted && cfg.Measure == config.Rate
+}
+
+// waits reports whether an alert waits for the looks to come.
+func (t *tail) waits() bool { return t.current != nil || t.disarmed }
+
+// quickLook moves the window's sum on, and reports whether its look is made and
+// surely does not signal.
+func (ix *indicator) quickLook(s *series, b *config.Baseline, w, in int, boundary int64) bool {
+	ws := &s.windows[w]
+	r := &ws.running
+	length := r.to - r.from
+	out := in - int(length)
+	if !r.ok || ws.withheld != made || !ws.hasMade {
+		return false
+	}
+	if r.to == boundary-1 {
+		if out < 0 || s.cells[out].slot != r.from {
+			return false
+		}
+		r.move(&s.cells[in], &s.cells[out], ix.needs)
+	}
+	t := &r.tally
+	if r.to != boundary || t.known != length || t.exposure.Hi != 0 || t.exposure.Lo == 0 || t.exposure.Lo >= 1<<53 {
+		return false
+	}
+	weighted := float64(t.exposure.Lo) / pow10[ix.cfg.GrainDigits]
+	limit := s.limitsAt(ix.cfg, w, boundary)
+	if ix.cfg.Upper && t.events > 0 && limit[upper] > 0 && !ws.edges[upper].clear(b, limit[upper], upper, t.events, weighted) {
+		return false
+	}
+	return !ix.cfg.Lower || limit[lower] <= 0 || ws.edges[lower].clear(b, limit[lower], lower, t.events, weighted)
+}
+
+// move moves the sum on by one slot.
+func (r *running) move(in, out *cell, needs sides) {
+	t := &r.tally
+	if needs.paired(in) {
+		t.known++
+	}
+	if needs.paired(out) {
+		t.known--
+	}
+	t.events += in.events - out.events
+	t.late += in.late - out.late
+	t.exposure = t.exposure.add(in.exposure).sub(out.exposure)
+	r.from, r.to = r.from+1, r.to+1
+}
+
+// clear reports whether so many events in so much exposure surely do not
+// signal, by an edge that is known already.
+func (x *edges) clear(b *config.Baseline, limit float64, d direction, events int64, weighted float64) bool {
+	if x == nil || x.key.base != b || x.key.limit != limit || events >= int64(len(x.at)) {
+		return false
+	}
+	edge := x.at[events]
+	if math.IsNaN(edge) || edge == asked || math.IsInf(edge, 1) {
+		return false
+	}
+	if d == upper {
+		return weighted > edge+nearEdge*edge
+	}
+	return weighted < edge-nearEdge*edge
+}
