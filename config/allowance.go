@@ -8,9 +8,9 @@ import (
 	"strings"
 )
 
-// allowancesReady says whether the engine keeps allowances and makes arrival
-// looks. Until then a set-up that asks for either is read, and refused.
-const allowancesReady = false
+// arrivalReady says whether the engine makes arrival looks. Until then a set-up
+// that asks for them is read, and refused.
+const arrivalReady = false
 
 // refuseUnready refuses a key that is read but not in use yet.
 func (s section) refuseUnready(name, mend string) {
@@ -69,7 +69,6 @@ func (s section) readAllowance(in *Indicator) *Allowance {
 		}
 		return nil
 	}
-	s.refuseUnready("allowance", "use p_limit")
 	if s.has("p_limit") {
 		s.fault("allowance", "and p_limit exclude each other: the critical counts follow from the one or from the other", "keep one")
 	}
@@ -85,6 +84,15 @@ func (s section) readAllowance(in *Indicator) *Allowance {
 	a.Assurance = s.readAssurance(in)
 	a.Reserve = s.readReserve(a.PerIndicator)
 	return &a
+}
+
+// checkAllowance refuses one for all series where they can't all be seen. s is
+// the indicator's own table.
+func (s section) checkAllowance(in *Indicator, setup *Setup) {
+	if a := in.Allowance; a != nil && a.PerIndicator && setup.Partitions > 1 && !onePartition(in.Series, setup.KeyParts) {
+		s.fault("allowance_for", fmt.Sprintf("series in other partitions can't be seen yet, and there are %d", setup.Partitions),
+			fmt.Sprintf("write partitions = 1, allowance_for = \"series\", or patterns that have the same first %s without a *", counted(setup.KeyParts, "part")))
+	}
 }
 
 func (s section) readAssurance(in *Indicator) float64 {

@@ -38,7 +38,7 @@ func TestUnready(t *testing.T) {
 	}
 	s, err := parse(text, &collector{file: "unready.toml", unready: true})
 	var faults Faults
-	if !errors.As(err, &faults) || len(faults) != 2 || s != nil {
+	if !errors.As(err, &faults) || len(faults) != 1 || s != nil {
 		t.Errorf("not ready, but %v, %v", s, err)
 	}
 	for _, f := range faults {
@@ -46,7 +46,7 @@ func TestUnready(t *testing.T) {
 			t.Error(f)
 		}
 	}
-	if _, err := Parse(text, "unready.toml"); (err == nil) != allowancesReady {
+	if _, err := Parse(text, "unready.toml"); (err == nil) != arrivalReady {
 		t.Errorf("Parse: %v", err)
 	}
 }

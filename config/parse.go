@@ -30,7 +30,7 @@ const (
 // Relative paths are left as they are written. The error is of type Faults and
 // lists everything that is wrong; file is only the name that it gives.
 func Parse(text []byte, file string) (*Setup, error) {
-	return parse(text, &collector{file: file, unready: !allowancesReady})
+	return parse(text, &collector{file: file, unready: !arrivalReady})
 }
 
 func parse(text []byte, c *collector) (*Setup, error) {
@@ -150,6 +150,7 @@ func readIndicators(top section, s *Setup) []Indicator {
 		in := t.readIndicator()
 		t.compareNames(&in, names, patterns)
 		t.checkPeers(&in, s)
+		t.checkAllowance(&in, s)
 		all = append(all, in)
 	}
 	return all

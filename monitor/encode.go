@@ -11,7 +11,14 @@ import (
 // flags, with flagNamed its name and its indicator's, then its head (all that
 // is not a cell), then the cells: all of them in a state, the changed ones in
 // a patch. Integers are varints, strings and lists are prefixed by length.
-const encodingVersion = 1
+const encodingVersion = 2
+
+// withoutLimits is the version of encodings that know no allowances: they are
+// read as such.
+const withoutLimits = 1
+
+// idVersion is that of the encoding of an id.
+const idVersion = 1
 
 const flagNamed = 1
 
@@ -39,6 +46,7 @@ func (s *series) encode(whole bool) []byte {
 		b = s.tails[d].encode(b)
 	}
 	b = s.encodeReferences(b)
+	b = s.encodeLimits(b)
 	if whole {
 		b = binary.AppendUvarint(b, uint64(len(s.cells)))
 		for i := range s.cells {
@@ -148,7 +156,7 @@ func (a *alert) encode(b []byte) []byte {
 }
 
 func (x *identified) encode() []byte {
-	b := []byte{encodingVersion, flag(x.retracted)}
+	b := []byte{idVersion, flag(x.retracted)}
 	b = appendString(b, x.key.site)
 	b = appendString(b, x.key.id)
 	b = binary.AppendVarint(b, x.revision)

@@ -28,6 +28,7 @@ import (
 	"slices"
 
 	"tailbell/config"
+	"tailbell/monitor/allowance"
 	"tailbell/monitor/life"
 )
 
@@ -61,6 +62,12 @@ type Engine struct {
 	steps      []life.Notice
 	settings   []SettingChange
 	checkpoint checkpoint
+
+	// allowances and solutions remember what was solved: they follow from what
+	// is stored.
+	allowances allowance.Cache
+	solved     map[*allowance.Limits]*solution
+	solutions  map[string]*solution
 
 	onLook func(View)
 	looks  []look // scratch

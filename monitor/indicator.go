@@ -36,6 +36,14 @@ type indicator struct {
 	digests map[*config.Baseline]int64
 	// edges are those of known baselines and stated references.
 	edges map[edgeKey]*edges
+	// days are the calendar days that epochs of limits follow, drawn what was
+	// drawn on the reserve in the present one, and total what is predicted.
+	days  *Calendar
+	drawn drawn
+	total total
+	// clocked is what the clock lets expect; exposures is scratch.
+	clocked   clocked
+	exposures []float64
 }
 
 // epoch is one version of an indicator's stanza.
@@ -49,6 +57,8 @@ type epoch struct {
 
 func newIndicator(index int, cfg *config.Indicator) *indicator {
 	ix := &indicator{index: index, cfg: cfg, cal: NewCalendar(cfg.Every, cfg.Zone), nextDue: Never, frozenAt: math.MinInt64, digests: map[*config.Baseline]int64{}}
+	ix.days = NewCalendar(config.Every{N: 1, Unit: config.Day}, cfg.Zone)
+	ix.drawn.epoch = math.MinInt64
 	if cfg.Exposure == config.Clock {
 		ix.clock = newClockRule(cfg.Clock, cfg.GrainDigits)
 	}

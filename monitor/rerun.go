@@ -24,6 +24,7 @@ type change struct {
 func (e *Engine) rerun(c change) {
 	s := c.series
 	ix := s.indicator
+	e.drawNow(s)
 	if c.from >= ix.looked {
 		return // nothing was looked at yet
 	}

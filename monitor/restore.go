@@ -162,8 +162,9 @@ func (t *tail) all() []*alert {
 // overlay lays one encoding over the series.
 func (e *Engine) overlay(s *series, data []byte) error {
 	r := &reader{b: data}
-	if v := r.byte(); v != encodingVersion {
-		return fmt.Errorf("%w: encoding %d is not known to this program", errEncoding, v)
+	version := r.byte()
+	if version != encodingVersion && version != withoutLimits {
+		return fmt.Errorf("%w: encoding %d is not known to this program", errEncoding, version)
 	}
 	if r.byte()&flagNamed != 0 {
 		s.name = r.string()
@@ -185,6 +186,10 @@ func (e *Engine) overlay(s *series, data []byte) error {
 		s.tails[d] = r.tail(s, direction(d))
 	}
 	r.references(s)
+	s.limits = nil
+	if version != withoutLimits {
+		s.limits = r.limits(e)
+	}
 	for range r.length() {
 		c := r.cell()
 		*s.at(c.slot) = c
@@ -258,7 +263,7 @@ func (r *reader) tail(s *series, d direction) tail {
 
 func (e *Engine) restoreID(change *IDChange) error {
 	r := &reader{b: change.Value}
-	if v := r.byte(); v != encodingVersion {
+	if v := r.byte(); v != idVersion {
 		return fmt.Errorf("%w: encoding %d is not known to this program", errEncoding, v)
 	}
 	x := &identified{generation: change.Generation, retracted: r.flag()}

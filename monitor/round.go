@@ -8,6 +8,7 @@ func (e *Engine) lookAll(ix *indicator, boundary int64) {
 	ix.pass(boundary)
 	ep := ix.epochAt(boundary)
 	e.refresh(ix, ep, boundary)
+	e.allot(ix, ep, boundary)
 	for _, s := range ix.series {
 		if s.birth < boundary {
 			if !e.quick(s, ep, boundary, due) {

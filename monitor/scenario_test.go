@@ -218,6 +218,10 @@ func renderBaseline(b *bytes.Buffer, e *life.Evidence) {
 	if f := r.First; f != nil && f.Ratio != nil {
 		add("first reference %d in %s, ratio %.4g", f.Events, f.Exposure, *f.Ratio)
 	}
+	if a := e.Allowance; a != nil {
+		add("limit %.5g for %s on each %s", e.Limit, a.Text, a.For)
+		add("%.4g a year here, %.4g on %d series", a.Here, a.All, a.Series)
+	}
 	if len(words) > 0 || r.Kind != "known" {
 		fmt.Fprintf(b, "    %s: %s\n    %s\n", r.Kind, strings.Join(words, ", "), e.Test)
 	}

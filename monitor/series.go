@@ -37,6 +37,9 @@ type series struct {
 	// horizon were judged by, oldest first; comparator is the first trailing
 	// one, kept to show slow creep beside those that follow.
 	references []reference
+	// limits are those on p that follow from an allowance, for looks inside the
+	// horizon, oldest first.
+	limits     []limits
 	comparator *reference
 	// marked are the spans that people marked real.
 	marked []markedSpan
@@ -161,6 +164,7 @@ func (e *Engine) trim(s *series) {
 // forget drops the estimates and marks that no look will need again.
 func (s *series) forget(ix *indicator) {
 	s.forgetReferences(ix.frozenAt)
+	s.forgetLimits(ix.frozenAt)
 	s.marked = slices.DeleteFunc(s.marked, func(m markedSpan) bool { return m.to <= ix.kept })
 }
 

@@ -116,7 +116,7 @@ func (e *Engine) install(next *config.Setup, version int, from map[string]int64)
 				ix.start(e.clock)
 			}
 		}
-		ix.index, ix.cfg, ix.edges = i, cfg, nil
+		ix.index, ix.cfg, ix.edges, ix.drawn, ix.total = i, cfg, nil, drawn{epoch: math.MinInt64}, total{}
 		if n := len(ix.epochs); n > 0 && ix.epochs[n-1].from >= boundary {
 			ix.epochs = ix.epochs[:n-1]
 		}

@@ -54,6 +54,7 @@ func (w *twin) look(ix *twinIndicator) {
 	due := ix.due(ix.looked + 1)
 	ix.pass(ix.looked + 1)
 	cfg := ix.at(ix.looked)
+	w.allot(ix)
 	for _, s := range ix.series {
 		if s.birth >= ix.looked {
 			continue

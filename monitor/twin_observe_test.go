@@ -230,6 +230,7 @@ func (w *twin) count(ix *twinIndicator, said, old *twinSaid) {
 	for _, s := range touched {
 		before := s.latest()
 		w.sum(s)
+		w.draw(s)
 		changed := w.rebuild(s)
 		s.fallBack(before)
 		for _, d := range bothTails {

@@ -22,6 +22,7 @@ var (
 	twinSeed    = flags.Uint64("twin.seed", 0, "compare engine and twin over the stream of this seed only")
 	twinStreams = flags.Int("twin.streams", 300, "over how many random streams engine and twin are compared")
 	twinLength  = flags.Int("twin.length", 45, "messages in each of those streams")
+	twinShrink  = flags.Bool("twin.shrink", true, "leave out what a disagreement does not need")
 	twinFrom    = flags.Uint64("twin.from", 1, "the first of their seeds")
 )
 
@@ -92,7 +93,10 @@ func runTwin(t *testing.T, seed uint64, totals *twinTotals) {
 	if err == nil {
 		return
 	}
-	small := shrink(messages, seed)
+	small := messages
+	if *twinShrink {
+		small = shrink(messages, seed)
+	}
 	t.Errorf("seed %d (-twin.seed=%d): %v\nshrunk to %d of %d messages: %v\n%s", seed, seed, err,
 		len(small), len(messages), safely(func() error { return compareTwin(small, seed, &twinTotals{}) }), tell(small))
 }
@@ -284,10 +288,6 @@ func agree(e *Engine, w *twin, told *int) error {
 			return fmt.Errorf("refusal %d: engine %+v, twin %+v", i, r, w.refusals[i])
 		}
 	}
-	if err := agreeSteps(e, w, *told); err != nil {
-		return err
-	}
-	*told = len(e.steps)
 	if len(e.series) != len(w.order) {
 		return fmt.Errorf("series: engine %d, twin %d", len(e.series), len(w.order))
 	}
@@ -296,6 +296,10 @@ func agree(e *Engine, w *twin, told *int) error {
 			return fmt.Errorf("series %s: %w", s.name, err)
 		}
 	}
+	if err := agreeSteps(e, w, *told); err != nil {
+		return err
+	}
+	*told = len(e.steps)
 	return nil
 }
 
@@ -374,6 +378,15 @@ func agreeSeries(s *series, t *twinSeries) error {
 	for slot := range t.sums {
 		if _, ok := s.cells.find(slot); !ok && slot >= ix.floor {
 			return fmt.Errorf("slot %d is not held", slot)
+		}
+	}
+	for boundary := ix.looked; !t.ix.frozen(boundary) && boundary > s.birth; boundary-- {
+		cfg := ix.epochAt(boundary).cfg
+		for w := range cfg.Windows {
+			got := s.limitsAt(cfg, w, boundary)
+			if want := [2]float64{t.limitAt(cfg, boundary, w, upper), t.limitAt(cfg, boundary, w, lower)}; got != want {
+				return fmt.Errorf("limits of %s at boundary %d: engine %v, twin %v", cfg.Windows[w].Name, boundary, got, want)
+			}
 		}
 	}
 	for _, d := range bothTails {

@@ -34,7 +34,7 @@ type twinStanza struct {
 	since                                             string
 	settle, horizon, ahead                            time.Duration
 	windows, tails, baseline                          string
-	limit                                             float64
+	limit                                             string
 	quiet                                             int
 	slot                                              time.Duration // about
 	rate                                              float64       // per unit of exposure
@@ -102,7 +102,7 @@ func (g *twinStream) stanza(i int, every, zone string, begin time.Time) twinStan
 		name: fmt.Sprintf("k%d", i), every: every, zone: zone, slot: length[every],
 		events: pick(g, "each", "counted", "counted"), exposure: pick(g, "clock", "reported", "reported"),
 		measure: pick(g, "rate", "rate", "proportion"), ids: pick(g, "kept", "kept", "kept", "none"),
-		limit: pick(g, 0.3, 0.1, 0.05, 0.01), quiet: 1 + g.rng.IntN(4),
+		limit: g.limit(0.15), quiet: 1 + g.rng.IntN(4),
 		tails: pick(g, `"upper"`, `"lower"`, `"upper", "lower"`, `"lower", "upper"`),
 	}
 	if c.measure == "proportion" {
@@ -122,6 +122,18 @@ func (g *twinStream) stanza(i int, every, zone string, begin time.Time) twinStan
 		c.since = from.Time().Format(time.RFC3339)
 	}
 	return c
+}
+
+// limit is a limit on p, or an allowance with that chance.
+func (g *twinStream) limit(allowed float64) string {
+	if !g.chance(allowed) {
+		return fmt.Sprintf("p_limit = %v", pick(g, 0.3, 0.1, 0.05, 0.01))
+	}
+	text := fmt.Sprintf("allowance = %q", pick(g, "4 in 1d", "2 in 1w", "30 in 1mo", "20 in 1y", "500 in 3mo"))
+	if g.chance(0.4) {
+		text += fmt.Sprintf("\nallowance_for = \"indicator\"\nreserve = %v", pick(g, 0.1, 0.5, 0.75))
+	}
+	return text
 }
 
 // windows are up to three windows, some with a step.
@@ -183,7 +195,7 @@ func (c *twinStanza) text() string {
 		fmt.Fprintf(&b, "since = %q\n", c.since)
 	}
 	fmt.Fprintf(&b, "settle = %q\nhorizon = %q\nahead = %q\n", minutes(c.settle), minutes(c.horizon), minutes(c.ahead))
-	fmt.Fprintf(&b, "windows = [%s]\ntails = [%s]\np_limit = %v\nquiet = %d\n[indicator.baseline]\n%s", c.windows, c.tails, c.limit, c.quiet, c.baseline)
+	fmt.Fprintf(&b, "windows = [%s]\ntails = [%s]\n%s\nquiet = %d\n[indicator.baseline]\n%s", c.windows, c.tails, c.limit, c.quiet, c.baseline)
 	return b.String()
 }
 
@@ -255,7 +267,7 @@ func (g *twinStream) write(n int) []Message {
 
 // change changes what a running store can take.
 func (g *twinStream) change(c *twinStanza) {
-	c.limit, c.quiet = pick(g, 0.3, 0.1, 0.05, 0.01), 1+g.rng.IntN(4)
+	c.limit, c.quiet = g.limit(0.3), 1+g.rng.IntN(4)
 	switch g.rng.IntN(6) {
 	case 0:
 		c.settle = min(g.span(c.slot, 0, 3), c.horizon)

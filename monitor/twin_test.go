@@ -9,6 +9,7 @@ import (
 
 	"tailbell/config"
 	"tailbell/exact"
+	"tailbell/monitor/allowance"
 )
 
 // twin is a slow second engine, written from README.md: it keeps all that was
@@ -31,6 +32,7 @@ type twin struct {
 	refusals   []twinRefusal
 	account    Account
 	laws       map[twinLaw]twinP
+	allowances allowance.Cache
 }
 
 type twinIndicator struct {
@@ -39,6 +41,7 @@ type twinIndicator struct {
 	looked int64   // the latest boundary that fell due
 	edge   Instant // where the horizon lay then; it never moves back
 	series []*twinSeries
+	drawn  []twinDraw
 }
 
 type twinEpoch struct {
@@ -47,13 +50,14 @@ type twinEpoch struct {
 }
 
 type twinSeries struct {
-	name  string
-	ix    *twinIndicator
-	birth int64
-	said  []*twinSaid // what stands
-	sums  map[int64]*twinSum
-	looks map[lookKey]twinLook // as they stand, or stood when they left the horizon
-	tails [2]twinTail
+	name   string
+	ix     *twinIndicator
+	birth  int64
+	said   []*twinSaid // what stands
+	sums   map[int64]*twinSum
+	looks  map[lookKey]twinLook // as they stand, or stood when they left the horizon
+	tails  [2]twinTail
+	limits []twinLimits
 }
 
 // twinSaid is one observation that stands.
@@ -332,7 +336,8 @@ func (w *twin) test(s *twinSeries, boundary int64, window int) twinLook {
 		for _, d := range bothTails {
 			if d == upper && cfg.Upper || d == lower && cfg.Lower {
 				l.p[d] = w.p(twinLaw{cfg, cfg.BaselineFor(s.name), d, l.events, l.exposure})
-				l.lit[d] = l.p[d].p <= cfg.PLimit*(1+0x1p-48)
+				limit := s.limitAt(cfg, boundary, window, d)
+				l.lit[d] = limit > 0 && l.p[d].p <= limit*(1+0x1p-48)
 			}
 		}
 	}
