@@ -57,7 +57,7 @@ func TestTwin(t *testing.T) {
 			"alerts": sum.Alerts, "late alerts": sum.Late, "lower alerts": sum.Lower, "withdrawals": sum.Withdrawn,
 			"corrections": sum.Corrected, "returns": sum.Returned, "worsenings": sum.Worsened, "restarts": sum.Restarts,
 		} {
-			if n < 50 {
+			if n < 40 {
 				t.Errorf("only %d %s: the streams test too little", n, kind)
 			}
 		}
