@@ -45,9 +45,6 @@ type Every struct {
 // String returns the length as it is written in a set-up, e.g. "3mo".
 func (e Every) String() string { return fmt.Sprintf("%d%s", e.N, e.Unit) }
 
-// PerYear is how many such lengths there are in a year of 365.2425 days.
-func (e Every) PerYear() float64 { return e.perYear() }
-
 // perYear is how many such lengths there are in a year of 365.2425 days.
 func (e Every) perYear() float64 {
 	const day = 365.2425
