@@ -139,8 +139,11 @@ func Hold(alerts []life.Record, known []Episode, level float64) Record {
 			continue
 		case is:
 			r.Predictive.Count++
-		case a.Condition == life.Withdrawn:
-			r.Withdrawn++
+		default:
+			r.Wrong[tailOf(a.Direction)]++
+			if a.Condition == life.Withdrawn {
+				r.Withdrawn++
+			}
 		}
 		r.Predictive.Of++
 	}
