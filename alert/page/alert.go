@@ -91,9 +91,7 @@ func (p *Page) alertScreen(r *http.Request, id, wrong string, given url.Values) 
 		d.By = nameOf(r, who, given)
 		d.Once = rand.Text()
 	}
-	if err := d.draw(r.Context(), p, record); err != nil {
-		return nil, err
-	}
+	d.draw(r.Context(), p, record)
 	return &screen{name: "alert", Title: title(record), Here: "/alerts", Data: d}, nil
 }
 
@@ -130,9 +128,9 @@ func stepOf(r *life.Record, s *life.Step, zone *time.Location) step {
 }
 
 // draw makes the picture of the alert's opening window around its time: from
-// the looks as the data stand, or, where they have left memory, from the
-// evidence that the record keeps.
-func (d *alertData) draw(ctx context.Context, p *Page, r *life.Record) error {
+// the looks as the data stand, or, where they have left memory or the engine
+// does not answer, from the evidence that the record keeps.
+func (d *alertData) draw(ctx context.Context, p *Page, r *life.Record) {
 	var views []monitor.View
 	var in *config.Indicator
 	err := p.o.Parts[p.o.PartOf(r.Series)].Do(ctx, func(e *monitor.Engine) {
@@ -145,7 +143,7 @@ func (d *alertData) draw(ctx context.Context, p *Page, r *life.Record) error {
 		views = e.Latest(r.Series, r.Opening.Window, pictureEnd(r, e.Clock().Time()), alertLooks)
 	})
 	if err != nil {
-		return err
+		views = nil // the engine does not answer
 	}
 	f := figure.Series{
 		Title: r.Series + ", windows of " + words.Length(r.Opening.Window), Events: words.Noun(&r.Opening), Window: words.Length(r.Opening.Window),
@@ -163,7 +161,6 @@ func (d *alertData) draw(ctx context.Context, p *Page, r *life.Record) error {
 		d.Picture = template.HTML(f.SVG()) //nolint:gosec // figure escapes all text
 		d.Head, d.Rows = f.Columns(), f.Rows()
 	}
-	return nil
 }
 
 // pictureEnd is the last moment that the picture of an alert shows: now, or

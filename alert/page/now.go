@@ -1,8 +1,10 @@
 package page
 
 import (
+	"context"
 	"html/template"
 	"net/http"
+	"slices"
 
 	"tailbell/alert/words"
 	"tailbell/monitor"
@@ -49,13 +51,13 @@ func (p *Page) now(r *http.Request) (*screen, error) {
 		{Title: "Shelved", Text: "Kept quiet for a while, and watched meanwhile."},
 	}
 	const most = 40 // each with a picture
+	away := false   // an engine does not answer
 	for i := range records {
 		s := &kinds[min(urgency(records[i].Condition), 3)]
 		e := entry{Record: &records[i], Sentence: words.Sentence(&records[i], &records[i].Worst), Latest: latestStep(&records[i])}
-		if i < most {
-			if e.Trend, err = p.trend(r.Context(), records[i].Series, records[i].Opening.Window); err != nil {
-				return nil, err
-			}
+		if i < most && !away {
+			e.Trend, err = p.trend(r.Context(), records[i].Series, records[i].Opening.Window)
+			away = err != nil
 		}
 		s.Entries = append(s.Entries, e)
 	}
@@ -64,9 +66,27 @@ func (p *Page) now(r *http.Request) (*screen, error) {
 			d.Sections = append(d.Sections, s)
 		}
 	}
-	g, err := p.glances(r.Context())
+	if !away {
+		away = d.addUnseen(r.Context(), p) != nil
+	}
+	state, err := p.state(r.Context())
 	if err != nil {
 		return nil, err
+	}
+	d.Troubles = state.Troubles
+	if away {
+		d.Troubles = append(slices.Clip(d.Troubles), Trouble{
+			Kind: "no answer", Text: "the engine is too busy, or held up, to say more than what is stored: the alerts below are complete, their pictures are not",
+		})
+	}
+	return &screen{name: "now", Title: "What needs attention now", Here: "/", Data: d}, nil
+}
+
+// addUnseen counts what could not be looked at.
+func (d *nowData) addUnseen(ctx context.Context, p *Page) error {
+	g, err := p.glances(ctx)
+	if err != nil {
+		return err
 	}
 	d.Series = len(g.rows)
 	for kind, n := range g.counts {
@@ -76,12 +96,7 @@ func (p *Page) now(r *http.Request) (*screen, error) {
 			d.Blind += n
 		}
 	}
-	state, err := p.state(r.Context())
-	if err != nil {
-		return nil, err
-	}
-	d.Troubles = state.Troubles
-	return &screen{name: "now", Title: "What needs attention now", Here: "/", Data: d}, nil
+	return nil
 }
 
 // latestStep is what last happened to an alert, but for its opening.

@@ -214,3 +214,30 @@ func TestOwnFilesAreServedUnderTheirVersion(t *testing.T) {
 		}
 	}
 }
+
+// TestAnEngineThatIsHeldUp looks while no engine answers: alerts come from the
+// store, and people are told.
+func TestAnEngineThatIsHeldUp(t *testing.T) {
+	s := newStand(t)
+	id := s.ring().ID
+	s.away = true
+	for target, want := range map[string]string{
+		"/":             "no answer",
+		"/alerts/" + id: "this is what its record keeps",
+		"/alerts":       "more falls than usual",
+	} {
+		code, body := s.get(target)
+		if code != http.StatusOK || !strings.Contains(body, want) || !strings.Contains(body, "more falls than usual") {
+			t.Errorf("%s: %d: %s", target, code, text(body))
+		}
+	}
+	for _, target := range []string{"/series", "/series/one?name=east/ward-2/fall"} {
+		if code, _ := s.get(target); code != http.StatusServiceUnavailable {
+			t.Errorf("%s: %d", target, code)
+		}
+	}
+	if w := s.post("/alerts/"+id, url.Values{"act": {"acknowledge"}, "by": {"T. Averin"}}); w.Code != http.StatusSeeOther {
+		t.Errorf("%d", w.Code)
+	}
+	s.failed = nil // of the index, which was told
+}

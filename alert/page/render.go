@@ -2,6 +2,7 @@ package page
 
 import (
 	"bytes"
+	"context"
 	"crypto/sha256"
 	"embed"
 	"encoding/hex"
@@ -178,7 +179,10 @@ func (p *Page) answer(w http.ResponseWriter, r *http.Request, make func(*http.Re
 
 func (p *Page) trouble(r *http.Request, err error) *screen {
 	var told *problem
-	if !errors.As(err, &told) {
+	if errors.Is(err, context.DeadlineExceeded) {
+		told = &problem{http.StatusServiceUnavailable, "The engine does not answer in time.", "It may be held up: the screen Now says what hinders it. Try again in a moment."}
+	}
+	if told == nil && !errors.As(err, &told) {
 		if r.Context().Err() == nil {
 			p.o.Failed(fmt.Errorf("page: %s: %w", r.URL.Path, err))
 		}

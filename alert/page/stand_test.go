@@ -62,6 +62,7 @@ type stand struct {
 	person *Person // nil for whoever
 	failed []error
 	mu     sync.Mutex // of the engine and now
+	away   bool       // the engine does not answer
 	asked  int        // how often the engine was looked at
 }
 
@@ -94,6 +95,9 @@ func newStand(t *testing.T) *stand {
 			s.mu.Lock()
 			defer s.mu.Unlock()
 			s.asked++
+			if s.away {
+				return context.DeadlineExceeded
+			}
 			look(s.engine)
 			return nil
 		}}},

@@ -83,7 +83,7 @@ func (d *daemon) openPage() error {
 }
 
 // pagePatience is how long the page waits for an engine.
-const pagePatience = 10 * time.Second
+const pagePatience = 3 * time.Second
 
 // actFromPage takes an act as if a command had sent it.
 func (d *daemon) actFromPage(ctx context.Context, act *monitor.Act) error {
@@ -97,7 +97,13 @@ func (d *daemon) actFromPage(ctx context.Context, act *monitor.Act) error {
 
 // stateForPage says how the daemon is doing.
 func (d *daemon) stateForPage(ctx context.Context) (*page.State, error) {
-	r, err := d.status(ctx)
+	asked, cancel := context.WithTimeout(ctx, pagePatience)
+	defer cancel()
+	r, err := d.status(asked)
+	if err != nil && ctx.Err() == nil { // an engine is held up: what is known without it
+		r = &statusReply{Setup: d.setup.Digest, Connected: d.bus.Connected()}
+		r.Troubles, err = d.standing()
+	}
 	if err != nil {
 		return nil, err
 	}

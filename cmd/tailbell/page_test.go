@@ -1,7 +1,11 @@
 package main
 
 import (
+	"errors"
 	"fmt"
+	"io"
+	"net/http"
+	"net/url"
 	"os"
 	"path/filepath"
 	"strings"
@@ -86,11 +90,13 @@ func rarely(day int) int {
 	return 0
 }
 
-func newPagedService(t *testing.T) (s *service, address string) {
+// newPagedService returns a service that serves the page; more stands in its
+// table.
+func newPagedService(t *testing.T, more string) (s *service, address string) {
 	t.Helper()
 	address = freeAddress(t)
 	path := filepath.Join(t.TempDir(), "tailbell.toml")
-	text := fmt.Sprintf(pageSetup, address)
+	text := strings.Replace(fmt.Sprintf(pageSetup, address), "[[indicator]]", more+"\n[[indicator]]", 1)
 	if err := os.WriteFile(path, []byte(text), 0o600); err != nil {
 		t.Fatal(err)
 	}
@@ -101,7 +107,7 @@ func newPagedService(t *testing.T) (s *service, address string) {
 // look on, is acknowledged, survives a kill, is marked, shelved, comes back,
 // and returns.
 func TestPageInABrowser(t *testing.T) {
-	s, address := newPagedService(t)
+	s, address := newPagedService(t, "")
 	b := newBrowser(t, "http://"+address)
 	s.start()
 	s.servesPage(address)
@@ -148,7 +154,7 @@ func TestPageInABrowser(t *testing.T) {
 // TestEveryScreenInABrowser looks at every screen in three widths and both
 // themes: what it holds, and that axe finds nothing wrong.
 func TestEveryScreenInABrowser(t *testing.T) {
-	s, address := newPagedService(t)
+	s, address := newPagedService(t, "")
 	b := newBrowser(t, "http://"+address)
 	s.start()
 	s.servesPage(address)
@@ -197,5 +203,84 @@ func TestEveryScreenInABrowser(t *testing.T) {
 	if !inTab[bool](b, `document.activeElement.id === "find" && location.search === "?find=stroke"`) {
 		t.Error("typing lost the field, or the address does not follow")
 	}
+	s.stop(syscall.SIGTERM)
+}
+
+// TestPageForUsersAlone asks without a token, with a wrong one, and with those
+// of a user who may look and one who may act.
+func TestPageForUsersAlone(t *testing.T) {
+	s, address := newPagedService(t, `users = "who"`)
+	tokens := map[string]string{}
+	for name, role := range map[string]string{"Asha Venn": "act", "audit": "read"} {
+		code, token, complaint := run(t, "user", "add", name, "--role", role, "--config", s.path)
+		if code != 0 {
+			t.Fatal(complaint)
+		}
+		tokens[name] = strings.TrimSpace(token)
+	}
+	s.start()
+	w := &wards{s: s}
+	w.report(70, rarely)
+	w.report(10, func(int) int { return 1 })
+	s.await("an alert", func() bool {
+		code, out, _ := run(t, "alert", "list", "--config", s.path)
+		return code == 0 && strings.Contains(out, "quillmere-east/ward-3/fall")
+	})
+	_, out, _ := run(t, "alert", "list", "--config", s.path)
+	id := strings.Fields(strings.Split(out, "\n")[1])[0]
+	ask := func(method, target, token, form string) (int, string) {
+		t.Helper()
+		req, err := http.NewRequestWithContext(t.Context(), method, "http://"+address+target, strings.NewReader(form))
+		if err != nil {
+			t.Fatal(err)
+		}
+		if form != "" {
+			req.Header.Set("Content-Type", "application/x-www-form-urlencoded")
+		}
+		if token != "" {
+			req.Header.Set("Authorization", "Bearer "+token)
+		}
+		answer, err := http.DefaultClient.Do(req)
+		if err != nil {
+			t.Fatal(err)
+		}
+		text, err := io.ReadAll(answer.Body)
+		if err := errors.Join(err, answer.Body.Close()); err != nil {
+			t.Fatal(err)
+		}
+		return answer.StatusCode, string(text)
+	}
+	for _, token := range []string{"", tokens["audit"] + "x", strings.Replace(tokens["Asha Venn"], "token-", "token-x", 1)} {
+		for _, target := range []string{"/", "/series", "/alerts/" + id, "/alerts/other", "/machine", "/live", "/series/one?name=quillmere-east/ward-3/fall"} {
+			code, text := ask(http.MethodGet, target, token, "")
+			for _, secret := range []string{"Ward", "ward", "falls", id, "waiting"} {
+				if strings.Contains(strings.ReplaceAll(text, url.QueryEscape(target), ""), secret) && !strings.Contains(target, secret) {
+					t.Errorf("%s with a wrong token (%d) shows %q:\n%s", target, code, secret, text)
+				}
+			}
+			if token != "" && code != http.StatusUnauthorized && code != http.StatusTooManyRequests {
+				t.Errorf("%s with a wrong token: %d", target, code)
+			}
+		}
+	}
+	if code, text := ask(http.MethodGet, "/alerts/"+id, tokens["audit"], ""); code != http.StatusOK || !strings.Contains(text, "You may look, but not act.") || strings.Contains(text, "<textarea") {
+		t.Errorf("who may look: %d", code)
+	}
+	if code, _ := ask(http.MethodPost, "/alerts/"+id, tokens["audit"], "act=note&why=x"); code != http.StatusForbidden {
+		t.Errorf("an act of one who may look: %d", code)
+	}
+	if code, text := ask(http.MethodPost, "/alerts/"+id, tokens["Asha Venn"], "act=note&why=asked&by=somebody+else"); code != http.StatusOK || !strings.Contains(text, "by Asha Venn: &ldquo;asked&rdquo;") {
+		t.Errorf("an act of one who may act: %d: %s", code, text)
+	}
+
+	b := newBrowser(t, "http://"+address)
+	b.open("/alerts/" + id)
+	b.shows("Sign in to Tailbell")
+	b.run("signing in", chromedp.SendKeys("#token", tokens["Asha Venn"]), chromedp.Click("button"))
+	b.shows("Ward 3, Quillmere East: more falls than usual", "Asha Venn", "By Asha Venn")
+	b.run("acknowledging", chromedp.Click(`//button[contains(., "Acknowledge")]`))
+	b.shows("acknowledged by Asha Venn")
+	b.run("signing out", chromedp.Click(".leave button"))
+	b.shows("Sign in to Tailbell")
 	s.stop(syscall.SIGTERM)
 }
