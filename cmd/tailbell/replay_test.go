@@ -193,8 +193,10 @@ func TestReplayOfOddRows(t *testing.T) {
 		{"gap", head + row(1, "0") + row(4, "1"), 3, []string{"h.csv:3: gap: q/w/falls: no events for 2 slots of 1d, from 2024-03-02 until 2024-03-04", "2 gaps"}},
 		{"twice", head + row(1, "0") + row(1, "0"), 3, []string{"h.csv:3: duplicate: h.csv:2 says the same", "1 duplicate"}},
 		{"unsorted", head + row(2, "0") + row(1, "0"), 3, []string{"h.csv:3: out_of_order: h.csv:2 became known later", "1 row out of order"}},
-		{"offsets", head + row(1, "0") + "q/w/falls,2024-03-02T01:00:00+01:00,2024-03-03T01:00:00+01:00,0,20\n", 3,
-			[]string{"h.csv:3: mixed_offsets: its times have the offset +01:00, those above Z", "1 row with another offset"}},
+		{
+			"offsets", head + row(1, "0") + "q/w/falls,2024-03-02T01:00:00+01:00,2024-03-03T01:00:00+01:00,0,20\n", 3,
+			[]string{"h.csv:3: mixed_offsets: its times have the offset +01:00, those above Z", "1 row with another offset"},
+		},
 	} {
 		t.Run(c.name, func(t *testing.T) {
 			if err := os.WriteFile("h.csv", []byte(c.text), 0o600); err != nil {

@@ -41,6 +41,13 @@ func daemonsDay(t *testing.T, g *bustest.Guarded) (err error) {
 	if _, err := b.PublishAlert(ctx, 0, "upper", "fall", "key", []byte("{}"), nil); err != nil {
 		return err
 	}
+	serve, err := control.Serve(ctx, b, map[string]control.Handler{"status": func(context.Context, []byte) (any, error) { return "fine", nil }})
+	if err == nil {
+		err = errors.Join(control.Call(ctx, b, "status", nil, nil), serve.Close())
+	}
+	if err != nil {
+		return err
+	}
 	s, err := b.Source(ctx, 0, 0)
 	if err != nil {
 		return err

@@ -119,12 +119,14 @@ func Open(ctx context.Context, setup *config.Setup, opts ...Option) (*Bus, error
 }
 
 func newBus(setup *config.Setup, o options) *Bus {
-	return &Bus{
+	b := &Bus{
 		setup:  setup,
 		names:  names{setup.Name},
 		closed: make(chan struct{}),
 		log:    o.log.With().Str("part", "bus").Logger(),
 	}
+	b.denied.Store(&denial{next: make(chan struct{})})
+	return b
 }
 
 // open does what Open does once the lock is held.

@@ -26,7 +26,7 @@ func Call(ctx context.Context, b *bus.Bus, verb string, arg, result any) error {
 	if err != nil {
 		return err
 	}
-	msg, err := b.Conn().RequestWithContext(ctx, b.ControlSubject(verb), data)
+	msg, err := b.Request(ctx, b.ControlSubject(verb), data)
 	switch {
 	case errors.Is(err, nats.ErrNoResponders):
 		return Errorf(NoAnswer, "no daemon answers %q: is it running, and of the same version?", verb)
