@@ -41,8 +41,10 @@ type Cell struct {
 	Windows []int
 	Lower   bool
 	Upper   bool
-	// Allowance is as in a set-up; Assurance too.
+	// Allowance is as in a set-up; Assurance too. If Shared, it is one for all the
+	// series that share an engine.
 	Allowance string
+	Shared    bool
 	Assurance float64
 	// Limit, if not 0, is a limit on p from a solver that is not the engine's,
 	// and Told how many false alerts a year that solver says it brings.
@@ -165,6 +167,9 @@ func (c *Cell) setup(series int, references []int64) (*config.Setup, error) {
 		line("p_limit = 0.001")
 	default:
 		line("allowance = %q", c.Allowance)
+		if c.Shared {
+			line(`allowance_for = "indicator"`)
+		}
 		if c.Assurance > 0 {
 			line("assurance = %v", c.Assurance)
 		}

@@ -32,15 +32,17 @@ func steady() []Cell {
 	three := func(name string, mean float64, allowance string, length int, tails func(Cell) Cell) Cell {
 		return years(length, tails(Cell{Name: name, Rate: mean / 28, Windows: []int{7, 28, 365}, Allowance: allowance}))
 	}
+	shared := one("one allowance for 50 series: 28d, mean 2", 2, 28, "75 in 1y", 20*5*together, upper)
+	shared.Shared = true
 	return []Cell{
 		one("7d, mean 0.1", 0.1, 7, "8 in 1y", 900, upper),
 		one("7d, mean 2", 2, 7, "4 in 1y", 1600, upper),
 		one("7d, mean 50", 50, 7, "4 in 1y", 1200, upper),
 		one("28d, mean 0.1", 0.1, 28, "2 in 1y", 3500, upper),
 		one("28d, mean 2", 2, 28, "3 in 1y", 1800, upper),
-		one("28d, mean 2, 1 in 5y", 2, 28, "1 in 5y", 46000, upper),
+		one("28d, mean 2, 1 in 5y", 2, 28, "1 in 5y", 10000, upper),
 		one("28d, mean 50", 50, 28, "2 in 1y", 2200, upper),
-		one("365d, mean 0.1", 0.1, 365, "1 in 1y", 40000, upper),
+		one("365d, mean 0.1", 0.1, 365, "1 in 1y", 10000, upper),
 		one("365d, mean 2", 2, 365, "0.8 in 1y", 6600, upper),
 		one("365d, mean 50", 50, 365, "0.8 in 1y", 5000, upper),
 		one("7d, mean 50, lower", 50, 7, "4 in 1y", 1200, lower),
@@ -49,6 +51,7 @@ func steady() []Cell {
 		one("28d, mean 20, both tails", 20, 28, "4 in 1y", 1200, both),
 		three("7d, 28d, 365d; mean 2 in 28d", 2, "4 in 1y", 1400, upper),
 		three("7d, 28d, 365d; mean 20 in 28d, both tails", 20, "6 in 1y", 900, both),
+		shared,
 		closed(one("28d, mean 2, closed by hand", 2, 28, "3 in 1y", 1800, upper)),
 		short(one("series of 60d: 7d, mean 2", 2, 7, "0.5 in 60d", 20, upper), 7),
 		short(one("series of 60d: 28d, mean 2", 2, 28, "0.5 in 60d", 20, upper), 28),
@@ -76,7 +79,7 @@ func proportions() []Cell {
 		one("proportion, 10 a day: 28d, mean 2", 2, ten, []int{28}, "3 in 1y", 1800, upper),
 		one("proportion, 10 a day: 28d, mean 50, both tails", 50, ten, []int{28}, "4 in 1y", 1200, both),
 		one("proportion, 10 a day: 7d, 28d, 365d; mean 20 in 28d", 20, ten, []int{7, 28, 365}, "4 in 1y", 1200, both),
-		one("proportion, 1 to 40 a day: 28d, mean 5", 5, some, []int{28}, "4 in 1y", 1600, upper),
+		one("proportion, 1 to 40 a day: 28d, mean 5", 5, some, []int{28}, "4 in 1y", 3600, upper),
 		one("proportion, 1 to 40 a day: 7d, 28d, 365d; mean 20 in 28d", 20, some, []int{7, 28, 365}, "6 in 1y", 1200, both),
 		short(brief, 28),
 	}
@@ -93,14 +96,14 @@ func changing() []Cell {
 	}
 	weekly := one("proportion, by weekday: 10d, mean 5", 5, []int{10}, week, 1600, upper)
 	weekly.Proportion, weekly.Exposure, weekly.Rate = true, [2]int{10, 10}, 0.05
-	drawn := one("exposure 1 to 40 a day: 28d, mean 5", 5./20.5, []int{28}, nil, 1600, upper)
+	drawn := one("exposure 1 to 40 a day: 28d, mean 5", 5./20.5, []int{28}, nil, 3600, upper)
 	drawn.Exposure = [2]int{1, 40}
 	more := one("exposure 1 to 40 a day: 7d, 28d, 365d; mean 5 in 7d, both tails", 5./20.5, []int{7, 28, 365}, nil, 1200, both)
 	more.Exposure = drawn.Exposure
 	return []Cell{
 		one("by weekday: 10d, mean 5", 5, []int{10}, week, 1600, upper),
 		one("by weekday: 7d, 28d, 365d; mean 5 in 7d, both tails", 5, []int{7, 28, 365}, week, 1200, both),
-		one("by month: 28d, mean 5", 5, []int{28}, year, 1600, both),
+		one("by month: 28d, mean 5", 5, []int{28}, year, 2400, both),
 		Nights("by hour of the week: 7h, mean 3, upper", 7, true, false),
 		Nights("by hour of the week: 28h, mean 12, lower", 28, false, true),
 		drawn, more,
@@ -154,7 +157,7 @@ func estimated() []Cell {
 			Name: name, Promise: p, Rate: rate, Windows: []int{28}, Allowance: "2 in 1y",
 			Reference: &Reference{Events: events, Exposure: float64(int(float64(events) / rate)), Drawn: drawn},
 		})
-		c.Series, c.Slots = 900, 6*365+28 // rates differ much: many series tell more than long ones
+		c.Series, c.Slots = 600, 6*365+28 // rates differ much: many series tell more than long ones
 		if p == Assured {
 			c.Series, c.Slots = 200, 20*365+28 // each must tell its own rate
 		}

@@ -72,11 +72,14 @@ func gather(c *Cell, tallies []*tally) *Outcome {
 	return o
 }
 
-// Allowed is how many false alerts are accepted in a year.
+// Allowed is how many false alerts are accepted in a year on a series.
 func (o *Outcome) Allowed() float64 {
 	a, err := config.ParseAllowance(o.Cell.Allowance)
 	if err != nil {
 		return math.NaN()
+	}
+	if o.Cell.Shared {
+		return a.PerYear() / together
 	}
 	return a.PerYear()
 }

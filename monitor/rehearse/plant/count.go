@@ -12,6 +12,7 @@ import (
 	"tailbell/exact"
 	"tailbell/exact/resample"
 	"tailbell/monitor"
+	"tailbell/monitor/life"
 )
 
 // bound fills in the share and its bounds.
@@ -158,7 +159,10 @@ func (r *Rehearsal) describe(out *Report, runs []outcomes) {
 
 // found counts what became of the excesses of one ratio under one set-up.
 func (r *Rehearsal) found(ctx context.Context, out *Report, in *config.Indicator, setup, ratio int, runs []outcomes) error {
-	tail := tailOf(directionOf(r.plan.Ratios[ratio]))
+	tail := 0
+	if directionOf(r.plan.Ratios[ratio]) == life.Lower {
+		tail = 1
+	}
 	for w := -1; w < len(in.Windows); w++ {
 		f := Found{Setup: setup, Ratio: r.plan.Ratios[ratio]}
 		if w >= 0 {
@@ -226,21 +230,20 @@ func (r *Rehearsal) falseAlerts(ctx context.Context, out *Report, setup int, run
 		held := Hold(r.real.alerts[setup], r.real.known, r.plan.Level)
 		held.Setup = setup
 		out.Against = append(out.Against, held)
-		f.Tails = held.Wrong
+		f.Alerts = held.Predictive.Of - held.Predictive.Count
 		if !f.Told {
-			f.Tails, f.Years = [2]int64{}, 0
+			f.Alerts, f.Years = 0, 0
 		}
 	} else {
 		for i := range runs {
-			f.Tails[0] += runs[i].alerts[setup][0]
-			f.Tails[1] += runs[i].alerts[setup][1]
+			f.Alerts += runs[i].alerts[setup]
 			f.Years += runs[i].years
 		}
 		if len(runs) > 1 {
 			b, err := resample.Bootstrap(ctx, r.redraws(), resample.Blocks{Periods: len(runs), Length: 1}, func(at []int) float64 {
 				n := int64(0)
 				for _, k := range at {
-					n += runs[k].alerts[setup][0] + runs[k].alerts[setup][1]
+					n += runs[k].alerts[setup]
 				}
 				return float64(n) / f.Years
 			})
@@ -250,7 +253,6 @@ func (r *Rehearsal) falseAlerts(ctx context.Context, out *Report, setup int, run
 			f.Resampled[0], f.Resampled[1] = b.Percentile(alphaOf(r.plan.Level))
 		}
 	}
-	f.Alerts = f.Tails[0] + f.Tails[1]
 	f.rate(r.plan.Level)
 	out.False = append(out.False, f)
 	return nil
@@ -277,7 +279,6 @@ func (r *Rehearsal) predict(out *Report) {
 		right := f.InTime
 		right.Count += f.Late
 		right.bound(half)
-		wrong.Alerts = wrong.Tails[tailOf(directionOf(f.Ratio))]
 		wrong.rate(half)
 		value := func(share, rate, often float64) float64 {
 			if share == 0 {

@@ -139,11 +139,8 @@ func Hold(alerts []life.Record, known []Episode, level float64) Record {
 			continue
 		case is:
 			r.Predictive.Count++
-		default:
-			r.Wrong[tailOf(a.Direction)]++
-			if a.Condition == life.Withdrawn {
-				r.Withdrawn++
-			}
+		case a.Condition == life.Withdrawn:
+			r.Withdrawn++
 		}
 		r.Predictive.Of++
 	}

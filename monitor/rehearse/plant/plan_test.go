@@ -4,7 +4,6 @@ import (
 	"context"
 	"encoding/json"
 	"fmt"
-	"math/rand/v2"
 	"strings"
 	"testing"
 
@@ -385,39 +384,4 @@ func TestLearned(t *testing.T) {
 			}
 		})
 	}
-}
-
-// TestDraws holds drawn counts against the masses of their laws: no cell of
-// 100,000 draws lies further off than all but one in 100,000 would. Seed 5.
-func TestDraws(t *testing.T) {
-	const draws = 100_000
-	p := Plan{Seed: 5}
-	fits := func(name string, number uint64, draw func(rng *rand.Rand) int64, pmf func(k int64) float64) {
-		rng, seen := p.source(number), [8]int64{}
-		for range draws {
-			seen[min(draw(rng), 7)]++
-		}
-		rest := 1.0
-		for k := range int64(7) {
-			lower, upper := exact.ClopperPearson(seen[k], draws, 1e-5)
-			if x := pmf(k); x < lower || x > upper {
-				t.Errorf("%s: %d came %d times, its chance is %.5f", name, k, seen[k], x)
-			}
-			rest -= pmf(k)
-		}
-		if lower, upper := exact.ClopperPearson(seen[7], draws, 1e-5); rest < lower || rest > upper {
-			t.Errorf("%s: 7 or more came %d times, their chance is %.5f", name, seen[7], rest)
-		}
-	}
-	fits("Poisson", 1, func(r *rand.Rand) int64 { return count(r, 2, 1) }, exact.Poisson{Rate: 2, Exposure: 1}.PMF)
-	fits("spread", 2, func(r *rand.Rand) int64 { return count(r, 2, 1.7) }, exact.NewNegativeBinomial(2, 1, 1.7).PMF)
-	fits("sum of spreads", 3, func(r *rand.Rand) int64 { return count(r, 0.5, 1.7) + count(r, 1.5, 1.7) }, exact.NewNegativeBinomial(2, 1, 1.7).PMF)
-	fits("trials", 4, func(r *rand.Rand) int64 { return countTrials(r, 20, 0.1, 1) }, exact.NewBinomial(20, 0.1).PMF)
-	size := 19/0.8 - 1
-	fits("trials, spread", 5, func(r *rand.Rand) int64 { return countTrials(r, 20, 0.1, 1.8) }, exact.BetaBinomial{N: 20, A: 0.1 * size, B: 0.9 * size}.PMF)
-	s := slot{mean: 0.1, trials: 20}
-	fits("more trials", 6, func(r *rand.Rand) int64 {
-		s.events = countTrials(r, 20, 0.1, 1)
-		return s.events + moreTrials(r, &s, 1)
-	}, exact.NewBinomial(20, 0.2).PMF)
 }

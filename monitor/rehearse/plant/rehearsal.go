@@ -29,7 +29,7 @@ func (r *Rehearsal) prepare() error {
 // outcomes is what came of one history, by set-up.
 type outcomes struct {
 	series  string
-	alerts  [][2]int64 // false alerts of invented histories, by set-up and tail
+	alerts  []int64 // false alerts of invented histories
 	years   float64
 	found   [][]outcome // by set-up and ratio
 	chance  [][]outcome // without an excess: by set-up and direction (upper, lower)

@@ -96,11 +96,9 @@ type False struct {
 	Setup int `json:"setup"`
 	// Told is false where they can't be told: the excesses of a real history
 	// are not labelled.
-	Told   bool  `json:"told"`
-	Alerts int64 `json:"alerts"`
-	// Tails are those of the upper tail, and of the lower one.
-	Tails [2]int64 `json:"by_tail"`
-	Years float64  `json:"series_years"`
+	Told   bool    `json:"told"`
+	Alerts int64   `json:"alerts"`
+	Years  float64 `json:"series_years"`
 	// A year and series, with Garwood's bounds.
 	Rate  float64 `json:"a_year"`
 	Lower float64 `json:"lower"`
@@ -111,8 +109,8 @@ type False struct {
 	Resampled [2]float64 `json:"resampled,omitzero"`
 }
 
-// Value is the predictive value of an alert: the share of the alerts in a tail
-// that stand for an excess, if excesses of one ratio come so often.
+// Value is the predictive value of an alert: the share of alerts that stand for
+// an excess, if excesses of one ratio come so often.
 type Value struct {
 	Setup int     `json:"setup"`
 	Ratio float64 `json:"ratio"`
@@ -164,8 +162,6 @@ type Record struct {
 	// Withdrawn of the alerts that stand for nothing were withdrawn, because
 	// data were corrected.
 	Withdrawn int64 `json:"withdrawn"`
-	// Wrong are the alerts that stand for nothing, by tail (upper, lower).
-	Wrong [2]int64 `json:"false_by_tail"`
 	// Timeliness is that of the episodes found.
 	Timeliness *Delay `json:"timeliness_days,omitempty"`
 	// Episodes are the known ones, with the first alert of each.

@@ -47,7 +47,6 @@ type lit struct {
 // the span of an excess are noted.
 func judge(setup *config.Setup, series string, arrivals []arrival, from, to, until monitor.Instant) *run {
 	e := monitor.New(monitor.Partition{Of: 1, KeyParts: setup.KeyParts})
-	e.Pass()
 	r := &run{}
 	position := uint64(1)
 	e.Apply(&monitor.Message{Position: position, Kind: monitor.SettingMessage, Setting: monitor.Setting{Setup: setup}})
@@ -76,18 +75,18 @@ func judge(setup *config.Setup, series string, arrivals []arrival, from, to, unt
 	}
 	watch(until)
 	e.Apply(&monitor.Message{Position: position + 1, Kind: monitor.Tick, Stored: until, Time: until, HasTime: true})
-	found := e.Findings()
-	for i := range found.Refused {
-		x := &found.Refused[i]
+	changes := e.Drain()
+	for i := range changes.Refused {
+		x := &changes.Refused[i]
 		if i == 0 {
-			r.refused = fmt.Sprintf("%d in all, the first of %s: %s: %s", len(found.Refused), x.Series, x.Reason, x.Detail)
+			r.refused = fmt.Sprintf("%d in all, the first of %s: %s: %s", len(changes.Refused), x.Series, x.Reason, x.Detail)
 		}
 		if at := int(x.Position) - 2; at >= 0 && at < len(arrivals) && arrivals[at].planted {
 			r.refusedPlanted++
 		}
 	}
-	for i := range found.Steps {
-		r.step(&found.Steps[i], series)
+	for i := range changes.Steps {
+		r.step(&changes.Steps[i], series)
 	}
 	return r
 }
@@ -160,22 +159,14 @@ func (r *run) outcomeOf(in *config.Indicator, direction life.Direction, from, to
 	return o
 }
 
-// falseAlerts counts the alerts in each tail (upper, lower) that a run without
-// an excess opened from the moment on.
-func (r *run) falseAlerts(from monitor.Instant) [2]int64 {
-	var n [2]int64
+// falseAlerts counts the alerts that a run without an excess opened from the
+// moment on.
+func (r *run) falseAlerts(from monitor.Instant) int64 {
+	n := int64(0)
 	for i := range r.opened {
-		if x := &r.opened[i]; x.at > from {
-			n[tailOf(x.direction)]++
+		if r.opened[i].at > from {
+			n++
 		}
 	}
 	return n
-}
-
-// tailOf is 0 for the upper tail and 1 for the lower one.
-func tailOf(d life.Direction) int {
-	if d == life.Lower {
-		return 1
-	}
-	return 0
 }
