@@ -141,3 +141,35 @@ func TestParseAllowance(t *testing.T) {
 		}
 	}
 }
+
+// TestAllowanceOfPartitions refuses an allowance for all series where they lie in
+// several partitions.
+func TestAllowanceOfPartitions(t *testing.T) {
+	const text = `name = "x"
+partitions = 4
+[[indicator]]
+name = "falls"
+series = ["*/fall"]
+unit = "bed-days"
+every = "1d"
+windows = ["28d"]
+allowance = "1 in 1y"
+allowance_for = "indicator"
+[indicator.baseline]
+kind = "known"
+rate = 1
+`
+	_, err := Parse([]byte(text), "x.toml")
+	if err == nil || !strings.Contains(err.Error(), "allowance_for") || !strings.Contains(err.Error(), "there are 4") {
+		t.Errorf("in four partitions: %v", err)
+	}
+	for _, sound := range []string{
+		strings.Replace(text, "partitions = 4", "partitions = 1", 1),
+		strings.Replace(text, `"*/fall"`, `"east/*"`, 1),
+		strings.Replace(text, `allowance_for = "indicator"`, `allowance_for = "series"`, 1),
+	} {
+		if _, err := Parse([]byte(sound), "x.toml"); err != nil {
+			t.Errorf("%v\n%s", err, sound)
+		}
+	}
+}
