@@ -96,6 +96,7 @@ func recomputeOf(n *life.Notice) string {
 // sheet is what the form of a message shows.
 type sheet struct {
 	What, Direction, Subject, Moment string
+	Amount                           string // of alerts told together, and of what
 	Upper, Test                      bool
 	Paragraphs                       []string
 	Facts                            []words.Fact
@@ -120,7 +121,7 @@ func (l *letter) html() (string, error) {
 		Caution: words.CautionOf(r), Foot: l.foot(),
 	}
 	if len(l.notices) > 1 {
-		s.Subject, s.Columns = words.SubjectTogether(l.notices), words.Columns
+		s.Subject, s.Columns, s.Amount = words.SubjectTogether(l.notices), words.Columns, words.AmountTogether(l.notices)
 		s.Paragraphs = []string{words.Meaning(l.notices)}
 		for _, row := range words.Rows(l.notices) {
 			s.Rows = append(s.Rows, sheetRow{l.link(row.ID), row.Cells})

@@ -35,7 +35,8 @@ type Outlet interface {
 type Gatherer interface {
 	Outlet
 	// DeliverTogether delivers several steps of one kind, taken by themselves at
-	// the same time on different alerts of one indicator, as one notice.
+	// the same time on different alerts of one indicator and direction, as one
+	// notice.
 	DeliverTogether(ctx context.Context, notices []*life.Notice) error
 }
 
@@ -55,6 +56,7 @@ type Queue struct {
 	store  *store.Store
 	outlet Outlet
 	wake   chan struct{}
+	again  chan struct{}
 	opts   QueueOptions
 	// done are the numbers of steps that were delivered, while one before them
 	// was not.
@@ -98,7 +100,7 @@ func NewQueue(st *store.Store, o Outlet, opts QueueOptions) *Queue {
 	if opts.Wants == nil {
 		opts.Wants = func(*life.Notice) bool { return true }
 	}
-	return &Queue{store: st, outlet: o, wake: make(chan struct{}, 1), opts: opts, done: map[uint64]bool{}}
+	return &Queue{store: st, outlet: o, wake: make(chan struct{}, 1), again: make(chan struct{}, 1), opts: opts, done: map[uint64]bool{}}
 }
 
 // Name is the outlet's name.
@@ -145,6 +147,16 @@ func (q *Queue) Wake() {
 	}
 }
 
+// Again cuts the pause before the next try short: a person has changed what
+// waits.
+func (q *Queue) Again() {
+	select {
+	case q.again <- struct{}{}:
+	default:
+	}
+	q.Wake()
+}
+
 // Run delivers until ctx ends or the store fails. A store without room is
 // waited for like an outlet that is down.
 func (q *Queue) Run(ctx context.Context) error {
@@ -159,7 +171,7 @@ func (q *Queue) Run(ctx context.Context) error {
 		case err != nil:
 			pause := q.fail(err)
 			q.opts.Failed(err, pause)
-			if !sleep(ctx, pause) {
+			if !q.sleep(ctx, pause) {
 				return nil
 			}
 			continue
@@ -266,10 +278,13 @@ func (q *Queue) send(ctx context.Context, p *parcel) (err error) {
 	return nil
 }
 
-func sleep(ctx context.Context, d time.Duration) bool {
+// sleep waits for a pause, or until it is cut short; false if ctx ended.
+func (q *Queue) sleep(ctx context.Context, d time.Duration) bool {
 	t := time.NewTimer(d)
 	defer t.Stop()
 	select {
+	case <-q.again:
+		return true
 	case <-t.C:
 		return true
 	case <-ctx.Done():

@@ -76,14 +76,17 @@ func alike(a, b *life.Notice) bool {
 		a.Record.Indicator == b.Record.Indicator && a.To == b.To && a.History == b.History
 }
 
-// split makes parcels of the steps of a run, one a kind; more where an alert has
-// several steps, which keep their order.
+// split makes parcels of the steps of a run, one a kind and direction; more
+// where an alert has several steps, which keep their order.
 func split(run []store.Row) []parcel {
 	var parcels []parcel
 	latest := map[string]int{} // by alert, the parcel after that of its last step
 	for i := range run {
 		n := &run[i].Notice
-		at := slices.IndexFunc(parcels[latest[n.Record.ID]:], func(p parcel) bool { return p.notices[0].Step.Kind == n.Step.Kind })
+		at := slices.IndexFunc(parcels[latest[n.Record.ID]:], func(p parcel) bool {
+			first := p.notices[0]
+			return first.Step.Kind == n.Step.Kind && first.Record.Direction == n.Record.Direction && first.Record.Late == n.Record.Late
+		})
 		if at += latest[n.Record.ID]; at < latest[n.Record.ID] {
 			at = len(parcels)
 			parcels = append(parcels, parcel{})

@@ -32,7 +32,7 @@ var (
 
 const (
 	pictureWidth = 6.2 * vg.Inch
-	rowHeight    = 0.78 * vg.Inch
+	rowHeight    = 0.95 * vg.Inch
 	axisHeight   = 0.42 * vg.Inch
 	pictureDPI   = 144
 	pictureRows  = 4
@@ -141,33 +141,33 @@ func (p *painter) x(v float64) vg.Length {
 	return p.Min.X + margin + width*vg.Length((v-p.least)/(p.most-p.least))
 }
 
-func (p *painter) style(size font.Length, c color.Color, align text.XAlignment) text.Style {
+func (p *painter) style(size font.Length, align text.XAlignment) text.Style {
 	f := plot.DefaultFont
 	f.Variant, f.Size = "Sans", size
-	return text.Style{Color: c, Font: f, XAlign: align, YAlign: text.YBottom, Handler: plot.DefaultTextHandler}
+	return text.Style{Color: ink, Font: f, XAlign: align, YAlign: text.YBottom, Handler: plot.DefaultTextHandler}
 }
 
 // row draws one look below the height top.
 func (p *painter) row(r *life.Record, l drawnLook, top vg.Length) {
 	e := l.evidence
-	p.FillText(p.style(8.5, ink, text.XLeft), vg.Point{X: p.x(p.least), Y: top - 12}, l.what+": "+words.Span(r, e))
-	y := top - 0.48*vg.Inch
+	p.FillText(p.style(8.5, text.XLeft), vg.Point{X: p.x(p.least), Y: top - 12}, l.what+": "+words.Span(r, e))
+	y := top - 0.55*vg.Inch
 	p.StrokeLine2(draw.LineStyle{Color: faint, Width: 1}, p.x(p.least), y, p.x(p.most), y)
 	critical := p.x(float64(e.Critical))
 	p.StrokeLine2(draw.LineStyle{Color: ink, Width: 1.5, Dashes: []vg.Length{3, 2}}, critical, y-9, critical, y+9)
 	p.mark(draw.GlyphStyle{Color: usualColour, Radius: 4.5, Shape: draw.CircleGlyph{}}, e.Expected, y)
-	shape := draw.GlyphDrawer(draw.TriangleGlyph{})
+	shape := draw.GlyphDrawer(draw.PyramidGlyph{})
 	if r.Direction == life.Lower {
 		shape = downGlyph{}
 	}
 	p.mark(draw.GlyphStyle{Color: countedColour, Radius: 6, Shape: shape}, float64(e.Events), y)
-	p.label(e.Expected, y-20, "usual about "+words.Expected(e), usualColour)
-	p.label(float64(e.Events), y+9, words.Whole(e.Events)+" counted", countedColour)
-	if near := math.Abs(float64(e.Critical)-e.Expected) / (p.most - p.least); near > 0.25 {
-		p.label(float64(e.Critical), y-20, "signals at "+words.Whole(e.Critical), ink)
-	} else {
-		p.label(float64(e.Critical), y-31, "signals at "+words.Whole(e.Critical), ink)
+	p.label(e.Expected, y-20, "usual about "+words.Expected(e))
+	p.label(float64(e.Events), y+11, words.Whole(e.Events)+" counted")
+	below := vg.Length(20)
+	if near := math.Abs(float64(e.Critical)-e.Expected) / (p.most - p.least); near < 0.25 {
+		below = 31
 	}
+	p.label(float64(e.Critical), y-below, "signals at "+words.Whole(e.Critical))
 }
 
 func (p *painter) mark(g draw.GlyphStyle, v float64, y vg.Length) {
@@ -175,7 +175,7 @@ func (p *painter) mark(g draw.GlyphStyle, v float64, y vg.Length) {
 }
 
 // label writes beside a value, so that it stays on the picture.
-func (p *painter) label(v float64, y vg.Length, words string, c color.Color) {
+func (p *painter) label(v float64, y vg.Length, words string) {
 	align := text.XCenter
 	switch part := (v - p.least) / (p.most - p.least); {
 	case part < 0.1:
@@ -183,7 +183,7 @@ func (p *painter) label(v float64, y vg.Length, words string, c color.Color) {
 	case part > 0.9:
 		align = text.XRight
 	}
-	p.FillText(p.style(8.5, c, align), vg.Point{X: p.x(v), Y: y}, words)
+	p.FillText(p.style(8.5, align), vg.Point{X: p.x(v), Y: y}, words)
 }
 
 // axis draws the scale at the bottom.
@@ -192,9 +192,9 @@ func (p *painter) axis(noun string) {
 	p.StrokeLine2(draw.LineStyle{Color: ink, Width: 0.7}, p.x(p.least), y, p.x(p.most), y)
 	for v := p.least; v <= p.most+p.step/2; v += p.step {
 		p.StrokeLine2(draw.LineStyle{Color: ink, Width: 0.7}, p.x(v), y, p.x(v), y-3)
-		p.FillText(p.style(8, ink, text.XCenter), vg.Point{X: p.x(v), Y: y - 13}, words.Grouped(strconv.FormatFloat(v, 'f', -1, 64)))
+		p.FillText(p.style(8, text.XCenter), vg.Point{X: p.x(v), Y: y - 13}, words.Grouped(strconv.FormatFloat(v, 'f', -1, 64)))
 	}
-	p.FillText(p.style(8, ink, text.XRight), vg.Point{X: p.x(p.most), Y: y + 3}, noun)
+	p.FillText(p.style(8, text.XRight), vg.Point{X: p.x(p.most), Y: y + 3}, noun)
 }
 
 // downGlyph is a triangle that points down.

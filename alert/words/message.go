@@ -37,7 +37,12 @@ func Subject(n *life.Notice) string {
 // SubjectTogether is that line for several steps of one kind and indicator.
 func SubjectTogether(notices []*life.Notice) string {
 	n := notices[0]
-	return sentenceCase(what(n)) + ": " + Amount(int64(len(notices)), "series") + " of " + titleOf(&n.Record)
+	return sentenceCase(what(n)) + ": " + AmountTogether(notices)
+}
+
+// AmountTogether is how many series of what are told of together.
+func AmountTogether(notices []*life.Notice) string {
+	return Amount(int64(len(notices)), "series") + " of " + titleOf(&notices[0].Record)
 }
 
 // titleOf is the indicator's name for people.

@@ -33,7 +33,7 @@ func Rows(notices []*life.Notice) []Row {
 // HeadingTogether is one line over several steps of one kind and indicator.
 func HeadingTogether(notices []*life.Notice) string {
 	n := notices[0]
-	return When(n) + "  " + what(n) + "  " + Amount(int64(len(notices)), "series") + " of " + titleOf(&n.Record)
+	return When(n) + "  " + what(n) + "  " + arrow(n.Record.Direction) + "  " + AmountTogether(notices)
 }
 
 // Meaning says what the numbers in a table of several alerts are, and what

@@ -48,7 +48,7 @@ func (d *daemon) skipStep(_ context.Context, req skipRequest) (any, error) {
 		case err == nil:
 			d.log.Warn().Str("outlet", req.Outlet).Str("step", req.Step).Msg("let go by hand: not delivered")
 			if q := p.queue(req.Outlet); q != nil {
-				q.Wake()
+				q.Again()
 			}
 			return nil, nil
 		case !errors.Is(err, store.ErrNotFound) && !errors.Is(err, store.ErrNoOutlet):

@@ -10,6 +10,7 @@ import (
 	"testing"
 	"time"
 
+	"tailbell/alert/words"
 	"tailbell/monitor/life"
 )
 
@@ -97,6 +98,11 @@ func recomputed(t *testing.T, e *life.Evidence) {
 	var a recomputation
 	if err := json.Unmarshal([]byte(out), &a); err != nil || code != 0 {
 		t.Fatalf("%s: exit code %d, %v\n%s%s", e.Recompute, code, err, out, stderr)
+	}
+	// The sentences say what the command says, to their last digit.
+	lo, hi := words.Pair(e.RateLower, e.RateUpper)
+	if gotLo, gotHi := words.Pair(a.Lower, a.Upper); gotLo != lo || gotHi != hi || (a.P > 0 && words.PValue(math.Log10(a.P)) != words.P(e)) {
+		t.Errorf("%s: the sentence has p = %s and %s to %s, the command p = %v and %s to %s", e.Recompute, words.P(e), lo, hi, a.P, gotLo, gotHi)
 	}
 	for _, pair := range []struct {
 		name      string
