@@ -27,11 +27,22 @@ func Subject(n *life.Notice) string {
 	case life.StepTest:
 		return text + "a trial of this outlet"
 	case life.StepOpened, life.StepWorsened, life.StepReminder, life.StepUnshelved, life.StepCorrected:
-		e := evidenceOf(&n.Step, &r.Worst)
+		if n.Step.Condition == life.Returned {
+			break
+		}
+		e := toldOf(n)
 		return text + counted(e) + ", about " + expected(e) + " usual: " + place(r)
 	case life.StepAcknowledged, life.StepShelved, life.StepReturned, life.StepWithdrawn, life.StepClosed, life.StepNote, life.StepMarked:
 	}
 	return text + subject(r)
+}
+
+// toldOf is the evidence that a step tells of: its own, or the strongest so far.
+func toldOf(n *life.Notice) *life.Evidence {
+	if n.Record.Worst.Window == "" {
+		return evidenceOf(&n.Step, &n.Record.Opening)
+	}
+	return evidenceOf(&n.Step, &n.Record.Worst)
 }
 
 // SubjectTogether is that line for several steps of one kind and indicator.
@@ -63,7 +74,7 @@ type Fact struct{ Name, Value string }
 // them; none where the record has no evidence.
 func Facts(n *life.Notice) []Fact {
 	r := &n.Record
-	e := evidenceOf(&n.Step, &r.Worst)
+	e := toldOf(n)
 	if e.Window == "" {
 		return nil
 	}

@@ -22,7 +22,7 @@ func Rows(notices []*life.Notice) []Row {
 	rows := make([]Row, len(notices))
 	for i, n := range notices {
 		r := &n.Record
-		e := evidenceOf(&n.Step, &r.Worst)
+		e := toldOf(n)
 		rows[i] = Row{ID: r.ID, Cells: []string{
 			place(r), counted(e) + " in " + exposure(e) + provisional(e), expected(e), pvalue(log10p(e)), span(e, zoneOf(r)), clean(r.ID),
 		}}

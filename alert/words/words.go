@@ -230,15 +230,21 @@ func corrected(n *life.Notice, zone *time.Location) string {
 
 // standing says whether somebody has acknowledged an alert that has returned.
 func standing(r *life.Record) string {
+	acknowledged := -1
 	for i := range r.Steps {
-		if s := &r.Steps[i]; s.Kind == life.StepAcknowledged {
-			if s.By != "" {
-				return "It was acknowledged by " + clean(s.By) + " before."
-			}
-			return "It was acknowledged before."
+		if r.Steps[i].Kind == life.StepAcknowledged {
+			acknowledged = i
 		}
 	}
-	return "Nobody has acknowledged it yet."
+	switch {
+	case acknowledged < 0:
+		return "Nobody has acknowledged it yet."
+	case !r.Acknowledged():
+		return "Nobody has acknowledged it since it came off the shelf."
+	case r.Steps[acknowledged].By != "":
+		return "It was acknowledged by " + clean(r.Steps[acknowledged].By) + " before."
+	}
+	return "It was acknowledged before."
 }
 
 func reasonOf(s *life.Step) string {
