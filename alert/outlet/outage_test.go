@@ -132,7 +132,7 @@ func TestOutage(t *testing.T) {
 					time.Sleep(time.Hour)
 				}
 				w.commit(outlettest.At.Add(6*time.Hour), []life.StepKind{life.StepReturned}, "ward-1")
-				if tr := q.Trouble(); tries < 100 || tr.Tries != tries || tr.Next.Before(time.Now()) || tr.Next.Sub(time.Now()) > time.Minute {
+				if tr := q.Trouble(); tries < 100 || tr.Tries != tries || tr.Next.Before(time.Now()) || time.Until(tr.Next) > time.Minute {
 					t.Errorf("%d tries in six hours, trouble %+v", tries, tr)
 				}
 				if waiting, first, more, err := q.Waiting(1000); err != nil || waiting != 13 || first != "award1.2" || more {

@@ -3,6 +3,7 @@ package outlet_test
 import (
 	"bytes"
 	"encoding/xml"
+	"errors"
 	"image/png"
 	"io"
 	"strings"
@@ -68,7 +69,7 @@ func textOf(t *testing.T, svg []byte) string {
 	var words []string
 	for {
 		token, err := d.Token()
-		if err == io.EOF {
+		if errors.Is(err, io.EOF) {
 			return strings.Join(words, "|")
 		}
 		if err != nil {
