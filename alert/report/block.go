@@ -49,7 +49,7 @@ func headOf(r *Report) string {
 // short is the table at the beginning.
 func short(r *Report) *table {
 	t := &table{
-		Head:    []string{"", "series", "looks", "withheld", "alerts: more", "fewer", "marked real", "chance", "data error", "redefined", "not marked", "withdrawn"},
+		Head:    []string{"indicator", "series", "looks", "withheld", "alerts: more", "fewer", "marked real", "chance", "data error", "redefined", "not marked", "withdrawn"},
 		Numbers: []int{1, 2, 3, 4, 5, 6, 7, 8, 9, 10, 11},
 	}
 	n := func(v int) string { return words.Whole(int64(v)) }
@@ -186,7 +186,7 @@ const funnelWords = "A series with little exposure strays further by chance, so 
 	"Series differ in whom they look after; a place outside the limits says nothing of its cause."
 
 func funnelTable(f *figure.Funnel) *table {
-	t := &table{Head: []string{"series", f.Events, f.Exposure, f.Rate, "bounds (95 %, exact)", "p (two-sided)", ""}, Numbers: []int{1, 2, 3, 4}}
+	t := &table{Head: []string{"series", f.Events, f.Exposure, f.Rate, "bounds (95 %, exact)", "p (two-sided)", "limits"}, Numbers: []int{1, 2, 3, 4}}
 	for _, r := range f.Rows() {
 		where := "within"
 		if r.Outside > 0 {
@@ -256,7 +256,7 @@ func heading(a life.Record) string {
 // glance is all alerts of an indicator, a row each.
 func glance(in *Indicator) *table {
 	t := &table{
-		Head:    []string{"alert", "series", "", "opened", "window", in.Cfg.EventNoun, "usual", "p", "stands", "marked"},
+		Head:    []string{"alert", "series", "direction", "opened", "window", in.Cfg.EventNoun, "usual", "p", "stands", "marked"},
 		Numbers: []int{3, 5, 6, 7},
 	}
 	for i := range in.Alerts {

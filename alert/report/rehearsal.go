@@ -88,10 +88,10 @@ func falseText(r *plant.Report, f *plant.False) string {
 func predictTable(r *plant.Report) *table {
 	t := &table{
 		Caption: "Share of alerts that stand for an excess, if excesses come so often",
-		Head:    []string{"", "ratio", "excesses a year and series", "predictive value"}, Numbers: []int{1, 2},
+		Head:    []string{"ratio", "excesses a year and series", "predictive value"}, Numbers: []int{0, 1},
 	}
 	for _, v := range r.Predict {
-		t.Rows = append(t.Rows, []string{letter(r, v.Setup), multiple(v.Ratio), multiple(v.Frequency), three(v.Value) + " (" + three(v.Lower) + " to " + three(v.Upper) + ")"})
+		t.Rows = append(t.Rows, []string{letter(r, v.Setup) + multiple(v.Ratio), multiple(v.Frequency), three(v.Value) + " (" + three(v.Lower) + " to " + three(v.Upper) + ")"})
 	}
 	return t
 }
@@ -129,7 +129,7 @@ func against(r *plant.Report, a *plant.Record) []block {
 	if len(list) == 0 {
 		return nil
 	}
-	t := &table{Head: []string{"known episode", "", "from", "to", "first alert", "after, days", "note"}, Numbers: []int{5}}
+	t := &table{Head: []string{"known episode", "direction", "from", "to", "first alert", "after, days", "note"}, Numbers: []int{5}}
 	for _, e := range a.Episodes {
 		row := []string{e.Series, e.Direction, e.From.Format(day), e.To.Format(day), "none", "", e.Note}
 		if e.Found {

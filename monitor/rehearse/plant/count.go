@@ -229,6 +229,9 @@ func (r *Rehearsal) falseAlerts(ctx context.Context, out *Report, setup int, run
 		}
 		held := Hold(r.real.alerts[setup], r.real.known, r.plan.Level)
 		held.Setup = setup
+		if err := r.boundTimeliness(ctx, &held); err != nil {
+			return err
+		}
 		out.Against = append(out.Against, held)
 		f.Alerts = held.Predictive.Of - held.Predictive.Count
 		if !f.Told {
@@ -256,6 +259,20 @@ func (r *Rehearsal) falseAlerts(ctx context.Context, out *Report, setup int, run
 	f.rate(r.plan.Level)
 	out.False = append(out.False, f)
 	return nil
+}
+
+// boundTimeliness gives bounds to the median delay of the episodes found.
+func (r *Rehearsal) boundTimeliness(ctx context.Context, held *Record) (err error) {
+	var delays []float64
+	for i := range held.Episodes {
+		if held.Episodes[i].Found {
+			delays = append(delays, held.Episodes[i].Days)
+		}
+	}
+	if len(delays) > 0 {
+		held.Timeliness.Lower, held.Timeliness.Upper, err = r.resampledMedian(ctx, delays)
+	}
+	return err
 }
 
 func (f *False) rate(level float64) {
