@@ -135,6 +135,17 @@ func TestPageInABrowser(t *testing.T) {
 	b.open("/alerts/" + id)
 	b.shows("acknowledged by T. Averin: “on my way”")
 
+	// What somebody writes stays while the rest goes on.
+	b.run("writing", chromedp.SendKeys("#why-note", "half a sen"))
+	note := wire.EncodeAct(nil, &monitor.Act{Kind: monitor.Note, Alert: id, By: "B. Olin", Why: "asked the ward"})
+	if _, err := s.dial().Publish(t.Context(), bus.Outgoing{Kind: bus.Act, Data: note}); err != nil {
+		t.Fatal(err)
+	}
+	b.shows("note by B. Olin: “asked the ward”")
+	if got := inTab[string](b, `document.getElementById("why-note").value`); got != "half a sen" {
+		t.Errorf("what was being written is now %q", got)
+	}
+	inTab[bool](b, `document.getElementById("why-note").value = "", document.activeElement.blur(), true`)
 	b.run("marking", chromedp.Click("#fold-mark > summary"), chromedp.SetValue("#mark-mark", "real"), chromedp.SendKeys("#why-mark", "wet floor"), chromedp.Click(`//form[.//input[@value="mark"]]//button`))
 	b.shows("marked real by T. Averin: “wet floor”")
 	b.run("shelving", chromedp.Click("#fold-shelve > summary"), chromedp.SetValue("#for-shelve", "3d"), chromedp.SendKeys("#why-shelve", "floor is being changed"), chromedp.Click(`//form[.//input[@value="shelve"]]//button`))
