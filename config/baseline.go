@@ -20,8 +20,11 @@ func (s section) readBaselines(in *Indicator) []Baseline {
 		b := t.readBaseline(in)
 		var ok bool
 		if b.From, b.To, ok = t.readValidity(in); ok {
-			b.Series = t.readServed(in, &b, sound, i == len(tables)-1)
-			sound = append(sound, b)
+			var forSums bool
+			if b.Sums, forSums = t.readServedSums(in, i == len(tables)-1); !forSums {
+				b.Series = t.readServed(in, &b, sound, i == len(tables)-1)
+				sound = append(sound, b)
+			}
 		}
 		all = append(all, b)
 	}

@@ -203,6 +203,7 @@ func (c *comparison) indicator(a, b *Indicator) {
 	c.value("title", NextLook, a.Title, b.Title, "")
 	c.value("noun", NextLook, a.EventNoun, b.EventNoun, "")
 	c.series(a, b)
+	c.value("sums", Rebuild, sumsText(a), sumsText(b), "")
 	c.value("measure", Rebuild, measureWord(a), measureWord(b), "")
 	c.value("unit", NextLook, a.Unit, b.Unit, "a name only: exposure that was counted is not converted")
 	c.value("per", NextLook, a.Per, b.Per, "")

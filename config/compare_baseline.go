@@ -33,7 +33,11 @@ func baselineText(b *Baseline) string {
 	if b == nil {
 		return ""
 	}
-	text := fmt.Sprintf("%s: %s", b.Series, b.Kind)
+	who := b.Series.String()
+	if b.Sums.text != "" {
+		who = "sums " + b.Sums.String()
+	}
+	text := fmt.Sprintf("%s: %s", who, b.Kind)
 	switch b.Kind {
 	case Known:
 		text += fmt.Sprintf(", %v for one unit of exposure", b.Rate)

@@ -71,6 +71,7 @@ func TestCompareSeesEveryField(t *testing.T) {
 		}}
 		in := &s.Indicators[0]
 		in.Exposure = exposure
+		in.Sums = []Sum{NewSum("*/*/fall")}
 		in.Allowance = &Allowance{Alerts: 1, Every: Every{5, Year}}
 		in.Baselines = in.Baselines[:1]
 		in.Baselines[0].Kind = kind
@@ -85,7 +86,7 @@ func TestCompareSeesEveryField(t *testing.T) {
 		}
 		v := at(fresh())
 		switch {
-		case v.Type() == reflect.TypeFor[time.Time](), v.Type() == reflect.TypeFor[Pattern]():
+		case v.Type() == reflect.TypeFor[time.Time](), v.Type() == reflect.TypeFor[Pattern](), v.Type() == reflect.TypeFor[Sum]():
 		case v.Kind() == reflect.Struct:
 			for i := range v.NumField() {
 				walk(strings.TrimPrefix(path+"."+v.Type().Field(i).Name, "."), func(s *Setup) reflect.Value { return at(s).Field(i) })
@@ -120,6 +121,8 @@ func alter(t *testing.T, path string, v reflect.Value) {
 		v.Set(reflect.ValueOf(time.Date(2030, 1, 1, 0, 0, 0, 0, time.UTC)))
 	case v.Type() == reflect.TypeFor[Pattern]():
 		v.Set(reflect.ValueOf(NewPattern("other/**")))
+	case v.Type() == reflect.TypeFor[Sum]():
+		v.Set(reflect.ValueOf(NewSum("other/**")))
 	case v.Kind() == reflect.String:
 		v.SetString(v.String() + "x")
 	case v.Kind() == reflect.Bool:

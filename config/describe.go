@@ -74,6 +74,9 @@ func (p *prose) indicator(in *Indicator) {
 		patterns[i] = q.String()
 	}
 	p.line("  Series: %s.", strings.Join(patterns, ", "))
+	if len(in.Sums) > 0 {
+		p.line("  Monitored besides, each as a series of its own, are the sums %s.", sumsText(in))
+	}
 	p.counting(in)
 	p.slots(in)
 	for i := range in.Windows {

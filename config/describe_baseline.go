@@ -12,9 +12,11 @@ func (p *prose) baseline(in *Indicator, i int) {
 	who := "All series"
 	all := NewPattern("**")
 	switch {
+	case b.Sums.text != "":
+		who = "Sums " + b.Sums.String()
 	case b.Series != all:
 		who = "Series " + b.Series.String()
-	case slices.ContainsFunc(in.Baselines[:i], func(e Baseline) bool { return e.Series != all }):
+	case slices.ContainsFunc(in.Baselines[:i], func(e Baseline) bool { return e.Series != all && e.Sums.text == "" }):
 		who = "All other series"
 	}
 	p.line("  %s%s: judged by %s%s%s.", who, validText(in, b), usualText(in, b), marginText(in, b), origin(b))

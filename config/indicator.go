@@ -15,6 +15,7 @@ func (s section) readIndicator() Indicator {
 	in.Title, _ = s.text("title", in.Name)
 	in.EventNoun, _ = s.text("noun", in.Name)
 	in.Series = s.readPatterns()
+	in.Sums = s.readSums()
 	in.Unit = s.readUnit()
 	in.Every, _ = s.readEvery()
 	in.ZoneName, in.Zone = s.readZone()

@@ -151,6 +151,7 @@ func readIndicators(top section, s *Setup) []Indicator {
 		t.compareNames(&in, names, patterns)
 		t.checkPeers(&in, s)
 		t.checkAllowance(&in, s)
+		t.checkSums(&in, s)
 		all = append(all, in)
 	}
 	return all

@@ -88,6 +88,18 @@ func PartitionOf(series string, keyParts, n int) int {
 	return int(h % uint32(n))
 }
 
+// ErrPattern is wrapped by every error of CheckPattern.
+var ErrPattern = errors.New("not a pattern of series names")
+
+// CheckPattern reports whether the text is a pattern, see Pattern. The name of a
+// series is one, and that of a sum.
+func CheckPattern(text string) error {
+	if problem := checkPattern(text); problem != "" {
+		return fmt.Errorf("%w: it %s", ErrPattern, problem)
+	}
+	return nil
+}
+
 // checkPattern says why text is no pattern, "" if it is one.
 func checkPattern(text string) string {
 	if len(text) > MaxSeriesBytes {

@@ -112,6 +112,9 @@ type Baseline struct {
 	// Series says which series of the indicator it serves; the first baseline
 	// whose pattern matches and that is valid is used.
 	Series Pattern
+	// Sums, if not zero, says which sums of the indicator it serves, instead of
+	// series; a sum is served by the first that serves it by either.
+	Sums Pattern
 	// From and To bound its validity, zero for open: it judges the windows
 	// whose last moment lies in [From, To), so those that end after From and
 	// not after To.
@@ -212,8 +215,10 @@ type ClockExposure struct {
 
 // Indicator says which series are monitored, and how.
 type Indicator struct {
-	Name    string
-	Series  []Pattern
+	Name   string
+	Series []Pattern
+	// Sums are monitored besides, each as a series of its own.
+	Sums    []Sum
 	Measure Measure
 	// Unit names the exposure ("device-days"); Per is the multiple in which
 	// rates are shown (1000 for "per 1,000 device-days").
@@ -280,7 +285,7 @@ type Indicator struct {
 func (in *Indicator) BaselineAt(series string, boundary time.Time) *Baseline {
 	for i := range in.Baselines {
 		b := &in.Baselines[i]
-		if b.holds(boundary) && b.Series.Match(series) {
+		if b.holds(boundary) && b.Serves(series) {
 			return b
 		}
 	}
@@ -297,7 +302,7 @@ func (b *Baseline) holds(boundary time.Time) bool {
 // or nil.
 func (in *Indicator) BaselineFor(series string) *Baseline {
 	for i := range in.Baselines {
-		if in.Baselines[i].Series.Match(series) {
+		if in.Baselines[i].Serves(series) {
 			return &in.Baselines[i]
 		}
 	}

@@ -48,7 +48,7 @@ func (e *Engine) Account() Account {
 	for _, s := range e.series {
 		a.Withheld += s.unpaired
 		for i := range s.cells {
-			if c := &s.cells[i]; !s.indicator.needs.paired(c) {
+			if c := &s.cells[i]; !s.needs().paired(c) {
 				a.Withheld += int64(c.items)
 			}
 		}
@@ -105,7 +105,8 @@ type SlotSum struct {
 }
 
 // Slots returns what is held of every slot, by series name and slot. Slots
-// beyond the horizon and the longest window are forgotten.
+// beyond the horizon and the longest window are forgotten. Sums hold none of their
+// own.
 func (e *Engine) Slots() []SlotSum {
 	sorted := slices.SortedFunc(slices.Values(e.series), func(a, b *series) int {
 		if a.name < b.name {
@@ -115,6 +116,9 @@ func (e *Engine) Slots() []SlotSum {
 	})
 	var sums []SlotSum
 	for _, s := range sorted {
+		if s.sum != nil {
+			continue
+		}
 		for i := range s.cells {
 			sums = append(sums, s.slotSum(&s.cells[i]))
 		}

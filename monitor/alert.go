@@ -185,17 +185,3 @@ func (t *tail) leave(boundary int64) {
 	t.current = nil
 	t.quiet = 0
 }
-
-// idsIn lists the ids of observations with events in the slots [from, to).
-func (s *series) idsIn(from, to int64) (ids []string, more int) {
-	for _, c := range s.cells.between(from, to) {
-		for _, id := range c.ids {
-			if len(ids) == maxIDs {
-				more++
-				continue
-			}
-			ids = append(ids, id)
-		}
-	}
-	return ids, more
-}

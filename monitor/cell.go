@@ -13,6 +13,8 @@ type cell struct {
 	saysExposure uint32
 	// items counts the elements whose interval begins in this slot.
 	items uint32
+	// provisional says that in a sum some of the exposure was carried forward.
+	provisional bool
 	// late is how many of the events came after the slot had settled.
 	late int64
 	// ids names the observations with events that had an id, sorted.

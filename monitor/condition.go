@@ -60,7 +60,7 @@ func (e *Engine) conditionsOf(s *series) []Condition {
 			Since: ix.cal.Start(ws.withheldSince), Text: ws.withheld.String(),
 		})
 	}
-	if expect := ix.cfg.Expect; expect > 0 && s.seen.Add(expect) < e.clock {
+	if expect := ix.cfg.Expect; expect > 0 && s.sum == nil && s.seen.Add(expect) < e.clock {
 		list = append(list, Condition{
 			Series: s.name, Indicator: ix.cfg.Name, Kind: Silent, Since: s.seen,
 			Text: "nothing was heard for longer than " + config.FormatDuration(expect),

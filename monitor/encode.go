@@ -47,6 +47,9 @@ func (s *series) encode(whole bool) []byte {
 	}
 	b = s.encodeReferences(b)
 	b = s.encodeLimits(b)
+	if s.sum != nil {
+		return binary.AppendUvarint(b, 0) // its cells follow from its members'
+	}
 	if whole {
 		b = binary.AppendUvarint(b, uint64(len(s.cells)))
 		for i := range s.cells {

@@ -44,6 +44,7 @@ func (e *Engine) evidence(s *series, d direction, boundary int64, window int) li
 	fillRate(&ev, &u, &o)
 	ev.RatioKind, ev.Ratio, ev.RatioLower, ev.RatioUpper = ratioTo(&ev, &u, u.ref, &o)
 	ev.Baseline = ix.baselineOf(s, &u, &ev, &o)
+	ev.Carriers, ev.MoreCarriers = ix.carriers(s, from, boundary)
 	ev.Allowance = e.allowanceOf(s, cfg, boundary)
 	ev.Recompute = recompute(&ev, &u, d)
 	return ev

@@ -189,7 +189,7 @@ func (ix *indicator) lookback() int64 {
 // expect returns what the latest known slots of the series tell of its
 // exposure, rounded outwards to one of eight to the octave; false if nothing.
 func (ix *indicator) expect(s *series, u *usual, boundary int64) (expectation, bool) {
-	if ix.cfg.Exposure != config.Clock {
+	if s.exposureFrom() != config.Clock {
 		return ix.expectFrom(s, u, max(boundary-ix.lookback(), s.birth, ix.kept), boundary)
 	}
 	if c := &ix.clocked; c.base != u.base || c.boundary != boundary {

@@ -162,6 +162,9 @@ func (e *Engine) SlotsOf(series string, n int) []SlotView {
 	}
 	ix := s.indicator
 	last := ix.cal.Slot(e.clock)
+	if s.sum != nil {
+		last = ix.looked - 1
+	}
 	if k := len(s.cells); k > 0 {
 		last = max(last, s.cells[k-1].slot)
 	}
@@ -210,7 +213,7 @@ func (e *Engine) ChangesOf(series string) []Dated {
 	}
 	for i := range ix.cfg.Baselines {
 		b := &ix.cfg.Baselines[i]
-		if b.From.IsZero() || !b.Series.Match(series) || InstantOf(b.From) > ix.cal.Start(ix.looked) {
+		if b.From.IsZero() || !b.Serves(series) || InstantOf(b.From) > ix.cal.Start(ix.looked) {
 			continue
 		}
 		what := "another baseline"

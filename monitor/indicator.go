@@ -14,6 +14,7 @@ type indicator struct {
 	clock  clockRule // for exposure by the clock
 	needs  sides
 	series []*series
+	sums   []*series // those of series that are sums
 	// longest is the length of the longest window in slots, and reach how far
 	// before a boundary a look reads: a window, and the one looked at before.
 	longest, reach int64

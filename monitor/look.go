@@ -62,10 +62,10 @@ type tally struct {
 
 // tally sums the slots in [from, to).
 func (ix *indicator) tally(s *series, from, to int64) tally {
-	if ix.cfg.Exposure == config.Census {
+	if s.exposureFrom() == config.Census {
 		return ix.tallyCensus(s, from, to)
 	}
-	return ix.filled(ix.sum(s, from, to), from, to)
+	return ix.filled(s, ix.sum(s, from, to), from, to)
 }
 
 // tallyCensus sums the slots in [from, to) where levels are carried forward.
@@ -98,7 +98,7 @@ func (ix *indicator) empty(s *series, from, to int64) int64 {
 	var n int64
 	for slot := from; slot < to; slot++ {
 		if ix.cal.Start(slot) == ix.cal.Start(slot+1) {
-			if i, ok := s.cells.find(slot); !ok || !ix.needs.paired(&s.cells[i]) {
+			if i, ok := s.cells.find(slot); !ok || !s.needs().paired(&s.cells[i]) {
 				n++
 			}
 		}

@@ -208,19 +208,25 @@ func (e *Engine) isFrozen(c *contribution) bool {
 
 // birth makes the series of a first observation.
 func (e *Engine) birth(ix *indicator, o *Observation, c *contribution) (Reason, string) {
-	if limit := e.setup.Limits.MaxSeries; len(e.series) >= limit {
+	if limit := e.setup.Limits.MaxSeries; len(e.series)+len(e.newSums(ix, o.Series)) >= limit {
 		return SeriesFull, fmt.Sprintf("%d series are monitored already: raise limits.max_series", limit)
 	}
+	c.series = e.enter(ix, o.Series)
+	e.link(c.series)
+	return "", ""
+}
+
+// enter makes a series.
+func (e *Engine) enter(ix *indicator, name string) *series {
 	s := &series{
-		number: uint32(len(e.series)), name: o.Series, indicator: ix, birth: unborn,
-		trimmed: -1 << 62, windows: make([]windowState, len(ix.cfg.Windows)),
+		number: uint32(len(e.series)), name: name, indicator: ix, birth: unborn,
+		trimmed: -1 << 62, windows: make([]windowState, len(ix.cfg.Windows)), fresh: true,
 	}
 	e.series = append(e.series, s)
 	e.byName[s.name] = s
 	ix.series = append(ix.series, s)
-	c.series, s.fresh = s, true
 	e.touch(s)
-	return "", ""
+	return s
 }
 
 // count takes back what the id said before, adds what it says now, and
@@ -246,7 +252,7 @@ func (e *Engine) count(o *Observation, ix *indicator, key idKey, old *identified
 	if len(changes) == 2 && changes[0].series == changes[1].series {
 		changes = merge(changes[0], changes[1])
 	}
-	for _, c := range changes {
+	for _, c := range append(changes, e.sumChanges(changes)...) {
 		e.rerun(c)
 	}
 }
@@ -318,7 +324,7 @@ func (e *Engine) add(c *contribution, id string, sign int) change {
 // carriedTo is the last slot that a change reaches: its own, or where levels
 // of exposure are carried forward the last one that its level would serve.
 func (ix *indicator) carriedTo(c *change) int64 {
-	if ix.cfg.Exposure != config.Census {
+	if c.series.exposureFrom() != config.Census {
 		return c.to
 	}
 	next, _ := c.series.cells.find(c.to + 1)

@@ -107,7 +107,7 @@ func (ix *indicator) stratum(strata *config.Strata, slot int64) int {
 // eachExposure calls use for the slots in [from, to) that have an exposure, in
 // order, with whether it is provisional: carried forward from an earlier slot.
 func (ix *indicator) eachExposure(s *series, from, to int64, use func(slot int64, q Quantity, provisional bool)) {
-	switch ix.cfg.Exposure {
+	switch s.exposureFrom() {
 	case config.Clock:
 		for slot := from; slot < to; slot++ {
 			use(slot, ix.clock.between(ix.cal.Start(slot), ix.cal.Start(slot+1)), false)
@@ -118,7 +118,7 @@ func (ix *indicator) eachExposure(s *series, from, to int64, use func(slot int64
 		inside := s.cells.between(from, to)
 		for i := range inside {
 			if c := &inside[i]; c.saysExposure > 0 {
-				use(c.slot, c.exposure, false)
+				use(c.slot, c.exposure, c.provisional)
 			}
 		}
 	}

@@ -67,7 +67,7 @@ func (ix *indicator) quickLook(s *series, b *config.Baseline, w, in int, boundar
 		if out < 0 || s.cells[out].slot != r.from {
 			return false
 		}
-		r.move(&s.cells[in], &s.cells[out], ix.needs)
+		r.move(&s.cells[in], &s.cells[out], s.needs())
 	}
 	t := &r.tally
 	if r.to != boundary || t.known != length || t.exposure.Hi != 0 || t.exposure.Lo == 0 || t.exposure.Lo >= 1<<53 {

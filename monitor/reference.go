@@ -17,7 +17,7 @@ func (e *Engine) refresh(ix *indicator, ep *epoch, boundary int64) {
 	if !estimated(ep.cfg) {
 		return
 	}
-	var pools map[*config.Baseline]*pool
+	var pools map[poolKey]*pool
 	for _, s := range ix.series {
 		b := ix.baseline(s, ep.cfg, boundary)
 		if b == nil || (b.Kind != config.Trailing && b.Kind != config.Peers) || s.birth >= boundary {
@@ -34,12 +34,13 @@ func (e *Engine) refresh(ix *indicator, ep *epoch, boundary int64) {
 			ix.countReference(s, b, &r, boundary)
 		} else {
 			if pools == nil {
-				pools = map[*config.Baseline]*pool{}
+				pools = map[poolKey]*pool{}
 			}
-			p := pools[b]
+			key := poolKey{b, s.ruleOf()}
+			p := pools[key]
 			if p == nil {
-				p = ix.poolOf(ep, b, boundary)
-				pools[b] = p
+				p = ix.poolOf(ep, key, boundary)
+				pools[key] = p
 			}
 			r = p.without(s, b, ix.cfg)
 		}
@@ -197,9 +198,9 @@ func mean(list []trials, usual float64) float64 {
 func (ix *indicator) eventsOf(s *series, slot int64) (int64, bool) {
 	i, ok := s.cells.find(slot)
 	if !ok {
-		return 0, !ix.needs.events
+		return 0, !s.needs().events
 	}
-	return s.cells[i].events, !ix.needs.events || s.cells[i].saysEvents > 0
+	return s.cells[i].events, !s.needs().events || s.cells[i].saysEvents > 0
 }
 
 // isMarked reports whether the slot lies in a span that was marked real.
@@ -215,12 +216,19 @@ type pool struct {
 	index float64
 }
 
-func (ix *indicator) poolOf(ep *epoch, b *config.Baseline, boundary int64) *pool {
+// poolKey tells pools apart: sums have other sums for peers.
+type poolKey struct {
+	base *config.Baseline
+	rule int
+}
+
+func (ix *indicator) poolOf(ep *epoch, key poolKey, boundary int64) *pool {
+	b := key.base
 	p := &pool{each: map[*series]*reference{}}
 	p.sum.strata = make([]Quantity, strataOf(b))
 	p.sum.begin, p.sum.end = boundary-int64(b.SpanSlots), boundary
 	for _, s := range ix.series { // in order of their numbers
-		if ix.baseline(s, ep.cfg, boundary) != b {
+		if s.ruleOf() != key.rule || ix.baseline(s, ep.cfg, boundary) != b {
 			continue
 		}
 		r := &reference{begin: p.sum.begin, end: p.sum.end}

@@ -31,6 +31,7 @@ func Restore(p Partition, snap *Snapshot, record func(id string) (life.Record, e
 			return nil, fmt.Errorf("monitor: restoring series %d: %w", number, err)
 		}
 	}
+	e.relink()
 	for i := range snap.IDs {
 		if err := e.restoreID(&snap.IDs[i]); err != nil {
 			return nil, fmt.Errorf("monitor: restoring id %d: %w", i, err)

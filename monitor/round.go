@@ -7,6 +7,7 @@ func (e *Engine) lookAll(ix *indicator, boundary int64) {
 	due := ix.nextDue
 	ix.pass(boundary)
 	ep := ix.epochAt(boundary)
+	ix.fillSums(boundary)
 	e.refresh(ix, ep, boundary)
 	e.allot(ix, ep, boundary)
 	for _, s := range ix.series {

@@ -15,7 +15,7 @@ type running struct {
 // look before it summed where that is nearer.
 func (ix *indicator) windowTally(s *series, window int, from, to int64) tally {
 	r := &s.windows[window].running
-	if ix.cfg.Exposure == config.Census || to < r.to && r.ok {
+	if s.exposureFrom() == config.Census || to < r.to && r.ok {
 		return ix.tally(s, from, to)
 	}
 	moved := to - r.to
@@ -25,22 +25,26 @@ func (ix *indicator) windowTally(s *series, window int, from, to int64) tally {
 		t.known += in.known - out.known
 		t.events += in.events - out.events
 		t.late += in.late - out.late
+		t.provisional += in.provisional - out.provisional
 		t.exposure = t.exposure.add(in.exposure).sub(out.exposure)
 	} else {
 		r.tally = ix.sum(s, from, to)
 	}
 	r.from, r.to, r.ok = from, to, true
-	return ix.filled(r.tally, from, to)
+	return ix.filled(s, r.tally, from, to)
 }
 
 // sum sums what the cells in [from, to) hold.
 func (ix *indicator) sum(s *series, from, to int64) tally {
 	var t tally
-	inside := s.cells.between(from, to)
+	inside, needs := s.cells.between(from, to), s.needs()
 	for i := range inside {
 		c := &inside[i]
-		if ix.needs.paired(c) {
+		if needs.paired(c) {
 			t.known++
+		}
+		if c.provisional {
+			t.provisional++
 		}
 		t.events += c.events
 		t.late += c.late
@@ -50,11 +54,12 @@ func (ix *indicator) sum(s *series, from, to int64) tally {
 }
 
 // filled adds to the sum of [from, to) what needs no cells.
-func (ix *indicator) filled(t tally, from, to int64) tally {
-	if !ix.needs.events && !ix.needs.exposure {
+func (ix *indicator) filled(s *series, t tally, from, to int64) tally {
+	needs := s.needs()
+	if !needs.events && !needs.exposure {
 		t.known = to - from
 	}
-	if !ix.needs.exposure {
+	if !needs.exposure {
 		t.exposure = ix.clock.between(ix.cal.Start(from), ix.cal.Start(to))
 	}
 	return t

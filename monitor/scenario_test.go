@@ -166,6 +166,9 @@ func renderStep(b *bytes.Buffer, n *life.Notice) {
 		fmt.Fprintf(b, "    %s to %s: %d in %s %s, expected %.4g, p %.5g, critical %d, late %d, rate %.4g (%.4g to %.4g)\n",
 			e.Window, e.To.Format("2006-01-02"), e.Events, e.Exposure, e.Unit, e.Expected, e.P, e.Critical, e.LateEvents,
 			e.Rate, e.RateLower, e.RateUpper)
+		for _, c := range e.Carriers {
+			fmt.Fprintf(b, "    carried by %s: %d in %s\n", c.Series, c.Events, c.Exposure)
+		}
 		renderBaseline(b, e)
 	}
 	if len(r.IDs) > 0 && n.Step.Kind == life.StepOpened {

@@ -24,6 +24,10 @@ type series struct {
 	// seen is the partition's clock when an observation was last counted.
 	seen  Instant
 	cells cells
+	// sum is set where the series is one, and sums are those that it is a
+	// member of.
+	sum  *rollup
+	sums []*series
 	// array is what the cells lie in, at its end.
 	array cells
 	// windows and tails hold what the looks have found, by window and by
@@ -143,7 +147,10 @@ func (e *Engine) trim(s *series) {
 	n, _ := s.cells.find(ix.kept)
 	for i := range s.cells[:n] {
 		c := &s.cells[i]
-		if !ix.needs.paired(c) {
+		if s.sum != nil {
+			continue
+		}
+		if !s.needs().paired(c) {
 			s.unpaired += int64(c.items)
 		}
 		e.archive(s, c)

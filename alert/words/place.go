@@ -9,7 +9,8 @@ import (
 
 // place turns a series name into words by its parts, the narrowest first:
 // "quillmere-east/ward-3/line-infection" is "Ward 3, Quillmere East". A last
-// part that only names the indicator or its events is left out.
+// part that only names the indicator or its events is left out. Of a sum the
+// parts over which was summed are left out: "Quillmere East, all together".
 func place(r *life.Record) string {
 	parts := strings.Split(r.Series, "/")
 	if n := len(parts); n > 1 && namesEvents(parts[n-1], r) {
@@ -17,7 +18,13 @@ func place(r *life.Record) string {
 	}
 	words := make([]string, 0, len(parts))
 	for i := len(parts) - 1; i >= 0; i-- {
+		if isSum(parts[i]) && strings.Trim(parts[i], "*") == "" {
+			continue
+		}
 		words = append(words, titled(clean(parts[i])))
+	}
+	if isSum(r.Series) {
+		words = append(words, together)
 	}
 	return strings.Join(words, ", ")
 }

@@ -13,7 +13,7 @@ import (
 // span, the exposure, what would be usual, how often so much or so little
 // comes by chance, and the exact bounds of the rate.
 func Sentence(r *life.Record, e *life.Evidence) string {
-	return finding(r, e) + " " + bounds(e)
+	return finding(r, e) + carriers(r, e) + " " + bounds(e)
 }
 
 // finding is the sentence without the bounds.

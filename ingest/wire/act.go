@@ -6,6 +6,7 @@ import (
 	"unicode"
 	"unicode/utf8"
 
+	"tailbell/config"
 	"tailbell/monitor"
 	"tailbell/monitor/life"
 )
@@ -75,10 +76,7 @@ func readActField(field field, act *monitor.Act) *fault {
 	case "alert":
 		return readActText(field, MaxIDLength, &act.Alert)
 	case "series":
-		var w draft
-		f := w.readSeries(field)
-		act.Series = string(w.series)
-		return f
+		return readActSeries(field, act)
 	case "direction":
 		var text string
 		if f := readActText(field, MaxIDLength, &text); f != nil {
@@ -103,6 +101,18 @@ func readActField(field field, act *monitor.Act) *fault {
 		return readTime(field, &act.At)
 	}
 	return refuse(monitor.UnknownField, "an act has no field %q; leave it out", clip(field.name))
+}
+
+// readActSeries reads the name of a series or of a sum, or a pattern.
+func readActSeries(field field, act *monitor.Act) *fault {
+	if f := isText(field, monitor.BadSeries); f != nil {
+		return f
+	}
+	act.Series = string(unquote(field.value))
+	if err := config.CheckPattern(act.Series); err != nil {
+		return refuse(monitor.BadSeries, "series %q: %v; write it like site/ward-3/falls", clip(act.Series), err)
+	}
+	return nil
 }
 
 func readActKind(field field, act *monitor.Act) *fault {

@@ -132,6 +132,14 @@ type Shelf struct {
 	Why   string    `json:"why"`
 }
 
+// Carrier is a member of a sum with the events that it brings: Events in
+// Exposure.
+type Carrier struct {
+	Series   string `json:"series"`
+	Events   int64  `json:"events"`
+	Exposure string `json:"exposure"`
+}
+
 // Evidence is one look that signals: what was seen, what would be usual, and
 // how surprising that is.
 type Evidence struct {
@@ -153,6 +161,10 @@ type Evidence struct {
 	// Provisional is how many slots have an exposure that was carried forward.
 	Provisional int64 `json:"provisional_slots,omitempty"`
 	LateEvents  int64 `json:"late_events"`
+	// Carriers are the members of a sum that had the events, those with the
+	// most first, up to a cap; MoreCarriers counts those beyond it.
+	Carriers     []Carrier `json:"carriers,omitempty"`
+	MoreCarriers int       `json:"more_carriers,omitempty"`
 	// EventNoun names the events in the plural, e.g. "line infections".
 	EventNoun string `json:"event_noun"`
 	// Expected events under the baseline.

@@ -80,7 +80,7 @@ func (p *plan) linkIndicators() {
 }
 
 func judgesTogether(in *config.Indicator) bool {
-	return in.Allowance != nil || slices.ContainsFunc(in.Baselines, func(b config.Baseline) bool { return b.Kind == config.Peers })
+	return in.Allowance != nil || len(in.Sums) > 0 || slices.ContainsFunc(in.Baselines, func(b config.Baseline) bool { return b.Kind == config.Peers })
 }
 
 // linkIDs keeps the series together that share an id.
