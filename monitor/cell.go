@@ -61,7 +61,11 @@ func (s *series) at(slot int64) *cell {
 	i, ok := s.cells.find(slot)
 	if !ok {
 		s.makeRoom()
-		s.cells = slices.Insert(s.cells, i, cell{slot: slot})
+		if i == len(s.cells) {
+			s.cells = append(s.cells, cell{slot: slot})
+		} else {
+			s.cells = slices.Insert(s.cells, i, cell{slot: slot})
+		}
 	}
 	return &s.cells[i]
 }

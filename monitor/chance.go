@@ -24,9 +24,18 @@ type chanceKey struct {
 	bits   uint64 // of the exposure
 }
 
+// KnownChances are p-values that were computed before. Engines under one set-up
+// may share them, one at a time.
+type KnownChances struct{ under map[edgeKey][]keptChance }
+
 // KeepChances makes the engine compute the p-value of every look, in each tail
 // that is watched, and sum them up: call it before the first message.
-func (e *Engine) KeepChances() { e.chances = map[*indicator]*[2]Chances{} }
+func (e *Engine) KeepChances(known *KnownChances) {
+	if known.under == nil {
+		known.under = map[edgeKey][]keptChance{}
+	}
+	e.chances, e.known = map[*indicator]*[2]Chances{}, known
+}
 
 // Chances returns the sums, by indicator, the upper tail first.
 func (e *Engine) Chances() []Chances {
@@ -110,19 +119,36 @@ func (e *Engine) quickChance(s *series, w int) {
 			c[d].add(1)
 			continue
 		}
-		c[d].add(s.windows[w].edges[d].chance(key, weighted))
+		x := s.windows[w].edges[d]
+		if x.chances == nil {
+			x.chances = e.known.of(x.key)
+		}
+		c[d].add(x.chance(key, weighted))
 	}
 }
 
-// mostChances is how many p-values are kept under one baseline and limit.
-const mostChances = 1 << 16
+// chanceBits is the binary logarithm of how many p-values are kept under one
+// baseline and limit.
+const chanceBits = 18
+
+// of returns the places for p-values under one baseline and limit.
+func (k *KnownChances) of(key edgeKey) []keptChance {
+	if k.under[key] == nil {
+		if len(k.under) >= mostTables {
+			clear(k.under)
+		}
+		k.under[key] = make([]keptChance, 1<<chanceBits)
+	}
+	return k.under[key]
+}
+
+// mostTables is under how many baselines and limits p-values are kept: each
+// takes 6 MiB.
+const mostTables = 16
 
 // chance returns the p-value of a count, which is kept.
 func (x *edges) chance(key chanceKey, weighted float64) float64 {
-	if x.chances == nil {
-		x.chances = make([]keptChance, mostChances)
-	}
-	at := &x.chances[(key.bits*0x9E3779B97F4A7C15^uint64(key.events)*0xD6E8FEB86659FD93)>>48]
+	at := &x.chances[(key.bits*0x9E3779B97F4A7C15^uint64(key.events)*0xD6E8FEB86659FD93)>>(64-chanceBits)]
 	if at.key != key {
 		o := opportunity{exposure: weighted, weighted: weighted}
 		*at = keptChance{key, tailOf(newLaw(&x.u, x.key.d, &o), x.key.d, key.events)}

@@ -75,6 +75,7 @@ type Engine struct {
 	passing bool
 	// chances sums the p-values of all looks, nil if nobody asked.
 	chances map[*indicator]*[2]Chances
+	known   *KnownChances
 }
 
 // Partition says which part of all series an engine holds.

@@ -232,7 +232,8 @@ func (e *Engine) enter(ix *indicator, name string) *series {
 // count takes back what the id said before, adds what it says now, and
 // re-runs the looks that either touched.
 func (e *Engine) count(o *Observation, ix *indicator, key idKey, old *identified, said contribution) {
-	var changes []change
+	var room [2]change
+	changes := room[:0]
 	if old != nil && old.said.series != nil {
 		e.account.Replaced++
 		e.account.Counted--

@@ -53,7 +53,7 @@ func TestQuick(t *testing.T) {
 			looks := 0
 			long.OnLook(func(View) { looks++ })
 			for _, e := range []*Engine{quick, long} {
-				e.KeepChances()
+				e.KeepChances(&KnownChances{})
 				e.Apply(&Message{Position: 1, Kind: SettingMessage, Setting: Setting{Setup: setup}})
 			}
 			steps := [2][]life.Notice{}

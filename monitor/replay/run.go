@@ -82,12 +82,13 @@ func (p *plan) run(ctx context.Context, o Options) (r *Result, full bool, err er
 	var all sync.WaitGroup
 	for range min(workers, len(p.groups)) {
 		all.Go(func() {
+			known := &monitor.KnownChances{}
 			for {
 				g := int(next.Add(1)) - 1
 				if g >= len(p.groups) || ctx.Err() != nil {
 					return
 				}
-				if err := pl.play(ctx, g); err != nil {
+				if err := pl.play(ctx, g, known); err != nil {
 					cancel(err)
 					pl.order.stop()
 					return
@@ -105,11 +106,11 @@ func (p *plan) run(ctx context.Context, o Options) (r *Result, full bool, err er
 }
 
 // play plays one group by an engine of its own.
-func (pl *player) play(ctx context.Context, g int) error {
+func (pl *player) play(ctx context.Context, g int, known *monitor.KnownChances) error {
 	e := monitor.New(monitor.Partition{Of: 1, KeyParts: pl.setup.KeyParts})
 	e.Pass()
 	if pl.opts.Chances {
-		e.KeepChances()
+		e.KeepChances(known)
 	}
 	if pl.opts.Look != nil {
 		e.OnLook(func(v monitor.View) { pl.opts.Look(g, &v) })
