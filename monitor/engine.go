@@ -76,6 +76,8 @@ type Engine struct {
 	// chances sums the p-values of all looks, nil if nobody asked.
 	chances map[*indicator]*[2]Chances
 	known   *KnownChances
+	// long makes it go no quick way: tests hold those against the long ones.
+	long bool
 }
 
 // Partition says which part of all series an engine holds.
@@ -136,6 +138,9 @@ func (e *Engine) element(m *Message, index int) {
 	if it.Reason != "" {
 		e.account.Refused++
 		e.refuse(m, index, it.Observation.Series, it.Reason, it.Detail, it.Raw)
+		return
+	}
+	if e.plainRow(m, &it.Observation) {
 		return
 	}
 	if reason, detail := e.keepTime(m, &it.Observation); reason != "" {

@@ -51,13 +51,23 @@ func (e *Engine) observe(o *Observation) (Reason, string) {
 }
 
 // named returns the series of this name, nil for none. The one asked for last
-// is asked for again at once, often by the very same text.
+// is often asked for again, or the one that came after it the last time, and by
+// the very same text.
 func (e *Engine) named(name string) *series {
-	if e.recent != nil && e.recent.name == name {
-		return e.recent
+	last := e.recent
+	switch {
+	case last == nil:
+	case last.name == name:
+		return last
+	case last.next != nil && last.next.name == name:
+		e.recent = last.next
+		return last.next
 	}
 	s := e.byName[name]
 	if s != nil {
+		if last != nil {
+			last.next = s
+		}
 		e.recent = s
 	}
 	return s

@@ -12,7 +12,7 @@ import (
 // whether it did; if not, nothing happened but that sums were moved on.
 func (e *Engine) quick(s *series, ep *epoch, boundary int64, due Instant) bool {
 	ix, cfg := s.indicator, ep.cfg
-	if e.onLook != nil || cfg != ix.cfg || !ix.plain(cfg) || s.baseOf != cfg || s.base == nil || s.tails[upper].waits() || s.tails[lower].waits() {
+	if e.long || e.onLook != nil || cfg != ix.cfg || !ix.plain(cfg) || s.baseOf != cfg || s.base == nil || s.tails[upper].waits() || s.tails[lower].waits() {
 		return false
 	}
 	b := s.base

@@ -52,6 +52,7 @@ func TestQuick(t *testing.T) {
 			quick, long := New(Partition{Of: 1, KeyParts: 1}), New(Partition{Of: 1, KeyParts: 1})
 			looks := 0
 			long.OnLook(func(View) { looks++ })
+			long.long = true
 			for _, e := range []*Engine{quick, long} {
 				e.KeepChances(&KnownChances{})
 				e.Apply(&Message{Position: 1, Kind: SettingMessage, Setting: Setting{Setup: setup}})

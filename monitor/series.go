@@ -52,6 +52,8 @@ type series struct {
 	touched bool
 	// watched counts the looks by window while the engine is passing.
 	watched []watch
+	// next is the series that was asked for after this one the last time.
+	next *series
 	// fresh says that no patch has named the series yet.
 	fresh bool
 }

@@ -158,7 +158,7 @@ func TestSpeed(t *testing.T) {
 	_, slots := speedRun(t, tape, until, `{ span = "91d", step = "91d" }`, false)
 	looks := float64(ours.Looks)
 	text := fmt.Sprintf("%d rows, %.0f looks, processor time on one core:\n", tape.Len(), looks)
-	text += fmt.Sprintf("  SciPy:    %.2f s to read numbers, %.2f s for the p-values: %.2f s\n", theirs.Read, theirs.P, theirs.Read+theirs.P)
+	text += fmt.Sprintf("  SciPy:    %.2f s to read rows, %.2f s for the p-values: %.2f s\n", theirs.Read, theirs.P, theirs.Read+theirs.P)
 	text += fmt.Sprintf("  Tailbell: %.2f s to read rows, %.2f s for slots, looks, alerts and p-values: %.2f s\n", read.Seconds(), all.Seconds(), (read + all).Seconds())
 	text += fmt.Sprintf("  as fast:  %.2f times over all, %.2f times beyond reading\n", (theirs.Read+theirs.P)/(read+all).Seconds(), theirs.P/all.Seconds())
 	text += fmt.Sprintf("  decisions alone: %.1f ns a look beyond rows into slots (%.2f s); with these %.1f ns\n",

@@ -85,6 +85,9 @@ func judgesTogether(in *config.Indicator) bool {
 
 // linkIDs keeps the series together that share an id.
 func (p *plan) linkIDs() {
+	if len(p.tape.ids) == 0 && len(p.tape.acts) == 0 {
+		return
+	}
 	type key struct{ site, id string }
 	first := map[key]int32{}
 	for i := range p.tape.n {
@@ -184,10 +187,8 @@ func (p *plan) moves(r *row, calendars map[*config.Indicator]*monitor.Calendar, 
 // divide gives every series a group, and every group its rows.
 func (p *plan) divide() {
 	rows := make([]int, len(p.parent))
-	for i := range p.tape.n {
-		if s := p.tape.raw(i).series; s >= 0 {
-			rows[p.root(s)]++
-		}
+	for s, n := range p.tape.counts {
+		rows[p.root(int32(s))] += n
 	}
 	members := make([]int, len(p.parent))
 	for i := range p.parent {

@@ -13,6 +13,7 @@ import (
 // order and sorted by Sort.
 type Tape struct {
 	names  []string
+	counts []int // rows by series
 	number map[string]int32
 	// rows lie in pieces, so that growing copies nothing.
 	rows [][]row
@@ -99,7 +100,7 @@ func (t *Tape) Number(name string) int32 {
 		t.number = map[string]int32{}
 	}
 	n := int32(len(t.names))
-	t.names = append(t.names, name)
+	t.names, t.counts = append(t.names, name), append(t.counts, 0)
 	t.number[name] = n
 	return n
 }
@@ -178,6 +179,9 @@ func (t *Tape) add(r row, p Place) {
 	r.file, r.line = int16(len(t.files)-1), uint32(p.Line)
 	if t.n == 0 {
 		t.latest = r.time
+	}
+	if r.series >= 0 {
+		t.counts[r.series]++
 	}
 	if r.time < t.latest {
 		t.late++

@@ -1,0 +1,34 @@
+package monitor
+
+// plainRow counts an observation if it is the usual one of a history: events and
+// exposure of a known series, without an id, in the slot after those that are
+// there. It reports whether it did; if not, the clock may have moved on to when
+// the observation became known, and nothing else happened.
+func (e *Engine) plainRow(m *Message, o *Observation) bool {
+	if !e.history || !m.HasTime || o.ID != "" || o.Retracted || o.Instant || !o.HasEvents || !o.HasExposure || e.long {
+		return false
+	}
+	s := e.named(o.Series)
+	if s == nil || !s.indicator.plain(s.indicator.cfg) {
+		return false
+	}
+	ix, clock := s.indicator, max(e.clock, m.Time)
+	slot := ix.cal.Slot(o.Start)
+	end := ix.cal.Start(slot + 1)
+	exposure, reason := quantityOf(o.Exposure, ix.cfg.GrainDigits)
+	if reason != "" || o.End <= o.Start || o.End > end || o.Events > maxEvents ||
+		end < clock.Add(-ix.cfg.Horizon) || o.End > clock.Add(ix.cfg.Ahead) {
+		return false
+	}
+	e.advance(clock)
+	n := len(s.cells)
+	if slot < ix.looked || slot < s.birth || n > 0 && slot <= s.cells[n-1].slot {
+		return false
+	}
+	s.makeRoom()
+	s.cells = append(s.cells, cell{slot: slot, events: o.Events, exposure: exposure, saysEvents: 1, saysExposure: 1, items: 1})
+	s.seen = e.clock
+	e.account.Counted++
+	e.touchSlot(s, slot)
+	return true
+}
