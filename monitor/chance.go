@@ -1,7 +1,5 @@
 package monitor
 
-import "math"
-
 // Chances sums up the p-values of all looks of one indicator and tail: where
 // its baselines are right, looks that overlap aside, no share of them should lie
 // far above its level.
@@ -18,12 +16,6 @@ type Chances struct {
 // ChanceLevels are the p-values at or under which looks are counted.
 var ChanceLevels = [...]float64{0.1, 0.05, 0.01, 0.001, 0.0001}
 
-// chanceKey is all that the p-value of a usual look depends on.
-type chanceKey struct {
-	events int64
-	bits   uint64 // of the exposure
-}
-
 // KnownChances are p-values that were computed before. Engines under one set-up
 // may share them, one at a time.
 type KnownChances struct{ under map[edgeKey][]keptChance }
@@ -34,17 +26,17 @@ func (e *Engine) KeepChances(known *KnownChances) {
 	if known.under == nil {
 		known.under = map[edgeKey][]keptChance{}
 	}
-	e.chances, e.known = map[*indicator]*[2]Chances{}, known
+	e.known = known
 }
 
 // Chances returns the sums, by indicator, the upper tail first.
 func (e *Engine) Chances() []Chances {
 	var list []Chances
 	for _, ix := range e.indicators {
-		c := e.chances[ix]
-		if c == nil {
-			continue
+		if e.known == nil {
+			break
 		}
+		c := &ix.chances
 		for d, watched := range [...]bool{ix.cfg.Upper, ix.cfg.Lower} {
 			if watched {
 				c[d].Indicator, c[d].Upper = ix.cfg.Name, direction(d) == upper
@@ -53,15 +45,6 @@ func (e *Engine) Chances() []Chances {
 		}
 	}
 	return list
-}
-
-func (e *Engine) chancesOf(ix *indicator) *[2]Chances {
-	c := e.chances[ix]
-	if c == nil {
-		c = &[2]Chances{}
-		e.chances[ix] = c
-	}
-	return c
 }
 
 func (c *Chances) add(p float64) {
@@ -80,7 +63,7 @@ func (c *Chances) add(p float64) {
 // chance adds the p-values of a look that was made.
 func (e *Engine) chance(s *series, ep *epoch, l *look) {
 	ix := s.indicator
-	c := e.chancesOf(ix)
+	c := &ix.chances
 	o := opportunity{}
 	u, ok := ix.judgedBy(s, ep, l.window, l.boundary)
 	if ok && !l.exposure.IsZero() {
@@ -107,23 +90,20 @@ func tailOf(p law, d direction, events int64) float64 {
 // quickChance adds the p-values of a look that quick made.
 func (e *Engine) quickChance(s *series, w int) {
 	ix := s.indicator
-	c := e.chancesOf(ix)
+	c := &ix.chances
 	t := &s.windows[w].running.tally
-	weighted := float64(t.exposure.Lo) / pow10[ix.cfg.GrainDigits]
-	key := chanceKey{t.events, math.Float64bits(weighted)}
-	for _, d := range bothTails {
-		if d == upper && !ix.cfg.Upper || d == lower && !ix.cfg.Lower {
-			continue
-		}
-		if d == upper && t.events == 0 {
+	for d, watched := range [...]bool{ix.cfg.Upper, ix.cfg.Lower} {
+		switch {
+		case !watched:
+		case direction(d) == upper && t.events == 0:
 			c[d].add(1)
-			continue
+		default:
+			x := s.windows[w].edges[d]
+			if x.chances == nil {
+				x.chances = e.known.of(x.key)
+			}
+			c[d].add(x.chance(t.events, t.exposure.Lo, ix.cfg.GrainDigits))
 		}
-		x := s.windows[w].edges[d]
-		if x.chances == nil {
-			x.chances = e.known.of(x.key)
-		}
-		c[d].add(x.chance(key, weighted))
 	}
 }
 
@@ -143,15 +123,19 @@ func (k *KnownChances) of(key edgeKey) []keptChance {
 }
 
 // mostTables is under how many baselines and limits p-values are kept: each
-// takes 6 MiB.
+// takes 4 MiB.
 const mostTables = 16
 
-// chance returns the p-value of a count, which is kept.
-func (x *edges) chance(key chanceKey, weighted float64) float64 {
-	at := &x.chances[(key.bits*0x9E3779B97F4A7C15^uint64(key.events)*0xD6E8FEB86659FD93)>>(64-chanceBits)]
+// chance returns the p-value of a count in so many grains of exposure, which is
+// kept. Edges are known of counts below mostEdges, and quick looks have less than
+// 2^52 grains: both fit into one key.
+func (x *edges) chance(events int64, grains uint64, digits int) float64 {
+	key := grains | uint64(events)<<52
+	at := &x.chances[key*0x9E3779B97F4A7C15>>(64-chanceBits)]
 	if at.key != key {
+		weighted := float64(grains) / pow10[digits]
 		o := opportunity{exposure: weighted, weighted: weighted}
-		*at = keptChance{key, tailOf(newLaw(&x.u, x.key.d, &o), x.key.d, key.events)}
+		*at = keptChance{key, tailOf(newLaw(&x.u, x.key.d, &o), x.key.d, events)}
 	}
 	return at.p
 }
@@ -159,6 +143,6 @@ func (x *edges) chance(key chanceKey, weighted float64) float64 {
 // keptChance is a p-value with what it is of; the zero value is of no events in
 // no exposure, which is never asked for.
 type keptChance struct {
-	key chanceKey
+	key uint64
 	p   float64
 }

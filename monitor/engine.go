@@ -73,9 +73,8 @@ type Engine struct {
 	looks  []look // scratch
 	// passing says that nothing stores the engine, see Pass.
 	passing bool
-	// chances sums the p-values of all looks, nil if nobody asked.
-	chances map[*indicator]*[2]Chances
-	known   *KnownChances
+	// known are p-values that were computed, nil if nobody asked for any.
+	known *KnownChances
 	// long makes it go no quick way: tests hold those against the long ones.
 	long bool
 }

@@ -45,6 +45,8 @@ type indicator struct {
 	// clocked is what the clock lets expect; exposures is scratch.
 	clocked   clocked
 	exposures []float64
+	// chances sum up the p-values of all looks, if they are asked for.
+	chances [2]Chances
 }
 
 // epoch is one version of an indicator's stanza.

@@ -37,7 +37,7 @@ func (e *Engine) quick(s *series, ep *epoch, boundary int64, due Instant) bool {
 		if e.passing {
 			e.watched(s, w, due)
 		}
-		if e.chances != nil {
+		if e.known != nil {
 			e.quickChance(s, w)
 		}
 	}
@@ -70,7 +70,7 @@ func (ix *indicator) quickLook(s *series, b *config.Baseline, w, in int, boundar
 		r.move(&s.cells[in], &s.cells[out], s.needs())
 	}
 	t := &r.tally
-	if r.to != boundary || t.known != length || t.exposure.Hi != 0 || t.exposure.Lo == 0 || t.exposure.Lo >= 1<<53 {
+	if r.to != boundary || t.known != length || t.exposure.Hi != 0 || t.exposure.Lo == 0 || t.exposure.Lo >= 1<<52 {
 		return false
 	}
 	weighted := float64(t.exposure.Lo) / pow10[ix.cfg.GrainDigits]

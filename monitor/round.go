@@ -34,7 +34,7 @@ func (e *Engine) lookAt(s *series, ep *epoch, boundary int64, due Instant) {
 			e.onLook(ix.view(s, ep, &l))
 		}
 		if l.status == made {
-			if e.chances != nil {
+			if e.known != nil {
 				e.chance(s, ep, &l)
 			}
 			looks = append(looks, l)

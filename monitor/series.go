@@ -182,6 +182,9 @@ func (s *series) forget(ix *indicator) {
 // that their windows could make: they still say whether the window signals. It
 // reports whether a look was forgotten.
 func (t *tail) trim(frozen int64, windows []windowState, alerts map[string]*alert) bool {
+	if len(t.lit) == 0 && len(t.past) == 0 {
+		return false
+	}
 	n, kept := 0, 0
 	for ; n < len(t.lit) && t.lit[n].boundary <= frozen; n++ {
 		l := t.lit[n]
