@@ -33,7 +33,7 @@ settle = "1d"
 horizon = "20d"
 windows = ["5d", "12d", "28d"]
 tails = ["upper", "lower"]
-p_limit = 0.01
+%s
 quiet = 2
 [indicator.baseline]
 %s
@@ -43,8 +43,15 @@ quiet = 2
 // the same steps, account, states and sums of p-values, over rows that come
 // late, twice or not at all.
 func TestQuick(t *testing.T) {
-	for i, baseline := range []string{"kind = \"known\"\nrate = 0.06", "kind = \"reference\"\nevents = 40\nexposure = 640", "kind = \"known\"\nrate = 0.06\nspread = 1.4"} {
-		setup, err := config.Parse(fmt.Appendf(nil, quickSetup, baseline), "set-up")
+	for i, c := range []struct{ rule, baseline string }{
+		{"p_limit = 0.01", "kind = \"known\"\nrate = 0.06"},
+		{"p_limit = 0.01", "kind = \"reference\"\nevents = 40\nexposure = 640"},
+		{"p_limit = 0.01", "kind = \"known\"\nrate = 0.06\nspread = 1.4"},
+		{`allowance = "3 in 1y"`, "kind = \"known\"\nrate = 0.06"},
+		{"allowance = \"8 in 1y\"\nallowance_for = \"indicator\"", "kind = \"known\"\nrate = 0.06"},
+	} {
+		baseline := c.baseline
+		setup, err := config.Parse(fmt.Appendf(nil, quickSetup, c.rule, baseline), "set-up")
 		if err != nil {
 			t.Fatal(err)
 		}
@@ -123,14 +130,14 @@ func lateRows(rng *rand.Rand, zone *time.Location) []Message {
 			if day > 200 && day < 240 && ward == 2 {
 				o.Events = 0
 			}
-			switch n := rng.IntN(60); {
-			case n == 0: // missing for good
-			case n == 1: // an old row once more
+			switch rng.IntN(60) {
+			case 0: // missing for good
+			case 1: // an old row once more
 				old := o
 				old.Start, old.End = InstantOf(start.AddDate(0, 0, -9)), InstantOf(end.AddDate(0, 0, -9))
 				known(old, end)
 				known(o, end)
-			case n == 2:
+			case 2:
 				o.HasExposure = false
 				known(o, end)
 			default:

@@ -1,7 +1,6 @@
 package main
 
 import (
-	"bufio"
 	"encoding/json"
 	"flag"
 	"fmt"
@@ -51,12 +50,7 @@ rate = 0.004
 func speedHistory(t *testing.T, series, days int) (path string, until monitor.Instant) {
 	t.Helper()
 	path = filepath.Join(t.TempDir(), "history.csv")
-	file, err := os.Create(path)
-	if err != nil {
-		t.Fatal(err)
-	}
-	w := bufio.NewWriterSize(file, 1<<20)
-	fmt.Fprintln(w, "series,date,events,exposure")
+	rows := fmt.Append(nil, "series,date,events,exposure\n")
 	rng := rand.New(rand.NewPCG(2016, 1))
 	first := time.Date(2016, 1, 1, 0, 0, 0, 0, time.UTC)
 	for d := range days {
@@ -68,13 +62,10 @@ func speedHistory(t *testing.T, series, days int) (path string, until monitor.In
 					break
 				}
 			}
-			fmt.Fprintf(w, "site-%02d/ward-%04d/falls,%s,%d,%d\n", i/50, i, day, events, beds)
+			rows = fmt.Appendf(rows, "site-%02d/ward-%04d/falls,%s,%d,%d\n", i/50, i, day, events, beds)
 		}
 	}
-	if err := w.Flush(); err != nil {
-		t.Fatal(err)
-	}
-	if err := file.Close(); err != nil {
+	if err := os.WriteFile(path, rows, 0o600); err != nil {
 		t.Fatal(err)
 	}
 	return path, monitor.InstantOf(first.AddDate(0, 0, days+1))

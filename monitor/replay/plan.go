@@ -55,6 +55,9 @@ func newPlan(t *Tape, setup *config.Setup, whole bool) *plan {
 	if monitored > setup.Limits.MaxSeries {
 		p.whole = "there are more series than limits.max_series"
 	}
+	if slices.ContainsFunc(setup.Indicators, func(in config.Indicator) bool { return in.Remind > 0 }) {
+		p.whole = "how often people are reminded depends on every move of the clock"
+	}
 	p.linkIndicators()
 	p.linkIDs()
 	p.clock()

@@ -120,8 +120,8 @@ func wild(rng *rand.Rand) *Tape {
 			place++
 			t.Add(&o, monitor.InstantOf(at), false, false, Place{"wild.csv", place})
 		}
-		if day%9 == 5 {
-			t.AddAct(monitor.Act{Kind: monitor.ActKind(rng.IntN(4)), Series: "site-0/ward-3/falls", Direction: life.Upper, Mark: life.MarkReal, By: "Ann Example", Why: "looked at"},
+		if day%3 == 1 {
+			t.AddAct(monitor.Act{Kind: monitor.ActKinds[rng.IntN(len(monitor.ActKinds))], Series: "site-0/ward-3/falls", Until: monitor.InstantOf(start.AddDate(0, 0, 4)), Direction: life.Upper, Mark: life.MarkReal, By: "Ann Example", Why: "looked at"},
 				monitor.InstantOf(start.AddDate(0, 0, 1)), false, Place{"wild.csv", place})
 		}
 	}

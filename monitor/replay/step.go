@@ -14,6 +14,7 @@ type phase int
 
 const (
 	byLook     phase = iota // a look that fell due
+	byItself                // the end of a shelf time, a reminder
 	byRow                   // a row: an act, or data that changed a look
 	byMovingOn              // the clock moved on past a correction
 )
@@ -50,7 +51,14 @@ func stepOf(n *life.Notice, position uint64, moment monitor.Instant) step {
 		}
 	case life.StepCorrected:
 		s.phase = byMovingOn
-	case life.StepWithdrawn, life.StepAcknowledged, life.StepNote, life.StepMarked:
+	case life.StepReminder:
+		s.phase = byItself
+	case life.StepUnshelved:
+		s.phase = byRow
+		if n.Step.Why == monitor.TimeIsOver {
+			s.phase = byItself
+		}
+	case life.StepWithdrawn, life.StepAcknowledged, life.StepNote, life.StepMarked, life.StepShelved, life.StepTest:
 		s.phase = byRow
 	}
 	if s.phase == byRow {

@@ -64,7 +64,8 @@ func standing(r *replay.Result, side int) []stood {
 			if n.Step.At.Before(s.to) {
 				s.to = n.Step.At
 			}
-		case life.StepOpened, life.StepWorsened, life.StepCorrected, life.StepWithdrawn, life.StepAcknowledged, life.StepNote, life.StepMarked:
+		case life.StepOpened, life.StepWorsened, life.StepCorrected, life.StepWithdrawn, life.StepAcknowledged, life.StepNote, life.StepMarked,
+			life.StepShelved, life.StepUnshelved, life.StepReminder, life.StepTest:
 		}
 	}
 	return slices.DeleteFunc(list, func(s stood) bool { return s.record.Condition == life.Withdrawn })
