@@ -23,6 +23,7 @@ type exactFlags struct {
 	level    string
 	sides    string
 	json     bool
+	figure   string
 }
 
 func newExactCommand() *cobra.Command {
@@ -93,6 +94,7 @@ func (f *exactFlags) add(c *cobra.Command) {
 	fl.Float64Var(&f.options.limit, "limit", 0.001, "p at or under which a look signals, for the critical count")
 	fl.StringVar(&f.sides, "two-sided", "", "a two-sided p and bounds: central, minlike or blaker")
 	fl.BoolVar(&f.options.mid, "mid-p", false, "mid-p tails and bounds: near their level on average, not guaranteed")
+	fl.StringVar(&f.figure, "figure", "", "draw the units of a table against one rate for all into this `FILE`: .svg or .png")
 	fl.BoolVar(&f.json, "json", false, "print JSON, for a table an object a line")
 	c.MarkFlagsMutuallyExclusive("alpha", "level")
 	c.MarkFlagsMutuallyExclusive("tail", "two-sided")
@@ -116,6 +118,12 @@ func (f *exactFlags) settle(c *cobra.Command) error {
 		f.reference, f.hasRefSize = f.refSize, true
 	case set("reference-trials"):
 		f.reference, f.hasRefSize, f.refProportion = float64(f.refTrial), true, true
+	}
+	if err := checkFigure(f.figure); err != nil {
+		return err
+	}
+	if f.figure != "" && f.hasEvents {
+		return errors.New("--figure draws the units of a table: give a FILE in the place of --events")
 	}
 	return f.options.settle(f.tail, f.sides, f.level)
 }

@@ -77,8 +77,8 @@ func (f *exactFlags) answerTable(c *cobra.Command, path string) (err error) {
 		defer func() { err = errors.Join(err, file.Close()) }()
 		in = file
 	}
-	table := newExactTable(f.options, f.json)
-	header, err := readTable(bufio.NewReaderSize(in, 1<<16), f.question, f.options, table.add)
+	table, picture := newExactTable(f.options, f.json), unitsFigure{}
+	header, err := readTable(bufio.NewReaderSize(in, 1<<16), f.question, f.options, picture.and(table.add))
 	if err != nil {
 		return fmt.Errorf("%s: %w", path, err)
 	}
@@ -98,6 +98,11 @@ func (f *exactFlags) answerTable(c *cobra.Command, path string) (err error) {
 	}
 	if err := out.Flush(); err != nil {
 		return fmt.Errorf("print the table: %w", err)
+	}
+	if f.figure != "" {
+		if err := picture.write(f.figure, &f.options); err != nil {
+			return err
+		}
 	}
 	if bad > 0 {
 		return fmt.Errorf("%s: %d of %d rows could not be answered", path, bad, len(table.rows))
