@@ -262,16 +262,18 @@ func (c *comparison) horizon(a, b *Indicator) {
 
 func (c *comparison) windows(a, b *Indicator) {
 	for _, w := range a.Windows {
-		after := windowOf(b, w.Slots)
-		if after == nil {
-			c.value("windows", NextLook, windowText(&w), "", "it is looked at no longer")
-			continue
+		switch after := windowOf(b, w.Slots); {
+		case after == nil:
+			c.value("windows", NextLook, windowText(&w), "", "it is looked at no longer, and has no say any more in whether an alert still signals")
+		case after.Step != w.Step:
+			c.value("windows", NextLook, windowText(&w), windowText(after), "its looks begin anew: until the first of them it has no say in whether an alert still signals")
+		default:
+			c.value("windows", NextLook, windowText(&w), windowText(after), "")
 		}
-		c.value("windows", NextLook, windowText(&w), windowText(after), "")
 	}
 	for _, w := range b.Windows {
 		if windowOf(a, w.Slots) == nil {
-			c.value("windows", Filling, "", windowText(&w), "it is looked at once it is full")
+			c.value("windows", Filling, "", windowText(&w), "it is looked at once what is kept and what comes fill it")
 		}
 	}
 }

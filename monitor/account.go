@@ -47,7 +47,7 @@ func (e *Engine) Account() Account {
 	a.RefusedBy = maps.Clone(e.account.RefusedBy)
 	for _, s := range e.series {
 		a.Withheld += s.unpaired
-		for i := range s.cells {
+		for i := range s.cells { // a stub has none
 			if c := &s.cells[i]; !s.needs().paired(c) {
 				a.Withheld += int64(c.items)
 			}

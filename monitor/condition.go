@@ -48,15 +48,18 @@ func (e *Engine) Conditions() []Condition {
 }
 
 func (e *Engine) conditionsOf(s *series) []Condition {
+	if s.retired {
+		return nil
+	}
 	var list []Condition
 	ix := s.indicator
-	for w := range s.windows {
-		ws := &s.windows[w]
+	for _, p := range ix.now().windows {
+		ws := &s.windows[p.place]
 		if ws.withheld == made {
 			continue
 		}
 		list = append(list, Condition{
-			Series: s.name, Indicator: ix.cfg.Name, Kind: kindOf(ws.withheld), Window: ix.cfg.Windows[w].Name,
+			Series: s.name, Indicator: ix.cfg.Name, Kind: kindOf(ws.withheld), Window: p.Name,
 			Since: ix.cal.Start(ws.withheldSince), Text: ws.withheld.String(),
 		})
 	}

@@ -95,11 +95,30 @@ type indicatorHeader struct {
 	Looked  int64         `json:"looked"`
 	Frozen  int64         `json:"frozen"`
 	Epochs  []epochHeader `json:"epochs"`
+	// Kept and Floor are absent where nothing was forgotten; Places and the
+	// Windows of the epochs are where they are those of the set-up, as they
+	// always were.
+	Kept   *int64        `json:"kept,omitempty"`
+	Floor  *int64        `json:"floor,omitempty"`
+	Places []placeHeader `json:"places,omitempty"`
 }
 
 type epochHeader struct {
-	From    int64 `json:"from"`
-	Version int   `json:"version"`
+	From    int64          `json:"from"`
+	Version int            `json:"version"`
+	Windows []windowHeader `json:"windows,omitempty"`
+}
+
+type placeHeader struct {
+	Name  string `json:"name"`
+	Slots int    `json:"slots"`
+	Step  int    `json:"step"`
+}
+
+type windowHeader struct {
+	Place int   `json:"place"`
+	Since int64 `json:"since"`
+	Whole int64 `json:"whole"`
 }
 
 func (e *Engine) encodeHeader() []byte {
@@ -109,9 +128,7 @@ func (e *Engine) encodeHeader() []byte {
 	}
 	for _, ix := range e.indicators {
 		ih := indicatorHeader{Name: ix.cfg.Name, Started: ix.started, Looked: ix.looked, Frozen: ix.frozenAt}
-		for _, ep := range ix.epochs {
-			ih.Epochs = append(ih.Epochs, epochHeader{ep.from, ep.version})
-		}
+		ih.encodePlaces(ix)
 		h.Indicators = append(h.Indicators, ih)
 	}
 	data, err := json.Marshal(h)

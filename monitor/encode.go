@@ -20,13 +20,27 @@ const withoutLimits = 1
 // idVersion is that of the encoding of an id.
 const idVersion = 1
 
-const flagNamed = 1
+// With flagNamed what older patches and states say of the series holds no more;
+// flagRetired makes it a stub, of which only unpaired and the
+// numbers of alerts follow.
+const (
+	flagNamed   = 1
+	flagRetired = 2
+)
 
 // errEncoding says that stored bytes are not what this program wrote.
 var errEncoding = errors.New("monitor: stored state can't be read")
 
 func (s *series) encode(whole bool) []byte {
 	b := []byte{encodingVersion, 0}
+	if s.retired {
+		b[1] = flagNamed | flagRetired
+		b = binary.AppendVarint(appendString(b, s.name), s.unpaired)
+		for d := range s.tails {
+			b = binary.AppendUvarint(b, uint64(s.tails[d].opened))
+		}
+		return b
+	}
 	if whole || s.fresh {
 		b[1] |= flagNamed
 		b = appendString(b, s.name)

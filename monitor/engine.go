@@ -43,7 +43,9 @@ type Engine struct {
 	position  uint64
 
 	indicators []*indicator
-	series     []*series
+	series     []*series // by number, stubs among them
+	living     int       // how many are no stubs
+	stubs      map[string]*series
 	byName     map[string]*series
 	recent     *series // that was asked for last by its name
 	ids        ids
@@ -66,7 +68,7 @@ type Engine struct {
 	// allowances and solutions remember what was solved: they follow from what
 	// is stored.
 	allowances allowance.Cache
-	solved     map[*allowance.Limits]*solution
+	solved     map[solvedFor]*solution
 	solutions  map[string]*solution
 
 	onLook func(View)
@@ -91,7 +93,7 @@ type Partition struct {
 func New(p Partition) *Engine {
 	return &Engine{
 		partition: p, history: true, clock: Beginning, nextDue: Never,
-		byName: map[string]*series{}, alerts: map[string]*alert{},
+		byName: map[string]*series{}, stubs: map[string]*series{}, alerts: map[string]*alert{},
 		ids:     newIDs(),
 		account: Account{RefusedBy: map[Reason]int64{}},
 	}

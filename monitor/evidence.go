@@ -17,7 +17,7 @@ func (e *Engine) evidence(s *series, d direction, boundary int64, window int) li
 	ix := s.indicator
 	ep := ix.epochAt(boundary)
 	cfg := ep.cfg
-	from := boundary - int64(cfg.Windows[window].Slots)
+	from := boundary - int64(ix.places[window].Slots)
 	at := ix.due(boundary)
 	if i, ok := s.tails[d].litAt(boundary, window); ok {
 		at = s.tails[d].lit[i].at
@@ -29,7 +29,7 @@ func (e *Engine) evidence(s *series, d direction, boundary int64, window int) li
 	}
 	o := ix.opportunity(s, &u, &t, from, boundary, at)
 	ev := life.Evidence{
-		Window: cfg.Windows[window].Name,
+		Window: ix.places[window].Name,
 		From:   ix.cal.Start(from).in(cfg.Zone), To: ix.cal.Start(boundary).in(cfg.Zone), Due: ix.due(boundary).in(cfg.Zone),
 		Events: t.events, Exposure: t.exposure.decimal(cfg.GrainDigits), Unit: cfg.Unit,
 		EventNoun: cfg.EventNoun, LateEvents: t.late, Provisional: t.provisional,

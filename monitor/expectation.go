@@ -39,16 +39,37 @@ func (e *Engine) solutionOf(s *series, ep *epoch, boundary int64, perYear float6
 		}
 	}
 	if l == nil {
-		return e.share(plain(&p))
+		return e.share(ep.inPlace(plain(&p)))
 	}
-	if known := e.solved[l]; known != nil {
+	key := solvedFor{l, ep.cfg}
+	if known := e.solved[key]; known != nil {
 		return known
 	}
 	if e.solved == nil || len(e.solved) >= mostSolutions {
-		e.solved = map[*allowance.Limits]*solution{}
+		e.solved = map[solvedFor]*solution{}
 	}
-	e.solved[l] = e.share(solutionFrom(&p, l))
-	return e.solved[l]
+	e.solved[key] = e.share(ep.inPlace(solutionFrom(&p, l)))
+	return e.solved[key]
+}
+
+// solvedFor are limits, and the stanza whose windows they are for.
+type solvedFor struct {
+	limits *allowance.Limits
+	cfg    *config.Indicator
+}
+
+// inPlace gives the limits, which are by window in the stanza's order, to the
+// places of the windows.
+func (ep *epoch) inPlace(x solution) solution {
+	last := 0
+	for _, p := range ep.windows {
+		last = max(last, p.place)
+	}
+	placed := solution{alpha: make([]float64, 2*last+2), here: x.here}
+	for i, p := range ep.windows {
+		placed.alpha[2*p.place], placed.alpha[2*p.place+1] = x.alpha[2*i], x.alpha[2*i+1]
+	}
+	return placed
 }
 
 // solutionFrom takes the limits from a solved plan. Where no count comes near a
@@ -134,7 +155,7 @@ func lawOf(u *usual) allowance.Law {
 func (ix *indicator) knownAt(d *config.Delay, boundary int64) []float64 {
 	var shares []float64
 	due := ix.due(boundary).Time()
-	for n := int64(0); n < ix.longest; n++ {
+	for n := range longestOf(ix.cfg) {
 		share := d.At(due.Sub(ix.cal.Start(boundary - n).Time()))
 		shares = append(shares, share)
 		if share == 1 {
@@ -180,10 +201,11 @@ func cycles(strata *config.Strata, cfg *config.Indicator) bool {
 // lookback is how many slots before a boundary tell what to expect: those of
 // the longest window, and a week at least where slots are shorter than a day.
 func (ix *indicator) lookback() int64 {
+	longest := longestOf(ix.cfg)
 	if ix.cal.length > 0 {
-		return max(ix.longest, 7*day/ix.cal.length)
+		return max(longest, 7*day/ix.cal.length)
 	}
-	return ix.longest
+	return longest
 }
 
 // expect returns what the latest known slots of the series tell of its

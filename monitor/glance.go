@@ -2,10 +2,8 @@ package monitor
 
 import (
 	"math"
-	"slices"
 	"time"
 
-	"tailbell/config"
 	"tailbell/monitor/life"
 )
 
@@ -33,7 +31,9 @@ type Glance struct {
 func (e *Engine) Glances(first, n int, f func(Glance)) int {
 	end := min(first+n, len(e.series))
 	for i := max(first, 0); i < end; i++ {
-		f(e.glance(e.series[i]))
+		if s := e.series[i]; !s.retired {
+			f(e.glance(s))
+		}
 	}
 	if end >= len(e.series) {
 		return 0
@@ -41,8 +41,8 @@ func (e *Engine) Glances(first, n int, f func(Glance)) int {
 	return end
 }
 
-// SeriesCount is how many series there are.
-func (e *Engine) SeriesCount() int { return len(e.series) }
+// SeriesCount is how many series are monitored.
+func (e *Engine) SeriesCount() int { return e.living }
 
 func (e *Engine) glance(s *series) Glance {
 	ix := s.indicator
@@ -53,10 +53,13 @@ func (e *Engine) glance(s *series) Glance {
 	if !ix.started || s.birth == unborn {
 		return g
 	}
-	for w := range ix.cfg.Windows {
-		b := ix.latest(&ix.cfg.Windows[w])
+	for _, p := range ix.now().windows {
+		b := ix.latest(p.Window)
+		if b < p.since {
+			continue
+		}
 		ep := ix.epochAt(b)
-		l := ix.look(s, ep, w, b, e.momentOf(s, b, w))
+		l := ix.look(s, ep, p.place, b, e.momentOf(s, b, p.place))
 		if l.status == filling {
 			continue
 		}
@@ -109,12 +112,15 @@ func (e *Engine) Standing(series, window string) (life.Evidence, bool) {
 		return life.Evidence{}, false
 	}
 	ix := s.indicator
-	w := slices.IndexFunc(ix.cfg.Windows, func(w config.Window) bool { return w.Name == window })
-	if w < 0 {
+	p := ix.named(window)
+	if p == nil {
 		return life.Evidence{}, false
 	}
-	b := ix.latest(&ix.cfg.Windows[w])
-	if b-int64(ix.cfg.Windows[w].Slots) < s.birth || ix.statusAt(s, w, b) != made {
+	w, b := p.place, ix.latest(p.Window)
+	if b < p.since {
+		return life.Evidence{}, false
+	}
+	if b-int64(p.Slots) < max(s.birth, p.whole) || ix.statusAt(s, w, b) != made {
 		var ok bool
 		if b, ok = ix.previous(s, w, b); !ok {
 			return life.Evidence{}, false
@@ -126,7 +132,7 @@ func (e *Engine) Standing(series, window string) (life.Evidence, bool) {
 	if l.status != made || l.exposure.IsZero() || !based {
 		return life.Evidence{}, false
 	}
-	if o := ix.opportunity(s, &u, &l.tally, b-int64(ep.cfg.Windows[w].Slots), b, l.at); o.weighted == 0 {
+	if o := ix.opportunity(s, &u, &l.tally, b-int64(p.Slots), b, l.at); o.weighted == 0 {
 		return life.Evidence{}, false
 	}
 	v := ix.view(s, ep, &l)

@@ -15,6 +15,9 @@ type indicator struct {
 	needs  sides
 	series []*series
 	sums   []*series // those of series that are sums
+	// places are the windows that are or were in force, in the order in which
+	// the state of every series has them.
+	places []config.Window
 	// longest is the length of the longest window in slots, and reach how far
 	// before a boundary a look reads: a window, and the one looked at before.
 	longest, reach int64
@@ -29,6 +32,7 @@ type indicator struct {
 	frozenAt, floor int64
 	// kept is the slot before which cells are forgotten: floor, or further
 	// back where a baseline is estimated from the past, or a census may last.
+	// It never moves back either: what is forgotten stays so.
 	kept int64
 	// epochs are the versions of the stanza under which looks that can still
 	// be re-run fell due, oldest first.
@@ -56,22 +60,23 @@ type epoch struct {
 	cfg     *config.Indicator
 	version int
 	digest  string
+	// windows are those of the stanza, in its order.
+	windows []placed
 }
 
 func newIndicator(index int, cfg *config.Indicator) *indicator {
-	ix := &indicator{index: index, cfg: cfg, cal: NewCalendar(cfg.Every, cfg.Zone), nextDue: Never, frozenAt: math.MinInt64, digests: map[*config.Baseline]int64{}}
+	ix := &indicator{index: index, cfg: cfg, cal: NewCalendar(cfg.Every, cfg.Zone), nextDue: Never, frozenAt: math.MinInt64, floor: never, kept: never, digests: map[*config.Baseline]int64{}}
 	ix.days = NewCalendar(config.Every{N: 1, Unit: config.Day}, cfg.Zone)
 	ix.drawn.epoch = math.MinInt64
 	if cfg.Exposure == config.Clock {
 		ix.clock = newClockRule(cfg.Clock, cfg.GrainDigits)
 	}
 	ix.needs = sides{events: cfg.Events == config.Counted, exposure: cfg.Exposure == config.Reported}
-	for _, w := range cfg.Windows {
-		ix.longest = max(ix.longest, int64(w.Slots))
-		ix.reach = max(ix.reach, int64(w.Slots+w.Step))
-	}
 	return ix
 }
+
+// never is a slot before all others.
+const never = math.MinInt64
 
 // start sets the schedule when the partition's clock is known: looks that
 // would have fallen due earlier count as made.
@@ -89,12 +94,14 @@ func (ix *indicator) pass(boundary int64) {
 	ix.looked = boundary
 	ix.nextDue = ix.due(boundary + 1)
 	ix.frozenAt = max(ix.frozenAt, ix.frozen(ix.due(boundary)))
-	ix.floor = ix.frozenAt + 1 - ix.reach
-	ix.kept = ix.frozenAt + 1 - max(ix.reach, historyOf(ix.cfg))
-	if ix.cfg.Exposure == config.Census { // a level of then may still hold there
-		ix.kept = ix.cal.Slot(ix.cal.Start(ix.kept+1).Add(-ix.cfg.CensusExpiry) - 1)
-	}
 	ix.forget()
+	ix.measure()
+	ix.floor = max(ix.floor, ix.frozenAt+1-ix.reach)
+	kept := ix.frozenAt + 1 - max(ix.reach, historyOf(ix.cfg))
+	if ix.cfg.Exposure == config.Census { // a level of then may still hold there
+		kept = ix.cal.Slot(ix.cal.Start(kept+1).Add(-ix.cfg.CensusExpiry) - 1)
+	}
+	ix.kept = max(ix.kept, kept)
 }
 
 // historyOf is how far before a boundary the estimated baselines read.

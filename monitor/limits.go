@@ -23,7 +23,7 @@ type limits struct {
 // solution is what an allowance comes to. Series that are alike share one; it
 // is never changed.
 type solution struct {
-	// alpha is the limit on p by window and direction, 0 where nothing
+	// alpha is the limit on p by place of the window and direction, 0 where nothing
 	// signals.
 	alpha []float64
 	// here is how many false alerts a year it is predicted to bring.
@@ -37,8 +37,8 @@ func (s *series) limitsAt(cfg *config.Indicator, window int, boundary int64) [2]
 		return [2]float64{cfg.PLimit, cfg.PLimit}
 	}
 	l := s.limitsOf(boundary)
-	if l == nil {
-		return [2]float64{}
+	if l == nil || 2*window >= len(l.alpha) {
+		return [2]float64{} // there are none for it yet
 	}
 	return [2]float64{l.alpha[2*window], l.alpha[2*window+1]}
 }

@@ -126,8 +126,8 @@ func (ix *indicator) judge(s *series, t *tally, from, to int64) status {
 // at.
 func (ix *indicator) look(s *series, ep *epoch, window int, boundary int64, at Instant) look {
 	l := look{window: window, boundary: boundary, at: at}
-	from := boundary - int64(ep.cfg.Windows[window].Slots)
-	if from < s.birth {
+	from := boundary - int64(ix.places[window].Slots)
+	if from < ep.begin(s, window) {
 		l.status = filling
 		return l
 	}
@@ -176,7 +176,7 @@ func (ix *indicator) test(s *series, l *look, u *usual, o *opportunity) {
 // statusAt says whether a look of the window at the boundary can be made.
 func (ix *indicator) statusAt(s *series, window int, boundary int64) status {
 	ep := ix.epochAt(boundary)
-	from := boundary - int64(ep.cfg.Windows[window].Slots)
+	from := boundary - int64(ix.places[window].Slots)
 	t := ix.tally(s, from, boundary)
 	st := ix.judge(s, &t, from, boundary)
 	if st == made && !t.exposure.IsZero() {
@@ -190,9 +190,12 @@ func (ix *indicator) statusAt(s *series, window int, boundary int64) status {
 // previous returns the latest look of the window before the boundary that can
 // be made with the data as they stand, and false if there is none.
 func (ix *indicator) previous(s *series, window int, boundary int64) (int64, bool) {
-	w := &ix.cfg.Windows[window]
-	length, step := int64(w.Slots), int64(w.Step)
-	for b := boundary - step; b-length >= max(s.birth, ix.floor); b -= step {
+	p := ix.epochAt(boundary).placed(window)
+	if p == nil {
+		return 0, false
+	}
+	length, step := int64(p.Slots), int64(p.Step)
+	for b := boundary - step; b >= p.since && b-length >= max(s.birth, p.whole, ix.floor); b -= step {
 		if ix.statusAt(s, window, b) == made {
 			return b, true
 		}
@@ -202,7 +205,7 @@ func (ix *indicator) previous(s *series, window int, boundary int64) (int64, boo
 
 // entered counts the events in the window that no made look before it held.
 func (ix *indicator) entered(s *series, l *look) int64 {
-	from := l.boundary - int64(ix.cfg.Windows[l.window].Slots)
+	from := l.boundary - int64(ix.places[l.window].Slots)
 	if b, ok := ix.previous(s, l.window, l.boundary); ok {
 		from = max(from, b)
 	}
@@ -210,12 +213,12 @@ func (ix *indicator) entered(s *series, l *look) int64 {
 	return t.events
 }
 
-// active reports whether the latest made look of any window signals.
+// active reports whether the latest made look of any window in force signals.
 func (s *series) active(d direction) bool {
 	t := &s.tails[d]
-	for w := range s.windows {
-		if ws := &s.windows[w]; ws.hasMade {
-			if _, lit := t.litAt(ws.made, w); lit {
+	for _, p := range s.indicator.now().windows {
+		if ws := &s.windows[p.place]; ws.hasMade {
+			if _, lit := t.litAt(ws.made, p.place); lit {
 				return true
 			}
 		}

@@ -37,7 +37,7 @@ func (e *Engine) observe(o *Observation) (Reason, string) {
 		return BeyondHorizon, fmt.Sprintf("revision %d of id %q stands in a slot that can't change any more", old.revision, o.ID)
 	}
 	if key.id != "" && (ix != nil || old != nil) {
-		if old == nil && len(e.ids.byKey) >= e.ids.max {
+		if old == nil && e.ids.byKey[key] == nil && len(e.ids.byKey) >= e.ids.max {
 			return IDsFull, fmt.Sprintf("%d ids are kept already: raise limits.max_ids", e.ids.max)
 		}
 	}
@@ -59,7 +59,7 @@ func (e *Engine) named(name string) *series {
 	case last == nil:
 	case last.name == name:
 		return last
-	case last.next != nil && last.next.name == name:
+	case last.next != nil && last.next.name == name && !last.next.retired:
 		e.recent = last.next
 		return last.next
 	}
@@ -104,7 +104,9 @@ func (e *Engine) identify(ix *indicator, o *Observation) (key idKey, old *identi
 		return key, nil, ix == nil, "", ""
 	}
 	key = idKey{siteOf(o.Series), o.ID}
-	old = e.ids.byKey[key]
+	if old = e.ids.byKey[key]; old != nil && old.gone() {
+		old = nil
+	}
 	switch {
 	case old == nil && ix == nil:
 		e.account.Unmonitored++
@@ -218,7 +220,7 @@ func (e *Engine) isFrozen(c *contribution) bool {
 
 // birth makes the series of a first observation.
 func (e *Engine) birth(ix *indicator, o *Observation, c *contribution) (Reason, string) {
-	if limit := e.setup.Limits.MaxSeries; len(e.series)+len(e.newSums(ix, o.Series)) >= limit {
+	if limit := e.setup.Limits.MaxSeries; e.living+len(e.newSums(ix, o.Series)) >= limit {
 		return SeriesFull, fmt.Sprintf("%d series are monitored already: raise limits.max_series", limit)
 	}
 	c.series = e.enter(ix, o.Series)
@@ -230,9 +232,11 @@ func (e *Engine) birth(ix *indicator, o *Observation, c *contribution) (Reason, 
 func (e *Engine) enter(ix *indicator, name string) *series {
 	s := &series{
 		number: uint32(len(e.series)), name: name, indicator: ix, birth: unborn,
-		trimmed: -1 << 62, windows: make([]windowState, len(ix.cfg.Windows)), fresh: true,
+		trimmed: -1 << 62, windows: make([]windowState, len(ix.places)), fresh: true,
 	}
+	s.succeed(e.stubs[s.name])
 	e.series = append(e.series, s)
+	e.living++
 	e.byName[s.name] = s
 	ix.series = append(ix.series, s)
 	e.touch(s)

@@ -57,9 +57,7 @@ func (e *Engine) watch(s *series, l *look) {
 	if !e.passing || l.status == filling {
 		return
 	}
-	if s.watched == nil {
-		s.watched = make([]watch, len(s.windows))
-	}
+	s.watchAll()
 	w := &s.watched[l.window]
 	if l.status != made {
 		w.withheld++
@@ -75,11 +73,16 @@ func (w *watch) made(due Instant) {
 	w.last = due
 }
 
+// watchAll makes room for counting the looks of every window.
+func (s *series) watchAll() {
+	if n := len(s.windows) - len(s.watched); n > 0 {
+		s.watched = append(s.watched, make([]watch, n)...)
+	}
+}
+
 // watched counts a look of the window that was made when due.
 func (e *Engine) watched(s *series, window int, due Instant) {
-	if s.watched == nil {
-		s.watched = make([]watch, len(s.windows))
-	}
+	s.watchAll()
 	s.watched[window].made(due)
 }
 
@@ -90,7 +93,7 @@ func (e *Engine) Watched() []Watched {
 	for _, s := range e.series {
 		for i, w := range s.watched {
 			list = append(list, Watched{
-				Series: s.name, Indicator: s.indicator.cfg.Name, Window: s.indicator.cfg.Windows[i].Name,
+				Series: s.name, Indicator: s.indicator.cfg.Name, Window: s.indicator.places[i].Name,
 				Looks: w.looks, Withheld: w.withheld, First: w.first, Last: w.last,
 			})
 		}

@@ -25,12 +25,13 @@ func (e *Engine) quick(s *series, ep *epoch, boundary int64, due Instant) bool {
 	if !ok {
 		return false
 	}
-	for w := range cfg.Windows {
-		if cfg.Windows[w].Step != 1 || !ix.quickLook(s, b, w, in, boundary) {
+	for i := range ep.windows {
+		if p := &ep.windows[i]; p.Step != 1 || !ix.quickLook(s, b, p.place, in, boundary) {
 			return false
 		}
 	}
-	for w := range s.windows {
+	for i := range ep.windows {
+		w := ep.windows[i].place
 		ws := &s.windows[w]
 		ws.made = boundary
 		e.account.Looks++

@@ -39,14 +39,14 @@ func (e *Engine) rerun(c change) {
 	}
 	for boundary := c.from + 1; boundary <= last; boundary++ {
 		ep := ix.epochAt(boundary)
-		for w := range ep.cfg.Windows {
-			window := &ep.cfg.Windows[w]
-			from := boundary - int64(window.Slots)
+		for i := range ep.windows {
+			p := &ep.windows[i]
+			from := boundary - int64(p.Slots)
 			touched := from <= c.to || (c.reborn && from < c.birth)
-			if !touched || from < s.birth || !ix.looksAt(window, boundary) {
+			if !touched || from < max(s.birth, p.whole) || !ix.looksAt(p.Window, boundary) {
 				continue
 			}
-			l := ix.look(s, ep, w, boundary, e.clock)
+			l := ix.look(s, ep, p.place, boundary, e.clock)
 			e.account.Reruns++
 			e.renote(s, &l)
 			for _, d := range bothTails {
@@ -68,6 +68,10 @@ func (e *Engine) renote(s *series, l *look) {
 	ix := s.indicator
 	ws := &s.windows[l.window]
 	e.touch(s)
+	p := ix.now().placed(l.window)
+	if p == nil || l.boundary < p.since {
+		return // it has no say any more
+	}
 	if l.status == made {
 		if !ws.hasMade || l.boundary > ws.made {
 			ws.made, ws.hasMade = l.boundary, true
@@ -75,7 +79,7 @@ func (e *Engine) renote(s *series, l *look) {
 	} else if ws.hasMade && l.boundary == ws.made {
 		ws.made, ws.hasMade = ix.previous(s, l.window, l.boundary)
 	}
-	if l.boundary == ix.latest(&ix.cfg.Windows[l.window]) && ws.withheld != l.status {
+	if l.boundary == ix.latest(p.Window) && ws.withheld != l.status {
 		if ws.withheld == made {
 			ws.withheldSince = l.boundary
 		}

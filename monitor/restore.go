@@ -71,6 +71,9 @@ func (e *Engine) restoreHeader(h *header, settings []SettingChange) error {
 		}
 		if ih.Started {
 			ix.started, ix.frozenAt = true, ih.Frozen
+			if ih.Kept != nil && ih.Floor != nil {
+				ix.kept, ix.floor = *ih.Kept, *ih.Floor
+			}
 			ix.pass(ih.Looked)
 		}
 		e.indicators = append(e.indicators, ix)
@@ -97,12 +100,16 @@ func restoreIndicator(index int, ih indicatorHeader, setups map[int]*config.Setu
 			ix = newIndicator(index, cfg)
 		}
 		ix.cfg = cfg
-		ix.epochs = append(ix.epochs, epoch{from: ep.From, cfg: cfg, version: ep.Version, digest: setup.Digest})
+		windows, err := ep.restoreWindows(ix, cfg)
+		if err != nil {
+			return nil, err
+		}
+		ix.epochs = append(ix.epochs, epoch{from: ep.From, cfg: cfg, version: ep.Version, digest: setup.Digest, windows: windows})
 	}
 	if ix == nil {
 		return nil, fmt.Errorf("monitor: indicator %q was in force under no set-up: %w", ih.Name, errEncoding)
 	}
-	return ix, nil
+	return ix, ih.restorePlaces(ix)
 }
 
 func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(string) (life.Record, error)) error {
@@ -116,8 +123,15 @@ func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(st
 			return err
 		}
 	}
-	if s.indicator == nil {
+	switch {
+	case s.retired:
+		e.stubs[s.name] = s
+		e.series = append(e.series, s)
+		return nil
+	case s.name == "":
 		return fmt.Errorf("it was never named: %w", errEncoding)
+	case s.indicator == nil:
+		return fmt.Errorf("%w: the indicator of %q is not in force", errEncoding, s.name)
 	}
 	for d := range s.tails {
 		for _, a := range s.tails[d].all() {
@@ -131,9 +145,11 @@ func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(st
 			}
 		}
 	}
+	s.makePlaces()
 	s.derive()
 	s.cells = slices.DeleteFunc(s.cells, func(c cell) bool { return c.slot < s.trimmed })
 	e.series = append(e.series, s)
+	e.living++
 	e.byName[s.name] = s
 	s.indicator.series = append(s.indicator.series, s)
 	return nil
@@ -142,14 +158,13 @@ func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(st
 // derive fills in what is not stored of windows whose looks were all made.
 func (s *series) derive() {
 	ix := s.indicator
-	for w := range s.windows {
-		ws := &s.windows[w]
-		window := &ix.cfg.Windows[w]
+	for _, p := range ix.now().windows {
+		ws := &s.windows[p.place]
 		if ws.withheld != made {
 			continue
 		}
-		latest := ix.latest(window)
-		ws.made, ws.hasMade = latest, ix.started && latest-int64(window.Slots) >= s.birth
+		latest := ix.latest(p.Window)
+		ws.made, ws.hasMade = latest, ix.started && latest >= p.since && latest-int64(p.Slots) >= max(s.birth, p.whole)
 	}
 }
 
@@ -167,14 +182,19 @@ func (e *Engine) overlay(s *series, data []byte) error {
 	if version != encodingVersion && version != withoutLimits {
 		return fmt.Errorf("%w: encoding %d is not known to this program", errEncoding, version)
 	}
-	if r.byte()&flagNamed != 0 {
-		s.name = r.string()
-		owner := r.string()
-		i := slices.IndexFunc(e.indicators, func(ix *indicator) bool { return ix.cfg.Name == owner })
-		if i < 0 {
-			return fmt.Errorf("%w: indicator %q is not in force", errEncoding, owner)
+	switch flags := r.byte(); {
+	case flags&flagRetired != 0:
+		*s = series{number: s.number, name: r.string(), retired: true, unpaired: r.int()}
+		for d := range s.tails {
+			s.tails[d].opened = int(r.uint())
 		}
-		s.indicator = e.indicators[i]
+		return r.err
+	case flags&flagNamed != 0:
+		*s = series{number: s.number, name: r.string()}
+		owner := r.string()
+		if i := slices.IndexFunc(e.indicators, func(ix *indicator) bool { return ix.cfg.Name == owner }); i >= 0 {
+			s.indicator = e.indicators[i] // else it must be a stub by now
+		}
 	}
 	s.birth, s.trimmed, s.unpaired, s.seen = r.int(), r.int(), r.int(), Instant(r.int())
 	s.windows = make([]windowState, r.length())
@@ -284,7 +304,8 @@ func (e *Engine) restoreID(change *IDChange) error {
 		return r.err
 	}
 	e.ids.written[x.generation]++
-	if old := e.ids.byKey[x.key]; old == nil || x.revision > old.revision {
+	switch old := e.ids.byKey[x.key]; {
+	case old == nil, old.gone(), !x.gone() && x.revision > old.revision:
 		e.ids.put(x)
 	}
 	e.ids.touched = nil

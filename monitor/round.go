@@ -24,11 +24,12 @@ func (e *Engine) lookAll(ix *indicator, boundary int64) {
 func (e *Engine) lookAt(s *series, ep *epoch, boundary int64, due Instant) {
 	ix := s.indicator
 	looks := e.looks[:0]
-	for w := range ep.cfg.Windows {
-		if !ix.looksAt(&ep.cfg.Windows[w], boundary) {
+	for i := range ep.windows {
+		p := &ep.windows[i]
+		if !ix.looksAt(p.Window, boundary) {
 			continue
 		}
-		l := ix.look(s, ep, w, boundary, due)
+		l := ix.look(s, ep, p.place, boundary, due)
 		e.note(s, &l, boundary)
 		if e.onLook != nil && l.status != filling {
 			e.onLook(ix.view(s, ep, &l))

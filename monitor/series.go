@@ -54,8 +54,12 @@ type series struct {
 	watched []watch
 	// next is the series that was asked for after this one the last time.
 	next *series
-	// fresh says that no patch has named the series yet.
+	// fresh says that no patch has named the series yet, or that what older
+	// ones say of it holds no more.
 	fresh bool
+	// retired says that it is a stub, monitored no longer: nothing is kept of
+	// it but number, name, what unpaired counts and how many alerts there were.
+	retired bool
 }
 
 // windowState is what the looks of one window have come to.

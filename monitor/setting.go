@@ -1,8 +1,8 @@
 package monitor
 
 import (
+	"fmt"
 	"math"
-	"slices"
 	"strings"
 	"time"
 
@@ -10,7 +10,8 @@ import (
 )
 
 // set brings a new set-up into force for the looks that fall due from now on.
-// One that the state already built up can't take is refused whole.
+// One that the state already built up can't take is refused whole. An indicator
+// that it lacks is dismissed; one that it brings begins with what arrives.
 func (e *Engine) set(m *Message) {
 	next := m.Setting.Setup
 	if e.setup != nil {
@@ -23,8 +24,17 @@ func (e *Engine) set(m *Message) {
 			return
 		}
 	}
+	from := e.boundaries()
+	if why := e.roomFor(next, from); why != "" {
+		e.account.SettingsRefused++
+		e.refuse(m, 0, "", NeedsRebuild, why, next.Text)
+		return
+	}
 	e.account.Settings++
-	e.install(next, e.version+1, e.boundaries())
+	for _, ix := range e.dismissed(next) {
+		e.dismiss(ix)
+	}
+	e.install(next, e.version+1, from)
 	e.settings = append(e.settings, SettingChange{Version: e.version, Digest: next.Digest, Text: next.Text})
 }
 
@@ -57,29 +67,8 @@ func Obstacles(old, next *config.Setup) []Obstacle {
 			all = append(all, Obstacle{c.Key, c.String()})
 		}
 	}
-	return append(all, unkept(old, next)...)
-}
-
-// unkept lists the changes of smaller class that the state can't follow yet:
-// it knows windows by their place in the list, and series by their indicator.
-func unkept(old, next *config.Setup) []Obstacle {
-	var all []Obstacle
-	for i := range old.Indicators {
-		before := &old.Indicators[i]
-		at := slices.IndexFunc(next.Indicators, func(in config.Indicator) bool { return in.Name == before.Name })
-		switch {
-		case at < 0:
-			key := "indicator[" + before.Name + "]"
-			all = append(all, Obstacle{key, key + " is gone"})
-		case !slices.EqualFunc(before.Windows, next.Indicators[at].Windows, sameWindow):
-			key := "indicator[" + before.Name + "].windows"
-			all = append(all, Obstacle{key, key + " are others, or in another order"})
-		}
-	}
 	return all
 }
-
-func sameWindow(a, b config.Window) bool { return a.Slots == b.Slots && a.Step == b.Step }
 
 // boundaries returns, by indicator name, the first boundary that falls due
 // from now on.
@@ -91,6 +80,21 @@ func (e *Engine) boundaries() map[string]int64 {
 		}
 	}
 	return from
+}
+
+// roomFor says why the windows of the set-up find no places; "" if they do.
+func (e *Engine) roomFor(next *config.Setup, from map[string]int64) string {
+	for _, ix := range e.indicators {
+		for i := range next.Indicators {
+			if cfg := &next.Indicators[i]; cfg.Name == ix.cfg.Name {
+				if _, ok := ix.arrange(cfg, from[cfg.Name]); !ok {
+					return fmt.Sprintf("indicator %q had more than %d different windows since the oldest of its alerts that are still kept: send it again when those are done",
+						cfg.Name, maxPlaces)
+				}
+			}
+		}
+	}
+	return ""
 }
 
 // install puts the set-up's indicators to work, each from the given boundary
@@ -112,17 +116,20 @@ func (e *Engine) install(next *config.Setup, version int, from map[string]int64)
 		}
 		if ix == nil {
 			ix = newIndicator(i, cfg)
-			if e.clock != Beginning {
-				ix.start(e.clock)
-			}
 		}
+		windows, _ := ix.arrange(cfg, boundary) // there is room: see roomFor
+		e.occupy(ix, windows)
 		ix.index, ix.cfg, ix.edges, ix.drawn, ix.total = i, cfg, nil, drawn{epoch: math.MinInt64}, total{}
 		if n := len(ix.epochs); n > 0 && ix.epochs[n-1].from >= boundary {
 			ix.epochs = ix.epochs[:n-1]
 		}
-		ix.epochs = append(ix.epochs, epoch{from: boundary, cfg: cfg, version: version, digest: next.Digest})
-		if ix.started { // settle and horizon may be others
+		ix.epochs = append(ix.epochs, epoch{from: boundary, cfg: cfg, version: version, digest: next.Digest, windows: windows})
+		ix.measure()
+		switch {
+		case ix.started: // settle and horizon may be others
 			ix.pass(ix.looked)
+		case e.clock != Beginning:
+			ix.start(e.clock)
 		}
 		e.indicators = append(e.indicators, ix)
 		horizon = max(horizon, cfg.Horizon)

@@ -86,7 +86,7 @@ func (e *Engine) link(s *series) {
 // relink links all series after they were restored, and sums what they hold.
 func (e *Engine) relink() {
 	for _, s := range e.series {
-		if !config.IsSum(s.name) {
+		if !s.retired && !config.IsSum(s.name) {
 			e.link(s)
 		}
 	}

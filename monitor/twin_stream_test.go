@@ -26,6 +26,9 @@ type twinStream struct {
 	reported map[string]int64 // the last slot reported of each series
 	ids      int
 	limits   string
+	// rearranges says that windows and indicators come and go: the twin does
+	// not know of that.
+	rearranges bool
 }
 
 // twinStanza is a random indicator.
@@ -39,6 +42,7 @@ type twinStanza struct {
 	slot                                              time.Duration // about
 	rate                                              float64       // per unit of exposure
 	slots                                             *twinSlots
+	out                                               bool // of the set-up
 }
 
 // twinPaces are families of slots that go well together in one stream, and a
@@ -218,7 +222,9 @@ func (g *twinStream) parse(stanzas string) *config.Setup {
 func (g *twinStream) setup() *config.Setup {
 	var b strings.Builder
 	for i := range g.stanzas {
-		b.WriteString(g.stanzas[i].text())
+		if !g.stanzas[i].out {
+			b.WriteString(g.stanzas[i].text())
+		}
 	}
 	return g.parse(b.String())
 }
@@ -252,7 +258,7 @@ func (g *twinStream) write(n int) []Message {
 			g.act()
 		case x < 0.97:
 			g.add(Message{Kind: Tick, HasTime: g.chance(0.9), Time: g.now})
-		case x < 0.985:
+		case x < 0.985, g.rearranges && x < 0.99:
 			c := &g.stanzas[g.rng.IntN(len(g.stanzas))]
 			g.change(c)
 			g.add(Message{Kind: SettingMessage, Setting: Setting{Setup: g.setup()}})
@@ -268,6 +274,9 @@ func (g *twinStream) write(n int) []Message {
 // change changes what a running store can take.
 func (g *twinStream) change(c *twinStanza) {
 	c.limit, c.quiet = g.limit(0.3), 1+g.rng.IntN(4)
+	if g.rearranges {
+		g.rearrange(c)
+	}
 	switch g.rng.IntN(6) {
 	case 0:
 		c.settle = min(g.span(c.slot, 0, 3), c.horizon)

@@ -2,10 +2,7 @@ package monitor
 
 import (
 	"math"
-	"slices"
 	"time"
-
-	"tailbell/config"
 )
 
 // View is one look as shown to people: what it saw and how it was judged.
@@ -65,12 +62,12 @@ func (e *Engine) Views(series, window string, from, to time.Time) []View {
 		return nil
 	}
 	ix := s.indicator
-	w := slices.IndexFunc(s.indicator.cfg.Windows, func(w config.Window) bool { return w.Name == window })
-	if w < 0 {
+	p := ix.named(window)
+	if p == nil {
 		return nil
 	}
-	cfg := &ix.cfg.Windows[w]
-	first := max(s.birth, s.trimmed) + int64(cfg.Slots)
+	w, cfg := p.place, p.Window
+	first := max(max(s.birth, s.trimmed, p.whole)+int64(cfg.Slots), p.since)
 	if at := ix.cal.Slot(InstantOf(from)); at > first {
 		first = at
 	}
@@ -110,9 +107,9 @@ func (e *Engine) momentOf(s *series, boundary int64, window int) Instant {
 // view is a look as shown to people.
 func (ix *indicator) view(s *series, ep *epoch, l *look) View {
 	cfg := ep.cfg
-	from := l.boundary - int64(cfg.Windows[l.window].Slots)
+	from := l.boundary - int64(ix.places[l.window].Slots)
 	v := View{
-		Series: s.name, Indicator: cfg.Name, Window: cfg.Windows[l.window].Name,
+		Series: s.name, Indicator: cfg.Name, Window: ix.places[l.window].Name,
 		Start: ix.cal.Start(from).in(cfg.Zone), End: ix.cal.Start(l.boundary).in(cfg.Zone), Due: ix.due(l.boundary).in(cfg.Zone),
 		Made: l.status == made, Status: l.status.String(),
 		Events: l.events, Late: l.late, Exposure: l.exposure, Digits: cfg.GrainDigits, Provisional: l.provisional,

@@ -59,11 +59,8 @@ type Fate struct {
 	Text string `json:"text"`
 }
 
-// Why a running store can't take a change.
-const (
-	contradicts = "it contradicts what the store holds"
-	unfollowed  = "a running store can't follow this yet"
-)
+// contradicts is why a running store can't take a change.
+const contradicts = "it contradicts what the store holds"
 
 // Of compares the set-up in force with the next one. Both must be as parsed,
 // or both with their paths resolved. alerts are those not done.
@@ -88,21 +85,13 @@ func Of(old, next *config.Setup, alerts []Alert) *Plan {
 	return p
 }
 
-// refuse notes an obstacle on its changes; one that is no difference of its
-// own, such as another order, becomes one.
+// refuse notes an obstacle on its changes.
 func (p *Plan) refuse(o monitor.Obstacle) {
-	found := false
 	for i := range p.Changes {
 		if c := &p.Changes[i]; c.Key == o.Key {
-			c.Refused, found = unfollowed, true
-			if c.Class == config.Rebuild.String() {
-				c.Refused = contradicts
-			}
+			c.Refused = contradicts
 			c.Effect = "" // it has none
 		}
-	}
-	if !found {
-		p.Changes = append(p.Changes, Change{Key: o.Key, Class: config.Rebuild.String(), Refused: unfollowed + ": " + o.Why})
 	}
 }
 
@@ -110,7 +99,7 @@ func (p *Plan) refuse(o monitor.Obstacle) {
 func fateOf(r Alert, next *config.Setup, changes []config.Change) string {
 	at := slices.IndexFunc(next.Indicators, func(in config.Indicator) bool { return in.Name == r.Indicator })
 	if at < 0 {
-		return ""
+		return "it closes, as " + life.NoLongerMonitored + "; what it holds of evidence stays as it is"
 	}
 	in := &next.Indicators[at]
 	var keys []string
@@ -136,6 +125,11 @@ func fateOf(r Alert, next *config.Setup, changes []config.Change) string {
 		texts = append(texts, "its tail is watched no longer: it worsens no more, and returns after "+quiet)
 	case changed("p_limit", "allowance", "allowance_for", "assurance", "reserve", "baseline", "tails"):
 		texts = append(texts, "from the next look on it is judged by the new limits and baselines: it may worsen, and returns after "+quiet)
+		if changed("windows") {
+			texts = append(texts, "only the windows of the new set-up have a say")
+		}
+	case changed("windows"):
+		texts = append(texts, "only the windows of the new set-up have a say: it may worsen, and returns after "+quiet)
 	case changed("quiet"):
 		texts = append(texts, "it returns after "+quiet)
 	}

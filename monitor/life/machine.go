@@ -78,6 +78,10 @@ var after = map[StepKind]map[Condition]Condition{
 // ReturnedAndAcknowledged is the reason given when an alert closes by itself.
 const ReturnedAndAcknowledged = "returned and acknowledged"
 
+// NoLongerMonitored is the reason given when an alert closes because its
+// indicator is in the set-up no more.
+const NoLongerMonitored = "no longer monitored"
+
 // Take adds one step to the record and returns what outlets must deliver: the
 // step, and a second one when it closes the alert because it has returned and
 // is acknowledged. The step's Number and Condition are filled in. A step that

@@ -29,7 +29,7 @@ const (
 	Acknowledged   Condition = "acknowledged"   // signalling, acknowledged
 	Returned       Condition = "returned"       // signals no more, not yet acknowledged
 	Shelved        Condition = "shelved"        // put aside by a person until a stated time
-	Closed         Condition = "closed"         // returned and acknowledged, or closed by hand
+	Closed         Condition = "closed"         // returned and acknowledged, closed by hand, or no longer monitored
 	Withdrawn      Condition = "withdrawn"      // the data were corrected: there was no signal
 )
 

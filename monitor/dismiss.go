@@ -1,0 +1,93 @@
+package monitor
+
+import (
+	"cmp"
+	"slices"
+
+	"tailbell/config"
+	"tailbell/monitor/life"
+)
+
+// dismiss ends the monitoring of an indicator that the next set-up lacks: its
+// alerts close as no longer monitored, with the evidence that they have, what
+// its series hold goes to the archive, and what is reported of them from now on
+// is unmonitored. Of each series a stub stays, since ids and the store know it by
+// its number; should an indicator claim its name again, it begins anew.
+func (e *Engine) dismiss(ix *indicator) {
+	for _, s := range ix.series {
+		for d := range s.tails {
+			e.dismissAlerts(&s.tails[d], ix)
+		}
+		for i := range s.cells {
+			if s.sum != nil {
+				break // what it holds is its members'
+			}
+			c := &s.cells[i]
+			if !ix.needs.paired(c) {
+				s.unpaired += int64(c.items)
+			}
+			e.archive(s, c)
+		}
+		delete(e.byName, s.name)
+		s.retire()
+		e.stubs[s.name] = s
+		e.living--
+		e.touch(s)
+	}
+	ix.series, ix.sums, e.recent = nil, nil, nil
+	e.pending = slices.DeleteFunc(e.pending, func(a *alert) bool { return !a.pending })
+}
+
+// dismissAlerts closes what is not done of one direction of a series, in order
+// of opening.
+func (e *Engine) dismissAlerts(t *tail, ix *indicator) {
+	if t.current != nil {
+		t.leave(ix.looked)
+	}
+	slices.SortFunc(t.past, func(a, b *alert) int { return cmp.Compare(a.record.Number, b.record.Number) })
+	for _, a := range t.past {
+		if !a.record.Done() {
+			e.step(a, life.Step{Kind: life.StepClosed, At: e.clock.Time(), Why: life.NoLongerMonitored})
+		}
+		a.pending = false
+		delete(e.alerts, a.record.ID)
+	}
+}
+
+// retire makes the series a stub.
+func (s *series) retire() {
+	stub := series{
+		number: s.number, name: s.name, indicator: s.indicator, retired: true, unpaired: s.unpaired,
+		watched: s.watched, touched: s.touched,
+	}
+	for d := range s.tails {
+		stub.tails[d].opened = s.tails[d].opened
+	}
+	*s = stub
+}
+
+// succeed goes on numbering alerts where the stub of the same name ended: no two
+// have the same number.
+func (s *series) succeed(stub *series) {
+	if stub == nil {
+		return
+	}
+	for d := range s.tails {
+		s.tails[d].opened = stub.tails[d].opened
+	}
+}
+
+// gone reports whether the id speaks of a series that is a stub: then it says
+// nothing any more.
+func (x *identified) gone() bool { return x.said.series != nil && x.said.series.retired }
+
+// dismissed lists the indicators that the next set-up lacks.
+func (e *Engine) dismissed(next *config.Setup) []*indicator {
+	var list []*indicator
+	for _, ix := range e.indicators {
+		if !slices.ContainsFunc(next.Indicators, func(in config.Indicator) bool { return in.Name == ix.cfg.Name }) {
+			list = append(list, ix)
+		}
+	}
+	return list
+}
