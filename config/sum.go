@@ -118,6 +118,12 @@ func (s section) checkSums(in *Indicator, setup *Setup) {
 	}
 }
 
+// MayMatch reports whether a series of the indicator may match the pattern, or
+// one of its sums.
+func (in *Indicator) MayMatch(p Pattern) bool {
+	return slices.ContainsFunc(in.Series, func(q Pattern) bool { _, both := overlap(p, q); return both })
+}
+
 // onePartition reports whether all members of one sum are sure to lie in one
 // partition.
 func (m Sum) onePartition(keyParts int) bool {

@@ -39,6 +39,10 @@ type Account struct {
 	WithheldLooks int64 `json:"withheld_looks"`
 	Filling       int64 `json:"filling"`
 	Reruns        int64 `json:"reruns"`
+	// OutOfService are the withheld looks of series that were out of service,
+	// and AfterSignOff the changes of slots that had been signed off.
+	OutOfService int64 `json:"out_of_service,omitempty"`
+	AfterSignOff int64 `json:"after_sign_off,omitempty"`
 }
 
 // Account returns the account as it stands.
@@ -78,6 +82,8 @@ func (a Account) Add(b Account) Account {
 	sum.WithheldLooks += b.WithheldLooks
 	sum.Filling += b.Filling
 	sum.Reruns += b.Reruns
+	sum.OutOfService += b.OutOfService
+	sum.AfterSignOff += b.AfterSignOff
 	sum.RefusedBy = maps.Clone(a.RefusedBy)
 	if sum.RefusedBy == nil {
 		sum.RefusedBy = map[Reason]int64{}

@@ -22,6 +22,9 @@ func (e *Engine) act(m *Message) {
 }
 
 func (e *Engine) perform(act *Act) (Reason, string) {
+	if act.Kind.OnSeries() {
+		return e.performOnSeries(act)
+	}
 	a := e.alertOf(act)
 	if a == nil {
 		if act.Alert != "" {
@@ -52,6 +55,7 @@ func (e *Engine) perform(act *Act) (Reason, string) {
 		s.Until = &until
 	case Unshelve:
 		s.Kind = life.StepUnshelved
+	case Reset, Change, OutOfService, BackInService, SignOff:
 	}
 	if repeated(&a.record, act, &s) {
 		return NotAllowed, fmt.Sprintf("alert %s has this act already", a.record.ID)

@@ -69,7 +69,7 @@ func (e *Engine) open(s *series, d direction, looks []look, opening look, at Ins
 		},
 	}
 	a.record.Opening = e.evidence(s, d, opening.boundary, opening.window)
-	a.record.IDs, a.record.MoreIDs = s.idsIn(opening.boundary-int64(ix.places[opening.window].Slots), opening.boundary)
+	a.record.IDs, a.record.MoreIDs = s.idsIn(ix.spanFrom(s, opening.boundary, ix.places[opening.window].Slots), opening.boundary)
 	for i := range looks {
 		t.join(&looks[i], a, d)
 	}

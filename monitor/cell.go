@@ -15,6 +15,8 @@ type cell struct {
 	items uint32
 	// provisional says that in a sum some of the exposure was carried forward.
 	provisional bool
+	// revised says that it changed after it had been signed off.
+	revised bool
 	// late is how many of the events came after the slot had settled.
 	late int64
 	// ids names the observations with events that had an id, sorted.

@@ -67,7 +67,7 @@ func (e *Engine) chance(s *series, ep *epoch, l *look) {
 	o := opportunity{}
 	u, ok := ix.judgedBy(s, ep, l.window, l.boundary)
 	if ok && !l.exposure.IsZero() {
-		o = ix.opportunity(s, &u, &l.tally, l.boundary-int64(ix.places[l.window].Slots), l.boundary, l.at)
+		o = ix.opportunity(s, &u, &l.tally, ix.spanFrom(s, l.boundary, ix.places[l.window].Slots), l.boundary, l.at)
 	}
 	for _, d := range bothTails {
 		switch {

@@ -31,6 +31,7 @@ const (
 	MoreThanTrials ConditionKind = "more than n"     // more events than trials
 	NoExposure     ConditionKind = "no exposure"     // events, but no exposure
 	NoBaseline     ConditionKind = "no baseline"     // none is valid, or it rests on too little
+	NotInService   ConditionKind = "out of service"  // people said so
 	Silent         ConditionKind = "silent"          // nothing heard for longer than expected
 	unknownKind    ConditionKind = "program's fault" // a status without a kind
 )
@@ -53,6 +54,9 @@ func (e *Engine) conditionsOf(s *series) []Condition {
 	}
 	var list []Condition
 	ix := s.indicator
+	if s.birth < ix.looked && s.standing(ix.looked-1) == closed {
+		return nil
+	}
 	for _, p := range ix.now().windows {
 		ws := &s.windows[p.place]
 		if ws.withheld == made {
@@ -82,7 +86,9 @@ func kindOf(s status) ConditionKind {
 		return NoExposure
 	case unbased:
 		return NoBaseline
-	case made, filling:
+	case idle:
+		return NotInService
+	case made, filling, closed:
 	}
 	return unknownKind
 }

@@ -87,6 +87,7 @@ type header struct {
 	Cycle      uint64            `json:"cycle"`
 	Next       int               `json:"next"`
 	Generation int64             `json:"generation_seconds"`
+	Facts      json.RawMessage   `json:"facts,omitempty"`
 }
 
 type indicatorHeader struct {
@@ -125,6 +126,7 @@ func (e *Engine) encodeHeader() []byte {
 	h := header{
 		History: e.history, Clock: e.clock, Version: e.version, Account: e.account,
 		Cycle: e.checkpoint.cycle, Next: e.checkpoint.next, Generation: int64(e.ids.length.Seconds()),
+		Facts: e.encodeFacts(),
 	}
 	for _, ix := range e.indicators {
 		ih := indicatorHeader{Name: ix.cfg.Name, Started: ix.started, Looked: ix.looked, Frozen: ix.frozenAt}

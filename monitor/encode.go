@@ -11,11 +11,14 @@ import (
 // flags, with flagNamed its name and its indicator's, then its head (all that
 // is not a cell), then the cells: all of them in a state, the changed ones in
 // a patch. Integers are varints, strings and lists are prefixed by length.
-const encodingVersion = 2
+const encodingVersion = 3
 
 // withoutLimits is the version of encodings that know no allowances: they are
 // read as such.
 const withoutLimits = 1
+
+// withoutSignOff is that of those that know no signed-off slots.
+const withoutSignOff = 2
 
 // idVersion is that of the encoding of an id.
 const idVersion = 1
@@ -90,7 +93,7 @@ func (c *cell) encode(b []byte) []byte {
 	b = binary.AppendUvarint(b, uint64(c.saysEvents))
 	b = binary.AppendUvarint(b, uint64(c.saysExposure))
 	b = binary.AppendUvarint(b, uint64(c.items))
-	b = binary.AppendVarint(b, c.late)
+	b = append(binary.AppendVarint(b, c.late), flag(c.revised))
 	b = binary.AppendUvarint(b, uint64(len(c.ids)))
 	for _, id := range c.ids {
 		b = appendString(b, id)

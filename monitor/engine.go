@@ -24,6 +24,7 @@ package monitor
 
 import (
 	"cmp"
+	"encoding/json"
 	"fmt"
 	"slices"
 
@@ -54,6 +55,11 @@ type Engine struct {
 	pending []*alert
 	wakes   wakes
 	account Account
+	// facts are the acts on series that hold, and factsJSON is how they are
+	// stored; because is why looks are being made again, "" where data changed.
+	facts     []fact
+	factsJSON json.RawMessage
+	because   string
 
 	// What the next Drain hands over.
 	drained    uint64

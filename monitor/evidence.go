@@ -17,7 +17,7 @@ func (e *Engine) evidence(s *series, d direction, boundary int64, window int) li
 	ix := s.indicator
 	ep := ix.epochAt(boundary)
 	cfg := ep.cfg
-	from := boundary - int64(ix.places[window].Slots)
+	from := ix.spanFrom(s, boundary, ix.places[window].Slots)
 	at := ix.due(boundary)
 	if i, ok := s.tails[d].litAt(boundary, window); ok {
 		at = s.tails[d].lit[i].at
@@ -44,6 +44,10 @@ func (e *Engine) evidence(s *series, d direction, boundary int64, window int) li
 	fillRate(&ev, &u, &o)
 	ev.RatioKind, ev.Ratio, ev.RatioLower, ev.RatioUpper = ratioTo(&ev, &u, u.ref, &o)
 	ev.Baseline = ix.baselineOf(s, &u, &ev, &o)
+	ev.SignedOff, ev.AfterSignOff = ix.isSigned(s, from, boundary), t.revised
+	if length := int64(ix.places[window].Slots); boundary-from < length {
+		ev.Shortened = length - (boundary - from)
+	}
 	ev.Carriers, ev.MoreCarriers = ix.carriers(s, from, boundary)
 	ev.Allowance = e.allowanceOf(s, cfg, boundary)
 	ev.Recompute = recompute(&ev, &u, d)

@@ -2,6 +2,7 @@ package monitor
 
 import (
 	"math"
+	"slices"
 	"time"
 
 	"tailbell/monitor/life"
@@ -120,7 +121,7 @@ func (e *Engine) Standing(series, window string) (life.Evidence, bool) {
 	if b < p.since {
 		return life.Evidence{}, false
 	}
-	if b-int64(p.Slots) < max(s.birth, p.whole) || ix.statusAt(s, w, b) != made {
+	if ix.spanFrom(s, b, p.Slots) < max(s.begin(b), p.whole) || ix.statusAt(s, w, b) != made {
 		var ok bool
 		if b, ok = ix.previous(s, w, b); !ok {
 			return life.Evidence{}, false
@@ -132,7 +133,7 @@ func (e *Engine) Standing(series, window string) (life.Evidence, bool) {
 	if l.status != made || l.exposure.IsZero() || !based {
 		return life.Evidence{}, false
 	}
-	if o := ix.opportunity(s, &u, &l.tally, b-int64(p.Slots), b, l.at); o.weighted == 0 {
+	if o := ix.opportunity(s, &u, &l.tally, ix.spanFrom(s, b, p.Slots), b, l.at); o.weighted == 0 {
 		return life.Evidence{}, false
 	}
 	v := ix.view(s, ep, &l)
@@ -228,6 +229,8 @@ func (e *Engine) ChangesOf(series string) []Dated {
 		}
 		all = append(all, Dated{b.From.In(ix.cfg.Zone), what})
 	}
+	all = append(all, e.factsOf(ix, series)...)
+	slices.SortStableFunc(all, func(a, b Dated) int { return a.At.Compare(b.At) })
 	return all
 }
 

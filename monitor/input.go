@@ -127,8 +127,10 @@ const (
 	ExposureNotUsed Reason = "exposure_not_used" // exposure for an indicator that takes it from the clock
 	TooBig          Reason = "too_big"           // a sum that would not fit
 	NoSuchAlert     Reason = "no_such_alert"     // an act on an alert that is unknown or done
+	NoSuchSeries    Reason = "no_such_series"    // an act on series that are unknown
 	NotAllowed      Reason = "not_allowed"       // an act that the alert's condition doesn't allow
 	NeedsRebuild    Reason = "needs_rebuild"     // a set-up that a running store can't take
+	SeriesClosed    Reason = "series_closed"     // a count of a time for which its series was closed
 )
 
 // Act is something a person did.
@@ -142,7 +144,14 @@ type Act struct {
 	Mark      life.Mark // what a mark says; "" takes it back
 	By        string    // who
 	Why       string    // the reason, or the note's text
-	Until     Instant   // when what was shelved comes back
+	Until     Instant   // when what was shelved comes back, or where a span ends
+	// The rest is of acts on series: Series is a pattern then. From is when
+	// it begins to hold, What a change is, and Side the side that is final.
+	// Straddle says that windows may reach over the change.
+	From     Instant
+	What     ChangeKind
+	Side     Side
+	Straddle bool
 	// At is the act's own time, used in history time; if HasAt.
 	At    Instant
 	HasAt bool
@@ -163,7 +172,49 @@ const (
 	Unshelve
 )
 
-// ActKinds are all kinds of act.
+// The kinds of act on series: they hold from a date on, or for a span.
+const (
+	Reset         ActKind = iota + 16 // counts begin again
+	Change                            // something else was counted from then on
+	OutOfService                      // not looked at for a span
+	BackInService                     // earlier than was said
+	SignOff                           // the counts of a span are final
+)
+
+// SeriesActKinds are all kinds of act on series.
+var SeriesActKinds = []ActKind{Reset, Change, OutOfService, BackInService, SignOff}
+
+// OnSeries reports whether the act is on series rather than on an alert.
+func (k ActKind) OnSeries() bool { return k >= Reset }
+
+// ChangeKind says what changed.
+type ChangeKind string
+
+// The kinds of change.
+const (
+	CaseDefinition ChangeKind = "case definition" // what counts as an event
+	Method         ChangeKind = "method"          // how it is found or counted
+	Opening        ChangeKind = "opening"         // the series begins
+	Closing        ChangeKind = "closing"         // the series ends
+)
+
+// ChangeKinds are all kinds of change.
+var ChangeKinds = []ChangeKind{CaseDefinition, Method, Opening, Closing}
+
+// Side is a side of a count, or both.
+type Side string
+
+// The sides.
+const (
+	BothSides    Side = "both"
+	EventsSide   Side = "events"
+	ExposureSide Side = "exposure"
+)
+
+// Sides are all that can be signed off.
+var Sides = []Side{BothSides, EventsSide, ExposureSide}
+
+// ActKinds are all kinds of act on an alert.
 var ActKinds = []ActKind{Acknowledge, Close, Note, Mark, Shelve, Unshelve}
 
 // String returns the kind as written in messages.
@@ -181,6 +232,16 @@ func (k ActKind) String() string {
 		return "shelve"
 	case Unshelve:
 		return "unshelve"
+	case Reset:
+		return "reset"
+	case Change:
+		return "change"
+	case OutOfService:
+		return "out of service"
+	case BackInService:
+		return "back in service"
+	case SignOff:
+		return "sign off"
 	}
 	return "unknown act"
 }

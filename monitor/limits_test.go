@@ -22,12 +22,16 @@ func TestWithoutLimits(t *testing.T) {
 	s := e.byName["a/fall"]
 	now := s.encode(true)
 	tail := binary.AppendUvarint(nil, uint64(len(s.cells)))
+	before := bytes.Clone(tail)
 	for i := range s.cells {
 		tail = s.cells[i].encode(tail)
+		c := s.cells[i].encode(nil)
+		n := len(c) // no ids: the last but one says whether it was revised
+		before = append(append(before, c[:n-2]...), c[n-1])
 	}
 	old := bytes.Clone(now[:len(now)-len(tail)-1]) // less the number of limits
 	old[0] = withoutLimits
-	old = append(old, tail...)
+	old = append(old, before...)
 	read := &series{}
 	if err := e.overlay(read, old); err != nil {
 		t.Fatal(err)

@@ -17,6 +17,8 @@ const (
 	overfull                // more events than trials
 	unexposed               // events, but no exposure
 	unbased                 // no baseline is valid, or its reference is too small
+	idle                    // the series is out of service
+	closed                  // the series is closed
 )
 
 // String returns the status as shown to people.
@@ -34,6 +36,10 @@ func (s status) String() string {
 		return "events without exposure"
 	case unbased:
 		return "no baseline is valid, or its reference holds too few events"
+	case idle:
+		return "out of service"
+	case closed:
+		return "closed"
 	}
 	return "unknown status"
 }
@@ -58,10 +64,19 @@ type tally struct {
 	known    int64 // slots with both sides known
 	// provisional counts the slots whose exposure was carried forward.
 	provisional int64
+	// revised counts those that changed after they had been signed off.
+	revised int64
 }
 
 // tally sums the slots in [from, to).
 func (ix *indicator) tally(s *series, from, to int64) tally {
+	if s.dates != nil && s.dates.outs.touch(from, to) {
+		return ix.tallyParts(s, from, to)
+	}
+	return ix.tallyAll(s, from, to)
+}
+
+func (ix *indicator) tallyAll(s *series, from, to int64) tally {
 	if s.exposureFrom() == config.Census {
 		return ix.tallyCensus(s, from, to)
 	}
@@ -75,6 +90,7 @@ func (ix *indicator) tallyCensus(s *series, from, to int64) tally {
 	for i := range inside {
 		t.events += inside[i].events
 		t.late += inside[i].late
+		t.countRevised(&inside[i])
 	}
 	ix.carry(s, from, to, func(slot int64, q Quantity, provisional bool) {
 		t.exposure = t.exposure.add(q)
@@ -126,9 +142,12 @@ func (ix *indicator) judge(s *series, t *tally, from, to int64) status {
 // at.
 func (ix *indicator) look(s *series, ep *epoch, window int, boundary int64, at Instant) look {
 	l := look{window: window, boundary: boundary, at: at}
-	from := boundary - int64(ix.places[window].Slots)
-	if from < ep.begin(s, window) {
+	from := ix.spanFrom(s, boundary, ix.places[window].Slots)
+	if from < max(ep.begin(s, window), s.begin(boundary)) {
 		l.status = filling
+		return l
+	}
+	if l.status = s.standing(boundary - 1); l.status != made {
 		return l
 	}
 	l.tally = ix.windowTally(s, window, from, boundary)
@@ -176,7 +195,10 @@ func (ix *indicator) test(s *series, l *look, u *usual, o *opportunity) {
 // statusAt says whether a look of the window at the boundary can be made.
 func (ix *indicator) statusAt(s *series, window int, boundary int64) status {
 	ep := ix.epochAt(boundary)
-	from := boundary - int64(ix.places[window].Slots)
+	if st := s.standing(boundary - 1); st != made {
+		return st
+	}
+	from := ix.spanFrom(s, boundary, ix.places[window].Slots)
 	t := ix.tally(s, from, boundary)
 	st := ix.judge(s, &t, from, boundary)
 	if st == made && !t.exposure.IsZero() {
@@ -194,8 +216,15 @@ func (ix *indicator) previous(s *series, window int, boundary int64) (int64, boo
 	if p == nil {
 		return 0, false
 	}
-	length, step := int64(p.Slots), int64(p.Step)
-	for b := boundary - step; b >= p.since && b-length >= max(s.birth, p.whole, ix.floor); b -= step {
+	step := int64(p.Step)
+	for b := boundary - step; b >= p.since && b > max(s.birth, ix.floor); b -= step {
+		from := ix.spanFrom(s, b, p.Slots)
+		if from < max(p.whole, ix.floor) {
+			break
+		}
+		if from < s.begin(b) {
+			continue
+		}
 		if ix.statusAt(s, window, b) == made {
 			return b, true
 		}
@@ -205,7 +234,7 @@ func (ix *indicator) previous(s *series, window int, boundary int64) (int64, boo
 
 // entered counts the events in the window that no made look before it held.
 func (ix *indicator) entered(s *series, l *look) int64 {
-	from := l.boundary - int64(ix.places[l.window].Slots)
+	from := ix.spanFrom(s, l.boundary, ix.places[l.window].Slots)
 	if b, ok := ix.previous(s, l.window, l.boundary); ok {
 		from = max(from, b)
 	}

@@ -23,7 +23,7 @@ func (s *series) mark(a *alert, mark life.Mark) {
 		return
 	}
 	ix := s.indicator
-	from := a.first - int64(ix.places[a.opening.window].Slots)
+	from := ix.spanFrom(s, a.first, ix.places[a.opening.window].Slots)
 	s.marked = append(s.marked, markedSpan{alert: a.record.ID, from: from, to: min(a.last, ix.looked)})
 }
 

@@ -2,6 +2,7 @@ package monitor
 
 import (
 	"fmt"
+	"slices"
 
 	"tailbell/config"
 )
@@ -158,6 +159,9 @@ func (e *Engine) admit(ix *indicator, o *Observation) (contribution, Reason, str
 	if reason, detail := ix.fits(o, from, to); reason != "" {
 		return c, reason, detail
 	}
+	if reason, detail := e.shut(ix, c.series, o.Series, from, to); reason != "" {
+		return c, reason, detail
+	}
 	var reason Reason
 	c.exposure, reason = quantityOf(o.Exposure, ix.cfg.GrainDigits)
 	if reason == FinerThanGrain {
@@ -188,6 +192,21 @@ func (ix *indicator) fits(o *Observation, from, to int64) (Reason, string) {
 		return TooBig, fmt.Sprintf("its interval covers %d slots, more than %d: send it in shorter pieces", to-from+1, maxSpread)
 	}
 	return "", ""
+}
+
+// shut refuses what is said of a time for which the series was closed.
+func (e *Engine) shut(ix *indicator, s *series, name string, from, to int64) (Reason, string) {
+	var d *dates
+	switch {
+	case s != nil:
+		d = s.dates
+	case len(e.facts) > 0:
+		d = e.datesOf(ix, name)
+	}
+	if d.isOpen(from) && d.isOpen(to) {
+		return "", ""
+	}
+	return SeriesClosed, fmt.Sprintf("series %q was closed then: open it from an earlier date, or name the series that took its place", name)
 }
 
 // maxEvents is the most events that a slot holds: a window of a hundred
@@ -233,6 +252,7 @@ func (e *Engine) enter(ix *indicator, name string) *series {
 	s := &series{
 		number: uint32(len(e.series)), name: name, indicator: ix, birth: unborn,
 		trimmed: -1 << 62, windows: make([]windowState, len(ix.places)), fresh: true,
+		dates: e.datesOf(ix, name),
 	}
 	s.succeed(e.stubs[s.name])
 	e.series = append(e.series, s)
@@ -260,6 +280,9 @@ func (e *Engine) count(o *Observation, ix *indicator, key idKey, old *identified
 	}
 	if said.series != nil {
 		changes = append(changes, e.add(&said, key.id, 1))
+	}
+	if slices.ContainsFunc(changes, func(c change) bool { return c.revised }) {
+		e.account.AfterSignOff++
 	}
 	if key.id != "" {
 		e.remember(o, key, old, &said)
@@ -312,8 +335,10 @@ func (e *Engine) add(c *contribution, id string, sign int) change {
 		}
 		s.seen = e.clock
 	}
+	revised := false
 	for slot := from; slot <= to; slot++ {
 		cell := s.at(slot)
+		revised = s.revise(cell, c.hasEvents, c.hasExposure) || revised
 		if slot == from {
 			cell.items += uint32(sign)
 		}
@@ -333,7 +358,9 @@ func (e *Engine) add(c *contribution, id string, sign int) change {
 		}
 		e.touchSlot(s, slot)
 	}
-	return e.reborn(s, from, to, sign)
+	change := e.reborn(s, from, to, sign)
+	change.revised = revised
+	return change
 }
 
 // carriedTo is the last slot that a change reaches: its own, or where levels

@@ -107,6 +107,14 @@ func (ix *indicator) stratum(strata *config.Strata, slot int64) int {
 // eachExposure calls use for the slots in [from, to) that have an exposure, in
 // order, with whether it is provisional: carried forward from an earlier slot.
 func (ix *indicator) eachExposure(s *series, from, to int64, use func(slot int64, q Quantity, provisional bool)) {
+	if s.dates != nil && s.dates.outs.touch(from, to) {
+		all := use
+		use = func(slot int64, q Quantity, provisional bool) {
+			if !s.dates.isOut(slot) {
+				all(slot, q, provisional)
+			}
+		}
+	}
 	switch s.exposureFrom() {
 	case config.Clock:
 		for slot := from; slot < to; slot++ {

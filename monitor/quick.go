@@ -12,7 +12,7 @@ import (
 // whether it did; if not, nothing happened but that sums were moved on.
 func (e *Engine) quick(s *series, ep *epoch, boundary int64, due Instant) bool {
 	ix, cfg := s.indicator, ep.cfg
-	if e.long || e.onLook != nil || cfg != ix.cfg || !ix.plain(cfg) || s.baseOf != cfg || s.base == nil || s.tails[upper].waits() || s.tails[lower].waits() {
+	if e.long || e.onLook != nil || s.dates != nil || cfg != ix.cfg || !ix.plain(cfg) || s.baseOf != cfg || s.base == nil || s.tails[upper].waits() || s.tails[lower].waits() {
 		return false
 	}
 	b := s.base
@@ -29,6 +29,9 @@ func (e *Engine) quick(s *series, ep *epoch, boundary int64, due Instant) bool {
 		if p := &ep.windows[i]; p.Step != 1 || !ix.quickLook(s, b, p.place, in, boundary) {
 			return false
 		}
+	}
+	if s.sum != nil {
+		e.touch(s)
 	}
 	for i := range ep.windows {
 		w := ep.windows[i].place

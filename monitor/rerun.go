@@ -16,6 +16,8 @@ type change struct {
 	// earlier.
 	birth  int64
 	reborn bool
+	// revised says that a slot changed that had been signed off.
+	revised bool
 }
 
 // rerun makes the looks that a change touches again, each with the stanza in
@@ -41,9 +43,9 @@ func (e *Engine) rerun(c change) {
 		ep := ix.epochAt(boundary)
 		for i := range ep.windows {
 			p := &ep.windows[i]
-			from := boundary - int64(p.Slots)
+			from := ix.spanFrom(s, boundary, p.Slots)
 			touched := from <= c.to || (c.reborn && from < c.birth)
-			if !touched || from < max(s.birth, p.whole) || !ix.looksAt(p.Window, boundary) {
+			if !touched || from < max(s.begin(boundary), p.whole) || !ix.looksAt(p.Window, boundary) {
 				continue
 			}
 			l := ix.look(s, ep, p.place, boundary, e.clock)
@@ -180,7 +182,7 @@ func (e *Engine) amend(a *alert) {
 		if a.record.Number == t.opened {
 			t.disarmed = false // the one that was closed by hand never was
 		}
-		e.step(a, life.Step{Kind: life.StepWithdrawn, At: e.clock.Time(), Why: "data corrected"})
+		e.step(a, life.Step{Kind: life.StepWithdrawn, At: e.clock.Time(), Why: e.reason()})
 		return
 	}
 	if !a.pending {

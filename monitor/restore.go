@@ -48,6 +48,9 @@ func (e *Engine) restoreHeader(h *header, settings []SettingChange) error {
 	if e.account.RefusedBy == nil {
 		e.account.RefusedBy = map[Reason]int64{}
 	}
+	if err := e.restoreFacts(h.Facts); err != nil {
+		return err
+	}
 	setups := map[int]*config.Setup{}
 	for _, s := range settings {
 		setup, err := config.Parse(s.Text, fmt.Sprintf("stored set-up %d", s.Version))
@@ -146,6 +149,7 @@ func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(st
 		}
 	}
 	s.makePlaces()
+	s.dates = e.datesOf(s.indicator, s.name)
 	s.derive()
 	s.cells = slices.DeleteFunc(s.cells, func(c cell) bool { return c.slot < s.trimmed })
 	e.series = append(e.series, s)
@@ -160,7 +164,7 @@ func (s *series) derive() {
 	ix := s.indicator
 	for _, p := range ix.now().windows {
 		ws := &s.windows[p.place]
-		if ws.withheld != made {
+		if ws.withheld != made || s.dates != nil || config.IsSum(s.name) {
 			continue
 		}
 		latest := ix.latest(p.Window)
@@ -179,7 +183,7 @@ func (t *tail) all() []*alert {
 func (e *Engine) overlay(s *series, data []byte) error {
 	r := &reader{b: data}
 	version := r.byte()
-	if version != encodingVersion && version != withoutLimits {
+	if version != encodingVersion && version != withoutSignOff && version != withoutLimits {
 		return fmt.Errorf("%w: encoding %d is not known to this program", errEncoding, version)
 	}
 	switch flags := r.byte(); {
@@ -212,7 +216,7 @@ func (e *Engine) overlay(s *series, data []byte) error {
 		s.limits = r.limits(e)
 	}
 	for range r.length() {
-		c := r.cell()
+		c := r.cell(version)
 		*s.at(c.slot) = c
 	}
 	if len(r.b) > 0 {
@@ -241,10 +245,13 @@ func (r *reader) references(s *series) {
 	}
 }
 
-func (r *reader) cell() cell {
+func (r *reader) cell(version byte) cell {
 	c := cell{
 		slot: r.int(), events: r.int(), exposure: r.quantity(),
 		saysEvents: uint32(r.uint()), saysExposure: uint32(r.uint()), items: uint32(r.uint()), late: r.int(),
+	}
+	if version > withoutSignOff {
+		c.revised = r.flag()
 	}
 	for range r.length() {
 		c.ids = append(c.ids, r.string())

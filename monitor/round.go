@@ -12,7 +12,7 @@ func (e *Engine) lookAll(ix *indicator, boundary int64) {
 	e.allot(ix, ep, boundary)
 	for _, s := range ix.series {
 		if s.birth < boundary {
-			if !e.quick(s, ep, boundary, due) {
+			if s.standing(boundary-1) != closed && !e.quick(s, ep, boundary, due) {
 				e.lookAt(s, ep, boundary, due)
 			}
 			e.trim(s)
@@ -84,8 +84,15 @@ func (e *Engine) note(s *series, l *look, boundary int64) {
 			e.touch(s)
 		}
 		ws.made, ws.hasMade = boundary, true
-	case missing, overfull, unexposed, unbased:
+		if s.dates != nil || s.sum != nil {
+			e.touch(s) // what is not stored does not follow from its birth
+		}
+	case closed:
+	case missing, overfull, unexposed, unbased, idle:
 		e.account.WithheldLooks++
+		if l.status == idle {
+			e.account.OutOfService++
+		}
 		if ws.withheld != l.status {
 			if ws.withheld == made {
 				ws.withheldSince = boundary

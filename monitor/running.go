@@ -15,7 +15,7 @@ type running struct {
 // look before it summed where that is nearer.
 func (ix *indicator) windowTally(s *series, window int, from, to int64) tally {
 	r := &s.windows[window].running
-	if s.exposureFrom() == config.Census || to < r.to && r.ok {
+	if s.exposureFrom() == config.Census || to < r.to && r.ok || s.dates != nil && s.dates.outs.touch(from, to) {
 		return ix.tally(s, from, to)
 	}
 	moved := to - r.to
@@ -26,6 +26,7 @@ func (ix *indicator) windowTally(s *series, window int, from, to int64) tally {
 		t.events += in.events - out.events
 		t.late += in.late - out.late
 		t.provisional += in.provisional - out.provisional
+		t.revised += in.revised - out.revised
 		t.exposure = t.exposure.add(in.exposure).sub(out.exposure)
 	} else {
 		r.tally = ix.sum(s, from, to)
@@ -46,6 +47,7 @@ func (ix *indicator) sum(s *series, from, to int64) tally {
 		if c.provisional {
 			t.provisional++
 		}
+		t.countRevised(c)
 		t.events += c.events
 		t.late += c.late
 		t.exposure = t.exposure.add(c.exposure)
@@ -55,6 +57,10 @@ func (ix *indicator) sum(s *series, from, to int64) tally {
 
 // filled adds to the sum of [from, to) what needs no cells.
 func (ix *indicator) filled(s *series, t tally, from, to int64) tally {
+	if s.sum != nil { // where no member was in force nothing is missing
+		t.known += to - from - int64(len(s.cells.between(from, to)))
+		return t
+	}
 	needs := s.needs()
 	if !needs.events && !needs.exposure {
 		t.known = to - from

@@ -147,6 +147,9 @@ func render(t *testing.T, o outcome) string {
 	if err != nil {
 		t.Fatal(err)
 	}
+	for _, c := range o.engine.Conditions() {
+		fmt.Fprintf(&b, "condition %s %s %s since %s: %s\n", c.Series, c.Window, c.Kind, c.Since.Time().Format("2006-01-02T15:04Z"), c.Text)
+	}
 	fmt.Fprintf(&b, "account %s\n", account)
 	return b.String()
 }
@@ -166,6 +169,9 @@ func renderStep(b *bytes.Buffer, n *life.Notice) {
 		fmt.Fprintf(b, "    %s to %s: %d in %s %s, expected %.4g, p %.5g, critical %d, late %d, rate %.4g (%.4g to %.4g)\n",
 			e.Window, e.To.Format("2006-01-02"), e.Events, e.Exposure, e.Unit, e.Expected, e.P, e.Critical, e.LateEvents,
 			e.Rate, e.RateLower, e.RateUpper)
+		if e.Shortened > 0 || e.SignedOff || e.AfterSignOff > 0 {
+			fmt.Fprintf(b, "    from %s, %d slots shorter, signed off %t, %d slots changed after\n", e.From.Format("2006-01-02"), e.Shortened, e.SignedOff, e.AfterSignOff)
+		}
 		for _, c := range e.Carriers {
 			fmt.Fprintf(b, "    carried by %s: %d in %s\n", c.Series, c.Events, c.Exposure)
 		}

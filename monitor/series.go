@@ -28,6 +28,8 @@ type series struct {
 	// member of.
 	sum  *rollup
 	sums []*series
+	// dates are the acts on series that hold for it, nil for none.
+	dates *dates
 	// array is what the cells lie in, at its end.
 	array cells
 	// windows and tails hold what the looks have found, by window and by

@@ -44,9 +44,6 @@ func (s *series) exposureFrom() config.Exposure {
 	return s.indicator.cfg.Exposure
 }
 
-// inForce reports whether the series is counted in sums of the slot.
-func (s *series) inForce(slot int64) bool { return s.birth <= slot }
-
 // newSums returns the names of the sums that the series would be the first
 // member of.
 func (e *Engine) newSums(ix *indicator, name string) []string {
@@ -136,6 +133,7 @@ func (ix *indicator) sumOf(sum *series, slot int64) (c cell, counted bool) {
 		}
 		if i, ok := m.cells.find(slot); ok {
 			c.late += m.cells[i].late
+			c.revised = c.revised || m.cells[i].revised
 		}
 		ix.eachExposure(m, slot, slot+1, func(_ int64, q Quantity, provisional bool) {
 			c.exposure = c.exposure.add(q)

@@ -72,7 +72,7 @@ func (w *twin) look(ix *twinIndicator) {
 				here = append(here, key)
 			case filling:
 				w.account.Filling++
-			case missing, overfull, unexposed, unbased:
+			case missing, overfull, unexposed, unbased, idle, closed:
 				w.account.WithheldLooks++
 			}
 		}
@@ -400,7 +400,7 @@ func (w *twin) perform(a *twinAlert, act Act) Reason {
 	if act.HasAt && act.At < InstantOf(w.opened(a).at) {
 		return NotAllowed // it can't have been meant for this one
 	}
-	switch act.Kind {
+	switch act.Kind { //nolint:exhaustive // the twin plays no acts on series
 	case Acknowledge:
 		if a.done() || a.acknowledged {
 			return NotAllowed

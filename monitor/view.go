@@ -22,6 +22,8 @@ type View struct {
 	Exposure     Quantity
 	Digits       int
 	Provisional  int64
+	// SignedOff says that people have declared all counts of the look final.
+	SignedOff bool
 	// Expected is how many events the baseline would bring, NaN where there is
 	// none or the look was not made.
 	Expected float64
@@ -68,6 +70,9 @@ func (e *Engine) Views(series, window string, from, to time.Time) []View {
 	}
 	w, cfg := p.place, p.Window
 	first := max(max(s.birth, s.trimmed, p.whole)+int64(cfg.Slots), p.since)
+	if s.dates != nil { // some may be shorter
+		first = max(s.birth, s.trimmed, p.since-1) + 1
+	}
 	if at := ix.cal.Slot(InstantOf(from)); at > first {
 		first = at
 	}
@@ -82,6 +87,9 @@ func (e *Engine) Views(series, window string, from, to time.Time) []View {
 		}
 		ep := ix.epochAt(b)
 		l := ix.look(s, ep, w, b, e.momentOf(s, b, w))
+		if l.status == filling || l.status == closed {
+			continue
+		}
 		v := ix.view(s, ep, &l)
 		if b > ix.frozenAt {
 			_, v.Upper.Signals = s.tails[upper].litAt(b, w)
@@ -107,13 +115,13 @@ func (e *Engine) momentOf(s *series, boundary int64, window int) Instant {
 // view is a look as shown to people.
 func (ix *indicator) view(s *series, ep *epoch, l *look) View {
 	cfg := ep.cfg
-	from := l.boundary - int64(ix.places[l.window].Slots)
+	from := ix.spanFrom(s, l.boundary, ix.places[l.window].Slots)
 	v := View{
 		Series: s.name, Indicator: cfg.Name, Window: ix.places[l.window].Name,
 		Start: ix.cal.Start(from).in(cfg.Zone), End: ix.cal.Start(l.boundary).in(cfg.Zone), Due: ix.due(l.boundary).in(cfg.Zone),
 		Made: l.status == made, Status: l.status.String(),
 		Events: l.events, Late: l.late, Exposure: l.exposure, Digits: cfg.GrainDigits, Provisional: l.provisional,
-		Expected: math.NaN(),
+		Expected: math.NaN(), SignedOff: ix.isSigned(s, from, l.boundary),
 	}
 	v.Upper.Watched, v.Lower.Watched = cfg.Upper, cfg.Lower
 	limit := s.limitsAt(cfg, l.window, l.boundary)

@@ -96,6 +96,10 @@ func readActField(field field, act *monitor.Act) *fault {
 		return readMark(field, act)
 	case "until":
 		return readTime(field, &act.Until)
+	case "from":
+		return readTime(field, &act.From)
+	case "what", "side", "straddle":
+		return readSeriesField(field, act)
 	case "at":
 		act.HasAt = true
 		return readTime(field, &act.At)
@@ -120,13 +124,13 @@ func readActKind(field field, act *monitor.Act) *fault {
 	if f := readActText(field, MaxIDLength, &text); f != nil {
 		return f
 	}
-	for _, kind := range monitor.ActKinds {
+	for _, kind := range allKinds {
 		if text == kind.String() {
 			act.Kind = kind
 			return nil
 		}
 	}
-	return refuse(monitor.BadAct, "act is %q; it must be acknowledge, close, note, mark, shelve or unshelve", clip(text))
+	return refuse(monitor.BadAct, "act is %q; it must be %s", clip(text), kindWords())
 }
 
 // unmarked takes a mark back.
@@ -169,9 +173,13 @@ func readActText(field field, most int, text *string) *fault {
 func checkAct(act *monitor.Act, seen map[string]bool) *fault {
 	switch {
 	case !seen["act"]:
-		return refuse(monitor.BadAct, "the field act is missing; it must be acknowledge, close, note, mark, shelve or unshelve")
+		return refuse(monitor.BadAct, "the field act is missing; it must be %s", kindWords())
 	case !seen["by"]:
 		return refuse(monitor.BadAct, "the field by is missing; it says who acts")
+	case act.Kind.OnSeries():
+		return checkSeriesAct(act, seen)
+	case seen["from"] || seen["what"] || seen["side"] || seen["straddle"]:
+		return refuse(monitor.BadAct, "from, what, side and straddle belong to acts on series; a %s is on an alert", act.Kind)
 	case seen["alert"] && (seen["series"] || seen["direction"]):
 		return refuse(monitor.BadAct, "the alert is named twice; give alert, or series and direction")
 	case !seen["alert"] && (!seen["series"] || !seen["direction"]):

@@ -59,8 +59,13 @@ func EncodeAct(dst []byte, a *monitor.Act) []byte {
 	} else {
 		dst = append(dst, `,"series":`...)
 		dst = AppendText(dst, a.Series)
-		dst = append(dst, `,"direction":`...)
-		dst = AppendText(dst, string(a.Direction))
+		if !a.Kind.OnSeries() {
+			dst = append(dst, `,"direction":`...)
+			dst = AppendText(dst, string(a.Direction))
+		}
+	}
+	if a.Kind.OnSeries() {
+		dst = appendSeriesAct(dst, a)
 	}
 	if a.Kind == monitor.Mark {
 		mark := string(a.Mark)

@@ -161,6 +161,13 @@ type Evidence struct {
 	// Provisional is how many slots have an exposure that was carried forward.
 	Provisional int64 `json:"provisional_slots,omitempty"`
 	LateEvents  int64 `json:"late_events"`
+	// SignedOff says that people have declared all counts of the window final;
+	// AfterSignOff is how many slots changed after that had been said of them.
+	SignedOff    bool  `json:"signed_off,omitempty"`
+	AfterSignOff int64 `json:"slots_changed_after_sign_off,omitempty"`
+	// Shortened is by how many slots the window is shorter than its span, since
+	// it does not reach over a reset or a change.
+	Shortened int64 `json:"shortened_slots,omitempty"`
 	// Carriers are the members of a sum that had the events, those with the
 	// most first, up to a cap; MoreCarriers counts those beyond it.
 	Carriers     []Carrier `json:"carriers,omitempty"`

@@ -1,0 +1,298 @@
+package monitor
+
+import (
+	"cmp"
+	"encoding/json"
+	"fmt"
+	"slices"
+
+	"tailbell/config"
+	"tailbell/monitor/life"
+)
+
+// maxFacts bounds the acts on series that hold at once.
+const maxFacts = 5000
+
+// performOnSeries takes an act on series, or says why it can't be.
+func (e *Engine) performOnSeries(act *Act) (Reason, string) {
+	f := fact{
+		Kind: act.Kind, Series: act.Series, What: act.What, Side: act.Side, Straddle: act.Straddle,
+		From: act.From, Until: act.Until, Taken: e.clock, By: act.By, Why: act.Why,
+	}
+	if act.Kind == BackInService {
+		return e.backInService(&f)
+	}
+	if reason, detail := e.senseless(&f); reason != "" {
+		return reason, detail
+	}
+	if f.What == Opening && !config.IsSum(f.Series) && e.byName[f.Series] == nil {
+		if reason, detail := e.openNew(&f); reason != "" {
+			return reason, detail
+		}
+	}
+	e.forgetFacts()
+	if len(e.facts) >= maxFacts {
+		return NotAllowed, fmt.Sprintf("%d acts on series hold already: let one with a pattern take the place of many", maxFacts)
+	}
+	e.keepFacts(append(e.facts, f))
+	e.enforce(&f, f.From, f.Until)
+	return "", ""
+}
+
+// senseless says why the act can't hold; "" if it can.
+func (e *Engine) senseless(f *fact) (Reason, string) {
+	same := func(x fact) bool {
+		x.Taken, x.By, x.Why = f.Taken, f.By, f.Why
+		return x == *f
+	}
+	if slices.ContainsFunc(e.facts, same) {
+		return NotAllowed, fmt.Sprintf("this %s of %s was said already", f.Kind, f.Series)
+	}
+	if f.From > e.clock.Add(LongestShelf) {
+		return NotAllowed, fmt.Sprintf("it would hold from %s, more than %s after the stream's clock %s: say it when it is nearer",
+			at(f.From), config.FormatDuration(LongestShelf), at(e.clock))
+	}
+	matched := e.matched(f)
+	if len(matched) == 0 && !e.mayMatch(f) {
+		return NoSuchSeries, fmt.Sprintf("no series here is called %q or matches it, and no indicator would monitor one", f.Series)
+	}
+	for _, s := range matched {
+		if reason, detail := e.unfitFor(f, s); reason != "" {
+			return reason, detail
+		}
+	}
+	if f.Kind == Reset && len(matched) == 0 {
+		return NoSuchSeries, fmt.Sprintf("no series that was heard of is called %q or matches it: there is nothing to reset", f.Series)
+	}
+	return "", ""
+}
+
+// unfitFor says why the act can't hold for a series.
+func (e *Engine) unfitFor(f *fact, s *series) (Reason, string) {
+	ix := s.indicator
+	slot := ix.firstFrom(f.From)
+	if f.Kind != Reset && f.Kind != SignOff && ix.started && !f.Straddle && slot <= ix.frozenAt {
+		return BeyondHorizon, fmt.Sprintf("%s lies before the horizon of series %q, %s: looks from before can't change any more",
+			at(f.From), s.name, at(ix.cal.Start(ix.frozenAt)))
+	}
+	switch {
+	case s.sum != nil: // it follows its members
+	case f.What == Opening && s.birth < slot && s.dates.isOpen(slot-1):
+		return NotAllowed, fmt.Sprintf("series %q is open already, since %s: close it first, or reset it", s.name, at(ix.cal.Start(s.birth)))
+	case f.What == Opening && s.dates != nil && slices.ContainsFunc(s.dates.turns, func(t turn) bool { return t.slot >= slot }):
+		return NotAllowed, fmt.Sprintf("series %q is opened or closed at a later date already", s.name)
+	case f.What == Closing && !s.dates.isOpen(slot):
+		return NotAllowed, fmt.Sprintf("series %q is closed already", s.name)
+	}
+	return "", ""
+}
+
+// matched returns the series that the act is on.
+func (e *Engine) matched(f *fact) []*series {
+	var list []*series
+	if !config.IsSum(f.Series) {
+		if s := e.byName[f.Series]; s != nil {
+			list = append(list, s)
+		}
+		return list
+	}
+	p := config.NewPattern(f.Series)
+	for _, s := range e.series {
+		if !s.retired && p.Match(s.name) {
+			list = append(list, s)
+		}
+	}
+	return list
+}
+
+// mayMatch reports whether a series yet to come may match.
+func (e *Engine) mayMatch(f *fact) bool {
+	return slices.ContainsFunc(e.indicators, func(ix *indicator) bool { return ix.cfg.MayMatch(config.NewPattern(f.Series)) })
+}
+
+// openNew makes a series that opens before anything was heard of it.
+func (e *Engine) openNew(f *fact) (Reason, string) {
+	ix, other := e.indicatorOf(f.Series)
+	switch {
+	case ix == nil || other != nil:
+		return NoSuchSeries, fmt.Sprintf("series %q belongs to no indicator, or to two: it can't be opened", f.Series)
+	case e.living+len(e.newSums(ix, f.Series)) >= e.setup.Limits.MaxSeries:
+		return SeriesFull, fmt.Sprintf("%d series are monitored already: raise limits.max_series", e.setup.Limits.MaxSeries)
+	}
+	s := e.enter(ix, f.Series)
+	e.link(s)
+	s.birth, s.seen = ix.firstFrom(f.From), e.clock
+	for _, c := range e.changeSums(nil, s, s.birth, ix.looked-1) {
+		e.rerun(c)
+	}
+	return "", ""
+}
+
+// backInService lets a span out of service end earlier.
+func (e *Engine) backInService(f *fact) (Reason, string) {
+	facts := slices.Clone(e.facts)
+	for i := range facts {
+		x := &facts[i]
+		if x.Kind != OutOfService || x.Series != f.Series || f.From < x.From || f.From >= x.Until {
+			continue
+		}
+		for _, s := range e.matched(x) {
+			if ix := s.indicator; ix.started && ix.firstFrom(f.From) <= ix.frozenAt {
+				return BeyondHorizon, fmt.Sprintf("%s lies before the horizon: looks from before can't change any more", at(f.From))
+			}
+		}
+		until := x.Until
+		x.Until = f.From
+		e.keepFacts(facts)
+		e.enforce(x, x.Until, until)
+		return "", ""
+	}
+	return NotAllowed, fmt.Sprintf("%s is not out of service at %s by these very words: see what is, and name it as it was named", f.Series, at(f.From))
+}
+
+// keepFacts puts the facts in force.
+func (e *Engine) keepFacts(facts []fact) {
+	e.facts = facts
+	e.factsJSON = nil
+}
+
+// forgetFacts drops what no look needs any more.
+func (e *Engine) forgetFacts() {
+	oldest := Never
+	for _, ix := range e.indicators {
+		if !ix.started {
+			return
+		}
+		oldest = min(oldest, ix.cal.Start(ix.kept))
+	}
+	e.keepFacts(slices.DeleteFunc(slices.Clone(e.facts), func(f fact) bool {
+		return f.What != Opening && f.What != Closing && max(f.From, f.Until) < oldest
+	}))
+}
+
+// enforce brings the facts into force for the series that the fact matches, and
+// makes the looks again that they change: those over [from, until).
+func (e *Engine) enforce(f *fact, from, until Instant) {
+	var changes, ofSums []change
+	for _, s := range e.matched(f) {
+		ix := s.indicator
+		s.dates = e.datesOf(ix, s.name)
+		s.forgetSums()
+		e.touch(s)
+		c := change{series: s, from: ix.firstFrom(from)}
+		switch {
+		case f.Kind == Reset:
+			e.rearm(s, f)
+			continue
+		case f.Kind == SignOff || f.Straddle:
+			continue
+		case f.Kind == OutOfService:
+			span := ix.touched(from, until)
+			c.from, c.to = span.from, span.to-1
+		case f.What == Opening || f.What == Closing:
+			c.to = ix.looked - 1
+		default:
+			c.to = c.from
+		}
+		changes = append(changes, c)
+		if f.Kind == OutOfService || f.What == Opening || f.What == Closing {
+			ofSums = e.changeSums(ofSums, s, c.from, c.to)
+		}
+	}
+	slices.SortFunc(ofSums, func(a, b change) int { return cmp.Compare(a.series.number, b.series.number) })
+	e.because = f.why()
+	for _, c := range append(changes, ofSums...) {
+		e.rerun(c)
+	}
+	e.because = ""
+}
+
+// rearm ends the run of what signals: the looks to come are about other counts,
+// and what they find is an alert of its own.
+func (e *Engine) rearm(s *series, f *fact) {
+	for w := range s.windows {
+		s.windows[w].hasMade = false
+	}
+	for d := range s.tails {
+		t := &s.tails[d]
+		if a := t.current; a != nil {
+			t.leave(s.indicator.looked)
+			e.step(a, life.Step{Kind: life.StepReturned, At: e.clock.Time(), By: f.By, Why: f.why()})
+		}
+		t.disarmed, t.quiet = false, 0
+	}
+}
+
+// changeSums sums the slots of the series' sums again.
+func (e *Engine) changeSums(list []change, s *series, from, to int64) []change {
+	for _, sum := range s.sums {
+		list = e.changeSum(list, sum, from, to)
+	}
+	return list
+}
+
+// why is what a step that follows from the fact gives as its reason.
+func (f *fact) why() string { return f.what() + " from " + at(f.From) }
+
+func (f *fact) what() string {
+	switch {
+	case f.Kind != Change:
+		return f.Kind.String()
+	case f.What == Opening || f.What == Closing:
+		return string(f.What)
+	}
+	return "change of " + string(f.What)
+}
+
+// reason is why looks come out differently at this moment.
+func (e *Engine) reason() string {
+	if e.because != "" {
+		return e.because
+	}
+	return "data corrected"
+}
+
+// forgetSums forgets the running sums of all windows.
+func (s *series) forgetSums() {
+	for w := range s.windows {
+		s.windows[w].running.ok = false
+	}
+}
+
+func (e *Engine) encodeFacts() json.RawMessage {
+	if e.factsJSON == nil && len(e.facts) > 0 {
+		data, err := json.Marshal(e.facts)
+		if err != nil {
+			panic(err) // a struct of plain fields
+		}
+		e.factsJSON = data
+	}
+	return e.factsJSON
+}
+
+func (e *Engine) restoreFacts(data json.RawMessage) error {
+	if len(data) == 0 {
+		return nil
+	}
+	if err := json.Unmarshal(data, &e.facts); err != nil {
+		return fmt.Errorf("monitor: reading the stored acts on series: %w", err)
+	}
+	return nil
+}
+
+// factsOf tells of the acts that hold for a series.
+func (e *Engine) factsOf(ix *indicator, series string) []Dated {
+	var all []Dated
+	for i := range e.facts {
+		f := &e.facts[i]
+		if !f.matches(series) || f.Kind == SignOff {
+			continue
+		}
+		what := f.what()
+		if f.Kind == OutOfService {
+			what += " until " + f.Until.in(ix.cfg.Zone).Format("2006-01-02 15:04")
+		}
+		all = append(all, Dated{f.From.in(ix.cfg.Zone), what + ", says " + f.By + ": " + f.Why})
+	}
+	return all
+}
