@@ -20,6 +20,7 @@ type Calendar struct {
 	every  config.Every
 	zone   *time.Location
 	length int64 // microseconds, for slots shorter than a day; else 0
+	even   int64 // the same, for all slots that are alike
 	shift  int64
 	// The slot last found, for the many observations of one day.
 	last               int64
@@ -40,18 +41,26 @@ func NewCalendar(every config.Every, zone *time.Location) *Calendar {
 		c.length = int64(every.N) * minute
 	case config.Hour:
 		c.length = int64(every.N) * hour
-	case config.Day, config.Week, config.Month, config.Year:
+	case config.Day, config.Week:
+		if zone == time.UTC { // whose days are all alike
+			c.even = day
+			if every.Unit == config.Week {
+				c.even, c.shift = 7*day, -4*day // from Monday 1970-01-05
+			}
+		}
+		return c
+	case config.Month, config.Year:
 		return c
 	}
 	_, offset := time.Date(2000, 1, 1, 0, 0, 0, 0, time.UTC).In(zone).Zone()
-	c.shift = floorMod(int64(offset)*1e6, c.length)
+	c.shift, c.even = floorMod(int64(offset)*1e6, c.length), c.length
 	return c
 }
 
 // Start returns when the slot begins; it ends when the next one begins.
 func (c *Calendar) Start(slot int64) Instant {
-	if c.length > 0 {
-		return Instant(slot*c.length - c.shift)
+	if c.even > 0 {
+		return Instant(slot*c.even - c.shift)
 	}
 	if c.lastStart < c.lastEnd {
 		switch slot {
@@ -77,8 +86,8 @@ func (c *Calendar) Start(slot int64) Instant {
 
 // Slot returns the slot that holds the moment.
 func (c *Calendar) Slot(at Instant) int64 {
-	if c.length > 0 {
-		return floorDiv(int64(at)+c.shift, c.length)
+	if c.even > 0 {
+		return floorDiv(int64(at)+c.shift, c.even)
 	}
 	if at < c.lastStart || at >= c.lastEnd {
 		slot := c.search(at)

@@ -267,3 +267,21 @@ func TestStepsCountFromMonday(t *testing.T) {
 		}
 	}
 }
+
+// TestCalendarOfUTC holds the quick way over days and weeks of UTC against the
+// civil one, which other zones take.
+func TestCalendarOfUTC(t *testing.T) {
+	likeUTC := time.FixedZone("like UTC", 0)
+	for _, every := range []config.Every{{N: 1, Unit: config.Day}, {N: 1, Unit: config.Week}} {
+		quick, civil := NewCalendar(every, time.UTC), NewCalendar(every, likeUTC)
+		for _, year := range []int{1, 1599, 1899, 1969, 1970, 2000, 2026, 9998} {
+			for n := range 40 {
+				at := InstantOf(time.Date(year, 12, 20+n, 0, 0, 0, 0, time.UTC)) - Instant(n%3)
+				slot := civil.Slot(at)
+				if quick.Slot(at) != slot || quick.Start(slot) != civil.Start(slot) || quick.Start(slot+9) != civil.Start(slot+9) {
+					t.Fatalf("%v at %v: slot %d from %d, want %d from %d", every, at.Time(), quick.Slot(at), quick.Start(slot), slot, civil.Start(slot))
+				}
+			}
+		}
+	}
+}

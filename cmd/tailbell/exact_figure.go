@@ -28,7 +28,6 @@ type unitsFigure struct {
 	kinds   map[bool]bool // rates or proportions
 	targets map[float64]bool
 	known   int // rows with a known baseline
-	failed  error
 }
 
 // and returns a function that gathers each row before the next one takes it.

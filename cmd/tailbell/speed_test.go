@@ -101,6 +101,18 @@ func scipy(t *testing.T, path string, series int) scipyLooks {
 	return s
 }
 
+// speedRead reads the history, on one core.
+func speedRead(t *testing.T, path string) (*replay.Tape, time.Duration) {
+	t.Helper()
+	runtime.GC()
+	before := processorTime()
+	tape := &replay.Tape{}
+	if _, err := history.Read(t.Context(), []string{path}, history.Options{Zone: time.UTC, Tape: tape, KeepsIDs: func(string) bool { return false }}); err != nil {
+		t.Fatal(err)
+	}
+	return tape, processorTime() - before
+}
+
 // speedRun plays a tape on one core.
 func speedRun(t *testing.T, tape *replay.Tape, until monitor.Instant, windows string, chances bool) (*replay.Result, time.Duration) {
 	t.Helper()
@@ -128,12 +140,7 @@ func TestSpeed(t *testing.T) {
 	path, until := speedHistory(t, series, days)
 	theirs := scipy(t, path, series)
 	defer runtime.GOMAXPROCS(runtime.GOMAXPROCS(1))
-	before := processorTime()
-	tape := &replay.Tape{}
-	if _, err := history.Read(t.Context(), []string{path}, history.Options{Zone: time.UTC, Tape: tape, KeepsIDs: func(string) bool { return false }}); err != nil {
-		t.Fatal(err)
-	}
-	read := processorTime() - before
+	tape, read := speedRead(t, path)
 	const three = `"7d", "28d", "91d"`
 	r, all := speedRun(t, tape, until, three, true)
 	ours := r.Chances[0]
@@ -143,12 +150,25 @@ func TestSpeed(t *testing.T) {
 	if !*speed {
 		return
 	}
+	// The best of several of each: the machine does other things too.
 	_, decisions := speedRun(t, tape, until, three, false)
 	// A look in 91 days, but every row read into its slot: what is not a
 	// decision.
 	_, slots := speedRun(t, tape, until, `{ span = "91d", step = "91d" }`, false)
+	for range 4 {
+		again := scipy(t, path, series)
+		theirs.Read, theirs.P = min(theirs.Read, again.Read), min(theirs.P, again.P)
+		_, x := speedRead(t, path)
+		read = min(read, x)
+		_, x = speedRun(t, tape, until, three, true)
+		all = min(all, x)
+		_, x = speedRun(t, tape, until, three, false)
+		decisions = min(decisions, x)
+		_, x = speedRun(t, tape, until, `{ span = "91d", step = "91d" }`, false)
+		slots = min(slots, x)
+	}
 	looks := float64(ours.Looks)
-	text := fmt.Sprintf("%d rows, %.0f looks, processor time on one core:\n", tape.Len(), looks)
+	text := fmt.Sprintf("%d rows, %.0f looks, processor time on one core, the best of five:\n", tape.Len(), looks)
 	text += fmt.Sprintf("  SciPy:    %.2f s to read rows, %.2f s for the p-values: %.2f s\n", theirs.Read, theirs.P, theirs.Read+theirs.P)
 	text += fmt.Sprintf("  Tailbell: %.2f s to read rows, %.2f s for slots, looks, alerts and p-values: %.2f s\n", read.Seconds(), all.Seconds(), (read + all).Seconds())
 	text += fmt.Sprintf("  as fast:  %.2f times over all, %.2f times beyond reading\n", (theirs.Read+theirs.P)/(read+all).Seconds(), theirs.P/all.Seconds())
