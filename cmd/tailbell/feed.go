@@ -24,7 +24,7 @@ func newFeedCommand() *cobra.Command {
 	c := &cobra.Command{
 		Use:   "feed FILE...",
 		Short: "Publish files of observations and acts into the stream",
-		Long: `Publishes CSV or newline-delimited JSON files ("-" is standard input) into the
+		Long: `Publishes CSV, newline-delimited JSON or Parquet files ("-" is standard input) into the
 stream, in the order in which their rows became known. With or without a running
 daemon: if one runs, feed waits until it has read them and says what became of
 them; if none runs, feed starts the bus itself, and the daemon reads on when it is
