@@ -16,6 +16,9 @@ type edges struct {
 	u   usual
 	// at holds the edges by count, NaN where one is not known yet.
 	at []float64
+	// sure holds, by count, the grains of exposure beyond which a look surely
+	// does not signal: more in the upper tail, fewer in the lower one.
+	sure []uint64
 	// chances are p-values that were asked for, each in a place by its key.
 	chances []keptChance
 }
@@ -83,6 +86,7 @@ func (x *edges) signals(o *opportunity, events int64) (lit, sure bool) {
 	case edge == asked:
 		edge = x.find(events, o.weighted)
 		x.at[events] = edge
+		x.setSure(events, edge)
 	}
 	room := nearEdge * edge
 	switch {

@@ -77,12 +77,14 @@ func (ix *indicator) quickLook(s *series, b *config.Baseline, w, in int, boundar
 	if r.to != boundary || t.known != length || t.exposure.Hi != 0 || t.exposure.Lo == 0 || t.exposure.Lo >= 1<<52 {
 		return false
 	}
-	weighted := float64(t.exposure.Lo) / pow10[ix.cfg.GrainDigits]
-	limit := s.limitsAt(ix.cfg, w, boundary)
-	if ix.cfg.Upper && t.events > 0 && limit[upper] > 0 && !ws.edges[upper].clear(b, limit[upper], upper, t.events, weighted) {
+	limit := [2]float64{ix.cfg.PLimit, ix.cfg.PLimit}
+	if ix.cfg.Allowance != nil {
+		limit = s.limitsAt(ix.cfg, w, boundary)
+	}
+	if ix.cfg.Upper && t.events > 0 && limit[upper] > 0 && !ws.edges[upper].clear(b, limit[upper], t) {
 		return false
 	}
-	return !ix.cfg.Lower || limit[lower] <= 0 || ws.edges[lower].clear(b, limit[lower], lower, t.events, weighted)
+	return !ix.cfg.Lower || limit[lower] <= 0 || ws.edges[lower].clear(b, limit[lower], t)
 }
 
 // move moves the sum on by one slot.
@@ -100,18 +102,38 @@ func (r *running) move(in, out *cell, needs sides) {
 	r.from, r.to = r.from+1, r.to+1
 }
 
-// clear reports whether so many events in so much exposure surely do not
-// signal, by an edge that is known already.
-func (x *edges) clear(b *config.Baseline, limit float64, d direction, events int64, weighted float64) bool {
-	if x == nil || x.key.base != b || x.key.limit != limit || events >= int64(len(x.at)) {
+// clear reports whether the window surely does not signal, by an edge that is
+// known already.
+func (x *edges) clear(b *config.Baseline, limit float64, t *tally) bool {
+	if x == nil || x.key.base != b || x.key.limit != limit || t.events >= int64(len(x.sure)) {
 		return false
 	}
-	edge := x.at[events]
-	if math.IsNaN(edge) || edge == asked || math.IsInf(edge, 1) {
-		return false
+	if x.key.d == upper {
+		return t.exposure.Lo > x.sure[t.events]
 	}
-	if d == upper {
-		return weighted > edge+nearEdge*edge
+	return t.exposure.Lo < x.sure[t.events]
+}
+
+// setSure notes how much exposure is surely clear of an edge.
+func (x *edges) setSure(events int64, edge float64) {
+	for int64(len(x.sure)) <= events {
+		x.sure = append(x.sure, x.never())
 	}
-	return weighted < edge-nearEdge*edge
+	if math.IsInf(edge, 1) {
+		return
+	}
+	const most = 1 << 52 // up to which grains are exact as floating-point numbers
+	if x.key.d == upper {
+		x.sure[events] = uint64(min(most, math.Ceil((edge+2*nearEdge*edge)*pow10[x.u.cfg.GrainDigits])+1))
+	} else {
+		x.sure[events] = uint64(max(0, math.Floor((edge-2*nearEdge*edge)*pow10[x.u.cfg.GrainDigits])-1))
+	}
+}
+
+// never is a bound that no exposure is clear of.
+func (x *edges) never() uint64 {
+	if x.key.d == upper {
+		return math.MaxUint64
+	}
+	return 0
 }
