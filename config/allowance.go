@@ -8,17 +8,6 @@ import (
 	"strings"
 )
 
-// arrivalReady says whether the engine makes arrival looks. Until then a set-up
-// that asks for them is read, and refused.
-const arrivalReady = false
-
-// refuseUnready refuses a key that is read but not in use yet.
-func (s section) refuseUnready(name, mend string) {
-	if s.unready {
-		s.fault(name, "is not available yet", mend)
-	}
-}
-
 // usualReserve is the share of an indicator's allowance that is kept for
 // series yet to come unless said otherwise.
 const usualReserve = 0.1

@@ -8,52 +8,27 @@ import (
 	"testing"
 )
 
-// parseReady reads a set-up as if the engine kept allowances.
-func parseReady(t *testing.T, file string) (*Setup, error) {
+// parseFile reads a set-up.
+func parseFile(t *testing.T, file string) (*Setup, error) {
 	t.Helper()
 	text, err := os.ReadFile(file)
 	if err != nil {
 		t.Fatal(err)
 	}
-	return parse(text, &collector{file: file[strings.LastIndex(file, "/")+1:]})
+	return Parse(text, file[strings.LastIndex(file, "/")+1:])
 }
 
 func TestAllowanceFaults(t *testing.T) {
-	s, err := parseReady(t, "testdata/allowance/faults.toml")
+	s, err := parseFile(t, "testdata/allowance/faults.toml")
 	if err == nil || s != nil {
 		t.Fatalf("no fault found: %v", s)
 	}
 	compareGolden(t, "testdata/allowance/faults.txt", err.Error()+"\n")
 }
 
-// TestUnready checks that what the engine can't do is refused by one switch.
-func TestUnready(t *testing.T) {
-	const file = "testdata/allowance/unready.toml"
-	if s, err := parseReady(t, file); err != nil || s.Indicators[0].Allowance == nil || !s.Indicators[0].ArrivalLooks {
-		t.Errorf("ready, but %v, %v", s, err)
-	}
-	text, err := os.ReadFile(file)
-	if err != nil {
-		t.Fatal(err)
-	}
-	s, err := parse(text, &collector{file: "unready.toml", unready: true})
-	var faults Faults
-	if !errors.As(err, &faults) || len(faults) != 1 || s != nil {
-		t.Errorf("not ready, but %v, %v", s, err)
-	}
-	for _, f := range faults {
-		if !strings.Contains(f.Problem, "not available yet") {
-			t.Error(f)
-		}
-	}
-	if _, err := Parse(text, "unready.toml"); (err == nil) != arrivalReady {
-		t.Errorf("Parse: %v", err)
-	}
-}
-
 // TestAllowance describes set-ups with allowances, and doubts them.
 func TestAllowance(t *testing.T) {
-	s, err := parseReady(t, "testdata/allowance/sound.toml")
+	s, err := parseFile(t, "testdata/allowance/sound.toml")
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -86,7 +61,7 @@ func TestAllowance(t *testing.T) {
 }
 
 func TestCompareAllowance(t *testing.T) {
-	before, err := parseReady(t, "testdata/allowance/sound.toml")
+	before, err := parseFile(t, "testdata/allowance/sound.toml")
 	if err != nil {
 		t.Fatal(err)
 	}

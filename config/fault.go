@@ -63,8 +63,6 @@ func (f Faults) Error() string {
 type collector struct {
 	file   string
 	faults Faults
-	// unready refuses what refuseUnready is asked about.
-	unready bool
 }
 
 func (c *collector) add(n *node, key, problem, mend string) {

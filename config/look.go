@@ -112,9 +112,6 @@ func (s section) readLooks() (slot, arrival bool) {
 			arrival = true
 		}
 	}
-	if arrival {
-		s.refuseUnready("looks", `write looks = "slot"`)
-	}
 	return slot, arrival
 }
 
@@ -127,9 +124,20 @@ func (s section) checkArrival(in *Indicator) {
 	if in.Events != Each {
 		s.fault("looks", "arrival looks need the moment of each event, and counts are reported for whole slots", `write events = "each", or looks = "slot"`)
 	}
+	switch in.Every.Unit {
+	case Month, Year:
+		s.fault("looks", "a span that ends at an event has a fixed length, and months and years have none", `write e.g. every = "1d" and windows in days, or looks = "slot"`)
+	case Minute, Hour, Day, Week:
+	}
+	for i := range in.Windows {
+		if w := &in.Windows[i]; w.Step > 1 && !in.SlotLooks {
+			s.fault("windows", fmt.Sprintf("%q has a step, and without looks at slots it is looked at when events come alone", w.Name), `leave the step out, or add "slot" to looks`)
+			break
+		}
+	}
 	switch {
 	case in.Measure == Proportion:
-		s.fault("looks", "arrival looks need exposure at every moment, and a proportion has trials only", `write looks = "slot"`)
+		s.fault("looks", "arrival looks need exposure at every moment, and a proportion has trials only: its last n trials can't be looked at yet", `write looks = "slot"`)
 	case in.Exposure == Reported:
 		s.fault("looks", "arrival looks need exposure at every moment, and it is reported for whole slots",
 			`write exposure = "clock" or "census", or looks = "slot"`)

@@ -30,7 +30,7 @@ const (
 // Relative paths are left as they are written. The error is of type Faults and
 // lists everything that is wrong; file is only the name that it gives.
 func Parse(text []byte, file string) (*Setup, error) {
-	return parse(text, &collector{file: file, unready: !arrivalReady})
+	return parse(text, &collector{file: file})
 }
 
 func parse(text []byte, c *collector) (*Setup, error) {

@@ -27,7 +27,9 @@ type alert struct {
 	frozen bool
 	// opening and worst are the looks whose evidence the record holds.
 	opening, worst lookKey
-	worstLog10P    float64
+	// openingAt and worstAt are what those were made at.
+	openingAt, worstAt occasion
+	worstLog10P        float64
 	// pending says that its evidence was corrected at the present moment: the
 	// step is taken when the clock moves, one for all that came at once.
 	pending bool
@@ -58,18 +60,18 @@ func (e *Engine) open(s *series, d direction, looks []look, opening look, at Ins
 	t := &s.tails[d]
 	t.opened++
 	t.quiet = 0
-	due := ix.due(opening.boundary).Time()
+	due := ix.dueOf(&opening).Time()
 	a := &alert{
 		series: s, tail: d, first: opening.boundary, last: ongoing,
-		opening: lookKey{opening.boundary, opening.window},
+		opening: lookKey{opening.boundary, opening.window}, openingAt: opening.occasion,
 		record: life.Record{
 			ID:        alertID(s.name, d, due, t.opened),
 			Indicator: ix.cfg.Name, Title: ix.cfg.Title, Series: s.name, Direction: d.name(),
 			Number: t.opened, Opened: due, Late: late, Zone: ix.cfg.ZoneName, Caution: Caution,
 		},
 	}
-	a.record.Opening = e.evidence(s, d, opening.boundary, opening.window)
-	a.record.IDs, a.record.MoreIDs = s.idsIn(ix.spanFrom(s, opening.boundary, ix.places[opening.window].Slots), opening.boundary)
+	a.record.Opening = e.evidenceOf(s, d, a.opening, a.openingAt)
+	a.record.IDs, a.record.MoreIDs = e.idsOf(s, &opening)
 	for i := range looks {
 		t.join(&looks[i], a, d)
 	}
@@ -96,7 +98,7 @@ func (t *tail) join(l *look, a *alert, d direction) {
 // asLit is what is kept of a look that signals.
 func (l *look) asLit(d direction, a *alert) litLook {
 	return litLook{
-		boundary: l.boundary, window: l.window, events: l.events, exposure: l.exposure,
+		boundary: l.boundary, occasion: l.occasion, window: l.window, events: l.events, exposure: l.exposure,
 		log10p: l.log10p[d], at: l.at, alert: a,
 	}
 }
@@ -121,24 +123,24 @@ func (e *Engine) revalue(a *alert) {
 		if worst < 0 || l.log10p < t.lit[worst].log10p {
 			worst = i
 		}
-		if (lookKey{l.boundary, l.window}) == a.opening {
+		if (lookKey{l.boundary, l.window}) == a.opening && l.occasion == a.openingAt {
 			openingLit = true
-			a.record.Opening = e.evidence(a.series, a.tail, l.boundary, l.window)
+			a.record.Opening = e.evidenceOf(a.series, a.tail, a.opening, a.openingAt)
 		}
 	}
 	if worst < 0 {
 		if a.worst.boundary > frozen && openingLit {
-			a.worst, a.worstLog10P, a.record.Worst = a.opening, a.record.Opening.Log10P, a.record.Opening
+			a.worst, a.worstAt, a.worstLog10P, a.record.Worst = a.opening, a.openingAt, a.record.Opening.Log10P, a.record.Opening
 		}
 		return
 	}
 	if !openingLit {
-		a.opening = lookKey{t.lit[first].boundary, t.lit[first].window}
-		a.record.Opening = e.evidence(a.series, a.tail, a.opening.boundary, a.opening.window)
+		a.opening, a.openingAt = lookKey{t.lit[first].boundary, t.lit[first].window}, t.lit[first].occasion
+		a.record.Opening = e.evidenceOf(a.series, a.tail, a.opening, a.openingAt)
 	}
 	if l := &t.lit[worst]; a.worst.boundary > frozen || l.log10p < a.worstLog10P {
-		a.worst, a.worstLog10P = lookKey{l.boundary, l.window}, l.log10p
-		a.record.Worst = e.evidence(a.series, a.tail, l.boundary, l.window)
+		a.worst, a.worstAt, a.worstLog10P = lookKey{l.boundary, l.window}, l.occasion, l.log10p
+		a.record.Worst = e.evidenceOf(a.series, a.tail, a.worst, a.worstAt)
 	}
 }
 

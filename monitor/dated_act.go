@@ -180,6 +180,7 @@ func (e *Engine) enforce(f *fact, from, until Instant) {
 		s.forgetSums()
 		e.touch(s)
 		c := change{series: s, from: ix.firstFrom(from)}
+		c.weighed = true
 		switch {
 		case f.Kind == Reset:
 			e.rearm(s, f)

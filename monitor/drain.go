@@ -35,6 +35,7 @@ func (e *Engine) Drain() Changes {
 		size += len(patch)
 		c.Series = append(c.Series, SeriesChange{s.number, patch})
 		s.touched, s.fresh, s.dirty = false, false, s.dirty[:0]
+		s.drainArrivals()
 	}
 	c.IDs, c.RewrittenGenerations = e.ids.drain()
 	for _, a := range e.changed {

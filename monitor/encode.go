@@ -25,10 +25,12 @@ const idVersion = 1
 
 // With flagNamed what older patches and states say of the series holds no more;
 // flagRetired makes it a stub, of which only unpaired and the
-// numbers of alerts follow.
+// numbers of alerts follow. With flagArrivals what looks at arrivals need follows
+// the head.
 const (
-	flagNamed   = 1
-	flagRetired = 2
+	flagNamed    = 1
+	flagRetired  = 2
+	flagArrivals = 4
 )
 
 // errEncoding says that stored bytes are not what this program wrote.
@@ -43,6 +45,9 @@ func (s *series) encode(whole bool) []byte {
 			b = binary.AppendUvarint(b, uint64(s.tails[d].opened))
 		}
 		return b
+	}
+	if s.arrivals != nil {
+		b[1] |= flagArrivals
 	}
 	if whole || s.fresh {
 		b[1] |= flagNamed
@@ -64,6 +69,7 @@ func (s *series) encode(whole bool) []byte {
 	}
 	b = s.encodeReferences(b)
 	b = s.encodeLimits(b)
+	b = s.encodeArrivals(b, whole)
 	if s.sum != nil {
 		return binary.AppendUvarint(b, 0) // its cells follow from its members'
 	}

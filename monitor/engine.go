@@ -54,6 +54,7 @@ type Engine struct {
 	// pending are alerts whose evidence was corrected at the present moment.
 	pending []*alert
 	wakes   wakes
+	comings comings
 	account Account
 	// facts are the acts on series that hold, and factsJSON is how they are
 	// stored; because is why looks are being made again, "" where data changed.
@@ -197,7 +198,7 @@ func (e *Engine) advance(to Instant) {
 	}
 	e.settleAll()
 	for {
-		e.awake(min(to, e.nextDue-1), to)
+		e.arrive(min(to, e.nextDue-1), to)
 		if e.nextDue > to {
 			break
 		}
@@ -238,7 +239,7 @@ func (e *Engine) NextDue() (Instant, bool) {
 			due = min(due, ix.nextDue)
 		}
 	}
-	due = min(due, e.nextWake())
+	due = min(due, e.nextWake(), e.nextComing())
 	if len(e.pending) > 0 {
 		const soon = 1_000_000 // a second, in which more of the same may come
 		due = min(due, e.clock+soon)

@@ -16,7 +16,6 @@ import (
 func (e *Engine) evidence(s *series, d direction, boundary int64, window int) life.Evidence {
 	ix := s.indicator
 	ep := ix.epochAt(boundary)
-	cfg := ep.cfg
 	from := ix.spanFrom(s, boundary, ix.places[window].Slots)
 	at := ix.due(boundary)
 	if i, ok := s.tails[d].litAt(boundary, window); ok {
@@ -28,29 +27,47 @@ func (e *Engine) evidence(s *series, d direction, boundary int64, window int) li
 		panic("monitor: evidence of a look without a baseline")
 	}
 	o := ix.opportunity(s, &u, &t, from, boundary, at)
-	ev := life.Evidence{
-		Window: ix.places[window].Name,
-		From:   ix.cal.Start(from).in(cfg.Zone), To: ix.cal.Start(boundary).in(cfg.Zone), Due: ix.due(boundary).in(cfg.Zone),
-		Events: t.events, Exposure: t.exposure.decimal(cfg.GrainDigits), Unit: cfg.Unit,
-		EventNoun: cfg.EventNoun, LateEvents: t.late, Provisional: t.provisional,
-		Per: cfg.Per, Alpha: cfg.Alpha, Chosen: true,
-		Test: testName(&u, &o), Limit: u.limit[d],
-		SetupVersion: ep.version, SetupDigest: ep.digest,
-	}
-	if o.weighted != o.exposure {
-		ev.Weighted = &o.weighted
-	}
-	fillTest(&ev, &u, d, &o)
-	fillRate(&ev, &u, &o)
-	ev.RatioKind, ev.Ratio, ev.RatioLower, ev.RatioUpper = ratioTo(&ev, &u, u.ref, &o)
-	ev.Baseline = ix.baselineOf(s, &u, &ev, &o)
+	ev := e.tell(s, d, ep, boundary, &seen{window, ix.cal.Start(from), ix.cal.Start(boundary), ix.due(boundary), t, u, o})
 	ev.SignedOff, ev.AfterSignOff = ix.isSigned(s, from, boundary), t.revised
 	if length := int64(ix.places[window].Slots); boundary-from < length {
 		ev.Shortened = length - (boundary - from)
 	}
 	ev.Carriers, ev.MoreCarriers = ix.carriers(s, from, boundary)
+	return ev
+}
+
+// seen is what a look of a window saw between two moments, and how it weighed
+// that.
+type seen struct {
+	window        int
+	from, to, due Instant
+	tally         tally
+	u             usual
+	o             opportunity
+}
+
+// tell says what a look saw, under what was in force at a boundary.
+func (e *Engine) tell(s *series, d direction, ep *epoch, boundary int64, x *seen) life.Evidence {
+	cfg, u, o := ep.cfg, &x.u, &x.o
+	ev := life.Evidence{
+		Window: s.indicator.places[x.window].Name,
+		From:   x.from.in(cfg.Zone), To: x.to.in(cfg.Zone), Due: x.due.in(cfg.Zone),
+		Events: x.tally.events, Exposure: x.tally.exposure.decimal(cfg.GrainDigits), Unit: cfg.Unit,
+		EventNoun: cfg.EventNoun, LateEvents: x.tally.late, Provisional: x.tally.provisional,
+		Per: cfg.Per, Alpha: cfg.Alpha, Chosen: true,
+		Test: testName(u, o), Limit: u.limit[d],
+		SetupVersion: ep.version, SetupDigest: ep.digest,
+	}
+	if o.weighted != o.exposure {
+		weighted := o.weighted
+		ev.Weighted = &weighted
+	}
+	fillTest(&ev, u, d, o)
+	fillRate(&ev, u, o)
+	ev.RatioKind, ev.Ratio, ev.RatioLower, ev.RatioUpper = ratioTo(&ev, u, u.ref, o)
+	ev.Baseline = s.indicator.baselineOf(s, u, &ev, o)
 	ev.Allowance = e.allowanceOf(s, cfg, boundary)
-	ev.Recompute = recompute(&ev, &u, d)
+	ev.Recompute = recompute(&ev, u, d)
 	return ev
 }
 

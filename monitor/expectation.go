@@ -31,6 +31,11 @@ func (e *Engine) solutionOf(s *series, ep *epoch, boundary int64, perYear float6
 		return nil
 	}
 	p := ix.planOf(&u, boundary, x, perYear)
+	if s.sum != nil { // sums are looked at when slots have settled
+		for i := range p.Windows {
+			p.Windows[i].Arrival = false
+		}
+	}
 	var l *allowance.Limits
 	if u.base.Delay == nil || len(p.Known) > 0 {
 		var err error
@@ -66,6 +71,12 @@ func (ep *epoch) inPlace(x solution) solution {
 		last = max(last, p.place)
 	}
 	placed := solution{alpha: make([]float64, 2*last+2), here: x.here}
+	if x.arrival != nil {
+		placed.arrival = make([]float64, last+1)
+		for i, p := range ep.windows {
+			placed.arrival[p.place] = x.arrival[i]
+		}
+	}
 	for i, p := range ep.windows {
 		placed.alpha[2*p.place], placed.alpha[2*p.place+1] = x.alpha[2*i], x.alpha[2*i+1]
 	}
@@ -75,21 +86,27 @@ func (ep *epoch) inPlace(x solution) solution {
 // solutionFrom takes the limits from a solved plan. Where no count comes near a
 // limit within what was planned for, it is capped: were it kept, a little more
 // exposure would let counts signal that are not rare at all. A run of looks that
-// signal is not longer, on average, than its window.
+// signal is not longer, on average, than its window, nor is the time for which a
+// span that is looked at when events come holds that many.
 func solutionFrom(p *allowance.Plan, l *allowance.Limits) solution {
 	x := solution{alpha: make([]float64, 2*len(p.Windows)), here: l.PerYear}
 	for _, part := range l.Parts {
-		if part.Arrival {
+		most := float64(p.Windows[part.Window].Slots) * p.PerYear / p.SlotsPerYear
+		if !part.Arrival {
+			x.alpha[2*part.Window+int(part.Tail)] = min(part.Alpha, most)
 			continue
 		}
-		most := float64(p.Windows[part.Window].Slots) * p.PerYear / p.SlotsPerYear
-		x.alpha[2*part.Window+int(part.Tail)] = min(part.Alpha, most)
+		if x.arrival == nil {
+			x.arrival = make([]float64, len(p.Windows))
+		}
+		x.arrival[part.Window] = min(part.Alpha, most)
 	}
 	return x
 }
 
 // plain are limits that hold whatever the law: a look signals at most so often
-// as its limit says, and every signalling look is paid for.
+// as its limit says, and every signalling look is paid for. How many looks there
+// are at arrivals is not bounded: those never signal.
 func plain(p *allowance.Plan) solution {
 	looks := 0.0
 	tails := 0.0
@@ -100,10 +117,16 @@ func plain(p *allowance.Plan) solution {
 		tails++
 	}
 	for _, w := range p.Windows {
+		if !w.Slot {
+			continue
+		}
 		looks += tails * (p.SlotsPerYear/float64(w.Step) + p.Starts)
 	}
 	x := solution{alpha: make([]float64, 2*len(p.Windows)), here: p.PerYear}
 	for i := range p.Windows {
+		if !p.Windows[i].Slot {
+			continue
+		}
 		limit := min(p.PerYear/looks, 0.49)
 		if p.Upper {
 			x.alpha[2*i] = limit
@@ -134,7 +157,7 @@ func (ix *indicator) planOf(u *usual, boundary int64, x expectation, perYear flo
 		p.Known = ix.knownAt(b.Delay, boundary)
 	}
 	for _, w := range cfg.Windows {
-		p.Windows = append(p.Windows, allowance.Window{Slots: w.Slots, Step: w.Step, Slot: true})
+		p.Windows = append(p.Windows, allowance.Window{Slots: w.Slots, Step: w.Step, Slot: cfg.SlotLooks, Arrival: cfg.ArrivalLooks})
 	}
 	return p
 }

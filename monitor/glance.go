@@ -60,11 +60,15 @@ func (e *Engine) glance(s *series) Glance {
 			continue
 		}
 		ep := ix.epochAt(b)
-		l := ix.look(s, ep, p.place, b, e.momentOf(s, b, p.place))
-		if l.status == filling {
+		var v View
+		if !ep.cfg.SlotLooks {
+			v = e.arrivalViewAt(s, p.place, e.latestArrival(s))
+		} else if l := ix.look(s, ep, p.place, b, e.momentOf(s, b, p.place)); l.status != filling {
+			v = ix.view(s, ep, &l)
+		}
+		if v.Window == "" {
 			continue
 		}
-		v := ix.view(s, ep, &l)
 		direction, log10p := sharper(&v)
 		if g.Look.Window == "" || log10p < g.Log10P {
 			g.Look, g.Direction, g.Log10P = v, direction, log10p
@@ -116,6 +120,9 @@ func (e *Engine) Standing(series, window string) (life.Evidence, bool) {
 	p := ix.named(window)
 	if p == nil {
 		return life.Evidence{}, false
+	}
+	if !ix.cfg.SlotLooks {
+		return e.arrivalStanding(s, p.place)
 	}
 	w, b := p.place, ix.latest(p.Window)
 	if b < p.since {

@@ -123,6 +123,7 @@ const (
 	TooFarAhead     Reason = "too_far_ahead"     // lies further in the future than is allowed
 	SpansSlots      Reason = "spans_slots"       // events or trials over several slots
 	InstantExposure Reason = "instant_exposure"  // exposure over an instant
+	NeedsInstant    Reason = "needs_instant"     // events over an interval, where looks are made at their instants
 	FinerThanGrain  Reason = "finer_than_grain"  // exposure with more decimals than are held
 	ExposureNotUsed Reason = "exposure_not_used" // exposure for an indicator that takes it from the clock
 	TooBig          Reason = "too_big"           // a sum that would not fit

@@ -26,6 +26,9 @@ type solution struct {
 	// alpha is the limit on p by place of the window and direction, 0 where nothing
 	// signals.
 	alpha []float64
+	// arrival is that on looks at arrivals, by window; none where there are no
+	// such looks.
+	arrival []float64
 	// here is how many false alerts a year it is predicted to bring.
 	here float64
 }
@@ -83,6 +86,7 @@ func (e *Engine) allot(ix *indicator, ep *epoch, boundary int64) {
 			e.setLimits(s, ep, boundary, share, false)
 		case len(s.limits) == 0:
 			e.draw(s, ep, boundary)
+			e.firstLimits(s)
 		}
 	}
 }
@@ -242,6 +246,9 @@ func (ix *indicator) totalAt(boundary int64) total {
 // share interns a solution.
 func (e *Engine) share(x solution) *solution {
 	key := x.encode(nil)
+	for _, a := range x.arrival {
+		key = appendFloat(key, a)
+	}
 	if known := e.solutions[string(key)]; known != nil {
 		return known
 	}

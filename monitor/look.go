@@ -49,6 +49,7 @@ func (s status) String() string {
 type look struct {
 	window   int
 	boundary int64
+	occasion occasion
 	status   status
 	at       Instant // when it was made: its due time, or the clock when re-run
 	tally
@@ -172,15 +173,7 @@ func (ix *indicator) test(s *series, l *look, u *usual, o *opportunity) {
 		return
 	}
 	held := &s.windows[l.window].edges
-	if u.cfg.Upper && u.limit[upper] > 0 && l.events > 0 && !farBelow(u, o, l.events) {
-		lit, sure := ix.edgesOf(&held[upper], u, upper, o).signals(o, l.events)
-		if lit || !sure {
-			p := newLaw(u, upper, o)
-			if l.lit[upper] = sure || exact.AtMost(p.Upper(l.events), u.limit[upper]); l.lit[upper] {
-				l.log10p[upper] = p.LogUpper(l.events) / math.Ln10
-			}
-		}
-	}
+	ix.testUpper(&held[upper], l, u, o)
 	if u.cfg.Lower && u.limit[lower] > 0 && !farAbove(u, o, l.events) {
 		lit, sure := ix.edgesOf(&held[lower], u, lower, o).signals(o, l.events)
 		if lit || !sure {
@@ -188,6 +181,21 @@ func (ix *indicator) test(s *series, l *look, u *usual, o *opportunity) {
 			if l.lit[lower] = sure || exact.AtMost(p.Lower(l.events), u.limit[lower]); l.lit[lower] {
 				l.log10p[lower] = p.LogLower(l.events) / math.Ln10
 			}
+		}
+	}
+}
+
+// testUpper is test for the upper tail, with the edges that the look before was
+// compared with.
+func (ix *indicator) testUpper(held **edges, l *look, u *usual, o *opportunity) {
+	if o.weighted == 0 || !u.cfg.Upper || u.limit[upper] <= 0 || l.events == 0 || farBelow(u, o, l.events) {
+		return
+	}
+	lit, sure := ix.edgesOf(held, u, upper, o).signals(o, l.events)
+	if lit || !sure {
+		p := newLaw(u, upper, o)
+		if l.lit[upper] = sure || exact.AtMost(p.Upper(l.events), u.limit[upper]); l.lit[upper] {
+			l.log10p[upper] = p.LogUpper(l.events) / math.Ln10
 		}
 	}
 }
@@ -234,6 +242,9 @@ func (ix *indicator) previous(s *series, window int, boundary int64) (int64, boo
 
 // entered counts the events in the window that no made look before it held.
 func (ix *indicator) entered(s *series, l *look) int64 {
+	if l.occasion.arrival {
+		return l.events // that of its own instant among them
+	}
 	from := ix.spanFrom(s, l.boundary, ix.places[l.window].Slots)
 	if b, ok := ix.previous(s, l.window, l.boundary); ok {
 		from = max(from, b)
@@ -242,8 +253,12 @@ func (ix *indicator) entered(s *series, l *look) int64 {
 	return t.events
 }
 
-// active reports whether the latest made look of any window in force signals.
+// active reports whether the latest made look at slots of any window in force
+// signals, or a span that is looked at when events come still does.
 func (s *series) active(d direction) bool {
+	if d == upper && s.arriving() {
+		return true
+	}
 	t := &s.tails[d]
 	for _, p := range s.indicator.now().windows {
 		if ws := &s.windows[p.place]; ws.hasMade {

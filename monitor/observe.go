@@ -184,6 +184,8 @@ func (ix *indicator) fits(o *Observation, from, to int64) (Reason, string) {
 		return ExposureNotUsed, fmt.Sprintf("indicator %q takes its exposure from the clock: leave exposure out", ix.cfg.Name)
 	case o.HasExposure && o.Instant && !proportion:
 		return InstantExposure, "exposure needs an interval: give start and end instead of at"
+	case ix.cfg.ArrivalLooks && o.Events > 0 && !o.Instant:
+		return NeedsInstant, fmt.Sprintf("indicator %q looks when events come: give at instead of start and end", ix.cfg.Name)
 	case from != to && o.HasEvents:
 		return SpansSlots, fmt.Sprintf("events can't be spread over %d slots of %s: send them slot by slot", to-from+1, ix.cfg.Every)
 	case from != to && proportion:
@@ -297,6 +299,8 @@ func (e *Engine) count(o *Observation, ix *indicator, key idKey, old *identified
 
 func merge(a, b change) []change {
 	b.from, b.to = min(a.from, b.from), max(a.to, b.to)
+	b.comes = b.comes && !slices.Contains(a.instants, b.came) // it was there before
+	b.instants, b.weighed = append(a.instants, b.instants...), a.weighed || b.weighed
 	return []change{b}
 }
 
@@ -358,9 +362,10 @@ func (e *Engine) add(c *contribution, id string, sign int) change {
 		}
 		e.touchSlot(s, slot)
 	}
-	change := e.reborn(s, from, to, sign)
-	change.revised = revised
-	return change
+	ch := e.reborn(s, from, to, sign)
+	ch.revised = revised
+	s.arrived(c, sign, &ch)
+	return ch
 }
 
 // carriedTo is the last slot that a change reaches: its own, or where levels

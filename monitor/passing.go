@@ -22,6 +22,7 @@ func (e *Engine) Findings() Findings {
 	f := Findings{Steps: e.steps, Refused: e.refused}
 	for _, s := range e.touched {
 		s.touched, s.fresh, s.dirty = false, false, s.dirty[:0]
+		s.drainArrivals()
 	}
 	for _, a := range e.changed {
 		a.dirty = false

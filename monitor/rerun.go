@@ -18,6 +18,20 @@ type change struct {
 	reborn bool
 	// revised says that a slot changed that had been signed off.
 	revised bool
+	arrivalChange
+}
+
+// arrivalChange is what a change means to looks at arrivals.
+type arrivalChange struct {
+	// instants are those at which events came or were taken back; came is the
+	// one that had none before, if comes.
+	instants []Instant
+	came     Instant
+	comes    bool
+	// weighed says that an exposure was reported or taken back, and exposed that
+	// what is exposed, or where the series begins, changed in [begin, end).
+	weighed, exposed bool
+	begin, end       Instant
 }
 
 // rerun makes the looks that a change touches again, each with the stanza in
@@ -25,13 +39,29 @@ type change struct {
 // as quiet ones.
 func (e *Engine) rerun(c change) {
 	s := c.series
-	ix := s.indicator
 	e.drawNow(s)
-	if c.from >= ix.looked {
-		return // nothing was looked at yet
+	arriving := e.lookAtArrivals(&c)
+	changed := e.relook(&c)
+	if len(arriving) > 0 {
+		changed[upper] = append(changed[upper], arriving...)
+		sortLooks(changed[upper])
 	}
-	c.to = ix.carriedTo(&c)
-	var changed [2][]look
+	for _, d := range bothTails {
+		if len(changed[d]) > 0 {
+			e.correct(s, d, changed[d])
+		}
+	}
+}
+
+// relook makes the looks at slots that a change touches again, and returns those
+// that came out differently.
+func (e *Engine) relook(c *change) (changed [2][]look) {
+	s := c.series
+	ix := s.indicator
+	if c.from >= ix.looked {
+		return changed // nothing was looked at yet
+	}
+	c.to = ix.carriedTo(c)
 	last := min(ix.looked, c.to+ix.longest)
 	if c.reborn {
 		last = ix.looked
@@ -45,7 +75,7 @@ func (e *Engine) rerun(c change) {
 			p := &ep.windows[i]
 			from := ix.spanFrom(s, boundary, p.Slots)
 			touched := from <= c.to || (c.reborn && from < c.birth)
-			if !touched || from < max(s.begin(boundary), p.whole) || !ix.looksAt(p.Window, boundary) {
+			if !touched || from < max(s.begin(boundary), p.whole) || !ep.cfg.SlotLooks || !ix.looksAt(p.Window, boundary) {
 				continue
 			}
 			l := ix.look(s, ep, p.place, boundary, e.clock)
@@ -58,11 +88,7 @@ func (e *Engine) rerun(c change) {
 			}
 		}
 	}
-	for _, d := range bothTails {
-		if len(changed[d]) > 0 {
-			e.correct(s, d, changed[d])
-		}
-	}
+	return changed
 }
 
 // renote keeps what a look that was made again has come to.
@@ -92,7 +118,7 @@ func (e *Engine) renote(s *series, l *look) {
 // differs reports whether the look is lit and was not, or the other way
 // round, or is lit by other evidence than before.
 func (t *tail) differs(l *look, d direction) bool {
-	i, was := t.litAt(l.boundary, l.window)
+	i, was := t.litOf(l)
 	if !was || !l.lit[d] {
 		return was != l.lit[d]
 	}
@@ -115,7 +141,7 @@ func (e *Engine) correct(s *series, d direction, looks []look) {
 	}
 	for i := range looks {
 		l := &looks[i]
-		at, was := t.litAt(l.boundary, l.window)
+		at, was := t.litOf(l)
 		if was && !l.lit[d] {
 			correct(t.lit[at].alert)
 			t.lit = slices.Delete(t.lit, at, at+1)
@@ -230,12 +256,15 @@ func sameEvidence(a, b *life.Evidence) bool {
 }
 
 // openLate opens an alert on the earliest of the looks that an event entered;
-// the later ones that signal join it.
+// the later ones that signal join it. It is late unless the slot of the event has
+// not settled: then the look, at an arrival, was made when the event came.
 func (e *Engine) openLate(s *series, d direction, stray, entered []look) {
-	first := entered[0].boundary
+	first := entered[0]
 	opening := strongest(slices.DeleteFunc(slices.Clone(entered), func(l look) bool {
-		return l.boundary != first
+		return l.boundary != first.boundary || l.occasion != first.occasion
 	}), d)
-	joined := slices.DeleteFunc(slices.Clone(stray), func(l look) bool { return l.boundary < first })
-	e.open(s, d, joined, opening, e.clock, true)
+	joined := slices.DeleteFunc(slices.Clone(stray), func(l look) bool {
+		return l.boundary < first.boundary || l.boundary == first.boundary && l.occasion.compare(first.occasion) < 0
+	})
+	e.open(s, d, joined, opening, e.clock, opening.boundary <= s.indicator.looked)
 }

@@ -37,6 +37,7 @@ func Restore(p Partition, snap *Snapshot, record func(id string) (life.Record, e
 			return nil, fmt.Errorf("monitor: restoring id %d: %w", i, err)
 		}
 	}
+	e.restoreComings()
 	e.reschedule()
 	e.rewakeAll()
 	return e, nil
@@ -164,7 +165,7 @@ func (s *series) derive() {
 	ix := s.indicator
 	for _, p := range ix.now().windows {
 		ws := &s.windows[p.place]
-		if ws.withheld != made || s.dates != nil || config.IsSum(s.name) {
+		if ws.withheld != made || s.dates != nil || config.IsSum(s.name) || !ix.cfg.SlotLooks {
 			continue
 		}
 		latest := ix.latest(p.Window)
@@ -186,7 +187,8 @@ func (e *Engine) overlay(s *series, data []byte) error {
 	if version != encodingVersion && version != withoutSignOff && version != withoutLimits {
 		return fmt.Errorf("%w: encoding %d is not known to this program", errEncoding, version)
 	}
-	switch flags := r.byte(); {
+	flags := r.byte()
+	switch {
 	case flags&flagRetired != 0:
 		*s = series{number: s.number, name: r.string(), retired: true, unpaired: r.int()}
 		for d := range s.tails {
@@ -214,6 +216,11 @@ func (e *Engine) overlay(s *series, data []byte) error {
 	s.limits = nil
 	if version != withoutLimits {
 		s.limits = r.limits(e)
+	}
+	if flags&flagArrivals != 0 {
+		r.arrivals(s, e)
+	} else {
+		s.arrivals = nil
 	}
 	for range r.length() {
 		c := r.cell(version)

@@ -26,7 +26,7 @@ func (e *Engine) lookAt(s *series, ep *epoch, boundary int64, due Instant) {
 	looks := e.looks[:0]
 	for i := range ep.windows {
 		p := &ep.windows[i]
-		if !ix.looksAt(p.Window, boundary) {
+		if !ep.cfg.SlotLooks || !ix.looksAt(p.Window, boundary) {
 			continue
 		}
 		l := ix.look(s, ep, p.place, boundary, due)
@@ -42,14 +42,17 @@ func (e *Engine) lookAt(s *series, ep *epoch, boundary int64, due Instant) {
 		}
 	}
 	e.looks = looks
-	if len(looks) == 0 {
+	stood := e.standAt(s, ep, boundary)
+	if len(looks) == 0 && !stood {
 		return
 	}
 	if s.quietAfter(looks) {
 		return
 	}
 	for _, d := range bothTails { // a tail that is watched no longer may still have to return
-		e.decide(s, d, looks, boundary, due)
+		if d == upper || len(looks) > 0 {
+			e.decide(s, d, looks, boundary, due)
+		}
 	}
 }
 
@@ -128,7 +131,7 @@ func (e *Engine) decide(s *series, d direction, looks []look, boundary int64, du
 	}
 	t.disarmed = false
 	if a := t.current; a != nil {
-		t.leave(boundary)
+		t.leave(s.indicator.leaving(s, boundary, due))
 		e.step(a, life.Step{Kind: life.StepReturned, At: due.Time()})
 	}
 	t.quiet = 0
@@ -181,9 +184,10 @@ func (e *Engine) worsen(s *series, d direction, lit []look, at Instant) {
 	if !down && !further {
 		return
 	}
-	evidence := e.evidence(s, d, l.boundary, l.window)
+	key := lookKey{l.boundary, l.window}
+	evidence := e.evidenceOf(s, d, key, l.occasion)
 	if l.log10p[d] < a.worstLog10P {
-		a.worst, a.worstLog10P, a.record.Worst = lookKey{l.boundary, l.window}, l.log10p[d], evidence
+		a.worst, a.worstAt, a.worstLog10P, a.record.Worst = key, l.occasion, l.log10p[d], evidence
 	}
 	e.step(a, life.Step{Kind: life.StepWorsened, At: at.Time(), Evidence: &evidence})
 }

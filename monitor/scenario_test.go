@@ -175,6 +175,7 @@ func renderStep(b *bytes.Buffer, n *life.Notice) {
 		for _, c := range e.Carriers {
 			fmt.Fprintf(b, "    carried by %s: %d in %s\n", c.Series, c.Events, c.Exposure)
 		}
+		renderWait(b, e)
 		renderBaseline(b, e)
 	}
 	if len(r.IDs) > 0 && n.Step.Kind == life.StepOpened {
@@ -183,6 +184,26 @@ func renderStep(b *bytes.Buffer, n *life.Notice) {
 	if s := r.Since; s != nil {
 		fmt.Fprintf(b, "    since %s to %s: %d in %s\n", s.From.Format("2006-01-02"), s.To.Format("2006-01-02"), s.Events, s.Exposure)
 	}
+}
+
+// renderWait writes how long the events took, of a look at an arrival.
+func renderWait(b *bytes.Buffer, e *life.Evidence) {
+	w := e.Wait
+	if w == nil {
+		return
+	}
+	const moment = "2006-01-02T15:04:05Z07:00"
+	fmt.Fprintf(b, "    %s to %s", e.From.Format(moment), e.To.Format(moment))
+	if w.Previous != nil {
+		fmt.Fprintf(b, ", one before at %s", w.Previous.Format(moment))
+	}
+	if w.Events > 0 {
+		fmt.Fprintf(b, ", %d since %s in %s, usual %.5g", w.Events, w.First.Format(moment), w.Exposure, w.Usual)
+	}
+	if w.P != nil {
+		fmt.Fprintf(b, ", p %.5g", *w.P)
+	}
+	b.WriteByte('\n')
 }
 
 // renderBaseline writes by what a look was judged, unless it is no more than a

@@ -1,6 +1,7 @@
 package monitor
 
 import (
+	"cmp"
 	"math"
 	"slices"
 
@@ -56,6 +57,8 @@ type series struct {
 	watched []watch
 	// next is the series that was asked for after this one the last time.
 	next *series
+	// arrivals are kept where looks are made at them, else nil.
+	arrivals *arrivals
 	// fresh says that no patch has named the series yet, or that what older
 	// ones say of it holds no more.
 	fresh bool
@@ -100,6 +103,7 @@ type tail struct {
 // litLook is one look that signals.
 type litLook struct {
 	boundary int64
+	occasion occasion
 	window   int
 	events   int64
 	exposure Quantity
@@ -115,16 +119,21 @@ func compareLit(a, b litLook) int {
 		}
 		return 1
 	}
-	return a.window - b.window
+	return cmp.Or(a.occasion.compare(b.occasion), a.window-b.window)
 }
 
-// litAt returns the index of the look among the lit ones.
+// litAt returns the index of the look at slots among the lit ones.
 func (t *tail) litAt(boundary int64, window int) (int, bool) {
 	return slices.BinarySearchFunc(t.lit, litLook{boundary: boundary, window: window}, compareLit)
 }
 
+// litOf is litAt for a look of any kind.
+func (t *tail) litOf(l *look) (int, bool) {
+	return slices.BinarySearchFunc(t.lit, litLook{boundary: l.boundary, occasion: l.occasion, window: l.window}, compareLit)
+}
+
 func (t *tail) set(l litLook) {
-	i, ok := t.litAt(l.boundary, l.window)
+	i, ok := slices.BinarySearchFunc(t.lit, l, compareLit)
 	if ok {
 		t.lit[i] = l
 		return
@@ -169,6 +178,9 @@ func (e *Engine) trim(s *series) {
 		e.touch(s)
 	}
 	s.forget(ix)
+	if s.forgetArrivals(ix) {
+		e.touch(s)
+	}
 	for d := range s.tails {
 		if s.tails[d].trim(ix.frozenAt, s.windows, e.alerts) {
 			e.touch(s)
@@ -197,20 +209,26 @@ func (t *tail) trim(frozen int64, windows []windowState, alerts map[string]*aler
 		if l.alert != nil {
 			l.alert.frozen = true
 		}
-		if ws := &windows[l.window]; ws.hasMade && ws.made == l.boundary {
+		if ws := &windows[l.window]; !l.occasion.arrival && ws.hasMade && ws.made == l.boundary {
 			t.lit[kept] = l
 			kept++
 		}
 	}
 	t.lit = slices.Delete(t.lit, kept, n)
 	t.past = slices.DeleteFunc(t.past, func(a *alert) bool {
-		gone := a.gone()
+		gone := a.gone() && !t.holds(a, frozen)
 		if gone {
 			delete(alerts, a.record.ID)
 		}
 		return gone
 	})
 	return kept < n
+}
+
+// holds reports whether looks after the boundary belong to the alert: such at
+// arrivals may, in the slot in which it was closed by hand.
+func (t *tail) holds(a *alert, frozen int64) bool {
+	return slices.ContainsFunc(t.lit, func(l litLook) bool { return l.alert == a && l.boundary > frozen })
 }
 
 // gone reports whether nothing can happen to the alert any more: it is done, and

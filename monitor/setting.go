@@ -119,6 +119,7 @@ func (e *Engine) install(next *config.Setup, version int, from map[string]int64)
 		}
 		windows, _ := ix.arrange(cfg, boundary) // there is room: see roomFor
 		e.occupy(ix, windows)
+		before := ix.cfg
 		ix.index, ix.cfg, ix.edges, ix.drawn, ix.total = i, cfg, nil, drawn{epoch: math.MinInt64}, total{}
 		if n := len(ix.epochs); n > 0 && ix.epochs[n-1].from >= boundary {
 			ix.epochs = ix.epochs[:n-1]
@@ -131,6 +132,7 @@ func (e *Engine) install(next *config.Setup, version int, from map[string]int64)
 		case e.clock != Beginning:
 			ix.start(e.clock)
 		}
+		e.keepArrivals(ix, before)
 		e.indicators = append(e.indicators, ix)
 		horizon = max(horizon, cfg.Horizon)
 	}

@@ -2,6 +2,7 @@ package monitor
 
 import (
 	"math"
+	"slices"
 	"time"
 )
 
@@ -73,16 +74,16 @@ func (e *Engine) Views(series, window string, from, to time.Time) []View {
 	if s.dates != nil { // some may be shorter
 		first = max(s.birth, s.trimmed, p.since-1) + 1
 	}
+	views := e.arrivalViews(s, w, InstantOf(from), InstantOf(to))
 	if at := ix.cal.Slot(InstantOf(from)); at > first {
 		first = at
 	}
-	var views []View
 	for b := first; b <= ix.looked; b++ {
 		start := ix.cal.Start(b)
 		if start >= InstantOf(to) {
 			break
 		}
-		if start < InstantOf(from) || !ix.looksAt(cfg, b) {
+		if start < InstantOf(from) || !ix.epochAt(b).cfg.SlotLooks || !ix.looksAt(cfg, b) {
 			continue
 		}
 		ep := ix.epochAt(b)
@@ -96,6 +97,9 @@ func (e *Engine) Views(series, window string, from, to time.Time) []View {
 			_, v.Lower.Signals = s.tails[lower].litAt(b, w)
 		}
 		views = append(views, v)
+	}
+	if s.arrivals != nil {
+		slices.SortStableFunc(views, func(a, b View) int { return a.End.Compare(b.End) })
 	}
 	return views
 }
@@ -138,20 +142,25 @@ func (ix *indicator) view(s *series, ep *epoch, l *look) View {
 	if based && !l.exposure.IsZero() {
 		o = ix.opportunity(s, &u, &l.tally, from, l.boundary, l.at)
 	}
+	v.weigh(&u, &o, l)
+	return v
+}
+
+// weigh fills in how the look was judged.
+func (v *View) weigh(u *usual, o *opportunity, l *look) {
 	if o.weighted == 0 { // nothing could happen, or be known
 		v.Expected = 0
 		v.Upper.certain()
 		v.Lower.certain()
-		return v
+		return
 	}
-	v.Expected = expected(&u, &o)
-	if cfg.Upper {
-		v.Upper.fill(newLaw(&u, upper, &o), upper, l)
+	v.Expected = expected(u, o)
+	if v.Upper.Watched {
+		v.Upper.fill(newLaw(u, upper, o), upper, l)
 	}
-	if cfg.Lower {
-		v.Lower.fill(newLaw(&u, lower, &o), lower, l)
+	if v.Lower.Watched {
+		v.Lower.fill(newLaw(u, lower, o), lower, l)
 	}
-	return v
 }
 
 // certain is the tail of a look at which nothing could happen.

@@ -158,6 +158,10 @@ type Evidence struct {
 	// stratum and by the share of its events that can have been reported; nil
 	// where that changes nothing.
 	Weighted *float64 `json:"weighted_exposure,omitempty"`
+	// Wait is how long the events took, for a look that was made when one came;
+	// From and To are then moments, and both ends of the span are told to the
+	// second: what came at To counts, what came at From does not.
+	Wait *Wait `json:"wait,omitempty"`
 	// Provisional is how many slots have an exposure that was carried forward.
 	Provisional int64 `json:"provisional_slots,omitempty"`
 	LateEvents  int64 `json:"late_events"`
