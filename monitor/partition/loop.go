@@ -170,6 +170,13 @@ func (l *Loop) apply(ctx context.Context) {
 		l.commits <- commit{l.engine.Drain(), mark}
 		waiting = 0
 	}
+	take := func(b Batch) {
+		for i := range b.Messages {
+			l.engine.Apply(&b.Messages[i])
+		}
+		waiting += len(b.Messages)
+		mark = b.Mark
+	}
 	for {
 		batches, free := l.batches, committer
 		if waiting >= l.opts.MaxBatch {
@@ -186,14 +193,15 @@ func (l *Loop) apply(ctx context.Context) {
 			}
 			handOn()
 		case b := <-batches:
-			for i := range b.Messages {
-				l.engine.Apply(&b.Messages[i])
-			}
-			waiting += len(b.Messages)
-			mark = b.Mark
+			take(b)
 		case look := <-l.asks:
 			look(l.engine)
 		case <-ctx.Done():
+			select { // what was read before the source failed still counts
+			case b := <-l.batches:
+				take(b)
+			default:
+			}
 			if _, open := <-l.free; open && waiting > 0 {
 				handOn()
 			}
