@@ -64,16 +64,27 @@ func (e *Engine) conditionsOf(s *series) []Condition {
 		}
 		list = append(list, Condition{
 			Series: s.name, Indicator: ix.cfg.Name, Kind: kindOf(ws.withheld), Window: p.Name,
-			Since: ix.cal.Start(ws.withheldSince), Text: ws.withheld.String(),
+			Since: ix.cal.Start(ws.withheldSince), Text: textOf(ws.withheld),
 		})
 	}
-	if expect := ix.cfg.Expect; expect > 0 && s.sum == nil && s.seen.Add(expect) < e.clock {
+	seen := s.seen
+	if seen == 0 && s.birth != unborn { // it was opened before anything was heard of it
+		seen = ix.cal.Start(s.birth)
+	}
+	if expect := ix.cfg.Expect; expect > 0 && s.sum == nil && seen.Add(expect) < e.clock {
 		list = append(list, Condition{
-			Series: s.name, Indicator: ix.cfg.Name, Kind: Silent, Since: s.seen,
+			Series: s.name, Indicator: ix.cfg.Name, Kind: Silent, Since: seen,
 			Text: "nothing was heard for longer than " + config.FormatDuration(expect),
 		})
 	}
 	return list
+}
+
+func textOf(s status) string {
+	if s == idle {
+		return "people said that it is not to be looked at now"
+	}
+	return s.String()
 }
 
 func kindOf(s status) ConditionKind {

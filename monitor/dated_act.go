@@ -48,7 +48,7 @@ func (e *Engine) senseless(f *fact) (Reason, string) {
 	if slices.ContainsFunc(e.facts, same) {
 		return NotAllowed, fmt.Sprintf("this %s of %s was said already", f.Kind, f.Series)
 	}
-	if f.From > e.clock.Add(LongestShelf) {
+	if e.clock != Beginning && f.From > e.clock.Add(LongestShelf) {
 		return NotAllowed, fmt.Sprintf("it would hold from %s, more than %s after the stream's clock %s: say it when it is nearer",
 			at(f.From), config.FormatDuration(LongestShelf), at(e.clock))
 	}
@@ -121,7 +121,7 @@ func (e *Engine) openNew(f *fact) (Reason, string) {
 	}
 	s := e.enter(ix, f.Series)
 	e.link(s)
-	s.birth, s.seen = ix.firstFrom(f.From), e.clock
+	s.birth = ix.firstFrom(f.From)
 	for _, c := range e.changeSums(nil, s, s.birth, ix.looked-1) {
 		e.rerun(c)
 	}
@@ -224,6 +224,17 @@ func (e *Engine) rearm(s *series, f *fact) {
 	}
 }
 
+// shutDown ends the run of what signals in a series that is closed.
+func (e *Engine) shutDown(s *series, boundary int64, due Instant) {
+	for d := range s.tails {
+		if t := &s.tails[d]; t.current != nil {
+			a := t.current
+			t.leave(boundary)
+			e.step(a, life.Step{Kind: life.StepReturned, At: due.Time(), Why: "the series is closed"})
+		}
+	}
+}
+
 // changeSums sums the slots of the series' sums again.
 func (e *Engine) changeSums(list []change, s *series, from, to int64) []change {
 	for _, sum := range s.sums {
@@ -293,7 +304,11 @@ func (e *Engine) factsOf(ix *indicator, series string) []Dated {
 		if f.Kind == OutOfService {
 			what += " until " + f.Until.in(ix.cfg.Zone).Format("2006-01-02 15:04")
 		}
-		all = append(all, Dated{f.From.in(ix.cfg.Zone), what + ", says " + f.By + ": " + f.Why})
+		if f.Why != "" {
+			what += ": " + f.Why
+		}
+		all = append(all, Dated{f.From.in(ix.cfg.Zone), what + " (" + f.By + ")"})
 	}
+	slices.SortStableFunc(all, func(a, b Dated) int { return a.At.Compare(b.At) })
 	return all
 }

@@ -206,8 +206,8 @@ func (e *Engine) SlotsOf(series string, n int) []SlotView {
 
 // Dated is a moment at which something changed by which a series is judged.
 type Dated struct {
-	At   time.Time // in the indicator's zone
-	What string
+	At   time.Time `json:"at"` // in the indicator's zone
+	What string    `json:"what"`
 }
 
 // ChangesOf returns the changes that looks in memory have passed: new versions

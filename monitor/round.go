@@ -12,7 +12,9 @@ func (e *Engine) lookAll(ix *indicator, boundary int64) {
 	e.allot(ix, ep, boundary)
 	for _, s := range ix.series {
 		if s.birth < boundary {
-			if s.standing(boundary-1) != closed && !e.quick(s, ep, boundary, due) {
+			if s.standing(boundary-1) == closed {
+				e.shutDown(s, boundary, due)
+			} else if !e.quick(s, ep, boundary, due) {
 				e.lookAt(s, ep, boundary, due)
 			}
 			e.trim(s)

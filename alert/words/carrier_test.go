@@ -1,7 +1,9 @@
 package words
 
 import (
+	"strings"
 	"testing"
+	"time"
 
 	"tailbell/monitor/life"
 )
@@ -37,5 +39,18 @@ func TestSumsAreNamedWithTheirCarriers(t *testing.T) {
 		if got := carriers(&r, &e); got != test.carried {
 			t.Errorf("%s: carriers %q, want %q", test.series, got, test.carried)
 		}
+	}
+}
+
+func TestDatedActsAreTold(t *testing.T) {
+	at := time.Date(2026, 3, 20, 0, 0, 0, 0, time.UTC)
+	e := life.Evidence{
+		EventNoun: "falls", Unit: "bed-days", Events: 9, Exposure: "170", Expected: 1.7, P: 7e-5, Log10P: -4.15, Window: "60d",
+		From: at, To: at.AddDate(0, 0, 17), Shortened: 43, SignedOff: true, AfterSignOff: 1,
+	}
+	r := life.Record{Series: "a/fall", Indicator: "fall", Direction: life.Upper, Opening: e, Zone: "UTC"}
+	const want = "9 falls in the time from 20 March 2026 to 5 April 2026 (170 bed-days, signed off; 1 slot changed after it was signed off)"
+	if got := Sentence(&r, &e); !strings.Contains(got, want) {
+		t.Errorf("%q does not say %q", got, want)
 	}
 }

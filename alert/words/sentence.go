@@ -18,7 +18,7 @@ func Sentence(r *life.Record, e *life.Evidence) string {
 
 // finding is the sentence without the bounds.
 func finding(r *life.Record, e *life.Evidence) string {
-	return place(r) + ": " + counted(e) + " in the " + span(e, zoneOf(r)) + " (" + exposure(e) + provisional(e) + lateShare(e) + "); about " +
+	return place(r) + ": " + counted(e) + " in the " + span(e, zoneOf(r)) + " (" + exposure(e) + provisional(e) + signedOff(e) + lateShare(e) + "); about " +
 		expected(e) + " would be usual. " + chance(e, r.Direction)
 }
 
@@ -60,6 +60,22 @@ func provisional(e *life.Evidence) string {
 		return ", provisional"
 	}
 	return ""
+}
+
+// signedOff says that people have declared the counts final, and what changed
+// after that.
+func signedOff(e *life.Evidence) string {
+	text := ""
+	if e.SignedOff {
+		text = ", signed off"
+	}
+	switch e.AfterSignOff {
+	case 0:
+		return text
+	case 1:
+		return text + "; 1 slot changed after it was signed off"
+	}
+	return text + "; " + whole(e.AfterSignOff) + " slots changed after they were signed off"
 }
 
 func lateShare(e *life.Evidence) string {

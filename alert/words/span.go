@@ -67,6 +67,9 @@ func midnight(t time.Time) bool {
 // span is "28 days to 3 March 2026", "6 hours to 14:00 CET on 3 March 2026".
 func span(e *life.Evidence, zone *time.Location) string {
 	from, to := e.From.In(zone), e.To.In(zone)
+	if e.Shortened > 0 { // by a reset or a change
+		return "time from " + moment(from) + " to " + last(to)
+	}
 	n, unit, ok := windowUnit(e.Window)
 	if !ok {
 		return "time from " + moment(from) + " to " + last(to)

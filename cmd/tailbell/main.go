@@ -124,7 +124,7 @@ Silence is no proof of safety. Local policy decides.`,
 	root.SetFlagErrorFunc(badFlag)
 	root.SetHelpCommand(newHelpCommand())
 	root.AddCommand(
-		newAlertCommand(), newBaselineCommand(), newClockCommand(), newConfigCommand(), newDemoCommand(), newExactCommand(), newFeedCommand(), newLimitsCommand(),
+		newAlertCommand(), newSeriesCommand(), newBaselineCommand(), newClockCommand(), newConfigCommand(), newDemoCommand(), newExactCommand(), newFeedCommand(), newLimitsCommand(),
 		newOutletCommand(), newRefusedCommand(), newRehearseCommand(), newReplayCommand(), newReportCommand(), newRunCommand(), newStatusCommand(), newStoreCommand(), newStreamCommand(),
 		newUserCommand(),
 	)

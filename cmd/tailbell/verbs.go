@@ -3,10 +3,8 @@ package main
 import (
 	"context"
 	"encoding/json"
-	"fmt"
 	"time"
 
-	"tailbell/ingest/bus"
 	"tailbell/ingest/control"
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
@@ -37,6 +35,7 @@ const (
 	verbCopy       = "copy"         // name of a request -> whether it is done
 	verbResend     = "resend"       // resendRequest -> resendReply
 	verbTrim       = "trim"         // position -> trimReply
+	verbSeries     = "series"       // seriesRequest -> seriesReply
 	verbSetting    = "setting"      // -> settingsReply
 )
 
@@ -119,6 +118,7 @@ func (d *daemon) verbs() map[string]control.Handler {
 		verbCopy:   answer(d.copyStore),
 		verbResend: answer(d.resend),
 		verbTrim:   answer(d.trim),
+		verbSeries: answer(d.series),
 
 		verbSetting: d.setting,
 	}
@@ -221,6 +221,9 @@ func (d *daemon) act(ctx context.Context, req actRequest) (any, error) {
 	if reason != "" {
 		return nil, control.Errorf(codeRefused, "%s", detail)
 	}
+	if act.Kind.OnSeries() {
+		return d.actOnSeries(ctx, &act, req.Act)
+	}
 	var p *part
 	if act.Alert != "" {
 		var err error
@@ -230,14 +233,7 @@ func (d *daemon) act(ctx context.Context, req actRequest) (any, error) {
 	} else {
 		p = d.partOf(act.Series)
 	}
-	position, err := d.bus.Publish(ctx, bus.Outgoing{Partition: p.number, Kind: bus.Act, Data: req.Act})
-	if err != nil {
-		return nil, err
-	}
-	if err := p.reach(ctx, position); err != nil {
-		return nil, fmt.Errorf("the act is in the stream at position %d, but was not taken in time: %w", position, err)
-	}
-	switch why, err := refusedAt(p.store, position); {
+	switch why, err := d.publishAct(ctx, p, req.Act); {
 	case err != nil:
 		return nil, err
 	case why != "":

@@ -1,0 +1,242 @@
+package main
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"io"
+	"os"
+	"strings"
+	"time"
+
+	"github.com/spf13/cobra"
+
+	"tailbell/config"
+	"tailbell/ingest/bus"
+	"tailbell/ingest/wire"
+	"tailbell/monitor"
+)
+
+// seriesActing holds the options of a command that acts on series.
+type seriesActing struct {
+	path              string
+	act               monitor.Act
+	from, until, span string
+	month             string
+	what, side        string
+}
+
+const seriesActHelp = "\n\nSERIES is a name, the name of a sum, or a pattern (in quotes) such as 'site/*/fall'.\n" +
+	"Dates are in the zone of the indicators concerned. The act goes through the stream, so\n" +
+	"the daemon must run; looks inside the horizon follow it at once."
+
+func newSeriesAct(a *seriesActing, use, short, long string) *cobra.Command {
+	c := &cobra.Command{
+		Use: use + " SERIES", Short: short, Long: long + seriesActHelp,
+		RunE: func(c *cobra.Command, args []string) error {
+			a.act.Series = args[0]
+			return a.run(c.Context(), c.OutOrStdout())
+		},
+	}
+	addConfigFlag(c, &a.path)
+	c.Flags().StringVar(&a.act.By, "by", "", "the `NAME` of who says so; else what "+byVariable+" says, else the login name, unless that is root")
+	c.Flags().StringVar(&a.act.Why, "why", "", "the reason, a `TEXT`")
+	c.Flags().StringVar(&a.from, "from", "", "from this `DATE` on: 2026-03-20, or a time with its offset")
+	return c
+}
+
+func newResetCommand() *cobra.Command {
+	return newSeriesAct(&seriesActing{act: monitor.Act{Kind: monitor.Reset}}, "reset", "Let counts begin again from a date",
+		`Lets counts begin again from a date, after a cluster was investigated, so that a long
+window does not hide the next one: windows that end later do not reach before the date.
+An alert that signals has returned with it.`)
+}
+
+func newChangeCommand() *cobra.Command {
+	a := &seriesActing{act: monitor.Act{Kind: monitor.Change}}
+	c := newSeriesAct(a, "change", "Say that something changed on a date: definition, method, opening, closing",
+		`Says that something changed on a date: the case definition, the method, or that a series
+opens or closes. Windows do not reach over a change of definition or method, unless
+--straddle says that they may. A series that closes is not looked at from then on, and
+nobody waits for its reports; one that opens begins then.`)
+	c.Flags().StringVar(&a.what, "what", "", "`WHAT` changed: \"case definition\", method, opening or closing; needed")
+	c.Flags().BoolVar(&a.act.Straddle, "straddle", false, "windows may reach over it; it is only recorded")
+	return c
+}
+
+func newOutOfServiceCommand() *cobra.Command {
+	a := &seriesActing{act: monitor.Act{Kind: monitor.OutOfService}}
+	c := newSeriesAct(a, "out-of-service", "Do not look at series for a time: a drill, a closed ward, a deploy",
+		`Takes series out of service for a time, ahead of it or afterwards: their looks are
+withheld, which is counted and shown, and the time is left out of later windows.`)
+	c.Flags().StringVar(&a.until, "until", "", "up to this `DATE`, not included, or a time with its offset")
+	c.Flags().StringVar(&a.span, "for", "", "or for so `LONG` from --from on: 12h, 3d")
+	c.MarkFlagsMutuallyExclusive("until", "for")
+	return c
+}
+
+func newBackInServiceCommand() *cobra.Command {
+	return newSeriesAct(&seriesActing{act: monitor.Act{Kind: monitor.BackInService}}, "back-in-service", "End a time out of service earlier",
+		"Ends a time out of service earlier than was said. Name the series by the very words by\nwhich it was put out of service.")
+}
+
+func newSignOffCommand() *cobra.Command {
+	a := &seriesActing{act: monitor.Act{Kind: monitor.SignOff}}
+	c := newSeriesAct(a, "sign-off", "Say that the counts of a time are final",
+		`Says that the counts of a time are final: alerts and the page tell whether a window
+rests on them. Corrections are still taken, and are told as such.`)
+	c.Flags().StringVar(&a.until, "until", "", "up to this `DATE`, not included, or a time with its offset")
+	c.Flags().StringVar(&a.month, "month", "", "or a whole `MONTH`: 2026-03")
+	c.Flags().StringVar(&a.side, "side", "both", "events, exposure or both")
+	c.MarkFlagsMutuallyExclusive("month", "from")
+	c.MarkFlagsMutuallyExclusive("month", "until")
+	return c
+}
+
+func (a *seriesActing) run(ctx context.Context, w io.Writer) error {
+	setup, err := loadSetup(a.path)
+	if err != nil {
+		return err
+	}
+	if err := a.complete(setup); err != nil {
+		return &usageError{err}
+	}
+	data := wire.EncodeAct(nil, &a.act)
+	if _, reason, detail := wire.NewDecoder(wire.Limits{}).Act(data); reason != "" {
+		return &usageError{errors.New(strings.ReplaceAll(detail, "the field ", "--"))}
+	}
+	var r seriesActReply
+	err = ask(ctx, setup, verbAct, actRequest{data}, &r)
+	if errors.Is(err, bus.ErrNoDaemon) {
+		return fmt.Errorf("acts go through the stream: %w", sayNeverRan(setup, err))
+	}
+	if err != nil {
+		return err
+	}
+	return say(w, "%s.", a.told(r.Series))
+}
+
+// complete reads the options that are not read yet.
+func (a *seriesActing) complete(setup *config.Setup) error {
+	if a.act.By = strings.TrimSpace(a.act.By); a.act.By == "" {
+		a.act.By = strings.TrimSpace(os.Getenv(byVariable))
+	}
+	if a.act.By == "" {
+		a.act.By = loginName()
+	}
+	if a.act.By == "" {
+		return errors.New("--by is missing: say who says so, by --by NAME or in " + byVariable)
+	}
+	a.act.Why = strings.TrimSpace(a.act.Why)
+	if err := config.CheckPattern(a.act.Series); err != nil {
+		return fmt.Errorf("%q: %w", a.act.Series, err)
+	}
+	a.act.What, a.act.Side = monitor.ChangeKind(a.what), monitor.Side(a.side)
+	zone, name, err := zoneAmong(setup, a.act.Series)
+	if err != nil {
+		return err
+	}
+	if a.month != "" {
+		begin, err := time.ParseInLocation("2006-01", a.month, zone)
+		if err != nil {
+			return fmt.Errorf("--month %q: write it like 2026-03", a.month)
+		}
+		a.act.From, a.act.Until = monitor.InstantOf(begin), monitor.InstantOf(begin.AddDate(0, 1, 0))
+		return nil
+	}
+	if a.from == "" {
+		return errors.New("--from is missing: say from when, as 2026-03-20")
+	}
+	if a.act.From, err = dateIn(zone, name, "--from", a.from); err != nil {
+		return err
+	}
+	switch {
+	case a.span != "":
+		span, err := config.ParseDuration(a.span)
+		if err != nil || span <= 0 {
+			return fmt.Errorf("--for %q: write a whole number and s, m, h, d (24 hours) or w (7 days)", a.span)
+		}
+		a.act.Until = a.act.From.Add(span)
+	case a.until != "":
+		a.act.Until, err = dateIn(zone, name, "--until", a.until)
+	case a.act.Kind == monitor.OutOfService || a.act.Kind == monitor.SignOff:
+		return errors.New("--until is missing: say up to when, as 2026-04-01 (not included)")
+	}
+	return err
+}
+
+// zoneAmong is the zone of the indicators that monitor what matches, nil if they
+// have several.
+func zoneAmong(setup *config.Setup, pattern string) (*time.Location, string, error) {
+	var zone *time.Location
+	name, several, found := "", false, false
+	for i := range setup.Indicators {
+		in := &setup.Indicators[i]
+		if !in.MayMatch(config.NewPattern(pattern)) {
+			continue
+		}
+		several = several || found && in.ZoneName != name
+		zone, name, found = in.Zone, in.ZoneName, true
+	}
+	switch {
+	case !found:
+		return nil, "", fmt.Errorf("no indicator monitors %q: see its patterns in the set-up", pattern)
+	case several:
+		return nil, "", nil
+	}
+	return zone, name, nil
+}
+
+// dateIn reads a date in the zone, or a time with its offset.
+func dateIn(zone *time.Location, name, option, text string) (monitor.Instant, error) {
+	if at, err := wire.ParseTime(text); err == nil {
+		return at, nil
+	}
+	if zone == nil {
+		return 0, fmt.Errorf("%s %q: the series are in several zones, so write a time with its offset: 2026-03-20T00:00:00+01:00", option, text)
+	}
+	date, err := time.ParseInLocation(time.DateOnly, text, zone)
+	if err != nil {
+		return 0, fmt.Errorf("%s %q: write a date in %s, 2026-03-20, or a time with its offset", option, text, name)
+	}
+	return monitor.InstantOf(date), nil
+}
+
+// told says what was done.
+func (a *seriesActing) told(series int) string {
+	who := "no series yet"
+	switch {
+	case series == 1:
+		who = a.act.Series
+		if config.IsSum(who) {
+			who += " (1 series)"
+		}
+	case series > 1:
+		who = fmt.Sprintf("%s (%d series)", a.act.Series, series)
+	case config.IsSum(a.act.Series):
+		who = a.act.Series + " (no series yet)"
+	}
+	from, until := a.act.From.Time().Format(time.RFC3339), a.act.Until.Time().Format(time.RFC3339)
+	if a.from != "" {
+		from = a.from
+	}
+	if a.until != "" {
+		until = a.until
+	}
+	span := from + " to " + until
+	if a.month != "" {
+		span = a.month
+	}
+	switch a.act.Kind { //nolint:exhaustive // the others are acts on alerts
+	case monitor.Reset:
+		return "Counts of " + who + " begin again from " + from
+	case monitor.OutOfService:
+		return who + " out of service from " + span
+	case monitor.BackInService:
+		return who + " back in service from " + from
+	case monitor.SignOff:
+		sides := map[monitor.Side]string{monitor.BothSides: "events and exposure", monitor.EventsSide: "events", monitor.ExposureSide: "exposure"}
+		return who + ": " + sides[a.act.Side] + " of " + span + " signed off"
+	}
+	return who + ": " + a.what + " from " + from + " recorded"
+}

@@ -1,0 +1,92 @@
+package monitor
+
+import (
+	"time"
+
+	"tailbell/config"
+)
+
+// Listed is what is known of a series apart from its counts.
+type Listed struct {
+	Series    string `json:"series"`
+	Indicator string `json:"indicator"`
+	// Members are the series that a sum sums; 0 for a series.
+	Members int `json:"members,omitempty"`
+	// Begins is its first slot, nil before it has one; Heard is the clock when
+	// something was last counted, nil for a sum and where nothing was yet.
+	Begins *time.Time `json:"begins"`
+	Heard  *time.Time `json:"heard"`
+	// Condition is "open", "not yet open", "closed" or "out of service", as of the clock; Until
+	// is when it is back in service.
+	Condition string     `json:"condition"`
+	Until     *time.Time `json:"until,omitempty"`
+	// Events and Exposure are signed off up to there, nil if never.
+	Events   *time.Time `json:"events_signed_off"`
+	Exposure *time.Time `json:"exposure_signed_off"`
+	// Acts are what people said of it that still matters, by date.
+	Acts []Dated `json:"acts,omitempty"`
+}
+
+// List returns the series that match the pattern, in order of appearance: those
+// among the next n from the given number on. next is where to go on, -1 at the
+// end.
+func (e *Engine) List(pattern config.Pattern, from, n int) (list []Listed, next int) {
+	end := min(from+n, len(e.series))
+	for _, s := range e.series[min(from, end):end] {
+		if !s.retired && pattern.Match(s.name) {
+			list = append(list, e.listed(s))
+		}
+	}
+	if next = end; end == len(e.series) {
+		next = -1
+	}
+	return list, next
+}
+
+// Matching counts the series that match the pattern, sums among them.
+func (e *Engine) Matching(pattern string) int {
+	return len(e.matched(&fact{Series: pattern}))
+}
+
+func (e *Engine) listed(s *series) Listed {
+	ix := s.indicator
+	when := func(i Instant) *time.Time {
+		t := i.in(ix.cfg.Zone)
+		return &t
+	}
+	l := Listed{Series: s.name, Indicator: ix.cfg.Name, Condition: "open", Acts: e.factsOf(ix, s.name)}
+	if s.sum != nil {
+		l.Members = len(s.sum.members)
+	} else if s.seen > 0 {
+		l.Heard = when(s.seen)
+	}
+	if s.birth != unborn {
+		l.Begins = when(ix.cal.Start(s.birth))
+	}
+	d := s.dates
+	if d == nil {
+		return l
+	}
+	if now := ix.cal.Slot(e.clock); !d.isOpen(now) {
+		if l.Condition = closed.String(); s.birth > now {
+			l.Condition = "not yet open"
+		}
+	} else if d.isOut(now) {
+		l.Condition = idle.String()
+		until := now
+		for d.isOut(until) {
+			until++
+		}
+		l.Until = when(ix.cal.Start(until))
+	}
+	for side, to := range []**time.Time{&l.Events, &l.Exposure} {
+		last := Beginning
+		for _, x := range d.signed[side] {
+			last = max(last, ix.cal.Start(x.to))
+		}
+		if last != Beginning {
+			*to = when(last)
+		}
+	}
+	return l
+}
