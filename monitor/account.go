@@ -1,8 +1,12 @@
 package monitor
 
 import (
+	"encoding/json"
 	"maps"
 	"slices"
+	"strconv"
+	"strings"
+	"unicode/utf8"
 )
 
 // Account says what became of every element that reached a partition, and of
@@ -130,6 +134,36 @@ func (e *Engine) Slots() []SlotSum {
 		}
 	}
 	return sums
+}
+
+// appendSlotSum appends the JSON of what slotSum returns.
+func (s *series) appendSlotSum(b []byte, c *cell, start Instant) []byte {
+	b = append(b, `{"series":`...)
+	b = appendText(b, s.name)
+	b = append(b, `,"start":`...)
+	b = strconv.AppendInt(b, int64(start), 10)
+	b = append(b, `,"events":`...)
+	b = strconv.AppendInt(b, c.events, 10)
+	b = append(b, `,"exposure":"`...)
+	b = c.exposure.appendDecimal(b, s.indicator.cfg.GrainDigits)
+	b = append(b, `","has_events":`...)
+	b = strconv.AppendBool(b, c.saysEvents > 0)
+	b = append(b, `,"has_exposure":`...)
+	return append(strconv.AppendBool(b, c.saysExposure > 0), '}')
+}
+
+// appendText appends a JSON string.
+func appendText(b []byte, s string) []byte {
+	for i := range len(s) {
+		if c := s[i]; c < ' ' || c >= utf8.RuneSelf || strings.IndexByte("\"\\<>&", c) >= 0 {
+			text, err := json.Marshal(s)
+			if err != nil {
+				panic(err) // a string
+			}
+			return append(b, text...)
+		}
+	}
+	return append(append(append(b, '"'), s...), '"')
 }
 
 func (s *series) slotSum(c *cell) SlotSum {

@@ -100,8 +100,8 @@ func (e *Engine) idsOf(s *series, l *look) (ids []string, more int) {
 		if s.dates.isOut(c.slot) {
 			continue
 		}
-		for _, id := range c.ids {
-			known := e.ids.byKey[idKey{site, id}]
+		for _, id := range s.eventIDs.of(c.slot) {
+			known := e.ids.get(idKey{site, id}, e.series)
 			switch {
 			case known != nil && (known.said.start <= from || known.said.start > at):
 			case len(ids) == maxIDs:

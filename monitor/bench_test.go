@@ -102,7 +102,7 @@ func benchEngine(b *testing.B, l *benchLoad) *Engine {
 // BenchmarkApply measures the engine alone, from decoded memory: what an
 // observation costs with all looks that follow from it.
 func BenchmarkApply(b *testing.B) {
-	for _, series := range []int{1000, 100_000} {
+	for _, series := range []int{1000, 20_000, 100_000} {
 		for _, ids := range []int{0, 1, 10} {
 			b.Run(fmt.Sprintf("series=%d/ids=%d0%%", series, ids), func(b *testing.B) {
 				l := newBenchLoad(series, 10, ids)

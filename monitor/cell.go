@@ -2,7 +2,8 @@ package monitor
 
 import "slices"
 
-// cell is what is known of one slot of one series.
+// cell is what is known of one slot of one series. There are very many: no pointer
+// in it is followed by the garbage collector.
 type cell struct {
 	slot     int64
 	events   int64
@@ -19,19 +20,6 @@ type cell struct {
 	revised bool
 	// late is how many of the events came after the slot had settled.
 	late int64
-	// ids names the observations with events that had an id, sorted.
-	ids []string
-}
-
-// list lists (sign 1) or strikes out (sign -1) one id.
-func (c *cell) list(id string, sign int) {
-	i, ok := slices.BinarySearch(c.ids, id)
-	switch {
-	case sign > 0 && !ok:
-		c.ids = slices.Insert(c.ids, i, id)
-	case sign < 0 && ok:
-		c.ids = slices.Delete(c.ids, i, i+1)
-	}
 }
 
 // cells is sorted by slot; slots without a cell are absent on both sides.
@@ -83,7 +71,6 @@ func (s *series) makeRoom() {
 	if gone := cap(s.array) - n; n > 0 && gone >= n/4+1 {
 		all := s.array[:cap(s.array)]
 		copy(all, s.cells)
-		clear(all[n:])
 		s.cells = all[:n]
 		return
 	}

@@ -31,13 +31,13 @@ func (e *Engine) Drain() Changes {
 	slices.SortFunc(e.touched, func(a, b *series) int { return cmp.Compare(a.number, b.number) })
 	size := 0
 	for _, s := range e.touched {
-		patch := s.encode(false)
+		patch := e.room.keep(s.encode(e.room.next(), false))
 		size += len(patch)
 		c.Series = append(c.Series, SeriesChange{s.number, patch})
 		s.touched, s.fresh, s.dirty = false, false, s.dirty[:0]
 		s.drainArrivals()
 	}
-	c.IDs, c.RewrittenGenerations = e.ids.drain()
+	c.IDs, c.RewrittenGenerations = e.ids.drain(&e.room)
 	for _, a := range e.changed {
 		a.dirty = false
 		c.Alerts = append(c.Alerts, a.record)
@@ -55,7 +55,7 @@ func (e *Engine) slice(size int) []SeriesChange {
 	var states []SeriesChange
 	for ; e.checkpoint.next < len(e.series) && size > 0; e.checkpoint.next++ {
 		s := e.series[e.checkpoint.next]
-		state := s.encode(true)
+		state := e.room.keep(s.encode(e.room.next(), true))
 		size -= len(state)
 		states = append(states, SeriesChange{s.number, state})
 	}
@@ -70,12 +70,9 @@ func (e *Engine) archive(s *series, c *cell) {
 	if e.passing {
 		return
 	}
-	sum := s.slotSum(c)
-	data, err := json.Marshal(sum)
-	if err != nil {
-		panic(err) // a struct of plain fields
-	}
-	e.archived = append(e.archived, ArchivedSlot{Number: s.number, Start: sum.Start, Data: data})
+	start := s.indicator.cal.Start(c.slot)
+	data := e.room.keep(s.appendSlotSum(e.room.next(), c, start))
+	e.archived = append(e.archived, ArchivedSlot{Number: s.number, Start: start, Data: data})
 }
 
 // header is the engine's own state apart from series and ids.

@@ -36,10 +36,12 @@ const (
 // errEncoding says that stored bytes are not what this program wrote.
 var errEncoding = errors.New("monitor: stored state can't be read")
 
-func (s *series) encode(whole bool) []byte {
-	b := []byte{encodingVersion, 0}
+// encode appends the series to b.
+func (s *series) encode(b []byte, whole bool) []byte {
+	at := len(b) + 1 // of the flags
+	b = append(b, encodingVersion, 0)
 	if s.retired {
-		b[1] = flagNamed | flagRetired
+		b[at] = flagNamed | flagRetired
 		b = binary.AppendVarint(appendString(b, s.name), s.unpaired)
 		for d := range s.tails {
 			b = binary.AppendUvarint(b, uint64(s.tails[d].opened))
@@ -47,10 +49,10 @@ func (s *series) encode(whole bool) []byte {
 		return b
 	}
 	if s.arrivals != nil {
-		b[1] |= flagArrivals
+		b[at] |= flagArrivals
 	}
 	if whole || s.fresh {
-		b[1] |= flagNamed
+		b[at] |= flagNamed
 		b = appendString(b, s.name)
 		b = appendString(b, s.indicator.cfg.Name)
 	}
@@ -76,22 +78,22 @@ func (s *series) encode(whole bool) []byte {
 	if whole {
 		b = binary.AppendUvarint(b, uint64(len(s.cells)))
 		for i := range s.cells {
-			b = s.cells[i].encode(b)
+			b = s.encodeCell(b, &s.cells[i])
 		}
 		return b
 	}
 	b = binary.AppendUvarint(b, uint64(len(s.dirty)))
 	for _, slot := range s.dirty {
 		if i, ok := s.cells.find(slot); ok {
-			b = s.cells[i].encode(b)
+			b = s.encodeCell(b, &s.cells[i])
 			continue
 		}
-		b = (&cell{slot: slot}).encode(b) // trimmed since
+		b = s.encodeCell(b, &cell{slot: slot}) // trimmed since
 	}
 	return b
 }
 
-func (c *cell) encode(b []byte) []byte {
+func (s *series) encodeCell(b []byte, c *cell) []byte {
 	b = binary.AppendVarint(b, c.slot)
 	b = binary.AppendVarint(b, c.events)
 	b = binary.AppendUvarint(b, c.exposure.Hi)
@@ -100,8 +102,9 @@ func (c *cell) encode(b []byte) []byte {
 	b = binary.AppendUvarint(b, uint64(c.saysExposure))
 	b = binary.AppendUvarint(b, uint64(c.items))
 	b = append(binary.AppendVarint(b, c.late), flag(c.revised))
-	b = binary.AppendUvarint(b, uint64(len(c.ids)))
-	for _, id := range c.ids {
+	ids := s.eventIDs.of(c.slot)
+	b = binary.AppendUvarint(b, uint64(len(ids)))
+	for _, id := range ids {
 		b = appendString(b, id)
 	}
 	return b
@@ -117,9 +120,12 @@ func (t *tail) encode(b []byte) []byte {
 	if t.current != nil {
 		alerts = append([]*alert{t.current}, t.past...)
 	}
-	numbers := map[*alert]uint64{}
+	var numbers map[*alert]uint64 // few series have alerts
 	b = binary.AppendUvarint(b, uint64(len(alerts)))
 	for i, a := range alerts {
+		if numbers == nil {
+			numbers = map[*alert]uint64{}
+		}
 		numbers[a] = uint64(i + 1)
 		b = a.encode(b)
 	}
@@ -179,25 +185,6 @@ func (a *alert) encode(b []byte) []byte {
 	b = binary.AppendVarint(b, a.worst.boundary)
 	b = binary.AppendUvarint(b, uint64(a.worst.window))
 	return appendFloat(b, a.worstLog10P)
-}
-
-func (x *identified) encode() []byte {
-	b := []byte{idVersion, flag(x.retracted)}
-	b = appendString(b, x.key.site)
-	b = appendString(b, x.key.id)
-	b = binary.AppendVarint(b, x.revision)
-	c := &x.said
-	b = append(b, flag(c.series != nil))
-	if c.series == nil {
-		return b
-	}
-	b = binary.AppendUvarint(b, uint64(c.series.number))
-	b = binary.AppendVarint(b, int64(c.start))
-	b = binary.AppendVarint(b, int64(c.end))
-	b = binary.AppendVarint(b, c.events)
-	b = binary.AppendUvarint(b, c.exposure.Hi)
-	b = binary.AppendUvarint(b, c.exposure.Lo)
-	return append(b, flag(c.hasEvents), flag(c.hasExposure), flag(c.late))
 }
 
 func flag(on bool) byte {

@@ -50,6 +50,7 @@ type Engine struct {
 	byName     map[string]*series
 	recent     *series // that was asked for last by its name
 	ids        ids
+	room       room
 	alerts     map[string]*alert
 	// pending are alerts whose evidence was corrected at the present moment.
 	pending []*alert
@@ -181,7 +182,7 @@ func (e *Engine) keepTime(m *Message, o *Observation) (Reason, string) {
 	if ix == nil || known <= e.clock {
 		return "", ""
 	}
-	if old := e.ids.byKey[idKey{siteOf(o.Series), o.ID}]; !o.Retracted && (old == nil || o.ID == "") {
+	if !o.Retracted && (o.ID == "" || !e.ids.has(idKey{siteOf(o.Series), o.ID})) {
 		if end := ix.cal.Start(ix.cal.Slot(o.Start) + 1); end < known.Add(-ix.cfg.Horizon) {
 			return BeyondHorizon, fmt.Sprintf("its slot ended %s, but it became known only at %s, more than the horizon of %s later: correct its times",
 				at(end), at(known), config.FormatDuration(ix.cfg.Horizon))

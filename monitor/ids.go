@@ -1,7 +1,10 @@
 package monitor
 
 import (
+	"hash/maphash"
 	"maps"
+	"math"
+	"math/bits"
 	"slices"
 	"strings"
 	"time"
@@ -9,12 +12,21 @@ import (
 
 // ids remembers what every observation with an id last said, in generations
 // by the end of its last slot that are forgotten whole once they lie beyond
-// the horizon.
+// the horizon. There are millions of them: they lie in blocks of memory that
+// hold no pointer, so that the garbage collector need not look into them.
 type ids struct {
-	byKey map[idKey]*identified
-	// generations lists the keys by generation; a key stands in the list of
-	// its entry's generation, and perhaps still in an older one's.
-	generations map[int64][]idKey
+	// first is the place of the first entry whose key has a hash; those that
+	// share it follow by next.
+	first map[uint64]uint32
+	seed  maphash.Seed
+	// blocks hold the entries by place, free lists the places of none.
+	blocks [][]idEntry
+	free   []uint32
+	places uint32
+	count  int
+	found  identified // what get returned last
+
+	generations map[int64]*generation
 	horizon     time.Duration // the longest of any indicator
 	length      time.Duration // of a generation
 	max         int
@@ -23,12 +35,50 @@ type ids struct {
 	// most is the largest number of ids that were kept at once.
 	most int
 
-	touched []*identified
+	touched []touchedID
+	puts    uint32
 	dropped []int64
-	// written counts the entries that were handed over of each generation,
-	// those that a later one replaced among them.
-	written map[int64]int
 }
+
+// generation is the ids of one span of time.
+type generation struct {
+	// places lists its entries, and perhaps some that have left it since.
+	places []uint32
+	// text holds the keys of those that were put here, in blocks.
+	text [][]byte
+	// written counts the entries that were handed over, those that a later one
+	// replaced among them.
+	written int
+}
+
+// idEntry is an identified as it is kept.
+type idEntry struct {
+	hash        uint64
+	generation  int64 // noGeneration if the place is free
+	revision    int64
+	start, end  Instant
+	events      int64
+	exposure    Quantity
+	next        uint32 // the place of the next one with this hash
+	series      uint32 // noPlace if it adds nothing
+	put         uint32 // the number of its last put
+	block, at   uint32 // where its key lies in its generation's text
+	id          uint32 // how long the key's parts are
+	site        uint16
+	retracted   bool
+	hasEvents   bool
+	hasExposure bool
+	late        bool
+}
+
+type touchedID struct{ place, put uint32 }
+
+const (
+	noPlace      = math.MaxUint32
+	noGeneration = math.MinInt64
+	idBlock      = 1 << 10
+	textBlock    = 16 << 10
+)
 
 // maxStale is how many replaced entries of a generation a store holds beside
 // as many as still count, before the generation is written anew. Tests lower
@@ -60,7 +110,7 @@ type contribution struct {
 }
 
 func newIDs() ids {
-	return ids{byKey: map[idKey]*identified{}, generations: map[int64][]idKey{}, written: map[int64]int{}}
+	return ids{first: map[uint64]uint32{}, seed: maphash.MakeSeed(), generations: map[int64]*generation{}}
 }
 
 // configure sets how long ids are kept: the longest horizon of any indicator,
@@ -81,18 +131,149 @@ func (x *ids) generationOf(end Instant) int64 {
 	return floorDiv(int64(end), int64(x.length/time.Microsecond))
 }
 
+func (x *ids) generation(number int64) *generation {
+	g := x.generations[number]
+	if g == nil {
+		g = &generation{}
+		x.generations[number] = g
+	}
+	return g
+}
+
+// hashOf differs from process to process: nothing that follows from it is seen.
+func (x *ids) hashOf(key idKey) uint64 {
+	return maphash.String(x.seed, key.id) ^ bits.RotateLeft64(maphash.String(x.seed, key.site), 32)
+}
+
+func (x *ids) entry(place uint32) *idEntry { return &x.blocks[place/idBlock][place%idBlock] }
+
+// text is the key of an entry, both parts in one.
+func (x *ids) text(c *idEntry) []byte {
+	return x.generations[c.generation].text[c.block][c.at:][:int(c.site)+int(c.id)]
+}
+
+// find returns the place of the key, noPlace if there is none.
+func (x *ids) find(key idKey, hash uint64) uint32 {
+	place, ok := x.first[hash]
+	if !ok {
+		return noPlace
+	}
+	for place != noPlace {
+		c := x.entry(place)
+		if int(c.site) == len(key.site) && int(c.id) == len(key.id) {
+			if text := x.text(c); string(text[:c.site]) == key.site && string(text[c.site:]) == key.id {
+				return place
+			}
+		}
+		place = c.next
+	}
+	return noPlace
+}
+
+// has reports whether the key is known.
+func (x *ids) has(key idKey) bool { return x.find(key, x.hashOf(key)) != noPlace }
+
+// get returns what is known of the key, nil if nothing is. It holds until the
+// next call.
+func (x *ids) get(key idKey, all []*series) *identified {
+	place := x.find(key, x.hashOf(key))
+	if place == noPlace {
+		return nil
+	}
+	c := x.entry(place)
+	x.found = identified{key: key, revision: c.revision, retracted: c.retracted, generation: c.generation}
+	if c.series != noPlace {
+		x.found.said = contribution{
+			series: all[c.series], start: c.start, end: c.end, events: c.events, exposure: c.exposure,
+			hasEvents: c.hasEvents, hasExposure: c.hasExposure, late: c.late,
+		}
+	}
+	return &x.found
+}
+
 // put remembers what the observation said.
 func (x *ids) put(entry *identified) {
-	old := x.byKey[entry.key]
-	if old == nil || old.generation != entry.generation {
-		x.generations[entry.generation] = append(x.generations[entry.generation], entry.key)
+	hash := x.hashOf(entry.key)
+	place := x.find(entry.key, hash)
+	if place == noPlace {
+		place = x.take(hash)
+	}
+	c := x.entry(place)
+	if c.generation != entry.generation {
+		c.generation = entry.generation
+		g := x.generation(c.generation)
+		g.places = append(g.places, place)
+		c.block, c.at = g.write(entry.key)
+		c.site, c.id = uint16(len(entry.key.site)), uint32(len(entry.key.id))
 	}
 	if !x.hasOldest || entry.generation < x.oldest {
 		x.oldest, x.hasOldest = entry.generation, true
 	}
-	x.byKey[entry.key] = entry
-	x.most = max(x.most, len(x.byKey))
-	x.touched = append(x.touched, entry)
+	said := &entry.said
+	c.revision, c.retracted, c.series = entry.revision, entry.retracted, noPlace
+	c.start, c.end, c.events, c.exposure = said.start, said.end, said.events, said.exposure
+	c.hasEvents, c.hasExposure, c.late = said.hasEvents, said.hasExposure, said.late
+	if said.series != nil {
+		c.series = said.series.number
+	}
+	x.most = max(x.most, x.count)
+	x.puts++
+	c.put = x.puts
+	x.touched = append(x.touched, touchedID{place, c.put})
+}
+
+// take makes an entry for a key that has none; it stands in no generation yet.
+func (x *ids) take(hash uint64) uint32 {
+	place := x.places
+	if n := len(x.free); n > 0 {
+		place = x.free[n-1]
+		x.free = x.free[:n-1]
+	} else {
+		if place%idBlock == 0 {
+			x.blocks = append(x.blocks, make([]idEntry, idBlock))
+		}
+		x.places++
+	}
+	next, ok := x.first[hash]
+	if !ok {
+		next = noPlace
+	}
+	*x.entry(place) = idEntry{hash: hash, generation: noGeneration, next: next}
+	x.first[hash] = place
+	x.count++
+	return place
+}
+
+// write keeps the text of a key, and returns the block and the place in it.
+func (g *generation) write(key idKey) (block, at uint32) {
+	n := len(g.text)
+	if size := len(key.site) + len(key.id); n == 0 || cap(g.text[n-1])-len(g.text[n-1]) < size {
+		g.text = append(g.text, make([]byte, 0, max(size, min(textBlock, 16*size<<min(2*n, 16)))))
+		n++
+	}
+	b := g.text[n-1]
+	at = uint32(len(b))
+	g.text[n-1] = append(append(b, key.site...), key.id...)
+	return uint32(n - 1), at
+}
+
+// release frees the place of an entry.
+func (x *ids) release(place uint32) {
+	c := x.entry(place)
+	switch before := x.first[c.hash]; {
+	case before != place:
+		for x.entry(before).next != place {
+			before = x.entry(before).next
+		}
+		x.entry(before).next = c.next
+	case c.next != noPlace:
+		x.first[c.hash] = c.next
+	default:
+		delete(x.first, c.hash)
+	}
+	c.generation, c.put = noGeneration, 0
+	x.free = append(x.free, place)
+	x.count--
 }
 
 // drop forgets the generations that lie wholly beyond the horizon.
@@ -108,13 +289,12 @@ func (x *ids) drop(clock Instant) {
 		if g >= keep {
 			break
 		}
-		for _, key := range x.generations[g] {
-			if entry := x.byKey[key]; entry != nil && entry.generation == g {
-				delete(x.byKey, key)
+		for _, place := range x.generations[g].places {
+			if x.entry(place).generation == g {
+				x.release(place)
 			}
 		}
 		delete(x.generations, g)
-		delete(x.written, g)
 		x.dropped = append(x.dropped, g)
 	}
 	x.oldest, x.hasOldest = 0, false
@@ -123,35 +303,4 @@ func (x *ids) drop(clock Instant) {
 			x.oldest, x.hasOldest = g, true
 		}
 	}
-}
-
-// drain hands over the entries touched since the last one, and names the
-// generations that are handed over whole, because most of what a store holds of
-// them was replaced since.
-func (x *ids) drain() (changes []IDChange, rewritten []int64) {
-	for _, entry := range x.touched {
-		if x.byKey[entry.key] != entry {
-			continue
-		}
-		changes = append(changes, IDChange{entry.generation, entry.encode()})
-		g := entry.generation
-		if x.written[g]++; x.written[g] > 2*len(x.generations[g])+maxStale && !slices.Contains(rewritten, g) {
-			rewritten = append(rewritten, g)
-		}
-	}
-	x.touched = nil
-	if len(rewritten) == 0 {
-		return changes, nil
-	}
-	changes = slices.DeleteFunc(changes, func(c IDChange) bool { return slices.Contains(rewritten, c.Generation) })
-	for _, g := range rewritten {
-		x.written[g] = 0
-		for _, key := range x.generations[g] {
-			if entry := x.byKey[key]; entry != nil && entry.generation == g {
-				changes = append(changes, IDChange{g, entry.encode()})
-				x.written[g]++
-			}
-		}
-	}
-	return changes, rewritten
 }

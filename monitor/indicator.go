@@ -39,6 +39,8 @@ type indicator struct {
 	epochs []epoch
 	// digests are those of the baselines that are estimated.
 	digests map[*config.Baseline]int64
+	// stated is the reference last asked for of those that baselines state.
+	stated stated
 	// edges are those of known baselines and stated references.
 	edges map[edgeKey]*edges
 	// days are the calendar days that epochs of limits follow, drawn what was

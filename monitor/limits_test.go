@@ -20,12 +20,12 @@ func TestWithoutLimits(t *testing.T) {
 	e := New(Partition{Of: 1, KeyParts: 1})
 	viewDays(t, e, zone)
 	s := e.byName["a/fall"]
-	now := s.encode(true)
+	now := s.encode(nil, true)
 	tail := binary.AppendUvarint(nil, uint64(len(s.cells)))
 	before := bytes.Clone(tail)
 	for i := range s.cells {
-		tail = s.cells[i].encode(tail)
-		c := s.cells[i].encode(nil)
+		tail = s.encodeCell(tail, &s.cells[i])
+		c := s.encodeCell(nil, &s.cells[i])
 		n := len(c) // no ids: the last but one says whether it was revised
 		before = append(append(before, c[:n-2]...), c[n-1])
 	}
@@ -36,7 +36,7 @@ func TestWithoutLimits(t *testing.T) {
 	if err := e.overlay(read, old); err != nil {
 		t.Fatal(err)
 	}
-	if !bytes.Equal(read.encode(true), now) {
+	if !bytes.Equal(read.encode(nil, true), now) {
 		t.Error("the old state is read as another one")
 	}
 	old[0] = encodingVersion + 1

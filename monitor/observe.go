@@ -38,7 +38,7 @@ func (e *Engine) observe(o *Observation) (Reason, string) {
 		return BeyondHorizon, fmt.Sprintf("revision %d of id %q stands in a slot that can't change any more", old.revision, o.ID)
 	}
 	if key.id != "" && (ix != nil || old != nil) {
-		if old == nil && e.ids.byKey[key] == nil && len(e.ids.byKey) >= e.ids.max {
+		if old == nil && e.ids.count >= e.ids.max && !e.ids.has(key) {
 			return IDsFull, fmt.Sprintf("%d ids are kept already: raise limits.max_ids", e.ids.max)
 		}
 	}
@@ -105,7 +105,7 @@ func (e *Engine) identify(ix *indicator, o *Observation) (key idKey, old *identi
 		return key, nil, ix == nil, "", ""
 	}
 	key = idKey{siteOf(o.Series), o.ID}
-	if old = e.ids.byKey[key]; old != nil && old.gone() {
+	if old = e.ids.get(key, e.series); old != nil && old.gone() {
 		old = nil
 	}
 	switch {
@@ -306,7 +306,7 @@ func merge(a, b change) []change {
 
 // remember keeps what the id says now, for as long as its slots can change.
 func (e *Engine) remember(o *Observation, key idKey, old *identified, said *contribution) {
-	entry := &identified{key: key, revision: o.Revision, retracted: o.Retracted, said: *said}
+	entry := identified{key: key, revision: o.Revision, retracted: o.Retracted, said: *said}
 	switch {
 	case !o.Retracted:
 		until := o.End
@@ -322,7 +322,7 @@ func (e *Engine) remember(o *Observation, key idKey, old *identified, said *cont
 	default:
 		entry.generation = old.generation
 	}
-	e.ids.put(entry)
+	e.ids.put(&entry)
 }
 
 // add adds a contribution to its slots (sign 1), or takes it back (-1).
@@ -353,7 +353,7 @@ func (e *Engine) add(c *contribution, id string, sign int) change {
 				cell.late += int64(sign) * c.events
 			}
 			if id != "" && c.events > 0 {
-				cell.list(id, sign)
+				s.eventIDs.list(slot, id, sign)
 			}
 		}
 		if c.hasExposure {

@@ -3,7 +3,7 @@ package monitor
 import (
 	"math/big"
 	"math/bits"
-	"strings"
+	"strconv"
 
 	"tailbell/config"
 )
@@ -88,18 +88,34 @@ func (q Quantity) decimal(digits int) string { return q.Decimal(digits) }
 
 // Decimal writes the quantity exactly, with its decimal places.
 func (q Quantity) Decimal(digits int) string {
-	s := q.big().String()
-	if digits == 0 {
-		return s
+	return string(q.appendDecimal(nil, digits))
+}
+
+func (q Quantity) appendDecimal(b []byte, digits int) []byte {
+	var room [48]byte // 2^128 has 39 digits
+	s := room[:0]
+	if q.Hi == 0 {
+		s = strconv.AppendUint(s, q.Lo, 10)
+	} else {
+		s = q.big().Append(s, 10)
 	}
-	if len(s) <= digits {
-		s = strings.Repeat("0", digits-len(s)+1) + s
+	whole := max(len(s)-digits, 0)
+	b = append(b, s[:whole]...)
+	if whole == 0 {
+		b = append(b, '0')
 	}
-	whole, frac := s[:len(s)-digits], strings.TrimRight(s[len(s)-digits:], "0")
-	if frac == "" {
-		return whole
+	frac := s[whole:]
+	for len(frac) > 0 && frac[len(frac)-1] == '0' {
+		frac = frac[:len(frac)-1]
 	}
-	return whole + "." + frac
+	if len(frac) == 0 {
+		return b
+	}
+	b = append(b, '.')
+	for range digits - (len(s) - whole) {
+		b = append(b, '0')
+	}
+	return append(b, frac...)
 }
 
 func (q Quantity) big() *big.Int {

@@ -81,7 +81,7 @@ func TestQuick(t *testing.T) {
 				t.Fatalf("%s, seed %d: account (-long +quick):\n%s", baseline, seed, diff)
 			}
 			for n, s := range long.series {
-				if !bytes.Equal(s.encode(true), quick.series[n].encode(true)) {
+				if !bytes.Equal(s.encode(nil, true), quick.series[n].encode(nil, true)) {
 					t.Fatalf("%s, seed %d: the state of %s differs", baseline, seed, s.name)
 				}
 			}

@@ -153,6 +153,7 @@ func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(st
 	s.dates = e.datesOf(s.indicator, s.name)
 	s.derive()
 	s.cells = slices.DeleteFunc(s.cells, func(c cell) bool { return c.slot < s.trimmed })
+	s.eventIDs.forget(s.trimmed)
 	e.series = append(e.series, s)
 	e.living++
 	e.byName[s.name] = s
@@ -225,6 +226,7 @@ func (e *Engine) overlay(s *series, data []byte) error {
 	for range r.length() {
 		c := r.cell(version)
 		*s.at(c.slot) = c
+		s.eventIDs.set(c.slot, r.ids())
 	}
 	if len(r.b) > 0 {
 		r.fail("bytes are left over")
@@ -260,10 +262,14 @@ func (r *reader) cell(version byte) cell {
 	if version > withoutSignOff {
 		c.revised = r.flag()
 	}
-	for range r.length() {
-		c.ids = append(c.ids, r.string())
-	}
 	return c
+}
+
+func (r *reader) ids() (list []string) {
+	for range r.length() {
+		list = append(list, r.string())
+	}
+	return list
 }
 
 func (r *reader) tail(s *series, d direction) tail {
@@ -317,8 +323,8 @@ func (e *Engine) restoreID(change *IDChange) error {
 	if r.err != nil {
 		return r.err
 	}
-	e.ids.written[x.generation]++
-	switch old := e.ids.byKey[x.key]; {
+	e.ids.generation(x.generation).written++
+	switch old := e.ids.get(x.key, e.series); {
 	case old == nil, old.gone(), !x.gone() && x.revision > old.revision:
 		e.ids.put(x)
 	}

@@ -31,6 +31,8 @@ type series struct {
 	sums []*series
 	// dates are the acts on series that hold for it, nil for none.
 	dates *dates
+	// eventIDs are the ids of the observations with events, by slot.
+	eventIDs eventIDs
 	// array is what the cells lie in, at its end.
 	array cells
 	// windows and tails hold what the looks have found, by window and by
@@ -173,8 +175,8 @@ func (e *Engine) trim(s *series) {
 		e.archive(s, c)
 	}
 	if n > 0 {
-		clear(s.cells[:n])
 		s.cells = s.cells[n:] // they move when the list has to grow
+		s.eventIDs.forget(ix.kept)
 		e.touch(s)
 	}
 	s.forget(ix)

@@ -252,7 +252,7 @@ func (s *series) idsIn(from, to int64) (ids []string, more int) {
 			if !m.inForce(c.slot) {
 				continue
 			}
-			for _, id := range c.ids {
+			for _, id := range m.eventIDs.of(c.slot) {
 				if len(ids) == maxIDs {
 					more++
 					continue

@@ -369,7 +369,7 @@ func agreeSeries(s *series, t *twinSeries) error {
 		if x == nil {
 			x = &twinSum{}
 		}
-		got := twinSum{c.events, c.late, int64(c.exposure.Lo), int(c.saysEvents), int(c.saysExposure), c.ids}
+		got := twinSum{c.events, c.late, int64(c.exposure.Lo), int(c.saysEvents), int(c.saysExposure), s.eventIDs.of(c.slot)}
 		if c.exposure.Hi != 0 || !slices.Equal(got.ids, x.ids) || got.saysEvents != x.saysEvents ||
 			got.saysExposure != x.saysExposure || got.events != x.events || got.late != x.late || got.exposure != x.exposure {
 			return fmt.Errorf("slot %d: engine %+v, twin %+v", c.slot, got, *x)

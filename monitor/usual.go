@@ -59,12 +59,27 @@ func (ix *indicator) usualAt(s *series, ep *epoch, boundary int64) (usual, bool)
 	case config.Known:
 		return u, true
 	case config.Reference:
-		u.ref = &reference{events: u.base.Events, weighted: floatOf(u.base.Exposure)}
+		u.ref = ix.statedBy(u.base)
 		return u, true
 	case config.Trailing, config.Peers:
 		u.ref = s.referenceAt(boundary)
 	}
 	return u, u.ref != nil && u.ref.weighted > 0 && u.ref.events >= u.base.MinEvents
+}
+
+// stated is the reference that a baseline states.
+type stated struct {
+	base *config.Baseline
+	ref  *reference
+}
+
+// statedBy returns the reference that the baseline states. The one asked for
+// last is asked for again by every look that follows.
+func (ix *indicator) statedBy(b *config.Baseline) *reference {
+	if ix.stated.base != b {
+		ix.stated = stated{b, &reference{events: b.Events, weighted: floatOf(b.Exposure)}}
+	}
+	return ix.stated.ref
 }
 
 // baseline returns the baseline that serves the series at the boundary, nil
