@@ -30,7 +30,7 @@ func basis(r *life.Record, e *life.Evidence) string {
 		sentences[0] = usual + " is taken as known"
 	}
 	sentences[0] += origin(b)
-	return strings.Join(nonEmpty(append(append(sentences, opportunity(e)...), years(e))...), ". ") + "."
+	return strings.Join(nonEmpty(append(append(append(wait(e, zone), sentences...), opportunity(e)...), years(e))...), ". ") + "."
 }
 
 const unsure = "; p allows for how unsure that leaves it"

@@ -70,6 +70,9 @@ func span(e *life.Evidence, zone *time.Location) string {
 	if e.Shortened > 0 { // by a reset or a change
 		return "time from " + moment(from) + " to " + last(to)
 	}
+	if e.Wait != nil {
+		return toEvent(e, to)
+	}
 	n, unit, ok := windowUnit(e.Window)
 	if !ok {
 		return "time from " + moment(from) + " to " + last(to)

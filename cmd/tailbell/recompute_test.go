@@ -39,6 +39,7 @@ func TestRecompute(t *testing.T) {
 		"horse kicks": {"--config", "../../testdata/horsekicks/horsekicks.toml", "--zone", "UTC", "--until", "1895-02-01", "../../testdata/horsekicks/horsekicks.csv"},
 	}
 	histories["margins"] = margins(t)
+	histories["arrivals"] = arrivals(t)
 	for name, args := range histories {
 		t.Run(name, func(t *testing.T) {
 			_, text, stderr := run(t, append([]string{"replay", "--json"}, args...)...)
@@ -89,6 +90,36 @@ func margins(t *testing.T) []string {
 		}
 	}
 	return []string{"--config", filepath.Join(folder, "s.toml"), "--zone", "UTC", "--until", "2026-04-01", filepath.Join(folder, "h.csv")}
+}
+
+// arrivals is an invented history of falls that are looked at when they come: by
+// a known rate with factors for the weekdays, and by a reference with a margin.
+func arrivals(t *testing.T) []string {
+	t.Helper()
+	folder := t.TempDir()
+	setup := "name = \"arrivals\"\nfolder = \"x\"\n[time]\nmode = \"history\"\n"
+	for _, kind := range []struct{ name, limit, baseline string }{
+		{"fall", "allowance = \"2 in 1y\"", "kind = \"known\"\nrate = 6\nstrata = { by = \"weekday\", factors = [1.2, 1.1, 1, 1, 1, 0.9, 0.8] }"},
+		{"slip", "p_limit = 0.02", "kind = \"reference\"\nevents = 60\nexposure = 10000\nmargin = 1.1"},
+	} {
+		setup += fmt.Sprintf("[[indicator]]\nname = %q\nseries = [\"*/%s\"]\nunit = \"bed-days\"\nper = 1000\nevery = \"1d\"\nzone = \"UTC\"\n"+
+			"events = \"each\"\nexposure = \"clock\"\nclock = { size = 20, per = \"1d\" }\nsince = \"2026-01-01\"\n"+
+			"windows = [\"7d\", \"28d\"]\nlooks = [\"slot\", \"arrival\"]\n%s\nquiet = 3\n[indicator.baseline]\n%s\n",
+			kind.name, kind.name, kind.limit, kind.baseline)
+	}
+	rows := ""
+	for i := range 40 {
+		at := time.Date(2026, 2, 10, 3+i*(i%7), 17*i%60, 0, 0, time.UTC).Add(time.Duration(i*i) * time.Hour)
+		for _, name := range []string{"fall", "slip"} {
+			rows += fmt.Sprintf("{\"series\":\"ward/%s\",\"at\":%q,\"events\":%d}\n", name, at.Format(time.RFC3339), 1+i%9/8)
+		}
+	}
+	for name, text := range map[string]string{"s.toml": setup, "h.ndjson": rows} {
+		if err := os.WriteFile(filepath.Join(folder, name), []byte(text), 0o600); err != nil {
+			t.Fatal(err)
+		}
+	}
+	return []string{"--config", filepath.Join(folder, "s.toml"), "--zone", "UTC", "--until", "2026-06-01", filepath.Join(folder, "h.ndjson")}
 }
 
 func recomputed(t *testing.T, e *life.Evidence) {
