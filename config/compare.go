@@ -219,7 +219,7 @@ func (c *comparison) indicator(a, b *Indicator) {
 	c.value("ids", Rebuild, idsWord(a), idsWord(b), "")
 	c.value("expires", NextLook, expiryText(a), expiryText(b), "")
 	c.value("since", Rebuild, sinceText(a), sinceText(b), "")
-	c.value("expect", NextLook, FormatDuration(a.Expect), FormatDuration(b.Expect), "")
+	c.value("expect", NextLook, expectText(a), expectText(b), "")
 	c.value("remind", NextLook, FormatDuration(a.Remind), FormatDuration(b.Remind), "")
 	c.value("remind_to", NextLook, a.RemindTo, b.RemindTo, "")
 	c.windows(a, b)

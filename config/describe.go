@@ -162,9 +162,7 @@ func (p *prose) late(in *Indicator) {
 	} else {
 		p.line("  Observation ids are not kept: corrections can't be taken, and what is published twice is counted twice.")
 	}
-	if in.Expect > 0 {
-		p.line("  A series that is silent for more than %s is shown as silent.", elapsed(in.Expect))
-	}
+	p.expect(in)
 	if in.Remind > 0 {
 		to := "every outlet"
 		if in.RemindTo != "" {

@@ -49,9 +49,9 @@ func (d *doubts) indicator(in *Indicator, i int) {
 		d.at(in, i, "horizon", fmt.Sprintf("%s is shorter than a slot of %s: counts that come after their slot has ended may be refused",
 			FormatDuration(in.Horizon), in.Every), "make it longer than slot and settle together")
 	}
-	if in.Expect > 0 && in.Expect < in.Every.shortest() {
-		d.at(in, i, "expect", fmt.Sprintf("%s is shorter than a slot of %s: a series reported once a slot would be shown as silent",
-			FormatDuration(in.Expect), in.Every), "make it longer than a slot")
+	if silence := in.shortestSilence(); silence > 0 && silence < in.Every.shortest() {
+		d.at(in, i, "expect", fmt.Sprintf("%s is shorter than a slot of %s: a series reported once a slot would be called silent",
+			FormatDuration(silence), in.Every), "make it longer than a slot")
 	}
 	if chance := in.chanceSignals(); chance > 12 && in.SlotLooks {
 		d.at(in, i, "p_limit", fmt.Sprintf("up to %s looks a year of every series would signal by chance", about(chance)),

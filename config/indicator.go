@@ -181,9 +181,7 @@ func (s section) readTimes(in *Indicator) {
 		s.fault("horizon", fmt.Sprintf("%s is more than %s slots of %s", FormatDuration(in.Horizon), grouped(maxSlots), in.Every),
 			"make it shorter, or the slots longer")
 	}
-	if s.has("expect") {
-		in.Expect, _ = s.duration("expect", 0, time.Second, maxTime)
-	}
+	s.readExpect(in)
 	s.readRemind(in)
 	in.Since = s.readSince(in.Every, in.Zone)
 }

@@ -37,8 +37,9 @@ var keysOf = map[string][]string{
 		"name", "kind", "url", "secret_file", "server", "tls", "ca", "user", "password_file", "from", "to", "picture", "command", "time_limit",
 		"indicators", "series", "tails", "p_at_most", "steps", "history",
 	},
-	"strata": {"by", "factors"},
-	"delay":  {"ages", "reported"},
+	expectPlace: {"series", "within"},
+	"strata":    {"by", "factors"},
+	"delay":     {"ages", "reported"},
 }
 
 const (

@@ -250,9 +250,9 @@ type Indicator struct {
 	// Since, if not zero, is when the series of this indicator begin; else a
 	// series begins with its first observation.
 	Since time.Time
-	// Expect, if not zero, is the longest silence of a series that is not
-	// made a condition.
-	Expect time.Duration
+	// Expect says how long which series may be silent, in order: the first that
+	// matches counts.
+	Expect []Expectation
 	// Remind, if not zero, is how long an alert that nobody acknowledges may
 	// signal before the outlet RemindTo (all, if empty) is told again, and
 	// again after as much time.

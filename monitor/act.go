@@ -63,10 +63,10 @@ func (e *Engine) perform(act *Act) (Reason, string) {
 	if err := e.take(a, s); err != nil {
 		return NotAllowed, err.Error()
 	}
-	if act.Kind == Mark {
+	if act.Kind == Mark && a.tail != silence {
 		a.series.mark(a, act.Mark)
 	}
-	if t := &a.series.tails[a.tail]; act.Kind == Close && t.current == a {
+	if t := a.series.tail(a.tail); act.Kind == Close && t.current == a {
 		t.leave(a.series.indicator.looked)
 		t.disarmed = true
 	}
@@ -104,8 +104,12 @@ func (e *Engine) alertOf(act *Act) *alert {
 		return nil
 	}
 	t := &s.tails[upper]
-	if act.Direction == life.Lower {
+	switch act.Direction {
+	case life.Lower:
 		t = &s.tails[lower]
+	case life.Silence:
+		t = &s.silence
+	case life.Upper:
 	}
 	if t.current != nil {
 		return t.current

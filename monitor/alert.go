@@ -108,7 +108,7 @@ func (l *look) asLit(d direction, a *alert) litLook {
 // signals no more, of the earliest that does. Evidence from beyond the horizon
 // stays as it was.
 func (e *Engine) revalue(a *alert) {
-	t := &a.series.tails[a.tail]
+	t := a.series.tail(a.tail)
 	frozen := a.series.indicator.frozenAt
 	worst, first := -1, -1
 	openingLit := a.opening.boundary <= frozen
@@ -161,7 +161,9 @@ func (e *Engine) take(a *alert, s life.Step) error {
 		e.settle(a)
 	}
 	a.pending = false
-	a.record.Since = e.since(a)
+	if a.tail != silence {
+		a.record.Since = e.since(a)
+	}
 	waited := waitsOf(&a.record)
 	notices, err := a.record.Take(s)
 	if err != nil {

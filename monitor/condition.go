@@ -67,14 +67,14 @@ func (e *Engine) conditionsOf(s *series) []Condition {
 			Since: ix.cal.Start(ws.withheldSince), Text: textOf(ws.withheld),
 		})
 	}
-	seen := s.seen
-	if seen == 0 && s.birth != unborn { // it was opened before anything was heard of it
-		seen = ix.cal.Start(s.birth)
-	}
-	if expect := ix.cfg.Expect; expect > 0 && s.sum == nil && seen.Add(expect) < e.clock {
+	if expect := ix.cfg.SilentFor(s.name); s.silentAt() < e.clock {
+		text := "nothing was heard for longer than "
+		if s.neverHeard() {
+			text = "it was never heard of, for longer than "
+		}
 		list = append(list, Condition{
-			Series: s.name, Indicator: ix.cfg.Name, Kind: Silent, Since: seen,
-			Text: "nothing was heard for longer than " + config.FormatDuration(expect),
+			Series: s.name, Indicator: ix.cfg.Name, Kind: Silent, Since: s.heardAt(),
+			Text: text + config.FormatDuration(expect),
 		})
 	}
 	return list

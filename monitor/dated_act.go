@@ -177,6 +177,7 @@ func (e *Engine) enforce(f *fact, from, until Instant) {
 	for _, s := range e.matched(f) {
 		ix := s.indicator
 		s.dates = e.datesOf(ix, s.name)
+		e.awaitAgain(s, NotOpen)
 		s.forgetSums()
 		e.touch(s)
 		c := change{series: s, from: ix.firstFrom(from)}

@@ -31,6 +31,7 @@ const (
 	flagNamed    = 1
 	flagRetired  = 2
 	flagArrivals = 4
+	flagSilence  = 8 // there was a silence: its alerts precede the rest of the head
 )
 
 // errEncoding says that stored bytes are not what this program wrote.
@@ -43,8 +44,8 @@ func (s *series) encode(b []byte, whole bool) []byte {
 	if s.retired {
 		b[at] = flagNamed | flagRetired
 		b = binary.AppendVarint(appendString(b, s.name), s.unpaired)
-		for d := range s.tails {
-			b = binary.AppendUvarint(b, uint64(s.tails[d].opened))
+		for _, d := range [...]direction{upper, lower, silence} {
+			b = binary.AppendUvarint(b, uint64(s.tail(d).opened))
 		}
 		return b
 	}
@@ -55,6 +56,10 @@ func (s *series) encode(b []byte, whole bool) []byte {
 		b[at] |= flagNamed
 		b = appendString(b, s.name)
 		b = appendString(b, s.indicator.cfg.Name)
+	}
+	if s.silence.opened > 0 {
+		b[1] |= flagSilence
+		b = s.silence.encode(b)
 	}
 	b = binary.AppendVarint(b, s.birth)
 	b = binary.AppendVarint(b, s.trimmed)

@@ -55,8 +55,10 @@ type Engine struct {
 	// pending are alerts whose evidence was corrected at the present moment.
 	pending []*alert
 	wakes   wakes
-	comings comings
-	account Account
+	// deadlines are when series will be silent.
+	deadlines deadlines
+	comings   comings
+	account   Account
 	// facts are the acts on series that hold, and factsJSON is how they are
 	// stored; because is why looks are being made again, "" where data changed.
 	facts     []fact
@@ -216,6 +218,7 @@ func (e *Engine) advance(to Instant) {
 			ix.start(to)
 		}
 		e.reschedule()
+		e.awaken(to)
 	}
 	e.clock = to
 	e.ids.drop(to)
@@ -240,7 +243,7 @@ func (e *Engine) NextDue() (Instant, bool) {
 			due = min(due, ix.nextDue)
 		}
 	}
-	due = min(due, e.nextWake(), e.nextComing())
+	due = min(due, e.nextWake(), e.nextComing(), e.nextDeadline())
 	if len(e.pending) > 0 {
 		const soon = 1_000_000 // a second, in which more of the same may come
 		due = min(due, e.clock+soon)

@@ -12,13 +12,19 @@ type direction int
 const (
 	upper direction = iota
 	lower
+	// silence is no tail: nothing was reported at all.
+	silence
 )
 
 var bothTails = [...]direction{upper, lower}
 
 func (d direction) name() life.Direction {
-	if d == upper {
+	switch d {
+	case upper:
 		return life.Upper
+	case silence:
+		return life.Silence
+	case lower:
 	}
 	return life.Lower
 }

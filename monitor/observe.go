@@ -1,6 +1,7 @@
 package monitor
 
 import (
+	queue "container/heap"
 	"fmt"
 	"slices"
 
@@ -262,6 +263,9 @@ func (e *Engine) enter(ix *indicator, name string) *series {
 	e.byName[s.name] = s
 	ix.series = append(ix.series, s)
 	e.touch(s)
+	if within := ix.cfg.SilentFor(name); within > 0 && !e.passing && e.clock != Beginning {
+		queue.Push(&e.deadlines, deadline{e.clock.Add(within), s})
+	}
 	return s
 }
 
@@ -338,6 +342,7 @@ func (e *Engine) add(c *contribution, id string, sign int) change {
 			e.account.Late++
 		}
 		s.seen = e.clock
+		e.heard(s)
 	}
 	revised := false
 	for slot := from; slot <= to; slot++ {

@@ -9,11 +9,15 @@ import (
 	"tailbell/monitor/life"
 )
 
-// rearrange lets windows come, go and change their order, and indicators leave
-// the set-up and come back.
+// rearrange lets windows come, go and change their order, indicators leave the
+// set-up and come back, and series be expected to report.
 func (g *twinStream) rearrange(c *twinStanza) {
 	if g.chance(0.6) {
 		c.windows = g.windows(c.every)
+	}
+	if g.chance(0.5) {
+		c.expect = fmt.Sprintf("expect = [{ series = \"p/%s/new\", within = %q }, { series = \"**\", within = %q }]\n",
+			c.name, minutes(g.span(c.slot, 1, 4)), minutes(g.span(c.slot, 1, 6)))
 	}
 	in := 0
 	for i := range g.stanzas {
@@ -30,7 +34,7 @@ func (g *twinStream) rearrange(c *twinStanza) {
 // indicators come and go, an undisturbed engine with one that is drained and
 // restarted at random.
 func TestRearrangedRestarted(t *testing.T) {
-	closed, worsened := 0, 0
+	closed, worsened, silences := 0, 0, 0
 	for seed := range uint64(60) {
 		g := newTwinStream(t, seed)
 		g.rearranges = true
@@ -44,11 +48,13 @@ func TestRearrangedRestarted(t *testing.T) {
 				closed++
 			case n.Step.Kind == life.StepWorsened:
 				worsened++
+			case n.Record.Silence != nil && n.Step.Kind == life.StepReturned:
+				silences++
 			}
 		}
 	}
-	t.Logf("%d alerts closed as no longer monitored, %d worsenings", closed, worsened)
-	if closed < 8 || worsened < 40 {
+	t.Logf("%d alerts closed as no longer monitored, %d worsenings, %d silences that returned", closed, worsened, silences)
+	if closed < 8 || worsened < 40 || silences < 40 {
 		t.Error("the streams test too little")
 	}
 }

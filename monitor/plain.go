@@ -28,6 +28,7 @@ func (e *Engine) plainRow(m *Message, o *Observation) bool {
 	s.makeRoom()
 	s.cells = append(s.cells, cell{slot: slot, events: o.Events, exposure: exposure, saysEvents: 1, saysExposure: 1, items: 1})
 	s.seen = e.clock
+	e.heard(s)
 	e.account.Counted++
 	e.touchSlot(s, slot)
 	return true

@@ -200,7 +200,7 @@ func (t *tail) ownerOf(boundary int64) *alert {
 // amend withdraws an alert of which no look is left that signals, and else
 // leaves the correction of its evidence to when the clock moves.
 func (e *Engine) amend(a *alert) {
-	t := &a.series.tails[a.tail]
+	t := a.series.tail(a.tail)
 	if !a.frozen && t.of(a) == 0 {
 		if t.current == a {
 			t.leave(a.series.indicator.looked)

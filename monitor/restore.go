@@ -40,6 +40,7 @@ func Restore(p Partition, snap *Snapshot, record func(id string) (life.Record, e
 	e.restoreComings()
 	e.reschedule()
 	e.rewakeAll()
+	e.await()
 	return e, nil
 }
 
@@ -137,8 +138,8 @@ func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(st
 	case s.indicator == nil:
 		return fmt.Errorf("%w: the indicator of %q is not in force", errEncoding, s.name)
 	}
-	for d := range s.tails {
-		for _, a := range s.tails[d].all() {
+	for _, d := range [...]direction{upper, lower, silence} {
+		for _, a := range s.tail(d).all() {
 			var err error
 			if a.record, err = record(a.record.ID); err != nil {
 				return fmt.Errorf("alert %s: %w", a.record.ID, err)
@@ -192,8 +193,8 @@ func (e *Engine) overlay(s *series, data []byte) error {
 	switch {
 	case flags&flagRetired != 0:
 		*s = series{number: s.number, name: r.string(), retired: true, unpaired: r.int()}
-		for d := range s.tails {
-			s.tails[d].opened = int(r.uint())
+		for _, d := range [...]direction{upper, lower, silence} {
+			s.tail(d).opened = int(r.uint())
 		}
 		return r.err
 	case flags&flagNamed != 0:
@@ -202,6 +203,9 @@ func (e *Engine) overlay(s *series, data []byte) error {
 		if i := slices.IndexFunc(e.indicators, func(ix *indicator) bool { return ix.cfg.Name == owner }); i >= 0 {
 			s.indicator = e.indicators[i] // else it must be a stub by now
 		}
+	}
+	if s.silence = (tail{}); flags&flagSilence != 0 {
+		s.silence = r.tail(s, silence)
 	}
 	s.birth, s.trimmed, s.unpaired, s.seen = r.int(), r.int(), r.int(), Instant(r.int())
 	s.windows = make([]windowState, r.length())

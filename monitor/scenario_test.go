@@ -165,6 +165,13 @@ func renderStep(b *bytes.Buffer, n *life.Notice) {
 		fmt.Fprintf(b, " (%s: %s)", n.Step.By, n.Step.Why)
 	}
 	b.WriteByte('\n')
+	if h := r.Silence; h != nil && n.Step.Kind == life.StepOpened {
+		last := "never"
+		if h.Last != nil {
+			last = h.Last.Format("2006-01-02T15:04Z")
+		}
+		fmt.Fprintf(b, "    last heard %s, expected within %s\n", last, h.Within)
+	}
 	if e := n.Step.Evidence; e != nil {
 		fmt.Fprintf(b, "    %s to %s: %d in %s %s, expected %.4g, p %.5g, critical %d, late %d, rate %.4g (%.4g to %.4g)\n",
 			e.Window, e.To.Format("2006-01-02"), e.Events, e.Exposure, e.Unit, e.Expected, e.P, e.Critical, e.LateEvents,

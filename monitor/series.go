@@ -39,6 +39,8 @@ type series struct {
 	// direction.
 	windows []windowState
 	tails   [2]tail
+	// silence is that of the whole series: nothing of it is looked at.
+	silence tail
 	// base is the baseline that serves the series under the stanza baseOf.
 	base   *config.Baseline
 	baseOf *config.Indicator
@@ -124,6 +126,14 @@ func compareLit(a, b litLook) int {
 	return cmp.Or(a.occasion.compare(b.occasion), a.window-b.window)
 }
 
+// tail returns one direction of the series.
+func (s *series) tail(d direction) *tail {
+	if d == silence {
+		return &s.silence
+	}
+	return &s.tails[d]
+}
+
 // litAt returns the index of the look at slots among the lit ones.
 func (t *tail) litAt(boundary int64, window int) (int, bool) {
 	return slices.BinarySearchFunc(t.lit, litLook{boundary: boundary, window: window}, compareLit)
@@ -188,6 +198,7 @@ func (e *Engine) trim(s *series) {
 			e.touch(s)
 		}
 	}
+	s.silence.trim(ix.frozenAt, s.windows, e.alerts)
 }
 
 // forget drops the estimates and marks that no look will need again.

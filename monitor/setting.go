@@ -137,6 +137,8 @@ func (e *Engine) install(next *config.Setup, version int, from map[string]int64)
 		horizon = max(horizon, cfg.Horizon)
 	}
 	e.ids.configure(horizon, next.Limits.MaxIDs)
+	e.enterExpected()
 	e.reschedule()
 	e.rewakeAll()
+	e.await()
 }

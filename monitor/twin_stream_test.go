@@ -43,6 +43,7 @@ type twinStanza struct {
 	rate                                              float64       // per unit of exposure
 	slots                                             *twinSlots
 	out                                               bool // of the set-up
+	expect                                            string
 }
 
 // twinPaces are families of slots that go well together in one stream, and a
@@ -199,6 +200,7 @@ func (c *twinStanza) text() string {
 		fmt.Fprintf(&b, "since = %q\n", c.since)
 	}
 	fmt.Fprintf(&b, "settle = %q\nhorizon = %q\nahead = %q\n", minutes(c.settle), minutes(c.horizon), minutes(c.ahead))
+	b.WriteString(c.expect)
 	fmt.Fprintf(&b, "windows = [%s]\ntails = [%s]\n%s\nquiet = %d\n[indicator.baseline]\n%s", c.windows, c.tails, c.limit, c.quiet, c.baseline)
 	return b.String()
 }

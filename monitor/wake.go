@@ -124,7 +124,11 @@ func (e *Engine) nextWake() Instant {
 // awake lets happen what happens by itself up to a moment, on the clock's way to
 // another. Of the reminders that fall due on that way only the first is given.
 func (e *Engine) awake(until, to Instant) {
-	for e.nextWake() <= until && len(e.wakes) > 0 {
+	for min(e.nextWake(), e.nextDeadline()) <= until && len(e.wakes)+len(e.deadlines) > 0 {
+		if e.nextDeadline() < e.nextWake() {
+			e.fallSilent()
+			continue
+		}
 		a, moment := e.wakes[0].alert, e.wakes[0].at
 		queue.Pop(&e.wakes)
 		if a.record.Shelf != nil {

@@ -22,7 +22,7 @@ func Wants(o *config.Outlet) func(*life.Notice) bool {
 			return false
 		case r.Direction == life.Upper && !t.Upper, r.Direction == life.Lower && !t.Lower:
 			return false
-		case t.PAtMost > 0 && r.Worst.Log10P > math.Log10(t.PAtMost):
+		case t.PAtMost > 0 && r.Silence == nil && r.Worst.Log10P > math.Log10(t.PAtMost):
 			return false
 		}
 		return len(t.Steps) == 0 || slices.Contains(t.Steps, string(n.Step.Kind))

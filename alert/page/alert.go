@@ -77,6 +77,9 @@ func (p *Page) alertScreen(r *http.Request, id, wrong string, given url.Values) 
 	if !words.SameLook(&record.Worst, &record.Opening) {
 		d.Strongest = words.Sentence(record, &record.Worst)
 	}
+	if record.Silence != nil {
+		d.Numbers, d.Basis = "", ""
+	}
 	zone := words.Zone(record)
 	for i := range record.Steps {
 		line := stepOf(record, &record.Steps[i], zone)
@@ -91,7 +94,9 @@ func (p *Page) alertScreen(r *http.Request, id, wrong string, given url.Values) 
 		d.By = nameOf(r, who, given)
 		d.Once = rand.Text()
 	}
-	d.draw(r.Context(), p, record)
+	if record.Silence == nil {
+		d.draw(r.Context(), p, record)
+	}
 	return &screen{name: "alert", Title: title(record), Here: "/alerts", Data: d}, nil
 }
 

@@ -245,6 +245,9 @@ func measureOf(in *config.Indicator) string {
 // done, or the strongest evidence so far.
 func spanOf(r *life.Record) figure.Span {
 	s := figure.Span{Kind: figure.Alert, From: r.Opening.To, To: r.Worst.To, Text: "alert " + r.ID}
+	if r.Silence != nil {
+		s.From, s.To, s.Text = r.Opened, r.Opened, "silence "+r.ID
+	}
 	if r.Mark == life.MarkReal {
 		s.Kind = figure.Real
 	}

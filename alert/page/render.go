@@ -136,17 +136,11 @@ func dict(pairs ...any) map[string]any {
 // mark is the shape of an alert: its direction, filled while nobody has
 // acknowledged that it signals. The word always stands beside it.
 func mark(r *life.Record) string {
-	switch up := r.Direction == life.Upper; r.Condition {
+	switch r.Condition {
 	case life.Unacknowledged:
-		if up {
-			return "\u25b2"
-		}
-		return "\u25bc"
+		return map[life.Direction]string{life.Upper: "\u25b2", life.Lower: "\u25bc", life.Silence: "\u25c6"}[r.Direction]
 	case life.Acknowledged:
-		if up {
-			return "\u25b3"
-		}
-		return "\u25bd"
+		return map[life.Direction]string{life.Upper: "\u25b3", life.Lower: "\u25bd", life.Silence: "\u25c7"}[r.Direction]
 	case life.Returned:
 		return "\u25cb"
 	case life.Closed:
@@ -161,6 +155,9 @@ func mark(r *life.Record) string {
 
 // title is an alert in a few words.
 func title(r *life.Record) string {
+	if r.Silence != nil {
+		return words.Place(r) + ": nothing heard"
+	}
 	how := "more "
 	if r.Direction == life.Lower {
 		how = "fewer "

@@ -23,6 +23,9 @@ func When(n *life.Notice) string { return stamp(n.Step.At.In(zoneOf(&n.Record)))
 func Subject(n *life.Notice) string {
 	r := &n.Record
 	text := sentenceCase(what(n)) + ": "
+	if r.Silence != nil {
+		return text + "nothing heard of " + place(r)
+	}
 	switch n.Step.Kind {
 	case life.StepTest:
 		return text + "a trial of this outlet"

@@ -32,7 +32,12 @@ func Place(r *life.Record) string { return place(r) }
 func Noun(e *life.Evidence) string { return noun(e) }
 
 // Brief gives the numbers of a look in one short phrase, in the record's zone.
-func Brief(r *life.Record, e *life.Evidence) string { return brief(e, zoneOf(r)) }
+func Brief(r *life.Record, e *life.Evidence) string {
+	if h := r.Silence; h != nil {
+		return "nothing heard; expected within " + clean(h.Within)
+	}
+	return brief(e, zoneOf(r))
+}
 
 // Numbers gives the ratio and how a look was judged, Basis by which usual rate.
 func Numbers(e *life.Evidence) string { return numbers(e) }

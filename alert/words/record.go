@@ -20,7 +20,9 @@ func Record(r *life.Record, width int) string {
 	}
 	fmt.Fprintf(&b, "alert %s  %s  %s  %s\n", clean(r.ID), condition, arrow(r.Direction), clean(r.Series))
 	paragraphs := []string{Sentence(r, &r.Opening), numbers(&r.Opening), basis(r, &r.Opening)}
-	if !sameLook(&r.Worst, &r.Opening) {
+	if r.Silence != nil {
+		paragraphs = []string{unheard(r, zone)}
+	} else if !sameLook(&r.Worst, &r.Opening) {
 		paragraphs = append(paragraphs, "At its strongest: "+Sentence(r, &r.Worst))
 	}
 	paragraphs = append(paragraphs, afterwards(r, zone), turnedOut(r), sources(r))

@@ -13,6 +13,9 @@ import (
 // span, the exposure, what would be usual, how often so much or so little
 // comes by chance, and the exact bounds of the rate.
 func Sentence(r *life.Record, e *life.Evidence) string {
+	if r.Silence != nil {
+		return unheard(r, zoneOf(r))
+	}
 	return finding(r, e) + carriers(r, e) + " " + bounds(e)
 }
 

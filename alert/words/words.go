@@ -64,6 +64,9 @@ func Line(n *life.Notice) string {
 	r := &n.Record
 	zone := zoneOf(r)
 	text := Heading(n) + "  " + place(r)
+	if r.Silence != nil {
+		return text + silentLine(n, zone)
+	}
 	switch n.Step.Kind {
 	case life.StepOpened, life.StepWorsened, life.StepCorrected:
 		return text + ": " + brief(evidenceOf(&n.Step, &r.Opening), zone)
@@ -104,6 +107,9 @@ func Heading(n *life.Notice) string {
 func Paragraphs(n *life.Notice) []string {
 	r := &n.Record
 	zone := zoneOf(r)
+	if r.Silence != nil {
+		return silent(n, zone)
+	}
 	switch n.Step.Kind {
 	case life.StepOpened:
 		return opened(n, zone)
@@ -292,6 +298,8 @@ func what(n *life.Notice) string {
 
 func arrow(d life.Direction) string {
 	switch d {
+	case life.Silence:
+		return "\u25c7 nothing heard"
 	case life.Upper:
 		return "\u25b2 more than usual"
 	case life.Lower:

@@ -112,6 +112,10 @@ func tabulate(w io.Writer, records []life.Record) error {
 	rows := [][]string{{"ALERT", "OPENED", "CONDITION", "TAIL", "WINDOW", "EVENTS", "EXPECTED", "P", "SERIES"}}
 	for i := range records {
 		r := &records[i]
+		if r.Silence != nil {
+			rows = append(rows, []string{r.ID, words.Opened(r), string(r.Condition), string(r.Direction), "", "", "", "", r.Series})
+			continue
+		}
 		rows = append(rows, []string{
 			r.ID, words.Opened(r), string(r.Condition), string(r.Direction), r.Worst.Window,
 			strconv.FormatInt(r.Worst.Events, 10), words.Expected(&r.Worst), words.P(&r.Worst), r.Series,

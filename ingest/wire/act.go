@@ -84,10 +84,10 @@ func readActField(field field, act *monitor.Act) *fault {
 		}
 		act.Direction = life.Direction(text)
 		switch act.Direction {
-		case life.Upper, life.Lower:
+		case life.Upper, life.Lower, life.Silence:
 			return nil
 		}
-		return refuse(monitor.BadAct, "direction is %q; it must be upper or lower", clip(text))
+		return refuse(monitor.BadAct, "direction is %q; it must be upper, lower or silence", clip(text))
 	case "by":
 		return readActText(field, MaxByLength, &act.By)
 	case "why":

@@ -40,6 +40,9 @@ type Direction string
 const (
 	Upper Direction = "upper" // more events than usual
 	Lower Direction = "lower" // fewer events than usual
+	// Silence is no tail: nothing at all was reported. Such a record has no
+	// evidence.
+	Silence Direction = "silence"
 )
 
 // StepKind says what happened to an alert.
@@ -112,8 +115,10 @@ type Record struct {
 	Zone string `json:"zone"`
 	// Opening is the evidence that opened it (as corrected since), Worst the
 	// strongest so far.
-	Opening Evidence `json:"opening"`
-	Worst   Evidence `json:"worst"`
+	Opening Evidence `json:"opening,omitzero"`
+	Worst   Evidence `json:"worst,omitzero"`
+	// Silence says what was expected of a series that is silent, nil else.
+	Silence *Heard `json:"silence,omitempty"`
 	// Since holds the data after the opening look, free of the choice that
 	// the ring made; nil until a later look was made.
 	Since *Since `json:"since,omitempty"`
@@ -123,6 +128,14 @@ type Record struct {
 	MoreIDs int      `json:"more_ids,omitempty"`
 	Steps   []Step   `json:"steps"`
 	Caution string   `json:"caution"`
+}
+
+// Heard is what is known of a series that has fallen silent.
+type Heard struct {
+	// Last is when something of it was last counted, nil if nothing ever was.
+	Last *time.Time `json:"last_heard,omitempty"`
+	// Within is how long it may be silent.
+	Within string `json:"expected_within"`
 }
 
 // Shelf says who put an alert aside, until when, and why.
