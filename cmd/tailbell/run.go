@@ -58,6 +58,7 @@ the status as JSON while the bus is connected and no partition far behind, else
 	addConfigFlag(c, &path)
 	c.Flags().BoolVar(&o.asJSON, "json", false, "write alerts as JSON records, one a line")
 	c.Flags().StringVar(&o.health, "health", "127.0.0.1:4870", "loopback `ADDRESS` of /healthz and /readyz; off for none")
+	c.Flags().StringVar(&o.profiling, "profiling", noProfiling, "loopback `ADDRESS` of profiles of the process, see OPERATIONS.md; off for none")
 	c.Flags().StringVar(&o.logLevel, "log-level", "info", "the least `LEVEL` that is logged: debug, info, warn or error")
 	return c
 }
@@ -65,6 +66,7 @@ the status as JSON while the bus is connected and no partition far behind, else
 type runOptions struct {
 	asJSON           bool
 	health, logLevel string
+	profiling        string
 	level            zerolog.Level // of logLevel, set by check
 }
 
@@ -77,7 +79,7 @@ func (o *runOptions) check() error {
 		return fmt.Errorf("--log-level %q: it is debug, info, warn or error", o.logLevel)
 	}
 	o.level = levels[i]
-	return checkHealth(o.health)
+	return errors.Join(checkHealth(o.health), checkProfiling(o.profiling))
 }
 
 func runDaemon(ctx context.Context, setup *config.Setup, o runOptions, stdout, stderr io.Writer) (err error) {
@@ -87,6 +89,11 @@ func runDaemon(ctx context.Context, setup *config.Setup, o runOptions, stdout, s
 		return err
 	}
 	defer func() { err = errors.Join(err, h.close()) }()
+	profiles, err := startProfiling(ctx, o.profiling, log)
+	if err != nil {
+		return err
+	}
+	defer func() { err = errors.Join(err, profiles.close()) }()
 	pages, err := startPage(ctx, setup, log)
 	if err != nil {
 		return err
