@@ -19,14 +19,14 @@ import (
 // bareChain is the least that any monitor must do: it reads and decodes, counts
 // in a map, and writes the changed counters with the position in one synced
 // transaction; then it publishes a message for each batch. The stages overlap.
-func bareChain(ctx context.Context, b *bus.Bus, setup *config.Setup, path string, end uint64) error {
+func bareChain(ctx context.Context, b *bus.Bus, setup *config.Setup, path string, after, end uint64) error {
 	db, err := bolt.Open(path, 0o600, &bolt.Options{FreelistType: bolt.FreelistMapType, InitialMmapSize: 1 << 30})
 	if err != nil {
 		return err
 	}
 	c := &chain{db: db, bus: b, counts: map[string]int{}, batches: make(chan partition.Batch, 1), rows: make(chan chainRows), free: make(chan struct{}, 1)}
 	c.free <- struct{}{}
-	in, err := intake.Open(ctx, b, setup, 0, intake.Options{Stored: monitor.Beginning, Now: time.Now})
+	in, err := intake.Open(ctx, b, setup, 0, intake.Options{After: after, Stored: monitor.Beginning, Now: time.Now})
 	if err != nil {
 		return err
 	}

@@ -34,7 +34,7 @@ settle = "1m"
 horizon = "30m"
 events = "counted"
 windows = ["2m", "5m", "15m"]
-p_limit = 1e-5
+%s
 quiet = 3
 [indicator.baseline]
 kind = "reference"
@@ -47,12 +47,26 @@ type yardLoad struct {
 	series, perSlot, slots int
 	// perMessage is how many observations a message holds.
 	perMessage int
+	// allowance judges by an allowance instead of a limit on p.
+	allowance bool
+}
+
+// rule is what a look signals by.
+func (l yardLoad) rule() string {
+	if l.allowance {
+		return `allowance = "1 in 1y"`
+	}
+	return "p_limit = 1e-5"
 }
 
 func (l yardLoad) observations() int { return l.series * l.perSlot * l.slots }
 
 func (l yardLoad) String() string {
-	return fmt.Sprintf("%d series, %d a message", l.series, l.perMessage)
+	text := fmt.Sprintf("%d series, %d a message", l.series, l.perMessage)
+	if l.allowance {
+		text += ", allowance"
+	}
+	return text
 }
 
 // publish publishes the load and returns the position of its last message.

@@ -1,0 +1,135 @@
+package monitor
+
+import (
+	options "flag"
+	"fmt"
+	"math/rand/v2"
+	"os"
+	"runtime"
+	"slices"
+	"strings"
+	"testing"
+	"time"
+
+	"tailbell/config"
+)
+
+var (
+	millionSeries  = options.Int("million", 2000, "how many series TestMillion has")
+	millionMinutes = options.Int("million-minutes", 70, "how many minutes TestMillion plays after the series have begun")
+)
+
+const millionSetup = `
+name = "million"
+folder = "x"
+[limits]
+max_series = %d
+memory = "256GiB"
+[[indicator]]
+name = "restart"
+series = ["ferrybill/*/restart"]
+unit = "host-hours"
+every = "1m"
+settle = "1m"
+horizon = "10m"
+events = "each"
+exposure = "clock"
+clock = { size = 1, per = "1h" }
+ids = "none"
+windows = ["5m", "1h", "1d"]
+tails = ["upper"]
+p_limit = 1e-7
+quiet = 3
+[indicator.baseline]
+kind = "known"
+rate = 0.5
+`
+
+// TestMillion plays very many series of which one in twenty has an event in a
+// minute, and whose slots all end together: what they hold in memory, and how
+// long the looks of a minute keep what comes after them waiting. By hand:
+//
+//	go test ./monitor -run TestMillion -million 1000000 -million-minutes 12 -v -timeout 20m
+func TestMillion(t *testing.T) {
+	for _, way := range []string{"the same", "others each minute"} {
+		t.Run(way, func(t *testing.T) { playMillion(t, way == "the same") })
+	}
+}
+
+func playMillion(t *testing.T, same bool) {
+	t.Helper()
+	n := *millionSeries
+	setup, err := config.Parse(fmt.Appendf(nil, millionSetup, n), "set-up")
+	if err != nil {
+		t.Fatal(err)
+	}
+	names := make([]string, n)
+	for i := range names {
+		names[i] = fmt.Sprintf("ferrybill/host-%d/restart", i)
+	}
+	e := New(Partition{Of: 1, KeyParts: 1})
+	start := InstantOf(time.Date(2026, 3, 2, 0, 0, 0, 0, time.UTC))
+	e.Apply(&Message{Position: 1, Kind: SettingMessage, Stored: start, Setting: Setting{Setup: setup}})
+	e.Apply(&Message{Position: 2, Kind: Live, Stored: start})
+	before := heap()
+	random := rand.New(rand.NewPCG(20261201, 12))
+	// A day passes between the beginning of all series and the minutes played:
+	// all windows are full then.
+	report(e, names, start)
+	start = start.Add(25 * time.Hour)
+	e.Apply(&Message{Position: e.position + 1, Kind: Tick, Stored: start})
+	e.Drain()
+	quiet := heap() - before
+	looks := e.account.Looks
+	var waits []time.Duration
+	for minute := range *millionMinutes {
+		at := start.Add(time.Duration(minute) * time.Minute)
+		active := make([]string, 0, n/20)
+		for i := range n / 20 {
+			if same {
+				i = i * 20
+			} else {
+				i = random.IntN(n)
+			}
+			active = append(active, names[i])
+		}
+		report(e, active, at.Add(10*time.Second))
+		began := time.Now()
+		e.Apply(&Message{Position: e.position + 1, Kind: Tick, Stored: at.Add(time.Minute)})
+		waits = append(waits, time.Since(began))
+		e.Drain()
+	}
+	slices.Sort(waits)
+	t.Logf("%d series: %d B each when quiet, %d B at the end; resident %d MiB; %d looks; the looks of a minute take %s (median), %s at most",
+		n, quiet/int64(n), (heap()-before)/int64(n), residentMiB(), e.account.Looks-looks, waits[len(waits)/2], waits[len(waits)-1])
+	if want := int64(n * 3 * *millionMinutes); e.account.Looks-looks != want {
+		t.Errorf("%d looks, want %d", e.account.Looks-looks, want)
+	}
+	runtime.KeepAlive(names)
+}
+
+// report reports an event of each of the series.
+func report(e *Engine, series []string, at Instant) {
+	for block := range slices.Chunk(series, 1000) {
+		m := &Message{Position: e.position + 1, Kind: Observations, Stored: at}
+		for _, name := range block {
+			m.Items = append(m.Items, Item{Observation: Observation{Series: name, Start: at, End: at, Instant: true, Events: 1, HasEvents: true}})
+		}
+		e.Apply(m)
+		e.Drain()
+	}
+}
+
+// residentMiB is what the process occupies, 0 where that is not told.
+func residentMiB() (n int) {
+	text, err := os.ReadFile("/proc/self/status")
+	if err != nil {
+		return 0
+	}
+	if _, after, ok := strings.Cut(string(text), "VmRSS:"); ok {
+		if _, err := fmt.Sscan(after, &n); err != nil {
+			return 0
+		}
+	}
+	return n >> 10
+}
