@@ -121,7 +121,7 @@ func (ix *indicator) arrivalView(s *series, ep *epoch, l *look) View {
 	from := at - ix.widthOf(l.window)
 	judging := ix.judging(at)
 	v := View{
-		Series: s.name, Indicator: cfg.Name, Window: ix.places[l.window].Name,
+		Series: s.name, Indicator: cfg.Name, Window: ix.places[l.window].Name, Arrival: true,
 		Start: from.in(cfg.Zone), End: at.in(cfg.Zone), Due: at.in(cfg.Zone),
 		Made: l.status == made, Status: l.status.String(),
 		Events: l.events, Late: l.late, Exposure: l.exposure, Digits: cfg.GrainDigits, Provisional: l.provisional,

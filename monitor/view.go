@@ -9,6 +9,9 @@ import (
 // View is one look as shown to people: what it saw and how it was judged.
 type View struct {
 	Series, Indicator, Window string
+	// Arrival says that the look was made when an event came: its span is (Start,
+	// End].
+	Arrival bool
 	// Start and End bound the span [Start, End) and Due is when the look fell
 	// due, all in the indicator's zone.
 	Start, End, Due time.Time

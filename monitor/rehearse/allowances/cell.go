@@ -41,6 +41,8 @@ type Cell struct {
 	Windows []int
 	Lower   bool
 	Upper   bool
+	// Arrival has events looked at when they come, one by one; Alone, only so.
+	Arrival, Alone bool
 	// Allowance is as in a set-up; Assurance too. If Shared, it is one for all the
 	// series that share an engine.
 	Allowance string
@@ -161,6 +163,9 @@ func (c *Cell) setup(series int, references []int64) (*config.Setup, error) {
 	if c.Lower {
 		tails = append(tails, "lower")
 	}
+	if c.Arrival {
+		line("looks = [%s]", list(c.looks(), func(s string) string { return fmt.Sprintf("%q", s) }))
+	}
 	line("tails = [%s]", list(tails, func(s string) string { return fmt.Sprintf("%q", s) }))
 	switch {
 	case c.Limit > 0:
@@ -216,6 +221,14 @@ func (c *Cell) base(line func(string, ...any), by, unit string) {
 
 func (c *Cell) reference(line func(string, ...any), events int64) {
 	line("kind = \"reference\"\nevents = %d\nexposure = %v", events, c.Reference.Exposure)
+}
+
+// looks are the ways in which windows are looked at.
+func (c *Cell) looks() []string {
+	if c.Alone {
+		return []string{"arrival"}
+	}
+	return []string{"slot", "arrival"}
 }
 
 // lag is by how many slots a known delay may be late.

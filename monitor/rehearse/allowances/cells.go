@@ -6,6 +6,7 @@ func Cells() []Cell {
 	cells := steady()
 	cells = append(cells, proportions()...)
 	cells = append(cells, changing()...)
+	cells = append(cells, arriving()...)
 	cells = append(cells, slow()...)
 	return append(cells, estimated()...)
 }
@@ -132,6 +133,21 @@ func Nights(name string, window int, upper, lower bool) Cell {
 	return Cell{
 		Name: name, Hourly: true, Rate: 3. / 7, Factors: factors, Windows: []int{window}, Upper: upper, Lower: lower,
 		Allowance: "40 in 1y", Series: 40, Slots: 24*365*3 + window,
+	}
+}
+
+// arriving are rates whose events are looked at when they come.
+func arriving() []Cell {
+	one := func(name string, mean float64, windows []int, allowance string, length int, alone bool) Cell {
+		c := Cell{Name: name, Rate: mean / float64(windows[0]), Windows: windows, Allowance: allowance, Arrival: true, Alone: alone}
+		return years(length, upper(c))
+	}
+	return []Cell{
+		one("at arrivals: 28d, mean 2", 2, []int{28}, "3 in 1y", 1800, true),
+		one("at arrivals: 7d, mean 0.1", 0.1, []int{7}, "2 in 1y", 7200, true),
+		one("at slots and arrivals: 28d, mean 2", 2, []int{28}, "4 in 1y", 1600, false),
+		one("at slots and arrivals: 7d, 28d; mean 2 in 7d", 2, []int{7, 28}, "5 in 1y", 1200, false),
+		closed(one("at arrivals, closed by hand: 28d, mean 2", 2, []int{28}, "3 in 1y", 1800, true)),
 	}
 }
 

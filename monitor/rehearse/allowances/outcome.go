@@ -152,8 +152,8 @@ func (o *Outcome) Predicted() float64 {
 	}
 	var alphas []float64
 	for w := range c.Windows {
-		for d, watched := range []bool{c.Upper, c.Lower} {
-			l := o.limits[2*w+d]
+		for d, watched := range []bool{c.Upper && !c.Alone, c.Lower && !c.Alone, c.Arrival} {
+			l := o.limits[3*w+d]
 			if !watched {
 				continue
 			}
@@ -188,7 +188,7 @@ func (c *Cell) plan() (*allowance.Plan, bool) {
 		p.Known = c.Delay.Reported
 	}
 	for _, w := range c.Windows {
-		p.Windows = append(p.Windows, allowance.Window{Slots: w, Step: 1, Slot: true})
+		p.Windows = append(p.Windows, allowance.Window{Slots: w, Step: 1, Slot: !c.Alone, Arrival: c.Arrival})
 	}
 	return p, true
 }

@@ -1,10 +1,12 @@
 package allowances
 
 import (
+	"cmp"
 	"errors"
 	"fmt"
 	"math"
 	"math/rand/v2"
+	"slices"
 
 	"tailbell/config"
 	"tailbell/monitor"
@@ -51,13 +53,29 @@ func (c *Cell) play(r *rand.Rand, series int) (*tally, error) {
 		for i := range series {
 			items = p.observe(items, i, slot)
 		}
-		p.apply(monitor.Message{Kind: monitor.Observations, Items: items, Time: p.start(slot+1) - 1, HasTime: true})
-		if err := p.settle(); err != nil {
+		if err := p.tell(items, slot); err != nil {
 			return nil, err
 		}
 	}
 	p.apply(monitor.Message{Kind: monitor.Tick, Time: p.start(c.Slots), HasTime: true})
 	return p.tally, p.settle()
+}
+
+// tell brings the engine what is reported of a slot, when it ends or, where looks
+// are made at arrivals, each event when it comes.
+func (p *player) tell(items []monitor.Item, slot int) error {
+	if !p.cell.Arrival {
+		p.apply(monitor.Message{Kind: monitor.Observations, Items: items, Time: p.start(slot+1) - 1, HasTime: true})
+		return p.settle()
+	}
+	slices.SortStableFunc(items, func(a, b monitor.Item) int { return cmp.Compare(a.Observation.Start, b.Observation.Start) })
+	for i, x := range items {
+		p.apply(monitor.Message{Kind: monitor.Observations, Items: items[i : i+1], Time: x.Observation.Start, HasTime: true})
+		if err := p.settle(); err != nil {
+			return err
+		}
+	}
+	return nil
 }
 
 func (p *player) apply(m monitor.Message) {

@@ -11,7 +11,7 @@ import (
 // tally counts what an engine makes of the series of a cell.
 type tally struct {
 	cell  *Cell
-	parts int // windows times tails
+	parts int // windows times tails, and looks at arrivals
 	// from is when counting begins.
 	from   monitor.Instant
 	series []seen
@@ -37,7 +37,7 @@ type seen struct {
 type span struct{ low, high float64 }
 
 func newTally(c *Cell, series int) *tally {
-	t := &tally{cell: c, parts: 2 * len(c.Windows), series: make([]seen, series), windows: map[string]int{}}
+	t := &tally{cell: c, parts: 3 * len(c.Windows), series: make([]seen, series), windows: map[string]int{}}
 	t.from = beginning
 	if !c.Whole {
 		t.from += monitor.Instant(c.longest()) * monitor.Instant(c.slot().Microseconds())
@@ -77,20 +77,20 @@ func (t *tally) look(v monitor.View) {
 	}
 	i := number(v.Series)
 	counts := monitor.InstantOf(v.Due) >= t.from
+	if v.Arrival {
+		t.arrival(&v, 3*w+2, &t.series[i], counts)
+		return
+	}
 	for d, tail := range []*monitor.ViewTail{&v.Upper, &v.Lower} {
 		if !tail.Watched {
 			continue
 		}
-		part := 2*w + d
+		part := 3*w + d
 		at := i*t.parts + part
 		if t.looks++; !tail.Signals {
 			t.dark++
 		}
-		l := &t.limits[part]
-		if l.high == 0 || tail.Limit < l.low {
-			l.low = tail.Limit
-		}
-		l.high = max(l.high, tail.Limit)
+		t.limits[part].hold(tail.Limit)
 		if tail.Signals && !t.lit[at] && counts {
 			if t.looked[at] {
 				t.series[i].crossings++
@@ -100,6 +100,26 @@ func (t *tally) look(v monitor.View) {
 		}
 		t.lit[at], t.looked[at] = tail.Signals, true
 	}
+}
+
+// arrival counts a look at an event that came alone: it crosses if the window
+// held one less than its critical count just before.
+func (t *tally) arrival(v *monitor.View, part int, s *seen, counts bool) {
+	if t.looks++; !v.Upper.Signals {
+		t.dark++
+	}
+	t.limits[part].hold(v.Upper.Limit)
+	if counts && v.Upper.Signals && v.Events == v.Upper.Critical {
+		s.crossings++
+	}
+}
+
+// hold widens the span to a limit.
+func (l *span) hold(limit float64) {
+	if l.high == 0 || limit < l.low {
+		l.low = limit
+	}
+	l.high = max(l.high, limit)
 }
 
 // opened counts an alert.
