@@ -21,8 +21,11 @@ func (p *prose) limit(in *Indicator) {
 	} else {
 		p.tails(in)
 	}
-	p.line("  Alerts return after %s in a row without a signal. Bounds are shown at %s%% confidence.",
-		counted(in.Quiet, "look"), number(100-100*in.Alpha))
+	quiet := counted(in.Quiet, "look") + " in a row without a signal"
+	if !in.SlotLooks {
+		quiet = counted(in.Quiet, "slot") + " in a row by whose end no span signals any more"
+	}
+	p.line("  Alerts return after %s. Bounds are shown at %s%% confidence.", quiet, number(100-100*in.Alpha))
 }
 
 func (p *prose) tails(in *Indicator) {
