@@ -129,8 +129,9 @@ func (e *Engine) Slots() []SlotSum {
 		if s.sum != nil {
 			continue
 		}
-		for i := range s.cells {
-			sums = append(sums, s.slotSum(&s.cells[i]))
+		own := s.ownCells()
+		for i := range own {
+			sums = append(sums, s.slotSum(&own[i]))
 		}
 	}
 	return sums

@@ -12,6 +12,7 @@ type fact struct {
 	Kind     ActKind    `json:"kind"`
 	Series   string     `json:"series"` // a pattern
 	What     ChangeKind `json:"what,omitempty"`
+	Into     string     `json:"into,omitempty"`
 	Side     Side       `json:"side,omitempty"`
 	Straddle bool       `json:"straddle,omitempty"`
 	From     Instant    `json:"from"`
@@ -58,6 +59,18 @@ type cut struct {
 type turn struct {
 	slot int64
 	open bool
+	// heir says that it opens in the place of others, whose counts it has.
+	heir bool
+}
+
+// turns reports whether the fact opens or closes the series that it matches.
+func (f *fact) turns() bool {
+	switch f.What {
+	case Opening, Closing, Renamed, Merged:
+		return true
+	case CaseDefinition, Method:
+	}
+	return false
 }
 
 // datesOf returns how the facts hold for a series of the indicator.
@@ -65,11 +78,16 @@ func (e *Engine) datesOf(ix *indicator, name string) *dates {
 	var d *dates
 	for i := range e.facts {
 		f := &e.facts[i]
-		if !f.matches(name) {
+		heir := f.Into != "" && f.Into == name
+		if !heir && !f.matches(name) {
 			continue
 		}
 		if d == nil {
 			d = &dates{}
+		}
+		if heir {
+			d.turns = append(d.turns, turn{slot: ix.firstFrom(f.From), open: true, heir: true})
+			continue
 		}
 		d.add(ix, f)
 	}
@@ -85,8 +103,8 @@ func (d *dates) add(ix *indicator, f *fact) {
 		d.cuts = append(d.cuts, cut{ix.firstFrom(f.From), f.Taken})
 	case Change:
 		switch {
-		case f.What == Opening || f.What == Closing:
-			d.turns = append(d.turns, turn{ix.firstFrom(f.From), f.What == Opening})
+		case f.turns():
+			d.turns = append(d.turns, turn{slot: ix.firstFrom(f.From), open: f.What == Opening})
 		case !f.Straddle:
 			d.cuts = append(d.cuts, cut{ix.firstFrom(f.From), Beginning})
 		}
@@ -140,7 +158,7 @@ func (s *series) begin(boundary int64) int64 {
 	begin := s.birth
 	if s.dates != nil {
 		for _, t := range s.dates.turns {
-			if t.open && t.slot < boundary {
+			if t.open && !t.heir && t.slot < boundary {
 				begin = max(begin, t.slot)
 			}
 		}

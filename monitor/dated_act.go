@@ -16,7 +16,7 @@ const maxFacts = 5000
 // performOnSeries takes an act on series, or says why it can't be.
 func (e *Engine) performOnSeries(act *Act) (Reason, string) {
 	f := fact{
-		Kind: act.Kind, Series: act.Series, What: act.What, Side: act.Side, Straddle: act.Straddle,
+		Kind: act.Kind, Series: act.Series, What: act.What, Into: act.Into, Side: act.Side, Straddle: act.Straddle,
 		From: act.From, Until: act.Until, Taken: e.clock, By: act.By, Why: act.Why,
 	}
 	if act.Kind == BackInService {
@@ -25,7 +25,7 @@ func (e *Engine) performOnSeries(act *Act) (Reason, string) {
 	if reason, detail := e.senseless(&f); reason != "" {
 		return reason, detail
 	}
-	if f.What == Opening && !config.IsSum(f.Series) && e.byName[f.Series] == nil {
+	if s := e.byName[f.Series]; f.What == Opening && !config.IsSum(f.Series) && (s == nil || s.birth == unborn) {
 		if reason, detail := e.openNew(&f); reason != "" {
 			return reason, detail
 		}
@@ -61,6 +61,9 @@ func (e *Engine) senseless(f *fact) (Reason, string) {
 			return reason, detail
 		}
 	}
+	if f.Into != "" {
+		return e.unfitHeir(f, matched)
+	}
 	if f.Kind == Reset && len(matched) == 0 {
 		return NoSuchSeries, fmt.Sprintf("no series that was heard of is called %q or matches it: there is nothing to reset", f.Series)
 	}
@@ -81,7 +84,7 @@ func (e *Engine) unfitFor(f *fact, s *series) (Reason, string) {
 		return NotAllowed, fmt.Sprintf("series %q is open already, since %s: close it first, or reset it", s.name, at(ix.cal.Start(s.birth)))
 	case f.What == Opening && s.dates != nil && slices.ContainsFunc(s.dates.turns, func(t turn) bool { return t.slot >= slot }):
 		return NotAllowed, fmt.Sprintf("series %q is opened or closed at a later date already", s.name)
-	case f.What == Closing && !s.dates.isOpen(slot):
+	case f.turns() && f.What != Opening && !s.dates.isOpen(slot):
 		return NotAllowed, fmt.Sprintf("series %q is closed already", s.name)
 	}
 	return "", ""
@@ -119,8 +122,11 @@ func (e *Engine) openNew(f *fact) (Reason, string) {
 	case e.living+len(e.newSums(ix, f.Series)) >= e.setup.Limits.MaxSeries:
 		return SeriesFull, fmt.Sprintf("%d series are monitored already: raise limits.max_series", e.setup.Limits.MaxSeries)
 	}
-	s := e.enter(ix, f.Series)
-	e.link(s)
+	s := e.byName[f.Series] // it may be expected
+	if s == nil {
+		s = e.enter(ix, f.Series)
+		e.link(s)
+	}
 	s.birth = ix.firstFrom(f.From)
 	for _, c := range e.changeSums(nil, s, s.birth, ix.looked-1) {
 		e.rerun(c)
@@ -166,7 +172,7 @@ func (e *Engine) forgetFacts() {
 		oldest = min(oldest, ix.cal.Start(ix.kept))
 	}
 	e.keepFacts(slices.DeleteFunc(slices.Clone(e.facts), func(f fact) bool {
-		return f.What != Opening && f.What != Closing && max(f.From, f.Until) < oldest
+		return !f.turns() && max(f.From, f.Until) < oldest
 	}))
 }
 
@@ -191,15 +197,18 @@ func (e *Engine) enforce(f *fact, from, until Instant) {
 		case f.Kind == OutOfService:
 			span := ix.touched(from, until)
 			c.from, c.to = span.from, span.to-1
-		case f.What == Opening || f.What == Closing:
+		case f.turns():
 			c.to = ix.looked - 1
 		default:
 			c.to = c.from
 		}
 		changes = append(changes, c)
-		if f.Kind == OutOfService || f.What == Opening || f.What == Closing {
+		if f.Kind == OutOfService || f.turns() {
 			ofSums = e.changeSums(ofSums, s, c.from, c.to)
 		}
+	}
+	if f.Into != "" {
+		ofSums = e.succeedTo(ofSums, f)
 	}
 	slices.SortFunc(ofSums, func(a, b change) int { return cmp.Compare(a.series.number, b.series.number) })
 	e.because = f.why()
@@ -251,7 +260,9 @@ func (f *fact) what() string {
 	switch {
 	case f.Kind != Change:
 		return f.Kind.String()
-	case f.What == Opening || f.What == Closing:
+	case f.Into != "":
+		return string(f.What) + " into " + f.Into
+	case f.turns():
 		return string(f.What)
 	}
 	return "change of " + string(f.What)
@@ -298,10 +309,13 @@ func (e *Engine) factsOf(ix *indicator, series string) []Dated {
 	var all []Dated
 	for i := range e.facts {
 		f := &e.facts[i]
-		if !f.matches(series) || f.Kind == SignOff {
+		if f.Into != series && !f.matches(series) || f.Kind == SignOff {
 			continue
 		}
 		what := f.what()
+		if f.Into == series {
+			what = "in the place of " + f.Series
+		}
 		if f.Kind == OutOfService {
 			what += " until " + f.Until.in(ix.cfg.Zone).Format("2006-01-02 15:04")
 		}

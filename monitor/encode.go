@@ -81,9 +81,10 @@ func (s *series) encode(b []byte, whole bool) []byte {
 		return binary.AppendUvarint(b, 0) // its cells follow from its members'
 	}
 	if whole {
-		b = binary.AppendUvarint(b, uint64(len(s.cells)))
-		for i := range s.cells {
-			b = s.encodeCell(b, &s.cells[i])
+		own := s.ownCells()
+		b = binary.AppendUvarint(b, uint64(len(own)))
+		for i := range own {
+			b = s.encodeCell(b, &own[i])
 		}
 		return b
 	}

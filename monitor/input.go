@@ -151,6 +151,7 @@ type Act struct {
 	// Straddle says that windows may reach over the change.
 	From     Instant
 	What     ChangeKind
+	Into     string // the series that takes their place
 	Side     Side
 	Straddle bool
 	// At is the act's own time, used in history time; if HasAt.
@@ -197,10 +198,12 @@ const (
 	Method         ChangeKind = "method"          // how it is found or counted
 	Opening        ChangeKind = "opening"         // the series begins
 	Closing        ChangeKind = "closing"         // the series ends
+	Renamed        ChangeKind = "renamed"         // it goes on under another name
+	Merged         ChangeKind = "merged"          // several go on as one
 )
 
 // ChangeKinds are all kinds of change.
-var ChangeKinds = []ChangeKind{CaseDefinition, Method, Opening, Closing}
+var ChangeKinds = []ChangeKind{CaseDefinition, Method, Opening, Closing, Renamed, Merged}
 
 // Side is a side of a count, or both.
 type Side string

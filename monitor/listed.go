@@ -57,7 +57,7 @@ func (e *Engine) listed(s *series) Listed {
 	l := Listed{Series: s.name, Indicator: ix.cfg.Name, Condition: "open", Acts: e.factsOf(ix, s.name)}
 	if s.sum != nil {
 		l.Members = len(s.sum.members)
-	} else if s.seen > 0 {
+	} else if !s.neverHeard() {
 		l.Heard = when(s.seen)
 	}
 	if s.birth != unborn {
@@ -68,7 +68,7 @@ func (e *Engine) listed(s *series) Listed {
 		return l
 	}
 	if now := ix.cal.Slot(e.clock); !d.isOpen(now) {
-		if l.Condition = closed.String(); s.birth > now {
+		if l.Condition = closed.String(); d.turns[0].slot > now { // it opens
 			l.Condition = "not yet open"
 		}
 	} else if d.isOut(now) {

@@ -29,6 +29,10 @@ type series struct {
 	// member of.
 	sum  *rollup
 	sums []*series
+	// heir is set where it took the place of others, and heirs are those that
+	// took its own.
+	heir  *inheritance
+	heirs []*series
 	// dates are the acts on series that hold for it, nil for none.
 	dates *dates
 	// eventIDs are the ids of the observations with events, by slot.
@@ -176,7 +180,7 @@ func (e *Engine) trim(s *series) {
 	n, _ := s.cells.find(ix.kept)
 	for i := range s.cells[:n] {
 		c := &s.cells[i]
-		if s.sum != nil {
+		if s.sum != nil || s.inherited(c.slot) {
 			continue
 		}
 		if !s.needs().paired(c) {

@@ -80,6 +80,8 @@ func (s *series) heardAt() Instant {
 	switch {
 	case s.seen != 0:
 		return s.seen
+	case s.heir != nil:
+		return s.indicator.cal.Start(s.heir.until)
 	case s.birth != unborn:
 		return s.indicator.cal.Start(s.birth)
 	}

@@ -87,6 +87,7 @@ func (e *Engine) relink() {
 			e.link(s)
 		}
 	}
+	e.relinkHeirs()
 	for _, ix := range e.indicators {
 		slices.SortFunc(ix.sums, func(a, b *series) int { return cmp.Compare(a.number, b.number) })
 		for _, sum := range ix.sums {
@@ -102,6 +103,9 @@ func (e *Engine) relink() {
 func (ix *indicator) resum(sum *series, from, to int64) {
 	from = max(from, sum.birth, sum.trimmed)
 	to = min(to, ix.looked-1)
+	if sum.heir != nil {
+		to = min(to, sum.heir.until-1)
+	}
 	for slot := from; slot <= to; slot++ {
 		c, counted := ix.sumOf(sum, slot)
 		i, had := sum.cells.find(slot)
@@ -122,7 +126,7 @@ func (ix *indicator) resum(sum *series, from, to int64) {
 func (ix *indicator) sumOf(sum *series, slot int64) (c cell, counted bool) {
 	c.slot = slot
 	var members, events, exposures int
-	for _, m := range sum.sum.members {
+	for _, m := range sum.parts() {
 		if !m.inForce(slot) {
 			continue
 		}
@@ -158,6 +162,11 @@ func (ix *indicator) fillSums(boundary int64) {
 	for _, sum := range ix.sums {
 		ix.resum(sum, boundary-1, boundary-1)
 	}
+	for _, s := range ix.series {
+		if s.inherited(boundary - 1) {
+			ix.resum(s, boundary-1, boundary-1)
+		}
+	}
 }
 
 // sumChanges carries the changes of members into their sums, and returns what
@@ -175,6 +184,7 @@ func (e *Engine) sumChanges(changes []change) []change {
 		for _, sum := range c.series.sums {
 			list = e.changeSum(list, sum, from, to)
 		}
+		list = e.changeHeirs(list, c.series, from, to)
 	}
 	slices.SortFunc(list, func(a, b change) int { return cmp.Compare(a.series.number, b.series.number) })
 	return list
@@ -186,7 +196,7 @@ func (e *Engine) changeSum(list []change, sum *series, from, to int64) []change 
 	ix := sum.indicator
 	c := change{series: sum, birth: sum.birth}
 	birth := int64(unborn)
-	for _, m := range sum.sum.members {
+	for _, m := range sum.parts() {
 		birth = min(birth, m.birth)
 	}
 	if birth < sum.birth {
@@ -246,6 +256,9 @@ func (s *series) idsIn(from, to int64) (ids []string, more int) {
 	members := []*series{s}
 	if s.sum != nil {
 		members = s.sum.members
+	}
+	if s.heir != nil {
+		members = append(slices.Clone(s.heir.sources), s)
 	}
 	for _, m := range members {
 		for _, c := range m.cells.between(from, to) {

@@ -54,12 +54,14 @@ An alert that signals has returned with it.`)
 
 func newChangeCommand() *cobra.Command {
 	a := &seriesActing{act: monitor.Act{Kind: monitor.Change}}
-	c := newSeriesAct(a, "change", "Say that something changed on a date: definition, method, opening, closing",
+	c := newSeriesAct(a, "change", "Say that something changed on a date: definition, method, opening, closing, a merge",
 		`Says that something changed on a date: the case definition, the method, or that a series
 opens or closes. Windows do not reach over a change of definition or method, unless
 --straddle says that they may. A series that closes is not looked at from then on, and
-nobody waits for its reports; one that opens begins then.`)
-	c.Flags().StringVar(&a.what, "what", "", "`WHAT` changed: \"case definition\", method, opening or closing; needed")
+nobody waits for its reports; one that opens begins then. What is renamed or merged
+goes on as the series --into, which has its earlier counts.`)
+	c.Flags().StringVar(&a.what, "what", "", "`WHAT` changed: \"case definition\", method, opening, closing, renamed or merged; needed")
+	c.Flags().StringVar(&a.act.Into, "into", "", "of what is renamed or merged: the `SERIES` that takes its place")
 	c.Flags().BoolVar(&a.act.Straddle, "straddle", false, "windows may reach over it; it is only recorded")
 	return c
 }
@@ -238,5 +240,9 @@ func (a *seriesActing) told(series int) string {
 		sides := map[monitor.Side]string{monitor.BothSides: "events and exposure", monitor.EventsSide: "events", monitor.ExposureSide: "exposure"}
 		return who + ": " + sides[a.act.Side] + " of " + span + " signed off"
 	}
-	return who + ": " + a.what + " from " + from + " recorded"
+	what := a.what
+	if a.act.Into != "" {
+		what += " into " + a.act.Into
+	}
+	return who + ": " + what + " from " + from + " recorded"
 }

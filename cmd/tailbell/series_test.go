@@ -90,6 +90,10 @@ func TestSeriesCommands(t *testing.T) {
 		by("change", "quillmere-east/ward-5/fall", "--what", "opening", "--from", "2026-04-12", "--why", "takes over from ward 4")...))
 	list = s.says(0, []string{"before 2026-04-01", "2026-04-08 reset: cluster closed (A. Nurse)", "2026-05-01 change of case definition", "not yet open", "quillmere-east/*/fall (sum of 3)", "until 2026-04-15"}, "series", "list")
 	t.Log("\n" + list)
+	s.says(2, []string{"into belongs"}, by("change", "quillmere-north/ward-1/fall", "--what", "renamed", "--from", "2026-05-01", "--why", "w")...)
+	t.Log(s.says(0, []string{"renamed into quillmere-north/stroke-unit/fall from 2026-05-01 recorded"},
+		by("change", "quillmere-north/ward-1/fall", "--what", "renamed", "--into", "quillmere-north/stroke-unit/fall", "--from", "2026-05-01", "--why", "new name")...))
+	s.says(0, []string{"not yet open", "in the place of quillmere-north/ward-1/fall: new name (A. Nurse)"}, "series", "list", "quillmere-north/stroke-unit/*")
 	shown := s.says(0, []string{"returned"}, "alert", "list", "--series", "quillmere-east/ward-3/fall")
 	t.Log("\n" + shown)
 	var tail []string

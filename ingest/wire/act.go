@@ -98,7 +98,7 @@ func readActField(field field, act *monitor.Act) *fault {
 		return readTime(field, &act.Until)
 	case "from":
 		return readTime(field, &act.From)
-	case "what", "side", "straddle":
+	case "what", "into", "side", "straddle":
 		return readSeriesField(field, act)
 	case "at":
 		act.HasAt = true
@@ -178,8 +178,8 @@ func checkAct(act *monitor.Act, seen map[string]bool) *fault {
 		return refuse(monitor.BadAct, "the field by is missing; it says who acts")
 	case act.Kind.OnSeries():
 		return checkSeriesAct(act, seen)
-	case seen["from"] || seen["what"] || seen["side"] || seen["straddle"]:
-		return refuse(monitor.BadAct, "from, what, side and straddle belong to acts on series; a %s is on an alert", act.Kind)
+	case seen["from"] || seen["what"] || seen["into"] || seen["side"] || seen["straddle"]:
+		return refuse(monitor.BadAct, "from, what, into, side and straddle belong to acts on series; a %s is on an alert", act.Kind)
 	case seen["alert"] && (seen["series"] || seen["direction"]):
 		return refuse(monitor.BadAct, "the alert is named twice; give alert, or series and direction")
 	case !seen["alert"] && (!seen["series"] || !seen["direction"]):

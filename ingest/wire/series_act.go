@@ -33,6 +33,12 @@ func readSeriesField(field field, act *monitor.Act) *fault {
 		}
 		return refuse(monitor.BadAct, "straddle is %s; it must be true or false", nameOf(field.value))
 	}
+	if field.name == "into" {
+		var w draft
+		f := w.readSeries(field)
+		act.Into = string(w.series)
+		return f
+	}
 	var text string
 	if f := readActText(field, MaxIDLength, &text); f != nil {
 		return f
@@ -76,9 +82,11 @@ func checkSeriesAct(act *monitor.Act, seen map[string]bool) *fault {
 		return refuse(monitor.BadAct, "until is not after from; exchange them?")
 	case seen["what"] != (act.Kind == monitor.Change):
 		return refuse(monitor.BadAct, "the field what belongs to an act change, and to it alone")
+	case seen["into"] != (act.What == monitor.Renamed || act.What == monitor.Merged):
+		return refuse(monitor.BadAct, "the field into belongs to what is renamed or merged, and to that alone: it names what they become")
 	case seen["side"] && act.Kind != monitor.SignOff:
 		return refuse(monitor.BadAct, "the field side belongs to an act sign off, and to it alone")
-	case seen["straddle"] && (act.Kind != monitor.Change || act.What == monitor.Opening || act.What == monitor.Closing):
+	case seen["straddle"] && act.What != monitor.CaseDefinition && act.What != monitor.Method:
 		return refuse(monitor.BadAct, "the field straddle belongs to a change of case definition or method")
 	case !seen["why"] && act.Kind != monitor.SignOff && act.Kind != monitor.BackInService:
 		return refuse(monitor.BadAct, "the field why is missing; a %s needs it", act.Kind)
@@ -89,6 +97,9 @@ func checkSeriesAct(act *monitor.Act, seen map[string]bool) *fault {
 func appendSeriesAct(dst []byte, a *monitor.Act) []byte {
 	if a.Kind == monitor.Change {
 		dst = AppendText(append(dst, `,"what":`...), string(a.What))
+	}
+	if a.Into != "" {
+		dst = AppendText(append(dst, `,"into":`...), a.Into)
 	}
 	dst = appendTimeField(dst, `,"from":"`, a.From)
 	if spanned(a.Kind) {

@@ -22,6 +22,9 @@ func TestSeriesActRoundTrip(t *testing.T) {
 		switch a.Kind { //nolint:exhaustive // the others have no field of their own
 		case monitor.Change:
 			a.What = rapid.SampledFrom(monitor.ChangeKinds).Draw(rt, "what")
+			if a.What == monitor.Renamed || a.What == monitor.Merged {
+				a.Into = "a/c"
+			}
 			a.Straddle = a.What == monitor.Method && rapid.Bool().Draw(rt, "straddle")
 		case monitor.SignOff:
 			a.Side, a.Until = rapid.SampledFrom(monitor.Sides).Draw(rt, "side"), a.From+1
@@ -50,7 +53,7 @@ func TestSeriesActsThatMeanNothing(t *testing.T) {
 		`{"act":"sign off"` + from + `}`:                                                   "until belongs",
 		`{"act":"sign off","until":"2026-03-02T00:00:00Z","side":"left"` + from + `}`:      "both, events or exposure",
 		`{"act":"change","why":"w"` + from + `}`:                                           "what belongs",
-		`{"act":"change","what":"weather","why":"w"` + from + `}`:                          "case definition, method, opening or closing",
+		`{"act":"change","what":"weather","why":"w"` + from + `}`:                          "case definition, method, opening, closing, renamed or merged",
 		`{"act":"change","what":"closing","straddle":true,"why":"w"` + from + `}`:          "straddle belongs",
 		`{"act":"change","what":"method","straddle":1,"why":"w"` + from + `}`:              "true or false",
 		`{"act":"note","alert":"x","why":"w","by":"A","from":"2026-03-01T00:00:00Z"}`:      "belong to acts on series",

@@ -1,0 +1,141 @@
+package monitor
+
+import (
+	"cmp"
+	"fmt"
+	"slices"
+
+	"tailbell/config"
+)
+
+// inheritance is what makes a series count the slots of those in whose place it
+// came: before until its slots are the sums of theirs, which follow from them
+// and are neither stored nor archived.
+type inheritance struct {
+	until   int64
+	sources []*series
+}
+
+// inherited reports whether the slot is counted elsewhere.
+func (s *series) inherited(slot int64) bool { return s.heir != nil && slot < s.heir.until }
+
+// parts are the series whose slots the series sums.
+func (s *series) parts() []*series {
+	if s.heir != nil {
+		return s.heir.sources
+	}
+	return s.sum.members
+}
+
+// unfitHeir says why the series can't take the place of the matched ones; "" if
+// it can.
+func (e *Engine) unfitHeir(f *fact, matched []*series) (Reason, string) {
+	if err := config.CheckSeries(f.Into); err != nil {
+		return NotAllowed, fmt.Sprintf("into %q: %v", f.Into, err)
+	}
+	if f.matches(f.Into) {
+		return NotAllowed, fmt.Sprintf("%q is itself one of %q: give what they become a name of its own", f.Into, f.Series)
+	}
+	ix, other := e.indicatorOf(f.Into)
+	into := e.byName[f.Into]
+	n := 0
+	for _, s := range matched {
+		if s.sum != nil {
+			continue
+		}
+		n++
+		switch {
+		case ix != s.indicator || other != nil:
+			return NotAllowed, fmt.Sprintf("series %q and %q do not belong to the same indicator", s.name, f.Into)
+		case into != nil && (into.heir != nil || into.birth < ix.firstFrom(f.From)):
+			return NotAllowed, fmt.Sprintf("series %q has counts of its own from before: give what they become a name of its own", f.Into)
+		}
+	}
+	switch {
+	case n == 0:
+		return NoSuchSeries, fmt.Sprintf("no series that was heard of is called %q or matches it", f.Series)
+	case f.What == Renamed && n > 1:
+		return NotAllowed, fmt.Sprintf("%q matches %d series: they are merged, not renamed", f.Series, n)
+	case ix.cfg.ArrivalLooks:
+		return NotAllowed, "looks at events reach to the moment, which is not handed on: close them, and open another"
+	case n > 1 && ix.cfg.Exposure == config.Clock:
+		return NotAllowed, "exposure by the clock is as large for one series as for two merged ones: close them, and open another"
+	case e.partition.Of > 1 && config.PartitionOf(f.Into, e.partition.KeyParts, e.partition.Of) != e.partition.Number:
+		return NotAllowed, fmt.Sprintf("series %q belongs to another partition: keep the leading parts of the name", f.Into)
+	case into == nil && e.living+len(e.newSums(ix, f.Into)) >= e.setup.Limits.MaxSeries:
+		return SeriesFull, fmt.Sprintf("%d series are monitored already: raise limits.max_series", e.setup.Limits.MaxSeries)
+	}
+	return "", ""
+}
+
+// succeedTo lets a series take the place of those that the fact matches, and
+// returns what that changes.
+func (e *Engine) succeedTo(list []change, f *fact) []change {
+	into := e.byName[f.Into]
+	if into == nil {
+		ix, _ := e.indicatorOf(f.Into)
+		into = e.enter(ix, f.Into)
+		e.link(into)
+	}
+	ix := into.indicator
+	into.dates = e.datesOf(ix, into.name)
+	e.inherit(f, into)
+	e.touch(into)
+	begin := into.birth
+	for _, s := range into.heir.sources {
+		begin = min(begin, s.birth)
+	}
+	return e.changeSum(list, into, begin, into.heir.until-1)
+}
+
+// inherit links a series to those whose place it takes.
+func (e *Engine) inherit(f *fact, into *series) {
+	into.heir = &inheritance{until: into.indicator.firstFrom(f.From)}
+	for _, s := range e.matched(f) {
+		if s.sum == nil && s.indicator == into.indicator {
+			into.heir.sources = append(into.heir.sources, s)
+			s.heirs = append(s.heirs, into)
+		}
+	}
+}
+
+// relinkHeirs links all heirs after they were restored, and sums what they
+// inherit: the earlier ones first, of which others may have inherited.
+func (e *Engine) relinkHeirs() {
+	var heirs []*series
+	for i := range e.facts {
+		if f := &e.facts[i]; f.Into != "" {
+			if into := e.byName[f.Into]; into != nil {
+				e.inherit(f, into)
+				heirs = append(heirs, into)
+			}
+		}
+	}
+	slices.SortStableFunc(heirs, func(a, b *series) int { return cmp.Compare(a.heir.until, b.heir.until) })
+	for _, s := range heirs {
+		if s.birth != unborn && s.indicator.started {
+			s.indicator.resum(s, s.birth, s.heir.until-1)
+		}
+	}
+}
+
+// changeHeirs carries a change of slots into the heirs of a series, and theirs.
+func (e *Engine) changeHeirs(list []change, s *series, from, to int64) []change {
+	for _, h := range s.heirs {
+		to := min(to, h.heir.until-1)
+		if from <= to {
+			list = e.changeSum(list, h, from, to)
+			list = e.changeHeirs(list, h, from, to)
+		}
+	}
+	return list
+}
+
+// ownCells are the cells of the series that are its own.
+func (s *series) ownCells() cells {
+	if s.heir == nil {
+		return s.cells
+	}
+	i, _ := s.cells.find(s.heir.until)
+	return s.cells[i:]
+}
