@@ -51,6 +51,7 @@ func (p *prose) setup(s *Setup) {
 		p.line("Series are spread over %d partitions by the %s of their names.", s.Partitions, first)
 	}
 	p.page(s.Page)
+	p.outlets(s.Outlets)
 	if s.History {
 		p.line("Time is history time: it moves with the data alone.")
 	}

@@ -21,6 +21,9 @@ func (s *Setup) Doubts(file string) []Fault {
 	for i := range s.Indicators {
 		d.indicator(&s.Indicators[i], i)
 	}
+	for i := range s.Outlets {
+		d.outlet(s, &s.Outlets[i], i)
+	}
 	d.shared(s)
 	return d.faults
 }

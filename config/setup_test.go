@@ -259,6 +259,13 @@ func TestDoubts(t *testing.T) {
 [bus]
 url = "nats://127.0.0.1:4222, nats://bus.example.org:4222"
 
+[[outlet]]
+name = "bell"
+kind = "command"
+command = ["/usr/local/bin/bell"]
+indicators = ["known"]
+series = ["quilmere/**", "east/falls-*", "quillmere/mine"]
+
 [[indicator]]
 name = "known"
 series = ["*/falls-*"]

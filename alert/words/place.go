@@ -88,6 +88,8 @@ func singular(noun string) string {
 
 func singularWord(w string) string {
 	switch {
+	case w == "series":
+		return w
 	case len(w) > 4 && strings.HasSuffix(w, "ies"):
 		return w[:len(w)-3] + "y"
 	case hasAnySuffix(w, "sses", "shes", "ches", "xes"):

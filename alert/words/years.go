@@ -15,9 +15,9 @@ func years(e *life.Evidence) string {
 	if a == nil || !(a.Here > 0) {
 		return ""
 	}
-	text := "Even while the usual " + measure(e) + " holds, a ring here comes by chance about " + often(a.Here)
+	text := "Even while the usual " + measure(e) + " holds, a ring here comes by chance at most about " + often(a.Here)
 	if a.Series > 1 {
-		text += fmt.Sprintf("; over all %s series of the indicator about %s", whole(a.Series), often(a.All))
+		text += fmt.Sprintf("; over all %s series of the indicator at most about %s", whole(a.Series), often(a.All))
 	}
 	return text + " (" + kept(e, a) + ")"
 }

@@ -103,7 +103,7 @@ func (o *rehearseOptions) flags(c *cobra.Command) {
 	f.StringVar(&o.begin, "begin", "", "the `DATE` on which invented histories begin")
 	f.Float64SliceVar(&o.frequencies, "excesses-a-year", []float64{0.1, 1}, "how many excesses come a year and series, for predictive values: `NUMBERS`")
 	f.StringVar(&o.known, "known", "", "a `FILE` of all episodes known in the given history")
-	f.BoolVar(&o.asJSON, "json", false, "print the whole result as JSON; `tailbell report --rehearsal` reads it")
+	f.BoolVar(&o.asJSON, "json", false, "print the whole result as JSON, which tailbell report --rehearsal reads")
 	f.StringVar(&o.figure, "figure", "", "also draw shares and delays to this `FILE`, .svg or .png")
 }
 

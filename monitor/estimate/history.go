@@ -59,7 +59,7 @@ type Span struct {
 
 // Errors of Gather.
 var (
-	ErrNothing = errors.New("no slot with both a count and an exposure lies in this span")
+	ErrNothing = errors.New("no series asked for has a slot with both a count and an exposure in the span asked for")
 	ErrSpan    = errors.New("the span ends before it begins")
 )
 
