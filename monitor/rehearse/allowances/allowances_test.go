@@ -79,7 +79,7 @@ func number4(v float64) string {
 // TestTable plays the whole table and writes it.
 func TestTable(t *testing.T) {
 	if !*table {
-		t.Skip("the whole table takes a quarter of an hour and more: go test ./monitor/rehearse/allowances -run TestTable -table -v -timeout 3h")
+		t.Skip("the whole table takes half an hour of two idle processors: go test ./monitor/rehearse/allowances -run TestTable -table -v -timeout 3h")
 	}
 	var b strings.Builder
 	line := func(cells ...string) { b.WriteString("| " + strings.Join(cells, " | ") + " |\n") }

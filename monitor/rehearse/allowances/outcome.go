@@ -193,8 +193,8 @@ func (c *Cell) plan() (*allowance.Plan, bool) {
 	return p, true
 }
 
-// room is by how many joint standard errors a cell may miss: with fifty cells of
-// two comparisons each, chance alone exceeds it in one table of 150.
+// room is by how many joint standard errors a cell may miss: with some thirty
+// exact predictions chance alone exceeds it in one table of 500.
 const room = 4
 
 // Fault says in what way the outcome breaks what is promised, "" if it does not.
