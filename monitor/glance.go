@@ -97,7 +97,11 @@ func (e *Engine) Latest(series, window string, until time.Time, n int) []View {
 		return nil
 	}
 	ix := s.indicator
-	to := min(InstantOf(until), ix.cal.Start(ix.looked))
+	latest := ix.cal.Start(ix.looked)
+	if s.arrivals != nil { // looks were made since
+		latest = max(latest, e.clock)
+	}
+	to := min(InstantOf(until), latest)
 	for w := range ix.cfg.Windows {
 		if cfg := &ix.cfg.Windows[w]; cfg.Name == window {
 			first := ix.cal.Slot(to) - int64(n)*int64(cfg.Step) + 1
