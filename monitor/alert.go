@@ -65,9 +65,9 @@ func (e *Engine) open(s *series, d direction, looks []look, opening look, at Ins
 		series: s, tail: d, first: opening.boundary, last: ongoing,
 		opening: lookKey{opening.boundary, opening.window}, openingAt: opening.occasion,
 		record: life.Record{
-			ID:        alertID(s.name, d, due, t.opened),
+			ID:        alertID(s.name, d, due, int(t.opened)),
 			Indicator: ix.cfg.Name, Title: ix.cfg.Title, Series: s.name, Direction: d.name(),
-			Number: t.opened, Opened: due, Late: late, Zone: ix.cfg.ZoneName, Caution: Caution,
+			Number: int(t.opened), Opened: due, Late: late, Zone: ix.cfg.ZoneName, Caution: Caution,
 		},
 	}
 	a.record.Opening = e.evidenceOf(s, d, a.opening, a.openingAt)

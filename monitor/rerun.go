@@ -205,7 +205,7 @@ func (e *Engine) amend(a *alert) {
 		if t.current == a {
 			t.leave(a.series.indicator.looked)
 		}
-		if a.record.Number == t.opened {
+		if a.record.Number == int(t.opened) {
 			t.disarmed = false // the one that was closed by hand never was
 		}
 		e.step(a, life.Step{Kind: life.StepWithdrawn, At: e.clock.Time(), Why: e.reason()})

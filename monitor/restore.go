@@ -194,7 +194,7 @@ func (e *Engine) overlay(s *series, data []byte) error {
 	case flags&flagRetired != 0:
 		*s = series{number: s.number, name: r.string(), retired: true, unpaired: r.int()}
 		for _, d := range [...]direction{upper, lower, silence} {
-			s.tail(d).opened = int(r.uint())
+			s.tail(d).opened = int32(r.uint())
 		}
 		return r.err
 	case flags&flagNamed != 0:
@@ -279,7 +279,7 @@ func (r *reader) ids() (list []string) {
 func (r *reader) tail(s *series, d direction) tail {
 	t := tail{disarmed: r.flag()}
 	ringing := r.flag()
-	t.quiet, t.opened = int(r.uint()), int(r.uint())
+	t.quiet, t.opened = int32(r.uint()), int32(r.uint())
 	alerts := make([]*alert, r.length())
 	for i := range alerts {
 		a := &alert{series: s, tail: d}

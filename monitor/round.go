@@ -128,7 +128,7 @@ func (e *Engine) decide(s *series, d direction, looks []look, boundary int64, du
 	}
 	t.quiet++
 	e.touch(s)
-	if t.quiet < s.indicator.epochAt(boundary).cfg.Quiet {
+	if int(t.quiet) < s.indicator.epochAt(boundary).cfg.Quiet {
 		return
 	}
 	t.disarmed = false

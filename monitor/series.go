@@ -13,7 +13,14 @@ const unborn = math.MaxInt64
 
 // series is the state of one series.
 type series struct {
-	number    uint32
+	number  uint32
+	touched bool
+	// fresh says that no patch has named the series yet, or that what older
+	// ones say of it holds no more.
+	fresh bool
+	// retired says that it is a stub, monitored no longer: nothing is kept of
+	// it but number, name, what unpaired counts and how many alerts there were.
+	retired   bool
 	name      string
 	indicator *indicator
 	// birth is the first slot that counts: no window reaches before it.
@@ -59,20 +66,13 @@ type series struct {
 	// marked are the spans that people marked real.
 	marked []markedSpan
 	// dirty lists the slots changed since the last drain, if touched.
-	dirty   []int64
-	touched bool
+	dirty []int64
 	// watched counts the looks by window while the engine is passing.
 	watched []watch
 	// next is the series that was asked for after this one the last time.
 	next *series
 	// arrivals are kept where looks are made at them, else nil.
 	arrivals *arrivals
-	// fresh says that no patch has named the series yet, or that what older
-	// ones say of it holds no more.
-	fresh bool
-	// retired says that it is a stub, monitored no longer: nothing is kept of
-	// it but number, name, what unpaired counts and how many alerts there were.
-	retired bool
 }
 
 // windowState is what the looks of one window have come to.
@@ -100,9 +100,9 @@ type tail struct {
 	// was closed by hand while it signalled.
 	disarmed bool
 	// quiet counts the looks in a row at which nothing signalled.
-	quiet int
+	quiet int32
 	// opened counts the alerts that were ever opened.
-	opened int
+	opened int32
 	// past are alerts that have left, but are not done or lie inside the
 	// horizon.
 	past []*alert
@@ -189,7 +189,9 @@ func (e *Engine) trim(s *series) {
 		e.archive(s, c)
 	}
 	if n > 0 {
-		s.cells = s.cells[n:] // they move when the list has to grow
+		if s.cells = s.cells[n:]; len(s.cells) == 0 { // else they move when the list has to grow
+			s.cells, s.array = nil, nil
+		}
 		s.eventIDs.forget(ix.kept)
 		e.touch(s)
 	}

@@ -216,9 +216,9 @@ func (e *Engine) fallSilent() {
 	a := &alert{
 		series: s, tail: silence, first: ix.looked, last: ongoing,
 		record: life.Record{
-			ID:        alertID(s.name, silence, at, t.opened),
+			ID:        alertID(s.name, silence, at, int(t.opened)),
 			Indicator: ix.cfg.Name, Title: ix.cfg.Title, Series: s.name, Direction: life.Silence,
-			Number: t.opened, Opened: at, Zone: ix.cfg.ZoneName, Caution: SilenceCaution,
+			Number: int(t.opened), Opened: at, Zone: ix.cfg.ZoneName, Caution: SilenceCaution,
 			Silence: &life.Heard{Within: config.FormatDuration(ix.cfg.SilentFor(s.name))},
 		},
 	}
