@@ -12,11 +12,17 @@ import (
 // whether it did; if not, nothing happened but that sums were moved on.
 func (e *Engine) quick(s *series, ep *epoch, boundary int64, due Instant) bool {
 	ix, cfg := s.indicator, ep.cfg
-	if e.long || e.onLook != nil || s.dates != nil || cfg != ix.cfg || !ix.plain(cfg) || s.baseOf != cfg || s.base == nil || s.tails[upper].waits() || s.tails[lower].waits() {
+	if e.long || e.onLook != nil || s.dates != nil || cfg != ix.cfg || s.baseOf != cfg || s.base == nil || s.tails[upper].waits() || s.tails[lower].waits() {
 		return false
 	}
 	b := s.base
 	if b.Strata != nil || b.Delay != nil || b.Spread > 1 && b.Kind == config.Reference || b.Kind == config.Trailing || b.Kind == config.Peers {
+		return false
+	}
+	if byClock(cfg) {
+		return e.quickSparse(s, ep, boundary, due)
+	}
+	if !ix.plain(cfg) {
 		return false
 	}
 	// The cell that enters all windows; those that leave lie as far before it

@@ -1,0 +1,93 @@
+package monitor
+
+import "tailbell/config"
+
+// byClock reports whether windows of the stanza are sums of the events that there
+// were, over exposure by the clock: then a slot without a cell is as well known
+// as any, and most have none.
+func byClock(cfg *config.Indicator) bool {
+	return cfg.Exposure == config.Clock && cfg.Events == config.Each && cfg.Measure == config.Rate && cfg.SlotLooks && !cfg.ArrivalLooks
+}
+
+// quickSparse is quick for exposure by the clock: each window is one slot on from
+// the look before it, and surely does not signal.
+func (e *Engine) quickSparse(s *series, ep *epoch, boundary int64, due Instant) bool {
+	if s.sum != nil || e.known != nil {
+		return false
+	}
+	in := s.cells.held(boundary - 1)
+	for i := range ep.windows {
+		if p := &ep.windows[i]; p.Step != 1 || !s.quickSpan(ep.cfg, p.place, in, boundary) {
+			return false
+		}
+	}
+	for i := range ep.windows {
+		w := ep.windows[i].place
+		s.windows[w].made = boundary
+		e.account.Looks++
+		if e.passing {
+			e.watched(s, w, due)
+		}
+	}
+	return true
+}
+
+// quickSpan moves the window's sum on, and reports whether its look is made and
+// surely does not signal.
+func (s *series) quickSpan(cfg *config.Indicator, w int, in *cell, boundary int64) bool {
+	ix, ws := s.indicator, &s.windows[w]
+	r := &ws.running
+	if !r.ok || ws.withheld != made || !ws.hasMade {
+		return false
+	}
+	if r.to == boundary-1 {
+		if r.from < s.trimmed {
+			return false
+		}
+		if in != nil {
+			r.count(in, 1)
+		}
+		if out := s.cells.held(r.from); out != nil {
+			r.count(out, -1)
+		}
+		r.from, r.to = r.from+1, r.to+1
+	}
+	if r.to != boundary {
+		return false
+	}
+	limit := s.limitsAt(cfg, w, boundary)
+	tested := [2]bool{upper: cfg.Upper && r.tally.events > 0 && limit[upper] > 0, lower: cfg.Lower && limit[lower] > 0}
+	if !tested[upper] && !tested[lower] {
+		return true
+	}
+	t := r.tally
+	t.exposure = ix.clock.between(ix.cal.Start(r.from), ix.cal.Start(r.to))
+	if t.exposure.Hi != 0 || t.exposure.Lo == 0 || t.exposure.Lo >= 1<<52 {
+		return false
+	}
+	for _, d := range bothTails {
+		if tested[d] && !ws.edges[d].clear(s.base, limit[d], &t) {
+			return false
+		}
+	}
+	return true
+}
+
+// count adds a cell to the sum (sign 1) or takes it off (-1); exposure by the
+// clock has no part in it.
+func (r *running) count(c *cell, sign int64) {
+	r.tally.known += sign
+	r.tally.events += sign * c.events
+	r.tally.late += sign * c.late
+	if c.revised {
+		r.tally.revised += sign
+	}
+}
+
+// held returns the cell of the slot, nil if there is none.
+func (cs cells) held(slot int64) *cell {
+	if i, ok := cs.find(slot); ok {
+		return &cs[i]
+	}
+	return nil
+}
