@@ -110,6 +110,7 @@ func (p *prose) counting(in *Indicator) {
 		p.line("  It is a census: the last level reported is carried forward, and shown as provisional, until the next is reported or %s have passed.",
 			elapsed(in.CensusExpiry))
 	}
+	p.adjusted(in)
 	switch in.Events {
 	case Each:
 		p.line("  Each event is a message: a slot without one had none.")

@@ -52,6 +52,7 @@ func (d *doubts) indicator(in *Indicator, i int) {
 		d.at(in, i, "horizon", fmt.Sprintf("%s is shorter than a slot of %s: counts that come after their slot has ended may be refused",
 			FormatDuration(in.Horizon), in.Every), "make it longer than slot and settle together")
 	}
+	d.adjusted(in, i)
 	if silence := in.shortestSilence(); silence > 0 && silence < in.Every.shortest() {
 		d.at(in, i, "expect", fmt.Sprintf("%s is shorter than a slot of %s: a series reported once a slot would be called silent",
 			FormatDuration(silence), in.Every), "make it longer than a slot")

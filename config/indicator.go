@@ -20,6 +20,7 @@ func (s section) readIndicator() Indicator {
 	in.Every, _ = s.readEvery()
 	in.ZoneName, in.Zone = s.readZone()
 	s.readMeasure(&in)
+	s.readExpected(&in)
 	s.readTimes(&in)
 	ids, _ := s.word("ids", 0, "kept", "none")
 	in.KeepIDs = ids == 0
@@ -66,6 +67,9 @@ func (c *collector) patternOf(n *node, key string) (Pattern, bool) {
 
 func (s section) readUnit() string {
 	unit, _ := s.text("unit", "")
+	if expected, _ := s.truth("expected"); expected && !s.has("unit") {
+		return "expected events"
+	}
 	if !s.has("unit") {
 		s.fault("unit", "is missing: what are the events counted against?", `write e.g. unit = "device-days", or "procedures" for a proportion`)
 	}
@@ -182,6 +186,7 @@ func (s section) readTimes(in *Indicator) {
 			"make it shorter, or the slots longer")
 	}
 	s.readExpect(in)
+	s.readFollowUp(in)
 	s.readRemind(in)
 	in.Since = s.readSince(in.Every, in.Zone)
 }

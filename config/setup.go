@@ -224,6 +224,9 @@ type Indicator struct {
 	// rates are shown (1000 for "per 1,000 device-days").
 	Unit string
 	Per  float64
+	// Expected says that the exposure is the number of events that a model of
+	// risks lets expect: the rate is observed over expected.
+	Expected bool
 	// EventNoun names an event in the plural ("line infections"); Title is
 	// the indicator's name for people. Both default to Name.
 	EventNoun string
@@ -244,7 +247,10 @@ type Indicator struct {
 	// far back data may change. Ahead: how far in the future it may lie.
 	Settle  time.Duration
 	Horizon time.Duration
-	Ahead   time.Duration
+	// FollowUp, if not zero, is how long after its trial an event may come to
+	// light; it counts in the trial's slot.
+	FollowUp time.Duration
+	Ahead    time.Duration
 	// KeepIDs is false for ids = "none".
 	KeepIDs bool
 	// Since, if not zero, is when the series of this indicator begin; else a

@@ -124,7 +124,11 @@ func ratioTo(ev *life.Evidence, u *usual, ref *reference, o *opportunity) (kind 
 			lo, hi = exact.ClopperPearson(ev.Events, int64(o.exposure), u.cfg.Alpha)
 			lo, hi = lo*o.exposure, hi*o.exposure
 		}
-		return "ratio to a known " + ev.Measure, finite(events / usual), lo / usual, finite(hi / usual)
+		kind = "ratio to a known " + ev.Measure
+		if u.cfg.Expected {
+			kind = life.StandardisedRatio
+		}
+		return kind, finite(events / usual), lo / usual, finite(hi / usual)
 	case u.cfg.Measure == config.Proportion:
 		p := exact.TwoProportion{RefEvents: ref.events, RefTrials: int64(ref.exposureFloat(u)), Trials: int64(o.exposure), Margin: 1}
 		lo, hi := p.OddsRatioBounds(ev.Events, u.cfg.Alpha)

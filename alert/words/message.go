@@ -94,7 +94,11 @@ func Facts(n *life.Notice) []Fact {
 		{rate, lo + " to " + hi + per(e) + " (" + level(e.Alpha) + ", exact)"},
 	}
 	if e.Ratio != nil {
-		facts = append(facts, Fact{"ratio to the usual", ratio(e)})
+		name := "ratio to the usual"
+		if e.RatioKind == life.StandardisedRatio {
+			name = "standardised ratio"
+		}
+		facts = append(facts, Fact{name, ratio(e)})
 	}
 	if e.Critical > 0 || r.Direction == life.Lower {
 		facts = append(facts, Fact{"a look signals at", whole(e.Critical) + " (chance " + number(e.AttainedSize) + ")"})

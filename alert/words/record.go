@@ -48,6 +48,9 @@ func numbers(e *life.Evidence) string {
 		if strings.Contains(e.RatioKind, "odds") {
 			kind = "odds ratio to the usual proportion"
 		}
+		if e.RatioKind == life.StandardisedRatio {
+			kind = "standardised ratio (observed over expected events)"
+		}
 		if e.RatioUpper != nil {
 			lo, hi := pair(e.RatioLower, *e.RatioUpper)
 			fmt.Fprintf(&b, "The %s is %s (%s to %s, %s, exact). ", kind, number(*e.Ratio), lo, hi, level(e.Alpha))

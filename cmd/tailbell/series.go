@@ -25,7 +25,7 @@ func newSeriesCommand() *cobra.Command {
 		Short: "List series, and say what holds for them from a date on",
 		RunE:  func(c *cobra.Command, _ []string) error { return c.Help() },
 	}
-	c.AddCommand(newSeriesListCommand(), newResetCommand(), newChangeCommand(), newOutOfServiceCommand(),
+	c.AddCommand(newSeriesListCommand(), newSeriesOverdueCommand(), newResetCommand(), newChangeCommand(), newOutOfServiceCommand(),
 		newBackInServiceCommand(), newSignOffCommand())
 	return c
 }

@@ -230,6 +230,9 @@ type Evidence struct {
 	Recompute string `json:"recompute"`
 }
 
+// StandardisedRatio is the kind of a ratio of observed to expected events.
+const StandardisedRatio = "standardised ratio"
+
 // Baseline names the usual rate in a record.
 type Baseline struct {
 	Kind string `json:"kind"`
