@@ -4,8 +4,10 @@ import (
 	"context"
 	"fmt"
 	"io"
+	"math"
 	"os"
 	"path/filepath"
+	"slices"
 	"strings"
 	"text/tabwriter"
 	"time"
@@ -88,6 +90,9 @@ func (o *replayOptions) readKnown() (_ []plant.Episode, err error) {
 	if err != nil {
 		return nil, fmt.Errorf("--known %s: %w", o.known, err)
 	}
+	for i := range episodes {
+		episodes[i].From, episodes[i].To = episodes[i].From.In(zone), episodes[i].To.In(zone)
+	}
 	return append([]plant.Episode{}, episodes...), nil
 }
 
@@ -103,11 +108,25 @@ func (o *replayOptions) tellComparison(c *compare.Comparison) error {
 	}
 	p.spans(c)
 	p.episodes(c)
+	p.dates(c, o.zones())
 	p.f("\nMore alerts are not better, nor fewer: which of them were real, the history does not say.\n%s\n", words.Caution)
 	if p.err != nil {
 		return p.err
 	}
 	return t.Flush()
+}
+
+// zones are those in which the set-ups' indicators keep their calendars.
+func (o *replayOptions) zones() []string {
+	var list []string
+	for _, setup := range o.setups {
+		for i := range setup.Indicators {
+			if name := setup.Indicators[i].ZoneName; !slices.Contains(list, name) {
+				list = append(list, name)
+			}
+		}
+	}
+	return list
 }
 
 // printer writes until something fails.
@@ -140,13 +159,16 @@ func (p *printer) sides(c *compare.Comparison) {
 	p.row("alerts", c, func(s *compare.Side) string { return words.Whole(int64(s.Total.Alerts)) })
 	p.row("alerts a year (95% bounds)", c, func(s *compare.Side) string { return bounded(&s.Total.AYear) })
 	p.row("a year of one series", c, func(s *compare.Side) string { return bounded(&s.Total.ASeriesYear) })
+	p.row("of them opened late", c, func(s *compare.Side) string { return words.Whole(int64(s.Total.Late)) })
 	p.row("withdrawn, as data were corrected", c, func(s *compare.Side) string { return words.Whole(int64(s.Total.Withdrawn)) })
 	p.row("spans found", c, func(s *compare.Side) string { return words.Whole(int64(s.Found)) })
 	p.row("of them found by no other", c, func(s *compare.Side) string { return words.Whole(int64(s.Alone)) })
 	if c.Episodes == nil {
 		return
 	}
-	p.row("known episodes found", c, func(s *compare.Side) string { return fmt.Sprintf("%d of %d", *s.Episodes, len(c.Episodes)) })
+	p.row("known episodes found", c, func(s *compare.Side) string {
+		return words.Whole(int64(*s.Episodes)) + " of " + words.Whole(int64(len(c.Episodes)))
+	})
 	p.row("alerts in no known episode", c, func(s *compare.Side) string { return words.Whole(int64(*s.Unexplained)) })
 }
 
@@ -154,35 +176,48 @@ func perhaps(x *float64) string {
 	if x == nil {
 		return "-"
 	}
-	return short(*x)
+	return grouped(*x)
+}
+
+// grouped is short with the digits of large numbers in groups.
+func grouped(x float64) string {
+	if a := math.Abs(x); a >= 1000 && a < 1e12 {
+		return words.Whole(int64(math.Round(x)))
+	}
+	return short(x)
 }
 
 func bounded(r *replay.PerYear) string {
 	if r.Rate == nil {
 		return "-"
 	}
-	return fmt.Sprintf("%s (%s to %s)", short(*r.Rate), short(*r.Lower), short(*r.Upper))
+	return fmt.Sprintf("%s (%s to %s)", grouped(*r.Rate), grouped(*r.Lower), grouped(*r.Upper))
 }
 
 // pair writes how a set-up differs from the first.
 func (p *printer) pair(x *compare.Pair) {
-	p.f("%s beside %s: both found %s, only %s found %d, only %s %d (a split as uneven has the exact chance %s if both are as good).\n", x.Other, x.First,
-		amount(x.Both, "spans"), x.First, x.OnlyFirst, x.Other, x.OnlyOther, short(x.AloneP))
-	if x.NeitherEpisodes != nil {
+	p.f("%s beside %s: both found %s, only %s found %s, only %s %s (a split as uneven has the exact chance %s if both are as good).\n", x.Other, x.First,
+		amount(x.Both, "spans"), x.First, words.Whole(int64(x.OnlyFirst)), x.Other, words.Whole(int64(x.OnlyOther)), short(x.AloneP))
+	switch {
+	case x.NeitherEpisodes == nil:
+	case *x.NeitherEpisodes == 0:
+		p.f("No known episode was found by neither.\n")
+	default:
 		p.f("Neither found %s.\n", amount(*x.NeitherEpisodes, "known episodes"))
 	}
 	if x.Both > 0 {
-		p.f("Of those that both found %s was earlier in %d, at the same time in %d, later in %d (exact p %s of the sign test): by a median of %s days, %s to %s.\n",
-			x.Other, x.Earlier, x.Same, x.Later, short(x.DelayP), short(*x.DelayMedian), short(*x.DelayLeast), short(*x.DelayMost))
+		p.f("Of those that both found %s was earlier in %s, at the same time in %s, later in %s (exact p %s of the sign test): by a median of %s days, %s to %s.\n",
+			x.Other, words.Whole(int64(x.Earlier)), words.Whole(int64(x.Same)), words.Whole(int64(x.Later)), short(x.DelayP),
+			grouped(*x.DelayMedian), grouped(*x.DelayLeast), grouped(*x.DelayMost))
 	}
 	if x.Ratio == nil && x.RatioLower == nil {
 		return
 	}
 	upper := "no bound"
 	if x.RatioUpper != nil {
-		upper = short(*x.RatioUpper)
+		upper = grouped(*x.RatioUpper)
 	}
-	p.f("Alerts a year: %s times as many (exact 95%% bounds %s to %s, as if over histories of their own).\n", perhaps(x.Ratio), short(*x.RatioLower), upper)
+	p.f("Alerts a year: %s times as many (exact 95%% bounds %s to %s, as if over histories of their own).\n", perhaps(x.Ratio), grouped(*x.RatioLower), upper)
 }
 
 // spans lists the excesses that one or more found.
@@ -195,7 +230,7 @@ func (p *printer) spans(c *compare.Comparison) {
 	p.heads(c)
 	for i := range c.Spans {
 		s := &c.Spans[i]
-		p.f("  %s\t%s\t%s, %s", s.From.Format(time.DateOnly), s.To.Format(time.DateOnly), s.Series, moreOrFewer(string(s.Direction)))
+		p.f("  %s\t%s\t%s, %s", date(s.From), date(s.To), s.Series, moreOrFewer(string(s.Direction)))
 		p.found(s.Found)
 	}
 }
@@ -209,7 +244,7 @@ func (p *printer) episodes(c *compare.Comparison) {
 	p.heads(c)
 	for i := range c.Episodes {
 		e := &c.Episodes[i]
-		p.f("  %s\t%s\t%s, %s", e.From.Format(time.DateOnly), e.To.Format(time.DateOnly), e.Series, moreOrFewer(string(e.Direction)))
+		p.f("  %s\t%s\t%s, %s", date(e.From), date(e.To), e.Series, moreOrFewer(string(e.Direction)))
 		p.found(e.Found)
 	}
 }
@@ -224,16 +259,43 @@ func (p *printer) heads(c *compare.Comparison) {
 
 func (p *printer) found(list []*compare.Found) {
 	for _, f := range list {
-		switch {
-		case f == nil:
+		if f == nil {
 			p.f("\tnot found")
-		case f.Days != nil:
-			p.f("\t%s (%s days) by %s", f.Opened.Format(time.DateOnly), short(*f.Days), f.Window)
-		default:
-			p.f("\t%s by %s", f.Opened.Format(time.DateOnly), f.Window)
+			continue
 		}
+		p.f("\t%s", date(f.Opened))
+		if f.Days != nil {
+			p.f(" (%s days)", grouped(*f.Days))
+		}
+		if f.Late {
+			p.f(", late,")
+		}
+		p.f(" by %s", f.Window)
 	}
 	p.f("\n")
+}
+
+// dates says in which zone dates are, and what late means where it was said.
+func (p *printer) dates(c *compare.Comparison, zones []string) {
+	if len(zones) == 1 {
+		p.f("\nDates are in the zone %s.\n", zones[0])
+	} else {
+		p.f("\nDates are in the zone of each indicator (%s), those of known episodes in the zone of their file.\n", strings.Join(zones, ", "))
+	}
+	for i := range c.Sides {
+		if c.Sides[i].Total.Late > 0 {
+			p.f("An alert is late if data that came after its look was due opened it: its date is that of the opening.\n")
+			return
+		}
+	}
+}
+
+// date is the date of a moment, with the time of day unless that is midnight.
+func date(t time.Time) string {
+	if t.Equal(time.Date(t.Year(), t.Month(), t.Day(), 0, 0, 0, 0, t.Location())) {
+		return t.Format(time.DateOnly)
+	}
+	return t.Format("2006-01-02 15:04")
 }
 
 func moreOrFewer(direction string) string {

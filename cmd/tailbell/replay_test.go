@@ -241,7 +241,7 @@ func TestReplayCompares(t *testing.T) {
 	known := writeHistory(t, "known.csv", "series,start,end\nquillmere-1/ward-7/falls,2022-10-28,2022-11-27\nquillmere-0/ward-0/falls,2022-02-01,2022-02-03\n")
 	said := says(t, 0, []string{"known episodes found", "Neither found 1 known episode.", "not found"},
 		"replay", "--config", setup, "--config", slow, "--known", known, "--zone", "UTC", history)
-	if !strings.Contains(said, "setup.toml") || !strings.Contains(said, "slow.toml beside setup.toml") {
+	if !strings.Contains(said, "setup.toml") || !strings.Contains(said, "slow.toml beside setup.toml") || !strings.Contains(said, "Dates are in the zone ") {
 		t.Errorf("it says\n%s", said)
 	}
 	text := says(t, 0, nil, "replay", "--json", "--config", setup, "--config", slow, "--known", known, "--zone", "UTC", history)

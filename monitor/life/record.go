@@ -108,7 +108,7 @@ type Record struct {
 	// Number counts the alerts of this series and direction, from 1.
 	Number int `json:"number"`
 	// Opened is the due time of the opening look. Late says that data which
-	// arrived after that look opened it.
+	// arrived after that look opened it; OpenedAt is then the later moment.
 	Opened time.Time `json:"opened"`
 	Late   bool      `json:"late"`
 	// Zone is the IANA zone in which the indicator keeps its calendar.
@@ -326,6 +326,16 @@ type Notice struct {
 // the shelf.
 func (n *Notice) Quiet() bool {
 	return n.Step.Condition == Shelved && n.Step.Kind != StepShelved
+}
+
+// OpenedAt is the moment at which the alert opened, in event time: that of its
+// first step. For one that late data opened it is after Opened. A record
+// without its steps gives Opened.
+func (r *Record) OpenedAt() time.Time {
+	if len(r.Steps) > 0 && r.Steps[0].Kind == StepOpened {
+		return r.Steps[0].At
+	}
+	return r.Opened
 }
 
 // Acknowledged reports whether somebody has acknowledged the alert since it

@@ -168,12 +168,7 @@ func firstIn(e *Episode, alerts []life.Record) EpisodeFound {
 	f := EpisodeFound{Series: e.Series.String(), Direction: string(e.Direction), From: e.From, To: e.To, Note: e.Note}
 	for i := range alerts {
 		a := &alerts[i]
-		// A late alert opens at the due time of its opening look, but by data
-		// that came after it: its first step says when.
-		at := a.Opened
-		if len(a.Steps) > 0 {
-			at = a.Steps[0].At
-		}
+		at := a.OpenedAt()
 		if a.Condition == life.Withdrawn || !e.overlaps(a) || !at.After(e.From) {
 			continue
 		}

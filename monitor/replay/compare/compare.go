@@ -9,7 +9,9 @@
 // different set-ups on one series and direction speak of the same excess if
 // they stand at the same time for a moment: then they rang over the same
 // events. All alerts that hang together so make one Span. A set-up found the
-// span at the moment when its first alert in it opened.
+// span at the moment when its first alert in it opened. Of an alert that late
+// data opened this is when those came, not when its look was due: before, nobody
+// could know of it.
 //
 // Alerts that were withdrawn because the data were corrected are left out: no
 // set-up found anything there.
@@ -87,7 +89,7 @@ func Of(played []Played, known []plant.Episode, level float64) *Comparison {
 			s.LooksAYear = &looks
 		}
 		c.Sides = append(c.Sides, s)
-		alerts = append(alerts, standing(p.Result, i)...)
+		alerts = append(alerts, standing(p, i)...)
 	}
 	c.Spans = spans(alerts, len(played))
 	for i := range c.Spans {

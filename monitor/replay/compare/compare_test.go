@@ -177,3 +177,47 @@ func TestOfNothing(t *testing.T) {
 		t.Errorf("%+v", p)
 	}
 }
+
+// TestOfLate has an alert whose look was due on day 20 opened on day 68, by
+// data that came late. Nobody could know of it before: delays and days count
+// from then, in the zone of the indicator.
+func TestOfLate(t *testing.T) {
+	late, other := alerts{{"a/falls", 20, 80}}.played(t, "late"), alerts{{"a/falls", 30, 40}}.played(t, "other")
+	zone := time.FixedZone("Quillmere", 3600)
+	late.Setup.Indicators[0].Zone = zone
+	for i := range late.Result.Steps {
+		n := &late.Result.Steps[i]
+		n.Record.Late, n.Record.Steps = true, []life.Step{{Kind: life.StepOpened, At: day(68)}}
+	}
+	known := []plant.Episode{{Series: config.NewPattern("a/falls"), Direction: life.Upper, From: day(10), To: day(30)}}
+	c := Of([]Played{late, other}, known, 0.95)
+	p := c.Pairs[0]
+	if p.Both != 1 || p.Earlier != 1 || *p.DelayMedian != -38 {
+		t.Errorf("the other opened 38 days before the late one: %+v, median %v", p, *p.DelayMedian)
+	}
+	s, k := c.Spans[0], c.Episodes[0]
+	for _, f := range []*Found{s.Found[0], k.Found[0]} {
+		if !f.Late || !f.Opened.Equal(day(68)) || !f.Due.Equal(day(20)) || f.Opened.Location() != zone {
+			t.Errorf("%+v", f)
+		}
+	}
+	if *k.Found[0].Days != 58 || *k.Found[1].Days != 20 {
+		t.Errorf("found after %v and %v days", *k.Found[0].Days, *k.Found[1].Days)
+	}
+	if s.Zone != "Quillmere" || s.From.Location() != zone || s.To.Location() != zone {
+		t.Errorf("%+v", s)
+	}
+}
+
+// TestOfFirst has a late alert whose look was due first open last: the span
+// was found when the other one opened.
+func TestOfFirst(t *testing.T) {
+	p := alerts{{"a/falls", 20, 30}, {"a/falls", 40, 50}}.played(t, "late")
+	for i := range 2 {
+		p.Result.Steps[i].Record.Late, p.Result.Steps[i].Record.Steps = true, []life.Step{{Kind: life.StepOpened, At: day(60)}}
+	}
+	known := []plant.Episode{{Series: config.NewPattern("a/falls"), Direction: life.Upper, From: day(10), To: day(40)}}
+	if f := Of([]Played{p}, known, 0.95).Episodes[0].Found[0]; f.Alert != "late-1" || f.Alerts != 2 || *f.Days != 30 {
+		t.Errorf("%+v", f)
+	}
+}

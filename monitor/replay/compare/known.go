@@ -11,7 +11,7 @@ import (
 type Known struct {
 	Series    string         `json:"series"` // as it was given, perhaps a pattern
 	Direction life.Direction `json:"direction"`
-	From      time.Time      `json:"from"`
+	From      time.Time      `json:"from"` // From and To as they were given
 	To        time.Time      `json:"to"`
 	Note      string         `json:"note,omitempty"`
 	Found     []*Found       `json:"found"`
@@ -56,14 +56,14 @@ func overlaps(e *plant.Episode, r *life.Record) bool {
 	return r.Direction == e.Direction && e.Series.Match(r.Series) && r.Opening.From.Before(e.To) && r.Opening.To.After(e.From)
 }
 
-// take keeps the earliest alert of each set-up.
+// take keeps the alert of each set-up that opened first.
 func (k *Known) take(s *stood) {
-	f := foundOf(s.record)
-	days := s.record.Opened.Sub(k.From).Hours() / 24
+	f := s.found()
+	days := f.Opened.Sub(k.From).Hours() / 24
 	f.Days = &days
 	if had := k.Found[s.side]; had != nil {
 		f.Alerts += had.Alerts
-		if !s.record.Opened.Before(had.Opened) {
+		if !f.Opened.Before(had.Opened) {
 			had.Alerts = f.Alerts
 			return
 		}

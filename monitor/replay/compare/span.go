@@ -6,7 +6,6 @@ import (
 	"time"
 
 	"tailbell/monitor/life"
-	"tailbell/monitor/replay"
 )
 
 // Span is a stretch of one series in which one set-up or more rang.
@@ -17,13 +16,21 @@ type Span struct {
 	// when the last alert ended.
 	From time.Time `json:"from"`
 	To   time.Time `json:"to"`
+	// Zone is the IANA zone of all its times: that in which the indicator of
+	// its first alert keeps its calendar.
+	Zone string `json:"zone"`
 	// Found is what each set-up found, in their order; nil for nothing.
 	Found []*Found `json:"found"`
 }
 
 // Found is what one set-up found of a span or an episode.
 type Found struct {
+	// Opened is the moment when the first alert opened, Due when its opening
+	// look was due, both in its indicator's zone. Late says that data which came
+	// after that look opened it: Opened is then after Due.
 	Opened time.Time `json:"opened"`
+	Due    time.Time `json:"due"`
+	Late   bool      `json:"late"`
 	// Alert is the first one's id, and Alerts how many there were.
 	Alert  string  `json:"alert"`
 	Alerts int     `json:"alerts"`
@@ -40,11 +47,18 @@ type stood struct {
 	side     int
 	record   *life.Record
 	from, to time.Time
-	root     int // of the alerts that hang together
+	opened   time.Time      // when it opened, which of a late one is after its look was due
+	zone     *time.Location // its indicator's
+	root     int            // of the alerts that hang together
 }
 
 // standing returns the alerts of a replay as they ended, but those withdrawn.
-func standing(r *replay.Result, side int) []stood {
+func standing(p *Played, side int) []stood {
+	zones := map[string]*time.Location{}
+	for i := range p.Setup.Indicators {
+		zones[p.Setup.Indicators[i].Name] = p.Setup.Indicators[i].Zone
+	}
+	r := p.Result
 	at := map[string]int{}
 	var list []stood
 	for i := range r.Steps {
@@ -53,16 +67,20 @@ func standing(r *replay.Result, side int) []stood {
 		if !known {
 			k = len(list)
 			at[n.Record.ID] = k
-			list = append(list, stood{side: side, to: r.Clock.Time()})
+			zone := zones[n.Record.Indicator]
+			if zone == nil {
+				zone = time.UTC
+			}
+			list = append(list, stood{side: side, to: r.Clock.Time().In(zone), zone: zone})
 		}
 		s := &list[k]
-		s.record, s.from = &n.Record, n.Record.Opening.From
+		s.record, s.from, s.opened = &n.Record, n.Record.Opening.From.In(s.zone), n.Record.OpenedAt().In(s.zone)
 		switch n.Step.Kind {
 		case life.StepReturned:
-			s.to = n.Step.At
+			s.to = n.Step.At.In(s.zone)
 		case life.StepClosed:
 			if n.Step.At.Before(s.to) {
-				s.to = n.Step.At
+				s.to = n.Step.At.In(s.zone)
 			}
 		case life.StepOpened, life.StepWorsened, life.StepCorrected, life.StepWithdrawn, life.StepAcknowledged, life.StepNote, life.StepMarked,
 			life.StepShelved, life.StepUnshelved, life.StepReminder, life.StepTest:
@@ -103,7 +121,10 @@ func spans(alerts []stood, sides int) []Span {
 		r := root(i)
 		s := found[r]
 		if s == nil {
-			s = &Span{Series: alerts[i].record.Series, Direction: alerts[i].record.Direction, From: alerts[i].from, To: alerts[i].to, Found: make([]*Found, sides)}
+			a := &alerts[i]
+			s = &Span{
+				Series: a.record.Series, Direction: a.record.Direction, From: a.from, To: a.to, Zone: a.zone.String(), Found: make([]*Found, sides),
+			}
 			found[r] = s
 		}
 		s.take(&alerts[i])
@@ -120,15 +141,15 @@ func spans(alerts []stood, sides int) []Span {
 
 func (s *Span) take(a *stood) {
 	if a.from.Before(s.From) {
-		s.From = a.from
+		s.From = a.from.In(s.From.Location())
 	}
 	if a.to.After(s.To) {
-		s.To = a.to
+		s.To = a.to.In(s.To.Location())
 	}
-	f := foundOf(a.record)
+	f := a.found()
 	if had := s.Found[a.side]; had != nil {
 		f.Alerts += had.Alerts
-		if !a.record.Opened.Before(had.Opened) {
+		if !f.Opened.Before(had.Opened) {
 			had.Alerts = f.Alerts
 			return
 		}
@@ -136,7 +157,10 @@ func (s *Span) take(a *stood) {
 	s.Found[a.side] = f
 }
 
-func foundOf(r *life.Record) *Found {
-	e := &r.Opening
-	return &Found{Opened: r.Opened, Alert: r.ID, Alerts: 1, P: e.P, Log10P: e.Log10P, Events: e.Events, Window: e.Window}
+func (a *stood) found() *Found {
+	r, e := a.record, &a.record.Opening
+	return &Found{
+		Opened: a.opened, Due: r.Opened.In(a.zone), Late: r.Late,
+		Alert: r.ID, Alerts: 1, P: e.P, Log10P: e.Log10P, Events: e.Events, Window: e.Window,
+	}
 }
