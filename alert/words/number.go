@@ -26,9 +26,10 @@ func Amount(n int64, nouns string) string {
 // P writes the p of a look as the sentences do.
 func P(e *life.Evidence) string { return pvalue(log10p(e)) }
 
-// Opened writes when an alert was opened, in its zone, for a list.
+// Opened writes when an alert was opened, in its zone, for a list. Of one that
+// late data opened that is after its look was due.
 func Opened(r *life.Record) string {
-	at := r.Opened.In(zoneOf(r))
+	at := r.OpenedAt().In(zoneOf(r))
 	return at.Format("2006-01-02 ") + clock(at)
 }
 

@@ -152,7 +152,7 @@ func worsened(n *life.Notice, zone *time.Location) string {
 	r := &n.Record
 	e := evidenceOf(&n.Step, &r.Worst)
 	if sameLook(e, &r.Worst) {
-		return "The evidence has grown since the alert was opened on " + day(r.Opened.In(zone)) + "."
+		return "The evidence has grown since the alert was " + strings.TrimSuffix(openedOn(r, zone), ",") + "."
 	}
 	which := ""
 	if !seenBefore(n, e.Window) {
@@ -220,8 +220,17 @@ func marked(s *life.Step) string {
 // story names the alert by its opening evidence.
 func story(r *life.Record, zone *time.Location) string {
 	e := &r.Opening
-	return "opened on " + day(r.Opened.In(zone)) + " by " + counted(e) + " in the " + span(e, zone) +
+	return openedOn(r, zone) + " by " + counted(e) + " in the " + span(e, zone) +
 		"; about " + expected(e) + " would be usual"
+}
+
+// openedOn says on which day the alert opened, and when that was later than its
+// look was due.
+func openedOn(r *life.Record, zone *time.Location) string {
+	if r.Late {
+		return "opened late on " + day(r.OpenedAt().In(zone)) + ", for the look due on " + moment(r.Opened.In(zone)) + ","
+	}
+	return "opened on " + day(r.OpenedAt().In(zone))
 }
 
 func corrected(n *life.Notice, zone *time.Location) string {

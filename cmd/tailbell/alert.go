@@ -74,7 +74,8 @@ func newAlertListCommand() *cobra.Command {
 		Short: "List the alerts that are not done (--all: every one), newest first",
 		Long: `Lists the alerts that are not done (--all: closed and withdrawn ones too), newest
 first. Window, events, expected events and p are those of an alert's strongest look;
-times are in its indicator's zone. Works without a running daemon too.`,
+times are in its indicator's zone. Late is one that data opened which came after its
+look was due. Works without a running daemon too.`,
 		RunE: func(c *cobra.Command, _ []string) error {
 			if req.Max < 1 {
 				return &usageError{fmt.Errorf("--max %d: it must be at least 1", req.Max)}
@@ -89,7 +90,7 @@ times are in its indicator's zone. Works without a running daemon too.`,
 				return err
 			}
 			// Each partition gave its newest.
-			slices.SortStableFunc(records, func(a, b life.Record) int { return b.Opened.Compare(a.Opened) })
+			slices.SortStableFunc(records, func(a, b life.Record) int { return b.OpenedAt().Compare(a.OpenedAt()) })
 			records = records[:min(len(records), req.Max)]
 			if asJSON {
 				return writeJSON(c.OutOrStdout(), records)
@@ -112,12 +113,16 @@ func tabulate(w io.Writer, records []life.Record) error {
 	rows := [][]string{{"ALERT", "OPENED", "CONDITION", "TAIL", "WINDOW", "EVENTS", "EXPECTED", "P", "SERIES"}}
 	for i := range records {
 		r := &records[i]
+		opened := words.Opened(r)
+		if r.Late {
+			opened += " late"
+		}
 		if r.Silence != nil {
-			rows = append(rows, []string{r.ID, words.Opened(r), string(r.Condition), string(r.Direction), "", "", "", "", r.Series})
+			rows = append(rows, []string{r.ID, opened, string(r.Condition), string(r.Direction), "", "", "", "", r.Series})
 			continue
 		}
 		rows = append(rows, []string{
-			r.ID, words.Opened(r), string(r.Condition), string(r.Direction), r.Worst.Window,
+			r.ID, opened, string(r.Condition), string(r.Direction), r.Worst.Window,
 			strconv.FormatInt(r.Worst.Events, 10), words.Expected(&r.Worst), words.P(&r.Worst), r.Series,
 		})
 	}

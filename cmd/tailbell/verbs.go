@@ -209,7 +209,11 @@ func listAlerts(st *store.Store, req alertsRequest) ([]life.Record, error) {
 	records := make([]life.Record, len(rows))
 	for i := range rows {
 		records[i] = rows[i].Record
-		records[i].Steps = nil
+		if steps := records[i].Steps; len(steps) > 0 {
+			opening := steps[0] // which says when it opened
+			opening.Evidence = nil
+			records[i].Steps = []life.Step{opening}
+		}
 	}
 	return records, nil
 }
