@@ -57,7 +57,7 @@ func (p *Page) standing() ([]life.Record, bool, error) {
 		return cmp.Or(
 			cmp.Compare(urgency(a.Condition), urgency(b.Condition)),
 			cmp.Compare(a.Worst.Log10P, b.Worst.Log10P),
-			b.Opened.Compare(a.Opened),
+			b.OpenedAt().Compare(a.OpenedAt()),
 		)
 	})
 	o.records, o.more, o.commits, o.at = records, more, commits, now

@@ -88,7 +88,7 @@ func (p *Page) newestAlerts(filter store.AlertFilter, before []uint64) (records 
 			all = append(all, place{i, row})
 		}
 	}
-	slices.SortStableFunc(all, func(a, b place) int { return b.row.Record.Opened.Compare(a.row.Record.Opened) })
+	slices.SortStableFunc(all, func(a, b place) int { return b.row.Record.OpenedAt().Compare(a.row.Record.OpenedAt()) })
 	more = len(all) > recordRows
 	for _, one := range all[:min(len(all), recordRows)] {
 		records = append(records, one.row.Record)

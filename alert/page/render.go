@@ -93,7 +93,7 @@ var functions = template.FuncMap{
 	"condition": func(c life.Condition) string { return string(c) },
 	"title":     title,
 	"link":      seriesLink,
-	"opened":    func(r *life.Record) time.Time { return r.Opened.In(words.Zone(r)) },
+	"opened":    func(r *life.Record) time.Time { return r.OpenedAt().In(words.Zone(r)) },
 	"dict":      dict,
 }
 

@@ -244,7 +244,7 @@ func heading(a life.Record) string {
 	}
 	text := "Alert " + a.ID + ": " + sign + ", opened " + words.Opened(&a)
 	if a.Late {
-		text += " by data that came late"
+		text += " by data that came after its look was due (" + a.Opened.In(words.Zone(&a)).Format("2006-01-02 15:04 MST") + ")"
 	}
 	text += "; " + string(a.Condition)
 	if a.Mark != life.NotMarked {
@@ -265,8 +265,12 @@ func glance(in *Indicator) *table {
 		if a.Direction == life.Lower {
 			sign = "▼\u00a0fewer"
 		}
+		opened := a.OpenedAt().In(in.Cfg.Zone).Format("2006-01-02")
+		if a.Late {
+			opened += ", late"
+		}
 		t.Rows = append(t.Rows, []string{
-			a.ID, a.Series, sign, a.Opened.In(in.Cfg.Zone).Format("2006-01-02"), words.Length(a.Opening.Window), words.Whole(a.Opening.Events),
+			a.ID, a.Series, sign, opened, words.Length(a.Opening.Window), words.Whole(a.Opening.Events),
 			words.Expected(&a.Opening), words.PValue(a.Opening.Log10P), string(a.Condition), string(a.Mark),
 		})
 	}

@@ -325,7 +325,7 @@ func (r *Recorder) alerts(in *Indicator) {
 			in.Alerts = append(in.Alerts, Alert{Record: a})
 		}
 	}
-	slices.SortFunc(in.Alerts, func(a, b Alert) int { return cmp.Or(a.Opened.Compare(b.Opened), cmp.Compare(a.ID, b.ID)) })
+	slices.SortFunc(in.Alerts, func(a, b Alert) int { return cmp.Or(a.OpenedAt().Compare(b.OpenedAt()), cmp.Compare(a.ID, b.ID)) })
 	for i := range in.Alerts {
 		a := &in.Alerts[i]
 		a.Picture = r.around(in, a)
