@@ -120,6 +120,8 @@ func New(o Options) (*Page, error) {
 		p.mux.HandleFunc(pattern, func(w http.ResponseWriter, r *http.Request) { p.answer(w, r, screen) })
 	}
 	p.mux.HandleFunc("POST /alerts/{id}", p.act)
+	p.mux.HandleFunc("GET /alerts.csv", p.export("csv", "text/csv; charset=utf-8; header=present"))
+	p.mux.HandleFunc("GET /alerts.json", p.export("json", "application/json"))
 	p.mux.HandleFunc("GET /live", p.live)
 	p.mux.HandleFunc("GET /own/{version}/{file}", serveOwn)
 	p.mux.HandleFunc("/", func(w http.ResponseWriter, r *http.Request) {

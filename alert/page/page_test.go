@@ -2,9 +2,11 @@ package page
 
 import (
 	"bufio"
+	"encoding/json"
 	"net/http"
 	"net/http/httptest"
 	"net/url"
+	"slices"
 	"strings"
 	"testing"
 	"time"
@@ -158,6 +160,21 @@ func TestRecordTurnsItsPages(t *testing.T) {
 	}
 	if code, body := s.get("/alerts?before=1"); code != http.StatusOK || !strings.Contains(body, "There is none.") {
 		t.Errorf("before the oldest: %d", code)
+	}
+}
+
+func TestRecordIsExportedWhole(t *testing.T) {
+	s := newStand(t)
+	r := s.ring()
+	code, text := s.get("/alerts.csv")
+	if code != http.StatusOK || strings.Count(text, "\n"+r.ID+","+r.Series+",") != len(r.Steps) {
+		t.Errorf("%d: %s", code, text)
+	}
+	code, text = s.get("/alerts.json")
+	var all []life.Record
+	if err := json.Unmarshal([]byte(text), &all); code != http.StatusOK || err != nil ||
+		!slices.ContainsFunc(all, func(o life.Record) bool { return o.ID == r.ID && len(o.Steps) == len(r.Steps) }) {
+		t.Errorf("%d, %v: %s", code, err, text)
 	}
 }
 

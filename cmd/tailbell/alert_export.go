@@ -8,6 +8,7 @@ import (
 
 	"github.com/spf13/cobra"
 
+	"tailbell/alert/words"
 	"tailbell/config"
 	"tailbell/ingest/bus"
 	"tailbell/ingest/control"
@@ -42,9 +43,9 @@ func newAlertExportCommand() *cobra.Command {
 every step and act, with who, when and why; as JSON the records themselves, evidence
 and all. Times are UTC. Works without a running daemon too.`,
 		RunE: func(c *cobra.Command, _ []string) error {
-			out, err := newExporter(format, c.OutOrStdout())
+			out, err := words.NewExporter(format, c.OutOrStdout())
 			if err != nil {
-				return &usageError{err}
+				return &usageError{fmt.Errorf("--format: %w", err)}
 			}
 			setup, err := loadSetup(path)
 			if err != nil {
@@ -54,12 +55,12 @@ and all. Times are UTC. Works without a running daemon too.`,
 				if series != "" && r.Series != series {
 					return nil
 				}
-				return out.write(r)
+				return out.Write(r)
 			})
 			if err != nil {
 				return err
 			}
-			return out.end()
+			return out.End()
 		},
 	}
 	addConfigFlag(c, &path)

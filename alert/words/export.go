@@ -1,4 +1,4 @@
-package main
+package words
 
 import (
 	"encoding/csv"
@@ -12,20 +12,23 @@ import (
 	"tailbell/monitor/life"
 )
 
-// exporter writes records in a form.
-type exporter interface {
-	write(r *life.Record) error
-	end() error
+// Exporter writes out whole records of alerts, one after the other, then End.
+type Exporter interface {
+	Write(r *life.Record) error
+	End() error
 }
 
-func newExporter(format string, w io.Writer) (exporter, error) {
-	switch format {
+// NewExporter returns one that writes CSV, a line for every step and act, or
+// JSON, an array of the records themselves. Times are UTC. An error says that
+// the form is neither.
+func NewExporter(form string, w io.Writer) (Exporter, error) {
+	switch form {
 	case "csv":
 		return &csvExporter{w: csv.NewWriter(w)}, nil
 	case "json":
 		return &jsonExporter{w: w}, nil
 	}
-	return nil, fmt.Errorf("--format %q: it is csv or json", format)
+	return nil, fmt.Errorf("%q is no form of an export: it is csv or json", form)
 }
 
 // jsonExporter writes an array of records, one a line.
@@ -34,7 +37,7 @@ type jsonExporter struct {
 	began bool
 }
 
-func (e *jsonExporter) write(r *life.Record) error {
+func (e *jsonExporter) Write(r *life.Record) error {
 	data, err := json.Marshal(r)
 	if err != nil {
 		return fmt.Errorf("encoding alert %s: %w", r.ID, err)
@@ -48,7 +51,7 @@ func (e *jsonExporter) write(r *life.Record) error {
 	return err
 }
 
-func (e *jsonExporter) end() error {
+func (e *jsonExporter) End() error {
 	text := "\n]\n"
 	if !e.began {
 		text = "[]\n"
@@ -78,7 +81,7 @@ func (e *csvExporter) begin() error {
 	return e.w.Write(exportColumns)
 }
 
-func (e *csvExporter) write(r *life.Record) error {
+func (e *csvExporter) Write(r *life.Record) error {
 	if err := e.begin(); err != nil {
 		return err
 	}
@@ -91,7 +94,7 @@ func (e *csvExporter) write(r *life.Record) error {
 	return e.w.Error()
 }
 
-func (e *csvExporter) end() error {
+func (e *csvExporter) End() error {
 	if err := e.begin(); err != nil {
 		return err
 	}
