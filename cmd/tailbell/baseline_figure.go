@@ -37,6 +37,9 @@ const (
 	figureDPI    = 150
 )
 
+// figureCaution stands under every picture that goes into a file of its own.
+const figureCaution = "A signal is a statistical finding, not a diagnosis and not a cause. Silence is no proof of safety. Local policy decides."
+
 // checkFigure refuses a file of a kind that can't be drawn.
 func checkFigure(path string) error {
 	switch strings.ToLower(filepath.Ext(path)) {
@@ -64,6 +67,8 @@ func drawBaseline(path string, h *estimate.History, r *estimate.Report) error {
 		}
 		plots = append(plots, []*plot.Plot{lower})
 	}
+	last := plots[len(plots)-1][0]
+	last.X.Label.Text = strings.TrimPrefix(last.X.Label.Text+"\n"+figureCaution, "\n")
 	var canvas vg.CanvasWriterTo
 	if strings.EqualFold(filepath.Ext(path), ".svg") {
 		canvas = vgsvg.New(figureWidth, figureHeight)
@@ -201,7 +206,11 @@ func periodTicks(h *estimate.History, length string, periods []estimate.Period) 
 // windowPlot draws how many windows held so many events, beside what the models
 // expect.
 func windowPlot(h *estimate.History, w *estimate.Windows) (*plot.Plot, error) {
-	p := newPlot(fmt.Sprintf("Windows of %s: how many held so many events", w.Window))
+	title := fmt.Sprintf("Windows of %s: how many held so many events", w.Window)
+	if w.Of > w.Count {
+		title += fmt.Sprintf(" (%s, thinned from %s)", thousands(int64(w.Count)), thousands(int64(w.Of)))
+	}
+	p := newPlot(title)
 	p.X.Label.Text = h.Indicator.EventNoun + " in a window"
 	p.Y.Label.Text = "windows"
 	var seen []bar1

@@ -217,7 +217,7 @@ func (p *baselinePage) excesses() {
 
 func (p *baselinePage) windows() {
 	for _, w := range p.r.Windows {
-		p.line("\nWINDOWS of %s: %s of them; %d lay at the limit or past it where chance gives %s", w.Window, thousands(int64(w.Count)), w.Past, short(w.PastChance))
+		p.line("\n%s", windowsHead(w))
 		rows := [][]string{{"events", "seen", "by chance"}}
 		if w.Phi > 1 {
 			rows[0] = append(rows[0], "with spread "+short(w.Phi))
@@ -238,6 +238,18 @@ func (p *baselinePage) windows() {
 		}
 		p.table(rows)
 	}
+}
+
+// windowsHead says how many windows the counts are of.
+func windowsHead(w *estimate.Windows) string {
+	text := fmt.Sprintf("WINDOWS of %s: %s of them", w.Window, thousands(int64(w.Count)))
+	if w.Of > w.Count {
+		text += fmt.Sprintf(", evenly thinned from %s", thousands(int64(w.Of)))
+	}
+	if x := w.AtLimit; x != nil {
+		text += fmt.Sprintf("; %s lay at p <= %s where chance gives %s", thousands(int64(x.Past)), short(x.PLimit), short(x.Chance))
+	}
+	return text
 }
 
 func (p *baselinePage) delay() {

@@ -24,18 +24,26 @@ type Share struct {
 // the models say.
 type Windows struct {
 	Window string `json:"window"`
-	// Count is how many windows there were; of a great many every so-many-th
-	// is taken.
+	// Count is how many windows were counted: every so-many-th of a great many.
+	// Of is how many there were.
 	Count int `json:"count"`
+	Of    int `json:"of"`
 	// Phi is the spread used for Share.Spread: that of counts of this length;
 	// 1 where there is no more than chance gives.
 	Phi    float64 `json:"phi"`
 	Shares []Share `json:"shares"`
-	// Past is how many windows lay at or under the p limit of the indicator,
-	// in the tails it watches, if the rates were known; PastChance what the
-	// plain model expects.
-	Past       int     `json:"past"`
-	PastChance float64 `json:"past_chance"`
+	// AtLimit holds the windows against the indicator's limit on p; nil where
+	// the limits follow from an allowance: they then differ by series and tail.
+	AtLimit *AtLimit `json:"at_limit,omitempty"`
+}
+
+// AtLimit is how many windows lay at a limit on p or past it.
+type AtLimit struct {
+	PLimit float64 `json:"p_limit"`
+	// Past is how many had a p at or under the limit, in the tails that are
+	// watched, if the rates were known; Chance what the plain model expects.
+	Past   int     `json:"past"`
+	Chance float64 `json:"chance"`
 }
 
 // rolling is the content of one window.
@@ -47,9 +55,9 @@ type rolling struct {
 
 const maxWindows = 4000
 
-// rollingWindows returns the windows of all series whose slots are all known.
-func (h *History) rollingWindows(w config.Window) []rolling {
-	var all []rolling
+// rollingWindows returns the windows of all series whose slots are all known,
+// every so-many-th of a great many, and how many there were.
+func (h *History) rollingWindows(w config.Window) (all []rolling, of int) {
 	for i := range h.Series {
 		s := &h.Series[i]
 		exposure := s.exposure()
@@ -70,14 +78,15 @@ func (h *History) rollingWindows(w config.Window) []rolling {
 			all = append(all, r)
 		}
 	}
-	if every := (len(all) + maxWindows - 1) / maxWindows; every > 1 {
+	of = len(all)
+	if every := (of + maxWindows - 1) / maxWindows; every > 1 {
 		kept := all[:0]
 		for i := 0; i < len(all); i += every {
 			kept = append(kept, all[i])
 		}
 		all = kept
 	}
-	return all
+	return all, of
 }
 
 type tailLaw interface {
@@ -115,15 +124,18 @@ func (h *History) spreadLaw(rate, exposure, phi float64) tailLaw {
 // windows compares the counts of one window with the models; nil if there are
 // none.
 func (h *History) windows(w config.Window, phi float64) *Windows {
-	all := h.rollingWindows(w)
+	all, of := h.rollingWindows(w)
 	if len(all) == 0 {
 		return nil
 	}
-	x := &Windows{Window: w.Name, Count: len(all), Phi: max(phi, 1)}
+	x := &Windows{Window: w.Name, Count: len(all), Of: of, Phi: max(phi, 1)}
 	if math.IsNaN(phi) {
 		x.Phi = 1
 	}
 	x.Shares = bins(all)
+	if limit := h.Indicator.PLimit; limit > 0 {
+		x.AtLimit = &AtLimit{PLimit: limit}
+	}
 	for _, r := range all {
 		h.addWindow(x, r)
 	}
@@ -140,17 +152,22 @@ func (h *History) addWindow(x *Windows, r rolling) {
 		b.Chance += between(plain, b.Least, b.Most)
 		b.Spread += between(spread, b.Least, b.Most)
 	}
-	in := h.Indicator
-	if k, size, ok := plain.CriticalUpper(in.PLimit); in.Upper && ok {
-		x.PastChance += size
-		if r.events >= k {
-			x.Past++
+	if x.AtLimit != nil {
+		x.AtLimit.add(h.Indicator, plain, r.events)
+	}
+}
+
+func (a *AtLimit) add(in *config.Indicator, law tailLaw, events int64) {
+	if k, size, ok := law.CriticalUpper(a.PLimit); in.Upper && ok {
+		a.Chance += size
+		if events >= k {
+			a.Past++
 		}
 	}
-	if k, size, ok := plain.CriticalLower(in.PLimit); in.Lower && ok {
-		x.PastChance += size
-		if r.events <= k {
-			x.Past++
+	if k, size, ok := law.CriticalLower(a.PLimit); in.Lower && ok {
+		a.Chance += size
+		if events <= k {
+			a.Past++
 		}
 	}
 }

@@ -3,6 +3,7 @@ package estimate
 import (
 	"testing"
 
+	"tailbell/config"
 	"tailbell/exact/resample"
 )
 
@@ -78,6 +79,40 @@ func TestWindowsRoll(t *testing.T) {
 	}
 	near(t, "windows seen", seen, 6, 0)
 	near(t, "windows by chance", chance, 6, 1e-9)
+}
+
+// TestWindowsThinned: of a great many windows every so-many-th is counted, and
+// it is said of how many.
+func TestWindowsThinned(t *testing.T) {
+	h := historyOf(plain(), seriesOf("x", make([]int64, 9000), one))
+	if w := h.windows(h.Indicator.Windows[0], 1); w.Count != 3000 || w.Of != 9000 {
+		t.Errorf("%d windows of %d, want 3000 of 9000", w.Count, w.Of)
+	}
+}
+
+// TestWindowsAtLimit: windows are held against a stated limit on p. Of 100
+// windows of mean 1, R's ppois(4, 1, lower.tail = FALSE) = 0.003659847 and
+// ppois(3, 1, lower.tail = FALSE) = 0.01898816 put the critical count at 5
+// events for p <= 0.01. Limits that follow from an allowance differ by series:
+// nothing is said then.
+func TestWindowsAtLimit(t *testing.T) {
+	counts := make([]int64, 100)
+	for i := range counts {
+		counts[i] = 1
+	}
+	counts[0], counts[1], counts[2], counts[3], counts[4], counts[5] = 5, 0, 0, 0, 0, 1
+	in := plain()
+	in.PLimit = 0.01
+	h := historyOf(in, seriesOf("x", counts, one))
+	w := h.windows(in.Windows[0], 1)
+	if w.AtLimit == nil || w.AtLimit.Past != 1 {
+		t.Fatalf("got %+v", w.AtLimit)
+	}
+	near(t, "past the limit by chance", w.AtLimit.Chance, 0.3659847, 5e-7)
+	in.PLimit, in.Allowance = 0, &config.Allowance{}
+	if w := h.windows(in.Windows[0], 1); w.AtLimit != nil {
+		t.Errorf("under an allowance: %+v", w.AtLimit)
+	}
 }
 
 // TestCrossing holds the crossing rate against a reference point that was
