@@ -15,6 +15,7 @@ type canvas struct {
 	b                        strings.Builder
 	width, height            int
 	left, right, top, bottom float64
+	below                    float64 // room under the key
 	from, to                 time.Time
 	most                     float64 // the greatest value drawn
 }

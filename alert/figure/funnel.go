@@ -31,8 +31,12 @@ type Funnel struct {
 	Per        float64
 	Proportion bool
 	Units      []Unit
-	// Target is the rate per exposure for all; 0 takes the pooled one.
-	Target float64
+	// Target is the rate per exposure for all, such as a known baseline; 0 takes
+	// the pooled one. TargetName names it: "the known baseline".
+	Target     float64
+	TargetName string
+	// Note, if not "", is written under the picture.
+	Note string
 	// Width and Height in pixels; 0 for 720 by 420.
 	Width, Height int
 }
@@ -59,7 +63,8 @@ type FunnelRow struct {
 	High    bool
 }
 
-// Pooled is the rate of all units together, in multiples of Per.
+// Pooled is the rate that units are held against, in multiples of Per: that of
+// all together, or the Target.
 func (f *Funnel) Pooled() float64 { return f.rate() * f.Per }
 
 func (f *Funnel) rate() float64 {
@@ -123,6 +128,17 @@ func (f *Funnel) Rows() []FunnelRow {
 	return rows
 }
 
+// Against names the rate that units are held against.
+func (f *Funnel) Against() string {
+	switch {
+	case f.Target <= 0:
+		return "the rate of all together"
+	case f.TargetName != "":
+		return f.TargetName
+	}
+	return "a stated rate"
+}
+
 // Describe says in words what SVG shows.
 func (f *Funnel) Describe() string {
 	rows := f.Rows()
@@ -136,8 +152,8 @@ func (f *Funnel) Describe() string {
 			low = append(low, rows[i].Name)
 		}
 	}
-	text := fmt.Sprintf("The rate of each of %s against its exposure, with the rate of all together, %s %s, and exact limits around it at 95 %% and 99.8 %%.",
-		words.Amount(int64(len(rows)), "units"), words.Number(f.Pooled()), f.Rate)
+	text := fmt.Sprintf("The rate of each of %s against its exposure, with %s, %s %s, and exact limits around it at 95 %% and 99.8 %%.",
+		words.Amount(int64(len(rows)), "units"), f.Against(), words.Number(f.Pooled()), f.Rate)
 	list := func(what string, names []string) {
 		if len(names) > 0 {
 			text += " " + what + ": " + strings.Join(names, ", ") + "."
@@ -170,6 +186,9 @@ func (f *Funnel) SVG() string {
 	if c.height == 0 {
 		c.height = 420
 	}
+	if f.Note != "" {
+		c.below, c.bottom = 20, c.bottom+20
+	}
 	rows := f.Rows()
 	v := &funnelView{canvas: c}
 	most := 2 * f.Pooled()
@@ -187,6 +206,9 @@ func (f *Funnel) SVG() string {
 		v.limits(f)
 		v.units(rows)
 		v.legend(rows)
+	}
+	if f.Note != "" {
+		c.text(8, float64(c.height)-8, "start", "fig-scale", ink, f.Note)
 	}
 	return c.end()
 }
@@ -213,8 +235,12 @@ func (v *funnelView) axes(f *Funnel, step float64) {
 // rates, at every half pixel.
 func (v *funnelView) limits(f *Funnel) {
 	pooled := f.Pooled()
+	word := "all"
+	if f.Target > 0 {
+		word = "known"
+	}
 	v.path("fig-usual", green, "M"+px(v.left)+" "+px(v.y(pooled))+"H"+px(v.edge()), `stroke-width="1.8"`)
-	v.text(v.edge()+6, v.y(pooled)+4, "start", "fig-usual-fill", green, "all "+words.Number(pooled))
+	v.text(v.edge()+6, v.y(pooled)+4, "start", "fig-usual-fill", green, word+" "+words.Number(pooled))
 	for _, level := range []struct {
 		alpha        float64
 		word, dashes string

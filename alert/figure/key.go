@@ -68,7 +68,7 @@ func (s *Series) drawKey(c *canvas) {
 }
 
 func (c *canvas) key(signs []sign) {
-	x, y := c.left+6, float64(c.height)-12
+	x, y := c.left+6, float64(c.height)-12-c.below
 	for _, s := range signs {
 		if !s.shown {
 			continue

@@ -23,12 +23,13 @@ type question struct {
 // exactAnswer is what is known of one question; NaN for what can't be said.
 type exactAnswer struct {
 	question
-	expected                       float64
+	expected                       float64 // by the baseline, or the reference's rate, with the margin
 	rate, rateLower, rateUpper     float64
 	ratio, ratioLower, ratioUpper  float64
 	p, log10P                      float64
 	critical                       int64
 	attained                       float64
+	criticalLower                  bool // the critical count is one of too few
 	hasTest, hasCritical, noSignal bool
 	test, ratioKind                string
 }
@@ -129,14 +130,14 @@ func (o exactOptions) answer(q question) (exactAnswer, error) {
 		misses, refMisses := q.size-float64(q.events), q.reference-float64(q.refEvents)
 		a.ratio = float64(q.events) * refMisses / (misses * float64(q.refEvents))
 		a.ratioLower, a.ratioUpper = o.pick(y.OddsRatioBounds, y.OddsRatioBoundsMid, y.OddsRatioBoundsBy, q.events)
-		a.expected = (float64(q.events) + float64(q.refEvents)) * q.size / (q.size + q.reference)
+		odds := float64(q.refEvents) * o.edge(q)
+		a.expected = q.size * odds / (odds + refMisses)
 	case q.hasReference:
 		y := exact.TwoRate{RefEvents: q.refEvents, Exposure: q.size, RefExposure: q.reference, Margin: o.edge(q)}
 		x, a.test, a.ratioKind = y, "conditional test of two rates", "rate ratio"
 		a.ratio = a.rate / (float64(q.refEvents) / q.reference)
 		a.ratioLower, a.ratioUpper = o.pick(y.RatioBounds, y.RatioBoundsMid, y.RatioBoundsBy, q.events)
-		w := q.size * o.edge(q)
-		a.expected = (float64(q.events) + float64(q.refEvents)) * w / (w + q.reference)
+		a.expected = float64(q.refEvents) / q.reference * q.size * o.edge(q)
 	default:
 		return a, nil
 	}
@@ -229,7 +230,7 @@ func (o exactOptions) weigh(a *exactAnswer, x exactTest) {
 		limit /= 2
 	}
 	var ok bool
-	if lower {
+	if a.criticalLower = lower; lower {
 		a.critical, a.attained, ok = x.CriticalLower(limit)
 	} else {
 		a.critical, a.attained, ok = x.CriticalUpper(limit)

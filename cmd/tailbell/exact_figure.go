@@ -70,9 +70,10 @@ func (u *unitsFigure) write(path string, o *exactOptions) error {
 	}
 	if f.Title = "All units, against the rate of all together"; len(u.targets) == 1 && u.known == len(f.Units) {
 		for target := range u.targets {
-			f.Title, f.Target = "All units, against the known baseline", target/o.per
+			f.Title, f.Target, f.TargetName = "All units, against the known baseline", target/o.per, "the known baseline"
 		}
 	}
+	f.Note = figureCaution
 	f.Events, f.Exposure, f.Per = "events", "units of exposure", o.per
 	if f.Proportion {
 		f.Exposure = "trials"
@@ -90,7 +91,7 @@ func (u *unitsFigure) write(path string, o *exactOptions) error {
 // drawFunnel draws the picture as dots of an image, with the same limits.
 func drawFunnel(path string, f *figure.Funnel) error {
 	p := newPlot(f.Title)
-	p.X.Label.Text, p.Y.Label.Text = f.Exposure, f.Events+" "+f.Rate
+	p.X.Label.Text, p.Y.Label.Text = f.Exposure+"\n"+f.Note, f.Events+" "+f.Rate
 	p.Y.Tick.Marker = plot.DefaultTicks{}
 	p.X.Min = 0
 	most := 0.0
@@ -105,7 +106,7 @@ func drawFunnel(path string, f *figure.Funnel) error {
 	}
 	level.Color = black
 	p.Add(level)
-	p.Legend.Add(fmt.Sprintf("for all: %s", short(rate*f.Per)), level)
+	p.Legend.Add(fmt.Sprintf("%s: %s", f.Against(), short(rate*f.Per)), level)
 	for _, x := range []struct {
 		share  float64
 		name   string

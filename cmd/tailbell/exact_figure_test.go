@@ -23,8 +23,14 @@ func TestExactFigure(t *testing.T) {
 		}
 	}
 	says(t, 0, nil, "exact", table, "--per", "1000", "--baseline", "6", "--figure", svg)
-	if !strings.Contains(readText(t, svg), "against the known baseline") {
-		t.Error("the baseline is not drawn")
+	text = readText(t, svg)
+	for _, part := range []string{"against the known baseline", "with the known baseline, 6.0 per 1000", ">known 6.0<", "Silence is no proof of safety"} {
+		if !strings.Contains(text, part) {
+			t.Errorf("%q is not in the picture", part)
+		}
+	}
+	if strings.Contains(text, "rate of all") {
+		t.Error("a known baseline is called the rate of all")
 	}
 	says(t, 0, nil, "exact", table, "--figure", image)
 	file, err := os.Open(image)

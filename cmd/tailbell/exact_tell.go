@@ -45,17 +45,7 @@ func (a exactAnswer) tell(w io.Writer, o exactOptions) error {
 }
 
 func (a exactAnswer) because(o exactOptions) string {
-	margin := ""
-	if a.margin != 1 {
-		kind := "times "
-		if o.lower && !o.twoSided {
-			kind = "divided by "
-		}
-		if a.hasReference && a.proportion {
-			kind = "odds ratio "
-		}
-		margin = " (" + kind + plain(a.margin) + ", the margin)"
-	}
+	margin := a.marginWords(o)
 	if a.hasBaseline {
 		return "at the baseline of " + plain(a.baseline) + o.perWords(a.proportion) + margin
 	}
@@ -64,6 +54,21 @@ func (a exactAnswer) because(o exactOptions) string {
 		unit = " trials"
 	}
 	return "if things were as in the reference, " + counted(a.refEvents) + " in " + plain(a.reference) + unit + margin
+}
+
+// marginWords says what the margin does to what would be expected.
+func (a exactAnswer) marginWords(o exactOptions) string {
+	if a.margin == 1 {
+		return ""
+	}
+	kind := "times "
+	if o.lower && !o.twoSided {
+		kind = "divided by "
+	}
+	if a.hasReference && a.proportion {
+		kind = "its odds " + kind
+	}
+	return " (" + kind + plain(a.margin) + ", the margin)"
 }
 
 func (a exactAnswer) rateName() string {
@@ -126,11 +131,7 @@ func (a exactAnswer) criticalSentence(o exactOptions) string {
 	case !a.hasCritical:
 		return ""
 	}
-	lower := o.lower
-	if o.twoSided {
-		lower = float64(a.critical) < a.expected
-	}
-	if lower {
+	if a.criticalLower {
 		return fmt.Sprintf("At p <= %s a look signals at %s or fewer (attained size %s).", limit, counted(a.critical), brief(a.attained))
 	}
 	return fmt.Sprintf("At p <= %s a look signals from %s on (attained size %s).", limit, counted(a.critical), brief(a.attained))

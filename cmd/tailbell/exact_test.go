@@ -44,6 +44,19 @@ func TestExactOneQuestion(t *testing.T) {
 		{"--events 11 --exposure 800 --reference-events 21 --reference-exposure 3011", []string{
 			"rate ratio                 1.971, 95 % bounds 0.8584 to 4.277", "0.05601", "as in the reference, 21 events in 3011 of exposure",
 		}},
+		// What the reference's rate brings, 21 * 800 / 3011, whatever was seen.
+		{"--events 11 --exposure 800 --reference-events 21 --reference-exposure 3011", []string{"where 5.58 would be expected if"}},
+		{"--events 40 --exposure 800 --reference-events 21 --reference-exposure 3011", []string{"where 5.58 would be expected if"}},
+		{"--events 1 --exposure 800 --reference-events 21 --reference-exposure 3011 --margin 2 --tail lower", []string{
+			"where 2.79 would be expected if", "(divided by 2, the margin)",
+		}},
+		// Odds of 20 in 80, halved: 20 in 160, so 1 in 9 of 90 trials.
+		{"--events 1 --trials 90 --reference-events 20 --reference-trials 100 --margin 2 --tail lower", []string{
+			"where 10 would be expected if", "(its odds divided by 2, the margin)",
+		}},
+		{"--events 30 --trials 90 --reference-events 20 --reference-trials 100 --margin 2", []string{
+			"where 30 would be expected if", "(its odds times 2, the margin)",
+		}},
 		{"--events 3 --trials 4 --reference-events 1 --reference-trials 4", []string{"odds ratio                 9,", "0.2429", "Fisher's test"}},
 		{"--events 682 --trials 925 --baseline 0.75 --two-sided minlike", []string{"two-sided (minlike)     0.3825", "minimum likelihood"}},
 		{"--events 3 --trials 15 --baseline 0.1 --mid-p", []string{"mid-p"}},
