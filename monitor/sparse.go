@@ -65,6 +65,11 @@ func (s *series) quickSpan(cfg *config.Indicator, w int, in *cell, boundary int6
 	if t.exposure.Hi != 0 || t.exposure.Lo == 0 || t.exposure.Lo >= 1<<52 {
 		return false
 	}
+	if b := s.base; b.Kind == config.Known && b.Spread <= 1 && b.Margin >= 1 && limit[upper] < 0.5 {
+		// A count at or under the median has an upper p of a half at least.
+		weighted := float64(t.exposure.Lo) / pow10[cfg.GrainDigits]
+		tested[upper] = tested[upper] && float64(t.events) > b.Rate*weighted-1
+	}
 	for _, d := range bothTails {
 		if tested[d] && !ws.edges[d].clear(s.base, limit[d], &t) {
 			return false
