@@ -97,7 +97,9 @@ func ringing(t *testing.T, times int) {
 		t.Fatal(err)
 	}
 	ended := make(chan error, 1)
-	go func() { ended <- bareChain(ctx, d.bus, setup, filepath.Join(t.TempDir(), "bare.db"), end, math.MaxUint64) }()
+	go func() {
+		ended <- bareChain(ctx, d.bus, setup, filepath.Join(t.TempDir(), "bare.db"), end, math.MaxUint64)
+	}()
 	bare := r.measure(ctx, "none", times)
 	stop()
 	if err := <-ended; !errors.Is(err, context.Canceled) {
