@@ -312,7 +312,7 @@ func TestPassedOver(t *testing.T) {
 		t.Fatal(err)
 	}
 	state, err := st.OutletState()
-	if got := g.ids(); err != nil || !slices.Equal(got, []string{"ab1.1 ab2.1"}) || state[0].Depth != 0 {
+	if got := g.ids(); err != nil || !slices.Equal(got, []string{"ab1.1 ab2.1"}) || state[0].Depth != 0 || state[0].Told != 2 || state[0].Passed != 2 {
 		t.Errorf("got %q, state %+v, %v", got, state, err)
 	}
 }

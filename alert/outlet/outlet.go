@@ -238,7 +238,13 @@ func (q *Queue) deliver(ctx context.Context) (more bool, err error) {
 		}
 	}
 	if through > 0 {
-		if err := q.store.Delivered(q.outlet.Name(), through); err != nil {
+		passed := uint64(0)
+		for i := range rows {
+			if rows[i].Number <= through && !q.opts.Wants(&rows[i].Notice) {
+				passed++
+			}
+		}
+		if err := q.store.Delivered(q.outlet.Name(), through, passed); err != nil {
 			return false, err
 		}
 		for n := range q.done {

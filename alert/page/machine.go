@@ -49,11 +49,12 @@ func (s *PartState) Lag() uint64 {
 	return s.End - s.Position
 }
 
-// OutletState is how far an outlet has come.
+// OutletState is how far an outlet has come: how many steps it was told, how
+// many were passed over since it is not told of them, and how many wait.
 type OutletState struct {
-	Name               string
-	Delivered, Waiting uint64
-	Trouble            string
+	Name                           string
+	Delivered, PassedOver, Waiting uint64
+	Trouble                        string
 }
 
 // stateAge is how old a state may be that is shown.

@@ -218,7 +218,7 @@ func (s *stand) state(context.Context) (*State, error) {
 		Troubles: []Trouble{{Kind: "steps not delivered", Text: "3 steps wait for outlet hooks", Since: at}},
 		Parts: []PartState{{
 			Position: 1200, End: 1234, Clock: &at, History: true, Version: 1, Account: s.engine.Account(),
-			Outlets: []OutletState{{Name: "hooks", Delivered: 7, Waiting: 3, Trouble: "the receiver is away"}},
+			Outlets: []OutletState{{Name: "hooks", Delivered: 7, PassedOver: 41, Waiting: 3, Trouble: "the receiver is away"}},
 		}},
 	}, nil
 }

@@ -10,6 +10,7 @@ import (
 
 	"github.com/spf13/cobra"
 
+	"tailbell/alert/words"
 	"tailbell/config"
 	"tailbell/monitor/store"
 )
@@ -20,8 +21,11 @@ type outletState struct {
 	Name      string `json:"name"`
 	// Kind is that of the set-up, or bus or terminal; "" if the set-up names it
 	// no longer.
-	Kind      string `json:"kind"`
-	Delivered uint64 `json:"delivered"` // number of the last step delivered
+	Kind string `json:"kind"`
+	// Delivered counts the steps that it was told, PassedOver those that the
+	// set-up does not tell it, each since they are counted in its store.
+	Delivered  uint64 `json:"delivered"`
+	PassedOver uint64 `json:"passed_over"`
 	// Waiting counts the steps that it is still to be told; AtLeast says that
 	// there may be more. First is the key of the first of them.
 	Waiting int    `json:"waiting"`
@@ -43,8 +47,9 @@ func newOutletListCommand() *cobra.Command {
 	c := &cobra.Command{
 		Use:   "list",
 		Short: "List the ways out: what waits, what failed, when it is tried again",
-		Long: `Lists the ways out with the steps that wait for each of them, the first of these,
-the steps that people let go singly, and where something fails: how often in a row,
+		Long: `Lists the ways out with the steps that were delivered, those that were passed over as
+the set-up does not tell the outlet of them (history, another indicator), those that
+wait, the first of these, the steps that people let go singly, and where something fails: how often in a row,
 why, and when it is tried again. Works without a running daemon too, which then
 counts steps that an outlet is not told as well.`,
 		RunE: func(c *cobra.Command, _ []string) error {
@@ -94,7 +99,7 @@ func outletsAtRest(setup *config.Setup, st *store.Store) ([]outletState, error) 
 	for _, o := range outlets {
 		states = append(states, outletState{
 			Partition: st.Identity().Partition, Name: o.Name, Kind: kindOf(setup, o.Name),
-			Delivered: o.Delivered, Waiting: int(o.Depth), Skipped: o.Skipped,
+			Delivered: o.Told, PassedOver: o.Passed, Waiting: int(o.Depth), Skipped: o.Skipped,
 		})
 	}
 	return states, nil
@@ -126,7 +131,7 @@ func (d *daemon) outlets() ([]outletState, error) {
 
 func writeOutlets(w io.Writer, states []outletState, partitions bool) error {
 	t := tabwriter.NewWriter(w, 0, 0, 2, ' ', 0)
-	rows := [][]string{{"OUTLET", "KIND", "WAITING", "FIRST", "SKIPPED", "FAILED", "NEXT TRY"}}
+	rows := [][]string{{"OUTLET", "KIND", "DELIVERED", "PASSED OVER", "WAITING", "FIRST", "SKIPPED", "FAILED", "NEXT TRY"}}
 	for i := range states {
 		rows = append(rows, states[i].row(partitions))
 	}
@@ -167,5 +172,5 @@ func (s *outletState) row(partitions bool) []string {
 	if s.Next != nil {
 		next = s.Next.Format("2006-01-02 15:04:05Z")
 	}
-	return []string{name, kind, waiting, s.First, strconv.FormatUint(s.Skipped, 10), failed, next}
+	return []string{name, kind, words.Whole(int64(s.Delivered)), words.Whole(int64(s.PassedOver)), waiting, s.First, strconv.FormatUint(s.Skipped, 10), failed, next}
 }

@@ -117,7 +117,8 @@ func (d *daemon) stateForPage(ctx context.Context) (*page.State, error) {
 		}
 		for _, o := range p.Outlets {
 			part.Outlets = append(part.Outlets, page.OutletState{
-				Name: o.Name, Delivered: o.Delivered, Waiting: o.Waiting, Trouble: d.parts[p.Number].undelivered(store.Outlet{Name: o.Name, Delivered: o.Delivered, Depth: o.Waiting}),
+				Name: o.Name, Delivered: o.Delivered, PassedOver: o.PassedOver, Waiting: o.Waiting,
+				Trouble: d.parts[p.Number].undelivered(store.Outlet{Name: o.Name, Depth: o.Waiting}),
 			})
 		}
 		s.Parts = append(s.Parts, part)

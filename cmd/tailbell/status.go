@@ -91,7 +91,8 @@ func writePartition(w io.Writer, name string, p *partStatus) error {
 		}
 	}
 	for _, o := range p.Outlets {
-		if err := say(w, "  outlet %s: %s delivered, %s waiting", o.Name, amount(o.Delivered, "steps"), words.Whole(int64(o.Waiting))); err != nil {
+		if err := say(w, "  outlet %s: %s delivered, %s passed over, %s waiting",
+			o.Name, amount(o.Delivered, "steps"), words.Whole(int64(o.PassedOver)), words.Whole(int64(o.Waiting))); err != nil {
 			return err
 		}
 	}

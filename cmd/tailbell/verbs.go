@@ -5,6 +5,7 @@ import (
 	"encoding/json"
 	"time"
 
+	"tailbell/config"
 	"tailbell/ingest/control"
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
@@ -41,7 +42,7 @@ const (
 
 type alertsRequest struct {
 	All    bool   `json:"all"`
-	Series string `json:"series,omitempty"`
+	Series string `json:"series,omitempty"` // a name or a pattern; "" for all
 	Max    int    `json:"max"`
 }
 
@@ -92,12 +93,13 @@ func conditionRowOf(c monitor.Condition) conditionRow {
 	return conditionRow{c.Series, c.Indicator, c.Kind, c.Window, c.Since.Time(), c.Text}
 }
 
-// outletRow is how far an outlet has come: Delivered is the number of the last
-// step delivered.
+// outletRow is how far an outlet has come: how many steps it was told, how many
+// were passed over since the set-up does not tell it of them, and how many wait.
 type outletRow struct {
-	Name      string `json:"name"`
-	Delivered uint64 `json:"delivered"`
-	Waiting   uint64 `json:"waiting"`
+	Name       string `json:"name"`
+	Delivered  uint64 `json:"delivered"`
+	PassedOver uint64 `json:"passed_over"`
+	Waiting    uint64 `json:"waiting"`
 }
 
 func (d *daemon) verbs() map[string]control.Handler {
@@ -180,7 +182,7 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 			return nil, err
 		}
 		for _, o := range outlets {
-			s.Outlets = append(s.Outlets, outletRow{o.Name, o.Delivered, o.Depth})
+			s.Outlets = append(s.Outlets, outletRow{o.Name, o.Told, o.Passed, o.Depth})
 		}
 		r.Partitions = append(r.Partitions, s)
 	}
@@ -202,7 +204,14 @@ func (d *daemon) alerts(_ context.Context, req alertsRequest) (any, error) {
 // listAlerts returns the newest alerts that the request wants, without their
 // steps.
 func listAlerts(st *store.Store, req alertsRequest) ([]life.Record, error) {
-	rows, err := st.Alerts(store.AlertFilter{NotDone: !req.All, Series: req.Series, NewestFirst: true}, 0, req.Max)
+	filter := store.AlertFilter{NotDone: !req.All, NewestFirst: true}
+	if req.Series != "" {
+		if err := config.CheckPattern(req.Series); err != nil {
+			return nil, control.Errorf(control.BadRequest, "%q: %v", req.Series, err)
+		}
+		filter.SeriesLike = config.NewPattern(req.Series).Match
+	}
+	rows, err := st.Alerts(filter, 0, req.Max)
 	if err != nil {
 		return nil, err
 	}

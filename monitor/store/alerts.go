@@ -28,6 +28,8 @@ type AlertFilter struct {
 	Indicator string
 	Series    string
 	Direction life.Direction
+	// SeriesLike, if not nil, says which names of series are wanted.
+	SeriesLike func(series string) bool
 	// NewestFirst turns the order round.
 	NewestFirst bool
 }
@@ -37,7 +39,8 @@ func (f *AlertFilter) match(r *life.Record) bool {
 		(!f.NotDone || !r.Done()) &&
 		(f.Indicator == "" || f.Indicator == r.Indicator) &&
 		(f.Series == "" || f.Series == r.Series) &&
-		(f.Direction == "" || f.Direction == r.Direction)
+		(f.Direction == "" || f.Direction == r.Direction) &&
+		(f.SeriesLike == nil || f.SeriesLike(r.Series))
 }
 
 // writeAlerts stores records as they now stand; a new id gets the next number.

@@ -35,7 +35,7 @@ func TestReadersBesideCommits(t *testing.T) {
 			if err != nil || len(rows) == 0 {
 				return err
 			}
-			return s.Delivered("bus", rows[len(rows)-1].Number)
+			return s.Delivered("bus", rows[len(rows)-1].Number, 0)
 		},
 	} {
 		readers.Go(func() {

@@ -53,7 +53,7 @@ func filled(t *testing.T) ([]byte, *twin) {
 	mustCommit(t, s, monitor.Changes{Position: w.position + 1, Header: bytes.Repeat([]byte("h"), 3*pageSize)}, Mark{})
 	w.position++
 	w.header = string(bytes.Repeat([]byte("h"), 3*pageSize))
-	if err := s.Delivered("bus", 5); err != nil {
+	if err := s.Delivered("bus", 5, 0); err != nil {
 		t.Fatal(err)
 	}
 	w.outlets["bus"] = 5

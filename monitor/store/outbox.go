@@ -41,20 +41,41 @@ func (s Start) String() string {
 // Outlet is one way out with what it has yet to deliver.
 type Outlet struct {
 	Name string
-	// Delivered is the number of the last step delivered.
-	Delivered uint64
+	// Through is the number of the last step up to which all is done with:
+	// delivered, passed over or let go.
+	Through uint64
 	// Depth is how many steps wait.
 	Depth uint64
 	// Skipped is how many steps people let go singly, ever.
 	Skipped uint64
+	// Told is how many steps were delivered, Passed how many were passed over
+	// as the outlet is not told of them: of those up to Through.
+	Told, Passed uint64
 }
 
-// cursor is the stored form of an outlet. Skip are the numbers beyond Delivered
-// that people let go, in order; Skipped counts all of them, ever.
+// cursor is the stored form of an outlet. Delivered is the number up to which
+// all steps are done with. Skip are the numbers beyond it that people let go, in
+// order; Skipped counts all of them, ever. Told and Passed are absent in stores
+// that were written before they were counted: they then count from there on.
 type cursor struct {
 	Delivered uint64   `json:"delivered"`
 	Skip      []uint64 `json:"skip,omitempty"`
 	Skipped   uint64   `json:"skipped,omitempty"`
+	Told      uint64   `json:"told,omitempty"`
+	Passed    uint64   `json:"passed,omitempty"`
+}
+
+// count adds the steps up to number n, so many of which were passed over.
+func (c *cursor) count(n, passed uint64) {
+	steps := n - c.Delivered
+	for _, k := range c.Skip {
+		if k <= n {
+			steps--
+		}
+	}
+	passed = min(passed, steps)
+	c.Passed += passed
+	c.Told += steps - passed
 }
 
 // pass moves the cursor on, over what was let go too.
@@ -141,7 +162,8 @@ func (s *Store) OutletState() ([]Outlet, error) {
 		}
 		return eachOutlet(tx, func(name string, c cursor) error {
 			outlets = append(outlets, Outlet{
-				Name: name, Delivered: c.Delivered, Depth: h.Outbox - c.Delivered - uint64(len(c.Skip)), Skipped: c.Skipped,
+				Name: name, Through: c.Delivered, Depth: h.Outbox - c.Delivered - uint64(len(c.Skip)), Skipped: c.Skipped,
+				Told: c.Told, Passed: c.Passed,
 			})
 			return nil
 		})
@@ -206,9 +228,10 @@ func (s *Store) PendingAfter(outlet string, after uint64, most int) ([]Row, erro
 	return rows, err
 }
 
-// Delivered notes that an outlet has delivered all steps up to number n.
-// Saying it again, or of an earlier one, does nothing.
-func (s *Store) Delivered(outlet string, n uint64) error {
+// Delivered notes that an outlet has delivered all steps up to number n, but for
+// so many of those that waited until now, which were passed over. Saying it
+// again, or of an earlier one, does nothing.
+func (s *Store) Delivered(outlet string, n, passed uint64) error {
 	return s.update("delivered", func(tx *bolt.Tx, h *head) error {
 		r, err := outletsShelf.in(tx)
 		if err != nil {
@@ -224,6 +247,7 @@ func (s *Store) Delivered(outlet string, n uint64) error {
 		case n > h.Outbox:
 			return fmt.Errorf("outlet %q says it delivered step %d, the last one is %d: %w", outlet, n, h.Outbox, ErrOrder)
 		case n > c.Delivered:
+			c.count(n, passed)
 			c.pass(n)
 			if err := r.putJSON([]byte(outlet), c); err != nil {
 				return err

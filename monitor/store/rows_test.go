@@ -43,7 +43,7 @@ func TestOutbox(t *testing.T) {
 	if got, want := keys(t, s, "bus", 10), []string{"2.0", "2.1", "2.2"}; !slices.Equal(got, want) {
 		t.Errorf("the first outlet waits for %v, want %v", got, want)
 	}
-	if err := errors.Join(s.Delivered("bus", 4), s.Outlets(FromOldest, "oldest"), s.Outlets(FromEnd, "end", "bus")); err != nil {
+	if err := errors.Join(s.Delivered("bus", 4, 0), s.Outlets(FromOldest, "oldest"), s.Outlets(FromEnd, "end", "bus")); err != nil {
 		t.Fatal(err)
 	}
 	mustCommit(t, s, monitor.Changes{Position: 3, Steps: notices(3, 1)}, Mark{})
@@ -58,15 +58,15 @@ func TestOutbox(t *testing.T) {
 	if got := keys(t, s, "bus", 2); len(got) != 2 {
 		t.Errorf("at most 2 gave %v", got)
 	}
-	if err := s.Delivered("bus", 8); !errors.Is(err, ErrOrder) {
+	if err := s.Delivered("bus", 8, 0); !errors.Is(err, ErrOrder) {
 		t.Errorf("a delivery of what never was gave %v, want ErrOrder", err)
 	}
 	// What was said before does not turn a cursor back.
-	if err := errors.Join(s.Delivered("bus", 7), s.Delivered("bus", 5), s.Delivered("end", 7)); err != nil {
+	if err := errors.Join(s.Delivered("bus", 7, 2), s.Delivered("bus", 5, 0), s.Delivered("end", 7, 0)); err != nil {
 		t.Fatal(err)
 	}
 	state, err := s.OutletState()
-	want := []Outlet{{"bus", 7, 0, 0}, {"end", 7, 0, 0}, {"oldest", 4, 3, 0}}
+	want := []Outlet{{"bus", 7, 0, 0, 2, 2}, {"end", 7, 0, 0, 1, 0}, {"oldest", 4, 3, 0, 0, 0}}
 	if err != nil || !slices.Equal(state, want) {
 		t.Errorf("OutletState gave %v, %v; want %v", state, err, want)
 	}
@@ -98,11 +98,11 @@ func TestSkip(t *testing.T) {
 			t.Errorf("skipping %s gave %v, want ErrNotFound", key, err)
 		}
 	}
-	if err := errors.Join(s.Skip("ward", "1.0"), s.Delivered("ward", 4), s.Skip("ward", "1.4")); err != nil {
+	if err := errors.Join(s.Skip("ward", "1.0"), s.Delivered("ward", 4, 0), s.Skip("ward", "1.4")); err != nil {
 		t.Fatal(err)
 	}
 	state, err := s.OutletState()
-	want := []Outlet{{"other", 0, 6, 0}, {"ward", 5, 1, 4}}
+	want := []Outlet{{"other", 0, 6, 0, 0, 0}, {"ward", 5, 1, 4, 1, 0}}
 	if err != nil || !slices.Equal(state, want) {
 		t.Errorf("OutletState gave %v, %v; want %v", state, err, want)
 	}
@@ -118,7 +118,7 @@ func TestOutletsMustBeKnown(t *testing.T) {
 	s := create(t, Options{})
 	for name, err := range map[string]error{
 		"Outlets":    s.Outlets(FromEnd, ""),
-		"Delivered":  s.Delivered("bus", 0),
+		"Delivered":  s.Delivered("bus", 0, 0),
 		"DropOutlet": s.DropOutlet("bus"),
 		"Skip":       s.Skip("bus", "1.0"),
 		"Pending":    func() error { _, err := s.Pending("bus", 1); return err }(),

@@ -368,7 +368,7 @@ func (m *machine) fail(t *rapid.T) {
 func (m *machine) deliver(t *rapid.T) {
 	name := rapid.SampledFrom([]string{"bus", "terminal"}).Draw(t, "outlet")
 	n := uint64(rapid.IntRange(0, len(m.w.steps)).Draw(t, "delivered"))
-	if err := m.s.Delivered(name, n); err != nil {
+	if err := m.s.Delivered(name, n, 0); err != nil {
 		t.Fatal(err)
 	}
 	m.w.outlets[name] = max(m.w.outlets[name], n)
