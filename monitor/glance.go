@@ -20,6 +20,11 @@ type Glance struct {
 	Log10P    float64
 	// Signals says that the latest made look of some window signals.
 	Signals bool
+	// Unalerted are the tails that signal while no alert of them does; ByHand
+	// says that one was closed by hand, so that none opens in some of them
+	// before enough looks are quiet.
+	Unalerted []life.Direction
+	ByHand    bool
 	// Seen is when an observation was last counted.
 	Seen Instant
 	// Conditions stand of the series.
@@ -49,7 +54,16 @@ func (e *Engine) glance(s *series) Glance {
 	ix := s.indicator
 	g := Glance{
 		Series: s.name, Indicator: ix.cfg.Name, Seen: s.seen, Conditions: e.conditionsOf(s),
-		Signals: s.active(upper) || s.active(lower),
+	}
+	for _, d := range bothTails {
+		if !s.active(d) {
+			continue
+		}
+		g.Signals = true
+		if t := &s.tails[d]; t.current == nil {
+			g.Unalerted = append(g.Unalerted, d.name())
+			g.ByHand = g.ByHand || t.disarmed
+		}
 	}
 	if !ix.started || s.birth == unborn {
 		return g

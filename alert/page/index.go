@@ -27,6 +27,8 @@ const (
 	indexPatience = 400 * time.Millisecond
 	// maxConditions is how many conditions the index keeps.
 	maxConditions = 2000
+	// maxUnalerted is how many series that signal without an alert it keeps.
+	maxUnalerted = 60
 )
 
 // row is one series in the index.
@@ -57,6 +59,10 @@ type glances struct {
 	conditions []monitor.Condition
 	counts     map[monitor.ConditionKind]int
 	signals    int
+	// unalerted are the first maxUnalerted series that signal without an alert,
+	// of so many in all.
+	unalerted   []unalerted
+	ofUnalerted int
 
 	setup  *config.Setup // in force
 	groups sync.Map      // prefix -> []group
@@ -187,6 +193,9 @@ func (g *glances) add(s monitor.Glance) {
 		g.signals++
 	}
 	g.rows = append(g.rows, r)
+	if len(s.Unalerted) > 0 {
+		g.addUnalerted(&s)
+	}
 	for _, c := range s.Conditions {
 		g.counts[c.Kind]++
 		if len(g.conditions) < maxConditions {

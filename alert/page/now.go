@@ -35,6 +35,10 @@ type nowData struct {
 	Blind, Silent int
 	Series        int
 	Troubles      []Trouble
+	// Unalerted are series that signal without an alert, OfUnalerted how many
+	// there are.
+	Unalerted   []unalerted
+	OfUnalerted int
 }
 
 // now shows what needs attention now.
@@ -89,6 +93,7 @@ func (d *nowData) addUnseen(ctx context.Context, p *Page) error {
 		return err
 	}
 	d.Series = len(g.rows)
+	d.Unalerted, d.OfUnalerted = g.unalerted, g.ofUnalerted
 	for kind, n := range g.counts {
 		if kind == monitor.Silent {
 			d.Silent += n

@@ -45,7 +45,7 @@ func TestScreensHoldTheirContent(t *testing.T) {
 			"This look signals at", "Since the opening look", "Its history", "opened", "What you can do", "Acknowledge this alert", "Shelve this alert",
 		},
 		"/machine": {
-			"The stream", "1,200 34", "hooks 0 7 3 not delivered : the receiver is away", "Overdue reports 1", "quay/ward-9/fall",
+			"The stream", "1,200 34", "hooks 0 7 41 3 not delivered : the receiver is away", "Overdue reports 1", "quay/ward-9/fall",
 			"bad_events 1", "events is &lt;b&gt;-1&lt;/b&gt;", "The account",
 		},
 	} {
@@ -128,6 +128,29 @@ func TestActsCarryANameAndAreKept(t *testing.T) {
 		form.Set("by", "T. Averin")
 		if w := s.post(target, form); w.Code != http.StatusUnprocessableEntity {
 			t.Errorf("%.60v: %d", form, w.Code)
+		}
+	}
+}
+
+// TestSignalsWithoutAnAlertAreNamed sees that a series whose alert was closed by
+// hand while it signalled stays in sight.
+func TestSignalsWithoutAnAlertAreNamed(t *testing.T) {
+	s := newStand(t)
+	id := s.ring().ID
+	const heading = "Signalling without an alert"
+	if _, body := s.get("/"); strings.Contains(body, heading) {
+		t.Errorf("an alert stands, but: %s", text(body))
+	}
+	w := s.post("/alerts/"+id, url.Values{"act": {"close"}, "by": {"T. Averin"}, "why": {"a register error"}})
+	if w.Code != http.StatusSeeOther {
+		t.Fatalf("%d: %s", w.Code, text(w.Body.String()))
+	}
+	_, body := s.get("/")
+	for _, want := range []string{
+		heading + " 1", "east/ward-2/fall , ▲ more than usual: its alert was closed by hand while it signalled: no other opens before 5 looks in a row are quiet.",
+	} {
+		if !strings.Contains(text(body), want) {
+			t.Errorf("%q is not in %s", want, text(body))
 		}
 	}
 }
