@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"time"
 
+	"tailbell/alert/words"
 	"tailbell/monitor/life"
 )
 
@@ -18,7 +19,7 @@ func Trial(outlet, zone string, now time.Time) *life.Notice {
 			": nothing was counted, and nothing rings. Whoever reads it can say that what Tailbell tells gets here."},
 		Record: life.Record{
 			ID: key[:len(key)-2], Series: "test", Indicator: "test", Title: "Test", Direction: "test", Zone: zone, Opened: now,
-			Steps: []life.Step{},
+			Steps: []life.Step{}, Caution: words.Caution,
 		},
 	}
 }
