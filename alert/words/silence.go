@@ -50,7 +50,7 @@ func silent(n *life.Notice, zone *time.Location) []string {
 	if s.Until != nil {
 		text += " until " + moment(s.Until.In(zone))
 	}
-	return nonEmpty(stop(text + reason(s)))
+	return nonEmpty(stop(text+reason(s)) + closedEarly(n))
 }
 
 // silentLine is what follows the heading where a step stands on one line.

@@ -206,7 +206,7 @@ func acted(n *life.Notice, zone *time.Location) string {
 	if s.Kind == life.StepAcknowledged && s.Condition == life.Acknowledged {
 		text += " It still signals."
 	}
-	return text
+	return text + closedEarly(n)
 }
 
 // marked says what a person says an alert turned out to be.

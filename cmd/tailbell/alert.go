@@ -17,6 +17,7 @@ import (
 	"github.com/spf13/cobra"
 
 	"tailbell/alert/words"
+	"tailbell/config"
 	"tailbell/ingest/bus"
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
@@ -34,7 +35,7 @@ func newAlertCommand() *cobra.Command {
 		newActCommand(monitor.Acknowledge, "Say that somebody has seen an alert and deals with it",
 			"Says that somebody has seen the alert and deals with it. An alert that has returned\nis closed by it; one that still signals closes once it has returned."),
 		newActCommand(monitor.Close, "Close an alert by hand, with the reason",
-			"Closes the alert by hand, with the reason."),
+			"Closes the alert by hand, with the reason. If it still signals, no other alert of the\nseries opens in that direction before as many looks in a row were quiet as the\nindicator's quiet says; the page's Now lists it meanwhile among what signals without\nan alert. To be left in peace for a time and told again, shelve it instead."),
 		newActCommand(monitor.Note, "Write a note on an alert",
 			"Writes a note on an alert. Its condition does not change."),
 		newMarkCommand(), newShelveCommand(),
@@ -58,7 +59,7 @@ the indicator's horizon, or inside the history of its trailing or peers baseline
 			return nil
 		}
 		if !slices.Contains(life.Marks, a.act.Mark) {
-			return &usageError{fmt.Errorf("--as %q: it must be one of %q, or none", as, life.Marks)}
+			return &usageError{fmt.Errorf("--as %q: it must be one of %s, or none", as, life.MarkNames)}
 		}
 		return nil
 	}
@@ -80,6 +81,9 @@ look was due. Works without a running daemon too.`,
 			if req.Max < 1 {
 				return &usageError{fmt.Errorf("--max %d: it must be at least 1", req.Max)}
 			}
+			if err := config.CheckPattern(req.Series); req.Series != "" && err != nil {
+				return &usageError{fmt.Errorf("--series %q: %w", req.Series, err)}
+			}
 			records := []life.Record{}
 			err := askOrLook(c.Context(), path, verbAlerts, req, &records, func(st *store.Store) error {
 				rows, err := listAlerts(st, req)
@@ -100,7 +104,7 @@ look was due. Works without a running daemon too.`,
 	}
 	addConfigFlag(c, &path)
 	c.Flags().BoolVar(&req.All, "all", false, "closed and withdrawn alerts too")
-	c.Flags().StringVar(&req.Series, "series", "", "only this `SERIES`")
+	c.Flags().StringVar(&req.Series, "series", "", "only of series that match this `PATTERN`: a name, or in quotes 'site/*/fall'")
 	c.Flags().IntVar(&req.Max, "max", 200, "at most so `MANY`")
 	c.Flags().BoolVar(&asJSON, "json", false, "as JSON")
 	return c
@@ -138,7 +142,7 @@ func tabulate(w io.Writer, records []life.Record) error {
 func writeAlerts(w io.Writer, records []life.Record, req alertsRequest) error {
 	switch {
 	case len(records) == 0 && req.Series != "":
-		return say(w, "No alerts of the series %s.", req.Series)
+		return say(w, "No alerts of series that match %s.", req.Series)
 	case len(records) == 0 && !req.All:
 		return say(w, "No alerts that are not done.")
 	case len(records) == 0:
@@ -260,19 +264,19 @@ func (a *acting) run(ctx context.Context, w io.Writer) error {
 	if err != nil {
 		return err
 	}
-	var record life.Record
-	err = ask(ctx, setup, verbAlert, a.act.Alert, &record)
+	var before, record life.Record // what is left out of an answer stays as it was
+	err = ask(ctx, setup, verbAlert, a.act.Alert, &before)
 	if errors.Is(err, bus.ErrNoDaemon) {
 		return fmt.Errorf("acts go through the stream: %w", sayNeverRan(setup, err))
 	}
 	if err != nil {
 		return err
 	}
-	if record.Done() && a.act.Kind != monitor.Note && a.act.Kind != monitor.Mark {
-		return fmt.Errorf("alert %s is %s already: nothing was done", record.ID, record.Condition)
+	if before.Done() && a.act.Kind != monitor.Note && a.act.Kind != monitor.Mark {
+		return fmt.Errorf("alert %s is %s already: nothing was done", before.ID, before.Condition)
 	}
 	if a.act.Kind == monitor.Shelve {
-		if err := a.shelveUntil(ctx, setup, &record); err != nil {
+		if err := a.shelveUntil(ctx, setup, &before); err != nil {
 			return err
 		}
 	}
@@ -292,7 +296,27 @@ func (a *acting) run(ctx context.Context, w io.Writer) error {
 	if record.Shelf != nil {
 		return say(w, "Alert %s is shelved until %s.", record.ID, record.Shelf.Until.Format("2006-01-02 15:04:05Z"))
 	}
-	return say(w, "Alert %s is now %s.", record.ID, record.Condition)
+	text := fmt.Sprintf("Alert %s is now %s.", record.ID, record.Condition)
+	if a.act.Kind == monitor.Close && !before.Left() {
+		text += " " + stillSignals(setup, &record)
+	}
+	return say(w, "%s", text)
+}
+
+// stillSignals says what it means to close an alert by hand that signals.
+func stillSignals(setup *config.Setup, r *life.Record) string {
+	if r.Direction == life.Silence {
+		return "The series is still silent: no other alert says so before it is heard of again."
+	}
+	quiet := "as many looks in a row are quiet as its indicator asks for"
+	for i := range setup.Indicators {
+		if in := &setup.Indicators[i]; in.Name == r.Indicator && in.Quiet == 1 {
+			quiet = "a look is quiet"
+		} else if in.Name == r.Indicator {
+			quiet = words.Whole(int64(in.Quiet)) + " looks in a row are quiet"
+		}
+	}
+	return fmt.Sprintf("It still signals: no other alert of %s opens in this direction before %s.", r.Series, quiet)
 }
 
 // loginName is who runs the command; "" if that is not known, or everybody's

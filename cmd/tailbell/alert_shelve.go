@@ -33,8 +33,8 @@ another one, and is told.`)
 				return &usageError{fmt.Errorf("--until: %w", err)}
 			}
 		case span != "":
-			if a.span, err = config.ParseDuration(span); err != nil || a.span <= 0 {
-				return &usageError{fmt.Errorf("--for %q: write a whole number and s, m, h, d (24 hours) or w (7 days)", span)}
+			if a.span, err = spanOf(span); err != nil {
+				return &usageError{err}
 			}
 		default:
 			return &usageError{errors.New("--until is missing: say when it comes back, by --until TIME or --for 7d")}
@@ -42,6 +42,18 @@ another one, and is told.`)
 		return nil
 	}
 	return c
+}
+
+// spanOf reads for how long something is to be, from --for.
+func spanOf(text string) (time.Duration, error) {
+	span, err := config.ParseDuration(text)
+	switch {
+	case err != nil:
+		return 0, fmt.Errorf("--for %q: write a whole number and s, m, h, d (24 hours) or w (7 days)", text)
+	case span <= 0:
+		return 0, fmt.Errorf("--for %s: it must be longer than nothing, as 12h", text)
+	}
+	return span, nil
 }
 
 // shelveUntil completes an act that says for how long, from the clock of the

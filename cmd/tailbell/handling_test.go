@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"os"
 	"path/filepath"
+	"regexp"
 	"slices"
 	"strings"
 	"syscall"
@@ -164,6 +165,38 @@ func TestHandling(t *testing.T) {
 	h.exported(id)
 }
 
+// TestActsTellWhatStands sees that what a command answers is the record as it
+// stands after the act, and what closing an alert that signals means.
+func TestActsTellWhatStands(t *testing.T) {
+	h := newHandled(t)
+	h.start()
+	h.days(10, 1, "ward-1")
+	records := h.alerts()
+	if len(records) != 1 {
+		t.Fatalf("%d alerts", len(records))
+	}
+	id := records[0].ID
+	who := []string{"--by", "A. Nurse", "--why", "known"}
+	act := func(want, kind string, more ...string) {
+		t.Helper()
+		h.command(want, append(append([]string{"alert", kind, id}, who...), more...)...)
+	}
+	act("is marked chance", "mark", "--as", "chance")
+	act("has no mark any more (unacknowledged).", "mark", "--as", "none")
+	act("is shelved until", "shelve", "--for", "60h")
+	act("is now unacknowledged.", "unshelve")
+	says(t, 1, []string{"alert " + id + " is unacknowledged and can't be unshelved"}, append([]string{"alert", "unshelve", id, "--config", h.path}, who...)...)
+	says(t, 2, []string{"must be one of real, chance, data error, change of definition, or none"}, append([]string{"alert", "mark", id, "--as", "fake"}, who...)...)
+	says(t, 2, []string{"--for 0d: it must be longer than nothing"}, append([]string{"alert", "shelve", id, "--for", "0d"}, who...)...)
+	h.command(id, "alert", "list", "--series", "*/ward-1/*")
+	h.command("No alerts of series that match */ward-2/*.", "alert", "list", "--series", "*/ward-2/*")
+	act("is now closed. It still signals: no other alert of quillmere-east/ward-1/fall opens in this direction before 5 looks in a row are quiet.", "close")
+	h.days(3, 1, "ward-1")
+	if records := h.alerts(); len(records) != 1 {
+		t.Errorf("another alert opened while the closed one's run lasts: %d", len(records))
+	}
+}
+
 // bell is how the outlet is doing.
 func (h *handled) bell() outletState {
 	h.t.Helper()
@@ -196,7 +229,11 @@ func (h *handled) refuse(id string) {
 		h.t.Errorf("letting it go twice: exit code %d, %s", code, stderr)
 	}
 	h.await("the bell is well", func() bool { return h.bell().Tries == 0 })
-	h.command("bell      command   0               1", "outlet", "list")
+	list := h.command("PASSED OVER", "outlet", "list")
+	if after := h.bell(); after.Skipped != 1 || after.Waiting != 0 || after.Delivered == 0 || after.PassedOver == 0 ||
+		!regexp.MustCompile(fmt.Sprintf(`bell +command +%d +%d +0 +1\n`, after.Delivered, after.PassedOver)).MatchString(list) {
+		h.t.Errorf("the bell, mended: %+v\n%s", after, list)
+	}
 }
 
 // exported holds the export against the records, with the daemon and without.

@@ -154,9 +154,9 @@ func (a *seriesActing) complete(setup *config.Setup) error {
 	}
 	switch {
 	case a.span != "":
-		span, err := config.ParseDuration(a.span)
-		if err != nil || span <= 0 {
-			return fmt.Errorf("--for %q: write a whole number and s, m, h, d (24 hours) or w (7 days)", a.span)
+		span, err := spanOf(a.span)
+		if err != nil {
+			return err
 		}
 		a.act.Until = a.act.From.Add(span)
 	case a.until != "":

@@ -146,7 +146,7 @@ func readMark(field field, act *monitor.Act) *fault {
 		return nil
 	}
 	if !slices.Contains(life.Marks, act.Mark) {
-		return refuse(monitor.BadAct, "mark is %q; it must be one of %q, or %s", clip(text), life.Marks, unmarked)
+		return refuse(monitor.BadAct, "mark is %q; it must be one of %s, or %s", clip(text), life.MarkNames, unmarked)
 	}
 	return nil
 }

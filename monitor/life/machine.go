@@ -89,7 +89,7 @@ const NoLongerMonitored = "no longer monitored"
 func (r *Record) Take(s Step) ([]Notice, error) {
 	next, ok := after[s.Kind][r.Condition]
 	if !ok {
-		return nil, fmt.Errorf("life: alert %s is %s and can't be %s: %w", r.ID, r.Condition, s.Kind, ErrNotAllowed)
+		return nil, fmt.Errorf("alert %s is %s and can't be %s: %w", r.ID, r.Condition, s.Kind, ErrNotAllowed)
 	}
 	if s.Kind == StepUnshelved {
 		next = r.offShelf()

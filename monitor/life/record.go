@@ -91,6 +91,9 @@ const (
 // Marks are all marks, in order.
 var Marks = []Mark{MarkReal, MarkChance, MarkData, MarkRedefine}
 
+// MarkNames names them all, for messages.
+const MarkNames = string(MarkReal + ", " + MarkChance + ", " + MarkData + ", " + MarkRedefine)
+
 // Record is everything that is known of one alert.
 type Record struct {
 	// ID is short, stable and unique: derived from the series, the direction
