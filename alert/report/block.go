@@ -10,6 +10,7 @@ import (
 
 	"tailbell/alert/figure"
 	"tailbell/alert/words"
+	"tailbell/monitor"
 	"tailbell/monitor/estimate"
 	"tailbell/monitor/life"
 )
@@ -46,10 +47,34 @@ func headOf(r *Report) string {
 	return strings.Join(parts, "; ") + "."
 }
 
+// looksWords says what the table counts as looks, and how many were made when
+// they fell due.
+func looksWords(r *Report) string {
+	text := "Looks are counted as the data stand in the end, with all that came late."
+	if a := r.Account; a.Looks+a.WithheldLooks > 0 {
+		text += " When they fell due, " + made(a) + ", all indicators together."
+	}
+	return text
+}
+
+func made(a monitor.Account) string {
+	return fmt.Sprintf("%s made and %s withheld because a count or an exposure was missing", wereAmount(a.Looks, "looks"), words.Whole(a.WithheldLooks))
+}
+
+// wereAmount is an amount with its verb: "1 row was", "2 rows were".
+func wereAmount(n int64, nouns string) string {
+	verb := " were"
+	if n == 1 {
+		verb = " was"
+	}
+	return words.Amount(n, nouns) + verb
+}
+
 // short is the table at the beginning.
 func short(r *Report) *table {
 	t := &table{
-		Head:    []string{"indicator", "series", "looks", "withheld", "alerts: more", "fewer", "marked real", "chance", "data error", "redefined", "not marked", "withdrawn"},
+		Caption: looksWords(r),
+		Head:    []string{"indicator", "series", "looks possible in the end", "not possible", "alerts: more", "fewer", "marked real", "chance", "data error", "redefined", "not marked", "withdrawn"},
 		Numbers: []int{1, 2, 3, 4, 5, 6, 7, 8, 9, 10, 11},
 	}
 	n := func(v int) string { return words.Whole(int64(v)) }
@@ -269,13 +294,40 @@ func glance(in *Indicator) *table {
 		if a.Late {
 			opened += ", late"
 		}
+		e := openedBy(&a.Record)
 		t.Rows = append(t.Rows, []string{
-			a.ID, a.Series, sign, opened, words.Length(a.Opening.Window), words.Whole(a.Opening.Events),
-			words.Expected(&a.Opening), words.PValue(a.Opening.Log10P), string(a.Condition), string(a.Mark),
+			a.ID, a.Series, sign, opened, words.Length(e.Window), words.Whole(e.Events),
+			words.Expected(e), words.PValue(e.Log10P), string(a.Condition), string(a.Mark),
 		})
 	}
 	return t
 }
+
+// openedBy is the evidence as it was when the alert opened. The record's own is
+// that as corrected since.
+func openedBy(a *life.Record) *life.Evidence {
+	if len(a.Steps) > 0 && a.Steps[0].Evidence != nil {
+		return a.Steps[0].Evidence
+	}
+	return &a.Opening
+}
+
+// commands are what gives the numbers of an alert again: of its sentence, and
+// where the data changed since, of the evidence as it stands now.
+func commands(a life.Record) []command {
+	e := openedBy(&a)
+	if e.Recompute == "" { // silence has no numbers
+		return nil
+	}
+	list := []command{{"Its numbers again:", e.Recompute}}
+	if a.Opening.Recompute != "" && a.Opening.Recompute != e.Recompute {
+		list = append(list, command{"The same as the data were corrected since:", a.Opening.Recompute})
+	}
+	return list
+}
+
+// command is a line for a shell, with what it is for.
+type command struct{ Text, Line string }
 
 // paragraphs are the sentences of an alert without the caution, which stands
 // at both ends of the report.
@@ -285,6 +337,9 @@ func paragraphs(a life.Record) []string {
 		if p != a.Caution && p != words.Caution {
 			list = append(list, p)
 		}
+	}
+	if len(commands(a)) > 1 {
+		list = append(list, "As the data were corrected since: "+words.Sentence(&a, &a.Opening))
 	}
 	return list
 }
@@ -316,12 +371,11 @@ func steps(a life.Record) []string {
 // lacks says what kept looks from being made.
 func lacks(r *Report) []block {
 	a := r.Account
-	text := fmt.Sprintf("%s were read, of which %s could not be used. %s were refused by the engine, %s belonged to no indicator, %s came late, %s replaced an earlier one.",
-		words.Amount(int64(r.Rows), "rows"), words.Whole(int64(r.Faults)), words.Amount(a.Refused, "observations"), words.Whole(a.Unmonitored),
+	text := fmt.Sprintf("%s read, of which %s could not be used. %s refused by the engine, %s belonged to no indicator, %s came late, %s replaced an earlier one.",
+		wereAmount(int64(r.Rows), "rows"), words.Whole(int64(r.Faults)), wereAmount(a.Refused, "observations"), words.Whole(a.Unmonitored),
 		words.Whole(a.Late), words.Whole(a.Replaced))
-	text += fmt.Sprintf(" When they fell due, %s were made and %s withheld because a count or an exposure was missing; %s were made again because data changed.",
-		words.Amount(a.Looks, "looks"), words.Whole(a.WithheldLooks), words.Whole(a.Reruns))
-	blocks := []block{{Text: text}}
+	text += fmt.Sprintf(" When they fell due, %s; %s made again because data changed.", made(a), wereAmount(a.Reruns, "looks"))
+	blocks := append([]block{{Text: text}}, unused(r)...)
 	if len(r.Conditions) == 0 {
 		return append(blocks, block{Text: "No series lacks anything at the end."})
 	}
@@ -335,6 +389,26 @@ func lacks(r *Report) []block {
 		t.Rows = append(t.Rows, []string{c.Series, c.Since, c.Text})
 	}
 	return append(blocks, block{Table: t})
+}
+
+// unused names the rows of which nothing was counted.
+func unused(r *Report) []block {
+	if len(r.Unused) == 0 {
+		return nil
+	}
+	t := &table{Caption: "Rows that were refused or could not be used, and are not counted", Head: []string{"row", "reason", "what"}}
+	const most = 60
+	for i, u := range r.Unused {
+		if i == most {
+			break
+		}
+		t.Rows = append(t.Rows, []string{u.Place, u.Reason, u.Detail})
+	}
+	blocks := []block{{Table: t}}
+	if n := len(r.Unused) - most; n > 0 {
+		blocks = append(blocks, block{Text: words.Amount(int64(n), "rows") + " more; the command names them all."})
+	}
+	return blocks
 }
 
 // again says from what the report was made.

@@ -135,8 +135,10 @@ func (m *markdown) indicator(in *Indicator) {
 		}
 		m.picture(a.Picture)
 		m.list(steps(a.Record))
-		m.para("Its numbers again:")
-		m.b.WriteString("    " + plainText(a.Opening.Recompute) + "\n\n")
+		for _, c := range commands(a.Record) {
+			m.para(c.Text)
+			m.b.WriteString("    " + plainText(c.Line) + "\n\n")
+		}
 	}
 	m.title(3, "Each series over its whole history")
 	m.table(seriesTable(in))

@@ -28,6 +28,8 @@ type Recorder struct {
 	made    map[string][2]int64
 	sums    []monitor.SlotSum
 	records map[string]life.Record
+	refused []monitor.Refusal
+	shifts  []shift
 	from    time.Time
 	to      time.Time
 	// met are the series seen, and harvests the looks taken by indicator.
@@ -75,8 +77,32 @@ func (r *Recorder) Play(e *monitor.Engine, m monitor.Message) {
 		r.harvest(e, due)
 		e.Apply(&monitor.Message{Position: e.Position() + 1, Kind: monitor.Tick, Stored: due, Time: due, HasTime: true})
 	}
+	r.moved(m.Position, e.Position()+1)
 	m.Position = e.Position() + 1
 	e.Apply(&m)
+}
+
+// shift says that from a position on messages were played so much later than
+// they stand in the history, since ticks were put between them.
+type shift struct{ from, by uint64 }
+
+func (r *Recorder) moved(was, is uint64) {
+	if n := len(r.shifts); is-was > 0 && (n == 0 || r.shifts[n-1].by != is-was) {
+		r.shifts = append(r.shifts, shift{is, is - was})
+	}
+}
+
+// Refused are the refusals so far, with the positions that messages had before
+// Play.
+func (r *Recorder) Refused() []monitor.Refusal {
+	list := slices.Clone(r.refused)
+	for i := range list {
+		at, _ := slices.BinarySearchFunc(r.shifts, list[i].Position+1, func(s shift, position uint64) int { return cmp.Compare(s.from, position) })
+		if at > 0 {
+			list[i].Position -= r.shifts[at-1].by
+		}
+	}
+	return list
 }
 
 // harvest takes the looks that what comes at that moment, or later, can't change.
@@ -182,6 +208,7 @@ func (r *Recorder) Take(c *monitor.Changes) error {
 		}
 		r.sums = append(r.sums, s)
 	}
+	r.refused = append(r.refused, c.Refused...)
 	for i := range c.Alerts {
 		r.records[c.Alerts[i].ID] = c.Alerts[i]
 	}

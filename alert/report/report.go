@@ -46,13 +46,19 @@ type Report struct {
 	From, To time.Time
 	// Rows were read, of which so many Faults could not be used.
 	Rows, Faults int
-	Account      monitor.Account
-	Conditions   []Condition
-	Indicators   []*Indicator
-	Rehearsals   []*plant.Report
+	// Unused are the rows of which nothing was counted: those Faults, and what
+	// the engine refused.
+	Unused     []Unused
+	Account    monitor.Account
+	Conditions []Condition
+	Indicators []*Indicator
+	Rehearsals []*plant.Report
 	// Remake is the command line that makes the report again.
 	Remake string
 }
+
+// Unused is a row that was not counted, and why. Place is its file and line.
+type Unused struct{ Place, Reason, Detail string }
 
 // Condition is something that kept looks from being made at the end.
 type Condition struct{ Series, Text, Since string }

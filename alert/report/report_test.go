@@ -232,7 +232,26 @@ func TestLate(t *testing.T) {
 	}
 	r.Title, r.Data = "Quillmere", "none"
 	standsAlone(t, written(t, r.HTML))
-	if text := written(t, r.Markdown); !strings.Contains(text, "Silence is no proof of safety") {
+	changed := 0
+	text := written(t, r.Markdown)
+	for _, a := range want {
+		seen := a.Steps[0].Evidence
+		if seen == nil || seen.Recompute == "" {
+			continue
+		}
+		command, now := "Its numbers again:\n\n    "+seen.Recompute+"\n", a.Opening.Recompute
+		if now != seen.Recompute {
+			changed++
+			command += "\nThe same as the data were corrected since:\n\n    " + now + "\n"
+		}
+		if !strings.Contains(text, command) {
+			t.Errorf("alert %s: the report lacks %q", a.ID, command)
+		}
+	}
+	if changed == 0 || strings.Count(text, "As the data were corrected since: ") != changed {
+		t.Errorf("%d alerts were corrected", changed)
+	}
+	if !strings.Contains(text, "Silence is no proof of safety") {
 		t.Error("Markdown lacks its cautions")
 	}
 }

@@ -19,6 +19,7 @@ import (
 
 	"tailbell/alert/report"
 	"tailbell/config"
+	"tailbell/ingest/history"
 	"tailbell/monitor"
 	"tailbell/monitor/partition"
 	"tailbell/monitor/rehearse/plant"
@@ -48,6 +49,9 @@ history itself says of them, every alert with its picture, marks and steps, a pi
 of each series over its whole history with its critical counts, all series against
 the rate of all with exact limits (a funnel plot), rehearsals from the JSON of
 "tailbell rehearse", and the digests of data, set-up and program.
+
+Rows that can't be used or are refused are named on standard error and in the report;
+the command then fails in the end, as replay does.
 
 The HTML is one file that needs nothing from outside and prints well; Markdown has
 words in place of the pictures. Without --html or --markdown, HTML goes to standard
@@ -154,10 +158,37 @@ func (o *reportOptions) fromFiles(ctx context.Context, paths []string, stdin io.
 		return nil, err
 	}
 	r.Data, r.Rows, r.Faults = digestOf(h), h.Counts.Rows, h.Counts.Faults
+	if err := o.unused(r, h, rec.Refused(), stderr); err != nil {
+		return nil, err
+	}
 	for _, path := range paths {
 		r.Files = append(r.Files, filepath.Base(path))
 	}
 	return r, nil
+}
+
+// unused puts the rows that were not counted into the report, and names those
+// that the engine refused; of the others that was said when they were read.
+func (o *reportOptions) unused(r *report.Report, h *history.History, refused []monitor.Refusal, stderr io.Writer) error {
+	for _, f := range h.Faults {
+		r.Unused = append(r.Unused, report.Unused{Place: fmt.Sprintf("%s:%d", filepath.Base(f.File), f.Line), Reason: string(f.Reason), Detail: f.Detail})
+	}
+	for i := range refused {
+		x := &refused[i]
+		u := report.Unused{Reason: string(x.Reason), Detail: aboutSeries(x)}
+		where := ""
+		if at := x.Position - 2; x.Position >= 2 && at < uint64(len(h.Entries)) { // the set-up is 1
+			row := &h.Entries[at]
+			u.Place = fmt.Sprintf("%s:%d", filepath.Base(row.File), row.Line)
+			where = fmt.Sprintf("%s:%d: ", row.File, row.Line)
+		}
+		r.Unused = append(r.Unused, u)
+		if err := say(stderr, "%s%s: %s", where, u.Reason, u.Detail); err != nil {
+			return err
+		}
+	}
+	o.faults += len(refused)
+	return nil
 }
 
 func (o *reportOptions) report(ctx context.Context, rec *report.Recorder, e *monitor.Engine, stderr io.Writer) (*report.Report, error) {
