@@ -47,6 +47,37 @@ func TestReport(t *testing.T) {
 	}
 }
 
+// TestReportOfRefusedRows sees that rows which could not be used or were refused
+// are named with their places, by those of the file whatever ticks were played
+// between them, and that the exit code tells.
+func TestReportOfRefusedRows(t *testing.T) {
+	const mine = "coal-mines/explosion"
+	text := "series,at,events,reported\n"
+	for _, row := range []string{"1851-03-15 1 1851", "1861-03-15 1 1861", "1851-08-15 1 1881", "1891-03-15 x 1891", "1891-03-15 1 1891", "1852-08-15 1 1892"} {
+		f := strings.Fields(row)
+		text += mine + "," + f[0] + "T00:00:00Z," + f[1] + "," + f[2] + "-03-15T00:00:00Z\n"
+	}
+	markdown := filepath.Join(t.TempDir(), "report.md")
+	code, _, stderr := run(t, "report", "--config", "../../testdata/coal/coal.toml", "--zone", "UTC", "--resamples", "0",
+		"--markdown", markdown, writeHistory(t, "mines.csv", text))
+	if code != 1 {
+		t.Errorf("exit code %d", code)
+	}
+	form := readText(t, markdown)
+	for _, part := range []string{"mines.csv:4: beyond_horizon: ", "mines.csv:5: bad_events: ", "mines.csv:7: beyond_horizon: "} {
+		if !strings.Contains(stderr, part) {
+			t.Errorf("%q is not said: %s", part, stderr)
+		}
+		place, rest, _ := strings.Cut(part, ": ")
+		if part = "| " + place + " | " + strings.ReplaceAll(strings.TrimSuffix(rest, ": "), "_", `\_`) + " |"; !strings.Contains(form, part) {
+			t.Errorf("the report lacks %q", part)
+		}
+	}
+	if want := "6 rows were read, of which 1 could not be used. 2 observations were refused"; !strings.Contains(form, want) {
+		t.Errorf("the report lacks %q", want)
+	}
+}
+
 func TestReportErrors(t *testing.T) {
 	broken := filepath.Join(t.TempDir(), "broken.json")
 	if err := os.WriteFile(broken, []byte(`{"indicator":"a","setups":[{}],"found":[{"setup":7}]}`), 0o600); err != nil {
