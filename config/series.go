@@ -95,7 +95,7 @@ var ErrPattern = errors.New("not a pattern of series names")
 // series is one, and that of a sum.
 func CheckPattern(text string) error {
 	if problem := checkPattern(text); problem != "" {
-		return fmt.Errorf("%w: it %s", ErrPattern, problem)
+		return fmt.Errorf("%w: %s", ErrPattern, problem)
 	}
 	return nil
 }

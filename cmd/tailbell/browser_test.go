@@ -73,10 +73,20 @@ func (b *browser) run(what string, actions ...chromedp.Action[chromedp.Void]) {
 	b.t.Helper()
 	ctx, cancel := context.WithTimeout(b.ctx, patience)
 	defer cancel()
-	if err := chromedp.Do(ctx, actions...); err != nil {
-		b.t.Fatalf("%s: %v\n%s", what, err, b.text())
+	for _, action := range actions {
+		err := chromedp.Do(ctx, action)
+		for err != nil && ctx.Err() == nil && strings.Contains(err.Error(), goneNode) {
+			err = chromedp.Do(ctx, action)
+		}
+		if err != nil {
+			b.t.Fatalf("%s: %v\n%s", what, err, b.text())
+		}
 	}
 }
+
+// goneNode is what the browser says of an element that was found, but replaced by
+// news before it could be used.
+const goneNode = "Could not find node with given id"
 
 func (b *browser) open(target string) {
 	b.t.Helper()

@@ -28,7 +28,7 @@ func TestWrongCommandLines(t *testing.T) {
 		{"status --foo", "unknown flag: --foo (tailbell status --help says more)"},
 		{"alert list --max many", `invalid argument "many" for "--max"`},
 		{"alert list --max 0", "--max 0"},
-		{"alert list --series a//b", `--series "a//b": not a pattern of series names: it has`},
+		{"alert list --series a//b", `--series "a//b": not a pattern of series names: part 2 is empty`},
 		{"refused show first", `"first" is not the number of a refusal`},
 		{"run --health 192.0.2.1:80", `--health "192.0.2.1:80": only loopback`},
 		{"run --health 4870", `--health "4870" is no address`},

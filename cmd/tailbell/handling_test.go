@@ -195,6 +195,7 @@ func TestActsTellWhatStands(t *testing.T) {
 	if records := h.alerts(); len(records) != 1 {
 		t.Errorf("another alert opened while the closed one's run lasts: %d", len(records))
 	}
+	h.stop(syscall.SIGTERM) // a bell that outlived a killed daemon would still write
 }
 
 // bell is how the outlet is doing.
