@@ -41,14 +41,14 @@ func steady() []Cell {
 		one("7d, mean 50", 50, 7, "4 in 1y", 1200, upper),
 		one("28d, mean 0.1", 0.1, 28, "2 in 1y", 3500, upper),
 		one("28d, mean 2", 2, 28, "3 in 1y", 1800, upper),
-		one("28d, mean 2, 1 in 5y", 2, 28, "1 in 5y", 10000, upper),
+		one("28d, mean 2, 1 in 5y", 2, 28, "1 in 5y", 44000, upper),
 		one("28d, mean 50", 50, 28, "2 in 1y", 2200, upper),
-		one("365d, mean 0.1", 0.1, 365, "1 in 1y", 10000, upper),
-		one("365d, mean 2", 2, 365, "0.8 in 1y", 6600, upper),
+		one("365d, mean 0.1", 0.1, 365, "1 in 1y", 38000, upper),
+		one("365d, mean 2", 2, 365, "0.8 in 1y", 9600, upper),
 		one("365d, mean 50", 50, 365, "0.8 in 1y", 5000, upper),
 		one("7d, mean 50, lower", 50, 7, "4 in 1y", 1200, lower),
 		one("28d, mean 8, lower", 8, 28, "3 in 1y", 1800, lower),
-		one("365d, mean 50, lower", 50, 365, "0.8 in 1y", 5000, lower),
+		one("365d, mean 50, lower", 50, 365, "0.8 in 1y", 6000, lower),
 		one("28d, mean 20, both tails", 20, 28, "4 in 1y", 1200, both),
 		three("7d, 28d, 365d; mean 2 in 28d", 2, "4 in 1y", 1400, upper),
 		three("7d, 28d, 365d; mean 20 in 28d, both tails", 20, "6 in 1y", 900, both),
@@ -63,7 +63,7 @@ func closed(c Cell) Cell { c.Closed = true; return c }
 
 // short makes series of 60 days that are counted from their first.
 func short(c Cell, window int) Cell {
-	c.Whole, c.Slots, c.Series = true, 60, 6000+450*window
+	c.Whole, c.Slots, c.Series = true, 60, 7000+520*window
 	return c
 }
 
@@ -162,7 +162,7 @@ func slow() []Cell {
 	late.Name, late.Late, late.LateBy, late.Promise = "a fifth comes 5d late, unknown to the monitor: 28d, mean 4", 0.2, 5, Nothing
 	false1 := late
 	false1.Name, false1.Late, false1.False = "a tenth more is taken back after 5d: 28d, mean 4", 0, 0.1
-	return []Cell{years(1600, upper(delayed)), years(1200, upper(three)), years(1600, upper(late)), years(1100, upper(false1))}
+	return []Cell{years(1600, upper(delayed)), years(1200, upper(three)), years(1600, upper(late)), years(1200, upper(false1))}
 }
 
 // estimated are baselines counted from few events.
@@ -175,7 +175,7 @@ func estimated() []Cell {
 		})
 		c.Series, c.Slots = 600, 6*365+28 // rates differ much: many series tell more than long ones
 		if p == Assured {
-			c.Series, c.Slots = 200, 20*365+28 // each must tell its own rate
+			c.Series, c.Slots = 350, 20*365+28 // each must tell its own rate
 		}
 		return c
 	}
@@ -188,10 +188,12 @@ func estimated() []Cell {
 	low := one("reference of 20 events: 28d, lower", 20, false, OnAverage)
 	low.Upper, low.Lower = false, true
 	low.Reference.Exposure = 280 / 4 // more events a window: fewer can be told from few
+	many := one("reference of 100 events: 28d", 100, false, OnAverage)
+	many.Series = 640 // it rings least
 	return []Cell{
 		one("reference of 5 events: 28d", 5, false, OnAverage),
 		one("reference of 20 events: 28d", 20, false, OnAverage),
-		one("reference of 100 events: 28d", 100, false, OnAverage),
+		many,
 		low, share,
 		one("references drawn anew, 5 events on average: 28d, mean 2", 5, true, Nothing),
 		one("references drawn anew, 20 events on average: 28d, mean 2", 20, true, Nothing),
