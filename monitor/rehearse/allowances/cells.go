@@ -81,7 +81,7 @@ func proportions() []Cell {
 		one("proportion, 10 a day: 28d, mean 50, both tails", 50, ten, []int{28}, "4 in 1y", 1200, both),
 		one("proportion, 10 a day: 7d, 28d, 365d; mean 20 in 28d", 20, ten, []int{7, 28, 365}, "4 in 1y", 1200, both),
 		one("proportion, 1 to 40 a day: 28d, mean 5", 5, some, []int{28}, "4 in 1y", 3600, upper),
-		one("proportion, 1 to 40 a day: 7d, 28d, 365d; mean 20 in 28d", 20, some, []int{7, 28, 365}, "6 in 1y", 1200, both),
+		one("proportion, 1 to 40 a day: 7d, 28d, 365d; mean 20 in 28d", 20, some, []int{7, 28, 365}, "6 in 1y", 3400, both),
 		short(brief, 28),
 	}
 }
@@ -99,7 +99,7 @@ func changing() []Cell {
 	weekly.Proportion, weekly.Exposure, weekly.Rate = true, [2]int{10, 10}, 0.05
 	drawn := one("exposure 1 to 40 a day: 28d, mean 5", 5./20.5, []int{28}, nil, 3600, upper)
 	drawn.Exposure = [2]int{1, 40}
-	more := one("exposure 1 to 40 a day: 7d, 28d, 365d; mean 5 in 7d, both tails", 5./20.5, []int{7, 28, 365}, nil, 1200, both)
+	more := one("exposure 1 to 40 a day: 7d, 28d, 365d; mean 5 in 7d, both tails", 5./20.5, []int{7, 28, 365}, nil, 5200, both)
 	more.Exposure = drawn.Exposure
 	return []Cell{
 		one("by weekday: 10d, mean 5", 5, []int{10}, week, 1600, upper),
