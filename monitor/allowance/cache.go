@@ -56,6 +56,9 @@ func (c *Cache) solve(q Plan) (*Limits, error) {
 func (p *Plan) coarser() Plan {
 	q := *p
 	q.Vary = math.Ceil(p.Vary*32) / 32
+	if p.Volume > 0 {
+		q.Volume, _ = nearby(p.Volume)
+	}
 	switch l := &q.Law; {
 	case l.Proportion && p.Vary == 0 && p.least() == 1, len(p.Cycle) > 0 && p.Vary == 0:
 		return q // it is solved for just these slots
@@ -108,6 +111,8 @@ func (p *Plan) appendKey(key []byte) []byte {
 	key = binary.AppendVarint(key, p.Law.Events)
 	add(p.Law.Rate, p.Law.Exposure, p.Law.margin(), p.Law.spread(), p.Exposure, p.least(), p.Vary)
 	add(p.SlotsPerYear, p.PerYear, p.Starts, p.Assurance, p.Level)
+	add(p.Volume)
+	key = binary.AppendVarint(binary.AppendVarint(key, p.Batch[0]), p.Batch[1])
 	for _, list := range [][]float64{p.Cycle, p.Known, p.Messages} {
 		key = binary.AppendUvarint(key, uint64(len(list)))
 		add(list...)
@@ -123,6 +128,7 @@ func (p *Plan) appendKey(key []byte) []byte {
 		key = binary.AppendUvarint(key, kind)
 		key = binary.AppendUvarint(key, uint64(w.Slots))
 		key = binary.AppendUvarint(key, uint64(w.Step))
+		key = binary.AppendVarint(key, w.Trials)
 	}
 	return key
 }

@@ -32,6 +32,9 @@ func (p *Plan) Outlook(l *Limits, i int) *Outlook {
 // window is the load of the window whose newest slot is the cycle's at.
 func (o *Outlook) window(at int) load {
 	p := o.x.plan
+	if o.x.ofTrials() {
+		return o.x.now
+	}
 	return p.load(at, 0, o.x.window.Slots, p.known)
 }
 

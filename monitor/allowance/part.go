@@ -11,7 +11,8 @@ type part struct {
 	model   *model
 	phases  [][]turn
 	now     load // the window at the beginning of the cycle
-	// looks a year; for arrival looks slots, since their cost is by slot.
+	// looks a year; for arrival looks slots, since their cost is by slot, or for
+	// windows of trials those.
 	looks float64
 }
 
@@ -29,6 +30,12 @@ func (x *part) perYear(c cost) float64 {
 func (p *Plan) parts() []*part {
 	var list []*part
 	for i, w := range p.Windows {
+		if w.Trials > 0 {
+			if w.Arrival {
+				list = append(list, p.trial(i))
+			}
+			continue
+		}
 		window := p.load(0, 0, w.Slots, p.known)
 		x := part{plan: p, index: i, window: w, phases: p.turns(w), looks: p.SlotsPerYear / float64(w.Step)}
 		if w.Slot && p.Upper {
@@ -58,13 +65,16 @@ func (x part) in(tail Tail, window load) *part {
 // steady reports that every look is like the others, so that only critical
 // counts need be tried.
 func (x *part) steady() bool {
+	if x.ofTrials() {
+		return x.even()
+	}
 	return len(x.plan.Cycle) == 0 && x.plan.Vary == 0 && x.plan.least() == 1
 }
 
 // banded reports an exposure that is steady somewhere in a range, of a law that
 // takes any exposure.
 func (x *part) banded() bool {
-	return len(x.plan.Cycle) == 0 && x.plan.Vary == 0 && !x.plan.Law.Proportion
+	return !x.ofTrials() && len(x.plan.Cycle) == 0 && x.plan.Vary == 0 && !x.plan.Law.Proportion
 }
 
 // basis says what the part's costs are.
@@ -85,6 +95,8 @@ func (x *part) basis() Basis {
 // bounded reports that costs are bounds, not expectations.
 func (x *part) bounded() bool {
 	switch {
+	case x.ofTrials():
+		return !x.even()
 	case x.steady(), x.banded():
 		return x.large() && !x.arrival
 	case x.arrival, len(x.plan.Cycle)*len(x.model.nodes) > longSums && !x.plan.Law.Proportion:
@@ -111,6 +123,9 @@ func (x *part) cost(alpha float64) cost { return x.costOf(x.model, alpha) }
 
 // costOf is what it costs under another model of the true rate.
 func (x *part) costOf(m *model, alpha float64) cost {
+	if x.ofTrials() {
+		return x.costOfTrials(m, alpha)
+	}
 	worst := cost{}
 	for _, turns := range x.phases {
 		var all cost

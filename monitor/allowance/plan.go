@@ -37,8 +37,12 @@ type Law struct {
 type Window struct {
 	// Slots is its length and Step the distance of its looks, in slots.
 	Slots, Step int
-	// Slot looks are made every Step, Arrival looks at each event.
+	// Slot looks are made every Step, Arrival looks at each event. A window with
+	// neither has no part in the limits.
 	Slot, Arrival bool
+	// Trials, if not 0, makes it the last so many trials of a proportion in place
+	// of slots: arrival looks only.
+	Trials int64
 }
 
 // Plan is what the limits of one series follow from.
@@ -63,7 +67,12 @@ type Plan struct {
 	// Messages are the shares of messages (they sum to 1) with 1, 2, ... events,
 	// for arrival looks; none means one event each.
 	Messages []float64
-	Windows  []Window
+	// Volume is how many trials a slot brings at most, on average over a year, for
+	// windows of trials. 0 means Exposure. Batch is the least and the largest number
+	// of them that come at one moment; zeros mean 1.
+	Volume  float64
+	Batch   [2]int64
+	Windows []Window
 	// Upper and Lower are the tails that are watched.
 	Upper, Lower bool
 	// SlotsPerYear is how many slots a year of 365.2425 days has.
@@ -183,23 +192,51 @@ func (p *Plan) checkProfile() error {
 }
 
 func (p *Plan) checkWindows() error {
-	if len(p.Windows) == 0 {
-		return fault("no window")
-	}
+	looked := false
 	for _, w := range p.Windows {
+		looked = looked || w.Slot || w.Arrival
+		if w.Trials != 0 {
+			if err := p.checkTrials(w); err != nil {
+				return err
+			}
+			continue
+		}
 		switch {
 		case w.Slots < 1 || w.Step < 1 || w.Slots > most || w.Step > most:
 			return fault("a window of %d slots with a step of %d", w.Slots, w.Step)
-		case !w.Slot && !w.Arrival:
-			return fault("a window that is never looked at")
 		case w.Arrival && (p.Law.Proportion || len(p.Known) > 0):
 			return fault("arrival looks are for rates whose events are known at once")
 		case w.Arrival && !p.Upper:
 			return fault("arrival looks are for the upper tail")
 		}
 	}
+	if !looked {
+		return fault("no window that is ever looked at")
+	}
 	return nil
 }
+
+// checkTrials says what is wrong with a window of trials.
+func (p *Plan) checkTrials(w Window) error {
+	switch least, most := p.batch(); {
+	case w.Trials < 1 || w.Trials > mostTrials:
+		return fault("a window of %d trials", w.Trials)
+	case w.Slot || !p.Law.Proportion:
+		return fault("a window of %d trials is for a proportion whose events are looked at as they come", w.Trials)
+	case w.Arrival && !p.Upper:
+		return fault("arrival looks are for the upper tail")
+	case p.Law.spread() > 1 || len(p.Cycle) > 0:
+		return fault("windows of trials are for trials that are alike, without spread or strata")
+	case p.Volume != 0 && !positive(p.Volume):
+		return fault("%v trials a slot on average", p.Volume)
+	case least > most || most > mostTrials:
+		return fault("batches of %d to %d trials", p.Batch[0], p.Batch[1])
+	}
+	return nil
+}
+
+// mostTrials bounds trials in a window or a batch.
+const mostTrials = 1 << 40
 
 func (l *Law) margin() float64 { return max(l.Margin, 1) }
 func (l *Law) spread() float64 { return max(l.Spread, 1) }

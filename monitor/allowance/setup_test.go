@@ -22,7 +22,7 @@ func TestFor(t *testing.T) {
 		t.Fatal(err)
 	}
 	want := Law{Estimated: true, Events: 36, Exposure: 20000.5, Margin: 1, Spread: 1}
-	if p.Law != want || !slices.Equal(p.Windows, []Window{{28, 7, true, false}}) || p.Exposure != 22 || p.Vary != 0.1 || !p.Upper || !p.Lower {
+	if p.Law != want || !slices.Equal(p.Windows, []Window{{Slots: 28, Step: 7, Slot: true}}) || p.Exposure != 22 || p.Vary != 0.1 || !p.Upper || !p.Lower {
 		t.Errorf("%+v", p)
 	}
 	if p.PerYear != 0.2 || p.Starts != 0.2 || p.Assurance != 0.9 || p.Level != 0.1 || p.SlotsPerYear != 365.2425 {

@@ -45,6 +45,9 @@ func Predict(p *Plan, alphas ...float64) (Limits, error) {
 // plan's exposure: what Alpha would have to be for it to signal.
 func (p *Plan) Size(part *Part, k int64) float64 {
 	window := p.load(0, 0, p.Windows[part.Window].Slots, p.known)
+	if p.Windows[part.Window].Trials > 0 {
+		window = p.trial(part.Window).now
+	}
 	return newModel(p, part.Tail, window).size(window, k)
 }
 
@@ -123,6 +126,9 @@ func (x *part) priced(k int64) (alpha, perYear float64, ok bool) {
 	alpha = x.model.size(window, k)
 	if !(alpha > 0 && alpha < 0.5) {
 		return 0, 0, false
+	}
+	if x.ofTrials() {
+		return alpha * ample, x.perYear(x.evenBatches(x.model, critical{k, true})), true
 	}
 	if x.arrival {
 		return alpha * ample, x.perYear(x.arrivals(x.model, x.plan.Exposure, critical{k, true})), true
