@@ -5,6 +5,7 @@ import (
 	"encoding/json"
 	"fmt"
 	"slices"
+	"time"
 
 	"tailbell/config"
 	"tailbell/monitor/life"
@@ -211,8 +212,8 @@ func (e *Engine) enforce(f *fact, from, until Instant) {
 		ofSums = e.succeedTo(ofSums, f)
 	}
 	slices.SortFunc(ofSums, func(a, b change) int { return cmp.Compare(a.series.number, b.series.number) })
-	e.because = f.why()
 	for _, c := range append(changes, ofSums...) {
+		e.because = f.why(c.series.indicator.cfg.Zone)
 		e.rerun(c)
 	}
 	e.because = ""
@@ -228,7 +229,7 @@ func (e *Engine) rearm(s *series, f *fact) {
 		t := &s.tails[d]
 		if a := t.current; a != nil {
 			t.leave(s.indicator.looked)
-			e.step(a, life.Step{Kind: life.StepReturned, At: e.clock.Time(), By: f.By, Why: f.why()})
+			e.step(a, life.Step{Kind: life.StepReturned, At: e.clock.Time(), By: f.By, Why: f.why(s.indicator.cfg.Zone)})
 		}
 		t.disarmed, t.quiet = false, 0
 	}
@@ -253,8 +254,15 @@ func (e *Engine) changeSums(list []change, s *series, from, to int64) []change {
 	return list
 }
 
-// why is what a step that follows from the fact gives as its reason.
-func (f *fact) why() string { return f.what() + " from " + at(f.From) }
+// why is what a step that follows from the fact gives as its reason: with the
+// date, where one begins then in the zone, as people wrote it.
+func (f *fact) why(zone *time.Location) string {
+	from := f.From.Time().In(zone)
+	if from.Equal(time.Date(from.Year(), from.Month(), from.Day(), 0, 0, 0, 0, zone)) {
+		return f.what() + " from " + from.Format(time.DateOnly)
+	}
+	return f.what() + " from " + from.Format(time.RFC3339)
+}
 
 func (f *fact) what() string {
 	switch {

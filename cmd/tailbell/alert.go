@@ -294,7 +294,7 @@ func (a *acting) run(ctx context.Context, w io.Writer) error {
 		return say(w, "Noted on alert %s (%s).", record.ID, record.Condition)
 	}
 	if record.Shelf != nil {
-		return say(w, "Alert %s is shelved until %s.", record.ID, record.Shelf.Until.Format("2006-01-02 15:04:05Z"))
+		return say(w, "Alert %s is shelved until %s.", record.ID, record.Shelf.Until.In(words.Zone(&record)).Format("2006-01-02 15:04 MST"))
 	}
 	text := fmt.Sprintf("Alert %s is now %s.", record.ID, record.Condition)
 	if a.act.Kind == monitor.Close && !before.Left() {

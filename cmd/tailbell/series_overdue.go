@@ -8,6 +8,7 @@ import (
 
 	"github.com/spf13/cobra"
 
+	"tailbell/config"
 	"tailbell/monitor"
 )
 
@@ -27,7 +28,7 @@ func newSeriesOverdueCommand() *cobra.Command {
 		Short: "List the series that should have reported by now",
 		Long: `Lists the series that the set-up expects to be heard of (its key expect) and that were not,
 those that were silent for longest first, with the names that nobody ever heard of among
-them. That nothing was reported says nothing of how many events there were. The daemon must
+them. Times are in the indicator's zone. That nothing was reported says nothing of how many events there were. The daemon must
 run. The exit code is 0 whether any are overdue or not.`,
 		RunE: func(c *cobra.Command, _ []string) error {
 			setup, err := loadSetup(path)
@@ -42,7 +43,7 @@ run. The exit code is 0 whether any are overdue or not.`,
 			if asJSON {
 				return writeJSON(c.OutOrStdout(), rows)
 			}
-			return writeOverdue(c.OutOrStdout(), rows)
+			return writeOverdue(c.OutOrStdout(), setup, rows)
 		},
 	}
 	addConfigFlag(c, &path)
@@ -64,14 +65,24 @@ func overdue(s *statusReply) []overdueRow {
 	return rows
 }
 
-func writeOverdue(w io.Writer, rows []overdueRow) error {
+func writeOverdue(w io.Writer, setup *config.Setup, rows []overdueRow) error {
 	if len(rows) == 0 {
 		return say(w, "Nobody is overdue, as far as the set-up says who must report (key expect).")
 	}
 	for _, r := range rows {
-		if err := say(w, "%s (%s): %s, since %s", r.Series, r.Indicator, r.Text, r.Since.Format("2006-01-02 15:04Z")); err != nil {
+		if err := say(w, "%s (%s): %s, since %s", r.Series, r.Indicator, r.Text, r.Since.In(zoneNamed(setup, r.Indicator)).Format("2006-01-02 15:04 MST")); err != nil {
 			return err
 		}
 	}
 	return say(w, "%s overdue. That nothing was reported is no count of zero.", amount(len(rows), "series")+" "+areIs(len(rows)))
+}
+
+// zoneNamed is the zone of an indicator; UTC where the set-up names it no longer.
+func zoneNamed(setup *config.Setup, indicator string) *time.Location {
+	for i := range setup.Indicators {
+		if setup.Indicators[i].Name == indicator {
+			return setup.Indicators[i].Zone
+		}
+	}
+	return time.UTC
 }

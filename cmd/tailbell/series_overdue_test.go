@@ -5,6 +5,7 @@ import (
 	"testing"
 	"time"
 
+	"tailbell/config"
 	"tailbell/monitor"
 )
 
@@ -20,7 +21,7 @@ func TestSeriesOverdue(t *testing.T) {
 		{Conditions: []conditionRow{{Series: "a", Kind: monitor.Silent, Since: at.Add(-time.Hour), Text: "y"}}},
 	}})
 	var b strings.Builder
-	if err := writeOverdue(&b, rows); err != nil {
+	if err := writeOverdue(&b, &config.Setup{}, rows); err != nil {
 		t.Fatal(err)
 	}
 	if len(rows) != 2 || rows[0].Series != "a" || !strings.HasSuffix(b.String(), "2 series are overdue. That nothing was reported is no count of zero.\n") {
