@@ -11,7 +11,7 @@ import (
 
 // Account says what became of every element that reached a partition, and of
 // every look. Each element stands in exactly one of the classes Counted,
-// Withheld, Repeat, Replaced, Outdated, Refused and Unmonitored.
+// Withheld, Repeat, Replaced, Outdated, Began, Refused and Unmonitored.
 type Account struct {
 	Elements int64 `json:"elements"`
 	// Counted elements stand in the sums, or retracted one that did; Withheld
@@ -21,9 +21,14 @@ type Account struct {
 	Withheld int64 `json:"withheld"`
 	// Repeat: same id, revision and content again. Replaced: counted once,
 	// until a higher revision came. Outdated: a lower revision came late.
-	Repeat      int64 `json:"repeat"`
-	Replaced    int64 `json:"replaced"`
-	Outdated    int64 `json:"outdated"`
+	Repeat   int64 `json:"repeat"`
+	Replaced int64 `json:"replaced"`
+	Outdated int64 `json:"outdated"`
+	// Began are the readings of counters that add nothing, since counting begins
+	// with them: the first ones, and those after a gap. Gaps are the readings,
+	// of any class, for which the one before was too far away.
+	Began       int64 `json:"began,omitempty"`
+	Gaps        int64 `json:"gaps,omitempty"`
 	Refused     int64 `json:"refused"`
 	Unmonitored int64 `json:"unmonitored"`
 	// RefusedBy counts the refused elements, acts and settings by reason.
@@ -74,6 +79,8 @@ func (a Account) Add(b Account) Account {
 	sum.Repeat += b.Repeat
 	sum.Replaced += b.Replaced
 	sum.Outdated += b.Outdated
+	sum.Began += b.Began
+	sum.Gaps += b.Gaps
 	sum.Refused += b.Refused
 	sum.Unmonitored += b.Unmonitored
 	sum.Late += b.Late
@@ -100,7 +107,7 @@ func (a Account) Add(b Account) Account {
 
 // Balanced reports whether every element stands in exactly one class.
 func (a Account) Balanced() bool {
-	return a.Elements == a.Counted+a.Withheld+a.Repeat+a.Replaced+a.Outdated+a.Refused+a.Unmonitored
+	return a.Elements == a.Counted+a.Withheld+a.Repeat+a.Replaced+a.Outdated+a.Began+a.Refused+a.Unmonitored
 }
 
 // SlotSum is what is counted in one slot of one series.

@@ -31,7 +31,8 @@ const (
 	flagNamed    = 1
 	flagRetired  = 2
 	flagArrivals = 4
-	flagSilence  = 8 // there was a silence: its alerts precede the rest of the head
+	flagTotals   = 16 // the latest readings of counters follow the arrivals
+	flagSilence  = 8  // there was a silence: its alerts precede the rest of the head
 )
 
 // errEncoding says that stored bytes are not what this program wrote.
@@ -51,6 +52,9 @@ func (s *series) encode(b []byte, whole bool) []byte {
 	}
 	if s.arrivals != nil {
 		b[at] |= flagArrivals
+	}
+	if s.totals != nil {
+		b[at] |= flagTotals
 	}
 	if whole || s.fresh {
 		b[at] |= flagNamed
@@ -77,6 +81,7 @@ func (s *series) encode(b []byte, whole bool) []byte {
 	b = s.encodeReferences(b)
 	b = s.encodeLimits(b)
 	b = s.encodeArrivals(b, whole)
+	b = s.totals.encode(b)
 	if s.sum != nil {
 		return binary.AppendUvarint(b, 0) // its cells follow from its members'
 	}

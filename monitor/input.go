@@ -53,7 +53,8 @@ type Item struct {
 }
 
 // Observation is so many events and so much exposure of a series over an
-// interval. Absent is not zero.
+// interval. Absent is not zero. If it is a Reading of counters, it is of an instant,
+// and both are what was counted so far.
 type Observation struct {
 	Series string
 	// ID with Revision names the observation under the series' leading name
@@ -69,6 +70,11 @@ type Observation struct {
 	HasEvents   bool
 	Exposure    config.Decimal
 	HasExposure bool
+	// Reading says that events and exposure are totals up to the instant, since
+	// Since, if HasSince.
+	Reading  bool
+	Since    Instant
+	HasSince bool
 	// Reported is when it became known, if HasReported.
 	Reported    Instant
 	HasReported bool
@@ -104,6 +110,7 @@ const (
 	BadEvents       Reason = "bad_events"       // not a whole number from 0
 	BadExposure     Reason = "bad_exposure"     // not a decimal number from 0 that can be held exactly
 	NothingReported Reason = "nothing_reported" // neither events nor exposure
+	BadReading      Reason = "bad_reading"      // totals beside what does not go with them
 	BadEnvelope     Reason = "bad_envelope"     // a CloudEvent that breaks its specification
 	BadAct          Reason = "bad_act"          // an act that can't be understood
 	BadSetting      Reason = "bad_setting"      // a set-up that doesn't validate
@@ -132,6 +139,7 @@ const (
 	NotAllowed      Reason = "not_allowed"       // an act that the alert's condition doesn't allow
 	NeedsRebuild    Reason = "needs_rebuild"     // a set-up that a running store can't take
 	SeriesClosed    Reason = "series_closed"     // a count of a time for which its series was closed
+	NeedsCounted    Reason = "needs_counted"     // totals of events, where silence is zero
 )
 
 // Act is something a person did.

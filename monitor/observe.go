@@ -24,6 +24,9 @@ func (e *Engine) observe(o *Observation) (Reason, string) {
 		return Ambiguous, fmt.Sprintf("series %q is claimed by indicators %q and %q: narrow their patterns",
 			o.Series, ix.cfg.Name, other.cfg.Name)
 	}
+	if o.Reading {
+		return e.read(ix, o)
+	}
 	key, old, done, reason, detail := e.identify(ix, o)
 	if done || reason != "" {
 		return reason, detail

@@ -227,6 +227,10 @@ func (e *Engine) overlay(s *series, data []byte) error {
 	} else {
 		s.arrivals = nil
 	}
+	s.totals = nil
+	if flags&flagTotals != 0 {
+		s.totals = r.totals()
+	}
 	for range r.length() {
 		c := r.cell(version)
 		*s.at(c.slot) = c

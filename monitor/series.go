@@ -73,6 +73,8 @@ type series struct {
 	next *series
 	// arrivals are kept where looks are made at them, else nil.
 	arrivals *arrivals
+	// totals are kept where counters are read, else nil.
+	totals *totals
 }
 
 // windowState is what the looks of one window have come to.

@@ -137,7 +137,8 @@ func (f *feeding) became(now *statusReply) error {
 	b, a := totalOf(&f.before), totalOf(now)
 	elements := a.Elements - b.Elements
 	repeats, outdated, refused, unmonitored := a.Repeat-b.Repeat, a.Outdated-b.Outdated, a.Refused-b.Refused, a.Unmonitored-b.Unmonitored
-	parts := []string{words.Whole(elements-repeats-outdated-refused-unmonitored) + " counted"}
+	began := a.Began - b.Began
+	parts := []string{words.Whole(elements-repeats-outdated-began-refused-unmonitored) + " counted"}
 	add := func(n int64, text string) {
 		if n > 0 {
 			parts = append(parts, text)
@@ -147,6 +148,7 @@ func (f *feeding) became(now *statusReply) error {
 	add(withheld, words.Whole(withheld)+" more in slots that lack their other side, events or exposure")
 	add(replaced, words.Whole(replaced)+" of an earlier revision replaced")
 	add(repeats, amount(repeats, "repeats"))
+	add(began, amount(began, "readings")+" from which counting begins")
 	add(outdated, words.Whole(outdated)+" outdated")
 	add(refused, words.Whole(refused)+" refused")
 	add(unmonitored, words.Whole(unmonitored)+" unmonitored")

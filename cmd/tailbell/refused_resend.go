@@ -232,7 +232,9 @@ func becameOf(kind bus.Kind, refused []store.RefusedRow, before, after monitor.A
 	case after.Repeat > before.Repeat:
 		return "a repeat of what was counted already"
 	case after.Outdated > before.Outdated:
-		return "outdated: a higher revision is counted"
+		return "outdated: a higher revision, or a later reading, is counted"
+	case after.Began > before.Began:
+		return "a reading from which counting begins"
 	case after.Unmonitored > before.Unmonitored:
 		return "unmonitored: no indicator takes its series"
 	case after.Withheld > before.Withheld:

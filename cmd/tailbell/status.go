@@ -132,6 +132,12 @@ func writeAccount(w io.Writer, a monitor.Account) error {
 		amount(a.Elements, "elements"), n(a.Counted), n(a.Withheld), amount(a.Repeat, "repeats"), n(a.Replaced), n(a.Outdated), n(a.Refused), n(a.Unmonitored)); err != nil {
 		return err
 	}
+	if a.Began+a.Gaps > 0 {
+		if err := say(w, "  %s of counters from which counting begins; %s after a gap too long to place what came in it",
+			amount(a.Began, "readings"), n(a.Gaps)); err != nil {
+			return err
+		}
+	}
 	return say(w, "  %s made when due, %s withheld, %s made again because data changed; %s came late; %s, %s refused",
 		amount(a.Looks, "looks"), n(a.WithheldLooks), n(a.Reruns), amount(a.Late, "elements"), amount(a.Acts, "acts"), n(a.ActsRefused))
 }

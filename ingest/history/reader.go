@@ -171,7 +171,7 @@ func (r *reader) observation(item *monitor.Item, line int, raw []byte) {
 		return
 	}
 	r.scratch = wire.EncodeObservation(r.scratch[:0], o)
-	if o.ID == "" && !r.opts.NoDerivedIDs {
+	if o.ID == "" && !o.Reading && !r.opts.NoDerivedIDs {
 		r.scratch = r.ids.identify(r.scratch)
 		r.history.Counts.DerivedIDs++
 	}

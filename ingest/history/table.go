@@ -35,10 +35,11 @@ var columnKinds = map[string]columnKind{
 	"start": timeColumn, "end": timeColumn, "at": timeColumn, "reported": timeColumn,
 	"date":   spanColumn,
 	"events": numberColumn, "exposure": numberColumn, "revision": numberColumn,
+	"total": numberColumn, "exposure_total": numberColumn, "since": timeColumn,
 	"retracted": flagColumn,
 }
 
-const columnNames = "id, series, start, end, at, date, events, exposure (or exposure[unit]), revision, reported, retracted"
+const columnNames = "id, series, start, end, at, date, events, exposure (or exposure[unit]), revision, reported, retracted, total, exposure_total, since"
 
 type column struct {
 	name string
@@ -313,7 +314,7 @@ func (t *table) time(name string, at monitor.Instant) {
 }
 
 func numberLike(column string) string {
-	if column == "exposure" {
+	if column == "exposure" || column == "exposure_total" {
 		return "a plain number such as 12 or 0.5, with a point and without thousands marks"
 	}
 	return "a whole number such as 0 or 12"
@@ -321,9 +322,9 @@ func numberLike(column string) string {
 
 func numberReason(column string) monitor.Reason {
 	switch column {
-	case "events":
+	case "events", "total":
 		return monitor.BadEvents
-	case "exposure":
+	case "exposure", "exposure_total":
 		return monitor.BadExposure
 	}
 	return monitor.BadRevision

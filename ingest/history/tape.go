@@ -8,7 +8,7 @@ import (
 
 // tape adds a decoded row to the tape.
 func (r *reader) tape(o *monitor.Observation, at monitor.Instant, line int, raw []byte) {
-	derived := o.ID == "" && !r.opts.NoDerivedIDs && (r.opts.KeepsIDs == nil || r.opts.KeepsIDs(o.Series))
+	derived := o.ID == "" && !o.Reading && !r.opts.NoDerivedIDs && (r.opts.KeepsIDs == nil || r.opts.KeepsIDs(o.Series))
 	if derived {
 		r.scratch = wire.EncodeObservation(r.scratch[:0], o)
 		field := r.ids.next(r.scratch)

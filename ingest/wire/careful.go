@@ -123,11 +123,13 @@ func (w *draft) read(field field) *fault {
 		return readTime(field, &w.at)
 	case hasReported:
 		return readTime(field, &w.o.Reported)
-	case hasEvents:
+	case hasSince:
+		return readTime(field, &w.o.Since)
+	case hasEvents, hasTotal:
 		return readWhole(field, monitor.BadEvents, &w.o.Events)
 	case hasRevision:
 		return readWhole(field, monitor.BadRevision, &w.o.Revision)
-	case hasExposure:
+	case hasExposure, hasExposureTotal:
 		return w.readExposure(field)
 	case hasRetracted:
 		return w.readRetracted(field)
@@ -229,10 +231,10 @@ func (w *draft) readExposure(field field) *fault {
 	}
 	value, err := decimal(field.value)
 	if errors.Is(err, config.ErrDecimalRange) {
-		return refuse(monitor.BadExposure, "exposure is %s, which has %v; round it", clip(field.value), err)
+		return refuse(monitor.BadExposure, "%s is %s, which has %v; round it", field.name, clip(field.value), err)
 	}
 	if err != nil {
-		return refuse(monitor.BadExposure, "exposure is %s, which is %v", clip(field.value), err)
+		return refuse(monitor.BadExposure, "%s is %s, which is %v", field.name, clip(field.value), err)
 	}
 	w.o.Exposure = value
 	return nil

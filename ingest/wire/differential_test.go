@@ -54,6 +54,12 @@ func elementGen() *rapid.Generator[string] {
 			names = []string{"series", "at", "events"}
 		case 3:
 			names = rapid.SliceOfN(rapid.SampledFrom(allNames), 0, 12).Draw(t, "names")
+		case 4, 5:
+			names = []string{"series", "at", "total", "exposure_total", "since", "reported"}
+			names = names[:rapid.IntRange(3, len(names)).Draw(t, "fields")]
+			if rapid.IntRange(0, 5).Draw(t, "more") == 0 {
+				names = append(names, rapid.SampledFrom(allNames).Draw(t, "another"))
+			}
 		default:
 			names = []string{"id", "series", "start", "end", "events", "exposure", "revision", "reported"}
 		}
@@ -80,7 +86,7 @@ func elementGen() *rapid.Generator[string] {
 	})
 }
 
-var allNames = []string{"id", "series", "start", "end", "at", "events", "exposure", "revision", "reported", "retracted", "ward", "Series", ""}
+var allNames = []string{"id", "series", "start", "end", "at", "events", "exposure", "revision", "reported", "retracted", "total", "exposure_total", "since", "ward", "Series", ""}
 
 func quoteName(s string) string { return `"` + s + `"` }
 
@@ -107,7 +113,10 @@ func valueGen(name string) *rapid.Generator[string] {
 		"exposure":  {"22", "0", "0.5", "0.000001", "1e-6", "18446744073709551615", "12.500", "-0.0", "1234567890.12345678", "0.0"},
 		"revision":  {"0", "2", "1"},
 		"retracted": {"true", "false"},
+		"total":     {"0", "17", "3.0", "9007199254740992"},
+		"since":     {`"2016-12-31T23:59:60Z"`, `"2026-03-02T14:30:00.5-00:30"`, `"2026-03-02T14:30:00.4-00:30"`, `"0001-01-01T00:00:00Z"`, `"2026-03-03T00:00:00Z"`},
 	}
+	good["exposure_total"] = good["exposure"]
 	bad := []string{
 		"null", "true", `"1"`, `""`, "-1", "1.5", "01", "1.", ".5", "1e", "NaN", "Infinity", "[]", "{}", `{"a":[1,{"b":null}]}`,
 		"9007199254740993", "18446744073709551616", "0.0000000000000000001", "1e400", "1e999", `"\ud800"`, "\"\xff\"", "\"\x01\"", `"\x"`,

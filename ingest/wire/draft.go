@@ -20,6 +20,9 @@ const (
 	hasRevision
 	hasReported
 	hasRetracted
+	hasTotal
+	hasExposureTotal
+	hasSince
 )
 
 // memberOf returns the bit of a field's name, or 0.
@@ -45,6 +48,12 @@ func memberOf(name []byte) member {
 		return hasReported
 	case "retracted":
 		return hasRetracted
+	case "total":
+		return hasTotal
+	case "exposure_total":
+		return hasExposureTotal
+	case "since":
+		return hasSince
 	}
 	return 0
 }
@@ -61,22 +70,28 @@ type draft struct {
 
 func (w *draft) has(m member) bool { return w.seen&m != 0 }
 
+// isReading reports whether there are fields that only a reading of counters has.
+func (w *draft) isReading() bool { return w.seen&(hasTotal|hasExposureTotal|hasSince) != 0 }
+
 // finish checks what the fields say together, and completes the observation.
 func (w *draft) finish() *fault {
 	if !w.has(hasSeries) {
 		return refuse(monitor.BadSeries, "the field series is missing; it names the stream of counts")
 	}
 	var f *fault
-	if w.o.Retracted {
+	switch {
+	case w.o.Retracted:
 		f = w.finishRetraction()
-	} else {
+	case w.isReading():
+		f = w.finishReading()
+	default:
 		f = w.finishReport()
 	}
 	if f != nil {
 		return f
 	}
-	w.o.HasEvents = w.has(hasEvents)
-	w.o.HasExposure = w.has(hasExposure)
+	w.o.HasEvents = w.seen&(hasEvents|hasTotal) != 0
+	w.o.HasExposure = w.seen&(hasExposure|hasExposureTotal) != 0
 	w.o.HasReported = w.has(hasReported)
 	w.copyTexts()
 	return nil
@@ -95,7 +110,29 @@ func (w *draft) finishRetraction() *fault {
 		return refuse(monitor.BadEvents, "a retraction has no events; %s", carries)
 	case w.has(hasExposure):
 		return refuse(monitor.BadExposure, "a retraction has no exposure; %s", carries)
+	case w.isReading():
+		return refuse(monitor.BadReading, "a retraction has no totals; %s", carries)
 	}
+	return nil
+}
+
+// finishReading completes a reading of counters.
+func (w *draft) finishReading() *fault {
+	const carries = "a reading carries series, at, total or exposure_total or both and, if you like, since and reported"
+	switch {
+	case w.seen&(hasTotal|hasExposureTotal) == 0:
+		return refuse(monitor.BadReading, "since says when the counting of totals began, but there is none; %s", carries)
+	case w.seen&(hasEvents|hasExposure) != 0:
+		return refuse(monitor.BadReading, "totals and counts of an interval are given at once; %s", carries)
+	case w.seen&(hasID|hasRevision) != 0:
+		return refuse(monitor.BadReading, "a reading has no id and no revision, since the next one makes up for it; %s", carries)
+	case w.seen&(hasStart|hasEnd|hasAt) != hasAt:
+		return refuse(monitor.BadReading, "totals are those of an instant; %s", carries)
+	case w.has(hasSince) && w.o.Since > w.at:
+		return refuse(monitor.BadReading, "since must not be after at: counting can't have begun later than it was read")
+	}
+	w.o.Start, w.o.End, w.o.Instant = w.at, w.at, true
+	w.o.Reading, w.o.HasSince = true, w.has(hasSince)
 	return nil
 }
 

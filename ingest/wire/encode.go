@@ -28,12 +28,22 @@ func EncodeObservation(dst []byte, o *monitor.Observation) []byte {
 		dst = appendTimeField(dst, `,"end":"`, o.End)
 	}
 	if o.HasEvents {
-		dst = append(dst, `,"events":`...)
+		name := `,"events":`
+		if o.Reading {
+			name = `,"total":`
+		}
+		dst = append(dst, name...)
 		dst = strconv.AppendInt(dst, o.Events, 10)
 	}
 	if o.HasExposure {
-		dst = append(dst, `,"exposure":`...)
+		if dst = append(dst, `,"exposure`...); o.Reading {
+			dst = append(dst, "_total"...)
+		}
+		dst = append(dst, `":`...)
 		dst = append(dst, o.Exposure.String()...)
+	}
+	if o.HasSince {
+		dst = appendTimeField(dst, `,"since":"`, o.Since)
 	}
 	if o.Revision != 0 {
 		dst = append(dst, `,"revision":`...)

@@ -35,6 +35,21 @@ func observationGen() *rapid.Generator[monitor.Observation] {
 			o.Retracted = true
 			return o
 		}
+		if o.ID == "" && rapid.IntRange(0, 3).Draw(t, "reading") == 0 {
+			o.Reading, o.Instant, o.Start = true, true, instantGen().Draw(t, "at")
+			o.End = o.Start
+			if o.HasSince = rapid.Bool().Draw(t, "has since"); o.HasSince {
+				o.Since = min(o.Start, instantGen().Draw(t, "since"))
+			}
+			o.HasEvents = rapid.Bool().Draw(t, "has total")
+			if o.HasExposure = !o.HasEvents || rapid.Bool().Draw(t, "has exposure total"); o.HasExposure {
+				o.Exposure = decimalGen().Draw(t, "exposure")
+			}
+			if o.HasEvents {
+				o.Events = rapid.Int64Range(0, MaxEvents).Draw(t, "total")
+			}
+			return o
+		}
 		o.Start = instantGen().Draw(t, "start")
 		o.End = instantGen().Draw(t, "end")
 		switch {

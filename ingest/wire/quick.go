@@ -108,7 +108,9 @@ func (w *draft) quickText(m member, text []byte) bool {
 		w.at, ok = parseTime(text)
 	case hasReported:
 		w.o.Reported, ok = parseTime(text)
-	case hasEvents, hasExposure, hasRevision, hasRetracted:
+	case hasSince:
+		w.o.Since, ok = parseTime(text)
+	case hasEvents, hasExposure, hasRevision, hasRetracted, hasTotal, hasExposureTotal:
 		return false
 	}
 	return ok
@@ -117,16 +119,16 @@ func (w *draft) quickText(m member, text []byte) bool {
 func (w *draft) quickToken(m member, text []byte) bool {
 	ok := true
 	switch m {
-	case hasEvents:
+	case hasEvents, hasTotal:
 		w.o.Events, ok = quickWhole(text)
 	case hasRevision:
 		w.o.Revision, ok = quickWhole(text)
-	case hasExposure:
+	case hasExposure, hasExposureTotal:
 		w.o.Exposure, ok = quickDecimal(text)
 	case hasRetracted:
 		w.o.Retracted = string(text) == "true"
 		return w.o.Retracted || string(text) == "false"
-	case hasSeries, hasID, hasStart, hasEnd, hasAt, hasReported:
+	case hasSeries, hasID, hasStart, hasEnd, hasAt, hasReported, hasSince:
 		return false
 	}
 	return ok

@@ -20,7 +20,7 @@ func TestReadme(t *testing.T) {
 	for _, code := range []monitor.Reason{
 		monitor.NotJSON, monitor.NotUTF8, monitor.TooLarge, monitor.TooDeep, monitor.TooMany, monitor.NotObject,
 		monitor.DuplicateField, monitor.UnknownField, monitor.BadSeries, monitor.BadID, monitor.BadRevision,
-		monitor.BadTime, monitor.BadInterval, monitor.BadEvents, monitor.BadExposure, monitor.NothingReported,
+		monitor.BadTime, monitor.BadInterval, monitor.BadEvents, monitor.BadExposure, monitor.NothingReported, monitor.BadReading,
 		monitor.BadEnvelope, monitor.BadAct, monitor.BadSetting, monitor.BadSubject, monitor.BadHeader,
 	} {
 		if !strings.Contains(text, "| `"+string(code)+"` |") {

@@ -6,6 +6,7 @@ import (
 	"io"
 	"math/big"
 	"regexp"
+	"slices"
 	"strconv"
 	"strings"
 	"time"
@@ -122,7 +123,13 @@ func refDecode(data []byte, depth int) (o monitor.Observation, reason monitor.Re
 		case "revision":
 			o.Revision, ok = refWhole(f)
 			reason = monitor.BadRevision
-		case "exposure":
+		case "total":
+			o.Events, ok = refWhole(f)
+			reason = monitor.BadEvents
+		case "since":
+			o.Since, ok = refTime(f)
+			reason = monitor.BadTime
+		case "exposure", "exposure_total":
 			o.Exposure, ok = refDecimal(f)
 			reason = monitor.BadExposure
 		case "retracted":
@@ -135,18 +142,31 @@ func refDecode(data []byte, depth int) (o monitor.Observation, reason monitor.Re
 		}
 		seen[f.name] = true
 	}
-	o.HasEvents, o.HasExposure, o.HasReported = seen["events"], seen["exposure"], seen["reported"]
+	o.HasEvents, o.HasExposure, o.HasReported = seen["events"] || seen["total"], seen["exposure"] || seen["exposure_total"], seen["reported"]
+	o.HasSince = seen["since"]
+	o.Reading = seen["total"] || seen["exposure_total"]
 	if seen["at"] {
 		o.Instant = true
 	}
-	reason = refTogether(&o, seen)
+	reason = refTogether(&o, seen, at)
 	if o.Instant {
 		o.Start, o.End = at, at
 	}
 	return o, reason
 }
 
-func refTogether(o *monitor.Observation, seen map[string]bool) monitor.Reason {
+func refTogether(o *monitor.Observation, seen map[string]bool, at monitor.Instant) monitor.Reason {
+	if seen["series"] && !o.Retracted && (o.Reading || seen["since"]) {
+		for name := range seen {
+			if !slices.Contains([]string{"series", "at", "total", "exposure_total", "since", "reported", "retracted"}, name) {
+				return monitor.BadReading
+			}
+		}
+		if !o.Reading || !seen["at"] || seen["since"] && at < o.Since {
+			return monitor.BadReading
+		}
+		return ""
+	}
 	switch span := seen["start"] && seen["end"]; {
 	case !seen["series"]:
 		return monitor.BadSeries
@@ -160,6 +180,8 @@ func refTogether(o *monitor.Observation, seen map[string]bool) monitor.Reason {
 		return monitor.BadEvents
 	case o.Retracted && seen["exposure"]:
 		return monitor.BadExposure
+	case o.Retracted && (o.Reading || seen["since"]):
+		return monitor.BadReading
 	case o.Retracted:
 		return ""
 	case seen["at"] && (seen["start"] || seen["end"]), !seen["at"] && !span, span && o.End <= o.Start:

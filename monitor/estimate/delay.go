@@ -203,9 +203,9 @@ func NewReports(end func(monitor.Instant) monitor.Instant) *Reports {
 }
 
 // Add takes the next observation; those without a reported time, or without
-// events, tell nothing.
+// events, tell nothing, nor do readings of counters.
 func (r *Reports) Add(site string, o *monitor.Observation) {
-	if !o.HasReported || (!o.HasEvents && !o.Retracted) {
+	if !o.HasReported || (!o.HasEvents && !o.Retracted) || o.Reading {
 		return
 	}
 	if o.ID == "" {

@@ -170,7 +170,7 @@ func (p *plan) moves(r *row, calendars map[*config.Indicator]*monitor.Calendar, 
 	switch {
 	case in == nil: // one whose id belonged to a monitored series may be refused
 		return never, r.extra >= 0
-	case r.flags&retracted != 0 || r.start > r.time.Add(-in.Horizon):
+	case r.flags&retracted != 0 || r.begin() > r.time.Add(-in.Horizon):
 		return always, false
 	}
 	cal := calendars[in]
@@ -179,7 +179,7 @@ func (p *plan) moves(r *row, calendars map[*config.Indicator]*monitor.Calendar, 
 		calendars[in] = cal
 	}
 	switch {
-	case cal.Start(cal.Slot(r.start)+1) >= r.time.Add(-in.Horizon):
+	case cal.Start(cal.Slot(r.begin())+1) >= r.time.Add(-in.Horizon):
 		return always, false
 	case r.extra >= 0 && !p.tape.ids[r.extra].derived:
 		return perhaps, true

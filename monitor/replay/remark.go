@@ -235,7 +235,10 @@ func (in *inspector) cover(s *inspected, i int) {
 		cal = monitor.NewCalendar(cfg.Every, cfg.Zone)
 		in.calendars[cfg] = cal
 	}
-	from := cal.Slot(r.start)
+	from := cal.Slot(r.begin())
+	if r.flags&ofTotals != 0 { // what came up to then
+		from = cal.Slot(r.end - 1)
+	}
 	to := from + 1
 	if r.end > r.start+1 && r.end > cal.Start(to) {
 		to = cal.Slot(r.end-1) + 1

@@ -51,6 +51,8 @@ const (
 	retracted
 	instant
 	stored // it came after history time: its time is the bus's
+	ofTotals
+	hasSince // start is since when
 )
 
 // row is one row of the tape.
@@ -123,11 +125,14 @@ func (t *Tape) Add(o *monitor.Observation, at monitor.Instant, derived, afterHis
 	}
 	for flag, set := range map[uint8]bool{
 		hasEvents: o.HasEvents, hasExposure: o.HasExposure, hasReported: o.HasReported,
-		retracted: o.Retracted, instant: o.Instant, stored: afterHistory,
+		retracted: o.Retracted, instant: o.Instant, stored: afterHistory, ofTotals: o.Reading, hasSince: o.HasSince,
 	} {
 		if set {
 			r.flags |= flag
 		}
+	}
+	if o.HasSince { // what is read at an instant begins where it ends
+		r.start = o.Since
 	}
 	if o.ID != "" {
 		r.extra = int32(len(t.ids))
@@ -193,6 +198,14 @@ func (t *Tape) add(r row, p Place) {
 	last := &t.rows[len(t.rows)-1]
 	*last = append(*last, r)
 	t.n++
+}
+
+// begin is where the interval begins that the row is of.
+func (r *row) begin() monitor.Instant {
+	if r.flags&hasSince != 0 {
+		return r.end
+	}
+	return r.start
 }
 
 func (t *Tape) raw(i int) *row { return &t.rows[i>>pieceBits][i&(pieceRows-1)] }
@@ -273,6 +286,10 @@ func (t *Tape) fill(m *monitor.Message, i int) {
 	o.Exposure = config.Decimal{Coef: r.exposure, Digits: r.digits}
 	o.HasEvents, o.HasExposure = r.flags&hasEvents != 0, r.flags&hasExposure != 0
 	o.Retracted, o.Instant = r.flags&retracted != 0, r.flags&instant != 0
+	o.Reading, o.HasSince, o.Since = r.flags&ofTotals != 0, r.flags&hasSince != 0, 0
+	if o.HasSince {
+		o.Start, o.Since = r.end, r.start
+	}
 	o.ID, o.Revision, o.HasReported, o.Reported = "", 0, r.flags&hasReported != 0, 0
 	if o.HasReported {
 		o.Reported = r.time
