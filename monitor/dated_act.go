@@ -5,6 +5,8 @@ import (
 	"encoding/json"
 	"fmt"
 	"slices"
+	"strconv"
+	"strings"
 	"time"
 
 	"tailbell/config"
@@ -65,8 +67,19 @@ func (e *Engine) senseless(f *fact) (Reason, string) {
 	if f.Into != "" {
 		return e.unfitHeir(f, matched)
 	}
-	if f.Kind == Reset && len(matched) == 0 {
+	return e.pointless(f, matched)
+}
+
+// pointless says why an act that would hold for nothing, or that can't be true
+// yet, is most likely a mistake; "" if it is none.
+func (e *Engine) pointless(f *fact, matched []*series) (Reason, string) {
+	switch {
+	case f.Kind == Reset && len(matched) == 0:
 		return NoSuchSeries, fmt.Sprintf("no series that was heard of is called %q or matches it: there is nothing to reset", f.Series)
+	case f.What == Closing && len(matched) == 0 && !config.IsSum(f.Series):
+		return NoSuchSeries, fmt.Sprintf("no series that was heard of is called %q: there is nothing to close", f.Series)
+	case f.Kind == SignOff && e.clock != Beginning && f.Until > e.clock:
+		return NotAllowed, fmt.Sprintf("nothing can be final yet of a time that ends at %s: the stream's clock is %s", dateIn(zoneAmong(matched), f.Until), dateIn(zoneAmong(matched), e.clock))
 	}
 	return "", ""
 }
@@ -77,12 +90,12 @@ func (e *Engine) unfitFor(f *fact, s *series) (Reason, string) {
 	slot := ix.firstFrom(f.From)
 	if f.Kind != Reset && f.Kind != SignOff && ix.started && !f.Straddle && slot <= ix.frozenAt {
 		return BeyondHorizon, fmt.Sprintf("%s lies before the horizon of series %q, %s: looks from before can't change any more",
-			at(f.From), s.name, at(ix.cal.Start(ix.frozenAt)))
+			dateIn(ix.cfg.Zone, f.From), s.name, dateIn(ix.cfg.Zone, ix.cal.Start(ix.frozenAt)))
 	}
 	switch {
 	case s.sum != nil: // it follows its members
 	case f.What == Opening && s.birth < slot && s.dates.isOpen(slot-1):
-		return NotAllowed, fmt.Sprintf("series %q is open already, since %s: close it first, or reset it", s.name, at(ix.cal.Start(s.birth)))
+		return NotAllowed, fmt.Sprintf("series %q is open already, since %s: close it first, or reset it", s.name, dateIn(ix.cfg.Zone, ix.cal.Start(s.birth)))
 	case f.What == Opening && s.dates != nil && slices.ContainsFunc(s.dates.turns, func(t turn) bool { return t.slot >= slot }):
 		return NotAllowed, fmt.Sprintf("series %q is opened or closed at a later date already", s.name)
 	case f.turns() && f.What != Opening && !s.dates.isOpen(slot):
@@ -145,7 +158,7 @@ func (e *Engine) backInService(f *fact) (Reason, string) {
 		}
 		for _, s := range e.matched(x) {
 			if ix := s.indicator; ix.started && ix.firstFrom(f.From) <= ix.frozenAt {
-				return BeyondHorizon, fmt.Sprintf("%s lies before the horizon: looks from before can't change any more", at(f.From))
+				return BeyondHorizon, fmt.Sprintf("%s lies before the horizon: looks from before can't change any more", dateIn(ix.cfg.Zone, f.From))
 			}
 		}
 		until := x.Until
@@ -154,7 +167,28 @@ func (e *Engine) backInService(f *fact) (Reason, string) {
 		e.enforce(x, x.Until, until)
 		return "", ""
 	}
-	return NotAllowed, fmt.Sprintf("%s is not out of service at %s by these very words: see what is, and name it as it was named", f.Series, at(f.From))
+	return NotAllowed, e.notOutBy(f)
+}
+
+// notOutBy says that nothing is out of service by the words of the act, and by
+// which others it is.
+func (e *Engine) notOutBy(f *fact) string {
+	zone := zoneAmong(e.matched(f))
+	var words []string
+	for i := range e.facts {
+		if x := &e.facts[i]; x.Kind == OutOfService && x.From <= f.From && f.From < x.Until {
+			words = append(words, strconv.Quote(x.Series))
+		}
+	}
+	text := fmt.Sprintf("nothing is out of service at %s by the words %q", dateIn(zone, f.From), f.Series)
+	if len(words) == 0 {
+		return text + ", nor by any others"
+	}
+	const most = 5
+	if n := len(words) - most; n > 0 {
+		words = append(words[:most], fmt.Sprintf("%d others", n))
+	}
+	return text + ": name it as it was named, " + strings.Join(words, " or ")
 }
 
 // keepFacts puts the facts in force.
@@ -254,14 +288,27 @@ func (e *Engine) changeSums(list []change, s *series, from, to int64) []change {
 	return list
 }
 
-// why is what a step that follows from the fact gives as its reason: with the
-// date, where one begins then in the zone, as people wrote it.
+// why is what a step that follows from the fact gives as its reason.
 func (f *fact) why(zone *time.Location) string {
-	from := f.From.Time().In(zone)
-	if from.Equal(time.Date(from.Year(), from.Month(), from.Day(), 0, 0, 0, 0, zone)) {
-		return f.what() + " from " + from.Format(time.DateOnly)
+	return f.what() + " from " + dateIn(zone, f.From)
+}
+
+// zoneAmong is the zone of the first of the series; UTC if there is none.
+func zoneAmong(list []*series) *time.Location {
+	if len(list) == 0 {
+		return time.UTC
 	}
-	return f.what() + " from " + from.Format(time.RFC3339)
+	return list[0].indicator.cfg.Zone
+}
+
+// dateIn writes a moment as the date that begins with it in the zone, or else as
+// a time with its offset.
+func dateIn(zone *time.Location, i Instant) string {
+	t := i.Time().In(zone)
+	if t.Equal(time.Date(t.Year(), t.Month(), t.Day(), 0, 0, 0, 0, zone)) {
+		return t.Format(time.DateOnly)
+	}
+	return t.Format(time.RFC3339)
 }
 
 func (f *fact) what() string {

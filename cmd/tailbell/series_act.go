@@ -206,7 +206,7 @@ func dateIn(zone *time.Location, name, option, text string) (monitor.Instant, er
 
 // told says what was done.
 func (a *seriesActing) told(series int) string {
-	who := "no series yet"
+	who := a.act.Series + " (no series yet)"
 	switch {
 	case series == 1:
 		who = a.act.Series
@@ -215,8 +215,6 @@ func (a *seriesActing) told(series int) string {
 		}
 	case series > 1:
 		who = fmt.Sprintf("%s (%d series)", a.act.Series, series)
-	case config.IsSum(a.act.Series):
-		who = a.act.Series + " (no series yet)"
 	}
 	from, until := a.act.From.Time().Format(time.RFC3339), a.act.Until.Time().Format(time.RFC3339)
 	if a.from != "" {

@@ -59,7 +59,7 @@ func oneOf[T ~string](name string, value T, known []T) *fault {
 	for i, k := range known {
 		words[i] = string(k)
 	}
-	return refuse(monitor.BadAct, "%s is %q; it must be %s", name, clip(string(value)), alternatives(words))
+	return refuse(monitor.BadAct, "the field %s is %q; it must be %s", name, clip(string(value)), alternatives(words))
 }
 
 // spanned are the acts on series that have an end.
@@ -89,7 +89,7 @@ func checkSeriesAct(act *monitor.Act, seen map[string]bool) *fault {
 	case seen["straddle"] && act.What != monitor.CaseDefinition && act.What != monitor.Method:
 		return refuse(monitor.BadAct, "the field straddle belongs to a change of case definition or method")
 	case !seen["why"] && act.Kind != monitor.SignOff && act.Kind != monitor.BackInService:
-		return refuse(monitor.BadAct, "the field why is missing; a %s needs it", act.Kind)
+		return refuse(monitor.BadAct, "the field why is missing; the act %s needs it", act.Kind)
 	}
 	return nil
 }

@@ -11,6 +11,14 @@ import (
 // allow, such as acknowledging it twice.
 var ErrNotAllowed = errors.New("not allowed")
 
+// notAllowedError is an ErrNotAllowed that says of which alert.
+type notAllowedError struct{ text string }
+
+func (e *notAllowedError) Error() string { return e.text }
+
+// Unwrap makes it an ErrNotAllowed.
+func (*notAllowedError) Unwrap() error { return ErrNotAllowed }
+
 // after is the transition table: the condition after a step of a kind, by the
 // condition before it. What is not in it is not allowed.
 var after = map[StepKind]map[Condition]Condition{
@@ -89,7 +97,7 @@ const NoLongerMonitored = "no longer monitored"
 func (r *Record) Take(s Step) ([]Notice, error) {
 	next, ok := after[s.Kind][r.Condition]
 	if !ok {
-		return nil, fmt.Errorf("alert %s is %s and can't be %s: %w", r.ID, r.Condition, s.Kind, ErrNotAllowed)
+		return nil, &notAllowedError{fmt.Sprintf("alert %s is %s and can't be %s", r.ID, r.Condition, s.Kind)}
 	}
 	if s.Kind == StepUnshelved {
 		next = r.offShelf()
