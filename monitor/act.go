@@ -58,6 +58,9 @@ func (e *Engine) perform(act *Act) (Reason, string) {
 	case Reset, Change, OutOfService, BackInService, SignOff:
 	}
 	if repeated(&a.record, act, &s) {
+		if s.Kind == life.StepAcknowledged {
+			return NotAllowed, fmt.Sprintf("alert %s was acknowledged already", a.record.ID)
+		}
 		return NotAllowed, fmt.Sprintf("alert %s has this act already", a.record.ID)
 	}
 	if err := e.take(a, s); err != nil {

@@ -196,7 +196,8 @@ func newAlertShowCommand() *cobra.Command {
 type acting struct {
 	path string
 	act  monitor.Act
-	span time.Duration // for which it is shelved; 0 if act.Until says it
+	span time.Duration // for which it is shelved; 0 if date or act.Until says it
+	date string        // up to which it is shelved, "" for none
 }
 
 func newActCommand(kind monitor.ActKind, short, long string) *cobra.Command {

@@ -8,6 +8,7 @@ import (
 
 	"github.com/spf13/cobra"
 
+	"tailbell/alert/words"
 	"tailbell/config"
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
@@ -23,13 +24,15 @@ outlets for people are not told. It comes back by itself when the time is over: 
 still signals, everybody is told again, and somebody has to acknowledge it. Shelved
 again, it has the new time. An alert that rings anew after this one has returned is
 another one, and is told.`)
-	c.Flags().StringVar(&until, "until", "", "the `TIME` at which it comes back, RFC 3339: 2026-03-09T08:00:00+01:00")
+	c.Flags().StringVar(&until, "until", "", "the `DATE` with which it comes back, 2026-03-09, or the time: 2026-03-09T08:00:00+01:00")
 	c.Flags().StringVar(&span, "for", "", "or how `LONG` from now: 12h, 7d")
 	c.MarkFlagsMutuallyExclusive("until", "for")
 	c.PreRunE = func(*cobra.Command, []string) (err error) {
 		switch {
 		case until != "":
-			if a.act.Until, err = wire.ParseTime(until); err != nil {
+			if _, plain := time.Parse(time.DateOnly, until); plain == nil {
+				a.date = until // in the zone of the alert
+			} else if a.act.Until, err = wire.ParseTime(until); err != nil {
 				return &usageError{fmt.Errorf("--until: %w", err)}
 			}
 		case span != "":
@@ -37,7 +40,7 @@ another one, and is told.`)
 				return &usageError{err}
 			}
 		default:
-			return &usageError{errors.New("--until is missing: say when it comes back, by --until TIME or --for 7d")}
+			return &usageError{errors.New("--until is missing: say when it comes back, by --until DATE or --for 7d")}
 		}
 		return nil
 	}
@@ -56,9 +59,15 @@ func spanOf(text string) (time.Duration, error) {
 	return span, nil
 }
 
-// shelveUntil completes an act that says for how long, from the clock of the
-// alert's partition: in history time that is not the machine's.
+// shelveUntil completes an act that says a date, which begins in the zone of the
+// alert, or for how long, from the clock of its partition: in history time that is
+// not the machine's.
 func (a *acting) shelveUntil(ctx context.Context, setup *config.Setup, r *life.Record) error {
+	if a.date != "" {
+		date, err := time.ParseInLocation(time.DateOnly, a.date, words.Zone(r))
+		a.act.Until = monitor.InstantOf(date)
+		return err
+	}
 	if a.span == 0 {
 		return nil
 	}

@@ -181,6 +181,8 @@ func TestActsTellWhatStands(t *testing.T) {
 		t.Helper()
 		h.command(want, append(append([]string{"alert", kind, id}, who...), more...)...)
 	}
+	act("is shelved until 2026-03-31 00:00 UTC.", "shelve", "--until", "2026-03-31")
+	act("is now unacknowledged.", "unshelve")
 	act("is marked chance", "mark", "--as", "chance")
 	act("has no mark any more (unacknowledged).", "mark", "--as", "none")
 	act("is shelved until", "shelve", "--for", "60h")

@@ -23,6 +23,7 @@ type seriesActing struct {
 	act               monitor.Act
 	from, until, span string
 	month             string
+	zone              *time.Location // of the indicators concerned; nil for several
 	what, side        string
 }
 
@@ -138,6 +139,7 @@ func (a *seriesActing) complete(setup *config.Setup) error {
 	if err != nil {
 		return err
 	}
+	a.zone = zone
 	if a.month != "" {
 		begin, err := time.ParseInLocation("2006-01", a.month, zone)
 		if err != nil {
@@ -216,12 +218,9 @@ func (a *seriesActing) told(series int) string {
 	case series > 1:
 		who = fmt.Sprintf("%s (%d series)", a.act.Series, series)
 	}
-	from, until := a.act.From.Time().Format(time.RFC3339), a.act.Until.Time().Format(time.RFC3339)
-	if a.from != "" {
-		from = a.from
-	}
-	if a.until != "" {
-		until = a.until
+	from, until := a.from, a.until
+	if a.span != "" {
+		until = a.endOfSpan()
 	}
 	span := from + " to " + until
 	if a.month != "" {
@@ -243,4 +242,16 @@ func (a *seriesActing) told(series int) string {
 		what += " into " + a.act.Into
 	}
 	return who + ": " + what + " from " + from + " recorded"
+}
+
+// endOfSpan writes up to when a span is, as a date where one begins then.
+func (a *seriesActing) endOfSpan() string {
+	until := a.act.Until.Time()
+	if a.zone != nil {
+		until = until.In(a.zone)
+	}
+	if h, m, s := until.Clock(); h+m+s == 0 {
+		return until.Format(time.DateOnly)
+	}
+	return until.Format(time.RFC3339)
 }

@@ -82,6 +82,8 @@ func TestSeriesCommands(t *testing.T) {
 		by("change", "quillmere-*/*/fall", "--what", "case definition", "--from", "2026-05-01", "--why", "chairs count too")...))
 	t.Log(s.says(0, []string{"out of service from 2026-04-10 to 2026-04-20"},
 		by("out-of-service", "quillmere-north/*/fall", "--from", "2026-04-10", "--until", "2026-04-20", "--why", "drill")...))
+	t.Log(s.says(0, []string{"out of service from 2026-04-22 to 2026-04-25."},
+		by("out-of-service", "quillmere-north/*/fall", "--from", "2026-04-22", "--for", "3d", "--why", "another drill")...))
 	t.Log(s.says(0, []string{"back in service from 2026-04-15"}, by("back-in-service", "quillmere-north/*/fall", "--from", "2026-04-15")...))
 	t.Log(s.says(0, []string{"events and exposure of 2026-03 signed off"}, by("sign-off", "quillmere-*/*/fall", "--month", "2026-03")...))
 	t.Log(s.says(0, []string{"closing from 2026-04-12 recorded"},
