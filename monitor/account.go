@@ -60,7 +60,10 @@ func (e *Engine) Account() Account {
 	a.RefusedBy = maps.Clone(e.account.RefusedBy)
 	for _, s := range e.series {
 		a.Withheld += s.unpaired
-		for i := range s.cells { // a stub has none
+		if len(s.cells) == 0 || s.needs() == (sides{}) {
+			continue // every slot is known
+		}
+		for i := range s.cells {
 			if c := &s.cells[i]; !s.needs().paired(c) {
 				a.Withheld += int64(c.items)
 			}

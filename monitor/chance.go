@@ -26,6 +26,7 @@ func (e *Engine) KeepChances(known *KnownChances) {
 	if known.under == nil {
 		known.under = map[edgeKey][]keptChance{}
 	}
+	e.rouseAll()
 	e.known = known
 }
 

@@ -57,6 +57,7 @@ func (e *Engine) dismissAlerts(t *tail, ix *indicator) {
 
 // retire makes the series a stub.
 func (s *series) retire() {
+	s.rouse()
 	stub := series{
 		number: s.number, name: s.name, indicator: s.indicator, retired: true, unpaired: s.unpaired,
 		watched: s.watched, touched: s.touched,

@@ -31,6 +31,7 @@ func (e *Engine) Drain() Changes {
 	slices.SortFunc(e.touched, func(a, b *series) int { return cmp.Compare(a.number, b.number) })
 	size := 0
 	for _, s := range e.touched {
+		s.catchUp()
 		patch := e.room.keep(s.encode(e.room.next(), false))
 		size += len(patch)
 		c.Series = append(c.Series, SeriesChange{s.number, patch})
@@ -55,6 +56,7 @@ func (e *Engine) slice(size int) []SeriesChange {
 	var states []SeriesChange
 	for ; e.checkpoint.next < len(e.series) && size > 0; e.checkpoint.next++ {
 		s := e.series[e.checkpoint.next]
+		s.catchUp()
 		state := e.room.keep(s.encode(e.room.next(), true))
 		size -= len(state)
 		states = append(states, SeriesChange{s.number, state})

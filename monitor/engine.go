@@ -276,6 +276,7 @@ func (e *Engine) refuse(m *Message, index int, series string, reason Reason, det
 
 // touch notes that the series' own state changed.
 func (e *Engine) touch(s *series) {
+	s.rouse()
 	if !s.touched {
 		s.touched = true
 		e.touched = append(e.touched, s)

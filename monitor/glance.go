@@ -192,6 +192,7 @@ func (e *Engine) SlotsOf(series string, n int) []SlotView {
 	if s == nil || s.birth == unborn || e.clock == Beginning {
 		return nil
 	}
+	s.catchUp()
 	ix := s.indicator
 	last := ix.cal.Slot(e.clock)
 	if s.sum != nil {

@@ -90,6 +90,7 @@ func (e *Engine) succeedTo(list []change, f *fact) []change {
 
 // inherit links a series to those whose place it takes.
 func (e *Engine) inherit(f *fact, into *series) {
+	into.indicator.inherits = true
 	into.heir = &inheritance{until: into.indicator.firstFrom(f.From)}
 	for _, s := range e.matched(f) {
 		if s.sum == nil && s.indicator == into.indicator {

@@ -51,6 +51,9 @@ type indicator struct {
 	// clocked is what the clock lets expect; exposures is scratch.
 	clocked   clocked
 	exposures []float64
+	resters   resters
+	// inherits says that a series took the place of others.
+	inherits bool
 	// chances sum up the p-values of all looks, if they are asked for.
 	chances [2]Chances
 }

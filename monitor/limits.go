@@ -79,7 +79,7 @@ func (e *Engine) allot(ix *indicator, ep *epoch, boundary int64) {
 	if begins && a.PerIndicator {
 		share = allowance.Share(share, a.Reserve, roundUp(ix.born(boundary)))
 	}
-	for _, s := range ix.series {
+	allotTo := func(s *series) {
 		switch {
 		case s.birth >= boundary:
 		case begins, !a.PerIndicator && ix.rebased(s, ep, boundary):
@@ -88,6 +88,13 @@ func (e *Engine) allot(ix *indicator, ep *epoch, boundary int64) {
 			e.draw(s, ep, boundary)
 			e.firstLimits(s)
 		}
+	}
+	if !begins && !dated(ep.cfg) { // those that rest have limits already
+		e.visits(ix, ix.resters.awake, allotTo)
+		return
+	}
+	for _, s := range ix.series {
+		allotTo(s)
 	}
 }
 

@@ -257,7 +257,7 @@ func (e *Engine) birth(ix *indicator, o *Observation, c *contribution) (Reason, 
 func (e *Engine) enter(ix *indicator, name string) *series {
 	s := &series{
 		number: uint32(len(e.series)), name: name, indicator: ix, birth: unborn,
-		trimmed: -1 << 62, windows: make([]windowState, len(ix.places)), fresh: true,
+		trimmed: -1 << 62, windows: make([]windowState, len(ix.places)), fresh: true, alarm: noAlarm,
 		dates: e.datesOf(ix, name),
 	}
 	s.succeed(e.stubs[s.name])
@@ -265,6 +265,7 @@ func (e *Engine) enter(ix *indicator, name string) *series {
 	e.living++
 	e.byName[s.name] = s
 	ix.series = append(ix.series, s)
+	ix.resters.awake.add(s.number)
 	e.touch(s)
 	if within := ix.cfg.SilentFor(name); within > 0 && !e.passing && e.clock != Beginning {
 		queue.Push(&e.deadlines, deadline{e.clock.Add(within), s})

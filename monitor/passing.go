@@ -14,7 +14,10 @@ type Findings struct {
 // takes the place of Drain, slots that leave memory are not handed over, and
 // Watched says how long and how often each window was looked at. Call it
 // before the first message.
-func (e *Engine) Pass() { e.passing = true }
+func (e *Engine) Pass() {
+	e.rouseAll()
+	e.passing = true
+}
 
 // Findings hands over what was found since the last time, and forgets what a
 // store would have been given.

@@ -16,7 +16,7 @@ func (e *Engine) quick(s *series, ep *epoch, boundary int64, due Instant) bool {
 		return false
 	}
 	b := s.base
-	if b.Strata != nil || b.Delay != nil || b.Spread > 1 && b.Kind == config.Reference || b.Kind == config.Trailing || b.Kind == config.Peers {
+	if !hasEdges(b) {
 		return false
 	}
 	if byClock(cfg) {
@@ -52,6 +52,12 @@ func (e *Engine) quick(s *series, ep *epoch, boundary int64, due Instant) bool {
 		}
 	}
 	return true
+}
+
+// hasEdges reports whether looks judged by the baseline are comparisons of their
+// exposure with an edge that all series share.
+func hasEdges(b *config.Baseline) bool {
+	return b.Strata == nil && b.Delay == nil && (b.Kind == config.Known || b.Kind == config.Reference && b.Spread <= 1)
 }
 
 // plain reports whether windows of the indicator are sums of reported cells of

@@ -159,6 +159,8 @@ func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(st
 	e.living++
 	e.byName[s.name] = s
 	s.indicator.series = append(s.indicator.series, s)
+	s.indicator.resters.awake.add(s.number)
+	s.alarm = noAlarm
 	return nil
 }
 

@@ -10,16 +10,19 @@ func (e *Engine) lookAll(ix *indicator, boundary int64) {
 	ix.fillSums(boundary)
 	e.refresh(ix, ep, boundary)
 	e.allot(ix, ep, boundary)
-	for _, s := range ix.series {
-		if s.birth < boundary {
-			if s.standing(boundary-1) == closed {
-				e.shutDown(s, boundary, due)
-			} else if !e.quick(s, ep, boundary, due) {
-				e.lookAt(s, ep, boundary, due)
-			}
-			e.trim(s)
+	e.beginVisits(ix, ep, boundary)
+	e.visits(ix, ix.resters.visit, func(s *series) {
+		if s.birth >= boundary {
+			return
 		}
-	}
+		if s.standing(boundary-1) == closed {
+			e.shutDown(s, boundary, due)
+		} else if !e.quick(s, ep, boundary, due) {
+			e.lookAt(s, ep, boundary, due)
+		}
+		e.trim(s)
+		e.rest(s, ep, boundary)
+	})
 }
 
 // lookAt makes the looks of one series that fall due at the boundary.

@@ -20,7 +20,9 @@ type series struct {
 	fresh bool
 	// retired says that it is a stub, monitored no longer: nothing is kept of
 	// it but number, name, what unpaired counts and how many alerts there were.
-	retired   bool
+	retired bool
+	// resting says that it is not visited at boundaries before alarm.
+	resting   bool
 	name      string
 	indicator *indicator
 	// birth is the first slot that counts: no window reaches before it.
@@ -31,6 +33,7 @@ type series struct {
 	unpaired int64
 	// seen is the partition's clock when an observation was last counted.
 	seen  Instant
+	alarm int64
 	cells cells
 	// sum is set where the series is one, and sums are those that it is a
 	// member of.
@@ -83,7 +86,9 @@ type windowState struct {
 	made    int64
 	hasMade bool
 	// withheld says why the latest look was not made, since which boundary.
-	withheld      status
+	withheld status
+	// rests is what its looks come to while the series rests.
+	rests         status
 	withheldSince int64
 	// edges are those that the latest look was compared with.
 	edges [2]*edges

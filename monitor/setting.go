@@ -31,6 +31,7 @@ func (e *Engine) set(m *Message) {
 		return
 	}
 	e.account.Settings++
+	e.rouseAll()
 	for _, ix := range e.dismissed(next) {
 		e.dismiss(ix)
 	}

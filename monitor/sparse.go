@@ -65,17 +65,23 @@ func (s *series) quickSpan(cfg *config.Indicator, w int, in *cell, boundary int6
 	if t.exposure.Hi != 0 || t.exposure.Lo == 0 || t.exposure.Lo >= 1<<52 {
 		return false
 	}
-	if b := s.base; b.Kind == config.Known && b.Spread <= 1 && b.Margin >= 1 && limit[upper] < 0.5 {
-		// A count at or under the median has an upper p of a half at least.
-		weighted := float64(t.exposure.Lo) / pow10[cfg.GrainDigits]
-		tested[upper] = tested[upper] && float64(t.events) > b.Rate*weighted-1
-	}
+	tested[upper] = tested[upper] && !surelyUsual(cfg, s.base, limit[upper], &t)
 	for _, d := range bothTails {
 		if tested[d] && !ws.edges[d].clear(s.base, limit[d], &t) {
 			return false
 		}
 	}
 	return true
+}
+
+// surelyUsual reports whether the count is at or under the median of a known rate:
+// then it has an upper p of a half at least.
+func surelyUsual(cfg *config.Indicator, b *config.Baseline, limit float64, t *tally) bool {
+	if b.Kind != config.Known || b.Spread > 1 || b.Margin < 1 || limit >= 0.5 {
+		return false
+	}
+	weighted := float64(t.exposure.Lo) / pow10[cfg.GrainDigits]
+	return float64(t.events) <= b.Rate*weighted-1
 }
 
 // count adds a cell to the sum (sign 1) or takes it off (-1); exposure by the

@@ -162,6 +162,9 @@ func (ix *indicator) fillSums(boundary int64) {
 	for _, sum := range ix.sums {
 		ix.resum(sum, boundary-1, boundary-1)
 	}
+	if !ix.inherits {
+		return
+	}
 	for _, s := range ix.series {
 		if s.inherited(boundary - 1) {
 			ix.resum(s, boundary-1, boundary-1)

@@ -89,13 +89,21 @@ func (ix *indicator) baseline(s *series, cfg *config.Indicator, boundary int64) 
 		return s.base
 	}
 	b := cfg.BaselineAt(s.name, ix.cal.Start(boundary).Time())
-	for i := range cfg.Baselines {
-		if x := &cfg.Baselines[i]; !x.From.IsZero() || !x.To.IsZero() {
-			return b // another one may hold at another time
-		}
+	if dated(cfg) {
+		return b // another one may hold at another time
 	}
 	s.base, s.baseOf = b, cfg
 	return b
+}
+
+// dated reports whether some baseline of the stanza holds for a time only.
+func dated(cfg *config.Indicator) bool {
+	for i := range cfg.Baselines {
+		if b := &cfg.Baselines[i]; !b.From.IsZero() || !b.To.IsZero() {
+			return true
+		}
+	}
+	return false
 }
 
 // referenceAt returns the estimate that was in force for the boundary, nil for

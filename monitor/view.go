@@ -55,7 +55,10 @@ type ViewTail struct {
 // boundary, series (by number) and window. Windows that are still filling are
 // no looks, and looks that are made again are not told: Views shows how they
 // came out. A nil f stops it. f must not call the engine.
-func (e *Engine) OnLook(f func(View)) { e.onLook = f }
+func (e *Engine) OnLook(f func(View)) {
+	e.rouseAll()
+	e.onLook = f
+}
 
 // Views returns the looks of a window of a series whose boundaries lie in
 // [from, to), oldest first, as the data now stand: those that fell due and
@@ -67,6 +70,7 @@ func (e *Engine) Views(series, window string, from, to time.Time) []View {
 	if s == nil || !s.indicator.started || s.birth == unborn {
 		return nil
 	}
+	s.catchUp()
 	ix := s.indicator
 	p := ix.named(window)
 	if p == nil {
