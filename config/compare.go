@@ -156,7 +156,7 @@ func (c *comparison) outlets(a, b []Outlet) {
 func (c *comparison) setup(a, b *Setup) {
 	c.value("name", Rebuild, a.Name, b.Name, "another name is another deployment, with its own streams and store")
 	c.value("folder", Restart, a.Folder, b.Folder, "the store must be moved there first")
-	c.value("partitions", Rebuild, a.Partitions, b.Partitions, "")
+	c.value("partitions", Rebuild, a.Partitions, b.Partitions, "\"tailbell partitions divide\" carries the stream over, while no daemon runs")
 	c.value("key_parts", Rebuild, a.KeyParts, b.KeyParts, "")
 	c.value("time.mode", Restart, modeWord(a), modeWord(b), "")
 	c.path = "bus"

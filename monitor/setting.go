@@ -3,6 +3,7 @@ package monitor
 import (
 	"fmt"
 	"math"
+	"slices"
 	"strings"
 	"time"
 
@@ -18,7 +19,7 @@ func (e *Engine) set(m *Message) {
 		if e.setup.Digest == next.Digest {
 			return // the same again
 		}
-		if why := unfit(e.setup, next); why != "" {
+		if why := e.unfit(next); why != "" {
 			e.account.SettingsRefused++
 			e.refuse(m, 0, "", NeedsRebuild, why, next.Text)
 			return
@@ -39,13 +40,29 @@ func (e *Engine) set(m *Message) {
 	e.settings = append(e.settings, SettingChange{Version: e.version, Digest: next.Digest, Text: next.Text})
 }
 
-// Unfit says why a store under the old set-up can't take the new one; "" if
-// it can.
-func Unfit(old, next *config.Setup) string { return unfit(old, next) }
+// unfit says why the engine can't take the set-up; "" if it can. Of the number
+// of partitions its own counts: those of set-ups from before the stream was
+// divided were others.
+func (e *Engine) unfit(next *config.Setup) string {
+	if next.Partitions == max(1, e.partition.Of) {
+		return Unfit(e.setup, next)
+	}
+	return CannotFollow(e.setup, next)
+}
 
-func unfit(old, next *config.Setup) string {
+// CannotFollow says why no store under the old set-up can take the new one as
+// it stands; "" if one can.
+func CannotFollow(old, next *config.Setup) string { return obstaclesIn(Obstacles(old, next)) }
+
+// Unfit says why a store under the old set-up can't take the new one; "" if
+// it can. The store has the new one's number of partitions.
+func Unfit(old, next *config.Setup) string {
+	return obstaclesIn(slices.DeleteFunc(Obstacles(old, next), func(o Obstacle) bool { return o.Key == "partitions" }))
+}
+
+func obstaclesIn(all []Obstacle) string {
 	var keys []string
-	for _, o := range Obstacles(old, next) {
+	for _, o := range all {
 		keys = append(keys, o.Why)
 	}
 	if len(keys) == 0 {

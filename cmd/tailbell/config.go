@@ -73,7 +73,7 @@ func checkConfig(c *cobra.Command, file, against string) error {
 		if err != nil {
 			return err
 		}
-		if err := printChanges(c, config.Compare(old, setup), monitor.Unfit(old, setup)); err != nil {
+		if err := printChanges(c, config.Compare(old, setup), monitor.CannotFollow(old, setup)); err != nil {
 			return err
 		}
 	}

@@ -51,6 +51,7 @@ type Option func(*options)
 
 type options struct {
 	noListener bool
+	divides    bool
 	log        zerolog.Logger
 	onState    func(State, error)
 }
@@ -58,6 +59,9 @@ type options struct {
 // WithoutListener keeps an embedded bus off the network: no socket, no
 // control.json. Nothing outside the process reaches it.
 func WithoutListener() Option { return func(o *options) { o.noListener = true } }
+
+// ToDivide opens a stream whose division is under way, too: see Divide.
+func ToDivide() Option { return func(o *options) { o.divides = true } }
 
 // WithLog gives the bus a logger. By default it logs nothing.
 func WithLog(l zerolog.Logger) Option { return func(o *options) { o.log = l } }
@@ -88,6 +92,8 @@ type Bus struct {
 	log      zerolog.Logger
 	notes    []string
 	atomic   bool         // the input stream takes atomic batches
+	divides  bool         // a division under way is no obstacle
+	layout   layout       // of the input stream; written while the bus is opened
 	tries    atomic.Int64 // rounds of attempts to come back since the connection was lost
 	denied   atomic.Pointer[denial]
 
@@ -120,10 +126,11 @@ func Open(ctx context.Context, setup *config.Setup, opts ...Option) (*Bus, error
 
 func newBus(setup *config.Setup, o options) *Bus {
 	b := &Bus{
-		setup:  setup,
-		names:  names{setup.Name},
-		closed: make(chan struct{}),
-		log:    o.log.With().Str("part", "bus").Logger(),
+		setup:   setup,
+		names:   names{setup.Name},
+		closed:  make(chan struct{}),
+		divides: o.divides,
+		log:     o.log.With().Str("part", "bus").Logger(),
 	}
 	b.denied.Store(&denial{next: make(chan struct{})})
 	return b

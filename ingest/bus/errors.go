@@ -14,6 +14,9 @@ var (
 	// ErrPartitionsDiffer is returned when the stream was made for another
 	// number of partitions or another number of key parts.
 	ErrPartitionsDiffer = errors.New("the stream's partitions differ from the set-up's")
+	// ErrDividing is returned while the stream is being divided into another
+	// number of partitions.
+	ErrDividing = errors.New("a division is under way")
 	// ErrStreamDiffers is returned when a stream exists whose settings would
 	// lose or change messages, or that is not Tailbell's.
 	ErrStreamDiffers = errors.New("the stream differs from what is needed")

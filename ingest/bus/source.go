@@ -50,6 +50,10 @@ type Source struct {
 	bus    *Bus
 	stream string
 	filter string
+	// carried matches what a division carried over into the partition, up to
+	// the position through; "" for nothing.
+	carried string
+	through uint64
 	// whole says that the filter takes every message of the stream, so that
 	// positions must not jump.
 	whole   bool
@@ -93,11 +97,20 @@ func (b *Bus) Source(ctx context.Context, partition int, after uint64) (*Source,
 	if partition < 0 || partition >= partitions(b.setup) {
 		return nil, fmt.Errorf("%w: %d of %d", ErrNoPartition, partition, partitions(b.setup))
 	}
-	return b.newSource(ctx, b.names.inStream(), b.names.inAll(partition), after, partitions(b.setup) == 1)
+	s := &Source{filter: b.names.inAll(partition), whole: partitions(b.setup) == 1, last: max(after, b.layout.begins-1)}
+	if b.layout.division > 0 {
+		s.carried, s.through = b.names.carriedAll(b.layout.division, partition), b.layout.carried
+	}
+	return b.startSource(ctx, b.names.inStream(), s)
 }
 
 func (b *Bus) newSource(ctx context.Context, stream, filter string, after uint64, whole bool) (*Source, error) {
-	s := &Source{bus: b, stream: stream, filter: filter, whole: whole, last: after, pause: newBackoff()}
+	return b.startSource(ctx, stream, &Source{filter: filter, whole: whole, last: after})
+}
+
+// startSource starts a source that knows what it reads.
+func (b *Bus) startSource(ctx context.Context, stream string, s *Source) (*Source, error) {
+	s.bus, s.stream, s.pause = b, stream, newBackoff()
 	s.states = b.nc.StatusChanged(nats.CONNECTED)
 	if err := s.attach(ctx); err != nil {
 		s.bus.nc.RemoveStatusListener(s.states)
@@ -202,7 +215,7 @@ func (s *Source) accept(msg *nats.Msg) (Raw, bool) {
 	s.pause.tries = 0
 	return Raw{
 		Position: position,
-		Stored:   meta.Timestamp.UTC(),
+		Stored:   s.bus.names.stored(msg.Subject, msg.Header, meta.Timestamp),
 		Subject:  msg.Subject,
 		Header:   msg.Header,
 		Data:     msg.Data,
@@ -229,8 +242,12 @@ func (s *Source) status(msg *nats.Msg) {
 
 // gap counts the positions between the last message and this one.
 func (s *Source) gap(position uint64) {
-	if position > s.last+1 {
-		s.missing.Messages += position - s.last - 1
+	if position <= s.last+1 {
+		return
+	}
+	missing := position - s.last - 1 - s.bus.layout.empty(s.last+1, position-1)
+	if missing > 0 {
+		s.missing.Messages += missing
 		s.missing.From, s.missing.To = s.last+1, position-1
 	}
 }
@@ -327,13 +344,18 @@ func (s *Source) tryAttach(ctx context.Context) error {
 	if err != nil {
 		return fmt.Errorf("encoding a request: %w", err)
 	}
+	filter, filters := s.filter, []string(nil)
+	if s.last < s.through {
+		filter, filters = "", []string{s.filter, s.carried}
+	}
 	_, err = s.bus.js.CreateConsumer(ctx, s.stream, jetstream.ConsumerConfig{
 		Name:              f.consumer,
 		DeliverPolicy:     jetstream.DeliverByStartSequencePolicy,
 		OptStartSeq:       s.last + 1,
 		AckPolicy:         jetstream.AckNonePolicy,
 		MaxDeliver:        1,
-		FilterSubject:     s.filter,
+		FilterSubject:     filter,
+		FilterSubjects:    filters,
 		InactiveThreshold: forgotten,
 		Replicas:          1,
 		MemoryStorage:     true,

@@ -160,13 +160,27 @@ func (b *Bus) accept(want, have jetstream.StreamConfig) error {
 		return fmt.Errorf("%w: the stream %s has format %s, this program knows %s: "+
 			"use the program that made it", ErrStreamDiffers, want.Name, f, streamFormat)
 	}
+	if want.Name == b.names.inStream() {
+		var err error
+		if b.layout, err = layoutOf(have.Metadata); err != nil {
+			return err
+		}
+		if into := have.Metadata[metaDividing]; into != "" && !b.divides {
+			return fmt.Errorf("%w: the stream %s is being divided into %s partitions: "+
+				"go on with \"tailbell partitions divide --into %s\", or give it up with --give-up",
+				ErrDividing, want.Name, into, into)
+		}
+	}
 	for _, key := range []string{metaPartitions, metaKeyParts} {
-		if have.Metadata[key] != want.Metadata[key] {
+		if have.Metadata[key] != want.Metadata[key] && (key != metaPartitions || !b.divides) {
 			return fmt.Errorf("%w: the stream %s has %s = %s, the set-up wants %s: "+
-				"change the set-up back, or give the deployment another name",
+				"change the set-up back, use \"tailbell partitions divide\", or give the deployment another name",
 				ErrPartitionsDiffer, want.Name, strings.TrimPrefix(key, "tailbell-"),
 				have.Metadata[key], want.Metadata[key])
 		}
+	}
+	if b.divides {
+		want.Subjects = have.Subjects
 	}
 	if faults := harmful(want, have); len(faults) > 0 {
 		return fmt.Errorf("%w: the stream %s has %s: change it on the bus, "+
@@ -247,7 +261,8 @@ type Identity struct {
 	Stream  string
 	Created time.Time
 	// First and Last are the sequences of the first and last message; of an
-	// empty stream First is Last + 1.
+	// empty stream First is Last + 1. In a stream that was divided First lies
+	// within what its present partitions have.
 	First, Last uint64
 }
 
@@ -273,6 +288,9 @@ func (b *Bus) identity(ctx context.Context, stream string) (Identity, error) {
 		First:   info.State.FirstSeq,
 		Last:    info.State.LastSeq,
 	}
+	if stream == b.names.inStream() {
+		id.First = max(id.First, b.layout.begins)
+	}
 	if info.State.Msgs == 0 {
 		id.First = id.Last + 1
 	}
@@ -289,7 +307,7 @@ func (b *Bus) End(ctx context.Context) (uint64, error) {
 // EndOf returns the position of the last message of the partition that the
 // stream holds now, 0 if it holds none.
 func (b *Bus) EndOf(ctx context.Context, partition int) (uint64, error) {
-	raw, _, err := b.last(ctx, b.names.inAll(partition))
+	raw, _, err := b.lastIn(ctx, b.names.inAll(partition), b.names.carriedAll(b.layout.division, partition))
 	return raw.Position, err
 }
 
@@ -316,13 +334,23 @@ func (b *Bus) at(ctx context.Context, stream string, position uint64) (Raw, erro
 	if err != nil {
 		return Raw{}, fmt.Errorf("reading message %d: %w", position, mapped(err))
 	}
-	return rawOf(msg), nil
+	return b.rawOf(msg), nil
 }
 
 // LastSetting returns the partition's last setting; found is false if the
 // stream holds none.
 func (b *Bus) LastSetting(ctx context.Context, partition int) (raw Raw, found bool, err error) {
-	return b.last(ctx, b.names.in(partition, Setting))
+	return b.lastIn(ctx, b.names.in(partition, Setting), b.names.carried(b.layout.division, partition, Setting))
+}
+
+// lastIn returns the last message of the present partitions on a subject, or
+// if there is none the last one that a division carried over.
+func (b *Bus) lastIn(ctx context.Context, subject, carried string) (raw Raw, found bool, err error) {
+	raw, found, err = b.last(ctx, subject)
+	if b.layout.division == 0 || err != nil || found && raw.Position >= b.layout.begins {
+		return raw, found, err
+	}
+	return b.last(ctx, carried)
 }
 
 // last returns the last message on a subject of the input stream.
@@ -346,15 +374,5 @@ func (b *Bus) lastOf(ctx context.Context, subject string) (Raw, bool, error) {
 	if err != nil {
 		return Raw{}, false, fmt.Errorf("reading the last message on %s: %w", subject, mapped(err))
 	}
-	return rawOf(msg), true, nil
-}
-
-func rawOf(msg *jetstream.RawStreamMsg) Raw {
-	return Raw{
-		Position: msg.Sequence,
-		Stored:   msg.Time.UTC(),
-		Subject:  msg.Subject,
-		Header:   msg.Header,
-		Data:     msg.Data,
-	}
+	return b.rawOf(msg), true, nil
 }

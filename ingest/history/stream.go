@@ -36,7 +36,7 @@ func ReadStream(ctx context.Context, b *bus.Bus, setup *config.Setup, from Range
 	s := &streamReader{reader: newReader(opts), from: from, clock: monitor.Beginning}
 	s.path = streamName
 	// What was trimmed or has expired held the message that ended history time.
-	s.live = id.First > 1 && !setup.History
+	s.live = id.First > b.Begins() && !setup.History
 	raws, err := s.gather(ctx, b, setup, id.Last)
 	if err != nil {
 		return nil, err

@@ -69,6 +69,10 @@ func Open(ctx context.Context, b *bus.Bus, setup *config.Setup, number int, o Op
 	return newIntake(s, setup, o), nil
 }
 
+// Over reads what a source gives, instead of a partition of the bus. It closes
+// the source.
+func Over(s *bus.Source, setup *config.Setup, o Options) *Intake { return newIntake(s, setup, o) }
+
 func newIntake(s source, setup *config.Setup, o Options) *Intake {
 	if o.Gap == nil {
 		o.Gap = func(bus.Missing) {}
