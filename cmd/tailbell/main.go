@@ -126,7 +126,7 @@ Silence is no proof of safety. Local policy decides.`,
 	root.AddCommand(
 		newAlertCommand(), newSeriesCommand(), newBaselineCommand(), newClockCommand(), newConfigCommand(), newDemoCommand(), newExactCommand(), newFeedCommand(), newLimitsCommand(),
 		newOutletCommand(), newRefusedCommand(), newRehearseCommand(), newReplayCommand(), newReportCommand(), newRunCommand(), newStatusCommand(), newStoreCommand(), newStreamCommand(),
-		newUserCommand(),
+		newUserCommand(), newPartitionsCommand(),
 	)
 	checkArguments(root)
 	return root

@@ -120,6 +120,9 @@ func (d *Division) change(ctx context.Context, info *jetstream.StreamInfo, edit 
 	return d.info(ctx)
 }
 
+// Number counts the divisions of the stream, this one included.
+func (d *Division) Number() uint64 { return d.division }
+
 // Before is the last position of the old partitions.
 func (d *Division) Before() uint64 { return d.begins - 1 }
 

@@ -58,6 +58,7 @@ func TestDivision(t *testing.T) {
 }
 
 func testDivision(t *testing.T, atomic bool) {
+	t.Helper()
 	setup := with(bustest.Setup(t), 2)
 	b := open(t, setup)
 	publish(t, b, 0, 1, 3)

@@ -115,6 +115,9 @@ func (b *Bus) rawOf(msg *jetstream.RawStreamMsg) Raw {
 	}
 }
 
+// Divisions is how often the stream was divided.
+func (b *Bus) Divisions() uint64 { return b.layout.division }
+
 // Begins is the first position of the present partitions: 1 unless the stream
 // was divided.
 func (b *Bus) Begins() uint64 { return b.layout.begins }

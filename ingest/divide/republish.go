@@ -150,9 +150,15 @@ func (r *republisher) piece(ctx context.Context, p *piece) error {
 			r.result.Settings++
 		case bus.Observation, bus.Tick:
 		}
+		history := r.live[g] < feeders
+		if parcel.blind && history && p.clock != monitor.Beginning {
+			if err := r.send(ctx, tickAt(parcel.partition, p.clock), p.raw.Stored); err != nil {
+				return err
+			}
+		}
 		err := r.send(ctx, bus.Outgoing{
 			Partition: parcel.partition, Kind: parcel.kind, Data: parcel.data,
-			Header: p.header(parcel.whole, r.live[g] < feeders),
+			Header: p.header(parcel.whole, history),
 		}, p.raw.Stored)
 		if err != nil {
 			return err
@@ -172,6 +178,11 @@ func (r *republisher) bringUp(ctx context.Context, g int) error {
 	default:
 		return r.all(ctx, g, r.stored[g], map[string][]string{wire.TimeHeader: {wire.FormatTime(clock)}})
 	}
+}
+
+// tickAt is a tick that brings the clock of history time to a moment.
+func tickAt(partition int, clock monitor.Instant) bus.Outgoing {
+	return bus.Outgoing{Partition: partition, Kind: bus.Tick, Header: map[string][]string{wire.TimeHeader: {wire.FormatTime(clock)}}}
 }
 
 // all sends a tick to every new partition of a group.

@@ -73,6 +73,8 @@ type parcel struct {
 	kind      bus.Kind
 	data      []byte
 	whole     bool // the message as it was, with its headers
+	// blind says that nothing in it moves a clock: it is refused whole.
+	blind bool
 }
 
 // parcels are what a piece becomes.
@@ -85,7 +87,7 @@ func (r *router) parcels(p *piece) []parcel {
 	case monitor.SettingMessage:
 		return r.once(p, bus.Setting, r.fed(p.lane.number))
 	case monitor.Rejected:
-		return []parcel{{p.lane.number % r.to, kindOf(p.raw), p.raw.Data, true}}
+		return []parcel{{p.lane.number % r.to, kindOf(p.raw), p.raw.Data, true, true}}
 	case monitor.Tick, monitor.Live:
 	}
 	return nil
@@ -123,7 +125,8 @@ func (r *router) observations(p *piece) []parcel {
 			home = targets[i]
 		}
 	}
-	if home < 0 {
+	blind := home < 0
+	if blind {
 		home = p.lane.number % r.to
 	}
 	for i := range items {
@@ -133,7 +136,7 @@ func (r *router) observations(p *piece) []parcel {
 		whole = whole && targets[i] == home
 	}
 	if whole {
-		return []parcel{{home, bus.Observation, p.raw.Data, true}}
+		return []parcel{{home, bus.Observation, p.raw.Data, true, blind}}
 	}
 	return r.split(items, targets)
 }
@@ -163,7 +166,7 @@ func (r *router) split(items []monitor.Item, targets []int) []parcel {
 			continue
 		}
 		if it.Reason != "" {
-			all = append(all, parcel{to, bus.Observation, alone(it.Raw), false})
+			all = append(all, parcel{to, bus.Observation, alone(it.Raw), false, true})
 			continue
 		}
 		line := oneLine(it.Raw)
@@ -172,7 +175,7 @@ func (r *router) split(items []monitor.Item, targets []int) []parcel {
 			continue
 		}
 		open[to] = len(all)
-		all = append(all, parcel{to, bus.Observation, bytes.Clone(line), false})
+		all = append(all, parcel{to, bus.Observation, bytes.Clone(line), false, false})
 	}
 	return all
 }
@@ -204,7 +207,7 @@ func (r *router) act(p *piece) []parcel {
 	if act.Alert != "" {
 		known := false
 		if series, known = r.alertSeries(partition, act.Alert); !known {
-			return []parcel{{partition % r.to, bus.Act, p.raw.Data, true}} // refused there as here
+			return []parcel{{partition % r.to, bus.Act, p.raw.Data, true, false}} // refused there as here
 		}
 	}
 	if r.many(series) {
@@ -218,7 +221,7 @@ func (r *router) act(p *piece) []parcel {
 		r.leftOut++
 		return nil
 	}
-	return []parcel{{to, bus.Act, p.raw.Data, true}}
+	return []parcel{{to, bus.Act, p.raw.Data, true, false}}
 }
 
 // many reports whether series of several partitions may be meant.
@@ -244,7 +247,7 @@ func (r *router) once(p *piece, kind bus.Kind, to []int) []parcel {
 	r.carried[ours]++
 	all := make([]parcel, len(to))
 	for i, q := range to {
-		all[i] = parcel{q, kind, p.raw.Data, true}
+		all[i] = parcel{q, kind, p.raw.Data, true, false}
 	}
 	return all
 }

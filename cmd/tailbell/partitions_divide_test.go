@@ -1,0 +1,224 @@
+package main
+
+import (
+	"encoding/json"
+	"errors"
+	"fmt"
+	"io/fs"
+	"os"
+	"path/filepath"
+	"slices"
+	"strings"
+	"syscall"
+	"testing"
+	"time"
+
+	"github.com/google/go-cmp/cmp"
+
+	"tailbell/config"
+	"tailbell/ingest/bus"
+	"tailbell/ingest/wire"
+	"tailbell/monitor"
+	"tailbell/monitor/rehearse/ordeal"
+)
+
+// together is what several partitions hold, but for what depends on how many
+// there are: copies of acts and set-ups, and positions.
+func together(parts ...*outcome) *outcome {
+	all := &outcome{}
+	for _, o := range parts {
+		all.Account = all.Account.Add(o.Account)
+		all.Slots = append(all.Slots, o.Slots...)
+		all.Records = append(all.Records, o.Records...)
+		for _, r := range o.Refused {
+			r.Position, r.Index = 0, 0
+			if r.Reason == monitor.BeyondHorizon || r.Reason == monitor.Stray {
+				r.Detail = "" // it names the header's time, and the partition
+			}
+			all.Refused = append(all.Refused, r)
+		}
+	}
+	all.Slots = merged(nil, all.Slots)
+	slices.Sort(all.Records)
+	slices.SortFunc(all.Refused, func(a, b monitor.Refusal) int { return cmpText(fmt.Sprint(a), fmt.Sprint(b)) })
+	all.Account.Acts, all.Account.ActsRefused, all.Account.Settings = 0, 0, 0
+	return all
+}
+
+func allStored(t *testing.T, setup *config.Setup) *outcome {
+	t.Helper()
+	var parts []*outcome
+	for n := range setup.Partitions {
+		parts = append(parts, stored(t, setup, n))
+	}
+	return together(parts...)
+}
+
+// TestDivideOrdeal carries a plan with all that may go wrong through several
+// numbers of partitions. Every alert's record stays as it was to the byte, every
+// slot, and every refusal.
+func TestDivideOrdeal(t *testing.T) {
+	seed := uint64(time.Now().UnixNano())
+	t.Logf("seed %d", seed)
+	plan, err := ordeal.Generate(seed, ordeal.Options{Days: 90, Settings: 2})
+	if err != nil {
+		t.Fatal(err)
+	}
+	folder := filepath.Join(t.TempDir(), "data")
+	path := filepath.Join(filepath.Dir(folder), "tailbell.toml")
+	write := func(text []byte) *config.Setup {
+		t.Helper()
+		if err := os.WriteFile(path, fmt.Appendf(nil, "folder = %q\n%s", folder, text), 0o600); err != nil {
+			t.Fatal(err)
+		}
+		setup, err := config.Load(path)
+		if err != nil {
+			t.Fatal(err)
+		}
+		return setup
+	}
+	setup := write(plan.Setups[0])
+	b, err := bus.Open(t.Context(), setup, bus.WithoutListener())
+	if err != nil {
+		t.Fatal(err)
+	}
+	var batch []bus.Outgoing
+	for _, m := range plan.Messages {
+		switch m.Kind {
+		case ordeal.Setting:
+			for p := range 2 {
+				batch = append(batch, bus.Outgoing{Partition: p, Kind: bus.Setting, Data: plan.Setups[m.Setup]})
+			}
+		case ordeal.Act:
+			batch = append(batch, bus.Outgoing{Partition: m.Partition, Kind: bus.Act, Data: m.Data})
+		case ordeal.Observations:
+			batch = append(batch, bus.Outgoing{Partition: m.Partition, Data: m.Data})
+		}
+	}
+	// What came to the wrong partition is refused there, and stays refused.
+	batch = append(batch, bus.Outgoing{Partition: 1, Data: fmt.Appendf(nil, `{"series":%q,"at":"2025-01-02T00:00:00Z","events":1}`, ordeal.Sites[0]+"/ward-1/fall")})
+	// Both stand at one time in the end, as a feed leaves them.
+	for p := range 2 {
+		batch = append(batch, bus.Outgoing{Partition: p, Kind: bus.Tick, Header: map[string][]string{wire.TimeHeader: {"2025-05-01T00:00:00Z"}}})
+	}
+	if _, err := b.PublishBatch(t.Context(), batch); err != nil {
+		t.Fatal(err)
+	}
+	want := together(undisturbed(t, 0, everything(t, b, 0)), undisturbed(t, 1, everything(t, b, 1)))
+	if len(want.Records) < 5 || len(want.Refused) < 5 || want.Account.RefusedBy["stray"] != 1 {
+		t.Fatalf("there is too little to compare: %d records, %d refusals", len(want.Records), len(want.Refused))
+	}
+	if err := b.Close(); err != nil {
+		t.Fatal(err)
+	}
+	for _, into := range []int{4, 6, 3} {
+		code, out, complaint := run(t, "partitions", "divide", "--into", fmt.Sprint(into), "--config", path)
+		if code != 0 || !strings.Contains(out, "balance") {
+			t.Fatalf("into %d: exit code %d\n%s%s", into, code, out, complaint)
+		}
+		setup = write(config.WithPartitions(plan.Setups[2], into))
+		compareOutcomes(t, fmt.Sprintf("into %d", into), want, allStored(t, setup))
+	}
+}
+
+// TestDivide grows a deployment at work: outlets are told nothing twice, and the
+// daemon goes on.
+func TestDivide(t *testing.T) {
+	setup := edited(t, wardSetup(t), "two.toml", `series = ["quillmere-east/*/fall"]`, `series = ["quillmere-*/*/fall"]`)
+	s := newService(t, setup)
+	s.start()
+	for ago := 25; ago > 3; ago-- {
+		s.publish(day(1, ago, 2), day(2, ago, ago%2), `{"broken"`, strings.Replace(day(1, ago, ago%3), "east", "west", 1))
+	}
+	s.reaches(s.publish(day(3, 20, 0)))
+	_, alerts, _ := run(t, "alert", "list", "--json", "--config", setup)
+	var rang []struct{ ID string }
+	if err := json.Unmarshal([]byte(alerts), &rang); err != nil || len(rang) == 0 {
+		t.Fatalf("%v: nothing rang: %s", err, alerts)
+	}
+	s.says(0, nil, "alert", "acknowledge", rang[0].ID, "--by", "Ann Example")
+	s.says(1, []string{"in use"}, "partitions", "divide", "--into", "3")
+	s.stop(syscall.SIGTERM)
+	before := s.stdout.String()
+	_, alerts, _ = run(t, "alert", "list", "--all", "--json", "--config", setup)
+
+	s.says(2, []string{"--into is missing"}, "partitions", "divide")
+	s.says(0, []string{"1 partition into 3", "equal to the byte", "partitions = 3"}, "partitions", "divide", "--into", "3")
+	s.says(0, []string{"has 3 partitions already"}, "partitions", "divide", "--into", "3")
+	if code, complaint := refusesToRun(t, setup); code != 1 || !strings.Contains(complaint, "partitions") {
+		t.Errorf("the old set-up after the division: exit code %d, %s", code, complaint)
+	}
+	three := edited(t, setup, "three.toml", `folder = "data"`, "folder = \"data\"\npartitions = 3")
+	s.path = three
+	s.start()
+	_, after, _ := run(t, "alert", "list", "--all", "--json", "--config", three)
+	var old, now []map[string]any
+	if err := errors.Join(json.Unmarshal([]byte(alerts), &old), json.Unmarshal([]byte(after), &now)); err != nil {
+		t.Fatal(err)
+	}
+	byID := func(a, b map[string]any) int { return cmpText(fmt.Sprint(a["id"]), fmt.Sprint(b["id"])) }
+	slices.SortFunc(old, byID)
+	slices.SortFunc(now, byID)
+	if diff := cmp.Diff(old, now); diff != "" {
+		t.Errorf("alerts (-before +after):\n%s", diff)
+	}
+	if said := strings.TrimPrefix(s.stdout.String(), before); said != "" {
+		t.Errorf("told again:\n%s", said)
+	}
+	// Acts and observations reach the new partitions.
+	s.says(0, nil, "alert", "note", rang[0].ID, "--by", "Ann Example", "--why", "seen")
+	status, _ := s.status()
+	for _, p := range status.Partitions {
+		if p.History || len(p.Outlets) != 2 {
+			t.Errorf("partition %d: %+v", p.Number, p)
+		}
+	}
+	s.stop(syscall.SIGTERM)
+}
+
+// TestDivideBreaksOff stops a division at every stage: it goes on, or is given
+// up.
+func TestDivideBreaksOff(t *testing.T) {
+	path := wardSetup(t)
+	setup, err := config.Load(path)
+	if err != nil {
+		t.Fatal(err)
+	}
+	b, err := bus.Open(t.Context(), setup, bus.ToDivide(), bus.WithoutListener())
+	if err != nil {
+		t.Fatal(err)
+	}
+	announce := []bus.Outgoing{{Kind: bus.Setting, Data: setup.Text}, {Data: []byte(day(1, 9, 1))}, {Data: []byte(day(2, 9, 1))}}
+	if _, err := b.PublishBatch(t.Context(), announce); err != nil {
+		t.Fatal(err)
+	}
+	if _, err := b.Divide(t.Context(), 2); err != nil { // it has only begun
+		t.Fatal(err)
+	}
+	if err := b.Close(); err != nil {
+		t.Fatal(err)
+	}
+	if code, complaint := refusesToRun(t, path); code != 1 || !strings.Contains(complaint, "--into 2") {
+		t.Errorf("exit code %d, %s", code, complaint)
+	}
+	says(t, 1, []string{"into 2 partitions"}, "partitions", "divide", "--into", "3", "--config", path)
+	says(t, 0, []string{"as it was"}, "partitions", "divide", "--give-up", "--config", path)
+	says(t, 0, []string{"No division"}, "partitions", "divide", "--give-up", "--config", path)
+	if _, err := os.Stat(filepath.Join(setup.Folder, "division-1")); !errors.Is(err, fs.ErrNotExist) {
+		t.Errorf("something is left: %v", err)
+	}
+	says(t, 0, []string{"2 elements with 2 events balance"}, "partitions", "divide", "--into", "2", "--config", path)
+
+	// The stream is divided, but the stores were not moved yet.
+	place := placeOf(setup, 1)
+	if err := place.make(); err != nil {
+		t.Fatal(err)
+	}
+	if err := os.Rename(storePath(setup, 1), place.draft(1)); err != nil {
+		t.Fatal(err)
+	}
+	says(t, 0, []string{"partitions = 2"}, "partitions", "divide", "--into", "2", "--config", path)
+	if _, err := os.Stat(storePath(setup, 1)); err != nil {
+		t.Error(err)
+	}
+}
