@@ -105,6 +105,7 @@ func (s section) checkModel(in *Indicator, b *Baseline) {
 		s.fault("strata", "a stated reference does not say in which strata its trials were made, and odds can't be averaged over them",
 			`use kind = "known", "trailing" or "peers"`)
 	}
+	s.checkAlike(in, b)
 	if b.Delay == nil {
 		return
 	}

@@ -264,7 +264,7 @@ func (c *comparison) horizon(a, b *Indicator) {
 
 func (c *comparison) windows(a, b *Indicator) {
 	for _, w := range a.Windows {
-		switch after := windowOf(b, w.Slots); {
+		switch after := windowOf(b, &w); {
 		case after == nil:
 			c.value("windows", NextLook, windowText(&w), "", "it is looked at no longer, and has no say any more in whether an alert still signals")
 		case after.Step != w.Step:
@@ -274,22 +274,28 @@ func (c *comparison) windows(a, b *Indicator) {
 		}
 	}
 	for _, w := range b.Windows {
-		if windowOf(a, w.Slots) == nil {
+		if windowOf(a, &w) == nil {
 			c.value("windows", Filling, "", windowText(&w), "it is looked at once what is kept and what comes fill it")
 		}
 	}
 }
 
-func windowOf(in *Indicator, slots int) *Window {
+// windowOf is the window of the same length, nil if there is none.
+func windowOf(in *Indicator, w *Window) *Window {
 	for i := range in.Windows {
-		if in.Windows[i].Slots == slots {
+		if in.Windows[i].Slots == w.Slots && in.Windows[i].Trials == w.Trials {
 			return &in.Windows[i]
 		}
 	}
 	return nil
 }
 
-func windowText(w *Window) string { return fmt.Sprintf("%s, a look every %d slots", w.Name, w.Step) }
+func windowText(w *Window) string {
+	if w.Trials > 0 {
+		return "the last " + w.Name
+	}
+	return fmt.Sprintf("%s, a look every %d slots", w.Name, w.Step)
+}
 
 func measureWord(in *Indicator) string {
 	if in.Measure == Proportion {

@@ -146,7 +146,9 @@ func (in *Indicator) looksPerYear(w *Window) float64 {
 func (in *Indicator) chanceSignals() float64 {
 	looks := 0.0
 	for i := range in.Windows {
-		looks += in.looksPerYear(&in.Windows[i])
+		if in.Windows[i].Trials == 0 {
+			looks += in.looksPerYear(&in.Windows[i])
+		}
 	}
 	return looks * in.PLimit * float64(len(tailWords(in)))
 }

@@ -6,6 +6,10 @@ import (
 )
 
 func (p *prose) window(in *Indicator, w *Window) {
+	if w.Trials > 0 || in.Measure == Proportion && in.ArrivalLooks {
+		p.trialWindow(in, w)
+		return
+	}
 	if in.SlotLooks {
 		p.line("  Window %s: looked at every %s, %s a year.", w.Name, spanWords(in.slotLength(w.Step)), aboutMany(in.looksPerYear(w), "look"))
 	}
@@ -23,7 +27,7 @@ func (p *prose) limit(in *Indicator) {
 	}
 	quiet := counted(in.Quiet, "look") + " in a row without a signal"
 	if !in.SlotLooks {
-		quiet = counted(in.Quiet, "slot") + " in a row by whose end no span signals any more"
+		quiet = counted(in.Quiet, "slot") + " in a row by whose end no window signals any more"
 	}
 	p.line("  Alerts return after %s. Bounds are shown at %s%% confidence.", quiet, number(100-100*in.Alpha))
 }
@@ -39,8 +43,8 @@ func (p *prose) tails(in *Indicator) {
 	p.line("  A look signals when the chance of %s is at most %s if the usual rate holds: at most one look in %s does so by chance%s.",
 		tails, number(in.PLimit), about(1/in.PLimit), each)
 	if in.SlotLooks {
-		p.line("  That is at most %s signalling looks by chance a year and series; neighbouring looks share their data, so alerts are fewer.",
-			about(in.chanceSignals()))
+		p.line("  That is at most %s signalling looks %sby chance a year and series; neighbouring looks share their data, so alerts are fewer.",
+			about(in.chanceSignals()), atSlots(in))
 	}
 }
 

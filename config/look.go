@@ -14,6 +14,7 @@ func (s section) readLook(in *Indicator) {
 	in.Upper, in.Lower = s.readTails()
 	in.SlotLooks, in.ArrivalLooks = s.readLooks()
 	s.checkArrival(in)
+	s.checkTrials(in)
 	if !s.has("allowance") {
 		in.PLimit = usualLimit
 	}
@@ -124,10 +125,10 @@ func (s section) checkArrival(in *Indicator) {
 	if in.Events != Each {
 		s.fault("looks", "arrival looks need the moment of each event, and counts are reported for whole slots", `write events = "each", or looks = "slot"`)
 	}
-	switch in.Every.Unit {
-	case Month, Year:
+	switch unit := in.Every.Unit; {
+	case in.Measure == Proportion: // its last trials have no length
+	case unit == Month, unit == Year:
 		s.fault("looks", "a span that ends at an event has a fixed length, and months and years have none", `write e.g. every = "1d" and windows in days, or looks = "slot"`)
-	case Minute, Hour, Day, Week:
 	}
 	for i := range in.Windows {
 		if w := &in.Windows[i]; w.Step > 1 && !in.SlotLooks {
@@ -135,10 +136,7 @@ func (s section) checkArrival(in *Indicator) {
 			break
 		}
 	}
-	switch {
-	case in.Measure == Proportion:
-		s.fault("looks", "arrival looks need exposure at every moment, and a proportion has trials only: its last n trials can't be looked at yet", `write looks = "slot"`)
-	case in.Exposure == Reported:
+	if in.Measure == Rate && in.Exposure == Reported {
 		s.fault("looks", "arrival looks need exposure at every moment, and it is reported for whole slots",
 			`write exposure = "clock" or "census", or looks = "slot"`)
 	}

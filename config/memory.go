@@ -10,6 +10,7 @@ const (
 	bytesPerCell   = 104  // a slot: its sums, who speaks for them, and room for the next ones
 	bytesPerLook   = 24   // a look of one window that late data may still re-run
 	bytesPerID     = 320  // an observation id with what it said
+	bytesPerTrial  = 40   // a trial of a window of the last trials, at a moment of its own
 )
 
 // Memory is the estimate of what a daemon holds when it is full.
@@ -26,12 +27,13 @@ type Memory struct {
 
 // Memory estimates what a daemon with this set-up holds when it is full:
 //
-//	series = 1024 + 104 (kept + horizon) + 24 (horizon) (sum over windows of 1/step)
+//	series = 1024 + 104 (kept + horizon) + 24 (horizon) (sum over windows of 1/step) + 40 trials
 //	total  = MaxSeries x the dearest series + 320 MaxIDs
 //
 // in slots, where kept is the longest window or, if that is more, the longest
-// refresh, gap and span together of a trailing or peers baseline. Ids cost
-// nothing if no indicator keeps them.
+// refresh, gap and span together of a trailing or peers baseline, and trials are
+// those of the longest window of the last trials. Ids cost nothing if no indicator
+// keeps them.
 func (s *Setup) Memory() Memory {
 	var m Memory
 	var dearest int64
@@ -56,7 +58,11 @@ func (in *Indicator) memory() int64 {
 	for _, w := range in.Windows {
 		looks += horizon/w.Step + 1
 	}
-	return bytesPerSeries + int64(in.keptSlots()+horizon)*bytesPerCell + int64(looks)*bytesPerLook
+	trials := int64(0)
+	for _, w := range in.Windows {
+		trials = max(trials, w.Trials)
+	}
+	return bytesPerSeries + trials*bytesPerTrial + int64(in.keptSlots()+horizon)*bytesPerCell + int64(looks)*bytesPerLook
 }
 
 // checkMemory refuses a set-up whose estimate is over its own limit.

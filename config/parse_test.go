@@ -125,7 +125,8 @@ func checkSetup(t *testing.T, s *Setup) {
 			t.Errorf("accepted %+v", in)
 		}
 		for _, w := range in.Windows {
-			if w.Slots < 1 || w.Step < 1 || w.Step > w.Slots {
+			trials := w.Trials > 0 && w.Slots == 0 && w.Step == 1 && in.Measure == Proportion && in.ArrivalLooks
+			if !trials && (w.Trials != 0 || w.Slots < 1 || w.Step < 1 || w.Step > w.Slots) {
 				t.Errorf("accepted %+v", w)
 			}
 		}

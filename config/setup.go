@@ -198,13 +198,17 @@ type Allowance struct {
 	Reserve float64
 }
 
-// Window is a rolling span of whole slots.
+// Window is a rolling span of whole slots, or the last so many trials.
 type Window struct {
-	// Name is the span as written, e.g. "28d".
+	// Name is the span as written, e.g. "28d" or "200 trials".
 	Name string
-	// Slots is the length and Step the distance between two looks, in slots.
+	// Slots is the length and Step the distance between two looks, in slots; 0 and 1
+	// of the last trials.
 	Slots int
 	Step  int
+	// Trials, if not 0, makes it the last so many trials of a proportion, looked at
+	// when events come.
+	Trials int64
 }
 
 // ClockExposure is Size units of exposure for every Per of elapsed time.

@@ -22,6 +22,8 @@ func (s section) readHistory(in *Indicator, b *Baseline) {
 		b.GapSlots = in.longestWindow()
 		if n := s.node.fields["gap"]; n != nil {
 			b.GapSlots, _ = s.slots(n, s.key("gap"), in.Every)
+		} else if b.GapSlots == 0 && len(in.Windows) > 0 {
+			s.fault("gap", "is missing: how long the last trials take is not known beforehand, and the history must end before them", `write about as long as the longest window takes, e.g. gap = "60d"`)
 		}
 	}
 	b.Refresh = s.readRefresh(in.Every)

@@ -18,7 +18,7 @@ func (s section) readWindows(every Every) []Window {
 			continue
 		}
 		for _, other := range windows {
-			if other.Slots == w.Slots {
+			if other.Slots == w.Slots && other.Trials == w.Trials {
 				s.add(n, s.item("windows", i), fmt.Sprintf("%q is as long as %q", w.Name, other.Name), "keep one")
 			}
 		}
@@ -27,12 +27,19 @@ func (s section) readWindows(every Every) []Window {
 	return windows
 }
 
-// readWindow reads one window: a span, or a table with a span and a step.
+// readWindow reads one window: a span, so many trials, or a table with a span and
+// a step.
 func (s section) readWindow(n *node, key string, every Every) (Window, bool) {
 	w := Window{Step: 1}
 	span, step := n, (*node)(nil)
 	switch n.kind {
 	case textKind:
+		if trials, problem, ok := parseTrials(n.text); ok {
+			if problem != "" {
+				s.add(n, key, fmt.Sprintf("%q %s", n.text, problem), `write e.g. "200 trials"`)
+			}
+			return Window{Name: n.text, Step: 1, Trials: trials}, problem == ""
+		}
 	case tableKind:
 		t := section{s.collector, n, key}
 		t.strict("a window")
