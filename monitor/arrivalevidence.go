@@ -3,6 +3,7 @@ package monitor
 import (
 	"math"
 
+	"tailbell/config"
 	"tailbell/exact"
 	"tailbell/monitor/arrival"
 	"tailbell/monitor/life"
@@ -25,12 +26,13 @@ func (e *Engine) evidenceOf(s *series, d direction, key lookKey, o occasion) lif
 	return e.arrivalEvidence(s, key.window, o.at)
 }
 
-// arrivalEvidence is evidence for the span of a window that ends at a moment.
+// arrivalEvidence is evidence for a window that ends at a moment.
 func (e *Engine) arrivalEvidence(s *series, window int, at Instant) life.Evidence {
 	ix := s.indicator
 	judging := ix.judging(at)
 	ep := ix.epochAt(judging)
-	from := at - ix.widthOf(window)
+	w := ix.arrivalWindow(window)
+	from, _ := ix.windowFrom(s, w, at)
 	l := look{window: window}
 	ix.measureSpan(s, &l, from, at)
 	u, ok := ix.arrivalJudgedBy(s, window, judging)
@@ -38,10 +40,19 @@ func (e *Engine) arrivalEvidence(s *series, window int, at Instant) life.Evidenc
 		panic("monitor: evidence of a look without a baseline")
 	}
 	o := ix.spanOpportunity(s, &u, l.exposure, from, at)
-	ev := e.tell(s, upper, ep, judging, &seen{window, from, at, at, l.tally, u, o})
+	ev := e.tell(s, upper, ep, judging, &seen{window, w.shownFrom(from), at, at, l.tally, u, o})
 	ev.SignedOff = ix.isSigned(s, ix.cal.Slot(from), ix.cal.Slot(at)+1)
 	ev.Wait = ix.waitOf(s, &u, ev.Critical, at)
 	return ev
+}
+
+// shownFrom is where a window begins as people are told: where the span does, which
+// is not in it, or the moment of its oldest trial.
+func (w arrivalWindow) shownFrom(from Instant) Instant {
+	if w.trials > 0 {
+		return from + 1
+	}
+	return from
 }
 
 // waitOf says how long the latest events took: as many as signal.
@@ -69,7 +80,7 @@ func (ix *indicator) waitOf(s *series, u *usual, critical int64, at Instant) *li
 	r.Events, r.First, r.Exposure = critical, &t, l.exposure.decimal(u.cfg.GrainDigits)
 	usual := u.rate()
 	r.Usual = float64(critical-1) / usual
-	if u.ref == nil && u.base.Spread <= 1 && single(log, since, at) {
+	if u.cfg.Measure == config.Rate && u.ref == nil && u.base.Spread <= 1 && single(log, since, at) {
 		p := exact.Wait{Events: critical - 1, Rate: usual * u.margin(upper)}.Within(o.weighted)
 		r.P = &p
 	}
@@ -94,7 +105,8 @@ func (e *Engine) idsOf(s *series, l *look) (ids []string, more int) {
 		return s.idsIn(ix.spanFrom(s, l.boundary, ix.places[l.window].Slots), l.boundary)
 	}
 	at := l.occasion.at
-	from := ix.cutFrom(s, at-ix.widthOf(l.window), at)
+	from, _ := ix.windowFrom(s, ix.arrivalWindow(l.window), at)
+	from = ix.cutFrom(s, from, at)
 	site := siteOf(s.name)
 	for _, c := range s.cells.between(ix.cal.Slot(from), l.boundary) {
 		if s.dates.isOut(c.slot) {
@@ -118,11 +130,12 @@ func (e *Engine) idsOf(s *series, l *look) (ids []string, more int) {
 func (ix *indicator) arrivalView(s *series, ep *epoch, l *look) View {
 	cfg := ep.cfg
 	at := l.occasion.at
-	from := at - ix.widthOf(l.window)
+	w := ix.arrivalWindow(l.window)
+	from, _ := ix.windowFrom(s, w, at)
 	judging := ix.judging(at)
 	v := View{
 		Series: s.name, Indicator: cfg.Name, Window: ix.places[l.window].Name, Arrival: true,
-		Start: from.in(cfg.Zone), End: at.in(cfg.Zone), Due: at.in(cfg.Zone),
+		Start: w.shownFrom(from).in(cfg.Zone), End: at.in(cfg.Zone), Due: at.in(cfg.Zone),
 		Made: l.status == made, Status: l.status.String(),
 		Events: l.events, Late: l.late, Exposure: l.exposure, Digits: cfg.GrainDigits, Provisional: l.provisional,
 		Expected: math.NaN(),
@@ -149,7 +162,7 @@ func (e *Engine) arrivalViewAt(s *series, window int, at Instant) View {
 	if !ep.cfg.ArrivalLooks || ep.placed(window) == nil {
 		return View{}
 	}
-	l := ix.lookAtArrival(s, arrivalWindow{window, int64(ix.widthOf(window))}, at, judging, e.clock)
+	l := ix.lookAtArrival(s, ix.arrivalWindow(window), at, judging, e.clock)
 	if l.status == filling || l.status == closed {
 		return View{}
 	}

@@ -8,7 +8,7 @@ import (
 )
 
 // A look at an arrival tests the span (t-w, t] that ends at the instant t of an
-// event, in the upper tail. It is judged by what was in force at t: the stanza,
+// event, or the last trials up to it, in the upper tail. It is judged by what was in force at t: the stanza,
 // the baseline and the limit of the latest boundary that had fallen due. So k
 // stays the same from one boundary to the next, and a look that is made again
 // finds the k of its own time. It belongs to the boundary that ends the slot of
@@ -26,13 +26,13 @@ func (ix *indicator) judging(at Instant) int64 {
 	return b
 }
 
-// lookAtArrival tests one span of the series that ends at an instant, at the
+// lookAtArrival tests one window of the series that ends at an instant, at the
 // moment when, as judged at a boundary. It is also asked about instants without
 // events, to say whether a span still signals.
 func (ix *indicator) lookAtArrival(s *series, w arrivalWindow, at Instant, judging int64, when Instant) look {
 	l := look{window: w.place, boundary: ix.cal.Slot(at) + 1, occasion: occasion{true, at}, at: when}
-	from := at - Instant(w.width)
-	if s.arrivals == nil || from < s.countedFrom(ix.epochAt(judging), w.place, l.boundary) {
+	from, full := ix.windowFrom(s, w, at)
+	if s.arrivals == nil || !full || !ix.fills(s, w, from, judging, l.boundary) {
 		l.status = filling
 		return l
 	}
@@ -54,6 +54,9 @@ func (ix *indicator) lookAtArrival(s *series, w arrivalWindow, at Instant, judgi
 		a.edges = append(a.edges, nil)
 	}
 	ix.testUpper(&a.edges[w.place], &l, &u, &o)
+	if l.lit[upper] && w.trials > 0 && s.unmatched(from, at) {
+		l.status, l.lit[upper], l.log10p[upper] = overfull, false, 0
+	}
 	return l
 }
 
@@ -92,9 +95,17 @@ func (s *series) arrivalLimit(cfg *config.Indicator, window int, boundary int64)
 func (ix *indicator) measureSpan(s *series, l *look, from, to Instant) {
 	c := ix.counted(s, from, to)
 	l.events, l.late = c.Events, c.Late
-	if ix.cfg.Exposure == config.Clock {
+	switch {
+	case ix.cfg.Measure == config.Proportion:
+		log := &s.arrivals.log
+		l.exposure = Quantity{Lo: uint64(log.Span(int64(to), int64(to-from)).Trials)}
+		if own := log.At(int64(to)); own.Events > own.Trials || l.events > int64(l.exposure.Lo) {
+			l.status = overfull
+			return
+		}
+	case ix.cfg.Exposure == config.Clock:
 		l.exposure = ix.clock.between(from, to)
-	} else {
+	default:
 		lacking := ix.eachPart(s, from, to, func(_ int64, q Quantity, provisional bool) {
 			l.exposure = l.exposure.add(q)
 			if l.known++; provisional {

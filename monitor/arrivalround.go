@@ -6,9 +6,13 @@ import (
 	"slices"
 )
 
-// touches reports whether a change reaches the span (at-width, at].
-func (c *change) touches(at Instant, width int64) bool {
-	from := at - Instant(width)
+// touches reports whether a change reaches the window that ends at an instant. One
+// that has not filled reaches all that came.
+func (c *change) touches(w arrivalWindow, at Instant) bool {
+	from, full := c.series.indicator.windowFrom(c.series, w, at)
+	if !full {
+		from = Beginning
+	}
 	for _, x := range c.instants {
 		if from < x && x <= at {
 			return true
@@ -55,7 +59,7 @@ func (e *Engine) lookAtArrivals(c *change) []look {
 	for _, x := range c.instants {
 		from, to = min(from, x), max(to, x)
 	}
-	to = min(min(to, e.clock)+Instant(ix.widest()), e.clock)
+	to = min(s.reachOf(min(to, e.clock)), e.clock)
 	e.drawArriving(s)
 	for at, n := range s.arrivals.log.Instants(int64(from), int64(to)) {
 		if n.Events > 0 {
@@ -76,7 +80,7 @@ func (e *Engine) lookAtInstant(s *series, at Instant, c *change) []look {
 	ep := ix.epochAt(judging)
 	first := c.comes && c.came == at
 	for _, w := range ix.spans(ep) {
-		if !c.touches(at, w.width) {
+		if !c.touches(w, at) {
 			continue
 		}
 		l := ix.lookAtArrival(s, w, at, judging, e.clock)

@@ -40,10 +40,11 @@ func (o occasion) compare(p occasion) int {
 	return 1
 }
 
-// arrivalWindow is a window as a span that ends at an event.
+// arrivalWindow is a window as it ends at an event: a span, or the last trials.
 type arrivalWindow struct {
-	place int
-	width int64 // microseconds
+	place  int
+	width  int64 // microseconds; 0 of trials
+	trials int64
 }
 
 // spans are the windows of a stanza as they are looked at when events come; none
@@ -52,16 +53,19 @@ func (ix *indicator) spans(ep *epoch) []arrivalWindow {
 	if !ep.cfg.ArrivalLooks {
 		return nil
 	}
-	list := make([]arrivalWindow, len(ep.windows))
-	for i, p := range ep.windows {
-		list[i] = arrivalWindow{p.place, int64(p.Slots) * ix.cal.nominal()}
+	list := make([]arrivalWindow, 0, len(ep.windows))
+	for _, p := range ep.windows {
+		if ep.cfg.Measure == config.Rate || p.Trials > 0 {
+			list = append(list, ix.arrivalWindow(p.place))
+		}
 	}
 	return list
 }
 
-// widthOf is the width of the window in that place.
-func (ix *indicator) widthOf(place int) Instant {
-	return Instant(int64(ix.places[place].Slots) * ix.cal.nominal())
+// arrivalWindow is the window in that place.
+func (ix *indicator) arrivalWindow(place int) arrivalWindow {
+	w := &ix.places[place]
+	return arrivalWindow{place, int64(w.Slots) * ix.cal.nominal(), w.Trials}
 }
 
 // nominal is the length of a slot in microseconds when no clock is changed.
@@ -87,10 +91,20 @@ func (ix *indicator) widest() int64 {
 	return widest
 }
 
-// arrived notes that the events of a contribution came at its instant (sign 1),
-// or takes them back (-1), for the change that this is.
+// arrived notes that the events, and of a proportion the trials, of a contribution
+// came at its instant (sign 1), or takes them back (-1), for the change that this
+// is.
 func (s *series) arrived(c *contribution, sign int, ch *change) {
-	if ch.weighed = c.hasExposure; !s.indicator.cfg.ArrivalLooks || c.events == 0 || !c.hasEvents {
+	cfg := s.indicator.cfg
+	var by arrival.Count
+	if c.hasEvents {
+		by.Events = c.events
+	}
+	if c.hasExposure && cfg.Measure == config.Proportion {
+		by.Trials = int64(c.exposure.Lo)
+	}
+	ch.weighed = c.hasExposure && cfg.Measure == config.Rate
+	if !cfg.ArrivalLooks || by == (arrival.Count{}) {
 		return
 	}
 	if s.arrivals == nil {
@@ -100,13 +114,12 @@ func (s *series) arrived(c *contribution, sign int, ch *change) {
 	if c.start <= a.since { // no look sees it
 		return
 	}
-	by := arrival.Count{Events: c.events}
 	if c.late {
-		by.Late = c.events
+		by.Late = by.Events
 	}
 	if sign < 0 {
 		by = by.Minus()
-	} else if a.log.At(int64(c.start)).Events == 0 {
+	} else if by.Events > 0 && a.log.At(int64(c.start)).Events == 0 {
 		ch.came, ch.comes = c.start, true
 	}
 	if err := a.log.Change(int64(c.start), by); err != nil {
@@ -152,13 +165,13 @@ func (t *tail) settleArrivals() {
 
 // forgetArrivals drops the instants that no look inside the horizon sees. It
 // reports whether there were any.
-func (s *series) forgetArrivals(ix *indicator) bool {
+func (s *series) forgetArrivals() bool {
 	if s.arrivals == nil {
 		return false
 	}
 	l := &s.arrivals.log
 	n := l.Len()
-	l.Forget(int64(ix.cal.Start(ix.frozenAt)) - ix.widest() - ix.cal.nominal())
+	l.Forget(s.keptFrom())
 	return l.Len() < n
 }
 

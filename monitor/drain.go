@@ -114,6 +114,8 @@ type placeHeader struct {
 	Name  string `json:"name"`
 	Slots int    `json:"slots"`
 	Step  int    `json:"step"`
+	// Trials is absent of spans of time.
+	Trials int64 `json:"trials,omitempty"`
 }
 
 type windowHeader struct {

@@ -31,6 +31,9 @@ func (e *Engine) solutionOf(s *series, ep *epoch, boundary int64, perYear float6
 		return nil
 	}
 	p := ix.planOf(&u, boundary, x, perYear)
+	if ofTrials(ep.cfg) && !ix.planTrials(s, &p, boundary) {
+		return nil
+	}
 	if s.sum != nil { // sums are looked at when slots have settled
 		for i := range p.Windows {
 			p.Windows[i].Arrival = false
@@ -91,7 +94,11 @@ func (ep *epoch) inPlace(x solution) solution {
 func solutionFrom(p *allowance.Plan, l *allowance.Limits) solution {
 	x := solution{alpha: make([]float64, 2*len(p.Windows)), here: l.PerYear}
 	for _, part := range l.Parts {
-		most := float64(p.Windows[part.Window].Slots) * p.PerYear / p.SlotsPerYear
+		slots := float64(p.Windows[part.Window].Slots)
+		if n := p.Windows[part.Window].Trials; n > 0 {
+			slots = float64(n) / p.Volume
+		}
+		most := slots * p.PerYear / p.SlotsPerYear
 		if !part.Arrival {
 			x.alpha[2*part.Window+int(part.Tail)] = min(part.Alpha, most)
 			continue
@@ -157,7 +164,11 @@ func (ix *indicator) planOf(u *usual, boundary int64, x expectation, perYear flo
 		p.Known = ix.knownAt(b.Delay, boundary)
 	}
 	for _, w := range cfg.Windows {
-		p.Windows = append(p.Windows, allowance.Window{Slots: w.Slots, Step: w.Step, Slot: cfg.SlotLooks, Arrival: cfg.ArrivalLooks})
+		x := allowance.Window{Slots: w.Slots, Step: w.Step, Slot: cfg.SlotLooks, Arrival: cfg.ArrivalLooks, Trials: w.Trials}
+		if cfg.Measure == config.Proportion {
+			x.Slot, x.Arrival = x.Slot && w.Trials == 0, w.Trials > 0
+		}
+		p.Windows = append(p.Windows, x)
 	}
 	return p
 }
@@ -222,9 +233,13 @@ func cycles(strata *config.Strata, cfg *config.Indicator) bool {
 }
 
 // lookback is how many slots before a boundary tell what to expect: those of
-// the longest window, and a week at least where slots are shorter than a day.
+// the longest window, and a week at least where slots are shorter than a day; four
+// weeks where there are windows of trials.
 func (ix *indicator) lookback() int64 {
 	longest := longestOf(ix.cfg)
+	if ofTrials(ix.cfg) {
+		longest = max(longest, ix.cal.fourWeeks())
+	}
 	if ix.cal.length > 0 {
 		return max(longest, 7*day/ix.cal.length)
 	}
@@ -262,7 +277,12 @@ func (ix *indicator) expectFrom(s *series, u *usual, from, boundary int64) (expe
 		x.most = max(x.most, q)
 	}
 	for i := range u.cfg.Windows {
-		x.least = min(x.least, leastMean(slots, u.cfg.Windows[i].Slots))
+		if w := &u.cfg.Windows[i]; w.Trials == 0 {
+			x.least = min(x.least, leastMean(slots, w.Slots))
+		}
+	}
+	if math.IsInf(x.least, 1) { // windows of trials are planned for by their volume
+		x.least = x.most
 	}
 	if x.most-x.least <= steadily*x.most {
 		return expectation{x.most, x.most}, true

@@ -75,7 +75,7 @@ func (e *Engine) glance(s *series) Glance {
 		}
 		ep := ix.epochAt(b)
 		var v View
-		if !ep.cfg.SlotLooks {
+		if !ep.cfg.SlotLooks || p.Trials > 0 {
 			v = e.arrivalViewAt(s, p.place, e.latestArrival(s))
 		} else if l := ix.look(s, ep, p.place, b, e.momentOf(s, b, p.place)); l.status != filling {
 			v = ix.view(s, ep, &l)
@@ -139,7 +139,7 @@ func (e *Engine) Standing(series, window string) (life.Evidence, bool) {
 	if p == nil {
 		return life.Evidence{}, false
 	}
-	if !ix.cfg.SlotLooks {
+	if !ix.cfg.SlotLooks || p.Trials > 0 {
 		return e.arrivalStanding(s, p.place)
 	}
 	w, b := p.place, ix.latest(p.Window)

@@ -152,9 +152,10 @@ func (ix *indicator) forget() {
 	}
 }
 
-// looksAt reports whether the window looks at the boundary.
+// looksAt reports whether the window looks at the boundary. Windows of trials never
+// do.
 func (ix *indicator) looksAt(w *config.Window, boundary int64) bool {
-	return w.Step == 1 || floorMod(boundary-ix.cal.phase(), int64(w.Step)) == 0
+	return w.Trials == 0 && (w.Step == 1 || floorMod(boundary-ix.cal.phase(), int64(w.Step)) == 0)
 }
 
 // latest is the latest boundary, up to looked, at which the window looks.

@@ -23,7 +23,11 @@ func (s *series) mark(a *alert, mark life.Mark) {
 		return
 	}
 	ix := s.indicator
-	from := ix.spanFrom(s, a.first, ix.places[a.opening.window].Slots)
+	w := &ix.places[a.opening.window]
+	from := ix.spanFrom(s, a.first, w.Slots)
+	if w.Trials > 0 {
+		from = ix.cal.Slot(InstantOf(a.record.Opening.From))
+	}
 	s.marked = append(s.marked, markedSpan{alert: a.record.ID, from: from, to: min(a.last, ix.looked)})
 }
 

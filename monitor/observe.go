@@ -174,6 +174,9 @@ func (e *Engine) admit(ix *indicator, o *Observation) (contribution, Reason, str
 	if reason == TooBig {
 		return c, reason, fmt.Sprintf("exposure %s is too large for the indicator's grain", o.Exposure)
 	}
+	if ix.cfg.ArrivalLooks && ix.cfg.Measure == config.Proportion && (c.exposure.Hi > 0 || c.exposure.Lo > maxEvents) {
+		return c, TooBig, fmt.Sprintf("a moment holds at most %d trials", int64(maxEvents))
+	}
 	if o.HasEvents && !c.series.roomFor(from, o.Events) {
 		return c, TooBig, fmt.Sprintf("a slot holds at most %d events", int64(maxEvents))
 	}
@@ -188,6 +191,8 @@ func (ix *indicator) fits(o *Observation, from, to int64) (Reason, string) {
 		return ExposureNotUsed, fmt.Sprintf("indicator %q takes its exposure from the clock: leave exposure out", ix.cfg.Name)
 	case o.HasExposure && o.Instant && !proportion:
 		return InstantExposure, "exposure needs an interval: give start and end instead of at"
+	case ix.cfg.ArrivalLooks && proportion && !o.Instant && o.HasExposure && o.Exposure.Coef > 0:
+		return NeedsInstant, fmt.Sprintf("indicator %q looks at the last trials: give at instead of start and end", ix.cfg.Name)
 	case ix.cfg.ArrivalLooks && o.Events > 0 && !o.Instant:
 		return NeedsInstant, fmt.Sprintf("indicator %q looks when events come: give at instead of start and end", ix.cfg.Name)
 	case from != to && o.HasEvents:

@@ -184,7 +184,9 @@ func longestOf(cfg *config.Indicator) int64 {
 	return slots
 }
 
-func sameWindow(a, b config.Window) bool { return a.Slots == b.Slots && a.Step == b.Step }
+func sameWindow(a, b config.Window) bool {
+	return a.Slots == b.Slots && a.Step == b.Step && a.Trials == b.Trials
+}
 
 // encodePlaces writes the versions of the stanza that are kept, and the places
 // of their windows unless they are those of a stanza that always had the same.
@@ -210,7 +212,7 @@ func (ih *indicatorHeader) encodePlaces(ix *indicator) {
 		return
 	}
 	for _, w := range ix.places {
-		ih.Places = append(ih.Places, placeHeader{w.Name, w.Slots, w.Step})
+		ih.Places = append(ih.Places, placeHeader{w.Name, w.Slots, w.Step, w.Trials})
 	}
 }
 
@@ -231,7 +233,7 @@ func (h *epochHeader) restoreWindows(ix *indicator, cfg *config.Indicator) ([]pl
 
 func (ih *indicatorHeader) restorePlaces(ix *indicator) error {
 	for _, p := range ih.Places {
-		ix.places = append(ix.places, config.Window{Name: p.Name, Slots: p.Slots, Step: p.Step})
+		ix.places = append(ix.places, config.Window{Name: p.Name, Slots: p.Slots, Step: p.Step, Trials: p.Trials})
 	}
 	if len(ih.Places) == 0 {
 		ix.places = slices.Clone(ix.cfg.Windows)

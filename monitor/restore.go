@@ -169,7 +169,7 @@ func (s *series) derive() {
 	ix := s.indicator
 	for _, p := range ix.now().windows {
 		ws := &s.windows[p.place]
-		if ws.withheld != made || s.dates != nil || config.IsSum(s.name) || !ix.cfg.SlotLooks {
+		if p.Trials > 0 || ws.withheld != made || s.dates != nil || config.IsSum(s.name) || !ix.cfg.SlotLooks {
 			continue
 		}
 		latest := ix.latest(p.Window)

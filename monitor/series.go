@@ -203,7 +203,7 @@ func (e *Engine) trim(s *series) {
 		e.touch(s)
 	}
 	s.forget(ix)
-	if s.forgetArrivals(ix) {
+	if s.forgetArrivals() {
 		e.touch(s)
 	}
 	for d := range s.tails {

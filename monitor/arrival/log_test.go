@@ -221,6 +221,15 @@ func compare(t *rapid.T, l *Log, w twin, floor int64) {
 			if f, s, ok := w.lastTrials(at, x); f != from || s != seen || ok != full {
 				t.Fatalf("the last %d trials at %d: %d, %+v, %t; want %d, %+v, %t", x, at, from, seen, full, f, s, ok)
 			}
+			reach := at
+			for _, t := range w.instants() {
+				if t > at && w.span(t, t-at).Trials < x {
+					reach = t
+				}
+			}
+			if got := l.Reach(at, x); got != reach {
+				t.Fatalf("windows of %d trials reach back to %d up to %d, want %d", x, at, got, reach)
+			}
 			kth, ok := l.Kth(at, x)
 			f, _, want := w.backwards(at, func(c Count) bool { return c.Events >= x })
 			if kth != f || ok != want {

@@ -19,6 +19,18 @@ func (l *Log) LastTrials(at, n int64) (from int64, seen Count, full bool) {
 	return l.entries[i].at, end.minus(l.until(i)), true
 }
 
+// Reach returns the latest instant up to which windows of the last n trials reach
+// back to at: that with fewer than n trials after at, or at. n is positive.
+func (l *Log) Reach(at, n int64) int64 {
+	first := l.after(at)
+	since := l.until(first).Trials
+	i := first + sort.Search(len(l.entries)-first, func(i int) bool { return l.entries[first+i].total.Trials-since >= n })
+	if i == first {
+		return at
+	}
+	return l.entries[i-1].at
+}
+
 // AgainTrials lists the looks over the last n trials that a change at the
 // instants must have made again, in order, each with whether its window is full:
 // at each instant that holds events and has fewer than n trials between it and a
