@@ -21,7 +21,7 @@ func Sentence(r *life.Record, e *life.Evidence) string {
 
 // finding is the sentence without the bounds.
 func finding(r *life.Record, e *life.Evidence) string {
-	return place(r) + ": " + counted(e) + " in the " + span(e, zoneOf(r)) + " (" + exposure(e) + provisional(e) + signedOff(e) + lateShare(e) + "); about " +
+	return place(r) + ": " + counted(e) + " in the " + span(e, zoneOf(r)) + " (" + exposed(e, zoneOf(r)) + provisional(e) + signedOff(e) + lateShare(e) + "); about " +
 		expected(e) + " would be usual. " + chance(e, r.Direction)
 }
 
@@ -97,7 +97,7 @@ func expected(e *life.Evidence) string { return number(e.Expected) }
 
 // brief gives the numbers of a look in one short phrase.
 func brief(e *life.Evidence, zone *time.Location) string {
-	return counted(e) + " in the " + span(e, zone) + " (" + exposure(e) + "), about " + expected(e) +
+	return counted(e) + " in the " + span(e, zone) + " (" + exposed(e, zone) + "), about " + expected(e) +
 		" usual, p = " + pvalue(log10p(e))
 }
 

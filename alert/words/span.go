@@ -70,6 +70,9 @@ func span(e *life.Evidence, zone *time.Location) string {
 	if e.Shortened > 0 { // by a reset or a change
 		return "time from " + moment(from) + " to " + last(to)
 	}
+	if ofTrials(e) {
+		return "last " + exposure(e) + " to " + clock(to) + " on " + day(to)
+	}
 	if e.Wait != nil {
 		return toEvent(e, to)
 	}
@@ -88,6 +91,21 @@ func span(e *life.Evidence, zone *time.Location) string {
 		return "day of " + last(to)
 	}
 	return long + " to " + last(to)
+}
+
+// ofTrials reports a window of the last so many trials.
+func ofTrials(e *life.Evidence) bool {
+	_, ok := config.ParseTrials(e.Window)
+	return ok
+}
+
+// exposed is what stands in brackets behind a span: the exposure, or of the last
+// trials, which name it already, since when they were made.
+func exposed(e *life.Evidence, zone *time.Location) string {
+	if ofTrials(e) {
+		return "since " + moment(e.From.In(zone))
+	}
+	return exposure(e)
 }
 
 // length is the length of a window in words: "1 year", "28 days".

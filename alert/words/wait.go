@@ -40,7 +40,11 @@ func wait(e *life.Evidence, zone *time.Location) []string {
 		log := math.Log10(*w.P)
 		text += fmt.Sprintf(", and so little comes by chance in %s cases (p = %s, gamma distribution, exact)", odds(log), pvalue(log))
 	}
-	return append(sentences, text, fmt.Sprintf("It is the same finding: %s or more within %s ring", whole(w.Events), length(e.Window)))
+	within := length(e.Window)
+	if ofTrials(e) {
+		within = "the last " + within
+	}
+	return append(sentences, text, fmt.Sprintf("It is the same finding: %s or more within %s ring", whole(w.Events), within))
 }
 
 // gap is the time between two events.

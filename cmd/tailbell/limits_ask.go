@@ -189,6 +189,7 @@ func (o *limitsOptions) fillCounted(g *limitsGroup, h *estimate.History) error {
 		if err != nil {
 			return fmt.Errorf("%s: %w", s.Name, err)
 		}
+		q.Plan.Volume = busiest(g.in, s)
 		g.questions = append(g.questions, q)
 	}
 	if len(g.questions) == 0 {
@@ -236,8 +237,14 @@ func usualExposure(in *config.Indicator, s *estimate.Series) (exposure, vary flo
 	if in.Measure == config.Proportion {
 		exposure = math.Ceil(exposure)
 	}
+	if !slices.ContainsFunc(in.Windows, func(w config.Window) bool { return !isTrials(w) }) {
+		return exposure, 0 // windows of trials are planned for by their volume
+	}
 	vary = most/exposure - 1
 	for _, w := range in.Windows {
+		if isTrials(w) {
+			continue
+		}
 		length := min(w.Slots, len(slots))
 		for i := length; i <= len(slots); i++ {
 			vary = max(vary, 1-(upTo[i]-upTo[i-length])/float64(length)/exposure)

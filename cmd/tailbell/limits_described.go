@@ -30,7 +30,7 @@ func (d *describedSeries) add(f *pflag.FlagSet) {
 	f.Float64Var(&d.margin, "margin", 1, "the ratio to the baseline that is still no news")
 	f.Float64Var(&d.spread, "spread", 1, "the variance of a slot's count over that of the model")
 	f.StringVar(&d.every, "every", "1d", "the `LENGTH` of a slot")
-	f.StringArrayVar(&d.windows, "window", nil, "a window: its `SPAN`, or span:step such as 84d:7d; once for each")
+	f.StringArrayVar(&d.windows, "window", nil, "a window: its `SPAN`, or span:step such as 84d:7d; of a proportion also \"200 trials\"; once for each")
 	f.StringSliceVar(&d.tails, "tails", []string{"upper"}, "upper, lower, or both")
 	f.StringSliceVar(&d.looks, "looks", []string{"slot"}, "slot, arrival, or both")
 }
@@ -88,6 +88,9 @@ func (o *limitsOptions) indicatorOf() (*config.Indicator, error) {
 		return nil, errors.New("how much exposure has a slot? Say --exposure, or --trials for a proportion")
 	case !o.set("allowance") && !o.set("p-limit"):
 		return nil, errors.New(`how many false alerts are accepted? Say e.g. --allowance "1 in 5y", or --p-limit 0.001`)
+	}
+	if err := checkTrials(in); err != nil {
+		return nil, err
 	}
 	return in, o.override(in)
 }
@@ -151,6 +154,9 @@ func (o *limitsOptions) baseline(in *config.Indicator) (config.Baseline, error) 
 
 // windowOf reads a window such as "28d" or "84d:7d".
 func windowOf(text string, every config.Every) (config.Window, error) {
+	if strings.HasSuffix(text, "trials") {
+		return trialsOf(text)
+	}
 	span, step, stepped := strings.Cut(text, ":")
 	w := config.Window{Name: span, Step: 1}
 	var err error

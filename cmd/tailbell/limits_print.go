@@ -105,6 +105,7 @@ func (p *limitsPage) head(g *limitsGroup, r *planning.Report) {
 	}
 	p.line("usual: %s %s per %s (%s); %s %s a slot of %s, %s%s", short(r.UsualRate*in.Per), in.EventNoun, perWords(in), kind,
 		short(r.Exposure), in.Unit, in.Every, g.from, varyWords(r.Vary))
+	p.trials(g)
 	switch a := in.Allowance; {
 	case a == nil:
 		p.line("limit: each look signals at p <= %s", short(in.PLimit))

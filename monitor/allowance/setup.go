@@ -34,7 +34,11 @@ func For(in *config.Indicator, b *config.Baseline, events int64, seen, exposure,
 	}
 	for i := range in.Windows {
 		w := &in.Windows[i]
-		p.Windows = append(p.Windows, Window{Slots: w.Slots, Step: w.Step, Slot: in.SlotLooks, Arrival: in.ArrivalLooks && in.Upper})
+		x := Window{Slots: w.Slots, Step: w.Step, Slot: in.SlotLooks, Arrival: in.ArrivalLooks && in.Upper, Trials: w.Trials}
+		if p.Law.Proportion {
+			x.Slot, x.Arrival = x.Slot && w.Trials == 0, x.Arrival && w.Trials > 0
+		}
+		p.Windows = append(p.Windows, x)
 	}
 	p.Cycle, p.Known = cycle(in.Every, b.Strata), known(in, b.Delay)
 	if len(p.Cycle) > longestCycle {

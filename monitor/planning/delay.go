@@ -46,7 +46,7 @@ const (
 func (q *Question) addDelays(ctx context.Context, r *Report, l *allowance.Limits, outlooks []*allowance.Outlook, o Options) error {
 	longest := 0
 	for _, w := range q.Plan.Windows {
-		longest = max(longest, w.Slots)
+		longest = max(longest, q.slotsOf(w))
 	}
 	horizon := max(100, min(longestWindows*longest, longestCourse))
 	runs, done := 0, 0

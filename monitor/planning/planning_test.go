@@ -84,7 +84,11 @@ func TestDelayUnchanged(t *testing.T) {
 		"delay":      func(q *Question) { q.Plan.Known = []float64{0.1, 0.3, 0.6, 0.8, 0.9} },
 		"arrival":    func(q *Question) { q.Plan.Windows = []allowance.Window{{Slots: 28, Step: 1, Arrival: true}} },
 		"proportion": func(q *Question) { q.Plan.Law = allowance.Law{Rate: 0.01, Proportion: true}; q.Plan.Exposure = 5 },
-		"lower":      func(q *Question) { q.Plan.Upper, q.Plan.Lower = false, true; q.Plan.Law.Rate = 0.012 },
+		"trials": func(q *Question) {
+			q.Plan.Law, q.Plan.Exposure = allowance.Law{Rate: 0.01, Proportion: true}, 6
+			q.Plan.Volume, q.Plan.Windows = 5.3, []allowance.Window{{Trials: 150, Arrival: true}}
+		},
+		"lower": func(q *Question) { q.Plan.Upper, q.Plan.Lower = false, true; q.Plan.Law.Rate = 0.012 },
 	}
 	for name, change := range questions {
 		q := ward()

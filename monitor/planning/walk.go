@@ -17,8 +17,10 @@ type walk struct {
 	counts []int64
 	// times are when the events of slots came, in slots; for arrival looks only.
 	times []float64
-	sums  []int64 // by part
-	first []int   // by part: the slot that signalled first, from 1; 0 for none
+	// places are which trials the events were, for windows of trials only.
+	places []int64
+	sums   []int64 // by part
+	first  []int   // by part: the slot that signalled first, from 1; 0 for none
 }
 
 func newWalk(c *course) *walk {
@@ -41,7 +43,7 @@ func (w *walk) walk(rng *rand.Rand) []int {
 	clear(w.counts)
 	clear(w.sums)
 	clear(w.first)
-	w.times = w.times[:0]
+	w.times, w.places = w.times[:0], w.places[:0]
 	past := len(w.counts) - w.horizon
 	phase := rng.IntN(1 << 30)
 	for t := range w.counts {
@@ -50,7 +52,9 @@ func (w *walk) walk(rng *rand.Rand) []int {
 		for i, part := range w.parts {
 			p := &w.limits.Parts[part]
 			window := w.q.Plan.Windows[p.Window]
-			w.add(i, t, window.Slots)
+			if window.Trials == 0 {
+				w.add(i, t, window.Slots)
+			}
 			if t >= past && w.first[i] == 0 {
 				if w.signals(i, p, window, t, phase) {
 					w.first[i] = t - past + 1
@@ -108,7 +112,7 @@ func (w *walk) count(rng *rand.Rand, slot int, changed bool, phase int, share fl
 		theta := min(1, w.rate*ratio)
 		odds := theta * factor
 		theta = odds / (1 - theta + odds)
-		n := int64(exposure)
+		n := w.trialsIn(slot)
 		if spread > 1 && n > 1 {
 			size := float64(n-1)/(min(spread, 0.9*float64(n)+0.1)-1) - 1
 			a, b := resample.Gamma(rng, theta*size), resample.Gamma(rng, (1-theta)*size)
@@ -125,11 +129,17 @@ func (w *walk) count(rng *rand.Rand, slot int, changed bool, phase int, share fl
 
 // arrive gives the events of slot t their moments.
 func (w *walk) arrive(rng *rand.Rand, t int, n int64) {
-	arrival := false
+	arrival, trials := false, false
 	for _, part := range w.parts {
-		arrival = arrival || w.limits.Parts[part].Arrival
+		p := &w.limits.Parts[part]
+		trials = trials || w.q.Plan.Windows[p.Window].Trials > 0
+		arrival = arrival || p.Arrival
 	}
-	if !arrival {
+	switch {
+	case trials:
+		w.place(rng, t, n)
+		return
+	case !arrival:
 		return
 	}
 	from := len(w.times)
@@ -146,6 +156,8 @@ func (w *walk) signals(i int, p *allowance.Part, window allowance.Window, t, pha
 	switch {
 	case !ok:
 		return false
+	case window.Trials > 0:
+		return w.amongLast(k, window.Trials, t)
 	case p.Arrival:
 		return w.arrives(k, float64(window.Slots), t)
 	case (t+phase)%window.Step != 0:
