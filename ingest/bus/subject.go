@@ -58,6 +58,23 @@ func (n names) alert(partition int, direction, indicator string) string {
 
 func (n names) alertAll() string { return n.deployment + ".alert.>" }
 
+// alertSteps matches the steps of alerts, but no mark of an owner.
+func (n names) alertSteps() string { return n.deployment + ".alert.*.*.*" }
+
+// alertOf matches all that the owners of a partition publish.
+func (n names) alertOf(partition int) string {
+	return n.deployment + ".alert." + strconv.Itoa(partition) + ".>"
+}
+
+// owner is the subject on which the owner of a partition says that it is it.
+func (n names) owner(partition int) string {
+	return n.deployment + ".alert." + strconv.Itoa(partition) + ".owner"
+}
+
+// The bucket of claims, as the bus's own clients know it.
+func (n names) claimStream() string { return "KV_" + n.deployment + "-claims" }
+func (n names) claimPrefix() string { return "$KV." + n.deployment + "-claims." }
+
 func (n names) control(verb string) string { return n.deployment + ".control." + verb }
 
 // inbox begins the subjects on which this program is answered. It is not that
