@@ -4,11 +4,19 @@ import (
 	"net/url"
 	"slices"
 	"strings"
+	"time"
 )
 
 // MaxMessageBytes is the largest message that a set-up may allow: the bus
 // itself takes no larger ones.
 const MaxMessageBytes = 64 << 20
+
+// DefaultClaim is how long a claim holds unless the set-up says otherwise, and
+// DefaultCopyEvery how often a store is copied.
+const (
+	DefaultClaim     = 3 * time.Second
+	DefaultCopyEvery = 30 * time.Second
+)
 
 func (s section) readBus() Bus {
 	s.strict("[bus]")
@@ -25,13 +33,16 @@ func (s section) readBus() Bus {
 	replicas, _ := s.whole("replicas", 1, 1, 5)
 	b.Replicas = int(replicas)
 	if n := s.node.fields["url"]; n == nil || n.text == "" {
-		for _, key := range []string{"credentials", "user", "password_file", "ca", "cert", "key", "replicas"} {
+		for _, key := range []string{"credentials", "user", "password_file", "ca", "cert", "key", "replicas", "share", "claim", "copy_every"} {
 			if s.has(key) && (key != "replicas" || b.Replicas > 1) {
 				s.fault(key, "means nothing for the embedded bus", "name a bus with url, or leave it out")
 			}
 		}
 		return b
 	}
+	b.Share, _ = s.truth("share")
+	b.Claim, _ = s.duration("claim", DefaultClaim, time.Second, time.Minute)
+	b.CopyEvery, _ = s.duration("copy_every", DefaultCopyEvery, 5*time.Second, 24*time.Hour)
 	s.pair("user", "password_file")
 	s.pair("cert", "key")
 	if s.has("credentials") && s.has("user") {

@@ -170,6 +170,9 @@ func (c *comparison) setup(a, b *Setup) {
 	c.value("max_bytes", Restart, exactSize(a.Bus.MaxBytes), exactSize(b.Bus.MaxBytes), "")
 	c.value("max_age", Restart, FormatDuration(a.Bus.MaxAge), FormatDuration(b.Bus.MaxAge), "")
 	c.value("replicas", Restart, a.Bus.Replicas, b.Bus.Replicas, "")
+	c.value("share", Restart, a.Bus.Share, b.Bus.Share, "")
+	c.value("claim", Restart, FormatDuration(a.Bus.Claim), FormatDuration(b.Bus.Claim), "")
+	c.value("copy_every", Restart, FormatDuration(a.Bus.CopyEvery), FormatDuration(b.Bus.CopyEvery), "")
 	c.page(a.Page, b.Page)
 	c.outlets(a.Outlets, b.Outlets)
 	c.path = "limits"

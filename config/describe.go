@@ -37,6 +37,9 @@ func (p *prose) setup(s *Setup) {
 		p.line("The bus is embedded; it and the store are kept in %s.", s.Folder)
 	} else {
 		p.line("The bus is at %s; the store is kept in %s.", s.Bus.URL, s.Folder)
+		if s.Bus.Share {
+			p.line("Processes share the partitions: one that falls silent for %s loses its own to the others.", elapsed(s.Bus.Claim))
+		}
 	}
 	age := ""
 	if s.Bus.MaxAge > 0 {

@@ -26,7 +26,7 @@ type section struct {
 var keysOf = map[string][]string{
 	"":             {"name", "folder", "partitions", "key_parts", "time", "bus", "limits", "page", "indicator", "outlet"},
 	"[time]":       {"mode"},
-	"[bus]":        {"url", "credentials", "user", "password_file", "ca", "cert", "key", "max_bytes", "max_age", "replicas"},
+	"[bus]":        {"url", "credentials", "user", "password_file", "ca", "cert", "key", "max_bytes", "max_age", "replicas", "share", "claim", "copy_every"},
 	"[limits]":     {"max_series", "max_ids", "max_message", "max_observations", "memory"},
 	indicatorPlace: {"name", "title", "noun", "series", "sums", "measure", "unit", "per", "expected", "every", "zone", "events", "exposure", "clock", "settle", "follow_up", "horizon", "ahead", "grain", "ids", "expires", "since", "expect", "remind", "remind_to", "windows", "looks", "tails", "p_limit", "allowance", "allowance_for", "assurance", "reserve", "quiet", "level", "alpha", "baseline"},
 	"clock":        {"size", "per"},

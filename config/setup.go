@@ -57,6 +57,13 @@ type Bus struct {
 	MaxAge   time.Duration
 	// Replicas of the streams on a remote cluster (1 when embedded).
 	Replicas int
+	// Share lets several processes of the deployment share its partitions. Claim
+	// is how long a process's claim on a partition holds that is not renewed, and
+	// CopyEvery how often the copy of a partition's store on the bus is made
+	// anew; 0 when embedded.
+	Share     bool
+	Claim     time.Duration
+	CopyEvery time.Duration
 }
 
 // Limits bound what a daemon holds.

@@ -78,12 +78,12 @@ func judge(t *testing.T, s *jsonschema.Schema, event []byte) {
 func TestBusConforms(t *testing.T) {
 	var b inbox
 	s := schema(t)
-	o := outlet.NewBus("quillmere", func(_ context.Context, direction, indicator, key string, event []byte) error {
-		judge(t, s, event)
-		if direction == "" || indicator == "" {
-			t.Errorf("published under %q, %q", direction, indicator)
+	o := outlet.NewBus("quillmere", func(_ context.Context, p *outlet.Published) error {
+		judge(t, s, p.Event)
+		if p.Direction == "" || p.Indicator == "" {
+			t.Errorf("published under %q, %q", p.Direction, p.Indicator)
 		}
-		if !b.take(key, string(event)) {
+		if !b.take(p.Key, string(p.Event)) {
 			return errors.New("the bus is away")
 		}
 		return nil

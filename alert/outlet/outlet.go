@@ -31,6 +31,13 @@ type Outlet interface {
 	Deliver(ctx context.Context, n *life.Notice) error
 }
 
+// Numbered is an outlet that is told which step of the outbox it delivers.
+type Numbered interface {
+	Outlet
+	// DeliverNumbered is Deliver of the step with a number.
+	DeliverNumbered(ctx context.Context, number uint64, n *life.Notice) error
+}
+
 // Gatherer is an outlet for people.
 type Gatherer interface {
 	Outlet
@@ -75,6 +82,11 @@ type QueueOptions struct {
 	// Wants says which steps the outlet is told; nil for all. The others are
 	// passed over.
 	Wants func(*life.Notice) bool
+	// Through is the number of the outbox up to which all was done with already,
+	// by another process that had the partition before.
+	Through uint64
+	// May is asked right before every delivery, if not nil; an error puts it off.
+	May func() error
 	// Now tells the time of the next try for those who ask; nil for none.
 	Now func() time.Time
 	// Failed, if not nil, is told of every try that failed; it must not block.
@@ -261,15 +273,25 @@ func (q *Queue) deliver(ctx context.Context) (more bool, err error) {
 // of it failed.
 func (q *Queue) send(ctx context.Context, p *parcel) (err error) {
 	var notices []*life.Notice
+	var last uint64
 	for i, n := range p.numbers {
-		if !q.done[n] {
-			notices = append(notices, p.notices[i])
+		if !q.done[n] && n > q.opts.Through {
+			notices, last = append(notices, p.notices[i]), n
+		}
+	}
+	if len(notices) == 0 {
+		return nil
+	}
+	if q.opts.May != nil {
+		if err := q.opts.May(); err != nil {
+			return err
 		}
 	}
 	together, gathers := q.outlet.(Gatherer)
+	numbered, counts := q.outlet.(Numbered)
 	switch {
-	case len(notices) == 0:
-		return nil
+	case counts && len(notices) == 1:
+		err = numbered.DeliverNumbered(ctx, last, notices[0])
 	case gathers && len(notices) > 1:
 		err = together.DeliverTogether(ctx, notices)
 	default: // one: nothing else is made of more

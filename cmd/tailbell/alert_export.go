@@ -11,7 +11,6 @@ import (
 	"tailbell/alert/words"
 	"tailbell/config"
 	"tailbell/ingest/bus"
-	"tailbell/ingest/control"
 	"tailbell/monitor/life"
 	"tailbell/monitor/store"
 )
@@ -106,10 +105,11 @@ func exportPages(page func(after uint64) ([]exportRow, error), use func(*life.Re
 
 // export answers the next alerts of a partition.
 func (d *daemon) export(_ context.Context, req exportRequest) (any, error) {
-	if req.Partition < 0 || req.Partition >= len(d.parts) {
-		return nil, control.Errorf(codeNotFound, "no partition %d: there are %d", req.Partition, len(d.parts))
+	p, err := d.part(req.Partition)
+	if err != nil {
+		return nil, err
 	}
-	return exportPart(d.parts[req.Partition].store, req.After)
+	return exportPart(p.store, req.After)
 }
 
 // exportPart returns the alerts after a number that one reply holds.

@@ -65,7 +65,7 @@ type heldRow struct {
 // acceptClock lets every held intake go on.
 func (d *daemon) acceptClock(context.Context, []byte) (any, error) {
 	rows := []heldRow{}
-	for _, p := range d.parts {
+	for _, p := range d.parts.all() {
 		h := p.intake.Held()
 		if h == nil || !p.intake.Accept(h.Position) {
 			continue

@@ -34,7 +34,7 @@ type settingsReply struct {
 // setting tells the set-ups in force.
 func (d *daemon) setting(context.Context, []byte) (any, error) {
 	r := &settingsReply{}
-	for _, p := range d.parts {
+	for _, p := range d.parts.all() {
 		if err := r.add(p.number, p.store); err != nil {
 			return nil, err
 		}

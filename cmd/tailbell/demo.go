@@ -137,7 +137,7 @@ func runDemo(ctx context.Context, o demoOptions, s *rehearse.Scenario, setup *co
 	if err = errors.Join(err, <-stopped); err != nil {
 		return nil, err
 	}
-	return r, r.readStore(d.parts[0].store)
+	return r, r.readStore(d.parts.get(0).store)
 }
 
 // openings passes on only the steps that open or withdraw an alert.
@@ -165,7 +165,7 @@ type demoResult struct {
 
 // play publishes and waits until everything is committed.
 func (r *demoResult) play(ctx context.Context, d *daemon) error {
-	p := d.parts[0]
+	p := d.parts.get(0)
 	end, err := d.bus.EndOf(ctx, 0)
 	if err != nil {
 		return err
@@ -187,7 +187,7 @@ func (r *demoResult) play(ctx context.Context, d *daemon) error {
 	if err := p.reach(ctx, end); err != nil {
 		return err
 	}
-	return p.loop.Do(ctx, func(e *monitor.Engine) {
+	return p.do(ctx, func(e *monitor.Engine) {
 		r.account, r.slots = e.Account(), e.Slots()
 		r.conditions, r.clock = e.Conditions(), e.Clock()
 	})

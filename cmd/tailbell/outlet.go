@@ -53,7 +53,7 @@ them as not delivered until this is said.`,
 func (d *daemon) dropOutlet(_ context.Context, name string) (any, error) {
 	var waited uint64
 	found := false
-	for _, p := range d.parts {
+	for _, p := range d.parts.all() {
 		for _, q := range p.queues {
 			if q.Name() == name {
 				return nil, control.Errorf(codeRefused, "outlet %q is in use: take it out of the set-up first, and start again", name)

@@ -108,7 +108,7 @@ func outletsAtRest(setup *config.Setup, st *store.Store) ([]outletState, error) 
 // outlets answers how every outlet is doing.
 func (d *daemon) outlets() ([]outletState, error) {
 	all := []outletState{}
-	for _, p := range d.parts {
+	for _, p := range d.parts.all() {
 		states, err := outletsAtRest(d.setup, p.store)
 		if err != nil {
 			return nil, err

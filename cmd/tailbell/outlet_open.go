@@ -2,6 +2,7 @@ package main
 
 import (
 	"context"
+	"errors"
 	"fmt"
 	"math/rand/v2"
 	"net/http"
@@ -9,6 +10,8 @@ import (
 
 	"tailbell/alert/outlet"
 	"tailbell/config"
+	"tailbell/ingest/bus"
+	"tailbell/ingest/claim"
 	"tailbell/monitor/life"
 	"tailbell/monitor/store"
 )
@@ -17,20 +20,24 @@ import (
 // said to have failed.
 const busPatience = 15 * time.Second
 
-// openOutlets registers the partition's ways out and makes their queues.
-func (d *daemon) openOutlets(p *part, o daemonOptions, epoch uint64) error {
-	header := map[string][]string{"Tailbell-Owner-Epoch": {fmt.Sprint(epoch)}}
-	toBus := outlet.NewBus(d.setup.Name, func(ctx context.Context, direction, indicator, key string, event []byte) error {
+// openOutlets registers the partition's ways out and makes their queues. c is the
+// claim by which it is owned, nil for an embedded bus.
+func (d *daemon) openOutlets(p *part, epoch uint64, c *claim.Holding) error {
+	header := map[string][]string{bus.EpochHeader: {fmt.Sprint(epoch)}}
+	toBus := outlet.NewBus(d.setup.Name, func(ctx context.Context, s *outlet.Published) error {
 		ctx, cancel := context.WithTimeout(ctx, busPatience)
 		defer cancel()
-		_, err := d.bus.PublishAlert(ctx, p.number, direction, indicator, key, event, header)
+		if p.fence != nil {
+			return d.publishOwned(ctx, p, s)
+		}
+		_, err := d.bus.PublishAlert(ctx, p.number, s.Direction, s.Indicator, s.Key, s.Event, header)
 		return err
 	})
-	if err := d.openQueue(p, toBus, nil); err != nil {
+	if err := d.openQueue(p, toBus, nil, c); err != nil {
 		return err
 	}
-	if o.terminal != nil {
-		if err := d.openQueue(p, o.terminal, o.onTerminal); err != nil {
+	if d.o.terminal != nil {
+		if err := d.openQueue(p, d.o.terminal, d.o.onTerminal, c); err != nil {
 			return err
 		}
 	}
@@ -40,11 +47,21 @@ func (d *daemon) openOutlets(p *part, o daemonOptions, epoch uint64) error {
 		if err != nil {
 			return err
 		}
-		if err := d.openQueue(p, out, outlet.Wants(way)); err != nil {
+		if err := d.openQueue(p, out, outlet.Wants(way), c); err != nil {
 			return err
 		}
 	}
 	return nil
+}
+
+// publishOwned publishes a step behind the fence. An owner whom another one has
+// followed gives the partition up.
+func (d *daemon) publishOwned(ctx context.Context, p *part, s *outlet.Published) error {
+	err := p.fence.Publish(ctx, &claim.Step{Row: s.Number, Key: s.Key, Direction: s.Direction, Indicator: s.Indicator, Event: s.Event})
+	if errors.Is(err, claim.ErrStale) {
+		p.staled.Do(func() { close(p.stale) })
+	}
+	return err
 }
 
 // newOutlet makes an outlet of the set-up.
@@ -62,16 +79,23 @@ func newOutlet(setup *config.Setup, o *config.Outlet, header http.Header) (outle
 	return nil, fmt.Errorf("outlet %s: there is no way out of the kind %s", o.Name, o.Kind)
 }
 
-func (d *daemon) openQueue(p *part, out outlet.Outlet, wants func(*life.Notice) bool) error {
+func (d *daemon) openQueue(p *part, out outlet.Outlet, wants func(*life.Notice) bool, c *claim.Holding) error {
 	if err := p.store.Outlets(store.FromOldest, out.Name()); err != nil {
 		return err
 	}
-	p.queues = append(p.queues, outlet.NewQueue(p.store, out, outlet.QueueOptions{
+	o := outlet.QueueOptions{
 		Random: rand.New(rand.NewPCG(rand.Uint64(), rand.Uint64())), Wants: wants, Now: time.Now,
 		Failed: func(err error, pause time.Duration) {
-			d.log.Error().Err(err).Str("outlet", out.Name()).Dur("again_in", pause).Msg("delivering")
+			d.log.Error().Err(err).Str("outlet", out.Name()).Int("partition", p.number).Dur("again_in", pause).Msg("delivering")
 		},
-	}))
+	}
+	if d.setup.Bus.Share { // what another process has told already, and may be telling now
+		if c.Origin == p.origin && out.Name() != outlet.BusName {
+			o.Through = c.Told[out.Name()]
+		}
+		o.May = func() error { return d.member.may(p.number) }
+	}
+	p.queues = append(p.queues, outlet.NewQueue(p.store, out, o))
 	return nil
 }
 

@@ -42,7 +42,7 @@ outlets get it, and outlet list counts what was let go.`,
 
 // skipStep lets a step go in the partition in which it waits.
 func (d *daemon) skipStep(_ context.Context, req skipRequest) (any, error) {
-	for _, p := range d.parts {
+	for _, p := range d.parts.all() {
 		err := p.store.Skip(req.Outlet, req.Step)
 		switch {
 		case err == nil:

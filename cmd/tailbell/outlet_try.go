@@ -61,9 +61,13 @@ func tryAside(ctx context.Context, setup *config.Setup, name string) (string, er
 	return "", fmt.Errorf("no outlet %q in the set-up", name)
 }
 
-// tryOutlet sends a test through an outlet of the first partition.
+// tryOutlet sends a test through an outlet of the first partition that is open.
 func (d *daemon) tryOutlet(ctx context.Context, name string) (any, error) {
-	q := d.parts[0].queue(name)
+	parts := d.parts.all()
+	if len(parts) == 0 {
+		return nil, control.Errorf(codeElsewhere, "this process owns no partition at present, through whose outlet a test could go: try again")
+	}
+	q := parts[0].queue(name)
 	if q == nil {
 		return nil, control.Errorf(codeNotFound, "no outlet %q: tailbell outlet list shows them", name)
 	}

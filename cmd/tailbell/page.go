@@ -63,18 +63,18 @@ func (d *daemon) openPage() error {
 	}
 	o := page.Options{
 		Name: d.setup.Name, Act: d.actFromPage, State: d.stateForPage, Now: time.Now,
-		PartOf: func(series string) int { return d.partOf(series).number },
+		PartOf: d.numberOf,
 		Who: func(ctx context.Context) page.Person {
 			p := gate.Of(ctx)
 			return page.Person{Name: p.Name, MayAct: p.MayAct(), SignedIn: p.Named()}
 		},
 		Failed: func(err error) { d.log.Error().Err(err).Msg("serving the page") },
 	}
-	for _, p := range d.parts {
+	for _, p := range d.parts.all() {
 		o.Parts = append(o.Parts, page.Part{Store: p.store, Do: func(ctx context.Context, look func(*monitor.Engine)) error {
 			ctx, cancel := context.WithTimeout(ctx, pagePatience)
 			defer cancel()
-			return p.loop.Do(ctx, look)
+			return p.do(ctx, look)
 		}})
 	}
 	var err error
@@ -115,10 +115,14 @@ func (d *daemon) stateForPage(ctx context.Context) (*page.State, error) {
 		part := page.PartState{
 			Number: p.Number, Position: p.Position, End: p.End, Clock: p.Clock, History: p.History, Version: p.Version, Account: p.Account,
 		}
+		here := d.parts.get(p.Number)
 		for _, o := range p.Outlets {
+			if here == nil {
+				break
+			}
 			part.Outlets = append(part.Outlets, page.OutletState{
 				Name: o.Name, Delivered: o.Delivered, PassedOver: o.PassedOver, Waiting: o.Waiting,
-				Trouble: d.parts[p.Number].undelivered(store.Outlet{Name: o.Name, Depth: o.Waiting}),
+				Trouble: here.undelivered(store.Outlet{Name: o.Name, Depth: o.Waiting}),
 			})
 		}
 		s.Parts = append(s.Parts, part)

@@ -125,13 +125,13 @@ func (d *realData) throughBus(t *testing.T, path string) (steps string, records 
 	defer stop()
 	stopped := make(chan error, 1)
 	go func() { stopped <- live.run(running) }()
-	p := live.parts[0]
+	p := live.parts.get(0)
 	end, err := live.bus.EndOf(t.Context(), 0)
 	if err == nil {
 		err = p.reach(t.Context(), end)
 	}
 	if err == nil {
-		err = p.loop.Do(t.Context(), func(e *monitor.Engine) { d.account = e.Account() })
+		err = p.do(t.Context(), func(e *monitor.Engine) { d.account = e.Account() })
 	}
 	stop()
 	if err = errors.Join(err, <-stopped); err != nil {

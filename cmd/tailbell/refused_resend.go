@@ -119,10 +119,11 @@ type resendReply struct {
 // resend publishes a refusal's original bytes, waits until they are committed,
 // and says what became of them.
 func (d *daemon) resend(ctx context.Context, req resendRequest) (any, error) {
-	if req.Partition < 0 || req.Partition >= len(d.parts) {
-		return nil, control.Errorf(codeNotFound, "no partition %d: there are %d", req.Partition, len(d.parts))
+	p, err := d.part(req.Partition)
+	if err != nil {
+		return nil, err
 	}
-	row, err := d.parts[req.Partition].store.RefusedOne(req.Number)
+	row, err := p.store.RefusedOne(req.Number)
 	switch {
 	case errors.Is(err, store.ErrNotFound):
 		return nil, control.Errorf(codeNotFound, "there is no refusal %d, or it is not kept any more: tailbell refused list shows them", req.Number)
@@ -135,9 +136,11 @@ func (d *daemon) resend(ctx context.Context, req resendRequest) (any, error) {
 	if err != nil {
 		return nil, err
 	}
-	p := d.parts[out.Partition]
+	if p, err = d.part(out.Partition); err != nil {
+		return nil, err
+	}
 	var before, after monitor.Account
-	if err := p.loop.Do(ctx, func(e *monitor.Engine) { before = e.Account() }); err != nil {
+	if err := p.do(ctx, func(e *monitor.Engine) { before = e.Account() }); err != nil {
 		return nil, err
 	}
 	position, err := d.bus.Publish(ctx, out)
@@ -151,7 +154,7 @@ func (d *daemon) resend(ctx context.Context, req resendRequest) (any, error) {
 	if err != nil {
 		return nil, err
 	}
-	if err := p.loop.Do(ctx, func(e *monitor.Engine) { after = e.Account() }); err != nil {
+	if err := p.do(ctx, func(e *monitor.Engine) { after = e.Account() }); err != nil {
 		return nil, err
 	}
 	return resendReply{Position: position, Refused: len(refused) > 0, Outcome: becameOf(out.Kind, refused, before, after)}, nil
@@ -201,7 +204,7 @@ func (d *daemon) route(out *bus.Outgoing, what string) {
 		switch {
 		case reason != "":
 		case act.Alert == "":
-			out.Partition = d.partOf(act.Series).number
+			out.Partition = d.numberOf(act.Series)
 		default:
 			if _, p, err := d.find(act.Alert); err == nil {
 				out.Partition = p.number
@@ -210,7 +213,7 @@ func (d *daemon) route(out *bus.Outgoing, what string) {
 		return
 	}
 	if item := decoder.Observation(bytes.Clone(out.Data)); item.Reason == "" {
-		out.Partition = d.partOf(item.Observation.Series).number
+		out.Partition = d.numberOf(item.Observation.Series)
 	}
 }
 

@@ -31,14 +31,18 @@ type seriesReply struct {
 const seriesSlice = 1000
 
 func (d *daemon) series(ctx context.Context, req seriesRequest) (any, error) {
-	if req.Partition < 0 || req.Partition >= len(d.parts) || req.From < 0 {
-		return nil, control.Errorf(codeNotFound, "no partition %d: there are %d", req.Partition, len(d.parts))
+	p, err := d.part(req.Partition)
+	if err != nil {
+		return nil, err
 	}
 	if err := config.CheckPattern(req.Pattern); err != nil {
 		return nil, control.Errorf(control.BadRequest, "%q: %v", req.Pattern, err)
 	}
 	var r seriesReply
-	err := d.parts[req.Partition].loop.Do(ctx, func(e *monitor.Engine) {
+	if req.From < 0 {
+		return nil, control.Errorf(control.BadRequest, "series are numbered from 0, not from %d", req.From)
+	}
+	err = p.do(ctx, func(e *monitor.Engine) {
 		r.Series, r.Next = e.List(config.NewPattern(req.Pattern), req.From, seriesSlice)
 	})
 	return r, err
@@ -52,9 +56,13 @@ type seriesActReply struct {
 // actOnSeries publishes an act to every partition in which a series may match.
 // It is refused where all of them refuse it.
 func (d *daemon) actOnSeries(ctx context.Context, act *monitor.Act, data json.RawMessage) (any, error) {
-	parts := d.parts
+	parts := d.parts.all()
 	if lead := strings.Split(act.Series, "/"); !slices.ContainsFunc(lead[:min(d.setup.KeyParts, len(lead))], config.IsSum) {
-		parts = []*part{d.partOf(act.Series)}
+		p, err := d.partOf(act.Series)
+		if err != nil {
+			return nil, err
+		}
+		parts = []*part{p}
 	}
 	if act.Kind == monitor.Reset { // no matter of partitions that never heard of them
 		if some, err := partsMatching(ctx, parts, act.Series); err != nil {
@@ -76,7 +84,7 @@ func (d *daemon) actOnSeries(ctx context.Context, act *monitor.Act, data json.Ra
 			continue
 		}
 		taken = true
-		if err := p.loop.Do(ctx, func(e *monitor.Engine) { r.Series += e.Matching(act.Series) }); err != nil {
+		if err := p.do(ctx, func(e *monitor.Engine) { r.Series += e.Matching(act.Series) }); err != nil {
 			return nil, err
 		}
 	}
@@ -90,7 +98,7 @@ func (d *daemon) actOnSeries(ctx context.Context, act *monitor.Act, data json.Ra
 func partsMatching(ctx context.Context, parts []*part, pattern string) (some []*part, err error) {
 	for _, p := range parts {
 		n := 0
-		if err := p.loop.Do(ctx, func(e *monitor.Engine) { n = e.Matching(pattern) }); err != nil {
+		if err := p.do(ctx, func(e *monitor.Engine) { n = e.Matching(pattern) }); err != nil {
 			return nil, err
 		}
 		if n > 0 {

@@ -189,7 +189,7 @@ func (s *soak) publish(ctx context.Context, n int) {
 	if err != nil {
 		s.t.Fatal(err)
 	}
-	if err := s.daemon.parts[0].reach(ctx, end); err != nil {
+	if err := s.daemon.parts.get(0).reach(ctx, end); err != nil {
 		s.t.Fatal(err)
 	}
 	s.waits = append(s.waits, time.Since(acked))

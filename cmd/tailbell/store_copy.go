@@ -225,13 +225,16 @@ func (d *daemon) readErrand(name string) (order errand, p *part, err error) {
 	if err == nil {
 		err = json.Unmarshal(text, &order)
 	}
-	if err != nil || order.Partition < 0 || order.Partition >= len(d.parts) {
+	if err != nil {
 		return order, nil, control.Errorf(control.BadRequest, "the request for a copy can't be read")
+	}
+	if p, err = d.part(order.Partition); err != nil {
+		return order, nil, err
 	}
 	if why := d.unfitTarget(order.To); why != "" {
 		return order, nil, control.Errorf(codeRefused, "%s: %s", order.To, why)
 	}
-	return order, d.parts[order.Partition], nil
+	return order, p, nil
 }
 
 // unfitTarget says why no copy may be written there, "" if one may.

@@ -123,7 +123,7 @@ type trimReply struct {
 
 // trim removes messages that every partition has stored.
 func (d *daemon) trim(ctx context.Context, req trimRequest) (any, error) {
-	for _, p := range d.parts {
+	for _, p := range d.parts.all() {
 		position, err := p.store.Position()
 		if err != nil {
 			return nil, err
@@ -146,7 +146,7 @@ func (d *daemon) trim(ctx context.Context, req trimRequest) (any, error) {
 	}
 	// The set-up in force must stay in the stream: the next start compares with
 	// it. The engine passes over one that it has.
-	for _, p := range d.parts {
+	for _, p := range d.parts.all() {
 		if err := d.keepSetting(ctx, p, req.Through); err != nil {
 			return nil, err
 		}

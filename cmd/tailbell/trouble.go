@@ -83,7 +83,7 @@ func (d *daemon) standing() ([]trouble, error) {
 			all[i].Text = fmt.Sprintf("%s; tried %d times to come back", all[i].Text, n)
 		}
 	}
-	for _, p := range d.parts {
+	for _, p := range d.parts.all() {
 		outlets, err := p.store.OutletState()
 		if err != nil {
 			return nil, err

@@ -181,7 +181,7 @@ func TestOutletThatIsDownIsATrouble(t *testing.T) {
 	down := httptest.NewServer(http.HandlerFunc(func(w http.ResponseWriter, _ *http.Request) { w.WriteHeader(http.StatusBadGateway) }))
 	defer down.Close()
 	d := newTroubled(t, "history", fmt.Sprintf("[[outlet]]\nname = \"ward\"\nurl = %q\nsecret_file = %q\n", down.URL, secret), daemonOptions{})
-	if err := d.parts[0].store.Outlets(0, "gone"); err != nil {
+	if err := d.parts.get(0).store.Outlets(0, "gone"); err != nil {
 		t.Fatal(err)
 	}
 	d.begin()

@@ -18,6 +18,9 @@ import (
 const (
 	codeNotFound control.Code = "not_found"
 	codeRefused  control.Code = "refused"
+	// codeElsewhere is that for a partition that another process owns, or nobody
+	// at this moment.
+	codeElsewhere control.Code = "elsewhere"
 )
 
 // The verbs that a running daemon answers, with what they take and give.
@@ -146,7 +149,7 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 	if r.Troubles == nil {
 		r.Troubles = []trouble{}
 	}
-	for _, p := range d.parts {
+	for _, p := range d.parts.all() {
 		s := partStatus{Number: p.number, Conditions: []conditionRow{}, Outlets: []outletRow{}}
 		if r.Connected {
 			if s.End, err = d.endOf(ctx, p); err != nil {
@@ -154,7 +157,7 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 				r.Troubles = append(r.Troubles, trouble{Kind: troubleBus, Partition: p.number, Text: "the bus does not answer: " + err.Error()})
 			}
 		}
-		err = p.loop.Do(ctx, func(e *monitor.Engine) {
+		err = p.do(ctx, func(e *monitor.Engine) {
 			s.History = e.InHistory()
 			if clock := e.Clock(); clock != monitor.Beginning {
 				at := clock.Time()
@@ -191,7 +194,7 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 
 func (d *daemon) alerts(_ context.Context, req alertsRequest) (any, error) {
 	records := []life.Record{}
-	for _, p := range d.parts {
+	for _, p := range d.parts.all() {
 		rows, err := listAlerts(p.store, req)
 		if err != nil {
 			return nil, err
@@ -244,7 +247,10 @@ func (d *daemon) act(ctx context.Context, req actRequest) (any, error) {
 			return nil, err
 		}
 	} else {
-		p = d.partOf(act.Series)
+		var err error
+		if p, err = d.partOf(act.Series); err != nil {
+			return nil, err
+		}
 	}
 	switch why, err := d.publishAct(ctx, p, req.Act); {
 	case err != nil:
@@ -278,10 +284,11 @@ type refusedRow struct {
 }
 
 func (d *daemon) refused(_ context.Context, req refusedRequest) (any, error) {
-	if req.Partition < 0 || req.Partition >= len(d.parts) {
-		return nil, control.Errorf(codeNotFound, "no partition %d: there are %d", req.Partition, len(d.parts))
+	p, err := d.part(req.Partition)
+	if err != nil {
+		return nil, err
 	}
-	return listRefused(d.parts[req.Partition].store, req)
+	return listRefused(p.store, req)
 }
 
 func listRefused(st *store.Store, req refusedRequest) ([]refusedRow, error) {

@@ -27,7 +27,7 @@ func (y *yard) begin(times int) {
 	ctx, stop := context.WithCancel(y.t.Context())
 	ended := make(chan error, 1)
 	go func() { ended <- y.daemon.run(ctx) }()
-	err := y.daemon.parts[0].reach(ctx, y.end)
+	err := y.daemon.parts.get(0).reach(ctx, y.end)
 	stop()
 	if err := errors.Join(err, <-ended, y.daemon.close()); err != nil {
 		y.t.Fatal(err)
@@ -109,7 +109,7 @@ func ringing(t *testing.T, times int) {
 	defer stop()
 	go func() { ended <- d.run(ctx) }()
 	if end, err = d.bus.End(ctx); err == nil {
-		err = d.parts[0].reach(ctx, end)
+		err = d.parts.get(0).reach(ctx, end)
 	}
 	if err != nil {
 		t.Fatal(err)

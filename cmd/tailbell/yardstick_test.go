@@ -164,7 +164,7 @@ func (y *yard) round() {
 	ended := make(chan error, 1)
 	y.measure("d", func(context.Context) error {
 		go func() { ended <- y.daemon.run(ctx) }()
-		return y.daemon.parts[0].reach(ctx, y.end)
+		return y.daemon.parts.get(0).reach(ctx, y.end)
 	})
 	status, err := y.daemon.status(ctx)
 	if err != nil {

@@ -41,6 +41,9 @@ func daemonsDay(t *testing.T, g *bustest.Guarded) (err error) {
 	if _, err := b.PublishAlert(ctx, 0, "upper", "fall", "key", []byte("{}"), nil); err != nil {
 		return err
 	}
+	if err := ownersDay(ctx, b); err != nil {
+		return err
+	}
 	serve, err := control.Serve(ctx, b, map[string]control.Handler{"status": func(context.Context, []byte) (any, error) { return "fine", nil }})
 	if err == nil {
 		err = errors.Join(control.Call(ctx, b, "status", nil, nil), serve.Close())
@@ -66,6 +69,26 @@ func daemonsDay(t *testing.T, g *bustest.Guarded) (err error) {
 		return err
 	}
 	return b.Trim(ctx, 1)
+}
+
+// ownersDay claims, and publishes as an owner.
+func ownersDay(ctx context.Context, b *bus.Bus) error {
+	bucket, err := b.Claims(ctx)
+	if err != nil {
+		return err
+	}
+	if err := bucket.PutAll(ctx, []bus.Put{{Key: "p.0", Value: []byte("{}"), Keep: time.Minute}})[0].Err; err != nil {
+		return err
+	}
+	if entries, err := bucket.All(ctx); err != nil || len(entries) != 1 {
+		return fmt.Errorf("%d claims: %w", len(entries), err)
+	}
+	last, err := b.LastPublished(ctx, 0)
+	if err != nil {
+		return err
+	}
+	_, _, err = b.PublishOwned(ctx, &bus.OwnerMessage{Published: bus.Published{Position: last.Position, Epoch: 1}})
+	return err
 }
 
 // TestDaemonWorksWithItsAccount also takes each permission away in turn: what
@@ -194,9 +217,9 @@ func TestAccountsAreRefusedMore(t *testing.T) {
 	}
 	others := slices.Concat([]string{"ferrybill.in.0.obs", "$JS.API.INFO", "$JS.API.STREAM.LIST", "$JS.API.STREAM.NAMES", "_INBOX.quillmere.forged", "$SYS.REQ.SERVER.PING"},
 		api("STREAM.DELETE", "in"), api("STREAM.UPDATE", "in"), api("STREAM.MSG.DELETE", "in"), api("STREAM.SNAPSHOT", "in"), api("STREAM.RESTORE", "in"),
-		api("STREAM.DELETE", "alerts"), api("STREAM.UPDATE", "alerts"), api("STREAM.PURGE", "alerts"), api("STREAM.MSG.GET", "alerts"), api("CONSUMER.CREATE", "alerts"),
+		api("STREAM.DELETE", "alerts"), api("STREAM.UPDATE", "alerts"), api("STREAM.PURGE", "alerts"), api("CONSUMER.CREATE", "alerts"),
 		[]string{"$JS.API.CONSUMER.CREATE.quillmere-alerts.x", "$JS.API.CONSUMER.CREATE.ferrybill-in.x", "$JS.API.CONSUMER.DURABLE.CREATE.quillmere-in.x", "$JS.API.CONSUMER.DELETE.quillmere-alerts.reader"})
-	notDaemon := slices.Concat([]string{"quillmere.alert.0.upper.fall"}, api("STREAM.PURGE", "in"), api("STREAM.CREATE", "in"), api("STREAM.CREATE", "alerts"),
+	notDaemon := slices.Concat([]string{"quillmere.alert.0.upper.fall", "quillmere.alert.0.owner", "$KV.quillmere-claims.p.0", "$JS.API.STREAM.MSG.GET.quillmere-alerts", "$JS.API.DIRECT.GET.KV_quillmere-claims"}, api("STREAM.PURGE", "in"), api("STREAM.CREATE", "in"), api("STREAM.CREATE", "alerts"),
 		[]string{"$JS.API.CONSUMER.CREATE.quillmere-in.x", "$JS.API.CONSUMER.CREATE.quillmere-in.x.quillmere.in.0.*", "$JS.API.CONSUMER.MSG.NEXT.quillmere-in.x", "$JS.API.CONSUMER.DELETE.quillmere-in.x"})
 	notCommand := slices.Concat([]string{"quillmere.in.0.set", "quillmere.in.0.tick", "quillmere.in.0.act", "quillmere.control.status"},
 		api("STREAM.INFO", "in"), api("STREAM.INFO", "alerts"), api("STREAM.MSG.GET", "in"))

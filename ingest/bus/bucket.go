@@ -46,6 +46,7 @@ var ErrConflict = errors.New("somebody else has written there")
 // Every value is put by compare-and-swap.
 type Bucket struct {
 	bus    *Bus
+	js     jetstream.JetStream // which forgets what is not acknowledged
 	stream string
 	prefix string // of the subjects, with the dot
 }
@@ -53,9 +54,13 @@ type Bucket struct {
 // Claims returns the bucket in which processes say what they own; it is made if
 // it is missing.
 func (b *Bus) Claims(ctx context.Context) (*Bucket, error) {
-	c := &Bucket{b, b.names.claimStream(), b.names.claimPrefix()}
+	js, err := jetstream.New(b.nc, jetstream.WithPublishAsyncTimeout(tryTimeout))
+	if err != nil {
+		return nil, err
+	}
+	c := &Bucket{b, js, b.names.claimStream(), b.names.claimPrefix()}
 	want := b.claimConfig()
-	err := b.patiently(ctx, func(ctx context.Context) error {
+	err = b.patiently(ctx, func(ctx context.Context) error {
 		have, err := b.ensureStream(ctx, want)
 		if err != nil {
 			return err
@@ -170,7 +175,7 @@ func (c *Bucket) start(p *Put) (jetstream.PubAckFuture, error) {
 	if p.Keep > 0 {
 		opts = append(opts, jetstream.WithMsgTTL(p.Keep))
 	}
-	return c.bus.js.PublishMsgAsync(&nats.Msg{Subject: c.prefix + p.Key, Data: p.Value, Header: nats.Header{}}, opts...)
+	return c.js.PublishMsgAsync(&nats.Msg{Subject: c.prefix + p.Key, Data: p.Value, Header: nats.Header{}}, opts...)
 }
 
 // conflicting makes an ErrConflict of what the bus says of a message that does

@@ -20,7 +20,8 @@ type Log interface {
 	PublishOwned(ctx context.Context, m *bus.OwnerMessage) (position uint64, repeated bool, err error)
 }
 
-// Step is a step of an alert that is to be published.
+// Step is a step of an alert that is to be published; Row is 0 for a test, which
+// is in no outbox.
 type Step struct {
 	Row                       uint64
 	Key, Direction, Indicator string
@@ -129,8 +130,8 @@ func (f *Fence) Publish(ctx context.Context, s *Step) error {
 		return err
 	}
 	return f.try(ctx, func() (bool, error) {
-		if f.resume && s.Row <= f.mu.last.Row {
-			return true, nil
+		if f.resume && s.Row > 0 && s.Row <= f.mu.last.Row {
+			return true, f.agrees(s)
 		}
 		m := bus.OwnerMessage{
 			Partition: f.partition, Direction: s.Direction, Indicator: s.Indicator, Event: s.Event,
@@ -154,6 +155,20 @@ func (f *Fence) Publish(ctx context.Context, s *Step) error {
 		}
 		return true, nil
 	})
+}
+
+// ErrApart is returned once for a step that is in the stream under its number, but
+// as another one.
+var ErrApart = errors.New("this store has come to other steps than the one before")
+
+// agrees checks that a step is the one that the stream has last, where it is.
+func (f *Fence) agrees(s *Step) error {
+	key := f.mu.last.Key
+	if s.Row != f.mu.last.Row || key == "" || key == s.Key {
+		return nil
+	}
+	f.mu.last.Key = ""
+	return fmt.Errorf("partition %d, step %d: %w: the stream of alerts has %s, this store %s", f.partition, s.Row, ErrApart, key, s.Key)
 }
 
 // try tries until it is done, the owner is stale, or the error is no conflict.

@@ -140,17 +140,23 @@ func (k *Keeper) Release(ctx context.Context, partition int) error {
 	return k.release(ctx, []int{partition})
 }
 
-// Leave gives up everything, for good.
+// Leave says that the member takes nothing any more, so that the others may have
+// more. What it owns it keeps until Release.
 func (k *Keeper) Leave(ctx context.Context) error {
 	k.turns.Lock()
 	defer k.turns.Unlock()
-	k.presence.leaving, k.presence.sent = true, k.o.Now()-k.o.Span
-	err := k.release(ctx, k.owned())
+	now := k.o.Now()
+	k.presence.leaving = true
 	o := k.o.Board.PutAll(ctx, []bus.Put{k.present()})[0]
-	if errors.Is(o.Err, ErrConflict) {
-		o.Err = nil
+	if o.Err == nil {
+		k.presence.revision, k.presence.sent = o.Revision, now
+		return nil
 	}
-	return errors.Join(err, o.Err)
+	k.presence.sent = now - k.o.Span // the next turn says it
+	if errors.Is(o.Err, ErrConflict) {
+		return nil
+	}
+	return o.Err
 }
 
 func (k *Keeper) release(ctx context.Context, numbers []int) error {

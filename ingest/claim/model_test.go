@@ -202,8 +202,11 @@ func (p *process) act(what int) {
 		p.start()
 	case what == 1 && !w.calm:
 		p.take()
-		p.close(slices.Sorted(maps.Keys(p.parts))...)
 		_ = p.k.Leave(ctx) //nolint:errcheck // refusals are part of it
+		for n := range partitions {
+			p.close(n)
+			_ = p.k.Release(ctx, n) //nolint:errcheck // refusals are part of it
+		}
 		p.stop = true
 	case p.stop:
 		if w.calm || what < 10 {

@@ -1,0 +1,181 @@
+package main
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"io/fs"
+	"os"
+	"path/filepath"
+	"sync"
+	"sync/atomic"
+	"time"
+
+	"tailbell/alert/outlet"
+	"tailbell/config"
+	"tailbell/ingest/bus"
+	"tailbell/ingest/claim"
+	"tailbell/ingest/control"
+	"tailbell/ingest/intake"
+	"tailbell/monitor"
+	"tailbell/monitor/partition"
+	"tailbell/monitor/store"
+)
+
+// part is one partition at work.
+type part struct {
+	number int
+	store  *store.Store
+	intake *intake.Intake
+	loop   *partition.Loop
+	ticker *intake.Ticker
+	queues []*outlet.Queue
+	fence  *claim.Fence // nil for an embedded bus
+	origin string       // when the stream was made, that the store is filled from
+	noRoom atomic.Bool  // the last commit found no room
+
+	// stop ends what startPart began, which running waits for. gone ends with the
+	// loop: nothing is asked of the engine any more.
+	stop    context.CancelFunc
+	running sync.WaitGroup
+	gone    context.Context //nolint:containedctx // the part's own life
+	leave   context.CancelFunc
+	stale   chan struct{} // closed when another owner's mark was found
+	staled  sync.Once
+
+	mu struct {
+		sync.Mutex
+		position uint64        // committed
+		moved    chan struct{} // closed at the next commit
+	}
+}
+
+
+func storePath(setup *config.Setup, partition int) string {
+	return filepath.Join(setup.Folder, fmt.Sprintf("partition-%d.store", partition))
+}
+
+func identityOf(setup *config.Setup, partition int) store.Identity {
+	return store.Identity{Deployment: setup.Name, Partition: partition, Partitions: setup.Partitions, KeyParts: setup.KeyParts}
+}
+
+func openStore(setup *config.Setup, partition int) (*store.Store, error) {
+	path := storePath(setup, partition)
+	if _, err := os.Stat(path); errors.Is(err, fs.ErrNotExist) {
+		return store.Create(path, identityOf(setup, partition), store.Options{})
+	}
+	return store.Open(path, identityOf(setup, partition), store.Options{})
+}
+
+// openPart opens a partition: c is the claim by which it is owned, nil for an
+// embedded bus.
+func (d *daemon) openPart(ctx context.Context, number int, c *claim.Holding) (p *part, err error) {
+	st, err := d.openOwnStore(ctx, number, c)
+	if err != nil {
+		return nil, err
+	}
+	p = &part{number: number, store: st, stale: make(chan struct{})}
+	p.gone, p.leave = context.WithCancel(context.Background())
+	p.mu.moved = make(chan struct{})
+	defer func() {
+		if err != nil {
+			err = errors.Join(err, p.close())
+		}
+	}()
+	if err := intake.Verify(ctx, d.bus, st); err != nil {
+		return p, err
+	}
+	stream, _, err := st.Stream()
+	if err != nil {
+		return p, err
+	}
+	p.origin = stream.Created.UTC().Format(time.RFC3339Nano)
+	if err := followsStored(st, d.setup); err != nil {
+		return p, err
+	}
+	// Only now may anything be published: the stream is known to be the one.
+	if err := announceSetup(ctx, d.bus, d.setup, number); err != nil {
+		return p, err
+	}
+	epoch, err := d.succeed(ctx, p, c)
+	if err != nil {
+		return p, err
+	}
+	if err := st.SetEpoch(epoch); err != nil {
+		return p, err
+	}
+	if d.member != nil {
+		d.member.noteEpoch(number, epoch)
+	}
+	if err := d.openOutlets(p, epoch, c); err != nil {
+		return p, err
+	}
+	engine, err := partition.Recover(st)
+	if err != nil {
+		return p, err
+	}
+	p.mu.position = engine.Position()
+	if err := d.openIntake(ctx, p); err != nil {
+		return p, err
+	}
+	p.loop = partition.New(engine, st, p.intake, partition.Options{
+		MaxBatch: d.o.maxBatch, Committed: func(position uint64) { d.committed(p, position) },
+		Full: func(ctx context.Context, err error) error { return d.full(ctx, p, err) },
+	})
+	p.ticker = intake.NewTicker(p.loop.Due, func(ctx context.Context) error {
+		if p.intake.Held() != nil {
+			return nil // it would only queue up behind what is held
+		}
+		_, err := d.bus.Publish(ctx, bus.Outgoing{Partition: number, Kind: bus.Tick})
+		return err
+	}, func(err error) { d.log.Error().Err(err).Msg("publishing a tick") })
+	return p, nil
+}
+
+// openIntake begins to read the partition's stream where the store stands.
+func (d *daemon) openIntake(ctx context.Context, p *part) error {
+	now := d.o.now
+	if now == nil {
+		now = time.Now
+	}
+	marks, err := p.store.Marks()
+	if err != nil {
+		return err
+	}
+	o := intake.Options{
+		After: p.mu.position, Stored: monitor.Beginning, Now: now,
+		Gap:  func(m bus.Missing) { d.gap(p.number, m) },
+		Held: func(h *intake.Hold) { d.held(p.number, h) },
+	}
+	if len(marks) > 0 {
+		o.Stored = marks[0].Stored
+	}
+	p.intake, err = intake.Open(ctx, d.bus, d.setup, p.number, o)
+	return err
+}
+
+
+// do runs look on the engine between two messages.
+func (p *part) do(ctx context.Context, look func(*monitor.Engine)) error {
+	ctx, cancel := context.WithCancelCause(ctx)
+	defer cancel(nil)
+	defer context.AfterFunc(p.gone, func() { cancel(errMoving) })()
+	if err := p.loop.Do(ctx, look); err != nil {
+		return context.Cause(ctx)
+	}
+	return nil
+}
+
+// errMoving is returned for a partition that is being closed, here.
+var errMoving = control.Errorf(codeElsewhere, "the partition is moving to another process: try again")
+
+// close lets go of the partition, which must not run.
+func (p *part) close() error {
+	var errs []error
+	p.leave()
+	if p.intake != nil {
+		errs = append(errs, p.intake.Close())
+	}
+	return errors.Join(append(errs, p.store.Close())...)
+}
+

@@ -1,0 +1,83 @@
+package main
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"io/fs"
+	"os"
+
+	"tailbell/ingest/bus"
+	"tailbell/ingest/claim"
+	"tailbell/monitor/store"
+)
+
+// openOwnStore opens the store of a partition. Where processes share the
+// partitions, one that is not the last owner's is put aside: it may hold what
+// the last owner never had.
+func (d *daemon) openOwnStore(ctx context.Context, number int, c *claim.Holding) (*store.Store, error) {
+	if !d.setup.Bus.Share {
+		return openStore(d.setup, number)
+	}
+	last, err := d.bus.LastPublished(ctx, number)
+	if err != nil {
+		return nil, err
+	}
+	path := storePath(d.setup, number)
+	if _, err := os.Stat(path); !errors.Is(err, fs.ErrNotExist) {
+		st, err := store.Open(path, identityOf(d.setup, number), store.Options{})
+		if err != nil {
+			return nil, err
+		}
+		epoch, err := st.Epoch()
+		if err == nil && epoch >= max(c.Follows, last.Epoch) {
+			return st, nil
+		}
+		if err := errors.Join(err, st.Close()); err != nil {
+			return nil, err
+		}
+		d.log.Info().Int("partition", number).Uint64("epoch", epoch).Uint64("last", max(c.Follows, last.Epoch)).Msg("the store here is not the last owner's: it is put aside")
+		if err := os.Rename(path, path+staleEnding); err != nil {
+			return nil, err
+		}
+	}
+	return d.foundStore(ctx, number)
+}
+
+// staleEnding ends the name of a store that was put aside; there is one at most.
+const staleEnding = ".stale"
+
+// foundStore begins a new store, from the beginning of the stream.
+func (d *daemon) foundStore(ctx context.Context, number int) (*store.Store, error) {
+	id, err := d.bus.Identity(ctx)
+	if err != nil {
+		return nil, err
+	}
+	if id.First > 1 && id.Last > 0 {
+		return nil, fmt.Errorf("there is no store to go on from, and the stream begins at position %d: what lies before it was trimmed or has expired. "+
+			"Put a copy in place with tailbell store rebuild", id.First)
+	}
+	return store.Create(storePath(d.setup, number), identityOf(d.setup, number), store.Options{})
+}
+
+// succeed makes the process the owner of a partition on the bus, from the mark
+// in the stream of alerts on, and returns its epoch.
+func (d *daemon) succeed(ctx context.Context, p *part, c *claim.Holding) (uint64, error) {
+	stored, err := p.store.Epoch()
+	if err != nil || c == nil {
+		return stored + 1, err
+	}
+	last, err := d.bus.LastPublished(ctx, p.number)
+	if err != nil {
+		return 0, err
+	}
+	epoch, err := d.member.keeper.Raise(ctx, p.number, max(c.Epoch, last.Epoch+1, stored+1))
+	if err != nil {
+		return 0, err
+	}
+	p.fence = claim.NewFence(d.bus, p.number, epoch, p.origin, d.setup.Bus.Share)
+	if err := p.fence.Take(ctx); err != nil && !errors.Is(err, bus.ErrFull) { // a full stream takes the mark before the next step
+		return 0, err
+	}
+	return epoch, nil
+}
