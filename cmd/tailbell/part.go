@@ -50,7 +50,6 @@ type part struct {
 	}
 }
 
-
 func storePath(setup *config.Setup, partition int) string {
 	return filepath.Join(setup.Folder, fmt.Sprintf("partition-%d.store", partition))
 }
@@ -154,7 +153,6 @@ func (d *daemon) openIntake(ctx context.Context, p *part) error {
 	return err
 }
 
-
 // do runs look on the engine between two messages.
 func (p *part) do(ctx context.Context, look func(*monitor.Engine)) error {
 	ctx, cancel := context.WithCancelCause(ctx)
@@ -178,4 +176,3 @@ func (p *part) close() error {
 	}
 	return errors.Join(append(errs, p.store.Close())...)
 }
-

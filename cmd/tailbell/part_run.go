@@ -89,7 +89,6 @@ func (p *part) reach(ctx context.Context, position uint64) error {
 	}
 }
 
-
 // explain says how far the stream differs from the store if that is what ended
 // the loop.
 func (d *daemon) explain(p *part, err error) error {
@@ -145,7 +144,6 @@ func (d *daemon) goLivePart(ctx context.Context, p *part) error {
 	return err
 }
 
-
 // flush delivers what still waits, each outlet beside the others. An outlet
 // that is down keeps its steps: they are delivered at the next start.
 func (d *daemon) flush(parts []*part) {
@@ -163,4 +161,3 @@ func (d *daemon) flush(parts []*part) {
 	}
 	flushing.Wait()
 }
-
