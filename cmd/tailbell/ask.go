@@ -46,6 +46,9 @@ func sayNeverRan(setup *config.Setup, err error) error {
 	if !errors.Is(err, bus.ErrNoDaemon) {
 		return err
 	}
+	if setup.Bus.Share {
+		return fmt.Errorf("%w, and no other process that shares its partitions: tailbell run starts one", err)
+	}
 	if _, statErr := os.Stat(storePath(setup, 0)); errors.Is(statErr, fs.ErrNotExist) {
 		return fmt.Errorf("nothing has run yet in %s: tailbell run starts the daemon", setup.Folder)
 	}
@@ -55,6 +58,9 @@ func sayNeverRan(setup *config.Setup, err error) error {
 // lookAside reads what a verb would tell from the stores of a daemon that does
 // not run.
 func lookAside(setup *config.Setup, use func(*store.Store) error) (err error) {
+	if setup.Bus.Share { // the stores are spread, and none here may be the last
+		return sayNeverRan(setup, bus.ErrNoDaemon)
+	}
 	for n := range setup.Partitions {
 		st, err := store.OpenReadOnly(storePath(setup, n), store.Options{})
 		if errors.Is(err, fs.ErrNotExist) {

@@ -277,6 +277,53 @@ func TestShare(t *testing.T) {
 	}
 }
 
+// TestCommandsOfACluster asks one process, which ever answers, for what all of
+// them have.
+func TestCommandsOfACluster(t *testing.T) {
+	c := newCluster(t, 3, true)
+	for _, s := range c.services {
+		s.start()
+	}
+	c.look()
+	c.evenly(3)
+	c.feed(0, 40)
+	c.services[0].await("steps", func() bool { return c.steps() >= 40 })
+	config := c.services[1].path
+	status, ok := c.services[2].status()
+	if !ok || len(status.Partitions) != 8 || len(status.Troubles) > 0 {
+		t.Errorf("%d partitions, %+v", len(status.Partitions), status.Troubles)
+	}
+	elements := int64(0)
+	for _, p := range status.Partitions {
+		elements += p.Account.Elements
+	}
+	if elements != 400 {
+		t.Errorf("%d elements", elements)
+	}
+	list := says(t, 0, nil, "alert", "list", "--config", config)
+	lines := strings.Split(strings.TrimSpace(list), "\n")
+	if len(lines) < 41 {
+		t.Fatalf("%d lines:\n%s", len(lines), list)
+	}
+	for _, i := range []int{1, 7, 20, 39} {
+		id := strings.Fields(lines[i])[0]
+		says(t, 0, []string{"Noted on alert " + id}, "alert", "note", id, "--by", "B. Ostrander", "--why", "line set", "--config", config)
+		says(t, 0, []string{"line set"}, "alert", "show", id, "--config", config)
+	}
+	says(t, 1, []string{"no alert"}, "alert", "show", "nothing", "--config", config)
+	if got := strings.Count(says(t, 0, nil, "alert", "export", "--config", config), "line set"); got != 4 {
+		t.Errorf("%d notes in the export", got)
+	}
+	if got := strings.Count(says(t, 0, nil, "series", "list", "--config", config), "/ward-1/fall"); got != 40 {
+		t.Errorf("%d series", got)
+	}
+	says(t, 0, nil, "outlet", "list", "--config", config)
+	says(t, 0, nil, "outlet", "try", "bus", "--config", config)
+	says(t, 1, []string{"no outlet"}, "outlet", "drop", "nothing", "--config", config)
+	says(t, 0, []string{"No intake is held"}, "clock", "accept", "--config", config)
+	says(t, 0, []string{"nothing changes"}, "config", "diff", config)
+}
+
 // TestAlone checks that a second process is refused where processes do not share,
 // while the first lives, and goes on at once after it.
 func TestAlone(t *testing.T) {

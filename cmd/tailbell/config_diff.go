@@ -134,7 +134,7 @@ func diffSetup(ctx context.Context, file, path string) (*diffReply, error) {
 	if err != nil {
 		return nil, err
 	}
-	if _, err := os.Stat(storePath(current, 0)); errors.Is(err, fs.ErrNotExist) {
+	if _, err := os.Stat(storePath(current, 0)); errors.Is(err, fs.ErrNotExist) && !current.Bus.Share {
 		reply.Notes = append(reply.Notes, "nothing has run yet in "+current.Folder+": the first run takes the set-up as it is")
 		return reply, nil
 	}

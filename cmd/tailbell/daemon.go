@@ -78,8 +78,20 @@ func openDaemon(ctx context.Context, setup *config.Setup, o daemonOptions) (d *d
 			return d, err
 		}
 	}
-	d.serve, err = control.Serve(ctx, b, d.verbs())
-	return d, err
+	return d, d.answer(ctx)
+}
+
+// answer begins to answer commands.
+func (d *daemon) answer(ctx context.Context) (err error) {
+	if !d.setup.Bus.Share {
+		d.serve, err = control.Serve(ctx, d.bus, d.verbs())
+		return err
+	}
+	if d.member.serve, err = control.ServeMember(ctx, d.bus, d.member.keeper.Name(), d.memberVerbs()); err != nil {
+		return err
+	}
+	d.serve, err = control.ServeShared(ctx, d.bus, (&front{d}).verbs())
+	return err
 }
 
 // openParts opens every partition, which on a bus of somebody else's must be the
@@ -142,6 +154,9 @@ func (d *daemon) close() error {
 	}
 	if d.serve != nil {
 		errs = append(errs, d.serve.Close())
+	}
+	if d.member != nil && d.member.serve != nil {
+		errs = append(errs, d.member.serve.Close())
 	}
 	d.copies.all.Wait()
 	if d.member != nil {

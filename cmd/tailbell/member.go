@@ -16,6 +16,7 @@ import (
 	"tailbell/config"
 	"tailbell/ingest/bus"
 	"tailbell/ingest/claim"
+	"tailbell/ingest/control"
 	"tailbell/monitor/store"
 )
 
@@ -26,8 +27,9 @@ type member struct {
 	keeper  *claim.Keeper
 	keeping sync.WaitGroup
 	stop    context.CancelFunc
-	failed  chan error    // the keeper gave up
-	told    chan struct{} // there are events
+	failed  chan error      // the keeper gave up
+	told    chan struct{}   // there are events
+	serve   *control.Server // of what the others ask, nil for none
 
 	mu struct {
 		sync.Mutex
@@ -283,7 +285,7 @@ func (m *member) take(ctx context.Context, e *claim.Event) error {
 		log.Uint64("epoch", e.Claim.Epoch).Msg("the partition is this process's")
 		next := newTenure(ctx, &e.Claim)
 		m.tenures[e.Partition] = next
-		m.all.Go(func() { m.serve(next, e.Partition, t) })
+		m.all.Go(func() { m.hold(next, e.Partition, t) })
 	}
 	return nil
 }

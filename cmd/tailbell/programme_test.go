@@ -369,7 +369,7 @@ func (p *programme) again(t *testing.T, batch int, alerts string) {
 	go func() { stopped <- d.run(ctx) }()
 	end, err := d.bus.EndOf(ctx, 0)
 	if err == nil {
-		err = d.parts[0].reach(ctx, end)
+		err = d.parts.get(0).reach(ctx, end)
 	}
 	code, list, _ := run(t, "alert", "list", "--all", "--json")
 	stop()

@@ -123,6 +123,15 @@ type trimReply struct {
 
 // trim removes messages that every partition has stored.
 func (d *daemon) trim(ctx context.Context, req trimRequest) (any, error) {
+	if _, err := d.trimOwn(ctx, req); err != nil {
+		return nil, err
+	}
+	return d.trimStream(ctx, req)
+}
+
+// trimOwn makes sure that the partitions that are open here can do without what
+// is to be removed.
+func (d *daemon) trimOwn(ctx context.Context, req trimRequest) (any, error) {
 	for _, p := range d.parts.all() {
 		position, err := p.store.Position()
 		if err != nil {
@@ -142,7 +151,7 @@ func (d *daemon) trim(ctx context.Context, req trimRequest) (any, error) {
 	}
 	before, err := d.bus.Identity(ctx)
 	if err != nil || req.Through < before.First {
-		return trimReply{First: before.First}, err
+		return nil, err
 	}
 	// The set-up in force must stay in the stream: the next start compares with
 	// it. The engine passes over one that it has.
@@ -150,6 +159,15 @@ func (d *daemon) trim(ctx context.Context, req trimRequest) (any, error) {
 		if err := d.keepSetting(ctx, p, req.Through); err != nil {
 			return nil, err
 		}
+	}
+	return nil, nil
+}
+
+// trimStream removes the messages.
+func (d *daemon) trimStream(ctx context.Context, req trimRequest) (any, error) {
+	before, err := d.bus.Identity(ctx)
+	if err != nil || req.Through < before.First {
+		return trimReply{First: before.First}, err
 	}
 	if err := d.bus.Trim(ctx, req.Through); err != nil {
 		return nil, err

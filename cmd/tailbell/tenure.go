@@ -31,9 +31,9 @@ var errLost = errors.New("another process owns the partition")
 // openAgain is how long to wait before it is tried again to open a partition.
 const openAgain = time.Second
 
-// serve runs a partition for as long as it is owned. The one before on the same
+// hold runs a partition for as long as it is owned. The one before on the same
 // partition must have ended.
-func (m *member) serve(t *tenure, n int, before *tenure) {
+func (m *member) hold(t *tenure, n int, before *tenure) {
 	defer close(t.done)
 	defer t.lose(nil)
 	if before != nil {

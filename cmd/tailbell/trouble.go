@@ -23,6 +23,8 @@ const (
 	troubleMissing     troubleKind = "messages missing"    // removed before they could be read
 	troubleNoRoom      troubleKind = "no room"             // nothing can be stored
 	troubleUndelivered troubleKind = "steps not delivered" // an outlet fails
+	troubleUnowned     troubleKind = "no owner"            // no process answers for the partition
+	troubleWaiting     troubleKind = "takes no part"       // the process owns nothing, and why
 )
 
 // stops reports whether the trouble keeps the daemon from reading on.
@@ -81,6 +83,11 @@ func (d *daemon) standing() ([]trouble, error) {
 	for i := range all {
 		if n := d.bus.Tries(); all[i].Kind == troubleBus && n > 0 {
 			all[i].Text = fmt.Sprintf("%s; tried %d times to come back", all[i].Text, n)
+		}
+	}
+	if d.member != nil {
+		if why := d.member.keeper.Waits(); why != "" {
+			all = append(all, trouble{Kind: troubleWaiting, Partition: everyPartition, Text: why})
 		}
 	}
 	for _, p := range d.parts.all() {

@@ -352,5 +352,11 @@ func (b *Bus) Broken() string {
 // without harm.
 func (b *Bus) Notes() []string { return b.notes }
 
+// MemberSubject is the subject on which one of several daemons that share the
+// deployment answers the verb to the others.
+func (b *Bus) MemberSubject(member, verb string) string {
+	return b.names.control(token(member) + "." + verb)
+}
+
 // ControlSubject is the subject on which a daemon answers the verb.
 func (b *Bus) ControlSubject(verb string) string { return b.names.control(verb) }

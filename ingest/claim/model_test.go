@@ -18,7 +18,7 @@ import (
 
 var (
 	modelSeed = flag.Uint64("model.seed", 0, "the `SEED` of one run of the model; 0 for many")
-	modelRuns = flag.Int("model.runs", 300, "how `MANY` runs of the model")
+	modelRuns = flag.Int("model.runs", 100, "how `MANY` runs of the model")
 )
 
 const (
@@ -332,6 +332,7 @@ func (w *world) check() {
 
 // life is one run of the model, and what went wrong in it.
 func life(t *testing.T, seed uint64, open bool) (w *world) {
+	t.Helper()
 	synctest.Test(t, func(*testing.T) {
 		w = &world{
 			random: rand.New(rand.NewPCG(seed, 1)), began: time.Now(), entries: map[string]bus.Entry{}, open: open,

@@ -17,6 +17,15 @@ import (
 // deadline, at most 30 s. What the daemon reports is an *Error; its code is
 // NoAnswer if no daemon answers the verb.
 func Call(ctx context.Context, b *bus.Bus, verb string, arg, result any) error {
+	return call(ctx, b, b.ControlSubject(verb), verb, arg, result)
+}
+
+// CallMember asks one of several processes, by its name.
+func CallMember(ctx context.Context, b *bus.Bus, member, verb string, arg, result any) error {
+	return call(ctx, b, b.MemberSubject(member, verb), verb, arg, result)
+}
+
+func call(ctx context.Context, b *bus.Bus, subject, verb string, arg, result any) error {
 	if err := checkVerb(verb); err != nil {
 		return err
 	}
@@ -26,7 +35,7 @@ func Call(ctx context.Context, b *bus.Bus, verb string, arg, result any) error {
 	if err != nil {
 		return err
 	}
-	msg, err := b.Request(ctx, b.ControlSubject(verb), data)
+	msg, err := b.Request(ctx, subject, data)
 	switch {
 	case errors.Is(err, nats.ErrNoResponders):
 		return Errorf(NoAnswer, "no daemon answers %q: is it running, and of the same version?", verb)

@@ -1,0 +1,419 @@
+package main
+
+import (
+	"context"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"slices"
+	"sync"
+	"time"
+
+	"tailbell/config"
+	"tailbell/ingest/control"
+	"tailbell/ingest/wire"
+	"tailbell/monitor/life"
+)
+
+// front answers commands for all processes that share the partitions: each
+// request reaches one of them, which asks those that own what it is about.
+type front struct{ d *daemon }
+
+// partial is what one process answers for the partitions that it owns.
+type partial struct {
+	Partitions []int           `json:"partitions"`
+	Body       json.RawMessage `json:"body"`
+	err        error
+}
+
+// memberVerbs are the verbs that the process answers for its own partitions.
+func (d *daemon) memberVerbs() map[string]control.Handler {
+	verbs := d.verbs()
+	verbs[verbTrim] = answer(d.trimOwn)
+	for verb, handler := range verbs {
+		verbs[verb] = func(ctx context.Context, body []byte) (any, error) {
+			p, err := d.partial(ctx, handler, body)
+			return p, err
+		}
+	}
+	return verbs
+}
+
+func (d *daemon) partial(ctx context.Context, handler control.Handler, body []byte) (p partial, err error) {
+	p.Partitions = []int{}
+	for _, one := range d.parts.all() { // before, so that none is said to be in the answer that came later
+		p.Partitions = append(p.Partitions, one.number)
+	}
+	result, err := handler(ctx, body)
+	if err != nil {
+		return p, err
+	}
+	p.Body, err = json.Marshal(result)
+	return p, err
+}
+
+// verbs are the verbs for commands.
+func (f *front) verbs() map[string]control.Handler {
+	verbs := map[string]control.Handler{
+		verbStatus:     f.status,
+		verbAlert:      f.first(verbAlert),
+		verbAct:        answer(f.act),
+		verbTryOutlet:  f.first(verbTryOutlet),
+		verbSkipStep:   f.first(verbSkipStep),
+		verbCopy:       f.first(verbCopy),
+		verbDropOutlet: f.dropOutlet,
+		verbSetting:    f.setting,
+		verbTrim:       answer(f.trim),
+	}
+	for _, verb := range []string{verbAlerts, verbClock, verbOutlets} {
+		verbs[verb] = f.lists(verb)
+	}
+	for _, verb := range []string{verbRefused, verbExport, verbResend, verbSeries} {
+		verbs[verb] = f.ofPartition(verb)
+	}
+	return verbs
+}
+
+// ask asks one process; this one needs no bus for that.
+func (f *front) ask(ctx context.Context, member, verb string, body []byte) (p partial) {
+	if member == f.d.member.keeper.Name() {
+		p, p.err = f.d.partial(ctx, f.d.ownVerb(verb), body)
+		return p
+	}
+	var arg any
+	if body != nil {
+		arg = json.RawMessage(body)
+	}
+	p.err = control.CallMember(ctx, f.d.bus, member, verb, arg, &p)
+	return p
+}
+
+// ownVerb is what answers a verb for the process's own partitions.
+func (d *daemon) ownVerb(verb string) control.Handler {
+	if verb == verbTrim {
+		return answer(d.trimOwn)
+	}
+	return d.verbs()[verb]
+}
+
+// owners are the processes that own something, this one first.
+func (f *front) owners() []string {
+	keeper := f.d.member.keeper
+	owners := []string{keeper.Name()}
+	for n := range f.d.setup.Partitions {
+		if owner := keeper.OwnerOf(n); owner != "" && !slices.Contains(owners, owner) {
+			owners = append(owners, owner)
+		}
+	}
+	return owners
+}
+
+// everyone asks every owner at the same time.
+func (f *front) everyone(ctx context.Context, verb string, body []byte) []partial {
+	owners := f.owners()
+	answers := make([]partial, len(owners))
+	var asking sync.WaitGroup
+	for i, owner := range owners {
+		asking.Go(func() { answers[i] = f.ask(ctx, owner, verb, body) })
+	}
+	asking.Wait()
+	return answers
+}
+
+// missing are the partitions for which nobody has answered.
+func (f *front) missing(answers []partial) (missing []int) {
+	have := make([]bool, f.d.setup.Partitions)
+	for _, a := range answers {
+		if a.err != nil {
+			continue
+		}
+		for _, n := range a.Partitions {
+			have[n] = true
+		}
+	}
+	for n, ok := range have {
+		if !ok {
+			missing = append(missing, n)
+		}
+	}
+	return missing
+}
+
+// frontAgain is how long to wait before it is asked again, while a partition
+// moves from one process to another.
+const frontAgain = 300 * time.Millisecond
+
+// whole asks everyone, again while a partition is on its way, until all
+// partitions are in the answers.
+func (f *front) whole(ctx context.Context, verb string, body []byte) ([]partial, error) {
+	for {
+		answers := f.everyone(ctx, verb, body)
+		missing := f.missing(answers)
+		if len(missing) == 0 {
+			return answers, nil
+		}
+		select {
+		case <-time.After(frontAgain):
+			if deadline, ok := ctx.Deadline(); !ok || time.Until(deadline) > time.Second {
+				continue
+			}
+		case <-ctx.Done():
+		}
+		for _, a := range answers {
+			if a.err != nil {
+				return nil, fmt.Errorf("a process that owns a part does not answer: %w", a.err)
+			}
+		}
+		return nil, control.Errorf(codeElsewhere, "nobody owns partition %d at present, so that the answer would not be whole: try again", missing[0])
+	}
+}
+
+// lists puts the lists of all owners together.
+func (f *front) lists(verb string) control.Handler {
+	return func(ctx context.Context, body []byte) (any, error) {
+		answers, err := f.whole(ctx, verb, body)
+		if err != nil {
+			return nil, err
+		}
+		all := []json.RawMessage{}
+		for _, a := range answers {
+			var list []json.RawMessage
+			if err := json.Unmarshal(a.Body, &list); err != nil {
+				return nil, err
+			}
+			all = append(all, list...)
+		}
+		return all, nil
+	}
+}
+
+// elsewhere reports whether an error only says that another process has it.
+func elsewhere(err error) bool {
+	var e *control.Error
+	return errors.As(err, &e) && (e.Code == codeNotFound || e.Code == codeElsewhere)
+}
+
+// first gives the answer of the owner that has what is asked for.
+func (f *front) first(verb string) control.Handler {
+	return func(ctx context.Context, body []byte) (any, error) {
+		owners := f.owners()
+		var last error
+		answers := make([]partial, 0, len(owners))
+		for _, owner := range owners {
+			a := f.ask(ctx, owner, verb, body)
+			if a.err == nil {
+				return a.Body, nil
+			}
+			if !elsewhere(a.err) {
+				return nil, a.err
+			}
+			last = a.err
+			answers = append(answers, a)
+		}
+		if n := f.unowned(); n >= 0 {
+			return nil, control.Errorf(codeElsewhere, "%v (nobody owns partition %d at present: try again)", last, n)
+		}
+		return nil, last
+	}
+}
+
+// unowned is a partition that nobody owns, -1 if there is none.
+func (f *front) unowned() int {
+	for n := range f.d.setup.Partitions {
+		if f.d.member.keeper.OwnerOf(n) == "" {
+			return n
+		}
+	}
+	return -1
+}
+
+// ofPartition asks the owner of the partition that a request names.
+func (f *front) ofPartition(verb string) control.Handler {
+	return answer(func(ctx context.Context, raw json.RawMessage) (any, error) {
+		var req struct {
+			Partition int `json:"partition"`
+		}
+		if err := json.Unmarshal(raw, &req); err != nil {
+			return nil, control.Errorf(control.BadRequest, "the request can't be read: %v", err)
+		}
+		return f.owner(ctx, req.Partition, verb, raw)
+	})
+}
+
+// owner asks the owner of a partition.
+func (f *front) owner(ctx context.Context, n int, verb string, body []byte) (any, error) {
+	if n < 0 || n >= f.d.setup.Partitions {
+		return nil, control.Errorf(codeNotFound, "no partition %d: there are %d", n, f.d.setup.Partitions)
+	}
+	owner := f.d.member.keeper.OwnerOf(n)
+	if owner == "" {
+		return nil, control.Errorf(codeElsewhere, "nobody owns partition %d at present: try again", n)
+	}
+	a := f.ask(ctx, owner, verb, body)
+	return a.Body, a.err
+}
+
+// status puts together how all owners are doing.
+func (f *front) status(ctx context.Context, body []byte) (any, error) {
+	all := &statusReply{Name: f.d.setup.Name, Setup: f.d.setup.Digest, Connected: f.d.bus.Connected(), Troubles: []trouble{}, Partitions: []partStatus{}}
+	answers := f.everyone(ctx, verbStatus, body)
+	for i, a := range answers {
+		var one statusReply
+		if a.err == nil {
+			a.err = json.Unmarshal(a.Body, &one)
+		}
+		if a.err != nil && i == 0 {
+			return nil, a.err
+		}
+		if a.err != nil {
+			continue // its partitions are missing below
+		}
+		all.Connected = all.Connected && one.Connected
+		all.Troubles = append(all.Troubles, one.Troubles...)
+		all.Partitions = append(all.Partitions, one.Partitions...)
+	}
+	for _, n := range f.missing(answers) {
+		text := "nobody owns it at present"
+		if owner := f.d.member.keeper.OwnerOf(n); owner != "" {
+			text = "the process " + owner + " owns it, but has not answered for it"
+		}
+		all.Troubles = append(all.Troubles, trouble{Kind: troubleUnowned, Partition: n, Text: text})
+	}
+	slices.SortFunc(all.Partitions, func(a, b partStatus) int { return a.Number - b.Number })
+	return all, nil
+}
+
+// act has the owner take an act; one on the series of a pattern is taken by all.
+func (f *front) act(ctx context.Context, req actRequest) (any, error) {
+	act, reason, detail := wire.NewDecoder(wire.Limits{}).Act(req.Act)
+	if reason != "" {
+		return nil, control.Errorf(codeRefused, "%s", detail)
+	}
+	body, err := json.Marshal(req)
+	if err != nil {
+		return nil, err
+	}
+	switch {
+	case act.Alert != "":
+		id, err := json.Marshal(act.Alert)
+		if err != nil {
+			return nil, err
+		}
+		found, err := f.first(verbAlert)(ctx, id)
+		if err != nil {
+			return nil, err
+		}
+		raw, _ := found.(json.RawMessage) //nolint:errcheck // anything else is no alert, below
+		var record life.Record
+		if err := json.Unmarshal(raw, &record); err != nil {
+			return nil, err
+		}
+		return f.owner(ctx, f.d.numberOf(record.Series), verbAct, body)
+	case !act.Kind.OnSeries() || !config.IsSum(act.Series):
+		return f.owner(ctx, f.d.numberOf(act.Series), verbAct, body)
+	}
+	return f.actOnAll(ctx, body)
+}
+
+// actOnAll has every owner take an act on series. It is refused where all refuse
+// it.
+func (f *front) actOnAll(ctx context.Context, body []byte) (any, error) {
+	if n := f.unowned(); n >= 0 {
+		return nil, control.Errorf(codeElsewhere, "nobody owns partition %d at present, in which a series may match: try again", n)
+	}
+	var all seriesActReply
+	var refused error
+	taken := false
+	for _, a := range f.everyone(ctx, verbAct, body) {
+		var one seriesActReply
+		var why *control.Error
+		switch {
+		case errors.As(a.err, &why) && why.Code == codeRefused, elsewhere(a.err):
+			refused = a.err
+			continue
+		case a.err != nil:
+			return nil, fmt.Errorf("the act may have been taken in a part of the partitions: %w", a.err)
+		}
+		if err := json.Unmarshal(a.Body, &one); err != nil {
+			return nil, err
+		}
+		taken = true
+		all.Series += one.Series
+	}
+	if !taken {
+		return nil, refused
+	}
+	return all, nil
+}
+
+// dropOutlet forgets an outlet everywhere.
+func (f *front) dropOutlet(ctx context.Context, body []byte) (any, error) {
+	var waited uint64
+	var last error
+	found := false
+	for _, a := range f.everyone(ctx, verbDropOutlet, body) {
+		var n uint64
+		switch {
+		case a.err == nil:
+			found = true
+			if err := json.Unmarshal(a.Body, &n); err != nil {
+				return nil, err
+			}
+			waited += n
+		case !elsewhere(a.err):
+			return nil, a.err
+		default:
+			last = a.err
+		}
+	}
+	if !found {
+		return nil, last
+	}
+	return waited, nil
+}
+
+// setting tells the set-ups in force everywhere.
+func (f *front) setting(ctx context.Context, body []byte) (any, error) {
+	answers, err := f.whole(ctx, verbSetting, body)
+	if err != nil {
+		return nil, err
+	}
+	var all settingsReply
+	for _, a := range answers {
+		var one settingsReply
+		if err := json.Unmarshal(a.Body, &one); err != nil {
+			return nil, err
+		}
+		all.Settings = append(all.Settings, one.Settings...)
+		all.Alerts = append(all.Alerts, one.Alerts...)
+		all.More = all.More || one.More
+	}
+	if len(all.Alerts) > diffAlerts {
+		all.Alerts, all.More = all.Alerts[:diffAlerts], true
+	}
+	for i := range all.Settings { // the first has the text
+		if all.Settings[i].Text != nil {
+			all.Settings[0], all.Settings[i] = all.Settings[i], all.Settings[0]
+			break
+		}
+	}
+	return all, nil
+}
+
+// trim has every owner make sure that it can do without what lies up to a
+// position, and then removes it.
+func (f *front) trim(ctx context.Context, req trimRequest) (any, error) {
+	body, err := json.Marshal(req)
+	if err != nil {
+		return nil, err
+	}
+	for _, a := range f.everyone(ctx, verbTrim, body) {
+		if a.err != nil {
+			return nil, a.err
+		}
+	}
+	if n := f.unowned(); n >= 0 {
+		return nil, control.Errorf(codeElsewhere, "nobody owns partition %d at present: try again", n)
+	}
+	return f.d.trimStream(ctx, req)
+}
