@@ -111,7 +111,7 @@ func (e *Engine) alertOf(act *Act) *alert {
 	case life.Lower:
 		t = &s.tails[lower]
 	case life.Silence:
-		t = &s.silence
+		t = s.tail(silence)
 	case life.Upper:
 	}
 	if t.current != nil {

@@ -74,7 +74,7 @@ func (s *series) makeRoom() {
 		s.cells = all[:n]
 		return
 	}
-	s.array = append(make(cells, 0, n+n/4+2), s.cells...)
+	s.array = append(make(cells, 0, n+n/4+1), s.cells...)
 	s.cells = s.array
 }
 

@@ -92,7 +92,7 @@ func tailOf(p law, d direction, events int64) float64 {
 func (e *Engine) quickChance(s *series, w int) {
 	ix := s.indicator
 	c := &ix.chances
-	t := &s.windows[w].running.tally
+	t := &s.running(w).tally
 	for d, watched := range [...]bool{ix.cfg.Upper, ix.cfg.Lower} {
 		switch {
 		case !watched:

@@ -230,9 +230,7 @@ func (e *Engine) reason() string {
 
 // forgetSums forgets the running sums of all windows.
 func (s *series) forgetSums() {
-	for w := range s.windows {
-		s.windows[w].running.ok = false
-	}
+	s.runnings = nil
 }
 
 func (e *Engine) encodeFacts() json.RawMessage {

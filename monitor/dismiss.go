@@ -18,7 +18,9 @@ func (e *Engine) dismiss(ix *indicator) {
 		for d := range s.tails {
 			e.dismissAlerts(&s.tails[d], ix)
 		}
-		e.dismissAlerts(&s.silence, ix)
+		if s.silence != nil {
+			e.dismissAlerts(s.silence, ix)
+		}
 		for i := range s.cells {
 			if s.sum != nil {
 				break // what it holds is its members'
@@ -65,7 +67,9 @@ func (s *series) retire() {
 	for d := range s.tails {
 		stub.tails[d].opened = s.tails[d].opened
 	}
-	stub.silence.opened = s.silence.opened
+	if s.silence != nil {
+		stub.tail(silence).opened = s.silence.opened
+	}
 	*s = stub
 }
 
@@ -78,7 +82,9 @@ func (s *series) succeed(stub *series) {
 	for d := range s.tails {
 		s.tails[d].opened = stub.tails[d].opened
 	}
-	s.silence.opened = stub.silence.opened
+	if stub.silence != nil {
+		s.tail(silence).opened = stub.silence.opened
+	}
 }
 
 // gone reports whether the id speaks of a series that is a stub: then it says

@@ -61,7 +61,7 @@ func (s *series) encode(b []byte, whole bool) []byte {
 		b = appendString(b, s.name)
 		b = appendString(b, s.indicator.cfg.Name)
 	}
-	if s.silence.opened > 0 {
+	if s.silence != nil && s.silence.opened > 0 {
 		b[1] |= flagSilence
 		b = s.silence.encode(b)
 	}

@@ -62,7 +62,7 @@ func (e *Engine) watch(s *series, l *look) {
 		return
 	}
 	s.watchAll()
-	w := &s.watched[l.window]
+	w := &(*s.watched)[l.window]
 	if l.status != made {
 		w.withheld++
 		return
@@ -79,15 +79,18 @@ func (w *watch) made(due Instant) {
 
 // watchAll makes room for counting the looks of every window.
 func (s *series) watchAll() {
-	if n := len(s.windows) - len(s.watched); n > 0 {
-		s.watched = append(s.watched, make([]watch, n)...)
+	if s.watched == nil {
+		s.watched = new([]watch)
+	}
+	if n := len(s.windows) - len(*s.watched); n > 0 {
+		*s.watched = append(*s.watched, make([]watch, n)...)
 	}
 }
 
 // watched counts a look of the window that was made when due.
 func (e *Engine) watched(s *series, window int, due Instant) {
 	s.watchAll()
-	s.watched[window].made(due)
+	(*s.watched)[window].made(due)
 }
 
 // Watched returns what was looked at since Pass, by series in order of
@@ -95,7 +98,10 @@ func (e *Engine) watched(s *series, window int, due Instant) {
 func (e *Engine) Watched() []Watched {
 	var list []Watched
 	for _, s := range e.series {
-		for i, w := range s.watched {
+		if s.watched == nil {
+			continue
+		}
+		for i, w := range *s.watched {
 			list = append(list, Watched{
 				Series: s.name, Indicator: s.indicator.cfg.Name, Window: s.indicator.places[i].Name,
 				Looks: w.looks, Withheld: w.withheld, First: w.first, Last: w.last,

@@ -147,7 +147,7 @@ func (e *Engine) occupy(ix *indicator, windows []placed) {
 		s.makePlaces()
 		for _, p := range ix.now().windows {
 			if next.placed(p.place) == nil {
-				s.windows[p.place] = windowState{}
+				s.windows[p.place], s.runnings = windowState{}, nil
 				e.touch(s)
 			}
 		}

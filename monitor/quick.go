@@ -67,13 +67,13 @@ func (ix *indicator) plain(cfg *config.Indicator) bool {
 }
 
 // waits reports whether an alert waits for the looks to come.
-func (t *tail) waits() bool { return t.current != nil || t.disarmed }
+func (t *tail) waits() bool { return t != nil && (t.current != nil || t.disarmed) }
 
 // quickLook moves the window's sum on, and reports whether its look is made and
 // surely does not signal.
 func (ix *indicator) quickLook(s *series, b *config.Baseline, w, in int, boundary int64) bool {
 	ws := &s.windows[w]
-	r := &ws.running
+	r := s.running(w)
 	length := r.to - r.from
 	out := in - int(length)
 	if !r.ok || ws.withheld != made || !ws.hasMade {

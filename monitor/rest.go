@@ -42,6 +42,9 @@ func (n *numbers) add(number uint32) {
 
 func (n numbers) drop(number uint32) { n[number/64] &^= 1 << (number % 64) }
 
+// fewCells is how many are summed as fast as sums are kept.
+const fewCells = 12
+
 // noAlarm stands for none.
 const noAlarm = math.MaxInt64
 
@@ -73,8 +76,8 @@ func (s *series) catchUp() {
 			continue
 		}
 		ws.made = ix.latestAt(p.Window, r.counted)
-		if ws.running.ok {
-			ws.running.slide(s, ws.made)
+		if p.place < len(s.runnings) && s.runnings[p.place].ok {
+			s.runnings[p.place].slide(s, ws.made)
 		}
 	}
 	s.trimmed = max(s.trimmed, r.kept)
@@ -189,6 +192,9 @@ func (e *Engine) rest(s *series, ep *epoch, boundary int64) {
 		r.looks[place][rests[place]]++
 	}
 	s.resting = true
+	if n <= fewCells {
+		s.runnings = nil
+	}
 	r.awake.drop(s.number)
 	if next < s.alarm {
 		if r.alarms == nil {
@@ -205,8 +211,8 @@ func (s *series) mayRest(cfg *config.Indicator) bool {
 	if !cfg.SlotLooks || cfg.ArrivalLooks || cfg.Exposure == config.Census || s.sum != nil || s.dates != nil || s.heir != nil || s.arrivals != nil {
 		return false
 	}
-	for _, d := range [...]direction{upper, lower, silence} {
-		if t := s.tail(d); t.waits() || len(t.lit)+len(t.past) > 0 {
+	for _, t := range [...]*tail{&s.tails[upper], &s.tails[lower], s.silence} {
+		if t.waits() || t != nil && len(t.lit)+len(t.past) > 0 {
 			return false
 		}
 	}
@@ -236,7 +242,10 @@ func (ix *indicator) outlook(s *series, ep *epoch, p *placed, boundary int64) (s
 	switch {
 	case (needs.events || needs.exposure) && ws.withheld == missing:
 		return missing, noAlarm
-	case !byClock(ep.cfg) || !ws.hasMade || ws.made != latest || ws.withheld != made || !ws.running.ok || ws.running.to != latest:
+	case !byClock(ep.cfg) || !ws.hasMade || ws.made != latest || ws.withheld != made:
+		return made, 0
+	}
+	if r := s.running(p.place); !r.ok || r.to != latest {
 		return made, 0
 	}
 	return made, ix.clearUntil(s, ep, p, boundary)
@@ -245,13 +254,13 @@ func (ix *indicator) outlook(s *series, ep *epoch, p *placed, boundary int64) (s
 // clearUntil is the boundary up to which looks of the window, with exposure by
 // the clock, surely do not signal, if no event enters.
 func (ix *indicator) clearUntil(s *series, ep *epoch, p *placed, boundary int64) int64 {
-	cfg, b, ws := ep.cfg, s.base, &s.windows[p.place]
+	cfg, b, ws, r := ep.cfg, s.base, &s.windows[p.place], s.running(p.place)
 	if s.baseOf != cfg || b == nil || !hasEdges(b) {
 		return 0
 	}
 	limit := s.limitsAt(cfg, p.place, boundary)
-	t := ws.running.tally
-	t.exposure = ix.clock.between(ix.cal.Start(ws.running.from), ix.cal.Start(ws.running.to))
+	t := r.tally
+	t.exposure = ix.clock.between(ix.cal.Start(r.from), ix.cal.Start(r.to))
 	// Windows of equal length differ by a grain: two to either side are enough.
 	if t.exposure.Hi != 0 || t.exposure.Lo < 4 || t.exposure.Lo >= 1<<52-4 {
 		return 0
@@ -263,7 +272,7 @@ func (ix *indicator) clearUntil(s *series, ep *epoch, p *placed, boundary int64)
 		if !ws.edges[lower].clear(b, limit[lower], &more) {
 			return 0
 		}
-		if inside := s.cells.between(ws.running.from, ws.running.to); len(inside) > 0 {
+		if inside := s.cells.between(r.from, r.to); len(inside) > 0 {
 			until = inside[0].slot + int64(p.Slots) + 1
 		}
 	}

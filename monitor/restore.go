@@ -206,8 +206,8 @@ func (e *Engine) overlay(s *series, data []byte) error {
 			s.indicator = e.indicators[i] // else it must be a stub by now
 		}
 	}
-	if s.silence = (tail{}); flags&flagSilence != 0 {
-		s.silence = r.tail(s, silence)
+	if s.silence = nil; flags&flagSilence != 0 {
+		*s.tail(silence) = r.tail(s, silence)
 	}
 	s.birth, s.trimmed, s.unpaired, s.seen = r.int(), r.int(), r.int(), Instant(r.int())
 	s.windows = make([]windowState, r.length())

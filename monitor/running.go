@@ -11,10 +11,18 @@ type running struct {
 	ok       bool
 }
 
+// running returns what the latest look of the window summed.
+func (s *series) running(window int) *running {
+	if n := len(s.windows); len(s.runnings) < n {
+		s.runnings = append(make([]running, 0, n), s.runnings...)[:n]
+	}
+	return &s.runnings[window]
+}
+
 // windowTally sums the slots [from, to) of a look of the window, from what the
 // look before it summed where that is nearer.
 func (ix *indicator) windowTally(s *series, window int, from, to int64) tally {
-	r := &s.windows[window].running
+	r := s.running(window)
 	if s.exposureFrom() == config.Census || to < r.to && r.ok || s.dates != nil && s.dates.outs.touch(from, to) {
 		return ix.tally(s, from, to)
 	}
@@ -73,8 +81,8 @@ func (ix *indicator) filled(s *series, t tally, from, to int64) tally {
 
 // changed forgets the running sums that hold the slot.
 func (s *series) changed(slot int64) {
-	for w := range s.windows {
-		if r := &s.windows[w].running; slot < r.to {
+	for w := range s.runnings {
+		if r := &s.runnings[w]; slot < r.to {
 			r.ok = false
 		}
 	}

@@ -49,12 +49,16 @@ type series struct {
 	eventIDs eventIDs
 	// array is what the cells lie in, at its end.
 	array cells
+	// runnings are what the latest looks summed, by window; none while the series
+	// rests with few cells.
+	runnings []running
 	// windows and tails hold what the looks have found, by window and by
 	// direction.
 	windows []windowState
 	tails   [2]tail
-	// silence is that of the whole series: nothing of it is looked at.
-	silence tail
+	// silence is that of the whole series, of which nothing is looked at; nil
+	// where there was none.
+	silence *tail
 	// base is the baseline that serves the series under the stanza baseOf.
 	base   *config.Baseline
 	baseOf *config.Indicator
@@ -71,7 +75,7 @@ type series struct {
 	// dirty lists the slots changed since the last drain, if touched.
 	dirty []int64
 	// watched counts the looks by window while the engine is passing.
-	watched []watch
+	watched *[]watch
 	// next is the series that was asked for after this one the last time.
 	next *series
 	// arrivals are kept where looks are made at them, else nil.
@@ -92,8 +96,6 @@ type windowState struct {
 	withheldSince int64
 	// edges are those that the latest look was compared with.
 	edges [2]*edges
-	// running is what the latest look summed.
-	running running
 }
 
 // tail is one direction of a series.
@@ -140,7 +142,10 @@ func compareLit(a, b litLook) int {
 // tail returns one direction of the series.
 func (s *series) tail(d direction) *tail {
 	if d == silence {
-		return &s.silence
+		if s.silence == nil {
+			s.silence = new(tail)
+		}
+		return s.silence
 	}
 	return &s.tails[d]
 }
@@ -211,7 +216,9 @@ func (e *Engine) trim(s *series) {
 			e.touch(s)
 		}
 	}
-	s.silence.trim(ix.frozenAt, s.windows, e.alerts)
+	if s.silence != nil {
+		s.silence.trim(ix.frozenAt, s.windows, e.alerts)
+	}
 }
 
 // forget drops the estimates and marks that no look will need again.

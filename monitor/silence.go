@@ -114,7 +114,7 @@ func (s *series) inServiceAfter(at Instant) Instant {
 
 // awaits puts the series among those whose silence is waited for.
 func (e *Engine) awaits(s *series) {
-	if e.passing || s.silence.current != nil || s.silence.disarmed {
+	if e.passing || s.silence.waits() {
 		return
 	}
 	if at := s.silentAt(); at != Never {
@@ -141,7 +141,7 @@ const (
 
 // awaitAgain does so for one series.
 func (e *Engine) awaitAgain(s *series, why string) {
-	if s.silence.current != nil && e.clock < s.silentAt() {
+	if s.silence != nil && s.silence.current != nil && e.clock < s.silentAt() {
 		e.broken(s, why)
 	}
 	e.awaits(s)
@@ -189,7 +189,7 @@ func (e *Engine) nextDeadline() Instant {
 	for len(e.deadlines) > 0 {
 		first := &e.deadlines[0]
 		at := first.series.silentAt()
-		if first.series.silence.current != nil || first.series.silence.disarmed {
+		if first.series.silence.waits() {
 			at = Never
 		}
 		switch {
@@ -210,7 +210,7 @@ func (e *Engine) fallSilent() {
 	first := e.deadlines[0]
 	queue.Pop(&e.deadlines)
 	s, ix := first.series, first.series.indicator
-	t := &s.silence
+	t := s.tail(silence)
 	t.opened++
 	at := first.at.Time()
 	a := &alert{
@@ -233,7 +233,7 @@ func (e *Engine) fallSilent() {
 
 // heard ends the silence of a series.
 func (e *Engine) heard(s *series) {
-	if s.silence.current == nil && !s.silence.disarmed {
+	if !s.silence.waits() {
 		return
 	}
 	e.broken(s, "")
@@ -241,7 +241,7 @@ func (e *Engine) heard(s *series) {
 }
 
 func (e *Engine) broken(s *series, why string) {
-	t := &s.silence
+	t := s.tail(silence)
 	t.disarmed = false
 	if a := t.current; a != nil {
 		t.leave(s.indicator.looked)

@@ -17,7 +17,7 @@ func (e *Engine) quickSparse(s *series, ep *epoch, boundary int64, due Instant) 
 	}
 	in := s.cells.held(boundary - 1)
 	for i := range ep.windows {
-		if p := &ep.windows[i]; p.Step != 1 || !s.quickSpan(ep.cfg, p.place, in, boundary) {
+		if p := &ep.windows[i]; p.Step != 1 || !s.quickSpan(ep.cfg, p, in, boundary) {
 			return false
 		}
 	}
@@ -34,13 +34,16 @@ func (e *Engine) quickSparse(s *series, ep *epoch, boundary int64, due Instant) 
 
 // quickSpan moves the window's sum on, and reports whether its look is made and
 // surely does not signal.
-func (s *series) quickSpan(cfg *config.Indicator, w int, in *cell, boundary int64) bool {
-	ix, ws := s.indicator, &s.windows[w]
-	r := &ws.running
-	if !r.ok || ws.withheld != made || !ws.hasMade {
+func (s *series) quickSpan(cfg *config.Indicator, p *placed, in *cell, boundary int64) bool {
+	ix, w := s.indicator, p.place
+	ws, r := &s.windows[w], s.running(w)
+	if ws.withheld != made || !ws.hasMade || !r.ok && ws.made != boundary-1 {
 		return false
 	}
-	if r.to == boundary-1 {
+	if !r.ok {
+		from := boundary - int64(p.Slots)
+		*r = running{from, boundary, ix.sum(s, from, boundary), true}
+	} else if r.to == boundary-1 {
 		if r.from < s.trimmed {
 			return false
 		}
