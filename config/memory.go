@@ -6,11 +6,11 @@ import "fmt"
 // Footprint of package monitor measures them on amd64, rounded up. Garbage that
 // is not yet collected may come to as much again.
 const (
-	bytesPerSeries = 1024 // a series: its name, its place in the map, its alerts
-	bytesPerCell   = 104  // a slot: its sums, who speaks for them, and room for the next ones
-	bytesPerLook   = 24   // a look of one window that late data may still re-run
-	bytesPerID     = 320  // an observation id with what it said
-	bytesPerTrial  = 40   // a trial of a window of the last trials, at a moment of its own
+	bytesPerSeries  = 1152 // a series, or a sum: its name, its place in the map, its alerts
+	bytesPerCell    = 76   // a slot: its sums, who speaks for them, and room for the next ones
+	bytesPerLook    = 24   // a look of one window that late data may still re-run
+	bytesPerInstant = 40   // an instant at which events or trials came, where looks are made at them
+	bytesPerID      = 192  // an observation id with what it said, in a map that has just grown
 )
 
 // Memory is the estimate of what a daemon holds when it is full.
@@ -27,13 +27,15 @@ type Memory struct {
 
 // Memory estimates what a daemon with this set-up holds when it is full:
 //
-//	series = 1024 + 104 (kept + horizon) + 24 (horizon) (sum over windows of 1/step) + 40 trials
-//	total  = MaxSeries x the dearest series + 320 MaxIDs
+//	series = 1152 + 76 (kept + horizon) + 24 (horizon) (sum over windows of 1/step) + 40 trials
+//	total  = MaxSeries x the dearest series + 192 MaxIDs
 //
 // in slots, where kept is the longest window or, if that is more, the longest
 // refresh, gap and span together of a trailing or peers baseline, and trials are
-// those of the longest window of the last trials. Ids cost nothing if no indicator
-// keeps them.
+// those of the longest window of the last trials, each at a moment of its own.
+// Where looks are made at events, a slot takes 40 more, as if one came in each. A
+// sum takes what a series takes, and is one of MaxSeries. Ids cost nothing if no
+// indicator keeps them.
 func (s *Setup) Memory() Memory {
 	var m Memory
 	var dearest int64
@@ -62,7 +64,11 @@ func (in *Indicator) memory() int64 {
 	for _, w := range in.Windows {
 		trials = max(trials, w.Trials)
 	}
-	return bytesPerSeries + trials*bytesPerTrial + int64(in.keptSlots()+horizon)*bytesPerCell + int64(looks)*bytesPerLook
+	slot := int64(bytesPerCell)
+	if in.ArrivalLooks {
+		slot += bytesPerInstant
+	}
+	return bytesPerSeries + trials*bytesPerInstant + int64(in.keptSlots()+horizon)*slot + int64(looks)*bytesPerLook
 }
 
 // checkMemory refuses a set-up whose estimate is over its own limit.

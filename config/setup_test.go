@@ -242,11 +242,16 @@ func TestMemory(t *testing.T) {
 	// 28 slots of window and 120 x 24 / 23 + 2 = 127 of horizon.
 	s := mustParse(t, plain("", "kind = \"known\"\nrate = 2\n"))
 	m := s.Memory()
-	perSeries := int64(1024 + (28+127)*104 + 128*24)
-	want := Memory{Series: []int64{perSeries}, AllSeries: 20_000 * perSeries, AllIDs: 320_000_000}
+	perSeries := int64(1152 + (28+127)*76 + 128*24)
+	want := Memory{Series: []int64{perSeries}, AllSeries: 20_000 * perSeries, AllIDs: 192_000_000}
 	want.Total = want.AllSeries + want.AllIDs
 	if diff := cmp.Diff(want, m); diff != "" {
 		t.Error(diff)
+	}
+	each := "looks = \"arrival\"\nevents = \"each\"\nexposure = \"clock\"\nclock = { size = 12 }"
+	s = mustParse(t, plain(each, "kind = \"known\"\nrate = 2\n"))
+	if m := s.Memory(); m.Series[0] != perSeries+(28+127)*40 {
+		t.Errorf("looks at events: %d, without them %d", m.Series[0], perSeries)
 	}
 	s = mustParse(t, plain("ids = \"none\"", "kind = \"known\"\nrate = 2\n"))
 	if m := s.Memory(); m.AllIDs != 0 {
