@@ -20,12 +20,12 @@ func TestSumsAreNamedWithTheirCarriers(t *testing.T) {
 			0,
 		},
 		{
-			"*/*/fall", "all together", " Carried by Ward 3, Quillmere East (4).",
+			"*/*/fall", "All together", " Carried by Ward 3, Quillmere East (4).",
 			[]life.Carrier{{Series: "quillmere-east/ward-3/fall", Events: 4}},
 			0,
 		},
 		{
-			"**/fall", "all together", " Carried by Ward 3, Quillmere East (4) and 7 others.",
+			"**/fall", "All together", " Carried by Ward 3, Quillmere East (4) and 7 others.",
 			[]life.Carrier{{Series: "quillmere-east/ward-3/fall", Events: 4}},
 			7,
 		},

@@ -108,7 +108,7 @@ func exportLine(r *life.Record, s *life.Step) []string {
 		until = utcTime(*s.Until)
 	}
 	line := []string{
-		r.ID, r.Series, r.Indicator, string(r.Direction), strconv.Itoa(r.Number), utcTime(r.Opened), strconv.FormatBool(r.Late),
+		r.ID, r.Series, r.Indicator, string(r.Direction), strconv.Itoa(r.Number), utcTime(r.OpenedAt()), strconv.FormatBool(r.Late),
 		string(r.Condition), string(r.Mark),
 		strconv.Itoa(s.Number), string(s.Kind), utcTime(s.At), string(s.Condition), harmless(s.By), harmless(s.Why), string(s.Mark), until,
 	}

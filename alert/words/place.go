@@ -26,6 +26,9 @@ func place(r *life.Record) string {
 	if isSum(r.Series) {
 		words = append(words, together)
 	}
+	if len(words) == 1 && words[0] == together {
+		return "All together" // it begins a sentence
+	}
 	return strings.Join(words, ", ")
 }
 

@@ -46,12 +46,16 @@ and all. Times are UTC. Works without a running daemon too.`,
 			if err != nil {
 				return &usageError{fmt.Errorf("--format: %w", err)}
 			}
+			if err := config.CheckPattern(series); series != "" && err != nil {
+				return &usageError{fmt.Errorf("--series %q: %w", series, err)}
+			}
 			setup, err := loadSetup(path)
 			if err != nil {
 				return err
 			}
+			pattern := config.NewPattern(series)
 			err = exportAll(c.Context(), setup, func(r *life.Record) error {
-				if series != "" && r.Series != series {
+				if series != "" && r.Series != series && !pattern.Match(r.Series) {
 					return nil
 				}
 				return out.Write(r)
@@ -64,7 +68,7 @@ and all. Times are UTC. Works without a running daemon too.`,
 	}
 	addConfigFlag(c, &path)
 	c.Flags().StringVar(&format, "format", "csv", "the `FORM`: csv or json")
-	c.Flags().StringVar(&series, "series", "", "only this `SERIES`")
+	c.Flags().StringVar(&series, "series", "", "only of series that match this `PATTERN`: a name, or in quotes 'site/*/fall'")
 	return c
 }
 
