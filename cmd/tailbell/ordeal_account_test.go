@@ -85,7 +85,13 @@ func cmpText(a, b string) int { return bytes.Compare([]byte(a), []byte(b)) }
 // undisturbed applies messages to a new engine, in one go.
 func undisturbed(t *testing.T, number int, raws []wire.Raw) *outcome {
 	t.Helper()
-	e := monitor.New(monitor.Partition{Number: number, Of: 2, KeyParts: 1})
+	return undisturbedOf(t, 2, number, raws)
+}
+
+// undisturbedOf does so for one of more partitions.
+func undisturbedOf(t *testing.T, of, number int, raws []wire.Raw) *outcome {
+	t.Helper()
+	e := monitor.New(monitor.Partition{Number: number, Of: of, KeyParts: 1})
 	decoder := wire.NewDecoder(wire.Limits{})
 	for i := range raws {
 		m := decoder.Decode(raws[i])

@@ -8,6 +8,7 @@ import (
 	"fmt"
 	"io"
 	"net"
+	"net/url"
 	"os"
 	"os/exec"
 	"path/filepath"
@@ -32,6 +33,11 @@ const busPassword = "correct-horse"
 type busOrder struct {
 	Folder string
 	Port   int
+	// Node is its name among those of a cluster, "" where it stands alone; Mesh is
+	// the port for the others, which listen at Routes.
+	Node   string   `json:",omitempty"`
+	Mesh   int      `json:",omitempty"`
+	Routes []string `json:",omitempty"`
 }
 
 // busMain is the process of a bus.
@@ -40,10 +46,24 @@ func busMain(order string) int {
 	if err := json.Unmarshal([]byte(order), &o); err != nil {
 		return 2
 	}
-	s, err := server.NewServer(&server.Options{
+	opts := &server.Options{
 		Host: "127.0.0.1", Port: o.Port, NoSigs: true, NoLog: true, JetStream: true, StoreDir: o.Folder,
 		Username: "tailbell", Password: busPassword,
-	})
+	}
+	if o.Node != "" {
+		opts.ServerName = o.Node
+		// Clients know only the addresses that they were given: others would lead
+		// them past the proxies.
+		opts.Cluster = server.ClusterOpts{Name: "nodes", Host: "127.0.0.1", Port: o.Mesh, NoAdvertise: true}
+		for _, route := range o.Routes {
+			u, err := url.Parse("nats://" + route)
+			if err != nil {
+				return 2
+			}
+			opts.Routes = append(opts.Routes, u)
+		}
+	}
+	s, err := server.NewServer(opts)
 	if err != nil {
 		return 2
 	}
@@ -172,11 +192,17 @@ func idle(d time.Duration) { <-time.NewTimer(d).C }
 // newBusProcess is a bus of its own on a free port.
 func newBusProcess(t *testing.T, folder string) (p *process, address string) {
 	t.Helper()
+	port := freePort(t)
+	return busProcess(t, busOrder{Folder: folder, Port: port}), fmt.Sprintf("127.0.0.1:%d", port)
+}
+
+// freePort is a port that nobody listens on.
+func freePort(t *testing.T) int {
+	t.Helper()
 	listener, err := net.Listen("tcp", "127.0.0.1:0")
 	if err != nil {
 		t.Fatal(err)
 	}
-	address = listener.Addr().String()
 	tcp, ok := listener.Addr().(*net.TCPAddr)
 	if !ok {
 		t.Fatal("no TCP address")
@@ -184,16 +210,20 @@ func newBusProcess(t *testing.T, folder string) (p *process, address string) {
 	if err := listener.Close(); err != nil {
 		t.Fatal(err)
 	}
-	order, err := json.Marshal(busOrder{Folder: folder, Port: tcp.Port})
+	return tcp.Port
+}
+
+func busProcess(t *testing.T, o busOrder) *process {
+	t.Helper()
+	order, err := json.Marshal(o)
 	if err != nil {
 		t.Fatal(err)
 	}
-	p = &process{t: t, command: func() *exec.Cmd {
+	return &process{t: t, command: func() *exec.Cmd {
 		c := program(t)
 		c.Env = append(os.Environ(), runBus+"="+string(order))
 		return c
 	}}
-	return p, address
 }
 
 // proxy stands between the daemon or a publisher and the bus.

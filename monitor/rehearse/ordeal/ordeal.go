@@ -6,8 +6,8 @@
 //
 // # Model
 //
-// Two invented sites, one for each of two partitions, report every day on three
-// indicators in three wards. Reports are late, corrected, moved between wards,
+// Two invented sites, one for each of two partitions, or as many as are asked
+// for, report every day on three indicators in three wards. Reports are late, corrected, moved between wards,
 // retracted, sent again, contradicted, and refused for all sorts of reasons;
 // people act on alerts; now and then the set-up changes. Excesses are planted
 // often, so that there is something to ring about.
@@ -75,6 +75,10 @@ type Options struct {
 	Settings int
 	// IDsOnly leaves out the indicator that keeps no ids.
 	IDsOnly bool
+	// Sites is how many sites report, over so many Partitions; 0 for the two of
+	// Sites, each in a partition of its own. Every site has nine series, or six
+	// with IDsOnly.
+	Sites, Partitions int
 }
 
 const (
@@ -111,10 +115,19 @@ func Generate(seed uint64, o Options) (*Plan, error) {
 		{LastPart: "fall", Slots: rehearse.Daily, Zone: zone, Each: true, Grain: rehearse.Millionth, Horizon: horizon, Ahead: ahead},
 		{LastPart: "slip", Slots: rehearse.Daily, Zone: zone, NoIDs: true, Grain: rehearse.Millionth, Horizon: horizon, Ahead: ahead},
 	}}
-	for i := range o.Settings + 1 {
-		p.Setups = append(p.Setups, setup(i))
+	names := Sites[:]
+	if o.Sites > 0 {
+		names = nil
+		for i := range o.Sites {
+			names = append(names, fmt.Sprintf("quillmere-%d", i))
+		}
 	}
-	for partition, site := range Sites {
+	o.Partitions = max(o.Partitions, 2)
+	for i := range o.Settings + 1 {
+		p.Setups = append(p.Setups, setup(i, &o))
+	}
+	for _, site := range names {
+		partition := config.PartitionOf(site, 1, o.Partitions)
 		a := author{r: rehearse.Source(seed, site), site: site, zone: zone, days: o.Days, idsOnly: o.IDsOnly}
 		messages, err := a.write(partition)
 		if err != nil {
@@ -134,10 +147,11 @@ func Generate(seed uint64, o Options) (*Plan, error) {
 
 // setup is the text of a set-up; they differ in what may change while a store
 // runs.
-func setup(number int) []byte {
+func setup(number int, o *Options) []byte {
 	limit, quiet := []string{"0.01", "0.002", "0.03"}[number%3], []int{7, 3, 10}[number%3]
 	var b bytes.Buffer
-	fmt.Fprintf(&b, "name = \"ordeal\"\npartitions = 2\n\n[time]\nmode = \"history\"\n\n[limits]\nmax_series = 200\nmax_ids = 200_000\n")
+	fmt.Fprintf(&b, "name = \"ordeal\"\npartitions = %d\n\n[time]\nmode = \"history\"\n\n[limits]\nmax_series = %d\nmax_ids = %d\n",
+		o.Partitions, max(200, 12*o.Sites), max(200_000, 10*o.Days*o.Sites))
 	for _, in := range []struct{ name, events, ids, tails string }{
 		{"line-infection", "counted", "kept", `"upper"`},
 		{"fall", "each", "kept", `"upper", "lower"`},

@@ -1,0 +1,359 @@
+package main
+
+import (
+	"flag"
+	"fmt"
+	"math/rand/v2"
+	"os"
+	"os/exec"
+	"path/filepath"
+	"strings"
+	"syscall"
+	"testing"
+	"time"
+
+	"github.com/nats-io/nats.go"
+	"github.com/nats-io/nats.go/jetstream"
+
+	"tailbell/config"
+	"tailbell/ingest/bus"
+	"tailbell/monitor/life"
+	"tailbell/monitor/rehearse/ordeal"
+	"tailbell/monitor/store"
+)
+
+var (
+	chaosFaults = flag.Int("chaos.faults", 0, "how many faults the chaos test has; 0 for a short run with one of each")
+	chaosSeries = flag.Int("chaos.series", 0, "how many series it has; 0 for a few")
+	chaosDays   = flag.Int("chaos.days", 0, "how many days they report; 0 for a few")
+	chaosRate   = flag.Int("chaos.rate", 0, "how many messages are published a second; 0 for few")
+)
+
+// The chaos test has three nodes of a bus that hold everything threefold, and
+// processes that share the partitions. A publisher with a ledger sends a plan at a
+// steady rate, while processes are killed, stopped and cut off, and nodes of the
+// bus die. In the end the stores must hold what the ledger says, the alert
+// records must be those of one process that nobody disturbed, and every step must
+// be on the bus once.
+//
+// A long run: go test ./cmd/tailbell -run TestChaos -chaos.faults 40 -chaos.series 20000 -chaos.days 30 -chaos.rate 1500 -timeout 2h -v
+
+const (
+	chaosPartitions = 16
+	chaosClaim      = 3 * time.Second
+)
+
+// node is one of the bus's.
+type node struct {
+	*process
+	address string // for clients
+}
+
+// newNodes starts a cluster of a bus.
+func newNodes(t *testing.T, n int) []*node {
+	t.Helper()
+	meshes, nodes := make([]int, n), make([]*node, n)
+	var routes []string
+	for i := range meshes {
+		meshes[i] = freePort(t)
+		routes = append(routes, fmt.Sprintf("127.0.0.1:%d", meshes[i]))
+	}
+	for i := range nodes {
+		port := freePort(t)
+		nodes[i] = &node{address: fmt.Sprintf("127.0.0.1:%d", port), process: busProcess(t, busOrder{
+			Folder: filepath.Join(t.TempDir(), "node"), Port: port, Node: fmt.Sprintf("node-%d", i), Mesh: meshes[i], Routes: routes,
+		})}
+		nodes[i].start()
+		t.Cleanup(nodes[i].kill)
+	}
+	return nodes
+}
+
+// worker is a process of ours with its line to the bus.
+type worker struct {
+	*process
+	path    string // of the set-up
+	proxies []*proxy
+}
+
+func (w *worker) cutOff() {
+	for _, p := range w.proxies {
+		p.away.Store(true)
+		p.cut()
+	}
+}
+
+func (w *worker) letThrough() {
+	for _, p := range w.proxies {
+		p.away.Store(false)
+	}
+}
+
+// chaos is one run.
+type chaos struct {
+	t       *testing.T
+	seed    uint64
+	random  *rand.Rand
+	plan    *ordeal.Plan
+	nodes   []*node
+	workers []*worker
+	pub     *publisher
+	stop    func()
+
+	did       map[string]int
+	takeovers []time.Duration
+}
+
+func newChaos(t *testing.T, workers int, o ordeal.Options) *chaos {
+	t.Helper()
+	seed := *ordealSeed
+	if seed == 0 {
+		seed = rand.Uint64()
+	}
+	t.Logf("seed %d", seed)
+	plan, err := ordeal.Generate(seed, o)
+	if err != nil {
+		t.Fatal(err)
+	}
+	x := &chaos{t: t, seed: seed, random: rand.New(rand.NewPCG(seed, 4)), plan: plan, nodes: newNodes(t, 3), did: map[string]int{}}
+	for range workers {
+		x.workers = append(x.workers, x.newWorker(workers > 1))
+	}
+	x.pub = newPublisher(t, plan, seed, x.visit)
+	x.awaitBus()
+	return x
+}
+
+// newWorker makes a process that reaches every node by a proxy of its own.
+func (x *chaos) newWorker(shares bool) *worker {
+	x.t.Helper()
+	folder := x.t.TempDir()
+	w := &worker{path: filepath.Join(folder, "tailbell.toml")}
+	var urls []string
+	for _, n := range x.nodes {
+		p := newProxy(x.t, n.address)
+		w.proxies = append(w.proxies, p)
+		urls = append(urls, "nats://"+p.address())
+	}
+	x.random.Shuffle(len(urls), func(i, j int) { urls[i], urls[j] = urls[j], urls[i] })
+	text := fmt.Appendf(nil, "folder = \"data\"\n%s\n[bus]\nurl = %q\nuser = \"tailbell\"\npassword_file = \"password\"\nreplicas = 3\n",
+		x.plan.Setups[0], strings.Join(urls, ","))
+	if shares {
+		text = fmt.Appendf(text, "share = true\nclaim = %q\ncopy_every = \"5s\"\n", config.FormatDuration(chaosClaim))
+	}
+	for name, data := range map[string][]byte{w.path: text, filepath.Join(folder, "password"): []byte(busPassword)} {
+		if err := os.WriteFile(name, data, 0o600); err != nil {
+			x.t.Fatal(err)
+		}
+	}
+	w.process = &process{
+		t: x.t, stdout: filepath.Join(folder, "terminal"), stderr: filepath.Join(folder, "log"),
+		command: func() *exec.Cmd { return program(x.t, "run", "--config", w.path, "--json", "--health", "off") },
+	}
+	x.t.Cleanup(w.kill)
+	return w
+}
+
+// visit connects to any node, without haste: while none leads, one after the
+// other refuses.
+func (x *chaos) visit() (*nats.Conn, error) {
+	idle(20 * time.Millisecond)
+	var urls []string
+	for _, n := range x.nodes {
+		urls = append(urls, "nats://"+n.address)
+	}
+	return nats.Connect(strings.Join(urls, ","), nats.UserInfo("tailbell", busPassword), nats.NoReconnect(),
+		nats.Timeout(2*time.Second), nats.MaxPingsOutstanding(2), nats.PingInterval(time.Second))
+}
+
+// await waits until something holds, which takes a minute at most.
+func (x *chaos) await(what string, holds func() bool) {
+	x.t.Helper()
+	for deadline := time.Now().Add(time.Minute); !holds(); idle(20 * time.Millisecond) {
+		if time.Now().After(deadline) {
+			for i, w := range x.workers {
+				x.t.Logf("process %d: %s", i, w.complaint())
+			}
+			x.t.Fatalf("in vain: %s", what)
+		}
+	}
+}
+
+// awaitBus waits until the nodes have found each other.
+func (x *chaos) awaitBus() {
+	x.t.Helper()
+	x.await("the bus", func() bool {
+		nc, err := x.visit()
+		if err != nil {
+			return false
+		}
+		defer nc.Close()
+		js, err := jetstream.New(nc)
+		if err != nil {
+			return false
+		}
+		_, err = js.AccountInfo(x.t.Context())
+		return err == nil
+	})
+}
+
+// dial connects as a command does.
+func (x *chaos) dial() *bus.Bus {
+	x.t.Helper()
+	for _, w := range x.workers {
+		w.letThrough()
+	}
+	b, err := bus.Dial(x.t.Context(), x.parsed(x.workers[0]))
+	if err != nil {
+		x.t.Fatal(err)
+	}
+	return b
+}
+
+func (x *chaos) parsed(w *worker) *config.Setup {
+	x.t.Helper()
+	setup, err := config.Load(w.path)
+	if err != nil {
+		x.t.Fatal(err)
+	}
+	return setup
+}
+
+// begin starts the processes, and lets the publisher send so many messages a
+// second once every partition has its set-up.
+func (x *chaos) begin(rate int) {
+	x.t.Helper()
+	for _, w := range x.workers {
+		w.start()
+	}
+	x.await("the set-up in every partition", func() bool {
+		nc, err := x.visit()
+		if err != nil {
+			return false
+		}
+		defer nc.Close()
+		js, err := jetstream.New(nc)
+		if err != nil {
+			return false
+		}
+		s, err := js.Stream(x.t.Context(), "ordeal-in")
+		if err != nil {
+			return false
+		}
+		info, err := s.Info(x.t.Context(), jetstream.WithSubjectFilter("ordeal.in.*.set"))
+		return err == nil && len(info.State.Subjects) == chaosPartitions
+	})
+	x.pub.announced()
+	ctx, done := x.t.Context(), make(chan struct{})
+	stop := make(chan struct{})
+	go func() {
+		defer close(done)
+		tick := time.NewTicker(20 * time.Millisecond)
+		defer tick.Stop()
+		for {
+			select {
+			case <-tick.C:
+				x.pub.grant(max(1, rate/50))
+			case <-stop:
+				return
+			case <-ctx.Done():
+				return
+			}
+		}
+	}()
+	published := make(chan struct{})
+	go func() {
+		defer close(published)
+		x.pub.run(ctx)
+	}()
+	x.stop = func() { close(stop); <-done }
+}
+
+// newest returns the path of the store of a partition that its last owner has.
+func (x *chaos) newest(number int) string {
+	x.t.Helper()
+	path, best := "", uint64(0)
+	for _, w := range x.workers {
+		one := storePath(x.parsed(w), number)
+		st, err := store.OpenReadOnly(one, store.Options{})
+		if err != nil {
+			continue // it has none
+		}
+		epoch, err := st.Epoch()
+		if closeErr := st.Close(); err != nil || closeErr != nil {
+			x.t.Fatal(err, closeErr)
+		}
+		if epoch >= best {
+			path, best = one, epoch
+		}
+	}
+	if path == "" {
+		x.t.Fatalf("nobody has a store of partition %d", number)
+	}
+	return path
+}
+
+// finish waits until everything is sent and stored, and ends the processes.
+func (x *chaos) finish() {
+	x.t.Helper()
+	for deadline := time.Now().Add(10 * time.Minute); x.pub.left() > 0; idle(20 * time.Millisecond) {
+		if time.Now().After(deadline) {
+			x.t.Fatalf("%d messages can't be sent", x.pub.left())
+		}
+	}
+	x.stop()
+	for _, w := range x.workers {
+		if !w.alive() {
+			w.start()
+		}
+	}
+	x.await("all is stored", x.quiet)
+	for i, w := range x.workers {
+		w.end(syscall.SIGTERM)
+		if code := w.cmd.ProcessState.ExitCode(); code != 0 {
+			x.t.Errorf("process %d ended with %d:\n%s", i, code, w.complaint())
+		}
+	}
+}
+
+// check holds what is left against everything that is known.
+func (x *chaos) check() {
+	t := x.t
+	t.Helper()
+	b := x.dial()
+	defer func() {
+		if err := b.Close(); err != nil {
+			t.Error(err)
+		}
+	}()
+	times := map[int]int{}
+	var alerts []life.Record
+	slots, elements := 0, 0
+	for number := range chaosPartitions {
+		raws := everything(t, b, number)
+		meant := arrived(t, x.plan, raws, times)
+		got := outcomeOf(t, x.newest(number))
+		compareOutcomes(t, fmt.Sprintf("partition %d against its own stream", number), undisturbedOf(t, chaosPartitions, number, raws), got)
+		plan, _ := planned(x.plan, x.plan.Setups, number)
+		withoutDigests := func(o *outcome) *outcome { return &outcome{Records: undigested(t, o.alerts)} }
+		compareOutcomes(t, fmt.Sprintf("partition %d against the plan", number), withoutDigests(undisturbedOf(t, chaosPartitions, number, plan)), withoutDigests(got))
+		slots += checkLedger(t, x.plan, meant, got)
+		elements += int(got.Account.Elements)
+		alerts = append(alerts, got.alerts...)
+	}
+	for n := range x.plan.Messages {
+		m := &x.plan.Messages[n]
+		if m.Kind != ordeal.Setting && times[n] == 0 {
+			t.Errorf("message %d was acknowledged at position %d, and is lost", n, x.pub.mu.positions[n])
+		}
+		if times[n] > 1 && !m.Repeatable {
+			t.Errorf("message %d must not be stored twice, and is %d times", n, times[n])
+		}
+	}
+	events := alertEvents(t, b, "bus")
+	if again := checkDeliveries(t, "bus", events, alerts, true); again > 0 {
+		t.Errorf("%d steps are doubled on the bus", again)
+	}
+	t.Logf("%v; %d messages (%d sent again), %d elements, %d slots compared; %d alerts, %d steps on the bus, none twice; takeovers %v",
+		x.did, len(x.plan.Messages), x.pub.mu.again, elements, slots, len(alerts), len(events), x.takeovers)
+}
