@@ -166,18 +166,20 @@ func (p *Page) shelfUntil(ctx context.Context, act *monitor.Act, long string) er
 	if i < 0 {
 		return &RefusedError{"Choose for how long."}
 	}
-	record, err := p.find(act.Alert)
+	record, err := p.find(ctx, act.Alert)
 	if err != nil {
 		return err
 	}
 	from := monitor.InstantOf(p.o.Now())
-	err = p.o.Parts[p.o.PartOf(record.Series)].Do(ctx, func(e *monitor.Engine) {
-		if e.InHistory() {
-			from = e.Clock()
-		}
-	})
+	s, err := p.o.Parts[p.o.PartOf(record.Series)].See(ctx, &Sight{Series: record.Series})
+	if err != nil {
+		return err
+	}
+	if s.History {
+		from = s.Clock
+	}
 	act.Until = from.Add(shelfTimes[i].long)
-	return err
+	return nil
 }
 
 // Bounds of what is filled in, in characters, as those of an act.

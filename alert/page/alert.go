@@ -11,8 +11,6 @@ import (
 
 	"tailbell/alert/figure"
 	"tailbell/alert/words"
-	"tailbell/config"
-	"tailbell/monitor"
 	"tailbell/monitor/life"
 )
 
@@ -64,7 +62,7 @@ func (p *Page) alert(r *http.Request) (*screen, error) {
 // alertScreen shows one alert; with a problem and what was filled in, if an
 // act of it was not taken.
 func (p *Page) alertScreen(r *http.Request, id, wrong string, given url.Values) (*screen, error) {
-	record, err := p.find(id)
+	record, err := p.find(r.Context(), id)
 	if err != nil {
 		return nil, err
 	}
@@ -136,20 +134,13 @@ func stepOf(r *life.Record, s *life.Step, zone *time.Location) step {
 // the looks as the data stand, or, where they have left memory or the engine
 // does not answer, from the evidence that the record keeps.
 func (d *alertData) draw(ctx context.Context, p *Page, r *life.Record) {
-	var views []monitor.View
-	var in *config.Indicator
-	err := p.o.Parts[p.o.PartOf(r.Series)].Do(ctx, func(e *monitor.Engine) {
-		setup, _ := e.Setup()
-		for i := range setup.Indicators {
-			if setup.Indicators[i].Name == r.Indicator {
-				in = &setup.Indicators[i]
-			}
-		}
-		views = e.Latest(r.Series, r.Opening.Window, pictureEnd(r, e.Clock().Time()), alertLooks)
+	s, err := p.o.Parts[p.o.PartOf(r.Series)].See(ctx, &Sight{
+		Series: r.Series, Window: r.Opening.Window, Until: pictureEnd(r), Looks: alertLooks,
 	})
 	if err != nil {
-		views = nil // the engine does not answer
+		s = &Seen{} // the engine does not answer
 	}
+	views, in := s.Views, indicatorOf(s.Setup, r.Indicator)
 	f := figure.Series{
 		Title: r.Series + ", windows of " + words.Length(r.Opening.Window), Events: words.Noun(&r.Opening), Window: words.Length(r.Opening.Window),
 		Unit: trimmed(words.Per(&r.Opening)), Spans: []figure.Span{spanOf(r)},
@@ -168,15 +159,13 @@ func (d *alertData) draw(ctx context.Context, p *Page, r *life.Record) {
 	}
 }
 
-// pictureEnd is the last moment that the picture of an alert shows: now, or
-// somewhat after it left.
-func pictureEnd(r *life.Record, now time.Time) time.Time {
+// pictureEnd is the last moment that the picture of an alert shows: somewhat
+// after it left; the zero time for now.
+func pictureEnd(r *life.Record) time.Time {
 	if at, left := leftAt(r); left {
-		if end := at.Add(r.Opening.To.Sub(r.Opening.From) / 2); end.Before(now) {
-			return end
-		}
+		return at.Add(r.Opening.To.Sub(r.Opening.From) / 2)
 	}
-	return now
+	return time.Time{}
 }
 
 // leftAt is when the alert ceased to signal, by itself or by hand.

@@ -8,7 +8,6 @@ import (
 	"time"
 
 	"tailbell/monitor/life"
-	"tailbell/monitor/store"
 )
 
 const (
@@ -31,7 +30,7 @@ type openAlerts struct {
 
 // standing returns the alerts that are not done, the most urgent first, and
 // whether there are more.
-func (p *Page) standing() ([]life.Record, bool, error) {
+func (p *Page) standing(ctx context.Context) ([]life.Record, bool, error) {
 	o := &p.open
 	o.mu.Lock()
 	defer o.mu.Unlock()
@@ -44,7 +43,7 @@ func (p *Page) standing() ([]life.Record, bool, error) {
 	}
 	records, more := []life.Record{}, false
 	for i := range p.o.Parts {
-		rows, err := p.o.Parts[i].Store.Alerts(store.AlertFilter{NotDone: true, NewestFirst: true}, 0, maxOpen)
+		rows, err := p.o.Parts[i].Alerts(ctx, AlertsWanted{NotDone: true, NewestFirst: true}, 0, maxOpen)
 		if err != nil {
 			return nil, false, err
 		}
@@ -107,7 +106,7 @@ func (p *Page) idsOf(ctx context.Context, series string) (ids []string, all bool
 			if ctx.Err() != nil {
 				return newest(past.ids[series]), false, nil
 			}
-			rows, err := p.o.Parts[i].Store.Alerts(store.AlertFilter{}, past.after[i], pastAtOnce)
+			rows, err := p.o.Parts[i].Alerts(ctx, AlertsWanted{}, past.after[i], pastAtOnce)
 			if err != nil {
 				return nil, false, err
 			}
@@ -131,9 +130,9 @@ func newest(ids []string) []string {
 }
 
 // find returns the alert with an id.
-func (p *Page) find(id string) (*life.Record, error) {
+func (p *Page) find(ctx context.Context, id string) (*life.Record, error) {
 	for i := range p.o.Parts {
-		row, err := p.o.Parts[i].Store.Alert(id)
+		row, err := p.o.Parts[i].Alert(ctx, id)
 		if err == nil {
 			return &row.Record, nil
 		}

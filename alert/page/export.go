@@ -4,7 +4,6 @@ import (
 	"net/http"
 
 	"tailbell/alert/words"
-	"tailbell/monitor/store"
 )
 
 // exportRows is how many alerts are read at a time.
@@ -34,7 +33,7 @@ func (p *Page) export(form, contentType string) http.HandlerFunc {
 func (p *Page) exportAll(r *http.Request, out words.Exporter) error {
 	for i := range p.o.Parts {
 		for after := uint64(0); ; {
-			rows, err := p.o.Parts[i].Store.Alerts(store.AlertFilter{}, after, exportRows)
+			rows, err := p.o.Parts[i].Alerts(r.Context(), AlertsWanted{}, after, exportRows)
 			if err != nil {
 				return err
 			}

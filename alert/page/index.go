@@ -144,16 +144,18 @@ func (p *Page) read() (*glances, error) {
 	g := &glances{counts: map[monitor.ConditionKind]int{}}
 	for i := range p.o.Parts {
 		for next, more := 0, true; more; {
-			err := p.o.Parts[i].Do(p.ctx, func(e *monitor.Engine) {
-				if next == 0 {
-					g.setup, _ = e.Setup()
-					g.rows = slices.Grow(g.rows, e.SeriesCount())
-				}
-				next = e.Glances(next, glancesAtOnce, g.add)
-			})
+			some, err := p.o.Parts[i].Glances(p.ctx, next, glancesAtOnce)
 			if err != nil {
 				return nil, err
 			}
+			if next == 0 {
+				g.setup = some.Setup
+				g.rows = slices.Grow(g.rows, some.Of)
+			}
+			for j := range some.Series {
+				g.add(some.Series[j])
+			}
+			next = some.Next
 			more = next > 0
 		}
 	}

@@ -207,13 +207,11 @@ func (p *Page) listed(ctx context.Context, g *glances, rows []*row) ([]listed, e
 
 // trend is the small picture of a window's latest looks.
 func (p *Page) trend(ctx context.Context, series, window string) (template.HTML, error) {
-	var views []monitor.View
-	err := p.o.Parts[p.o.PartOf(series)].Do(ctx, func(e *monitor.Engine) {
-		views = e.Latest(series, window, e.Clock().Time(), trendLooks)
-	})
+	seen, err := p.o.Parts[p.o.PartOf(series)].See(ctx, &Sight{Series: series, Window: window, Looks: trendLooks})
 	if err != nil {
 		return "", fmt.Errorf("looks of %s: %w", series, err)
 	}
+	views := seen.Views
 	if !slices.ContainsFunc(views, func(v monitor.View) bool { return v.Made }) {
 		return "", nil // a row of gaps tells nothing
 	}

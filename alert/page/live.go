@@ -103,7 +103,7 @@ func (p *Page) live(w http.ResponseWriter, r *http.Request) {
 			continue
 		}
 		seen = changes
-		text, err := p.inBrief()
+		text, err := p.inBrief(r.Context())
 		if err != nil {
 			p.o.Failed(err)
 			return

@@ -154,7 +154,7 @@ func (p *Page) machine(r *http.Request) (*screen, error) {
 	for i := range s.Parts {
 		d.Total = d.Total.Add(s.Parts[i].Account)
 	}
-	if err := d.addRefused(p); err != nil {
+	if err := d.addRefused(r.Context(), p); err != nil {
 		return nil, err
 	}
 	g, err := p.glances(r.Context())
@@ -180,25 +180,18 @@ func (p *Page) machine(r *http.Request) (*screen, error) {
 }
 
 // addRefused adds the counts by reason, and the newest refusals.
-func (d *machineData) addRefused(p *Page) error {
+func (d *machineData) addRefused(ctx context.Context, p *Page) error {
 	counts := map[monitor.Reason]uint64{}
 	for i := range p.o.Parts {
-		st := p.o.Parts[i].Store
-		some, err := st.RefusedCount()
+		some, err := p.o.Parts[i].Refusals(ctx, refusedRows)
 		if err != nil {
 			return err
 		}
-		var all uint64
-		for reason, n := range some {
+		for reason, n := range some.Counts {
 			counts[reason] += n
-			all += n
+			d.RefusedAll += n
 		}
-		d.RefusedAll += all
-		rows, err := st.Refused(all-min(all, refusedRows), refusedRows)
-		if err != nil {
-			return err
-		}
-		for _, row := range rows {
+		for _, row := range some.Newest {
 			d.Refused = append(d.Refused, refusal{row, i, row.Refusal.At.Time()})
 		}
 	}

@@ -43,7 +43,7 @@ type nowData struct {
 
 // now shows what needs attention now.
 func (p *Page) now(r *http.Request) (*screen, error) {
-	records, more, err := p.standing()
+	records, more, err := p.standing(r.Context())
 	if err != nil {
 		return nil, err
 	}

@@ -72,17 +72,6 @@ type standing struct {
 	Odds      string
 }
 
-// seen is what is read of a series from its engine, in one piece.
-type seen struct {
-	setup    *config.Setup
-	glance   monitor.Glance
-	views    []monitor.View
-	evidence life.Evidence
-	judged   bool
-	slots    []monitor.SlotView
-	changes  []monitor.Dated
-}
-
 // one shows one series.
 func (p *Page) one(r *http.Request) (*screen, error) {
 	asked := r.URL.Query()
@@ -97,13 +86,14 @@ func (p *Page) one(r *http.Request) (*screen, error) {
 	if err != nil {
 		until = time.Time{}
 	}
-	s, in, window, err := p.see(r.Context(), name, asked.Get("window"), until, looks)
+	s, in, err := p.see(r.Context(), &Sight{Series: name, Window: asked.Get("window"), Until: until, Looks: looks, Whole: true, Slots: slotRows})
 	if err != nil {
 		return nil, err
 	}
+	window := s.Window
 	d := &oneData{
-		Name: name, Indicator: in.Name, Title: in.Title, Window: window, Slots: s.slots, Changes: s.changes,
-		Conditions: s.glance.Conditions, Seen: s.glance.Seen.Time().In(in.Zone), Noun: in.EventNoun, Unit: in.Unit, SlotLength: in.Every.String(),
+		Name: name, Indicator: in.Name, Title: in.Title, Window: window, Slots: s.Slots, Changes: s.Changes,
+		Conditions: s.Glance.Conditions, Seen: s.Glance.Seen.Time().In(in.Zone), Noun: in.EventNoun, Unit: in.Unit, SlotLength: in.Every.String(),
 	}
 	d.Place = placeOf(name, in)
 	d.Crumbs = crumbs(name)
@@ -111,11 +101,11 @@ func (p *Page) one(r *http.Request) (*screen, error) {
 		d.Crumbs = d.Crumbs[:n-1]
 	}
 	d.choose(in, window, looks)
-	if s.judged {
-		d.Latest = standingOf(&s.evidence, in)
+	if s.Judged {
+		d.Latest = standingOf(&s.Evidence, in)
 	}
-	if n := len(s.views); n > 0 && !s.views[n-1].Made {
-		d.Why = "The latest look was not made: " + s.views[n-1].Status + "."
+	if n := len(s.Views); n > 0 && !s.Views[n-1].Made {
+		d.Why = "The latest look was not made: " + s.Views[n-1].Status + "."
 	}
 	ctx, cancel := context.WithTimeout(r.Context(), 3*time.Second)
 	defer cancel()
@@ -127,38 +117,16 @@ func (p *Page) one(r *http.Request) (*screen, error) {
 	return &screen{name: "one", Title: name, Here: "/series", Data: d}, nil
 }
 
-// see reads a series from its engine.
-func (p *Page) see(ctx context.Context, name, window string, until time.Time, looks int) (*seen, *config.Indicator, string, error) {
-	s := &seen{}
-	var in *config.Indicator
-	err := p.o.Parts[p.o.PartOf(name)].Do(ctx, func(e *monitor.Engine) {
-		glance, found := e.GlanceOf(name)
-		if !found {
-			return
-		}
-		s.glance = glance
-		s.setup, _ = e.Setup()
-		for i := range s.setup.Indicators {
-			if s.setup.Indicators[i].Name == glance.Indicator {
-				in = &s.setup.Indicators[i]
-			}
-		}
-		if in == nil {
-			return
-		}
-		window = windowOf(in, window, glance.Look.Window)
-		if until.IsZero() {
-			until = e.Clock().Time()
-		}
-		s.views = e.Latest(name, window, until, looks)
-		s.evidence, s.judged = e.Standing(name, window)
-		s.slots = e.SlotsOf(name, slotRows)
-		s.changes = e.ChangesOf(name)
-	})
-	if err == nil && in == nil {
-		err = &problem{http.StatusNotFound, "There is no series " + strconv.Quote(name) + ".", "The list of series finds it by a few letters of its name."}
+// see reads a series.
+func (p *Page) see(ctx context.Context, want *Sight) (*Seen, *config.Indicator, error) {
+	s, err := p.o.Parts[p.o.PartOf(want.Series)].See(ctx, want)
+	if err != nil {
+		return nil, nil, err
 	}
-	return s, in, window, err
+	if !s.Known {
+		return nil, nil, &problem{http.StatusNotFound, "There is no series " + strconv.Quote(want.Series) + ".", "The list of series finds it by a few letters of its name."}
+	}
+	return s, indicatorOf(s.Setup, s.Glance.Indicator), nil
 }
 
 // windowOf is the window asked for, if there is one of that name, else that
@@ -193,14 +161,14 @@ func (d *oneData) choose(in *config.Indicator, window string, looks int) {
 }
 
 // turn links to earlier and later looks.
-func (d *oneData) turn(s *seen, looks int, until time.Time) {
-	n := len(s.views)
+func (d *oneData) turn(s *Seen, looks int, until time.Time) {
+	n := len(s.Views)
 	if n == 0 {
 		return
 	}
-	d.From, d.To = s.views[0].Start, s.views[n-1].End
+	d.From, d.To = s.Views[0].Start, s.Views[n-1].End
 	if n == looks {
-		d.Older = d.link(d.Window, looks, s.views[0].End)
+		d.Older = d.link(d.Window, looks, s.Views[0].End)
 	}
 	if !until.IsZero() {
 		d.Newer = d.link(d.Window, looks, time.Time{})
@@ -208,18 +176,18 @@ func (d *oneData) turn(s *seen, looks int, until time.Time) {
 }
 
 // draw makes the pictures, with the alerts and changes in them.
-func (d *oneData) draw(s *seen, in *config.Indicator, window string) {
+func (d *oneData) draw(s *Seen, in *config.Indicator, window string) {
 	f := figure.Series{
 		Title: d.Name + ", windows of " + words.Length(window), Events: in.EventNoun, Window: words.Length(window),
 		Unit: trimmed(words.Per(&life.Evidence{Measure: measureOf(in), Unit: in.Unit, Per: in.Per})),
 	}
-	for i := range s.views {
-		f.Points = append(f.Points, pointOf(&s.views[i], in))
+	for i := range s.Views {
+		f.Points = append(f.Points, pointOf(&s.Views[i], in))
 	}
 	for _, r := range d.Alerts {
 		f.Spans = append(f.Spans, spanOf(r))
 	}
-	for _, c := range s.changes {
+	for _, c := range s.Changes {
 		f.Spans = append(f.Spans, figure.Span{Kind: figure.Change, From: c.At, Text: c.What})
 	}
 	d.Counts = template.HTML(f.SVG())    //nolint:gosec // figure escapes all text
@@ -268,7 +236,7 @@ func (d *oneData) addAlerts(ctx context.Context, p *Page, name string) error {
 	}
 	d.AllAlerts = all && len(ids) <= alertRows
 	for _, id := range ids[:min(len(ids), alertRows)] {
-		r, err := p.find(id)
+		r, err := p.find(ctx, id)
 		var gone *problem
 		if errors.As(err, &gone) {
 			continue

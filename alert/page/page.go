@@ -5,7 +5,8 @@
 // # Model
 //
 // A Page answers from what the daemon has committed: alerts from the stores,
-// looks from the engines between two messages, in bounded pieces. Lists of
+// looks from the engines between two messages, in bounded pieces. Where several
+// processes share the partitions, those of others are read by asking their owners. Lists of
 // series come from an index that is built anew, beside the engines, when
 // somebody looks and something was committed since. Acts go into the stream as
 // those of commands do, and carry a name.
@@ -29,15 +30,7 @@ import (
 	"time"
 
 	"tailbell/monitor"
-	"tailbell/monitor/store"
 )
-
-// Part is one partition as the page reads it.
-type Part struct {
-	Store *store.Store
-	// Do runs look on the engine between two messages.
-	Do func(ctx context.Context, look func(*monitor.Engine)) error
-}
 
 // Person is who asks.
 type Person struct {

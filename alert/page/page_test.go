@@ -13,7 +13,6 @@ import (
 
 	"tailbell/monitor"
 	"tailbell/monitor/life"
-	"tailbell/monitor/store"
 )
 
 func TestScreensHoldTheirContent(t *testing.T) {
@@ -101,7 +100,7 @@ func TestActsCarryANameAndAreKept(t *testing.T) {
 			t.Errorf("%v: %d: %s", form, w.Code, text(w.Body.String()))
 		}
 	}
-	r, err := s.page.find(id)
+	r, err := s.page.find(t.Context(), id)
 	if err != nil || r.Condition != life.Shelved || r.Mark != life.MarkReal || r.Shelf.Until.Sub(s.engine.Clock().Time()) != 72*time.Hour {
 		t.Fatalf("%v %+v", err, r)
 	}
@@ -177,7 +176,7 @@ func TestUsersActUnderTheirOwnName(t *testing.T) {
 func TestRecordTurnsItsPages(t *testing.T) {
 	s := newStand(t)
 	s.ring()
-	records, _, more, err := s.page.newestAlerts(store.AlertFilter{NewestFirst: true}, []uint64{0})
+	records, _, more, err := s.page.newestAlerts(t.Context(), AlertsWanted{NewestFirst: true}, []uint64{0})
 	if err != nil || more || len(records) != 2 { // one that rings, and a silence
 		t.Errorf("%d alerts, more %v, %v", len(records), more, err)
 	}

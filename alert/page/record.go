@@ -1,6 +1,7 @@
 package page
 
 import (
+	"context"
 	"fmt"
 	"net/http"
 	"net/url"
@@ -30,7 +31,7 @@ func (p *Page) record(r *http.Request) (*screen, error) {
 	asked := r.URL.Query()
 	d := &recordData{Condition: life.Condition(asked.Get("condition"))}
 	d.Choices = append(d.Choices, choice{"all", "/alerts", d.Condition == ""})
-	filter := store.AlertFilter{NewestFirst: true}
+	filter := AlertsWanted{NewestFirst: true}
 	known := d.Condition == ""
 	for _, c := range conditions {
 		d.Choices = append(d.Choices, choice{string(c), "/alerts?" + url.Values{"condition": {string(c)}}.Encode(), c == d.Condition})
@@ -48,7 +49,7 @@ func (p *Page) record(r *http.Request) (*screen, error) {
 		return nil, &problem{http.StatusBadRequest, "That place in the record can't be read.", "Begin at the newest alert."}
 	}
 	d.First = asked.Get("before") == ""
-	rows, places, more, err := p.newestAlerts(filter, before)
+	rows, places, more, err := p.newestAlerts(r.Context(), filter, before)
 	if err != nil {
 		return nil, err
 	}
@@ -70,7 +71,7 @@ var conditions = []life.Condition{life.Unacknowledged, life.Acknowledged, life.R
 
 // newestAlerts merges the newest alerts of all partitions, before a place in
 // each.
-func (p *Page) newestAlerts(filter store.AlertFilter, before []uint64) (records []life.Record, places string, more bool, err error) {
+func (p *Page) newestAlerts(ctx context.Context, filter AlertsWanted, before []uint64) (records []life.Record, places string, more bool, err error) {
 	type place struct {
 		part int
 		row  store.AlertRow
@@ -80,7 +81,7 @@ func (p *Page) newestAlerts(filter store.AlertFilter, before []uint64) (records 
 		if before[i] == 1 {
 			continue // its oldest was shown
 		}
-		rows, err := p.o.Parts[i].Store.Alerts(filter, before[i], recordRows+1)
+		rows, err := p.o.Parts[i].Alerts(ctx, filter, before[i], recordRows+1)
 		if err != nil {
 			return nil, "", false, err
 		}

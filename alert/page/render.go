@@ -190,7 +190,7 @@ func (p *Page) trouble(r *http.Request, err error) *screen {
 
 func (p *Page) show(w http.ResponseWriter, r *http.Request, s *screen) {
 	f := frame{screen: s, Name: p.o.Name, Person: p.o.Who(r.Context()), Own: "/own/" + ownVersion(), Now: p.o.Now(), Caution: caution}
-	records, _, err := p.standing()
+	records, _, err := p.standing(r.Context())
 	if err != nil {
 		p.o.Failed(err)
 	}
@@ -223,8 +223,8 @@ func waits(r *life.Record) bool {
 }
 
 // inBrief says what stands in a few words, for those who can't see it.
-func (p *Page) inBrief() (string, error) {
-	records, _, err := p.standing()
+func (p *Page) inBrief(ctx context.Context) (string, error) {
+	records, _, err := p.standing(ctx)
 	return brief(records), err
 }
 

@@ -92,7 +92,7 @@ func newStand(t *testing.T) *stand {
 			return Person{MayAct: true}
 		},
 		Failed: func(err error) { s.failed = append(s.failed, err) },
-		Parts: []Part{{Store: st, Do: func(_ context.Context, look func(*monitor.Engine)) error {
+		Parts: []Part{Here{Store: st, Do: func(_ context.Context, look func(*monitor.Engine)) error {
 			s.mu.Lock()
 			defer s.mu.Unlock()
 			s.asked++
@@ -190,7 +190,7 @@ func (s *stand) ring() life.Record {
 		}
 		return 0
 	}})
-	records, _, err := s.page.standing()
+	records, _, err := s.page.standing(s.t.Context())
 	records = slices.DeleteFunc(slices.Clone(records), func(r life.Record) bool { return r.Silence != nil })
 	if err != nil || len(records) != 1 {
 		s.t.Fatalf("%d alerts, %v", len(records), err)

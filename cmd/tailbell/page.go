@@ -71,7 +71,7 @@ func (d *daemon) openPage() error {
 		Failed: func(err error) { d.log.Error().Err(err).Msg("serving the page") },
 	}
 	for _, p := range d.parts.all() {
-		o.Parts = append(o.Parts, page.Part{Store: p.store, Do: func(ctx context.Context, look func(*monitor.Engine)) error {
+		o.Parts = append(o.Parts, page.Here{Store: p.store, Do: func(ctx context.Context, look func(*monitor.Engine)) error {
 			ctx, cancel := context.WithTimeout(ctx, pagePatience)
 			defer cancel()
 			return p.do(ctx, look)
