@@ -4,10 +4,13 @@ import (
 	"flag"
 	"fmt"
 	"math/rand/v2"
+	"net"
 	"os"
 	"os/exec"
 	"path/filepath"
+	"slices"
 	"strings"
+	"sync/atomic"
 	"syscall"
 	"testing"
 	"time"
@@ -69,23 +72,49 @@ func newNodes(t *testing.T, n int) []*node {
 	return nodes
 }
 
-// worker is a process of ours with its line to the bus.
+// worker is a process of ours.
 type worker struct {
 	*process
-	path    string // of the set-up
-	proxies []*proxy
+	path   string // of the set-up
+	banned atomic.Bool
 }
 
-func (w *worker) cutOff() {
-	for _, p := range w.proxies {
-		p.away.Store(true)
-		p.cut()
+// has reports whether a connection comes from the process. All processes have
+// the same set-up, and so the same way to the bus: only the kernel knows.
+func (w *worker) has(from net.Addr) bool {
+	tcp, ok := from.(*net.TCPAddr)
+	if !ok || !w.alive() {
+		return false
 	}
+	text, err := os.ReadFile("/proc/net/tcp")
+	if err != nil {
+		w.t.Error(err)
+		return false
+	}
+	local := fmt.Sprintf("0100007F:%04X", tcp.Port)
+	for line := range strings.Lines(string(text)) {
+		fields := strings.Fields(line)
+		if len(fields) < 10 || fields[1] != local {
+			continue
+		}
+		sockets, err := filepath.Glob(fmt.Sprintf("/proc/%d/fd/*", w.cmd.Process.Pid))
+		if err != nil {
+			w.t.Error(err)
+		}
+		for _, path := range sockets {
+			if to, err := os.Readlink(path); err == nil && to == "socket:["+fields[9]+"]" {
+				return true
+			}
+		}
+	}
+	return false
 }
 
-func (w *worker) letThrough() {
-	for _, p := range w.proxies {
-		p.away.Store(false)
+// cutOff keeps a process from every node.
+func (x *chaos) cutOff(w *worker) {
+	w.banned.Store(true)
+	for _, p := range x.proxies {
+		p.cutThose(w.has)
 	}
 }
 
@@ -96,12 +125,14 @@ type chaos struct {
 	random  *rand.Rand
 	plan    *ordeal.Plan
 	nodes   []*node
+	proxies []*proxy // one for each node, between it and the processes
 	workers []*worker
 	pub     *publisher
 	stop    func()
 
 	did       map[string]int
-	takeovers []time.Duration
+	takeovers []takeover
+	board     *bus.Bucket // of the claims
 }
 
 func newChaos(t *testing.T, workers int, o ordeal.Options) *chaos {
@@ -116,6 +147,13 @@ func newChaos(t *testing.T, workers int, o ordeal.Options) *chaos {
 		t.Fatal(err)
 	}
 	x := &chaos{t: t, seed: seed, random: rand.New(rand.NewPCG(seed, 4)), plan: plan, nodes: newNodes(t, 3), did: map[string]int{}}
+	for _, n := range x.nodes {
+		p := newProxy(t, n.address)
+		p.banned = func(from net.Addr) bool {
+			return slices.ContainsFunc(x.workers, func(w *worker) bool { return w.banned.Load() && w.has(from) })
+		}
+		x.proxies = append(x.proxies, p)
+	}
 	for range workers {
 		x.workers = append(x.workers, x.newWorker(workers > 1))
 	}
@@ -124,18 +162,15 @@ func newChaos(t *testing.T, workers int, o ordeal.Options) *chaos {
 	return x
 }
 
-// newWorker makes a process that reaches every node by a proxy of its own.
+// newWorker makes a process that reaches every node through its proxy.
 func (x *chaos) newWorker(shares bool) *worker {
 	x.t.Helper()
 	folder := x.t.TempDir()
 	w := &worker{path: filepath.Join(folder, "tailbell.toml")}
 	var urls []string
-	for _, n := range x.nodes {
-		p := newProxy(x.t, n.address)
-		w.proxies = append(w.proxies, p)
+	for _, p := range x.proxies {
 		urls = append(urls, "nats://"+p.address())
 	}
-	x.random.Shuffle(len(urls), func(i, j int) { urls[i], urls[j] = urls[j], urls[i] })
 	text := fmt.Appendf(nil, "folder = \"data\"\n%s\n[bus]\nurl = %q\nuser = \"tailbell\"\npassword_file = \"password\"\nreplicas = 3\n",
 		x.plan.Setups[0], strings.Join(urls, ","))
 	if shares {
@@ -200,14 +235,30 @@ func (x *chaos) awaitBus() {
 // dial connects as a command does.
 func (x *chaos) dial() *bus.Bus {
 	x.t.Helper()
-	for _, w := range x.workers {
-		w.letThrough()
-	}
 	b, err := bus.Dial(x.t.Context(), x.parsed(x.workers[0]))
 	if err != nil {
 		x.t.Fatal(err)
 	}
 	return b
+}
+
+// look connects to the claims.
+func (x *chaos) look() *bus.Bucket {
+	x.t.Helper()
+	b, err := bus.Dial(x.t.Context(), x.parsed(x.workers[0]))
+	if err != nil {
+		x.t.Fatal(err)
+	}
+	x.t.Cleanup(func() {
+		if err := b.Close(); err != nil {
+			x.t.Error(err)
+		}
+	})
+	bucket, err := b.Claims(x.t.Context())
+	if err != nil {
+		x.t.Fatal(err)
+	}
+	return bucket
 }
 
 func (x *chaos) parsed(w *worker) *config.Setup {

@@ -233,6 +233,8 @@ type proxy struct {
 	target   string
 	away     atomic.Bool // nobody is let through
 	stalled  atomic.Int64
+	// banned, if not nil, says that one who comes from an address is not.
+	banned func(net.Addr) bool
 
 	mu    sync.Mutex
 	conns map[net.Conn]bool
@@ -264,7 +266,7 @@ func (p *proxy) serve() {
 			return
 		}
 		to, err := net.Dial("tcp", p.target)
-		if p.away.Load() || err != nil {
+		if p.away.Load() || err != nil || p.banned != nil && p.banned(from.RemoteAddr()) {
 			closeAll(from, to)
 			continue
 		}
@@ -302,11 +304,16 @@ func (p *proxy) pass(from, to net.Conn) {
 }
 
 // cut breaks every connection, in the middle of whatever they carry.
-func (p *proxy) cut() {
+func (p *proxy) cut() { p.cutThose(func(net.Addr) bool { return true }) }
+
+// cutThose breaks the connections that come from some addresses.
+func (p *proxy) cutThose(from func(net.Addr) bool) {
 	p.mu.Lock()
 	defer p.mu.Unlock()
 	for c := range p.conns {
-		closeAll(c)
+		if from(c.RemoteAddr()) {
+			closeAll(c)
+		}
 	}
 }
 
