@@ -117,7 +117,9 @@ func (e *Engine) Latest(series, window string, until time.Time, n int) []View {
 	}
 	to := min(InstantOf(until), latest)
 	for w := range ix.cfg.Windows {
-		if cfg := &ix.cfg.Windows[w]; cfg.Name == window {
+		if cfg := &ix.cfg.Windows[w]; cfg.Name == window && cfg.Trials > 0 {
+			return e.latestOfTrials(s, window, to, n)
+		} else if cfg.Name == window {
 			first := ix.cal.Slot(to) - int64(n)*int64(cfg.Step) + 1
 			views := e.Views(series, window, ix.cal.Start(first).Time(), (to + 1).Time())
 			return views[max(len(views)-n, 0):]

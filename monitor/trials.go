@@ -161,3 +161,22 @@ func (s *series) batches() [2]int64 {
 func ofTrials(cfg *config.Indicator) bool {
 	return slices.ContainsFunc(cfg.Windows, func(w config.Window) bool { return w.Trials > 0 })
 }
+
+// latestOfTrials are the latest n looks over the last trials up to a moment, oldest
+// first, as far back as slots are still in memory, however long ago they came.
+func (e *Engine) latestOfTrials(s *series, window string, to Instant, n int) []View {
+	p := s.indicator.named(window)
+	if s.arrivals == nil || p == nil {
+		return nil
+	}
+	from, first := int64(to)+1, int64(s.indicator.cal.Start(max(s.birth, s.trimmed)))
+	for range n {
+		at, ok := s.arrivals.log.Previous(from)
+		if !ok || at < first {
+			break
+		}
+		from = at
+	}
+	views := e.arrivalViews(s, p.place, Instant(from), to+1)
+	return views[max(len(views)-n, 0):]
+}

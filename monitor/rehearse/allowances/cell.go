@@ -37,10 +37,14 @@ type Cell struct {
 	Reference *Reference
 	// Closed says that people close every alert a slot after it opened.
 	Closed bool
-	// Windows are spans in slots, looked at each slot.
+	// Windows are spans in slots, looked at each slot; Trials are windows of the
+	// last so many trials of a proportion, looked at when events come.
 	Windows []int
-	Lower   bool
-	Upper   bool
+	Trials  []int
+	// Batch bounds how many trials come at one moment; zeros mean one by one.
+	Batch [2]int
+	Lower bool
+	Upper bool
 	// Arrival has events looked at when they come, one by one; Alone, only so.
 	Arrival, Alone bool
 	// Allowance is as in a set-up; Assurance too. If Shared, it is one for all the
@@ -124,7 +128,7 @@ func (c *Cell) longest() int {
 	for _, w := range c.Windows {
 		longest = max(longest, w)
 	}
-	return longest
+	return max(longest, c.toFill())
 }
 
 // reported says that observations carry counts of whole slots.
@@ -147,7 +151,9 @@ func (c *Cell) setup(series int, references []int64) (*config.Setup, error) {
 	if c.Proportion {
 		line(`measure = "proportion"`)
 	}
-	if c.reported() {
+	if len(c.Trials) > 0 {
+		line(`events = "each"`)
+	} else if c.reported() {
 		line("events = \"counted\"\nexposure = \"reported\"")
 	} else {
 		line("events = \"each\"\nexposure = \"clock\"\nclock = { size = 1, per = \"1%s\" }", unit)
@@ -155,7 +161,7 @@ func (c *Cell) setup(series int, references []int64) (*config.Setup, error) {
 	if c.False == 0 {
 		line(`ids = "none"`)
 	}
-	line("windows = [%s]", list(c.Windows, func(n int) string { return fmt.Sprintf("%q", fmt.Sprint(n, unit)) }))
+	line("windows = [%s]", list(c.names(), func(s string) string { return fmt.Sprintf("%q", s) }))
 	var tails []string
 	if c.Upper {
 		tails = append(tails, "upper")

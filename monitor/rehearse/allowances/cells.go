@@ -7,6 +7,7 @@ func Cells() []Cell {
 	cells = append(cells, proportions()...)
 	cells = append(cells, changing()...)
 	cells = append(cells, arriving()...)
+	cells = append(cells, lastTrials()...)
 	cells = append(cells, slow()...)
 	return append(cells, estimated()...)
 }

@@ -151,8 +151,12 @@ func (o *Outcome) Predicted() float64 {
 		p.SlotsPerYear *= float64(c.Slots-c.Windows[0]) / float64(c.Slots)
 	}
 	var alphas []float64
-	for w := range c.Windows {
-		for d, watched := range []bool{c.Upper && !c.Alone, c.Lower && !c.Alone, c.Arrival} {
+	for w := range c.names() {
+		slot, arrival := !c.Alone, c.Arrival
+		if len(c.Trials) > 0 {
+			slot, arrival = w < len(c.Windows), w >= len(c.Windows)
+		}
+		for d, watched := range []bool{c.Upper && slot, c.Lower && slot, arrival} {
 			l := o.limits[3*w+d]
 			if !watched {
 				continue
@@ -173,7 +177,7 @@ func (o *Outcome) Predicted() float64 {
 // plan is the cell as the solver sees it, on average where the rate was
 // estimated; false if it has none that is exact.
 func (c *Cell) plan() (*allowance.Plan, bool) {
-	if c.Late > 0 || c.False > 0 || c.Reference != nil && c.Reference.Drawn || len(c.Factors) == 12 || c.Exposure[0] != c.Exposure[1] {
+	if c.uneven() || c.Late > 0 || c.False > 0 || c.Reference != nil && c.Reference.Drawn || len(c.Factors) == 12 || c.Exposure[0] != c.Exposure[1] {
 		return nil, false
 	}
 	p := &allowance.Plan{
@@ -190,6 +194,7 @@ func (c *Cell) plan() (*allowance.Plan, bool) {
 	for _, w := range c.Windows {
 		p.Windows = append(p.Windows, allowance.Window{Slots: w, Step: 1, Slot: !c.Alone, Arrival: c.Arrival})
 	}
+	c.planned(p)
 	return p, true
 }
 
@@ -220,7 +225,7 @@ func (o *Outcome) Fault() string {
 // spokenOf is what the alerts speak of: crossings where exposures are regular, else
 // alerts, which an event must have entered.
 func (o *Outcome) spokenOf(crossings, alerts Count) Count {
-	if o.Cell.Exposure[0] != o.Cell.Exposure[1] || o.Cell.Whole {
+	if o.Cell.Exposure[0] != o.Cell.Exposure[1] || o.Cell.Whole || o.Cell.uneven() {
 		return alerts
 	}
 	return crossings

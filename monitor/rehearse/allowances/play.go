@@ -70,6 +70,7 @@ func (p *player) tell(items []monitor.Item, slot int) error {
 	}
 	slices.SortStableFunc(items, func(a, b monitor.Item) int { return cmp.Compare(a.Observation.Start, b.Observation.Start) })
 	for i, x := range items {
+		p.tally.trials(&items[i].Observation)
 		p.apply(monitor.Message{Kind: monitor.Observations, Items: items[i : i+1], Time: x.Observation.Start, HasTime: true})
 		if err := p.settle(); err != nil {
 			return err
@@ -140,6 +141,9 @@ func (p *player) observe(items []monitor.Item, i, slot int) []monitor.Item {
 	c, rate, factor := p.cell, p.rates[i], p.factor(slot)
 	if c.reported() {
 		n := rehearse.Between(p.r, c.Exposure[0], c.Exposure[1])
+		if len(c.Trials) > 0 {
+			return p.inBatches(items, i, slot, n)
+		}
 		o := monitor.Observation{
 			Series: name(i), Start: p.start(slot), End: p.start(slot + 1),
 			HasEvents: true, Exposure: config.Decimal{Coef: uint64(n)}, HasExposure: true,

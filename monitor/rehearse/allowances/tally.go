@@ -23,6 +23,11 @@ type tally struct {
 	looks, dark int64
 	told        float64 // false alerts a year that the alerts speak of, summed
 	tellers     int64
+	// books are the trials of each series, before what its windows of trials held
+	// until the latest batch, and tails p-values that were asked for.
+	books  []book
+	before []batch
+	tails  map[batch]float64
 }
 
 // seen is what one series came to.
@@ -37,7 +42,11 @@ type seen struct {
 type span struct{ low, high float64 }
 
 func newTally(c *Cell, series int) *tally {
-	t := &tally{cell: c, parts: 3 * len(c.Windows), series: make([]seen, series), windows: map[string]int{}}
+	t := &tally{cell: c, parts: 3 * len(c.names()), series: make([]seen, series), windows: map[string]int{}}
+	for i, name := range c.names() {
+		t.windows[name] = i
+	}
+	t.books, t.tails = make([]book, series), map[batch]float64{}
 	t.from = beginning
 	if !c.Whole {
 		t.from += monitor.Instant(c.longest()) * monitor.Instant(c.slot().Microseconds())
@@ -70,11 +79,7 @@ func (t *tally) look(v monitor.View) {
 	if !v.Made {
 		return
 	}
-	w, ok := t.windows[v.Window]
-	if !ok {
-		w = len(t.windows)
-		t.windows[v.Window] = w
-	}
+	w := t.windows[v.Window]
 	i := number(v.Series)
 	counts := monitor.InstantOf(v.Due) >= t.from
 	if v.Arrival {
@@ -103,13 +108,20 @@ func (t *tally) look(v monitor.View) {
 }
 
 // arrival counts a look at an event that came alone: it crosses if the window
-// held one less than its critical count just before.
+// held one less than its critical count just before. A window of trials crosses if
+// the one before did not signal, for an event may have left it.
 func (t *tally) arrival(v *monitor.View, part int, s *seen, counts bool) {
 	if t.looks++; !v.Upper.Signals {
 		t.dark++
 	}
-	t.limits[part].hold(v.Upper.Limit)
-	if counts && v.Upper.Signals && v.Events == v.Upper.Critical {
+	if counts || len(t.cell.Trials) == 0 { // windows of trials have no part in the limits before they have filled
+		t.limits[part].hold(v.Upper.Limit)
+	}
+	crosses := v.Upper.Signals && v.Events == v.Upper.Critical
+	if len(t.cell.Trials) > 0 {
+		crosses = t.crosses(v, part/3)
+	}
+	if counts && crosses {
 		s.crossings++
 	}
 }

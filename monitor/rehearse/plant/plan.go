@@ -42,6 +42,7 @@ import (
 	"errors"
 	"fmt"
 	"math"
+	"slices"
 	"time"
 
 	"tailbell/config"
@@ -83,6 +84,7 @@ var (
 	ErrTail        = errors.New("the indicator does not watch that tail")
 	ErrRoom        = errors.New("there is no room for the excess")
 	ErrRefused     = errors.New("the engine refused planted data")
+	ErrTrials      = errors.New("excesses are planted in whole slots, and windows of the last trials cut through them: tailbell limits says what those find, and how late")
 )
 
 // indicator returns the indicator of the set-up.
@@ -110,6 +112,9 @@ func (p *Plan) check() error {
 		in, err := p.indicator(setup)
 		if err != nil {
 			return err
+		}
+		if slices.ContainsFunc(in.Windows, func(w config.Window) bool { return w.Trials > 0 }) {
+			return ErrTrials
 		}
 		for _, r := range p.Ratios {
 			switch {
