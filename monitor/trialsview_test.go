@@ -40,7 +40,7 @@ func TestTrialViews(t *testing.T) {
 	}
 	v := views[2] // the days 5, 9 and 17
 	p := binomialTail(5, 4, 0.1)
-	if !v.Arrival || !v.Made || !v.End.Equal(last) || !v.Start.Equal((start+Instant(5*day)).Time()) || v.Events != 4 || v.Decimal() != "5" ||
+	if !v.Arrival || !v.Made || !v.End.Equal(last) || !v.Start.Equal((start + Instant(5*day)).Time()) || v.Events != 4 || v.Decimal() != "5" ||
 		math.Abs(v.Upper.P-p) > 1e-15 || !v.Upper.Signals || v.Upper.Critical != 3 || v.Lower.Watched || math.Abs(v.Expected-0.5) > 1e-12 {
 		t.Errorf("the last look: %+v, want p %v", v, p)
 	}
