@@ -227,6 +227,7 @@ func (c *comparison) indicator(a, b *Indicator) {
 	c.value("expect", NextLook, expectText(a), expectText(b), "")
 	c.value("remind", NextLook, FormatDuration(a.Remind), FormatDuration(b.Remind), "")
 	c.value("remind_to", NextLook, a.RemindTo, b.RemindTo, "")
+	c.value("retire", NextLook, FormatDuration(a.Retire), FormatDuration(b.Retire), "")
 	c.windows(a, b)
 	c.looks(a, b)
 	c.value("tails", NextLook, strings.Join(tailWords(a), ", "), strings.Join(tailWords(b), ", "), "")

@@ -177,6 +177,9 @@ func (p *prose) late(in *Indicator) {
 		}
 		p.line("  While an alert signals and nobody has acknowledged it, %s is told again every %s.", to, elapsed(in.Remind))
 	}
+	if in.Retire > 0 {
+		p.line("  A series of which nothing was heard for %s has ended, as soon as no window and no correction can reach it any more.", elapsed(in.Retire))
+	}
 }
 
 func afterEnd(settle time.Duration) string {

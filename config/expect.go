@@ -2,6 +2,7 @@ package config
 
 import (
 	"fmt"
+	"slices"
 	"strings"
 	"time"
 )
@@ -32,6 +33,11 @@ func (in *Indicator) SilentFor(series string) time.Duration {
 		}
 	}
 	return 0
+}
+
+// Names reports whether the series is named in full among those that must report.
+func (in *Indicator) Names(series string) bool {
+	return slices.ContainsFunc(in.Expect, func(e Expectation) bool { return e.Series.Exact() && e.Series.String() == series })
 }
 
 // readExpect reads how long series may be silent: one time for all of them, or a

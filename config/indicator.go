@@ -188,6 +188,9 @@ func (s section) readTimes(in *Indicator) {
 	s.readExpect(in)
 	s.readFollowUp(in)
 	s.readRemind(in)
+	if s.has("retire") {
+		in.Retire, _ = s.duration("retire", 0, time.Minute, maxTime)
+	}
 	in.Since = s.readSince(in.Every, in.Zone)
 }
 

@@ -28,7 +28,7 @@ var keysOf = map[string][]string{
 	"[time]":       {"mode"},
 	"[bus]":        {"url", "credentials", "user", "password_file", "ca", "cert", "key", "max_bytes", "max_age", "replicas", "share", "claim", "copy_every"},
 	"[limits]":     {"max_series", "max_ids", "max_message", "max_observations", "memory"},
-	indicatorPlace: {"name", "title", "noun", "series", "sums", "measure", "unit", "per", "expected", "every", "zone", "events", "exposure", "clock", "settle", "follow_up", "horizon", "ahead", "grain", "ids", "expires", "since", "expect", "remind", "remind_to", "windows", "looks", "tails", "p_limit", "allowance", "allowance_for", "assurance", "reserve", "quiet", "level", "alpha", "baseline"},
+	indicatorPlace: {"name", "title", "noun", "series", "sums", "measure", "unit", "per", "expected", "every", "zone", "events", "exposure", "clock", "settle", "follow_up", "horizon", "ahead", "grain", "ids", "expires", "since", "expect", "remind", "remind_to", "retire", "windows", "looks", "tails", "p_limit", "allowance", "allowance_for", "assurance", "reserve", "quiet", "level", "alpha", "baseline"},
 	"clock":        {"size", "per"},
 	"a window":     {"span", "step"},
 	baselinePlace:  {"series", "sums", "from", "to", "kind", "rate", "events", "exposure", "span", "gap", "refresh", "min_events", "margin", "spread", "strata", "delay", "version", "source"},

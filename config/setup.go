@@ -275,7 +275,10 @@ type Indicator struct {
 	// again after as much time.
 	Remind   time.Duration
 	RemindTo string
-	Windows  []Window
+	// Retire, if not zero, is how long nothing may be heard of a series before it
+	// has ended, once nothing of it is left in memory.
+	Retire  time.Duration
+	Windows []Window
 	// SlotLooks are made when slots have settled, ArrivalLooks at each event.
 	// At least one is true.
 	SlotLooks    bool

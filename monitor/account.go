@@ -52,12 +52,19 @@ type Account struct {
 	// and AfterSignOff the changes of slots that had been signed off.
 	OutOfService int64 `json:"out_of_service,omitempty"`
 	AfterSignOff int64 `json:"after_sign_off,omitempty"`
+	// Retired series have ended since nothing was heard of them for long, and
+	// Returned ones were monitored before, whyever that had ended.
+	Retired  int64 `json:"retired,omitempty"`
+	Returned int64 `json:"returned,omitempty"`
 }
 
 // Account returns the account as it stands.
 func (e *Engine) Account() Account {
 	a := e.account
 	a.RefusedBy = maps.Clone(e.account.RefusedBy)
+	for _, x := range e.stubs.byNumber {
+		a.Withheld += x.unpaired
+	}
 	for _, s := range e.series {
 		a.Withheld += s.unpaired
 		if len(s.cells) == 0 || s.needs() == (sides{}) {
@@ -98,6 +105,8 @@ func (a Account) Add(b Account) Account {
 	sum.Reruns += b.Reruns
 	sum.OutOfService += b.OutOfService
 	sum.AfterSignOff += b.AfterSignOff
+	sum.Retired += b.Retired
+	sum.Returned += b.Returned
 	sum.RefusedBy = maps.Clone(a.RefusedBy)
 	if sum.RefusedBy == nil {
 		sum.RefusedBy = map[Reason]int64{}

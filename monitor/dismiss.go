@@ -11,10 +11,9 @@ import (
 // dismiss ends the monitoring of an indicator that the next set-up lacks: its
 // alerts close as no longer monitored, with the evidence that they have, what
 // its series hold goes to the archive, and what is reported of them from now on
-// is unmonitored. Of each series a stub stays, since ids and the store know it by
-// its number; should an indicator claim its name again, it begins anew.
+// is unmonitored. Should an indicator claim its name again, it begins anew.
 func (e *Engine) dismiss(ix *indicator) {
-	for _, s := range ix.series {
+	for _, s := range ix.ordered() {
 		for d := range s.tails {
 			e.dismissAlerts(&s.tails[d], ix)
 		}
@@ -31,11 +30,7 @@ func (e *Engine) dismiss(ix *indicator) {
 			}
 			e.archive(s, c)
 		}
-		delete(e.byName, s.name)
-		s.retire()
-		e.stubs[s.name] = s
-		e.living--
-		e.touch(s)
+		e.end(s, e.clock)
 	}
 	ix.series, ix.sums, e.recent = nil, nil, nil
 	e.pending = slices.DeleteFunc(e.pending, func(a *alert) bool { return !a.pending })
@@ -54,36 +49,6 @@ func (e *Engine) dismissAlerts(t *tail, ix *indicator) {
 		}
 		a.pending = false
 		delete(e.alerts, a.record.ID)
-	}
-}
-
-// retire makes the series a stub.
-func (s *series) retire() {
-	s.rouse()
-	stub := series{
-		number: s.number, name: s.name, indicator: s.indicator, retired: true, unpaired: s.unpaired,
-		watched: s.watched, touched: s.touched,
-	}
-	for d := range s.tails {
-		stub.tails[d].opened = s.tails[d].opened
-	}
-	if s.silence != nil {
-		stub.tail(silence).opened = s.silence.opened
-	}
-	*s = stub
-}
-
-// succeed goes on numbering alerts where the stub of the same name ended: no two
-// have the same number.
-func (s *series) succeed(stub *series) {
-	if stub == nil {
-		return
-	}
-	for d := range s.tails {
-		s.tails[d].opened = stub.tails[d].opened
-	}
-	if stub.silence != nil {
-		s.tail(silence).opened = stub.silence.opened
 	}
 }
 

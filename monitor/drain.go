@@ -28,6 +28,9 @@ func (e *Engine) Drain() Changes {
 		c.Position = 0
 	}
 	e.drained = e.position
+	if len(e.stubs.touched) > 0 {
+		e.touched = slices.DeleteFunc(e.touched, func(s *series) bool { return s.retired })
+	}
 	slices.SortFunc(e.touched, func(a, b *series) int { return cmp.Compare(a.number, b.number) })
 	size := 0
 	for _, s := range e.touched {
@@ -38,6 +41,7 @@ func (e *Engine) Drain() Changes {
 		s.touched, s.fresh, s.dirty = false, false, s.dirty[:0]
 		s.drainArrivals()
 	}
+	size += e.drainStubs(&c)
 	c.IDs, c.RewrittenGenerations = e.ids.drain(&e.room)
 	for _, a := range e.changed {
 		a.dirty = false
@@ -51,15 +55,38 @@ func (e *Engine) Drain() Changes {
 	return c
 }
 
+// drainStubs hands over the stubs that changed, among the series in order of their
+// numbers, and returns how many bytes they take.
+func (e *Engine) drainStubs(c *Changes) (size int) {
+	if len(e.stubs.touched) == 0 {
+		return 0
+	}
+	for _, x := range e.stubs.touched {
+		if x.touched = false; e.stubs.byNumber[x.number] == x { // else its number is another's
+			patch := e.room.keep(x.encode(e.room.next()))
+			size += len(patch)
+			c.Series = append(c.Series, SeriesChange{x.number, patch})
+		}
+	}
+	e.stubs.touched = nil
+	slices.SortFunc(c.Series, func(a, b SeriesChange) int { return cmp.Compare(a.Number, b.Number) })
+	return size
+}
+
 // slice returns whole states of the next series, of about so many bytes.
 func (e *Engine) slice(size int) []SeriesChange {
 	var states []SeriesChange
 	for ; e.checkpoint.next < len(e.series) && size > 0; e.checkpoint.next++ {
-		s := e.series[e.checkpoint.next]
-		s.catchUp()
-		state := e.room.keep(s.encode(e.room.next(), true))
+		number := uint32(e.checkpoint.next)
+		var state []byte
+		if s := e.series[number]; s.retired {
+			state = e.room.keep(e.stubs.byNumber[number].encode(e.room.next()))
+		} else {
+			s.catchUp()
+			state = e.room.keep(s.encode(e.room.next(), true))
+		}
 		size -= len(state)
-		states = append(states, SeriesChange{s.number, state})
+		states = append(states, SeriesChange{number, state})
 	}
 	if len(e.series) > 0 && e.checkpoint.next == len(e.series) {
 		e.checkpoint = checkpoint{cycle: e.checkpoint.cycle + 1}

@@ -24,8 +24,7 @@ const withoutSignOff = 2
 const idVersion = 1
 
 // With flagNamed what older patches and states say of the series holds no more;
-// flagRetired makes it a stub, of which only unpaired and the
-// numbers of alerts follow. With flagArrivals what looks at arrivals need follows
+// flagRetired makes it a stub, see there. With flagArrivals what looks at arrivals need follows
 // the head.
 const (
 	flagNamed    = 1
@@ -42,14 +41,6 @@ var errEncoding = errors.New("monitor: stored state can't be read")
 func (s *series) encode(b []byte, whole bool) []byte {
 	at := len(b) + 1 // of the flags
 	b = append(b, encodingVersion, 0)
-	if s.retired {
-		b[at] = flagNamed | flagRetired
-		b = binary.AppendVarint(appendString(b, s.name), s.unpaired)
-		for _, d := range [...]direction{upper, lower, silence} {
-			b = binary.AppendUvarint(b, uint64(s.tail(d).opened))
-		}
-		return b
-	}
 	if s.arrivals != nil {
 		b[at] |= flagArrivals
 	}

@@ -44,9 +44,9 @@ type Engine struct {
 	position  uint64
 
 	indicators []*indicator
-	series     []*series // by number, stubs among them
+	series     []*series // by number, the ghost where there is a stub
 	living     int       // how many are no stubs
-	stubs      map[string]*series
+	stubs      stubs
 	byName     map[string]*series
 	recent     *series // that was asked for last by its name
 	ids        ids
@@ -83,8 +83,10 @@ type Engine struct {
 
 	onLook func(View)
 	looks  []look // scratch
-	// passing says that nothing stores the engine, see Pass.
-	passing bool
+	// passing says that nothing stores the engine, see Pass; formerly is what series
+	// that have ended were looked at.
+	passing  bool
+	formerly []Watched
 	// known are p-values that were computed, nil if nobody asked for any.
 	known *KnownChances
 	// long makes it go no quick way: tests hold those against the long ones.
@@ -103,7 +105,7 @@ type Partition struct {
 func New(p Partition) *Engine {
 	return &Engine{
 		partition: p, history: true, clock: Beginning, nextDue: Never,
-		byName: map[string]*series{}, stubs: map[string]*series{}, alerts: map[string]*alert{},
+		byName: map[string]*series{}, stubs: newStubs(), alerts: map[string]*alert{},
 		ids:     newIDs(),
 		account: Account{RefusedBy: map[Reason]int64{}},
 	}

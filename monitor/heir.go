@@ -100,6 +100,17 @@ func (e *Engine) inherit(f *fact, into *series) {
 	}
 }
 
+// bequeath links a series that is there again to those that took its place.
+func (e *Engine) bequeath(s *series) {
+	for i := range e.facts {
+		f := &e.facts[i]
+		if into := e.byName[f.Into]; f.Into != "" && into != nil && into.heir != nil && s.sum == nil && f.matches(s.name) && into.indicator == s.indicator {
+			into.heir.sources = inserted(into.heir.sources, s)
+			s.heirs = append(s.heirs, into)
+		}
+	}
+}
+
 // relinkHeirs links all heirs after they were restored, and sums what they
 // inherit: the earlier ones first, of which others may have inherited.
 func (e *Engine) relinkHeirs() {

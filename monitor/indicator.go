@@ -1,7 +1,9 @@
 package monitor
 
 import (
+	"cmp"
 	"math"
+	"slices"
 
 	"tailbell/config"
 )
@@ -14,7 +16,9 @@ type indicator struct {
 	clock  clockRule // for exposure by the clock
 	needs  sides
 	series []*series
-	sums   []*series // those of series that are sums
+	// shuffled says that some of them stand before others with smaller numbers.
+	shuffled bool
+	sums     []*series // those of series that are sums
 	// places are the windows that are or were in force, in the order in which
 	// the state of every series has them.
 	places []config.Window
@@ -78,6 +82,15 @@ func newIndicator(index int, cfg *config.Indicator) *indicator {
 	}
 	ix.needs = sides{events: cfg.Events == config.Counted, exposure: cfg.Exposure == config.Reported}
 	return ix
+}
+
+// ordered returns the series in order of their numbers.
+func (ix *indicator) ordered() []*series {
+	if ix.shuffled {
+		slices.SortFunc(ix.series, func(a, b *series) int { return cmp.Compare(a.number, b.number) })
+		ix.shuffled = false
+	}
+	return ix.series
 }
 
 // never is a slot before all others.

@@ -93,7 +93,7 @@ func (e *Engine) allot(ix *indicator, ep *epoch, boundary int64) {
 		e.visits(ix, ix.resters.awake, allotTo)
 		return
 	}
-	for _, s := range ix.series {
+	for _, s := range ix.ordered() {
 		allotTo(s)
 	}
 }
@@ -240,7 +240,7 @@ func (ix *indicator) totalAt(boundary int64) total {
 		return ix.total
 	}
 	t := total{boundary: boundary}
-	for _, s := range ix.series {
+	for _, s := range ix.ordered() {
 		if len(s.limits) > 0 && s.limits[0].from <= boundary {
 			t.series++
 			t.all += s.limitsOf(boundary).here

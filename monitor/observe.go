@@ -261,16 +261,25 @@ func (e *Engine) birth(ix *indicator, o *Observation, c *contribution) (Reason, 
 // enter makes a series.
 func (e *Engine) enter(ix *indicator, name string) *series {
 	s := &series{
-		number: uint32(len(e.series)), name: name, indicator: ix, birth: unborn,
+		name: name, indicator: ix, birth: unborn,
 		trimmed: -1 << 62, windows: make([]windowState, len(ix.places)), fresh: true, alarm: noAlarm,
 		dates: e.datesOf(ix, name),
 	}
-	s.succeed(e.stubs[s.name])
-	e.series = append(e.series, s)
+	e.comeBack(s)
+	s.number = e.number()
+	if int(s.number) < len(e.series) {
+		e.series[s.number] = s
+	} else {
+		e.series = append(e.series, s)
+	}
 	e.living++
 	e.byName[s.name] = s
+	if n := len(ix.series); n > 0 && ix.series[n-1].number > s.number {
+		ix.shuffled = true
+	}
 	ix.series = append(ix.series, s)
 	ix.resters.awake.add(s.number)
+	e.bequeath(s)
 	e.touch(s)
 	if within := ix.cfg.SilentFor(name); within > 0 && !e.passing && e.clock != Beginning {
 		queue.Push(&e.deadlines, deadline{e.clock.Add(within), s})

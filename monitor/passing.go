@@ -1,6 +1,10 @@
 package monitor
 
-import "tailbell/monitor/life"
+import (
+	"slices"
+
+	"tailbell/monitor/life"
+)
 
 // Findings are what an engine that nothing stores has found.
 type Findings struct {
@@ -34,6 +38,10 @@ func (e *Engine) Findings() Findings {
 	e.drained, e.touched, e.changed = e.position, e.touched[:0], e.changed[:0]
 	e.steps, e.refused, e.archived, e.settings = nil, nil, nil, nil
 	e.ids.touched, e.ids.dropped = nil, nil
+	for _, x := range e.stubs.touched {
+		x.touched = false
+	}
+	e.stubs.touched = nil
 	return f
 }
 
@@ -94,19 +102,24 @@ func (e *Engine) watched(s *series, window int, due Instant) {
 }
 
 // Watched returns what was looked at since Pass, by series in order of
-// appearance and by window.
+// appearance and by window; series that have ended come first.
 func (e *Engine) Watched() []Watched {
-	var list []Watched
+	list := slices.Clone(e.formerly)
 	for _, s := range e.series {
-		if s.watched == nil {
-			continue
-		}
-		for i, w := range *s.watched {
-			list = append(list, Watched{
-				Series: s.name, Indicator: s.indicator.cfg.Name, Window: s.indicator.places[i].Name,
-				Looks: w.looks, Withheld: w.withheld, First: w.first, Last: w.last,
-			})
-		}
+		list = append(list, s.watchedAs()...)
+	}
+	return list
+}
+
+func (s *series) watchedAs() (list []Watched) {
+	if s.watched == nil {
+		return nil
+	}
+	for i, w := range *s.watched {
+		list = append(list, Watched{
+			Series: s.name, Indicator: s.indicator.cfg.Name, Window: s.indicator.places[i].Name,
+			Looks: w.looks, Withheld: w.withheld, First: w.first, Last: w.last,
+		})
 	}
 	return list
 }

@@ -227,7 +227,7 @@ func (ix *indicator) poolOf(ep *epoch, key poolKey, boundary int64) *pool {
 	p := &pool{each: map[*series]*reference{}}
 	p.sum.strata = make([]Quantity, strataOf(b))
 	p.sum.begin, p.sum.end = boundary-int64(b.SpanSlots), boundary
-	for _, s := range ix.series { // in order of their numbers
+	for _, s := range ix.ordered() {
 		if s.ruleOf() != key.rule || ix.baseline(s, ep.cfg, boundary) != b {
 			continue
 		}

@@ -123,16 +123,21 @@ func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(st
 	if image.State != nil {
 		layers = append([][]byte{image.State}, image.Patches...)
 	}
+	for i := len(layers) - 1; i > 0; i-- { // older ones may be of another series
+		if l := layers[i]; len(l) > 1 && l[1]&flagNamed != 0 {
+			layers = layers[i:]
+			break
+		}
+	}
+	if len(layers) == 1 && len(layers[0]) > 1 && layers[0][1]&flagRetired != 0 {
+		return e.restoreStub(number, layers[0])
+	}
 	for _, layer := range layers {
 		if err := e.overlay(s, layer); err != nil {
 			return err
 		}
 	}
 	switch {
-	case s.retired:
-		e.stubs[s.name] = s
-		e.series = append(e.series, s)
-		return nil
 	case s.name == "":
 		return fmt.Errorf("it was never named: %w", errEncoding)
 	case s.indicator == nil:
@@ -162,6 +167,22 @@ func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(st
 	s.indicator.resters.awake.add(s.number)
 	s.alarm = noAlarm
 	return nil
+}
+
+// restoreStub puts a stub in the place of a series that has ended.
+func (e *Engine) restoreStub(number uint32, data []byte) error {
+	r := &reader{b: data}
+	if version := r.byte(); version > encodingVersion {
+		return fmt.Errorf("%w: encoding %d is not known to this program", errEncoding, version)
+	}
+	r.byte() // flags
+	x := r.stub(number, e.clock)
+	e.stubs.keep(x)
+	if x.touched {
+		e.stubs.touched = append(e.stubs.touched, x)
+	}
+	e.series = append(e.series, ghost)
+	return r.err
 }
 
 // derive fills in what is not stored of windows whose looks were all made.
@@ -194,11 +215,7 @@ func (e *Engine) overlay(s *series, data []byte) error {
 	flags := r.byte()
 	switch {
 	case flags&flagRetired != 0:
-		*s = series{number: s.number, name: r.string(), retired: true, unpaired: r.int()}
-		for _, d := range [...]direction{upper, lower, silence} {
-			s.tail(d).opened = int32(r.uint())
-		}
-		return r.err
+		return fmt.Errorf("%w: more follows after the series had ended", errEncoding)
 	case flags&flagNamed != 0:
 		*s = series{number: s.number, name: r.string()}
 		owner := r.string()

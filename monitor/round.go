@@ -23,6 +23,9 @@ func (e *Engine) lookAll(ix *indicator, boundary int64) {
 		e.trim(s)
 		e.rest(s, ep, boundary)
 	})
+	if ix.retiresAt(boundary) {
+		e.retire(ix, due)
+	}
 }
 
 // lookAt makes the looks of one series that fall due at the boundary.

@@ -18,8 +18,7 @@ type series struct {
 	// fresh says that no patch has named the series yet, or that what older
 	// ones say of it holds no more.
 	fresh bool
-	// retired says that it is a stub, monitored no longer: nothing is kept of
-	// it but number, name, what unpaired counts and how many alerts there were.
+	// retired says that it is monitored no longer: there is a stub in its place.
 	retired bool
 	// resting says that it is not visited at boundaries before alarm.
 	resting   bool

@@ -155,6 +155,9 @@ func (e *Engine) install(next *config.Setup, version int, from map[string]int64)
 		horizon = max(horizon, cfg.Horizon)
 	}
 	e.ids.configure(horizon, next.Limits.MaxIDs)
+	if e.clock != Beginning {
+		e.ids.drop(e.clock) // the horizon may be a shorter one
+	}
 	e.enterExpected()
 	e.reschedule()
 	e.rewakeAll()

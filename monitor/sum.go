@@ -75,9 +75,15 @@ func (e *Engine) link(s *series) {
 		}
 		if !slices.Contains(s.sums, sum) { // two rules may come to the same
 			s.sums = append(s.sums, sum)
-			sum.sum.members = append(sum.sum.members, s)
+			sum.sum.members = inserted(sum.sum.members, s)
 		}
 	}
+}
+
+// inserted puts the series into a list that is in order of numbers.
+func inserted(list []*series, s *series) []*series {
+	i, _ := slices.BinarySearchFunc(list, s, func(a, b *series) int { return cmp.Compare(a.number, b.number) })
+	return slices.Insert(list, i, s)
 }
 
 // relink links all series after they were restored, and sums what they hold.
