@@ -71,7 +71,7 @@ func (e *Engine) link(s *series) {
 		}
 		if sum.sum == nil {
 			sum.sum = &rollup{rule: rule}
-			ix.sums = append(ix.sums, sum)
+			ix.sums = inserted(ix.sums, sum)
 		}
 		if !slices.Contains(s.sums, sum) { // two rules may come to the same
 			s.sums = append(s.sums, sum)

@@ -82,6 +82,7 @@ func TestSeriesComeAndGo(t *testing.T) {
 }
 
 func churn(t *testing.T, ids string) (days []churned) {
+	t.Helper()
 	setup, err := config.Parse([]byte(strings.Replace(churnSetup, "IDS", ids, 1)), "test")
 	if err != nil {
 		t.Fatal(err)
