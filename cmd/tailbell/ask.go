@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"io/fs"
 	"os"
+	"slices"
 	"time"
 
 	"tailbell/config"
@@ -27,12 +28,37 @@ func ask(ctx context.Context, setup *config.Setup, verb string, arg, result any)
 		return err
 	}
 	defer func() { err = errors.Join(err, b.Close()) }()
-	err = control.Call(ctx, b, verb, arg, result)
+	err = callDaemon(ctx, setup, b, verb, arg, result)
 	if setup.Bus.URL != "" && unanswered(err) {
 		// A remote bus is there without a daemon too.
 		return fmt.Errorf("%w for %s on its remote bus", bus.ErrNoDaemon, setup.Name)
 	}
 	return err
+}
+
+// againTime is how long one try waits for an answer, where another process may
+// be about to take over answering.
+const againTime = 3 * time.Second
+
+// callDaemon asks the daemon. Where processes share the partitions, what only reads is
+// asked again as long as nobody answers.
+func callDaemon(ctx context.Context, setup *config.Setup, b *bus.Bus, verb string, arg, result any) error {
+	if !setup.Bus.Share || !slices.Contains([]string{verbStatus, verbAlerts, verbAlert, verbRefused, verbOutlets, verbExport, verbSeries, verbSetting}, verb) {
+		return control.Call(ctx, b, verb, arg, result)
+	}
+	for {
+		try, cancel := context.WithTimeout(ctx, againTime)
+		err := control.Call(try, b, verb, arg, result)
+		cancel()
+		var answer *control.Error
+		moving := errors.As(err, &answer) && (answer.Code == codeElsewhere || answer.Code == control.TimedOut) || errors.Is(err, context.DeadlineExceeded)
+		if !moving || ctx.Err() != nil {
+			return err
+		}
+		if pause(ctx, frontAgain) != nil {
+			return err
+		}
+	}
 }
 
 // unanswered reports whether nobody on the bus answers the verb.

@@ -90,7 +90,7 @@ func (d *daemon) answer(ctx context.Context) (err error) {
 	if d.member.serve, err = control.ServeMember(ctx, d.bus, d.member.keeper.Name(), d.memberVerbs()); err != nil {
 		return err
 	}
-	d.serve, err = control.ServeShared(ctx, d.bus, (&front{d}).verbs())
+	d.serve, err = control.ServeShared(ctx, d.bus, (&front{d}).verbs(), func() bool { return d.member.keeper.Holds(frontPartition) })
 	return err
 }
 

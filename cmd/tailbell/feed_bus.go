@@ -8,7 +8,6 @@ import (
 
 	"tailbell/alert/words"
 	"tailbell/ingest/bus"
-	"tailbell/ingest/control"
 )
 
 const (
@@ -76,7 +75,7 @@ func (f *feeding) broken(ctx context.Context, err error) error {
 func (f *feeding) ask(ctx context.Context, s *statusReply) error {
 	ctx, cancel := context.WithTimeout(ctx, askTime)
 	defer cancel()
-	return control.Call(ctx, f.bus, verbStatus, nil, s)
+	return callDaemon(ctx, f.setup, f.bus, verbStatus, nil, s)
 }
 
 // await waits until the daemon has read what was published, and says what
@@ -86,19 +85,21 @@ func (f *feeding) await(ctx context.Context) error {
 	if err := f.ask(ctx, &s); err != nil {
 		return f.unknown(ctx, err)
 	}
-	end := make([]uint64, len(s.Partitions))
-	for i := range s.Partitions {
-		end[i] = s.Partitions[i].End
-	}
+	end := map[int]uint64{}
 	moved, last := now(), uint64(0)
 	for {
+		// A partition may be on its way from one process to another: then it is in
+		// no answer, and its end is taken later.
 		behind, sum := uint64(0), uint64(0)
-		for i := range min(len(end), len(s.Partitions)) {
+		for i := range s.Partitions {
 			p := &s.Partitions[i]
+			if _, known := end[p.Number]; !known {
+				end[p.Number] = p.End
+			}
 			sum += p.Position
-			behind += end[i] - min(end[i], p.Position)
+			behind += end[p.Number] - min(end[p.Number], p.Position)
 		}
-		if behind == 0 {
+		if behind == 0 && len(s.Partitions) == f.setup.Partitions {
 			return f.became(&s)
 		}
 		if sum != last {
@@ -110,6 +111,7 @@ func (f *feeding) await(ctx context.Context) error {
 		if err := pause(ctx, awaitPause); err != nil {
 			return f.unknown(ctx, err)
 		}
+		s = statusReply{}
 		if err := f.ask(ctx, &s); err != nil {
 			return f.unknown(ctx, err)
 		}

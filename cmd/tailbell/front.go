@@ -15,9 +15,16 @@ import (
 	"tailbell/monitor/life"
 )
 
-// front answers commands for all processes that share the partitions: each
-// request reaches one of them, which asks those that own what it is about.
+// front answers commands for all processes that share the partitions: the owner
+// of one certain partition, which asks those that own what a request is about.
 type front struct{ d *daemon }
+
+// frontPartition is the partition whose owner answers commands.
+const frontPartition = 0
+
+// memberTime is how long an owner is waited for: one that does not answer is
+// about to lose what it owns.
+const memberTime = 2 * time.Second
 
 // partial is what one process answers for the partitions that it owns.
 type partial struct {
@@ -79,6 +86,11 @@ func (f *front) ask(ctx context.Context, member, verb string, body []byte) (p pa
 	if member == f.d.member.keeper.Name() {
 		p, p.err = f.d.partial(ctx, f.d.ownVerb(verb), body)
 		return p
+	}
+	if verb != verbAct && verb != verbResend && verb != verbTryOutlet && verb != verbCopy {
+		var cancel context.CancelFunc
+		ctx, cancel = context.WithTimeout(ctx, memberTime)
+		defer cancel()
 	}
 	var arg any
 	if body != nil {

@@ -77,6 +77,9 @@ func (n names) claimPrefix() string { return "$KV." + n.deployment + "-claims." 
 
 func (n names) control(verb string) string { return n.deployment + ".control." + verb }
 
+// copies is the object store for copies of stores.
+func (n names) copies() string { return n.deployment + "-copies" }
+
 // inbox begins the subjects on which this program is answered. It is not that
 // of every client, so that a publisher's account may have its own answers
 // without having ours, which carry the stream.

@@ -39,24 +39,21 @@ type Server struct {
 // moment it returns until Close is called. Handlers of different requests run
 // at the same time. When ctx ends, so do the contexts of the handlers.
 func Serve(ctx context.Context, b *bus.Bus, verbs map[string]Handler) (*Server, error) {
-	return serve(ctx, b.Conn(), verbs, b.ControlSubject, "")
+	return serve(ctx, b.Conn(), verbs, b.ControlSubject, func() bool { return true })
 }
 
-// sharing is the queue group of the processes that share a deployment.
-const sharing = "tailbell"
-
-// ServeShared is Serve for one of several processes, of which only one gets each
-// request.
-func ServeShared(ctx context.Context, b *bus.Bus, verbs map[string]Handler) (*Server, error) {
-	return serve(ctx, b.Conn(), verbs, b.ControlSubject, sharing)
+// ServeShared is Serve for one of several processes, which all get each request:
+// only that answers for which mine is true at that moment.
+func ServeShared(ctx context.Context, b *bus.Bus, verbs map[string]Handler, mine func() bool) (*Server, error) {
+	return serve(ctx, b.Conn(), verbs, b.ControlSubject, mine)
 }
 
 // ServeMember answers what the other processes ask this one, see CallMember.
 func ServeMember(ctx context.Context, b *bus.Bus, member string, verbs map[string]Handler) (*Server, error) {
-	return serve(ctx, b.Conn(), verbs, func(verb string) string { return b.MemberSubject(member, verb) }, "")
+	return serve(ctx, b.Conn(), verbs, func(verb string) string { return b.MemberSubject(member, verb) }, func() bool { return true })
 }
 
-func serve(ctx context.Context, conn *nats.Conn, verbs map[string]Handler, subject func(verb string) string, queue string) (*Server, error) {
+func serve(ctx context.Context, conn *nats.Conn, verbs map[string]Handler, subject func(verb string) string, mine func() bool) (*Server, error) {
 	for verb := range verbs {
 		if err := checkVerb(verb); err != nil {
 			return nil, err
@@ -66,8 +63,10 @@ func serve(ctx context.Context, conn *nats.Conn, verbs map[string]Handler, subje
 	s := &Server{conn: conn, cancel: cancel, slots: make(chan struct{}, atOnce)}
 	for _, verb := range slices.Sorted(maps.Keys(verbs)) {
 		handler := verbs[verb]
-		sub, err := s.conn.QueueSubscribe(subject(verb), queue, func(msg *nats.Msg) {
-			s.receive(ctx, handler, msg)
+		sub, err := s.conn.Subscribe(subject(verb), func(msg *nats.Msg) {
+			if mine() {
+				s.receive(ctx, handler, msg)
+			}
 		})
 		if err != nil {
 			return nil, errors.Join(fmt.Errorf("answering %q: %w", verb, err), s.Close())
