@@ -17,6 +17,7 @@ import (
 
 	"tailbell/ingest/bus"
 	"tailbell/ingest/claim"
+	"tailbell/ingest/copies"
 
 	"github.com/nats-io/nats.go/jetstream"
 )
@@ -322,6 +323,96 @@ func TestCommandsOfACluster(t *testing.T) {
 	says(t, 1, []string{"no outlet"}, "outlet", "drop", "nothing", "--config", config)
 	says(t, 0, []string{"No intake is held"}, "clock", "accept", "--config", config)
 	says(t, 0, []string{"nothing changes"}, "config", "diff", config)
+}
+
+// copied waits until the copies on the bus reach as far as the stream, and returns
+// the newest of each partition.
+func (c *cluster) copied() (newest []copies.Copy) {
+	c.t.Helper()
+	shelf, err := c.bus.Copies(c.t.Context())
+	if err != nil {
+		c.t.Fatal(err)
+	}
+	for n := range 8 {
+		end, err := c.bus.EndOf(c.t.Context(), n)
+		if err != nil {
+			c.t.Fatal(err)
+		}
+		c.services[0].await("a copy", func() bool {
+			list, err := copies.List(c.t.Context(), shelf, n)
+			if err != nil || len(list) == 0 || list[0].Position < end {
+				return false
+			}
+			newest = append(newest, list[0])
+			return true
+		})
+	}
+	return newest
+}
+
+// TestTakeOverFromCopies kills the only process after the stream has been
+// trimmed, and starts another one without a store: it goes on from the copies, and
+// where the newest one is damaged from the one before.
+func TestTakeOverFromCopies(t *testing.T) {
+	c := newCluster(t, 2, true)
+	c.services[0].start()
+	c.look()
+	c.evenly(1)
+	c.feed(0, 20)
+	first := c.copied()
+	c.feed(20, 20)
+	second := c.copied()
+	for n := range second {
+		if second[n].Position <= first[n].Position {
+			t.Fatalf("partition %d: copies at %d and %d", n, first[n].Position, second[n].Position)
+		}
+	}
+	const damaged = 5
+	file := filepath.Join(t.TempDir(), "other")
+	if err := os.WriteFile(file, []byte("this is no store"), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	shelf, err := c.bus.Copies(t.Context())
+	if err != nil {
+		t.Fatal(err)
+	}
+	bad := second[damaged]
+	bad.Position++ // it may be as long as it likes
+	if err := copies.Save(t.Context(), shelf, file, &bad); err != nil {
+		t.Fatal(err)
+	}
+	through := first[0].Position
+	for _, one := range first {
+		through = min(through, one.Position)
+	}
+	if err := c.bus.Trim(t.Context(), through); err != nil {
+		t.Fatal(err)
+	}
+	c.services[0].stop(syscall.SIGKILL)
+	s := c.services[1]
+	s.start()
+	s.await("the owner", func() bool {
+		owners := c.owners()
+		return len(owners) == 1 && slices.Max(slices.Collect(maps.Values(owners))) == 8 && strings.Count(s.log.String(), `"message":"live"`) == 8
+	})
+	if got := strings.Count(s.log.String(), "going on from a copy"); got != 8 {
+		t.Errorf("%d of 8 partitions go on from a copy:\n%s", got, s.log)
+	}
+	if got := strings.Count(s.log.String(), "of no use"); got != 1 {
+		t.Errorf("%d copies were refused, want one:\n%s", got, s.log)
+	}
+	c.feed(40, 20)
+	s.await("steps", func() bool { return c.steps() >= 60 })
+	c.check()
+	elements := int64(0)
+	status, _ := s.status()
+	for _, p := range status.Partitions {
+		elements += p.Account.Elements
+	}
+	if n := c.steps(); n != 60 || elements != 600 {
+		t.Errorf("%d steps, %d elements", n, elements)
+	}
+	s.stop(syscall.SIGTERM)
 }
 
 // TestAlone checks that a second process is refused where processes do not share,

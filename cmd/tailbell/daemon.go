@@ -34,7 +34,7 @@ type daemon struct {
 	fail context.CancelCauseFunc
 
 	troubles troubles
-	copies   copies
+	copies   copyJobs
 }
 
 // daemonOptions are what the two commands do differently.

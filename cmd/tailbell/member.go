@@ -29,6 +29,8 @@ type member struct {
 	stop    context.CancelFunc
 	failed  chan error      // the keeper gave up
 	told    chan struct{}   // there are events
+	shelf   *bus.Objects    // of the copies, where processes share the partitions
+	copying chan struct{}   // taken while a copy goes up
 	serve   *control.Server // of what the others ask, nil for none
 
 	mu struct {
@@ -51,9 +53,14 @@ func openMember(ctx context.Context, d *daemon) (*member, error) {
 	if err != nil {
 		return nil, err
 	}
-	m := &member{d: d, failed: make(chan error, 1), told: make(chan struct{}, 1), tenures: map[int]*tenure{}}
+	m := &member{d: d, copying: make(chan struct{}, 1), failed: make(chan error, 1), told: make(chan struct{}, 1), tenures: map[int]*tenure{}}
 	if err := m.readEpochs(); err != nil {
 		return nil, err
+	}
+	if d.setup.Bus.Share {
+		if m.shelf, err = d.bus.Copies(ctx); err != nil {
+			return nil, err
+		}
 	}
 	span := d.setup.Bus.Claim
 	if span == 0 {

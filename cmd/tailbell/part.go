@@ -30,9 +30,10 @@ type part struct {
 	loop   *partition.Loop
 	ticker *intake.Ticker
 	queues []*outlet.Queue
-	fence  *claim.Fence // nil for an embedded bus
-	origin string       // when the stream was made, that the store is filled from
-	noRoom atomic.Bool  // the last commit found no room
+	fence  *claim.Fence  // nil for an embedded bus
+	origin string        // when the stream was made, that the store is filled from
+	copied atomic.Uint64 // position of the last copy on the bus
+	noRoom atomic.Bool   // the last commit found no room
 
 	// stop ends what startPart began, which running waits for. gone ends with the
 	// loop: nothing is asked of the engine any more.

@@ -3,7 +3,6 @@ package main
 import (
 	"context"
 	"errors"
-	"fmt"
 	"io/fs"
 	"os"
 
@@ -30,7 +29,7 @@ func (d *daemon) openOwnStore(ctx context.Context, number int, c *claim.Holding)
 			return nil, err
 		}
 		epoch, err := st.Epoch()
-		if err == nil && epoch >= max(c.Follows, last.Epoch) {
+		if err == nil && isLast(epoch, c, last.Epoch) {
 			return st, nil
 		}
 		if err := errors.Join(err, st.Close()); err != nil {
@@ -46,19 +45,6 @@ func (d *daemon) openOwnStore(ctx context.Context, number int, c *claim.Holding)
 
 // staleEnding ends the name of a store that was put aside; there is one at most.
 const staleEnding = ".stale"
-
-// foundStore begins a new store, from the beginning of the stream.
-func (d *daemon) foundStore(ctx context.Context, number int) (*store.Store, error) {
-	id, err := d.bus.Identity(ctx)
-	if err != nil {
-		return nil, err
-	}
-	if id.First > 1 && id.Last > 0 {
-		return nil, fmt.Errorf("there is no store to go on from, and the stream begins at position %d: what lies before it was trimmed or has expired. "+
-			"Put a copy in place with tailbell store rebuild", id.First)
-	}
-	return store.Create(storePath(d.setup, number), identityOf(d.setup, number), store.Options{})
-}
 
 // succeed makes the process the owner of a partition on the bus, from the mark
 // in the stream of alerts on, and returns its epoch.

@@ -161,9 +161,9 @@ func partitionOfFile(setup *config.Setup, file string) (int, bool) {
 	return 0, false
 }
 
-// copies are those that the daemon makes, by their request. The zero value
+// copyJobs are those that the daemon makes, by their request. The zero value
 // has none.
-type copies struct {
+type copyJobs struct {
 	mu      sync.Mutex
 	running map[string]*copying
 	all     sync.WaitGroup

@@ -48,18 +48,24 @@ func (m *member) hold(t *tenure, n int, before *tenure) {
 	m.d.parts.put(p)
 	m.d.startPart(t.ctx, p)
 	m.d.log.Info().Int("partition", n).Uint64("epoch", t.claim.Epoch).Uint64("position", p.mu.position).Dur("took", time.Since(began)).Msg("the partition runs")
+	copying, stopCopying := context.WithCancel(t.ctx)
+	defer stopCopying()
+	p.running.Go(func() { m.keepCopying(copying, p) })
 	stale := false
 	select {
 	case <-t.ctx.Done():
 	case <-t.surplus:
+		m.copyUp(t.ctx, p) // while it runs: little is left to read for the next owner
 	case <-p.stale:
 		stale = true
 		m.d.log.Warn().Int("partition", n).Msg("another process has published for the partition: it is given up")
 	}
+	stopCopying()
 	p.stop()
 	p.running.Wait()
 	if lost := errors.Is(context.Cause(t.ctx), errLost); !lost && !stale {
 		m.d.flush([]*part{p})
+		m.sayGoodbye(t, p)
 	}
 	m.release(t, n)
 	m.d.parts.remove(n)
@@ -108,4 +114,18 @@ func (m *member) release(t *tenure, n int) {
 		return
 	}
 	m.d.log.Info().Int("partition", n).Msg("the partition is handed over")
+}
+
+// endTime is how long a process that ends goes on copying.
+const endTime = 10 * time.Second
+
+// sayGoodbye puts a last copy on the bus if the whole process ends: nobody may
+// be there to read the stream on for long.
+func (m *member) sayGoodbye(t *tenure, p *part) {
+	if t.ctx.Err() == nil {
+		return
+	}
+	ctx, cancel := context.WithTimeout(context.Background(), endTime)
+	defer cancel()
+	m.copyUp(ctx, p)
 }
