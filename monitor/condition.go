@@ -62,9 +62,15 @@ func (e *Engine) conditionsOf(s *series) []Condition {
 		if ws.withheld == made {
 			continue
 		}
+		text := textOf(ws.withheld)
+		if ws.withheld == missing {
+			if what := ix.lacking(s, &p); what != "" {
+				text += ", " + what
+			}
+		}
 		list = append(list, Condition{
 			Series: s.name, Indicator: ix.cfg.Name, Kind: kindOf(ws.withheld), Window: p.Name,
-			Since: ix.cal.Start(ws.withheldSince), Text: textOf(ws.withheld),
+			Since: ix.cal.Start(ws.withheldSince), Text: text,
 		})
 	}
 	if expect := ix.cfg.SilentFor(s.name); s.silentAt() < e.clock {
