@@ -84,9 +84,13 @@ func (in *Indicator) historySlots(b *Baseline) int {
 }
 
 // keptSlots is how many slots before the end of a window are needed to judge
-// it: its own, or those of a history.
+// it: its own, those of a history, or for windows of trials four weeks, which tell
+// how many trials come.
 func (in *Indicator) keptSlots() int {
 	kept := in.longestWindow()
+	if slices.ContainsFunc(in.Windows, func(w Window) bool { return w.Trials > 0 }) {
+		kept = max(kept, in.fourWeeks())
+	}
 	for i := range in.Baselines {
 		kept = max(kept, in.historySlots(&in.Baselines[i]))
 	}

@@ -5,6 +5,7 @@ import (
 	"slices"
 	"strconv"
 	"strings"
+	"time"
 )
 
 // maxTrials is the most trials that a window holds.
@@ -93,4 +94,9 @@ func atSlots(in *Indicator) string {
 		return "at slots "
 	}
 	return ""
+}
+
+// fourWeeks is so many slots, one at least.
+func (in *Indicator) fourWeeks() int {
+	return max(1, int(28*24*time.Hour/in.Every.shortest()))
 }

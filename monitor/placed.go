@@ -169,6 +169,9 @@ func (ix *indicator) measure() {
 			ix.longest = max(ix.longest, int64(p.Slots))
 			ix.reach = max(ix.reach, int64(p.Slots+p.Step))
 		}
+		if ofTrials(ix.epochs[i].cfg) {
+			ix.reach = max(ix.reach, ix.cal.fourWeeks()) // which tell how many trials come
+		}
 		if ix.epochs[i].cfg.ArrivalLooks && ix.cal.length == 0 {
 			ix.reach++ // a span of days may be an hour longer than they were
 		}

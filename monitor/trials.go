@@ -116,7 +116,8 @@ func (ix *indicator) planTrials(s *series, p *allowance.Plan, boundary int64) bo
 }
 
 // volume is how many trials a slot brought on average in the busiest four weeks
-// of those inside the horizon, or since the series began; 0 where none came.
+// of those inside the horizon (the latest four where it is shorter), or since the
+// series began; 0 where none came.
 func (ix *indicator) volume(s *series, boundary int64) float64 {
 	from := max(min(ix.frozenAt, boundary-ix.cal.fourWeeks()), s.birth, ix.kept)
 	if from >= boundary {

@@ -119,3 +119,16 @@ func TestFaultFallingCount(t *testing.T) {
 	}
 	caught(t, c, solved(t, c, 0), alpha, cost(alpha))
 }
+
+// TestFaultZeroBranchOfTrials plants the same in windows of the last trials.
+func TestFaultZeroBranchOfTrials(t *testing.T) {
+	c := lastTrials()[0]
+	c.Series, c.Slots = 12, 365*6+c.longest()
+	allowed := (&Outcome{Cell: &c}).Allowed()
+	for k := int64(1); ; k++ {
+		if cost := c.perSlot() * c.slotsPerYear() * exact.TrialCrossing(c.Rate, 100, k); cost <= allowed {
+			caught(t, c, solved(t, c, 0), exact.NewBinomial(100, c.Rate).Upper(k), cost)
+			return
+		}
+	}
+}

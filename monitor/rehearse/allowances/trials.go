@@ -34,7 +34,7 @@ func lastTrials() []Cell {
 		one("the last 100 trials, one by one: mean 2", 2, []int{100}, [2]int{4, 4}, "6 in 1y", 720),
 		one("the last 300 trials, one by one: mean 30", 30, []int{300}, [2]int{4, 4}, "3 in 1y", 1200),
 		one("the last 100, 400 trials, one by one: mean 2 in 100", 2, []int{100, 400}, [2]int{4, 4}, "6 in 1y", 700),
-		one("the last 100 trials, 0 to 12 a day: mean 2", 2, []int{100}, [2]int{0, 12}, "6 in 1y", 800),
+		one("the last 100 trials, 0 to 12 a day: mean 2", 2, []int{100}, [2]int{0, 12}, "6 in 1y", 900),
 		alike, several, beside, estimated,
 	}
 }
