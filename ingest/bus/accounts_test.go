@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"io"
 	"os"
 	"regexp"
 	"slices"
@@ -87,8 +88,39 @@ func ownersDay(ctx context.Context, b *bus.Bus) error {
 	if err != nil {
 		return err
 	}
-	_, _, err = b.PublishOwned(ctx, &bus.OwnerMessage{Published: bus.Published{Position: last.Position, Epoch: 1}})
-	return err
+	if _, _, err = b.PublishOwned(ctx, &bus.OwnerMessage{Published: bus.Published{Position: last.Position, Epoch: 1}}); err != nil {
+		return err
+	}
+	return errors.Join(membersDay(ctx, b), copiersDay(ctx, b))
+}
+
+// membersDay answers another process, and asks one.
+func membersDay(ctx context.Context, b *bus.Bus) error {
+	serve, err := control.ServeMember(ctx, b, "a-1", map[string]control.Handler{"status": func(context.Context, []byte) (any, error) { return "fine", nil }})
+	if err != nil {
+		return err
+	}
+	return errors.Join(control.CallMember(ctx, b, "a-1", "status", nil, nil), serve.Close())
+}
+
+// copiersDay puts a copy up twice, gets and removes it.
+func copiersDay(ctx context.Context, b *bus.Bus) error {
+	shelf, err := b.Copies(ctx)
+	if err != nil {
+		return err
+	}
+	for range 2 {
+		if err := shelf.Put(ctx, "partition-0.0.store", map[string]string{"position": "1"}, strings.NewReader(strings.Repeat("x", 700_000))); err != nil {
+			return err
+		}
+	}
+	if _, err := shelf.Facts(ctx, "partition-0.0.store"); err != nil {
+		return err
+	}
+	if err := shelf.Get(ctx, "partition-0.0.store", io.Discard); err != nil {
+		return err
+	}
+	return shelf.Delete(ctx, "partition-0.0.store")
 }
 
 // TestDaemonWorksWithItsAccount also takes each permission away in turn: what
@@ -219,7 +251,7 @@ func TestAccountsAreRefusedMore(t *testing.T) {
 		api("STREAM.DELETE", "in"), api("STREAM.UPDATE", "in"), api("STREAM.MSG.DELETE", "in"), api("STREAM.SNAPSHOT", "in"), api("STREAM.RESTORE", "in"),
 		api("STREAM.DELETE", "alerts"), api("STREAM.UPDATE", "alerts"), api("STREAM.PURGE", "alerts"), api("CONSUMER.CREATE", "alerts"),
 		[]string{"$JS.API.CONSUMER.CREATE.quillmere-alerts.x", "$JS.API.CONSUMER.CREATE.ferrybill-in.x", "$JS.API.CONSUMER.DURABLE.CREATE.quillmere-in.x", "$JS.API.CONSUMER.DELETE.quillmere-alerts.reader"})
-	notDaemon := slices.Concat([]string{"quillmere.alert.0.upper.fall", "quillmere.alert.0.owner", "$KV.quillmere-claims.p.0", "$JS.API.STREAM.MSG.GET.quillmere-alerts", "$JS.API.DIRECT.GET.KV_quillmere-claims"}, api("STREAM.PURGE", "in"), api("STREAM.CREATE", "in"), api("STREAM.CREATE", "alerts"),
+	notDaemon := slices.Concat([]string{"quillmere.alert.0.upper.fall", "quillmere.alert.0.owner", "$KV.quillmere-claims.p.0", "$JS.API.STREAM.MSG.GET.quillmere-alerts", "$JS.API.DIRECT.GET.KV_quillmere-claims", "$O.quillmere-copies.M.x", "$JS.API.STREAM.PURGE.OBJ_quillmere-copies"}, api("STREAM.PURGE", "in"), api("STREAM.CREATE", "in"), api("STREAM.CREATE", "alerts"),
 		[]string{"$JS.API.CONSUMER.CREATE.quillmere-in.x", "$JS.API.CONSUMER.CREATE.quillmere-in.x.quillmere.in.0.*", "$JS.API.CONSUMER.MSG.NEXT.quillmere-in.x", "$JS.API.CONSUMER.DELETE.quillmere-in.x"})
 	notCommand := slices.Concat([]string{"quillmere.in.0.set", "quillmere.in.0.tick", "quillmere.in.0.act", "quillmere.control.status"},
 		api("STREAM.INFO", "in"), api("STREAM.INFO", "alerts"), api("STREAM.MSG.GET", "in"))

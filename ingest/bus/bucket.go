@@ -144,6 +144,7 @@ func (c *Bucket) all(ctx context.Context) ([]Entry, error) {
 // PutAll puts values, each by compare-and-swap, at the same time, and returns
 // what became of each.
 func (c *Bucket) PutAll(ctx context.Context, puts []Put) []Outcome {
+	before := c.bus.denied.Load()
 	outcomes := make([]Outcome, len(puts))
 	acks := make([]jetstream.PubAckFuture, len(puts))
 	for i := range puts {
@@ -164,7 +165,7 @@ func (c *Bucket) PutAll(ctx context.Context, puts []Put) []Outcome {
 	}
 	for i := range outcomes {
 		if err := outcomes[i].Err; err != nil {
-			outcomes[i].Err = fmt.Errorf("putting %s into %s: %w", puts[i].Key, c.stream, err)
+			outcomes[i].Err = fmt.Errorf("putting %s into %s: %w", puts[i].Key, c.stream, c.bus.deniedSince(before, err))
 		}
 	}
 	return outcomes
@@ -183,6 +184,9 @@ func (c *Bucket) start(p *Put) (jetstream.PubAckFuture, error) {
 func conflicting(err error) error {
 	if code := codeOf(err); code == jetstream.JSErrCodeStreamWrongLastSequence || code == jetstream.JSErrCodeStreamWrongLastSequenceConstant {
 		return fmt.Errorf("%w: %w", ErrConflict, err)
+	}
+	if errors.Is(err, jetstream.ErrAsyncPublishTimeout) {
+		return errors.Join(nats.ErrTimeout, err)
 	}
 	return mapped(err)
 }

@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"strings"
 	"time"
 
 	"github.com/nats-io/nats.go/jetstream"
@@ -60,6 +61,11 @@ func (o *Objects) Put(ctx context.Context, name string, facts map[string]string,
 	meta := jetstream.ObjectMeta{Name: name, Metadata: facts, Opts: &jetstream.ObjectMetaOptions{ChunkSize: objectChunk}}
 	if _, err := o.store.Put(ctx, meta, from); err != nil {
 		return fmt.Errorf("putting %s into %s: %w", name, o.stream, o.bus.deniedSince(before, mapped(err)))
+	}
+	// That the parts of the object before could not be removed is no error of the
+	// client's.
+	if last := o.bus.denied.Load(); last != before && strings.Contains(last.text, o.stream) {
+		return fmt.Errorf("putting %s into %s: %w", name, o.stream, notAllowed(last.text, ErrNotAllowed))
 	}
 	return nil
 }
