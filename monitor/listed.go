@@ -23,6 +23,9 @@ type Listed struct {
 	// Events and Exposure are signed off up to there, nil if never.
 	Events   *time.Time `json:"events_signed_off"`
 	Exposure *time.Time `json:"exposure_signed_off"`
+	// Retired is when it ended, of one that is monitored no longer; its condition is
+	// "ended" then.
+	Retired *time.Time `json:"retired,omitempty"`
 	// Acts are what people said of it that still matters, by date.
 	Acts []Dated `json:"acts,omitempty"`
 }
@@ -36,6 +39,35 @@ func (e *Engine) List(pattern config.Pattern, from, n int) (list []Listed, next 
 		if !s.retired && pattern.Match(s.name) {
 			list = append(list, e.listed(s))
 		}
+	}
+	if next = end; end == len(e.series) {
+		next = -1
+	}
+	return list, next
+}
+
+// Ended returns what is remembered of the series that match the pattern and are
+// monitored no longer, as List does.
+func (e *Engine) Ended(pattern config.Pattern, from, n int) (list []Listed, next int) {
+	end := min(from+n, len(e.series))
+	for number := from; number < end; number++ {
+		x := e.stubs.byNumber[uint32(number)]
+		if x == nil || x.name == "" || !pattern.Match(x.name) {
+			continue
+		}
+		l := Listed{Series: x.name, Indicator: x.indicator, Condition: "ended"}
+		zone := time.UTC
+		for _, ix := range e.indicators {
+			if ix.cfg.Name == x.indicator {
+				zone = ix.cfg.Zone
+			}
+		}
+		at := x.at.in(zone)
+		if l.Retired = &at; x.seen != 0 {
+			seen := x.seen.in(zone)
+			l.Heard = &seen
+		}
+		list = append(list, l)
 	}
 	if next = end; end == len(e.series) {
 		next = -1

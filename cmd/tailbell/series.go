@@ -33,14 +33,15 @@ func newSeriesCommand() *cobra.Command {
 func newSeriesListCommand() *cobra.Command {
 	var path string
 	var most int
-	var asJSON bool
+	var asJSON, retired bool
 	c := &cobra.Command{
 		Use:   "list [PATTERN]",
 		Short: "List series and sums: when they begin, when they were heard, what people said of them",
 		Long: `Lists the series and sums that match the pattern (all without one), by name: when they
 begin, when something was last counted, whether they are open, closed or out of service,
 up to when their counts are signed off, and below it what else people said of it. Times are in
-the indicator's zone. The daemon must run.`,
+the indicator's zone. With --retired those that have ended instead, since nothing was heard
+of them for as long as the set-up's retire says, as far as they are remembered. The daemon must run.`,
 		RunE: func(c *cobra.Command, args []string) error {
 			pattern := "**"
 			if len(args) > 0 {
@@ -52,7 +53,7 @@ the indicator's zone. The daemon must run.`,
 			if most < 1 {
 				return &usageError{fmt.Errorf("--max %d: it must be at least 1", most)}
 			}
-			list, more, err := listSeries(c.Context(), path, pattern, most)
+			list, more, err := listSeries(c.Context(), path, seriesRequest{Pattern: pattern, Retired: retired}, most)
 			switch {
 			case err != nil:
 				return err
@@ -73,18 +74,19 @@ the indicator's zone. The daemon must run.`,
 	addConfigFlag(c, &path)
 	c.Flags().IntVar(&most, "max", 200, "at most so `MANY`")
 	c.Flags().BoolVar(&asJSON, "json", false, "as JSON")
+	c.Flags().BoolVar(&retired, "retired", false, "those that have ended")
 	return c
 }
 
 // listSeries asks all partitions, and says whether there are more.
-func listSeries(ctx context.Context, path, pattern string, most int) (list []monitor.Listed, more bool, err error) {
+func listSeries(ctx context.Context, path string, req seriesRequest, most int) (list []monitor.Listed, more bool, err error) {
 	setup, err := loadSetup(path)
 	if err != nil {
 		return nil, false, err
 	}
 	list = []monitor.Listed{}
 	for n := range setup.Partitions {
-		req := seriesRequest{Partition: n, Pattern: pattern}
+		req.Partition, req.From = n, 0
 		for req.From >= 0 {
 			var r seriesReply
 			if err := ask(ctx, setup, verbSeries, req, &r); err != nil {
@@ -146,6 +148,9 @@ func withActs(w io.Writer, lines []string, list []monitor.Listed) error {
 }
 
 func conditionOf(l *monitor.Listed) string {
+	if l.Retired != nil {
+		return l.Condition + " " + heardAt(l.Retired)
+	}
 	if l.Until != nil {
 		return l.Condition + " until " + dayOf(l.Until)
 	}

@@ -19,6 +19,8 @@ type seriesRequest struct {
 	Partition int    `json:"partition"`
 	Pattern   string `json:"pattern"`
 	From      int    `json:"from"`
+	// Retired asks for those that are monitored no longer instead.
+	Retired bool `json:"retired,omitempty"`
 }
 
 // seriesReply gives them, and where to go on: -1 at the end.
@@ -43,7 +45,11 @@ func (d *daemon) series(ctx context.Context, req seriesRequest) (any, error) {
 		return nil, control.Errorf(control.BadRequest, "series are numbered from 0, not from %d", req.From)
 	}
 	err = p.do(ctx, func(e *monitor.Engine) {
-		r.Series, r.Next = e.List(config.NewPattern(req.Pattern), req.From, seriesSlice)
+		list := e.List
+		if req.Retired {
+			list = e.Ended
+		}
+		r.Series, r.Next = list(config.NewPattern(req.Pattern), req.From, seriesSlice)
 	})
 	return r, err
 }

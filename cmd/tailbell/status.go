@@ -82,6 +82,9 @@ func writePartition(w io.Writer, name string, p *partStatus) error {
 		name, p.Number, p.Position, p.End, mode, clock, p.Version, amount(p.OpenAlerts, "alerts")); err != nil {
 		return err
 	}
+	if err := say(w, "  %s monitored%s", amount(p.Series, "series"), endedOf(p.Account)); err != nil {
+		return err
+	}
 	if err := writeAccount(w, p.Account); err != nil {
 		return err
 	}
@@ -102,6 +105,15 @@ func writePartition(w io.Writer, name string, p *partStatus) error {
 		}
 	}
 	return nil
+}
+
+// endedOf says how many series have ended, nothing if none did.
+func endedOf(a monitor.Account) string {
+	if a.Retired+a.Returned == 0 {
+		return ""
+	}
+	return fmt.Sprintf("; %s have ended, since nothing was heard of them, %s came back (tailbell series list --retired)",
+		words.Whole(a.Retired), words.Whole(a.Returned))
 }
 
 func writeCondition(w io.Writer, c conditionRow) error {

@@ -76,6 +76,7 @@ type partStatus struct {
 	Clock      *time.Time      `json:"clock"` // null before the first message that tells a time
 	History    bool            `json:"history_time"`
 	Version    int             `json:"setup_version"`
+	Series     int             `json:"series"` // that are monitored, sums among them
 	Account    monitor.Account `json:"account"`
 	Conditions []conditionRow  `json:"conditions"`
 	Outlets    []outletRow     `json:"outlets"`
@@ -164,7 +165,7 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 				s.Clock = &at
 			}
 			_, s.Version = e.Setup()
-			s.Account = e.Account()
+			s.Account, s.Series = e.Account(), e.SeriesCount()
 			for _, c := range e.Conditions() {
 				s.Conditions = append(s.Conditions, conditionRowOf(c))
 			}

@@ -140,7 +140,7 @@ func (c *coming) day(day int) {
 	const batch = 500
 	for round := range 3 {
 		for first := 0; first < *churnNames; first += batch {
-			part := time.Duration(round)*7*time.Hour + 6*time.Hour*time.Duration(first)/time.Duration(*churnNames)
+			part := time.Duration(round)*7*time.Hour + 6*time.Hour/time.Duration(*churnNames)*time.Duration(first)
 			at := c.at(day, part)
 			m := monitor.Message{Kind: monitor.Observations, Stored: at}
 			for i := first; i < min(first+batch, *churnNames); i++ {
