@@ -7,6 +7,7 @@ import (
 	"errors"
 	"fmt"
 	"io/fs"
+	"maps"
 	"os"
 	"path/filepath"
 	"strings"
@@ -123,7 +124,9 @@ func (m *member) readEpochs() error {
 		if err != nil {
 			return err
 		}
-		m.mu.epochs[n], err = st.Epoch()
+		if st.Identity() == identityOf(m.d.setup, n) {
+			m.mu.epochs[n], err = st.Epoch()
+		}
 		if err := errors.Join(err, st.Close()); err != nil {
 			return err
 		}
@@ -156,10 +159,14 @@ func (m *member) marks(n int) (claim.Marks, bool) {
 		return claim.Marks{}, false
 	}
 	p.mu.Lock()
-	marks := claim.Marks{Position: p.mu.position, Origin: p.origin, Told: map[string]uint64{}}
+	marks := claim.Marks{Position: p.mu.position, Origin: p.origin, Told: maps.Clone(p.told)}
 	p.mu.Unlock()
+	if marks.Told == nil {
+		marks.Told = map[string]uint64{}
+	}
 	for _, o := range outlets {
-		marks.Told[o.Name] = o.Through
+		// A store that is still being filled again has fewer rows than were told.
+		marks.Told[o.Name] = max(marks.Told[o.Name], o.Through)
 	}
 	return marks, true
 }

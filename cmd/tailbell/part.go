@@ -30,8 +30,10 @@ type part struct {
 	loop   *partition.Loop
 	ticker *intake.Ticker
 	queues []*outlet.Queue
-	fence  *claim.Fence  // nil for an embedded bus
-	origin string        // when the stream was made, that the store is filled from
+	fence  *claim.Fence // nil for an embedded bus
+	origin string       // when the stream was made, that the store is filled from
+	// told is what the owner before had told its outlets, by the same rows.
+	told   map[string]uint64
 	copied atomic.Uint64 // position of the last copy on the bus
 	noRoom atomic.Bool   // the last commit found no room
 
@@ -67,6 +69,16 @@ func openStore(setup *config.Setup, partition int) (*store.Store, error) {
 	return store.Open(path, identityOf(setup, partition), store.Options{})
 }
 
+// originOf says from what the rows of an outbox are counted: when the stream was
+// made, and how often it was divided since.
+func originOf(stream store.StreamIdentity, divisions uint64) string {
+	origin := stream.Created.UTC().Format(time.RFC3339Nano)
+	if divisions > 0 {
+		origin += fmt.Sprintf(" division %d", divisions)
+	}
+	return origin
+}
+
 // openPart opens a partition: c is the claim by which it is owned, nil for an
 // embedded bus.
 func (d *daemon) openPart(ctx context.Context, number int, c *claim.Holding) (p *part, err error) {
@@ -89,7 +101,10 @@ func (d *daemon) openPart(ctx context.Context, number int, c *claim.Holding) (p 
 	if err != nil {
 		return p, err
 	}
-	p.origin = stream.Created.UTC().Format(time.RFC3339Nano)
+	p.origin = originOf(stream, d.bus.Divisions())
+	if c != nil && c.Origin == p.origin {
+		p.told = c.Told
+	}
 	if err := followsStored(st, d.setup); err != nil {
 		return p, err
 	}

@@ -110,7 +110,7 @@ func (d *daemon) foundStore(ctx context.Context, number int) (*store.Store, erro
 	if err != nil {
 		return nil, err
 	}
-	origin := id.Created.Format(time.RFC3339Nano)
+	origin := originOf(store.StreamIdentity{Name: id.Stream, Created: id.Created}, d.bus.Divisions())
 	list, err := copies.List(ctx, d.member.shelf, number)
 	if err != nil {
 		return nil, err
@@ -132,7 +132,7 @@ func (d *daemon) foundStore(ctx context.Context, number int) (*store.Store, erro
 		}
 		d.log.Error().Err(err).Int("partition", number).Msg("a copy on the bus is of no use: the one before is tried")
 	}
-	if id.First <= 1 || id.Last == 0 {
+	if id.First <= d.bus.Begins() || id.Last == 0 {
 		return store.Create(storePath(d.setup, number), identityOf(d.setup, number), store.Options{})
 	}
 	return d.lastResort(number, id.First, reaches)

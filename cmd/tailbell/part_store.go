@@ -23,6 +23,14 @@ func (d *daemon) openOwnStore(ctx context.Context, number int, c *claim.Holding)
 		return nil, err
 	}
 	path := storePath(d.setup, number)
+	if ours, err := isOurs(path, identityOf(d.setup, number)); err != nil {
+		return nil, err
+	} else if !ours {
+		d.log.Info().Int("partition", number).Msg("the store here is from before the stream was divided: it is put aside")
+		if err := os.Rename(path, path+staleEnding); err != nil {
+			return nil, err
+		}
+	}
 	if _, err := os.Stat(path); !errors.Is(err, fs.ErrNotExist) {
 		st, err := store.Open(path, identityOf(d.setup, number), store.Options{})
 		if err != nil {
@@ -41,6 +49,20 @@ func (d *daemon) openOwnStore(ctx context.Context, number int, c *claim.Holding)
 		}
 	}
 	return d.foundStore(ctx, number)
+}
+
+// isOurs reports whether a store, if there is one, is of the stream's present
+// partitions.
+func isOurs(path string, want store.Identity) (bool, error) {
+	st, err := store.OpenReadOnly(path, store.Options{})
+	if errors.Is(err, fs.ErrNotExist) {
+		return true, nil
+	}
+	if err != nil {
+		return false, err
+	}
+	found := st.Identity()
+	return found == want || !fromDivision(found, want), st.Close()
 }
 
 // staleEnding ends the name of a store that was put aside; there is one at most.

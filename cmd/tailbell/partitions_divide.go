@@ -150,6 +150,9 @@ func divideStream(ctx context.Context, w io.Writer, setup, next *config.Setup, o
 	case err != nil:
 		return err
 	case now == next.Partitions:
+		if err := settleOwners(ctx, b, next, placeOf(setup, b.Divisions()), b.Divisions()); err != nil {
+			return err
+		}
 		return finishMoving(w, setup, next, placeOf(setup, b.Divisions()))
 	case now != setup.Partitions:
 		return fmt.Errorf("the stream has %s, the set-up says %d: write partitions = %d first",
@@ -173,6 +176,9 @@ func divideStream(ctx context.Context, w io.Writer, setup, next *config.Setup, o
 		return err
 	}
 	if err := v.close(); err != nil {
+		return err
+	}
+	if err := settleOwners(ctx, b, next, v.place, v.move.Number()); err != nil {
 		return err
 	}
 	if o.asJSON {

@@ -13,6 +13,7 @@ import (
 	"tailbell/alert/outlet"
 	"tailbell/config"
 	"tailbell/ingest/bus"
+	"tailbell/ingest/claim"
 	"tailbell/ingest/divide"
 	"tailbell/ingest/intake"
 	"tailbell/monitor/life"
@@ -26,6 +27,7 @@ type division struct {
 	options     divideOptions
 	place       divisionPlace
 
+	owners   map[int]claim.Row // the last ones of the old partitions
 	old, new []*store.Store
 	move     *bus.Division
 	result   *divide.Result
@@ -102,12 +104,12 @@ func (v *division) progress(read, carried int) {
 // some aside, brings them to the stream's end, and sees that every set-up that
 // was in force may have the new number of partitions.
 func (v *division) openOld(ctx context.Context) error {
+	if err := v.readOwners(ctx); err != nil {
+		return err
+	}
+	var standIns []int
 	for n := range v.setup.Partitions {
-		path := storePath(v.setup, n)
-		if _, err := os.Stat(path); errors.Is(err, fs.ErrNotExist) {
-			path = v.place.stand(n) // in nobody's way
-		}
-		st, err := openOrCreate(path, identityOf(v.setup, n))
+		st, standIn, err := v.oldStore(n)
 		if err != nil {
 			return err
 		}
@@ -115,9 +117,17 @@ func (v *division) openOld(ctx context.Context) error {
 		if err := intake.Verify(ctx, v.bus, st); err != nil {
 			return fmt.Errorf("partition %d: %w", n, err)
 		}
+		if standIn {
+			standIns = append(standIns, n)
+		}
 	}
 	if err := v.fillOld(ctx); err != nil {
 		return err
+	}
+	for _, n := range standIns {
+		if err := v.catchUpOutlets(v.old[n], n); err != nil {
+			return fmt.Errorf("partition %d: %w", n, err)
+		}
 	}
 	for _, st := range v.old {
 		settings, err := st.Settings()

@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"io/fs"
+	"maps"
 	"os"
 	"path/filepath"
 	"slices"
@@ -220,5 +221,71 @@ func TestDivideBreaksOff(t *testing.T) {
 	says(t, 0, []string{"partitions = 2"}, "partitions", "divide", "--into", "2", "--config", path)
 	if _, err := os.Stat(storePath(setup, 1)); err != nil {
 		t.Error(err)
+	}
+}
+
+// TestDivideShared divides the stream of processes that share partitions: none of
+// the stores is in one place, and whoever owns a new partition next tells nothing
+// twice.
+func TestDivideShared(t *testing.T) {
+	c := newCluster(t, 2, true)
+	defer func() {
+		if t.Failed() {
+			for i, s := range c.services {
+				t.Logf("process %d:\n%s", i, s.log)
+			}
+		}
+	}()
+	for _, s := range c.services {
+		s.start()
+	}
+	c.look()
+	c.evenly(2)
+	c.feed(0, 20)
+	c.services[0].await("steps", func() bool { return c.steps() >= 20 })
+	says(t, 1, []string{"a daemon runs"}, "partitions", "divide", "--into", "12", "--config", edited(t, c.services[0].path, "other.toml", `"data"`, `"elsewhere"`))
+	for _, s := range c.services {
+		s.stop(syscall.SIGTERM)
+	}
+	says(t, 0, []string{"8 partitions into 16", "Alerts: 20 before, 20 after; 20 equal to the byte"}, "partitions", "divide", "--into", "16", "--config", c.services[0].path)
+	for _, s := range c.services {
+		text := strings.Replace(string(readFile(t, s.path)), "partitions = 8", "partitions = 16", 1)
+		if err := os.WriteFile(s.path, []byte(text), 0o600); err != nil {
+			t.Fatal(err)
+		}
+	}
+	// The one without the new stores comes first.
+	c.services[1].start()
+	c.services[1].await("16 partitions", func() bool {
+		owners := c.owners()
+		return len(owners) == 1 && slices.Max(slices.Collect(maps.Values(owners))) == 16
+	})
+	c.services[0].start()
+	c.services[0].await("even shares", func() bool {
+		owners := slices.Collect(maps.Values(c.owners()))
+		return len(owners) == 2 && owners[0] == 8 && owners[1] == 8
+	})
+	c.feed(20, 20)
+	c.services[0].await("steps", func() bool { return c.steps() >= 40 })
+	for _, s := range c.services {
+		s.stop(syscall.SIGTERM)
+	}
+	keys := map[string]int{}
+	for _, list := range c.alerts() {
+		for _, p := range list {
+			if !p.mark {
+				keys[p.key]++
+			}
+		}
+	}
+	if n := c.steps(); n != 40 || len(keys) != 40 {
+		t.Errorf("%d steps on the bus with %d keys, want 40", n, len(keys))
+	}
+	shown := 0
+	for _, s := range c.services {
+		shown += strings.Count(s.stdout.String(), "\n")
+	}
+	if shown != 40 {
+		t.Errorf("%d steps on the terminals, want 40", shown)
 	}
 }

@@ -161,11 +161,19 @@ func checkFolder(setup *config.Setup) error {
 		if err := st.Close(); err != nil {
 			return err
 		}
-		if found != want {
+		if found != want && (!setup.Bus.Share || !fromDivision(found, want)) {
 			return wrongStore(path, found, want)
 		}
 	}
 	return nil
+}
+
+// fromDivision reports whether a store is of the same deployment, from before its
+// stream was divided into another number of partitions. Where processes share
+// the partitions it is put aside as any other that is not the last owner's.
+func fromDivision(found, want store.Identity) bool {
+	found.Partition, found.Partitions = want.Partition, want.Partitions
+	return found == want
 }
 
 // wrongStore is the error of a store that is another one's.
