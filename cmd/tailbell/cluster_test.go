@@ -420,6 +420,62 @@ func TestTakeOverFromCopies(t *testing.T) {
 	s.stop(syscall.SIGTERM)
 }
 
+// TestRollOut brings a new set-up into force, one process after the other, and
+// trims the stream.
+func TestRollOut(t *testing.T) {
+	c := newCluster(t, 2, true)
+	c.services[0].start()
+	c.services[1].start()
+	c.look()
+	c.evenly(2)
+	c.feed(0, 20)
+	changed := c.services[1]
+	changed.stop(syscall.SIGTERM)
+	changed.path = edited(t, changed.path, "tailbell.toml", "quiet = 3", "quiet = 5")
+	changed.start()
+	c.evenly(1)
+	changed.await("that it waits", func() bool {
+		_, text := changed.ready()
+		return strings.Contains(text, "takes no part") && strings.Contains(text, "comes into force when")
+	})
+	c.feed(20, 20)
+	c.services[0].stop(syscall.SIGTERM)
+	c.evenly(1)
+	c.feed(40, 20)
+	changed.await("steps", func() bool { return c.steps() >= 60 })
+	status, ok := changed.status()
+	if !ok || len(status.Partitions) != 8 || status.Partitions[3].Version != 2 || len(status.Troubles) > 0 {
+		t.Errorf("%+v", status)
+	}
+
+	to := filepath.Join(t.TempDir(), "kept")
+	says(t, 0, nil, "store", "copy", "--config", changed.path, changed.setup().Folder, to)
+	says(t, 0, []string{"removed up to position"}, "stream", "trim", "--config", changed.path, to)
+	id, err := c.bus.Identity(t.Context())
+	if err != nil || id.First < 300 {
+		t.Errorf("the stream begins at %d, %v", id.First, err)
+	}
+	shelf, err := c.bus.Copies(t.Context())
+	if err != nil {
+		t.Fatal(err)
+	}
+	for n := range 8 {
+		list, err := copies.List(t.Context(), shelf, n)
+		if err != nil || len(list) == 0 || list[len(list)-1].Position+100 < id.First {
+			t.Errorf("partition %d: %+v, %v", n, list, err)
+		}
+	}
+	changed.stop(syscall.SIGKILL)
+	if err := os.RemoveAll(changed.setup().Folder); err != nil {
+		t.Fatal(err)
+	}
+	changed.start()
+	c.evenly(1)
+	c.feed(60, 20)
+	changed.await("steps", func() bool { return c.steps() >= 80 })
+	c.check()
+}
+
 // TestAlone checks that a second process is refused where processes do not share,
 // while the first lives, and goes on at once after it.
 func TestAlone(t *testing.T) {

@@ -87,7 +87,7 @@ func (f *front) ask(ctx context.Context, member, verb string, body []byte) (p pa
 		p, p.err = f.d.partial(ctx, f.d.ownVerb(verb), body)
 		return p
 	}
-	if verb != verbAct && verb != verbResend && verb != verbTryOutlet && verb != verbCopy {
+	if verb != verbAct && verb != verbResend && verb != verbTryOutlet && verb != verbCopy && verb != verbTrim {
 		var cancel context.CancelFunc
 		ctx, cancel = context.WithTimeout(ctx, memberTime)
 		defer cancel()

@@ -9,6 +9,7 @@ import (
 	"time"
 
 	"tailbell/ingest/claim"
+	"tailbell/ingest/control"
 	"tailbell/ingest/copies"
 	"tailbell/monitor/store"
 )
@@ -79,6 +80,33 @@ func (m *member) copyOnce(ctx context.Context, p *part) (c *copies.Copy, err err
 	}
 	p.copied.Store(c.Position)
 	return c, nil
+}
+
+// renewCopies makes sure that the partition can do without what lies up to a
+// position: a copy is made that reaches there, or to the partition's end, and those
+// that do not are removed.
+func (m *member) renewCopies(ctx context.Context, p *part, through uint64) error {
+	end, err := m.d.bus.EndOf(ctx, p.number)
+	if err != nil {
+		return err
+	}
+	m.copyUp(ctx, p)
+	list, err := copies.List(ctx, m.shelf, p.number)
+	if err != nil {
+		return err
+	}
+	needed := min(through, end)
+	if len(list) == 0 || list[0].Position < needed || list[0].Origin != p.origin {
+		return control.Errorf(codeRefused, "no copy of partition %d on the bus reaches to position %d: the log says why, if that stays so", p.number, needed)
+	}
+	for i := range list[1:] {
+		if c := &list[1+i]; c.Position < needed || c.Origin != p.origin {
+			if err := copies.Drop(ctx, m.shelf, c); err != nil {
+				return err
+			}
+		}
+	}
+	return nil
 }
 
 // standOf returns where the store in a file stands.

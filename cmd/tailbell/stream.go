@@ -153,6 +153,13 @@ func (d *daemon) trimOwn(ctx context.Context, req trimRequest) (any, error) {
 	if err != nil || req.Through < before.First {
 		return nil, err
 	}
+	if d.setup.Bus.Share {
+		for _, p := range d.parts.all() {
+			if err := d.member.renewCopies(ctx, p, req.Through); err != nil {
+				return nil, err
+			}
+		}
+	}
 	// The set-up in force must stay in the stream: the next start compares with
 	// it. The engine passes over one that it has.
 	for _, p := range d.parts.all() {

@@ -90,8 +90,12 @@ type work struct {
 func (p *process) start() {
 	p.starts++
 	p.parts, p.events, p.stop = map[int]*work{}, nil, false
+	digest := "one"
+	if p.starts > 1 && p.w.random.IntN(8) == 0 {
+		digest = "another"
+	}
 	p.k = NewKeeper(Options{
-		Board: &view{p}, Folder: p.folder, Start: fmt.Sprint(p.starts), Digest: "one", Partitions: partitions, Span: span,
+		Board: &view{p}, Folder: p.folder, Start: fmt.Sprint(p.starts), Digest: digest, Partitions: partitions, Span: span,
 		Now:   func() time.Duration { return time.Since(p.w.began) },
 		Local: func(n int) uint64 { return p.stores[n] },
 		Marks: func(n int) (Marks, bool) {
