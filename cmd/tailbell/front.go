@@ -210,7 +210,6 @@ func (f *front) first(verb string) control.Handler {
 	return func(ctx context.Context, body []byte) (any, error) {
 		owners := f.owners()
 		var last error
-		answers := make([]partial, 0, len(owners))
 		for _, owner := range owners {
 			a := f.ask(ctx, owner, verb, body)
 			if a.err == nil {
@@ -220,7 +219,6 @@ func (f *front) first(verb string) control.Handler {
 				return nil, a.err
 			}
 			last = a.err
-			answers = append(answers, a)
 		}
 		if n := f.unowned(); n >= 0 {
 			return nil, control.Errorf(codeElsewhere, "%v (nobody owns partition %d at present: try again)", last, n)

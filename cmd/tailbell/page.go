@@ -61,6 +61,10 @@ func (d *daemon) openPage() error {
 	if !d.setup.Page.Served() {
 		return nil
 	}
+	if d.setup.Bus.Share {
+		d.log.Warn().Msg("the page is not served yet where processes share the partitions: commands tell of the whole")
+		return nil
+	}
 	o := page.Options{
 		Name: d.setup.Name, Act: d.actFromPage, State: d.stateForPage, Now: time.Now,
 		PartOf: d.numberOf,

@@ -89,6 +89,7 @@ func onEvery(t *testing.T, test func(t *testing.T, b *bus.Bus)) {
 
 func TestBucketComparesAndSwaps(t *testing.T) {
 	onEvery(t, func(t *testing.T, b *bus.Bus) {
+		t.Helper()
 		c, err := b.Claims(deadline(t))
 		if err != nil {
 			t.Fatal(err)
@@ -136,6 +137,7 @@ func TestBucketComparesAndSwaps(t *testing.T) {
 
 func TestOwnersFollowEachOther(t *testing.T) {
 	onEvery(t, func(t *testing.T, b *bus.Bus) {
+		t.Helper()
 		ctx := deadline(t)
 		last, err := b.LastPublished(ctx, 0)
 		if err != nil || last.Position != 0 {
