@@ -70,6 +70,21 @@ func (ix *indicator) edgesOf(held **edges, u *usual, d direction, o *opportunity
 	return x
 }
 
+// learn finds the edge of the count, if few events make it so.
+func (x *edges) learn(t *tally) {
+	const few = 64
+	if x == nil || t.events >= few {
+		return
+	}
+	for int64(len(x.at)) <= t.events {
+		x.at = append(x.at, math.NaN())
+	}
+	if edge := x.at[t.events]; math.IsNaN(edge) || edge == asked {
+		x.at[t.events] = x.find(t.events, float64(t.exposure.Lo)/pow10[x.u.cfg.GrainDigits])
+		x.setSure(t.events, x.at[t.events])
+	}
+}
+
 // signals says whether so many events signal, and true if that is sure.
 func (x *edges) signals(o *opportunity, events int64) (lit, sure bool) {
 	if x == nil || events >= mostEdges {

@@ -279,6 +279,11 @@ func (e *Engine) refuse(m *Message, index int, series string, reason Reason, det
 // touch notes that the series' own state changed.
 func (e *Engine) touch(s *series) {
 	s.rouse()
+	e.list(s)
+}
+
+// list notes that the series is to be stored.
+func (e *Engine) list(s *series) {
 	if !s.touched {
 		s.touched = true
 		e.touched = append(e.touched, s)
@@ -287,7 +292,11 @@ func (e *Engine) touch(s *series) {
 
 func (e *Engine) touchSlot(s *series, slot int64) {
 	s.changed(slot)
-	e.touch(s)
+	if s.restsOn(slot) {
+		e.list(s)
+	} else {
+		e.touch(s)
+	}
 	if e.passing {
 		return
 	}

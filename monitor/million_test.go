@@ -8,6 +8,7 @@ import (
 	"runtime"
 	"slices"
 	"strings"
+	"syscall"
 	"testing"
 	"time"
 
@@ -90,7 +91,9 @@ func playMillion(t *testing.T, same bool) {
 	e.Drain()
 	quiet := heap() - before
 	looks := e.account.Looks
-	var waits []time.Duration
+	var waits, cpu []time.Duration
+	runtime.LockOSThread()
+	defer runtime.UnlockOSThread()
 	for minute := range *millionMinutes {
 		at := start.Add(time.Duration(minute) * time.Minute)
 		active := make([]string, 0, n/20)
@@ -106,14 +109,15 @@ func playMillion(t *testing.T, same bool) {
 			active = append(active, names[i], names[i], names[i])
 		}
 		report(e, active, at.Add(10*time.Second))
-		began := time.Now()
+		began, used := time.Now(), threadTime()
 		e.Apply(&Message{Position: e.position + 1, Kind: Tick, Stored: at.Add(time.Minute)})
-		waits = append(waits, time.Since(began))
+		waits, cpu = append(waits, time.Since(began)), append(cpu, threadTime()-used)
 		e.Drain()
 	}
 	slices.Sort(waits)
-	t.Logf("%d series: %d B each when quiet, %d B at the end; resident %d MiB; %d looks, %d alerts; the looks of a minute take %s (median), %s at most",
-		n, quiet/int64(n), (heap()-before)/int64(n), residentMiB(), e.account.Looks-looks, len(e.alerts), waits[len(waits)/2], waits[len(waits)-1])
+	slices.Sort(cpu)
+	t.Logf("figure | %s, %d series: %d B each when quiet, %d B at the end; resident %d MiB; %d looks, %d alerts; the looks of a minute take %s (median), %s at most, %s of a processor (median) |",
+		t.Name(), n, quiet/int64(n), (heap()-before)/int64(n), residentMiB(), e.account.Looks-looks, len(e.alerts), waits[len(waits)/2], waits[len(waits)-1], cpu[len(cpu)/2])
 	if want := int64(n * 3 * *millionMinutes); e.account.Looks-looks != want {
 		t.Errorf("%d looks, want %d", e.account.Looks-looks, want)
 	}
@@ -130,6 +134,17 @@ func report(e *Engine, series []string, at Instant) {
 		e.Apply(m)
 		e.Drain()
 	}
+}
+
+// threadTime is what this thread has used of the processors, 0 where that is not
+// told.
+func threadTime() time.Duration {
+	const ofThread = 1
+	var r syscall.Rusage
+	if err := syscall.Getrusage(ofThread, &r); err != nil {
+		return 0
+	}
+	return time.Duration(r.Utime.Nano() + r.Stime.Nano())
 }
 
 // residentMiB is what the process occupies, 0 where that is not told.

@@ -164,14 +164,13 @@ func (e *Engine) rest(s *series, ep *epoch, boundary int64) {
 	if e.long || e.passing || e.onLook != nil || e.known != nil || ix.cal.even == 0 || ep.cfg != ix.cfg || !s.mayRest(ep.cfg) {
 		return
 	}
-	n := len(s.cells)
-	if n > 0 && s.cells[n-1].slot >= boundary {
-		return // it enters the looks to come
-	}
-	next := int64(noAlarm)
+	n, next := len(s.cells), int64(noAlarm)
 	if n > 0 {
-		keeps := ix.frozen(ix.due(boundary)) + 1 - max(ix.reach, historyOf(ix.cfg)) - boundary
-		next = max(s.cells[0].slot-keeps, boundary) + 1
+		next = max(ix.leaves(s.cells[0].slot, boundary), boundary+1)
+	}
+	seen, _ := s.cells.find(boundary)
+	if seen < n { // it enters the looks to come
+		next = min(next, s.cells[seen].slot+1)
 	}
 	var rests [maxPlaces]status
 	for i := range ep.windows {
@@ -196,13 +195,20 @@ func (e *Engine) rest(s *series, ep *epoch, boundary int64) {
 		s.runnings = nil
 	}
 	r.awake.drop(s.number)
-	if next < s.alarm {
-		if r.alarms == nil {
-			r.alarms = map[int64][]uint32{}
-		}
-		s.alarm = next
-		r.alarms[next] = append(r.alarms[next], s.number)
+	s.wakeAt(next)
+}
+
+// wakeAt sees to it that the series is visited at the boundary.
+func (s *series) wakeAt(boundary int64) {
+	if boundary >= s.alarm {
+		return
 	}
+	r := &s.indicator.resters
+	if r.alarms == nil {
+		r.alarms = map[int64][]uint32{}
+	}
+	s.alarm = boundary
+	r.alarms[boundary] = append(r.alarms[boundary], s.number)
 }
 
 // mayRest reports whether nothing waits for looks of the series, and nothing but
@@ -236,8 +242,8 @@ func (ix *indicator) outlook(s *series, ep *epoch, p *placed, boundary int64) (s
 	}
 	ws := &s.windows[p.place]
 	needs := s.needs()
-	if n := len(s.cells); n > 0 && s.cells[n-1].slot >= latest {
-		return made, 0 // no look has seen it yet
+	if len(s.cells.between(latest, boundary)) > 0 {
+		return made, 0 // no look has seen them yet
 	}
 	switch {
 	case (needs.events || needs.exposure) && ws.withheld == missing:

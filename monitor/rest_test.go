@@ -40,6 +40,7 @@ var restRules = []struct{ events, rule string }{
 	{"each", "exposure = \"clock\"\nclock = { size = 3, per = \"1h\" }\nsince = 2026-03-01T00:00:00Z\nwindows = [\"10m\", \"1h\"]\ntails = [\"upper\"]\np_limit = 0.01"},
 	{"counted", "exposure = \"reported\"\nwindows = [\"10m\", \"1h\"]\ntails = [\"upper\"]\np_limit = 0.05"},
 	{"each", "exposure = \"clock\"\nclock = { size = 1, per = \"1h\" }\nwindows = [{ span = \"1h\", step = \"30m\" }]\ntails = [\"upper\"]\np_limit = 0.02"},
+	{"each", "exposure = \"clock\"\nclock = { size = 20, per = \"1h\" }\nwindows = [\"10m\", \"1h\", \"4h\"]\ntails = [\"upper\"]\np_limit = 0.001"}, // events come often
 	{"counted", "exposure = \"clock\"\nclock = { size = 1, per = \"1h\" }\nwindows = [\"30m\", { span = \"2h\", step = \"30m\" }]\ntails = [\"upper\"]\np_limit = 0.002"},
 }
 
@@ -81,7 +82,7 @@ func TestRest(t *testing.T) {
 			long.long = true
 			again := New(Partition{Of: 1, KeyParts: 1})
 			memory := NewMemory()
-			for _, m := range restStream(rand.New(rand.NewPCG(seed, uint64(rule))), setups) {
+			for _, m := range restStream(rand.New(rand.NewPCG(seed, uint64(rule))), setups, rule == 6) {
 				for _, e := range []*Engine{long, resting, again} {
 					e.Apply(&m)
 				}
@@ -144,8 +145,9 @@ func viewsOf(e *Engine) (all []string) {
 	return append(all, fmt.Sprint(e.Conditions()))
 }
 
-// restStream is some days of a few series: quiet for most of the time.
-func restStream(rng *rand.Rand, setups []*config.Setup) []Message {
+// restStream is some days of a few series: quiet for most of the time, unless events
+// come often.
+func restStream(rng *rand.Rand, setups []*config.Setup, often bool) []Message {
 	var list []Message
 	now := InstantOf(time.Date(2026, 3, 2, 0, 0, 0, 0, time.UTC))
 	add := func(m Message) {
@@ -182,7 +184,7 @@ func restStream(rng *rand.Rand, setups []*config.Setup) []Message {
 				if speaks[i] {
 					observe(name, now.Add(-5*time.Minute), int64(rng.IntN(20)/18))
 				}
-			} else if rng.IntN(40+20*i) == 0 {
+			} else if rng.IntN(40+20*i) == 0 || often && rng.IntN(2) == 0 {
 				observe(name, now, 1)
 			}
 		}
@@ -193,6 +195,10 @@ func restStream(rng *rand.Rand, setups []*config.Setup) []Message {
 		case 1, 5, 6: // a burst
 			for range 4 {
 				observe(name, now, int64(1+rng.IntN(3)))
+			}
+		case 7, 8, 9:
+			for n := rng.IntN(7); often && n > 0; n-- {
+				observe(name, now, 1)
 			}
 		case 2:
 			now = now.Add(time.Duration(rng.IntN(300)) * time.Minute)
