@@ -150,12 +150,21 @@ func (s *soak) load(ctx context.Context) {
 		}
 		<-t.C
 	}
+	s.t.Logf("figure | soak: %.0f observations a second of the %d asked for, over %s; heap after each half minute %v MiB |",
+		float64(s.sent)/time.Since(begin).Seconds(), *soakRate, time.Since(begin).Round(time.Second), mebibytes(s.heaps))
 	if n := len(s.heaps); n >= 6 {
 		early, late := slices.Max(s.heaps[n/3:2*n/3]), slices.Max(s.heaps[2*n/3:])
 		if late > early+early/4 {
 			s.t.Errorf("the heap grows: at most %d MiB in the second third, %d MiB in the last", early>>20, late>>20)
 		}
 	}
+}
+
+func mebibytes(of []uint64) (list []uint64) {
+	for _, n := range of {
+		list = append(list, n>>20)
+	}
+	return list
 }
 
 // publish sends n observations and measures how long the last takes to be
@@ -306,7 +315,7 @@ func (s *soak) balance(ctx context.Context) {
 	if uint64(a.Elements) != s.sent || a.Refused+a.Rejected+a.Unmonitored != 0 {
 		s.t.Errorf("%d sent, the account has %+v", s.sent, a)
 	}
-	if a.Looks == 0 {
+	if a.Looks == 0 && *soakTime > 3*time.Minute {
 		s.t.Error("no look was made")
 	}
 }

@@ -49,7 +49,7 @@ func (y *yard) begin(times int) {
 		}
 	}
 	slices.Sort(took)
-	y.t.Logf("start with %d series: %s (median of %d), %s at most", y.load.series, took[len(took)/2], times, took[len(took)-1])
+	y.t.Logf("figure | start with %d series: %s (median of %d), %s at most |", y.load.series, took[len(took)/2], times, took[len(took)-1])
 	if err := os.Remove(storePath(y.setup, 0)); err != nil {
 		y.t.Fatal(err)
 	}
@@ -122,7 +122,7 @@ func ringing(t *testing.T, times int) {
 	at := func(of []time.Duration, percent int) time.Duration {
 		return of[min(len(of)*percent/100, len(of)-1)].Round(10 * time.Microsecond)
 	}
-	t.Logf("publish to alert, idle, %d times: (c) median %s, 99%% %s; (d) median %s, 99%% %s; (d)/(c) %.2f and %.2f", times,
+	t.Logf("figure | publish to alert, idle, %d times: (c) median %s, 99%% %s; (d) median %s, 99%% %s; (d)/(c) %.2f and %.2f |", times,
 		at(bare, 50), at(bare, 99), at(whole, 50), at(whole, 99),
 		float64(at(whole, 50))/float64(at(bare, 50)), float64(at(whole, 99))/float64(at(bare, 99)))
 }

@@ -72,6 +72,7 @@ func TestYardstick(t *testing.T) {
 		y.round()
 		t.Log(y.row())
 		y.begin(2)
+		y.durable(time.Second / 5)
 		ringing(t, 5)
 		return
 	}
@@ -91,8 +92,14 @@ func TestYardstick(t *testing.T) {
 				y.round()
 			}
 			fmt.Fprintf(&table, "| %s %s\n", place, y.row())
+			t.Logf("figure | %s %s", place, y.row())
 			if line.load.series == 100_000 {
 				y.begin(5)
+			}
+			if line.load.series == 10_000 && line.load.perMessage == 1 {
+				pace, p50, p99 := y.durable(6 * time.Second)
+				t.Logf("figure | published to durable, %s, at %.0f observations a second: median %s, 99%% %s |",
+					place+" "+line.load.String(), pace, p50.Round(time.Millisecond/10), p99.Round(time.Millisecond/10))
 			}
 		})
 	}
