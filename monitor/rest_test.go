@@ -34,7 +34,7 @@ quiet = 2
 
 // restRules are what differs between set-ups: events, exposure and limits.
 var restRules = []struct{ events, rule string }{
-	{"each", "exposure = \"clock\"\nclock = { size = 1, per = \"1h\" }\nwindows = [\"10m\", \"1h\", \"4h\"]\ntails = [\"upper\"]\np_limit = 0.002"},
+	{"each", "exposure = \"clock\"\nclock = { size = 1, per = \"1h\" }\nwindows = [\"10m\", \"1h\", \"4h\"]\ntails = [\"upper\"]\np_limit = 0.002\nretire = \"6h\""},
 	{"each", "exposure = \"clock\"\nclock = { size = 4, per = \"1h\" }\nwindows = [\"10m\", \"1h\", \"4h\"]\ntails = [\"upper\", \"lower\"]\np_limit = 0.002"},
 	{"each", "exposure = \"clock\"\nclock = { size = \"0.0007\", per = \"1h\" }\nwindows = [\"10m\", { span = \"2h\", step = \"30m\" }, \"4h\"]\ntails = [\"upper\"]\nallowance = \"40 in 1y\""},
 	{"each", "exposure = \"clock\"\nclock = { size = 3, per = \"1h\" }\nsince = 2026-03-01T00:00:00Z\nwindows = [\"10m\", \"1h\"]\ntails = [\"upper\"]\np_limit = 0.01"},
@@ -133,6 +133,9 @@ func TestRest(t *testing.T) {
 // viewsOf is what is shown of every series.
 func viewsOf(e *Engine) (all []string) {
 	for _, s := range e.series {
+		if s.retired {
+			continue
+		}
 		for _, w := range s.indicator.cfg.Windows {
 			views := e.Views(s.name, w.Name, e.Clock().Add(-24*time.Hour).Time(), e.Clock().Time())
 			all = append(all, fmt.Sprint(s.name, len(views), views))
