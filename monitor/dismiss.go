@@ -30,7 +30,7 @@ func (e *Engine) dismiss(ix *indicator) {
 			}
 			e.archive(s, c)
 		}
-		e.end(s, e.clock)
+		e.end(s, e.clock, true)
 	}
 	ix.series, ix.sums, e.recent = nil, nil, nil
 	e.pending = slices.DeleteFunc(e.pending, func(a *alert) bool { return !a.pending })
@@ -52,9 +52,9 @@ func (e *Engine) dismissAlerts(t *tail, ix *indicator) {
 	}
 }
 
-// gone reports whether the id speaks of a series that is a stub: then it says
+// gone reports whether the id speaks of a series whose indicator went: then it says
 // nothing any more.
-func (x *identified) gone() bool { return x.said.series != nil && x.said.series.retired }
+func (x *identified) gone() bool { return x.said.series == forgotten }
 
 // dismissed lists the indicators that the next set-up lacks.
 func (e *Engine) dismissed(next *config.Setup) []*indicator {

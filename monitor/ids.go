@@ -95,6 +95,8 @@ type identified struct {
 	retracted  bool
 	said       contribution
 	generation int64
+	// stub is the number of the series that it speaks of, if that has ended.
+	stub uint32
 }
 
 // contribution is what one observation adds to the slots of a series.
@@ -213,7 +215,11 @@ func (x *ids) put(entry *identified) {
 	c.revision, c.retracted, c.series = entry.revision, entry.retracted, noPlace
 	c.start, c.end, c.events, c.exposure = said.start, said.end, said.events, said.exposure
 	c.hasEvents, c.hasExposure, c.late = said.hasEvents, said.hasExposure, said.late
-	if said.series != nil {
+	switch {
+	case said.series == nil:
+	case said.series.retired:
+		c.series = entry.stub
+	default:
 		c.series = said.series.number
 	}
 	x.most = max(x.most, x.count)

@@ -140,7 +140,7 @@ func (e *Engine) same(ix *indicator, o *Observation, old *identified) bool {
 		return was.series == nil && ix == nil
 	}
 	exposure, reason := quantityOf(o.Exposure, ix.cfg.GrainDigits)
-	return reason == "" && was.series.name == o.Series && was.start == o.Start && was.end == o.End &&
+	return reason == "" && (was.series.name == o.Series || was.series == ghost) && was.start == o.Start && was.end == o.End &&
 		was.hasEvents == o.HasEvents && was.events == o.Events &&
 		was.hasExposure == o.HasExposure && was.exposure == exposure
 }
@@ -243,6 +243,9 @@ func (ix *indicator) slotsOf(c *contribution) (from, to int64) {
 
 // isFrozen reports whether what was counted can't be taken back any more.
 func (e *Engine) isFrozen(c *contribution) bool {
+	if c.series.retired {
+		return true // it ended when all that it had was
+	}
 	ix := c.series.indicator
 	from, _ := ix.slotsOf(c)
 	return ix.cal.Start(from+1) < e.clock.Add(-ix.cfg.Horizon)

@@ -181,7 +181,7 @@ func (e *Engine) restoreStub(number uint32, data []byte) error {
 	if x.touched {
 		e.stubs.touched = append(e.stubs.touched, x)
 	}
-	e.series = append(e.series, ghost)
+	e.series = append(e.series, x.ghost())
 	return r.err
 }
 
@@ -342,6 +342,7 @@ func (e *Engine) restoreID(change *IDChange) error {
 		if number >= uint64(len(e.series)) {
 			return fmt.Errorf("%w: an id names series %d of %d", errEncoding, number, len(e.series))
 		}
+		x.stub = uint32(number)
 		x.said = contribution{
 			series: e.series[number], start: Instant(r.int()), end: Instant(r.int()), events: r.int(),
 			exposure: r.quantity(), hasEvents: r.flag(), hasExposure: r.flag(), late: r.flag(),

@@ -37,7 +37,7 @@ func (e *Engine) retire(ix *indicator, now Instant) {
 		for _, h := range s.heirs {
 			h.heir.sources = slices.DeleteFunc(h.heir.sources, func(x *series) bool { return x == s })
 		}
-		e.end(s, now)
+		e.end(s, now, false)
 	}
 	left := func(s *series) bool { return s.retired }
 	ix.series = slices.DeleteFunc(ix.series, left)

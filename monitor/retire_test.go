@@ -1,9 +1,12 @@
 package monitor_test
 
 import (
+	order "cmp"
 	"fmt"
 	"math/rand/v2"
+	"regexp"
 	"slices"
+	"strings"
 	"testing"
 	"time"
 
@@ -19,7 +22,7 @@ folder = "x"
 [time]
 mode = "history"
 [limits]
-max_series = 100
+max_series = 1000
 [[indicator]]
 name = "restart"
 series = ["ferrybill/*/*/restart"]
@@ -107,6 +110,59 @@ func TestRetiringIsTheSameAfterRestarts(t *testing.T) {
 	}
 	t.Logf("%d series retired, %d returned, %d steps, %d slots", retired, returned, steps, sums)
 	if retired < 500 || returned < 100 || steps < 200 {
+		t.Error("the streams no longer reach what they are for")
+	}
+}
+
+// That a series ends changes nothing of what was found, as long as no other has a
+// share in it and it does not come back.
+func TestRetiringChangesNoFinding(t *testing.T) {
+	text := strings.ReplaceAll(retireSetup, "allowance_for = \"indicator\"\n", "")
+	text = regexp.MustCompile(`(?m)^sums = .*\n`).ReplaceAllString(text, "")
+	stays := regexp.MustCompile(`(?m)^retire = .*\n`).ReplaceAllString(text, "")
+	var setups [2]*config.Setup
+	for i, text := range []string{text, stays} {
+		var err error
+		if setups[i], err = config.Parse([]byte(text), "test"); err != nil {
+			t.Fatal(err)
+		}
+	}
+	type found struct {
+		ID, Series, Kind, At, Why string
+		P                         float64
+	}
+	retired, steps := int64(0), 0
+	for range 15 {
+		seed := rand.Uint64()
+		var findings [2][]found
+		for i, setup := range setups {
+			messages := comeAndGo(rand.New(rand.NewPCG(seed, 7)), setup)
+			for day := range messages { // every name is one of a few days only
+				for j := range messages[day].Items {
+					o := &messages[day].Items[j].Observation
+					o.Series = strings.Replace(o.Series, "host", fmt.Sprintf("host-%d", o.Start/(4*24*3600_000_000)), 1)
+				}
+			}
+			o := play(t, messages, 0)
+			for _, n := range o.store.Steps {
+				f := found{n.Record.ID, n.Record.Series, string(n.Step.Kind), n.Step.At.String(), n.Step.Why, 0}
+				if n.Step.Evidence != nil {
+					f.P = n.Step.Evidence.P
+				}
+				findings[i] = append(findings[i], f)
+			}
+			retired += o.account.Retired
+			slices.SortFunc(findings[i], func(a, b found) int { // of one moment they are in order of numbers
+				return order.Or(strings.Compare(a.At, b.At), strings.Compare(a.ID, b.ID), strings.Compare(a.Kind, b.Kind))
+			})
+		}
+		if diff := cmp.Diff(findings[1], findings[0]); diff != "" {
+			t.Fatalf("seed %d (-staying +retiring):\n%s", seed, diff)
+		}
+		steps += len(findings[0])
+	}
+	t.Logf("%d series retired, %d steps", retired, steps)
+	if retired < 300 || steps < 50 {
 		t.Error("the streams no longer reach what they are for")
 	}
 }

@@ -22,11 +22,25 @@ type stub struct {
 	// unpaired counts the elements in its slots that lacked a side.
 	unpaired int64
 	opened   [3]int32 // the alerts that there were, by direction
-	touched  bool
+	// dismissed says that its indicator went, and that what ids said of it is
+	// forgotten with it.
+	dismissed bool
+	touched   bool
 }
 
-// ghost stands in the list of series where a stub has the number.
-var ghost = &series{retired: true}
+// ghost stands in the list of series where a stub has the number, and forgotten
+// where what ids said of it is forgotten.
+var (
+	ghost     = &series{retired: true}
+	forgotten = &series{retired: true}
+)
+
+func (x *stub) ghost() *series {
+	if x.dismissed {
+		return forgotten
+	}
+	return ghost
+}
 
 // spares are the stubs whose numbers may be given away, the next one first.
 type spares []*stub
@@ -97,10 +111,10 @@ func (x *stubs) forget(s *stub) {
 
 // end makes a stub of a series. It no longer stands in its indicator's list then,
 // or is taken out of it next.
-func (e *Engine) end(s *series, at Instant) {
+func (e *Engine) end(s *series, at Instant, dismissed bool) {
 	ix := s.indicator
 	s.rouse()
-	x := &stub{number: s.number, name: s.name, indicator: ix.cfg.Name, seen: s.seen, at: at, until: Beginning, keep: at.Add(ix.cfg.Retire), unpaired: s.unpaired}
+	x := &stub{number: s.number, name: s.name, indicator: ix.cfg.Name, seen: s.seen, at: at, until: Beginning, keep: at.Add(ix.cfg.Retire), unpaired: s.unpaired, dismissed: dismissed}
 	for d := range s.tails {
 		x.opened[d] = s.tails[d].opened
 	}
@@ -120,7 +134,7 @@ func (e *Engine) end(s *series, at Instant) {
 	}
 	delete(e.byName, s.name)
 	e.living--
-	e.series[s.number] = ghost
+	e.series[s.number] = x.ghost()
 	*s = series{number: s.number, name: s.name, indicator: ix, retired: true}
 	e.stubs.keep(x)
 	e.stubs.touch(x)
@@ -171,7 +185,7 @@ func (x *stub) encode(b []byte) []byte {
 	for _, at := range [...]Instant{x.seen, x.at, x.until, x.keep} {
 		b = binary.AppendVarint(b, int64(at))
 	}
-	return b
+	return append(b, flag(x.dismissed))
 }
 
 // stub reads one. Those that were written before series retired do not tell their
@@ -182,10 +196,11 @@ func (r *reader) stub(number uint32, now Instant) *stub {
 		x.opened[d] = int32(r.uint())
 	}
 	if len(r.b) == 0 {
-		x.at, x.until, x.keep, x.touched = now, now, now, true
+		x.at, x.until, x.keep, x.dismissed, x.touched = now, now, now, true, true
 		return x
 	}
 	x.indicator = r.string()
 	x.seen, x.at, x.until, x.keep = Instant(r.int()), Instant(r.int()), Instant(r.int()), Instant(r.int())
+	x.dismissed = r.flag()
 	return x
 }
