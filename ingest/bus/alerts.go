@@ -44,6 +44,8 @@ const (
 	// RowHeader is the number of the step in the partition's outbox: all up to
 	// it are in the stream. On a mark it is that of the last step before it.
 	RowHeader = "Tailbell-Row"
+	// RowKeyHeader is the key of that step.
+	RowKeyHeader = "Tailbell-Row-Key"
 	// OriginHeader says when the input stream was made from which the steps
 	// follow: rows are counted by it.
 	OriginHeader = "Tailbell-Origin"
@@ -54,8 +56,8 @@ type Published struct {
 	Position uint64 // 0: there is none
 	Epoch    uint64 // 0 where it names none
 	Row      uint64
+	Key      string // of the step with that number
 	Origin   string
-	Key      string // of the step, "" for a mark
 }
 
 // LastPublished asks for the partition's last message in the stream of alerts.
@@ -79,16 +81,13 @@ func (b *Bus) lastPublished(ctx context.Context, partition int) (Published, erro
 	if err != nil {
 		return Published{}, fmt.Errorf("reading the last message on %s: %w", b.names.alertOf(partition), mapped(err))
 	}
-	p := Published{Position: msg.Sequence, Origin: msg.Header.Get(OriginHeader), Key: msg.Header.Get(jetstream.MsgIDHeader)}
+	p := Published{Position: msg.Sequence, Origin: msg.Header.Get(OriginHeader), Key: msg.Header.Get(RowKeyHeader)}
 	for name, into := range map[string]*uint64{EpochHeader: &p.Epoch, RowHeader: &p.Row} {
 		if text := msg.Header.Get(name); text != "" {
 			if *into, err = strconv.ParseUint(text, 10, 64); err != nil {
 				return p, fmt.Errorf("message %d of %s has %s %q: no number", msg.Sequence, b.names.alertStream(), name, text)
 			}
 		}
-	}
-	if msg.Subject == b.names.owner(partition) {
-		p.Key = ""
 	}
 	return p, nil
 }
@@ -99,6 +98,7 @@ func (b *Bus) lastPublished(ctx context.Context, partition int) (Published, erro
 type OwnerMessage struct {
 	Partition int
 	Published // Position is that of the partition's last message, which it must follow
+	ID        string    // of the step
 	Direction string
 	Indicator string
 	Event     []byte // a CloudEvent in structured mode
@@ -115,12 +115,13 @@ func (b *Bus) PublishOwned(ctx context.Context, m *OwnerMessage) (position uint6
 	h := nats.Header{}
 	h.Set(EpochHeader, strconv.FormatUint(m.Epoch, 10))
 	h.Set(RowHeader, strconv.FormatUint(m.Row, 10))
+	h.Set(RowKeyHeader, m.Key)
 	h.Set(OriginHeader, m.Origin)
 	msg := &nats.Msg{Subject: b.names.owner(m.Partition), Header: h, Data: m.Event}
 	if m.Event != nil {
 		msg.Subject = b.names.alert(m.Partition, m.Direction, m.Indicator)
 		h.Set("Content-Type", cloudEvent)
-		h.Set(jetstream.MsgIDHeader, m.Key)
+		h.Set(jetstream.MsgIDHeader, m.ID)
 	}
 	before := b.denied.Load()
 	try, cancel := context.WithTimeout(ctx, tryTimeout)

@@ -144,7 +144,7 @@ func TestOwnersFollowEachOther(t *testing.T) {
 			t.Fatalf("%+v, %v", last, err)
 		}
 		publish := func(after, epoch, row uint64, key string) (uint64, bool, error) {
-			m := &bus.OwnerMessage{Published: bus.Published{Position: after, Epoch: epoch, Row: row, Origin: "then", Key: key}, Direction: "upper", Indicator: "fall"}
+			m := &bus.OwnerMessage{Published: bus.Published{Position: after, Epoch: epoch, Row: row, Origin: "then", Key: key}, ID: key, Direction: "upper", Indicator: "fall"}
 			if key != "" {
 				m.Event = []byte("{}")
 			}

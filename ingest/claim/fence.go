@@ -84,14 +84,13 @@ func (f *Fence) take(ctx context.Context) error {
 		}
 		mark := bus.OwnerMessage{Partition: f.partition, Published: bus.Published{Position: last.Position, Epoch: f.epoch, Origin: f.origin}}
 		if last.Origin == f.origin {
-			mark.Row = last.Row
+			mark.Row, mark.Key = last.Row, last.Key
 		}
 		if mark.Position, _, err = f.log.PublishOwned(ctx, &mark); err != nil {
 			return false, err
 		}
 		f.mu.taken = true
 		f.mu.last = mark.Published
-		f.mu.last.Key = last.Key
 		return true, nil
 	})
 }
@@ -134,8 +133,11 @@ func (f *Fence) Publish(ctx context.Context, s *Step) error {
 			return true, f.agrees(s)
 		}
 		m := bus.OwnerMessage{
-			Partition: f.partition, Direction: s.Direction, Indicator: s.Indicator, Event: s.Event,
-			Published: bus.Published{Position: f.mu.last.Position, Epoch: f.epoch, Row: max(s.Row, f.mu.last.Row), Origin: f.origin, Key: s.Key},
+			Partition: f.partition, ID: s.Key, Direction: s.Direction, Indicator: s.Indicator, Event: s.Event,
+			Published: bus.Published{Position: f.mu.last.Position, Epoch: f.epoch, Row: f.mu.last.Row, Key: f.mu.last.Key, Origin: f.origin},
+		}
+		if s.Row > m.Row {
+			m.Row, m.Key = s.Row, s.Key
 		}
 		position, repeated, err := f.log.PublishOwned(ctx, &m)
 		if errors.Is(err, bus.ErrConflict) {

@@ -310,7 +310,9 @@ func (k *Keeper) taken(e *entry) bool {
 // settle takes in what the board says of the own claims. One whose
 // acknowledgement was lost is none: it is taken once more, with another epoch.
 func (k *Keeper) settle(b *board) {
-	for n, h := range k.own() {
+	own := k.own()
+	for _, n := range k.owned() {
+		h := own[n]
 		e, there := b.partitions[n]
 		switch {
 		case !there:

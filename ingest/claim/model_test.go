@@ -37,14 +37,21 @@ type world struct {
 	entries map[string]bus.Entry
 	past    []map[string]bus.Entry // what replicas may still answer
 	seq     uint64
-	log     map[int][]bus.Published // by partition, all that was stored
-	steps   map[int]uint64          // by partition, rows that the stream leads to by now
+	log     map[int][]logged // by partition, all that was stored
+	steps   map[int]uint64   // by partition, rows that the stream leads to by now
 	members []*process
 	depth   int
 	calm    bool // no more faults
+	over    bool // nothing new comes any more
 	open    bool // without a fence: whatever is published is stored
 	owners  map[int][]uint64
 	faults  []string
+}
+
+// logged is a message in the stream of alerts; id is "" for a mark.
+type logged struct {
+	bus.Published
+	id string
 }
 
 func (w *world) fault(format string, args ...any) {
@@ -91,7 +98,7 @@ func (p *process) start() {
 	p.starts++
 	p.parts, p.events, p.stop = map[int]*work{}, nil, false
 	digest := "one"
-	if p.starts > 1 && p.w.random.IntN(8) == 0 {
+	if p.starts > 1 && !p.w.calm && p.w.random.IntN(8) == 0 {
 		digest = "another"
 	}
 	p.k = NewKeeper(Options{
@@ -121,7 +128,10 @@ func (v *view) All(context.Context) ([]bus.Entry, error) {
 	if w.chance(10) && len(w.past) > 0 {
 		from = w.past[w.random.IntN(len(w.past))]
 	}
-	list := slices.Collect(maps.Values(from))
+	var list []bus.Entry
+	for _, key := range slices.Sorted(maps.Keys(from)) {
+		list = append(list, from[key])
+	}
 	w.meanwhile()
 	return list, nil
 }
@@ -163,9 +173,9 @@ func (v *view) LastPublished(_ context.Context, n int) (bus.Published, error) {
 	case len(log) == 0:
 		return bus.Published{}, nil
 	case w.chance(10):
-		return log[max(0, len(log)-1-w.random.IntN(3))], nil
+		return log[max(0, len(log)-1-w.random.IntN(3))].Published, nil
 	}
-	return log[len(log)-1], nil
+	return log[len(log)-1].Published, nil
 }
 
 func (v *view) PublishOwned(_ context.Context, m *bus.OwnerMessage) (uint64, bool, error) {
@@ -178,7 +188,7 @@ func (v *view) PublishOwned(_ context.Context, m *bus.OwnerMessage) (uint64, boo
 	if uint64(len(log)) != m.Position && !w.open {
 		return 0, false, bus.ErrConflict
 	}
-	stored := m.Published
+	stored := logged{m.Published, m.ID}
 	stored.Position = uint64(len(log) + 1)
 	w.log[m.Partition] = append(log, stored)
 	if w.chance(5) {
@@ -219,12 +229,10 @@ func (p *process) act(what int) {
 	case what < 8:
 		_ = p.k.Turn(ctx) //nolint:errcheck // refusals are part of it
 		p.take()
-	case what < 12:
+	case what < 12 && !w.over:
 		w.steps[w.random.IntN(partitions)]++
 	default:
-		for n, part := range p.parts {
-			p.work(ctx, n, part)
-		}
+		p.workAll(ctx)
 	}
 	p.take()
 }
@@ -263,6 +271,14 @@ func (p *process) win(e Event) {
 func (p *process) close(numbers ...int) {
 	for _, n := range numbers {
 		delete(p.parts, n)
+	}
+}
+
+func (p *process) workAll(ctx context.Context) {
+	for _, n := range slices.Sorted(maps.Keys(p.parts)) {
+		if part := p.parts[n]; part != nil { // it may be lost meanwhile
+			p.work(ctx, n, part)
+		}
 	}
 }
 
@@ -310,13 +326,13 @@ func (w *world) check() {
 		row, epoch := uint64(0), uint64(0)
 		for _, m := range w.log[n] {
 			switch {
-			case m.Key == "" && m.Epoch <= epoch:
+			case m.id == "" && m.Epoch <= epoch:
 				w.fault("partition %d: the mark of epoch %d after that of %d", n, m.Epoch, epoch)
-			case m.Key == "" && m.Row != row:
+			case m.id == "" && m.Row != row:
 				w.fault("partition %d: a mark says row %d after %d", n, m.Row, row)
-			case m.Key != "" && m.Epoch != epoch:
-				w.fault("partition %d: row %s of epoch %d after the mark of %d", n, m.Key, m.Epoch, epoch)
-			case m.Key != "" && m.Row != row+1:
+			case m.id != "" && m.Epoch != epoch:
+				w.fault("partition %d: row %s of epoch %d after the mark of %d", n, m.id, m.Epoch, epoch)
+			case m.id != "" && m.Row != row+1:
 				w.fault("partition %d: row %d after %d", n, m.Row, row)
 			}
 			row, epoch = m.Row, m.Epoch
@@ -340,7 +356,7 @@ func life(t *testing.T, seed uint64, open bool) (w *world) {
 	synctest.Test(t, func(*testing.T) {
 		w = &world{
 			random: rand.New(rand.NewPCG(seed, 1)), began: time.Now(), entries: map[string]bus.Entry{}, open: open,
-			log: map[int][]bus.Published{}, steps: map[int]uint64{}, owners: map[int][]uint64{},
+			log: map[int][]logged{}, steps: map[int]uint64{}, owners: map[int][]uint64{},
 		}
 		for _, folder := range []string{"a", "b", "c"} {
 			p := &process{w: w, folder: folder, stores: map[int]uint64{}}
@@ -351,18 +367,20 @@ func life(t *testing.T, seed uint64, open bool) (w *world) {
 			time.Sleep(time.Duration(w.random.Int64N(int64(span / 6))))
 			w.something()
 		}
-		w.calm = true
-		for range 400 {
-			time.Sleep(span / 30)
-			for range 3 {
-				w.something()
+		for _, w.over = range []bool{false, true} {
+			w.calm = true
+			for range 400 {
+				time.Sleep(span / 30)
+				for range 3 {
+					w.something()
+				}
 			}
 		}
-		for _, p := range w.members { // nothing new comes any more
+		for _, p := range w.members {
 			for n, part := range p.parts {
 				part.committed = max(part.committed, w.steps[n])
-				p.work(context.Background(), n, part)
 			}
+			p.workAll(context.Background())
 		}
 		w.check()
 	})
@@ -389,7 +407,7 @@ func TestModel(t *testing.T) {
 		}
 		for _, log := range w.log {
 			for _, m := range log {
-				if m.Key == "" {
+				if m.id == "" {
 					marks++
 				} else {
 					rows++

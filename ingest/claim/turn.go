@@ -6,6 +6,7 @@ import (
 	"errors"
 	"fmt"
 	"hash/fnv"
+	"maps"
 	"slices"
 	"time"
 
@@ -23,7 +24,9 @@ func (k *Keeper) renew(ctx context.Context, b *board) error {
 	var puts []bus.Put
 	var of []*held
 	var numbers []int
-	for n, h := range k.own() {
+	own := k.own()
+	for _, n := range k.owned() {
+		h := own[n]
 		if !h.lapsed && now >= h.sent+k.o.Span {
 			h.lapsed = true
 		}
@@ -105,7 +108,8 @@ func (k *Keeper) inForce(ctx context.Context, b *board) (bool, error) {
 			return false, err
 		}
 	}
-	for _, e := range b.partitions {
+	for _, n := range slices.Sorted(maps.Keys(b.partitions)) {
+		e := b.partitions[n]
 		if k.taken(&e) && e.holding.Digest != k.o.Digest {
 			k.wait(fmt.Sprintf("the member %s owns partition %d under another set-up (%.12s): this one (%.12s) comes into force when no process runs that one any more",
 				e.holding.Owner, e.partition, e.holding.Digest, k.o.Digest))
@@ -115,6 +119,9 @@ func (k *Keeper) inForce(ctx context.Context, b *board) (bool, error) {
 	o := k.o.Board.PutAll(ctx, []bus.Put{put(settingKey, settingInForce{k.o.Digest}, b.setting.revision, 0)})[0]
 	if errors.Is(o.Err, ErrConflict) {
 		return false, nil // the next turn sees who was faster
+	}
+	if o.Err == nil {
+		k.wait("")
 	}
 	return o.Err == nil, o.Err
 }
