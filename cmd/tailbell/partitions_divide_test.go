@@ -6,13 +6,13 @@ import (
 	"fmt"
 	"io/fs"
 	"maps"
+	"math/rand/v2"
 	"os"
 	"path/filepath"
 	"slices"
 	"strings"
 	"syscall"
 	"testing"
-	"time"
 
 	"github.com/google/go-cmp/cmp"
 
@@ -55,13 +55,23 @@ func allStored(t *testing.T, setup *config.Setup) *outcome {
 	return together(parts...)
 }
 
-// TestDivideOrdeal carries a plan with all that may go wrong through several
+// TestDivideOrdeal carries plans with all that may go wrong through several
 // numbers of partitions. Every alert's record stays as it was to the byte, every
-// slot, and every refusal.
+// slot, and every refusal. Where the two sites come into one partition, the set-up
+// stays the same: a new one would be in force for both when it was for the first.
 func TestDivideOrdeal(t *testing.T) {
-	seed := uint64(time.Now().UnixNano())
+	t.Run("apart", func(t *testing.T) { divideOrdeal(t, 2, 4, 6) })
+	t.Run("together", func(t *testing.T) { divideOrdeal(t, 0, 3, 5) })
+}
+
+func divideOrdeal(t *testing.T, settings int, numbers ...int) {
+	t.Helper()
+	seed := *ordealSeed
+	if seed == 0 {
+		seed = rand.Uint64()
+	}
 	t.Logf("seed %d", seed)
-	plan, err := ordeal.Generate(seed, ordeal.Options{Days: 90, Settings: 2})
+	plan, err := ordeal.Generate(seed, ordeal.Options{Days: 90, Settings: settings})
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -112,12 +122,12 @@ func TestDivideOrdeal(t *testing.T) {
 	if err := b.Close(); err != nil {
 		t.Fatal(err)
 	}
-	for _, into := range []int{4, 6, 3} {
+	for _, into := range numbers {
 		code, out, complaint := run(t, "partitions", "divide", "--into", fmt.Sprint(into), "--config", path)
 		if code != 0 || !strings.Contains(out, "balance") {
 			t.Fatalf("into %d: exit code %d\n%s%s", into, code, out, complaint)
 		}
-		setup = write(config.WithPartitions(plan.Setups[2], into))
+		setup = write(config.WithPartitions(plan.Setups[settings], into))
 		compareOutcomes(t, fmt.Sprintf("into %d", into), want, allStored(t, setup))
 	}
 }
