@@ -16,6 +16,7 @@ import (
 	"tailbell/ingest/bus"
 	"tailbell/ingest/claim"
 	"tailbell/ingest/control"
+	"tailbell/ingest/copies"
 	"tailbell/ingest/intake"
 	"tailbell/monitor"
 	"tailbell/monitor/partition"
@@ -33,9 +34,11 @@ type part struct {
 	fence  *claim.Fence // nil for an embedded bus
 	origin string       // when the stream was made, that the store is filled from
 	// told is what the owner before had told its outlets, by the same rows.
-	told   map[string]uint64
-	copied atomic.Uint64 // position of the last copy on the bus
-	noRoom atomic.Bool   // the last commit found no room
+	told map[string]uint64
+	// lastCopy is the last copy on the bus, nil while none is known.
+	lastCopy atomic.Pointer[copies.Copy]
+	copied   atomic.Uint64 // position of the last copy on the bus
+	noRoom   atomic.Bool   // the last commit found no room
 
 	// stop ends what startPart began, which running waits for. gone ends with the
 	// loop: nothing is asked of the engine any more.

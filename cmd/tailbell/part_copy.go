@@ -27,6 +27,7 @@ const copyTime = 30 * time.Second
 
 // keepCopying puts copies of a partition's store on the bus, until ctx ends.
 func (m *member) keepCopying(ctx context.Context, p *part) {
+	m.knowCopy(ctx, p)
 	tick := time.NewTicker(m.d.setup.Bus.CopyEvery)
 	defer tick.Stop()
 	for {
@@ -34,6 +35,23 @@ func (m *member) keepCopying(ctx context.Context, p *part) {
 		case <-tick.C:
 			m.copyUp(ctx, p)
 		case <-ctx.Done():
+			return
+		}
+	}
+}
+
+// knowCopy notes the last copy that the owner before has put on the bus, for
+// people.
+func (m *member) knowCopy(ctx context.Context, p *part) {
+	ctx, cancel := context.WithTimeout(ctx, goodbye)
+	defer cancel()
+	list, err := copies.List(ctx, m.shelf, p.number)
+	if err != nil {
+		m.d.log.Debug().Err(err).Int("partition", p.number).Msg("asking for the copies on the bus")
+	}
+	for i := range list {
+		if list[i].Origin == p.origin {
+			p.lastCopy.CompareAndSwap(nil, &list[i])
 			return
 		}
 	}
@@ -79,6 +97,7 @@ func (m *member) copyOnce(ctx context.Context, p *part) (c *copies.Copy, err err
 		return nil, err
 	}
 	p.copied.Store(c.Position)
+	p.lastCopy.Store(c)
 	return c, nil
 }
 

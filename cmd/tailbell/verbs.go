@@ -81,6 +81,11 @@ type partStatus struct {
 	Conditions []conditionRow  `json:"conditions"`
 	Outlets    []outletRow     `json:"outlets"`
 	OpenAlerts int             `json:"open_alerts"`
+	// Owner is the process that owns the partition, Epoch its own. Copy is the last
+	// copy of the store on the bus, nil for none.
+	Owner string   `json:"owner"`
+	Epoch uint64   `json:"epoch"`
+	Copy  *copyRow `json:"last_copy,omitempty"`
 }
 
 // conditionRow is a condition with its time as people and programs read it.
@@ -151,7 +156,13 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 		r.Troubles = []trouble{}
 	}
 	for _, p := range d.parts.all() {
-		s := partStatus{Number: p.number, Conditions: []conditionRow{}, Outlets: []outletRow{}}
+		s := partStatus{Number: p.number, Conditions: []conditionRow{}, Outlets: []outletRow{}, Owner: ownerAlone, Copy: copyRowOf(p.lastCopy.Load())}
+		if d.member != nil {
+			s.Owner = d.member.keeper.Name()
+		}
+		if s.Epoch, err = p.store.Epoch(); err != nil {
+			return nil, err
+		}
 		if r.Connected {
 			if s.End, err = d.endOf(ctx, p); err != nil {
 				r.Connected = false
@@ -169,11 +180,7 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 			for _, c := range e.Conditions() {
 				s.Conditions = append(s.Conditions, conditionRowOf(c))
 			}
-			for _, r := range e.Alerts() {
-				if !r.Done() {
-					s.OpenAlerts++
-				}
-			}
+			s.OpenAlerts = openAlerts(e)
 		})
 		if err != nil {
 			return nil, err
