@@ -45,7 +45,8 @@ type Changes struct {
 // SeriesChange is a patch or a whole state of one series, in the engine's own
 // encoding, opaque to the store.
 type SeriesChange struct {
-	// Number is the series' number, from 0 in order of appearance.
+	// Number is the series' number, from 0 in order of appearance; that of one that
+	// has ended is given to another.
 	Number uint32
 	Data   []byte
 }
