@@ -161,6 +161,9 @@ func (e *Engine) visits(ix *indicator, those numbers, f func(*series)) {
 // its looks come to is known until something of its own changes.
 func (e *Engine) rest(s *series, ep *epoch, boundary int64) {
 	ix := s.indicator
+	if n := len(s.cells); !byClock(ep.cfg) && n > 0 && s.cells[n-1].slot >= boundary-1 {
+		return // it reports
+	}
 	if e.long || e.passing || e.onLook != nil || e.known != nil || ix.cal.even == 0 || ep.cfg != ix.cfg || !s.mayRest(ep.cfg) {
 		return
 	}

@@ -32,15 +32,15 @@ func (y *yard) begin(times int) {
 	if err := errors.Join(err, <-ended, y.daemon.close()); err != nil {
 		y.t.Fatal(err)
 	}
-	var took []time.Duration
+	var took, used []time.Duration
 	for range times {
-		began := time.Now()
+		began, cpu := time.Now(), processorTime()
 		st, err := store.Open(storePath(y.setup, 0), identityOf(y.setup, 0), store.Options{})
 		if err != nil {
 			y.t.Fatal(err)
 		}
 		e, err := partition.Recover(st)
-		took = append(took, time.Since(began))
+		took, used = append(took, time.Since(began)), append(used, processorTime()-cpu)
 		if err == nil && e.SeriesCount() != y.load.series {
 			y.t.Errorf("%d series were recovered", e.SeriesCount())
 		}
@@ -49,7 +49,9 @@ func (y *yard) begin(times int) {
 		}
 	}
 	slices.Sort(took)
-	y.t.Logf("figure | start with %d series: %s (median of %d), %s at most |", y.load.series, took[len(took)/2], times, took[len(took)-1])
+	slices.Sort(used)
+	y.t.Logf("figure | start with %d series: %s (median of %d), %s at most; %s of the processors |",
+		y.load.series, took[len(took)/2], times, took[len(took)-1], used[len(used)/2])
 	if err := os.Remove(storePath(y.setup, 0)); err != nil {
 		y.t.Fatal(err)
 	}
