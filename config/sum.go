@@ -111,9 +111,6 @@ func (s section) checkSums(in *Indicator, setup *Setup) {
 		switch {
 		case !slices.ContainsFunc(in.Series, func(p Pattern) bool { _, both := overlap(p, m.pattern); return both }):
 			s.fault("sums", fmt.Sprintf("%q matches no series of this indicator", m.text), "compare it with the indicator's own patterns")
-		case setup.Partitions > 1 && !m.onePartition(setup.KeyParts):
-			s.fault("sums", fmt.Sprintf("%q may sum series of several partitions, and there are %d: they can't be seen together", m.text, setup.Partitions),
-				fmt.Sprintf("write partitions = 1, or keep the first %s in braces or in words", counted(setup.KeyParts, "part")))
 		}
 	}
 }
@@ -124,11 +121,55 @@ func (in *Indicator) MayMatch(p Pattern) bool {
 	return slices.ContainsFunc(in.Series, func(q Pattern) bool { _, both := overlap(p, q); return both })
 }
 
-// onePartition reports whether all members of one sum are sure to lie in one
-// partition.
-func (m Sum) onePartition(keyParts int) bool {
+// Gathered returns the sums of the indicator whose members may lie in several
+// partitions, whatever the number of partitions is: changes reach them at the
+// boundaries of slots, when every partition has told its own.
+func (in *Indicator) Gathered(keyParts int) []Sum {
+	var sums []Sum
+	for _, m := range in.Sums {
+		if m.Gathered(keyParts) {
+			sums = append(sums, m)
+		}
+	}
+	return sums
+}
+
+// Makes reports whether the sum has this name for any series.
+func (m Sum) Makes(name string) bool {
+	parts, from := strings.Split(m.text, "/"), strings.Split(name, "/")
+	if len(parts) != len(from) {
+		return false
+	}
+	for i, p := range parts {
+		if kept(p) && strings.Contains(from[i], "*") || !kept(p) && p != from[i] {
+			return false
+		}
+	}
+	return true
+}
+
+// HomeOf returns the partition that gathers the sums of an indicator, by its
+// name.
+func (s *Setup) HomeOf(indicator string) int { return PartitionOf(indicator, 0, s.Partitions) }
+
+// PartitionOf returns the partition that holds a series, or a sum.
+func (s *Setup) PartitionOf(series string) int {
+	if s.Partitions > 1 && IsSum(series) {
+		for i := range s.Indicators {
+			in := &s.Indicators[i]
+			if slices.ContainsFunc(in.Gathered(s.KeyParts), func(m Sum) bool { return m.Makes(series) }) {
+				return s.HomeOf(in.Name)
+			}
+		}
+	}
+	return PartitionOf(series, s.KeyParts, s.Partitions)
+}
+
+// Gathered reports whether the members of one sum may lie in several
+// partitions.
+func (m Sum) Gathered(keyParts int) bool {
 	parts := strings.Split(m.text, "/")
-	return !slices.ContainsFunc(parts[:min(keyParts, len(parts))], func(p string) bool { return strings.Contains(p, "*") })
+	return slices.ContainsFunc(parts[:min(keyParts, len(parts))], func(p string) bool { return strings.Contains(p, "*") })
 }
 
 // readServedSums reads which sums a baseline serves, if it is one for sums.

@@ -81,7 +81,6 @@ func TestSumsHaveBaselinesOfTheirOwn(t *testing.T) {
 
 func TestSumsThatCanNotBeKept(t *testing.T) {
 	for _, test := range []struct{ partitions, sums, base, want string }{
-		{"4", `"*/*/fall"`, "*/*/fall", "several partitions"},
 		{"1", `"*/*/error"`, "*/*/error", "matches no series"},
 		{"1", `"{site}/*/fall"`, "a/*/error", "matches no sum"},
 	} {
@@ -90,7 +89,42 @@ func TestSumsThatCanNotBeKept(t *testing.T) {
 			t.Errorf("%v: error %v, want something with %q", test, err, test.want)
 		}
 	}
-	if _, err := parseSums("4", `"{site}/*/fall"`, "*/*/fall"); err != nil {
-		t.Errorf("sums within a site: %v", err)
+}
+
+// TestGatheredSums checks which sums may have members in several partitions,
+// and where they and all others are held.
+func TestGatheredSums(t *testing.T) {
+	s, err := parseSums("4", `"{site}/*/fall", "*/*/fall", "**/fall"`, "*/*/fall")
+	if err != nil {
+		t.Fatal(err)
+	}
+	in := &s.Indicators[0]
+	var got []string
+	for _, m := range in.Gathered(1) {
+		got = append(got, m.String())
+	}
+	if want := "*/*/fall **/fall"; strings.Join(got, " ") != want {
+		t.Errorf("gathered are %q, want %q", got, want)
+	}
+	if n := len(in.Gathered(2)); n != 3 {
+		t.Errorf("%d are gathered by two parts of the name, want 3", n)
+	}
+	for name, want := range map[string]int{
+		"east/ward-1/fall": PartitionOf("east", 1, 4), "east/*/fall": PartitionOf("east", 1, 4),
+		"*/*/fall": s.HomeOf("fall"), "**/fall": s.HomeOf("fall"),
+	} {
+		if got := s.PartitionOf(name); got != want {
+			t.Errorf("%s is in partition %d, want %d", name, got, want)
+		}
+	}
+	for _, series := range []string{"east/*/fall", "x/*/fall"} {
+		if !NewSum("{site}/*/fall").Makes(series) {
+			t.Errorf("no series is summed as %s", series)
+		}
+	}
+	for _, series := range []string{"*/*/fall", "east/ward-1/fall", "east/*/error", "east/*"} {
+		if NewSum("{site}/*/fall").Makes(series) {
+			t.Errorf("a series is summed as %s", series)
+		}
 	}
 }

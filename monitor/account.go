@@ -56,6 +56,10 @@ type Account struct {
 	// Returned ones were monitored before, whyever that had ended.
 	Retired  int64 `json:"retired,omitempty"`
 	Returned int64 `json:"returned,omitempty"`
+	// Summaries are those of other partitions that were taken, and SummaryRepeats
+	// those that had come before.
+	Summaries      int64 `json:"summaries,omitempty"`
+	SummaryRepeats int64 `json:"summary_repeats,omitempty"`
 }
 
 // Account returns the account as it stands.
@@ -107,6 +111,8 @@ func (a Account) Add(b Account) Account {
 	sum.AfterSignOff += b.AfterSignOff
 	sum.Retired += b.Retired
 	sum.Returned += b.Returned
+	sum.Summaries += b.Summaries
+	sum.SummaryRepeats += b.SummaryRepeats
 	sum.RefusedBy = maps.Clone(a.RefusedBy)
 	if sum.RefusedBy == nil {
 		sum.RefusedBy = map[Reason]int64{}
@@ -145,7 +151,7 @@ func (e *Engine) Slots() []SlotSum {
 	})
 	var sums []SlotSum
 	for _, s := range sorted {
-		if s.sum != nil {
+		if s.sum != nil || s.mirror {
 			continue
 		}
 		own := s.ownCells()

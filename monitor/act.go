@@ -13,6 +13,9 @@ func (e *Engine) act(m *Message) {
 	if e.history && !m.HasTime && m.Act.HasAt {
 		e.advance(m.Act.At)
 	}
+	if !m.Act.Kind.OnSeries() && e.putOff(&m.Act, m.Position) {
+		return
+	}
 	if reason, detail := e.perform(&m.Act); reason != "" {
 		e.account.ActsRefused++
 		e.refuse(m, 0, m.Act.Series, reason, detail, m.Act.Raw)

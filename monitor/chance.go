@@ -37,7 +37,12 @@ func (e *Engine) Chances() []Chances {
 		if e.known == nil {
 			break
 		}
-		c := &ix.chances
+		c := ix.chances
+		for _, k := range ix.kin()[1:] {
+			for d := range c {
+				c[d].include(&k.chances[d])
+			}
+		}
 		for d, watched := range [...]bool{ix.cfg.Upper, ix.cfg.Lower} {
 			if watched {
 				c[d].Indicator, c[d].Upper = ix.cfg.Name, direction(d) == upper
@@ -46,6 +51,15 @@ func (e *Engine) Chances() []Chances {
 		}
 	}
 	return list
+}
+
+// include adds the sums of others.
+func (c *Chances) include(o *Chances) {
+	c.Looks += o.Looks
+	c.Sum += o.Sum
+	for i, n := range o.AtMost {
+		c.AtMost[i] += n
+	}
 }
 
 func (c *Chances) add(p float64) {

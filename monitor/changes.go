@@ -40,6 +40,25 @@ type Changes struct {
 	// Settings are the set-up texts that came into force, in order. Every one
 	// is kept, by its version.
 	Settings []SettingChange
+	// Summaries are what other partitions are to be told, in order: each is to be
+	// delivered to its partition once at least.
+	Summaries []OutSummary
+	// Waiting are the summaries that began to wait for those of other partitions,
+	// and Gathered the numbers of those that do no longer.
+	Waiting  []WaitingSummary
+	Gathered []uint64
+}
+
+// OutSummary is a message for another partition.
+type OutSummary struct {
+	Partition int    `json:"partition"`
+	Data      []byte `json:"data"`
+}
+
+// WaitingSummary is one that waits for those of other partitions, by its number.
+type WaitingSummary struct {
+	Number uint64
+	Data   []byte
 }
 
 // SeriesChange is a patch or a whole state of one series, in the engine's own
@@ -98,6 +117,8 @@ type Snapshot struct {
 	// Alerts are the records that are not done (life.Record.Done), oldest
 	// first.
 	Alerts []life.Record
+	// Waiting are the summaries that wait for others, by number.
+	Waiting []WaitingSummary
 }
 
 // SeriesImage is the stored form of one series.

@@ -27,13 +27,16 @@ type ConditionKind string
 
 // The kinds of condition.
 const (
-	WithheldLooks  ConditionKind = "withheld"        // a needed count or exposure is missing
-	MoreThanTrials ConditionKind = "more than n"     // more events than trials
-	NoExposure     ConditionKind = "no exposure"     // events, but no exposure
-	NoBaseline     ConditionKind = "no baseline"     // none is valid, or it rests on too little
-	NotInService   ConditionKind = "out of service"  // people said so
-	Silent         ConditionKind = "silent"          // nothing heard for longer than expected
-	unknownKind    ConditionKind = "program's fault" // a status without a kind
+	WithheldLooks  ConditionKind = "withheld"       // a needed count or exposure is missing
+	MoreThanTrials ConditionKind = "more than n"    // more events than trials
+	NoExposure     ConditionKind = "no exposure"    // events, but no exposure
+	NoBaseline     ConditionKind = "no baseline"    // none is valid, or it rests on too little
+	NotInService   ConditionKind = "out of service" // people said so
+	Silent         ConditionKind = "silent"         // nothing heard for longer than expected
+	// WaitsForPartition is of a sum of which a look waits for what another
+	// partition has to tell.
+	WaitsForPartition ConditionKind = "waits for a partition"
+	unknownKind       ConditionKind = "program's fault" // a status without a kind
 )
 
 // Conditions returns what stands now, by series, kind and window.
@@ -42,6 +45,7 @@ func (e *Engine) Conditions() []Condition {
 	for _, s := range e.series {
 		list = append(list, e.conditionsOf(s)...)
 	}
+	list = append(list, e.waitingConditions()...)
 	slices.SortFunc(list, func(a, b Condition) int {
 		return cmp.Or(cmp.Compare(a.Series, b.Series), cmp.Compare(a.Kind, b.Kind), cmp.Compare(a.Window, b.Window))
 	})

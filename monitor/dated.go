@@ -78,6 +78,9 @@ func (e *Engine) datesOf(ix *indicator, name string) *dates {
 	var d *dates
 	for i := range e.facts {
 		f := &e.facts[i]
+		if f.Taken >= e.gathered || f.Taken > e.clock {
+			continue // sums are being looked at as of before
+		}
 		heir := f.Into != "" && f.Into == name
 		if !heir && !f.matches(name) {
 			continue

@@ -78,6 +78,7 @@ func (e *Engine) openNew(f *fact) (Reason, string) {
 		e.link(s)
 	}
 	s.birth = ix.firstFrom(f.From)
+	e.inform(s, s.birth, ix.looked-1, true, "")
 	for _, c := range e.changeSums(nil, s, s.birth, ix.looked-1) {
 		e.rerun(c)
 	}
@@ -116,10 +117,12 @@ func (e *Engine) keepFacts(facts []fact) {
 func (e *Engine) forgetFacts() {
 	oldest := Never
 	for _, ix := range e.indicators {
-		if !ix.started {
-			return
+		for _, k := range ix.kin() {
+			if !k.started {
+				return
+			}
+			oldest = min(oldest, k.cal.Start(k.kept))
 		}
-		oldest = min(oldest, ix.cal.Start(ix.kept))
 	}
 	e.keepFacts(slices.DeleteFunc(slices.Clone(e.facts), func(f fact) bool {
 		return !f.turns() && max(f.From, f.Until) < oldest
@@ -129,8 +132,24 @@ func (e *Engine) forgetFacts() {
 // enforce brings the facts into force for the series that the fact matches, and
 // makes the looks again that they change: those over [from, until).
 func (e *Engine) enforce(f *fact, from, until Instant) {
-	var changes, ofSums []change
+	var now []*series
 	for _, s := range e.matched(f) {
+		if s.indicator.of == nil || f.Kind == Reset && !e.behind(s.indicator, e.clock) {
+			now = append(now, s)
+		}
+	}
+	for _, up := range e.laterFor(f) {
+		kept := *f
+		e.deferrals = append(e.deferrals, deferral{Position: e.position, At: e.clock, Indicator: up.cfg.Name, Fact: &kept, From: from, Until: until})
+	}
+	e.enforceOn(now, f, from, until, true)
+}
+
+// enforceOn is enforce for some series. succeed says that the series which takes
+// their place, if any does, is among them.
+func (e *Engine) enforceOn(some []*series, f *fact, from, until Instant, succeed bool) {
+	var changes, ofSums []change
+	for _, s := range some {
 		ix := s.indicator
 		s.dates = e.datesOf(ix, s.name)
 		e.awaitAgain(s, NotOpen)
@@ -138,6 +157,7 @@ func (e *Engine) enforce(f *fact, from, until Instant) {
 		e.touch(s)
 		c := change{series: s, from: ix.firstFrom(from)}
 		c.weighed = true
+		e.inform(s, noNewsFrom, noNewsTo, true, f.why(ix.cal.zone))
 		switch {
 		case f.Kind == Reset:
 			e.rearm(s, f)
@@ -155,9 +175,10 @@ func (e *Engine) enforce(f *fact, from, until Instant) {
 		changes = append(changes, c)
 		if f.Kind == OutOfService || f.turns() {
 			ofSums = e.changeSums(ofSums, s, c.from, c.to)
+			e.inform(s, c.from, c.to, true, f.why(ix.cal.zone))
 		}
 	}
-	if f.Into != "" {
+	if f.Into != "" && succeed {
 		ofSums = e.succeedTo(ofSums, f)
 	}
 	slices.SortFunc(ofSums, func(a, b change) int { return cmp.Compare(a.series.number, b.series.number) })

@@ -44,7 +44,7 @@ func (e *Engine) senseless(f *fact) (Reason, string) {
 // yet, is most likely a mistake; "" if it is none.
 func (e *Engine) pointless(f *fact, matched []*series) (Reason, string) {
 	switch {
-	case f.Kind == Reset && len(matched) == 0:
+	case f.Kind == Reset && len(matched) == 0 && len(e.laterFor(f)) == 0:
 		return NoSuchSeries, fmt.Sprintf("no series that was heard of is called %q or matches it: there is nothing to reset", f.Series)
 	case f.What == Closing && len(matched) == 0 && !config.IsSum(f.Series):
 		return NoSuchSeries, fmt.Sprintf("no series that was heard of is called %q: there is nothing to close", f.Series)

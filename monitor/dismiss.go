@@ -13,6 +13,13 @@ import (
 // its series hold goes to the archive, and what is reported of them from now on
 // is unmonitored. Should an indicator claim its name again, it begins anew.
 func (e *Engine) dismiss(ix *indicator) {
+	e.dismissSeries(ix)
+	e.scatter(ix)
+	e.recent = nil
+	e.pending = slices.DeleteFunc(e.pending, func(a *alert) bool { return !a.pending })
+}
+
+func (e *Engine) dismissSeries(ix *indicator) {
 	for _, s := range ix.ordered() {
 		for d := range s.tails {
 			e.dismissAlerts(&s.tails[d], ix)
@@ -32,8 +39,7 @@ func (e *Engine) dismiss(ix *indicator) {
 		}
 		e.end(s, e.clock, true)
 	}
-	ix.series, ix.sums, e.recent = nil, nil, nil
-	e.pending = slices.DeleteFunc(e.pending, func(a *alert) bool { return !a.pending })
+	ix.series, ix.sums = nil, nil
 }
 
 // dismissAlerts closes what is not done of one direction of a series, in order

@@ -29,7 +29,7 @@ func (e *Engine) Drain() Changes {
 	}
 	e.drained = e.position
 	if len(e.stubs.touched) > 0 {
-		e.touched = slices.DeleteFunc(e.touched, func(s *series) bool { return s.retired })
+		e.touched = slices.DeleteFunc(e.touched, func(s *series) bool { return s.retired && !s.mirror })
 	}
 	slices.SortFunc(e.touched, func(a, b *series) int { return cmp.Compare(a.number, b.number) })
 	size := 0
@@ -47,6 +47,8 @@ func (e *Engine) Drain() Changes {
 		a.dirty = false
 		c.Alerts = append(c.Alerts, a.record)
 	}
+	c.Summaries = e.drainTold()
+	c.Waiting, c.Gathered = e.drainWaiting()
 	c.Cycle = e.checkpoint.cycle
 	c.States = e.slice(max(size, minSlice))
 	c.Header = e.encodeHeader()
@@ -79,7 +81,7 @@ func (e *Engine) slice(size int) []SeriesChange {
 	for ; e.checkpoint.next < len(e.series) && size > 0; e.checkpoint.next++ {
 		number := uint32(e.checkpoint.next)
 		var state []byte
-		if s := e.series[number]; s.retired {
+		if s := e.series[number]; s.retired && !s.mirror {
 			state = e.room.keep(e.stubs.byNumber[number].encode(e.room.next()))
 		} else {
 			s.catchUp()
@@ -115,6 +117,9 @@ type header struct {
 	Next       int               `json:"next"`
 	Generation int64             `json:"generation_seconds"`
 	Facts      json.RawMessage   `json:"facts,omitempty"`
+	Inbound    []inboundHeader   `json:"inbound,omitempty"`
+	Waiting    uint64            `json:"waiting,omitempty"`
+	Deferrals  []deferral        `json:"deferred,omitempty"`
 }
 
 type indicatorHeader struct {
@@ -129,6 +134,8 @@ type indicatorHeader struct {
 	Kept   *int64        `json:"kept,omitempty"`
 	Floor  *int64        `json:"floor,omitempty"`
 	Places []placeHeader `json:"places,omitempty"`
+	// Gathered is absent where no sums are gathered.
+	Gathered *gatheredHeader `json:"gathered,omitempty"`
 }
 
 type epochHeader struct {
@@ -160,8 +167,10 @@ func (e *Engine) encodeHeader() []byte {
 	for _, ix := range e.indicators {
 		ih := indicatorHeader{Name: ix.cfg.Name, Started: ix.started, Looked: ix.looked, Frozen: ix.frozenAt}
 		ih.encodePlaces(ix)
+		ih.Gathered = ix.gathering.header(ix.cfg.Name)
 		h.Indicators = append(h.Indicators, ih)
 	}
+	h.Inbound, h.Waiting, h.Deferrals = e.inboundHeaders(), e.waiting, e.deferrals
 	data, err := json.Marshal(h)
 	if err != nil {
 		panic(err) // a struct of plain fields

@@ -32,6 +32,9 @@ const (
 	flagArrivals = 4
 	flagTotals   = 16 // the latest readings of counters follow the arrivals
 	flagSilence  = 8  // there was a silence: its alerts precede the rest of the head
+	flagNews     = 32
+	flagGathered = 64  // with flagNamed: a gathered sum
+	flagMirror   = 128 // with flagNamed: what is known of a member of such sums
 )
 
 // errEncoding says that stored bytes are not what this program wrote.
@@ -41,6 +44,9 @@ var errEncoding = errors.New("monitor: stored state can't be read")
 func (s *series) encode(b []byte, whole bool) []byte {
 	at := len(b) + 1 // of the flags
 	b = append(b, encodingVersion, 0)
+	if s.mirror {
+		return s.encodeMirror(b, at, whole)
+	}
 	if s.arrivals != nil {
 		b[at] |= flagArrivals
 	}
@@ -51,6 +57,16 @@ func (s *series) encode(b []byte, whole bool) []byte {
 		b[at] |= flagNamed
 		b = appendString(b, s.name)
 		b = appendString(b, s.indicator.cfg.Name)
+		if s.isGathered() {
+			b[at] |= flagGathered
+		}
+	}
+	if s.news != nil {
+		b[at] |= flagNews
+		b = s.news.encode(b)
+	}
+	if s.isGathered() {
+		b = s.dates.encodeAll(b)
 	}
 	if s.silence != nil && s.silence.opened > 0 {
 		b[1] |= flagSilence
@@ -73,7 +89,7 @@ func (s *series) encode(b []byte, whole bool) []byte {
 	b = s.encodeLimits(b)
 	b = s.encodeArrivals(b, whole)
 	b = s.totals.encode(b)
-	if s.sum != nil {
+	if s.sum != nil && !s.isGathered() {
 		return binary.AppendUvarint(b, 0) // its cells follow from its members'
 	}
 	if whole {
@@ -90,7 +106,7 @@ func (s *series) encode(b []byte, whole bool) []byte {
 			b = s.encodeCell(b, &s.cells[i])
 			continue
 		}
-		b = s.encodeCell(b, &cell{slot: slot}) // trimmed since
+		b = s.encodeNoCell(b, slot) // trimmed since
 	}
 	return b
 }
@@ -103,7 +119,11 @@ func (s *series) encodeCell(b []byte, c *cell) []byte {
 	b = binary.AppendUvarint(b, uint64(c.saysEvents))
 	b = binary.AppendUvarint(b, uint64(c.saysExposure))
 	b = binary.AppendUvarint(b, uint64(c.items))
-	b = append(binary.AppendVarint(b, c.late), flag(c.revised))
+	bits := flag(c.revised)
+	if s.isGathered() {
+		bits |= cellHere | flag(c.provisional)<<1
+	}
+	b = append(binary.AppendVarint(b, c.late), bits)
 	ids := s.eventIDs.of(c.slot)
 	b = binary.AppendUvarint(b, uint64(len(ids)))
 	for _, id := range ids {
@@ -111,6 +131,22 @@ func (s *series) encodeCell(b []byte, c *cell) []byte {
 	}
 	return b
 }
+
+// encodeNoCell says that there is no cell for the slot any more.
+func (s *series) encodeNoCell(b []byte, slot int64) []byte {
+	b = s.encodeCell(b, &cell{slot: slot})
+	if s.isGathered() {
+		b[len(b)-2] &^= cellHere // before the number of ids
+	}
+	return b
+}
+
+// The bits that end a cell; the last two are of gathered sums alone.
+const (
+	cellRevised     = 1
+	cellProvisional = 2
+	cellHere        = 4
+)
 
 // encode writes the tail: its alerts first, the current one in front, then
 // the lit looks with the number of their alert, from 1, or 0.

@@ -81,6 +81,18 @@ type Engine struct {
 	solved     map[solvedFor]*solution
 	solutions  map[string]*solution
 
+	// gathered is the moment at which sums are being gathered, Never when none
+	// are.
+	gathered Instant
+	// inbounds, deferrals and told are of sums that are gathered from several
+	// partitions; waiting is the number of the last summary that waited.
+	inbounds  []*inbound
+	deferrals []deferral
+	told      []outbound
+	kept      []*Summary
+	released  []uint64
+	waiting   uint64
+
 	onLook func(View)
 	looks  []look // scratch
 	// passing says that nothing stores the engine, see Pass; formerly is what series
@@ -106,7 +118,7 @@ func New(p Partition) *Engine {
 	return &Engine{
 		partition: p, history: true, clock: Beginning, nextDue: Never,
 		byName: map[string]*series{}, stubs: newStubs(), alerts: map[string]*alert{},
-		ids:     newIDs(),
+		ids: newIDs(), gathered: Never,
 		account: Account{RefusedBy: map[Reason]int64{}},
 	}
 }
@@ -140,6 +152,8 @@ func (e *Engine) Apply(m *Message) {
 	case Rejected:
 		e.account.Rejected++
 		e.refuse(m, 0, "", m.Items[0].Reason, m.Items[0].Detail, m.Items[0].Raw)
+	case SummaryMessage:
+		e.takeSummary(m)
 	case Tick, Live:
 	}
 }
@@ -208,8 +222,9 @@ func (e *Engine) advance(to Instant) {
 			break
 		}
 		ix := e.dueFirst()
-		if len(ix.series) == 0 {
+		if e.idle(ix) {
 			ix.start(to)
+			e.began(ix)
 		} else {
 			e.lookAll(ix, ix.looked+1)
 		}
@@ -218,6 +233,7 @@ func (e *Engine) advance(to Instant) {
 	if e.clock == Beginning {
 		for _, ix := range e.indicators {
 			ix.start(to)
+			e.began(ix)
 		}
 		e.reschedule()
 		e.awaken(to)
@@ -241,7 +257,7 @@ func (e *Engine) reschedule() {
 func (e *Engine) NextDue() (Instant, bool) {
 	due := Never
 	for _, ix := range e.indicators {
-		if len(ix.series) > 0 {
+		if !e.idle(ix) || ix.gathering != nil && e.partition.Of > 1 {
 			due = min(due, ix.nextDue)
 		}
 	}

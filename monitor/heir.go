@@ -81,6 +81,7 @@ func (e *Engine) succeedTo(list []change, f *fact) []change {
 	into.dates = e.datesOf(ix, into.name)
 	e.inherit(f, into)
 	e.touch(into)
+	e.inform(into, into.heir.until, ix.looked-1, true, f.why(ix.cal.zone))
 	begin := into.birth
 	for _, s := range into.heir.sources {
 		begin = min(begin, s.birth)

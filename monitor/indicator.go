@@ -19,6 +19,10 @@ type indicator struct {
 	// shuffled says that some of them stand before others with smaller numbers.
 	shuffled bool
 	sums     []*series // those of series that are sums
+	// gathering is set where sums may have members in several partitions; of is
+	// the indicator that this one looks at such sums for, nil for all others.
+	gathering *gathering
+	of        *indicator
 	// places are the windows that are or were in force, in the order in which
 	// the state of every series has them.
 	places []config.Window

@@ -20,6 +20,7 @@ type Message struct {
 	Items   []Item
 	Act     Act
 	Setting Setting
+	Summary *Summary
 }
 
 // Kind is the kind of a message.
@@ -38,6 +39,8 @@ const (
 	Tick
 	// Live is a tick that ends history time for good.
 	Live
+	// SummaryMessage carries what another partition has to tell to gathered sums.
+	SummaryMessage
 	// Rejected is a message that as a whole could not be understood; its one
 	// item is the refusal.
 	Rejected
@@ -116,6 +119,7 @@ const (
 	BadSetting      Reason = "bad_setting"      // a set-up that doesn't validate
 	BadSubject      Reason = "bad_subject"      // a subject that means nothing here
 	BadHeader       Reason = "bad_header"       // a header that can't be understood
+	BadSummary      Reason = "bad_summary"      // a summary of a partition that can't be understood, or is not for this one
 )
 
 // Reasons given by the engine.
@@ -140,6 +144,7 @@ const (
 	NeedsRebuild    Reason = "needs_rebuild"     // a set-up that a running store can't take
 	SeriesClosed    Reason = "series_closed"     // a count of a time for which its series was closed
 	NeedsCounted    Reason = "needs_counted"     // totals of events, where silence is zero
+	SummaryGap      Reason = "summary_gap"       // a summary of a partition before this one never came
 )
 
 // Act is something a person did.

@@ -116,13 +116,16 @@ func (e *Engine) draw(s *series, ep *epoch, boundary int64) {
 		e.setLimits(s, ep, boundary, a.PerYear(), false)
 		return
 	}
-	ix := s.indicator
+	kin := s.indicator.kin()
+	ix := kin[0]
 	start := ix.epochStart(ep, boundary)
 	if ix.drawn.epoch != start {
 		ix.drawn.epoch, ix.drawn.series = start, 0
-		for _, other := range ix.series {
-			if n := len(other.limits); n > 0 && slices.ContainsFunc(other.limits, func(l limits) bool { return l.reserved && l.from >= start }) {
-				ix.drawn.series++
+		for _, k := range kin {
+			for _, other := range k.series {
+				if n := len(other.limits); n > 0 && slices.ContainsFunc(other.limits, func(l limits) bool { return l.reserved && l.from >= start }) {
+					ix.drawn.series++
+				}
 			}
 		}
 	}
@@ -154,7 +157,9 @@ func (e *Engine) setLimits(s *series, ep *epoch, boundary int64, perYear float64
 	default:
 		s.limits = append(s.limits, limits{boundary, reserved, next})
 	}
-	s.indicator.total = total{}
+	for _, k := range s.indicator.kin() {
+		k.total = total{}
+	}
 	e.touch(s)
 	return true
 }
@@ -185,9 +190,11 @@ func (ix *indicator) rebased(s *series, ep *epoch, boundary int64) bool {
 // born counts the series that began before the boundary.
 func (ix *indicator) born(boundary int64) int {
 	n := 0
-	for _, s := range ix.series {
-		if s.birth < boundary {
-			n++
+	for _, kin := range ix.kin() {
+		for _, s := range kin.series {
+			if s.birth < boundary {
+				n++
+			}
 		}
 	}
 	return n
@@ -222,7 +229,7 @@ func (e *Engine) allowanceOf(s *series, cfg *config.Indicator, boundary int64) *
 	if a.PerIndicator {
 		r.For = "indicator"
 	}
-	if e.partition.Of > 1 { // the others are not seen from here
+	if e.partition.Of > 1 || s.indicator.of != nil && !a.PerIndicator { // the others are not seen from here
 		return r
 	}
 	t := s.indicator.totalAt(boundary)
@@ -240,10 +247,12 @@ func (ix *indicator) totalAt(boundary int64) total {
 		return ix.total
 	}
 	t := total{boundary: boundary}
-	for _, s := range ix.ordered() {
-		if len(s.limits) > 0 && s.limits[0].from <= boundary {
-			t.series++
-			t.all += s.limitsOf(boundary).here
+	for _, k := range ix.kin() {
+		for _, s := range k.ordered() {
+			if len(s.limits) > 0 && s.limits[0].from <= boundary {
+				t.series++
+				t.all += s.limitsOf(boundary).here
+			}
 		}
 	}
 	ix.total = t

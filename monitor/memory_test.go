@@ -21,6 +21,10 @@ type Memory struct {
 	Steps    []life.Notice
 	Refused  []Refusal
 	Archive  map[string]ArchivedSlot
+	// Told are the summaries for other partitions, in order, and waiting those
+	// that wait here.
+	Told    []OutSummary
+	waiting map[uint64][]byte
 }
 
 type patchAt struct {
@@ -32,7 +36,7 @@ type patchAt struct {
 func NewMemory() *Memory {
 	return &Memory{
 		states: map[uint32][]byte{}, ids: map[int64][]IDChange{},
-		Records: map[string]life.Record{}, Archive: map[string]ArchivedSlot{},
+		Records: map[string]life.Record{}, Archive: map[string]ArchivedSlot{}, waiting: map[uint64][]byte{},
 	}
 }
 
@@ -70,6 +74,16 @@ func (m *Memory) Commit(c Changes) {
 	m.Steps = append(m.Steps, c.Steps...)
 	m.Refused = append(m.Refused, c.Refused...)
 	m.settings = append(m.settings, c.Settings...)
+	m.Told = append(m.Told, c.Summaries...)
+	for _, w := range c.Waiting {
+		m.waiting[w.Number] = w.Data
+	}
+	for _, n := range c.Gathered {
+		if m.waiting[n] == nil {
+			panic("a summary is gathered that did not wait")
+		}
+		delete(m.waiting, n)
+	}
 }
 
 // Reopen returns the engine that goes on from what was kept.
@@ -85,6 +99,9 @@ func (m *Memory) Reopen(p Partition) (*Engine, error) {
 	}
 	for _, g := range slices.Sorted(maps.Keys(m.ids)) {
 		snap.IDs = append(snap.IDs, m.ids[g]...)
+	}
+	for _, n := range slices.Sorted(maps.Keys(m.waiting)) {
+		snap.Waiting = append(snap.Waiting, WaitingSummary{n, m.waiting[n]})
 	}
 	return Restore(p, &snap, func(id string) (life.Record, error) {
 		r, ok := m.Records[id]

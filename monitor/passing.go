@@ -42,6 +42,7 @@ func (e *Engine) Findings() Findings {
 		x.touched = false
 	}
 	e.stubs.touched = nil
+	e.told, e.kept, e.released = nil, nil, nil
 	return f
 }
 

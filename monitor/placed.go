@@ -113,6 +113,9 @@ func (ix *indicator) free(w *config.Window, taken []int) int {
 // speaksOf reports whether a version of the stanza or an alert still needs to
 // know which window has the place.
 func (ix *indicator) speaksOf(place int) bool {
+	if g := ix.gathering; g != nil && g.sums != nil && g.sums.speaksOf(place) {
+		return true
+	}
 	for i := range ix.epochs {
 		if ix.epochs[i].placed(place) != nil {
 			return true
@@ -139,6 +142,11 @@ func (e *Engine) occupy(ix *indicator, windows []placed) {
 		}
 		ix.places[p.place] = *p.Window
 	}
+	e.vacate(ix, windows)
+}
+
+// vacate takes the say of windows that are in force no longer.
+func (e *Engine) vacate(ix *indicator, windows []placed) {
 	if len(ix.epochs) == 0 {
 		return
 	}

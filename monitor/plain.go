@@ -31,5 +31,6 @@ func (e *Engine) plainRow(m *Message, o *Observation) bool {
 	e.heard(s)
 	e.account.Counted++
 	e.touchSlot(s, slot)
+	e.inform(s, slot, slot, false, "")
 	return true
 }

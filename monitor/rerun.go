@@ -235,6 +235,22 @@ func (e *Engine) settleAll() {
 	e.pending = e.pending[:0]
 }
 
+// settleAllOf is settleAll for the gathered sums of an indicator.
+func (e *Engine) settleAllOf(up *indicator) {
+	all := e.pending
+	var rest []*alert
+	e.pending = nil
+	for _, a := range all {
+		if a.series.indicator == up {
+			e.pending = append(e.pending, a)
+		} else {
+			rest = append(rest, a)
+		}
+	}
+	e.settleAll()
+	e.pending = rest
+}
+
 // settle takes the step that corrects an alert's evidence, if any of what the
 // record shows has changed.
 func (e *Engine) settle(a *alert) {

@@ -32,6 +32,9 @@ func Restore(p Partition, snap *Snapshot, record func(id string) (life.Record, e
 		}
 	}
 	e.relink()
+	if err := e.restoreInbounds(&h, snap.Waiting); err != nil {
+		return nil, err
+	}
 	for i := range snap.IDs {
 		if err := e.restoreID(&snap.IDs[i]); err != nil {
 			return nil, fmt.Errorf("monitor: restoring id %d: %w", i, err)
@@ -74,12 +77,9 @@ func (e *Engine) restoreHeader(h *header, settings []SettingChange) error {
 		if err != nil {
 			return err
 		}
-		if ih.Started {
-			ix.started, ix.frozenAt = true, ih.Frozen
-			if ih.Kept != nil && ih.Floor != nil {
-				ix.kept, ix.floor = *ih.Kept, *ih.Floor
-			}
-			ix.pass(ih.Looked)
+		ix.resume(&ih)
+		if err := e.restoreGathering(ix, ih.Gathered, setups); err != nil {
+			return err
 		}
 		e.indicators = append(e.indicators, ix)
 		horizon = max(horizon, ix.cfg.Horizon)
@@ -117,6 +117,18 @@ func restoreIndicator(index int, ih indicatorHeader, setups map[int]*config.Setu
 	return ix, ih.restorePlaces(ix)
 }
 
+// resume lets the indicator stand where it stood.
+func (ix *indicator) resume(ih *indicatorHeader) {
+	if !ih.Started {
+		return
+	}
+	ix.started, ix.frozenAt = true, ih.Frozen
+	if ih.Kept != nil && ih.Floor != nil {
+		ix.kept, ix.floor = *ih.Kept, *ih.Floor
+	}
+	ix.pass(ih.Looked)
+}
+
 func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(string) (life.Record, error)) error {
 	s := &series{number: number}
 	layers := image.Patches
@@ -138,6 +150,8 @@ func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(st
 		}
 	}
 	switch {
+	case s.mirror:
+		return e.restoreMirror(s)
 	case s.name == "":
 		return fmt.Errorf("it was never named: %w", errEncoding)
 	case s.indicator == nil:
@@ -156,7 +170,9 @@ func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(st
 		}
 	}
 	s.makePlaces()
-	s.dates = e.datesOf(s.indicator, s.name)
+	if !s.isGathered() || s.unsummed { // else they are stored: some acts may wait for it
+		s.dates = e.datesOf(s.indicator, s.name)
+	}
 	s.derive()
 	s.cells = slices.DeleteFunc(s.cells, func(c cell) bool { return c.slot < s.trimmed })
 	s.eventIDs.forget(s.trimmed)
@@ -214,14 +230,20 @@ func (e *Engine) overlay(s *series, data []byte) error {
 	}
 	flags := r.byte()
 	switch {
+	case flags&flagMirror != 0:
+		return e.overlayMirror(s, r, version, flags)
 	case flags&flagRetired != 0:
 		return fmt.Errorf("%w: more follows after the series had ended", errEncoding)
 	case flags&flagNamed != 0:
 		*s = series{number: s.number, name: r.string()}
-		owner := r.string()
-		if i := slices.IndexFunc(e.indicators, func(ix *indicator) bool { return ix.cfg.Name == owner }); i >= 0 {
-			s.indicator = e.indicators[i] // else it must be a stub by now
-		}
+		s.indicator = e.indicatorNamed(r.string()) // nil: it must be a stub by now
+		e.overlayGathered(s, flags)
+	}
+	if flags&flagNews != 0 {
+		r.news(s)
+	}
+	if s.isGathered() && !s.unsummed {
+		s.dates = r.allDates()
 	}
 	if s.silence = nil; flags&flagSilence != 0 {
 		*s.tail(silence) = r.tail(s, silence)
@@ -251,9 +273,11 @@ func (e *Engine) overlay(s *series, data []byte) error {
 		s.totals = r.totals()
 	}
 	for range r.length() {
-		c := r.cell(version)
-		*s.at(c.slot) = c
-		s.eventIDs.set(c.slot, r.ids())
+		c, here := r.cell(s, version)
+		if ids := r.ids(); here {
+			*s.at(c.slot) = c
+			s.eventIDs.set(c.slot, ids)
+		}
 	}
 	if len(r.b) > 0 {
 		r.fail("bytes are left over")
@@ -281,15 +305,24 @@ func (r *reader) references(s *series) {
 	}
 }
 
-func (r *reader) cell(version byte) cell {
-	c := cell{
+// cell reads a cell, and whether a gathered sum has it: where no member is in
+// force it has none, and loses the one that it had.
+func (r *reader) cell(s *series, version byte) (c cell, here bool) {
+	c = cell{
 		slot: r.int(), events: r.int(), exposure: r.quantity(),
 		saysEvents: uint32(r.uint()), saysExposure: uint32(r.uint()), items: uint32(r.uint()), late: r.int(),
 	}
 	if version > withoutSignOff {
-		c.revised = r.flag()
+		bits := r.byte()
+		c.revised, c.provisional = bits&cellRevised != 0, bits&cellProvisional != 0
+		if s.isGathered() && bits&cellHere == 0 {
+			if i, ok := s.cells.find(c.slot); ok {
+				s.cells = slices.Delete(s.cells, i, i+1)
+			}
+			return c, false
+		}
 	}
-	return c
+	return c, true
 }
 
 func (r *reader) ids() (list []string) {

@@ -57,8 +57,9 @@ func (e *Engine) retire(ix *indicator, now Instant) {
 
 // isOver reports whether the series retires: nothing was heard of it for so long,
 // no window can see anything of it, and nobody has to do with an alert of it.
+// Members of gathered sums stay: other partitions know of them.
 func (ix *indicator) isOver(s *series, now Instant) bool {
-	if n := len(s.cells); n > 0 && s.cells[n-1].slot >= ix.kept || s.sum != nil || s.heir != nil || len(s.marked) > 0 || !s.isAtRest() {
+	if n := len(s.cells); n > 0 && s.cells[n-1].slot >= ix.kept || s.sum != nil || s.news != nil || s.heir != nil || len(s.marked) > 0 || !s.isAtRest() {
 		return false
 	}
 	heard := s.heardAt()

@@ -5,9 +5,21 @@ import "tailbell/monitor/life"
 // lookAll makes the looks of the indicator that fall due at the boundary.
 func (e *Engine) lookAll(ix *indicator, boundary int64) {
 	due := ix.nextDue
+	e.bring(ix, boundary)
 	ix.pass(boundary)
+	e.lookEach(ix, boundary, due)
+	switch {
+	case e.alone(ix):
+		e.lookGathered(ix.gathering.sums, boundary)
+	case ix.gathering != nil && ix.gathering.inbound != nil:
+		e.gatherReady(ix.gathering)
+	}
+}
+
+// lookEach makes the looks at each series of the indicator.
+func (e *Engine) lookEach(ix *indicator, boundary int64, due Instant) {
 	ep := ix.epochAt(boundary)
-	ix.fillSums(boundary)
+	e.fillSums(ix, boundary)
 	e.refresh(ix, ep, boundary)
 	e.allot(ix, ep, boundary)
 	e.beginVisits(ix, ep, boundary)

@@ -38,6 +38,13 @@ type series struct {
 	// member of.
 	sum  *rollup
 	sums []*series
+	// news is what the gathered sums that it is a member of are to be told, nil
+	// where it is in none; mirror says that it is no series, but what is known of
+	// one that a gathered sum sums.
+	news   *news
+	mirror bool
+	// unsummed says of a gathered sum that its cells were not stored.
+	unsummed bool
 	// heir is set where it took the place of others, and heirs are those that
 	// took its own.
 	heir  *inheritance

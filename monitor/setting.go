@@ -134,6 +134,7 @@ func (e *Engine) install(next *config.Setup, version int, from map[string]int64)
 		}
 		if ix == nil {
 			ix = newIndicator(i, cfg)
+			e.prepare(ix, lifeOf(next))
 		}
 		windows, _ := ix.arrange(cfg, boundary) // there is room: see roomFor
 		e.occupy(ix, windows)
@@ -144,11 +145,13 @@ func (e *Engine) install(next *config.Setup, version int, from map[string]int64)
 		}
 		ix.epochs = append(ix.epochs, epoch{from: boundary, cfg: cfg, version: version, digest: next.Digest, windows: windows})
 		ix.measure()
+		e.follow(ix)
 		switch {
 		case ix.started: // settle and horizon may be others
 			ix.pass(ix.looked)
 		case e.clock != Beginning:
 			ix.start(e.clock)
+			e.began(ix)
 		}
 		e.keepArrivals(ix, before)
 		e.indicators = append(e.indicators, ix)

@@ -49,7 +49,7 @@ func (s *series) exposureFrom() config.Exposure {
 func (e *Engine) newSums(ix *indicator, name string) []string {
 	var names []string
 	for _, m := range ix.cfg.Sums {
-		if sum, ok := m.NameFor(name); ok && e.byName[sum] == nil && !slices.Contains(names, sum) {
+		if sum, ok := m.NameFor(name); ok && !m.Gathered(e.partition.KeyParts) && e.byName[sum] == nil && !slices.Contains(names, sum) {
 			names = append(names, sum)
 		}
 	}
@@ -63,6 +63,10 @@ func (e *Engine) link(s *series) {
 	for rule, m := range ix.cfg.Sums {
 		name, ok := m.NameFor(s.name)
 		if !ok {
+			continue
+		}
+		if m.Gathered(e.partition.KeyParts) {
+			s.telling()
 			continue
 		}
 		sum := e.byName[name]
@@ -94,6 +98,7 @@ func (e *Engine) relink() {
 		}
 	}
 	e.relinkHeirs()
+	e.relinkAllGathered()
 	for _, ix := range e.indicators {
 		slices.SortFunc(ix.sums, func(a, b *series) int { return cmp.Compare(a.number, b.number) })
 		for _, sum := range ix.sums {
@@ -123,7 +128,7 @@ func (ix *indicator) resum(sum *series, from, to int64) {
 		default:
 			continue
 		}
-		sum.changed(slot)
+		sum.resumed(slot)
 	}
 }
 
@@ -164,7 +169,7 @@ func (ix *indicator) sumOf(sum *series, slot int64) (c cell, counted bool) {
 }
 
 // fillSums sums the slot before the boundary, which is about to be looked at.
-func (ix *indicator) fillSums(boundary int64) {
+func (e *Engine) fillSums(ix *indicator, boundary int64) {
 	for _, sum := range ix.sums {
 		ix.resum(sum, boundary-1, boundary-1)
 	}
@@ -174,6 +179,7 @@ func (ix *indicator) fillSums(boundary int64) {
 	for _, s := range ix.series {
 		if s.inherited(boundary - 1) {
 			ix.resum(s, boundary-1, boundary-1)
+			e.inform(s, boundary-1, boundary-1, false, "")
 		}
 	}
 }
@@ -189,6 +195,13 @@ func (e *Engine) sumChanges(changes []change) []change {
 		from, to := c.from, ix.carriedTo(c)
 		if c.reborn {
 			from, to = c.series.birth, max(to, min(c.birth, ix.looked)-1)
+		}
+		if c.series.news != nil {
+			last := c.to
+			if c.reborn {
+				last = max(last, min(c.birth, ix.looked)-1)
+			}
+			e.inform(c.series, from, last, c.reborn, "")
 		}
 		for _, sum := range c.series.sums {
 			list = e.changeSum(list, sum, from, to)
@@ -210,6 +223,10 @@ func (e *Engine) changeSum(list []change, sum *series, from, to int64) []change 
 	}
 	if birth < sum.birth {
 		sum.birth, c.reborn = birth, true
+		e.touch(sum)
+	}
+	e.inform(sum, from, to, c.reborn, "")
+	if sum.isGathered() {
 		e.touch(sum)
 	}
 	ix.resum(sum, from, to)

@@ -84,6 +84,8 @@ func sumsOnce(t *testing.T, random *rand.Rand, text, kind string) {
 			messages = append(messages, monitor.Message{Items: []monitor.Item{{Observation: o}}})
 		}
 	}
+	// What wards told since the last boundary reaches the sum of all at the next.
+	messages = append(messages, monitor.Message{Kind: monitor.Tick, HasTime: true, Time: monitor.InstantOf(begin.AddDate(0, 0, 33))})
 	for i := range messages {
 		messages[i].Position = uint64(i + 1)
 	}

@@ -131,13 +131,9 @@ func (e *Engine) awake(until, to Instant) {
 		}
 		a, moment := e.wakes[0].alert, e.wakes[0].at
 		queue.Pop(&e.wakes)
-		if a.record.Shelf != nil {
-			e.step(a, life.Step{Kind: life.StepUnshelved, At: moment.Time(), Why: TimeIsOver})
-			continue
+		if ix := a.series.indicator; e.behind(ix, moment) {
+			continue // it happens when they have come to it
 		}
-		cfg := a.series.indicator.cfg
-		number := int64(moment-waitsOf(&a.record).since) / cfg.Remind.Microseconds()
-		e.steps = append(e.steps, a.record.Reminder(number, moment.Time(), cfg.RemindTo))
-		e.rewake(a, to)
+		e.wakeUp(a, moment, to)
 	}
 }

@@ -34,7 +34,7 @@ func daemonsDay(t *testing.T, g *bustest.Guarded) (err error) {
 		return err
 	}
 	defer func() { err = errors.Join(err, b.Close()) }()
-	for _, kind := range []bus.Kind{bus.Setting, bus.Tick, bus.Act, bus.Observation} {
+	for _, kind := range []bus.Kind{bus.Setting, bus.Tick, bus.Act, bus.Observation, bus.Summary} {
 		if _, err := b.Publish(ctx, bus.Outgoing{Kind: kind, Data: []byte(kind.String())}); err != nil {
 			return err
 		}
@@ -56,7 +56,7 @@ func daemonsDay(t *testing.T, g *bustest.Guarded) (err error) {
 	if err != nil {
 		return err
 	}
-	for got := 0; got < 4; {
+	for got := 0; got < 5; {
 		msgs, err := s.Next(ctx, nil, 10, 1<<20)
 		if err != nil {
 			return errors.Join(err, s.Close())
@@ -251,7 +251,7 @@ func TestAccountsAreRefusedMore(t *testing.T) {
 		api("STREAM.DELETE", "in"), api("STREAM.UPDATE", "in"), api("STREAM.MSG.DELETE", "in"), api("STREAM.SNAPSHOT", "in"), api("STREAM.RESTORE", "in"),
 		api("STREAM.DELETE", "alerts"), api("STREAM.UPDATE", "alerts"), api("STREAM.PURGE", "alerts"), api("CONSUMER.CREATE", "alerts"),
 		[]string{"$JS.API.CONSUMER.CREATE.quillmere-alerts.x", "$JS.API.CONSUMER.CREATE.ferrybill-in.x", "$JS.API.CONSUMER.DURABLE.CREATE.quillmere-in.x", "$JS.API.CONSUMER.DELETE.quillmere-alerts.reader"})
-	notDaemon := slices.Concat([]string{"quillmere.alert.0.upper.fall", "quillmere.alert.0.owner", "$KV.quillmere-claims.p.0", "$JS.API.STREAM.MSG.GET.quillmere-alerts", "$JS.API.DIRECT.GET.KV_quillmere-claims", "$O.quillmere-copies.M.x", "$JS.API.STREAM.PURGE.OBJ_quillmere-copies"}, api("STREAM.PURGE", "in"), api("STREAM.CREATE", "in"), api("STREAM.CREATE", "alerts"),
+	notDaemon := slices.Concat([]string{"quillmere.alert.0.upper.fall", "quillmere.alert.0.owner", "quillmere.in.0.sum", "$KV.quillmere-claims.p.0", "$JS.API.STREAM.MSG.GET.quillmere-alerts", "$JS.API.DIRECT.GET.KV_quillmere-claims", "$O.quillmere-copies.M.x", "$JS.API.STREAM.PURGE.OBJ_quillmere-copies"}, api("STREAM.PURGE", "in"), api("STREAM.CREATE", "in"), api("STREAM.CREATE", "alerts"),
 		[]string{"$JS.API.CONSUMER.CREATE.quillmere-in.x", "$JS.API.CONSUMER.CREATE.quillmere-in.x.quillmere.in.0.*", "$JS.API.CONSUMER.MSG.NEXT.quillmere-in.x", "$JS.API.CONSUMER.DELETE.quillmere-in.x"})
 	notCommand := slices.Concat([]string{"quillmere.in.0.set", "quillmere.in.0.tick", "quillmere.in.0.act", "quillmere.control.status"},
 		api("STREAM.INFO", "in"), api("STREAM.INFO", "alerts"), api("STREAM.MSG.GET", "in"))

@@ -99,6 +99,7 @@ func visitorPermissions(n names) *server.Permissions {
 	return &server.Permissions{
 		Publish: &server.SubjectPermission{Deny: []string{
 			n.alertAll(),
+			n.summaries(),    // only daemons tell each other
 			n.inbox() + ".>", // answers to the daemon come from the server
 			"$JS.API.STREAM.CREATE.>",
 			"$JS.API.STREAM.UPDATE.>",

@@ -16,6 +16,7 @@ const (
 	Act                     // something that a person did
 	Setting                 // a new set-up
 	Tick                    // nothing but its time
+	Summary                 // what another partition has to tell to sums over several
 )
 
 // String returns the kind's token in a subject.
@@ -29,6 +30,8 @@ func (k Kind) String() string {
 		return "set"
 	case Tick:
 		return "tick"
+	case Summary:
+		return "sum"
 	}
 	return "unknown"
 }
@@ -50,6 +53,9 @@ func (n names) in(partition int, kind Kind) string {
 func (n names) inAll(partition int) string {
 	return n.deployment + ".in." + strconv.Itoa(partition) + ".*"
 }
+
+// summaries matches all that partitions tell each other.
+func (n names) summaries() string { return n.deployment + ".in.*." + Summary.String() }
 
 func (n names) alert(partition int, direction, indicator string) string {
 	return n.deployment + ".alert." + strconv.Itoa(partition) + "." +

@@ -3,8 +3,9 @@
 //
 // The model:
 //   - A Raw is one message as the bus stored it. The last token of its subject
-//     says what it holds: obs (observations), act, set (a set-up as TOML text)
-//     or tick (nothing but its time).
+//     says what it holds: obs (observations), act, set (a set-up as TOML text),
+//     tick (nothing but its time) or sum (what another partition has to tell to
+//     sums over several).
 //   - Observations come as one JSON object, a JSON array of them, or one a
 //     line; bare, or as the data of a CloudEvent 1.0 in structured or binary
 //     mode.
@@ -40,7 +41,7 @@ type Raw struct {
 	Position uint64
 	// Stored is when the bus stored it.
 	Stored time.Time
-	// Subject ends in obs, act, set or tick.
+	// Subject ends in obs, act, set, tick or sum.
 	Subject string
 	Header  map[string][]string
 	// Data is handed over to the decoder.
@@ -118,6 +119,9 @@ func (d *Decoder) decode(r Raw) monitor.Message {
 		return rejected(m, refuse(monitor.BadHeader,
 			"the header %s ends history time and belongs on a tick, not on %q", LiveHeader, kind), r.Data)
 	}
+	if kind == "sum" {
+		return summary(m, r)
+	}
 	if len(r.Data) > d.limits.MessageBytes {
 		return rejected(m, refuse(monitor.TooLarge,
 			"the message has %d bytes, the limit is %d; send it in parts", len(r.Data), d.limits.MessageBytes), r.Data)
@@ -133,7 +137,7 @@ func (d *Decoder) decode(r Raw) monitor.Message {
 		return tick(m, r, live)
 	}
 	return rejected(m, refuse(monitor.BadSubject,
-		"the subject ends in %q; it must end in obs, act, set or tick", clip(kind)), r.Data)
+		"the subject ends in %q; it must end in obs, act, set, tick or sum", clip(kind)), r.Data)
 }
 
 func (d *Decoder) observations(m monitor.Message, r Raw) monitor.Message {
@@ -194,6 +198,15 @@ func tick(m monitor.Message, r Raw, live bool) monitor.Message {
 	if live {
 		m.Kind = monitor.Live
 	}
+	return m
+}
+
+func summary(m monitor.Message, r Raw) monitor.Message {
+	s, err := monitor.DecodeSummary(r.Data)
+	if err != nil {
+		return rejected(m, refuse(monitor.BadSummary, "%v; only the daemons of the deployment publish summaries", err), r.Data)
+	}
+	m.Kind, m.Summary = monitor.SummaryMessage, s
 	return m
 }
 

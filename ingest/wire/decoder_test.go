@@ -178,6 +178,8 @@ func TestSubjectsAndHeaders(t *testing.T) {
 		{"x.in.3.obs", el(1), []string{"Tailbell-Time", "2026-03-02T00:00:00Z", "TAILBELL-TIME", "2026-03-02T00:00:00Z"}, "rejected bad_header"},
 		{"x.in.3.obs", el(1), []string{"Nats-Msg-Id", "17"}, "obs ok1"},
 		{"x.in.3.other", el(1), nil, "rejected bad_subject"},
+		{"x.in.3.sum", el(1), nil, "rejected bad_summary"},
+		{"x.in.3.sum", "", nil, "rejected bad_summary"},
 		{"", el(1), nil, "rejected bad_subject"},
 		{"obs", el(1), nil, "obs ok1"},
 		{"x.in.3.set", "name = ", nil, "rejected bad_setting"},
@@ -223,7 +225,7 @@ func FuzzDecode(f *testing.F) {
 			}
 			return
 		case monitor.Observations:
-		case monitor.ActMessage, monitor.SettingMessage, monitor.Tick, monitor.Live:
+		case monitor.ActMessage, monitor.SettingMessage, monitor.Tick, monitor.Live, monitor.SummaryMessage:
 			t.Fatalf("kind %d", m.Kind)
 		}
 		rest := data

@@ -39,6 +39,8 @@ type Report struct {
 	Outlets      uint64 `json:"outlets"`
 	Settings     uint64 `json:"settings"`
 	Marks        uint64 `json:"marks"`
+	Told         uint64 `json:"told"`    // summaries that other partitions are to be told
+	Waiting      uint64 `json:"waiting"` // those of others that wait here
 
 	// Faults are what is wrong, the first ones of them.
 	Faults []string `json:"faults,omitempty"`
@@ -143,7 +145,7 @@ func (c *checker) contents(ctx context.Context, tx *bolt.Tx) error {
 	c.report.JournalFirst = c.h.JournalFirst
 	for _, part := range []func() error{
 		c.buckets, c.header, c.series, c.ids, c.archive, c.alerts, c.openAlerts,
-		c.refused, c.refusedRaw, c.outbox, c.settings, c.marks,
+		c.refused, c.refusedRaw, c.outbox, c.settings, c.marks, c.summaries,
 	} {
 		if err := ctx.Err(); err != nil {
 			return err

@@ -11,7 +11,7 @@ import (
 // that the head has nothing but its keys.
 func (c *checker) buckets() error {
 	known := map[string]bool{}
-	for _, s := range allShelves() {
+	for _, s := range append(allShelves(), toldShelf, waitingShelf) {
 		known[s.name] = true
 	}
 	cursor := c.tx.Cursor()

@@ -56,6 +56,7 @@ func (s *Store) write(tx *bolt.Tx, h *head, changes *monitor.Changes) error {
 		func() error { return writeAlerts(tx, h, changes.Alerts) },
 		func() error { return writeSteps(tx, h, changes.Steps) },
 		func() error { return writeSettings(tx, h, changes.Settings) },
+		func() error { return writeSummaries(tx, h, changes) },
 	}
 	for _, step := range steps {
 		if err := step(); err != nil {
@@ -83,5 +84,5 @@ func takePosition(h *head, changes *monitor.Changes, mark Mark) error {
 func empty(c *monitor.Changes) bool {
 	return c.Header == nil && len(c.Series) == 0 && len(c.States) == 0 && len(c.IDs) == 0 &&
 		len(c.DroppedGenerations) == 0 && len(c.Archived) == 0 && len(c.Refused) == 0 && len(c.Alerts) == 0 &&
-		len(c.Steps) == 0 && len(c.Settings) == 0
+		len(c.Steps) == 0 && len(c.Settings) == 0 && len(c.Summaries) == 0 && len(c.Waiting) == 0 && len(c.Gathered) == 0
 }

@@ -232,6 +232,8 @@ func TestCheckFindsContradictions(t *testing.T) {
 		"a lost generation":           drop(generationsShelf, true),
 		"a lost archive":              drop(archiveShelf, true),
 		"a lost header":               drop(headerShelf, true),
+		"a lost summary to tell":      drop(toldShelf, false),
+		"a lost summary that waits":   drop(waitingShelf, true),
 		"an outlet too far":           editHead(func(h *head) { h.Outbox-- }),
 		"another position":            editHead(func(h *head) { h.Position += 3 }),
 		"a series too many":           editHead(func(h *head) { h.Series++ }),

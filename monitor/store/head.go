@@ -52,6 +52,11 @@ type head struct {
 	Outlets     int    `json:"outlets"`
 	Settings    int    `json:"settings"`
 	Marks       int    `json:"marks"`
+	// Told is the number of the last summary for another partition, ToldThrough
+	// that up to which all were told; Waiting counts the summaries that wait.
+	Told        uint64 `json:"told,omitempty"`
+	ToldThrough uint64 `json:"told_through,omitempty"`
+	Waiting     uint64 `json:"waiting,omitempty"`
 }
 
 func newHead() head {

@@ -33,6 +33,9 @@ func (s *Store) Snapshot() (monitor.Snapshot, error) {
 		if snap.Settings, err = readSettings(tx); err != nil {
 			return err
 		}
+		if snap.Waiting, err = readWaiting(tx, &h); err != nil {
+			return err
+		}
 		if len(snap.Settings) != h.Settings {
 			return settingsShelf.damaged(nil, fmt.Sprintf("%d set-ups instead of %d", len(snap.Settings), h.Settings))
 		}

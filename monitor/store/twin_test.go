@@ -37,6 +37,9 @@ type twin struct {
 	steps    []life.Notice
 	archived []monitor.ArchivedSlot
 	outlets  map[string]uint64
+	told     []monitor.OutSummary // what others are yet to be told
+	waiting  []monitor.WaitingSummary
+	waited   uint64
 }
 
 func (w *twin) clone() *twin {
@@ -48,6 +51,7 @@ func (w *twin) clone() *twin {
 	c.ids, c.settings, c.alerts = slices.Clone(w.ids), slices.Clone(w.settings), slices.Clone(w.alerts)
 	c.refused, c.steps, c.archived = slices.Clone(w.refused), slices.Clone(w.steps), slices.Clone(w.archived)
 	c.outlets = maps.Clone(w.outlets)
+	c.told, c.waiting = slices.Clone(w.told), slices.Clone(w.waiting)
 	return &c
 }
 
@@ -65,11 +69,30 @@ func (w *twin) batch(t *rapid.T) monitor.Changes {
 	w.register(t, &c)
 	w.refuse(t, &c)
 	w.ring(t, &c)
+	w.summarise(t, &c)
 	for rapid.IntRange(0, 9).Draw(t, "setting") == 0 { // perhaps several in one commit
 		setting := monitor.SettingChange{Version: len(w.settings) + 1, Digest: fmt.Sprint(w.position), Text: []byte("x = 1")}
 		w.settings, c.Settings = append(w.settings, setting), append(c.Settings, setting)
 	}
 	return c
+}
+
+// summarise adds summaries for other partitions, and lets those of others come
+// and go.
+func (w *twin) summarise(t *rapid.T, c *monitor.Changes) {
+	for range rapid.IntRange(0, 2).Draw(t, "told") {
+		out := monitor.OutSummary{Partition: rapid.IntRange(0, 9).Draw(t, "home"), Data: []byte(fmt.Sprint("summary of ", w.position))}
+		w.told, c.Summaries = append(w.told, out), append(c.Summaries, out)
+	}
+	for len(w.waiting) > 0 && rapid.Bool().Draw(t, "gathered") {
+		c.Gathered = append(c.Gathered, w.waiting[0].Number)
+		w.waiting = w.waiting[1:]
+	}
+	for range rapid.IntRange(0, 2).Draw(t, "waiting") {
+		w.waited++
+		row := monitor.WaitingSummary{Number: w.waited, Data: []byte(fmt.Sprint("waits since ", w.position))}
+		w.waiting, c.Waiting = append(w.waiting, row), append(c.Waiting, row)
+	}
 }
 
 func (w *twin) touch(t *rapid.T, c *monitor.Changes) {
@@ -221,6 +244,7 @@ func (w *twin) compare(s *Store) error {
 		differ("ids", snap.IDs, w.ids),
 		differ("settings", snap.Settings, w.settings),
 		differ("open alerts", snap.Alerts, open),
+		differ("waiting", snap.Waiting, w.waiting),
 		w.compareRows(s),
 	)
 }
@@ -272,7 +296,15 @@ func (w *twin) compareRows(s *Store) error {
 		}
 		errs = append(errs, differ("outbox of "+name, notices, w.steps[delivered:]))
 	}
-	return errors.Join(errs...)
+	told, err := s.Told(0, 1<<30)
+	if err != nil {
+		return err
+	}
+	var out []monitor.OutSummary
+	for _, row := range told {
+		out = append(out, row.OutSummary)
+	}
+	return errors.Join(append(errs, differ("told", out, w.told))...)
 }
 
 // differ returns how two values differ. Their JSON is compared first, because
@@ -322,6 +354,7 @@ func TestTwin(t *testing.T) {
 			"commit3": m.commit,
 			"fail":    m.fail,
 			"deliver": m.deliver,
+			"tell":    m.tell,
 			"restart": m.restart,
 			"kill":    m.kill,
 			"":        m.compare,
@@ -372,6 +405,21 @@ func (m *machine) deliver(t *rapid.T) {
 		t.Fatal(err)
 	}
 	m.w.outlets[name] = max(m.w.outlets[name], n)
+}
+
+// tell notes that some of the summaries were told.
+func (m *machine) tell(t *rapid.T) {
+	rows, err := m.s.Told(0, 1<<30)
+	if err != nil || len(rows) == 0 {
+		return
+	}
+	n := rapid.IntRange(1, len(rows)).Draw(t, "told")
+	for range 2 { // saying it again does nothing
+		if err := m.s.DoneTelling(rows[n-1].Number); err != nil {
+			t.Fatal(err)
+		}
+	}
+	m.w.told = m.w.told[n:]
 }
 
 func (m *machine) restart(t *rapid.T) {

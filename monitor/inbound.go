@@ -1,0 +1,460 @@
+package monitor
+
+import (
+	"encoding/binary"
+	"fmt"
+	"slices"
+
+	"tailbell/config"
+)
+
+// inbound is what has come from all partitions of one indicator, in one of its
+// lives.
+type inbound struct {
+	indicator, life string
+	lanes           []lane // by partition
+}
+
+// lane is what has come from one partition, in order.
+type lane struct {
+	begun, ended bool
+	// first is the boundary through which the first summary told, and complete
+	// that through which all parts have come.
+	first, complete int64
+	// through is the boundary of the latest part, parts how many of it have come,
+	// and open says that more will.
+	through int64
+	parts   int
+	open    bool
+	// waiting are those that wait for other partitions.
+	waiting []*Summary
+}
+
+// inboundOf returns what came for an indicator in a life, made if need be.
+func (e *Engine) inboundOf(indicator, life string) *inbound {
+	for _, in := range e.inbounds {
+		if in.indicator == indicator && in.life == life {
+			return in
+		}
+	}
+	in := &inbound{indicator: indicator, life: life, lanes: make([]lane, e.partition.Of)}
+	e.inbounds = append(e.inbounds, in)
+	return in
+}
+
+// takeSummary takes the summary of another partition, or refuses it.
+func (e *Engine) takeSummary(m *Message) {
+	s := m.Summary
+	switch {
+	case s.Partition >= e.partition.Of || s.Partition == e.partition.Number:
+		e.rejectSummary(m, fmt.Sprintf("it comes from partition %d, and this is %d of %d", s.Partition, e.partition.Number, e.partition.Of))
+		return
+	case !e.gathers(s.Indicator):
+		e.rejectSummary(m, fmt.Sprintf("its sums are not gathered in partition %d", e.partition.Number))
+		return
+	case slices.ContainsFunc(s.rows, func(r summaryRow) bool {
+		return config.PartitionOf(r.name, e.partition.KeyParts, e.partition.Of) != s.Partition
+	}):
+		e.rejectSummary(m, "it tells of series that are not of its partition")
+		return
+	}
+	repeat, gap := e.receive(s)
+	switch {
+	case repeat:
+		e.account.SummaryRepeats++
+		return
+	case gap:
+		e.refuse(m, 0, "", SummaryGap, fmt.Sprintf("what partition %d told before it never came: sums that it is a part of may lack it", s.Partition), nil)
+	}
+	e.account.Summaries++
+	e.gatherAll()
+}
+
+func (e *Engine) rejectSummary(m *Message, detail string) {
+	e.account.Rejected++
+	e.refuse(m, 0, "", BadSummary, detail+": only the daemons of this deployment publish summaries", m.Summary.data)
+}
+
+// receive puts a summary where it waits for those of other partitions, unless it
+// came before. gap says that one is missing before it.
+func (e *Engine) receive(s *Summary) (repeat, gap bool) {
+	in := e.inboundOf(s.Indicator, s.life)
+	l := &in.lanes[s.Partition]
+	switch {
+	case s.ends:
+		if l.ended || !l.begun {
+			return true, false
+		}
+		l.ended = true
+		return false, false
+	case l.ended || l.begun && (s.through < l.through || s.through == l.through && (!l.open || s.part < l.parts)):
+		return true, false
+	case !l.begun:
+		gap = !s.begins || s.part > 0
+		l.begun, l.first = true, s.through
+	case l.open:
+		gap = s.through != l.through || s.part != l.parts
+	default:
+		gap = s.part > 0 || s.after > l.through
+	}
+	l.through, l.parts, l.open = s.through, s.part+1, s.more
+	if !s.more {
+		l.complete = s.through
+	} else if s.part == 0 {
+		l.complete = s.through - 1
+	}
+	if s.begins && s.part == 0 && !s.more && len(s.rows) == 0 {
+		return false, gap
+	}
+	if len(s.rows) > 0 {
+		e.waiting++
+		s.number = e.waiting
+		l.waiting = append(l.waiting, s)
+		e.kept = append(e.kept, s)
+	}
+	return false, gap
+}
+
+// release forgets a summary that was gathered.
+func (e *Engine) release(s *Summary) {
+	if i := slices.Index(e.kept, s); i >= 0 {
+		e.kept = slices.Delete(e.kept, i, i+1)
+		return
+	}
+	e.released = append(e.released, s.number)
+}
+
+// gatherAll gathers the sums of all indicators as far as all partitions have told.
+func (e *Engine) gatherAll() {
+	for _, ix := range e.indicators {
+		if g := ix.gathering; g != nil && g.inbound != nil {
+			e.gatherReady(g)
+		}
+	}
+}
+
+// gatherReady gathers the sums as far as all partitions have told.
+func (e *Engine) gatherReady(g *gathering) {
+	for {
+		boundary, ok := g.nextReady()
+		if !ok {
+			return
+		}
+		var rows []summaryRow
+		for p := range g.inbound.lanes {
+			l := &g.inbound.lanes[p]
+			for len(l.waiting) > 0 && l.waiting[0].through <= boundary {
+				rows = append(rows, l.waiting[0].rows...)
+				e.release(l.waiting[0])
+				l.waiting = l.waiting[1:]
+			}
+		}
+		sortRows(rows)
+		e.gather(g, boundary, e.mirrorAll(g, rows))
+		e.lookGathered(g.sums, boundary)
+		e.trimMirrors(g)
+		e.catchUp(g)
+	}
+}
+
+// nextReady returns the next boundary that all partitions have told of, and false
+// if there is none. Where no sum is known yet, boundaries are skipped at which
+// nothing is told.
+func (g *gathering) nextReady() (int64, bool) {
+	up := g.sums
+	ready, first, next := int64(maxBoundary), int64(maxBoundary), int64(maxBoundary)
+	for p := range g.inbound.lanes {
+		l := &g.inbound.lanes[p]
+		if !l.begun {
+			return 0, false
+		}
+		if len(l.waiting) > 0 {
+			next = min(next, l.waiting[0].through)
+		}
+		first = min(first, l.first)
+		if !l.ended {
+			ready = min(ready, l.complete)
+		}
+	}
+	if ready == maxBoundary {
+		return 0, false
+	}
+	if !up.started {
+		up.started = true
+		up.pass(min(first, next-1))
+	}
+	if skip := min(ready, next-1); len(up.series) == 0 && skip > up.looked {
+		up.pass(skip)
+	}
+	return up.looked + 1, up.looked < ready
+}
+
+// mirrorAll brings what the rows say into the mirrors.
+func (e *Engine) mirrorAll(g *gathering, rows []summaryRow) []tiding {
+	list := make([]tiding, len(rows))
+	for i := range rows {
+		r := &rows[i]
+		m := g.mirrors[r.name]
+		if m == nil {
+			m = &series{
+				number: uint32(len(e.series)), name: r.name, indicator: g.sums, birth: unborn, trimmed: never,
+				mirror: true, retired: true, fresh: true,
+			}
+			m.telling()
+			e.series = append(e.series, m)
+			g.mirrors[r.name] = m
+		}
+		if r.head {
+			m.birth, m.dates = r.birth, r.dates
+		}
+		for n := range r.cells {
+			c := r.cells[n]
+			*m.at(c.slot) = c
+			m.eventIDs.set(c.slot, r.ids[n])
+			m.dirty = append(m.dirty, c.slot)
+		}
+		e.touch(m)
+		list[i] = tiding{m, r.from, r.to, r.head, r.why}
+	}
+	return list
+}
+
+// trimMirrors forgets of members what no look at gathered sums reads any more.
+func (e *Engine) trimMirrors(g *gathering) {
+	kept := g.sums.kept
+	for _, m := range g.mirrors { // in any order: each is trimmed by itself
+		n, _ := m.cells.find(kept)
+		if m.trimmed = max(m.trimmed, kept); n > 0 {
+			m.cells = m.cells[n:]
+			m.eventIDs.forget(kept)
+		}
+	}
+}
+
+// scatter ends the gathering of an indicator that is monitored no longer.
+func (e *Engine) scatter(ix *indicator) {
+	g := ix.gathering
+	if g == nil {
+		return
+	}
+	if g.sums != nil {
+		e.dismissSeries(g.sums)
+	}
+	for _, s := range e.series {
+		if s.mirror && g.mirrors[s.name] == s {
+			*s = series{number: s.number, mirror: true, retired: true, touched: s.touched}
+			e.touch(s)
+		}
+	}
+	if e.partition.Of > 1 && g.begun {
+		e.tellOut(&Summary{Partition: e.partition.Number, Indicator: ix.cfg.Name, life: g.life, ends: true, after: ix.looked, through: ix.looked})
+	}
+	if g.inbound != nil {
+		for p := range g.inbound.lanes {
+			for _, s := range g.inbound.lanes[p].waiting {
+				e.release(s)
+			}
+		}
+		e.inbounds = slices.DeleteFunc(e.inbounds, func(in *inbound) bool { return in == g.inbound })
+	}
+	e.deferrals = slices.DeleteFunc(e.deferrals, func(d deferral) bool { return d.Indicator == ix.cfg.Name })
+}
+
+// encodeMirror writes what is known of a member of gathered sums.
+func (s *series) encodeMirror(b []byte, at int, whole bool) []byte {
+	if s.name == "" { // it is one no more
+		b[at] = flagMirror | flagNamed
+		return appendString(appendString(b, ""), "")
+	}
+	b[at] = flagMirror
+	if whole || s.fresh {
+		b[at] |= flagNamed
+		b = appendString(appendString(b, s.name), s.indicator.cfg.Name)
+	}
+	b = binary.AppendVarint(b, s.birth)
+	b = append(binary.AppendVarint(b, s.trimmed), flag(s.dates != nil))
+	if s.dates != nil {
+		b = s.dates.encode(b)
+	}
+	if whole {
+		b = binary.AppendUvarint(b, uint64(len(s.cells)))
+		for i := range s.cells {
+			b = s.encodeCell(b, &s.cells[i])
+		}
+		return b
+	}
+	b = binary.AppendUvarint(b, uint64(len(s.dirty)))
+	for _, slot := range s.dirty {
+		c := cell{slot: slot} // trimmed since
+		if i, ok := s.cells.find(slot); ok {
+			c = s.cells[i]
+		}
+		b = s.encodeCell(b, &c)
+	}
+	return b
+}
+
+// overlayMirror lays one encoding over a mirror.
+func (e *Engine) overlayMirror(s *series, r *reader, version, flags byte) error {
+	if flags&flagNamed != 0 {
+		*s = series{number: s.number, name: r.string()}
+		if ix := e.indicatorNamed(r.string()); ix != nil && ix.gathering != nil {
+			s.indicator = ix.gathering.sums
+		}
+	}
+	if s.mirror, s.retired = true, true; s.name == "" {
+		return r.err
+	}
+	s.birth, s.trimmed, s.dates = r.int(), r.int(), nil
+	if r.flag() {
+		s.dates = r.dates()
+	}
+	for range r.length() {
+		c, _ := r.cell(s, version)
+		*s.at(c.slot) = c
+		s.eventIDs.set(c.slot, r.ids())
+	}
+	if len(r.b) > 0 {
+		r.fail("bytes are left over")
+	}
+	return r.err
+}
+
+func (e *Engine) indicatorNamed(name string) *indicator {
+	for _, ix := range e.indicators {
+		if ix.cfg.Name == name {
+			return ix
+		}
+	}
+	return nil
+}
+
+// restoreMirror puts a mirror back in its place.
+func (e *Engine) restoreMirror(s *series) error {
+	e.series = append(e.series, s)
+	if s.name == "" {
+		return nil
+	}
+	if s.indicator == nil {
+		return fmt.Errorf("%w: nothing gathers what is known of %q", errEncoding, s.name)
+	}
+	s.cells = slices.DeleteFunc(s.cells, func(c cell) bool { return c.slot < s.trimmed })
+	s.eventIDs.forget(s.trimmed)
+	s.telling()
+	s.indicator.of.gathering.mirrors[s.name] = s
+	return nil
+}
+
+// relinkAllGathered links gathered sums and their members after they were
+// restored.
+func (e *Engine) relinkAllGathered() {
+	for _, ix := range e.indicators {
+		g := ix.gathering
+		if g == nil {
+			continue
+		}
+		for _, s := range ix.series {
+			if s.news == nil {
+				continue
+			}
+			if s.refreshNews(); s.news.any() {
+				g.list(s)
+			}
+		}
+		if g.sums == nil {
+			continue
+		}
+		members := ix.series
+		if e.partition.Of > 1 {
+			members = nil
+			for _, s := range e.series {
+				if s.mirror && g.mirrors[s.name] == s {
+					members = append(members, s)
+				}
+			}
+		}
+		e.relinkGathered(g, members)
+	}
+}
+
+// inboundHeader is how far partitions have told of an indicator, as stored.
+type inboundHeader struct {
+	Indicator string       `json:"indicator"`
+	Life      string       `json:"life"`
+	Lanes     []laneHeader `json:"lanes"`
+}
+
+type laneHeader struct {
+	Partition int   `json:"partition"`
+	Ended     bool  `json:"ended,omitempty"`
+	First     int64 `json:"first"`
+	Complete  int64 `json:"complete"`
+	Through   int64 `json:"through"`
+	Parts     int   `json:"parts"`
+	Open      bool  `json:"open,omitempty"`
+}
+
+func (e *Engine) inboundHeaders() []inboundHeader {
+	var list []inboundHeader
+	for _, in := range e.inbounds {
+		h := inboundHeader{Indicator: in.indicator, Life: in.life}
+		for p := range in.lanes {
+			if l := &in.lanes[p]; l.begun {
+				h.Lanes = append(h.Lanes, laneHeader{p, l.ended, l.first, l.complete, l.through, l.parts, l.open})
+			}
+		}
+		list = append(list, h)
+	}
+	return list
+}
+
+// restoreInbounds restores how far partitions had told, and what waits.
+func (e *Engine) restoreInbounds(h *header, waiting []WaitingSummary) error {
+	e.waiting, e.deferrals = h.Waiting, h.Deferrals
+	for _, ih := range h.Inbound {
+		in := e.inboundOf(ih.Indicator, ih.Life)
+		for _, l := range ih.Lanes {
+			if l.Partition < 0 || l.Partition >= len(in.lanes) {
+				return fmt.Errorf("monitor: partition %d told of indicator %q, and there are %d: %w", l.Partition, ih.Indicator, len(in.lanes), errEncoding)
+			}
+			in.lanes[l.Partition] = lane{
+				begun: true, ended: l.Ended, first: l.First, complete: l.Complete, through: l.Through, parts: l.Parts, open: l.Open,
+			}
+		}
+	}
+	for _, w := range waiting {
+		s, err := DecodeSummary(w.Data)
+		if err != nil {
+			return fmt.Errorf("monitor: restoring summary %d: %w", w.Number, err)
+		}
+		s.number = w.Number
+		if s.Partition >= e.partition.Of {
+			return fmt.Errorf("monitor: restoring summary %d: %w", w.Number, errEncoding)
+		}
+		l := &e.inboundOf(s.Indicator, s.life).lanes[s.Partition]
+		l.waiting = append(l.waiting, s)
+	}
+	return nil
+}
+
+// drainWaiting hands over the summaries that began to wait, and the numbers of
+// those that do no longer.
+func (e *Engine) drainWaiting() (added []WaitingSummary, gone []uint64) {
+	for _, s := range e.kept {
+		added = append(added, WaitingSummary{s.number, s.encode()})
+	}
+	gone = e.released
+	e.kept, e.released = nil, nil
+	return added, gone
+}
+
+// waitsFor lists the partitions that a boundary waits for that has fallen due.
+func (g *gathering) waitsFor() []int {
+	var list []int
+	for p := range g.inbound.lanes {
+		if l := &g.inbound.lanes[p]; !l.begun || !l.ended && l.complete <= g.sums.looked {
+			list = append(list, p)
+		}
+	}
+	return list
+}
