@@ -148,6 +148,11 @@ func (m Sum) Makes(name string) bool {
 	return true
 }
 
+// GathersAcross reports whether any sums are gathered from several partitions.
+func (s *Setup) GathersAcross() bool {
+	return s.Partitions > 1 && slices.ContainsFunc(s.Indicators, func(in Indicator) bool { return len(in.Gathered(s.KeyParts)) > 0 })
+}
+
 // HomeOf returns the partition that gathers the sums of an indicator, by its
 // name.
 func (s *Setup) HomeOf(indicator string) int { return PartitionOf(indicator, 0, s.Partitions) }

@@ -174,7 +174,7 @@ func (e *Engine) enforceOn(some []*series, f *fact, from, until Instant, succeed
 		}
 		changes = append(changes, c)
 		if f.Kind == OutOfService || f.turns() {
-			ofSums = e.changeSums(ofSums, s, c.from, c.to)
+			ofSums = e.changeHeirs(e.changeSums(ofSums, s, c.from, c.to), s, c.from, c.to)
 			e.inform(s, c.from, c.to, true, f.why(ix.cal.zone))
 		}
 	}

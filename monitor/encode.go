@@ -53,21 +53,7 @@ func (s *series) encode(b []byte, whole bool) []byte {
 	if s.totals != nil {
 		b[at] |= flagTotals
 	}
-	if whole || s.fresh {
-		b[at] |= flagNamed
-		b = appendString(b, s.name)
-		b = appendString(b, s.indicator.cfg.Name)
-		if s.isGathered() {
-			b[at] |= flagGathered
-		}
-	}
-	if s.news != nil {
-		b[at] |= flagNews
-		b = s.news.encode(b)
-	}
-	if s.isGathered() {
-		b = s.dates.encodeAll(b)
-	}
+	b = s.encodeName(b, at, whole)
 	if s.silence != nil && s.silence.opened > 0 {
 		b[1] |= flagSilence
 		b = s.silence.encode(b)
@@ -128,6 +114,26 @@ func (s *series) encodeCell(b []byte, c *cell) []byte {
 	b = binary.AppendUvarint(b, uint64(len(ids)))
 	for _, id := range ids {
 		b = appendString(b, id)
+	}
+	return b
+}
+
+// encodeName writes whose state follows, and what gathered sums need besides.
+func (s *series) encodeName(b []byte, at int, whole bool) []byte {
+	if whole || s.fresh {
+		b[at] |= flagNamed
+		b = appendString(b, s.name)
+		b = appendString(b, s.indicator.cfg.Name)
+		if s.isGathered() {
+			b[at] |= flagGathered
+		}
+	}
+	if s.news != nil {
+		b[at] |= flagNews
+		b = s.news.encode(b)
+	}
+	if s.isGathered() {
+		b = s.dates.encodeAll(b)
 	}
 	return b
 }

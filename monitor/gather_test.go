@@ -19,7 +19,7 @@ import (
 
 var (
 	gatherSeed    = flag.Uint64("gather.seed", 0, "the seed of the streams of gathered sums; 0 for a random one")
-	gatherStreams = flag.Int("gather.streams", 12, "how many streams of gathered sums are played, of each kind")
+	gatherStreams = flag.Int("gather.streams", 5, "how many streams of gathered sums are played, of each kind")
 )
 
 const gatherSetup = `
@@ -225,10 +225,10 @@ func gatherAct(random *rand.Rand, wards []string, begin time.Time, day int, at t
 	default:
 		act = monitor.Act{By: act.By, Why: fmt.Sprint("seen on day ", day), Series: []string{"**/fall", "*/a/fall", "*/*/error"}[random.IntN(3)], Direction: life.Upper}
 		act.Kind = []monitor.ActKind{monitor.Acknowledge, monitor.Close, monitor.Note, monitor.Mark, monitor.Shelve}[random.IntN(5)]
-		switch act.Kind {
-		case monitor.Mark:
+		if act.Kind == monitor.Mark {
 			act.Mark = life.MarkReal
-		case monitor.Shelve:
+		}
+		if act.Kind == monitor.Shelve {
 			act.Until = monitor.InstantOf(at.Add(time.Duration(1+random.IntN(100)) * time.Hour))
 		}
 	}

@@ -160,6 +160,7 @@ func tell(messages []Message) string {
 			fmt.Fprintf(&b, " %s %q %q %s, has at %v", m.Act.Kind, m.Act.Alert, m.Act.Series, m.Act.Direction, m.Act.HasAt)
 		case SettingMessage:
 			fmt.Fprintf(&b, " set-up\n%s", m.Setting.Setup.Text)
+		case SummaryMessage: // there is one partition
 		case Tick:
 			b.WriteString(" tick")
 		case Live:

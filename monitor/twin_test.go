@@ -162,7 +162,7 @@ func (w *twin) apply(m *Message) {
 	case Rejected:
 		w.account.Rejected++
 		w.refuse(0, m.Items[0].Reason)
-	case Tick, Live:
+	case Tick, Live, SummaryMessage: // there is one partition
 	}
 }
 

@@ -76,7 +76,7 @@ func (a *acting) shelveUntil(ctx context.Context, setup *config.Setup, r *life.R
 		return err
 	}
 	now := time.Now()
-	p := config.PartitionOf(r.Series, setup.KeyParts, setup.Partitions)
+	p := setup.PartitionOf(r.Series)
 	if p < len(s.Partitions) && s.Partitions[p].History && s.Partitions[p].Clock != nil {
 		now = *s.Partitions[p].Clock
 	}

@@ -31,6 +31,7 @@ type part struct {
 	loop   *partition.Loop
 	ticker *intake.Ticker
 	queues []*outlet.Queue
+	teller *teller
 	fence  *claim.Fence // nil for an embedded bus
 	origin string       // when the stream was made, that the store is filled from
 	// told is what the owner before had told its outlets, by the same rows.
@@ -133,6 +134,7 @@ func (d *daemon) openPart(ctx context.Context, number int, c *claim.Holding) (p 
 		return p, err
 	}
 	p.mu.position = engine.Position()
+	p.teller = newTeller(st, d.bus, d.log)
 	if err := d.openIntake(ctx, p); err != nil {
 		return p, err
 	}

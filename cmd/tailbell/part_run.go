@@ -30,6 +30,7 @@ func (d *daemon) startPart(ctx context.Context, p *part) {
 		start(q.Run)
 	}
 	p.running.Go(func() { p.ticker.Run(ctx) })
+	p.running.Go(func() { p.teller.Run(ctx) })
 	if !d.setup.History {
 		p.running.Go(func() { d.goLive(ctx, p) })
 	}
@@ -67,6 +68,7 @@ func (d *daemon) committed(p *part, position uint64) {
 		q.Wake()
 	}
 	p.ticker.Wake()
+	p.teller.Wake()
 	if d.page != nil {
 		d.page.Committed()
 	}

@@ -4,7 +4,6 @@ import (
 	"errors"
 	"sync"
 
-	"tailbell/config"
 	"tailbell/ingest/control"
 	"tailbell/monitor/life"
 	"tailbell/monitor/store"
@@ -61,10 +60,8 @@ func (d *daemon) part(number int) (*part, error) {
 	return p, nil
 }
 
-// numberOf is the number of the partition that a series belongs to.
-func (d *daemon) numberOf(series string) int {
-	return config.PartitionOf(series, d.setup.KeyParts, d.setup.Partitions)
-}
+// numberOf is the number of the partition that a series, or a sum, belongs to.
+func (d *daemon) numberOf(series string) int { return d.setup.PartitionOf(series) }
 
 // partOf returns the partition that a series belongs to, if it is open here.
 func (d *daemon) partOf(series string) (*part, error) { return d.part(d.numberOf(series)) }

@@ -148,7 +148,7 @@ func (r *republisher) piece(ctx context.Context, p *piece) error {
 			r.result.Acts++
 		case bus.Setting:
 			r.result.Settings++
-		case bus.Observation, bus.Tick:
+		case bus.Observation, bus.Tick, bus.Summary:
 		}
 		history := r.live[g] < feeders
 		if parcel.blind && history && p.clock != monitor.Beginning {

@@ -88,7 +88,7 @@ func (r *router) parcels(p *piece) []parcel {
 		return r.once(p, bus.Setting, r.fed(p.lane.number))
 	case monitor.Rejected:
 		return []parcel{{p.lane.number % r.to, kindOf(p.raw), p.raw.Data, true, true}}
-	case monitor.Tick, monitor.Live:
+	case monitor.Tick, monitor.Live, monitor.SummaryMessage: // the new partitions tell each other themselves
 	}
 	return nil
 }

@@ -109,7 +109,7 @@ func (p *packer) partitionOf(e *history.Entry) (int, error) {
 	} else {
 		series = d.Observation(e.JSON).Observation.Series
 	}
-	return config.PartitionOf(series, p.setup.KeyParts, p.setup.Partitions), nil
+	return p.setup.PartitionOf(series), nil
 }
 
 // Check returns the indicators of the set-up that keep no ids although the

@@ -149,7 +149,7 @@ func (s *streamReader) message(raw *bus.Raw) {
 		if s.clock != monitor.Beginning {
 			tape.AddTick(s.clock, m.Kind == monitor.Live)
 		}
-	case monitor.SettingMessage:
+	case monitor.SettingMessage, monitor.SummaryMessage:
 	}
 }
 

@@ -9,8 +9,8 @@ import (
 )
 
 // summaries are what a partition of two tells another, as it is published.
-func summaries(t testing.TB) [][]byte {
-	t.Helper()
+func summaries(tb testing.TB) [][]byte {
+	tb.Helper()
 	setup, err := config.Parse([]byte(`
 name = "x"
 folder = "x"
@@ -28,7 +28,7 @@ kind = "known"
 rate = 0.02
 `), "set-up")
 	if err != nil {
-		t.Fatal(err)
+		tb.Fatal(err)
 	}
 	teller := 1 - setup.HomeOf("fall")
 	site := "a"
@@ -50,7 +50,7 @@ rate = 0.02
 		}
 	}
 	if len(all) == 0 {
-		t.Fatal("nothing is told")
+		tb.Fatal("nothing is told")
 	}
 	return all
 }
