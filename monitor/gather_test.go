@@ -62,13 +62,13 @@ rate = 4
 
 // gatherKinds are the ways in which members may count.
 var gatherKinds = map[string]string{
-	"counted": "p_limit = 0.02\nevents = \"counted\"\n[indicator.baseline]\nkind = \"known\"\nrate = 0.05",
+	"counted": "p_limit = 0.05\nevents = \"counted\"\n[indicator.baseline]\nkind = \"known\"\nrate = 0.05",
 	"clock": "allowance = \"20 in 1y\"\nevents = \"each\"\nexposure = \"clock\"\nclock = { size = 7, per = \"1d\" }\n" +
 		"[indicator.baseline]\nkind = \"known\"\nrate = 0.05",
 	"census": "p_limit = 0.02\nevents = \"each\"\nexposure = \"census\"\nexpires = \"3d\"\n[indicator.baseline]\nkind = \"known\"\nrate = 0.05",
-	"trailing": "p_limit = 0.03\nevents = \"counted\"\n[[indicator.baseline]]\nsums = \"**/fall\"\nkind = \"trailing\"\nspan = \"8d\"\ngap = \"2d\"\nrefresh = \"1w\"\n" +
+	"trailing": "p_limit = 0.1\nevents = \"counted\"\n[[indicator.baseline]]\nsums = \"**/fall\"\nkind = \"trailing\"\nspan = \"8d\"\ngap = \"2d\"\nrefresh = \"1w\"\n" +
 		"[[indicator.baseline]]\nkind = \"known\"\nrate = 0.05",
-	"proportion": "p_limit = 0.02\nmeasure = \"proportion\"\n[indicator.baseline]\nkind = \"known\"\nrate = 0.05",
+	"proportion": "p_limit = 0.05\nmeasure = \"proportion\"\n[indicator.baseline]\nkind = \"known\"\nrate = 0.05",
 }
 
 // gatherInput is one input of a stream: for the partition of a series, or of a sum;
