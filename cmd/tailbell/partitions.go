@@ -162,7 +162,7 @@ func writePartitions(w io.Writer, rows []partitionRow, now time.Time) error {
 		lines = append(lines, rows[i].line(now))
 	}
 	for _, line := range lines {
-		if _, err := fmt.Fprintln(t, strings.TrimRight(strings.Join(line, "\t"), "\t")); err != nil {
+		if _, err := fmt.Fprintln(t, strings.Join(line, "\t")); err != nil {
 			return err
 		}
 	}
@@ -182,9 +182,9 @@ func writePartitions(w io.Writer, rows []partitionRow, now time.Time) error {
 func (r *partitionRow) line(now time.Time) []string {
 	n := func(x uint64) string { return words.Whole(int64(x)) }
 	if r.Owner == "" {
-		return []string{fmt.Sprint(r.Number), "nobody"}
+		return []string{fmt.Sprint(r.Number), "nobody", "-", "-", "-", "-", "-", "-"}
 	}
-	last := ""
+	last := "-"
 	if r.Copy != nil {
 		last = fmt.Sprintf("position %s, %s ago", n(r.Copy.Position), duration(max(0, now.Sub(r.Copy.Made)).Truncate(time.Second)))
 	}

@@ -56,8 +56,8 @@ func TestPartitionsOfNobody(t *testing.T) {
 		t.Fatal(err)
 	}
 	want := `PARTITION  OWNER   EPOCH  POSITION  BEHIND  SERIES  ALERTS  LAST COPY
-0          nobody
-1          a-1     3      1,200     1,200   0       0
+0          nobody  -      -         -       -       -       -
+1          a-1     3      1,200     1,200   0       0       -
 partition 0: nobody owns it at present
 `
 	if out.String() != want {
