@@ -39,6 +39,18 @@ type PartState struct {
 	Version       int
 	Account       monitor.Account
 	Outlets       []OutletState
+	// Owner is the process that owns the partition, where several share them; Here
+	// says that it is the one that serves this page. Copy says up to where the last
+	// copy of its store on the bus reaches, and when it was made; nil for none.
+	Owner        string
+	Here         bool
+	CopyMade     *time.Time
+	CopyPosition uint64
+}
+
+// Shared reports whether several processes share the partitions.
+func (s *State) Shared() bool {
+	return slices.ContainsFunc(s.Parts, func(p PartState) bool { return p.Owner != "" })
 }
 
 // Lag is how many messages the partition has yet to commit.

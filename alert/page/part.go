@@ -75,7 +75,7 @@ type Seen struct {
 	// only. Judged says that there is evidence of the window.
 	Known    bool               `json:"known"`
 	Window   string             `json:"window"`
-	Glance   monitor.Glance     `json:"-"`
+	Glance   monitor.Glance     `json:"glance"`
 	Evidence life.Evidence      `json:"evidence,omitzero"`
 	Judged   bool               `json:"judged"`
 	Slots    []monitor.SlotView `json:"slots,omitempty"`

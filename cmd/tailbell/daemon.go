@@ -134,6 +134,9 @@ func (d *daemon) run(ctx context.Context) error {
 		start(d.member.run)
 	}
 	start(d.watchRoom)
+	if d.page != nil && d.setup.Bus.Share {
+		start(d.tellNews)
+	}
 	<-ctx.Done()
 	for _, p := range d.parts.all() {
 		p.running.Wait()

@@ -61,10 +61,6 @@ func (d *daemon) openPage() error {
 	if !d.setup.Page.Served() {
 		return nil
 	}
-	if d.setup.Bus.Share {
-		d.log.Warn().Msg("the page is not served yet where processes share the partitions: commands tell of the whole")
-		return nil
-	}
 	o := page.Options{
 		Name: d.setup.Name, Act: d.actFromPage, State: d.stateForPage, Now: time.Now,
 		PartOf: d.numberOf,
@@ -74,12 +70,8 @@ func (d *daemon) openPage() error {
 		},
 		Failed: func(err error) { d.log.Error().Err(err).Msg("serving the page") },
 	}
-	for _, p := range d.parts.all() {
-		o.Parts = append(o.Parts, page.Here{Store: p.store, Do: func(ctx context.Context, look func(*monitor.Engine)) error {
-			ctx, cancel := context.WithTimeout(ctx, pagePatience)
-			defer cancel()
-			return p.do(ctx, look)
-		}})
+	for n := range d.setup.Partitions {
+		o.Parts = append(o.Parts, d.pagePart(n))
 	}
 	var err error
 	d.page, err = page.New(o)
@@ -91,7 +83,13 @@ const pagePatience = 3 * time.Second
 
 // actFromPage takes an act as if a command had sent it.
 func (d *daemon) actFromPage(ctx context.Context, act *monitor.Act) error {
-	_, err := d.act(ctx, actRequest{wire.EncodeAct(nil, act)})
+	req := actRequest{wire.EncodeAct(nil, act)}
+	var err error
+	if d.setup.Bus.Share { // the owner takes it
+		_, err = (&front{d}).act(ctx, req)
+	} else {
+		_, err = d.act(ctx, req)
+	}
 	var refused *control.Error
 	if errors.As(err, &refused) {
 		return &page.RefusedError{Why: refused.Text}
@@ -99,11 +97,27 @@ func (d *daemon) actFromPage(ctx context.Context, act *monitor.Act) error {
 	return err
 }
 
+// statusOfAll is how all partitions are doing, those of other processes too.
+func (d *daemon) statusOfAll(ctx context.Context) (*statusReply, error) {
+	if !d.setup.Bus.Share {
+		return d.status(ctx)
+	}
+	all, err := (&front{d}).status(ctx, nil)
+	if err != nil {
+		return nil, err
+	}
+	r, ok := all.(*statusReply)
+	if !ok {
+		return nil, errors.New("the status is none")
+	}
+	return r, nil
+}
+
 // stateForPage says how the daemon is doing.
 func (d *daemon) stateForPage(ctx context.Context) (*page.State, error) {
 	asked, cancel := context.WithTimeout(ctx, pagePatience)
 	defer cancel()
-	r, err := d.status(asked)
+	r, err := d.statusOfAll(asked)
 	if err != nil && ctx.Err() == nil { // an engine is held up: what is known without it
 		r = &statusReply{Setup: d.setup.Digest, Connected: d.bus.Connected()}
 		r.Troubles, err = d.standing()
@@ -119,15 +133,19 @@ func (d *daemon) stateForPage(ctx context.Context) (*page.State, error) {
 		part := page.PartState{
 			Number: p.Number, Position: p.Position, End: p.End, Clock: p.Clock, History: p.History, Version: p.Version, Account: p.Account,
 		}
+		if d.setup.Bus.Share {
+			part.Owner, part.Here = p.Owner, p.Owner == d.member.keeper.Name()
+			if p.Copy != nil {
+				part.CopyMade, part.CopyPosition = &p.Copy.Made, p.Copy.Position
+			}
+		}
 		here := d.parts.get(p.Number)
 		for _, o := range p.Outlets {
-			if here == nil {
-				break
+			state := page.OutletState{Name: o.Name, Delivered: o.Delivered, PassedOver: o.PassedOver, Waiting: o.Waiting}
+			if here != nil { // what hinders one elsewhere is among the troubles
+				state.Trouble = here.undelivered(store.Outlet{Name: o.Name, Depth: o.Waiting})
 			}
-			part.Outlets = append(part.Outlets, page.OutletState{
-				Name: o.Name, Delivered: o.Delivered, PassedOver: o.PassedOver, Waiting: o.Waiting,
-				Trouble: here.undelivered(store.Outlet{Name: o.Name, Depth: o.Waiting}),
-			})
+			part.Outlets = append(part.Outlets, state)
 		}
 		s.Parts = append(s.Parts, part)
 	}

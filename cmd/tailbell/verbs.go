@@ -41,6 +41,7 @@ const (
 	verbTrim       = "trim"         // position -> trimReply
 	verbSeries     = "series"       // seriesRequest -> seriesReply
 	verbSetting    = "setting"      // -> settingsReply
+	verbLook       = "look"         // lookRequest -> page.Reply
 )
 
 type alertsRequest struct {
@@ -132,6 +133,7 @@ func (d *daemon) verbs() map[string]control.Handler {
 		verbSeries: answer(d.series),
 
 		verbSetting: d.setting,
+		verbLook:    answer(d.look),
 	}
 }
 
