@@ -41,7 +41,7 @@ p_limit = 0.01
 quiet = 3
 [indicator.baseline]
 kind = "known"
-rate = 0.005
+rate = 0.003
 `
 
 // gatheredHistory writes three months of six sites, of which all have more falls
@@ -107,6 +107,34 @@ func TestGatheredSums(t *testing.T) {
 	four := gatheredAlerts(t, 4, history)
 	if diff := cmp.Diff(one, four); diff != "" {
 		t.Errorf("-one partition +four:\n%s", diff)
+	}
+}
+
+// TestGatheredSumsAreDivided divides a deployment with sums over all sites into
+// three partitions, and those into two: no alert is lost.
+func TestGatheredSumsAreDivided(t *testing.T) {
+	path := filepath.Join(t.TempDir(), "tailbell.toml")
+	before := 1
+	for _, into := range []int{3, 2} {
+		if err := os.WriteFile(path, fmt.Appendf(nil, gatheredSetup, before), 0o600); err != nil {
+			t.Fatal(err)
+		}
+		setup, err := config.Load(path)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if before == 1 {
+			if code, _, stderr := run(t, "feed", "--config", path, gatheredHistory(t)); code != 0 {
+				t.Fatalf("feed: exit code %d\n%s", code, stderr)
+			}
+		}
+		runGathered(t, setup, true, func(*daemon) {})
+		code, out, stderr := run(t, "partitions", "divide", "--into", fmt.Sprint(into), "--config", path)
+		if code != 0 || !strings.Contains(out, "equal to the byte") {
+			t.Fatalf("divide into %d: exit code %d\n%s%s", into, code, out, stderr)
+		}
+		t.Log(out)
+		before = into
 	}
 }
 

@@ -9,6 +9,7 @@ import (
 	"os"
 	"path/filepath"
 	"slices"
+	"time"
 
 	"tailbell/alert/outlet"
 	"tailbell/config"
@@ -218,8 +219,67 @@ func (v *division) fill(ctx context.Context) error {
 			return fmt.Errorf("filling partition %d of %d: %w", q, v.next.Partitions, err)
 		}
 	}
+	if err := v.exchange(ctx); err != nil {
+		return err
+	}
+	for _, st := range v.new {
+		if err := handover.Settle(st, v.wants); err != nil {
+			return err
+		}
+	}
 	v.alerts, err = divide.CompareAlerts(v.old, v.new)
 	return err
+}
+
+// exchange lets the new partitions tell each other what sums over several of them
+// are to know, until none has anything left to tell.
+func (v *division) exchange(ctx context.Context) error {
+	for {
+		told := false
+		for q, st := range v.new {
+			did, err := v.tellOthers(ctx, st)
+			if err != nil {
+				return fmt.Errorf("what partition %d has to tell others: %w", q, err)
+			}
+			told = told || did
+		}
+		if !told {
+			return nil
+		}
+		for q, st := range v.new {
+			if err := v.fillUp(ctx, st, q); err != nil {
+				return fmt.Errorf("filling partition %d of %d: %w", q, v.next.Partitions, err)
+			}
+		}
+	}
+}
+
+// tellOthers carries what a new partition has to tell to others, as if it had been
+// stored when the last message there was, and reports whether it had anything.
+func (v *division) tellOthers(ctx context.Context, st *store.Store) (bool, error) {
+	for told := false; ; told = true {
+		rows, err := st.Told(0, tellBatch)
+		if err != nil || len(rows) == 0 {
+			return told, err
+		}
+		messages, stored := make([]bus.Outgoing, len(rows)), make([]time.Time, len(rows))
+		for i, row := range rows {
+			marks, err := v.new[row.Partition].Marks()
+			if err != nil {
+				return told, err
+			}
+			if len(marks) > 0 {
+				stored[i] = marks[0].Stored.Time()
+			}
+			messages[i] = bus.Outgoing{Partition: row.Partition, Kind: bus.Summary, Data: row.Data}
+		}
+		if err := v.move.Carry(ctx, messages, stored); err != nil {
+			return told, err
+		}
+		if err := st.DoneTelling(rows[len(rows)-1].Number); err != nil {
+			return told, err
+		}
+	}
 }
 
 func (v *division) fillOne(ctx context.Context, st *store.Store, q int, id bus.Identity, handover *divide.Handover) error {
@@ -229,18 +289,24 @@ func (v *division) fillOne(ctx context.Context, st *store.Store, q int, id bus.I
 	if err := handover.Register(st); err != nil {
 		return err
 	}
+	return v.fillUp(ctx, st, q)
+}
+
+// fillUp brings the store of a new partition to the end of what was carried over.
+func (v *division) fillUp(ctx context.Context, st *store.Store, q int) error {
 	end, err := v.move.EndOf(ctx, q)
 	if err != nil || end == 0 {
 		return err
 	}
-	source, err := v.move.Source(ctx, q, 0)
+	position, err := st.Position()
+	if err != nil || position >= end {
+		return err
+	}
+	source, err := v.move.Source(ctx, q, position)
 	if err != nil {
 		return err
 	}
-	if err := divide.Fill(ctx, st, v.next, source, end); err != nil {
-		return err
-	}
-	return handover.Settle(st, v.wants)
+	return divide.Fill(ctx, st, v.next, source, end)
 }
 
 // wants reports whether an outlet is told of a step.
