@@ -39,23 +39,31 @@ func (e *Engine) unfitHeir(f *fact, matched []*series) (Reason, string) {
 	ix, other := e.indicatorOf(f.Into)
 	into := e.byName[f.Into]
 	n := 0
+	if into != nil && into.heir != nil {
+		n = len(into.heir.sources) // they have merged already, and others join them
+	}
+	heard := false
 	for _, s := range matched {
 		if s.sum != nil {
 			continue
 		}
 		n++
+		heard = true
 		switch {
 		case ix != s.indicator || other != nil:
 			return NotAllowed, fmt.Sprintf("series %q and %q do not belong to the same indicator", s.name, f.Into)
-		case into != nil && (into.heir != nil || into.birth < ix.firstFrom(f.From)):
+		case into != nil && into.heir != nil && into.heir.until != ix.firstFrom(f.From):
+			return NotAllowed, fmt.Sprintf("series %q took the place of others from %s on: say that date, or give what they become a name of its own",
+				f.Into, dateIn(ix.cfg.Zone, ix.cal.Start(into.heir.until)))
+		case into != nil && into.heir == nil && into.birth < ix.firstFrom(f.From):
 			return NotAllowed, fmt.Sprintf("series %q has counts of its own from before: give what they become a name of its own", f.Into)
 		}
 	}
 	switch {
-	case n == 0:
+	case !heard:
 		return NoSuchSeries, fmt.Sprintf("no series that was heard of is called %q or matches it", f.Series)
 	case f.What == Renamed && n > 1:
-		return NotAllowed, fmt.Sprintf("%q matches %d series: they are merged, not renamed", f.Series, n)
+		return NotAllowed, fmt.Sprintf("%d series would go on as %q: say merged, not renamed", n, f.Into)
 	case ix.cfg.ArrivalLooks:
 		return NotAllowed, "looks at events reach to the moment, which is not handed on: close them, and open another"
 	case n > 1 && ix.cfg.Exposure == config.Clock:
@@ -89,13 +97,16 @@ func (e *Engine) succeedTo(list []change, f *fact) []change {
 	return e.changeSum(list, into, begin, into.heir.until-1)
 }
 
-// inherit links a series to those whose place it takes.
+// inherit links a series to those whose place it takes, beside others that it
+// may have taken the place of by an act before.
 func (e *Engine) inherit(f *fact, into *series) {
 	into.indicator.inherits = true
-	into.heir = &inheritance{until: into.indicator.firstFrom(f.From)}
+	if into.heir == nil {
+		into.heir = &inheritance{until: into.indicator.firstFrom(f.From)}
+	}
 	for _, s := range e.matched(f) {
-		if s.sum == nil && s.indicator == into.indicator {
-			into.heir.sources = append(into.heir.sources, s)
+		if s.sum == nil && s.indicator == into.indicator && !slices.Contains(into.heir.sources, s) {
+			into.heir.sources = inserted(into.heir.sources, s)
 			s.heirs = append(s.heirs, into)
 		}
 	}
@@ -105,7 +116,7 @@ func (e *Engine) inherit(f *fact, into *series) {
 func (e *Engine) bequeath(s *series) {
 	for i := range e.facts {
 		f := &e.facts[i]
-		if into := e.byName[f.Into]; f.Into != "" && into != nil && into.heir != nil && s.sum == nil && f.matches(s.name) && into.indicator == s.indicator {
+		if into := e.byName[f.Into]; f.Into != "" && into != nil && into.heir != nil && s.sum == nil && f.matches(s.name) && into.indicator == s.indicator && !slices.Contains(into.heir.sources, s) {
 			into.heir.sources = inserted(into.heir.sources, s)
 			s.heirs = append(s.heirs, into)
 		}
@@ -120,7 +131,9 @@ func (e *Engine) relinkHeirs() {
 		if f := &e.facts[i]; f.Into != "" {
 			if into := e.byName[f.Into]; into != nil {
 				e.inherit(f, into)
-				heirs = append(heirs, into)
+				if !slices.Contains(heirs, into) {
+					heirs = append(heirs, into)
+				}
 			}
 		}
 	}

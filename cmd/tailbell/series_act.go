@@ -33,10 +33,9 @@ const seriesActHelp = "\n\nSERIES is a name, the name of a sum, or a pattern (in
 
 func newSeriesAct(a *seriesActing, use, short, long string) *cobra.Command {
 	c := &cobra.Command{
-		Use: use + " SERIES", Short: short, Long: long + seriesActHelp,
+		Use: use + " SERIES...", Short: short, Long: long + seriesActHelp,
 		RunE: func(c *cobra.Command, args []string) error {
-			a.act.Series = args[0]
-			return a.run(c.Context(), c.OutOrStdout())
+			return a.runAll(c.Context(), c.OutOrStdout(), args)
 		},
 	}
 	addConfigFlag(c, &a.path)
@@ -60,7 +59,8 @@ func newChangeCommand() *cobra.Command {
 opens or closes. Windows do not reach over a change of definition or method, unless
 --straddle says that they may. A series that closes is not looked at from then on, and
 nobody waits for its reports; one that opens begins then. What is renamed or merged
-goes on as the series --into, which has its earlier counts.`)
+goes on as the series --into, which has its earlier counts; several series that are
+merged may be named one by one.`)
 	c.Flags().StringVar(&a.what, "what", "", "`WHAT` changed: \"case definition\", method, opening, closing, renamed or merged; needed")
 	c.Flags().StringVar(&a.act.Into, "into", "", "of what is renamed or merged: the `SERIES` that takes its place")
 	c.Flags().BoolVar(&a.act.Straddle, "straddle", false, "windows may reach over it; it is only recorded")
@@ -96,20 +96,37 @@ rests on them. Corrections are still taken, and are told as such.`)
 	return c
 }
 
-func (a *seriesActing) run(ctx context.Context, w io.Writer) error {
+// runAll says the same of several series, one after the other. None is said
+// unless all can be read.
+func (a *seriesActing) runAll(ctx context.Context, w io.Writer, series []string) error {
 	setup, err := loadSetup(a.path)
 	if err != nil {
 		return err
 	}
-	if err := a.complete(setup); err != nil {
-		return &usageError{err}
+	acts := make([]seriesActing, len(series))
+	for i, name := range series {
+		acts[i] = *a
+		acts[i].act.Series = name
+		if err := acts[i].complete(setup); err != nil {
+			return &usageError{err}
+		}
+		data := wire.EncodeAct(nil, &acts[i].act)
+		if _, reason, detail := wire.NewDecoder(wire.Limits{}).Act(data); reason != "" {
+			return &usageError{errors.New(strings.ReplaceAll(detail, "the field ", "--"))}
+		}
 	}
+	for i := range acts {
+		if err := acts[i].run(ctx, w, setup); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+func (a *seriesActing) run(ctx context.Context, w io.Writer, setup *config.Setup) error {
 	data := wire.EncodeAct(nil, &a.act)
-	if _, reason, detail := wire.NewDecoder(wire.Limits{}).Act(data); reason != "" {
-		return &usageError{errors.New(strings.ReplaceAll(detail, "the field ", "--"))}
-	}
 	var r seriesActReply
-	err = ask(ctx, setup, verbAct, actRequest{data}, &r)
+	err := ask(ctx, setup, verbAct, actRequest{data}, &r)
 	if errors.Is(err, bus.ErrNoDaemon) {
 		return fmt.Errorf("acts go through the stream: %w", sayNeverRan(setup, err))
 	}
