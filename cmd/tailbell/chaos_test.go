@@ -158,6 +158,7 @@ func newChaos(t *testing.T, workers int, o ordeal.Options) *chaos {
 		x.workers = append(x.workers, x.newWorker(workers > 1))
 	}
 	x.pub = newPublisher(t, plan, seed, x.visit)
+	x.pub.most = 200
 	x.awaitBus()
 	return x
 }
@@ -347,7 +348,7 @@ func (x *chaos) newest(number int) string {
 // finish waits until everything is sent and stored, and ends the processes.
 func (x *chaos) finish() {
 	x.t.Helper()
-	for deadline := time.Now().Add(10 * time.Minute); x.pub.left() > 0; idle(20 * time.Millisecond) {
+	for deadline := time.Now().Add(30 * time.Minute); x.pub.left() > 0; idle(20 * time.Millisecond) {
 		if time.Now().After(deadline) {
 			x.t.Fatalf("%d messages can't be sent", x.pub.left())
 		}

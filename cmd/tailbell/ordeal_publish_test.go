@@ -31,6 +31,8 @@ type publisher struct {
 	// careful gives every message an id by which the bus drops repeats;
 	// otherwise only those that must not be stored twice have one.
 	careful bool
+	// most is how many messages are on their way at once.
+	most int
 
 	mu struct {
 		sync.Mutex
@@ -45,7 +47,7 @@ type publisher struct {
 
 func newPublisher(t *testing.T, plan *ordeal.Plan, seed uint64, visit func() (*nats.Conn, error)) *publisher {
 	t.Helper()
-	p := &publisher{t: t, plan: plan, visit: visit, random: rand.New(rand.NewPCG(seed, 2)), idle: make(chan struct{}, 1)}
+	p := &publisher{t: t, plan: plan, visit: visit, random: rand.New(rand.NewPCG(seed, 2)), most: 30, idle: make(chan struct{}, 1)}
 	p.mu.positions = map[int]uint64{}
 	for i := range plan.Messages {
 		p.mu.todo = append(p.mu.todo, i)
@@ -111,7 +113,7 @@ func (p *publisher) run(ctx context.Context) {
 		}
 	}()
 	for ctx.Err() == nil {
-		window := p.next(1 + p.random.IntN(30))
+		window := p.next(1 + p.random.IntN(p.most))
 		if len(window) == 0 {
 			idle(2 * time.Millisecond)
 			continue
