@@ -57,6 +57,35 @@ func (m *member) knowCopy(ctx context.Context, p *part) {
 	}
 }
 
+// sweepEvery is how often parts of copies are looked for that never became
+// whole.
+const sweepEvery = 10 * time.Minute
+
+// keepSweeping removes what processes that died have left of copies, until ctx
+// ends.
+func (m *member) keepSweeping(ctx context.Context) {
+	tick := time.NewTicker(sweepEvery)
+	defer tick.Stop()
+	var strays map[string]bool
+	for {
+		select {
+		case <-tick.C:
+		case <-ctx.Done():
+			return
+		}
+		within, cancel := context.WithTimeout(ctx, copyTime)
+		var gone int
+		var err error
+		strays, gone, err = copies.Sweep(within, m.shelf, m.d.setup.Partitions, strays)
+		cancel()
+		if err != nil && ctx.Err() == nil {
+			m.d.log.Warn().Err(err).Msg("sweeping up what is left of copies")
+		} else if gone > 0 {
+			m.d.log.Info().Int("copies", gone).Msg("swept up what was left of copies that never became whole")
+		}
+	}
+}
+
 // copyUp puts a copy on the bus, unless the last one reaches as far.
 func (m *member) copyUp(ctx context.Context, p *part) {
 	ctx, cancel := context.WithTimeout(ctx, copyTime)

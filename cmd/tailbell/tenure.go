@@ -51,6 +51,9 @@ func (m *member) hold(t *tenure, n int, before *tenure) {
 	copying, stopCopying := context.WithCancel(t.ctx)
 	defer stopCopying()
 	p.running.Go(func() { m.keepCopying(copying, p) })
+	if n == frontPartition {
+		p.running.Go(func() { m.keepSweeping(copying) })
+	}
 	stale := false
 	select {
 	case <-t.ctx.Done():

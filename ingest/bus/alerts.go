@@ -97,8 +97,8 @@ func (b *Bus) lastPublished(ctx context.Context, partition int) (Published, erro
 // owner.
 type OwnerMessage struct {
 	Partition int
-	Published // Position is that of the partition's last message, which it must follow
-	ID        string    // of the step
+	Published        // Position is that of the partition's last message, which it must follow
+	ID        string // of the step
 	Direction string
 	Indicator string
 	Event     []byte // a CloudEvent in structured mode

@@ -116,3 +116,46 @@ func (o *Objects) Delete(ctx context.Context, name string) error {
 	}
 	return nil
 }
+
+// Strays returns the parts in the store that belong to none of the named
+// objects: what was on its way when a process died, or is just now.
+func (o *Objects) Strays(ctx context.Context, names []string) (map[string]bool, error) {
+	s, err := o.bus.js.Stream(ctx, o.stream)
+	if err != nil {
+		return nil, fmt.Errorf("asking for the stream %s: %w", o.stream, mapped(err))
+	}
+	prefix := "$O." + o.bus.names.copies() + ".C."
+	info, err := s.Info(ctx, jetstream.WithSubjectFilter(prefix+">"))
+	if err != nil {
+		return nil, fmt.Errorf("listing the parts in %s: %w", o.stream, mapped(err))
+	}
+	strays := map[string]bool{}
+	for subject := range info.State.Subjects {
+		strays[subject] = true
+	}
+	for _, name := range names {
+		object, err := o.store.GetInfo(ctx, name)
+		if errors.Is(err, jetstream.ErrObjectNotFound) {
+			continue
+		}
+		if err != nil {
+			return nil, fmt.Errorf("asking for %s in %s: %w", name, o.stream, mapped(err))
+		}
+		delete(strays, prefix+object.NUID)
+	}
+	return strays, nil
+}
+
+// Sweep removes strays.
+func (o *Objects) Sweep(ctx context.Context, strays map[string]bool) error {
+	s, err := o.bus.js.Stream(ctx, o.stream)
+	if err != nil {
+		return fmt.Errorf("asking for the stream %s: %w", o.stream, mapped(err))
+	}
+	for subject := range strays {
+		if err := s.Purge(ctx, jetstream.WithPurgeSubject(subject)); err != nil {
+			return fmt.Errorf("removing parts from %s: %w", o.stream, mapped(err))
+		}
+	}
+	return nil
+}

@@ -119,3 +119,37 @@ func TestDamagedCopiesAreRefused(t *testing.T) {
 		t.Errorf("facts of nothing: %v", err)
 	}
 }
+
+// TestSweepsStrays leaves a part of a copy that never became whole.
+func TestSweepsStrays(t *testing.T) {
+	b := bustest.Open(t, bustest.Setup(t))
+	shelf, err := b.Copies(t.Context())
+	if err != nil {
+		t.Fatal(err)
+	}
+	save(t, shelf, 1, bytes.Repeat([]byte("x"), 1_000_000))
+	js, err := jetstream.New(b.Conn())
+	if err != nil {
+		t.Fatal(err)
+	}
+	for range 3 {
+		if _, err := js.Publish(t.Context(), "$O.quillmere-copies.C.dead", []byte("part")); err != nil {
+			t.Fatal(err)
+		}
+	}
+	var strays map[string]bool
+	for i, want := range []struct{ strays, gone int }{{1, 0}, {1, 1}, {0, 0}} {
+		var gone int
+		strays, gone, err = copies.Sweep(t.Context(), shelf, 4, strays)
+		if err != nil || len(strays) != want.strays || gone != want.gone {
+			t.Errorf("%d: %v, %d gone, %v", i, strays, gone, err)
+		}
+	}
+	list, err := copies.List(t.Context(), shelf, 3)
+	if err != nil || len(list) != 1 {
+		t.Fatalf("%v, %v", list, err)
+	}
+	if err := copies.Fetch(t.Context(), shelf, &list[0], filepath.Join(t.TempDir(), "back")); err != nil {
+		t.Error(err)
+	}
+}
