@@ -3,6 +3,7 @@ package main
 import (
 	"bytes"
 	"context"
+	"encoding/json"
 	"fmt"
 	"maps"
 	"net"
@@ -18,6 +19,7 @@ import (
 	"tailbell/ingest/bus"
 	"tailbell/ingest/claim"
 	"tailbell/ingest/copies"
+	"tailbell/monitor/life"
 
 	"github.com/nats-io/nats.go/jetstream"
 )
@@ -276,6 +278,24 @@ func TestShare(t *testing.T) {
 	if n := c.steps(); n != rung {
 		t.Errorf("%d steps, want %d", n, rung)
 	}
+	told := map[string]int{} // by the terminals of all processes
+	for _, s := range c.services {
+		for line := range strings.Lines(s.stdout.String()) {
+			var n life.Notice
+			if err := json.Unmarshal([]byte(line), &n); err != nil {
+				t.Fatalf("%v: %s", err, line)
+			}
+			told[n.Key]++
+		}
+	}
+	repeats := 0
+	for _, n := range told {
+		repeats += n - 1
+	}
+	t.Logf("the terminals told %d of %d steps, %d of them again", len(told), rung, repeats)
+	if len(told) != rung || repeats > rung/2 {
+		t.Error("steps were not told, or most of them again")
+	}
 }
 
 // TestCommandsOfACluster asks one process, which ever answers, for what all of
@@ -474,6 +494,62 @@ func TestRollOut(t *testing.T) {
 	c.feed(60, 20)
 	changed.await("steps", func() bool { return c.steps() >= 80 })
 	c.check()
+}
+
+// TestLostTailIsNoSecret empties the stream behind the back of an owner that is
+// killed: a process without its store does not go on as if nothing were missing.
+func TestLostTailIsNoSecret(t *testing.T) {
+	c := newCluster(t, 2, true)
+	c.services[0].start()
+	c.look()
+	c.evenly(1)
+	c.feed(0, 20)
+	c.copied()
+	c.feed(20, 20)
+	id, err := c.bus.Identity(t.Context())
+	if err != nil {
+		t.Fatal(err)
+	}
+	c.services[0].await("the position in the claims", func() bool {
+		rows, err := claim.Look(t.Context(), c.bucket)
+		if err != nil {
+			t.Fatal(err)
+		}
+		return slices.ContainsFunc(rows, func(r claim.Row) bool { return r.Position == id.Last })
+	})
+	c.services[0].stop(syscall.SIGKILL)
+	rows, err := claim.Look(t.Context(), c.bucket)
+	if err != nil {
+		t.Fatal(err)
+	}
+	for _, r := range rows { // as if more had been counted than the stream holds
+		r.Position += 100
+		data, err := json.Marshal(r.Holding)
+		if err != nil {
+			t.Fatal(err)
+		}
+		entries, err := c.bucket.All(t.Context())
+		if err != nil {
+			t.Fatal(err)
+		}
+		for _, e := range entries {
+			if e.Key == fmt.Sprint("p.", r.Partition) {
+				if o := c.bucket.PutAll(t.Context(), []bus.Put{{Key: e.Key, Value: data, Revision: e.Revision}})[0]; o.Err != nil {
+					t.Fatal(o.Err)
+				}
+			}
+		}
+	}
+	code, _, stderr := run(t, "run", "--config", c.services[1].path, "--health", "off")
+	if code != 1 || !strings.Contains(stderr, "the owner before had counted up to") {
+		t.Errorf("another process: %d\n%s", code, stderr)
+	}
+	c.services[0].start() // the last owner has the store, which shows that nothing is lost
+	c.evenly(1)
+	c.feed(40, 20)
+	c.services[0].await("steps", func() bool { return c.steps() >= 60 })
+	c.check()
+	says(t, 1, []string{"processes share the partitions"}, "store", "rebuild", "--config", c.services[0].path, c.services[0].setup().Folder)
 }
 
 // TestAlone checks that a second process is refused where processes do not share,

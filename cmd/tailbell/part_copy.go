@@ -8,6 +8,7 @@ import (
 	"path/filepath"
 	"time"
 
+	"tailbell/ingest/bus"
 	"tailbell/ingest/claim"
 	"tailbell/ingest/control"
 	"tailbell/ingest/copies"
@@ -181,12 +182,17 @@ func removeIfThere(pattern string) error {
 
 // foundStore begins with the copy on the bus that reaches furthest, else from the
 // beginning of the stream; as a last resort with what was put aside here.
-func (d *daemon) foundStore(ctx context.Context, number int) (*store.Store, error) {
+func (d *daemon) foundStore(ctx context.Context, number int, c *claim.Holding) (*store.Store, error) {
 	id, err := d.bus.Identity(ctx)
 	if err != nil {
 		return nil, err
 	}
 	origin := originOf(store.StreamIdentity{Name: id.Stream, Created: id.Created}, d.bus.Divisions())
+	if c.Origin == origin && c.Position > id.Last {
+		return nil, fmt.Errorf("%w: the stream ends at position %d, but the owner before had counted up to %d, which a copy of before would hide. "+
+			"Start tailbell run on that machine (its store has epoch %d): it says what is lost, and tailbell store accept there is the way on",
+			bus.ErrBeyondEnd, id.Last, c.Position, c.Stored)
+	}
 	list, err := copies.List(ctx, d.member.shelf, number)
 	if err != nil {
 		return nil, err
@@ -270,5 +276,5 @@ func (d *daemon) lastResort(number int, first uint64, reaches func(uint64) bool)
 // isLast reports whether a store is that of the last owner. Epochs that the
 // claims have forgotten are in the stream of alerts.
 func isLast(stored uint64, c *claim.Holding, published uint64) bool {
-	return stored >= max(c.Follows, published)
+	return stored >= max(c.Stored, published)
 }

@@ -43,12 +43,12 @@ func (d *daemon) openOwnStore(ctx context.Context, number int, c *claim.Holding)
 		if err := errors.Join(err, st.Close()); err != nil {
 			return nil, err
 		}
-		d.log.Info().Int("partition", number).Uint64("epoch", epoch).Uint64("last", max(c.Follows, last.Epoch)).Msg("the store here is not the last owner's: it is put aside")
+		d.log.Info().Int("partition", number).Uint64("epoch", epoch).Uint64("last", max(c.Stored, last.Epoch)).Msg("the store here is not the last owner's: it is put aside")
 		if err := os.Rename(path, path+staleEnding); err != nil {
 			return nil, err
 		}
 	}
-	return d.foundStore(ctx, number)
+	return d.foundStore(ctx, number, c)
 }
 
 // isOurs reports whether a store, if there is one, is of the stream's present

@@ -132,7 +132,7 @@ func settleOwner(ctx context.Context, b *bus.Bus, next *config.Setup, path strin
 		return nil, err
 	}
 	r = &claim.Row{Partition: q, Holding: claim.Holding{
-		Epoch: max(epoch, last.Epoch) + 1, Follows: max(epoch, last.Epoch), Origin: originOf(stream, number), Told: map[string]uint64{},
+		Epoch: max(epoch, last.Epoch) + 1, Stored: max(epoch, last.Epoch) + 1, Origin: originOf(stream, number), Told: map[string]uint64{},
 	}}
 	if r.Position, err = st.Position(); err != nil {
 		return nil, err

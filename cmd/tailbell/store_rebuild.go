@@ -46,6 +46,9 @@ in .aside-1 and so on: remove it when all is well.`,
 // rebuildStores puts copies in place, all that were given or, if one of them
 // does not fit, none.
 func rebuildStores(ctx context.Context, w io.Writer, setup *config.Setup, from string) (err error) {
+	if setup.Bus.Share {
+		return errors.New("processes share the partitions (share = true under [bus]): each goes on from the copies on the bus by itself, and a store put in place here would be put aside as not the last owner's")
+	}
 	files, err := storeFiles(from)
 	if err != nil {
 		return err

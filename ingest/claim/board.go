@@ -35,8 +35,9 @@ type Holding struct {
 	// Epoch of the owner, or of the last one. It never falls, and every owner
 	// has another.
 	Epoch uint64 `json:"epoch"`
-	// Follows is the epoch of the owner before, 0 for none.
-	Follows uint64 `json:"follows"`
+	// Stored is the epoch of the last owner that has opened its store: that store
+	// is the last one. 0 for none.
+	Stored uint64 `json:"stored"`
 	// Digest is that of the owner's set-up.
 	Digest string `json:"digest"`
 	// Position is up to where the owner had stored the stream.

@@ -259,7 +259,7 @@ func (p *process) win(e Event) {
 	w, n := p.w, e.Partition
 	w.owners[n] = append(w.owners[n], e.Claim.Epoch)
 	part := &work{claim: e.Claim, fence: NewFence(&view{p}, n, e.Claim.Epoch, "in", true), sent: e.Claim.Told["bus"]}
-	if p.stores[n] < e.Claim.Follows && w.steps[n] > 0 { // a copy, of some time before
+	if p.stores[n] < e.Claim.Stored && w.steps[n] > 0 { // a copy, of some time before
 		part.committed = w.random.Uint64N(w.steps[n] + 1)
 	} else {
 		part.committed = e.Claim.Position

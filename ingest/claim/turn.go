@@ -77,7 +77,7 @@ var ErrConflict = bus.ErrConflict
 // mark takes in how far a partition has come.
 func (k *Keeper) mark(n int, h *held) {
 	if m, ok := k.o.Marks(n); ok {
-		h.Position, h.Told, h.Origin = m.Position, m.Told, m.Origin
+		h.Position, h.Told, h.Origin, h.Stored = m.Position, m.Told, m.Origin, h.Epoch
 	}
 }
 
@@ -218,7 +218,7 @@ func (k *Keeper) giveUp(own []int, extra int) {
 // rank orders what is free: first what the own folder has a store of, then in an
 // order of the member's own, so that members rarely want the same.
 func (k *Keeper) rank(b *board, n int) uint64 {
-	if local := k.o.Local(n); local > 0 && local == b.partitions[n].holding.Epoch {
+	if local := k.o.Local(n); local > 0 && local == b.partitions[n].holding.Stored {
 		return 0
 	}
 	h := fnv.New64a()
@@ -237,11 +237,12 @@ func (k *Keeper) take(ctx context.Context, b *board, numbers []int) error {
 	for i, n := range numbers {
 		before := b.partitions[n]
 		h := &held{Holding: before.holding, sent: now}
-		h.Owner, h.Digest, h.Follows = k.name, k.o.Digest, before.holding.Epoch
-		if before.revision == 0 {
-			h.Follows = k.o.Local(n) // from before there were claims
+		h.Owner, h.Digest = k.name, k.o.Digest
+		if before.revision == 0 { // from before there were claims
+			h.Stored = k.o.Local(n)
+			h.Epoch = h.Stored
 		}
-		h.Epoch = h.Follows + 1
+		h.Epoch++
 		claims[i] = h
 		puts[i] = put(keyOf(n), h.Holding, before.revision, 0)
 	}
