@@ -15,7 +15,7 @@ func (s *Setup) Describe(w io.Writer) error {
 	var p prose
 	p.setup(s)
 	for i := range s.Indicators {
-		p.indicator(&s.Indicators[i])
+		p.indicator(&s.Indicators[i], s.KeyParts)
 	}
 	p.memory(s)
 	if _, err := io.WriteString(w, strings.Join(p.lines, "")); err != nil {
@@ -70,7 +70,7 @@ func (p *prose) page(page Page) {
 	}
 }
 
-func (p *prose) indicator(in *Indicator) {
+func (p *prose) indicator(in *Indicator, keyParts int) {
 	p.line("")
 	p.line("%s (%s, from line %d)", in.Title, in.Name, in.Line)
 	patterns := make([]string, len(in.Series))
@@ -80,6 +80,9 @@ func (p *prose) indicator(in *Indicator) {
 	p.line("  Series: %s.", strings.Join(patterns, ", "))
 	if len(in.Sums) > 0 {
 		p.line("  Monitored besides, each as a series of its own, are the sums %s.", sumsText(in))
+		for _, m := range in.Gathered(keyParts) {
+			p.line("  Members of %s may lie in several partitions: what changes in them reaches it at the next boundary of a slot.", m)
+		}
 	}
 	p.counting(in)
 	p.slots(in)

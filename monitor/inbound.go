@@ -78,6 +78,9 @@ func (e *Engine) rejectSummary(m *Message, detail string) {
 // receive puts a summary where it waits for those of other partitions, unless it
 // came before. gap says that one is missing before it.
 func (e *Engine) receive(s *Summary) (repeat, gap bool) {
+	if !s.begins && !slices.ContainsFunc(e.inbounds, func(in *inbound) bool { return in.indicator == s.Indicator && in.life == s.life }) {
+		return true, false // of an indicator that is monitored here no longer
+	}
 	in := e.inboundOf(s.Indicator, s.life)
 	l := &in.lanes[s.Partition]
 	switch {
