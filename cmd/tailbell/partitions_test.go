@@ -2,12 +2,14 @@ package main
 
 import (
 	"encoding/json"
+	"slices"
 	"strings"
 	"syscall"
 	"testing"
 	"time"
 
 	"tailbell/config"
+	"tailbell/monitor"
 )
 
 // listed returns the partitions as listed.
@@ -108,4 +110,18 @@ func TestPartitionsOfSeveral(t *testing.T) {
 		return true
 	})
 	c.services[1].stop(syscall.SIGTERM)
+}
+
+// TestStatusHasRoom tells some of very many conditions, and every silence.
+func TestStatusHasRoom(t *testing.T) {
+	all := slices.Concat(slices.Repeat([]monitor.Condition{{Kind: monitor.WithheldLooks}}, 500), slices.Repeat([]monitor.Condition{{Kind: monitor.Silent}}, 40))
+	s := partStatus{Number: 1}
+	s.addConditions(all, mostConditions/16)
+	if len(s.Conditions) != 62+40 || s.MoreConditions != 500-62 {
+		t.Errorf("%d told, %d more", len(s.Conditions), s.MoreConditions)
+	}
+	var out strings.Builder
+	if err := writePartition(&out, "quillmere", &s); err != nil || !strings.Contains(out.String(), "and 438 conditions more") {
+		t.Errorf("%v: %s", err, out.String())
+	}
 }

@@ -104,6 +104,9 @@ func writePartition(w io.Writer, name string, p *partStatus) error {
 			return err
 		}
 	}
+	if p.MoreConditions > 0 {
+		return say(w, "  and %s more", amount(p.MoreConditions, "conditions"))
+	}
 	return nil
 }
 

@@ -80,8 +80,11 @@ type partStatus struct {
 	Series     int             `json:"series"` // that are monitored, sums among them
 	Account    monitor.Account `json:"account"`
 	Conditions []conditionRow  `json:"conditions"`
-	Outlets    []outletRow     `json:"outlets"`
-	OpenAlerts int             `json:"open_alerts"`
+	// MoreConditions counts those beyond the ones told: a reply has to find room in a
+	// message of the bus. Series that are silent are all told.
+	MoreConditions int         `json:"more_conditions,omitempty"`
+	Outlets        []outletRow `json:"outlets"`
+	OpenAlerts     int         `json:"open_alerts"`
 	// Owner is the process that owns the partition, Epoch its own. Copy is the last
 	// copy of the store on the bus, nil for none.
 	Owner string   `json:"owner"`
@@ -97,6 +100,24 @@ type conditionRow struct {
 	Window    string                `json:"window,omitempty"`
 	Since     time.Time             `json:"since"`
 	Text      string                `json:"text"`
+}
+
+// mostConditions is about how many conditions a status tells, over all partitions.
+const mostConditions = 1000
+
+// addConditions adds conditions, but of others than silence only so many, twenty at
+// least.
+func (s *partStatus) addConditions(all []monitor.Condition, most int) {
+	named := 0
+	for _, c := range all {
+		if c.Kind != monitor.Silent {
+			if named++; named > max(20, most) {
+				s.MoreConditions++
+				continue
+			}
+		}
+		s.Conditions = append(s.Conditions, conditionRowOf(c))
+	}
 }
 
 func conditionRowOf(c monitor.Condition) conditionRow {
@@ -179,9 +200,7 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 			}
 			_, s.Version = e.Setup()
 			s.Account, s.Series = e.Account(), e.SeriesCount()
-			for _, c := range e.Conditions() {
-				s.Conditions = append(s.Conditions, conditionRowOf(c))
-			}
+			s.addConditions(e.Conditions(), mostConditions/d.setup.Partitions)
 			s.OpenAlerts = openAlerts(e)
 		})
 		if err != nil {
