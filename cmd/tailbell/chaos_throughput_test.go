@@ -21,7 +21,7 @@ func TestSharedThroughput(t *testing.T) {
 		t.Skip("takes minutes of a machine with nothing else to do: -chaos.throughput")
 	}
 	for processes := 1; processes <= 3; processes++ {
-		x := newChaos(t, processes, ordeal.Options{Days: 20, Sites: 300, Partitions: chaosPartitions})
+		x := newChaos(t, processes, ordeal.Options{Days: 20, Sites: 100, Partitions: chaosPartitions})
 		elements := 0
 		for i := range x.plan.Messages {
 			elements += len(x.plan.Messages[i].Elements)
