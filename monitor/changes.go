@@ -107,7 +107,8 @@ type Snapshot struct {
 	Position uint64
 	Header   []byte
 	// Series holds, by number, the last whole state (nil if only patches
-	// exist) and all patches kept, oldest first, to lay over it.
+	// exist) and the patches that were handed over by later Drains, oldest first,
+	// to lay over it.
 	Series []SeriesImage
 	// IDs are those of the generations that were not dropped, in the order in
 	// which they were written: a later one replaces an earlier one.

@@ -52,10 +52,13 @@ func (m *Memory) Commit(c Changes) {
 	for _, p := range c.Series {
 		m.patches = append(m.patches, patchAt{c.Cycle, p})
 	}
+	whole := map[uint32]bool{}
 	for _, s := range c.States {
 		m.states[s.Number] = s.Data
+		whole[s.Number] = true
 	}
-	m.patches = slices.DeleteFunc(m.patches, func(p patchAt) bool { return p.cycle+2 <= c.Cycle })
+	// A state holds what all patches before it say.
+	m.patches = slices.DeleteFunc(m.patches, func(p patchAt) bool { return p.cycle+2 <= c.Cycle || whole[p.Number] })
 	for _, g := range c.RewrittenGenerations {
 		delete(m.ids, g)
 	}

@@ -263,11 +263,31 @@ func TestHalfAnEntryTrimmed(t *testing.T) {
 		mustCommit(t, s, monitor.Changes{Position: position, Series: []monitor.SeriesChange{{Number: 0}}}, Mark{})
 	}
 	mustCommit(t, s, monitor.Changes{Position: 1000, Series: big}, Mark{})
-	states := []monitor.SeriesChange{{Number: 0}, {Number: 1}, {Number: 2}}
+	states := []monitor.SeriesChange{{Number: 0}, {Number: 1}} // the last one's patch still counts
 	mustCommit(t, s, monitor.Changes{Position: 1001, States: states, Cycle: 2}, Mark{})
 	s = reopen(t, s)
 	snap, err := s.Snapshot()
 	if err != nil || len(snap.Series[0].Patches) != 0 || len(snap.Series[2].Patches) != 1 {
 		t.Errorf("Snapshot: %d patches of the first, %d of the last, %v", len(snap.Series[0].Patches), len(snap.Series[2].Patches), err)
+	}
+}
+
+// TestPatchesAfterTheState: a state holds what the patches of its own commit say,
+// and those before it: only later ones are laid over it.
+func TestPatchesAfterTheState(t *testing.T) {
+	s := create(t, Options{})
+	say := func(text string) []monitor.SeriesChange { return []monitor.SeriesChange{{Data: []byte(text)}} }
+	mustCommit(t, s, monitor.Changes{Position: 1, Series: say("one")}, Mark{})
+	mustCommit(t, s, monitor.Changes{Position: 2, Series: say("two"), States: say("whole")}, Mark{})
+	mustCommit(t, s, monitor.Changes{Position: 3, Series: say("three")}, Mark{})
+	mustCommit(t, s, monitor.Changes{Position: 4, Series: say("four")}, Mark{})
+	s = reopen(t, s)
+	snap, err := s.Snapshot()
+	if err != nil {
+		t.Fatal(err)
+	}
+	image := snap.Series[0]
+	if got := fmt.Sprintf("%s %s", image.State, image.Patches); got != "whole [three four]" {
+		t.Errorf("Snapshot: %s", got)
 	}
 }

@@ -239,7 +239,7 @@ func readGeneration(ids rack, key []byte, want census, last uint64) ([]shelved, 
 		}
 		have.Packs++
 		have.Last = first
-		n, f := first, fields{rest: payload}
+		n, f := first, fields{rest: append([]byte(nil), payload...)} // all of a pack lie in one copy
 		for len(f.rest) > 0 {
 			n += f.uvarint()
 			id := f.bytes(f.uvarint())
@@ -247,7 +247,7 @@ func readGeneration(ids rack, key []byte, want census, last uint64) ([]shelved, 
 				return nil, r.damaged(at, "an id makes no sense")
 			}
 			found = append(found, shelved{n, monitor.IDChange{
-				Generation: generation, Value: append([]byte(nil), id...),
+				Generation: generation, Value: id,
 			}})
 			have.IDs++
 		}

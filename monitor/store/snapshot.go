@@ -44,60 +44,24 @@ func (s *Store) Snapshot() (monitor.Snapshot, error) {
 	return snap, err
 }
 
-// readSeries returns the last whole state of every series with the patches
-// kept, oldest first.
-func readSeries(tx *bolt.Tx, h *head) ([]monitor.SeriesImage, error) {
-	r, err := statesShelf.in(tx)
-	if err != nil {
-		return nil, err
-	}
-	series, states := make([]monitor.SeriesImage, h.Series), uint32(0)
-	err = r.ForEach(func(key, value []byte) error {
-		n, _, data, err := r.state(key, value)
-		if err != nil {
-			return err
-		}
-		if n >= h.Series {
-			return r.damaged(key, fmt.Sprintf("there are %d series", h.Series))
-		}
-		series[n].State = append([]byte{}, data...)
-		states++
-		return nil
-	})
-	if err == nil && states != h.States {
-		err = r.damaged(nil, fmt.Sprintf("%d states instead of %d", states, h.States))
-	}
-	if err != nil {
-		return nil, err
-	}
-	err = eachPart(tx, h, func(key []byte, p part) error {
-		stray := false
-		err := p.each(func(n uint32, data []byte) {
-			if n >= h.Series {
-				stray = true
-				return
-			}
-			series[n].Patches = append(series[n].Patches, append([]byte{}, data...))
-		})
-		if err == nil && stray {
-			err = journalShelf.damaged(key, fmt.Sprintf("there are %d series", h.Series))
-		}
-		return err
-	})
-	return series, err
-}
-
 // readIDs returns the ids of all generations in the order of their writing.
 func readIDs(tx *bolt.Tx, h *head) ([]monitor.IDChange, error) {
 	var all []shelved
 	err := eachGeneration(tx, h, func(_ int64, ids []shelved) error {
-		all = append(all, ids...)
+		if all == nil {
+			all = ids
+		} else {
+			all = append(all, ids...)
+		}
 		return nil
 	})
 	if err != nil || len(all) == 0 {
 		return nil, err
 	}
-	slices.SortFunc(all, func(a, b shelved) int { return cmp.Compare(a.number, b.number) })
+	byNumber := func(a, b shelved) int { return cmp.Compare(a.number, b.number) }
+	if !slices.IsSortedFunc(all, byNumber) {
+		slices.SortFunc(all, byNumber)
+	}
 	ids := make([]monitor.IDChange, len(all))
 	for i := range all {
 		ids[i] = all[i].id
