@@ -272,6 +272,11 @@ func (r *reader) byte() byte {
 func (r *reader) flag() bool { return r.byte() != 0 }
 
 func (r *reader) int() int64 {
+	if len(r.b) > 0 && r.b[0] < 0x80 { // most are small
+		v := int64(r.b[0])
+		r.b = r.b[1:]
+		return v>>1 ^ -(v & 1)
+	}
 	v, n := binary.Varint(r.b)
 	if n <= 0 {
 		r.fail("a number is cut off")
@@ -282,6 +287,11 @@ func (r *reader) int() int64 {
 }
 
 func (r *reader) uint() uint64 {
+	if len(r.b) > 0 && r.b[0] < 0x80 {
+		v := uint64(r.b[0])
+		r.b = r.b[1:]
+		return v
+	}
 	v, n := binary.Uvarint(r.b)
 	if n <= 0 {
 		r.fail("a number is cut off")
@@ -301,9 +311,12 @@ func (r *reader) length() int {
 	return int(n)
 }
 
-func (r *reader) string() string {
+func (r *reader) string() string { return string(r.bytes()) }
+
+// bytes reads a string; it shares the encoding's memory.
+func (r *reader) bytes() []byte {
 	n := r.length()
-	s := string(r.b[:n])
+	s := r.b[:n]
 	r.b = r.b[n:]
 	return s
 }

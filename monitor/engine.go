@@ -27,6 +27,7 @@ import (
 	"encoding/json"
 	"fmt"
 	"slices"
+	"sync"
 
 	"tailbell/config"
 	"tailbell/monitor/allowance"
@@ -80,6 +81,7 @@ type Engine struct {
 	allowances allowance.Cache
 	solved     map[solvedFor]*solution
 	solutions  map[string]*solution
+	sharing    sync.Mutex // held while solutions are: series are read side by side
 
 	// gathered is the moment at which sums are being gathered, Never when none
 	// are.

@@ -178,7 +178,11 @@ func (x *ids) has(key idKey) bool { return x.find(key, x.hashOf(key)) != noPlace
 // get returns what is known of the key, nil if nothing is. It holds until the
 // next call.
 func (x *ids) get(key idKey, all []*series) *identified {
-	place := x.find(key, x.hashOf(key))
+	return x.told(x.find(key, x.hashOf(key)), key, all)
+}
+
+// told is get where the key's place is known.
+func (x *ids) told(place uint32, key idKey, all []*series) *identified {
 	if place == noPlace {
 		return nil
 	}
@@ -196,7 +200,11 @@ func (x *ids) get(key idKey, all []*series) *identified {
 // put remembers what the observation said.
 func (x *ids) put(entry *identified) {
 	hash := x.hashOf(entry.key)
-	place := x.find(entry.key, hash)
+	x.putAt(x.find(entry.key, hash), hash, entry)
+}
+
+// putAt is put where the key's hash and its place, if it has one, are known.
+func (x *ids) putAt(place uint32, hash uint64, entry *identified) {
 	if place == noPlace {
 		place = x.take(hash)
 	}

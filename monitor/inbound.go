@@ -300,8 +300,8 @@ func (s *series) encodeMirror(b []byte, at int, whole bool) []byte {
 // overlayMirror lays one encoding over a mirror.
 func (e *Engine) overlayMirror(s *series, r *reader, version, flags byte) error {
 	if flags&flagNamed != 0 {
-		*s = series{number: s.number, name: r.string()}
-		if ix := e.indicatorNamed(r.string()); ix != nil && ix.gathering != nil {
+		*s = series{number: s.number, name: r.string(), cells: s.cells[:0]}
+		if ix := e.indicatorNamed(r.bytes()); ix != nil && ix.gathering != nil {
 			s.indicator = ix.gathering.sums
 		}
 	}
@@ -323,9 +323,9 @@ func (e *Engine) overlayMirror(s *series, r *reader, version, flags byte) error 
 	return r.err
 }
 
-func (e *Engine) indicatorNamed(name string) *indicator {
+func (e *Engine) indicatorNamed(name []byte) *indicator {
 	for _, ix := range e.indicators {
-		if ix.cfg.Name == name {
+		if ix.cfg.Name == string(name) {
 			return ix
 		}
 	}

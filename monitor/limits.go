@@ -265,6 +265,8 @@ func (e *Engine) share(x solution) *solution {
 	for _, a := range x.arrival {
 		key = appendFloat(key, a)
 	}
+	e.sharing.Lock()
+	defer e.sharing.Unlock()
 	if known := e.solutions[string(key)]; known != nil {
 		return known
 	}

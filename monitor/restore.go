@@ -26,19 +26,15 @@ func Restore(p Partition, snap *Snapshot, record func(id string) (life.Record, e
 	if err := e.restoreHeader(&h, snap.Settings); err != nil {
 		return nil, err
 	}
-	for number := range snap.Series {
-		if err := e.restoreSeries(uint32(number), &snap.Series[number], record); err != nil {
-			return nil, fmt.Errorf("monitor: restoring series %d: %w", number, err)
-		}
+	if err := e.restoreAll(snap.Series, record); err != nil {
+		return nil, err
 	}
 	e.relink()
 	if err := e.restoreInbounds(&h, snap.Waiting); err != nil {
 		return nil, err
 	}
-	for i := range snap.IDs {
-		if err := e.restoreID(&snap.IDs[i]); err != nil {
-			return nil, fmt.Errorf("monitor: restoring id %d: %w", i, err)
-		}
+	if err := e.restoreIDs(snap.IDs); err != nil {
+		return nil, err
 	}
 	e.restoreComings()
 	e.reschedule()
@@ -129,62 +125,6 @@ func (ix *indicator) resume(ih *indicatorHeader) {
 	ix.pass(ih.Looked)
 }
 
-func (e *Engine) restoreSeries(number uint32, image *SeriesImage, record func(string) (life.Record, error)) error {
-	s := &series{number: number}
-	layers := image.Patches
-	if image.State != nil {
-		layers = append([][]byte{image.State}, image.Patches...)
-	}
-	for i := len(layers) - 1; i > 0; i-- { // older ones may be of another series
-		if l := layers[i]; len(l) > 1 && l[1]&flagNamed != 0 {
-			layers = layers[i:]
-			break
-		}
-	}
-	if len(layers) == 1 && len(layers[0]) > 1 && layers[0][1]&flagRetired != 0 {
-		return e.restoreStub(number, layers[0])
-	}
-	for _, layer := range layers {
-		if err := e.overlay(s, layer); err != nil {
-			return err
-		}
-	}
-	switch {
-	case s.mirror:
-		return e.restoreMirror(s)
-	case s.name == "":
-		return fmt.Errorf("it was never named: %w", errEncoding)
-	case s.indicator == nil:
-		return fmt.Errorf("%w: the indicator of %q is not in force", errEncoding, s.name)
-	}
-	for _, d := range [...]direction{upper, lower, silence} {
-		for _, a := range s.tail(d).all() {
-			var err error
-			if a.record, err = record(a.record.ID); err != nil {
-				return fmt.Errorf("alert %s: %w", a.record.ID, err)
-			}
-			e.alerts[a.record.ID] = a
-			if a.pending {
-				e.pending = append(e.pending, a)
-			}
-		}
-	}
-	s.makePlaces()
-	if !s.isGathered() || s.unsummed { // else they are stored: some acts may wait for it
-		s.dates = e.datesOf(s.indicator, s.name)
-	}
-	s.derive()
-	s.cells = slices.DeleteFunc(s.cells, func(c cell) bool { return c.slot < s.trimmed })
-	s.eventIDs.forget(s.trimmed)
-	e.series = append(e.series, s)
-	e.living++
-	e.byName[s.name] = s
-	s.indicator.series = append(s.indicator.series, s)
-	s.indicator.resters.awake.add(s.number)
-	s.alarm = noAlarm
-	return nil
-}
-
 // restoreStub puts a stub in the place of a series that has ended.
 func (e *Engine) restoreStub(number uint32, data []byte) error {
 	r := &reader{b: data}
@@ -235,8 +175,8 @@ func (e *Engine) overlay(s *series, data []byte) error {
 	case flags&flagRetired != 0:
 		return fmt.Errorf("%w: more follows after the series had ended", errEncoding)
 	case flags&flagNamed != 0:
-		*s = series{number: s.number, name: r.string()}
-		s.indicator = e.indicatorNamed(r.string()) // nil: it must be a stub by now
+		*s = series{number: s.number, name: r.string(), cells: s.cells[:0]}
+		s.indicator = e.indicatorNamed(r.bytes()) // nil: it must be a stub by now
 		e.overlayGathered(s, flags)
 	}
 	if flags&flagNews != 0 {
@@ -249,7 +189,12 @@ func (e *Engine) overlay(s *series, data []byte) error {
 		*s.tail(silence) = r.tail(s, silence)
 	}
 	s.birth, s.trimmed, s.unpaired, s.seen = r.int(), r.int(), r.int(), Instant(r.int())
-	s.windows = make([]windowState, r.length())
+	if n := r.length(); n <= cap(s.windows) {
+		s.windows = s.windows[:n]
+		clear(s.windows)
+	} else {
+		s.windows = make([]windowState, n)
+	}
 	for w := range s.windows {
 		ws := &s.windows[w]
 		ws.withheld, ws.hasMade = status(r.byte()), r.flag()
@@ -276,7 +221,9 @@ func (e *Engine) overlay(s *series, data []byte) error {
 		c, here := r.cell(s, version)
 		if ids := r.ids(); here {
 			*s.at(c.slot) = c
-			s.eventIDs.set(c.slot, ids)
+			if len(ids)+len(s.eventIDs) > 0 {
+				s.eventIDs.set(c.slot, ids)
+			}
 		}
 	}
 	if len(r.b) > 0 {
@@ -360,35 +307,4 @@ func (r *reader) tail(s *series, d direction) tail {
 		t.lit = append(t.lit, l)
 	}
 	return t
-}
-
-func (e *Engine) restoreID(change *IDChange) error {
-	r := &reader{b: change.Value}
-	if v := r.byte(); v != idVersion {
-		return fmt.Errorf("%w: encoding %d is not known to this program", errEncoding, v)
-	}
-	x := &identified{generation: change.Generation, retracted: r.flag()}
-	x.key = idKey{r.string(), r.string()}
-	x.revision = r.int()
-	if r.flag() {
-		number := r.uint()
-		if number >= uint64(len(e.series)) {
-			return fmt.Errorf("%w: an id names series %d of %d", errEncoding, number, len(e.series))
-		}
-		x.stub = uint32(number)
-		x.said = contribution{
-			series: e.series[number], start: Instant(r.int()), end: Instant(r.int()), events: r.int(),
-			exposure: r.quantity(), hasEvents: r.flag(), hasExposure: r.flag(), late: r.flag(),
-		}
-	}
-	if r.err != nil {
-		return r.err
-	}
-	e.ids.generation(x.generation).written++
-	switch old := e.ids.get(x.key, e.series); {
-	case old == nil, old.gone(), !x.gone() && x.revision > old.revision:
-		e.ids.put(x)
-	}
-	e.ids.touched = nil
-	return nil
 }

@@ -14,7 +14,7 @@ func TestStubsOfOldAreRead(t *testing.T) {
 	}
 	e := New(Partition{Of: 1, KeyParts: 1})
 	e.clock = 77
-	if err := e.restoreSeries(0, &SeriesImage{State: b}, nil); err != nil {
+	if err := e.restoreAll([]SeriesImage{{State: b}}, nil); err != nil {
 		t.Fatal(err)
 	}
 	x := e.stubs.byName["quillmere/a/fall"]
@@ -22,14 +22,14 @@ func TestStubsOfOldAreRead(t *testing.T) {
 		t.Fatalf("%+v", x)
 	}
 	again := New(Partition{Of: 1, KeyParts: 1})
-	if err := again.restoreSeries(0, &SeriesImage{State: x.encode(nil)}, nil); err != nil {
+	if err := again.restoreAll([]SeriesImage{{State: x.encode(nil)}}, nil); err != nil {
 		t.Fatal(err)
 	}
 	x.touched = false
 	if y := again.stubs.byName["quillmere/a/fall"]; *y != *x {
 		t.Fatalf("written %+v, read %+v", *x, *y)
 	}
-	if err := e.restoreSeries(1, &SeriesImage{State: b[:len(b)-1]}, nil); err == nil {
+	if err := e.restoreAll([]SeriesImage{{State: b[:len(b)-1]}}, nil); err == nil {
 		t.Error("half a stub is read")
 	}
 }
