@@ -100,6 +100,8 @@ type pages struct {
 	sheet
 	f    *os.File
 	seen []bool
+	// spare is memory of pages that were checked, for others.
+	spare [][]byte
 }
 
 // readPages checks all pages of a file and returns what its meta pages say.
@@ -138,7 +140,7 @@ func (p *pages) run(id uint64) ([]byte, error) {
 	if id < 2 || id >= p.high {
 		return nil, p.bad(id, "there is no such page")
 	}
-	page := make([]byte, p.pageSize)
+	page := p.memory(p.pageSize)
 	if _, err := p.f.ReadAt(page, int64(id*p.pageSize)); err != nil {
 		return nil, p.bad(id, "%v", err)
 	}
@@ -155,11 +157,24 @@ func (p *pages) run(id uint64) ([]byte, error) {
 	if over == 0 {
 		return page, nil
 	}
-	page = make([]byte, (over+1)*p.pageSize)
+	p.spare = append(p.spare, page)
+	page = p.memory((over + 1) * p.pageSize)
 	if _, err := p.f.ReadAt(page, int64(id*p.pageSize)); err != nil {
 		return nil, p.bad(id, "%v", err)
 	}
 	return page, nil
+}
+
+// memory returns so many bytes; whoever is done with them puts them to the spare.
+func (p *pages) memory(size uint64) []byte {
+	if n := len(p.spare); n > 0 {
+		b := p.spare[n-1]
+		p.spare = p.spare[:n-1]
+		if uint64(cap(b)) >= size {
+			return b[:size]
+		}
+	}
+	return make([]byte, size)
 }
 
 // tree checks the pages under a root; keys lie in [low, high), nil for no bound.
@@ -168,6 +183,7 @@ func (p *pages) tree(id uint64, low, high []byte) error {
 	if err != nil {
 		return err
 	}
+	defer func() { p.spare = append(p.spare, page) }()
 	switch order.Uint16(page[8:]) {
 	case flagLeaf:
 		return p.leaf(id, page, low, high)
