@@ -15,6 +15,7 @@ bin=$(mktemp -d)
 trap 'rm -rf "$bin"' EXIT
 go test -c -o "$bin/cmd" ./cmd/tailbell
 go test -c -o "$bin/monitor" ./monitor
+go test -c -o "$bin/partition" ./monitor/partition
 echo "Taken $(date -u +%F) on $(nproc) cores, $(uname -sm), $(go env GOVERSION); load $(cut -d' ' -f1-3 /proc/loadavg). All that was said: $log" >&2
 
 # part NAME FOLDER COMMAND...: runs the command in the folder and prints its rows.
@@ -42,6 +43,7 @@ yard 'embedded 10000 series, 1 a message' 3
 part million monitor "$bin/monitor" -test.run 'TestMillion$' -test.v -test.timeout 0 -million 1000000 -million-minutes 12
 yard 'embedded 10000 series, 100 a message' 3
 yard 'idle' 1
+part start monitor/partition "$bin/partition" -test.run '^$' -test.bench 'Start/series=100000' -test.benchtime 5x
 yard 'embedded 100000 series, 100 a message' 2
 bench 'Look$' 2s
 bench 'Partitions' 5s
