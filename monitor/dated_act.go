@@ -76,6 +76,7 @@ func (e *Engine) openNew(f *fact) (Reason, string) {
 	if s == nil {
 		s = e.enter(ix, f.Series)
 		e.link(s)
+		e.inheritAgain(s)
 	}
 	s.birth = ix.firstFrom(f.From)
 	e.inform(s, s.birth, ix.looked-1, true, "")
@@ -113,10 +114,14 @@ func (e *Engine) keepFacts(facts []fact) {
 	e.factsJSON = nil
 }
 
-// forgetFacts drops what no look needs any more.
+// forgetFacts drops what no look needs any more. Spans out of service are needed
+// as long as series may retire but for them.
 func (e *Engine) forgetFacts() {
-	oldest := Never
+	oldest, out := Never, Never
 	for _, ix := range e.indicators {
+		if ix.cfg.Retire > 0 {
+			out = min(out, ix.cal.Start(ix.cal.Slot(e.clock.Add(-ix.cfg.Retire))))
+		}
 		for _, k := range ix.kin() {
 			if !k.started {
 				return
@@ -125,7 +130,11 @@ func (e *Engine) forgetFacts() {
 		}
 	}
 	e.keepFacts(slices.DeleteFunc(slices.Clone(e.facts), func(f fact) bool {
-		return !f.turns() && max(f.From, f.Until) < oldest
+		needed := oldest
+		if f.Kind == OutOfService {
+			needed = min(oldest, out)
+		}
+		return !f.turns() && max(f.From, f.Until) < needed
 	}))
 }
 

@@ -22,7 +22,7 @@ func (ix *indicator) retiresAt(boundary int64) bool {
 func (e *Engine) retire(ix *indicator, now Instant) {
 	var over []*series
 	for _, s := range ix.series {
-		if ix.isOver(s, now) {
+		if e.isOver(s, now) {
 			over = append(over, s)
 		}
 	}
@@ -58,7 +58,8 @@ func (e *Engine) retire(ix *indicator, now Instant) {
 // isOver reports whether the series retires: nothing was heard of it for so long,
 // no window can see anything of it, and nobody has to do with an alert of it.
 // Members of gathered sums stay: other partitions know of them.
-func (ix *indicator) isOver(s *series, now Instant) bool {
+func (e *Engine) isOver(s *series, now Instant) bool {
+	ix := s.indicator
 	if n := len(s.cells); n > 0 && s.cells[n-1].slot >= ix.kept || s.sum != nil || s.news != nil || s.heir != nil || len(s.marked) > 0 || !s.isAtRest() {
 		return false
 	}
@@ -66,8 +67,10 @@ func (ix *indicator) isOver(s *series, now Instant) bool {
 	if heard == Beginning || now < heard.Add(ix.cfg.Retire) || s.arrivals != nil && s.arrivals.log.Len() > 0 {
 		return false
 	}
-	if s.dates != nil && s.dates.outs.touch(ix.cal.Slot(now.Add(-ix.cfg.Retire)), ix.cal.Slot(now)+1) {
-		return false // people said why
+	if s.dates != nil { // some of them may be forgotten by now
+		if d := e.datesOf(ix, s.name); d != nil && d.outs.touch(ix.cal.Slot(now.Add(-ix.cfg.Retire)), ix.cal.Slot(now)+1) {
+			return false // people said why
+		}
 	}
 	return !ix.cfg.Names(s.name) && !slices.ContainsFunc(s.heirs, func(h *series) bool { return h.heir.until > ix.kept })
 }
