@@ -28,10 +28,10 @@ func (e *Engine) dismissSeries(ix *indicator) {
 			e.dismissAlerts(s.silence, ix)
 		}
 		for i := range s.cells {
-			if s.sum != nil {
-				break // what it holds is its members'
-			}
 			c := &s.cells[i]
+			if s.sum != nil || s.inherited(c.slot) {
+				continue // what it holds is that of others
+			}
 			if !ix.needs.paired(c) {
 				s.unpaired += int64(c.items)
 			}

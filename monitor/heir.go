@@ -112,6 +112,29 @@ func (e *Engine) inherit(f *fact, into *series) {
 	}
 }
 
+// inheritAgain lets a series take the place of those that it had taken the place of
+// before its indicator went: the acts that said so still hold.
+func (e *Engine) inheritAgain(into *series) {
+	if into.sum != nil {
+		return
+	}
+	for i := range e.facts {
+		if f := &e.facts[i]; f.Into == into.name {
+			e.inherit(f, into)
+		}
+	}
+	if into.heir == nil {
+		return
+	}
+	for _, s := range into.heir.sources {
+		into.birth = min(into.birth, s.birth)
+	}
+	if ix := into.indicator; into.birth != unborn && ix.started {
+		ix.resum(into, into.birth, into.heir.until-1)
+		e.inform(into, into.birth, ix.looked-1, true, "")
+	}
+}
+
 // bequeath links a series that is there again to those that took its place.
 func (e *Engine) bequeath(s *series) {
 	for i := range e.facts {

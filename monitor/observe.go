@@ -258,6 +258,7 @@ func (e *Engine) birth(ix *indicator, o *Observation, c *contribution) (Reason, 
 	}
 	c.series = e.enter(ix, o.Series)
 	e.link(c.series)
+	e.inheritAgain(c.series)
 	return "", ""
 }
 

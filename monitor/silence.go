@@ -162,6 +162,7 @@ func (e *Engine) enterExpected() {
 			s := e.enter(ix, name.String())
 			s.seen = e.clock
 			e.link(s)
+			e.inheritAgain(s)
 		}
 	}
 }
