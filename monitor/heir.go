@@ -14,6 +14,8 @@ import (
 type inheritance struct {
 	until   int64
 	sources []*series
+	// taken is when people said so first.
+	taken Instant
 }
 
 // inherited reports whether the slot is counted elsewhere.
@@ -102,7 +104,7 @@ func (e *Engine) succeedTo(list []change, f *fact) []change {
 func (e *Engine) inherit(f *fact, into *series) {
 	into.indicator.inherits = true
 	if into.heir == nil {
-		into.heir = &inheritance{until: into.indicator.firstFrom(f.From)}
+		into.heir = &inheritance{until: into.indicator.firstFrom(f.From), taken: f.Taken}
 	}
 	for _, s := range e.matched(f) {
 		if s.sum == nil && s.indicator == into.indicator && !slices.Contains(into.heir.sources, s) {

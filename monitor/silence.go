@@ -81,7 +81,7 @@ func (s *series) heardAt() Instant {
 	case s.seen != 0:
 		return s.seen
 	case s.heir != nil:
-		return s.indicator.cal.Start(s.heir.until)
+		return max(s.indicator.cal.Start(s.heir.until), s.heir.taken)
 	case s.birth != unborn:
 		return s.indicator.cal.Start(s.birth)
 	}
