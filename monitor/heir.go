@@ -96,7 +96,8 @@ func (e *Engine) succeedTo(list []change, f *fact) []change {
 	for _, s := range into.heir.sources {
 		begin = min(begin, s.birth)
 	}
-	return e.changeSum(list, into, begin, into.heir.until-1)
+	list = e.changeSum(list, into, begin, into.heir.until-1)
+	return e.changeSums(list, into, into.heir.until, ix.looked-1) // it is a member from then on
 }
 
 // inherit links a series to those whose place it takes, beside others that it
