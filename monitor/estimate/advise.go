@@ -77,8 +77,8 @@ func (a *analysis) adviseFew() {
 	a.say("%s.", text)
 }
 
-// falseAlerts compares the crossings of the first window if the true rate lies
-// at the bounds of the estimate with those if it is the estimate.
+// falseAlerts compares the crossings of the first span of time if the true rate
+// lies at the bounds of the estimate with those if it is the estimate.
 func (a *analysis) falseAlerts() (low, high float64, ok bool) {
 	in, p := a.Indicator, a.r.Pooled
 	exposure, slots := 0.0, 0
@@ -86,7 +86,11 @@ func (a *analysis) falseAlerts() (low, high float64, ok bool) {
 		exposure += a.Series[i].exposure()
 		slots += len(a.Series[i].Slots)
 	}
-	w := in.Windows[0]
+	windows := spans(in)
+	if len(windows) == 0 {
+		return 0, 0, false
+	}
+	w := windows[0]
 	limit := in.PLimit
 	if limit == 0 {
 		limit = 0.001
@@ -141,7 +145,7 @@ func (a *analysis) worstSpread() *Spread {
 	var worst *Spread
 	for i := range a.r.Within {
 		s := &a.r.Within[i]
-		isWindow := s.Slots == 1 || slices.ContainsFunc(a.Indicator.Windows, func(w config.Window) bool { return w.Slots == s.Slots })
+		isWindow := s.Slots == 1 || slices.ContainsFunc(spans(a.Indicator), func(w config.Window) bool { return w.Slots == s.Slots })
 		if isWindow && s.Chance.P < believed && s.Phi > 1 && (worst == nil || s.Phi > worst.Phi) {
 			worst = s
 		}
@@ -258,10 +262,11 @@ func (a *analysis) adviseSeasons(spread bool) {
 	}
 }
 
-// wholeWeeks reports whether every window is of whole weeks.
+// wholeWeeks reports whether every window is of whole weeks, as those of trials
+// are not.
 func (a *analysis) wholeWeeks() bool {
 	return a.Indicator.Every == (config.Every{N: 1, Unit: config.Day}) &&
-		!slices.ContainsFunc(a.Indicator.Windows, func(w config.Window) bool { return w.Slots%7 != 0 })
+		!slices.ContainsFunc(a.Indicator.Windows, func(w config.Window) bool { return w.Trials > 0 || w.Slots%7 != 0 })
 }
 
 // drift returns the spread over a slot and the greatest one that is believed,

@@ -3,6 +3,7 @@ package estimate
 import (
 	"context"
 	"fmt"
+	"slices"
 	"time"
 
 	"tailbell/config"
@@ -170,10 +171,16 @@ func ladder(in *config.Indicator) []int {
 	case config.Year:
 		slots = []int{1, 2, 5, 10}
 	}
-	for _, w := range in.Windows {
+	for _, w := range spans(in) {
 		slots = append(slots, w.Slots)
 	}
 	return slots
+}
+
+// spans returns the windows that are spans of time. Those of the last so many
+// trials have no length in slots, so nothing is said of them.
+func spans(in *config.Indicator) []config.Window {
+	return slices.DeleteFunc(slices.Clone(in.Windows), func(w config.Window) bool { return w.Trials > 0 })
 }
 
 // lengthOf writes a number of slots as a span.

@@ -130,7 +130,7 @@ func Analyse(ctx context.Context, h *History, o Options) (*Report, error) {
 		Seed: o.Seed, Unit: in.Unit, Per: in.Per, Level: 1 - in.Alpha,
 	}}
 	lengths := a.lengths()
-	a.total = len(h.Series) + 2*len(lengths) + len(parts(in.Every)) + len(in.Windows) + 4
+	a.total = len(h.Series) + 2*len(lengths) + len(parts(in.Every)) + len(spans(in)) + 4
 	sum := h.summed()
 	a.r.Pooled = h.rate(&sum)
 	a.pooled(ctx, lengths, sum)
@@ -149,7 +149,7 @@ func Analyse(ctx context.Context, h *History, o Options) (*Report, error) {
 	if len(h.Series) > 1 {
 		a.r.Excesses = h.excesses()
 	}
-	for _, w := range in.Windows {
+	for _, w := range spans(in) {
 		a.step(func(resample.Plan) error {
 			if x := h.windows(w, a.phiAt(w.Slots)); x != nil {
 				a.r.Windows = append(a.r.Windows, x)

@@ -6,6 +6,7 @@ import (
 	"errors"
 	"fmt"
 	"math"
+	"reflect"
 	"strings"
 	"testing"
 
@@ -247,6 +248,31 @@ func TestProportion(t *testing.T) {
 	}
 	if p := r.Within[0].Chance.P; p > 0.01 {
 		t.Errorf("p is %g", p)
+	}
+}
+
+// TestWindowsOfTrials: the last so many trials have no length in slots. What is
+// said is that of the spans of time alone, if there are any.
+func TestWindowsOfTrials(t *testing.T) {
+	analyse := func(windows ...config.Window) *Report {
+		in := plain()
+		in.Measure, in.Windows = config.Proportion, windows
+		h := historyOf(in, seriesOf("x/a", []int64{2, 0, 1, 3, 1, 0, 2, 1, 9, 1, 0, 2}, func(int) float64 { return 40 }))
+		r, err := Analyse(t.Context(), h, Options{Seed: 1, Draws: 1000})
+		if err != nil {
+			t.Fatal(err)
+		}
+		return r
+	}
+	trials, span := config.Window{Name: "200 trials", Trials: 200, Step: 1}, config.Window{Name: "2d", Slots: 2, Step: 1}
+	alone := analyse(trials)
+	near(t, "proportion", alone.Pooled.Rate, 22./480, 1e-12)
+	if len(alone.Windows) != 0 {
+		t.Errorf("windows of %s", alone.Windows[0].Window)
+	}
+	both, without := analyse(trials, span), analyse(span)
+	if !reflect.DeepEqual(both, without) {
+		t.Errorf("with windows of trials besides %+v, without %+v", both, without)
 	}
 }
 
