@@ -120,24 +120,27 @@ func (r *Recorder) harvest(e *monitor.Engine, at monitor.Instant) {
 func (r *Recorder) take(e *monitor.Engine, in *config.Indicator, h *harvest, until monitor.Instant) {
 	for _, name := range h.series {
 		for _, w := range in.Windows {
-			for _, v := range e.Views(name, w.Name, h.next.Time(), until.Time()) {
+			for _, v := range e.Views(name, w.Name, h.taken.Time(), until.Time()) {
 				r.look(&v)
 			}
 		}
 	}
-	h.next = h.cal.Start(h.cal.Slot(until-1) + 1)
+	h.taken, h.next = until, h.cal.Start(h.cal.Slot(until-1)+1)
 }
 
-// harvest says which looks of an indicator were taken: those at boundaries
-// before next.
+// harvest says which looks of an indicator were taken: those before taken. Looks
+// at events lie within slots, too; next is the boundary from which on it is worth
+// to take more.
 type harvest struct {
+	taken  monitor.Instant
 	next   monitor.Instant
 	cal    *monitor.Calendar
 	series []string // in order of their names
 }
 
 func newHarvest(in *config.Indicator) *harvest {
-	return &harvest{next: monitor.InstantOf(time.Date(1, 1, 1, 0, 0, 0, 0, time.UTC)), cal: monitor.NewCalendar(in.Every, in.Zone)}
+	first := monitor.InstantOf(time.Date(1, 1, 1, 0, 0, 0, 0, time.UTC))
+	return &harvest{taken: first, next: first, cal: monitor.NewCalendar(in.Every, in.Zone)}
 }
 
 // Meet notes that there is a series.

@@ -5,6 +5,7 @@ import (
 	"context"
 	"encoding/json"
 	"flag"
+	"fmt"
 	"io"
 	"os"
 	"path/filepath"
@@ -263,4 +264,72 @@ func marshal(t *testing.T, v any) string {
 		t.Fatal(err)
 	}
 	return string(b)
+}
+
+const atEvents = `
+name = "quillmere"
+[[indicator]]
+name = "wound"
+series = ["*/wound"]
+measure = "proportion"
+unit = "operations"
+every = "1d"
+events = "each"
+horizon = "30d"
+windows = ["50 trials"]
+looks = "arrival"
+[indicator.baseline]
+kind = "known"
+rate = 0.1
+[[indicator]]
+name = "fall"
+series = ["*/fall"]
+unit = "days"
+every = "1d"
+events = "each"
+exposure = "clock"
+clock = { size = 1 }
+horizon = "30d"
+windows = ["28d"]
+looks = ["slot", "arrival"]
+[indicator.baseline]
+kind = "known"
+rate = 0.3
+`
+
+// TestLooksAtEvents: looks within slots are taken once, too, whatever the hour
+// at which messages put them beyond change.
+func TestLooksAtEvents(t *testing.T) {
+	setup, err := config.Parse([]byte(atEvents), "setup.toml")
+	if err != nil {
+		t.Fatal(err)
+	}
+	e, rec, d := newEngine(setup), report.NewRecorder(setup), wire.NewDecoder(wire.Limits{})
+	position := uint64(1)
+	for i := range 500 {
+		at := time.Date(2026, 1, 1, 0, 0, 0, 0, time.UTC).Add(time.Duration(i) * 7 * time.Hour)
+		position++
+		text := fmt.Sprintf(`{"series":"east/wound","id":"o%d","at":%q,"events":%d,"exposure":1}`, i, at.Format(time.RFC3339), (i*i%7)/4)
+		if i%9 == 0 {
+			text += fmt.Sprintf("\n"+`{"series":"east/fall","id":"f%d","at":%q,"events":1}`, i, at.Format(time.RFC3339))
+		}
+		m := d.Decode(wire.Raw{Position: position, Subject: "quillmere.in.0.obs", Data: []byte(text)})
+		m.Time, m.HasTime, m.Items = monitor.InstantOf(at), true, slices.Clone(m.Items)
+		rec.Play(e, m)
+		take(t, rec, e)
+	}
+	r, err := rec.Report(context.Background(), e, report.Options{Seed: 1, Draws: 100, Pictures: 3})
+	if err != nil {
+		t.Fatal(err)
+	}
+	looks := int64(0)
+	for _, in := range r.Indicators {
+		if in.Looks < 50 {
+			t.Errorf("%s: %d looks", in.Cfg.Name, in.Looks)
+		}
+		looks += in.Looks + in.Withheld
+	}
+	if a := e.Account(); looks != a.Looks+a.WithheldLooks {
+		t.Errorf("%d looks were taken, and %d fell due", looks, a.Looks+a.WithheldLooks)
+	}
 }
