@@ -263,7 +263,7 @@ func (p *limitsPage) late(g *limitsGroup, r *planning.Report) {
 	}
 	p.table(rows)
 	text := fmt.Sprintf("From %s simulated courses each, seed %d; in brackets exact 95 %% bounds of what more courses could have said. ", thousands(r.Delays[0].Draws), p.seed)
-	if g.in.Settle > 0 {
+	if g.in.SlotLooks && g.in.Settle > 0 {
 		text += fmt.Sprintf("Data settle for another %s before a look. ", config.FormatDuration(g.in.Settle))
 	}
 	p.wrap(text + "- means later than that.")
