@@ -42,6 +42,10 @@ func ParseTrials(text string) (n int64, ok bool) {
 func (s section) checkTrials(in *Indicator) {
 	trials := slices.IndexFunc(in.Windows, func(w Window) bool { return w.Trials > 0 })
 	spans := slices.IndexFunc(in.Windows, func(w Window) bool { return w.Trials == 0 })
+	if trials >= 0 && in.Retire > 0 {
+		s.fault("retire", fmt.Sprintf("the last %s are kept however long ago they were, so a series would never end", in.Windows[trials].Name),
+			"leave it out, and say when a series closes: tailbell series change --what closing")
+	}
 	switch {
 	case trials >= 0 && in.Measure != Proportion:
 		s.fault("windows", fmt.Sprintf("%q counts trials, and a rate has none", in.Windows[trials].Name), `write measure = "proportion", or a span such as "28d"`)
