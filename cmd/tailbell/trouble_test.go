@@ -127,7 +127,7 @@ func TestPurgedStreamIsATrouble(t *testing.T) {
 		t.Fatal(err)
 	}
 	d.begin()
-	st := d.await("read", func(s *statusReply) bool { return s.Partitions[0].Position == 41 })
+	st := d.await("read, and told", func(s *statusReply) bool { return s.Partitions[0].Position == 41 && has(s, troubleMissing) != "" })
 	if text := has(st, troubleMissing); !strings.Contains(text, "30 messages were removed") || !strings.Contains(text, "from position 1 to 30") {
 		t.Errorf("troubles: %+v", st.Troubles)
 	}
