@@ -224,6 +224,9 @@ func (m *member) takeAll(ctx context.Context) ([]*claim.Holding, error) {
 		case <-m.told:
 		}
 		for _, e := range m.events() {
+			if e.Kind == claim.Waiting {
+				continue // what ends it is told by failed
+			}
 			if e.Kind != claim.Won {
 				return nil, fmt.Errorf("partition %d: %s", e.Partition, e.Why)
 			}
@@ -276,9 +279,13 @@ func (m *member) leave() {
 // take does what one event asks for. A process that works alone can't go on
 // without one of its partitions.
 func (m *member) take(ctx context.Context, e *claim.Event) error {
+	if e.Kind == claim.Waiting {
+		m.d.log.Warn().Str("why", e.Why).Msg("this process takes no part for now")
+		return nil
+	}
 	log := m.d.log.Info().Int("partition", e.Partition)
 	t := m.tenures[e.Partition]
-	switch e.Kind {
+	switch e.Kind { //nolint:exhaustive // waiting is of no partition
 	case claim.Renewed:
 		log.Msg("the claim had run out, and is renewed")
 		if p := m.d.parts.get(e.Partition); p != nil {

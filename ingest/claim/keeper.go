@@ -58,6 +58,8 @@ const (
 	Surplus
 	// Renewed: the claim had run out, and nobody took the partition meanwhile.
 	Renewed
+	// Waiting: the member takes nothing, of no partition, and why.
+	Waiting
 )
 
 // Event is something that happened to a partition.
@@ -65,7 +67,7 @@ type Event struct {
 	Kind      EventKind
 	Partition int
 	Claim     Holding // of Won: with the marks of the owner before
-	Why       string  // of Lost
+	Why       string  // of Lost and Waiting
 }
 
 // ErrOwned is returned when a member that works alone finds another one at work.

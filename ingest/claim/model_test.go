@@ -250,7 +250,7 @@ func (p *process) take() {
 		case Surplus:
 			p.close(e.Partition)
 			_ = p.k.Release(context.Background(), e.Partition) //nolint:errcheck // refusals are part of it
-		case Renewed:
+		case Renewed, Waiting:
 		}
 	}
 }

@@ -126,10 +126,15 @@ func (k *Keeper) inForce(ctx context.Context, b *board) (bool, error) {
 	return o.Err == nil, o.Err
 }
 
+// wait notes why the member takes nothing, "" if it does, and tells of it once.
 func (k *Keeper) wait(why string) {
 	k.mu.Lock()
-	defer k.mu.Unlock()
+	before := k.mu.waits
 	k.mu.waits = why
+	k.mu.Unlock()
+	if why != "" && before == "" {
+		k.o.Tell(Event{Kind: Waiting, Why: why})
+	}
 }
 
 // takeAll takes every partition for a member that works alone, in order: of two
