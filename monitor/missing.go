@@ -16,7 +16,7 @@ func (ix *indicator) lacking(s *series, w *placed) string {
 	ws := &s.windows[w.place]
 	length, step := int64(w.Slots), int64(w.Step)
 	in := func(from, to int64) string {
-		for slot := max(from, s.birth); slot < to; slot++ {
+		for slot := max(from, s.birth, ix.kept); slot < to; slot++ { // of what has left memory nothing is known any more
 			if what := ix.lackedIn(s, slot); what != "" {
 				return what
 			}

@@ -60,6 +60,11 @@ func (s *series) silentAt() Instant {
 	if within == 0 || heard == Beginning {
 		return Never
 	}
+	// What was heard while it was out of service makes it no earlier than if it
+	// had not been: the wait begins anew when it is back.
+	if heard = s.inServiceAfter(heard); heard == Never {
+		return Never
+	}
 	at := heard.Add(within)
 	for {
 		from := s.inServiceAfter(at)
