@@ -163,39 +163,53 @@ func TestArrivalLooks(t *testing.T) {
 	kinds := map[life.StepKind]int{}
 	for _, seed := range arrivalSeeds(60) {
 		x := newArrivalStream(t, seed, true)
-		rng := rand.New(rand.NewPCG(seed, 8))
-		p := Partition{Of: 1, KeyParts: 1}
-		plain, again := NewMemory(), NewMemory()
-		e, restored := New(p), New(p)
-		book := &arrivalBook{said: map[string]Observation{}, birth: Never}
-		for i := range x.messages {
-			m := &x.messages[i]
-			e.Apply(m)
-			restored.Apply(m)
-			if rng.IntN(4) == 0 {
-				again.Commit(restored.Drain())
-				var err error
-				if restored, err = again.Reopen(p); err != nil {
-					t.Fatalf("seed %d, message %d: %v", seed, i+1, err)
-				}
-			}
-			refused := len(e.refused)
-			plain.Commit(e.Drain())
-			if m.Kind == Observations && refused == 0 {
-				book.take(&m.Items[0].Observation, e)
-			}
-			if m.Kind != SettingMessage {
-				compareArrivals(t, seed, i, x, e, book)
+		holdLooks(t, seed, x.messages, kinds, func(i int, e *Engine, book *arrivalBook) { compareArrivals(t, seed, i, x, e, book) })
+	}
+	checkTame(t, kinds)
+}
+
+// holdLooks plays a stream, compares what signals after each message, and holds
+// the steps against those of an engine that is restored again and again. It counts
+// the steps.
+func holdLooks(t *testing.T, seed uint64, messages []Message, kinds map[life.StepKind]int, compare func(i int, e *Engine, book *arrivalBook)) {
+	t.Helper()
+	rng := rand.New(rand.NewPCG(seed, 8))
+	p := Partition{Of: 1, KeyParts: 1}
+	plain, again := NewMemory(), NewMemory()
+	e, restored := New(p), New(p)
+	book := &arrivalBook{said: map[string]Observation{}, birth: Never}
+	for i := range messages {
+		m := &messages[i]
+		e.Apply(m)
+		restored.Apply(m)
+		if rng.IntN(4) == 0 {
+			again.Commit(restored.Drain())
+			var err error
+			if restored, err = again.Reopen(p); err != nil {
+				t.Fatalf("seed %d, message %d: %v", seed, i+1, err)
 			}
 		}
-		again.Commit(restored.Drain())
-		if diff := cmp.Diff(plain.Steps, again.Steps); diff != "" {
-			t.Fatalf("seed %d (-undisturbed +restored):\n%s", seed, diff)
+		refused := len(e.refused)
+		plain.Commit(e.Drain())
+		if m.Kind == Observations && refused == 0 {
+			book.take(&m.Items[0].Observation, e)
 		}
-		for _, n := range plain.Steps {
-			kinds[n.Step.Kind]++
+		if m.Kind != SettingMessage {
+			compare(i, e, book)
 		}
 	}
+	again.Commit(restored.Drain())
+	if diff := cmp.Diff(plain.Steps, again.Steps); diff != "" {
+		t.Fatalf("seed %d (-undisturbed +restored):\n%s", seed, diff)
+	}
+	for _, n := range plain.Steps {
+		kinds[n.Step.Kind]++
+	}
+}
+
+// checkTame fails if the streams had too few steps of a kind.
+func checkTame(t *testing.T, kinds map[life.StepKind]int) {
+	t.Helper()
 	for _, k := range []life.StepKind{life.StepOpened, life.StepWorsened, life.StepCorrected, life.StepReturned, life.StepWithdrawn} {
 		if *arrivalSeed == 0 && kinds[k] < 20 {
 			t.Errorf("only %d steps %q: the streams are too tame", kinds[k], k)
