@@ -33,7 +33,8 @@ func TestStoresThatAreRefused(t *testing.T) {
 			// Of every page that is or was the head's.
 			return bytes.ReplaceAll(sound, []byte(`"position":`), []byte(`"posjtion":`))
 		}},
-		{"cut off", "cut off", func(*testing.T) []byte { return sound[:len(sound)/2] }},
+		// After its third page: a file grows by leaps, and half of it may hold all pages in use.
+		{"cut off", "cut off", func(*testing.T) []byte { return sound[:3*os.Getpagesize()] }},
 		{"empty", "not a Tailbell store", func(*testing.T) []byte { return nil }},
 		{"text", "not a Tailbell store", func(*testing.T) []byte { return bytes.Repeat([]byte("ledger,2026\n"), 5000) }},
 		{"zeros", "store", func(*testing.T) []byte { return make([]byte, len(sound)) }},
