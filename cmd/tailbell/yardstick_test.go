@@ -8,7 +8,6 @@ import (
 	"os"
 	"path/filepath"
 	"slices"
-	"strconv"
 	"strings"
 	"syscall"
 	"testing"
@@ -117,8 +116,11 @@ func newYard(t *testing.T, load yardLoad, tcp bool) *yard {
 		p, address := newBusProcess(t, filepath.Join(folder, "bus"))
 		p.start()
 		t.Cleanup(p.kill)
-		url = strconv.Quote("nats://" + address)
-		url = "url = " + url
+		password := filepath.Join(folder, "password")
+		if err := os.WriteFile(password, []byte(busPassword), 0o600); err != nil {
+			t.Fatal(err)
+		}
+		url = fmt.Sprintf("url = %q\nuser = \"tailbell\"\npassword_file = %q", "nats://"+address, password)
 	}
 	setup, err := config.Parse(fmt.Appendf(nil, yardSetup, filepath.Join(folder, "data"), url, load.rule()), "t.toml")
 	if err != nil {
