@@ -75,22 +75,6 @@ func (s section) readAllowance(in *Indicator) *Allowance {
 	return &a
 }
 
-// checkAllowance refuses one for all series where they can't all be seen. s is
-// the indicator's own table.
-func (s section) checkAllowance(in *Indicator, setup *Setup) {
-	a := in.Allowance
-	if a == nil || !a.PerIndicator || setup.Partitions <= 1 {
-		return
-	}
-	if sums := in.Gathered(setup.KeyParts); len(sums) > 0 {
-		s.fault("allowance_for", fmt.Sprintf("an allowance for all series can't be shared with the sum %q, which may have members in several partitions, and there are %d", sums[0], setup.Partitions),
-			fmt.Sprintf("write partitions = 1, allowance_for = \"series\", or sums whose first %s have no *", counted(setup.KeyParts, "part")))
-	} else if !onePartition(in.Series, setup.KeyParts) {
-		s.fault("allowance_for", fmt.Sprintf("series in other partitions can't be seen yet, and there are %d", setup.Partitions),
-			fmt.Sprintf("write partitions = 1, allowance_for = \"series\", or patterns that have the same first %s without a *", counted(setup.KeyParts, "part")))
-	}
-}
-
 func (s section) readAssurance(in *Indicator) float64 {
 	v, given, ok := s.number("assurance")
 	if !given || !ok {

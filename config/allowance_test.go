@@ -117,9 +117,9 @@ func TestParseAllowance(t *testing.T) {
 	}
 }
 
-// TestAllowanceOfPartitions refuses an allowance for all series where they lie in
-// several partitions.
-func TestAllowanceOfPartitions(t *testing.T) {
+// TestCountsAcross says of which indicators partitions count for each other: it does
+// not depend on how many there are.
+func TestCountsAcross(t *testing.T) {
 	const text = `name = "x"
 partitions = 4
 [[indicator]]
@@ -134,17 +134,26 @@ allowance_for = "indicator"
 kind = "known"
 rate = 1
 `
-	_, err := Parse([]byte(text), "x.toml")
-	if err == nil || !strings.Contains(err.Error(), "allowance_for") || !strings.Contains(err.Error(), "there are 4") {
-		t.Errorf("in four partitions: %v", err)
-	}
-	for _, sound := range []string{
-		strings.Replace(text, "partitions = 4", "partitions = 1", 1),
-		strings.Replace(text, `"*/fall"`, `"east/*"`, 1),
-		strings.Replace(text, `allowance_for = "indicator"`, `allowance_for = "series"`, 1),
+	const peers = "kind = \"peers\"\nspan = \"56d\"\n"
+	for changed, want := range map[string]bool{
+		text: true,
+		strings.Replace(text, "partitions = 4", "partitions = 1", 1):                                                       true,
+		strings.Replace(text, `"*/fall"`, `"east/*"`, 1):                                                                   false,
+		strings.Replace(text, `"*/fall"`, `"east/*", "west/*"`, 1):                                                         true,
+		strings.Replace(text, `"*/fall"]`, "\"east/*\"]\nsums = [\"*/fall\"]", 1):                                          true,
+		strings.Replace(text, `allowance_for = "indicator"`, `allowance_for = "series"`, 1):                                false,
+		strings.Replace(strings.Replace(text, `= "indicator"`, `= "series"`, 1), "kind = \"known\"\nrate = 1\n", peers, 1): true,
 	} {
-		if _, err := Parse([]byte(sound), "x.toml"); err != nil {
-			t.Errorf("%v\n%s", err, sound)
+		setup, err := Parse([]byte(changed), "x.toml")
+		if err != nil {
+			t.Errorf("%v\n%s", err, changed)
+			continue
+		}
+		if got := setup.Indicators[0].CountsAcross(setup.KeyParts); got != want {
+			t.Errorf("counts across: %t\n%s", got, changed)
+		}
+		if got := setup.TellsAcross(); got != (want && setup.Partitions > 1) {
+			t.Errorf("tells across: %t\n%s", got, changed)
 		}
 	}
 }

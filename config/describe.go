@@ -93,7 +93,22 @@ func (p *prose) indicator(in *Indicator, keyParts int) {
 	for i := range in.Baselines {
 		p.baseline(in, i)
 	}
+	p.across(in, keyParts)
 	p.late(in)
+}
+
+// across says what partitions tell each other.
+func (p *prose) across(in *Indicator, keyParts int) {
+	if !in.CountsAcross(keyParts) {
+		return
+	}
+	p.line("  Its series may lie in several partitions: each counts at the first boundary of a day, and what all have counted is in force from the first boundary of the next day on.")
+	if in.hasPeers() {
+		p.line("    So peers are counted as of the day before; looks that no count serves yet are withheld.")
+	}
+	if a := in.Allowance; a != nil && a.PerIndicator {
+		p.line("    A series that is not yet counted has a hundredth of the reserve, or less where more series are counted: at most two days long.")
+	}
 }
 
 func (p *prose) counting(in *Indicator) {

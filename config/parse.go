@@ -149,8 +149,7 @@ func readIndicators(top section, s *Setup) []Indicator {
 	for _, t := range tables {
 		in := t.readIndicator()
 		t.compareNames(&in, names, patterns)
-		t.checkPeers(&in, s)
-		t.checkAllowance(&in, s)
+		t.checkPeers(&in)
 		t.checkSums(&in, s)
 		all = append(all, in)
 	}

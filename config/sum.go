@@ -148,9 +148,12 @@ func (m Sum) Makes(name string) bool {
 	return true
 }
 
-// GathersAcross reports whether any sums are gathered from several partitions.
-func (s *Setup) GathersAcross() bool {
-	return s.Partitions > 1 && slices.ContainsFunc(s.Indicators, func(in Indicator) bool { return len(in.Gathered(s.KeyParts)) > 0 })
+// TellsAcross reports whether partitions wait for what others tell them: sums are
+// gathered from several, or what they count is.
+func (s *Setup) TellsAcross() bool {
+	return s.Partitions > 1 && slices.ContainsFunc(s.Indicators, func(in Indicator) bool {
+		return len(in.Gathered(s.KeyParts)) > 0 || in.CountsAcross(s.KeyParts)
+	})
 }
 
 // HomeOf returns the partition that gathers the sums of an indicator, by its

@@ -97,18 +97,13 @@ func (in *Indicator) keptSlots() int {
 	return kept
 }
 
-// checkPeers refuses peers that can't be, or that can't be seen. s is the
-// indicator's own table.
-func (s section) checkPeers(in *Indicator, setup *Setup) {
-	if !slices.ContainsFunc(in.Baselines, func(b Baseline) bool { return b.Kind == Peers }) {
+// checkPeers refuses peers that can't be. s is the indicator's own table.
+func (s section) checkPeers(in *Indicator) {
+	if !in.hasPeers() {
 		return
 	}
-	switch {
-	case len(in.Series) == 1 && !strings.Contains(in.Series[0].text, "*"):
+	if len(in.Series) == 1 && !strings.Contains(in.Series[0].text, "*") {
 		s.fault("series", fmt.Sprintf("%q is a single series, which has no peers", in.Series[0]), `write a pattern that matches several, or kind = "trailing"`)
-	case setup.Partitions > 1 && !onePartition(in.Series, setup.KeyParts):
-		s.fault("baseline", fmt.Sprintf("peers in other partitions can't be seen yet, and there are %d", setup.Partitions),
-			fmt.Sprintf("write partitions = 1, or patterns that have the same first %s without a *", counted(setup.KeyParts, "part")))
 	}
 }
 

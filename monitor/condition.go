@@ -34,7 +34,8 @@ const (
 	NotInService   ConditionKind = "out of service" // people said so
 	Silent         ConditionKind = "silent"         // nothing heard for longer than expected
 	// WaitsForPartition is of a sum of which a look waits for what another
-	// partition has to tell.
+	// partition has to tell, or of all series of an indicator, by its first pattern,
+	// if that is what they count there.
 	WaitsForPartition ConditionKind = "waits for a partition"
 	unknownKind       ConditionKind = "program's fault" // a status without a kind
 )
@@ -46,6 +47,7 @@ func (e *Engine) Conditions() []Condition {
 		list = append(list, e.conditionsOf(s)...)
 	}
 	list = append(list, e.waitingConditions()...)
+	list = append(list, e.lackingConditions()...)
 	slices.SortFunc(list, func(a, b Condition) int {
 		return cmp.Or(cmp.Compare(a.Series, b.Series), cmp.Compare(a.Kind, b.Kind), cmp.Compare(a.Window, b.Window))
 	})
@@ -71,6 +73,9 @@ func (e *Engine) conditionsOf(s *series) []Condition {
 			if what := ix.lacking(s, &p); what != "" {
 				text += ", " + what
 			}
+		}
+		if ws.withheld == unbased && ix.awaitsCount(s) {
+			text += ": its peers are not yet counted in all partitions"
 		}
 		list = append(list, Condition{
 			Series: s.name, Indicator: ix.cfg.Name, Kind: kindOf(ws.withheld), Window: p.Name,

@@ -171,6 +171,30 @@ func (e *Engine) wakeUp(a *alert, moment, to Instant) {
 	e.rewake(a, to)
 }
 
+// tellers names partitions that have to tell something.
+func tellers(parts []int) string {
+	names := strings.Trim(strings.ReplaceAll(fmt.Sprint(parts), " ", ", "), "[]")
+	if len(parts) > 1 {
+		return "partitions " + names + " have to tell"
+	}
+	return "partition " + names + " has to tell"
+}
+
+// lackingConditions tells of which indicators partitions have not told what they
+// count: those before it stay in force.
+func (e *Engine) lackingConditions() []Condition {
+	var list []Condition
+	for _, ix := range e.indicators {
+		if parts := e.lacking(ix); len(parts) > 0 {
+			list = append(list, Condition{
+				Series: ix.cfg.Series[0].String(), Indicator: ix.cfg.Name, Kind: WaitsForPartition, Since: ix.due(ix.dayBegins(ix.looked)),
+				Text: "what was counted of all partitions before that is in force until it is known what " + tellers(parts),
+			})
+		}
+	}
+	return list
+}
+
 // waitingConditions tells which partitions gathered sums wait for.
 func (e *Engine) waitingConditions() []Condition {
 	var list []Condition
@@ -183,11 +207,7 @@ func (e *Engine) waitingConditions() []Condition {
 		if len(parts) == 0 {
 			continue
 		}
-		names := strings.Trim(strings.ReplaceAll(fmt.Sprint(parts), " ", ", "), "[]")
-		text := "it waits for what partition " + names + " has to tell"
-		if len(parts) > 1 {
-			text = "it waits for what partitions " + names + " have to tell"
-		}
+		text := "it waits for what " + tellers(parts)
 		for _, sum := range g.sums.sums {
 			list = append(list, Condition{
 				Series: sum.name, Indicator: ix.cfg.Name, Kind: WaitsForPartition, Since: g.sums.nextDue, Text: text,

@@ -15,6 +15,7 @@ import (
 func (e *Engine) dismiss(ix *indicator) {
 	e.dismissSeries(ix)
 	e.scatter(ix)
+	e.endCounts(ix)
 	e.recent = nil
 	e.pending = slices.DeleteFunc(e.pending, func(a *alert) bool { return !a.pending })
 }

@@ -120,6 +120,10 @@ type header struct {
 	Inbound    []inboundHeader   `json:"inbound,omitempty"`
 	Waiting    uint64            `json:"waiting,omitempty"`
 	Deferrals  []deferral        `json:"deferred,omitempty"`
+	// Part, Ahead and Counts are absent where partitions don't count for each other.
+	Part   int             `json:"part,omitempty"`
+	Ahead  uint64          `json:"ahead,omitempty"`
+	Counts json.RawMessage `json:"counts,omitempty"`
 }
 
 type indicatorHeader struct {
@@ -162,7 +166,7 @@ func (e *Engine) encodeHeader() []byte {
 	h := header{
 		History: e.history, Clock: e.clock, Version: e.version, Account: e.account,
 		Cycle: e.checkpoint.cycle, Next: e.checkpoint.next, Generation: int64(e.ids.length.Seconds()),
-		Facts: e.encodeFacts(),
+		Facts: e.encodeFacts(), Part: e.part, Ahead: e.ahead, Counts: e.encodeCounts(),
 	}
 	for _, ix := range e.indicators {
 		ih := indicatorHeader{Name: ix.cfg.Name, Started: ix.started, Looked: ix.looked, Frozen: ix.frozenAt}

@@ -13,6 +13,10 @@ import (
 // a patch. Integers are varints, strings and lists are prefixed by length.
 const encodingVersion = 3
 
+// withCounts is the version of encodings of series that partitions counted for each
+// other: what they had a part in follows their limits.
+const withCounts = 4
+
 // withoutLimits is the version of encodings that know no allowances: they are
 // read as such.
 const withoutLimits = 1
@@ -73,6 +77,10 @@ func (s *series) encode(b []byte, whole bool) []byte {
 	}
 	b = s.encodeReferences(b)
 	b = s.encodeLimits(b)
+	if s.own != nil {
+		b[at-1] = withCounts
+		b = s.encodeOwn(b)
+	}
 	b = s.encodeArrivals(b, whole)
 	b = s.totals.encode(b)
 	if s.sum != nil && !s.isGathered() {

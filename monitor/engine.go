@@ -94,6 +94,18 @@ type Engine struct {
 	kept      []*Summary
 	released  []uint64
 	waiting   uint64
+	// countings are what partitions tell each other to count, and countsJSON is how
+	// that is stored. Messages of history time are held from a moment on, which is
+	// found again when it may have changed; holding says that one is. Of the message
+	// after the position the first part elements have been applied, and of the ones
+	// after that the summaries up to ahead.
+	countings  []*counting
+	countsJSON json.RawMessage
+	held       Instant
+	heldStale  bool
+	holding    bool
+	part       int
+	ahead      uint64
 
 	onLook func(View)
 	looks  []look // scratch
@@ -131,7 +143,7 @@ func (e *Engine) Apply(m *Message) {
 	if m.Position <= e.position {
 		return
 	}
-	e.position = m.Position
+	e.position, e.holding = m.Position, false
 	switch {
 	case !e.history || m.Kind == Live:
 		if e.history {
@@ -144,9 +156,10 @@ func (e *Engine) Apply(m *Message) {
 	}
 	switch m.Kind {
 	case Observations:
-		for i := range m.Items {
-			e.element(m, i)
+		for ; e.part < len(m.Items); e.part++ {
+			e.element(m, e.part)
 		}
+		e.part = 0
 	case ActMessage:
 		e.act(m)
 	case SettingMessage:
@@ -155,7 +168,9 @@ func (e *Engine) Apply(m *Message) {
 		e.account.Rejected++
 		e.refuse(m, 0, "", m.Items[0].Reason, m.Items[0].Detail, m.Items[0].Raw)
 	case SummaryMessage:
-		e.takeSummary(m)
+		if m.Position > e.ahead {
+			e.takeSummary(m)
+		}
 	case Tick, Live:
 	}
 }
@@ -188,28 +203,31 @@ func (e *Engine) element(m *Message, index int) {
 // news of a slot that could not change any more by then: its times must be
 // wrong, and would take the clock past everything that is still to come.
 func (e *Engine) keepTime(m *Message, o *Observation) (Reason, string) {
-	known := m.Time
-	switch {
-	case !e.history:
-		return "", ""
-	case m.HasTime:
-	case o.HasReported || !o.Retracted:
-		known = o.HistoryTime()
-	default:
-		return "", ""
+	known, reason, detail := e.timeOf(m, o)
+	if reason == "" {
+		e.advance(known)
 	}
+	return reason, detail
+}
+
+// timeOf is the moment to which the observation moves the clock of history time,
+// Beginning if it does not, or why it is refused.
+func (e *Engine) timeOf(m *Message, o *Observation) (Instant, Reason, string) {
+	if !e.history {
+		return Beginning, "", ""
+	}
+	known := m.timeOf(o)
 	ix, _ := e.indicatorOf(o.Series)
 	if ix == nil || known <= e.clock {
-		return "", ""
+		return Beginning, "", ""
 	}
 	if !o.Retracted && (o.ID == "" || !e.ids.has(idKey{siteOf(o.Series), o.ID})) {
 		if end := ix.cal.Start(ix.cal.Slot(o.Start) + 1); end < known.Add(-ix.cfg.Horizon) {
-			return BeyondHorizon, fmt.Sprintf("its slot ended %s, but it became known only at %s, more than the horizon of %s later: correct its times",
+			return Beginning, BeyondHorizon, fmt.Sprintf("its slot ended %s, but it became known only at %s, more than the horizon of %s later: correct its times",
 				at(end), at(known), config.FormatDuration(ix.cfg.Horizon))
 		}
 	}
-	e.advance(known)
-	return "", ""
+	return known, "", ""
 }
 
 // advance moves the clock and makes the looks that fall due on the way.

@@ -108,19 +108,21 @@ func (e *Engine) idle(ix *indicator) bool {
 func (e *Engine) alone(ix *indicator) bool { return ix.gathering != nil && e.partition.Of <= 1 }
 
 // began lets the sums of an indicator follow that counts boundaries as looked at
-// up to the latest.
+// up to the latest, and tells what there is to count.
 func (e *Engine) began(ix *indicator) {
-	switch {
-	case ix.gathering == nil:
+	switch g := ix.gathering; {
+	case g == nil:
 	case e.alone(ix):
-		ix.gathering.sums.started = true
-		ix.gathering.sums.pass(ix.looked)
+		g.sums.started = true
+		g.sums.pass(ix.looked)
+		e.beginCounts(g.sums)
 	default:
 		e.summarise(ix, ix.looked)
-		if ix.gathering.inbound != nil {
-			e.gatherReady(ix.gathering)
+		if g.inbound != nil {
+			e.gatherReady(g)
 		}
 	}
+	e.beginCounts(ix)
 }
 
 // bring hands on what members have to tell at a boundary that is about to be

@@ -46,8 +46,11 @@ func (e *Engine) inboundOf(indicator, life string) *inbound {
 func (e *Engine) takeSummary(m *Message) {
 	s := m.Summary
 	switch {
+	case s.count != nil:
+		e.takeCount(m)
+		return
 	case s.Partition >= e.partition.Of || s.Partition == e.partition.Number:
-		e.rejectSummary(m, fmt.Sprintf("it comes from partition %d, and this is %d of %d", s.Partition, e.partition.Number, e.partition.Of))
+		e.rejectSummary(m, noPartition(s, e.partition))
 		return
 	case !e.gathers(s.Indicator):
 		e.rejectSummary(m, fmt.Sprintf("its sums are not gathered in partition %d", e.partition.Number))
@@ -68,6 +71,10 @@ func (e *Engine) takeSummary(m *Message) {
 	}
 	e.account.Summaries++
 	e.gatherAll()
+}
+
+func noPartition(s *Summary, p Partition) string {
+	return fmt.Sprintf("it comes from partition %d, and this is %d of %d", s.Partition, p.Number, p.Of)
 }
 
 func (e *Engine) rejectSummary(m *Message, detail string) {
@@ -140,6 +147,9 @@ func (e *Engine) gatherAll() {
 func (e *Engine) gatherReady(g *gathering) {
 	for {
 		boundary, ok := g.nextReady()
+		if g.sums.started {
+			e.beginCounts(g.sums) // boundaries may have been skipped
+		}
 		if !ok {
 			return
 		}

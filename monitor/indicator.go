@@ -23,6 +23,11 @@ type indicator struct {
 	// the indicator that this one looks at such sums for, nil for all others.
 	gathering *gathering
 	of        *indicator
+	// counting is set where partitions tell each other what they count, and agreed
+	// is what of that is in force; poolIDs are those of the pools.
+	counting *counting
+	agreed   counted
+	poolIDs  map[poolKey]int64
 	// places are the windows that are or were in force, in the order in which
 	// the state of every series has them.
 	places []config.Window

@@ -92,6 +92,18 @@ func (o *Observation) HistoryTime() Instant {
 	return o.End
 }
 
+// timeOf is when an observation of the message became known, in history time;
+// Beginning if nothing says so.
+func (m *Message) timeOf(o *Observation) Instant {
+	switch {
+	case m.HasTime:
+		return m.Time
+	case o.HasReported || !o.Retracted:
+		return o.HistoryTime()
+	}
+	return Beginning
+}
+
 // Reason is a stable code that says why something was refused.
 type Reason string
 

@@ -76,12 +76,15 @@ func (e *Engine) allot(ix *indicator, ep *epoch, boundary int64) {
 	}
 	begins := ix.epochBegins(ep, boundary)
 	share := a.PerYear()
-	if begins && a.PerIndicator {
+	if begins && a.PerIndicator && ix.counting == nil {
 		share = allowance.Share(share, a.Reserve, roundUp(ix.born(boundary)))
 	}
 	allotTo := func(s *series) {
 		switch {
 		case s.birth >= boundary:
+		case begins && a.PerIndicator && ix.counting != nil:
+			share, counted := ix.shareOf(s, a)
+			e.setLimits(s, ep, boundary, share, !counted)
 		case begins, !a.PerIndicator && ix.rebased(s, ep, boundary):
 			e.setLimits(s, ep, boundary, share, false)
 		case len(s.limits) == 0:
@@ -116,6 +119,11 @@ func (e *Engine) draw(s *series, ep *epoch, boundary int64) {
 		e.setLimits(s, ep, boundary, a.PerYear(), false)
 		return
 	}
+	if s.indicator.counting != nil {
+		share, counted := s.indicator.shareOf(s, a)
+		e.setLimits(s, ep, boundary, share, !counted)
+		return
+	}
 	kin := s.indicator.kin()
 	ix := kin[0]
 	start := ix.epochStart(ep, boundary)
@@ -132,6 +140,17 @@ func (e *Engine) draw(s *series, ep *epoch, boundary int64) {
 	if e.setLimits(s, ep, boundary, allowance.Newborn(a.PerYear(), a.Reserve, ix.drawn.series), true) {
 		ix.drawn.series++
 	}
+}
+
+// shareOf is the series' share of an allowance that series in several partitions
+// share, and whether it is one of those counted: else it is new, and draws on the
+// reserve.
+func (ix *indicator) shareOf(s *series, a *config.Allowance) (perYear float64, counted bool) {
+	n := roundUp(int(ix.agreed.Series))
+	if ix.isCounted(s) {
+		return allowance.Share(a.PerYear(), a.Reserve, n), true
+	}
+	return allowance.Uncounted(a.PerYear(), a.Reserve, n), false
 }
 
 // drawn is how many series drew on the reserve since an epoch began.
@@ -228,6 +247,11 @@ func (e *Engine) allowanceOf(s *series, cfg *config.Indicator, boundary int64) *
 	r := &life.Allowance{Text: a.String(), For: "series", Assurance: a.Assurance, Here: l.here}
 	if a.PerIndicator {
 		r.For = "indicator"
+	}
+	if a.PerIndicator && s.indicator.counting != nil {
+		in := &s.indicator.agreed
+		r.Series, r.All = in.Limited, unfixed(in.Predicted)
+		return r
 	}
 	if e.partition.Of > 1 || s.indicator.of != nil && !a.PerIndicator { // the others are not seen from here
 		return r

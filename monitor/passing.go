@@ -43,6 +43,7 @@ func (e *Engine) Findings() Findings {
 	}
 	e.stubs.touched = nil
 	e.told, e.kept, e.released = nil, nil, nil
+	e.forgetNothing()
 	return f
 }
 

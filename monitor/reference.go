@@ -5,6 +5,7 @@ import (
 	"encoding/binary"
 	"fmt"
 	"slices"
+	"strings"
 	"time"
 
 	"tailbell/config"
@@ -21,6 +22,10 @@ func (e *Engine) refresh(ix *indicator, ep *epoch, boundary int64) {
 	for _, s := range ix.series {
 		b := ix.baseline(s, ep.cfg, boundary)
 		if b == nil || (b.Kind != config.Trailing && b.Kind != config.Peers) || s.birth >= boundary {
+			continue
+		}
+		if b.Kind == config.Peers && ix.pooled() {
+			e.takePool(ix, s, ep, b, boundary)
 			continue
 		}
 		period, of := NewCalendar(b.Refresh, ix.cal.zone).Slot(ix.cal.Start(boundary)), ix.digest(b)
@@ -227,7 +232,7 @@ func (ix *indicator) poolOf(ep *epoch, key poolKey, boundary int64) *pool {
 	p := &pool{each: map[*series]*reference{}}
 	p.sum.strata = make([]Quantity, strataOf(b))
 	p.sum.begin, p.sum.end = boundary-int64(b.SpanSlots), boundary
-	for _, s := range ix.ordered() {
+	for _, s := range ix.inOrder() {
 		if s.ruleOf() != key.rule || ix.baseline(s, ep.cfg, boundary) != b {
 			continue
 		}
@@ -244,6 +249,17 @@ func (ix *indicator) poolOf(ep *epoch, key poolKey, boundary int64) *pool {
 		p.index += r.index()
 	}
 	return p
+}
+
+// inOrder returns the series in an order that does not depend on partitions: that
+// of gathered sums' names, whose numbers do.
+func (ix *indicator) inOrder() []*series {
+	if ix.of == nil {
+		return ix.ordered()
+	}
+	list := slices.Clone(ix.series)
+	slices.SortFunc(list, func(a, b *series) int { return strings.Compare(a.name, b.name) })
+	return list
 }
 
 func (r *reference) index() float64 {
@@ -267,13 +283,19 @@ func (p *pool) without(s *series, b *config.Baseline, cfg *config.Indicator) ref
 		index -= own.index()
 	}
 	r.weigh(b, cfg)
+	r.differ(index)
+	return r
+}
+
+// differ reckons how much peers differ, from the sum of their events squared over
+// exposure.
+func (r *reference) differ(index float64) {
 	if r.peers >= 2 && r.events > 0 {
 		// The dispersion index: sum of (x - mean)^2 / mean over the others,
 		// by their number less one.
 		rate := float64(r.events) / r.weighted
 		r.between = max(0, float64(index/rate)-float64(r.events)) / float64(r.peers-1)
 	}
-	return r
 }
 
 // forgetReferences drops the estimates that no look inside the horizon needs.

@@ -33,6 +33,9 @@ func Restore(p Partition, snap *Snapshot, record func(id string) (life.Record, e
 	if err := e.restoreInbounds(&h, snap.Waiting); err != nil {
 		return nil, err
 	}
+	if err := e.restoreCounts(&h); err != nil {
+		return nil, err
+	}
 	if err := e.restoreIDs(snap.IDs); err != nil {
 		return nil, err
 	}
@@ -165,7 +168,7 @@ func (t *tail) all() []*alert {
 func (e *Engine) overlay(s *series, data []byte) error {
 	r := &reader{b: data}
 	version := r.byte()
-	if version != encodingVersion && version != withoutSignOff && version != withoutLimits {
+	if version > withCounts || version < withoutLimits {
 		return fmt.Errorf("%w: encoding %d is not known to this program", errEncoding, version)
 	}
 	flags := r.byte()
@@ -207,6 +210,9 @@ func (e *Engine) overlay(s *series, data []byte) error {
 	s.limits = nil
 	if version != withoutLimits {
 		s.limits = r.limits(e)
+	}
+	if s.own = nil; version == withCounts {
+		s.own = r.own()
 	}
 	if flags&flagArrivals != 0 {
 		r.arrivals(s, e)

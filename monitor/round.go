@@ -20,8 +20,12 @@ func (e *Engine) lookAll(ix *indicator, boundary int64) {
 func (e *Engine) lookEach(ix *indicator, boundary int64, due Instant) {
 	ep := ix.epochAt(boundary)
 	e.fillSums(ix, boundary)
+	if ix.counts(boundary) {
+		e.inForceAt(ix, boundary)
+	}
 	e.refresh(ix, ep, boundary)
 	e.allot(ix, ep, boundary)
+	e.countAt(ix, ep, boundary)
 	e.beginVisits(ix, ep, boundary)
 	e.visits(ix, ix.resters.visit, func(s *series) {
 		if s.birth >= boundary {

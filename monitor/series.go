@@ -76,6 +76,8 @@ type series struct {
 	// horizon, oldest first.
 	limits     []limits
 	comparator *reference
+	// own is what it had a part in of what its partition counted, nil for nothing.
+	own *own
 	// marked are the spans that people marked real.
 	marked []markedSpan
 	// dirty lists the slots changed since the last drain, if touched.

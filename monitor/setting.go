@@ -36,7 +36,7 @@ func (e *Engine) set(m *Message) {
 	for _, ix := range e.dismissed(next) {
 		e.dismiss(ix)
 	}
-	e.install(next, e.version+1, from)
+	e.install(next, e.version+1, from, m.HasTime || e.clock == Beginning)
 	e.settings = append(e.settings, SettingChange{Version: e.version, Digest: next.Digest, Text: next.Text})
 }
 
@@ -116,8 +116,9 @@ func (e *Engine) roomFor(next *config.Setup, from map[string]int64) string {
 }
 
 // install puts the set-up's indicators to work, each from the given boundary
-// on (from the beginning if it is new).
-func (e *Engine) install(next *config.Setup, version int, from map[string]int64) {
+// on (from the beginning if it is new). timely says that all partitions come to it
+// at the same moment of the stream's time.
+func (e *Engine) install(next *config.Setup, version int, from map[string]int64, timely bool) {
 	e.setup, e.version = next, version
 	old := map[string]*indicator{}
 	for _, ix := range e.indicators {
@@ -146,6 +147,7 @@ func (e *Engine) install(next *config.Setup, version int, from map[string]int64)
 		ix.epochs = append(ix.epochs, epoch{from: boundary, cfg: cfg, version: version, digest: next.Digest, windows: windows})
 		ix.measure()
 		e.follow(ix)
+		e.attend(ix, lifeOf(next), timely)
 		switch {
 		case ix.started: // settle and horizon may be others
 			ix.pass(ix.looked)

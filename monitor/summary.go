@@ -12,8 +12,9 @@ import (
 )
 
 // Summary says what changed in one partition, up to a boundary of an indicator,
-// in the series that gathered sums may sum. It is a message from the partition
-// to the one that gathers them, in one part or several.
+// in the series that gathered sums may sum: a message from the partition
+// to the one that gathers them, in one part or several. Or it says what the partition
+// counted there, to every other one.
 type Summary struct {
 	Partition int
 	Indicator string
@@ -28,6 +29,8 @@ type Summary struct {
 	part           int
 	more           bool
 	rows           []summaryRow
+	// count is set where it is what the partition counted.
+	count *count
 	// number tells those apart that wait for others.
 	number uint64
 	data   []byte
@@ -63,6 +66,9 @@ var ErrSummary = errors.New("not a summary of a partition")
 
 // parts cuts the summary into messages.
 func (s *Summary) parts() []Summary {
+	if s.count != nil {
+		return s.countParts()
+	}
 	whole := *s
 	whole.rows = nil
 	var parts []Summary
@@ -105,17 +111,25 @@ const (
 // encode writes the summary: integers are varints, texts and lists are prefixed
 // by length.
 func (s *Summary) encode() []byte {
+	if s.count != nil {
+		return s.encodeCount()
+	}
 	b := []byte{summaryVersion, flag(s.begins) | flag(s.ends)<<1 | flag(s.more)<<2}
-	b = binary.AppendUvarint(b, uint64(s.Partition))
-	b = appendString(appendString(b, s.Indicator), s.life)
-	b = binary.AppendVarint(b, s.after)
-	b = binary.AppendVarint(b, s.through)
-	b = binary.AppendUvarint(b, uint64(s.part))
+	b = s.encodeHead(b)
 	b = binary.AppendUvarint(b, uint64(len(s.rows)))
 	for i := range s.rows {
 		b = s.rows[i].encode(b)
 	}
 	return b
+}
+
+// encodeHead writes whose summary it is, and from where to where.
+func (s *Summary) encodeHead(b []byte) []byte {
+	b = binary.AppendUvarint(b, uint64(s.Partition))
+	b = appendString(appendString(b, s.Indicator), s.life)
+	b = binary.AppendVarint(b, s.after)
+	b = binary.AppendVarint(b, s.through)
+	return binary.AppendUvarint(b, uint64(s.part))
 }
 
 func (r *summaryRow) encode(b []byte) []byte {
@@ -209,8 +223,9 @@ func DecodeSummary(data []byte) (*Summary, error) {
 		return nil, fmt.Errorf("%w: it has %d bytes, the limit is %d", ErrSummary, len(data), LargestSummary)
 	}
 	r := &reader{b: data}
-	if v := r.byte(); r.err == nil && v != summaryVersion {
-		return nil, fmt.Errorf("%w: version %d, known is %d: run the same program in all processes", ErrSummary, v, summaryVersion)
+	version := r.byte()
+	if r.err == nil && version != summaryVersion && version != countVersion {
+		return nil, fmt.Errorf("%w: version %d, known are %d and %d: run the same program in all processes", ErrSummary, version, summaryVersion, countVersion)
 	}
 	bits := r.byte()
 	s := &Summary{begins: bits&summaryBegins != 0, ends: bits&summaryEnds != 0, more: bits&summaryMore != 0, data: data}
@@ -218,8 +233,12 @@ func DecodeSummary(data []byte) (*Summary, error) {
 	s.Indicator, s.life = r.string(), r.string()
 	s.after, s.through = r.int(), r.int()
 	part := r.uint()
-	for range r.length() {
-		s.rows = append(s.rows, r.summaryRow())
+	if version == countVersion {
+		s.count = r.count(bits)
+	} else {
+		for range r.length() {
+			s.rows = append(s.rows, r.summaryRow())
+		}
 	}
 	s.Partition, s.part = int(min(partition, 1<<20)), int(min(part, 1<<20))
 	switch {
@@ -231,7 +250,7 @@ func DecodeSummary(data []byte) (*Summary, error) {
 		r.fail("it ends before it begins")
 	case s.Indicator == "" || slices.ContainsFunc(s.rows, func(r summaryRow) bool { return config.CheckSeries(r.name) != nil }):
 		r.fail("a name is no name")
-	case s.ends && (s.more || len(s.rows) > 0):
+	case s.ends && (s.more || len(s.rows) > 0 || s.count != nil && len(s.count.Pools) > 0):
 		r.fail("it says more than that it ends")
 	}
 	if r.err != nil {
@@ -330,7 +349,7 @@ func (e *Engine) tellOut(s *Summary) {
 		}
 		return
 	}
-	if n := len(e.told) - 1; n >= 0 && e.told[n].s.Indicator == s.Indicator && e.told[n].s.life == s.life && len(e.told[n].s.rows) == 0 && !s.begins && !s.ends {
+	if n := len(e.told) - 1; n >= 0 && e.told[n].s.count == nil && e.told[n].s.Indicator == s.Indicator && e.told[n].s.life == s.life && len(e.told[n].s.rows) == 0 && !s.begins && !s.ends {
 		last := e.told[n].s
 		last.through, last.rows = s.through, s.rows
 		return
@@ -341,6 +360,7 @@ func (e *Engine) tellOut(s *Summary) {
 // drainTold hands over the summaries for other partitions.
 func (e *Engine) drainTold() []OutSummary {
 	var list []OutSummary
+	e.forgetNothing()
 	for _, o := range e.told {
 		for _, p := range o.s.parts() {
 			list = append(list, OutSummary{o.home, p.encode()})

@@ -63,7 +63,7 @@ func newTwinStream(t *testing.T, seed uint64) *twinStream {
 	t.Helper()
 	g := &twinStream{
 		t: t, rng: rand.New(rand.NewPCG(seed, 17)), rates: map[string]float64{}, reported: map[string]int64{},
-		engine: New(Partition{Of: 1, KeyParts: 1}),
+		engine: New(Partition{Of: 1}),
 	}
 	pace := twinPaces[g.rng.IntN(len(twinPaces))]
 	begin, err := time.Parse(time.RFC3339, pace.begin)

@@ -61,8 +61,12 @@ func (ix *indicator) usualAt(s *series, ep *epoch, boundary int64) (usual, bool)
 	case config.Reference:
 		u.ref = ix.statedBy(u.base)
 		return u, true
-	case config.Trailing, config.Peers:
+	case config.Trailing:
 		u.ref = s.referenceAt(boundary)
+	case config.Peers:
+		if r := s.referenceAt(boundary); r != nil && ix.servedBy(s, ep, u.base, r) {
+			u.ref = r
+		}
 	}
 	return u, u.ref != nil && u.ref.weighted > 0 && u.ref.events >= u.base.MinEvents
 }

@@ -196,7 +196,7 @@ func (f *feeding) publish(ctx context.Context) error {
 // tick moves the clock of every partition to the end of the history: where sums
 // wait for all partitions, also of those that it does not reach by itself.
 func (f *feeding) tick(ctx context.Context) error {
-	if n := len(f.h.Entries); n > 0 && f.setup.GathersAcross() {
+	if n := len(f.h.Entries); n > 0 && f.setup.TellsAcross() {
 		f.until = max(f.until, f.h.Entries[n-1].Time)
 	}
 	if f.until == monitor.Beginning {

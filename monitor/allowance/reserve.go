@@ -21,3 +21,15 @@ func Newborn(perYear, reserve float64, i int) float64 {
 	}
 	return share
 }
+
+// fewestCounted is how many series at least share a reserve that is not drawn on in
+// turn.
+const fewestCounted = 100
+
+// Uncounted is what each series gets that is not among those counted, where nobody
+// can tell how many others are not either: the reserve by their number, or by 100
+// if they are fewer. Together the new ones never exceed the reserve as long as they
+// are not more than that.
+func Uncounted(perYear, reserve float64, counted int) float64 {
+	return perYear * reserve / float64(max(counted, fewestCounted))
+}

@@ -1,0 +1,220 @@
+package monitor
+
+import (
+	"slices"
+
+	"tailbell/config"
+)
+
+// Holds reports whether a message can't be applied yet: in history time the clock
+// would pass the first boundary of a day for which another partition has not told
+// what it counted the day before. The caller then commits what Drain hands over,
+// looks for summaries further ahead in the stream, gives them to ApplyAhead, and
+// asks again; it must not give any other message to Apply meanwhile.
+//
+// Before it says so the engine goes as far as it may: it applies those of a
+// message's observations that lie before that moment, and brings its clock up to
+// just before it, so that the other partitions are told what they wait for. All of
+// that is part of the state that is stored, and what was applied is not applied
+// again, also after a restart. Once the partition is live nothing is held.
+func (e *Engine) Holds(m *Message) bool {
+	if !e.history || e.partition.Of <= 1 || m.Kind == Live || m.Position <= e.position {
+		return false
+	}
+	e.holding = e.holds(m)
+	return e.holding
+}
+
+func (e *Engine) holds(m *Message) bool {
+	if e.clock == Beginning && !e.countsAny() || e.clock != Beginning && e.heldFrom() == Never {
+		return false
+	}
+	if m.Kind != Observations {
+		return e.holdsAt(m)
+	}
+	for i := e.part; i < len(m.Items); i++ {
+		if e.clock != Beginning && e.heldFrom() > m.timeOf(&m.Items[i].Observation) {
+			continue
+		}
+		at, moves := e.movesTo(m, i)
+		if !e.isHeld(at, moves) && (e.clock != Beginning || !moves) {
+			continue
+		}
+		for ; e.part < i; e.part++ {
+			e.element(m, e.part)
+		}
+		if at, moves = e.movesTo(m, i); moves && e.clock == Beginning {
+			e.advance(at)
+		}
+		if e.isHeld(at, moves) {
+			e.goUpTo(at)
+			return true
+		}
+	}
+	return false
+}
+
+// holdsAt is holds for a message of one moment.
+func (e *Engine) holdsAt(m *Message) bool {
+	switch {
+	case m.HasTime && e.clock == Beginning:
+		e.advance(m.Time)
+	case !m.HasTime && m.Kind != ActMessage: // it moves no clock, nor is anything counted
+		return false
+	}
+	if !e.isHeld(m.Time, m.HasTime) {
+		return false
+	}
+	e.goUpTo(m.Time)
+	return true
+}
+
+// isHeld reports whether what moves the clock to a moment, or does not move it at
+// all, is held.
+func (e *Engine) isHeld(at Instant, moves bool) bool {
+	if e.clock == Beginning {
+		return false // nothing is looked at yet
+	}
+	from := e.heldFrom()
+	return from == Beginning || moves && at >= from
+}
+
+// goUpTo brings the clock up to just before the moment from which on messages are
+// held, on its way to another.
+func (e *Engine) goUpTo(at Instant) {
+	if from := e.heldFrom(); from != Beginning && from <= at {
+		e.advance(from - 1)
+	}
+}
+
+// movesTo is the moment to which an observation moves the clock of history time,
+// and whether it does.
+func (e *Engine) movesTo(m *Message, index int) (Instant, bool) {
+	it := &m.Items[index]
+	if it.Reason != "" {
+		return Beginning, false
+	}
+	known, reason, _ := e.timeOf(m, &it.Observation)
+	return known, reason == "" && known > e.clock
+}
+
+// reheld notes that from which moment on messages are held may have changed.
+func (e *Engine) reheld() { e.heldStale = true }
+
+// heldFrom is the moment from which on messages of history time are held: Beginning
+// for all of them, Never for none.
+func (e *Engine) heldFrom() Instant {
+	if !e.heldStale {
+		return e.held
+	}
+	e.held, e.heldStale = Never, false
+	for _, ix := range e.indicators {
+		e.held = min(e.held, e.heldBy(ix))
+	}
+	return e.held
+}
+
+// heldBy is the moment from which on the indicator holds messages.
+func (e *Engine) heldBy(ix *indicator) Instant {
+	_, from := e.needed(ix)
+	return from
+}
+
+// needed is the boundary that others must have told of before messages from a
+// moment on can be applied; Never where nothing is held.
+func (e *Engine) needed(ix *indicator) (boundary int64, from Instant) {
+	k := ix.counting
+	if k == nil || !ix.started {
+		return never, Never
+	}
+	if !k.strict {
+		if !k.allBegun() {
+			return never, Never
+		}
+		k.strict = true
+		e.countsChanged()
+	}
+	told, today := k.complete(e.partition.Number), ix.dayBegins(ix.looked)
+	switch {
+	case told == maxBoundary:
+		return never, Never
+	case told < ix.dayBefore(today):
+		return ix.dayBefore(today), Beginning
+	case told < today:
+		boundary = today
+	default:
+		boundary = ix.dayAfter(ix.dayBegins(told))
+	}
+	return boundary, ix.due(ix.dayAfter(boundary))
+}
+
+func (k *counting) allBegun() bool {
+	return !slices.ContainsFunc(k.told(), func(l countLane) bool { return !l.Begun })
+}
+
+func (e *Engine) countsAny() bool {
+	return slices.ContainsFunc(e.indicators, func(ix *indicator) bool { return ix.counting != nil })
+}
+
+// ApplyAhead applies a summary that was found further ahead in the stream while
+// Holds says that the next message can't be applied. Neither position nor clock
+// move; when the main reading comes to it, Apply passes over it. Summaries must
+// come in order of their positions, none left out; those that came before are
+// ignored, and so is every other kind of message.
+func (e *Engine) ApplyAhead(m *Message) {
+	if m.Kind != SummaryMessage || m.Position <= max(e.position, e.ahead) {
+		return
+	}
+	e.ahead = m.Position
+	e.takeSummary(m)
+}
+
+// Ahead returns the position of the last summary that was applied ahead; 0 if none
+// ever was.
+func (e *Engine) Ahead() uint64 { return e.ahead }
+
+// WaitsFor lists the partitions that the engine waits for: in history time those
+// for which the message that Holds was asked about last is held, in live time those
+// that have not told in time what they count.
+func (e *Engine) WaitsFor() []int {
+	var list []int
+	for _, ix := range e.indicators {
+		for _, p := range e.lacking(ix) {
+			if !slices.Contains(list, p) {
+				list = append(list, p)
+			}
+		}
+	}
+	slices.Sort(list)
+	return list
+}
+
+// lacking lists the partitions that have not told what is to be in force for the
+// indicator.
+func (e *Engine) lacking(ix *indicator) []int {
+	k := ix.counting
+	if k == nil || !ix.started || e.partition.Of <= 1 || e.history && !e.holding {
+		return nil
+	}
+	needed := ix.dayBefore(ix.looked)
+	if e.history {
+		var from Instant
+		if needed, from = e.needed(ix); from != e.heldFrom() || from == Never {
+			return nil
+		}
+	}
+	var list []int
+	for i := range k.told() {
+		switch home := config.PartitionOf(ix.cfg.Name, 0, e.partition.Of); {
+		case k.lanes[i].done() >= needed || i == e.partition.Number:
+		case i < e.partition.Of:
+			list = append(list, i)
+		case home == e.partition.Number: // gathered sums wait for others themselves
+			list = append(list, ix.gathering.waitsFor()...)
+		default:
+			list = append(list, home)
+		}
+	}
+	slices.Sort(list)
+	return slices.Compact(list)
+}
