@@ -96,5 +96,6 @@ func (s section) readLimits() Limits {
 	v, _ = s.whole("max_observations", 10_000, 1, 1_000_000)
 	l.MaxObservations = int(v)
 	l.Memory, _ = s.size("memory", 4<<30, 1<<20, 1<<50)
+	l.Archive = s.readArchive()
 	return l
 }

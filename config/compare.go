@@ -49,6 +49,8 @@ type Change struct {
 	// Effect says in a plain sentence what will happen, where the class alone
 	// doesn't.
 	Effect string
+	// Window is the window that comes in; nil for all other changes.
+	Window *Window
 }
 
 // String returns the change on one line.
@@ -181,6 +183,7 @@ func (c *comparison) setup(a, b *Setup) {
 	c.value("max_message", Restart, exactSize(int64(a.Limits.MaxMessageBytes)), exactSize(int64(b.Limits.MaxMessageBytes)), "")
 	c.value("max_observations", NextLook, a.Limits.MaxObservations, b.Limits.MaxObservations, "")
 	c.value("memory", NextLook, exactSize(a.Limits.Memory), exactSize(b.Limits.Memory), "")
+	c.archive(a.Limits.Archive, b.Limits.Archive)
 	c.path = ""
 }
 
@@ -280,6 +283,7 @@ func (c *comparison) windows(a, b *Indicator) {
 	for _, w := range b.Windows {
 		if windowOf(a, &w) == nil {
 			c.value("windows", Filling, "", windowText(&w), "it is looked at once what is kept and what comes fill it")
+			c.changes[len(c.changes)-1].Window = &w
 		}
 	}
 }

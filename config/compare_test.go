@@ -65,6 +65,7 @@ func TestCompareSeesEveryField(t *testing.T) {
 	var kind BaselineKind
 	fresh := func() *Setup {
 		s := mustParse(t, string(Sample()))
+		s.Limits.Archive = Every{10, Year}
 		s.Outlets = []Outlet{{
 			Name: "ward", URL: "https://hooks.example.org", SecretFile: "secret", Mail: MailOutlet{To: []string{"ward@example.org"}},
 			Command: []string{"/bin/ring"}, Told: Told{Indicators: []string{"fall"}, Series: []Pattern{NewPattern("**")}, Steps: []string{"opened"}},

@@ -53,6 +53,7 @@ func (p *prose) setup(s *Setup) {
 		}
 		p.line("Series are spread over %d partitions by the %s of their names.", s.Partitions, first)
 	}
+	p.archive(s.Limits.Archive)
 	p.page(s.Page)
 	p.outlets(s.Outlets)
 	if s.History {

@@ -20,6 +20,7 @@ func (s *Setup) Doubts(file string) []Fault {
 	d.bus(&s.Bus)
 	for i := range s.Indicators {
 		d.indicator(&s.Indicators[i], i)
+		d.archive(&s.Indicators[i], i, s.Limits.Archive)
 	}
 	for i := range s.Outlets {
 		d.outlet(s, &s.Outlets[i], i)
@@ -68,6 +69,8 @@ func (d *doubts) indicator(in *Indicator, i int) {
 		d.at(in, i, "expires", fmt.Sprintf("%s is shorter than a slot of %s: a level would not last to the end of the next slot",
 			FormatDuration(in.CensusExpiry), in.Every), "make it longer than a slot")
 	}
+	d.retiresFirst(in, i)
+	d.lonelySums(in, i)
 	d.silentLower(in, i)
 	d.validity(in, i)
 	for j := range in.Baselines {

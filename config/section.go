@@ -27,7 +27,7 @@ var keysOf = map[string][]string{
 	"":             {"name", "folder", "partitions", "key_parts", "time", "bus", "limits", "page", "indicator", "outlet"},
 	"[time]":       {"mode"},
 	"[bus]":        {"url", "credentials", "user", "password_file", "ca", "cert", "key", "max_bytes", "max_age", "replicas", "share", "claim", "copy_every"},
-	"[limits]":     {"max_series", "max_ids", "max_message", "max_observations", "memory"},
+	"[limits]":     {"max_series", "max_ids", "max_message", "max_observations", "memory", "archive"},
 	indicatorPlace: {"name", "title", "noun", "series", "sums", "measure", "unit", "per", "expected", "every", "zone", "events", "exposure", "clock", "settle", "follow_up", "horizon", "ahead", "grain", "ids", "expires", "since", "expect", "remind", "remind_to", "retire", "windows", "looks", "tails", "p_limit", "allowance", "allowance_for", "assurance", "reserve", "quiet", "level", "alpha", "baseline"},
 	"clock":        {"size", "per"},
 	"a window":     {"span", "step"},

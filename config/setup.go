@@ -73,6 +73,9 @@ type Limits struct {
 	MaxMessageBytes int   // one message on the bus
 	MaxObservations int   // observations in one message
 	Memory          int64 // estimated bytes above which a set-up is refused
+	// Archive is how long slots that no look needs any more are archived, in days
+	// at least; N is 0 where all are.
+	Archive Every
 }
 
 // Measure says what the events are counted against.

@@ -31,6 +31,9 @@ type Changes struct {
 	// the engine's memory. The same slot may come again after a restart, with
 	// the same content.
 	Archived []ArchivedSlot
+	// ArchiveFrom is when the archive begins: slots that began before are let go. It
+	// is the beginning of a day (UTC) and never goes back; nil if all are kept.
+	ArchiveFrom *Instant
 	// Refused are the refusals, in stream order.
 	Refused []Refusal
 	// Alerts are the touched alert records as they now stand, oldest first.

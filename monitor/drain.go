@@ -23,6 +23,7 @@ func (e *Engine) Drain() Changes {
 	c := Changes{
 		Position: e.position, Archived: e.archived, Refused: e.refused,
 		Steps: e.steps, Settings: e.settings, DroppedGenerations: e.ids.dropped,
+		ArchiveFrom: e.archiveBegins(),
 	}
 	if e.position == e.drained {
 		c.Position = 0
@@ -124,6 +125,8 @@ type header struct {
 	Part   int             `json:"part,omitempty"`
 	Ahead  uint64          `json:"ahead,omitempty"`
 	Counts json.RawMessage `json:"counts,omitempty"`
+	// Archive is when the archive begins; absent while all is kept.
+	Archive *Instant `json:"archive_from,omitempty"`
 }
 
 type indicatorHeader struct {
@@ -175,6 +178,7 @@ func (e *Engine) encodeHeader() []byte {
 		h.Indicators = append(h.Indicators, ih)
 	}
 	h.Inbound, h.Waiting, h.Deferrals = e.inboundHeaders(), e.waiting, e.deferrals
+	h.Archive = e.archiveBegins()
 	data, err := json.Marshal(h)
 	if err != nil {
 		panic(err) // a struct of plain fields

@@ -75,6 +75,8 @@ type Engine struct {
 	steps      []life.Notice
 	settings   []SettingChange
 	checkpoint checkpoint
+	// archiveFrom is when the archive begins, Beginning while all is kept.
+	archiveFrom Instant
 
 	// allowances and solutions remember what was solved: they follow from what
 	// is stored.
@@ -132,7 +134,7 @@ func New(p Partition) *Engine {
 	return &Engine{
 		partition: p, history: true, clock: Beginning, nextDue: Never,
 		byName: map[string]*series{}, stubs: newStubs(), alerts: map[string]*alert{},
-		ids: newIDs(), gathered: Never,
+		ids: newIDs(), gathered: Never, archiveFrom: Beginning,
 		account: Account{RefusedBy: map[Reason]int64{}},
 	}
 }

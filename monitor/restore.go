@@ -49,6 +49,9 @@ func Restore(p Partition, snap *Snapshot, record func(id string) (life.Record, e
 func (e *Engine) restoreHeader(h *header, settings []SettingChange) error {
 	e.history, e.clock, e.version, e.account = h.History, h.Clock, h.Version, h.Account
 	e.checkpoint = checkpoint{h.Cycle, h.Next}
+	if h.Archive != nil {
+		e.archiveFrom = *h.Archive
+	}
 	if e.account.RefusedBy == nil {
 		e.account.RefusedBy = map[Reason]int64{}
 	}

@@ -25,6 +25,7 @@ func (e *Engine) set(m *Message) {
 			return
 		}
 	}
+	e.archiveBegins() // what the old set-up let go is gone
 	from := e.boundaries()
 	if why := e.roomFor(next, from); why != "" {
 		e.account.SettingsRefused++

@@ -83,6 +83,7 @@ func tellCheck(w io.Writer, file string, r store.Report, found error, asJSON boo
 	if found != nil {
 		return tellFaults(w, file, r.Faults, found)
 	}
+	archived := archiveRowOf(&r.Archive)
 	_, err := fmt.Fprintf(w, `%s is sound.
   %s, format %d
   stands at position %d of its stream after %s
@@ -91,7 +92,7 @@ func tellCheck(w io.Writer, file string, r store.Report, found error, asJSON boo
   %d refused, %d of them listed, %d with their bytes; %s
   %.1f MiB, %.1f MiB of them free
 `, file, r.Identity, r.Format, r.Position, amount(r.Commits, "commits"),
-		r.Series, r.States, amount(r.Patches, "patches"), amount(r.IDs, "ids"), amount(r.Generations, "generations"), amount(r.Archived, "archived slots"),
+		r.Series, r.States, amount(r.Patches, "patches"), amount(r.IDs, "ids"), amount(r.Generations, "generations"), "archive: "+archived.String(),
 		amount(r.Alerts, "alerts"), r.OpenAlerts, amount(r.OutboxRows, "steps"), amount(r.Outlets, "outlets"),
 		r.Refused, r.RefusedRows, r.RefusedRaw, amount(r.Settings, "set-ups"),
 		float64(r.FileBytes)/(1<<20), float64(r.FreeBytes)/(1<<20))

@@ -23,24 +23,24 @@ type Report struct {
 	// commit broke off, and the file stands at the one before.
 	TornMeta bool `json:"torn_meta"`
 
-	Series       uint64 `json:"series"`
-	States       uint64 `json:"states"`
-	Patches      uint64 `json:"patches"`
-	JournalFirst uint64 `json:"journal_first"`
-	Generations  uint64 `json:"generations"`
-	IDs          uint64 `json:"ids"`
-	Archived     uint64 `json:"archived"`
-	Alerts       uint64 `json:"alerts"`
-	OpenAlerts   uint64 `json:"open_alerts"`
-	Refused      uint64 `json:"refused"` // ever
-	RefusedRows  uint64 `json:"refused_rows"`
-	RefusedRaw   uint64 `json:"refused_raw"`
-	OutboxRows   uint64 `json:"outbox_rows"`
-	Outlets      uint64 `json:"outlets"`
-	Settings     uint64 `json:"settings"`
-	Marks        uint64 `json:"marks"`
-	Told         uint64 `json:"told"`    // summaries that other partitions are to be told
-	Waiting      uint64 `json:"waiting"` // those of others that wait here
+	Series       uint64  `json:"series"`
+	States       uint64  `json:"states"`
+	Patches      uint64  `json:"patches"`
+	JournalFirst uint64  `json:"journal_first"`
+	Generations  uint64  `json:"generations"`
+	IDs          uint64  `json:"ids"`
+	Alerts       uint64  `json:"alerts"`
+	OpenAlerts   uint64  `json:"open_alerts"`
+	Refused      uint64  `json:"refused"` // ever
+	RefusedRows  uint64  `json:"refused_rows"`
+	RefusedRaw   uint64  `json:"refused_raw"`
+	OutboxRows   uint64  `json:"outbox_rows"`
+	Outlets      uint64  `json:"outlets"`
+	Settings     uint64  `json:"settings"`
+	Marks        uint64  `json:"marks"`
+	Told         uint64  `json:"told"`    // summaries that other partitions are to be told
+	Waiting      uint64  `json:"waiting"` // those of others that wait here
+	Archive      Archive `json:"archive"`
 
 	// Faults are what is wrong, the first ones of them.
 	Faults []string `json:"faults,omitempty"`

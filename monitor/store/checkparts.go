@@ -11,7 +11,7 @@ import (
 // that the head has nothing but its keys.
 func (c *checker) buckets() error {
 	known := map[string]bool{}
-	for _, s := range append(allShelves(), toldShelf, waitingShelf) {
+	for _, s := range append(allShelves(), toldShelf, waitingShelf, daysShelf) {
 		known[s.name] = true
 	}
 	cursor := c.tx.Cursor()
@@ -116,22 +116,74 @@ func (c *checker) ids() error {
 	})
 }
 
+// archive checks the days against what is known of them, and all that is kept
+// against the head.
 func (c *checker) archive() error {
-	count, err := c.each(archiveShelf, func(r rack, key, _ []byte) error {
-		slots, err := r.archived(key, r.Get(key))
-		c.report.Archived += uint64(len(slots))
-		for _, slot := range slots {
-			if slot.Number >= c.h.Series {
-				return r.damaged(key, fmt.Sprintf("series %d, there are %d", slot.Number, c.h.Series))
-			}
-		}
+	r, err := archiveShelf.in(c.tx)
+	if err != nil {
 		return err
-	})
-	if err == nil {
-		c.same("parts of the archive", count, c.h.ArchiveParts)
-		c.same("archived slots", c.report.Archived, c.h.Archived)
 	}
-	return err
+	var kept tally
+	days := uint64(0)
+	cursor := r.Cursor()
+	for key, value := cursor.First(); key != nil; key, value = cursor.Next() {
+		if value != nil { // from before days were kept apart
+			if err := c.archivePart(r, key, value, &kept); err != nil {
+				return err
+			}
+			continue
+		}
+		t, err := c.archiveDay(r, key)
+		if err != nil {
+			return err
+		}
+		days++
+		if g := c.h.LetGo; g == nil || generationOf(key) >= dayOf(g.Before) {
+			kept.Parts, kept.Slots = kept.Parts+t.Parts, kept.Slots+t.Slots
+		}
+	}
+	if rows, ok := daysShelf.optional(c.tx); ok {
+		count, err := c.each(rows.shelf, func(rack, []byte, []byte) error { return nil })
+		if err != nil {
+			return err
+		}
+		c.same("days of the archive", days, count)
+	}
+	c.report.Archive = c.h.archive()
+	c.same("parts of the archive", kept.Parts, c.h.ArchiveParts)
+	c.same("archived slots", kept.Slots, c.h.Archived)
+	return nil
+}
+
+func (c *checker) archivePart(r rack, key, value []byte, t *tally) error {
+	slots, err := r.archived(key, value)
+	if err != nil {
+		return err
+	}
+	for _, slot := range slots {
+		if slot.Number >= c.h.Series {
+			return r.damaged(key, fmt.Sprintf("series %d, there are %d", slot.Number, c.h.Series))
+		}
+	}
+	t.Parts, t.Slots = t.Parts+1, t.Slots+uint64(len(slots))
+	return nil
+}
+
+func (c *checker) archiveDay(r rack, key []byte) (t tally, err error) {
+	rows, ok := daysShelf.optional(c.tx)
+	if len(key) != 8 || !ok {
+		return t, r.damaged(key, "it is no day of the archive")
+	}
+	d := r.day(key)
+	if err := d.ForEach(func(key, value []byte) error { return c.archivePart(*d, key, value, &t) }); err != nil {
+		return t, err
+	}
+	var want tally
+	known, err := rows.getJSON(key, &want)
+	if err == nil && (!known || want != t) {
+		err = rows.damaged(key, fmt.Sprintf("the day holds %+v instead of %+v", t, want))
+	}
+	return t, err
 }
 
 func (c *checker) alerts() error {

@@ -51,7 +51,7 @@ func (s *Store) write(tx *bolt.Tx, h *head, changes *monitor.Changes) error {
 		func() error { return writeJournal(tx, h, changes) },
 		func() error { return writeStates(tx, h, changes.States) },
 		func() error { return writeIDs(tx, h, changes) },
-		func() error { return writeArchive(tx, h, changes.Archived) },
+		func() error { return writeArchive(tx, h, changes) },
 		func() error { return writeRefused(tx, h, changes.Refused, s.opts.Retention) },
 		func() error { return writeAlerts(tx, h, changes.Alerts) },
 		func() error { return writeSteps(tx, h, changes.Steps) },

@@ -34,13 +34,13 @@ func filled(t *testing.T) ([]byte, *twin) {
 		t.Fatal(err)
 	}
 	quick(s)
-	w := &twin{outlets: map[string]uint64{"bus": 0, "terminal": 0}}
+	w := &twin{from: monitor.Beginning, outlets: map[string]uint64{"bus": 0, "terminal": 0}}
 	if err := errors.Join(s.Outlets(FromEnd, "bus", "terminal"), s.SetStream(StreamIdentity{Name: "quillmere-in"})); err != nil {
 		t.Fatal(err)
 	}
 	// One deterministic draw of a whole history.
 	history := rapid.Custom(func(rt *rapid.T) []monitor.Changes {
-		*w = twin{outlets: w.outlets}
+		*w = twin{from: monitor.Beginning, outlets: w.outlets}
 		var all []monitor.Changes
 		for range 60 {
 			all = append(all, w.batch(rt))
@@ -230,7 +230,10 @@ func TestCheckFindsContradictions(t *testing.T) {
 		"a lost set-up":               drop(settingsShelf, true),
 		"a lost mark":                 drop(marksShelf, true),
 		"a lost generation":           drop(generationsShelf, true),
-		"a lost archive":              drop(archiveShelf, true),
+		"a lost day of the archive":   dropDay,
+		"a lost part of the archive":  dropPart,
+		"a day nobody counted":        drop(daysShelf, false),
+		"a slot too many":             editHead(func(h *head) { h.Archived-- }),
 		"a lost header":               drop(headerShelf, true),
 		"a lost summary to tell":      drop(toldShelf, false),
 		"a lost summary that waits":   drop(waitingShelf, true),

@@ -39,3 +39,29 @@ func drop(which shelf, first bool) func(s *Store) error {
 		})
 	}
 }
+
+// dropDay removes the last day of the archive behind the store's back.
+func dropDay(s *Store) error {
+	return s.update("edit", func(tx *bolt.Tx, _ *head) error {
+		r, err := archiveShelf.in(tx)
+		if err != nil {
+			return err
+		}
+		key, _ := r.Cursor().Last()
+		return r.DeleteBucket(key)
+	})
+}
+
+// dropPart removes the first part of the last day of the archive.
+func dropPart(s *Store) error {
+	return s.update("edit", func(tx *bolt.Tx, _ *head) error {
+		r, err := archiveShelf.in(tx)
+		if err != nil {
+			return err
+		}
+		key, _ := r.Cursor().Last()
+		d := r.day(key)
+		part, _ := d.Cursor().First()
+		return d.remove(part)
+	})
+}

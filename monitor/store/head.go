@@ -43,9 +43,11 @@ type head struct {
 	RawFirst     uint64 `json:"raw_first"`
 	Raw          uint64 `json:"raw"`
 	RawBytes     uint64 `json:"raw_bytes"`
-	// Archived counts the archived slots, ArchiveParts the values they lie in.
-	Archived     uint64 `json:"archived"`
-	ArchiveParts uint64 `json:"archive_parts"`
+	// Archived counts the archived slots that are kept, ArchiveParts the values they
+	// lie in. LetGo is nil while all are kept.
+	Archived     uint64   `json:"archived"`
+	ArchiveParts uint64   `json:"archive_parts"`
+	LetGo        *letGone `json:"let_go,omitempty"`
 	// Outbox is the number of the last step, OutboxFirst the first one kept.
 	Outbox      uint64 `json:"outbox"`
 	OutboxFirst uint64 `json:"outbox_first"`

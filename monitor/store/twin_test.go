@@ -36,6 +36,8 @@ type twin struct {
 	refused  []monitor.Refusal
 	steps    []life.Notice
 	archived []monitor.ArchivedSlot
+	from     monitor.Instant // when the archive begins
+	letGo    uint64
 	outlets  map[string]uint64
 	told     []monitor.OutSummary // what others are yet to be told
 	waiting  []monitor.WaitingSummary
@@ -154,9 +156,25 @@ func (w *twin) register(t *rapid.T, c *monitor.Changes) {
 		if len(w.series) == 0 {
 			break
 		}
-		slot := monitor.ArchivedSlot{Number: uint32(i % len(w.series)), Start: monitor.Instant(-i), Data: []byte("{}")}
+		day := rapid.IntRange(-3, 30).Draw(t, "day")
+		slot := monitor.ArchivedSlot{Number: uint32(i % len(w.series)), Start: dayBegins(int64(day)) + monitor.Instant(i), Data: fmt.Appendf(nil, "%d.%d", w.position, i)}
 		w.archived, c.Archived = append(w.archived, slot), append(c.Archived, slot)
 	}
+	w.let(t, c)
+}
+
+// let moves on when the archive begins.
+func (w *twin) let(t *rapid.T, c *monitor.Changes) {
+	if rapid.IntRange(0, 9).Draw(t, "archive") == 0 {
+		w.from = max(w.from, dayBegins(int64(rapid.IntRange(-5, 20).Draw(t, "from"))))
+	}
+	if w.from != monitor.Beginning {
+		from := w.from
+		c.ArchiveFrom = &from
+	}
+	kept := slices.DeleteFunc(slices.Clone(w.archived), func(s monitor.ArchivedSlot) bool { return s.Start < w.from })
+	w.letGo += uint64(len(w.archived) - len(kept))
+	w.archived = kept
 }
 
 func (w *twin) refuse(t *rapid.T, c *monitor.Changes) {
@@ -281,9 +299,16 @@ func (w *twin) compareRows(s *Store) error {
 	}); err != nil {
 		return err
 	}
+	archive, err := s.Archive()
+	if err != nil {
+		return err
+	}
+	byDay := slices.Clone(w.archived) // a day's in the order of their writing
+	slices.SortStableFunc(byDay, func(a, b monitor.ArchivedSlot) int { return int(dayOf(a.Start) - dayOf(b.Start)) })
 	errs := []error{
+		differ("let go", archive.LetGo, w.letGo), differ("kept", archive.Slots, uint64(len(w.archived))),
 		differ("alerts", records, w.alerts), differ("refused", refusals, w.refused),
-		differ("reasons", counts, want), differ("archived", slots, w.archived),
+		differ("reasons", counts, want), differ("archived", slots, byDay),
 	}
 	for name, delivered := range w.outlets {
 		pending, err := s.Pending(name, 1<<30)
@@ -333,7 +358,7 @@ func TestTwin(t *testing.T) {
 	rapid.Check(t, func(rt *rapid.T) {
 		run++
 		m := &machine{
-			w:      &twin{outlets: map[string]uint64{"bus": 0, "terminal": 0}},
+			w:      &twin{from: monitor.Beginning, outlets: map[string]uint64{"bus": 0, "terminal": 0}},
 			folder: filepath.Join(folder, fmt.Sprint(run)),
 		}
 		if err := os.Mkdir(m.folder, 0o700); err != nil {
