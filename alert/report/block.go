@@ -375,6 +375,9 @@ func lacks(r *Report) []block {
 		wereAmount(int64(r.Rows), "rows"), words.Whole(int64(r.Faults)), wereAmount(a.Refused, "observations"), words.Whole(a.Unmonitored),
 		words.Whole(a.Late), words.Whole(a.Replaced))
 	text += fmt.Sprintf(" When they fell due, %s; %s made again because data changed.", made(a), wereAmount(a.Reruns, "looks"))
+	if r.Begins != "" {
+		text += " " + r.Begins + " What lies before is in none of these figures and pictures; alerts are whole."
+	}
 	blocks := append([]block{{Text: text}}, unused(r)...)
 	if len(r.Conditions) == 0 {
 		return append(blocks, block{Text: "No series lacks anything at the end."})
@@ -422,6 +425,9 @@ func again(r *Report) []block {
 		if p.Data != "" && p.Data != r.Data {
 			list = append(list, "A rehearsal used other data: SHA-256 "+p.Data)
 		}
+	}
+	if r.Begins != "" {
+		list = append(list, r.Begins)
 	}
 	blocks := []block{{Text: "The same data, set-up, options and program give this file again to the byte."}, {List: list}}
 	if r.Remake != "" {

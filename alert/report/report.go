@@ -53,6 +53,8 @@ type Report struct {
 	Conditions []Condition
 	Indicators []*Indicator
 	Rehearsals []*plant.Report
+	// Begins says, of a store, from when on it has slots; "" where it has all.
+	Begins string
 	// Remake is the command line that makes the report again.
 	Remake string
 }

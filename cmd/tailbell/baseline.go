@@ -105,6 +105,11 @@ func baseline(ctx context.Context, o *baselineOptions, paths []string, stdin io.
 	if err != nil {
 		return err
 	}
+	for _, begins := range d.begins {
+		if err := say(stderr, "%s What lies before is in none of these figures.", begins); err != nil {
+			return err
+		}
+	}
 	r, h, err := d.analyse(ctx, o, span, stderr)
 	if err != nil {
 		return err
@@ -198,6 +203,8 @@ type baselineData struct {
 	timed bool
 	// faults is how many rows of the files can't be used; they were named.
 	faults int
+	// begins says of stores from when on they have slots, where they lack some.
+	begins []string
 }
 
 func newReports(in *config.Indicator) *estimate.Reports {
@@ -282,7 +289,13 @@ func (d *baselineData) archive(slots []monitor.ArchivedSlot) error {
 func (d *baselineData) fromStores(setup *config.Setup) error {
 	d.clock = monitor.Beginning
 	return lookAside(setup, func(st *store.Store) error {
-		err := st.Archived(func(a monitor.ArchivedSlot) error { return d.archive([]monitor.ArchivedSlot{a}) })
+		begins, err := archiveBegins(st)
+		if err == nil && begins != "" {
+			d.begins = append(d.begins, begins)
+		}
+		if err == nil {
+			err = st.Archived(func(a monitor.ArchivedSlot) error { return d.archive([]monitor.ArchivedSlot{a}) })
+		}
 		if err != nil {
 			return err
 		}
@@ -308,7 +321,7 @@ func (d *baselineData) fromDaemon(ctx context.Context, path string, setup *confi
 	}
 	copied := *setup
 	copied.Folder = folder
-	d.sums = nil
+	d.sums, d.begins = nil, nil
 	return d.fromStores(&copied)
 }
 

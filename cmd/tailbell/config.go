@@ -48,16 +48,25 @@ func newConfigSchemaCommand() *cobra.Command {
 func newConfigCheckCommand() *cobra.Command {
 	var against string
 	c := &cobra.Command{
-		Use:   "check FILE",
+		Use:   "check [FILE]",
 		Short: "Say in plain sentences what a set-up would monitor, or everything that is wrong with it",
-		Long: `Says in plain sentences what the set-up in FILE would monitor, how often it
-would look, what it may cost in memory, and what in it is probably not meant.
-If anything is wrong, every fault is printed with its line, and the command
-fails. With --against OLD it also says what would change from the set-up OLD.`,
-		RunE: func(c *cobra.Command, args []string) error { return checkConfig(c, args[0], against) },
+		Long: `Says in plain sentences what the set-up in FILE (tailbell.toml, unless another is
+named) would monitor, how often it would look, what it may cost in memory, and what
+in it is probably not meant. If anything is wrong, every fault is printed with its
+line, and the command fails. With --against OLD it also says what would change from
+the set-up OLD.`,
+		RunE: func(c *cobra.Command, args []string) error { return checkConfig(c, setupNamed(args), against) },
 	}
 	c.Flags().StringVar(&against, "against", "", "also say what changes from the set-up in this file")
 	return c
+}
+
+// setupNamed is the set-up that the arguments name, else the usual one.
+func setupNamed(args []string) string {
+	if len(args) > 0 {
+		return args[0]
+	}
+	return defaultSetup
 }
 
 func checkConfig(c *cobra.Command, file, against string) error {

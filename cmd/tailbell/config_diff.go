@@ -12,7 +12,9 @@ import (
 	"github.com/spf13/cobra"
 
 	"tailbell/config"
+	"tailbell/monitor"
 	"tailbell/monitor/change"
+	"tailbell/monitor/partition"
 	"tailbell/monitor/store"
 )
 
@@ -22,6 +24,8 @@ type settingRow struct {
 	Version   int    `json:"version"`
 	Digest    string `json:"digest"`
 	Text      []byte `json:"text,omitempty"` // of the first only
+	// Kept says by indicator how far back slots are known.
+	Kept map[string]monitor.Kept `json:"kept,omitempty"`
 }
 
 // settingsReply is the set-up in force, and the alerts that live under it.
@@ -32,25 +36,43 @@ type settingsReply struct {
 }
 
 // setting tells the set-ups in force.
-func (d *daemon) setting(context.Context, []byte) (any, error) {
+func (d *daemon) setting(ctx context.Context, _ []byte) (any, error) {
 	r := &settingsReply{}
 	for _, p := range d.parts.all() {
-		if err := r.add(p.number, p.store); err != nil {
+		var kept map[string]monitor.Kept
+		err := p.do(ctx, func(e *monitor.Engine) { kept = e.Kept() })
+		if err == nil {
+			err = r.add(p.number, p.store, kept)
+		}
+		if err != nil {
 			return nil, err
 		}
 	}
 	return r, nil
 }
 
+// least is what all partitions know, by indicator.
+func (r *settingsReply) least() map[string]monitor.Kept {
+	all := map[string]monitor.Kept{}
+	for _, s := range r.Settings {
+		for name, k := range s.Kept {
+			if known, ok := all[name]; !ok || k.From > known.From {
+				all[name] = k
+			}
+		}
+	}
+	return all
+}
+
 // add adds what one partition's store holds. One without a set-up adds
 // nothing.
-func (r *settingsReply) add(partition int, st *store.Store) error {
+func (r *settingsReply) add(partition int, st *store.Store, kept map[string]monitor.Kept) error {
 	settings, err := st.Settings()
 	if err != nil || len(settings) == 0 {
 		return err
 	}
 	last := settings[len(settings)-1]
-	row := settingRow{Partition: partition, Version: last.Version, Digest: last.Digest}
+	row := settingRow{Partition: partition, Version: last.Version, Digest: last.Digest, Kept: kept}
 	if len(r.Settings) == 0 {
 		row.Text = last.Text
 	}
@@ -83,21 +105,23 @@ func newConfigDiffCommand() *cobra.Command {
 	var path string
 	var asJSON bool
 	c := &cobra.Command{
-		Use:   "diff FILE",
+		Use:   "diff [FILE]",
 		Short: "Say beforehand what a changed set-up would mean for the running daemon and its alerts",
-		Long: `Compares the set-up in FILE with the one that is in force in the running daemon,
-or in its store if none runs, and says what would change: from the next look on,
-once data have come in, with the next start; what a running store can't take; and
-what would become of each alert that is not done. Nothing is changed.
+		Long: `Compares the set-up in FILE (tailbell.toml, unless another is named) with the one
+that is in force in the running daemon, or in its store if none runs, and says what
+would change: from the next look on, once data have come in, and when a new window
+would be full; with the next start; what a running store can't take; and what would
+become of each alert that is not done. Nothing is changed.
 
 The daemon is found by FILE's own name, folder and bus; if FILE changes those, give
 the old set-up as --config. A changed set-up comes into force when the daemon is
 started with it. The exit code is 0 if the store can take it, 1 if it can't.`,
 		RunE: func(c *cobra.Command, args []string) error {
+			file := setupNamed(args)
 			if path == "" {
-				path = args[0]
+				path = file
 			}
-			reply, err := diffSetup(c.Context(), args[0], path)
+			reply, err := diffSetup(c.Context(), file, path)
 			if err != nil {
 				return err
 			}
@@ -140,7 +164,11 @@ func diffSetup(ctx context.Context, file, path string) (*diffReply, error) {
 	}
 	var have settingsReply
 	err = askOrLook(ctx, path, verbSetting, nil, &have, func(st *store.Store) error {
-		return have.add(st.Identity().Partition, st)
+		e, err := partition.Recover(st)
+		if err != nil {
+			return err
+		}
+		return have.add(st.Identity().Partition, st, e.Kept())
 	})
 	if err != nil {
 		return nil, err
@@ -163,6 +191,7 @@ func diffSetup(ctx context.Context, file, path string) (*diffReply, error) {
 		return nil, fmt.Errorf("the set-up in force was written for another version of this program, which must compare it: %w", err)
 	}
 	reply.InForce, reply.Version, reply.Plan = first.Digest, first.Version, change.Of(old, next, have.Alerts)
+	reply.TellFull(next, have.least())
 	return reply, nil
 }
 

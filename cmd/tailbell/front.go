@@ -349,6 +349,7 @@ func (f *front) actOnAll(ctx context.Context, body []byte) (any, error) {
 		}
 		taken = true
 		all.Series += one.Series
+		all.Left = append(all.Left, one.Left...)
 	}
 	if !taken {
 		return nil, refused

@@ -121,7 +121,7 @@ func TestStatusHasRoom(t *testing.T) {
 		t.Errorf("%d told, %d more", len(s.Conditions), s.MoreConditions)
 	}
 	var out strings.Builder
-	if err := writePartition(&out, "quillmere", &s); err != nil || !strings.Contains(out.String(), "and 438 conditions more") {
+	if err := writePartition(&out, "quillmere", &s, zones{}); err != nil || !strings.Contains(out.String(), "and 438 conditions more") {
 		t.Errorf("%v: %s", err, out.String())
 	}
 }

@@ -34,7 +34,7 @@ func (o *replayOptions) summarise(w io.Writer, r *replay.Result, took time.Durat
 		amount(kinds[life.StepOpened], "alerts"), kinds[life.StepWorsened],
 		kinds[life.StepCorrected], kinds[life.StepReturned], kinds[life.StepWithdrawn])
 	err = errors.Join(err, o.sayRemarks(w), writeAccount(w, r.Account), writeWatches(w, o.setups[0], r), writeChances(w, r))
-	return errors.Join(err, writeConditions(w, r.Conditions), writeClock(w, r), o.writeRefused(w, r))
+	return errors.Join(err, writeConditions(w, r.Conditions, zonesOf(o.setups[0])), writeClock(w, r), o.writeRefused(w, r))
 }
 
 // sayRemarks counts what is odd about rows.
@@ -126,13 +126,13 @@ func (o *replayOptions) writeRefused(w io.Writer, r *replay.Result) error {
 }
 
 // writeConditions names the first conditions that stand at the end.
-func writeConditions(w io.Writer, conditions []monitor.Condition) error {
+func writeConditions(w io.Writer, conditions []monitor.Condition, z zones) error {
 	const most = 10
 	for i, c := range conditions {
 		if i == most {
 			return say(w, "  ... and %s more", amount(len(conditions)-most, "conditions"))
 		}
-		if err := writeCondition(w, conditionRowOf(c)); err != nil {
+		if err := writeCondition(w, conditionRowOf(c), z); err != nil {
 			return err
 		}
 	}

@@ -59,7 +59,9 @@ output. The same data, set-up, options and program give the same bytes: no time 
 day is in it unless --made gives one.
 
 From a store the pictures go back only as far as the daemon still holds slots in
-memory.`,
+memory, and what the history itself says of the usual rates as far as the archive
+([limits] archive); the report says from when on. A store is one partition: where
+the set-up has several, a report is made of files of history only.`,
 		Example: `  tailbell report --config quillmere.toml --html report.html history.ndjson
   tailbell report --config quillmere.toml --rehearsal rehearsal.json --html report.html --markdown report.md history.ndjson`,
 		RunE: func(c *cobra.Command, args []string) error {
@@ -248,7 +250,8 @@ func (o *reportOptions) ofStore(ctx context.Context, st *store.Store, stderr io.
 		return nil, err
 	}
 	r.Data, r.Files = hex.EncodeToString(sum.Sum(nil)), []string{"the store at position " + fmt.Sprint(e.Position())}
-	return r, nil
+	r.Begins, err = archiveBegins(st)
+	return r, err
 }
 
 // readRehearsals reads what "tailbell rehearse --json" printed.

@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"io"
 	"os"
+	"slices"
 	"strings"
 	"time"
 
@@ -24,6 +25,7 @@ type seriesActing struct {
 	from, until, span string
 	month             string
 	zone              *time.Location // of the indicators concerned; nil for several
+	zoneName          string         // where it is said, since it follows from the series
 	what, side        string
 }
 
@@ -107,7 +109,7 @@ func (a *seriesActing) runAll(ctx context.Context, w io.Writer, series []string)
 	for i, name := range series {
 		acts[i] = *a
 		acts[i].act.Series = name
-		if err := acts[i].complete(setup); err != nil {
+		if err := acts[i].complete(ctx, setup); err != nil {
 			return &usageError{err}
 		}
 		data := wire.EncodeAct(nil, &acts[i].act)
@@ -133,11 +135,11 @@ func (a *seriesActing) run(ctx context.Context, w io.Writer, setup *config.Setup
 	if err != nil {
 		return err
 	}
-	return say(w, "%s.", a.told(r.Series))
+	return say(w, "%s%s.", a.told(r.Series), toldLeft(r.Left))
 }
 
 // complete reads the options that are not read yet.
-func (a *seriesActing) complete(setup *config.Setup) error {
+func (a *seriesActing) complete(ctx context.Context, setup *config.Setup) error {
 	if a.act.By = strings.TrimSpace(a.act.By); a.act.By == "" {
 		a.act.By = strings.TrimSpace(os.Getenv(byVariable))
 	}
@@ -153,10 +155,17 @@ func (a *seriesActing) complete(setup *config.Setup) error {
 	}
 	a.act.What, a.act.Side = monitor.ChangeKind(a.what), monitor.Side(a.side)
 	zone, name, err := zoneAmong(setup, a.act.Series)
+	if err == nil && zone == nil && a.needsZone() {
+		zone, name, err = zoneOfKnown(ctx, a.path, setup, a.act.Series)
+		a.zoneName = name
+	}
 	if err != nil {
 		return err
 	}
 	a.zone = zone
+	if a.month != "" && zone == nil {
+		return fmt.Errorf("--month %q: the series are in several zones, so say --from and --until with their offsets: 2026-03-01T00:00:00+01:00", a.month)
+	}
 	if a.month != "" {
 		begin, err := time.ParseInLocation("2006-01", a.month, zone)
 		if err != nil {
@@ -208,6 +217,36 @@ func zoneAmong(setup *config.Setup, pattern string) (*time.Location, string, err
 	return zone, name, nil
 }
 
+// needsZone reports whether a date is given without its offset.
+func (a *seriesActing) needsZone() bool {
+	for _, text := range []string{a.from, a.until} {
+		if _, err := wire.ParseTime(text); text != "" && err != nil {
+			return true
+		}
+	}
+	return a.month != ""
+}
+
+// mostKnown is how many series are looked at for their zone.
+const mostKnown = 20_000
+
+// zoneOfKnown is the zone of the series that match by now, where indicators of
+// several zones may have some; nil if they have several, too, or there are none.
+func zoneOfKnown(ctx context.Context, path string, setup *config.Setup, pattern string) (zone *time.Location, name string, err error) {
+	list, more, err := listSeries(ctx, path, seriesRequest{Pattern: pattern}, mostKnown)
+	if err != nil || more {
+		return nil, "", err
+	}
+	for i := range list {
+		at := slices.IndexFunc(setup.Indicators, func(in config.Indicator) bool { return in.Name == list[i].Indicator })
+		if at < 0 || zone != nil && setup.Indicators[at].ZoneName != name {
+			return nil, "", nil
+		}
+		zone, name = setup.Indicators[at].Zone, setup.Indicators[at].ZoneName
+	}
+	return zone, name, nil
+}
+
 // dateIn reads a date in the zone, or a time with its offset.
 func dateIn(zone *time.Location, name, option, text string) (monitor.Instant, error) {
 	if at, err := wire.ParseTime(text); err == nil {
@@ -242,6 +281,9 @@ func (a *seriesActing) told(series int) string {
 	span := from + " to " + until
 	if a.month != "" {
 		span = a.month
+	}
+	if a.zoneName != "" {
+		from, span = from+" ("+a.zoneName+")", span+" ("+a.zoneName+")"
 	}
 	switch a.act.Kind { //nolint:exhaustive // the others are acts on alerts
 	case monitor.Reset:

@@ -54,9 +54,11 @@ func (d *daemon) series(ctx context.Context, req seriesRequest) (any, error) {
 	return r, err
 }
 
-// seriesActReply says for how many series an act holds by now.
+// seriesActReply says for how many series an act holds by now, and which alerts
+// left with it.
 type seriesActReply struct {
-	Series int `json:"series"`
+	Series int         `json:"series"`
+	Left   []leftAlert `json:"left,omitempty"`
 }
 
 // actOnSeries publishes an act to every partition in which a series may match.
@@ -81,6 +83,10 @@ func (d *daemon) actOnSeries(ctx context.Context, act *monitor.Act, data json.Ra
 	refused := ""
 	taken := false
 	for _, p := range parts {
+		lit, err := notLeft(p.store, act.Series)
+		if err != nil {
+			return nil, err
+		}
 		why, err := d.publishAct(ctx, p, data)
 		if err != nil {
 			return nil, err
@@ -93,6 +99,11 @@ func (d *daemon) actOnSeries(ctx context.Context, act *monitor.Act, data json.Ra
 		if err := p.do(ctx, func(e *monitor.Engine) { r.Series += e.Matching(act.Series) }); err != nil {
 			return nil, err
 		}
+		left, err := leftOf(p.store, lit)
+		if err != nil {
+			return nil, err
+		}
+		r.Left = append(r.Left, left...)
 	}
 	if !taken {
 		return nil, control.Errorf(codeRefused, "%s", refused)

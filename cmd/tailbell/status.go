@@ -20,7 +20,9 @@ func newStatusCommand() *cobra.Command {
 		Long: `Says how the running daemon is doing, partition by partition: how far it has read
 its stream, its clock, what became of every element of the stream and of every
 look, how many alert steps wait for each outlet, and the conditions: windows whose
-looks are withheld and why, and series that have fallen silent.`,
+looks are withheld and why, and series that have fallen silent. What belongs to an
+indicator is told in its zone, as its alerts are; other times in the zone that all
+indicators have, or in UTC if they have several.`,
 		RunE: func(c *cobra.Command, _ []string) error {
 			setup, err := loadSetup(path)
 			if err != nil {
@@ -33,7 +35,7 @@ looks are withheld and why, and series that have fallen silent.`,
 			if asJSON {
 				return writeJSON(c.OutOrStdout(), s)
 			}
-			return writeStatus(c.OutOrStdout(), &s)
+			return writeStatus(c.OutOrStdout(), &s, zonesOf(setup))
 		},
 	}
 	addConfigFlag(c, &path)
@@ -41,14 +43,14 @@ looks are withheld and why, and series that have fallen silent.`,
 	return c
 }
 
-func writeStatus(w io.Writer, s *statusReply) error {
+func writeStatus(w io.Writer, s *statusReply, z zones) error {
 	for i := range s.Partitions {
-		if err := writePartition(w, s.Name, &s.Partitions[i]); err != nil {
+		if err := writePartition(w, s.Name, &s.Partitions[i], z); err != nil {
 			return err
 		}
 	}
 	for _, t := range s.Troubles {
-		if err := writeTrouble(w, &t); err != nil {
+		if err := writeTrouble(w, &t, z); err != nil {
 			return err
 		}
 	}
@@ -58,25 +60,25 @@ func writeStatus(w io.Writer, s *statusReply) error {
 	return nil
 }
 
-func writeTrouble(w io.Writer, t *trouble) error {
+func writeTrouble(w io.Writer, t *trouble, z zones) error {
 	where := "all partitions"
 	if t.Partition != everyPartition {
 		where = fmt.Sprintf("partition %d", t.Partition)
 	}
 	since := ""
 	if !t.Since.IsZero() {
-		since = ", since " + t.Since.Format("2006-01-02 15:04:05Z")
+		since = ", since " + z.stamp(t.Since)
 	}
 	return say(w, "trouble in %s: %s: %s%s", where, t.Kind, t.Text, since)
 }
 
-func writePartition(w io.Writer, name string, p *partStatus) error {
+func writePartition(w io.Writer, name string, p *partStatus, z zones) error {
 	mode, clock := "live", "not set yet"
 	if p.History {
 		mode = "history time"
 	}
 	if p.Clock != nil {
-		clock = p.Clock.Format("2006-01-02 15:04:05Z")
+		clock = z.stamp(*p.Clock)
 	}
 	if err := say(w, "%s, partition %d: position %d of %d, %s, clock %s, set-up version %d, %s not done",
 		name, p.Number, p.Position, p.End, mode, clock, p.Version, amount(p.OpenAlerts, "alerts")); err != nil {
@@ -87,6 +89,11 @@ func writePartition(w io.Writer, name string, p *partStatus) error {
 	}
 	if err := writeAccount(w, p.Account); err != nil {
 		return err
+	}
+	if p.Archive.From != nil {
+		if err := say(w, "  archive: %s", &p.Archive); err != nil {
+			return err
+		}
 	}
 	if refused := p.Account.Refused + p.Account.ActsRefused + p.Account.SettingsRefused + p.Account.Rejected; refused > 0 {
 		if err := say(w, "  tailbell refused list says what was refused, and why"); err != nil {
@@ -100,7 +107,7 @@ func writePartition(w io.Writer, name string, p *partStatus) error {
 		}
 	}
 	for _, c := range p.Conditions {
-		if err := writeCondition(w, c); err != nil {
+		if err := writeCondition(w, c, z); err != nil {
 			return err
 		}
 	}
@@ -119,12 +126,12 @@ func endedOf(a monitor.Account) string {
 		words.Whole(a.Retired), words.Whole(a.Returned))
 }
 
-func writeCondition(w io.Writer, c conditionRow) error {
+func writeCondition(w io.Writer, c conditionRow, z zones) error {
 	about := []string{c.Series, c.Window, string(c.Kind)}
 	if c.Window == "" {
 		about = []string{c.Series, string(c.Kind)}
 	}
-	return say(w, "  condition: %s: %s, since %s", strings.Join(about, " "), c.Text, c.Since.Format("2006-01-02 15:04Z"))
+	return say(w, "  condition: %s: %s, since %s", strings.Join(about, " "), c.Text, z.stampOf(c.Indicator, c.Since))
 }
 
 // amount writes a number of things: "1 alert", "2 alerts".

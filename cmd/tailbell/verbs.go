@@ -85,6 +85,7 @@ type partStatus struct {
 	MoreConditions int         `json:"more_conditions,omitempty"`
 	Outlets        []outletRow `json:"outlets"`
 	OpenAlerts     int         `json:"open_alerts"`
+	Archive        archiveRow  `json:"archive"`
 	// Owner is the process that owns the partition, Epoch its own. Copy is the last
 	// copy of the store on the bus, nil for none.
 	Owner string   `json:"owner"`
@@ -186,6 +187,11 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 		if s.Epoch, err = p.store.Epoch(); err != nil {
 			return nil, err
 		}
+		archive, err := p.store.Archive()
+		if err != nil {
+			return nil, err
+		}
+		s.Archive = archiveRowOf(&archive)
 		if r.Connected {
 			if s.End, err = d.endOf(ctx, p); err != nil {
 				r.Connected = false

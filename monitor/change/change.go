@@ -37,6 +37,8 @@ type Change struct {
 	Effect string `json:"effect,omitempty"`
 	// Refused says why a running store can't take it; "" if it can.
 	Refused string `json:"refused,omitempty"`
+	// window is the one that comes in, nil of other changes.
+	window *config.Window
 }
 
 // Alert is as much of an alert as a change needs to know.
@@ -68,7 +70,7 @@ func Of(old, next *config.Setup, alerts []Alert) *Plan {
 	p := &Plan{Changes: []Change{}, Alerts: []Fate{}, Fits: true}
 	changes := config.Compare(old, next)
 	for _, c := range changes {
-		p.Changes = append(p.Changes, Change{Key: c.Key, Class: c.Class.String(), Old: c.Old, New: c.New, Effect: c.Effect})
+		p.Changes = append(p.Changes, Change{Key: c.Key, Class: c.Class.String(), Old: c.Old, New: c.New, Effect: c.Effect, window: c.Window})
 	}
 	for _, o := range monitor.Obstacles(old, next) {
 		p.Fits = false
