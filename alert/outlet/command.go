@@ -66,8 +66,12 @@ func (c *Command) Name() string { return c.name }
 
 // Deliver runs the program for one step.
 func (c *Command) Deliver(ctx context.Context, n *life.Notice) error {
+	text := words.Notice(n, letterWidth)
+	if !cautioned(n) {
+		text += words.CautionOf(&n.Record) + "\n\n"
+	}
 	return c.run(ctx, &Errand{
-		Subject: words.Subject(n), Text: words.Notice(n, letterWidth), Notices: []*life.Notice{n},
+		Subject: words.Subject(n), Text: text, Notices: []*life.Notice{n},
 		Test: n.Step.Kind == life.StepTest,
 	})
 }

@@ -20,6 +20,9 @@ func carriers(r *life.Record, e *life.Evidence) string {
 	if len(e.Carriers) == 0 {
 		return ""
 	}
+	if c := &e.Carriers[0]; len(e.Carriers) == 1 && e.MoreCarriers == 0 && c.Events == e.Events && c.Exposure == e.Exposure {
+		return " All that was counted is " + member(r, c.Series) + "'s: it is the same finding as in that series itself."
+	}
 	var names []string
 	for _, c := range e.Carriers[:min(mostNamed, len(e.Carriers))] {
 		names = append(names, member(r, c.Series)+" ("+whole(c.Events)+")")

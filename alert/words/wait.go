@@ -3,6 +3,7 @@ package words
 import (
 	"fmt"
 	"math"
+	"strings"
 	"time"
 
 	"tailbell/monitor/life"
@@ -35,7 +36,7 @@ func wait(e *life.Evidence, zone *time.Location) []string {
 		took = "within " + gap(e.To.Sub(*w.First)) + " (" + exposure(&together) + ")"
 	}
 	text := fmt.Sprintf("The last %s came %s; from the first to the last of so many it usually takes about %s on average",
-		whole(w.Events), took, number(w.Usual)+" "+clean(e.Unit))
+		whole(w.Events), took, usualWait(e)+" "+clean(e.Unit))
 	if w.P != nil && *w.P > 0 {
 		log := math.Log10(*w.P)
 		text += fmt.Sprintf(", and so little comes by chance in %s cases (p = %s, gamma distribution, exact)", odds(log), pvalue(log))
@@ -45,6 +46,15 @@ func wait(e *life.Evidence, zone *time.Location) []string {
 		within = "the last " + within
 	}
 	return append(sentences, text, fmt.Sprintf("It is the same finding: %s or more within %s ring", whole(w.Events), within))
+}
+
+// usualWait is how much exposure so many events usually take, without decimals that
+// say nothing: trials are whole.
+func usualWait(e *life.Evidence) string {
+	if isProportion(e) && e.Wait.Usual >= 10 {
+		return fixed(e.Wait.Usual, 0)
+	}
+	return strings.TrimSuffix(number(e.Wait.Usual), ".0")
 }
 
 // gap is the time between two events.

@@ -103,7 +103,8 @@ func Heading(n *life.Notice) string {
 }
 
 // Paragraphs returns the sentences of one step, not wrapped, the caution last
-// where somebody is called to act.
+// where somebody is called to act for the first time, or again after a while. A
+// message that tells of a later step by itself adds it.
 func Paragraphs(n *life.Notice) []string {
 	r := &n.Record
 	zone := zoneOf(r)
@@ -114,7 +115,7 @@ func Paragraphs(n *life.Notice) []string {
 	case life.StepOpened:
 		return opened(n, zone)
 	case life.StepWorsened:
-		return nonEmpty(finding(r, evidenceOf(&n.Step, &r.Worst)), worsened(n, zone)+afterwards(r, zone), caution(r))
+		return nonEmpty(finding(r, evidenceOf(&n.Step, &r.Worst)), worsened(n, zone)+afterwards(r, zone))
 	case life.StepCorrected:
 		return nonEmpty(corrected(n, zone))
 	case life.StepReturned:
