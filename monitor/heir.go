@@ -54,9 +54,9 @@ func (e *Engine) unfitHeir(f *fact, matched []*series) (Reason, string) {
 		switch {
 		case ix != s.indicator || other != nil:
 			return NotAllowed, fmt.Sprintf("series %q and %q do not belong to the same indicator", s.name, f.Into)
-		case into != nil && into.heir != nil && into.heir.until != ix.firstFrom(f.From):
+		case e.succession(ix, f) != ix.firstFrom(f.From):
 			return NotAllowed, fmt.Sprintf("series %q took the place of others from %s on: say that date, or give what they become a name of its own",
-				f.Into, dateIn(ix.cfg.Zone, ix.cal.Start(into.heir.until)))
+				f.Into, dateIn(ix.cfg.Zone, ix.cal.Start(e.succession(ix, f))))
 		case into != nil && into.heir == nil && into.birth < ix.firstFrom(f.From):
 			return NotAllowed, fmt.Sprintf("series %q has counts of its own from before: give what they become a name of its own", f.Into)
 		}
@@ -78,6 +78,18 @@ func (e *Engine) unfitHeir(f *fact, matched []*series) (Reason, string) {
 	return "", ""
 }
 
+// succession is the slot from which on the series that the fact names takes the place of
+// others: by the first act that said so and still holds, whether it is monitored at
+// present or not.
+func (e *Engine) succession(ix *indicator, f *fact) int64 {
+	for i := range e.facts {
+		if x := &e.facts[i]; x.Into == f.Into {
+			return ix.firstFrom(x.From)
+		}
+	}
+	return ix.firstFrom(f.From)
+}
+
 // succeedTo lets a series take the place of those that the fact matches, and
 // returns what that changes.
 func (e *Engine) succeedTo(list []change, f *fact) []change {
@@ -89,7 +101,11 @@ func (e *Engine) succeedTo(list []change, f *fact) []change {
 	}
 	ix := into.indicator
 	into.dates = e.datesOf(ix, into.name)
-	e.inherit(f, into)
+	for i := range e.facts { // this one, and those from before its indicator went
+		if e.facts[i].Into == into.name {
+			e.inherit(&e.facts[i], into)
+		}
+	}
 	e.touch(into)
 	e.inform(into, into.heir.until, ix.looked-1, true, f.why(ix.cal.zone))
 	begin := into.birth
