@@ -180,6 +180,9 @@ func (o *rehearseOptions) makePlan() error {
 	for i := range o.in.Windows {
 		length = max(length, o.in.Windows[i].Slots)
 	}
+	if length == 0 && o.length == "" {
+		return &usageError{errors.New("--length is missing: windows of the last trials have no length in time, so say how long an excess lasts")}
+	}
 	if o.length != "" {
 		if length, err = plant.Slots(o.length, o.in.Every); err != nil {
 			return &usageError{fmt.Errorf("--length: %w", err)}

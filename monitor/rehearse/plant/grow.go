@@ -49,7 +49,10 @@ func moreTrials(rng *rand.Rand, s *slot, more float64) int64 {
 
 // report returns the observations of n further events in a slot.
 func (g *ground) report(in *config.Indicator, base *config.Baseline, s *slot, n int64, rng *rand.Rand) []arrival {
-	if in.ArrivalLooks {
+	switch {
+	case s.moments:
+		return onTrials(g.series, s, n, rng)
+	case in.ArrivalLooks:
 		return instants(g.series, s, n, rng)
 	}
 	late := splitDelay(base, n, rng)

@@ -51,6 +51,7 @@ type invented struct {
 	factor   []float64 // of the usual rate (odds) in each slot
 	warm     int       // slots before the first look that counts
 	longest  int
+	moments  bool // of trials, see slot
 	// place, if not nil, is the slot in which every excess begins, for tests.
 	place *int
 }
@@ -102,7 +103,8 @@ func newInvented(p *Plan, how Invention) (*invented, error) {
 		if err != nil {
 			return nil, err
 		}
-		v.longest = max(v.longest, longestOf(other, in))
+		v.longest = max(v.longest, longestOf(other, in), v.trialSlots(other))
+		v.moments = v.moments || lastTrials(other)
 		for i := range other.Baselines {
 			if b := &other.Baselines[i]; b.Kind == config.Trailing || b.Kind == config.Peers {
 				v.warm = max(v.warm, b.SpanSlots+b.GapSlots)
@@ -281,6 +283,9 @@ func (v *invented) report(name string, s *slot, i int, rng *rand.Rand) []arrival
 		o.Exposure, o.HasExposure = v.how.Exposure, true
 	}
 	silent := v.in.Events == config.Each && v.in.Exposure == config.Clock && i > 0
+	if v.moments {
+		return trials(name, s, rng)
+	}
 	if v.in.ArrivalLooks {
 		list := instants(name, s, s.events, rng)
 		if o.Events = 0; !silent {

@@ -84,7 +84,7 @@ var (
 	ErrTail        = errors.New("the indicator does not watch that tail")
 	ErrRoom        = errors.New("there is no room for the excess")
 	ErrRefused     = errors.New("the engine refused planted data")
-	ErrTrials      = errors.New("excesses are planted in whole slots, and windows of the last trials cut through them: tailbell limits says what those find, and how late")
+	ErrTrials      = errors.New("windows of the last trials are rehearsed on invented histories only, in which it is known which trial an event belongs to")
 )
 
 // indicator returns the indicator of the set-up.
@@ -112,9 +112,6 @@ func (p *Plan) check() error {
 		in, err := p.indicator(setup)
 		if err != nil {
 			return err
-		}
-		if slices.ContainsFunc(in.Windows, func(w config.Window) bool { return w.Trials > 0 }) {
-			return ErrTrials
 		}
 		for _, r := range p.Ratios {
 			switch {
@@ -172,6 +169,15 @@ type slot struct {
 	mean           float64
 	trials, events int64
 	known          monitor.Instant // when added events become known
+	// moments says that each trial has one of its own, and free are those of the
+	// trials without an event, in the order of nothing.
+	moments bool
+	free    []monitor.Instant
+}
+
+// lastTrials reports whether the indicator has windows of the last trials.
+func lastTrials(in *config.Indicator) bool {
+	return slices.ContainsFunc(in.Windows, func(w config.Window) bool { return w.Trials > 0 })
 }
 
 // grounds makes histories. It is called from several goroutines.

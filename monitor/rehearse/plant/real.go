@@ -53,6 +53,9 @@ func (p *Plan) Observe(messages []monitor.Message, known []Episode) (*Rehearsal,
 		if err != nil {
 			return nil, err
 		}
+		if lastTrials(other) {
+			return nil, ErrTrials
+		}
 		x.longest = max(x.longest, longestOf(other, in))
 	}
 	byName := map[string]*past{}

@@ -119,6 +119,9 @@ func (r *Rehearsal) lastLook(in *config.Indicator, g *ground) monitor.Instant {
 	for i := range in.Windows {
 		longest = max(longest, in.Windows[i].Slots)
 	}
+	if r.invented != nil {
+		longest = max(longest, r.invented.trialSlots(in))
+	}
 	cal := monitor.NewCalendar(in.Every, in.Zone)
 	return cal.Start(cal.Slot(g.to) + int64(longest) + 1).Add(in.Settle)
 }
