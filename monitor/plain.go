@@ -9,7 +9,7 @@ func (e *Engine) plainRow(m *Message, o *Observation) bool {
 		return false
 	}
 	s := e.named(o.Series)
-	if s == nil || !s.indicator.plain(s.indicator.cfg) || s.indicator.cfg.Allowance != nil && len(s.limits) == 0 {
+	if s == nil || s.dates != nil || !s.indicator.plain(s.indicator.cfg) || s.indicator.cfg.Allowance != nil && len(s.limits) == 0 {
 		return false
 	}
 	ix, clock := s.indicator, max(e.clock, m.Time)
