@@ -2,6 +2,7 @@ package monitor_test
 
 import (
 	"encoding/json"
+	"flag"
 	"fmt"
 	"math/rand/v2"
 	"testing"
@@ -11,6 +12,8 @@ import (
 	"tailbell/config"
 	"tailbell/monitor"
 )
+
+var crossStreams = flag.Int("cross.streams", 2, "how many streams of series in several partitions are played, of each kind")
 
 // crossSetup has series that may lie in several partitions, and are each other's
 // peers or share an allowance.
@@ -106,7 +109,7 @@ func TestCountsDoNotDependOnPartitions(t *testing.T) {
 			}
 			t.Logf("-gather.seed %d", seed)
 			random := rand.New(rand.NewPCG(seed, 9))
-			found, streams := 0, *gatherStreams
+			found, streams := 0, *crossStreams
 			if testing.Short() {
 				streams = 1
 			}

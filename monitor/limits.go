@@ -75,14 +75,14 @@ func (e *Engine) allot(ix *indicator, ep *epoch, boundary int64) {
 		return
 	}
 	begins := ix.epochBegins(ep, boundary)
-	share := a.PerYear()
-	if begins && a.PerIndicator && ix.counting == nil {
+	share, across := a.PerYear(), a.PerIndicator && e.across(ep.cfg)
+	if begins && a.PerIndicator && !across {
 		share = allowance.Share(share, a.Reserve, roundUp(ix.born(boundary)))
 	}
 	allotTo := func(s *series) {
 		switch {
 		case s.birth >= boundary:
-		case begins && a.PerIndicator && ix.counting != nil:
+		case begins && across:
 			share, counted := ix.shareOf(s, a)
 			e.setLimits(s, ep, boundary, share, !counted)
 		case begins, !a.PerIndicator && ix.rebased(s, ep, boundary):
@@ -119,7 +119,7 @@ func (e *Engine) draw(s *series, ep *epoch, boundary int64) {
 		e.setLimits(s, ep, boundary, a.PerYear(), false)
 		return
 	}
-	if s.indicator.counting != nil {
+	if e.across(ep.cfg) {
 		share, counted := s.indicator.shareOf(s, a)
 		e.setLimits(s, ep, boundary, share, !counted)
 		return
@@ -141,6 +141,10 @@ func (e *Engine) draw(s *series, ep *epoch, boundary int64) {
 		ix.drawn.series++
 	}
 }
+
+// across reports whether partitions count for each other under a stanza: it may be
+// an older one, under which they no longer do.
+func (e *Engine) across(cfg *config.Indicator) bool { return cfg.CountsAcross(e.partition.KeyParts) }
 
 // shareOf is the series' share of an allowance that series in several partitions
 // share, and whether it is one of those counted: else it is new, and draws on the
@@ -248,7 +252,7 @@ func (e *Engine) allowanceOf(s *series, cfg *config.Indicator, boundary int64) *
 	if a.PerIndicator {
 		r.For = "indicator"
 	}
-	if a.PerIndicator && s.indicator.counting != nil {
+	if a.PerIndicator && e.across(cfg) {
 		in := &s.indicator.agreed
 		r.Series, r.All = in.Limited, unfixed(in.Predicted)
 		return r
