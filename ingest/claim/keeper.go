@@ -214,7 +214,8 @@ func (k *Keeper) Raise(ctx context.Context, partition int, atLeast uint64) (uint
 	return atLeast, nil
 }
 
-// Run makes turns until ctx ends. Errors of the bus are told and waited out; the
+// Run makes turns until ctx ends, and one as soon as somebody else's claim has run
+// out. Errors of the bus are told and waited out; the
 // error is an ErrOwned if a member that works alone finds another one.
 func (k *Keeper) Run(ctx context.Context, failed func(error)) error {
 	tick := time.NewTicker(k.Every())
@@ -229,12 +230,40 @@ func (k *Keeper) Run(ctx context.Context, failed func(error)) error {
 		case err != nil:
 			failed(err)
 		}
+		expiry := time.NewTimer(k.untilExpiry())
 		select {
 		case <-tick.C:
+		case <-expiry.C:
 		case <-ctx.Done():
 			return nil
 		}
+		expiry.Stop()
 	}
+}
+
+// untilExpiry is how long it takes until the next claim of another member runs out,
+// if that comes before the next turn, else as long as that takes.
+func (k *Keeper) untilExpiry() time.Duration {
+	k.turns.Lock()
+	defer k.turns.Unlock()
+	k.mu.Lock()
+	last := k.mu.last
+	k.mu.Unlock()
+	next, now := k.Every(), k.o.Now()
+	wait := func(key, owner string) {
+		if s, seen := k.seen[key]; seen && owner != "" && owner != k.name {
+			if left := s.at + k.o.Span - now; left > 0 {
+				next = min(next, left)
+			}
+		}
+	}
+	for n, e := range last.partitions {
+		wait(keyOf(n), e.holding.Owner)
+	}
+	for name := range last.members { // how much is anybody's share
+		wait(memberKey+name, name)
+	}
+	return next
 }
 
 // Turn looks at the board once, renews what is owned and takes what is due.
