@@ -41,8 +41,11 @@ func ReadStream(ctx context.Context, b *bus.Bus, setup *config.Setup, from Range
 	if err != nil {
 		return nil, err
 	}
+	acts := newCopies()
 	for i := range raws {
-		s.message(&raws[i])
+		if setup.Partitions < 2 || !acts.known(&raws[i]) {
+			s.message(&raws[i])
+		}
 	}
 	h := s.history
 	h.Counts.Files = 1
