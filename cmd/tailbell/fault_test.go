@@ -85,7 +85,10 @@ func (s *stream) Next(ctx context.Context, limit int) (partition.Batch, error) {
 	for _, raw := range s.raws[:n] {
 		b.Messages = append(b.Messages, s.decoder.Decode(raw))
 	}
-	b.Mark = store.Mark{Position: s.raws[n-1].Position, Stored: monitor.InstantOf(s.raws[n-1].Stored)}
+	raws := s.raws[:n]
+	b.Mark = func(i int) store.Mark {
+		return store.Mark{Position: raws[i].Position, Stored: monitor.InstantOf(raws[i].Stored)}
+	}
 	s.raws = s.raws[n:]
 	return b, nil
 }

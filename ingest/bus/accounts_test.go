@@ -63,13 +63,29 @@ func daemonsDay(t *testing.T, g *bustest.Guarded) (err error) {
 		}
 		got += len(msgs)
 	}
-	if err := s.Close(); err != nil {
+	if err := errors.Join(summariesDay(ctx, b), s.Close()); err != nil {
 		return err
 	}
 	if _, _, err := b.LastSetting(ctx, 0); err != nil {
 		return err
 	}
 	return b.Trim(ctx, 1)
+}
+
+// summariesDay looks ahead for what other partitions told, beside a source.
+func summariesDay(ctx context.Context, b *bus.Bus) error {
+	ahead, err := b.Summaries(ctx, 0, 0)
+	if err != nil {
+		return err
+	}
+	msgs, err := ahead.Next(ctx, nil, 10, 1<<20)
+	if err == nil && (len(msgs) != 1 || string(msgs[0].Data) != "sum") {
+		err = fmt.Errorf("%d summaries", len(msgs))
+	}
+	if _, lastErr := b.LastSummary(ctx, 0); err == nil {
+		err = lastErr
+	}
+	return errors.Join(err, ahead.Close())
 }
 
 // ownersDay claims, and publishes as an owner.

@@ -104,6 +104,20 @@ func (b *Bus) Source(ctx context.Context, partition int, after uint64) (*Source,
 	return b.startSource(ctx, b.names.inStream(), s)
 }
 
+// Summaries reads what other partitions told a partition, and nothing else, after
+// the given position. It may be used beside the partition's Source; what it says of
+// missing messages means nothing. Close it when done.
+func (b *Bus) Summaries(ctx context.Context, partition int, after uint64) (*Source, error) {
+	if partition < 0 || partition >= partitions(b.setup) {
+		return nil, fmt.Errorf("%w: %d of %d", ErrNoPartition, partition, partitions(b.setup))
+	}
+	s := &Source{filter: b.names.in(partition, Summary), last: max(after, b.layout.begins-1)}
+	if b.layout.division > 0 {
+		s.carried, s.through = b.names.carried(b.layout.division, partition, Summary), b.layout.carried
+	}
+	return b.startSource(ctx, b.names.inStream(), s)
+}
+
 func (b *Bus) newSource(ctx context.Context, stream, filter string, after uint64, whole bool) (*Source, error) {
 	return b.startSource(ctx, stream, &Source{filter: filter, whole: whole, last: after})
 }

@@ -311,6 +311,13 @@ func (b *Bus) EndOf(ctx context.Context, partition int) (uint64, error) {
 	return raw.Position, err
 }
 
+// LastSummary returns the position of the last message that other partitions told
+// the partition, 0 if the stream holds none.
+func (b *Bus) LastSummary(ctx context.Context, partition int) (uint64, error) {
+	raw, _, err := b.lastIn(ctx, b.names.in(partition, Summary), b.names.carried(b.layout.division, partition, Summary))
+	return raw.Position, err
+}
+
 // At returns the message at a position of the input stream. The error is an
 // ErrNoMessage if there is none.
 func (b *Bus) At(ctx context.Context, position uint64) (Raw, error) {

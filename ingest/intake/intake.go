@@ -22,6 +22,7 @@ import (
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
 	"tailbell/monitor/partition"
+	"tailbell/monitor/store"
 )
 
 // maxBytes is about how much data one batch holds.
@@ -31,7 +32,7 @@ const maxBytes = 16 << 20
 type Intake struct {
 	source  source
 	decoder *wire.Decoder
-	buffer  []bus.Raw
+	limits  wire.Limits
 	ready   []bus.Raw // read, not yet handed out
 	missing uint64
 	opts    Options
@@ -56,6 +57,9 @@ type Options struct {
 	// it goes on. Both may be nil and must not block.
 	Gap  func(bus.Missing)
 	Held func(*Hold)
+	// Summaries begins to read what other partitions told, and nothing else, after
+	// a position. Open reads the partition's.
+	Summaries func(ctx context.Context, after uint64) (*bus.Source, error)
 	// Now tells the local time by which the bus's clock is judged.
 	Now func() time.Time
 }
@@ -65,6 +69,9 @@ func Open(ctx context.Context, b *bus.Bus, setup *config.Setup, number int, o Op
 	s, err := b.Source(ctx, number, o.After)
 	if err != nil {
 		return nil, err
+	}
+	if o.Summaries == nil {
+		o.Summaries = func(ctx context.Context, after uint64) (*bus.Source, error) { return b.Summaries(ctx, number, after) }
 	}
 	return newIntake(s, setup, o), nil
 }
@@ -80,9 +87,8 @@ func newIntake(s source, setup *config.Setup, o Options) *Intake {
 	if o.Held == nil {
 		o.Held = func(*Hold) {}
 	}
-	in := &Intake{source: s, opts: o, decoder: wire.NewDecoder(wire.Limits{
-		MessageBytes: setup.Limits.MaxMessageBytes, Observations: setup.Limits.MaxObservations,
-	})}
+	limits := wire.Limits{MessageBytes: setup.Limits.MaxMessageBytes, Observations: setup.Limits.MaxObservations}
+	in := &Intake{source: s, opts: o, decoder: wire.NewDecoder(limits), limits: limits}
 	if !setup.History {
 		in.guard = newGuard(o.Stored, o.Now, o.Held)
 	}
@@ -105,7 +111,10 @@ func (in *Intake) Next(ctx context.Context, limit int) (partition.Batch, error) 
 	}
 	raw := in.ready[:n]
 	in.ready = in.ready[n:]
-	b := partition.Batch{Messages: make([]monitor.Message, n), Mark: markOf(&raw[n-1])}
+	b := partition.Batch{
+		Messages: make([]monitor.Message, n),
+		Mark:     func(i int) store.Mark { return markOf(&raw[i]) },
+	}
 	for i := range raw {
 		b.Messages[i] = in.decoder.Decode(wire.Raw(raw[i]))
 	}
@@ -113,13 +122,12 @@ func (in *Intake) Next(ctx context.Context, limit int) (partition.Batch, error) 
 }
 
 func (in *Intake) read(ctx context.Context, limit int) error {
-	clear(in.buffer)
 	var err error
-	in.buffer, err = in.source.Next(ctx, in.buffer[:0], limit, maxBytes)
+	// What the last batch holds may still be asked for its marks.
+	in.ready, err = in.source.Next(ctx, nil, limit, maxBytes)
 	if err != nil {
 		return err
 	}
-	in.ready = in.buffer
 	if m := in.source.Missing(); m.Messages > in.missing {
 		in.missing = m.Messages
 		in.opts.Gap(m)

@@ -6,6 +6,12 @@
 // a single message when the stream is idle, thousands when it is behind.
 // Batches are only units of commit; they change no result.
 //
+// In history time a message may have to wait until other partitions have told
+// how far they are. Then what came before it is committed, so that what this
+// partition has to tell goes out, and what the others tell is looked for further
+// on in the stream, past what waits: see Ahead. Only one batch waits meanwhile, and
+// one more behind it.
+//
 // The engine belongs to the applying stage alone; Do lets others look at it
 // between batches. Nothing leaves the process before it is committed: the
 // outlets read the store.
@@ -23,11 +29,11 @@ import (
 	"tailbell/monitor/store"
 )
 
-// Batch is a run of messages of the stream, in order, with the mark of the
-// last one.
+// Batch is a run of messages of the stream, in order.
 type Batch struct {
 	Messages []monitor.Message
-	Mark     store.Mark
+	// Mark returns the mark of one of them.
+	Mark func(i int) store.Mark
 }
 
 // Source gives the messages of one partition after the stored position.
@@ -41,8 +47,16 @@ type Source interface {
 type Options struct {
 	// MaxBatch is the largest number of messages in a commit; 0 means 5000.
 	MaxBatch int
-	// Committed, if not nil, is called after every commit.
+	// Committed, if not nil, is called after every commit, with 0 for one that
+	// moved no position.
 	Committed func(position uint64)
+	// Ahead begins to read what other partitions told, beside the source. Without it
+	// a message that must wait for them ends the loop.
+	Ahead func(ctx context.Context, after uint64) (Ahead, error)
+	// Moved, if not nil, is told where the loop stands after every commit, and while
+	// it waits for other partitions also after what it has taken from ahead, if
+	// nothing of that is to be committed at once.
+	Moved func(Stand)
 	// Full, if not nil, is called when the store has no room; it returns when
 	// the commit is to be tried again, or with an error to give up.
 	Full func(ctx context.Context, err error) error
@@ -65,6 +79,17 @@ type Loop struct {
 type commit struct {
 	changes monitor.Changes
 	mark    store.Mark
+	stand   Stand
+}
+
+// Stand is where a loop stands, as far as it is committed.
+type Stand struct {
+	Position uint64
+	// Ahead is the position up to which it has taken what others told. While it
+	// waits that may not be committed yet.
+	Ahead uint64
+	// Waits says that the next message must wait for other partitions.
+	Waits bool
 }
 
 // New returns the loop of an engine that stands where the store does.
@@ -123,7 +148,7 @@ func (l *Loop) Run(ctx context.Context) error {
 			stop(fmt.Errorf("partition: committing: %w", err))
 		}
 	})
-	l.apply(run)
+	l.apply(run, func(err error) { stop(fmt.Errorf("partition: reading ahead: %w", err)) })
 	close(l.commits)
 	stages.Wait()
 	if ctx.Err() != nil && errors.Is(context.Cause(run), context.Cause(ctx)) {
@@ -160,56 +185,6 @@ func (l *Loop) pull(ctx context.Context) error {
 	}
 }
 
-// apply feeds the engine, and the committing stage whenever it is free.
-func (l *Loop) apply(ctx context.Context) {
-	waiting := 0 // messages applied, but not yet handed on
-	committer := l.free
-	var mark store.Mark
-	handOn := func() {
-		l.noteDue()
-		l.commits <- commit{l.engine.Drain(), mark}
-		waiting = 0
-	}
-	take := func(b Batch) {
-		for i := range b.Messages {
-			l.engine.Apply(&b.Messages[i])
-		}
-		waiting += len(b.Messages)
-		mark = b.Mark
-	}
-	for {
-		batches, free := l.batches, committer
-		if waiting >= l.opts.MaxBatch {
-			batches = nil
-		}
-		if waiting == 0 {
-			free = nil
-		}
-		select {
-		case _, open := <-free:
-			if !open {
-				committer = nil // it failed; ctx is about to end
-				continue
-			}
-			handOn()
-		case b := <-batches:
-			take(b)
-		case look := <-l.asks:
-			look(l.engine)
-		case <-ctx.Done():
-			select { // what was read before the source failed still counts
-			case b := <-l.batches:
-				take(b)
-			default:
-			}
-			if _, open := <-l.free; open && waiting > 0 {
-				handOn()
-			}
-			return
-		}
-	}
-}
-
 func (l *Loop) commit(ctx context.Context) error {
 	defer close(l.free)
 	l.free <- struct{}{}
@@ -220,9 +195,16 @@ func (l *Loop) commit(ctx context.Context) error {
 		if l.opts.Committed != nil {
 			l.opts.Committed(c.changes.Position)
 		}
+		l.moved(c.stand)
 		l.free <- struct{}{}
 	}
 	return nil
+}
+
+func (l *Loop) moved(s Stand) {
+	if l.opts.Moved != nil {
+		l.opts.Moved(s)
+	}
 }
 
 func (l *Loop) write(ctx context.Context, c commit) error {

@@ -44,7 +44,9 @@ func (l *lane) Next(ctx context.Context, limit int) (Batch, error) {
 	var b Batch
 	add := func(m monitor.Message) {
 		b.Messages = append(b.Messages, m)
-		b.Mark = store.Mark{Position: m.Position, Stored: m.Stored}
+		b.Mark = func(i int) store.Mark {
+			return store.Mark{Position: b.Messages[i].Position, Stored: b.Messages[i].Stored}
+		}
 	}
 	select {
 	case m, open := <-l.incoming:
