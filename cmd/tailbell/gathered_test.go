@@ -3,7 +3,9 @@ package main
 import (
 	"context"
 	"encoding/json"
+	"errors"
 	"fmt"
+	"io"
 	"os"
 	"path/filepath"
 	"regexp"
@@ -111,7 +113,8 @@ func TestGatheredSums(t *testing.T) {
 }
 
 // TestGatheredSumsAreDivided divides a deployment with sums over all sites into
-// three partitions, and those into two: no alert is lost.
+// three partitions, and those, which have not read everything yet, into two, in a
+// division that breaks off twice: no alert is lost.
 func TestGatheredSumsAreDivided(t *testing.T) {
 	path := filepath.Join(t.TempDir(), "tailbell.toml")
 	before := 1
@@ -128,13 +131,42 @@ func TestGatheredSumsAreDivided(t *testing.T) {
 				t.Fatalf("feed: exit code %d\n%s", code, stderr)
 			}
 		}
-		runGathered(t, setup, true, func(*daemon) {})
+		runGathered(t, setup, before == 1, func(*daemon) {})
+		if before > 1 {
+			breakOff(t, setup, into)
+		}
 		code, out, stderr := run(t, "partitions", "divide", "--into", fmt.Sprint(into), "--config", path)
 		if code != 0 || !strings.Contains(out, "equal to the byte") {
 			t.Fatalf("divide into %d: exit code %d\n%s%s", into, code, out, stderr)
 		}
 		t.Log(out)
 		before = into
+	}
+}
+
+// breakOff begins a division that ends when the stream has been closed to
+// publishers, and goes on with it until the new stores are filled.
+func breakOff(t *testing.T, setup *config.Setup, into int) {
+	t.Helper()
+	for _, filled := range []bool{false, true} {
+		b, err := openToDivide(t.Context(), setup)
+		if err != nil {
+			t.Fatal(err)
+		}
+		next := *setup
+		next.Partitions = into
+		v := &division{bus: b, setup: setup, next: &next, options: divideOptions{progress: io.Discard}}
+		if filled {
+			if err := v.carry(t.Context()); err != nil {
+				t.Fatal(err)
+			}
+			err = v.fill(t.Context())
+		} else {
+			_, err = b.Divide(t.Context(), into)
+		}
+		if err := errors.Join(err, v.close(), b.Close()); err != nil {
+			t.Fatal(err)
+		}
 	}
 }
 

@@ -5,14 +5,12 @@ import (
 	"errors"
 	"fmt"
 	"io"
-	"strings"
 
 	"github.com/spf13/cobra"
 
 	"tailbell/config"
 	"tailbell/ingest/bus"
 	"tailbell/ingest/control"
-	"tailbell/ingest/divide"
 )
 
 func newPartitionsDivideCommand() *cobra.Command {
@@ -202,54 +200,3 @@ func finishMoving(w io.Writer, setup, next *config.Setup, place divisionPlace) e
 Now write partitions = %d in the set-up, tell publishers, and start the daemon.`, place.aside(), next.Partitions)
 }
 
-// tell prints the account before and after.
-func (v *division) tell(w io.Writer) error {
-	r := v.reply()
-	if v.options.asJSON {
-		return writeJSON(w, r)
-	}
-	if err := say(w, "%s: %s into %d. Read %s up to position %d, carried over %s.", v.setup.Name,
-		amount(v.setup.Partitions, "partitions"), v.next.Partitions, amount(r.Read, "messages"), r.Before, amount(r.Carried, "messages")); err != nil {
-		return err
-	}
-	const mostSeries = 40
-	for i, s := range r.Series {
-		if i == mostSeries {
-			if err := say(w, "  and %s more (--json tells them all)", amount(len(r.Series)-i, "series")); err != nil {
-				return err
-			}
-			break
-		}
-		if err := say(w, "  %s: %s before and after, %s in %s, partition %d", s.Series, amount(s.Elements, "elements"),
-			amount(s.Events, "events"), s.Exposure, s.Partition); err != nil {
-			return err
-		}
-	}
-	if err := say(w, "%s with %s balance, series by series; %s can't be understood, before and after.",
-		amount(r.Elements, "elements"), amount(r.Events, "events"), amount(r.Refused, "elements")); err != nil {
-		return err
-	}
-	if r.LeftOut > 0 {
-		if err := say(w, "%s that had come to the wrong partition, and %s refused, %s left out.",
-			amount(r.LeftOut, "elements"), wasWere(r.LeftOut), wasWere(r.LeftOut)); err != nil {
-			return err
-		}
-	}
-	return tellAlerts(w, r.Alerts)
-}
-
-func tellAlerts(w io.Writer, a *divide.Alerts) error {
-	if err := say(w, "Alerts: %d before, %d after; %d equal to the byte, %d but for what an allowance amounts to over all series.",
-		a.Old, a.New, a.Same, a.Alike); err != nil {
-		return err
-	}
-	if len(a.Lost) > 0 {
-		if err := say(w, "Not there any more: %s.", strings.Join(a.Lost, ", ")); err != nil {
-			return err
-		}
-	}
-	if len(a.Differing) > 0 {
-		return say(w, "Otherwise different: %s, %d more.", strings.Join(a.Differing, ", "), a.MoreDiffering)
-	}
-	return nil
-}

@@ -5,9 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"io/fs"
-	"maps"
 	"os"
-	"path/filepath"
 	"slices"
 	"time"
 
@@ -65,12 +63,16 @@ func (v *division) carry(ctx context.Context) error {
 	if v.move, err = v.bus.Divide(ctx, v.next.Partitions); err != nil {
 		return err
 	}
+	// What was published before the stream was closed, and what follows from it.
 	if under != 0 {
 		err = v.openOld(ctx)
 	} else {
 		err = v.fillOld(ctx)
 	}
 	if err != nil {
+		return err
+	}
+	if err := v.move.Begin(ctx); err != nil {
 		return err
 	}
 	v.result, err = divide.Republish(ctx, v.bus, v.move, divide.Options{
@@ -167,27 +169,26 @@ func (v *division) alignClocks(ctx context.Context) error {
 
 // fillOld brings the old stores to the stream's end.
 func (v *division) fillOld(ctx context.Context) error {
-	for n, st := range v.old {
-		end, err := v.bus.EndOf(ctx, n)
-		if err != nil {
-			return err
-		}
-		position, err := st.Position()
-		if err != nil || position >= end {
-			if err != nil {
-				return err
-			}
-			continue
-		}
-		source, err := v.bus.Source(ctx, n, position)
-		if err != nil {
-			return err
-		}
-		if err := divide.Fill(ctx, st, v.setup, source, end); err != nil {
-			return fmt.Errorf("bringing partition %d up to date: %w", n, err)
-		}
+	old := &divide.Group{Setup: v.setup, Stores: v.old, From: v.bus, Tell: v.tellOld}
+	if err := old.Fill(ctx); err != nil {
+		return fmt.Errorf("bringing the stores up to date: %w", err)
 	}
 	return nil
+}
+
+// tellOld publishes what the old partitions have to tell each other. Once the
+// division has begun all of it is in the stream: a store that was made from that
+// tells it again.
+func (v *division) tellOld(ctx context.Context, rows []store.ToldRow) error {
+	if v.move != nil && v.move.Begun() {
+		return nil
+	}
+	messages := make([]bus.Outgoing, len(rows))
+	for i := range rows {
+		messages[i] = summaryOf(&rows[i])
+	}
+	_, err := v.bus.PublishBatch(ctx, messages)
+	return err
 }
 
 func (v *division) seriesOf(partition int, id string) (string, bool) {
@@ -215,12 +216,16 @@ func (v *division) fill(ctx context.Context) error {
 			return err
 		}
 		v.new = append(v.new, st)
-		if err := v.fillOne(ctx, st, q, id, handover); err != nil {
-			return fmt.Errorf("filling partition %d of %d: %w", q, v.next.Partitions, err)
+		if err := st.SetStream(store.StreamIdentity{Name: id.Stream, Created: id.Created}); err != nil {
+			return err
+		}
+		if err := handover.Register(st); err != nil {
+			return err
 		}
 	}
-	if err := v.exchange(ctx); err != nil {
-		return err
+	group := &divide.Group{Setup: v.next, Stores: v.new, From: v.move, Tell: v.tellNew}
+	if err := group.Fill(ctx); err != nil {
+		return fmt.Errorf("filling the new partitions: %w", err)
 	}
 	for _, st := range v.new {
 		if err := handover.Settle(st, v.wants); err != nil {
@@ -231,82 +236,21 @@ func (v *division) fill(ctx context.Context) error {
 	return err
 }
 
-// exchange lets the new partitions tell each other what sums over several of them
-// are to know, until none has anything left to tell.
-func (v *division) exchange(ctx context.Context) error {
-	for {
-		told := false
-		for q, st := range v.new {
-			did, err := v.tellOthers(ctx, st)
-			if err != nil {
-				return fmt.Errorf("what partition %d has to tell others: %w", q, err)
-			}
-			told = told || did
+// tellNew carries what the new partitions have to tell each other, as if it had
+// been stored when the last message that the other one has taken was.
+func (v *division) tellNew(ctx context.Context, rows []store.ToldRow) error {
+	messages, stored := make([]bus.Outgoing, len(rows)), make([]time.Time, len(rows))
+	for i := range rows {
+		marks, err := v.new[rows[i].Partition].Marks()
+		if err != nil {
+			return err
 		}
-		if !told {
-			return nil
+		if len(marks) > 0 {
+			stored[i] = marks[0].Stored.Time()
 		}
-		for q, st := range v.new {
-			if err := v.fillUp(ctx, st, q); err != nil {
-				return fmt.Errorf("filling partition %d of %d: %w", q, v.next.Partitions, err)
-			}
-		}
+		messages[i] = summaryOf(&rows[i])
 	}
-}
-
-// tellOthers carries what a new partition has to tell to others, as if it had been
-// stored when the last message there was, and reports whether it had anything.
-func (v *division) tellOthers(ctx context.Context, st *store.Store) (bool, error) {
-	for told := false; ; told = true {
-		rows, err := st.Told(0, tellBatch)
-		if err != nil || len(rows) == 0 {
-			return told, err
-		}
-		messages, stored := make([]bus.Outgoing, len(rows)), make([]time.Time, len(rows))
-		for i, row := range rows {
-			marks, err := v.new[row.Partition].Marks()
-			if err != nil {
-				return told, err
-			}
-			if len(marks) > 0 {
-				stored[i] = marks[0].Stored.Time()
-			}
-			messages[i] = bus.Outgoing{Partition: row.Partition, Kind: bus.Summary, Data: row.Data}
-		}
-		if err := v.move.Carry(ctx, messages, stored); err != nil {
-			return told, err
-		}
-		if err := st.DoneTelling(rows[len(rows)-1].Number); err != nil {
-			return told, err
-		}
-	}
-}
-
-func (v *division) fillOne(ctx context.Context, st *store.Store, q int, id bus.Identity, handover *divide.Handover) error {
-	if err := st.SetStream(store.StreamIdentity{Name: id.Stream, Created: id.Created}); err != nil {
-		return err
-	}
-	if err := handover.Register(st); err != nil {
-		return err
-	}
-	return v.fillUp(ctx, st, q)
-}
-
-// fillUp brings the store of a new partition to the end of what was carried over.
-func (v *division) fillUp(ctx context.Context, st *store.Store, q int) error {
-	end, err := v.move.EndOf(ctx, q)
-	if err != nil || end == 0 {
-		return err
-	}
-	position, err := st.Position()
-	if err != nil || position >= end {
-		return err
-	}
-	source, err := v.move.Source(ctx, q, position)
-	if err != nil {
-		return err
-	}
-	return divide.Fill(ctx, st, v.next, source, end)
+	return v.move.Carry(ctx, messages, stored)
 }
 
 // wants reports whether an outlet is told of a step.
@@ -321,124 +265,3 @@ func (v *division) wants(name string, n *life.Notice) bool {
 	return name != "terminal" || forPeople(n)
 }
 
-// divisionReply is what a division did.
-type divisionReply struct {
-	From     int             `json:"from"`
-	Into     int             `json:"into"`
-	Before   uint64          `json:"last_position_before"`
-	Read     int             `json:"messages_read"`
-	Carried  int             `json:"messages_carried_over"`
-	Elements int64           `json:"elements"`
-	Events   int64           `json:"events"`
-	Refused  int64           `json:"not_understood"`
-	LeftOut  int             `json:"left_out"`
-	Series   []dividedSeries `json:"series"`
-	Alerts   *divide.Alerts  `json:"alerts"`
-}
-
-type dividedSeries struct {
-	Series    string `json:"series"`
-	Partition int    `json:"partition"`
-	Elements  int64  `json:"elements"`
-	Events    int64  `json:"events"`
-	Exposure  string `json:"exposure"`
-}
-
-func (v *division) reply() *divisionReply {
-	t := v.result.Before
-	r := &divisionReply{
-		From: v.setup.Partitions, Into: v.next.Partitions, Before: v.move.Before(), Read: v.result.Read, Carried: v.result.Carried,
-		Elements: t.Elements, Events: t.Events, LeftOut: v.result.LeftOut, Series: []dividedSeries{}, Alerts: v.alerts,
-	}
-	for _, n := range t.Refused {
-		r.Refused += n
-	}
-	for _, name := range slices.Sorted(maps.Keys(t.Series)) {
-		s := t.Series[name]
-		r.Series = append(r.Series, dividedSeries{
-			name, config.PartitionOf(name, v.setup.KeyParts, v.next.Partitions), s.Elements, s.Events, s.Exposure(),
-		})
-	}
-	return r
-}
-
-// divisionPlace is the folder of a division's drafts, and of what they replace.
-type divisionPlace string
-
-func placeOf(setup *config.Setup, number uint64) divisionPlace {
-	return divisionPlace(filepath.Join(setup.Folder, fmt.Sprintf("division-%d", number)))
-}
-
-func (p divisionPlace) drafts() string { return filepath.Join(string(p), "new") }
-func (p divisionPlace) aside() string  { return filepath.Join(string(p), "before") }
-
-// draft is the new store of a partition.
-func (p divisionPlace) draft(n int) string {
-	return filepath.Join(p.drafts(), fmt.Sprintf("partition-%d.store", n))
-}
-
-// stand is a store of an old partition that had none.
-func (p divisionPlace) stand(n int) string {
-	return filepath.Join(string(p), fmt.Sprintf("partition-%d.store", n))
-}
-
-func (p divisionPlace) make() error { return os.MkdirAll(p.drafts(), 0o700) }
-
-func (p divisionPlace) clear() error { return os.RemoveAll(string(p)) }
-
-// swap puts the drafts in the place of the stores. It may be done again after
-// it broke off; it reports whether there was anything to do.
-func (p divisionPlace) swap(setup, next *config.Setup) (did bool, err error) {
-	if _, err := os.Stat(p.drafts()); errors.Is(err, fs.ErrNotExist) {
-		return false, nil
-	} else if err != nil {
-		return false, err
-	}
-	if err := p.putAside(next); err != nil {
-		return false, err
-	}
-	for q := range next.Partitions {
-		err := os.Rename(p.draft(q), storePath(setup, q))
-		if err != nil && !errors.Is(err, fs.ErrNotExist) {
-			return false, err
-		}
-	}
-	for n := range setup.Partitions {
-		if err := os.Remove(p.stand(n)); err != nil && !errors.Is(err, fs.ErrNotExist) {
-			return false, err
-		}
-	}
-	return true, os.Remove(p.drafts())
-}
-
-// putAside moves the stores that are not of the new partitions.
-func (p divisionPlace) putAside(next *config.Setup) error {
-	if err := os.MkdirAll(p.aside(), 0o700); err != nil {
-		return err
-	}
-	entries, err := os.ReadDir(next.Folder)
-	if err != nil {
-		return err
-	}
-	for _, entry := range entries {
-		file := filepath.Join(next.Folder, entry.Name())
-		if ours, err := filepath.Match("partition-*.store", entry.Name()); err != nil || !ours {
-			continue
-		}
-		st, err := store.OpenReadOnly(file, store.Options{})
-		if err != nil {
-			return err
-		}
-		id := st.Identity()
-		if err := st.Close(); err != nil {
-			return err
-		}
-		if id.Partitions == next.Partitions {
-			continue // it is in place already
-		}
-		if err := os.Rename(file, filepath.Join(p.aside(), filepath.Base(file))); err != nil {
-			return err
-		}
-	}
-	return nil
-}

@@ -100,6 +100,7 @@ func divideOrdeal(t *testing.T, settings int, numbers ...int) {
 			for p := range 2 {
 				batch = append(batch, bus.Outgoing{Partition: p, Kind: bus.Setting, Data: plan.Setups[m.Setup]})
 			}
+		case ordeal.Tick: // there are none in this plan
 		case ordeal.Act:
 			batch = append(batch, bus.Outgoing{Partition: m.Partition, Kind: bus.Act, Data: m.Data})
 		case ordeal.Observations:

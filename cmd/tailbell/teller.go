@@ -73,7 +73,7 @@ func (t *teller) tell(ctx context.Context) (bool, error) {
 	}
 	messages := make([]bus.Outgoing, len(rows))
 	for i, row := range rows {
-		messages[i] = bus.Outgoing{Partition: row.Partition, Kind: bus.Summary, Data: row.Data}
+		messages[i] = summaryOf(&row)
 	}
 	stored, err := t.bus.PublishBatch(ctx, messages)
 	if stored > 0 {
@@ -82,4 +82,9 @@ func (t *teller) tell(ctx context.Context) (bool, error) {
 		}
 	}
 	return true, err
+}
+
+// summaryOf is the message that tells another partition what a row says.
+func summaryOf(row *store.ToldRow) bus.Outgoing {
+	return bus.Outgoing{Partition: row.Partition, Kind: bus.Summary, Data: row.Data}
 }

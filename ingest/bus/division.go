@@ -23,9 +23,10 @@ var ErrTrimmed = errors.New("the stream no longer holds everything from its begi
 // of partitions. They are published again, behind those that are there, on
 // subjects of their own, and say when they were first stored. While that goes
 // on nobody can publish: the subjects of the partitions, old and new, are
-// closed. Finish opens the new ones, at which moment the new partitions begin;
-// GiveUp takes back what was carried and opens the old ones. In between a
-// process may die: Divide goes on where it stood.
+// closed, but for what the old ones still have to tell each other until Begin.
+// Finish opens the new ones, at which moment the new partitions begin; GiveUp
+// takes back what was carried and opens the old ones. In between a process may
+// die: Divide goes on where it stood.
 type Division struct {
 	bus      *Bus
 	into     int
@@ -56,26 +57,56 @@ func (b *Bus) Divide(ctx context.Context, into int) (*Division, error) {
 	}
 	if info.Config.Metadata[metaDividing] == "" {
 		info, err = d.change(ctx, info, func(c *jetstream.StreamConfig) {
-			c.Subjects = []string{b.names.carriedIn(d.division) + ">"}
+			c.Subjects = []string{b.names.carriedIn(d.division) + ">", b.names.summaries()}
 			c.Metadata[metaDividing] = strconv.Itoa(into)
 		})
 		if err != nil {
 			return nil, err
 		}
 	}
-	// Now the end stands fast.
-	if info.Config.Metadata[metaDividingFirst] == "" {
-		first := strconv.FormatUint(info.State.LastSeq+1, 10)
-		info, err = d.change(ctx, info, func(c *jetstream.StreamConfig) { c.Metadata[metaDividingFirst] = first })
-		if err != nil {
-			return nil, err
-		}
+	return d, d.stand(info)
+}
+
+// stand notes where what is carried over begins, if that is known, and ends.
+func (d *Division) stand(info *jetstream.StreamInfo) (err error) {
+	first := info.Config.Metadata[metaDividingFirst]
+	if first == "" {
+		return nil
 	}
-	if d.begins, err = strconv.ParseUint(info.Config.Metadata[metaDividingFirst], 10, 64); err != nil {
-		return nil, fmt.Errorf("%w: its metadata can't be read: %w", ErrStreamDiffers, err)
+	if d.begins, err = strconv.ParseUint(first, 10, 64); err != nil {
+		return fmt.Errorf("%w: its metadata can't be read: %w", ErrStreamDiffers, err)
 	}
 	d.last = info.State.LastSeq
-	return d, nil
+	return nil
+}
+
+// Begun reports whether the old partitions have ended: whatever they had to tell
+// each other is in the stream.
+func (d *Division) Begun() bool { return d.begins > 0 }
+
+// Begin ends the old partitions where the stream ends, unless that was done: what
+// is carried over begins there.
+func (d *Division) Begin(ctx context.Context) error {
+	if d.Begun() {
+		return nil
+	}
+	info, err := d.info(ctx)
+	if err != nil {
+		return err
+	}
+	info, err = d.change(ctx, info, func(c *jetstream.StreamConfig) {
+		c.Subjects = []string{d.bus.names.carriedIn(d.division) + ">"}
+	})
+	if err != nil {
+		return err
+	}
+	// Now the end stands fast.
+	first := strconv.FormatUint(info.State.LastSeq+1, 10)
+	info, err = d.change(ctx, info, func(c *jetstream.StreamConfig) { c.Metadata[metaDividingFirst] = first })
+	if err != nil {
+		return err
+	}
+	return d.stand(info)
 }
 
 // whole reports whether the stream still has every message of its partitions.
@@ -126,8 +157,27 @@ func (d *Division) Number() uint64 { return d.division }
 // Before is the last position of the old partitions.
 func (d *Division) Before() uint64 { return d.begins - 1 }
 
-// Carried is how many messages were carried over so far.
-func (d *Division) Carried() int { return int(d.last + 1 - d.begins) }
+// Carried is how many messages were carried over so far, without those that the
+// new partitions told each other.
+func (d *Division) Carried(ctx context.Context) (int, error) {
+	told := uint64(0)
+	err := d.bus.patiently(ctx, func(ctx context.Context) error {
+		s, err := d.bus.js.Stream(ctx, d.bus.names.inStream())
+		if err != nil {
+			return fmt.Errorf("asking for the stream %s: %w", d.bus.names.inStream(), mapped(err))
+		}
+		info, err := s.Info(ctx, jetstream.WithSubjectFilter(d.bus.names.carriedIn(d.division)+"*."+Summary.String()))
+		if err != nil {
+			return fmt.Errorf("asking what is in the stream %s: %w", d.bus.names.inStream(), mapped(err))
+		}
+		told = 0
+		for _, n := range info.State.Subjects {
+			told += n
+		}
+		return nil
+	})
+	return int(d.last + 1 - d.begins - told), err
+}
 
 // Carry stores messages in order, each exactly once, as if they had been stored
 // at the times given. Partitions are the new ones.
@@ -232,10 +282,26 @@ func (d *Division) Source(ctx context.Context, partition int, after uint64) (*So
 	return d.bus.newSource(ctx, d.bus.names.inStream(), d.bus.names.carriedAll(d.division, partition), max(after, d.begins-1), false)
 }
 
+// Summaries reads what new partitions told a new partition, and nothing else, from
+// the position after on.
+func (d *Division) Summaries(ctx context.Context, partition int, after uint64) (*Source, error) {
+	if partition < 0 || partition >= d.into {
+		return nil, fmt.Errorf("%w: %d of %d", ErrNoPartition, partition, d.into)
+	}
+	return d.bus.newSource(ctx, d.bus.names.inStream(), d.bus.names.carried(d.division, partition, Summary), max(after, d.begins-1), false)
+}
+
 // EndOf returns the position of the last message carried over into a new
 // partition, 0 if there is none.
 func (d *Division) EndOf(ctx context.Context, partition int) (uint64, error) {
 	raw, _, err := d.bus.last(ctx, d.bus.names.carriedAll(d.division, partition))
+	return raw.Position, err
+}
+
+// LastSummary returns the position of the last message that new partitions told a
+// new partition, 0 if there is none.
+func (d *Division) LastSummary(ctx context.Context, partition int) (uint64, error) {
+	raw, _, err := d.bus.last(ctx, d.bus.names.carried(d.division, partition, Summary))
 	return raw.Position, err
 }
 

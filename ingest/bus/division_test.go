@@ -72,6 +72,14 @@ func testDivision(t *testing.T, atomic bool) {
 	if err != nil {
 		t.Fatal(err)
 	}
+	// What the old partitions still have to tell each other goes in, and nothing else.
+	if _, err := b.Publish(t.Context(), bus.Outgoing{Partition: 1, Kind: bus.Summary, Data: []byte("told")}); err != nil {
+		t.Fatal(err)
+	}
+	refusesLate(t, b, bus.Outgoing{Data: []byte("late")})
+	if err := d.Begin(t.Context()); err != nil {
+		t.Fatal(err)
+	}
 	at := time.Date(2026, 3, 2, 10, 0, 0, 123456000, time.UTC)
 	carry := func(d *bus.Division, from, to int) {
 		t.Helper()
@@ -89,10 +97,14 @@ func testDivision(t *testing.T, atomic bool) {
 		}
 	}
 	carry(d, 0, 4)
-	brief, cancel := context.WithTimeout(t.Context(), 300*time.Millisecond)
-	defer cancel()
-	if _, err := b.Publish(brief, bus.Outgoing{Data: []byte("late")}); err == nil {
-		t.Error("published into a stream that is being divided")
+	refusesLate(t, b, bus.Outgoing{Data: []byte("late")})
+	refusesLate(t, b, bus.Outgoing{Partition: 1, Kind: bus.Summary, Data: []byte("told late")})
+	// What new partitions tell each other is not counted as carried over.
+	if err := d.Carry(t.Context(), []bus.Outgoing{{Kind: bus.Summary, Data: []byte("told")}}, []time.Time{at}); err != nil {
+		t.Fatal(err)
+	}
+	if last, err := d.LastSummary(t.Context(), 0); err != nil || last != 11 {
+		t.Errorf("the last summary is at %d: %v", last, err)
 	}
 	shut(t, b)
 	if _, err := bus.Open(t.Context(), setup); !errors.Is(err, bus.ErrDividing) {
@@ -107,12 +119,12 @@ func testDivision(t *testing.T, atomic bool) {
 	if d, err = b.Divide(t.Context(), 3); err != nil {
 		t.Fatal(err)
 	}
-	if d.Carried() != 4 || d.Before() != 5 {
-		t.Fatalf("%d carried, before %d", d.Carried(), d.Before())
+	if !d.Begun() || carried(t, d) != 4 || d.Before() != 6 {
+		t.Fatalf("%d carried, before %d", carried(t, d), d.Before())
 	}
 	b.SetAtomic(atomic)
 	carry(d, 4, 7)
-	if old, _ := readAll(t, b, 1); !cmp.Equal(old, []string{"4 4", "5 5"}) {
+	if old, _ := readAll(t, b, 1); !cmp.Equal(old, []string{"4 4", "5 5", "6 told"}) {
 		t.Errorf("the old partition 1 holds %q", old)
 	}
 	if err := d.Finish(t.Context()); err != nil {
@@ -129,22 +141,107 @@ func testDivision(t *testing.T, atomic bool) {
 		t.Fatal(err)
 	}
 	got, times := readAll(t, b, 2)
-	if diff := cmp.Diff([]string{"8 carried 2", "11 carried 5", "13 new"}, got); diff != "" {
+	if diff := cmp.Diff([]string{"9 carried 2", "13 carried 5", "15 new"}, got); diff != "" {
 		t.Error(diff)
 	}
 	if !times[0].Equal(at.Add(2*time.Second)) || times[2].Before(time.Now().Add(-time.Hour)) {
 		t.Errorf("stored at %v", times)
 	}
-	raw, err := b.At(t.Context(), 8)
+	raw, err := b.At(t.Context(), 9)
 	if err != nil || !raw.Stored.Equal(times[0]) || len(raw.Header["ce-id"]) != 1 || len(raw.Header["nats-expected-stream"]) > 0 {
 		t.Errorf("%+v, %v", raw, err)
 	}
-	if id, err := b.Identity(t.Context()); err != nil || id.First != 6 || b.Begins() != 6 {
+	if id, err := b.Identity(t.Context()); err != nil || id.First != 7 || b.Begins() != 7 {
 		t.Errorf("%+v, %v", id, err)
 	}
-	if got, _ := readAll(t, b, 0); !cmp.Equal(got, []string{"6 carried 0", "9 carried 3", "12 carried 6"}) {
+	if got, _ := readAll(t, b, 0); !cmp.Equal(got, []string{"7 carried 0", "10 carried 3", "11 told", "14 carried 6"}) {
 		t.Errorf("partition 0 holds %q", got)
 	}
+	if got := readSummaries(t, b, 0, 0); !cmp.Equal(got, []string{"11 told"}) {
+		t.Errorf("partition 0 was told %q", got)
+	}
+}
+
+// readSummaries reads what other partitions told one, after a position.
+func readSummaries(t *testing.T, b *bus.Bus, partition int, after uint64) (texts []string) {
+	t.Helper()
+	ctx := deadline(t)
+	last, err := b.LastSummary(ctx, partition)
+	if err != nil {
+		t.Fatal(err)
+	}
+	s, err := b.Summaries(ctx, partition, after)
+	if err != nil {
+		t.Fatal(err)
+	}
+	for s.Position() < last {
+		raws, err := s.Next(ctx, nil, 100, 1<<20)
+		if err != nil {
+			t.Fatal(err)
+		}
+		for _, r := range raws {
+			texts = append(texts, fmt.Sprintf("%d %s", r.Position, r.Data))
+		}
+	}
+	if err := s.Close(); err != nil {
+		t.Fatal(err)
+	}
+	return texts
+}
+
+// TestSummariesAreReadBesideTheSource reads what a partition is told past what its
+// source has come to.
+func TestSummariesAreReadBesideTheSource(t *testing.T) {
+	b := open(t, with(bustest.Setup(t), 2))
+	publish(t, b, 0, 1, 3)
+	for p := range 2 {
+		for i := range 2 {
+			if _, err := b.Publish(t.Context(), bus.Outgoing{Partition: p, Kind: bus.Summary, Data: fmt.Appendf(nil, "told %d", i)}); err != nil {
+				t.Fatal(err)
+			}
+		}
+	}
+	source, err := b.Source(t.Context(), 0, 0)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if raws, err := source.Next(deadline(t), nil, 1, 1<<20); err != nil || raws[0].Position != 1 {
+		t.Fatalf("%v, %v", raws, err)
+	}
+	if got := readSummaries(t, b, 0, 1); !cmp.Equal(got, []string{"4 told 0", "5 told 1"}) {
+		t.Errorf("partition 0 was told %q", got)
+	}
+	if got := readSummaries(t, b, 0, 4); !cmp.Equal(got, []string{"5 told 1"}) {
+		t.Errorf("after position 4 partition 0 was told %q", got)
+	}
+	if _, err := b.Summaries(t.Context(), 2, 0); !errors.Is(err, bus.ErrNoPartition) {
+		t.Errorf("partition 2 of 2: %v", err)
+	}
+	if raws, err := source.Next(deadline(t), nil, 1, 1<<20); err != nil || raws[0].Position != 2 {
+		t.Errorf("%v, %v", raws, err)
+	}
+	if err := source.Close(); err != nil {
+		t.Fatal(err)
+	}
+}
+
+// refusesLate checks that a message can't be published any more.
+func refusesLate(t *testing.T, b *bus.Bus, out bus.Outgoing) {
+	t.Helper()
+	brief, cancel := context.WithTimeout(t.Context(), 300*time.Millisecond)
+	defer cancel()
+	if _, err := b.Publish(brief, out); err == nil {
+		t.Errorf("published %q into a stream that is being divided", out.Data)
+	}
+}
+
+func carried(t *testing.T, d *bus.Division) int {
+	t.Helper()
+	n, err := d.Carried(t.Context())
+	if err != nil {
+		t.Fatal(err)
+	}
+	return n
 }
 
 func TestDivisionGivenUp(t *testing.T) {
@@ -152,6 +249,9 @@ func TestDivisionGivenUp(t *testing.T) {
 	b := open(t, setup, bus.ToDivide())
 	publish(t, b, 0, 1, 3)
 	d, err := b.Divide(t.Context(), 2)
+	if err == nil {
+		err = d.Begin(t.Context())
+	}
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -173,7 +273,10 @@ func TestDivisionGivenUp(t *testing.T) {
 		t.Fatalf("%q", got)
 	}
 	// What is whole may be divided again.
-	if d, err = b.Divide(t.Context(), 2); err != nil || d.Carried() != 0 || d.Before() != 6 {
+	if d, err = b.Divide(t.Context(), 2); err != nil || d.Begun() {
+		t.Fatalf("%+v, %v", d, err)
+	}
+	if err := d.Begin(t.Context()); err != nil || carried(t, d) != 0 || d.Before() != 6 {
 		t.Fatalf("%+v, %v", d, err)
 	}
 }

@@ -40,8 +40,12 @@ type Result struct {
 
 // Republish carries everything over that the division has not carried yet.
 func Republish(ctx context.Context, b *bus.Bus, d *bus.Division, o Options) (result *Result, err error) {
+	skip, err := d.Carried(ctx)
+	if err != nil {
+		return nil, err
+	}
 	r := &republisher{
-		Options: o, division: d, skip: d.Carried(), result: &Result{Before: NewTally()},
+		Options: o, division: d, skip: skip, result: &Result{Before: NewTally()},
 		router: newRouter(o.Setup.Partitions, o.Into, o.Setup.KeyParts, o.AlertSeries),
 		live:   map[int]int{}, clocks: map[int]monitor.Instant{}, stored: map[int]time.Time{},
 	}

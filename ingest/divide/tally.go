@@ -18,14 +18,18 @@ type Tally struct {
 	Series map[string]*SeriesTally
 	// Refused counts the elements and messages that can't be understood.
 	Refused map[monitor.Reason]int64
-	// Elements and Events sum what Series holds.
-	Elements, Events int64
+	// Elements, Events and Readings sum what Series holds.
+	Elements, Events, Readings int64
 }
 
 // SeriesTally is the account of one series.
 type SeriesTally struct {
 	Elements int64
 	Events   int64
+	// Readings counts the elements that are readings of counters. Their totals are
+	// no events: the sum of them says only whether the same stand there.
+	Readings int64
+	totals   big.Int
 	exposure big.Int // in units of 10^-18
 	// content sums a digest of every element, so that it says whether the same
 	// elements stand there, in whatever order.
@@ -43,6 +47,18 @@ func (s *SeriesTally) Exposure() string {
 		digits = digits[:len(digits)-1]
 	}
 	return whole.String() + "." + digits
+}
+
+// Totals is the sum of the totals of all readings.
+func (s *SeriesTally) Totals() string { return s.totals.String() }
+
+// String says in words what the account holds.
+func (s *SeriesTally) String() string {
+	if s.Readings == 0 {
+		return fmt.Sprintf("%d elements with %d events in %s", s.Elements, s.Events, s.Exposure())
+	}
+	return fmt.Sprintf("%d elements, %d of them readings of counters whose totals add up to %s, with %d events; exposure and its totals add up to %s",
+		s.Elements, s.Readings, s.Totals(), s.Events, s.Exposure())
 }
 
 var finest = new(big.Int).Exp(big.NewInt(10), big.NewInt(18), nil)
@@ -76,13 +92,22 @@ func (t *Tally) item(it *monitor.Item) {
 		t.Series[it.Observation.Series] = s
 	}
 	t.Elements++
-	t.Events += it.Observation.Events
+	if it.Observation.Reading {
+		t.Readings++
+	} else {
+		t.Events += it.Observation.Events
+	}
 	s.add(&it.Observation)
 }
 
 func (s *SeriesTally) add(o *monitor.Observation) {
 	s.Elements++
-	s.Events += o.Events
+	if o.Reading {
+		s.Readings++
+		s.totals.Add(&s.totals, big.NewInt(o.Events))
+	} else {
+		s.Events += o.Events
+	}
 	if o.HasExposure {
 		s.exposure.Add(&s.exposure, scaled(o.Exposure))
 	}
@@ -118,9 +143,8 @@ func (t *Tally) Differences(after *Tally) []string {
 			b = &SeriesTally{}
 		}
 		switch {
-		case a.Elements != b.Elements || a.Events != b.Events || a.exposure.Cmp(&b.exposure) != 0:
-			all = append(all, fmt.Sprintf("%s: %d elements with %d events in %s before, %d with %d in %s after",
-				name, a.Elements, a.Events, a.Exposure(), b.Elements, b.Events, b.Exposure()))
+		case a.Elements != b.Elements || a.Events != b.Events || a.Readings != b.Readings || a.totals.Cmp(&b.totals) != 0 || a.exposure.Cmp(&b.exposure) != 0:
+			all = append(all, fmt.Sprintf("%s: %s before, %s after", name, a, b))
 		case a.content != b.content:
 			all = append(all, name+": as many elements, but not the same")
 		}

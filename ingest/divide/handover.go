@@ -1,52 +1,9 @@
 package divide
 
 import (
-	"context"
-	"errors"
-	"fmt"
-	"time"
-
-	"tailbell/config"
-	"tailbell/ingest/bus"
-	"tailbell/ingest/intake"
-	"tailbell/monitor"
 	"tailbell/monitor/life"
-	"tailbell/monitor/partition"
 	"tailbell/monitor/store"
 )
-
-// Fill brings a store to the position end of what the source gives. The source
-// must begin after the store's position; it is closed.
-func Fill(ctx context.Context, st *store.Store, setup *config.Setup, source *bus.Source, end uint64) (err error) {
-	engine, err := partition.Recover(st)
-	if err != nil {
-		return errors.Join(err, source.Close())
-	}
-	in := intake.Over(source, setup, intake.Options{Stored: monitor.Beginning, Now: unhurried})
-	defer func() { err = errors.Join(err, in.Close()) }()
-	if engine.Position() >= end {
-		return nil
-	}
-	ctx, stop := context.WithCancel(ctx)
-	defer stop()
-	loop := partition.New(engine, st, in, partition.Options{Committed: func(position uint64) {
-		if position >= end {
-			stop()
-		}
-	}})
-	if err := loop.Run(ctx); err != nil {
-		return err
-	}
-	position, err := st.Position()
-	if err == nil && position < end {
-		err = fmt.Errorf("stopped at position %d of %d: %w", position, end, context.Cause(ctx))
-	}
-	return err
-}
-
-// unhurried holds no message back for its time: what is carried over was let
-// through, or held, when it was first read.
-func unhurried() time.Time { return time.Unix(1<<40, 0) }
 
 // Handover says what the outlets of new stores need no more.
 type Handover struct {
