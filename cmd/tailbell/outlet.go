@@ -72,7 +72,10 @@ func (d *daemon) dropOutlet(_ context.Context, name string) (any, error) {
 		if err != nil && !errors.Is(err, store.ErrNoOutlet) {
 			return nil, err
 		}
-		found = found || err == nil
+		if err == nil {
+			found = true
+			p.letGo()
+		}
 	}
 	if !found {
 		return nil, control.Errorf(codeNotFound, "no outlet %q: tailbell status shows them", name)

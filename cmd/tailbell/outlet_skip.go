@@ -50,6 +50,7 @@ func (d *daemon) skipStep(_ context.Context, req skipRequest) (any, error) {
 			if q := p.queue(req.Outlet); q != nil {
 				q.Again()
 			}
+			p.letGo()
 			return nil, nil
 		case !errors.Is(err, store.ErrNotFound) && !errors.Is(err, store.ErrNoOutlet):
 			return nil, err

@@ -39,6 +39,7 @@ type part struct {
 	// lastCopy is the last copy on the bus, nil while none is known.
 	lastCopy atomic.Pointer[copies.Copy]
 	copied   atomic.Uint64 // position of the last copy on the bus
+	copyNow  chan struct{} // a copy is wanted at once
 	noRoom   atomic.Bool   // the last commit found no room
 
 	// stop ends what startPart began, which running waits for. gone ends with the
@@ -90,7 +91,7 @@ func (d *daemon) openPart(ctx context.Context, number int, c *claim.Holding) (p 
 	if err != nil {
 		return nil, err
 	}
-	p = &part{number: number, store: st, stale: make(chan struct{})}
+	p = &part{number: number, store: st, stale: make(chan struct{}), copyNow: make(chan struct{}, 1)}
 	p.gone, p.leave = context.WithCancel(context.Background())
 	p.mu.moved = make(chan struct{})
 	defer func() {

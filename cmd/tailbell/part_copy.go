@@ -35,9 +35,21 @@ func (m *member) keepCopying(ctx context.Context, p *part) {
 		select {
 		case <-tick.C:
 			m.copyUp(ctx, p)
+		case <-p.copyNow:
+			p.copied.Store(0) // what a person did moves no position
+			m.copyUp(ctx, p)
 		case <-ctx.Done():
 			return
 		}
+	}
+}
+
+// letGo sees that a copy is made soon that has what a person let go: it stands in
+// the store only. Nothing is copied where no processes share the partitions.
+func (p *part) letGo() {
+	select {
+	case p.copyNow <- struct{}{}:
+	default:
 	}
 }
 

@@ -96,7 +96,7 @@ func List(ctx context.Context, from Shelf, partition int) ([]Copy, error) {
 		}
 	}
 	slices.SortStableFunc(list, func(a, b Copy) int {
-		return cmp.Or(cmp.Compare(b.Position, a.Position), cmp.Compare(b.Epoch, a.Epoch))
+		return cmp.Or(cmp.Compare(b.Position, a.Position), cmp.Compare(b.Epoch, a.Epoch), b.Made.Compare(a.Made))
 	})
 	return list, nil
 }
