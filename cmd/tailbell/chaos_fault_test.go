@@ -233,7 +233,7 @@ func TestChaos(t *testing.T) {
 	if *chaosRate > 0 {
 		rate = *chaosRate
 	}
-	x := newChaos(t, 3, ordeal.Options{Days: days, Sites: (series + 8) / 9, Partitions: chaosPartitions})
+	x := newChaos(t, 3, ordeal.Options{Days: days, Sites: (series + 8) / 9, Partitions: chaosPartitions, Across: true})
 	x.begin(rate)
 	x.board = x.look()
 	names := slices.Sorted(maps.Keys(x.faults()))

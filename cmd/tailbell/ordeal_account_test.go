@@ -8,7 +8,9 @@ import (
 	"os"
 	"slices"
 	"strconv"
+	"strings"
 	"testing"
+	"time"
 
 	"github.com/google/go-cmp/cmp"
 
@@ -93,8 +95,12 @@ func undisturbedOf(t *testing.T, of, number int, raws []wire.Raw) *outcome {
 	t.Helper()
 	e := monitor.New(monitor.Partition{Number: number, Of: of, KeyParts: 1})
 	decoder := wire.NewDecoder(wire.Limits{})
+	ahead := 0 // of the messages, up to where summaries were taken
 	for i := range raws {
 		m := decoder.Decode(raws[i])
+		for e.Holds(&m) {
+			ahead = takeAhead(t, e, decoder, raws, max(ahead, i+1))
+		}
 		e.Apply(&m)
 	}
 	changes := e.Drain()
@@ -107,16 +113,38 @@ func undisturbedOf(t *testing.T, of, number int, raws []wire.Raw) *outcome {
 	return o
 }
 
+// takeAhead lets an engine that holds a message take the next summary that stands
+// further on, and returns after which message that is.
+func takeAhead(t *testing.T, e *monitor.Engine, decoder *wire.Decoder, raws []wire.Raw, from int) int {
+	t.Helper()
+	for i := from; i < len(raws); i++ {
+		if !strings.HasSuffix(raws[i].Subject, ".sum") {
+			continue
+		}
+		if m := decoder.Decode(raws[i]); m.Kind == monitor.SummaryMessage && m.Position > e.Ahead() {
+			e.ApplyAhead(&m)
+			return i + 1
+		}
+	}
+	t.Fatalf("a message after position %d waits for what no partition tells", e.Position())
+	return 0
+}
+
+// ordealKinds are the last tokens of subjects.
+var ordealKinds = map[ordeal.Kind]string{ordeal.Observations: "obs", ordeal.Act: "act", ordeal.Setting: "set", ordeal.Tick: "tick"}
+
 // planned are the messages of a plan as a partition would read them if nothing
 // went wrong; setups are the texts that the daemon announces.
 func planned(plan *ordeal.Plan, setups [][]byte, number int) (raws []wire.Raw, elements [][]rehearse.Element) {
-	kinds := map[ordeal.Kind]string{ordeal.Observations: "obs", ordeal.Act: "act", ordeal.Setting: "set"}
 	for i := range plan.Messages {
 		m := &plan.Messages[i]
 		if m.Kind != ordeal.Setting && m.Partition != number {
 			continue
 		}
-		raw := wire.Raw{Position: uint64(len(raws) + 1), Subject: fmt.Sprintf("ordeal.in.%d.%s", number, kinds[m.Kind]), Data: m.Data}
+		raw := wire.Raw{Position: uint64(len(raws) + 1), Subject: fmt.Sprintf("ordeal.in.%d.%s", number, ordealKinds[m.Kind]), Data: m.Data}
+		if m.Kind == ordeal.Tick {
+			raw.Header = map[string][]string{wire.TimeHeader: {m.Time().Format(time.RFC3339)}}
+		}
 		if m.Kind == ordeal.Setting {
 			raw.Data = setups[m.Setup]
 		}

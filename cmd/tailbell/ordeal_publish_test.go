@@ -14,6 +14,7 @@ import (
 	"github.com/nats-io/nats.go"
 	"github.com/nats-io/nats.go/jetstream"
 
+	"tailbell/ingest/wire"
 	"tailbell/monitor/rehearse/ordeal"
 )
 
@@ -183,12 +184,11 @@ func (p *publisher) send(ctx context.Context, nc *nats.Conn, window []int) (posi
 
 func (p *publisher) message(n int) *nats.Msg {
 	m := &p.plan.Messages[n]
-	kind := "obs"
-	if m.Kind == ordeal.Act {
-		kind = "act"
-	}
-	msg := nats.NewMsg(fmt.Sprintf("ordeal.in.%d.%s", m.Partition, kind))
+	msg := nats.NewMsg(fmt.Sprintf("ordeal.in.%d.%s", m.Partition, ordealKinds[m.Kind]))
 	msg.Data = m.Data
+	if m.Kind == ordeal.Tick {
+		msg.Header.Set(wire.TimeHeader, m.Time().Format(time.RFC3339))
+	}
 	msg.Header.Set(numberHeader, strconv.Itoa(n))
 	if p.careful || m.Kind == ordeal.Act || !m.Repeatable {
 		msg.Header.Set(jetstream.MsgIDHeader, "ordeal-"+strconv.Itoa(n))

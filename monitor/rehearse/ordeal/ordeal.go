@@ -42,6 +42,7 @@ const (
 	Observations Kind = iota
 	Act
 	Setting // the daemon announces it
+	Tick    // nothing but its time
 )
 
 // Message is one message of a plan.
@@ -58,6 +59,10 @@ type Message struct {
 
 	at time.Time
 }
+
+// Time is when the message comes about in the plan's own time. A Tick says nothing
+// else.
+func (m *Message) Time() time.Time { return m.at }
 
 // Plan is what is to be sent, in order. Its first message is a Setting.
 type Plan struct {
@@ -79,6 +84,10 @@ type Options struct {
 	// Sites, each in a partition of its own. Every site has nine series, or six
 	// with IDsOnly.
 	Sites, Partitions int
+	// Across has slips judged by their peers, and falls by an allowance for all of
+	// them, wherever they lie. Every partition hears a Tick each day, and some at the
+	// end: those that nobody reports to would have the others wait.
+	Across bool
 }
 
 const (
@@ -135,6 +144,9 @@ func Generate(seed uint64, o Options) (*Plan, error) {
 		}
 		p.Messages = append(p.Messages, messages...)
 	}
+	if o.Across {
+		p.Messages = append(p.Messages, ticks(&o, zone)...)
+	}
 	slices.SortStableFunc(p.Messages, func(a, b Message) int { return a.at.Compare(b.at) })
 	r := rehearse.Source(seed, "settings")
 	for i := o.Settings; i > 0; i-- {
@@ -145,13 +157,31 @@ func Generate(seed uint64, o Options) (*Plan, error) {
 	return p, nil
 }
 
+// ticks end each day in every partition, until nothing more is reported.
+func ticks(o *Options, zone *time.Location) (all []Message) {
+	a := author{zone: zone}
+	for n := range o.Days + 8*spell {
+		for partition := range o.Partitions {
+			all = append(all, Message{Kind: Tick, Partition: partition, Repeatable: true, at: a.date(n).Add(20 * time.Hour)})
+		}
+	}
+	return all
+}
+
 // setup is the text of a set-up; they differ in what may change while a store
 // runs.
 func setup(number int, o *Options) []byte {
-	limit, quiet := []string{"0.01", "0.002", "0.03"}[number%3], []int{7, 3, 10}[number%3]
+	quiet := []int{7, 3, 10}[number%3]
+	limit := "p_limit = " + []string{"0.01", "0.002", "0.03"}[number%3]
+	const known = "kind = \"known\"\nrate = 10\nversion = \"1\"\nsource = \"invented\"\n"
 	var b bytes.Buffer
 	fmt.Fprintf(&b, "name = \"ordeal\"\npartitions = %d\n\n[time]\nmode = \"history\"\n\n[limits]\nmax_series = %d\nmax_ids = %d\n",
 		o.Partitions, max(200, 12*o.Sites), max(200_000, 10*o.Days*o.Sites))
+	limits, baselines := map[string]string{}, map[string]string{}
+	if o.Across {
+		limits["fall"] = fmt.Sprintf("allowance = \"%d in 1y\"\nallowance_for = \"indicator\"", []int{200, 100, 400}[number%3])
+		baselines["slip"] = "kind = \"peers\"\nspan = \"14d\"\nrefresh = \"1w\"\n"
+	}
 	for _, in := range []struct{ name, events, ids, tails string }{
 		{"line-infection", "counted", "kept", `"upper"`},
 		{"fall", "each", "kept", `"upper", "lower"`},
@@ -172,15 +202,11 @@ horizon = "60d"
 ahead = "2d"
 windows = ["7d", "28d"]
 tails = [%s]
-p_limit = %s
+%s
 quiet = %d
 
 [indicator.baseline]
-kind = "known"
-rate = 10
-version = "1"
-source = "invented"
-`, in.name, in.name, in.events, in.ids, in.tails, limit, quiet)
+%s`, in.name, in.name, in.events, in.ids, in.tails, cmp.Or(limits[in.name], limit), quiet, cmp.Or(baselines[in.name], known))
 	}
 	return b.Bytes()
 }
