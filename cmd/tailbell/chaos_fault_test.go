@@ -109,13 +109,16 @@ func (x *chaos) takenOver(what string, from time.Time, before map[int]claim.Row,
 			mine[n] = r
 		}
 	}
-	owned := time.Duration(0)
+	owned, each := time.Duration(0), map[int]time.Duration{}
 	x.await(what+": others own its partitions", func() bool {
 		now := x.owned()
 		taken, moved := 0, 0
 		for n, was := range mine {
 			if r := now[n]; r.Owner != "" && r.Epoch > was.Epoch {
 				taken++
+				if each[n] == 0 {
+					each[n] = time.Since(from)
+				}
 				if r.Position > was.Position {
 					moved++
 				}
@@ -126,21 +129,63 @@ func (x *chaos) takenOver(what string, from time.Time, before map[int]claim.Row,
 		}
 		return now != nil && taken == len(mine) && (moved == len(mine) || x.pub.left() == 0)
 	})
-	x.takeovers = append(x.takeovers, takeover{what, len(mine), owned, time.Since(from)})
+	o := takeover{what: what, partitions: len(mine), owned: owned, noted: time.Since(from)}
+	for _, c := range x.firstCommits() {
+		if at, ok := each[c.Partition]; ok && c.Epoch > mine[c.Partition].Epoch {
+			o.opening = max(o.opening, ms(c.Opening))
+			o.reading = max(o.reading, ms(c.Since-c.Opening))
+			o.stored = max(o.stored, at+ms(c.Since))
+		}
+	}
+	x.takeovers = append(x.takeovers, o)
 }
 
 // takeover is how long it took until all partitions of a process were owned by
-// others, and until these had noted in their claims what they had stored.
+// others, these had committed something, and had noted that in their claims; and
+// how long the slowest opened a store, copies included, and read on.
 type takeover struct {
 	what       string
 	partitions int
-	owned      time.Duration
-	moved      time.Duration
+
+	owned, stored, noted time.Duration
+	opening, reading     time.Duration
 }
 
 func (o takeover) String() string {
-	return fmt.Sprintf("%s: %d partitions owned after %v, stored after %v", o.what, o.partitions,
-		o.owned.Round(10*time.Millisecond), o.moved.Round(10*time.Millisecond))
+	return fmt.Sprintf("%s: %d partitions owned after %v, stored after %v (opening %v and then reading %v at most), noted after %v", o.what, o.partitions,
+		round(o.owned), round(o.stored), round(o.opening), round(o.reading), round(o.noted))
+}
+
+func round(d time.Duration) time.Duration { return d.Round(10 * time.Millisecond) }
+
+func ms(n float64) time.Duration { return time.Duration(n * float64(time.Millisecond)) }
+
+// firstCommit is what a process logs of the first commit of a partition that it
+// has taken, in milliseconds.
+type firstCommit struct {
+	Message   string  `json:"message"`
+	Partition int     `json:"partition"`
+	Epoch     uint64  `json:"epoch"`
+	Opening   float64 `json:"opening"`
+	Since     float64 `json:"since_claim"`
+}
+
+// firstCommits reads them from the logs of all processes.
+func (x *chaos) firstCommits() (all []firstCommit) {
+	x.t.Helper()
+	for _, w := range x.workers {
+		text, err := os.ReadFile(w.stderr)
+		if err != nil {
+			x.t.Fatal(err)
+		}
+		for line := range strings.Lines(string(text)) {
+			var c firstCommit
+			if json.Unmarshal([]byte(line), &c) == nil && strings.HasPrefix(c.Message, "the first commit") {
+				all = append(all, c)
+			}
+		}
+	}
+	return all
 }
 
 func (x *chaos) anyWorker() *worker { return x.workers[x.random.IntN(len(x.workers))] }

@@ -41,6 +41,12 @@ type part struct {
 	copied   atomic.Uint64 // position of the last copy on the bus
 	copyNow  chan struct{} // a copy is wanted at once
 	noRoom   atomic.Bool   // the last commit found no room
+	// taken is when the partition became this process's, opened when it ran; the
+	// zero times where no processes share the partitions. first is for what is said
+	// of the first commit since.
+	taken, opened time.Time
+	epoch         uint64
+	first         sync.Once
 
 	// stop ends what startPart began, which running waits for. gone ends with the
 	// loop: nothing is asked of the engine any more.
@@ -124,6 +130,7 @@ func (d *daemon) openPart(ctx context.Context, number int, c *claim.Holding) (p 
 	if err := st.SetEpoch(epoch); err != nil {
 		return p, err
 	}
+	p.epoch = epoch
 	if d.member != nil {
 		d.member.noteEpoch(number, epoch)
 	}

@@ -59,6 +59,11 @@ func (d *daemon) committed(p *part, position uint64) {
 	}
 	p.mu.Lock()
 	if position > 0 {
+	if !p.taken.IsZero() {
+		p.first.Do(func() {
+			d.log.Info().Int("partition", p.number).Uint64("epoch", p.epoch).Dur("opening", p.opened.Sub(p.taken)).Dur("since_claim", time.Since(p.taken)).Msg("the first commit since the partition was taken")
+		})
+	}
 		p.mu.position = position
 	}
 	close(p.mu.moved)

@@ -15,12 +15,13 @@ type tenure struct {
 	claim   *claim.Holding
 	ctx     context.Context //nolint:containedctx // of the tenure; its cause says why it ends
 	lose    context.CancelCauseFunc
+	taken   time.Time
 	surplus chan struct{} // closed when the partition is to be handed over
 	done    chan struct{} // closed when nothing is left of it here
 }
 
 func newTenure(ctx context.Context, c *claim.Holding) *tenure {
-	t := &tenure{claim: c, surplus: make(chan struct{}), done: make(chan struct{})}
+	t := &tenure{claim: c, taken: time.Now(), surplus: make(chan struct{}), done: make(chan struct{})}
 	t.ctx, t.lose = context.WithCancelCause(ctx)
 	return t
 }
@@ -46,6 +47,7 @@ func (m *member) hold(t *tenure, n int, before *tenure) {
 		return
 	}
 	m.d.parts.put(p)
+	p.taken, p.opened = t.taken, time.Now()
 	m.d.startPart(t.ctx, p)
 	m.d.log.Info().Int("partition", n).Uint64("epoch", t.claim.Epoch).Uint64("position", p.mu.position).Dur("took", time.Since(began)).Msg("the partition runs")
 	copying, stopCopying := context.WithCancel(t.ctx)
