@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"strings"
 	"time"
 
 	"tailbell/alert/words"
@@ -106,7 +107,7 @@ func (f *feeding) await(ctx context.Context) error {
 			moved, last = now(), sum
 		}
 		if now().Sub(moved) > awaitTime {
-			return f.unknown(ctx, fmt.Errorf("it has made no progress for %s", duration(awaitTime)))
+			return f.unknown(ctx, fmt.Errorf("it has made no progress for %s%s", duration(awaitTime), s.waiting()))
 		}
 		if err := pause(ctx, awaitPause); err != nil {
 			return f.unknown(ctx, err)
@@ -116,6 +117,20 @@ func (f *feeding) await(ctx context.Context) error {
 			return f.unknown(ctx, err)
 		}
 	}
+}
+
+// waiting names the partitions that wait for others, nothing if none does.
+func (s *statusReply) waiting() string {
+	var all []string
+	for i := range s.Partitions {
+		if p := &s.Partitions[i]; p.History && len(p.WaitsFor) > 0 {
+			all = append(all, fmt.Sprintf("partition %d waits for what %s %s", p.Number, partitionsNamed(p.WaitsFor), countVerb(p.WaitsFor)))
+		}
+	}
+	if len(all) == 0 {
+		return ""
+	}
+	return "; " + strings.Join(all, ", ") + ": in history time they go on together"
 }
 
 // unknown says that the rows are safe, though not read yet.

@@ -148,7 +148,8 @@ func (d *daemon) openPart(ctx context.Context, number int, c *claim.Holding) (p 
 	}
 	p.loop = partition.New(engine, st, p.intake, partition.Options{
 		MaxBatch: d.o.maxBatch, Committed: func(position uint64) { d.committed(p, position) },
-		Full: func(ctx context.Context, err error) error { return d.full(ctx, p, err) },
+		Full:  func(ctx context.Context, err error) error { return d.full(ctx, p, err) },
+		Ahead: p.intake.Ahead,
 	})
 	p.ticker = intake.NewTicker(p.loop.Due, func(ctx context.Context) error {
 		if p.intake.Held() != nil {

@@ -4,9 +4,11 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"slices"
 	"sync"
 	"time"
 
+	"tailbell/config"
 	"tailbell/ingest/bus"
 	"tailbell/ingest/intake"
 	"tailbell/ingest/wire"
@@ -57,13 +59,13 @@ func (d *daemon) committed(p *part, position uint64) {
 		d.log.Info().Int("partition", p.number).Msg("there is room again")
 		d.troubles.clear(troubleNoRoom, p.number)
 	}
-	p.mu.Lock()
-	if position > 0 {
 	if !p.taken.IsZero() {
 		p.first.Do(func() {
 			d.log.Info().Int("partition", p.number).Uint64("epoch", p.epoch).Dur("opening", p.opened.Sub(p.taken)).Dur("since_claim", time.Since(p.taken)).Msg("the first commit since the partition was taken")
 		})
 	}
+	p.mu.Lock()
+	if position > 0 {
 		p.mu.position = position
 	}
 	close(p.mu.moved)
@@ -145,10 +147,41 @@ func (d *daemon) goLivePart(ctx context.Context, p *part) error {
 	if err := p.do(ctx, func(e *monitor.Engine) { history = e.InHistory() }); err != nil || !history {
 		return err
 	}
+	if countsAcross(d.setup) {
+		if err := d.catchUp(ctx, p); err != nil {
+			return err
+		}
+	}
 	_, err = d.bus.Publish(ctx, bus.Outgoing{
 		Partition: p.number, Kind: bus.Tick, Header: map[string][]string{wire.LiveHeader: {"1"}},
 	})
 	return err
+}
+
+// countsAcross reports whether partitions tell each other what they count.
+func countsAcross(setup *config.Setup) bool {
+	return slices.ContainsFunc(setup.Indicators, func(in config.Indicator) bool { return in.CountsAcross(setup.KeyParts) })
+}
+
+// catchUp brings the partition's clock to the bus's while it is in history time,
+// where partitions wait for what the others count. In live time none does: each
+// would pass the days since its last report without the others.
+func (d *daemon) catchUp(ctx context.Context, p *part) error {
+	position, err := d.bus.Publish(ctx, bus.Outgoing{Partition: p.number, Kind: bus.Tick}) // says what time it is
+	if err != nil {
+		return err
+	}
+	raw, err := d.bus.At(ctx, position)
+	if err != nil {
+		return err
+	}
+	position, err = d.bus.Publish(ctx, bus.Outgoing{
+		Partition: p.number, Kind: bus.Tick, Header: map[string][]string{wire.TimeHeader: {wire.FormatTime(monitor.InstantOf(raw.Stored))}},
+	})
+	if err != nil {
+		return err
+	}
+	return p.reach(ctx, position)
 }
 
 // flush delivers what still waits, each outlet beside the others. An outlet

@@ -77,6 +77,9 @@ func writePartition(w io.Writer, name string, p *partStatus, z zones) error {
 	if p.History {
 		mode = "history time"
 	}
+	if len(p.WaitsFor) > 0 {
+		mode += fmt.Sprintf(" (waits for what %s %s)", partitionsNamed(p.WaitsFor), countVerb(p.WaitsFor))
+	}
 	if p.Clock != nil {
 		clock = z.stamp(*p.Clock)
 	}
@@ -115,6 +118,25 @@ func writePartition(w io.Writer, name string, p *partStatus, z zones) error {
 		return say(w, "  and %s more", amount(p.MoreConditions, "conditions"))
 	}
 	return nil
+}
+
+// partitionsNamed names partitions: "partition 1", "partitions 0, 2".
+func partitionsNamed(all []int) string {
+	var names []string
+	for _, n := range all {
+		names = append(names, fmt.Sprint(n))
+	}
+	if len(all) == 1 {
+		return "partition " + names[0]
+	}
+	return "partitions " + strings.Join(names, ", ")
+}
+
+func countVerb(all []int) string {
+	if len(all) == 1 {
+		return "counts"
+	}
+	return "count"
 }
 
 // endedOf says how many series have ended, nothing if none did.

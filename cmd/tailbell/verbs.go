@@ -71,11 +71,14 @@ type statusReply struct {
 }
 
 type partStatus struct {
-	Number     int             `json:"partition"`
-	Position   uint64          `json:"position"` // up to which all is committed
-	End        uint64          `json:"stream_end"`
-	Clock      *time.Time      `json:"clock"` // null before the first message that tells a time
-	History    bool            `json:"history_time"`
+	Number   int        `json:"partition"`
+	Position uint64     `json:"position"` // up to which all is committed
+	End      uint64     `json:"stream_end"`
+	Clock    *time.Time `json:"clock"` // null before the first message that tells a time
+	History  bool       `json:"history_time"`
+	// WaitsFor are the partitions that it waits for until they have told what they
+	// count: with the next message in history time, else with what is in force.
+	WaitsFor   []int           `json:"waits_for_partitions,omitempty"`
 	Version    int             `json:"setup_version"`
 	Series     int             `json:"series"` // that are monitored, sums among them
 	Account    monitor.Account `json:"account"`
@@ -207,7 +210,7 @@ func (d *daemon) status(ctx context.Context) (*statusReply, error) {
 			_, s.Version = e.Setup()
 			s.Account, s.Series = e.Account(), e.SeriesCount()
 			s.addConditions(e.Conditions(), mostConditions/d.setup.Partitions)
-			s.OpenAlerts = openAlerts(e)
+			s.OpenAlerts, s.WaitsFor = openAlerts(e), e.WaitsFor()
 		})
 		if err != nil {
 			return nil, err

@@ -1,0 +1,218 @@
+package main
+
+import (
+	"context"
+	"fmt"
+	"os"
+	"path/filepath"
+	"slices"
+	"strings"
+	"testing"
+	"time"
+
+	"github.com/google/go-cmp/cmp"
+	"github.com/rs/zerolog"
+
+	"tailbell/config"
+	"tailbell/monitor"
+	"tailbell/monitor/store"
+)
+
+// spanningSetup has series that are judged together wherever they lie: falls by
+// their peers, slips and trips by an allowance for all of them, trips with sums.
+const spanningSetup = `name = "quillmere"
+folder = "data"
+partitions = %d
+%s
+[[indicator]]
+name = "fall"
+noun = "falls"
+series = ["quillmere-*/*/fall"]
+sums = ["{site}/*/fall", "*/*/fall"]
+unit = "bed-days"
+every = "1d"
+zone = "Europe/Berlin"
+settle = "1d"
+horizon = "30d"
+windows = ["7d", "28d"]
+p_limit = 0.02
+quiet = 3
+[indicator.baseline]
+kind = "peers"
+span = "28d"
+refresh = "1w"
+[[indicator]]
+name = "slip"
+noun = "slips"
+series = ["quillmere-*/*/slip"]
+unit = "bed-days"
+every = "1d"
+zone = "Europe/Berlin"
+settle = "1d"
+horizon = "30d"
+windows = ["7d", "28d"]
+allowance = "60 in 1y"
+allowance_for = "indicator"
+quiet = 3
+[indicator.baseline]
+kind = "known"
+rate = 0.003
+[[indicator]]
+name = "trip"
+noun = "trips"
+series = ["quillmere-*/*/trip"]
+sums = ["*/*/trip"]
+unit = "bed-days"
+every = "1d"
+zone = "Europe/Berlin"
+settle = "1d"
+horizon = "30d"
+windows = ["7d"]
+allowance = "60 in 1y"
+allowance_for = "indicator"
+quiet = 3
+[indicator.baseline]
+kind = "known"
+rate = 0.003
+`
+
+const historyMode = "[time]\nmode = \"history\""
+
+// spanningHistory writes three months of falls, slips and trips.
+func spanningHistory(t *testing.T) string {
+	t.Helper()
+	falls, err := os.ReadFile(gatheredHistory(t))
+	if err != nil {
+		t.Fatal(err)
+	}
+	var text strings.Builder
+	for line := range strings.Lines(string(falls)) {
+		for _, kind := range []string{"fall", "slip", "trip"} {
+			text.WriteString(strings.NewReplacer(`/fall"`, "/"+kind+`"`, `"id":"`, `"id":"`+kind+"-").Replace(line))
+		}
+	}
+	path := filepath.Join(t.TempDir(), "all.ndjson")
+	if err := os.WriteFile(path, []byte(text.String()), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	return path
+}
+
+// spanning writes the set-up with so many partitions, and reads it.
+func spanning(t *testing.T, partitions int, mode string) (string, *config.Setup) {
+	t.Helper()
+	path := filepath.Join(t.TempDir(), "tailbell.toml")
+	if err := os.WriteFile(path, fmt.Appendf(nil, spanningSetup, partitions, mode), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	setup, err := config.Load(path)
+	if err != nil {
+		t.Fatal(err)
+	}
+	return path, setup
+}
+
+func feedFile(t *testing.T, path, history string) {
+	t.Helper()
+	if code, _, stderr := run(t, "feed", "--config", path, history); code != 0 {
+		t.Fatalf("feed: exit code %d\n%s", code, stderr)
+	}
+}
+
+// alertsOf are the records of all alerts, by series and id.
+func alertsOf(t *testing.T, d *daemon) map[string]string {
+	t.Helper()
+	alerts := map[string]string{}
+	for _, p := range d.parts.all() {
+		rows, err := p.store.Alerts(store.AlertFilter{}, 0, 1<<20)
+		if err != nil {
+			t.Fatal(err)
+		}
+		for _, row := range rows {
+			alerts[row.Record.Series+" "+row.Record.ID] = plainRecord(t, &row.Record)
+		}
+	}
+	return alerts
+}
+
+// sameAlerts compares what partitions found with what one did.
+func sameAlerts(t *testing.T, what string, one, several map[string]string) {
+	t.Helper()
+	if diff := cmp.Diff(one, several); diff != "" {
+		t.Errorf("%s: -one partition +several:\n%.6000s", what, diff)
+	}
+}
+
+// runSpanning runs the daemon, feeds the file meanwhile if there is one, and
+// returns the alerts when all is read and told.
+func runSpanning(t *testing.T, path string, setup *config.Setup, file string) (alerts map[string]string) {
+	t.Helper()
+	d, err := openDaemon(t.Context(), setup, daemonOptions{log: zerolog.Nop(), maxBatch: 50})
+	if err != nil {
+		t.Fatal(err)
+	}
+	ctx, stop := context.WithCancel(t.Context())
+	ended := make(chan error, 1)
+	go func() { ended <- d.run(ctx) }()
+	if file != "" {
+		feedFile(t, path, file)
+	}
+	patience, cancel := context.WithTimeout(ctx, 2*time.Minute)
+	defer cancel()
+	if !setup.History {
+		awaitLive(t, patience, d)
+	}
+	awaitGathered(t, patience, d)
+	alerts = alertsOf(t, d)
+	stop()
+	if err := <-ended; err != nil {
+		t.Fatal(err)
+	}
+	if err := d.close(); err != nil {
+		t.Fatal(err)
+	}
+	return alerts
+}
+
+// awaitLive waits until every partition is live.
+func awaitLive(t *testing.T, ctx context.Context, d *daemon) {
+	t.Helper()
+	for _, p := range d.parts.all() {
+		for history := true; history; {
+			if err := p.do(ctx, func(e *monitor.Engine) { history = e.InHistory() }); err != nil {
+				t.Fatal(err)
+			}
+			select {
+			case <-time.After(5 * time.Millisecond):
+			case <-ctx.Done():
+				t.Fatal(ctx.Err())
+			}
+		}
+	}
+}
+
+// TestSpanning runs the daemon with one partition and with four over a history that
+// was fed before it started, one that is fed while it runs, and one with which it
+// goes live: the alerts are the same to the byte.
+func TestSpanning(t *testing.T) {
+	history := spanningHistory(t)
+	for mode, text := range map[string]string{"history": historyMode, "live": ""} {
+		t.Run(mode, func(t *testing.T) {
+			path, setup := spanning(t, 1, text)
+			feedFile(t, path, history)
+			one := runSpanning(t, path, setup, "")
+			for _, kind := range []string{"/fall", "/slip", "/trip"} {
+				if n := len(slices.DeleteFunc(slices.Collect(seriesOf(one)), func(s string) bool { return !strings.Contains(s, kind) })); n == 0 {
+					t.Errorf("no alert of %s", kind)
+				}
+			}
+			path, setup = spanning(t, 4, text)
+			feedFile(t, path, history)
+			sameAlerts(t, "fed before", one, runSpanning(t, path, setup, ""))
+			if mode == "history" {
+				path, setup = spanning(t, 4, text)
+				sameAlerts(t, "fed meanwhile", one, runSpanning(t, path, setup, history))
+			}
+		})
+	}
+}
