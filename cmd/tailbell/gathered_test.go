@@ -50,6 +50,12 @@ rate = 0.003
 // in the second, with reports that come late and are corrected.
 func gatheredHistory(t *testing.T) string {
 	t.Helper()
+	return gatheredHistoryFrom(t, time.Date(2025, 3, 1, 0, 0, 0, 0, time.UTC))
+}
+
+// gatheredHistoryFrom writes that from another day on.
+func gatheredHistoryFrom(t *testing.T, first time.Time) string {
+	t.Helper()
 	zone, err := time.LoadLocation("Europe/Berlin")
 	if err != nil {
 		t.Fatal(err)
@@ -59,7 +65,7 @@ func gatheredHistory(t *testing.T) string {
 		line     string
 	}
 	var rows []row
-	begin := time.Date(2025, 3, 1, 0, 0, 0, 0, zone)
+	begin := time.Date(first.Year(), first.Month(), first.Day(), 0, 0, 0, 0, zone)
 	for day := range 92 {
 		for n, site := range []string{"east", "west", "north", "south", "harbour", "hill"} {
 			for ward := range 2 {
