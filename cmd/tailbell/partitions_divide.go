@@ -199,4 +199,3 @@ func finishMoving(w io.Writer, setup, next *config.Setup, place divisionPlace) e
 	return say(w, `The stores of before lie in %s: remove them when all is well.
 Now write partitions = %d in the set-up, tell publishers, and start the daemon.`, place.aside(), next.Partitions)
 }
-

@@ -264,4 +264,3 @@ func (v *division) wants(name string, n *life.Notice) bool {
 	}
 	return name != "terminal" || forPeople(n)
 }
-
