@@ -34,6 +34,9 @@ const BusName = "bus"
 // Name is "bus".
 func (*Bus) Name() string { return BusName }
 
+// Forgives: the bus drops repeats by their keys for a day.
+func (*Bus) Forgives() {}
+
 // Deliver publishes a step that is in no outbox: a test.
 func (b *Bus) Deliver(ctx context.Context, n *life.Notice) error {
 	return b.DeliverNumbered(ctx, 0, n)

@@ -47,6 +47,15 @@ type Gatherer interface {
 	DeliverTogether(ctx context.Context, notices []*life.Notice) error
 }
 
+// Forgiving is an outlet whose receiver drops repeats unseen. That a step was
+// delivered may become durable with whatever is written next: a crash before
+// that repeats it.
+type Forgiving interface {
+	Outlet
+	// Forgives says nothing but that it is so.
+	Forgives()
+}
+
 // chunk is how many steps are looked at before the store hears of what was
 // delivered.
 const chunk = 256
@@ -58,6 +67,10 @@ const (
 	longestPause = time.Minute
 )
 
+// lull is how long nothing is written before a forgiving outlet's delivery is
+// made durable by itself.
+const lull = 25 * time.Millisecond
+
 // Queue delivers what waits for one outlet.
 type Queue struct {
 	store  *store.Store
@@ -68,6 +81,9 @@ type Queue struct {
 	// done are the numbers of steps that were delivered, while one before them
 	// was not.
 	done map[uint64]bool
+	// unkept says that something was delivered since it was last made durable for
+	// certain.
+	unkept bool
 
 	mu struct {
 		sync.Mutex
@@ -172,32 +188,57 @@ func (q *Queue) Again() {
 // Run delivers until ctx ends or the store fails. A store without room is
 // waited for like an outlet that is down.
 func (q *Queue) Run(ctx context.Context) error {
-	for {
+	for ctx.Err() == nil {
 		more, err := q.deliver(ctx)
-		if ctx.Err() != nil {
-			return nil //nolint:nilerr // ended, not failed: what waits stays in the store
+		if err == nil && !more {
+			q.well()
+			err = q.idle(ctx)
 		}
 		switch {
+		case ctx.Err() != nil: // ended, not failed: what waits stays in the store
 		case err != nil && !more && !errors.Is(err, store.ErrFull):
 			return fmt.Errorf("outlet %s: %w", q.outlet.Name(), err)
 		case err != nil:
 			pause := q.fail(err)
 			q.opts.Failed(err, pause)
-			if !q.sleep(ctx, pause) {
-				return nil
-			}
-			continue
-		}
-		q.well()
-		if more {
-			continue
-		}
-		select {
-		case <-q.wake:
-		case <-ctx.Done():
-			return nil
+			q.sleep(ctx, pause)
+		case more:
+			q.well()
 		}
 	}
+	if err := q.keep(); err != nil && !errors.Is(err, store.ErrFull) {
+		return fmt.Errorf("outlet %s: %w", q.outlet.Name(), err)
+	}
+	return nil
+}
+
+// idle waits until there may be something to deliver. What was delivered becomes
+// durable meanwhile, if no other write came.
+func (q *Queue) idle(ctx context.Context) error {
+	var quiet <-chan time.Time
+	if q.unkept {
+		timer := time.NewTimer(lull)
+		defer timer.Stop()
+		quiet = timer.C
+	}
+	select {
+	case <-q.wake:
+		return nil
+	case <-quiet:
+		return q.keep()
+	case <-ctx.Done():
+		return nil
+	}
+}
+
+// keep makes durable what was delivered.
+func (q *Queue) keep() error {
+	if !q.unkept {
+		return nil
+	}
+	err := q.store.KeepDelivered()
+	q.unkept = err != nil
+	return err
 }
 
 // fail notes a try that failed and returns how long to wait.
@@ -229,7 +270,7 @@ func (q *Queue) Flush(ctx context.Context) error {
 	for {
 		more, err := q.deliver(ctx)
 		if err != nil || !more {
-			return err
+			return errors.Join(err, q.keep())
 		}
 	}
 }
@@ -256,7 +297,7 @@ func (q *Queue) deliver(ctx context.Context) (more bool, err error) {
 				passed++
 			}
 		}
-		if err := q.store.Delivered(q.outlet.Name(), through, passed); err != nil {
+		if err := q.delivered(through, passed); err != nil {
 			return false, err
 		}
 		for n := range q.done {
@@ -267,6 +308,15 @@ func (q *Queue) deliver(ctx context.Context) (more bool, err error) {
 		q.well()
 	}
 	return len(rows) > 0, failure
+}
+
+// delivered lets the store hear that all steps up to a number are done with.
+func (q *Queue) delivered(through, passed uint64) error {
+	if _, forgives := q.outlet.(Forgiving); !forgives {
+		return q.store.Delivered(q.outlet.Name(), through, passed)
+	}
+	q.unkept = true
+	return q.store.DeliveredSoon(q.outlet.Name(), through, passed)
 }
 
 // send delivers of a parcel what was not delivered before, when something ahead
@@ -306,16 +356,13 @@ func (q *Queue) send(ctx context.Context, p *parcel) (err error) {
 	return nil
 }
 
-// sleep waits for a pause, or until it is cut short; false if ctx ended.
-func (q *Queue) sleep(ctx context.Context, d time.Duration) bool {
+// sleep waits for a pause, until it is cut short or ctx ends.
+func (q *Queue) sleep(ctx context.Context, d time.Duration) {
 	t := time.NewTimer(d)
 	defer t.Stop()
 	select {
 	case <-q.again:
-		return true
 	case <-t.C:
-		return true
 	case <-ctx.Done():
-		return false
 	}
 }

@@ -155,12 +155,14 @@ func (s *Store) DropOutlet(name string) error {
 // OutletState returns the registered outlets by name.
 func (s *Store) OutletState() ([]Outlet, error) {
 	var outlets []Outlet
+	since := s.tidings.all() // before the read begins, so that none is missed
 	err := s.view(func(tx *bolt.Tx) error {
 		h, err := readHead(tx)
 		if err != nil {
 			return err
 		}
 		return eachOutlet(tx, func(name string, c cursor) error {
+			c = c.with(name, since)
 			outlets = append(outlets, Outlet{
 				Name: name, Through: c.Delivered, Depth: h.Outbox - c.Delivered - uint64(len(c.Skip)), Skipped: c.Skipped,
 				Told: c.Told, Passed: c.Passed,
@@ -194,6 +196,7 @@ func (s *Store) Pending(outlet string, max int) ([]Row, error) {
 // PendingAfter returns at most so many of those with numbers beyond after.
 func (s *Store) PendingAfter(outlet string, after uint64, most int) ([]Row, error) {
 	var rows []Row
+	since := s.tidings.all() // before the read begins, so that none is missed
 	err := s.view(func(tx *bolt.Tx) error {
 		outlets, err := outletsShelf.in(tx)
 		if err != nil {
@@ -207,6 +210,7 @@ func (s *Store) PendingAfter(outlet string, after uint64, most int) ([]Row, erro
 		if err != nil {
 			return err
 		}
+		c = c.with(outlet, since)
 		r, err := outboxShelf.in(tx)
 		if err != nil {
 			return err
@@ -237,23 +241,11 @@ func (s *Store) Delivered(outlet string, n, passed uint64) error {
 		if err != nil {
 			return err
 		}
-		var c cursor
-		found, err := r.getJSON([]byte(outlet), &c)
-		switch {
-		case err != nil:
+		d := delivery{outlet, n, passed}
+		if err := deliverable(r, h, d); err != nil {
 			return err
-		case !found:
-			return fmt.Errorf("outlet %q: %w", outlet, ErrNoOutlet)
-		case n > h.Outbox:
-			return fmt.Errorf("outlet %q says it delivered step %d, the last one is %d: %w", outlet, n, h.Outbox, ErrOrder)
-		case n > c.Delivered:
-			c.count(n, passed)
-			c.pass(n)
-			if err := r.putJSON([]byte(outlet), c); err != nil {
-				return err
-			}
 		}
-		return trimOutbox(tx, h, trimKeys)
+		return writeDelivery(tx, h, d)
 	})
 }
 

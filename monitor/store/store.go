@@ -81,6 +81,7 @@ type Store struct {
 	opts     Options
 	db       *bolt.DB
 	fault    func(step string) error // Options.Fault
+	tidings  tidings
 	// writing is held during a write and during Check.
 	writing struct {
 		sync.Mutex
@@ -257,7 +258,7 @@ func (s *Store) update(step string, write func(tx *bolt.Tx, h *head) error) erro
 }
 
 func (s *Store) attempt(step string, write func(tx *bolt.Tx, h *head) error) error {
-	committing := false
+	committing, told := false, 0
 	err := guard(func() (err error) {
 		if err := s.ask(step); err != nil {
 			return err
@@ -275,6 +276,9 @@ func (s *Store) attempt(step string, write func(tx *bolt.Tx, h *head) error) err
 		if err != nil {
 			return err
 		}
+		if told, err = s.writeTidings(tx, &h); err != nil {
+			return err
+		}
 		if err := write(tx, &h); err != nil {
 			return err
 		}
@@ -285,6 +289,7 @@ func (s *Store) attempt(step string, write func(tx *bolt.Tx, h *head) error) err
 		if err := tx.Commit(); err != nil {
 			return err
 		}
+		s.tidings.written(told)
 		return s.ask(step + " durable")
 	})
 	return translate(err, committing)

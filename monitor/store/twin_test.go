@@ -39,6 +39,7 @@ type twin struct {
 	from     monitor.Instant // when the archive begins
 	letGo    uint64
 	outlets  map[string]uint64
+	kept     map[string]uint64    // the same as far as a write has made it durable
 	told     []monitor.OutSummary // what others are yet to be told
 	waiting  []monitor.WaitingSummary
 	waited   uint64
@@ -52,10 +53,13 @@ func (w *twin) clone() *twin {
 	}
 	c.ids, c.settings, c.alerts = slices.Clone(w.ids), slices.Clone(w.settings), slices.Clone(w.alerts)
 	c.refused, c.steps, c.archived = slices.Clone(w.refused), slices.Clone(w.steps), slices.Clone(w.archived)
-	c.outlets = maps.Clone(w.outlets)
+	c.outlets, c.kept = maps.Clone(w.outlets), maps.Clone(w.kept)
 	c.told, c.waiting = slices.Clone(w.told), slices.Clone(w.waiting)
 	return &c
 }
+
+// keep says that a write was made durable.
+func (w *twin) keep() { w.kept = maps.Clone(w.outlets) }
 
 // batch makes a random batch of changes and applies it to the twin.
 func (w *twin) batch(t *rapid.T) monitor.Changes {
@@ -358,7 +362,9 @@ func TestTwin(t *testing.T) {
 	rapid.Check(t, func(rt *rapid.T) {
 		run++
 		m := &machine{
-			w:      &twin{from: monitor.Beginning, outlets: map[string]uint64{"bus": 0, "terminal": 0}},
+			w: &twin{
+				from: monitor.Beginning, outlets: map[string]uint64{"bus": 0, "terminal": 0}, kept: map[string]uint64{"bus": 0, "terminal": 0},
+			},
 			folder: filepath.Join(folder, fmt.Sprint(run)),
 		}
 		if err := os.Mkdir(m.folder, 0o700); err != nil {
@@ -379,6 +385,7 @@ func TestTwin(t *testing.T) {
 			"commit3": m.commit,
 			"fail":    m.fail,
 			"deliver": m.deliver,
+			"soon":    m.deliverSoon,
 			"tell":    m.tell,
 			"restart": m.restart,
 			"kill":    m.kill,
@@ -400,6 +407,7 @@ func (m *machine) commit(t *rapid.T) {
 	if err := m.s.Commit(c, Mark{Position: c.Position}); err != nil {
 		t.Fatal(err)
 	}
+	m.w.keep()
 }
 
 // fail breaks a commit off at a random step and starts again from the file.
@@ -419,6 +427,7 @@ func (m *machine) fail(t *rapid.T) {
 	}
 	if step == "commit durable" {
 		m.w = after
+		m.w.keep()
 	}
 	m.restart(t)
 }
@@ -427,6 +436,17 @@ func (m *machine) deliver(t *rapid.T) {
 	name := rapid.SampledFrom([]string{"bus", "terminal"}).Draw(t, "outlet")
 	n := uint64(rapid.IntRange(0, len(m.w.steps)).Draw(t, "delivered"))
 	if err := m.s.Delivered(name, n, 0); err != nil {
+		t.Fatal(err)
+	}
+	m.w.outlets[name] = max(m.w.outlets[name], n)
+	m.w.keep()
+}
+
+// deliverSoon is deliver, undone by a restart before the next write.
+func (m *machine) deliverSoon(t *rapid.T) {
+	name := rapid.SampledFrom([]string{"bus", "terminal"}).Draw(t, "outlet")
+	n := uint64(rapid.IntRange(0, len(m.w.steps)).Draw(t, "delivered"))
+	if err := m.s.DeliveredSoon(name, n, 0); err != nil {
 		t.Fatal(err)
 	}
 	m.w.outlets[name] = max(m.w.outlets[name], n)
@@ -445,11 +465,13 @@ func (m *machine) tell(t *rapid.T) {
 		}
 	}
 	m.w.told = m.w.told[n:]
+	m.w.keep()
 }
 
 func (m *machine) restart(t *rapid.T) {
 	leaveRapid(t, m.s)
 	m.open(t, m.s.path)
+	m.w.outlets = maps.Clone(m.w.kept)
 }
 
 // kill goes on from a copy of the file as it lies there now.
@@ -459,6 +481,7 @@ func (m *machine) kill(t *rapid.T) {
 	if err := was.Close(); err != nil {
 		t.Fatal(err)
 	}
+	m.w.outlets = maps.Clone(m.w.kept)
 }
 
 // goOn opens a copy of a file.
