@@ -14,8 +14,21 @@ type checkpoint struct {
 	next  int // number of the series to write next
 }
 
-// minSlice is the least number of bytes of whole states in one Drain.
-const minSlice = 4 << 10
+const (
+	// minSlice is the least number of bytes of whole states in one Drain.
+	minSlice = 4 << 10
+	// With fewSeries a third as many bytes of whole states are handed over as of
+	// patches, with manySeries as many: the patches that are kept are six times, or
+	// twice, what all states take. Whole states cost the store more than patches do;
+	// patches make starting longer, which matters where there are many series.
+	fewSeries, manySeries = 20_000, 60_000
+)
+
+// sliceFor is how many bytes of whole states go with so many of patches.
+func (e *Engine) sliceFor(patches int) int {
+	share := float64(min(max(len(e.series), fewSeries), manySeries)) / manySeries
+	return max(int(share*float64(patches)), minSlice)
+}
 
 // Drain hands over what changed since the last one. The caller must make it
 // durable before anything that follows from it leaves the process.
@@ -34,6 +47,7 @@ func (e *Engine) Drain() Changes {
 	}
 	slices.SortFunc(e.touched, func(a, b *series) int { return cmp.Compare(a.number, b.number) })
 	size := 0
+	c.Series = make([]SeriesChange, 0, len(e.touched)+len(e.stubs.touched))
 	for _, s := range e.touched {
 		s.catchUp()
 		patch := e.room.keep(s.encode(e.room.next(), false))
@@ -51,9 +65,11 @@ func (e *Engine) Drain() Changes {
 	c.Summaries = e.drainTold()
 	c.Waiting, c.Gathered = e.drainWaiting()
 	c.Cycle = e.checkpoint.cycle
-	c.States = e.slice(max(size, minSlice))
+	c.States = e.slice(e.sliceFor(size))
 	c.Header = e.encodeHeader()
-	e.touched, e.archived, e.refused, e.changed, e.steps, e.settings = nil, nil, nil, nil, nil, nil
+	clear(e.touched)
+	e.touched = e.touched[:0]
+	e.archived, e.refused, e.changed, e.steps, e.settings = nil, nil, nil, nil, nil
 	e.ids.dropped = nil
 	return c
 }

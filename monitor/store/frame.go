@@ -87,6 +87,15 @@ func (r rack) put(key, payload []byte) error {
 	return nil
 }
 
+// putFramed ends a value that begins with the version, and writes it. The value
+// is bbolt's from then on.
+func (r rack) putFramed(key, value []byte) error {
+	if err := r.Put(key, r.close(key, value)); err != nil {
+		return fmt.Errorf("bucket %s: %w", r.name, err)
+	}
+	return nil
+}
+
 func (r rack) putJSON(key []byte, v any) error {
 	payload, err := json.Marshal(v)
 	if err != nil {
@@ -141,6 +150,11 @@ func (s shelf) seal(key, payload []byte) []byte {
 	value := make([]byte, 0, len(payload)+frameOverhead)
 	value = append(value, frameVersion)
 	value = append(value, payload...)
+	return s.close(key, value)
+}
+
+// close ends a value that was begun with the version and holds the payload.
+func (s shelf) close(key, value []byte) []byte {
 	return binary.BigEndian.AppendUint32(value, s.sum(key, value))
 }
 

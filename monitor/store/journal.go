@@ -32,20 +32,30 @@ func writeJournal(tx *bolt.Tx, h *head, changes *monitor.Changes) error {
 	}
 	cuts := journalCuts(changes.Series)
 	for part, from := range cuts[:len(cuts)-1] {
-		var b []byte
+		patches := changes.Series[from:cuts[part+1]]
+		b := append(make([]byte, 0, journalSize(patches)), frameVersion)
 		b = binary.AppendUvarint(b, h.Cycle)
 		b = binary.AppendUvarint(b, h.Position)
 		b = binary.AppendUvarint(b, uint64(len(cuts)-1))
-		for _, c := range changes.Series[from:cuts[part+1]] {
+		for _, c := range patches {
 			b = binary.AppendUvarint(b, uint64(c.Number))
 			b = binary.AppendUvarint(b, uint64(len(c.Data)))
 			b = append(b, c.Data...)
 		}
-		if err := r.put(journalKey(h.Commit, uint32(part)), b); err != nil {
+		if err := r.putFramed(journalKey(h.Commit, uint32(part)), b); err != nil {
 			return err
 		}
 	}
 	return trimJournal(r, h)
+}
+
+// journalSize is the most bytes that the value of the patches takes.
+func journalSize(patches []monitor.SeriesChange) int {
+	size := frameOverhead + 3*binary.MaxVarintLen64
+	for i := range patches {
+		size += len(patches[i].Data) + 2*binary.MaxVarintLen32
+	}
+	return size
 }
 
 // journalCuts returns where the parts of an entry begin, and the end.

@@ -19,19 +19,46 @@ func writeStates(tx *bolt.Tx, h *head, states []monitor.SeriesChange) error {
 	if err != nil {
 		return err
 	}
-	var b []byte
-	for _, c := range states {
-		key := binary.BigEndian.AppendUint32(nil, c.Number)
-		if r.Get(key) == nil {
-			h.States++
-		}
-		b = binary.AppendUvarint(b[:0], h.Commit)
+	h.States += r.unwritten(states)
+	var key [4]byte
+	b := make([]byte, 0, statesSize(states)) // of all values: bbolt keeps them until it commits
+	for i := range states {
+		c := &states[i]
+		binary.BigEndian.PutUint32(key[:], c.Number)
+		at := len(b)
+		b = binary.AppendUvarint(append(b, frameVersion), h.Commit)
 		b = append(b, c.Data...)
-		if err := r.put(key, b); err != nil {
-			return err
+		value := r.close(key[:], b[at:])
+		if err := r.Put(key[:], value[:len(value):len(value)]); err != nil {
+			return fmt.Errorf("bucket %s: %w", r.name, err)
 		}
+		b = b[:at+len(value)]
 	}
 	return nil
+}
+
+// unwritten counts those of the states, in order of Number, that have never been
+// written.
+func (r rack) unwritten(states []monitor.SeriesChange) (count uint32) {
+	c := r.Cursor()
+	at, _ := c.Seek(binary.BigEndian.AppendUint32(nil, states[0].Number))
+	for i := range states {
+		for at != nil && binary.BigEndian.Uint32(at) < states[i].Number {
+			at, _ = c.Next()
+		}
+		if at == nil || binary.BigEndian.Uint32(at) != states[i].Number {
+			count++
+		}
+	}
+	return count
+}
+
+// statesSize is the most bytes that the values of the states take.
+func statesSize(states []monitor.SeriesChange) (size int) {
+	for i := range states {
+		size += len(states[i].Data) + frameOverhead + binary.MaxVarintLen64
+	}
+	return size
 }
 
 // state takes a stored state apart; the data share the transaction's memory.
