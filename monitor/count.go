@@ -258,7 +258,7 @@ func (ix *indicator) pooled() bool { return ix.counting != nil && ix.of == nil }
 func (e *Engine) takePool(ix *indicator, s *series, ep *epoch, b *config.Baseline, boundary int64) {
 	id := ix.poolID(ep.cfg, poolKey{b, s.ruleOf()})
 	p := ix.agreed.Pools[id]
-	if p == nil {
+	if p == nil || len(p.Strata) != strataOf(b) {
 		return
 	}
 	if n := len(s.references); n > 0 && s.references[n-1].of == id && s.references[n-1].period == p.Period {
@@ -323,7 +323,7 @@ func (s *series) encodeOwn(b []byte) []byte {
 func (r *reader) own() *own {
 	o := &own{since: r.int()}
 	for range r.length() {
-		o.tallies = append(o.tallies, poolTally{r.int(), r.int(), r.int(), r.int(), r.quantities()})
+		o.tallies = append(o.tallies, poolTally{r.int(), r.int(), r.int(), r.int(), r.quantities(mostKinds)})
 	}
 	return o
 }
@@ -349,12 +349,12 @@ func appendQuantities(b []byte, list []Quantity) []byte {
 }
 
 // mostKinds is the most kinds of slot that a reference tells apart: hours of the
-// week, by the steps of a delay.
+// week, by the steps of a delay. A message tells of no more.
 const mostKinds = 1 << 18
 
-func (r *reader) quantities() []Quantity {
+func (r *reader) quantities(most int) []Quantity {
 	n := r.uint()
-	if n > mostKinds {
+	if n > uint64(most) {
 		r.fail("a list is too long")
 		return nil
 	}

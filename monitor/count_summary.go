@@ -81,7 +81,7 @@ func (r *reader) big() *big.Int {
 // number reads one that is not negative.
 func (r *reader) number() int64 {
 	n := r.uint()
-	if n > 1<<62 {
+	if n > 1<<56 {
 		r.fail("a number is too large")
 		return 0
 	}
@@ -92,11 +92,14 @@ func (r *reader) number() int64 {
 func (r *reader) count(bits byte) *count {
 	x := &count{Nothing: bits&countNothing != 0, Sums: bits&countSums != 0}
 	x.Series, x.Limited, x.Predicted = r.number(), r.number(), r.big()
+	kinds := mostKinds
 	for range r.length() {
-		x.Pools = append(x.Pools, poolCount{
+		p := poolCount{
 			ID: r.int(), Period: r.int(), Units: r.number(), Events: r.number(), LeftOut: r.number(),
-			Index: r.big(), Strata: r.quantities(),
-		})
+			Index: r.big(), Strata: r.quantities(kinds),
+		}
+		kinds -= len(p.Strata)
+		x.Pools = append(x.Pools, p)
 	}
 	if x.Nothing && (x.Series > 0 || x.Limited > 0) {
 		r.fail("it says that there is nothing, and counts")

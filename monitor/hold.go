@@ -46,10 +46,22 @@ func (e *Engine) holds(m *Message) bool {
 		if at, moves = e.movesTo(m, i); moves && e.clock == Beginning {
 			e.advance(at)
 		}
-		if e.isHeld(at, moves) {
-			e.goUpTo(at)
+		if e.staysHeld(at, moves) {
 			return true
 		}
+	}
+	return false
+}
+
+// staysHeld reports whether what moves the clock to a moment is held when the clock
+// has gone as far as it may.
+func (e *Engine) staysHeld(at Instant, moves bool) bool {
+	for e.isHeld(at, moves) {
+		from := e.heldFrom()
+		if from == Beginning || from-1 <= e.clock {
+			return true
+		}
+		e.advance(from - 1)
 	}
 	return false
 }
@@ -62,11 +74,7 @@ func (e *Engine) holdsAt(m *Message) bool {
 	case !m.HasTime && m.Kind != ActMessage: // it moves no clock, nor is anything counted
 		return false
 	}
-	if !e.isHeld(m.Time, m.HasTime) {
-		return false
-	}
-	e.goUpTo(m.Time)
-	return true
+	return e.staysHeld(m.Time, m.HasTime)
 }
 
 // isHeld reports whether what moves the clock to a moment, or does not move it at
@@ -77,14 +85,6 @@ func (e *Engine) isHeld(at Instant, moves bool) bool {
 	}
 	from := e.heldFrom()
 	return from == Beginning || moves && at >= from
-}
-
-// goUpTo brings the clock up to just before the moment from which on messages are
-// held, on its way to another.
-func (e *Engine) goUpTo(at Instant) {
-	if from := e.heldFrom(); from != Beginning && from <= at {
-		e.advance(from - 1)
-	}
 }
 
 // movesTo is the moment to which an observation moves the clock of history time,
@@ -143,10 +143,13 @@ func (e *Engine) needed(ix *indicator) (boundary int64, from Instant) {
 	case told < today:
 		boundary = today
 	default:
-		boundary = ix.dayAfter(ix.dayBegins(told))
+		boundary = ix.dayAfter(ix.dayBegins(min(told, ix.looked+farAhead)))
 	}
 	return boundary, ix.due(ix.dayAfter(boundary))
 }
+
+// farAhead is how many slots beyond what was looked at are thought of at once.
+const farAhead = 1 << 16
 
 func (k *counting) allBegun() bool {
 	return !slices.ContainsFunc(k.told(), func(l countLane) bool { return !l.Begun })

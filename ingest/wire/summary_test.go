@@ -2,14 +2,16 @@ package wire
 
 import (
 	"bytes"
+	"fmt"
 	"testing"
+	"time"
 
 	"tailbell/config"
 	"tailbell/monitor"
 )
 
-// summaries are what a partition of two tells another, as it is published.
-func summaries(tb testing.TB) [][]byte {
+// telling is a set-up under which partitions tell each other all that they can.
+func telling(tb testing.TB) *config.Setup {
 	tb.Helper()
 	setup, err := config.Parse([]byte(`
 name = "x"
@@ -22,14 +24,23 @@ sums = ["*/*/fall"]
 unit = "bed-days"
 every = "1d"
 windows = ["7d"]
-p_limit = 0.001
+allowance = "1 in 1y"
+allowance_for = "indicator"
 [indicator.baseline]
-kind = "known"
-rate = 0.02
+kind = "peers"
+span = "14d"
+strata = { by = "weekday", factors = [1, 1, 1, 1, 1, 0.5, 0.5] }
 `), "set-up")
 	if err != nil {
 		tb.Fatal(err)
 	}
+	return setup
+}
+
+// summaries are what a partition of two tells another, as it is published.
+func summaries(tb testing.TB) [][]byte {
+	tb.Helper()
+	setup := telling(tb)
 	teller := 1 - setup.HomeOf("fall")
 	site := "a"
 	for config.PartitionOf(site, 1, 2) != teller {
@@ -68,12 +79,38 @@ func TestSummariesAreDecoded(t *testing.T) {
 	}
 }
 
+// takeIn lets an engine that waits for summaries take one, and live on with it.
+func takeIn(t *testing.T, setup *config.Setup, partition int, m monitor.Message) {
+	t.Helper()
+	e := monitor.New(monitor.Partition{Number: partition, Of: 2, KeyParts: 1})
+	site := "a"
+	for config.PartitionOf(site, 1, 2) != partition {
+		site += "a"
+	}
+	d := NewDecoder(Limits{})
+	data := fmt.Appendf(nil, `{"series":"%s/w/fall","start":"2026-03-05T00:00:00Z","end":"2026-03-06T00:00:00Z","events":1,"exposure":22,"reported":"2026-03-06T01:00:00Z"}`, site)
+	seen := d.Decode(Raw{Position: 2, Subject: "x.in.0.obs", Data: data})
+	e.Apply(&monitor.Message{Position: 1, Kind: monitor.SettingMessage, Setting: monitor.Setting{Setup: setup}})
+	e.Apply(&seen)
+	m.Position = 3
+	e.Apply(&m)
+	for n := range 6 {
+		at := time.Date(2026, 3, 7+n, 6, 0, 0, 0, time.UTC)
+		e.Apply(&monitor.Message{Position: uint64(4 + n), Kind: monitor.Live, Stored: monitor.InstantOf(at)})
+	}
+	if !e.Account().Balanced() {
+		t.Fatal("the account does not balance")
+	}
+	e.Drain()
+}
+
 // FuzzSummary checks that whatever comes is either refused with all its bytes, or
 // understood in a way that says the same when it is taken by an engine again.
 func FuzzSummary(f *testing.F) {
 	for _, data := range summaries(f) {
 		f.Add(data)
 	}
+	setup := telling(f)
 	f.Fuzz(func(t *testing.T, data []byte) {
 		before := bytes.Clone(data)
 		m := NewDecoder(Limits{}).Decode(Raw{Position: 1, Subject: "x.in.0.sum", Data: data})
@@ -89,6 +126,9 @@ func FuzzSummary(f *testing.F) {
 			for p := range 2 { // it may be refused there, but nothing breaks
 				e := monitor.New(monitor.Partition{Number: p, Of: 2, KeyParts: 1})
 				e.Apply(&m)
+				if data[0] == 2 { // what is counted
+					takeIn(t, setup, p, m)
+				}
 				if !e.Account().Balanced() {
 					t.Fatal("the account does not balance")
 				}

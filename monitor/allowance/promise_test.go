@@ -277,6 +277,25 @@ func TestReserve(t *testing.T) {
 	}
 }
 
+// TestUncounted: series that nobody has counted yet stay within the reserve together,
+// as long as they are not more than those that were, or than a hundred.
+func TestUncounted(t *testing.T) {
+	const perYear, reserve = 2.0, 0.1
+	for _, counted := range []int{0, 1, 40, 100, 101, 5000} {
+		all := float64(counted) * Share(perYear, reserve, counted)
+		for range max(counted, 100) {
+			all += Uncounted(perYear, reserve, counted)
+		}
+		want := perYear
+		if counted == 0 {
+			want *= reserve
+		}
+		if math.Abs(all-want) > 1e-12*want {
+			t.Errorf("%d counted: %v a year in all, want %v", counted, all, want)
+		}
+	}
+}
+
 // TestArrivalsAreTheLimitOfSlots: ever finer slots come to arrival looks.
 func TestArrivalsAreTheLimitOfSlots(t *testing.T) {
 	alpha := exact.Poisson{Rate: 2, Exposure: 1}.Upper(7)
