@@ -29,9 +29,19 @@ func TestSumsAreNamedWithTheirCarriers(t *testing.T) {
 			[]life.Carrier{{Series: "quillmere-east/ward-3/fall", Events: 4}},
 			7,
 		},
+		{
+			"quillmere-east/*/fall", "Quillmere East, all together", " All that was counted is Ward 3's: it is the same finding as in that series itself.",
+			[]life.Carrier{{Series: "quillmere-east/ward-3/fall", Events: 5, Exposure: "170"}},
+			0,
+		},
+		{
+			"quillmere-east/*/fall", "Quillmere East, all together", " Carried by Ward 3 (5).", // others had none in some of the exposure
+			[]life.Carrier{{Series: "quillmere-east/ward-3/fall", Events: 5, Exposure: "160"}},
+			0,
+		},
 		{"quillmere-east/ward-3/fall", "Ward 3, Quillmere East", "", nil, 0},
 	} {
-		e := life.Evidence{EventNoun: "falls", Carriers: test.carriers, MoreCarriers: test.more}
+		e := life.Evidence{EventNoun: "falls", Events: 5, Exposure: "170", Carriers: test.carriers, MoreCarriers: test.more}
 		r := life.Record{Series: test.series, Indicator: "fall", Opening: e}
 		if got := place(&r); got != test.place {
 			t.Errorf("%s: place %q, want %q", test.series, got, test.place)

@@ -76,7 +76,7 @@ func TestSeriesCommands(t *testing.T) {
 	s.says(2, []string{"write a date in Europe/Berlin"}, by("reset", "quillmere-east/ward-3/fall", "--why", "w", "--from", "8.4.2026")...)
 	s.says(2, []string{"no indicator monitors"}, by("reset", "quillmere-east/ward-3/error", "--why", "w", "--from", "2026-04-08")...)
 	s.says(1, []string{"no_such_series"}, by("reset", "quillmere-east/ward-9/fall", "--why", "w", "--from", "2026-04-08")...)
-	t.Log(s.says(0, []string{"begin again from 2026-04-08"}, by("reset", "quillmere-east/ward-3/fall", "--from", "2026-04-08", "--why", "cluster closed")...))
+	t.Log(s.says(0, []string{"begin again from 2026-04-08; alert ", " of quillmere-east/ward-3/fall has returned with it."}, by("reset", "quillmere-east/ward-3/fall", "--from", "2026-04-08", "--why", "cluster closed")...))
 	s.says(1, []string{"said already"}, by("reset", "quillmere-east/ward-3/fall", "--from", "2026-04-08", "--why", "again")...)
 	t.Log(s.says(0, []string{"quillmere-*/*/fall (5 series): case definition from 2026-05-01 recorded"},
 		by("change", "quillmere-*/*/fall", "--what", "case definition", "--from", "2026-05-01", "--why", "chairs count too")...))

@@ -28,6 +28,7 @@ folder = "x"
 max_series = 2000000
 max_ids = 4000000
 memory = "1TiB"
+archive = "ARCHIVE"
 [[indicator]]
 name = "restart"
 series = ["ferrybill/*/restart"]
@@ -59,9 +60,9 @@ type churned struct {
 // Series come and go, each for a day, as hosts and releases do: what is kept of
 // them in memory and as state does not grow from one day to the next.
 func TestSeriesComeAndGo(t *testing.T) {
-	for _, ids := range []string{`"none"`, `"kept"`} {
-		t.Run(strings.Trim(ids, `"`), func(t *testing.T) {
-			days := churn(t, ids)
+	for name, how := range map[string][2]string{"none": {`"none"`, "all"}, "kept": {`"kept"`, "all"}, "two days": {`"none"`, "2d"}} {
+		t.Run(name, func(t *testing.T) {
+			days := churn(t, how[0], how[1])
 			half, last := days[len(days)/2], days[len(days)-1]
 			if last.living > half.living*21/20 || last.numbers > half.numbers*21/20 {
 				t.Errorf("after %d days %d series live and %d numbers are taken; after %d days it was %d and %d",
@@ -70,7 +71,11 @@ func TestSeriesComeAndGo(t *testing.T) {
 			if most := 5 * *churnNames; last.numbers > most {
 				t.Errorf("%d numbers are taken, more than %d", last.numbers, most)
 			}
-			// What is archived stays, as it must; what a start reads does not grow.
+			// What is archived stays, as it must, unless the set-up says for how long;
+			// what a start reads does not grow.
+			if a, b := half.archive, last.archive; how[1] != "all" && (b > a*21/20 || last.file > half.file*5/4) || how[1] == "all" && b < a*3/2 {
+				t.Errorf("the archive went from %d to %d bytes, the file from %d to %d", a, b, half.file, last.file)
+			}
 			if last.state > half.state*5/4 {
 				t.Errorf("the state grew from %d to %d bytes", half.state, last.state)
 			}
@@ -81,9 +86,9 @@ func TestSeriesComeAndGo(t *testing.T) {
 	}
 }
 
-func churn(t *testing.T, ids string) (days []churned) {
+func churn(t *testing.T, ids, archive string) (days []churned) {
 	t.Helper()
-	setup, err := config.Parse([]byte(strings.Replace(churnSetup, "IDS", ids, 1)), "test")
+	setup, err := config.Parse([]byte(strings.NewReplacer("IDS", ids, "ARCHIVE", archive).Replace(churnSetup)), "test")
 	if err != nil {
 		t.Fatal(err)
 	}
