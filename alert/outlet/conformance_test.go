@@ -20,6 +20,7 @@ import (
 
 	"tailbell/alert/outlet"
 	"tailbell/alert/outlet/outlettest"
+	"tailbell/alert/words"
 	"tailbell/config"
 	"tailbell/monitor/life"
 )
@@ -200,6 +201,9 @@ func (p *program) Arrived() []outlettest.Arrival {
 			p.t.Errorf("%v: %s", err, data)
 			continue
 		}
+		if text := strings.Join(strings.Fields(e.Text), " "); len(e.Notices) == 0 || strings.Count(text, words.CautionOf(&e.Notices[0].Record)) != 1 {
+			p.t.Errorf("the text does not have the caution once:\n%s", e.Text)
+		}
 		id := ""
 		for _, n := range e.Notices {
 			id += n.Key + " "
@@ -221,6 +225,12 @@ func TestCommandConforms(t *testing.T) {
 	if err := outlettest.Check(t.Context(), o, p); err != nil {
 		t.Error(err)
 	}
+	for _, kind := range []life.StepKind{life.StepWorsened, life.StepReturned} {
+		if err := o.Deliver(t.Context(), outlettest.Step("ward-1", kind)); err != nil {
+			t.Error(err)
+		}
+	}
+	p.Arrived()
 	p.Down(true)
 	if err := o.Deliver(t.Context(), outlettest.Step("ward-1", life.StepOpened)); err == nil || !strings.Contains(err.Error(), "ring: exit status 3: nobody [31mhere") {
 		t.Errorf("the program's failure is told as %v", err)

@@ -38,7 +38,10 @@ type PartState struct {
 	History       bool
 	Version       int
 	Account       monitor.Account
-	Outlets       []OutletState
+	// Archive says in words since when the archive of slots reaches back, and what was
+	// let go; "" where all is kept.
+	Archive string
+	Outlets []OutletState
 	// Owner is the process that owns the partition, where several share them; Here
 	// says that it is the one that serves this page. Copy says up to where the last
 	// copy of its store on the bus reaches, and when it was made; nil for none.

@@ -44,6 +44,7 @@ func TestScreensHoldTheirContent(t *testing.T) {
 			"This look signals at", "Since the opening look", "Its history", "opened", "What you can do", "Acknowledge this alert", "Shelve this alert",
 		},
 		"/machine": {
+			"The archive of partition 0: 7 slots since 2026-01-01 (UTC).",
 			"The stream", "1,200 34", "hooks 0 7 41 3 not delivered : the receiver is away", "Overdue reports 1", "quay/ward-9/fall",
 			"bad_events 1", "events is &lt;b&gt;-1&lt;/b&gt;", "The account",
 		},

@@ -217,7 +217,7 @@ func (s *stand) state(context.Context) (*State, error) {
 		Connected: true, Embedded: true, Setup: "0123456789abcdef",
 		Troubles: []Trouble{{Kind: "steps not delivered", Text: "3 steps wait for outlet hooks", Since: at}},
 		Parts: []PartState{{
-			Position: 1200, End: 1234, Clock: &at, History: true, Version: 1, Account: s.engine.Account(),
+			Position: 1200, End: 1234, Clock: &at, History: true, Version: 1, Account: s.engine.Account(), Archive: "7 slots since 2026-01-01 (UTC)",
 			Outlets: []OutletState{{Name: "hooks", Delivered: 7, PassedOver: 41, Waiting: 3, Trouble: "the receiver is away"}},
 		}},
 	}, nil

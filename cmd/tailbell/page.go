@@ -139,6 +139,9 @@ func (d *daemon) stateForPage(ctx context.Context) (*page.State, error) {
 				part.CopyMade, part.CopyPosition = &p.Copy.Made, p.Copy.Position
 			}
 		}
+		if p.Archive.From != nil {
+			part.Archive = p.Archive.String()
+		}
 		here := d.parts.get(p.Number)
 		for _, o := range p.Outlets {
 			state := page.OutletState{Name: o.Name, Delivered: o.Delivered, PassedOver: o.PassedOver, Waiting: o.Waiting}
