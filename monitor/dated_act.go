@@ -115,12 +115,16 @@ func (e *Engine) keepFacts(facts []fact) {
 }
 
 // forgetFacts drops what no look needs any more. Spans out of service are needed
-// as long as series may retire but for them.
+// as long as series may retire or be silent but for them.
 func (e *Engine) forgetFacts() {
 	oldest, out := Never, Never
 	for _, ix := range e.indicators {
-		if ix.cfg.Retire > 0 {
-			out = min(out, ix.cal.Start(ix.cal.Slot(e.clock.Add(-ix.cfg.Retire))))
+		back := ix.cfg.Retire
+		for i := range ix.cfg.Expect {
+			back = max(back, ix.cfg.Expect[i].Within)
+		}
+		if back > 0 {
+			out = min(out, ix.cal.Start(ix.cal.Slot(e.clock.Add(-back))))
 		}
 		for _, k := range ix.kin() {
 			if !k.started {
@@ -129,13 +133,24 @@ func (e *Engine) forgetFacts() {
 			oldest = min(oldest, k.cal.Start(k.kept))
 		}
 	}
+	var gone []fact
 	e.keepFacts(slices.DeleteFunc(slices.Clone(e.facts), func(f fact) bool {
 		needed := oldest
 		if f.Kind == OutOfService {
 			needed = min(oldest, out)
 		}
-		return !f.turns() && max(f.From, f.Until) < needed
+		if f.turns() || max(f.From, f.Until) >= needed {
+			return false
+		}
+		gone = append(gone, f)
+		return true
 	}))
+	for i := range gone { // as after a restart
+		for _, s := range e.matched(&gone[i]) {
+			s.dates = e.datesOf(s.indicator, s.name)
+			e.awaits(s)
+		}
+	}
 }
 
 // enforce brings the facts into force for the series that the fact matches, and

@@ -117,9 +117,10 @@ func (s *series) inServiceAfter(at Instant) Instant {
 	return at
 }
 
-// awaits puts the series among those whose silence is waited for.
+// awaits puts the series among those whose silence is waited for; one that is closed
+// for good is not.
 func (e *Engine) awaits(s *series) {
-	if e.passing || s.silence.waits() {
+	if e.passing || s.silence.waits() || e.clock != Beginning && s.inServiceAfter(e.clock) == Never {
 		return
 	}
 	if at := s.silentAt(); at != Never {
