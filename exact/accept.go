@@ -20,9 +20,17 @@ type acceptance[L law] struct {
 func (a acceptance[L]) joined(eta float64, j int64) float64 {
 	x := a.at(eta)
 	if a.how == MinLike {
-		return x.point(j).minus(x.point(a.k))
+		return logRatio(x, j, a.k)
 	}
 	return x.side(j, !a.lower, false).logProb() - x.side(a.k, a.lower, false).logProb()
+}
+
+// logRatio is log(P(X = j)/P(X = k)), without the sum over all counts where the law can do without.
+func logRatio[L law](x L, j, k int64) float64 {
+	if u, ok := any(x).(FisherNoncentral); ok && x.valid() {
+		return u.urn().logRatio(float64(j), float64(k))
+	}
+	return x.point(j).minus(x.point(k))
 }
 
 func (a acceptance[L]) excess(eta float64, j int64) float64 {
@@ -38,7 +46,7 @@ func (a acceptance[L]) from(tailAt func(size float64) float64) float64 {
 	if a.how == Blaker {
 		return tailAt(a.alpha / 2)
 	}
-	for f := 0.49; f > 0.05; f *= 0.7 {
+	for _, f := range [...]float64{0.4999, 0.499, 0.49, 0.34, 0.24, 0.17, 0.12, 0.08} { // a few jumps may be few in a million
 		eta := tailAt(a.alpha * f)
 		if a.excess(eta, a.outermost(eta))+3*a.at(eta).point(a.k).value() < 0 {
 			return eta
@@ -94,7 +102,7 @@ func (a acceptance[L]) solve(eta, step float64, f func(float64) float64) float64
 			return bracketed(eta, end, f)
 		}
 		eta, step = end, 2*step
-		if math.Abs(eta) > 690 {
+		if math.Abs(eta) > 745 && eta*step > 0 { // outward of all that exp can give
 			break
 		}
 	}
@@ -239,11 +247,11 @@ func (x TwoProportion) OddsRatioBoundsBy(n int64, alpha float64, how Sides) (low
 	lo, hi := at(0).support()
 	a := acceptance[FisherNoncentral]{at: at, k: n, alpha: min(alpha, 1-0x1p-50), how: how, lower: true}
 	tailAt := func(size float64) float64 {
-		l, u := x.OddsRatioBounds(n, 2*size)
+		u := at(0).urn()
 		if a.lower {
-			return logOf(l)
+			return logOf(u.lowerOdds(float64(n), size, false))
 		}
-		return logOf(u)
+		return -logOf(u.mirror().lowerOdds(float64(x.RefEvents), size, false))
 	}
 	if n > lo {
 		lower = expTwo(a.bound(a.from(tailAt), 0.1), 0)
@@ -254,13 +262,22 @@ func (x TwoProportion) OddsRatioBoundsBy(n int64, alpha float64, how Sides) (low
 	return lower, upper
 }
 
-// RateBounds are Garwood's bounds at level 1-alpha of the rate for n events in Exposure.
+// part is a lower bound divided by what it is a bound of: 0 stays 0.
+func part(lower, whole float64) float64 {
+	if lower == 0 {
+		return 0
+	}
+	return lower / whole
+}
+
+// RateBounds are Garwood's bounds at level 1-alpha of the rate for n events in Exposure; without
+// exposure, events leave no rate finite and no events leave them all.
 func (x Poisson) RateBounds(n int64, alpha float64) (lower, upper float64) {
 	if !x.valid() {
 		return math.NaN(), math.NaN()
 	}
 	l, u := Garwood(n, alpha)
-	return l / x.Exposure, u / x.Exposure
+	return part(l, x.Exposure), u / x.Exposure
 }
 
 // RatioBounds are Garwood's bounds at level 1-alpha of the ratio of the rate behind n events in
@@ -270,7 +287,7 @@ func (x Poisson) RatioBounds(n int64, alpha float64) (lower, upper float64) {
 		return math.NaN(), math.NaN()
 	}
 	l, u := Garwood(n, alpha)
-	return l / x.Mean(), u / x.Mean()
+	return part(l, x.Mean()), u / x.Mean()
 }
 
 // RatioBounds are Clopper and Pearson's bounds at level 1-alpha of the ratio of the probability
@@ -280,5 +297,5 @@ func (x Binomial) RatioBounds(k int64, alpha float64) (lower, upper float64) {
 		return math.NaN(), math.NaN()
 	}
 	l, u := ClopperPearson(k, x.N, alpha)
-	return l / x.P, u / x.P
+	return part(l, x.P), u / x.P
 }

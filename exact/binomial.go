@@ -111,7 +111,7 @@ func binomialSide(k, n int64, p, q dd, upper, mid bool) side {
 func (x Binomial) PMF(k int64) float64 { return x.point(k).value() }
 
 // LogPMF is the natural logarithm of P(X = k), -Inf outside the support.
-func (x Binomial) LogPMF(k int64) float64 { return logMass(x, k) }
+func (x Binomial) LogPMF(k int64) float64 { return logMassByEnds(x, k) }
 
 // Upper is P(X >= k).
 func (x Binomial) Upper(k int64) float64 { return x.side(k, true, false).prob() }

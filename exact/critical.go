@@ -21,12 +21,20 @@ type law interface {
 
 // logMass is log P(X = k); of a count that holds most of the probability, through the others.
 func logMass[L law](x L, k int64) float64 {
-	p := x.point(k)
-	l := p.log()
-	if l > -0.5 && p.root != 1 {
+	l := x.point(k).log()
+	if l > -0.5 {
 		return log1pOf(-(x.side(k-1, false, false).prob() + x.side(k+1, true, false).prob()))
 	}
 	return l
+}
+
+// logMassByEnds is logMass of a law whose probability at an end of its support is an exponential
+// as it stands.
+func logMassByEnds[L law](x L, k int64) float64 {
+	if p := x.point(k); p.root == 1 {
+		return p.log()
+	}
+	return logMass(x, k)
 }
 
 // atLimit is the relative room within which a size counts as at the limit: rounding must not

@@ -51,12 +51,12 @@ func CrossingLower(leaving, shared, entering Counting, before, now int64) float6
 // is rate P(Pois(rate span) = k-1). NaN outside the domain: k >= 1, span >= 0,
 // rates finite and not negative.
 func ArrivalCrossings(rates []float64, span float64, k int64) float64 {
-	all := 0.0
+	all := dd{}
 	for _, r := range rates {
 		if !(r >= 0) || math.IsInf(r, 0) {
 			return math.NaN()
 		}
-		all += r
+		all = all.addFloat(r)
 	}
 	if k < 1 || !(span >= 0) || math.IsInf(span, 0) {
 		return math.NaN()
@@ -64,7 +64,7 @@ func ArrivalCrossings(rates []float64, span float64, k int64) float64 {
 	if len(rates) == 1 {
 		return rates[0] * Poisson{Rate: rates[0], Exposure: span}.PMF(k-1)
 	}
-	held := compound(rates, all, span, k)
+	held := compound(rates, all.mulFloat(span), span, k)
 	sum := 0.0
 	for j, rate := range rates {
 		for n := max(0, k-int64(j)-1); n < k; n++ {
@@ -74,17 +74,47 @@ func ArrivalCrossings(rates []float64, span float64, k int64) float64 {
 	return sum
 }
 
-// compound returns the probabilities of 0 to n-1 events in a span, by Panjer's
-// recursion (1981, ASTIN Bulletin 12:22-26): all terms are positive.
-func compound(rates []float64, all, span float64, n int64) []float64 {
+// CompoundPoisson returns the probabilities of 0 to n-1 events where messages of j
+// events, independent of each other, have the mean means[j-1]; nil outside the
+// domain: n >= 1, means finite and not negative.
+func CompoundPoisson(means []float64, n int64) []float64 {
+	all := dd{}
+	for _, m := range means {
+		if !(m >= 0) || math.IsInf(m, 0) {
+			return nil
+		}
+		all = all.addFloat(m)
+	}
+	if n < 1 {
+		return nil
+	}
+	return compound(means, all, 1, n)
+}
+
+// compound returns the probabilities of 0 to n-1 events in a span in which mean
+// messages are expected, by Panjer's recursion (1981, ASTIN Bulletin 12:22-26): all
+// terms are positive. It runs on what the probabilities are over that of none,
+// brought down by 2^512 whenever they get large, since exp(-mean) itself underflows.
+func compound(rates []float64, mean dd, span float64, n int64) []float64 {
+	const step = 512
 	p := make([]float64, n)
-	p[0] = math.Exp(-float64(all * span))
+	p[0] = 1
+	scale := 0.0
 	for i := int64(1); i < n; i++ {
 		sum := 0.0
 		for j := int64(1); j <= min(i, int64(len(rates))); j++ {
 			sum += float64(float64(j) * rates[j-1] * p[i-j])
 		}
-		p[i] = float64(sum*span) / float64(i)
+		if p[i] = float64(sum*span) / float64(i); p[i] > 0x1p512 {
+			for j := range p[:i+1] {
+				p[j] *= 0x1p-512
+			}
+			scale += step
+		}
+	}
+	e := twoSum(float64(scale*ln2Head), float64(scale*ln2Mid)).add(mean.neg())
+	for i := range p {
+		p[i] *= expTwo(e.hi, e.lo)
 	}
 	return p
 }

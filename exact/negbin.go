@@ -270,7 +270,7 @@ func expReach(c, s float64) float64 {
 func (x NegativeBinomial) PMF(k int64) float64 { return x.point(k).value() }
 
 // LogPMF is the natural logarithm of P(X = k), -Inf outside the support.
-func (x NegativeBinomial) LogPMF(k int64) float64 { return logMass(x, k) }
+func (x NegativeBinomial) LogPMF(k int64) float64 { return logMassByEnds(x, k) }
 
 // Upper is P(X >= k).
 func (x NegativeBinomial) Upper(k int64) float64 { return x.side(k, true, false).prob() }

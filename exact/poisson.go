@@ -87,7 +87,7 @@ func outside(all bool) side {
 func (x Poisson) PMF(k int64) float64 { return x.point(k).value() }
 
 // LogPMF is the natural logarithm of P(X = k), -Inf outside the support.
-func (x Poisson) LogPMF(k int64) float64 { return logMass(x, k) }
+func (x Poisson) LogPMF(k int64) float64 { return logMassByEnds(x, k) }
 
 // Upper is P(X >= k).
 func (x Poisson) Upper(k int64) float64 { return x.side(k, true, false).prob() }

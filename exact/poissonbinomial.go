@@ -37,8 +37,12 @@ func (a scaled) add(b scaled) scaled {
 }
 
 func (a scaled) mul(p float64) scaled {
-	if a.m *= p; a.m < 0x1p-256 && a.m != 0 {
-		return scaled{a.m * 0x1p512, a.e - 1}
+	if p < 0x1p-256 { // the product may lie under what a float64 holds
+		p *= 0x1p512
+		a.e--
+	}
+	for a.m *= p; a.m < 0x1p-256 && a.m != 0; a.e-- {
+		a.m *= 0x1p512
 	}
 	return a
 }

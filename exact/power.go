@@ -91,6 +91,9 @@ func NeededExposure(rate, ratio, limit, power float64) (plan Plan, ok bool) {
 	}
 	k := outward(first-1, most, float64(first), enough)
 	l, m := span(k)
+	if math.IsInf(l, 0) {
+		return Plan{}, false
+	}
 	return Plan{k, l, m}, true
 }
 
@@ -102,20 +105,26 @@ func NeededTrials(p0, p1, limit, power float64) (plan Plan, ok bool) {
 	if !(p0 > 0 && p0 < 1 && p1 >= 0 && p1 <= 1) || p0 == p1 || !(limit > 0 && limit < 1) || !(power > 0 && power < 1) {
 		return Plan{}, false
 	}
-	upper := p1 > p0
-	least, most := int64(1), int64(1) // trials: power reached, size kept
-	for k := int64(0); k < 100000; k++ {
-		if upper && k == 0 {
-			continue
-		}
-		if upper {
-			least = trialsUntil(least, func(n int64) bool { return NewBinomial(n, p1).Upper(k) >= power })
-			most = trialsUntil(most, func(n int64) bool { return NewBinomial(n, p0).Upper(k) > limit*atLimit }) - 1
-		} else {
-			least = trialsUntil(least, func(n int64) bool { return NewBinomial(n, p0).Lower(k) <= limit*atLimit })
-			most = trialsUntil(most, func(n int64) bool { return NewBinomial(n, p1).Lower(k) < power }) - 1
-		}
-		if least < 0 {
+	need := trialsNeeded{p0, p1, limit, power, p1 > p0}
+	k := int64(0)
+	if need.upper {
+		k = 1
+	}
+	const beyond = 100000
+	// In real trials a critical count does once and for all from some count on; in whole ones it
+	// can miss by one trial at either end there, and by no more. So none does before the first that
+	// does to within one, following one that does not.
+	nearly := func(k int64) bool {
+		least, most := need.span(k, 1, 1)
+		return least <= most+1 || most < 0 || least < 0 // out of reach, and so is all after it
+	}
+	if !nearly(beyond - 1) {
+		return Plan{}, false
+	}
+	k = outward(k-1, beyond-1, float64(k), nearly)
+	least, most := int64(1), int64(1)
+	for ; k < beyond; k++ {
+		if least, most = need.span(k, least, most); least < 0 {
 			return Plan{}, false
 		}
 		if least <= most || most < 0 {
@@ -128,6 +137,23 @@ func NeededTrials(p0, p1, limit, power float64) (plan Plan, ok bool) {
 		least, most = max(least, 1), max(most, 1)
 	}
 	return Plan{}, false
+}
+
+// trialsNeeded is what NeededTrials is asked.
+type trialsNeeded struct {
+	p0, p1, limit, power float64
+	upper                bool
+}
+
+// span is the least and the largest number of trials at which a critical count of k does, the one
+// sought from least, the other from most on: negative where there is none.
+func (x trialsNeeded) span(k, least, most int64) (int64, int64) {
+	if x.upper {
+		least = trialsUntil(least, func(n int64) bool { return NewBinomial(n, x.p1).Upper(k) >= x.power })
+		return least, trialsUntil(most, func(n int64) bool { return NewBinomial(n, x.p0).Upper(k) > x.limit*atLimit }) - 1
+	}
+	least = trialsUntil(least, func(n int64) bool { return NewBinomial(n, x.p0).Lower(k) <= x.limit*atLimit })
+	return least, trialsUntil(most, func(n int64) bool { return NewBinomial(n, x.p1).Lower(k) < x.power }) - 1
 }
 
 // trialsUntil is the first n >= from for which done holds (done is monotone), or -2 where none

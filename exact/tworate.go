@@ -55,8 +55,8 @@ func (x TwoRate) support() (lo, hi int64) { return 0, maxCount - x.RefEvents }
 
 // RatioBounds are the exact two-sided bounds at level 1-alpha of the ratio of the rate behind n
 // events in Exposure to the reference's, from Clopper and Pearson's on q; Margin plays no part.
-// n = 0 gives 0 below, RefEvents = 0 gives +Inf above. NaN where both are 0 or the values are
-// out of their domain.
+// n = 0 gives 0 below, RefEvents = 0 gives +Inf above: no events at all say nothing of the ratio.
+// NaN where the values are out of their domain.
 func (x TwoRate) RatioBounds(n int64, alpha float64) (lower, upper float64) {
 	return x.ratioBounds(n, alpha, false)
 }
@@ -67,8 +67,11 @@ func (x TwoRate) RatioBoundsMid(n int64, alpha float64) (lower, upper float64) {
 }
 
 func (x TwoRate) ratioBounds(n int64, alpha float64, mid bool) (lower, upper float64) {
-	if !x.valid() || n < 0 || n > maxCount-x.RefEvents || n+x.RefEvents == 0 || !(alpha > 0 && alpha <= 1) {
+	if !x.valid() || n < 0 || n > maxCount-x.RefEvents || !(alpha > 0 && alpha <= 1) {
 		return math.NaN(), math.NaN()
+	}
+	if n+x.RefEvents == 0 {
+		return 0, math.Inf(1)
 	}
 	r := x.RefExposure / x.Exposure
 	p, q := binomialLower(n, n+x.RefEvents, alpha/2, mid)

@@ -41,9 +41,13 @@ func (u urn) up(x float64) (sum, first float64) {
 	const chunk = 128 // terms between fresh starts: a longer product or sum gathers rounding
 	d := u.black - u.draws
 	t, part, partFirst := 1.0, 1.0, 0.0
+	var from point
 	for j := x; j < hi && t > 0x1p-56*(sum+part); j++ {
 		if n := j - x; n > 0 && math.Mod(n, chunk) == 0 {
-			t = u.point(j).over(u.point(x)).value()
+			if n == chunk {
+				from = u.point(x)
+			}
+			t = u.point(j).over(from).value()
 			sum, part = sum+part, 0
 			first, partFirst = first+partFirst, 0
 		}
@@ -147,6 +151,19 @@ func (u urn) mass(x float64) point {
 	return p
 }
 
+// logRatio is the logarithm of the probability of x over that of y: the total falls out.
+func (u urn) logRatio(x, y float64) float64 {
+	lo, hi := u.support()
+	p, q := impossible.point, impossible.point
+	if x >= lo && x <= hi {
+		p = u.point(x)
+	}
+	if y >= lo && y <= hi {
+		q = u.point(y)
+	}
+	return p.minus(q)
+}
+
 func (p point) over(q point) point {
 	d := dd{p.hi, p.lo}.add(dd{-q.hi, -q.lo})
 	return point{d.hi, d.lo, p.root / q.root}
@@ -165,10 +182,19 @@ func (u urn) lowerOdds(x, a float64, mid bool) float64 {
 	left, right := math.Inf(-1), math.Inf(1)
 	for range 200 {
 		u.odds = dd{expTwo(l, 0), 0}
-		s := u.side(x, true, mid)
-		f := s.logOver(a)
+		mode, all, mean := u.total()
 		sum, first := u.up(x)
-		_, _, mean := u.total()
+		s := side{ratio: sum}
+		if x > mode { // as side has it, with the sums at hand
+			if mid {
+				s.ratio -= 0.5
+			}
+			s.ratio /= all
+			s.point = u.point(x).over(u.point(mode))
+		} else {
+			s = u.side(x, true, mid)
+		}
+		f := s.logOver(a)
 		slope := x + first/sum - mean
 		if mid {
 			slope = x + first/(sum-0.5) - mean

@@ -112,26 +112,12 @@ type held struct {
 	below  []float64
 }
 
-// newHeld is that law where messages of j events have the mean means[j-1]
-// (Panjer 1981, ASTIN Bulletin 12:22-26).
+// newHeld is that law where messages of j events have the mean means[j-1].
 func newHeld(means []float64, k int64) held {
 	if len(means) == 1 {
 		return held{single: exact.Poisson{Rate: means[0], Exposure: 1}}
 	}
-	all := 0.0
-	for _, m := range means {
-		all += m
-	}
-	p := make([]float64, k)
-	p[0] = exact.Poisson{Rate: all, Exposure: 1}.PMF(0)
-	for i := int64(1); i < k; i++ {
-		sum := 0.0
-		for j := int64(1); j <= min(i, int64(len(means))); j++ {
-			sum += float64(float64(float64(j)*means[j-1]) * p[i-j])
-		}
-		p[i] = sum / float64(i)
-	}
-	return held{below: p}
+	return held{below: exact.CompoundPoisson(means, k)}
 }
 
 // atLeast is the chance of n events or more, for n up to k.

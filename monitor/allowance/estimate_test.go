@@ -126,11 +126,13 @@ func TestAveragedProportion(t *testing.T) {
 // any span.
 func TestClusters(t *testing.T) {
 	x := part{plan: &Plan{Law: Law{Spread: 1.7}}}
-	const k = 9
-	for _, mean := range []float64{0.2, 3} {
-		got := newHeld(x.messages(mean, k), k).atLeast(k)
-		if want := exact.NewNegativeBinomial(mean, 1, 1.7).Upper(k); math.Abs(got-want) > 1e-12 {
-			t.Errorf("mean %v: %v, negative binomial %v", mean, got, want)
+	for _, v := range []struct {
+		mean float64
+		k    int64
+	}{{0.2, 9}, {3, 9}, {2000, 2100}} { // exp(-2000) underflows
+		got := newHeld(x.messages(v.mean, v.k), v.k).atLeast(v.k)
+		if want := exact.NewNegativeBinomial(v.mean, 1, 1.7).Upper(v.k); math.Abs(got-want) > 1e-12 {
+			t.Errorf("mean %v: %v, negative binomial %v", v.mean, got, want)
 		}
 	}
 }
