@@ -63,12 +63,16 @@ func (q question) check() error {
 		return errors.New("exposure (or trials) is missing: say in how much the events happened")
 	case !(q.size > 0) || math.IsInf(q.size, 0):
 		return fmt.Errorf("%s is %v: give a number above 0", q.sizeName(), q.size)
+	case !reachable(q.size):
+		return fmt.Errorf("%s is %v: give a number from 1e-100 to 1e100", q.sizeName(), q.size)
 	case q.proportion && (q.size != math.Floor(q.size) || q.size > most):
 		return fmt.Errorf("trials are %v: give a whole number up to %d", q.size, int64(most))
 	case q.proportion && float64(q.events) > q.size:
 		return fmt.Errorf("events are %d in %v trials: there can't be more events than trials", q.events, q.size)
 	case !(q.margin >= 1) || math.IsInf(q.margin, 0):
 		return fmt.Errorf("margin is %v: give a ratio of 1 (none) or more; downwards it is one over it", q.margin)
+	case !reachable(q.margin):
+		return fmt.Errorf("margin is %v: give a ratio up to 1e100", q.margin)
 	case q.hasBaseline && q.hasReference:
 		return errors.New("there is a known baseline and a reference: give one of the two")
 	case q.hasReference != q.hasRefSize:
@@ -80,8 +84,15 @@ func (q question) check() error {
 	if q.hasBaseline && (!(q.baseline > 0) || math.IsInf(q.baseline, 0)) {
 		return fmt.Errorf("baseline is %v: give a rate above 0", q.baseline)
 	}
+	if q.hasBaseline && !reachable(q.baseline) {
+		return fmt.Errorf("baseline is %v: give a rate from 1e-100 to 1e100 per unit", q.baseline)
+	}
 	return nil
 }
+
+// reachable reports whether products of three such numbers are neither 0 nor infinite: an expected
+// count of 0 or of more than can be would be told as an answer.
+func reachable(v float64) bool { return v >= 1e-100 && v <= 1e100 }
 
 func (q question) checkReference() error {
 	const most = 1 << 42
@@ -92,6 +103,8 @@ func (q question) checkReference() error {
 		return fmt.Errorf("reference events are %d: give a whole number from 0 to %d", q.refEvents, int64(most))
 	case !(q.reference > 0) || math.IsInf(q.reference, 0):
 		return fmt.Errorf("the reference's %s is %v: give a number above 0", q.sizeName(), q.reference)
+	case !reachable(q.reference):
+		return fmt.Errorf("the reference's %s is %v: give a number from 1e-100 to 1e100", q.sizeName(), q.reference)
 	case q.proportion && (q.reference != math.Floor(q.reference) || q.reference > most):
 		return fmt.Errorf("reference trials are %v: give a whole number up to %d", q.reference, int64(most))
 	case q.proportion && float64(q.refEvents) > q.reference:
