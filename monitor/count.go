@@ -174,11 +174,12 @@ func (e *Engine) countPools(ix *indicator, ep *epoch, boundary int64) []poolCoun
 			}
 			key := poolKey{b, rule}
 			id := ix.poolID(ep.cfg, key)
-			if all[id] = true; ix.agreed.Pools[id] != nil && ix.agreed.Pools[id].Period == period {
+			all[id] = true
+			if p := ix.agreed.Pools[id]; p != nil && p.Period == period && p.serves() {
 				continue
 			}
 			wanted[key] = len(list)
-			list = append(list, poolCount{ID: id, Period: period, Index: new(big.Int), Strata: make([]Quantity, strataOf(b))})
+			list = append(list, poolCount{ID: id, Period: period, Enough: b.MinEvents, Index: new(big.Int), Strata: make([]Quantity, strataOf(b))})
 		}
 	}
 	ix.forgetPools(all)
@@ -261,7 +262,7 @@ func (e *Engine) takePool(ix *indicator, s *series, ep *epoch, b *config.Baselin
 	if p == nil || len(p.Strata) != strataOf(b) {
 		return
 	}
-	if n := len(s.references); n > 0 && s.references[n-1].of == id && s.references[n-1].period == p.Period {
+	if n := len(s.references); n > 0 && s.references[n-1].of == id && s.references[n-1].end == p.Counted {
 		return
 	}
 	r := p.without(s, b, ix.cfg)

@@ -53,6 +53,7 @@ func (s *Summary) encodeCount() []byte {
 	for i := range x.Pools {
 		p := &x.Pools[i]
 		b = binary.AppendVarint(binary.AppendVarint(b, p.ID), p.Period)
+		b = binary.AppendUvarint(b, uint64(p.Enough))
 		b = binary.AppendUvarint(b, uint64(p.Units))
 		b = binary.AppendUvarint(b, uint64(p.Events))
 		b = binary.AppendUvarint(b, uint64(p.LeftOut))
@@ -95,7 +96,7 @@ func (r *reader) count(bits byte) *count {
 	kinds := mostKinds
 	for range r.length() {
 		p := poolCount{
-			ID: r.int(), Period: r.int(), Units: r.number(), Events: r.number(), LeftOut: r.number(),
+			ID: r.int(), Period: r.int(), Enough: r.number(), Units: r.number(), Events: r.number(), LeftOut: r.number(),
 			Index: r.big(), Strata: r.quantities(kinds),
 		}
 		kinds -= len(p.Strata)

@@ -118,7 +118,7 @@ func (k *counting) bring(in *counted, boundary int64) {
 	}
 	for id, p := range pools {
 		old := in.Pools[id]
-		if tellers[id]+zeros < len(k.told()) || p == nil || p.Units == 0 || old != nil && old.Period == p.Period {
+		if tellers[id]+zeros < len(k.told()) || p == nil || p.Units == 0 || old != nil && old.Period == p.Period && old.serves() {
 			continue
 		}
 		p.Counted = boundary
@@ -133,7 +133,7 @@ func (p *poolCount) with(more *poolCount) *poolCount {
 		x.Index, x.Strata = new(big.Int).Set(more.Index), slices.Clone(more.Strata)
 		return &x
 	}
-	if p.Period != more.Period || len(p.Strata) != len(more.Strata) {
+	if p.Period != more.Period || p.Enough != more.Enough || len(p.Strata) != len(more.Strata) {
 		p.Units = 0 // it can't be: it is no pool
 		return p
 	}

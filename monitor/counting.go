@@ -70,6 +70,8 @@ type poolCount struct {
 	ID      int64 `json:"id"`
 	Period  int64 `json:"period"`
 	Counted int64 `json:"counted,omitempty"`
+	// Enough is how many events it must hold.
+	Enough  int64 `json:"enough"`
 	Units   int64 `json:"units"`
 	Events  int64 `json:"events"`
 	LeftOut int64 `json:"left_out,omitempty"`
@@ -78,6 +80,10 @@ type poolCount struct {
 	// Strata is the exposure by kind of slot, see cellOf.
 	Strata []Quantity `json:"strata"`
 }
+
+// serves reports whether the pool is good for its period: as long as it holds too few
+// events, or a single series, it is counted anew each day.
+func (p *poolCount) serves() bool { return p.Units > 1 && p.Events >= p.Enough }
 
 // ofSums is the lane of gathered sums.
 func (k *counting) ofSums() *countLane { return &k.lanes[len(k.lanes)-1] }

@@ -133,17 +133,23 @@ func TestPeersOfAllPartitions(t *testing.T) {
 	for _, r := range c.records() {
 		ev := r.Opening
 		begin := ev.To // the boundary of the look
-		monday := begin.AddDate(0, 0, -(int(begin.Weekday())+6)%7)
-		counted := monday.AddDate(0, 0, -1)
-		if first := marchDay(2); counted.Before(first) { // nothing had begun before
-			counted = first
+		sum := func(counted time.Time, but string) (events int64, exposure uint64, wards map[string]bool) {
+			wards = map[string]bool{}
+			for _, o := range all {
+				if day := o.Start.Time(); o.Series != but && !day.Before(counted.AddDate(0, 0, -10)) && day.Before(counted) {
+					events, exposure, wards[o.Series] = events+o.Events, exposure+o.Exposure.Coef, true
+				}
+			}
+			return events, exposure, wards
 		}
-		from, events, exposure, wards := counted.AddDate(0, 0, -10), int64(0), uint64(0), map[string]bool{}
-		for _, o := range all {
-			if day := o.Start.Time(); o.Series != r.Series && !day.Before(from) && day.Before(counted) {
-				events, exposure, wards[o.Series] = events+o.Events, exposure+o.Exposure.Coef, true
+		counted := begin.AddDate(0, 0, -(int(begin.Weekday())+6)%7-1) // the day before Monday
+		for ; counted.Before(begin.AddDate(0, 0, -1)); counted = counted.AddDate(0, 0, 1) {
+			if events, _, wards := sum(counted, ""); events > 0 && len(wards) > 1 {
+				break // it serves for the week
 			}
 		}
+		from := counted.AddDate(0, 0, -10)
+		events, exposure, wards := sum(counted, r.Series)
 		b := ev.Baseline
 		if b.Events != events || b.Exposure != fmt.Sprint(exposure) || b.Peers != int64(len(wards)) || !b.To.Equal(counted) || !b.From.Equal(from) {
 			t.Errorf("%s at %s: %d in %s, %d peers, %s to %s; want %d in %d, %d, %s to %s", r.Series, begin.Format(time.DateOnly),

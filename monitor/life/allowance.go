@@ -16,7 +16,8 @@ type Allowance struct {
 	Here float64 `json:"false_alerts_a_year"`
 	// Series have limits under the same indicator, this one included, and All
 	// is the sum of what is predicted for them; both are 0 where not all of
-	// them are kept in the same place.
+	// them are kept in the same place. Where all share an allowance and may lie
+	// in several partitions both are as was counted the day before.
 	Series int64   `json:"series,omitempty"`
 	All    float64 `json:"false_alerts_a_year_of_all,omitempty"`
 }
