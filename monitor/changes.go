@@ -108,6 +108,9 @@ type SettingChange struct {
 // needs to go on as if nothing had happened.
 type Snapshot struct {
 	Position uint64
+	// Renumbered says that another stream was accepted since the last Drain: what
+	// the header says of positions beyond Position is of the old one.
+	Renumbered bool
 	Header   []byte
 	// Series holds, by number, the last whole state (nil if only patches
 	// exist) and the patches that were handed over by later Drains, oldest first,

@@ -33,6 +33,9 @@ func Restore(p Partition, snap *Snapshot, record func(id string) (life.Record, e
 	if err := e.restoreInbounds(&h, snap.Waiting); err != nil {
 		return nil, err
 	}
+	if snap.Renumbered {
+		h.Part, h.Ahead = 0, 0
+	}
 	if err := e.restoreCounts(&h); err != nil {
 		return nil, err
 	}

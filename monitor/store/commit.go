@@ -32,6 +32,7 @@ func (s *Store) Commit(changes monitor.Changes, mark Mark) error {
 			return err
 		}
 		h.Commit++
+		h.Renumbered = h.Renumbered && changes.Header == nil
 		if mark.Position != 0 {
 			if h.Stored == monitor.Beginning {
 				h.FirstStored = mark.Stored

@@ -19,8 +19,10 @@ type head struct {
 	Stored      monitor.Instant `json:"stored"`
 	FirstStored monitor.Instant `json:"first_stored"`
 	// Epoch of the owner; Accepted counts the streams accepted in place of another.
-	Epoch    uint64 `json:"epoch"`
-	Accepted uint64 `json:"accepted"`
+	// Renumbered says that nothing was committed since the last one was.
+	Epoch      uint64 `json:"epoch"`
+	Accepted   uint64 `json:"accepted"`
+	Renumbered bool   `json:"renumbered,omitempty"`
 	// Cycle is the round of the checkpoint, Series the number of series,
 	// States how many have been written whole, JournalFirst the first commit
 	// kept in the journal.
@@ -181,6 +183,7 @@ func (s *Store) AcceptStream(id StreamIdentity, position uint64) error {
 		}
 		h.Position = position
 		h.Accepted++
+		h.Renumbered = true
 		return putStream(tx, id)
 	})
 }

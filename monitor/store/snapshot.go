@@ -20,7 +20,7 @@ func (s *Store) Snapshot() (monitor.Snapshot, error) {
 		if err != nil {
 			return err
 		}
-		snap.Position = h.Position
+		snap.Position, snap.Renumbered = h.Position, h.Renumbered
 		if snap.Header, err = readHeader(tx, &h); err != nil {
 			return err
 		}

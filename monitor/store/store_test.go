@@ -299,7 +299,14 @@ func TestStreamIdentity(t *testing.T) {
 	if marks, err := s.Marks(); err != nil || len(marks) != 0 {
 		t.Errorf("marks of the old stream stayed: %v, %v", marks, err)
 	}
-	mustCommit(t, s, monitor.Changes{Position: 5}, Mark{Position: 5})
+	for _, want := range []bool{true, false} { // what the header says is of the old stream until the next one is written
+		if snap, err := s.Snapshot(); err != nil || snap.Renumbered != want {
+			t.Errorf("renumbered %t, want %t: %v", snap.Renumbered, want, err)
+		}
+		if want {
+			mustCommit(t, s, monitor.Changes{Position: 5, Header: []byte("of the new stream")}, Mark{Position: 5})
+		}
+	}
 }
 
 func TestCopyIsAStore(t *testing.T) {
