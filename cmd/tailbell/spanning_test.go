@@ -220,3 +220,33 @@ func TestSpanning(t *testing.T) {
 		})
 	}
 }
+
+// TestSpanningIsDivided divides a deployment whose series are judged together, once
+// in history time and once when it has gone live: no record changes by it.
+func TestSpanningIsDivided(t *testing.T) {
+	for mode, text := range map[string]string{"history": historyMode, "live": ""} {
+		t.Run(mode, func(t *testing.T) {
+			first := time.Date(2025, 3, 1, 0, 0, 0, 0, time.UTC)
+			if mode == "live" {
+				first = now().UTC().AddDate(0, 0, -120)
+			}
+			path, setup := spanning(t, 2, text)
+			feedFile(t, path, spanningHistory(t, first))
+			before := runSpanning(t, path, setup, "")
+			out := says(t, 0, []string{"2 partitions into 4", fmt.Sprintf("Alerts: %d before, %[1]d after; %[1]d equal to the byte", len(before))},
+				"partitions", "divide", "--into", "4", "--config", path)
+			t.Log(out)
+			file, err := os.ReadFile(path)
+			if err != nil {
+				t.Fatal(err)
+			}
+			if err := os.WriteFile(path, []byte(strings.Replace(string(file), "partitions = 2", "partitions = 4", 1)), 0o600); err != nil {
+				t.Fatal(err)
+			}
+			if setup, err = config.Load(path); err != nil {
+				t.Fatal(err)
+			}
+			sameAlerts(t, "divided", before, runSpanning(t, path, setup, ""))
+		})
+	}
+}
