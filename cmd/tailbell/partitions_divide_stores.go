@@ -187,7 +187,7 @@ func (v *division) tellOld(ctx context.Context, rows []store.ToldRow) error {
 	for i := range rows {
 		messages[i] = summaryOf(&rows[i])
 	}
-	_, err := v.bus.PublishBatch(ctx, messages)
+	_, err := v.bus.PublishInOrder(ctx, messages)
 	return err
 }
 

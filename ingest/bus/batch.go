@@ -28,13 +28,26 @@ var atOnce = jetstreamext.BatchFlowControl{AckFirst: false}
 // Like Publish it is at least once, and tries again until ctx ends. It is
 // meant for observations: acts and settings get no message id here.
 func (b *Bus) PublishBatch(ctx context.Context, msgs []Outgoing) (int, error) {
+	return b.publishChunks(ctx, msgs, b.publishWindow)
+}
+
+// PublishInOrder stores many messages so that none comes before the ones above it in
+// msgs: what one partition tells another must not overtake itself. It is as
+// PublishBatch otherwise, but slow where the stream takes no atomic batches.
+func (b *Bus) PublishInOrder(ctx context.Context, msgs []Outgoing) (int, error) {
+	return b.publishChunks(ctx, msgs, b.publishSingly)
+}
+
+// publishChunks stores messages, each chunk of them as one atomic batch, or where
+// that can't be in the way that is given.
+func (b *Bus) publishChunks(ctx context.Context, msgs []Outgoing, otherwise publishing) (int, error) {
 	done := 0
 	for done < len(msgs) {
 		chunk, err := b.chunk(msgs[done:])
 		if err != nil && len(chunk) == 0 {
 			return done, fmt.Errorf("message %d of the batch: %w", done+1, err)
 		}
-		stored, err := b.publishChunk(ctx, chunk)
+		stored, err := b.publishChunk(ctx, chunk, otherwise)
 		done += stored
 		if err != nil {
 			return done, fmt.Errorf("publishing a batch: %w", err)
@@ -42,6 +55,9 @@ func (b *Bus) PublishBatch(ctx context.Context, msgs []Outgoing) (int, error) {
 	}
 	return done, nil
 }
+
+// publishing stores messages and returns how many from the start it did.
+type publishing func(ctx context.Context, chunk []*nats.Msg) (int, error)
 
 // chunk takes as many messages as fit into one batch of the bus. If the first
 // is at fault it returns none and the error.
@@ -63,7 +79,7 @@ func (b *Bus) chunk(msgs []Outgoing) ([]*nats.Msg, error) {
 }
 
 // publishChunk stores a chunk, as one atomic batch if the stream takes those.
-func (b *Bus) publishChunk(ctx context.Context, chunk []*nats.Msg) (int, error) {
+func (b *Bus) publishChunk(ctx context.Context, chunk []*nats.Msg, otherwise publishing) (int, error) {
 	if len(chunk) == 1 {
 		if _, err := b.publish(ctx, chunk[0]); err != nil {
 			return 0, err
@@ -71,7 +87,7 @@ func (b *Bus) publishChunk(ctx context.Context, chunk []*nats.Msg) (int, error) 
 		return 1, nil
 	}
 	if !b.atomic {
-		return b.publishWindow(ctx, chunk)
+		return otherwise(ctx, chunk)
 	}
 	wait := newBackoff()
 	for {
@@ -83,7 +99,7 @@ func (b *Bus) publishChunk(ctx context.Context, chunk []*nats.Msg) (int, error) 
 			return len(chunk), nil
 		}
 		if codeOf(err) == codeBatchOff {
-			return b.publishWindow(ctx, plain(chunk))
+			return otherwise(ctx, plain(chunk))
 		}
 		if err := b.again(ctx, wait, b.deniedSince(before, err)); err != nil {
 			return 0, err
@@ -100,6 +116,16 @@ func plain(chunk []*nats.Msg) []*nats.Msg {
 		msg.Header.Del(jetstreamext.BatchCommitHeader)
 	}
 	return chunk
+}
+
+// publishSingly stores one message after the other.
+func (b *Bus) publishSingly(ctx context.Context, chunk []*nats.Msg) (int, error) {
+	for i, msg := range chunk {
+		if _, err := b.publish(ctx, msg); err != nil {
+			return i, err
+		}
+	}
+	return len(chunk), nil
 }
 
 // publishWindow sends all messages of a chunk and then waits for their

@@ -249,3 +249,28 @@ func TestAlertStepsAreStoredOnce(t *testing.T) {
 		t.Error(diff)
 	}
 }
+
+// TestPublishInOrder stores what one partition tells another, with atomic batches and
+// without.
+func TestPublishInOrder(t *testing.T) {
+	for _, atomic := range []bool{true, false} {
+		b := open(t, bustest.Setup(t))
+		b.SetAtomic(atomic)
+		var msgs []bus.Outgoing
+		for i := range 30 {
+			msgs = append(msgs, bus.Outgoing{Kind: bus.Summary, Data: fmt.Appendf(nil, "told %d", i)})
+		}
+		if n, err := b.PublishInOrder(deadline(t), msgs); err != nil || n != len(msgs) {
+			t.Fatalf("atomic batches %t: %d stored, %v", atomic, n, err)
+		}
+		for i, text := range readSummaries(t, b, 0, 0) {
+			if want := fmt.Sprintf("%d told %d", i+1, i); text != want {
+				t.Errorf("atomic batches %t: %q, want %q", atomic, text, want)
+			}
+		}
+		if n, err := b.PublishInOrder(deadline(t), []bus.Outgoing{{Partition: 7}}); n != 0 || !errors.Is(err, bus.ErrNoPartition) {
+			t.Errorf("%d stored in no partition, %v", n, err)
+		}
+		shut(t, b)
+	}
+}
