@@ -167,6 +167,7 @@ func TestLimitsUsage(t *testing.T) {
 		"--reference-events goes with": {"--reference-events", "3", "--exposure", "1", "--window", "28d", "--p-limit", "0.01"},
 		"must end in .svg or .png":     append(aWard, "--p-limit", "0.01", "--figure", "x.pdf"),
 		"the exposure of a slot is -2": {"--baseline", "1", "--exposure", "-2", "--window", "28d", "--p-limit", "0.01"},
+		"1e+30 events expected a slot": {"--baseline", "1e15", "--exposure", "1e15", "--window", "28d", "--p-limit", "0.01"},
 		"a proportion of 1.5":          {"--baseline", "1.5", "--trials", "5", "--window", "28d", "--p-limit", "0.01"},
 		`--tails has "both"`:           append(aWard, "--p-limit", "0.01", "--tails", "both"),
 		"arrival looks watch for more": append(aWard, "--p-limit", "0.01", "--tails", "lower", "--looks", "arrival"),

@@ -103,11 +103,16 @@ func positive(x float64) bool { return x > 0 && !math.IsInf(x, 0) }
 // mostVary is the greatest Vary.
 const mostVary = 1 << 20
 
+// mostEvents is how many may be expected a slot: as many as one observation tells.
+const mostEvents = 1 << 42
+
 // Check says what is wrong with a plan.
 func (p *Plan) Check() error {
 	switch {
 	case !positive(p.Exposure):
 		return fault("the exposure of a slot is %v, not above 0", p.Exposure)
+	case !p.Law.Proportion && p.Law.Rate*p.Exposure > mostEvents:
+		return fault("%v events expected a slot are more than can be counted", p.Law.Rate*p.Exposure)
 	case p.Law.Proportion && (p.Exposure != math.Trunc(p.Exposure) || p.Exposure > 1<<40):
 		return fault("%v trials a slot are not a whole number", p.Exposure)
 	case !(p.Least >= 0 && p.Least <= 1):
