@@ -117,3 +117,25 @@ func BenchmarkBareCommit(b *testing.B) {
 		}
 	}
 }
+
+// BenchmarkArchive commits slots that left memory, all of a few days.
+func BenchmarkArchive(b *testing.B) {
+	for _, slots := range []int{1, 100, 10_000} {
+		b.Run(fmt.Sprint(slots), func(b *testing.B) {
+			s, c := benchStore(b, 1000)
+			data := make([]byte, 110)
+			b.ReportAllocs()
+			for b.Loop() {
+				c.Position++
+				c.Archived = c.Archived[:0]
+				day := int64(c.Position/20) * 24 * 60 * 60 * 1_000_000
+				for i := range slots {
+					c.Archived = append(c.Archived, monitor.ArchivedSlot{Number: uint32(i % 1000), Start: monitor.Instant(day + int64(i%3)*8*60*60*1_000_000), Data: data})
+				}
+				if err := s.Commit(*c, Mark{Position: c.Position}); err != nil {
+					b.Fatal(err)
+				}
+			}
+		})
+	}
+}
