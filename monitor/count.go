@@ -76,18 +76,22 @@ func (e *Engine) countAll(ix *indicator, ep *epoch, boundary int64) {
 		return // a start in between
 	}
 	x := &count{Sums: sums, Predicted: new(big.Int)}
+	alike := map[*solution]int64{}
 	for _, m := range ix.series {
 		if m.birth < boundary {
 			x.Series++
-			if m.own == nil {
-				m.own = &own{since: boundary}
+			if m.own == nil || m.own.since == maxBoundary {
+				m.attended().since = boundary
 				e.touch(m)
 			}
 		}
 		if len(m.limits) > 0 && m.limits[0].from <= boundary {
 			x.Limited++
-			x.Predicted.Add(x.Predicted, fixed(m.limitsOf(boundary).here))
+			alike[m.limitsOf(boundary).solution]++
 		}
+	}
+	for l, n := range alike { // in any order: the sums are exact
+		x.Predicted.Add(x.Predicted, new(big.Int).Mul(fixed(l.here), big.NewInt(n)))
 	}
 	if !sums {
 		x.Pools = e.countPools(ix, ep, boundary)
@@ -220,15 +224,21 @@ func (p *poolCount) count(r *reference) {
 // are in force, or may come into it.
 func (e *Engine) keepTally(s *series, t poolTally) {
 	in := &s.indicator.agreed
-	if s.own == nil {
-		s.own = &own{since: maxBoundary}
-	}
-	s.own.tallies = slices.DeleteFunc(s.own.tallies, func(old poolTally) bool {
+	own := s.attended()
+	own.tallies = slices.DeleteFunc(own.tallies, func(old poolTally) bool {
 		p := in.Pools[old.pool]
 		return old.at <= in.Through && (p == nil || p.Counted != old.at)
 	})
-	s.own.tallies = append(s.own.tallies, t)
+	own.tallies = append(own.tallies, t)
 	e.touch(s)
+}
+
+// attended returns what the series has a part in, made if need be.
+func (s *series) attended() *own {
+	if s.own == nil {
+		s.own = &own{since: maxBoundary}
+	}
+	return s.own
 }
 
 // tallyOf returns what the series counted for a pool at a boundary, nil for

@@ -190,11 +190,11 @@ func (l *countLane) at(boundary int64) (x *count, zero bool) {
 
 // attend lets the partitions count an indicator, or no longer, as its stanza asks
 // for. timely says that they all come to it at the same moment of the stream's time.
-func (e *Engine) attend(ix *indicator, life string, timely bool) {
+func (e *Engine) attend(ix *indicator, setup *config.Setup, timely bool) {
 	needs := ix.cfg.CountsAcross(e.partition.KeyParts)
 	switch {
 	case needs && ix.counting == nil:
-		k := e.countingOf(ix.cfg.Name, life)
+		k := e.countingOf(ix.cfg.Name, e.newLife("counts of "+ix.cfg.Name, setup))
 		k.sums, k.strict = ix.gathering != nil, timely
 		ix.counting, ix.agreed = k, newCounted()
 		up := ix.summing()
@@ -244,9 +244,26 @@ func (e *Engine) endCounts(ix *indicator) {
 			}
 		}
 	}
-	e.countings = slices.DeleteFunc(e.countings, func(other *counting) bool { return other == k })
+	e.forgetEnded(k)
 	e.countsChanged()
 	e.reheld()
+}
+
+// forgetEnded forgets what was told of what this partition counts no longer, and all
+// of it once nobody does.
+func (e *Engine) forgetEnded(k *counting) {
+	if own := &k.lanes[e.partition.Number]; own.Begun && !own.Ended {
+		return
+	}
+	over := true
+	for i := range k.lanes {
+		l := &k.lanes[i]
+		l.Counts = nil
+		over = over && (l.Ended || !l.Begun && i == len(k.lanes)-1)
+	}
+	if over || !k.lanes[e.partition.Number].Begun {
+		e.countings = slices.DeleteFunc(e.countings, func(other *counting) bool { return other == k })
+	}
 }
 
 // ownLane is what the indicator itself tells, and whether that is of gathered sums.
@@ -322,6 +339,10 @@ func (e *Engine) takeCount(m *Message) {
 	e.account.Summaries++
 	e.countsChanged()
 	e.reheld()
+	if k.lanes[e.partition.Number].Ended {
+		e.forgetEnded(k)
+		return
+	}
 	for _, ix := range e.indicators {
 		if ix.counting == k {
 			e.inForce(ix)

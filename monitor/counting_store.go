@@ -45,7 +45,7 @@ func (e *Engine) encodeCounts() json.RawMessage {
 // restoreCounts restores what was told. Where a store was written before anything
 // was, partitions begin to count now.
 func (e *Engine) restoreCounts(h *header) error {
-	e.part, e.ahead = h.Part, h.Ahead
+	e.part, e.ahead, e.lives = h.Part, h.Ahead, h.Lives
 	var list []countingHeader
 	if len(h.Counts) > 0 {
 		if err := json.Unmarshal(h.Counts, &list); err != nil {
@@ -72,7 +72,7 @@ func (e *Engine) restoreCounts(h *header) error {
 		}
 	}
 	for _, ix := range e.indicators {
-		e.attend(ix, lifeOf(e.setup), false)
+		e.attend(ix, e.setup, false)
 	}
 	e.countsChanged()
 	e.reheld()

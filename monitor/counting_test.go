@@ -433,3 +433,90 @@ func TestStoreOfBeforeCounts(t *testing.T) {
 		t.Errorf("nothing signals by peers that were counted: %+v", store.Records)
 	}
 }
+
+// TestGoingLiveOneAfterAnother lets a partition go live while the other has most of its
+// history before it: neither waits for ever.
+func TestGoingLiveOneAfterAnother(t *testing.T) {
+	c := newCross(t, rand.New(rand.NewPCG(1, 1)), 2)
+	setup := countingSetupOf(t, countingPeers, 2)
+	live := func(day int) monitor.Message {
+		return monitor.Message{Kind: monitor.Live, Stored: monitor.InstantOf(marchDay(day))}
+	}
+	for p, r := range c.readers {
+		r.publish(monitor.Message{Kind: monitor.SettingMessage, Setting: monitor.Setting{Setup: setup}})
+		for day := 1; day <= 4+10*p; day++ {
+			r.publish(messageOf(report(wardOf(p, 2, p), day, 1, 9)))
+		}
+		r.publish(live(40))
+	}
+	c.finish()
+	for _, r := range c.readers {
+		if m := live(50); r.engine.InHistory() || r.engine.Holds(&m) || len(r.engine.WaitsFor()) > 0 {
+			t.Errorf("partition %d: in history %t, waits for %v", r.part.Number, r.engine.InHistory(), r.engine.WaitsFor())
+		}
+	}
+}
+
+// TestSetupWithoutATime brings a further indicator in the middle of a history, where
+// the partitions stand days apart: neither waits for ever for the other to come to
+// that set-up.
+func TestSetupWithoutATime(t *testing.T) {
+	c := newCross(t, rand.New(rand.NewPCG(1, 1)), 2)
+	further := strings.ReplaceAll(strings.SplitN(fmt.Sprintf(countingSetup, countingShared), "[[indicator]]", 2)[1], "fall", "slip")
+	for p, r := range c.readers {
+		r.publish(monitor.Message{Kind: monitor.SettingMessage, Setting: monitor.Setting{Setup: countingSetupOf(t, countingPeers, 2)}})
+		for day := 1; day <= 3+20*p; day++ {
+			r.publish(messageOf(report(wardOf(p, 2, p), day, 1, 9)))
+		}
+		r.publish(monitor.Message{Kind: monitor.SettingMessage, Setting: monitor.Setting{Setup: countingSetupOf(t, countingPeers+"[[indicator]]\n"+further, 2)}})
+		for day := 4 + 20*p; day <= 28; day++ {
+			slip := report(strings.Replace(wardOf(p, 2, p), "fall", "slip", 1), day, 1, 9)
+			r.publish(messageOf(report(wardOf(p, 2, p), day, 1, 9), slip))
+		}
+		r.publish(monitor.Message{Kind: monitor.Tick, Time: monitor.InstantOf(marchDay(31)), HasTime: true})
+	}
+	c.finish()
+	for _, r := range c.readers {
+		if a := r.engine.Account(); !a.Balanced() || a.Refused > 0 || len(r.engine.WaitsFor()) > 0 {
+			t.Errorf("partition %d waits for %v: %+v", r.part.Number, r.engine.WaitsFor(), a)
+		}
+	}
+}
+
+// TestIndicatorThatGoes takes a counted indicator out of the set-up, and in again: one
+// partition comes to that while the other is days behind.
+func TestIndicatorThatGoes(t *testing.T) {
+	c := newCross(t, rand.New(rand.NewPCG(1, 1)), 2)
+	with := countingSetupOf(t, countingPeers, 2)
+	without, err := config.Parse([]byte(strings.ReplaceAll(fmt.Sprintf(countingSetup, countingShared), "fall", "slip")), "set-up")
+	if err != nil {
+		t.Fatal(err)
+	}
+	without.Partitions = 2
+	for p, r := range c.readers {
+		for n, setup := range []*config.Setup{with, without, with} { // the very same as before
+			r.publish(monitor.Message{Kind: monitor.SettingMessage, Setting: monitor.Setting{Setup: setup}})
+			for day := 10*n + 1; day <= 10*n+7+2*p; day++ {
+				o := report(wardOf(p, 2, p), day, 1, 9)
+				if n == 1 {
+					o.Series = strings.Replace(o.Series, "fall", "slip", 1)
+				}
+				r.publish(messageOf(o))
+			}
+		}
+		r.publish(monitor.Message{Kind: monitor.Tick, Time: monitor.InstantOf(marchDay(31)), HasTime: true})
+	}
+	c.finish()
+	for _, r := range c.readers {
+		r.restart(t)
+		if a := r.engine.Account(); !a.Balanced() || a.Refused > 0 || len(r.engine.WaitsFor()) > 0 {
+			t.Errorf("partition %d waits for %v: %+v", r.part.Number, r.engine.WaitsFor(), a)
+		}
+		if n := r.engine.Countings(); n != 1 {
+			t.Errorf("partition %d knows of %d counts", r.part.Number, n)
+		}
+		for _, x := range r.store.Refused {
+			t.Errorf("refused %s: %s", x.Reason, x.Detail)
+		}
+	}
+}

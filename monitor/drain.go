@@ -141,6 +141,7 @@ type header struct {
 	Part   int             `json:"part,omitempty"`
 	Ahead  uint64          `json:"ahead,omitempty"`
 	Counts json.RawMessage `json:"counts,omitempty"`
+	Lives  map[string]int  `json:"lives,omitempty"`
 	// Archive is when the archive begins; absent while all is kept.
 	Archive *Instant `json:"archive_from,omitempty"`
 }
@@ -185,7 +186,7 @@ func (e *Engine) encodeHeader() []byte {
 	h := header{
 		History: e.history, Clock: e.clock, Version: e.version, Account: e.account,
 		Cycle: e.checkpoint.cycle, Next: e.checkpoint.next, Generation: int64(e.ids.length.Seconds()),
-		Facts: e.encodeFacts(), Part: e.part, Ahead: e.ahead, Counts: e.encodeCounts(),
+		Facts: e.encodeFacts(), Part: e.part, Ahead: e.ahead, Counts: e.encodeCounts(), Lives: e.lives,
 	}
 	for _, ix := range e.indicators {
 		ih := indicatorHeader{Name: ix.cfg.Name, Started: ix.started, Looked: ix.looked, Frozen: ix.frozenAt}

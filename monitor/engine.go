@@ -108,6 +108,9 @@ type Engine struct {
 	holding    bool
 	part       int
 	ahead      uint64
+	// lives says how often a set-up brought an indicator of which partitions tell
+	// each other, by its life.
+	lives map[string]int
 
 	onLook func(View)
 	looks  []look // scratch

@@ -39,7 +39,7 @@ func TestWithoutLimits(t *testing.T) {
 	if !bytes.Equal(read.encode(nil, true), now) {
 		t.Error("the old state is read as another one")
 	}
-	old[0] = encodingVersion + 1
+	old[0] = withCounts + 1
 	if err := e.overlay(&series{}, old); err == nil || !strings.Contains(err.Error(), "not known to this program") {
 		t.Errorf("a newer state: %v", err)
 	}

@@ -136,7 +136,9 @@ func (e *Engine) install(next *config.Setup, version int, from map[string]int64,
 		}
 		if ix == nil {
 			ix = newIndicator(i, cfg)
-			e.prepare(ix, lifeOf(next))
+			if len(cfg.Gathered(e.partition.KeyParts)) > 0 {
+				e.prepare(ix, e.newLife(cfg.Name, next))
+			}
 		}
 		windows, _ := ix.arrange(cfg, boundary) // there is room: see roomFor
 		e.occupy(ix, windows)
@@ -148,7 +150,7 @@ func (e *Engine) install(next *config.Setup, version int, from map[string]int64,
 		ix.epochs = append(ix.epochs, epoch{from: boundary, cfg: cfg, version: version, digest: next.Digest, windows: windows})
 		ix.measure()
 		e.follow(ix)
-		e.attend(ix, lifeOf(next), timely)
+		e.attend(ix, next, timely)
 		switch {
 		case ix.started: // settle and horizon may be others
 			ix.pass(ix.looked)

@@ -375,5 +375,17 @@ func sortRows(rows []summaryRow) {
 	slices.SortStableFunc(rows, func(a, b summaryRow) int { return cmp.Or(strings.Compare(a.name, b.name), 0) })
 }
 
-// lifeOf tells apart the lives of an indicator.
-func lifeOf(setup *config.Setup) string { return setup.Digest[:min(16, len(setup.Digest))] }
+// newLife tells apart the lives of an indicator: by the set-up that brought it, and
+// how often it did.
+func (e *Engine) newLife(indicator string, setup *config.Setup) string {
+	life := setup.Digest[:min(16, len(setup.Digest))]
+	if e.lives == nil {
+		e.lives = map[string]int{}
+	}
+	key := life + " " + indicator
+	e.lives[key]++
+	if n := e.lives[key]; n > 1 {
+		return fmt.Sprintf("%s %d", life, n)
+	}
+	return life
+}
