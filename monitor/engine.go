@@ -197,6 +197,9 @@ func (e *Engine) element(m *Message, index int) {
 		e.refuse(m, index, it.Observation.Series, reason, detail, it.Raw)
 		return
 	}
+	if e.usualRow(&it.Observation) {
+		return
+	}
 	if reason, detail := e.observe(&it.Observation); reason != "" {
 		e.account.Refused++
 		e.refuse(m, index, it.Observation.Series, reason, detail, it.Raw)

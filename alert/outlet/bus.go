@@ -34,7 +34,7 @@ const BusName = "bus"
 // Name is "bus".
 func (*Bus) Name() string { return BusName }
 
-// Forgives: the bus drops repeats by their keys for a day.
+// Forgives is so: the bus drops repeats by their keys for a day.
 func (*Bus) Forgives() {}
 
 // Deliver publishes a step that is in no outbox: a test.

@@ -21,6 +21,7 @@ import (
 // daemon is everything that run and demo keep running: the bus, and for each
 // partition its store, engine and loop with the outlets behind.
 type daemon struct {
+	floor []byte // see heapFloor
 	setup *config.Setup
 	bus   *bus.Bus
 	log   zerolog.Logger
@@ -54,7 +55,7 @@ func openDaemon(ctx context.Context, setup *config.Setup, o daemonOptions) (d *d
 	if err := checkFolder(setup); err != nil {
 		return nil, err
 	}
-	d = &daemon{setup: setup, log: o.log, o: o, parts: partSet{of: make([]*part, setup.Partitions)}}
+	d = &daemon{setup: setup, log: o.log, o: o, floor: heapFloor(), parts: partSet{of: make([]*part, setup.Partitions)}}
 	b, err := bus.Open(ctx, setup, append(o.busOpts, bus.WithLog(o.log), bus.WithState(d.busState))...)
 	if err != nil {
 		return nil, err
