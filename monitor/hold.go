@@ -36,14 +36,11 @@ func (e *Engine) holds(m *Message) bool {
 		if e.clock != Beginning && e.heldFrom() > m.timeOf(&m.Items[i].Observation) {
 			continue
 		}
-		at, moves := e.movesTo(m, i)
-		if !e.isHeld(at, moves) && (e.clock != Beginning || !moves) {
-			continue
-		}
-		for ; e.part < i; e.part++ {
+		for ; e.part < i; e.part++ { // they may have a say in what this one does
 			e.element(m, e.part)
 		}
-		if at, moves = e.movesTo(m, i); moves && e.clock == Beginning {
+		at, moves := e.movesTo(m, i)
+		if moves && e.clock == Beginning {
 			e.advance(at)
 		}
 		if e.staysHeld(at, moves) {
@@ -66,15 +63,19 @@ func (e *Engine) staysHeld(at Instant, moves bool) bool {
 	return false
 }
 
-// holdsAt is holds for a message of one moment.
+// holdsAt is holds for a message of one moment. An act may carry that itself.
 func (e *Engine) holdsAt(m *Message) bool {
+	at, moves := m.Time, m.HasTime
+	if !moves && m.Kind == ActMessage {
+		at, moves = m.Act.At, m.Act.HasAt
+	}
 	switch {
-	case m.HasTime && e.clock == Beginning:
-		e.advance(m.Time)
-	case !m.HasTime && m.Kind != ActMessage: // it moves no clock, nor is anything counted
+	case moves && e.clock == Beginning:
+		e.advance(at)
+	case !moves && m.Kind != ActMessage: // it moves no clock, nor is anything counted
 		return false
 	}
-	return e.staysHeld(m.Time, m.HasTime)
+	return e.staysHeld(at, moves)
 }
 
 // isHeld reports whether what moves the clock to a moment, or does not move it at

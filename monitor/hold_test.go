@@ -1,0 +1,100 @@
+package monitor_test
+
+import (
+	"math/rand/v2"
+	"testing"
+	"time"
+
+	"github.com/google/go-cmp/cmp"
+
+	"tailbell/config"
+	"tailbell/monitor"
+	"tailbell/monitor/life"
+)
+
+// TestActsMoveTheClock plays acts that carry their own time, each later than every
+// report so far, which moves the clock of history time over the first boundary of a
+// day: such an act waits for what others count as a report does.
+func TestActsMoveTheClock(t *testing.T) {
+	const wards = 6
+	play := func(of int) map[string]string {
+		c := newCross(t, rand.New(rand.NewPCG(1, 1)), of)
+		setup := countingSetupOf(t, countingPeers, of)
+		for _, r := range c.readers {
+			r.publish(monitor.Message{Kind: monitor.SettingMessage, Setting: monitor.Setting{Setup: setup}})
+		}
+		for day := 1; day <= 29; day++ {
+			for ward := range wards {
+				name := wardOf(ward%2, 2, ward)
+				r := c.readers[ward%of]
+				r.publish(messageOf(report(name, day, int64((day*(ward+2))%5), 9)))
+			}
+			for ward := 0; ward < wards; ward += 2 {
+				act := monitor.Act{Kind: monitor.Note, Series: wardOf(0, 2, ward), Direction: life.Upper, By: "A. Nurse", Why: "seen"}
+				act.At, act.HasAt = monitor.InstantOf(marchDay(day+1).Add(3*time.Hour)), true
+				c.readers[0].publish(monitor.Message{Kind: monitor.ActMessage, Act: act})
+			}
+			if of == 2 {
+				c.readers[0].read(1 << 30) // the other one is days behind
+				c.deliver(0, 1<<30)
+			}
+		}
+		for _, r := range c.readers {
+			r.publish(monitor.Message{Kind: monitor.Tick, Time: monitor.InstantOf(marchDay(31)), HasTime: true})
+		}
+		c.finish()
+		return texts(t, c.records())
+	}
+	want := play(1)
+	if len(want) == 0 {
+		t.Fatal("no alert was compared")
+	}
+	if diff := cmp.Diff(want, play(2)); diff != "" {
+		t.Errorf("-one +two partitions:\n%s", diff)
+	}
+}
+
+// TestItemsOfOneMessage plays a message whose second report corrects its first much
+// later: that moves the clock since the id is known by then, and only by then.
+func TestItemsOfOneMessage(t *testing.T) {
+	setup := countingSetupOf(t, countingPeers, 2)
+	e := monitor.New(monitor.Partition{Number: 0, Of: 2, KeyParts: 1})
+	e.Apply(&monitor.Message{Position: 1, Kind: monitor.SettingMessage, Setting: monitor.Setting{Setup: setup}})
+	first := report(wardOf(0, 2, 0), 4, 1, 9)
+	first.ID = "x"
+	again := first
+	again.Revision, again.Reported = 1, monitor.InstantOf(marchDay(20))
+	m := messageOf(report(wardOf(0, 2, 1), 4, 1, 9), first, again)
+	m.Position = 2
+	if !e.Holds(&m) {
+		t.Fatal("the message is not held, though nothing was told by the other partition")
+	}
+	told := &monitor.Message{Position: 3, Kind: monitor.SummaryMessage}
+	told.Summary = firstTold(t, setup, 1)
+	e.ApplyAhead(told)
+	if !e.Holds(&m) {
+		t.Errorf("the message is not held, the clock goes to %v", e.Clock().Time())
+	}
+	if clock := e.Clock().Time(); clock.After(marchDay(8)) {
+		t.Errorf("the clock has gone to %v", clock)
+	}
+}
+
+// firstTold is the first that a partition of two tells the other, on the fifth of March.
+func firstTold(t *testing.T, setup *config.Setup, partition int) *monitor.Summary {
+	t.Helper()
+	e := monitor.New(monitor.Partition{Number: partition, Of: 2, KeyParts: 1})
+	e.Apply(&monitor.Message{Position: 1, Kind: monitor.SettingMessage, Setting: monitor.Setting{Setup: setup}})
+	m := messageOf(report(wardOf(partition, 2, 0), 4, 1, 9))
+	m.Position = 2
+	e.Holds(&m)
+	list := e.Drain().Summaries
+	if len(list) == 0 {
+		t.Fatal("nothing was told")
+	}
+	s, err := monitor.DecodeSummary(list[0].Data)
+	if err != nil {
+		t.Fatal(err)
+	}
+	return s
+}
