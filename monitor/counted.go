@@ -126,27 +126,6 @@ func (k *counting) bring(in *counted, boundary int64) {
 	}
 }
 
-// with adds what another partition counted.
-func (p *poolCount) with(more *poolCount) *poolCount {
-	if p == nil {
-		x := *more
-		x.Index, x.Strata = new(big.Int).Set(more.Index), slices.Clone(more.Strata)
-		return &x
-	}
-	if p.Period != more.Period || p.Enough != more.Enough || len(p.Strata) != len(more.Strata) {
-		p.Units = 0 // it can't be: it is no pool
-		return p
-	}
-	p.Units += more.Units
-	p.Events += more.Events
-	p.LeftOut += more.LeftOut
-	p.Index.Add(p.Index, more.Index)
-	for i, q := range more.Strata {
-		p.Strata[i] = p.Strata[i].add(q)
-	}
-	return p
-}
-
 // passOver forgets what has come into force for all that it is for.
 func (k *counting) passOver(e *Engine) {
 	through := int64(maxBoundary)

@@ -27,23 +27,6 @@ type counting struct {
 	nothing [2]*Summary
 }
 
-// countLane is what one partition has told, in order.
-type countLane struct {
-	Begun bool `json:"begun,omitempty"`
-	Ended bool `json:"ended,omitempty"`
-	// First is the first boundary counted, and Complete the latest of which all
-	// parts have come.
-	First    int64 `json:"first"`
-	Complete int64 `json:"complete"`
-	// Through is the boundary of the latest part, Parts how many of it have come,
-	// and Open says that more will.
-	Through int64 `json:"through"`
-	Parts   int   `json:"parts"`
-	Open    bool  `json:"open,omitempty"`
-	// Counts are those that are not yet in force, or were not yet passed over.
-	Counts []*count `json:"counts,omitempty"`
-}
-
 // count is what one partition counted at a boundary.
 type count struct {
 	// After is the boundary counted before. With Nothing there was no series at all
@@ -60,30 +43,6 @@ type count struct {
 	Predicted *big.Int    `json:"predicted,omitempty"`
 	Pools     []poolCount `json:"pools,omitempty"`
 }
-
-// poolCount is what the series under one baseline of peers counted together, over
-// the span that ends with a boundary.
-type poolCount struct {
-	// ID is that of the pool, see poolID, and Period the number of the refresh
-	// period for which it is counted; Counted the boundary at which it was, once it
-	// is in force.
-	ID      int64 `json:"id"`
-	Period  int64 `json:"period"`
-	Counted int64 `json:"counted,omitempty"`
-	// Enough is how many events it must hold.
-	Enough  int64 `json:"enough"`
-	Units   int64 `json:"units"`
-	Events  int64 `json:"events"`
-	LeftOut int64 `json:"left_out,omitempty"`
-	// Index is the sum of events squared over exposure, in fixed point.
-	Index *big.Int `json:"index"`
-	// Strata is the exposure by kind of slot, see cellOf.
-	Strata []Quantity `json:"strata"`
-}
-
-// serves reports whether the pool is good for its period: as long as it holds too few
-// events, or a single series, it is counted anew each day.
-func (p *poolCount) serves() bool { return p.Units > 1 && p.Events >= p.Enough }
 
 // ofSums is the lane of gathered sums.
 func (k *counting) ofSums() *countLane { return &k.lanes[len(k.lanes)-1] }
@@ -115,17 +74,6 @@ func (e *Engine) countingNamed(indicator, life string) *counting {
 	return nil
 }
 
-// done is the boundary through which the partition has told.
-func (l *countLane) done() int64 {
-	switch {
-	case !l.Begun:
-		return never
-	case l.Ended:
-		return maxBoundary
-	}
-	return l.Complete
-}
-
 // complete is the boundary through which all have told, but for one lane.
 func (k *counting) complete(but int) int64 {
 	done := int64(maxBoundary)
@@ -135,57 +83,6 @@ func (k *counting) complete(but int) int64 {
 		}
 	}
 	return done
-}
-
-// receive takes what a partition tells, unless it came before. gap says that
-// something is missing before it.
-func (l *countLane) receive(s *Summary) (repeat, gap bool) {
-	switch {
-	case s.ends:
-		if l.Ended || !l.Begun {
-			return true, false
-		}
-		l.Ended = true
-		return false, false
-	case l.Ended || l.Begun && (s.through < l.Through || s.through == l.Through && (!l.Open || s.part < l.Parts)):
-		return true, false
-	case !l.Begun:
-		gap = !s.begins || s.part > 0
-		l.Begun, l.First, l.Complete = true, s.through, never
-	case l.Open:
-		gap = s.through != l.Through || s.part != l.Parts
-	default:
-		gap = s.part > 0 || s.after > l.Through
-	}
-	n := len(l.Counts) - 1
-	if l.Open && s.part > 0 && n >= 0 && l.Counts[n].Through == s.through {
-		l.Counts[n].Pools = append(l.Counts[n].Pools, s.count.Pools...)
-	} else {
-		x := *s.count
-		x.After, x.Through, x.Pools = s.after, s.through, slices.Clone(x.Pools)
-		l.Counts = append(l.Counts, &x)
-	}
-	if l.Through, l.Parts, l.Open = s.through, s.part+1, s.more; !s.more {
-		l.Complete = s.through
-	}
-	return false, gap
-}
-
-// at returns what the partition told of a boundary. There it had nothing to count
-// if zero is true; where both say nothing, it told nothing.
-func (l *countLane) at(boundary int64) (x *count, zero bool) {
-	if boundary < l.First {
-		return nil, true
-	}
-	for _, x := range l.Counts {
-		switch {
-		case x.Nothing && x.After < boundary && boundary <= x.Through:
-			return nil, true
-		case x.Through == boundary:
-			return x, false
-		}
-	}
-	return nil, l.Ended && boundary > l.Complete
 }
 
 // attend lets the partitions count an indicator, or no longer, as its stanza asks

@@ -1,7 +1,6 @@
 package monitor
 
 import (
-	"encoding/binary"
 	"fmt"
 	"slices"
 
@@ -202,48 +201,6 @@ func (g *gathering) nextReady() (int64, bool) {
 	return up.looked + 1, up.looked < ready
 }
 
-// mirrorAll brings what the rows say into the mirrors.
-func (e *Engine) mirrorAll(g *gathering, rows []summaryRow) []tiding {
-	list := make([]tiding, len(rows))
-	for i := range rows {
-		r := &rows[i]
-		m := g.mirrors[r.name]
-		if m == nil {
-			m = &series{
-				number: uint32(len(e.series)), name: r.name, indicator: g.sums, birth: unborn, trimmed: never,
-				mirror: true, retired: true, fresh: true,
-			}
-			m.telling()
-			e.series = append(e.series, m)
-			g.mirrors[r.name] = m
-		}
-		if r.head {
-			m.birth, m.dates = r.birth, r.dates
-		}
-		for n := range r.cells {
-			c := r.cells[n]
-			*m.at(c.slot) = c
-			m.eventIDs.set(c.slot, r.ids[n])
-			m.dirty = append(m.dirty, c.slot)
-		}
-		e.touch(m)
-		list[i] = tiding{m, r.from, r.to, r.head, r.why}
-	}
-	return list
-}
-
-// trimMirrors forgets of members what no look at gathered sums reads any more.
-func (e *Engine) trimMirrors(g *gathering) {
-	kept := g.sums.kept
-	for _, m := range g.mirrors { // in any order: each is trimmed by itself
-		n, _ := m.cells.find(kept)
-		if m.trimmed = max(m.trimmed, kept); n > 0 {
-			m.cells = m.cells[n:]
-			m.eventIDs.forget(kept)
-		}
-	}
-}
-
 // scatter ends the gathering of an indicator that is monitored no longer.
 func (e *Engine) scatter(ix *indicator) {
 	g := ix.gathering
@@ -273,88 +230,12 @@ func (e *Engine) scatter(ix *indicator) {
 	e.deferrals = slices.DeleteFunc(e.deferrals, func(d deferral) bool { return d.Indicator == ix.cfg.Name })
 }
 
-// encodeMirror writes what is known of a member of gathered sums.
-func (s *series) encodeMirror(b []byte, at int, whole bool) []byte {
-	if s.name == "" { // it is one no more
-		b[at] = flagMirror | flagNamed
-		return appendString(appendString(b, ""), "")
-	}
-	b[at] = flagMirror
-	if whole || s.fresh {
-		b[at] |= flagNamed
-		b = appendString(appendString(b, s.name), s.indicator.cfg.Name)
-	}
-	b = binary.AppendVarint(b, s.birth)
-	b = append(binary.AppendVarint(b, s.trimmed), flag(s.dates != nil))
-	if s.dates != nil {
-		b = s.dates.encode(b)
-	}
-	if whole {
-		b = binary.AppendUvarint(b, uint64(len(s.cells)))
-		for i := range s.cells {
-			b = s.encodeCell(b, &s.cells[i])
-		}
-		return b
-	}
-	b = binary.AppendUvarint(b, uint64(len(s.dirty)))
-	for _, slot := range s.dirty {
-		c := cell{slot: slot} // trimmed since
-		if i, ok := s.cells.find(slot); ok {
-			c = s.cells[i]
-		}
-		b = s.encodeCell(b, &c)
-	}
-	return b
-}
-
-// overlayMirror lays one encoding over a mirror.
-func (e *Engine) overlayMirror(s *series, r *reader, version, flags byte) error {
-	if flags&flagNamed != 0 {
-		*s = series{number: s.number, name: r.string(), cells: s.cells[:0]}
-		if ix := e.indicatorNamed(r.bytes()); ix != nil && ix.gathering != nil {
-			s.indicator = ix.gathering.sums
-		}
-	}
-	if s.mirror, s.retired = true, true; s.name == "" {
-		return r.err
-	}
-	s.birth, s.trimmed, s.dates = r.int(), r.int(), nil
-	if r.flag() {
-		s.dates = r.dates()
-	}
-	for range r.length() {
-		c, _ := r.cell(s, version)
-		*s.at(c.slot) = c
-		s.eventIDs.set(c.slot, r.ids())
-	}
-	if len(r.b) > 0 {
-		r.fail("bytes are left over")
-	}
-	return r.err
-}
-
 func (e *Engine) indicatorNamed(name []byte) *indicator {
 	for _, ix := range e.indicators {
 		if ix.cfg.Name == string(name) {
 			return ix
 		}
 	}
-	return nil
-}
-
-// restoreMirror puts a mirror back in its place.
-func (e *Engine) restoreMirror(s *series) error {
-	e.series = append(e.series, s)
-	if s.name == "" {
-		return nil
-	}
-	if s.indicator == nil {
-		return fmt.Errorf("%w: nothing gathers what is known of %q", errEncoding, s.name)
-	}
-	s.cells = slices.DeleteFunc(s.cells, func(c cell) bool { return c.slot < s.trimmed })
-	s.eventIDs.forget(s.trimmed)
-	s.telling()
-	s.indicator.of.gathering.mirrors[s.name] = s
 	return nil
 }
 
@@ -388,77 +269,6 @@ func (e *Engine) relinkAllGathered() {
 		}
 		e.relinkGathered(g, members)
 	}
-}
-
-// inboundHeader is how far partitions have told of an indicator, as stored.
-type inboundHeader struct {
-	Indicator string       `json:"indicator"`
-	Life      string       `json:"life"`
-	Lanes     []laneHeader `json:"lanes"`
-}
-
-type laneHeader struct {
-	Partition int   `json:"partition"`
-	Ended     bool  `json:"ended,omitempty"`
-	First     int64 `json:"first"`
-	Complete  int64 `json:"complete"`
-	Through   int64 `json:"through"`
-	Parts     int   `json:"parts"`
-	Open      bool  `json:"open,omitempty"`
-}
-
-func (e *Engine) inboundHeaders() []inboundHeader {
-	var list []inboundHeader
-	for _, in := range e.inbounds {
-		h := inboundHeader{Indicator: in.indicator, Life: in.life}
-		for p := range in.lanes {
-			if l := &in.lanes[p]; l.begun {
-				h.Lanes = append(h.Lanes, laneHeader{p, l.ended, l.first, l.complete, l.through, l.parts, l.open})
-			}
-		}
-		list = append(list, h)
-	}
-	return list
-}
-
-// restoreInbounds restores how far partitions had told, and what waits.
-func (e *Engine) restoreInbounds(h *header, waiting []WaitingSummary) error {
-	e.waiting, e.deferrals = h.Waiting, h.Deferrals
-	for _, ih := range h.Inbound {
-		in := e.inboundOf(ih.Indicator, ih.Life)
-		for _, l := range ih.Lanes {
-			if l.Partition < 0 || l.Partition >= len(in.lanes) {
-				return fmt.Errorf("monitor: partition %d told of indicator %q, and there are %d: %w", l.Partition, ih.Indicator, len(in.lanes), errEncoding)
-			}
-			in.lanes[l.Partition] = lane{
-				begun: true, ended: l.Ended, first: l.First, complete: l.Complete, through: l.Through, parts: l.Parts, open: l.Open,
-			}
-		}
-	}
-	for _, w := range waiting {
-		s, err := DecodeSummary(w.Data)
-		if err != nil {
-			return fmt.Errorf("monitor: restoring summary %d: %w", w.Number, err)
-		}
-		s.number = w.Number
-		if s.Partition >= e.partition.Of {
-			return fmt.Errorf("monitor: restoring summary %d: %w", w.Number, errEncoding)
-		}
-		l := &e.inboundOf(s.Indicator, s.life).lanes[s.Partition]
-		l.waiting = append(l.waiting, s)
-	}
-	return nil
-}
-
-// drainWaiting hands over the summaries that began to wait, and the numbers of
-// those that do no longer.
-func (e *Engine) drainWaiting() (added []WaitingSummary, gone []uint64) {
-	for _, s := range e.kept {
-		added = append(added, WaitingSummary{s.number, s.encode()})
-	}
-	gone = e.released
-	e.kept, e.released = nil, nil
-	return added, gone
 }
 
 // waitsFor lists the partitions that a boundary waits for that has fallen due.
