@@ -249,14 +249,7 @@ func (e *Engine) advance(to Instant) {
 		if e.nextDue > to {
 			break
 		}
-		ix := e.dueFirst()
-		if e.idle(ix) {
-			ix.start(to)
-			e.began(ix)
-		} else {
-			e.lookAll(ix, ix.looked+1)
-		}
-		e.reschedule()
+		e.lookNext(to)
 	}
 	if e.clock == Beginning {
 		for _, ix := range e.indicators {
@@ -268,6 +261,27 @@ func (e *Engine) advance(to Instant) {
 	}
 	e.clock = to
 	e.ids.drop(to)
+}
+
+// lookNext makes the looks that fall due next, on the way to a moment.
+func (e *Engine) lookNext(to Instant) {
+	ix := e.dueFirst()
+	if e.idle(ix) {
+		ix.start(to)
+		e.began(ix)
+	} else {
+		e.lookAll(ix, ix.looked+1)
+	}
+	e.reschedule()
+}
+
+// lookBefore makes the looks that fell due before a moment that the clock has passed
+// already: under a set-up with a shorter time to settle they may.
+func (e *Engine) lookBefore(moment Instant) {
+	e.settleAll()
+	for e.nextDue < moment {
+		e.lookNext(moment - 1)
+	}
 }
 
 func (e *Engine) dueFirst() *indicator {

@@ -55,10 +55,14 @@ func (e *Engine) holds(m *Message) bool {
 func (e *Engine) staysHeld(at Instant, moves bool) bool {
 	for e.isHeld(at, moves) {
 		from := e.heldFrom()
-		if from == Beginning || from-1 <= e.clock {
+		switch {
+		case from == Beginning || from-1 <= e.clock && e.nextDue >= from:
 			return true
+		case from-1 <= e.clock:
+			e.lookBefore(from)
+		default:
+			e.advance(from - 1)
 		}
-		e.advance(from - 1)
 	}
 	return false
 }

@@ -1,7 +1,9 @@
 package monitor_test
 
 import (
+	"fmt"
 	"math/rand/v2"
+	"strings"
 	"testing"
 	"time"
 
@@ -97,4 +99,50 @@ func firstTold(t *testing.T, setup *config.Setup, partition int) *monitor.Summar
 		t.Fatal(err)
 	}
 	return s
+}
+
+// TestShorterSettle brings a set-up in the middle of a history under which slots settle
+// days sooner: boundaries of several days are due at once, behind the clock. The
+// partitions tell each other of each before the next.
+func TestShorterSettle(t *testing.T) {
+	settling := func(settle string, of int) *config.Setup {
+		text := strings.Replace(fmt.Sprintf(countingSetup, countingPeers), `"2h"`, settle, 1)
+		setup, err := config.Parse([]byte(text), "set-up")
+		if err != nil {
+			t.Fatal(err)
+		}
+		setup.Partitions = of
+		return setup
+	}
+	play := func(of int) map[string]string {
+		c := newCross(t, rand.New(rand.NewPCG(1, 1)), of)
+		for day := 1; day <= 29; day++ {
+			for _, r := range c.readers {
+				m := monitor.Message{Kind: monitor.SettingMessage, Time: monitor.InstantOf(marchDay(day)), HasTime: true}
+				switch day {
+				case 1:
+					m.Setting.Setup = settling(`"75h"`, of)
+					r.publish(m)
+				case 18:
+					m.Setting.Setup = settling(`"0h"`, of)
+					r.publish(m)
+				}
+			}
+			for ward := range 6 {
+				c.readers[ward%of].publish(messageOf(report(wardOf(ward%2, 2, ward), day, int64((day*(ward+2))%5), 9)))
+			}
+		}
+		for _, r := range c.readers {
+			r.publish(monitor.Message{Kind: monitor.Tick, Time: monitor.InstantOf(marchDay(31)), HasTime: true})
+		}
+		c.finish()
+		return texts(t, c.records())
+	}
+	want := play(1)
+	if len(want) == 0 {
+		t.Fatal("no alert was compared")
+	}
+	if diff := cmp.Diff(want, play(2)); diff != "" {
+		t.Errorf("-one +two partitions:\n%s", diff)
+	}
 }
