@@ -16,9 +16,10 @@ import (
 // message's observations that lie before that moment, and brings its clock up to
 // just before it, so that the other partitions are told what they wait for. All of
 // that is part of the state that is stored, and what was applied is not applied
-// again, also after a restart. Once the partition is live nothing is held.
+// again, also after a restart. Once the partition is live nothing is held, but for
+// what a division carried over: when that was first read the others had told in time.
 func (e *Engine) Holds(m *Message) bool {
-	if !e.history || e.partition.Of <= 1 || m.Kind == Live || m.Position <= e.position {
+	if e.partition.Of <= 1 || m.Position <= e.position || !m.Carried && (!e.history || m.Kind == Live) {
 		return false
 	}
 	e.holding = e.holds(m)
@@ -28,6 +29,9 @@ func (e *Engine) Holds(m *Message) bool {
 func (e *Engine) holds(m *Message) bool {
 	if e.clock == Beginning && !e.countsAny() || e.clock != Beginning && e.heldFrom() == Never {
 		return false
+	}
+	if !e.history || m.Kind == Live {
+		return e.staysHeld(m.Stored, m.Stored > e.clock)
 	}
 	if m.Kind != Observations {
 		return e.holdsAt(m)

@@ -15,6 +15,9 @@ type Message struct {
 	// Time is the history time given in its header, if HasTime.
 	Time    Instant
 	HasTime bool
+	// Carried says that a division carried it over from partitions that had it before:
+	// what others tell of its time stands in the stream, too.
+	Carried bool
 	// Exactly one of the following is set, according to Kind.
 	Kind    Kind
 	Items   []Item

@@ -2,6 +2,8 @@ package main
 
 import (
 	"context"
+	"encoding/json"
+	"errors"
 	"fmt"
 	"os"
 	"path/filepath"
@@ -14,6 +16,8 @@ import (
 	"github.com/rs/zerolog"
 
 	"tailbell/config"
+	"tailbell/ingest/bus"
+	"tailbell/ingest/wire"
 	"tailbell/monitor"
 	"tailbell/monitor/store"
 )
@@ -249,4 +253,84 @@ func TestSpanningIsDivided(t *testing.T) {
 			sameAlerts(t, "divided", before, runSpanning(t, path, setup, ""))
 		})
 	}
+}
+
+// liveStream makes a stream of so many partitions that were live for three months,
+// as a division leaves it: each report was stored when it became known, and every
+// partition heard a tick each morning.
+func liveStream(t *testing.T, partitions int, history string) (string, *config.Setup) {
+	t.Helper()
+	path, old := spanning(t, partitions+1, "")
+	b, err := openToDivide(t.Context(), old)
+	if err != nil {
+		t.Fatal(err)
+	}
+	d, err := b.Divide(t.Context(), partitions)
+	if err == nil {
+		err = d.Begin(t.Context())
+	}
+	if err != nil {
+		t.Fatal(err)
+	}
+	file := fmt.Appendf(nil, spanningSetup, partitions, "")
+	if err := os.WriteFile(path, file, 0o600); err != nil {
+		t.Fatal(err)
+	}
+	setup, err := config.Load(path)
+	if err != nil {
+		t.Fatal(err)
+	}
+	var msgs []bus.Outgoing
+	var times []time.Time
+	add := func(at time.Time, out bus.Outgoing) { msgs, times = append(msgs, out), append(times, at) }
+	all := func(at time.Time, out bus.Outgoing) {
+		for out.Partition = range partitions {
+			add(at, out)
+		}
+	}
+	text, err := os.ReadFile(history)
+	if err != nil {
+		t.Fatal(err)
+	}
+	var morning time.Time
+	for line := range strings.Lines(string(text)) {
+		var o struct {
+			Series   string    `json:"series"`
+			Reported time.Time `json:"reported"`
+		}
+		if err := json.Unmarshal([]byte(line), &o); err != nil {
+			t.Fatal(err)
+		}
+		if morning.IsZero() {
+			morning = o.Reported.Truncate(24 * time.Hour)
+			all(morning, bus.Outgoing{Kind: bus.Setting, Data: file})
+			all(morning, bus.Outgoing{Kind: bus.Tick, Header: map[string][]string{wire.LiveHeader: {"1"}}})
+		}
+		for ; !morning.After(o.Reported); morning = morning.Add(24 * time.Hour) {
+			all(morning, bus.Outgoing{Kind: bus.Tick})
+		}
+		if o.Reported.Before(now()) {
+			add(o.Reported, bus.Outgoing{Partition: setup.PartitionOf(o.Series), Data: []byte(line)})
+		}
+	}
+	all(now().Add(-time.Minute), bus.Outgoing{Kind: bus.Tick})
+	if err := errors.Join(d.Carry(t.Context(), msgs, times), d.Finish(t.Context()), b.Close()); err != nil {
+		t.Fatal(err)
+	}
+	return path, setup
+}
+
+// TestLiveTimeIsDivided divides what was read in live time, where nobody waited since
+// everybody had told in time: those who read it again wait, and find the same.
+func TestLiveTimeIsDivided(t *testing.T) {
+	history := spanningHistory(t, now().UTC().AddDate(0, 0, -94))
+	path, setup := liveStream(t, 1, history)
+	one := runSpanning(t, path, setup, "")
+	if len(one) == 0 {
+		t.Error("no alert")
+	}
+	path, setup = liveStream(t, 4, history)
+	sameAlerts(t, "live", one, runSpanning(t, path, setup, ""))
+	says(t, 0, []string{"4 partitions into 8", fmt.Sprintf("Alerts: %d before, %[1]d after; %[1]d equal to the byte", len(one))},
+		"partitions", "divide", "--into", "8", "--config", path)
 }

@@ -7,6 +7,8 @@ import (
 	"time"
 
 	"github.com/nats-io/nats.go/jetstream"
+
+	"tailbell/ingest/wire"
 )
 
 // Keys of the input stream's metadata that a division leaves, and those that
@@ -27,7 +29,7 @@ const StoredHeader = "Tailbell-Stored"
 
 // carriedToken stands in the subjects of messages that a division carried over,
 // on which nobody else can publish.
-const carriedToken = "divided"
+const carriedToken = wire.CarriedToken
 
 // layout says which part of the input stream its present partitions have.
 type layout struct {

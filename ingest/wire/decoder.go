@@ -108,8 +108,19 @@ func (d *Decoder) Decode(r Raw) monitor.Message {
 	return m
 }
 
+// isCarried reports whether a message stands on a subject of those that a division
+// carries over.
+func isCarried(subject string) bool {
+	_, rest, _ := strings.Cut(subject, ".")
+	return strings.HasPrefix(rest, CarriedToken+".")
+}
+
+// CarriedToken is the second token of the subjects of messages that a division of the
+// stream carried over.
+const CarriedToken = "divided"
+
 func (d *Decoder) decode(r Raw) monitor.Message {
-	m := monitor.Message{Position: r.Position, Stored: monitor.InstantOf(r.Stored)}
+	m := monitor.Message{Position: r.Position, Stored: monitor.InstantOf(r.Stored), Carried: isCarried(r.Subject)}
 	live, f := readHeader(r.Header, &m)
 	if f != nil {
 		return rejected(m, f, r.Data)

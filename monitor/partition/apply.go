@@ -20,6 +20,9 @@ type applier struct {
 	// asked says that the engine knows that the next message waits: it has gone as
 	// far towards it as it may, which is to be committed, too.
 	asked bool
+	// carried says that the last message applied was carried over by a division: such
+	// may wait in live time, too.
+	carried bool
 	// said is what was last told of where it stands.
 	said Stand
 	// lookout reads ahead, nil while nobody does, and found is what it brought.
@@ -112,7 +115,7 @@ func (a *applier) advance() {
 			a.engine.Apply(m)
 			a.next++
 			a.waiting++
-			a.asked = false
+			a.asked, a.carried = false, m.Carried
 			continue
 		}
 		if !a.asked {
@@ -157,7 +160,7 @@ func (a *applier) handOn() {
 	}
 	a.commits <- c
 	a.waiting, a.taken, a.mark = 0, 0, nil
-	if !a.waits() && !a.engine.InHistory() {
+	if !a.waits() && !a.engine.InHistory() && !a.carried {
 		a.lookout.end()
 		a.lookout, a.found = nil, nil
 	}
