@@ -334,3 +334,34 @@ func TestLiveTimeIsDivided(t *testing.T) {
 	says(t, 0, []string{"4 partitions into 8", fmt.Sprintf("Alerts: %d before, %[1]d after; %[1]d equal to the byte", len(one))},
 		"partitions", "divide", "--into", "8", "--config", path)
 }
+
+// TestReplayOfPartitions replays the stream of four partitions, with an act of which
+// each has a copy: it finds what a replay of the files does.
+func TestReplayOfPartitions(t *testing.T) {
+	path, _ := spanning(t, 4, historyMode)
+	history := spanningHistory(t, time.Date(2025, 3, 1, 0, 0, 0, 0, time.UTC))
+	text, err := os.ReadFile(history)
+	if err != nil {
+		t.Fatal(err)
+	}
+	const act = `{"act":"reset","series":"quillmere-*/*/slip","from":"2025-04-20T00:00:00+02:00","by":"T. Averin","why":"looked into","at":"2025-04-21T10:00:00+02:00"}` + "\n"
+	var lines strings.Builder
+	acted := false
+	for line := range strings.Lines(string(text)) {
+		if !acted && strings.Contains(line, `"reported":"2025-04-22`) {
+			lines.WriteString(act)
+			acted = true
+		}
+		lines.WriteString(line)
+	}
+	if err := os.WriteFile(history, []byte(lines.String()), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	feedFile(t, path, history)
+	want := notices(t, says(t, 0, nil, "replay", "--json", "--config", path, history))
+	_, out, complaint := run(t, "replay", "--json", "--config", path, "--stream")
+	if !strings.Contains(complaint, "1 act, 0 refused") {
+		t.Errorf("the act was not taken once:\n%s", complaint)
+	}
+	compareNotices(t, "the stream", want, notices(t, out))
+}
