@@ -111,7 +111,7 @@ type Snapshot struct {
 	// Renumbered says that another stream was accepted since the last Drain: what
 	// the header says of positions beyond Position is of the old one.
 	Renumbered bool
-	Header   []byte
+	Header     []byte
 	// Series holds, by number, the last whole state (nil if only patches
 	// exist) and the patches that were handed over by later Drains, oldest first,
 	// to lay over it.
