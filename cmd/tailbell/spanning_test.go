@@ -9,6 +9,7 @@ import (
 	"path/filepath"
 	"slices"
 	"strings"
+	"syscall"
 	"testing"
 	"time"
 
@@ -364,4 +365,39 @@ func TestReplayOfPartitions(t *testing.T) {
 		t.Errorf("the act was not taken once:\n%s", complaint)
 	}
 	compareNotices(t, "the stream", want, notices(t, out))
+}
+
+// TestKilledWhileWaiting kills the daemon again and again while its partitions wait
+// for each other over a history, and finds what one that nobody disturbed does.
+func TestKilledWhileWaiting(t *testing.T) {
+	history := spanningHistory(t, time.Date(2025, 3, 1, 0, 0, 0, 0, time.UTC))
+	path, setup := spanning(t, 1, historyMode)
+	feedFile(t, path, history)
+	one := runSpanning(t, path, setup, "")
+	path, setup = spanning(t, 4, historyMode)
+	feedFile(t, path, history)
+	s := newService(t, path)
+	waited, last := 0, uint64(0)
+	for range 4 {
+		s.start()
+		s.await("progress", func() bool {
+			code, out, _ := run(t, "status", "--json", "--config", path)
+			var r statusReply
+			if code != 0 || json.Unmarshal([]byte(out), &r) != nil {
+				return false
+			}
+			sum := uint64(0)
+			for i := range r.Partitions {
+				sum += r.Partitions[i].Position
+				waited += len(r.Partitions[i].WaitsFor)
+			}
+			defer func() { last = max(last, sum) }()
+			return sum > last+20
+		})
+		s.stop(syscall.SIGKILL)
+	}
+	if waited == 0 {
+		t.Error("no partition was seen to wait")
+	}
+	sameAlerts(t, "killed", one, runSpanning(t, path, setup, ""))
 }
