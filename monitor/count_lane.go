@@ -6,8 +6,8 @@ import "slices"
 type countLane struct {
 	Begun bool `json:"begun,omitempty"`
 	Ended bool `json:"ended,omitempty"`
-	// First is the first boundary counted, and Complete the latest of which all
-	// parts have come.
+	// First is the first boundary counted, never where that is not known, and
+	// Complete the latest of which all parts have come.
 	First    int64 `json:"first"`
 	Complete int64 `json:"complete"`
 	// Through is the boundary of the latest part, Parts how many of it have come,
@@ -44,16 +44,19 @@ func (l *countLane) receive(s *Summary) (repeat, gap bool) {
 		return true, false
 	case !l.Begun:
 		gap = !s.begins || s.part > 0
-		l.Begun, l.First, l.Complete = true, s.through, never
+		if l.Begun, l.First, l.Complete = true, s.through, never; gap {
+			l.First = never // nobody knows since when it counts
+		}
 	case l.Open:
 		gap = s.through != l.Through || s.part != l.Parts
 	default:
 		gap = s.part > 0 || s.after > l.Through
 	}
 	n := len(l.Counts) - 1
-	if l.Open && s.part > 0 && n >= 0 && l.Counts[n].Through == s.through {
+	switch {
+	case s.part > 0 && n >= 0 && l.Open && l.Counts[n].Through == s.through:
 		l.Counts[n].Pools = append(l.Counts[n].Pools, s.count.Pools...)
-	} else {
+	case s.part == 0: // without the first part, which has the numbers, it told nothing
 		x := *s.count
 		x.After, x.Through, x.Pools = s.after, s.through, slices.Clone(x.Pools)
 		l.Counts = append(l.Counts, &x)
