@@ -98,6 +98,9 @@ func (p *baselinePage) head() {
 	}
 	p.line("  standard error %s if only chance varies, %s by the jackknife over %d periods of %s",
 		short(s.ChanceError*in.Per), short(s.JackknifeError*in.Per), len(s.Periods), s.Length)
+	if s.NoBootstrap != "" {
+		p.line("  no bootstrap: %s", s.NoBootstrap)
+	}
 	if b := s.Bootstrap; b != nil {
 		text := fmt.Sprintf("  bootstrap in blocks of %d, %s redraws: standard error %s, percentile interval %s to %s", b.Block, thousands(int64(b.Draws)),
 			short(b.Error*in.Per), short(b.Percentile[0]*in.Per), short(b.Percentile[1]*in.Per))
@@ -175,7 +178,9 @@ func (p *baselinePage) calendar() {
 				parts = append(parts, fmt.Sprintf("%s %s", s.Label[:3], short(s.Factor)))
 			}
 		}
-		p.line("    %s", strings.Join(parts, ", "))
+		if len(parts) > 0 {
+			p.line("    %s", strings.Join(parts, ", "))
+		}
 	}
 }
 
@@ -274,7 +279,7 @@ func (p *baselinePage) series() {
 			break
 		}
 		rows = append(rows, []string{
-			s.Name, thousands(s.Events), s.Exposure, short(s.Rate.Rate), short(s.Lower) + " to " + short(s.Upper),
+			s.Name, thousands(s.Events), s.Exposure, rateText(s.Rate), boundsText(s.Rate),
 			short(s.Spread.Phi), atMost(s.Spread), short(s.Spread.Chance.P), short(s.Adjusted), strconv.Itoa(s.Missing),
 		})
 	}
@@ -282,6 +287,20 @@ func (p *baselinePage) series() {
 	if n := len(p.r.Series); n > most {
 		p.line("  ... and %d more: --json has them all", n-most)
 	}
+}
+
+func rateText(r estimate.Rate) string {
+	if r.Unbounded {
+		return "-"
+	}
+	return short(r.Rate)
+}
+
+func boundsText(r estimate.Rate) string {
+	if r.Unbounded {
+		return "no exposure"
+	}
+	return short(r.Lower) + " to " + short(r.Upper)
 }
 
 // short writes a number with about three figures.

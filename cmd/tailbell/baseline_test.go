@@ -325,3 +325,44 @@ func TestBaselineUsage(t *testing.T) {
 		}
 	}
 }
+
+// TestBaselineOddDelays: events that were all known by the end of their day, and
+// none of which was, are told and not stumbled over.
+func TestBaselineOddDelays(t *testing.T) {
+	setup := filepath.Join(t.TempDir(), "odd.toml")
+	text := `name = "odd"
+[time]
+mode = "history"
+[[indicator]]
+name = "fall"
+series = ["ward/fall"]
+unit = "bed-days"
+every = "1d"
+windows = ["28d"]
+[indicator.baseline]
+kind = "known"
+rate = 0.1
+`
+	if err := os.WriteFile(setup, []byte(text), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	var rows strings.Builder
+	rows.WriteString("date,series,events,exposure[bed-days],reported\n")
+	for day := 1; day <= 28; day++ {
+		fmt.Fprintf(&rows, "2026-02-%02d,ward/fall,%d,10,2026-02-%02dT09:00:00Z\n", day, day%3, day)
+	}
+	file := filepath.Join(t.TempDir(), "odd.csv")
+	if err := os.WriteFile(file, []byte(rows.String()), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	out, _, err := runBaseline(t, "--config", setup, "--zone", "UTC", "--to", "2026-03-01", file)
+	if err != nil {
+		t.Fatal(err)
+	}
+	contains(t, out, "given that it is at most 0s", "0s   1.0000    1.0000")
+	out, _, err = runBaseline(t, "--config", setup, "--zone", "UTC", "--to", "2026-03-01", "--block", "20", file)
+	if err != nil {
+		t.Fatal(err)
+	}
+	contains(t, out, "no bootstrap: 28 periods allow blocks of 14 at most, not of 20")
+}

@@ -155,6 +155,10 @@ func (a *analysis) worstSpread() *Spread {
 
 func (a *analysis) adviseSpread(worst *Spread) {
 	first := a.r.Within[0]
+	if first.Mean == 0 {
+		a.say("Fewer than two slots have exposure, or every trial was an event: nothing can be said of spread.")
+		return
+	}
 	if worst == nil {
 		text := fmt.Sprintf("The spread over %s is %s times what chance gives, p = %s: chance explains it", first.Length, figure(first.Phi), probability(first.Chance.P))
 		switch {

@@ -52,7 +52,7 @@ func (t *table) test(ctx context.Context, plan resample.Plan) (PValue, error) {
 				return exactly(p), nil
 			}
 		}
-		if ways(s.total, len(s.group)) <= maxEnumerated {
+		if w := ways(s.total, len(s.group)); w <= maxEnumerated && w*float64(len(s.group)) <= maxProgramme {
 			return exactly(t.enumerate(s)), nil
 		}
 	}
@@ -142,6 +142,9 @@ func (t *table) law(s *stratum, after float64, j int, left int64) cellLaw {
 // that has reached the observed pairs is past it for good: p is a sum of
 // positive terms, accurate however small.
 func (t *table) programme(s *stratum) (float64, bool) {
+	if s.total > maxStates { // nor would an int64 hold the pairs of many more
+		return 0, false
+	}
 	pairs := int64(0)
 	for _, k := range s.events {
 		pairs += k * (k - 1) / 2

@@ -152,14 +152,16 @@ func at(steps []delayStep, age time.Duration) float64 {
 	return steps[i-1].f
 }
 
-// Ages returns at most so many whole multiples of step at which F rises to
-// lower values than 1, for a set-up: F at the last of them is nearly 1.
-func (d *Delay) Ages(step time.Duration, most int) []time.Duration {
+// Ages returns at most so many of the ages first, first + step and so on at
+// which F rises, for a set-up: F at the last of them is 1. first is the age of a
+// slot when it is looked at first, be it 0: what was known then already would
+// else be taken for nothing.
+func (d *Delay) Ages(first, step time.Duration, most int) []time.Duration {
 	var ages []time.Duration
 	last := 0.0
-	for age := time.Duration(0); age <= d.Longest+step; age += step {
+	for age := first; age <= d.Longest+first+step; age += step {
 		f := d.F(age)
-		if f > last && age > 0 {
+		if f > last {
 			ages = append(ages, age)
 			last = f
 		}

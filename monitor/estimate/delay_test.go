@@ -3,6 +3,7 @@ package estimate
 import (
 	"errors"
 	"math"
+	"slices"
 	"testing"
 	"time"
 
@@ -43,7 +44,7 @@ func TestProductLimit(t *testing.T) {
 		near(t, "F", d.F(c.age), c.f, 1e-12)
 		near(t, "naive F", d.Naive(c.age), c.naive, 1e-12)
 	}
-	if got := d.Ages(day, 10); len(got) != 3 || got[0] != day || got[2] != 3*day {
+	if got := d.Ages(0, day, 10); len(got) != 3 || got[0] != day || got[2] != 3*day {
 		t.Errorf("ages are %v", got)
 	}
 }
@@ -136,6 +137,31 @@ func TestReports(t *testing.T) {
 	for i := range want {
 		if got[i] != want[i] {
 			t.Errorf("report %d is %v, want %v", i, got[i], want[i])
+		}
+	}
+}
+
+// TestAges: a set-up takes the share of the greatest age reached, so the ages told
+// are those at which slots are looked at; else what is known at the first look of
+// a slot would be taken for nothing.
+func TestAges(t *testing.T) {
+	var reports []Reported
+	hour := oneDay / 24
+	for day := range monitor.Instant(200) {
+		for i := range monitor.Instant(4) { // after 0, 10, 20 and 30 hours
+			reports = append(reports, Reported{day * oneDay, day*oneDay + i*10*hour, 1})
+		}
+	}
+	d, err := DelayOf(reports, 400*oneDay)
+	if err != nil {
+		t.Fatal(err)
+	}
+	for settle, want := range map[time.Duration][]time.Duration{
+		0:              {0, 24 * time.Hour, 48 * time.Hour}, // a quarter, three quarters, all
+		12 * time.Hour: {12 * time.Hour, 36 * time.Hour},    // a half, all
+	} {
+		if got := d.Ages(settle, 24*time.Hour, 10); !slices.Equal(got, want) {
+			t.Errorf("settling in %v: %v, want %v", settle, got, want)
 		}
 	}
 }

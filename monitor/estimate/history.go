@@ -61,6 +61,8 @@ type Span struct {
 var (
 	ErrNothing = errors.New("no series asked for has a slot with both a count and an exposure in the span asked for")
 	ErrSpan    = errors.New("the span ends before it begins")
+	// ErrNoExposure is of a history without any exposure.
+	ErrNoExposure = errors.New("no slot has any exposure, so there is no rate to estimate: report what the events happened in, or state a rate (kind = \"known\")")
 )
 
 // Gather returns the history of the indicator's series from the sums of their
@@ -84,6 +86,7 @@ func Gather(in *config.Indicator, sums []monitor.SlotSum, span Span) (*History, 
 	}
 	g := gatherer{in: in, cal: cal, span: span, digest: sha256.New()}
 	h := &History{Indicator: in, From: monitor.Never, To: monitor.Beginning}
+	overfull := 0
 	names := make([]string, 0, len(bySeries))
 	for name := range bySeries {
 		names = append(names, name)
@@ -94,11 +97,15 @@ func Gather(in *config.Indicator, sums []monitor.SlotSum, span Span) (*History, 
 		if err != nil {
 			return nil, err
 		}
+		overfull += s.Overfull
 		if n := len(s.Slots); n > 0 {
 			h.From = min(h.From, s.Slots[0].Start)
 			h.To = max(h.To, cal.Start(s.Slots[n-1].Number+1))
 			h.Series = append(h.Series, s)
 		}
+	}
+	if len(h.Series) == 0 && overfull > 0 {
+		return nil, fmt.Errorf("%w: %d slots have more events than trials, or events without exposure", ErrNothing, overfull)
 	}
 	if len(h.Series) == 0 {
 		return nil, ErrNothing

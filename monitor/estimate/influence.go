@@ -3,6 +3,7 @@ package estimate
 import (
 	"cmp"
 	"context"
+	"fmt"
 	"math"
 	"slices"
 
@@ -38,6 +39,8 @@ type Stability struct {
 	ChanceError    float64    `json:"chance_error"`
 	JackknifeError float64    `json:"jackknife_error"`
 	Bootstrap      *Bootstrap `json:"bootstrap,omitempty"`
+	// NoBootstrap says why there is none.
+	NoBootstrap string `json:"no_bootstrap,omitempty"`
 }
 
 // Bootstrap is the moving-block bootstrap of the rate over periods. Blocks wrap
@@ -153,7 +156,12 @@ func (h *History) stability(ctx context.Context, plan resample.Plan, block int) 
 	for i := range s.Periods {
 		s.Periods[i].Influence = (j.Estimate - j.Without[i]) / j.Estimate
 	}
-	s.Bootstrap, err = h.bootstrap(ctx, plan, s.Periods, block)
+	if block == 0 {
+		block = int(math.Ceil(math.Cbrt(float64(n))))
+	}
+	if s.NoBootstrap = noBootstrap(s.Periods, block); s.NoBootstrap == "" {
+		s.Bootstrap, err = h.bootstrap(ctx, plan, s.Periods, block)
+	}
 	return s, err
 }
 
@@ -168,19 +176,22 @@ func (h *History) periodP(p *Period, events int64, exposure float64) float64 {
 
 const leastPeriods = 8 // under which a bootstrap says nothing
 
+// noBootstrap says why the periods can't be drawn in such blocks, "" if they can.
+func noBootstrap(periods []Period, block int) string {
+	n := len(periods)
+	switch {
+	case n < leastPeriods:
+		return fmt.Sprintf("%d periods are fewer than %d", n, leastPeriods)
+	case block > n/2:
+		return fmt.Sprintf("%d periods allow blocks of %d at most, not of %d", n, n/2, block)
+	case slices.ContainsFunc(periods, func(p Period) bool { return p.Exposure == 0 }):
+		return "a period is without exposure, and a redraw might have none at all"
+	}
+	return ""
+}
+
 func (h *History) bootstrap(ctx context.Context, plan resample.Plan, periods []Period, block int) (*Bootstrap, error) {
 	n := len(periods)
-	if block == 0 {
-		block = int(math.Ceil(math.Cbrt(float64(n))))
-	}
-	if n < leastPeriods || block > n/2 {
-		return nil, nil
-	}
-	for _, p := range periods {
-		if p.Exposure == 0 {
-			return nil, nil // a redraw might have no exposure at all
-		}
-	}
 	plan.Draws = affordable(plan.Draws, int64(n))
 	statistic := rateOf(periods)
 	r, err := resample.Bootstrap(ctx, plan, resample.Blocks{Periods: n, Length: block, Wrap: true}, statistic)

@@ -3,6 +3,7 @@ package estimate
 import (
 	"cmp"
 	"context"
+	"fmt"
 	"math"
 	"math/big"
 	"slices"
@@ -44,6 +45,9 @@ type Rate struct {
 	Rate  float64 `json:"rate"`
 	Lower float64 `json:"lower"`
 	Upper float64 `json:"upper"`
+	// Unbounded is set where there is no exposure: nothing is then known of the
+	// rate, and the three are 0.
+	Unbounded bool `json:"unbounded,omitempty"`
 }
 
 // SeriesReport is what is known of one series.
@@ -123,6 +127,9 @@ type analysis struct {
 func Analyse(ctx context.Context, h *History, o Options) (*Report, error) {
 	if o.Draws == 0 {
 		o.Draws = 10_000
+	}
+	if !slices.ContainsFunc(h.Series, func(s Series) bool { return s.exposure() > 0 }) {
+		return nil, fmt.Errorf("%s: %w", h.Indicator.Name, ErrNoExposure)
 	}
 	in := h.Indicator
 	a := &analysis{History: h, o: o, r: &Report{
@@ -285,6 +292,7 @@ func (h *History) rate(s *Series) Rate {
 	r := Rate{Events: s.events(), Exposure: decimal(s.grains, in.GrainDigits)}
 	exposure, _ := new(big.Rat).SetFrac(s.grains, pow10(in.GrainDigits)).Float64()
 	if exposure == 0 {
+		r.Unbounded = true
 		return r
 	}
 	if h.proportion() {
@@ -311,7 +319,7 @@ func (a *analysis) delay() {
 		}
 		step := delayStepOf(a.Indicator.Every)
 		r := &DelayReport{Delay: d, Step: config.FormatDuration(step)}
-		for _, age := range d.Ages(step, delayAges) {
+		for _, age := range d.Ages(a.Indicator.Settle%step, step, delayAges) {
 			r.Shares = append(r.Shares, DelayStep{config.FormatDuration(age), d.F(age), d.Naive(age)})
 		}
 		a.r.Delay = r

@@ -284,7 +284,8 @@ func TestAnalyseStops(t *testing.T) {
 	}
 }
 
-// TestDelayInStanza: events known late make a delay that ends at 1.
+// TestDelayInStanza: events known late make a delay that begins with what is known at the
+// first look and ends at 1.
 func TestDelayInStanza(t *testing.T) {
 	h := invented(4)
 	h.Indicator.Settle = 0
@@ -305,7 +306,7 @@ func TestDelayInStanza(t *testing.T) {
 			line = o.Line
 		}
 	}
-	if !strings.HasPrefix(line, `delay = { ages = ["1d", `) || !strings.HasSuffix(line, fmt.Sprintf("%g] }", 1.0)) {
+	if !strings.HasPrefix(line, `delay = { ages = ["0s", `) || !strings.HasSuffix(line, fmt.Sprintf("%g] }", 1.0)) {
 		t.Errorf("the stanza says %q", line)
 	}
 }

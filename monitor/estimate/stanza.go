@@ -111,9 +111,17 @@ func (a *analysis) strata(e Effect) (string, bool) {
 			}
 			f = f * (1 - p) / (1 - f*p)
 		}
-		factors = append(factors, strconv.FormatFloat(math.Max(f, 1e-6), 'f', 3, 64))
+		factors = append(factors, factorText(math.Max(f, 1e-6)))
 	}
 	return fmt.Sprintf("strata = { by = %q, factors = [%s] }", e.By, strings.Join(factors, ", ")), true
+}
+
+// factorText writes a factor with three decimals, or three figures if it is small.
+func factorText(f float64) string {
+	if f < 0.05 {
+		return strconv.FormatFloat(f, 'g', 3, 64)
+	}
+	return strconv.FormatFloat(f, 'f', 3, 64)
 }
 
 // delayLine writes the delay if some events are not known when slots settle.

@@ -29,7 +29,8 @@ type Windows struct {
 	Count int `json:"count"`
 	Of    int `json:"of"`
 	// Phi is the spread used for Share.Spread: that of counts of this length;
-	// 1 where there is no more than chance gives.
+	// 1 where there is no more than chance gives, and where a window has more
+	// than 2^22 trials, too many for the law with spread.
 	Phi    float64 `json:"phi"`
 	Shares []Share `json:"shares"`
 	// AtLimit holds the windows against the indicator's limit on p; nil where
@@ -108,14 +109,26 @@ func (h *History) lawAt(rate, exposure float64) countLaw {
 	return exact.Poisson{Rate: rate, Exposure: exposure}
 }
 
+// Package exact has laws with spread of up to so many trials, and of sizes up to
+// plainFrom: beyond, a spread of any count that can be summed is that of chance.
+const (
+	mostSpreadTrials = 1 << 22
+	plainFrom        = 1e15
+)
+
 // spreadLaw is the law with variance phi times the plain one.
 func (h *History) spreadLaw(rate, exposure, phi float64) tailLaw {
 	n := math.Round(exposure)
+	size := rate * exposure / (phi - 1)
+	if h.proportion() {
+		size = (n - phi) / (phi - 1)
+	}
 	switch {
+	case exposure == 0 || size > plainFrom:
+		return h.lawAt(rate, exposure)
 	case phi <= 1 || rate <= 0 || rate >= 1 && h.proportion() || n <= phi && h.proportion():
 		return h.lawAt(rate, exposure)
 	case h.proportion():
-		size := (n - phi) / (phi - 1)
 		return exact.BetaBinomial{N: int64(n), A: size * rate, B: size * (1 - rate)}
 	}
 	return exact.NewNegativeBinomial(rate, exposure, phi)
@@ -129,7 +142,7 @@ func (h *History) windows(w config.Window, phi float64) *Windows {
 		return nil
 	}
 	x := &Windows{Window: w.Name, Count: len(all), Of: of, Phi: max(phi, 1)}
-	if math.IsNaN(phi) {
+	if h.proportion() && slices.ContainsFunc(all, func(r rolling) bool { return r.exposure > mostSpreadTrials }) {
 		x.Phi = 1
 	}
 	x.Shares = bins(all)
