@@ -21,7 +21,7 @@ func (s section) readArchive() Every {
 	keep, err := ParseSpan(n.text)
 	switch {
 	case err != nil:
-		s.fault("archive", fmt.Sprintf("%q is %s", n.text, err), mend)
+		s.fault("archive", fmt.Sprintf("%q is not a whole number, 1 or more, of days, weeks, months or years", n.text), mend)
 	case keep.Unit < Day:
 		s.fault("archive", fmt.Sprintf("%q is not in days or more: the archive goes by whole days", n.text), mend)
 	case 1/keep.perYear() > maxArchiveYears:

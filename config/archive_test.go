@@ -32,10 +32,10 @@ func TestArchive(t *testing.T) {
 	}
 	for text, want := range map[string]string{
 		"12h":  "is not in days or more",
-		"90":   "not a whole number and a unit",
-		"0d":   "not a whole number and a unit",
+		"90":   "not a whole number, 1 or more, of days",
+		"0d":   "not a whole number, 1 or more, of days",
 		"251y": "more than 250 years",
-		"ever": "not a whole number and a unit",
+		"ever": "not a whole number, 1 or more, of days",
 	} {
 		_, err := Parse([]byte("name = \"x\"\n[limits]\narchive = \""+text+"\"\n"), "x")
 		if err == nil || !strings.Contains(err.Error(), "limits.archive: \""+text+"\" is") || !strings.Contains(err.Error(), want) {

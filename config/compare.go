@@ -302,6 +302,9 @@ func windowText(w *Window) string {
 	if w.Trials > 0 {
 		return "the last " + w.Name
 	}
+	if w.Step == 1 {
+		return w.Name + ", a look every slot"
+	}
 	return fmt.Sprintf("%s, a look every %d slots", w.Name, w.Step)
 }
 

@@ -34,6 +34,9 @@ func baselineText(b *Baseline) string {
 		return ""
 	}
 	who := b.Series.String()
+	if who == "**" {
+		who = "all series"
+	}
 	if b.Sums.text != "" {
 		who = "sums " + b.Sums.String()
 	}
@@ -63,7 +66,16 @@ func baselineText(b *Baseline) string {
 	if b.Delay != nil {
 		text += fmt.Sprintf(", delay: %s at %s", shortList(b.Delay.Reported), shortList(b.Delay.Ages))
 	}
-	return text + fmt.Sprintf(", margin %v, version %q, source %q", b.Margin, b.Version, b.Source)
+	if b.Margin != 1 {
+		text += fmt.Sprintf(", margin %v", b.Margin)
+	}
+	if b.Version != "" {
+		text += fmt.Sprintf(", version %q", b.Version)
+	}
+	if b.Source != "" {
+		text += fmt.Sprintf(", source %q", b.Source)
+	}
+	return text
 }
 
 // shortList writes a list of up to 12 items, and of a longer one the first,

@@ -154,3 +154,25 @@ func TestChangeString(t *testing.T) {
 		t.Errorf("got %s", s)
 	}
 }
+
+// TestChangesReadWell holds that a change says nothing of what is not set, and
+// counts no single slot.
+func TestChangesReadWell(t *testing.T) {
+	peers := func(span, windows string) *Setup {
+		s := plain("", "kind = \"peers\"\nrefresh = \"1mo\"\nspan = \""+span+"\"\n")
+		return mustParse(t, strings.Replace(s, `windows = [`, `windows = [`+windows, 1))
+	}
+	changes := Compare(peers("364d", ""), peers("728d", `"7d", { span = "14d", step = "7d" }, `))
+	var told []string
+	for _, c := range changes {
+		told = append(told, c.Key+": "+c.Old+" -> "+c.New)
+	}
+	for _, want := range []string{
+		"windows:  -> 7d, a look every slot", "windows:  -> 14d, a look every 7 slots",
+		"baseline[1]: all series: peers, 364 slots, refresh 1mo, min_events 1 -> all series: peers, 728 slots, refresh 1mo, min_events 1",
+	} {
+		if !slices.ContainsFunc(told, func(s string) bool { return strings.HasSuffix(s, want) }) {
+			t.Errorf("%q is not among %q", want, told)
+		}
+	}
+}

@@ -64,6 +64,8 @@ func (p *prose) setup(s *Setup) {
 func (p *prose) page(page Page) {
 	switch {
 	case !page.Served():
+	case page.Users == "" && page.URL == "" && strings.HasSuffix(page.Listen, ":0"):
+		p.line("The page is served to whoever is on this machine, at a free port, which the log of the daemon tells.")
 	case page.Users == "":
 		p.line("The page is served at %s, to whoever is on this machine.", page.Address())
 	default:

@@ -60,3 +60,16 @@ func TestPageElsewhereNeedsUsersAndTLS(t *testing.T) {
 		}
 	}
 }
+
+func TestDescribePage(t *testing.T) {
+	for listen, want := range map[string]string{
+		"127.0.0.1:0":    "at a free port, which the log",
+		"127.0.0.1:4880": "at http://127.0.0.1:4880, to whoever",
+	} {
+		var b strings.Builder
+		s := mustParse(t, withPage("listen = \""+listen+"\"\n"))
+		if err := s.Describe(&b); err != nil || !strings.Contains(b.String(), want) {
+			t.Errorf("%s: %v, %s", listen, err, b.String())
+		}
+	}
+}
