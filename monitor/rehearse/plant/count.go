@@ -154,7 +154,29 @@ func (r *Rehearsal) describe(out *Report, runs []outcomes) {
 	} else if v.how.Rate > 0 {
 		parts = append(parts, fmt.Sprintf("at a true rate of %.6g per %s", v.how.Rate, v.in.Unit))
 	}
+	if beside := r.beside(); beside != "" {
+		parts = append(parts, beside)
+	}
 	out.How = strings.Join(parts, "; ") + "."
+}
+
+// beside says which other series an invented history has, and what that means
+// for an allowance over all series; "" where neither matters.
+func (r *Rehearsal) beside() string {
+	shared := slices.ContainsFunc(r.plan.Setups, func(s *config.Setup) bool {
+		return slices.ContainsFunc(s.Indicators, func(in config.Indicator) bool {
+			return in.Name == r.plan.Indicator && in.Allowance != nil && in.Allowance.PerIndicator
+		})
+	})
+	switch n := r.invented.how.Peers; {
+	case n > 0 && shared:
+		return fmt.Sprintf("each has %d other series beside it, which have their shares of what is allowed over all series", n)
+	case n > 0:
+		return fmt.Sprintf("each has %d other series beside it", n)
+	case shared:
+		return "no other series is beside it, so that it has all of what is allowed over all series for itself, and rings oftener than one among many: say how many others there are"
+	}
+	return ""
 }
 
 // found counts what became of the excesses of one ratio under one set-up.

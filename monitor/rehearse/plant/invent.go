@@ -32,7 +32,8 @@ type Invention struct {
 	// Gamma(M+1, F) (Gamma(M, F) where only the lower tail is watched; the Beta
 	// law likewise for a proportion), instead of taking its estimate for true.
 	Drawn bool
-	// Peers is how many other series there are, for a baseline from peers.
+	// Peers is how many other series there are, for a baseline from peers, or
+	// for an allowance over all series, which they share.
 	Peers int
 	// Begin is when the first slot begins; zero takes the indicator's own
 	// beginning, the baseline's, or 2001.

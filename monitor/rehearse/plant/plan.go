@@ -4,10 +4,10 @@
 // # Model
 //
 // A history is a run of observations of one series (of several, where a
-// baseline is taken from peers). It is either invented, drawn from the
-// indicator's baseline slot by slot, or a real one. One excess is planted in it:
-// over a span of whole slots the true rate is the usual one times a ratio that
-// follows a Shape. More events are added as Poisson (for a proportion: each
+// baseline is taken from peers, or an allowance is over all series). It is
+// either invented, drawn from the indicator's baseline slot by slot, or a real
+// one. One excess is planted in it: over a span of whole slots the true rate is
+// the usual one times a ratio that follows a Shape. More events are added as Poisson (for a proportion: each
 // trial without an event gets one with the chance that is lacking), fewer are
 // made by keeping each event with the chance of the ratio, once for all
 // revisions of an observation. The same engine as the daemon's judges the
