@@ -65,7 +65,7 @@ Where an excess was found to be real, leave its whole calendar span out with
 	f.StringVar(&o.indicator, "indicator", "", "the indicator's `NAME`, if the set-up has several")
 	f.StringVar(&o.from, "from", "", "only slots from this `DATE` on (in the indicator's zone), or RFC 3339 time")
 	f.StringVar(&o.to, "to", "", "only slots before this `DATE` or time; it may lie beyond the last message, if it is known that nothing came")
-	f.Uint64Var(&o.seed, "seed", 1, "the seed of all that is simulated")
+	f.Uint64Var(&o.seed, "seed", 1, "the seed, a `NUMBER`, of all that is simulated")
 	f.IntVar(&o.resamples, "resamples", 10_000, "the `NUMBER` of draws for each simulated p-value and for the bootstrap")
 	f.IntVar(&o.block, "block", 0, "the `NUMBER` of periods that the bootstrap keeps together; 0 chooses it")
 	f.BoolVar(&o.asJSON, "json", false, "print the whole report as JSON")

@@ -10,6 +10,9 @@ import (
 	"strings"
 	"testing"
 
+	"github.com/spf13/cobra"
+	"github.com/spf13/pflag"
+
 	"tailbell/ingest/wire"
 	"tailbell/monitor"
 	"tailbell/monitor/store"
@@ -41,6 +44,23 @@ func TestWrongCommandLines(t *testing.T) {
 			t.Errorf("%s: exit code %d, %q instead of %q", c.line, code, stderr, c.says)
 		}
 	}
+}
+
+// TestOptionsSayWhatTheyTake holds that no option shows people a type of the
+// language in the place of what it takes.
+func TestOptionsSayWhatTheyTake(t *testing.T) {
+	var look func(c *cobra.Command)
+	look = func(c *cobra.Command) {
+		c.LocalFlags().VisitAll(func(f *pflag.Flag) {
+			if takes, _ := pflag.UnquoteUsage(f); takes != strings.ToUpper(takes) {
+				t.Errorf("%s --%s takes %q", c.CommandPath(), f.Name, takes)
+			}
+		})
+		for _, sub := range c.Commands() {
+			look(sub)
+		}
+	}
+	look(newRootCommand())
 }
 
 func TestArgumentsOfUseLines(t *testing.T) {

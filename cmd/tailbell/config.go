@@ -57,7 +57,7 @@ line, and the command fails. With --against OLD it also says what would change f
 the set-up OLD.`,
 		RunE: func(c *cobra.Command, args []string) error { return checkConfig(c, setupNamed(args), against) },
 	}
-	c.Flags().StringVar(&against, "against", "", "also say what changes from the set-up in this file")
+	c.Flags().StringVar(&against, "against", "", "also say what changes from the set-up in the file `OLD`")
 	return c
 }
 

@@ -59,7 +59,7 @@ func TestConfigDiff(t *testing.T) {
 	})
 	t.Run("at rest", check)
 	if code, stdout, stderr := run(t, "config", "diff", unfit); code != 1 || stderr != "" ||
-		!strings.Contains(stdout, "The running store can't take:\n  indicator[fall].events: counted -> each: it contradicts what the store holds\n\nWithout that, the rest would be:\n\nIn force when enough data have come in:\n  indicator[fall].windows: nothing -> 14d, a look every 1 slots: it is looked at once what is kept and what comes fill it\n\nThe store") ||
+		!strings.Contains(stdout, "The running store can't take:\n  indicator[fall].events: counted -> each: it contradicts what the store holds\n\nWithout that, the rest would be:\n\nIn force when enough data have come in:\n  indicator[fall].windows: nothing -> 14d, a look every slot: it is looked at once what is kept and what comes fill it\n\nThe store") ||
 		!strings.HasSuffix(stdout, "begin anew with another folder and name.\n") {
 		t.Errorf("exit code %d, %s%s", code, stdout, stderr)
 	}

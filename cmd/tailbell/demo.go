@@ -43,12 +43,12 @@ kill -9, the same command goes on where it was.`,
 			return demo(c.Context(), o, c.OutOrStdout(), c.ErrOrStderr())
 		},
 	}
-	c.Flags().Uint64Var(&o.seed, "seed", 1, "the seed of everything invented")
+	c.Flags().Uint64Var(&o.seed, "seed", 1, "the seed, a `NUMBER`, of everything invented")
 	c.Flags().StringVar(&o.folder, "folder", "", "keep stream and store in this `FOLDER`; else they are removed at the end")
 	c.Flags().BoolVar(&o.full, "full", false, "print every step of every alert, not only openings")
 	c.Flags().BoolVar(&o.asJSON, "json", false, "write alert steps as JSON records, one a line, and the account to standard error")
 	c.Flags().StringVar(&o.export, "export", "", "also write the history as newline-delimited JSON to this `FILE`, and beside it the set-up (.toml) and the planted excesses (.known.csv)")
-	c.Flags().IntVar(&o.maxBatch, "max-batch", 0, "at most so many messages in a commit")
+	c.Flags().IntVar(&o.maxBatch, "max-batch", 0, "at most so `MANY` messages in a commit")
 	return c
 }
 

@@ -22,17 +22,17 @@ type describedSeries struct {
 }
 
 func (d *describedSeries) add(f *pflag.FlagSet) {
-	f.Float64Var(&d.baseline, "baseline", 0, "the known baseline, per --per units")
-	f.Float64Var(&d.per, "per", 1, "units of exposure (or trials) that rates are given for")
-	f.Int64Var(&d.refEvents, "reference-events", 0, "events of the reference")
-	f.Float64Var(&d.refExposure, "reference-exposure", 0, "exposure of the reference")
-	f.Int64Var(&d.refTrials, "reference-trials", 0, "trials of the reference")
-	f.Float64Var(&d.margin, "margin", 1, "the ratio to the baseline that is still no news")
-	f.Float64Var(&d.spread, "spread", 1, "the variance of a slot's count over that of the model")
+	f.Float64Var(&d.baseline, "baseline", 0, "the known baseline, a `RATE` per --per units")
+	f.Float64Var(&d.per, "per", 1, "the `NUMBER` of units of exposure (or trials) that rates are given for")
+	f.Int64Var(&d.refEvents, "reference-events", 0, "the `NUMBER` of events of the reference")
+	f.Float64Var(&d.refExposure, "reference-exposure", 0, "the `AMOUNT` of exposure of the reference")
+	f.Int64Var(&d.refTrials, "reference-trials", 0, "the `NUMBER` of trials of the reference")
+	f.Float64Var(&d.margin, "margin", 1, "the `RATIO` to the baseline that is still no news")
+	f.Float64Var(&d.spread, "spread", 1, "the `RATIO` of the variance of a slot's count to that of the model")
 	f.StringVar(&d.every, "every", "1d", "the `LENGTH` of a slot")
 	f.StringArrayVar(&d.windows, "window", nil, "a window: its `SPAN`, or span:step such as 84d:7d; of a proportion also \"200 trials\"; once for each")
-	f.StringSliceVar(&d.tails, "tails", []string{"upper"}, "upper, lower, or both")
-	f.StringSliceVar(&d.looks, "looks", []string{"slot"}, "slot, arrival, or both")
+	f.StringSliceVar(&d.tails, "tails", []string{"upper"}, "the `TAILS`: upper, lower, or both")
+	f.StringSliceVar(&d.looks, "looks", []string{"slot"}, "the `LOOKS`: slot, arrival, or both")
 }
 
 // describe makes an indicator of the options.

@@ -77,7 +77,7 @@ each: see "tailbell feed --help" on ids.`,
 	f.BoolVar(&o.stream, "stream", false, "read the stream on the set-up's bus in the place of files")
 	f.StringVar(&o.from, "from", "", "with --stream: begin at this `POSITION`, or at this time (RFC 3339)")
 	f.BoolVar(&o.chances, "p-values", false, "compute the p-value of every look, and say how they are spread")
-	f.IntVar(&o.cores, "cores", 0, "use so many cores; 0 for all. The results are the same")
+	f.IntVar(&o.cores, "cores", 0, "use so `MANY` cores; 0 for all. The results are the same")
 	return c
 }
 

@@ -76,7 +76,7 @@ the set-up has several, a report is made of files of history only.`,
 	f.StringVar(&o.title, "title", "", "the `TITLE`; else it names the set-up")
 	f.StringVar(&o.made, "made", "", "the `DATE` on which the report is made, to stand in it")
 	f.StringSliceVar(&o.rehearsals, "rehearsal", nil, "`FILES` that \"tailbell rehearse --json\" printed")
-	f.Uint64Var(&o.seed, "seed", 1, "the seed of what is simulated of the usual rates")
+	f.Uint64Var(&o.seed, "seed", 1, "the seed, a `NUMBER`, of what is simulated of the usual rates")
 	f.IntVar(&o.draws, "resamples", 1000, "the `NUMBER` of draws for what the history says of the usual rates; 0 leaves that out")
 	f.IntVar(&o.pictures, "pictures", 40, "of how many series of an indicator there are pictures: a `NUMBER`, those with most alerts first")
 	return c

@@ -39,7 +39,7 @@ The first signal lets it finish what it began; a second one stops it at once,
 which loses nothing either.
 
 A set-up that differs from the one in force is put into force, or refused if the
-stored state can't follow it (tailbell config check --against says what changes).
+stored state can't follow it (tailbell config diff says beforehand what changes).
 
 /healthz answers "alive" as long as the process lives; /readyz answers 200 and
 the status as JSON while the bus is connected and no partition far behind, else

@@ -42,7 +42,11 @@ func newSeriesAct(a *seriesActing, use, short, long string) *cobra.Command {
 	}
 	addConfigFlag(c, &a.path)
 	c.Flags().StringVar(&a.act.By, "by", "", "the `NAME` of who says so; else what "+byVariable+" says, else the login name, unless that is root")
-	c.Flags().StringVar(&a.act.Why, "why", "", "the reason, a `TEXT`")
+	why := "the reason, a `TEXT`"
+	if a.act.Kind != monitor.SignOff && a.act.Kind != monitor.BackInService {
+		why += "; needed"
+	}
+	c.Flags().StringVar(&a.act.Why, "why", "", why)
 	c.Flags().StringVar(&a.from, "from", "", "from this `DATE` on: 2026-03-20, or a time with its offset")
 	return c
 }
@@ -92,7 +96,7 @@ func newSignOffCommand() *cobra.Command {
 rests on them. Corrections are still taken, and are told as such.`)
 	c.Flags().StringVar(&a.until, "until", "", "up to this `DATE`, not included, or a time with its offset")
 	c.Flags().StringVar(&a.month, "month", "", "or a whole `MONTH`: 2026-03")
-	c.Flags().StringVar(&a.side, "side", "both", "events, exposure or both")
+	c.Flags().StringVar(&a.side, "side", "both", "the `SIDE` that is final: events, exposure or both")
 	c.MarkFlagsMutuallyExclusive("month", "from")
 	c.MarkFlagsMutuallyExclusive("month", "until")
 	return c

@@ -47,7 +47,7 @@ twice.`,
 	addConfigFlag(c, &path)
 	c.Flags().BoolVar(&o.yes, "yes", false, "accept, instead of only saying what differs")
 	c.Flags().Uint64Var(&o.after, "after", 0, "read on after this `POSITION`")
-	c.Flags().IntVar(&o.partition, "partition", everyPartition, "only this partition; -1 for all")
+	c.Flags().IntVar(&o.partition, "partition", everyPartition, "only the partition of this `NUMBER`; -1 for all")
 	return c
 }
 
