@@ -253,8 +253,8 @@ func (ix *indicator) expect(s *series, u *usual, boundary int64) (expectation, b
 		return ix.expectFrom(s, u, max(boundary-ix.lookback(), s.birth, ix.kept), boundary)
 	}
 	if c := &ix.clocked; c.base != u.base || c.boundary != boundary {
-		*c = clocked{base: u.base, boundary: boundary} // the same for all series
-		c.expectation, c.ok = ix.expectFrom(s, u, boundary-ix.lookback(), boundary)
+		*c = clocked{base: u.base, boundary: boundary} // the same for all series, also for one out of service
+		c.expectation, c.ok = ix.expectFrom(&series{indicator: ix}, u, boundary-ix.lookback(), boundary)
 	}
 	return ix.clocked.expectation, ix.clocked.ok
 }
