@@ -199,6 +199,8 @@ type baselineData struct {
 	sums    []monitor.SlotSum
 	clock   monitor.Instant
 	reports *estimate.Reports
+	// only, if not nil, names the series whose delay is asked for.
+	only *config.Pattern
 	// timed is set if some observation says when it was reported.
 	timed bool
 	// faults is how many rows of the files can't be used; they were named.
@@ -218,6 +220,10 @@ func (d *baselineData) fromFiles(ctx context.Context, o *baselineOptions, setup 
 	if strings.Contains(files.series, "*") {
 		files.series = "" // a pattern, not the name for a file without a column
 	}
+	if o.files.series != "" {
+		only := config.NewPattern(o.files.series)
+		d.only = &only
+	}
 	h, err := files.read(ctx, setup, paths, stdin, stderr)
 	if err != nil {
 		return err
@@ -236,8 +242,10 @@ func (d *baselineData) run(ctx context.Context, e *monitor.Engine, h *history.Hi
 		e.Apply(&m)
 		for i := range m.Items {
 			if x := &m.Items[i]; x.Reason == "" && d.in.Matches(x.Observation.Series) {
-				site, _, _ := strings.Cut(x.Observation.Series, "/")
-				d.reports.Add(site, &x.Observation)
+				if d.only == nil || d.only.Match(x.Observation.Series) {
+					site, _, _ := strings.Cut(x.Observation.Series, "/")
+					d.reports.Add(site, &x.Observation)
+				}
 				d.timed = d.timed || x.Observation.HasReported
 			}
 		}

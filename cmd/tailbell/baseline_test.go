@@ -366,3 +366,41 @@ rate = 0.1
 	}
 	contains(t, out, "no bootstrap: 28 periods allow blocks of 14 at most, not of 20")
 }
+
+// TestBaselineDelayOfSeries: a baseline for some series has their delay, not that
+// of all: one is reported at once, the other three days after its slot.
+func TestBaselineDelayOfSeries(t *testing.T) {
+	setup := filepath.Join(t.TempDir(), "two.toml")
+	text := `name = "two"
+[time]
+mode = "history"
+[[indicator]]
+name = "fall"
+series = ["*/fall"]
+unit = "bed-days"
+every = "1d"
+windows = ["28d"]
+[indicator.baseline]
+kind = "known"
+rate = 0.1
+`
+	var rows strings.Builder
+	rows.WriteString("date,series,events,exposure[bed-days],reported\n")
+	for day := 1; day <= 20; day++ {
+		fmt.Fprintf(&rows, "2026-03-%02d,north/fall,1,10,2026-03-%02dT09:00:00Z\n", day, day)
+		fmt.Fprintf(&rows, "2026-03-%02d,south/fall,1,10,2026-03-%02dT00:00:00Z\n", day, day+4)
+	}
+	file := filepath.Join(t.TempDir(), "two.csv")
+	for name, text := range map[string]string{setup: text, file: rows.String()} {
+		if err := os.WriteFile(name, []byte(text), 0o600); err != nil {
+			t.Fatal(err)
+		}
+	}
+	for series, want := range map[string]string{"north/*": "given that it is at most 0s", "south/*": "3d   1.0000    1.0000"} {
+		out, _, err := runBaseline(t, "--config", setup, "--zone", "UTC", "--series", series, file)
+		if err != nil {
+			t.Fatal(err)
+		}
+		contains(t, out, want, "from 20 events")
+	}
+}
