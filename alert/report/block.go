@@ -376,7 +376,7 @@ func lacks(r *Report) []block {
 		words.Whole(a.Late), words.Whole(a.Replaced))
 	text += fmt.Sprintf(" When they fell due, %s; %s made again because data changed.", made(a), wereAmount(a.Reruns, "looks"))
 	if r.Begins != "" {
-		text += " " + r.Begins + " What lies before is in none of these figures and pictures; alerts are whole."
+		text += " " + r.Begins + " What was let go is in none of these figures and pictures; alerts are whole."
 	}
 	blocks := append([]block{{Text: text}}, unused(r)...)
 	if len(r.Conditions) == 0 {

@@ -80,5 +80,5 @@ func TestArchiveOfADaemon(t *testing.T) {
 	if b, err := os.ReadFile(text); err != nil || strings.Count(string(b), "before, 240 slots were let go") != 2 {
 		t.Errorf("%v: the report does not say where its history begins:\n%s", err, b)
 	}
-	s.says(0, []string{"What lies before is in none of these figures"}, "baseline", "--resamples", "100")
+	s.says(0, []string{"What was let go is in none of these figures"}, "baseline", "--resamples", "100")
 }

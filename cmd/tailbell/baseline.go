@@ -106,7 +106,7 @@ func baseline(ctx context.Context, o *baselineOptions, paths []string, stdin io.
 		return err
 	}
 	for _, begins := range d.begins {
-		if err := say(stderr, "%s What lies before is in none of these figures.", begins); err != nil {
+		if err := say(stderr, "%s What was let go is in none of these figures.", begins); err != nil {
 			return err
 		}
 	}

@@ -79,7 +79,7 @@ func (o *limitsOptions) add(c *cobra.Command) {
 	f.Float64Var(&o.exposure, "exposure", 0, "the `AMOUNT` of exposure of a slot")
 	f.Int64Var(&o.trials, "trials", 0, "the `NUMBER` of trials in a slot")
 	f.Float64Var(&o.vary, "vary", 0, "by which `SHARE` the exposure of a slot may differ from that, e.g. 0.2")
-	f.Int64Var(&o.of, "of", 1, "the `NUMBER` of series that are like it, for the false alerts of all, and for an allowance that they share")
+	f.Int64Var(&o.of, "of", 1, "the `NUMBER` of series that are like it, for the false alerts of all, and for a set-up's allowance over all series")
 	f.StringVar(&o.allowance, "allowance", "", "the false alerts accepted on each series, so `MANY` in a time: \"1 in 5y\"")
 	f.Float64Var(&o.pLimit, "p-limit", 0, "the p-value `P` at or under which a look signals, e.g. 0.001")
 	f.Float64Var(&o.assurance, "assurance", 0, "keep the allowance at the bound of an estimated baseline with this `CONFIDENCE`, e.g. 0.9, rather than on average")

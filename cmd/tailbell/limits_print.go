@@ -90,7 +90,7 @@ func (p *limitsPage) head(g *limitsGroup, r *planning.Report) {
 	in := g.in
 	title := fmt.Sprintf("%s (%s)", in.Title, in.Name)
 	if r.Series != "" {
-		title += ": " + r.Series
+		title += ": " + seriesWords(r.Series)
 	}
 	switch n := len(g.reports); {
 	case g.byBaseline:
@@ -333,7 +333,7 @@ func (p *limitsPage) others(g *limitsGroup) {
 			if i == most {
 				break
 			}
-			row := []string{r.Series, short(r.Exposure)}
+			row := []string{seriesWords(r.Series), short(r.Exposure)}
 			for j := range r.Parts {
 				row = append(row, signalsAt(&r.Parts[j]))
 			}
@@ -354,4 +354,12 @@ func plural(n int, one, many string) string {
 		return "1 " + one
 	}
 	return fmt.Sprintf("%d %s", n, many)
+}
+
+// seriesWords is a series, or the pattern of several, in words.
+func seriesWords(pattern string) string {
+	if pattern == "**" {
+		return "any series"
+	}
+	return pattern
 }

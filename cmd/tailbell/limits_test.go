@@ -177,3 +177,13 @@ func TestLimitsUsage(t *testing.T) {
 		}
 	}
 }
+
+func TestLimitsNameAnySeries(t *testing.T) {
+	path := filepath.Join(t.TempDir(), "tailbell.toml")
+	if err := os.WriteFile(path, []byte(archiveSetup), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	if out := output(t, "limits", "--config", path, "--exposure", "22", "--draws", "100"); !strings.HasPrefix(out, "fall (fall): any series\n") {
+		t.Error(out)
+	}
+}

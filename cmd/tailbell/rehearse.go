@@ -200,6 +200,9 @@ func (o *rehearseOptions) prepare(ctx context.Context, paths []string, stdin io.
 	if len(paths) > 0 {
 		return o.observe(ctx, paths, stdin, stderr)
 	}
+	if o.peers < 1 && slices.ContainsFunc(o.in.Baselines, func(b config.Baseline) bool { return b.Kind == config.Peers }) {
+		return nil, &usageError{errors.New("--peers is missing: say how many other series there are, for a baseline from peers")}
+	}
 	how := plant.Invention{Series: o.files.series, Years: o.years, Rate: o.rate / o.in.Per, Drawn: o.drawn, Peers: o.peers}
 	if o.in.Measure == config.Proportion {
 		how.Rate = o.rate

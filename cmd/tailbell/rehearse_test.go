@@ -64,3 +64,15 @@ func TestRehearseReal(t *testing.T) {
 		t.Errorf("of a history without labels:\n%s", text)
 	}
 }
+
+func TestRehearseAsksForPeers(t *testing.T) {
+	path := filepath.Join(t.TempDir(), "tailbell.toml")
+	text := strings.Replace(archiveSetup, "kind = \"known\"\nrate = 0.01\n", "kind = \"peers\"\nspan = \"364d\"\n", 1)
+	if err := os.WriteFile(path, []byte(text), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	code, stdout, stderr := run(t, "rehearse", "--config", path, "--exposure", "22", "--rate", "0.01", "--histories", "5")
+	if code != 2 || stdout != "" || !strings.Contains(stderr, "--peers is missing") {
+		t.Errorf("exit code %d, %s%s", code, stdout, stderr)
+	}
+}
