@@ -98,7 +98,8 @@ type Engine struct {
 	waiting   uint64
 	// countings are what partitions tell each other to count, and countsJSON is how
 	// that is stored. Messages of history time are held from a moment on, which is
-	// found again when it may have changed; holding says that one is. Of the message
+	// found again when it may have changed; holding says that one is, and heldSums
+	// are the indicators for whose gathered sums a set-up waits. Of the message
 	// after the position the first part elements have been applied, and of the ones
 	// after that the summaries up to ahead.
 	countings  []*counting
@@ -106,6 +107,7 @@ type Engine struct {
 	held       Instant
 	heldStale  bool
 	holding    bool
+	heldSums   []*indicator
 	part       int
 	ahead      uint64
 	// lives says how often a set-up brought an indicator of which partitions tell
@@ -148,7 +150,7 @@ func (e *Engine) Apply(m *Message) {
 	if m.Position <= e.position {
 		return
 	}
-	e.position, e.holding = m.Position, false
+	e.position, e.holding, e.heldSums = m.Position, false, nil
 	switch {
 	case !e.history || m.Kind == Live:
 		if e.history {

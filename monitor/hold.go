@@ -8,9 +8,10 @@ import (
 
 // Holds reports whether a message can't be applied yet: in history time the clock
 // would pass the first boundary of a day for which another partition has not told
-// what it counted the day before. The caller then commits what Drain hands over,
-// looks for summaries further ahead in the stream, gives them to ApplyAhead, and
-// asks again; it must not give any other message to Apply meanwhile.
+// what it counted the day before, or another set-up would come into force before
+// gathered sums have been looked at up to its moment. The caller then commits what
+// Drain hands over, looks for summaries further ahead in the stream, gives them to
+// ApplyAhead, and asks again; it must not give any other message to Apply meanwhile.
 //
 // Before it says so the engine goes as far as it may: it applies those of a
 // message's observations that lie before that moment, and brings its clock up to
@@ -22,8 +23,36 @@ func (e *Engine) Holds(m *Message) bool {
 	if e.partition.Of <= 1 || m.Position <= e.position || !m.Carried && (!e.history || m.Kind == Live) {
 		return false
 	}
-	e.holding = e.holds(m)
+	e.heldSums = nil
+	e.holding = e.holds(m) || e.holdsSetup(m)
 	return e.holding
+}
+
+// holdsSetup reports whether the message is another set-up that waits for gathered
+// sums: those that it ends, or looks at by other rules, are to have come to its moment
+// as they had in one partition. The clock goes there first. What partitions tell up to
+// that moment waits for nobody, and each of them has the set-up. In history time they
+// have it at different moments if it tells none itself: then it is not held. In live
+// time they may, too: there it waits for sums that it ends alone, since a partition that
+// ends them says so.
+func (e *Engine) holdsSetup(m *Message) bool {
+	if m.Kind != SettingMessage || e.setup == nil || e.setup.Digest == m.Setting.Setup.Digest {
+		return false
+	}
+	at, list := m.Stored, e.dismissed(m.Setting.Setup)
+	if e.history {
+		at, list = m.Time, e.indicators
+	}
+	if e.history && !m.HasTime {
+		return false
+	}
+	e.advance(at)
+	for _, ix := range list {
+		if up := ix.summing(); up != nil && e.behind(up, at) {
+			e.heldSums = append(e.heldSums, ix)
+		}
+	}
+	return len(e.heldSums) > 0
 }
 
 func (e *Engine) holds(m *Message) bool {
@@ -191,7 +220,11 @@ func (e *Engine) Ahead() uint64 { return e.ahead }
 func (e *Engine) WaitsFor() []int {
 	var list []int
 	for _, ix := range e.indicators {
-		for _, p := range e.lacking(ix) {
+		parts := e.lacking(ix)
+		if slices.Contains(e.heldSums, ix) {
+			parts = ix.gathering.waitsFor()
+		}
+		for _, p := range parts {
 			if !slices.Contains(list, p) {
 				list = append(list, p)
 			}
@@ -205,7 +238,7 @@ func (e *Engine) WaitsFor() []int {
 // indicator.
 func (e *Engine) lacking(ix *indicator) []int {
 	k := ix.counting
-	if k == nil || !ix.started || e.partition.Of <= 1 || e.history && !e.holding {
+	if k == nil || !ix.started || e.partition.Of <= 1 || e.history && !e.holding || len(e.heldSums) > 0 {
 		return nil
 	}
 	needed := ix.dayBefore(ix.looked)

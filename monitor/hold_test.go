@@ -2,7 +2,9 @@ package monitor_test
 
 import (
 	"fmt"
+	"maps"
 	"math/rand/v2"
+	"slices"
 	"strings"
 	"testing"
 	"time"
@@ -144,5 +146,65 @@ func TestShorterSettle(t *testing.T) {
 	}
 	if diff := cmp.Diff(want, play(2)); diff != "" {
 		t.Errorf("-one +two partitions:\n%s", diff)
+	}
+}
+
+// TestSetupWaitsForSums takes an indicator out of the set-up, and in again, while its
+// sums wait for a partition that is days behind: they are looked at up to the moment of
+// the set-up first, and alerts are those of one partition.
+func TestSetupWaitsForSums(t *testing.T) {
+	const shared = "allowance = \"60 in 1y\"\nallowance_for = \"indicator\""
+	parse := func(of int, replace ...string) *config.Setup {
+		text := strings.ReplaceAll(inboundSetup, "*/*/fall", "*/fall")
+		setup, err := config.Parse([]byte(strings.NewReplacer(replace...).Replace(text)), "set-up")
+		if err != nil {
+			t.Fatal(err)
+		}
+		setup.Partitions = of
+		return setup
+	}
+	for name, changes := range map[string][2][]string{
+		"it goes":                {nil, {`"fall"`, `"error"`, "/fall", "/error"}},
+		"it goes and had counts": {{"p_limit = 0.01", shared}, {`"fall"`, `"error"`, "/fall", "/error"}},
+	} {
+		play := func(of int, restarts bool) map[string]string {
+			c := newCross(t, rand.New(rand.NewPCG(1, 1)), of)
+			before, after := parse(of, changes[0]...), parse(of, changes[1]...)
+			home := before.HomeOf("fall")
+			for p, r := range c.readers {
+				r.publish(monitor.Message{Kind: monitor.SettingMessage, Setting: monitor.Setting{Setup: before}})
+				for day := 1; day <= 16; day++ {
+					for ward := range 6 {
+						if o := report(wardOf(ward%2, 2, ward), day, int64(day%4)*int64(day/12), 9); before.PartitionOf(o.Series) == p {
+							r.publish(messageOf(o))
+						}
+					}
+				}
+				for n, setup := range []*config.Setup{after, before} {
+					moment := monitor.InstantOf(marchDay(17 + 3*n).Add(2 * time.Hour))
+					r.publish(monitor.Message{Kind: monitor.SettingMessage, Setting: monitor.Setting{Setup: setup}, Time: moment, HasTime: true})
+				}
+				r.publish(monitor.Message{Kind: monitor.Tick, Time: monitor.InstantOf(marchDay(31)), HasTime: true})
+			}
+			if c.readers[home].read(1 << 30); of == 2 {
+				if got := c.readers[home].engine.WaitsFor(); len(got) != 1 || got[0] != 1-home {
+					t.Errorf("%s: the set-up waits for partitions %v", name, got)
+				}
+			}
+			if restarts {
+				c.readers[home].restart(t)
+			}
+			c.finish()
+			return texts(t, c.records())
+		}
+		want := play(1, false)
+		if !slices.ContainsFunc(slices.Collect(maps.Values(want)), func(x string) bool { return strings.Contains(x, `"*/fall"`) }) {
+			t.Fatalf("%s: no alert of the sum was compared", name)
+		}
+		for _, restarts := range []bool{false, true} {
+			if diff := cmp.Diff(want, play(2, restarts)); diff != "" {
+				t.Errorf("%s: -one +two partitions:\n%s", name, diff)
+			}
+		}
 	}
 }
