@@ -32,7 +32,11 @@ const (
 	forgotten = 5 * time.Minute
 
 	attachTimeout = 5 * time.Second
-	ackPrefix     = "$JS.ACK."
+	// leaveTimeout is how long a source that is closed waits until the bus has
+	// forgotten its consumer, which it does by itself in the end. An account that may
+	// not ask for that hears no answer.
+	leaveTimeout = time.Second
+	ackPrefix    = "$JS.ACK."
 )
 
 // Missing counts the messages that were removed from the stream before they
@@ -470,7 +474,7 @@ func (s *Source) Close() error {
 	if !s.bus.nc.IsConnected() {
 		return nil // the bus forgets the consumer by itself
 	}
-	ctx, cancel := context.WithTimeout(context.Background(), attachTimeout)
+	ctx, cancel := context.WithTimeout(context.Background(), leaveTimeout)
 	defer cancel()
 	err := s.forget(ctx)
 	if passing(err) {
