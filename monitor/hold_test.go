@@ -208,3 +208,45 @@ func TestSetupWaitsForSums(t *testing.T) {
 		}
 	}
 }
+
+// TestSetupInLiveTime checks that a set-up of live time waits for sums of an indicator
+// that it ends alone, and only where a division carried it over.
+func TestSetupInLiveTime(t *testing.T) {
+	p := newPair(t)
+	for day := 1; day <= 4; day++ {
+		p.day(p.home, day)
+		p.day(p.far, day)
+	}
+	moment := monitor.InstantOf(marchDay(6))
+	for _, h := range []*house{p.home, p.far} {
+		h.apply(monitor.Message{Kind: monitor.Live, Stored: moment})
+	}
+	holds := func(text string, carried bool) bool {
+		setup, err := config.Parse([]byte(text), "set-up")
+		if err != nil {
+			t.Fatal(err)
+		}
+		setup.Partitions = 2
+		return p.home.engine.Holds(&monitor.Message{
+			Position: p.home.n + 1, Kind: monitor.SettingMessage, Setting: monitor.Setting{Setup: setup}, Stored: moment, Carried: carried,
+		})
+	}
+	without := strings.NewReplacer(`"fall"`, `"error"`, "/fall", "/error").Replace(inboundSetup)
+	changed := strings.Replace(inboundSetup, "p_limit = 0.01", "p_limit = 0.02", 1)
+	if holds(without, false) {
+		t.Error("a set-up of live time is held")
+	}
+	if holds(changed, true) {
+		t.Error("a set-up that ends no indicator is held in live time")
+	}
+	if !holds(without, true) {
+		t.Error("a set-up that was carried over is not held")
+	}
+	if got, want := p.home.engine.WaitsFor(), []int{p.far.part.Number}; !slices.Equal(got, want) {
+		t.Errorf("it waits for partitions %v, not %v", got, want)
+	}
+	p.hand(p.told()...)
+	if holds(without, true) {
+		t.Error("a set-up is held though all was told")
+	}
+}
