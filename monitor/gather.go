@@ -64,28 +64,6 @@ func (e *Engine) prepare(ix *indicator, life string) {
 	}
 }
 
-// follow brings the stanza that has come into force for the indicator into force
-// for its gathered sums.
-func (e *Engine) follow(ix *indicator) {
-	g := ix.gathering
-	if g == nil || g.sums == nil {
-		return
-	}
-	up := g.sums
-	ep := ix.epochs[len(ix.epochs)-1]
-	up.index, up.cfg, up.edges, up.drawn, up.total = ix.index, ix.cfg, nil, ix.drawn, total{}
-	if n := len(up.epochs); n > 0 && up.epochs[n-1].from >= ep.from {
-		up.epochs = up.epochs[:n-1]
-	}
-	up.places = ix.places
-	e.vacate(up, ep.windows)
-	up.epochs = append(up.epochs, ep)
-	up.measure()
-	if up.started {
-		up.pass(up.looked)
-	}
-}
-
 // kin are the indicator and, where it gathers sums, the one that looks at those.
 func (ix *indicator) kin() []*indicator {
 	root := ix
@@ -357,6 +335,7 @@ func (e *Engine) restoreGathering(ix *indicator, h *gatheredHeader, setups map[i
 		up := g.sums
 		up.epochs, up.places, up.started = slices.Clone(ix.epochs), ix.places, ix.started
 		up.frozenAt, up.kept, up.floor = ix.frozenAt, ix.kept, ix.floor
+		up.since = up.epochs[len(up.epochs)-1].from
 		if ix.started {
 			up.pass(ix.looked)
 		}
@@ -366,6 +345,11 @@ func (e *Engine) restoreGathering(ix *indicator, h *gatheredHeader, setups map[i
 			return err
 		}
 		up.of, up.places = ix, ix.places
+		ep := &up.epochs[0]
+		if h.Sums.Started {
+			ep = up.epochAt(h.Sums.Looked + 1)
+		}
+		up.cfg, up.since = ep.cfg, ep.from
 		up.resume(h.Sums)
 		g.sums = up
 	}

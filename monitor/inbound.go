@@ -146,8 +146,9 @@ func (e *Engine) gatherAll() {
 func (e *Engine) gatherReady(g *gathering) {
 	for {
 		boundary, ok := g.nextReady()
+		e.keepUp(g.sums) // boundaries may have been skipped
 		if g.sums.started {
-			e.beginCounts(g.sums) // boundaries may have been skipped
+			e.beginCounts(g.sums)
 		}
 		if !ok {
 			return
@@ -164,6 +165,7 @@ func (e *Engine) gatherReady(g *gathering) {
 		sortRows(rows)
 		e.gather(g, boundary, e.mirrorAll(g, rows))
 		e.lookGathered(g.sums, boundary)
+		e.keepUp(g.sums)
 		e.trimMirrors(g)
 		e.catchUp(g)
 	}

@@ -50,6 +50,9 @@ type indicator struct {
 	// epochs are the versions of the stanza under which looks that can still
 	// be re-run fell due, oldest first.
 	epochs []epoch
+	// since is, of gathered sums, where the version in force begins: if they are
+	// behind, others follow.
+	since int64
 	// digests are those of the baselines that are estimated.
 	digests map[*config.Baseline]int64
 	// stated is the reference last asked for of those that baselines state.

@@ -48,7 +48,12 @@ func (ep *epoch) placed(place int) *placed {
 }
 
 // now is the version of the stanza that is in force for the looks to come.
-func (ix *indicator) now() *epoch { return &ix.epochs[len(ix.epochs)-1] }
+func (ix *indicator) now() *epoch {
+	if ix.of != nil {
+		return ix.epochAt(ix.since)
+	}
+	return &ix.epochs[len(ix.epochs)-1]
+}
 
 // named returns the window in force of that name, nil for none.
 func (ix *indicator) named(window string) *placed {
