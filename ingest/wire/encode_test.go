@@ -15,9 +15,12 @@ import (
 func instantGen() *rapid.Generator[monitor.Instant] {
 	return rapid.Custom(func(t *rapid.T) monitor.Instant {
 		grain := rapid.SampledFrom([]int64{1, 1000, 1e6, 3600e6}).Draw(t, "grain")
-		return monitor.Instant(rapid.Int64Range(-62135596800e6/grain, 253370764799999999/grain).Draw(t, "at") * grain)
+		return monitor.Instant(rapid.Int64Range(-62135596800e6/grain, lastInstant/grain).Draw(t, "at") * grain)
 	})
 }
+
+// lastInstant is the last moment that can be held.
+const lastInstant = 253370764799999999
 
 func observationGen() *rapid.Generator[monitor.Observation] {
 	return rapid.Custom(func(t *rapid.T) monitor.Observation {
