@@ -103,17 +103,7 @@ func crossSetups(t *testing.T, settle string, kind [3]string) (before, after *co
 func TestCountsDoNotDependOnPartitions(t *testing.T) {
 	for kind, texts := range crossKinds {
 		t.Run(kind, func(t *testing.T) {
-			seed := *gatherSeed
-			if seed == 0 {
-				seed = rand.Uint64()
-			}
-			t.Logf("-gather.seed %d", seed)
-			random := rand.New(rand.NewPCG(seed, 9))
-			found, streams := 0, *crossStreams
-			if testing.Short() {
-				streams = 1
-			}
-			for n := 0; n < streams || found == 0 && n < 20*streams; n++ {
+			playUntilFound(t, 9, *crossStreams, func(n int, random *rand.Rand) int {
 				before, after := crossSetups(t, []string{"0h", "1d"}[n%2], texts)
 				generator := kind
 				if kind == "allowance" {
@@ -130,12 +120,8 @@ func TestCountsDoNotDependOnPartitions(t *testing.T) {
 						t.Fatalf("stream %d: %d partitions (-one +%d):\n%s", n, of, of, diff)
 					}
 				}
-				found += len(want)
-			}
-			if found == 0 {
-				t.Error("no alert was compared")
-			}
-			t.Logf("%d alerts", found)
+				return len(want)
+			})
 		})
 	}
 }

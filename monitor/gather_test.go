@@ -85,18 +85,7 @@ type gatherInput struct {
 func TestGatheredSumsDoNotDependOnPartitions(t *testing.T) {
 	for kind, text := range gatherKinds {
 		t.Run(kind, func(t *testing.T) {
-			seed := *gatherSeed
-			if seed == 0 {
-				seed = rand.Uint64()
-			}
-			t.Logf("-gather.seed %d", seed)
-			random := rand.New(rand.NewPCG(seed, 7))
-			found, streams := 0, *gatherStreams
-			if testing.Short() {
-				streams = 1
-			}
-			// A stream may hold no alert of a gathered sum: then more are played.
-			for n := 0; n < streams || found == 0 && n < 20*streams; n++ {
+			playUntilFound(t, 7, *gatherStreams, func(n int, random *rand.Rand) int {
 				settle := []string{"0h", "1d"}[n%2]
 				setup, err := config.Parse(fmt.Appendf(nil, gatherSetup, settle, text), "set-up")
 				if err != nil {
@@ -113,14 +102,34 @@ func TestGatheredSumsDoNotDependOnPartitions(t *testing.T) {
 						t.Fatalf("stream %d: %d partitions (-one +%d):\n%s", n, of, of, diff)
 					}
 				}
-				found += want.ofSums
-			}
-			if found == 0 {
-				t.Error("no alert of a gathered sum was compared")
-			}
-			t.Logf("%d alerts of gathered sums", found)
+				return want.ofSums
+			})
 		})
 	}
+}
+
+// playUntilFound plays random streams, in short runs one, and more of them until
+// the alerts wanted were found: a stream may hold none. play returns how many it
+// compared.
+func playUntilFound(t *testing.T, salt uint64, streams int, play func(n int, random *rand.Rand) int) {
+	t.Helper()
+	seed := *gatherSeed
+	if seed == 0 {
+		seed = rand.Uint64()
+	}
+	t.Logf("-gather.seed %d", seed)
+	random := rand.New(rand.NewPCG(seed, salt))
+	if testing.Short() {
+		streams = 1
+	}
+	found := 0
+	for n := 0; n < streams || found == 0 && n < 20*streams; n++ {
+		found += play(n, random)
+	}
+	if found == 0 {
+		t.Error("no alert was compared")
+	}
+	t.Logf("%d alerts", found)
 }
 
 // gatherStream makes the inputs of two months, in order of their times.
