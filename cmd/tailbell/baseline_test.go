@@ -326,26 +326,33 @@ func TestBaselineUsage(t *testing.T) {
 	}
 }
 
-// TestBaselineOddDelays: events that were all known by the end of their day, and
-// none of which was, are told and not stumbled over.
-func TestBaselineOddDelays(t *testing.T) {
-	setup := filepath.Join(t.TempDir(), "odd.toml")
-	text := `name = "odd"
+// fallsOf writes a set-up of falls a day in series, and returns its path.
+func fallsOf(t *testing.T, series string) string {
+	t.Helper()
+	setup := filepath.Join(t.TempDir(), "falls.toml")
+	text := fmt.Appendf(nil, `name = "falls"
 [time]
 mode = "history"
 [[indicator]]
 name = "fall"
-series = ["ward/fall"]
+series = [%q]
 unit = "bed-days"
 every = "1d"
 windows = ["28d"]
 [indicator.baseline]
 kind = "known"
 rate = 0.1
-`
-	if err := os.WriteFile(setup, []byte(text), 0o600); err != nil {
+`, series)
+	if err := os.WriteFile(setup, text, 0o600); err != nil {
 		t.Fatal(err)
 	}
+	return setup
+}
+
+// TestBaselineOddDelays: events that were all known by the end of their day, and
+// blocks longer than the history allows, are told and not stumbled over.
+func TestBaselineOddDelays(t *testing.T) {
+	setup := fallsOf(t, "ward/fall")
 	var rows strings.Builder
 	rows.WriteString("date,series,events,exposure[bed-days],reported\n")
 	for day := 1; day <= 28; day++ {
@@ -370,20 +377,7 @@ rate = 0.1
 // TestBaselineDelayOfSeries: a baseline for some series has their delay, not that
 // of all: one is reported at once, the other three days after its slot.
 func TestBaselineDelayOfSeries(t *testing.T) {
-	setup := filepath.Join(t.TempDir(), "two.toml")
-	text := `name = "two"
-[time]
-mode = "history"
-[[indicator]]
-name = "fall"
-series = ["*/fall"]
-unit = "bed-days"
-every = "1d"
-windows = ["28d"]
-[indicator.baseline]
-kind = "known"
-rate = 0.1
-`
+	setup := fallsOf(t, "*/fall")
 	var rows strings.Builder
 	rows.WriteString("date,series,events,exposure[bed-days],reported\n")
 	for day := 1; day <= 20; day++ {
@@ -391,10 +385,8 @@ rate = 0.1
 		fmt.Fprintf(&rows, "2026-03-%02d,south/fall,1,10,2026-03-%02dT00:00:00Z\n", day, day+4)
 	}
 	file := filepath.Join(t.TempDir(), "two.csv")
-	for name, text := range map[string]string{setup: text, file: rows.String()} {
-		if err := os.WriteFile(name, []byte(text), 0o600); err != nil {
-			t.Fatal(err)
-		}
+	if err := os.WriteFile(file, []byte(rows.String()), 0o600); err != nil {
+		t.Fatal(err)
 	}
 	for series, want := range map[string]string{"north/*": "given that it is at most 0s", "south/*": "3d   1.0000    1.0000"} {
 		out, _, err := runBaseline(t, "--config", setup, "--zone", "UTC", "--series", series, file)
